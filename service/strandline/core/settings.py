@@ -1,0 +1,28 @@
+"""What the core must know of a feed's configuration. It is journaled, so that a replay decides as the service did.
+
+Only plain values live here; reading and checking the configuration file is `strandline.config`.
+"""
+
+from __future__ import annotations
+
+from typing import Literal
+
+import msgspec
+
+SECOND_NS = 1_000_000_000
+
+
+class Settings(msgspec.Struct, frozen=True, forbid_unknown_fields=True):
+    """The settings of one feed that its decisions depend on. Times in ns; `*_at_most` are inclusive limits."""
+
+    name: str
+    slack_ns: int = 5 * SECOND_NS
+    idle_after_ns: int = 30 * SECOND_NS
+    hold_at_most_ns: int = 60 * SECOND_NS
+    ahead_limit_ns: int = 10 * SECOND_NS
+    clock: Literal["event", "arrival"] = "event"
+    expect_sources: tuple[str, ...] = ()
+    held_events_at_most: int = 10_000_000  # events held in runs; beyond it arrivals are refused
+    undelivered_events_at_most: int = 2_000_000  # released, not yet taken by every sink; beyond it no mark is set
+    sources_at_most: int = 100_000
+    batch_events_at_most: int = 50_000

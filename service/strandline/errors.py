@@ -1,0 +1,83 @@
+"""Every error that leaves a module, and the closed lists of reasons that answers, metrics and documents share.
+
+No HTTP, no logging: a reason's status code lives here because the list must be one, its rendering in the endpoint.
+"""
+
+from __future__ import annotations
+
+# Why one line is no event of its feed: reason -> what to do about it (shown in the documentation).
+FAULT_REASONS: dict[str, str] = {
+    "malformed": "the line is not one JSON object, or not UTF-8: mend the producer's encoder",
+    "time_missing": "nothing stands at the feed's `time.at`: check the pointer against a sample line",
+    "time_invalid": "the value there is no time in the feed's unit: check `time.unit` against a sample line",
+    "time_out_of_range": "the time cannot be held in int64 nanoseconds (1677-09-21 to 2262-04-11)",
+    "source_missing": "nothing stands at the feed's `source` pointer",
+    "source_invalid": "a source must be a string or an integer of at most 256 bytes",
+    "id_missing": "nothing stands at the feed's `id` pointer",
+    "id_invalid": "an id must be a string or an integer of at most 1024 bytes",
+    "too_large": "the line is longer than `event_bytes_at_most`",
+    "too_deep": "the value is nested deeper than `nesting_at_most`",
+    "ahead": "the event time lies further than `ahead_limit` beyond the arrival clock: check the sender's clock",
+}
+
+# Why a whole request was refused: reason -> (HTTP status, title).
+REFUSALS: dict[str, tuple[int, str]] = {
+    "held_full": (429, "Too many events are held"),
+    "journal_full": (429, "The journal has reached its limit"),
+    "sources_full": (429, "Too many sources"),
+    "disk_full": (503, "The disk has no room for the journal"),
+    "stopping": (503, "The service is stopping"),
+    "failed": (503, "The feed has stopped after a failed write"),
+}
+
+
+class StrandlineError(Exception):
+    """Base of every error this package raises on purpose. str() is a sentence for a person."""
+
+
+class ConfigError(StrandlineError):
+    """The configuration cannot be used; `faults` lists every fault found, each with its place."""
+
+    def __init__(self, faults: list[str]) -> None:
+        super().__init__("\n".join(faults))
+        self.faults = faults
+
+
+class BodyError(StrandlineError):
+    """A whole body is refused before any line of it is judged."""
+
+    def __init__(self, status: int, title: str, detail: str, accept_encoding: str | None = None) -> None:
+        super().__init__(detail)
+        self.status, self.title, self.detail, self.accept_encoding = status, title, detail, accept_encoding
+
+
+class JournalError(StrandlineError):
+    """The journal on disk cannot be read; the text names file, position and what to do."""
+
+
+class JournalFull(StrandlineError):
+    """No room can be reserved; nothing was written. `reason` is a key of REFUSALS."""
+
+    def __init__(self, reason: str, detail: str) -> None:
+        super().__init__(detail)
+        self.reason = reason
+
+
+class JournalFailed(StrandlineError):
+    """A write or a sync failed. It is final: what was not yet synced may or may not be on disk. Restart to recover."""
+
+
+class SinkRetry(StrandlineError):
+    """The store did not take the batches now; the same batches should be offered again."""
+
+    def __init__(self, detail: str, retry_after_s: float | None = None) -> None:
+        super().__init__(detail)
+        self.retry_after_s = retry_after_s
+
+
+class SinkRefused(StrandlineError):
+    """The store will never take these batches."""
+
+    def __init__(self, detail: str, numbers: list[int]) -> None:
+        super().__init__(detail)
+        self.numbers = numbers

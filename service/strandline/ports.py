@@ -1,0 +1,102 @@
+"""The only seams to the world: Clock, Disk, Sink. Everything behind them can be replaced, in tests and in simulation.
+
+Protocols only; implementations live in their own modules. Disk is blocking on purpose: the shell runs it in a thread,
+a simulation calls it directly.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Protocol
+
+from .core.columns import Batch, Lane
+from .core.effects import Buffer
+
+
+class Clock(Protocol):
+    """The arrival clock."""
+
+    def now_ns(self) -> int:
+        """Nanoseconds since 1970 UTC; does not go back while the process lives."""
+
+
+class File(Protocol):
+    """One open file of a fixed, reserved size."""
+
+    @property
+    def size(self) -> int:
+        """Bytes that are reserved for it."""
+
+    def write(self, offset: int, buffers: Sequence[Buffer]) -> None:
+        """Write the buffers one after the other from `offset`. Raises OSError."""
+
+    def sync(self) -> None:
+        """Make all that was written durable. Raises OSError; after that the file must not be trusted nor used."""
+
+    def view(self) -> memoryview:
+        """The whole file, read-only, mapped: it shows what is written later too."""
+
+    def close(self) -> None:
+        """Release the handle; views that are still held stay valid."""
+
+
+class Disk(Protocol):
+    """A directory tree of files. Paths are relative to the disk's root, with `/` between names."""
+
+    def names(self, directory: str) -> list[str]:
+        """Sorted names in a directory; an absent directory is empty."""
+
+    def create(self, path: str, size: int) -> File:
+        """A new file of `size` zero bytes whose room is reserved (a full disk raises OSError here, not later)."""
+
+    def open(self, path: str) -> File:
+        """An existing file, for reading and writing."""
+
+    def rename(self, old: str, new: str) -> None:
+        """Replace `new` by `old` in one step."""
+
+    def remove(self, path: str) -> None:
+        """Delete a file."""
+
+    def sync_directory(self, directory: str) -> None:
+        """Make creations, renames and removals in it durable."""
+
+
+class Lines(Protocol):
+    """Reads event lines back out of the journal."""
+
+    def lines(self, batch: Batch) -> list[bytes]:
+        """The batch's lines, one bytes object each, without line feeds (for stores that take rows)."""
+
+    def ndjson(self, batch: Batch) -> bytes:
+        """The batch's lines, each followed by a line feed, as one block (for stores that take bytes)."""
+
+    def source_names(self) -> Sequence[str]:
+        """Names of the sources by number."""
+
+
+class Sink(Protocol):
+    """A store that takes batches. One object serves one feed; calls never overlap.
+
+    Numbers of batches ascend within a lane. `open` and `take` answer how far the store durably is: per lane the number
+    of the last batch that can never be lost (0: none yet); a lane that is missing means "I cannot know", and the
+    journal's own memory of the last answer is used. `take` may answer with less than it was given (it buffers); then
+    `flush` makes the rest durable. Errors: strandline.errors.SinkRetry (try the same batches again) and
+    SinkRefused (permanent; the batches named in it will never be taken).
+    """
+
+    @property
+    def lanes(self) -> tuple[Lane, ...]:
+        """The lanes that this sink takes."""
+
+    async def open(self) -> dict[Lane, int]:
+        """Connect, create what is absent, and tell the position reached."""
+
+    async def take(self, batches: Sequence[Batch], lines: Lines) -> dict[Lane, int]:
+        """Take batches of one lane, in order; a batch at or below the position reached is skipped."""
+
+    async def flush(self, lines: Lines) -> dict[Lane, int]:
+        """Make durable what was taken so far."""
+
+    async def close(self) -> None:
+        """Release the store. Does not flush."""
