@@ -26,6 +26,7 @@ REFUSALS: dict[str, tuple[int, str]] = {
     "journal_full": (429, "The journal has reached its limit"),
     "sources_full": (429, "Too many sources"),
     "disk_full": (503, "The disk has no room for the journal"),
+    "promise_ahead": (422, "The promise lies in the future"),
     "stopping": (503, "The service is stopping"),
     "failed": (503, "The feed has stopped after a failed write"),
 }

@@ -1,0 +1,1 @@
+"""Strandline keeps timestamped event feeds in order although events arrive late."""

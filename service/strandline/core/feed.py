@@ -1,0 +1,283 @@
+"""A feed: inputs to effects. It decides; whoever calls it carries the effects out, in order.
+
+Every decision becomes a record before it has any consequence outside, and every record is folded into the state at
+once; what leaves (answers, batches) waits here until the record that justifies it is synced. Time is an argument.
+Nothing awaits, reads a clock or touches a file here; what records do to the state is `state.py`.
+"""
+
+from __future__ import annotations
+
+from collections import deque
+from collections.abc import Mapping, Sequence
+
+from .columns import NO_SOURCE, Arrival, Lane
+from .effects import Answer, Append, Buffer, Deliver, Effect, Outcome, Refuse, Sync
+from .records import (
+    VERSION,
+    Cause,
+    ExcuseRecord,
+    Kind,
+    Mark,
+    NumbersRecord,
+    PromiseRecord,
+    SettingsRecord,
+    SmallRecord,
+    SourcesRecord,
+    TakenRecord,
+    arrival_body,
+    arrival_parts,
+    decode_arrival,
+    decode_mark,
+    decode_small,
+    encode_mark,
+    encode_small,
+    frame_bytes,
+)
+from .settings import Settings
+from .state import State
+from .view import Hold, View, hold_of, view_of
+from .watermark import Candidate, candidate
+
+RETRY_AFTER_S = 5
+
+
+class Feed:
+    """One feed. First `restore` and `fold` what the journal holds, then `start`, then the inputs in any order.
+
+    Every input takes `now_ns`, the arrival clock (ns since 1970 UTC); should it step back, the feed's own clock stands
+    still until it is caught up with. Inputs return effects, to be carried out in the order given.
+    """
+
+    def __init__(self, settings: Settings) -> None:
+        self.state = State(settings)
+        self.next_lsn = 0
+        self.durable_lsn = 0
+        self._asked_lsn = 0  # a sync up to here was asked for
+        self._waiting: deque[tuple[int, Answer | Deliver]] = deque()
+        self._hold = Hold(NO_SOURCE, "nothing_held", 0)
+        self.refusals: dict[str, int] = {}
+        self._started = False
+
+    # ---- recovery -------------------------------------------------------------------------------------------------
+
+    def fold(self, kind: int, version: int, body: Buffer, lsn: int) -> None:
+        """Take over one record of the journal. Raises ValueError for a kind or version that this code cannot read."""
+        if version != VERSION:
+            raise ValueError(f"record version {version} at {lsn} is newer than this program (it reads {VERSION})")
+        end = lsn + frame_bytes(len(body))
+        match Kind(kind):
+            case Kind.ARRIVAL:
+                self.state.fold_arrival(decode_arrival(body, lsn), end)
+            case Kind.MARK:
+                self.state.fold_mark(decode_mark(body), end)
+            case small:
+                self.state.fold_small(decode_small(small, body))
+        self.next_lsn = end
+
+    def start(
+        self,
+        now_ns: int,
+        sinks: Mapping[str, Sequence[Lane]],
+        positions: Mapping[str, Mapping[Lane, int]] | None = None,
+        settings: Settings | None = None,
+    ) -> list[Effect]:
+        """Begin to work, or go on with other settings: journal them, and deliver again what the sinks do not hold.
+
+        `positions` are what sinks say of themselves (number of the last batch durably taken, by lane).
+        """
+        effects: list[Effect] = []
+        now = self._now(now_ns)
+        chosen = settings or self.state.settings
+        unknown = [name for name in chosen.expect_sources if name not in self.state.sources.numbers]
+        if unknown:
+            self._record(effects, SourcesRecord(len(self.state.sources.names), unknown))
+        served = {name: list(lanes) for name, lanes in sinks.items()}
+        self._record(effects, SettingsRecord(now, chosen, served, resumed=not self._started))
+        self._started = True
+        for sink, lanes in (positions or {}).items():
+            for lane, number in lanes.items():
+                self.state.outbox.move(sink, lane, number)
+                if number >= self.state.outbox.next_number[lane]:
+                    # The store has seen more than this journal knows: never use those numbers for something else.
+                    self._record(effects, NumbersRecord(now, lane, number + 1))
+        self._redeliver()
+        return self._done(effects, sync=True)
+
+    def _redeliver(self) -> None:
+        self._waiting.clear()
+        for lane in self.state.outbox.next_number:
+            for batch in self.state.outbox.undelivered(lane):
+                self._waiting.append((self.next_lsn, Deliver(batch)))
+
+    # ---- inputs ---------------------------------------------------------------------------------------------------
+
+    def arrive(self, arrival: Arrival, now_ns: int, token: int) -> list[Effect]:
+        """One request came. Answered, or refused whole, under its token."""
+        refusal = self._refusal(arrival, token)
+        if refusal:
+            self.refusals[refusal.reason] = self.refusals.get(refusal.reason, 0) + 1
+            return [refusal]
+        if not arrival.received:
+            return [Answer(token, Outcome(0, 0, 0, 0, 0))]
+        effects: list[Effect] = []
+        now = self._now(now_ns)
+        self._mark(effects, now, only_releasing=False)
+        if arrival.new_sources:
+            names = list(arrival.new_sources)
+            self._record(effects, SourcesRecord(len(self.state.sources.names), names))
+        lsn = self.next_lsn
+        self._append(effects, Kind.ARRIVAL, arrival_parts(arrival, now))
+        outcome, batches = self.state.fold_arrival(arrival_body(arrival, now, lsn), self.next_lsn)
+        self._waiting.append((self.next_lsn, Answer(token, outcome)))
+        self._waiting.extend((self.next_lsn, Deliver(batch)) for batch in batches)
+        self._mark(effects, now, only_releasing=False)
+        return self._done(effects, sync=True)
+
+    def tick(self, now_ns: int) -> list[Effect]:
+        """Time has gone on."""
+        effects: list[Effect] = []
+        self._mark(effects, self._now(now_ns), only_releasing=True)
+        return self._done(effects, sync=bool(effects) or self.next_lsn > self._asked_lsn)
+
+    def synced(self, lsn: int) -> list[Effect]:
+        """The journal is durable up to lsn: what waited for that may leave."""
+        self.durable_lsn = max(self.durable_lsn, lsn)
+        effects: list[Effect] = []
+        while self._waiting and self._waiting[0][0] <= self.durable_lsn:
+            effects.append(self._waiting.popleft()[1])
+        return effects
+
+    def taken(self, sink: str, lane: Lane, number: int, now_ns: int) -> list[Effect]:
+        """A sink durably holds the lane's batches up to this number: there may be room again."""
+        effects: list[Effect] = []
+        now = self._now(now_ns)
+        self._record(effects, TakenRecord(now, sink, lane, number))
+        self._mark(effects, now, only_releasing=True)
+        return self._done(effects, sync=len(effects) > 1)
+
+    def promise(self, source: str, time_ns: int, now_ns: int, token: int) -> list[Effect]:
+        """A source promises that nothing older than time_ns will come from it."""
+        effects: list[Effect] = []
+        now = self._now(now_ns)
+        bound = now + self.state.settings.ahead_limit_ns
+        if time_ns > bound:
+            detail = f"the promised time lies {(time_ns - now) / 1e9:.3f} s beyond the arrival clock"
+            return [Refuse(token, "promise_ahead", detail, RETRY_AFTER_S)]
+        number = self.state.sources.numbers.get(source)
+        if number is None:
+            refusal = self._too_many_sources(1, token)
+            if refusal:
+                return [refusal]
+            number = len(self.state.sources.names)
+            self._record(effects, SourcesRecord(number, [source]))
+        self._record(effects, PromiseRecord(now, number, time_ns))
+        return self._act(effects, now, token)
+
+    def excuse(self, source: str, reason: str, now_ns: int, token: int) -> list[Effect]:
+        """An operator tells the feed not to wait for a source until it speaks again. Raises KeyError if unknown."""
+        effects: list[Effect] = []
+        now = self._now(now_ns)
+        self._record(effects, ExcuseRecord(now, self.state.sources.numbers[source], reason))
+        return self._act(effects, now, token)
+
+    def drain(self, now_ns: int, token: int) -> list[Effect]:
+        """An operator lets go everything that is held, in order."""
+        effects: list[Effect] = []
+        now = self._now(now_ns)
+        tail = self.state.runs.tail_ns
+        if tail is not None:
+            self._set(effects, Candidate(tail, Cause.DRAIN, NO_SOURCE), now)
+        return self._act(effects, now, token)
+
+    # ---- decisions ------------------------------------------------------------------------------------------------
+
+    def _refusal(self, arrival: Arrival, token: int) -> Refuse | None:
+        state = self.state
+        held, limit = state.runs.held + len(arrival.times), state.settings.held_events_at_most
+        if held > limit and len(arrival.times):
+            detail = (
+                f"{state.runs.held} events are held and held_events_at_most is {limit}; "
+                f"the feed is held by: {self._hold.why}"
+            )
+            return Refuse(token, "held_full", detail, RETRY_AFTER_S)
+        return self._too_many_sources(len(arrival.new_sources), token)
+
+    def _too_many_sources(self, more: int, token: int) -> Refuse | None:
+        known, limit = len(self.state.sources.names), self.state.settings.sources_at_most
+        if not more or known + more <= limit:
+            return None
+        detail = f"{known} sources are known, the request names {more} new ones and sources_at_most is {limit}"
+        return Refuse(token, "sources_full", detail, 60)
+
+    def _mark(self, effects: list[Effect], now: int, *, only_releasing: bool) -> None:
+        """Set a mark if the watermark may move (or only if that would release something)."""
+        state = self.state
+        state.advance(now)
+        if state.outbox.undelivered_events > state.settings.undelivered_events_at_most:
+            return
+        best = candidate(state.settings, state.slack, state.sources, state.hold, now)
+        head = state.runs.head_ns
+        releasing = head is not None and head <= max(best.watermark_ns, state.watermark_ns)
+        if releasing or (best.watermark_ns > state.watermark_ns and not only_releasing):
+            self._set(effects, best, now)
+
+    def _set(self, effects: list[Effect], best: Candidate, now: int) -> None:
+        state = self.state
+        mark = Mark(
+            decided_ns=now,
+            watermark_ns=max(best.watermark_ns, state.watermark_ns),
+            first_batch=state.outbox.next_number["ordered"],
+            batch_events_at_most=state.settings.batch_events_at_most,
+            source=best.source,
+            cause=best.cause,
+        )
+        self._append(effects, Kind.MARK, [encode_mark(mark)])
+        for batch in state.fold_mark(mark, self.next_lsn):
+            self._waiting.append((self.next_lsn, Deliver(batch)))
+
+    # ---- records --------------------------------------------------------------------------------------------------
+
+    def _now(self, now_ns: int) -> int:
+        return max(now_ns, self.state.now_ns)
+
+    def _append(self, effects: list[Effect], kind: Kind, parts: Sequence[Buffer]) -> None:
+        effects.append(Append(self.next_lsn, int(kind), parts))
+        self.next_lsn += frame_bytes(sum(len(part) for part in parts))
+
+    def _record(self, effects: list[Effect], record: SmallRecord) -> None:
+        kind, body = encode_small(record)
+        self._append(effects, kind, [body])
+        self.state.fold_small(record)
+
+    def _act(self, effects: list[Effect], now: int, token: int) -> list[Effect]:
+        """End of an operator's or a source's act: its consequences, then its answer once all is durable."""
+        self._mark(effects, now, only_releasing=False)
+        self._waiting.append((self.next_lsn, Answer(token, None)))
+        return self._done(effects, sync=True)
+
+    def _done(self, effects: list[Effect], *, sync: bool) -> list[Effect]:
+        self.state.ledger.check(self.state.runs.held)
+        self._hold = hold_of(self.state, self._hold)
+        if sync:
+            self._asked_lsn = self.next_lsn
+            effects.append(Sync(self.next_lsn))
+        return effects
+
+    # ---- observers ------------------------------------------------------------------------------------------------
+
+    def snapshot(self, now_ns: int) -> View:
+        """Everything that observers need, as plain values."""
+        return view_of(self.state, self._hold, self._now(now_ns), dict(self.refusals))
+
+    @property
+    def needed_place(self) -> int:
+        """Journal bytes before this place are needed neither by held events nor by undelivered batches."""
+        places = (self.state.arrivals.oldest_place, self.state.outbox.oldest_place, self.next_lsn)
+        return min(place for place in places if place is not None)
+
+    def check(self) -> None:
+        """Assert every invariant."""
+        self.state.check()
+        assert self.durable_lsn <= self.next_lsn
+        lsns = [lsn for lsn, _ in self._waiting]
+        assert lsns == sorted(lsns) and (not lsns or lsns[-1] <= self.next_lsn)

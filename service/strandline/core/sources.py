@@ -1,0 +1,162 @@
+"""The sources of a feed: names and numbers, newest event time, last word, active or idle, excused.
+
+Columns by source number; nothing here depends on how many sources did not speak. The watermark's rule is in
+`watermark.py`. A source is active from its first event (an expected one from the feed's start) until it has been silent
+for `idle_after`; an excused one takes no part until it speaks again.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .columns import NO_SOURCE, TIME_MIN, Times
+from .least import NONE, Least
+
+NEVER = TIME_MIN  # newest event time of a source that was never heard
+
+
+class Sources:
+    """State of every source of one feed."""
+
+    def __init__(self) -> None:
+        self.names: list[str] = []
+        self.numbers: dict[str, int] = {}
+        self.newest: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # or what was promised if later
+        self.heard: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # arrival clock of its last word
+        self.active: NDArray[np.bool_] = np.empty(0, dtype=np.bool_)
+        self.excused: NDArray[np.bool_] = np.empty(0, dtype=np.bool_)
+        self.newest_ns = NEVER  # newest event time over all sources
+        self._by_newest = Least()  # active and not excused ones
+        self._by_heard = Least()  # active ones
+
+    def add(self, names: Sequence[str]) -> None:
+        """Number new names in the order given; they are idle until heard or expected."""
+        for name in names:
+            if name in self.numbers:
+                raise ValueError(f"source {name!r} has a number already")
+            self.numbers[name] = len(self.names)
+            self.names.append(name)
+        if len(self.names) > len(self.newest):
+            size = max(64, 2 * len(self.newest), len(self.names))
+            self.newest = _grown(self.newest, size, NEVER)
+            self.heard = _grown(self.heard, size, NEVER)
+            self.active = _grown(self.active, size, False)
+            self.excused = _grown(self.excused, size, False)
+            self._by_newest.grow(size)
+            self._by_heard.grow(size)
+
+    def expect(self, names: Sequence[str], now_ns: int) -> None:
+        """Sources that hold the feed from now on although they were not heard yet."""
+        numbers = np.array([self.numbers[name] for name in names if not self.is_active(name)], dtype=np.intp)
+        if len(numbers):
+            self.active[numbers] = True
+            self.heard[numbers] = now_ns
+            self._refresh(numbers)
+
+    def keep_alive(self, now_ns: int) -> None:
+        """Count silence of the active sources from this instant on (the service itself did not listen before)."""
+        numbers = np.flatnonzero(self.active[: len(self.names)])
+        if len(numbers):
+            self.heard[numbers] = now_ns
+            self._refresh(numbers)
+
+    def hear(self, sources: NDArray[np.uint32], times: Times, now_ns: int) -> None:
+        """Take note of events (at least one), none of them too far in the future."""
+        numbers = sources.astype(np.intp)
+        np.maximum.at(self.newest, numbers, times)
+        self.newest_ns = max(self.newest_ns, int(times.max()))
+        if len(numbers) > 1 and numbers[0] == numbers[-1] and np.all(numbers == numbers[0]):
+            numbers = numbers[:1]
+        self.heard[numbers] = now_ns
+        self.active[numbers] = True
+        self.excused[numbers] = False
+        self._refresh(numbers)
+
+    def promise(self, source: int, time_ns: int, now_ns: int) -> None:
+        """Nothing older than time_ns will come from this source; it counts as a word of the source."""
+        self.newest[source] = max(int(self.newest[source]), time_ns)
+        self.heard[source] = now_ns
+        self.active[source] = True
+        self.excused[source] = False
+        self._refresh(np.array([source], dtype=np.intp))
+
+    def excuse(self, source: int) -> None:
+        """Do not wait for this source until it speaks again."""
+        self.excused[source] = True
+        self._refresh(np.array([source], dtype=np.intp))
+
+    def expire(self, silent_since_ns: int) -> int:
+        """Let every active source whose last word came at or before this instant fall idle; how many did."""
+        if self._by_heard.least()[0] > silent_since_ns:
+            return 0
+        numbers = self._by_heard.below(silent_since_ns + 1)
+        self.active[numbers] = False
+        self._refresh(numbers)
+        return len(numbers)
+
+    def least(self) -> tuple[int, int] | None:
+        """(newest event time, number) of the active source that is furthest behind; None if nobody is waited for."""
+        value, number = self._by_newest.least()
+        return None if number < 0 else (value, number)
+
+    def next_idle(self) -> tuple[int, int] | None:
+        """(arrival clock of its last word, number) of the active source that has been silent longest."""
+        value, number = self._by_heard.least()
+        return None if number < 0 else (value, number)
+
+    def is_active(self, name: str) -> bool:
+        """Whether the feed regards this source as alive."""
+        number = self.numbers.get(name, NO_SOURCE)
+        return number != NO_SOURCE and bool(self.active[number])
+
+    def active_count(self) -> int:
+        """Active sources (for observers: costs all sources)."""
+        return int(np.count_nonzero(self.active[: len(self.names)]))
+
+    def _refresh(self, numbers: NDArray[np.intp]) -> None:
+        active = self.active[numbers]
+        self._by_heard.update(numbers, np.where(active, self.heard[numbers], NONE))
+        self._by_newest.update(numbers, self._waited_for(numbers))
+
+    def _waited_for(self, numbers: NDArray[np.intp]) -> NDArray[np.int64]:
+        # An event at the very end of int64 must not look like a source that takes no part.
+        waiting = self.active[numbers] & ~self.excused[numbers]
+        return np.where(waiting, np.minimum(self.newest[numbers], NONE - 1), NONE)
+
+    def restore(
+        self,
+        names: Sequence[str],
+        newest: Times,
+        heard: Times,
+        active: NDArray[np.bool_],
+        excused: NDArray[np.bool_],
+        newest_ns: int,
+    ) -> None:
+        """Take over a saved state (columns by number)."""
+        self.add(names)
+        count = len(self.names)
+        self.newest[:count], self.heard[:count] = newest, heard
+        self.active[:count], self.excused[:count] = active, excused
+        self.newest_ns = newest_ns
+        if count:
+            self._refresh(np.arange(count))
+
+    def check(self) -> None:
+        """Assert that names, columns and tournaments agree."""
+        count = len(self.names)
+        assert [self.numbers[name] for name in self.names] == list(range(count))
+        self._by_heard.check()
+        self._by_newest.check()
+        heard = np.where(self.active[:count], self.heard[:count], NONE)
+        assert np.array_equal(self._by_heard.values()[:count], heard)
+        assert np.array_equal(self._by_newest.values()[:count], self._waited_for(np.arange(count)))
+
+
+def _grown(column: NDArray[Any], size: int, fill: int | bool) -> NDArray[Any]:
+    result = np.full(size, fill, dtype=column.dtype)
+    result[: len(column)] = column
+    return result

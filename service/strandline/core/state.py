@@ -1,0 +1,240 @@
+"""The state that a journal's records determine, and what each record does to it: the same records, the same state.
+
+Recovery, replay, a capture, debugging and simulation all are this fold. No decision is taken here: whether a mark is
+set, or an arrival refused, was decided by `feed.py` before the record was written.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from .arrivals import Arrivals
+from .columns import REF, TIME_MIN, Batch, QuarantineEntry, Refs, Times, empty_refs, empty_times
+from .effects import AnswerFault, Outcome
+from .histogram import POWERS, SECONDS_NS, Histogram
+from .ledger import Ledger
+from .merge import Merger
+from .outbox import Outbox
+from .records import (
+    ArrivalBody,
+    Cause,
+    ExcuseRecord,
+    Mark,
+    NumbersRecord,
+    PromiseRecord,
+    SettingsRecord,
+    SmallRecord,
+    SourcesRecord,
+    TakenRecord,
+)
+from .runs import OpenRuns, Strand, runs_of
+from .settings import Settings
+from .slack import FixedSlack
+from .sources import Sources
+from .watermark import HoldBound
+
+
+@dataclass(slots=True)
+class Figures:
+    """What is counted for observers on the way; histograms in ns, run lengths in events."""
+
+    lateness: Histogram
+    hold: Histogram
+    run_length: Histogram
+    arrivals: int = 0
+    marks: int = 0
+    marks_by_cause: list[int] = field(default_factory=lambda: [0] * len(Cause))
+
+
+class State:
+    """Everything that a feed knows. `end_lsn` arguments are the end of the record that is folded."""
+
+    def __init__(self, settings: Settings) -> None:
+        self.settings = settings
+        self.slack = FixedSlack(settings.slack_ns)
+        self.now_ns = TIME_MIN  # arrival clock of the last record
+        self.watermark_ns = TIME_MIN
+        self.marked_ns = TIME_MIN  # when it last moved
+        self.cause = Cause.SOURCES
+        self.sources = Sources()
+        self.runs = OpenRuns()
+        self.merger = Merger()
+        self.arrivals = Arrivals()
+        self.hold = HoldBound()
+        self.outbox = Outbox()
+        self.ledger = Ledger()
+        self.figures = Figures(Histogram(SECONDS_NS), Histogram(SECONDS_NS), Histogram(POWERS))
+
+    def fold_small(self, record: SmallRecord) -> None:
+        """Take over one of the rare records."""
+        match record:
+            case SourcesRecord():
+                self.sources.add(record.names)
+                return
+            case SettingsRecord():
+                self._fold_settings(record)
+            case TakenRecord():
+                self.outbox.taken(record.sink, record.lane, record.number)
+            case PromiseRecord():
+                self.sources.promise(record.source, record.time_ns, record.now_ns)
+            case ExcuseRecord():
+                self.sources.excuse(record.source)
+            case NumbersRecord():
+                self.outbox.next_number[record.lane] = max(self.outbox.next_number[record.lane], record.next_number)
+        self.advance(record.now_ns)
+
+    def _fold_settings(self, record: SettingsRecord) -> None:
+        self.settings = record.settings
+        self.slack.slack_ns = record.settings.slack_ns
+        self.outbox.serve(record.sinks)
+        if record.resumed:
+            # Time in which this service did not listen is not silence of the sources.
+            self.sources.keep_alive(record.now_ns)
+        self.advance(record.now_ns)
+        self.sources.expect(record.settings.expect_sources, record.now_ns)
+
+    def advance(self, now_ns: int) -> None:
+        """Let the arrival clock go on; it never goes back."""
+        self.now_ns = max(self.now_ns, now_ns)
+        self.sources.expire(self.now_ns - self.settings.idle_after_ns)
+
+    def fold_arrival(self, body: ArrivalBody, end_lsn: int) -> tuple[Outcome, list[Batch]]:
+        """Take in one request: what became of its events, and the batches for the late lane and the quarantine."""
+        self.advance(body.arrived_ns)
+        self.figures.arrivals += 1
+        received = len(body.times) + len(body.faults)
+        times, refs = body.times, _refs(body)
+        batches: list[Batch] = []
+        entries = _faulty(body)
+        if len(times):
+            times, refs, ahead = self._without_ahead(body, times, refs)
+            entries += ahead
+        late = 0
+        if len(times):
+            self._note_lateness(times)
+            self.sources.hear(refs["source"], times, body.arrived_ns)
+            if int(times.min()) < self.watermark_ns:
+                times, refs, late_batch = self._without_late(times, refs, body.arrived_ns, end_lsn)
+                batches.append(late_batch)
+                late = len(late_batch)
+        if len(times):
+            self._hold(times, refs, body)
+        if entries:
+            batches.append(self._quarantine(entries, body.arrived_ns, end_lsn))
+        for batch in batches:
+            self.outbox.add(batch)
+        ledger = self.ledger
+        ledger.received += received
+        ledger.late += late
+        ledger.quarantined += len(entries)
+        ledger.buffered += len(times)
+        faults = [AnswerFault(entry.line, entry.reason, entry.detail) for entry in entries]
+        faults.sort(key=lambda fault: fault.line)
+        return Outcome(received, len(times), late, 0, len(entries), faults), batches
+
+    def _without_ahead(self, body: ArrivalBody, times: Times, refs: Refs) -> tuple[Times, Refs, list[QuarantineEntry]]:
+        bound = body.arrived_ns + self.settings.ahead_limit_ns
+        if int(times.max()) <= bound:
+            return times, refs, []
+        ahead = times > bound
+        found = []
+        for index in np.flatnonzero(ahead).tolist():
+            line = index + 1 if body.line_numbers is None else int(body.line_numbers[index])
+            seconds = (int(times[index]) - body.arrived_ns) / 1e9
+            detail = f"the event time lies {seconds:.3f} s beyond the arrival clock"
+            ref = refs[index]
+            found.append(QuarantineEntry(line, "ahead", detail, int(ref["place"]), int(ref["length"])))
+        return times[~ahead], refs[~ahead], found
+
+    def _without_late(self, times: Times, refs: Refs, arrived_ns: int, end_lsn: int) -> tuple[Times, Refs, Batch]:
+        late = times < self.watermark_ns
+        number = self.outbox.next_number["late"]
+        batch = Batch("late", number, times[late], refs[late], arrived_ns, end_lsn, behind_ns=self.watermark_ns)
+        return times[~late], refs[~late], batch
+
+    def _quarantine(self, entries: list[QuarantineEntry], arrived_ns: int, end_lsn: int) -> Batch:
+        number = self.outbox.next_number["quarantine"]
+        return Batch("quarantine", number, empty_times(), empty_refs(), arrived_ns, end_lsn, entries=entries)
+
+    def _note_lateness(self, times: Times) -> None:
+        newest = self.sources.newest_ns
+        if int(times.min()) >= newest:
+            self.figures.lateness.add_same(0, len(times))
+        else:
+            self.figures.lateness.add(np.maximum(newest - times, 0))
+
+    def _hold(self, times: Times, refs: Refs, body: ArrivalBody) -> None:
+        self.arrivals.note(body.payload_place, body.arrived_ns, len(times))
+        self.hold.note(body.arrived_ns, int(times.max()))
+        runs = runs_of(times, refs)
+        for run in runs:
+            self.runs.deal(run)
+        self.figures.run_length.add(np.array([len(run.times) for run in runs], dtype=np.int64))
+
+    def fold_mark(self, mark: Mark, end_lsn: int) -> list[Batch]:
+        """Set the watermark and cut its release, in batches. It may stay where it is, so that equal times follow."""
+        assert mark.watermark_ns >= self.watermark_ns, "the watermark never goes back"
+        self.advance(mark.decided_ns)
+        self.watermark_ns, self.marked_ns, self.cause = mark.watermark_ns, mark.decided_ns, mark.cause
+        self.figures.marks += 1
+        self.figures.marks_by_cause[mark.cause] += 1
+        self.hold.passed(mark.watermark_ns)
+        heads = self.runs.cut(mark.watermark_ns)
+        if not heads:
+            return []
+        strand = self.merger.merge(heads)
+        rows = len(strand.times)
+        self.figures.hold.add(np.maximum(mark.decided_ns - self.arrivals.release(strand.refs), 0))
+        self.ledger.released += rows
+        self.ledger.buffered -= rows
+        batches = self._batches(strand, mark, end_lsn)
+        for batch in batches:
+            self.outbox.add(batch)
+        return batches
+
+    def _batches(self, strand: Strand, mark: Mark, end_lsn: int) -> list[Batch]:
+        assert mark.first_batch == self.outbox.next_number["ordered"]
+        size = mark.batch_events_at_most
+        return [
+            Batch(
+                "ordered",
+                mark.first_batch + index,
+                strand.times[start : start + size],
+                strand.refs[start : start + size],
+                mark.decided_ns,
+                end_lsn,
+            )
+            for index, start in enumerate(range(0, len(strand.times), size))
+        ]
+
+    def check(self) -> None:
+        """Assert every invariant: books, runs, sources, arrivals, outbox."""
+        self.ledger.check(self.runs.held)
+        self.runs.check()
+        self.sources.check()
+        self.arrivals.check(self.runs.held)
+        self.outbox.check()
+        head = self.runs.head_ns
+        assert head is None or head >= self.watermark_ns, "held behind the watermark"
+
+
+def _refs(body: ArrivalBody) -> Refs:
+    refs = np.empty(len(body.times), dtype=REF)
+    steps = body.lengths.astype(np.int64)
+    steps += 1  # the line feed
+    ends = np.cumsum(steps)
+    refs["place"] = ends - steps + body.payload_place
+    refs["length"] = body.lengths
+    refs["source"] = body.sources
+    return refs
+
+
+def _faulty(body: ArrivalBody) -> list[QuarantineEntry]:
+    entries = []
+    place = body.faults_place
+    for row in body.faults:
+        entries.append(QuarantineEntry(row.line, row.reason, row.detail, place, row.length))
+        place += row.length
+    return entries

@@ -1,0 +1,185 @@
+"""What observers see of a feed: plain values, taken from the state without changing it.
+
+Who holds the feed, and why, is judged here; HTTP, metrics and the dashboard only render it.
+"""
+
+from __future__ import annotations
+
+from dataclasses import asdict, dataclass
+
+import numpy as np
+
+from .columns import NO_SOURCE, TIME_MIN, Lane
+from .outbox import LANES
+from .records import Cause
+from .sources import NEVER
+from .state import State
+
+# Why a feed is held, in words for a person. The keys are stable.
+HOLD_WHYS: dict[str, str] = {
+    "nothing_held": "nothing is held",
+    "slack": "waiting out the slack behind the newest event",
+    "slow_source": "this source is the one furthest behind",
+    "expected_source": "this expected source has not been heard yet",
+    "silent_source": "this source has fallen silent and is not idle yet",
+    "all_silent": "no source is waited for; what is held drains at hold_at_most",
+    "sink_full": "too much is released and not yet taken by a sink",
+}
+SILENT_SHARE = (
+    0.25  # a holder silent for this share of idle_after is called silent, not slow: common practice, no source
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Hold:
+    """What keeps the watermark from moving."""
+
+    source: int  # NO_SOURCE if no single one
+    why: str  # a key of HOLD_WHYS
+    since_ns: int  # arrival clock since when this source holds for this reason
+
+
+@dataclass(frozen=True, slots=True)
+class LaneView:
+    """One lane towards one sink."""
+
+    taken: int
+    waiting_batches: int
+    waiting_events: int
+    oldest_ns: int | None  # arrival clock at which the oldest waiting batch became final
+
+
+@dataclass(frozen=True, slots=True)
+class View:
+    """A feed at one moment. Times in ns since 1970 UTC; TIME_MIN stands for "not yet"."""
+
+    name: str
+    now_ns: int
+    clock: str
+    watermark_ns: int
+    marked_ns: int
+    cause: str
+    slack_ns: int
+    newest_ns: int
+    hold: Hold
+    hold_source: str | None
+    held_events: int
+    held_oldest_ns: int | None
+    open_runs: list[int]
+    ledger: dict[str, int]
+    balance: int
+    sources: int
+    sources_active: int
+    next_number: dict[Lane, int]
+    undelivered_events: int
+    sinks: dict[str, dict[Lane, LaneView]]
+    marks: dict[str, int]
+    arrivals: int
+    comparisons: int
+    copies: int
+    gallops: int
+    merges: int
+    refusals: dict[str, int]
+
+
+def hold_of(state: State, before: Hold) -> Hold:
+    """Who holds the feed now, and since when if it is the same as before."""
+    source, why = _holder(state)
+    if (source, why) == (before.source, before.why):
+        return before
+    return Hold(source, why, state.now_ns)
+
+
+def _holder(state: State) -> tuple[int, str]:
+    if state.outbox.undelivered_events > state.settings.undelivered_events_at_most:
+        return NO_SOURCE, "sink_full"
+    if not state.runs.held:
+        return NO_SOURCE, "nothing_held"
+    if state.settings.clock == "arrival":
+        return NO_SOURCE, "slack"
+    least = state.sources.least()
+    if least is None:
+        return NO_SOURCE, "all_silent"
+    newest, source = least
+    if newest == NEVER:
+        return source, "expected_source"
+    if newest >= state.sources.newest_ns:
+        return source, "slack"
+    silent_ns = state.now_ns - int(state.sources.heard[source])
+    return source, "silent_source" if silent_ns > SILENT_SHARE * state.settings.idle_after_ns else "slow_source"
+
+
+def view_of(state: State, hold: Hold, now_ns: int, refusals: dict[str, int]) -> View:
+    """The feed at this moment."""
+    counts = state.merger.counts
+    return View(
+        name=state.settings.name,
+        now_ns=now_ns,
+        clock=state.settings.clock,
+        watermark_ns=state.watermark_ns,
+        marked_ns=state.marked_ns,
+        cause=state.cause.name.lower(),
+        slack_ns=state.slack.slack_ns,
+        newest_ns=state.sources.newest_ns,
+        hold=hold,
+        hold_source=None if hold.source == NO_SOURCE else state.sources.names[hold.source],
+        held_events=state.runs.held,
+        held_oldest_ns=state.arrivals.oldest_ns,
+        open_runs=state.runs.lengths(),
+        ledger=asdict(state.ledger),
+        balance=state.ledger.balance(),
+        sources=len(state.sources.names),
+        sources_active=state.sources.active_count(),
+        next_number=dict(state.outbox.next_number),
+        undelivered_events=state.outbox.undelivered_events,
+        sinks={name: _lanes(state, name) for name in state.outbox.positions},
+        marks={cause.name.lower(): state.figures.marks_by_cause[cause] for cause in Cause},
+        arrivals=state.figures.arrivals,
+        comparisons=counts.comparisons + state.runs.comparisons,
+        copies=counts.copies,
+        gallops=counts.gallops,
+        merges=counts.merges,
+        refusals=refusals,
+    )
+
+
+def _lanes(state: State, sink: str) -> dict[Lane, LaneView]:
+    views: dict[Lane, LaneView] = {}
+    for lane in LANES:
+        if lane not in state.outbox.positions[sink]:
+            continue
+        waiting = list(state.outbox.waiting(sink, lane))
+        oldest = waiting[0].instant_ns if waiting else None
+        views[lane] = LaneView(state.outbox.positions[sink][lane], len(waiting), sum(map(len, waiting)), oldest)
+    return views
+
+
+@dataclass(frozen=True, slots=True)
+class SourceView:
+    """One source at one moment."""
+
+    name: str
+    newest_ns: int | None
+    heard_ns: int | None
+    active: bool
+    excused: bool
+
+
+def sources_of(state: State, after: int, limit: int) -> list[SourceView]:
+    """Sources by number, from `after` on, at most `limit`."""
+    stop = min(len(state.sources.names), after + limit)
+    sources = state.sources
+    return [
+        SourceView(
+            sources.names[number],
+            _known(sources.newest[number]),
+            _known(sources.heard[number]),
+            bool(sources.active[number]),
+            bool(sources.excused[number]),
+        )
+        for number in range(after, stop)
+    ]
+
+
+def _known(value: np.int64) -> int | None:
+    return None if value == TIME_MIN else int(value)

@@ -1,0 +1,82 @@
+"""Where the watermark may stand: the rule, as a function of the sources, the slack and the arrival clock.
+
+With the event clock it is the least newest event time over the sources that are waited for, minus the slack; with the
+arrival clock it is the arrival clock minus the slack. `hold_at_most` pushes it past what has been held too long.
+Nothing is set here: `feed.py` turns a candidate into a mark, and only a mark moves the watermark.
+"""
+
+from __future__ import annotations
+
+from collections import deque
+from dataclasses import dataclass
+
+from .columns import NO_SOURCE, TIME_MIN
+from .records import Cause
+from .settings import Settings
+from .slack import FixedSlack
+from .sources import NEVER, Sources
+
+
+@dataclass(frozen=True, slots=True)
+class Candidate:
+    """A place where the watermark may stand, and why."""
+
+    watermark_ns: int
+    cause: Cause
+    source: int
+
+
+class HoldBound:
+    """What `hold_at_most` needs to know of the arrivals: pairs (arrival clock, newest event time), both ascending.
+
+    An arrival whose newest event is not newer than an earlier arrival's needs no pair: it is let go with that one.
+    """
+
+    def __init__(self) -> None:
+        self.pairs: deque[tuple[int, int]] = deque()
+
+    def note(self, arrived_ns: int, newest_ns: int) -> None:
+        """Events up to newest_ns came and are held."""
+        if not self.pairs or newest_ns > self.pairs[-1][1]:
+            self.pairs.append((arrived_ns, newest_ns))
+
+    def due(self, arrived_by_ns: int) -> int:
+        """Newest event time among arrivals up to this instant; TIME_MIN if there is none."""
+        pairs = self.pairs
+        if not pairs or pairs[0][0] > arrived_by_ns:
+            return TIME_MIN
+        while len(pairs) > 1 and pairs[1][0] <= arrived_by_ns:
+            # Both are due now and at every later instant: one pair says so, and none is walked over twice.
+            oldest_ns = pairs.popleft()[0]
+            pairs[0] = (oldest_ns, pairs[0][1])
+        return pairs[0][1]
+
+    def passed(self, watermark_ns: int) -> None:
+        """Forget what is released by a watermark."""
+        while self.pairs and self.pairs[0][1] <= watermark_ns:
+            self.pairs.popleft()
+
+    @property
+    def oldest_ns(self) -> int | None:
+        """An instant that no held event arrived before; None when nothing is held."""
+        return self.pairs[0][0] if self.pairs else None
+
+
+def candidate(settings: Settings, slack: FixedSlack, sources: Sources, hold: HoldBound, now_ns: int) -> Candidate:
+    """Where the watermark may stand now. Sources that have fallen idle must have been expired before."""
+    if settings.clock == "arrival":
+        best = Candidate(now_ns - slack.slack_ns, Cause.CLOCK, NO_SOURCE)
+    else:
+        least = sources.least()
+        if least is None:  # nobody is waited for: the most advanced source leads
+            best = Candidate(_behind(sources.newest_ns, slack.slack_ns), Cause.SILENCE, NO_SOURCE)
+        else:
+            best = Candidate(_behind(least[0], slack.slack_ns), Cause.SOURCES, least[1])
+    due = hold.due(now_ns - settings.hold_at_most_ns)
+    if due > best.watermark_ns:
+        return Candidate(due, Cause.HOLD_AT_MOST, best.source)
+    return best
+
+
+def _behind(time_ns: int, slack_ns: int) -> int:
+    return TIME_MIN if time_ns == NEVER else max(TIME_MIN, time_ns - slack_ns)
