@@ -25,6 +25,7 @@ REFUSALS: dict[str, tuple[int, str]] = {
     "held_full": (429, "Too many events are held"),
     "journal_full": (429, "The journal has reached its limit"),
     "sources_full": (429, "Too many sources"),
+    "lanes_full": (429, "The late lane or the quarantine has reached its limit"),
     "disk_full": (503, "The disk has no room for the journal"),
     "promise_ahead": (422, "The promise lies in the future"),
     "stopping": (503, "The service is stopping"),

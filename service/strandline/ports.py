@@ -63,16 +63,26 @@ class Disk(Protocol):
 
 
 class Lines(Protocol):
-    """Reads event lines back out of the journal."""
+    """Reads event lines back out of the journal.
+
+    Sinks call it from threads of their own while the loop goes on appending, so every method must be safe to call from
+    any thread. The lines of a batch stay readable until every sink that serves its lane has reported it as durable.
+    """
 
     def lines(self, batch: Batch) -> list[bytes]:
-        """The batch's lines, one bytes object each, without line feeds (for stores that take rows)."""
+        """The batch's lines, one bytes object each, without line feeds (for stores that take rows).
+
+        A quarantine batch too: the line of each of its entries, in their order; such lines may be any bytes at all.
+        """
 
     def ndjson(self, batch: Batch) -> bytes:
-        """The batch's lines, each followed by a line feed, as one block (for stores that take bytes)."""
+        """The batch's lines, each followed by a line feed, as one block (for stores that take bytes).
+
+        For the lanes "ordered" and "late" only: a line in quarantine may hold a line feed of its own.
+        """
 
     def source_names(self) -> Sequence[str]:
-        """Names of the sources by number."""
+        """Names of the sources by number. It only grows: a number once given keeps its name."""
 
 
 class Sink(Protocol):
@@ -82,12 +92,18 @@ class Sink(Protocol):
     of the last batch that can never be lost (0: none yet); a lane that is missing means "I cannot know", and the
     journal's own memory of the last answer is used. `take` may answer with less than it was given (it buffers); then
     `flush` makes the rest durable. Errors: strandline.errors.SinkRetry (try the same batches again) and
-    SinkRefused (permanent; the batches named in it will never be taken).
+    SinkRefused (permanent; the batches named in it will never be taken). After any error from `take` or `flush`, every
+    batch above the durable position is offered again, those too that an earlier `take` had buffered; a sink skips the
+    ones that it still holds. A call may be cancelled; `close` then follows and must wait for what still runs.
     """
 
     @property
     def lanes(self) -> tuple[Lane, ...]:
         """The lanes that this sink takes."""
+
+    @property
+    def flush_after_s(self) -> float:
+        """Seconds that what was buffered may wait for `flush`; 0: flush as soon as nothing more waits to be taken."""
 
     async def open(self) -> dict[Lane, int]:
         """Connect, create what is absent, and tell the position reached."""

@@ -25,6 +25,9 @@ Refs = NDArray[np.void]
 Lane = Literal["ordered", "late", "quarantine"]
 
 REF = np.dtype([("place", "<i8"), ("length", "<u4"), ("source", "<u4")])
+# The same 16 bytes without their fields: numpy copies and joins these whole, structured ones field by field (0.3 and
+# 0.5 against 3.4 and 3.6 ns an item), so runs and merges move ROWs and a batch shows them as REFs.
+ROW = np.dtype("V16")
 NO_SOURCE = 2**32 - 1
 TIME_MIN = -(2**63)
 TIME_MAX = 2**63 - 1
@@ -107,3 +110,13 @@ def empty_times() -> Times:
 def empty_refs() -> Refs:
     """A ref column without rows."""
     return np.empty(0, dtype=REF)
+
+
+def as_rows(refs: Refs) -> Refs:
+    """The same column without its fields (no copy)."""
+    return refs.view(ROW)
+
+
+def as_refs(rows: Refs) -> Refs:
+    """The same column with its fields (no copy)."""
+    return rows.view(REF)

@@ -10,12 +10,15 @@ from __future__ import annotations
 from collections import deque
 from collections.abc import Mapping, Sequence
 
-from .columns import NO_SOURCE, Arrival, Lane
+import numpy as np
+
+from .columns import NO_SOURCE, TIME_MIN, Arrival, Lane
 from .effects import Answer, Append, Buffer, Deliver, Effect, Outcome, Refuse, Sync
 from .records import (
     VERSION,
     Cause,
     ExcuseRecord,
+    IdleRecord,
     Kind,
     Mark,
     NumbersRecord,
@@ -33,6 +36,7 @@ from .records import (
     encode_small,
     frame_bytes,
 )
+from .saved import restore, save
 from .settings import Settings
 from .state import State
 from .view import Hold, View, hold_of, view_of
@@ -52,6 +56,7 @@ class Feed:
         self.state = State(settings)
         self.next_lsn = 0
         self.durable_lsn = 0
+        self._clock_ns = TIME_MIN  # never goes back while the feed lives; what it decides stands in records
         self._asked_lsn = 0  # a sync up to here was asked for
         self._waiting: deque[tuple[int, Answer | Deliver]] = deque()
         self._hold = Hold(NO_SOURCE, "nothing_held", 0)
@@ -60,10 +65,24 @@ class Feed:
 
     # ---- recovery -------------------------------------------------------------------------------------------------
 
+    def save(self) -> list[Buffer]:
+        """The state up to `next_lsn`, in parts of one body. It may be kept once the journal is durable up to there."""
+        return save(self.state)
+
+    def restore(self, body: Buffer, lsn: int) -> None:
+        """Take over a saved state that covers the journal up to lsn. Raises ValueError if it cannot be read."""
+        self.state = restore(body)
+        self.next_lsn = self.durable_lsn = lsn
+
     def fold(self, kind: int, version: int, body: Buffer, lsn: int) -> None:
-        """Take over one record of the journal. Raises ValueError for a kind or version that this code cannot read."""
+        """Take over one record of the journal, the next one; a journal whose head is gone may start anywhere.
+
+        Raises ValueError for a gap, or for a kind or version that this code cannot read.
+        """
         if version != VERSION:
             raise ValueError(f"record version {version} at {lsn} is newer than this program (it reads {VERSION})")
+        if lsn != self.next_lsn and self.next_lsn:
+            raise ValueError(f"a record at position {lsn}, but what was folded ends at position {self.next_lsn}")
         end = lsn + frame_bytes(len(body))
         match Kind(kind):
             case Kind.ARRIVAL:
@@ -88,23 +107,29 @@ class Feed:
         effects: list[Effect] = []
         now = self._now(now_ns)
         chosen = settings or self.state.settings
-        unknown = [name for name in chosen.expect_sources if name not in self.state.sources.numbers]
+        known = self.state.sources.numbers
+        unknown = [name for name in dict.fromkeys(chosen.expect_sources) if name not in known]
         if unknown:
             self._record(effects, SourcesRecord(len(self.state.sources.names), unknown))
         served = {name: list(lanes) for name, lanes in sinks.items()}
-        self._record(effects, SettingsRecord(now, chosen, served, resumed=not self._started))
+        stand = {
+            name: {lane: number for lane, number in (positions or {}).get(name, {}).items() if lane in lanes}
+            for name, lanes in served.items()
+        }
+        for lane, number in ((lane, number) for lanes in stand.values() for lane, number in lanes.items()):
+            if number >= self.state.outbox.next_number[lane]:
+                # The store has seen more than this journal knows: never use those numbers for something else.
+                self._record(effects, NumbersRecord(now, lane, number + 1))
+        self._record(effects, SettingsRecord(now, chosen, served, not self._started, stand))
         self._started = True
-        for sink, lanes in (positions or {}).items():
-            for lane, number in lanes.items():
-                self.state.outbox.move(sink, lane, number)
-                if number >= self.state.outbox.next_number[lane]:
-                    # The store has seen more than this journal knows: never use those numbers for something else.
-                    self._record(effects, NumbersRecord(now, lane, number + 1))
         self._redeliver()
-        return self._done(effects, sync=True)
+        return self._done(effects, now, sync=True)
 
     def _redeliver(self) -> None:
-        self._waiting.clear()
+        """Deliver all that is undelivered; keep what waits here besides: answers, and batches that no sink takes."""
+        serves = self.state.outbox.serves
+        kept = [row for row in self._waiting if not (isinstance(row[1], Deliver) and serves(row[1].batch.lane))]
+        self._waiting = deque(kept)
         for lane in self.state.outbox.next_number:
             for batch in self.state.outbox.undelivered(lane):
                 self._waiting.append((self.next_lsn, Deliver(batch)))
@@ -112,10 +137,11 @@ class Feed:
     # ---- inputs ---------------------------------------------------------------------------------------------------
 
     def arrive(self, arrival: Arrival, now_ns: int, token: int) -> list[Effect]:
-        """One request came. Answered, or refused whole, under its token."""
+        """One request came. Answered, or refused whole, under its token. Raises ValueError if it contradicts itself."""
+        _require_consistent(arrival, self.state.sources.numbers)
         refusal = self._refusal(arrival, token)
         if refusal:
-            self.refusals[refusal.reason] = self.refusals.get(refusal.reason, 0) + 1
+            self.note_refusal(refusal.reason)
             return [refusal]
         if not arrival.received:
             return [Answer(token, Outcome(0, 0, 0, 0, 0))]
@@ -131,13 +157,14 @@ class Feed:
         self._waiting.append((self.next_lsn, Answer(token, outcome)))
         self._waiting.extend((self.next_lsn, Deliver(batch)) for batch in batches)
         self._mark(effects, now, only_releasing=False)
-        return self._done(effects, sync=True)
+        return self._done(effects, now, sync=True)
 
     def tick(self, now_ns: int) -> list[Effect]:
         """Time has gone on."""
         effects: list[Effect] = []
-        self._mark(effects, self._now(now_ns), only_releasing=True)
-        return self._done(effects, sync=bool(effects) or self.next_lsn > self._asked_lsn)
+        now = self._now(now_ns)
+        self._mark(effects, now, only_releasing=True)
+        return self._done(effects, now, sync=bool(effects) or self.next_lsn > self._asked_lsn)
 
     def synced(self, lsn: int) -> list[Effect]:
         """The journal is durable up to lsn: what waited for that may leave."""
@@ -151,9 +178,11 @@ class Feed:
         """A sink durably holds the lane's batches up to this number: there may be room again."""
         effects: list[Effect] = []
         now = self._now(now_ns)
-        self._record(effects, TakenRecord(now, sink, lane, number))
+        if self.state.outbox.is_news(sink, lane, number):
+            self._record(effects, TakenRecord(now, sink, lane, number))
+        positions_only = len(effects)
         self._mark(effects, now, only_releasing=True)
-        return self._done(effects, sync=len(effects) > 1)
+        return self._done(effects, now, sync=len(effects) > positions_only)
 
     def promise(self, source: str, time_ns: int, now_ns: int, token: int) -> list[Effect]:
         """A source promises that nothing older than time_ns will come from it."""
@@ -200,6 +229,13 @@ class Feed:
                 f"the feed is held by: {self._hold.why}"
             )
             return Refuse(token, "held_full", detail, RETRY_AFTER_S)
+        aside, limit = state.outbox.aside_events, state.settings.undelivered_events_at_most
+        if aside and aside + arrival.received > limit:
+            detail = (
+                f"{aside} events that are late or in quarantine are not yet taken by their sinks and "
+                f"undelivered_events_at_most is {limit}"
+            )
+            return Refuse(token, "lanes_full", detail, RETRY_AFTER_S)
         return self._too_many_sources(len(arrival.new_sources), token)
 
     def _too_many_sources(self, more: int, token: int) -> Refuse | None:
@@ -212,7 +248,8 @@ class Feed:
     def _mark(self, effects: list[Effect], now: int, *, only_releasing: bool) -> None:
         """Set a mark if the watermark may move (or only if that would release something)."""
         state = self.state
-        state.advance(now)
+        if state.sources.falls_idle(now - state.settings.idle_after_ns):
+            self._record(effects, IdleRecord(now))
         if state.outbox.undelivered_events > state.settings.undelivered_events_at_most:
             return
         best = candidate(state.settings, state.slack, state.sources, state.hold, now)
@@ -238,7 +275,8 @@ class Feed:
     # ---- records --------------------------------------------------------------------------------------------------
 
     def _now(self, now_ns: int) -> int:
-        return max(now_ns, self.state.now_ns)
+        self._clock_ns = max(now_ns, self._clock_ns, self.state.now_ns)
+        return self._clock_ns
 
     def _append(self, effects: list[Effect], kind: Kind, parts: Sequence[Buffer]) -> None:
         effects.append(Append(self.next_lsn, int(kind), parts))
@@ -253,11 +291,11 @@ class Feed:
         """End of an operator's or a source's act: its consequences, then its answer once all is durable."""
         self._mark(effects, now, only_releasing=False)
         self._waiting.append((self.next_lsn, Answer(token, None)))
-        return self._done(effects, sync=True)
+        return self._done(effects, now, sync=True)
 
-    def _done(self, effects: list[Effect], *, sync: bool) -> list[Effect]:
+    def _done(self, effects: list[Effect], now: int, *, sync: bool) -> list[Effect]:
         self.state.ledger.check(self.state.runs.held)
-        self._hold = hold_of(self.state, self._hold)
+        self._hold = hold_of(self.state, self._hold, now)
         if sync:
             self._asked_lsn = self.next_lsn
             effects.append(Sync(self.next_lsn))
@@ -267,7 +305,16 @@ class Feed:
 
     def snapshot(self, now_ns: int) -> View:
         """Everything that observers need, as plain values."""
-        return view_of(self.state, self._hold, self._now(now_ns), dict(self.refusals))
+        return view_of(self.state, self._hold, max(now_ns, self._clock_ns, self.state.now_ns), dict(self.refusals))
+
+    def unsynced(self) -> tuple[int, int | None]:
+        """Events in batches whose record is not durable yet, and the arrival clock of the oldest such batch."""
+        batches = [effect.batch for _, effect in self._waiting if isinstance(effect, Deliver)]
+        return sum(map(len, batches)), batches[0].instant_ns if batches else None
+
+    def note_refusal(self, reason: str) -> None:
+        """Count a request that was refused whole (by the feed, or for it by who keeps its journal and lanes)."""
+        self.refusals[reason] = self.refusals.get(reason, 0) + 1
 
     @property
     def needed_place(self) -> int:
@@ -281,3 +328,16 @@ class Feed:
         assert self.durable_lsn <= self.next_lsn
         lsns = [lsn for lsn, _ in self._waiting]
         assert lsns == sorted(lsns) and (not lsns or lsns[-1] <= self.next_lsn)
+
+
+def _require_consistent(arrival: Arrival, known: Mapping[str, int]) -> None:
+    """Raise ValueError for what could not be folded: a record that is written stands for ever."""
+    rows, names = len(arrival.times), arrival.new_sources
+    if len(arrival.sources) != rows or len(arrival.lengths) != rows:
+        raise ValueError("an arrival's columns must have equal lengths")
+    if rows and int(arrival.sources.max()) >= len(known) + len(names):
+        raise ValueError(f"an arrival names source {arrival.sources.max()}, {len(known) + len(names)} are known")
+    if len(arrival.payload) != int(arrival.lengths.sum(dtype=np.int64)) + rows:
+        raise ValueError(f"an arrival's payload of {len(arrival.payload)} bytes is not the sum of its lines")
+    if names and (len(set(names)) < len(names) or any(name in known for name in names)):
+        raise ValueError("an arrival's new sources have numbers already: decode it against the present table")

@@ -11,7 +11,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from .columns import REF, empty_refs, empty_times
+from .columns import ROW, as_rows, empty_refs, empty_times
 from .gallop import gallop_left, gallop_right
 from .runs import Strand, joined
 
@@ -70,7 +70,7 @@ class Merger:
         """One ascending strand of all heads; of equal times the one of the earlier head comes first."""
         parts = self._fused(heads) if self.fusing else heads
         if not parts:
-            return Strand(empty_times(), empty_refs())
+            return Strand(empty_times(), as_rows(empty_refs()))
         total = sum(len(part.times) for part in parts)
         stack: list[tuple[Strand, int]] = []  # strand, power of the boundary to its right
         current, start = parts[0], 0
@@ -133,7 +133,7 @@ class _PairMerge:
         self.merger, self.counts = merger, merger.counts
         self.older, self.newer = older, newer
         rows = len(older.times) + len(newer.times)
-        self.times, self.refs = np.empty(rows, dtype=np.int64), np.empty(rows, dtype=REF)
+        self.times, self.refs = np.empty(rows, dtype=np.int64), np.empty(rows, dtype=ROW)
         self.older_at = self.newer_at = self.filled = 0
         self.newer_end = len(newer.times)
 

@@ -44,6 +44,7 @@ class Kind(IntEnum):
     PROMISE = 6
     EXCUSE = 7
     NUMBERS = 8
+    IDLE = 9
 
 
 class Cause(IntEnum):
@@ -57,12 +58,16 @@ class Cause(IntEnum):
 
 
 class SettingsRecord(msgspec.Struct, frozen=True, array_like=True):
-    """The feed was started, or set anew: from here on it works with these settings and serves these sinks' lanes."""
+    """The feed was started, or set anew: from here on it works with these settings and serves these sinks' lanes.
+
+    `positions` is what sinks then said of themselves: the last batch of a lane that each durably holds.
+    """
 
     now_ns: int
     settings: Settings
     sinks: dict[str, list[Lane]]
     resumed: bool  # the process has just started (else: other settings while it runs)
+    positions: dict[str, dict[Lane, int]] = {}
 
 
 class SourcesRecord(msgspec.Struct, frozen=True, array_like=True):
@@ -103,6 +108,12 @@ class NumbersRecord(msgspec.Struct, frozen=True, array_like=True):
     now_ns: int
     lane: Lane
     next_number: int
+
+
+class IdleRecord(msgspec.Struct, frozen=True, array_like=True):
+    """At this instant sources fell idle: those that had been silent for `idle_after` by then."""
+
+    now_ns: int
 
 
 @dataclass(frozen=True, slots=True)
@@ -148,8 +159,9 @@ SMALL_KINDS = {
     Kind.PROMISE: PromiseRecord,
     Kind.EXCUSE: ExcuseRecord,
     Kind.NUMBERS: NumbersRecord,
+    Kind.IDLE: IdleRecord,
 }
-SmallRecord = SettingsRecord | SourcesRecord | TakenRecord | PromiseRecord | ExcuseRecord | NumbersRecord
+SmallRecord = SettingsRecord | SourcesRecord | TakenRecord | PromiseRecord | ExcuseRecord | NumbersRecord | IdleRecord
 _KIND_OF = {struct_type: kind for kind, struct_type in SMALL_KINDS.items()}
 _pack = msgspec.msgpack.Encoder().encode
 _unpack_faults = msgspec.msgpack.Decoder(list[FaultRow]).decode

@@ -23,7 +23,7 @@ COALESCE_EVENTS = 1024  # neighbouring chunks of a run up to this size are joine
 
 
 class Strand(NamedTuple):
-    """Events in ascending time: two columns of equal length."""
+    """Events in ascending time: two columns of equal length, refs as ROWs."""
 
     times: Times
     refs: Refs
@@ -178,6 +178,11 @@ class OpenRuns:
         first = int(cuts[-1]) if count else rows
         if first:
             self._open(Strand(times[:first], refs[:first]))
+
+    def reopen(self, strand: Strand) -> None:
+        """Open a saved run again, behind the ones that were opened before it."""
+        self.held += len(strand.times)
+        self._open(strand)
 
     def _extend(self, index: int, piece: Strand) -> None:
         self.runs[index].append(piece)

@@ -89,9 +89,13 @@ class Sources:
         self.excused[source] = True
         self._refresh(np.array([source], dtype=np.intp))
 
+    def falls_idle(self, silent_since_ns: int) -> bool:
+        """Whether the last word of some active source came at or before this instant."""
+        return self._by_heard.least()[0] <= silent_since_ns
+
     def expire(self, silent_since_ns: int) -> int:
         """Let every active source whose last word came at or before this instant fall idle; how many did."""
-        if self._by_heard.least()[0] > silent_since_ns:
+        if not self.falls_idle(silent_since_ns):
             return 0
         numbers = self._by_heard.below(silent_since_ns + 1)
         self.active[numbers] = False

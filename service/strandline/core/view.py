@@ -82,15 +82,15 @@ class View:
     refusals: dict[str, int]
 
 
-def hold_of(state: State, before: Hold) -> Hold:
+def hold_of(state: State, before: Hold, now_ns: int) -> Hold:
     """Who holds the feed now, and since when if it is the same as before."""
-    source, why = _holder(state)
+    source, why = _holder(state, now_ns)
     if (source, why) == (before.source, before.why):
         return before
-    return Hold(source, why, state.now_ns)
+    return Hold(source, why, now_ns)
 
 
-def _holder(state: State) -> tuple[int, str]:
+def _holder(state: State, now_ns: int) -> tuple[int, str]:
     if state.outbox.undelivered_events > state.settings.undelivered_events_at_most:
         return NO_SOURCE, "sink_full"
     if not state.runs.held:
@@ -105,7 +105,7 @@ def _holder(state: State) -> tuple[int, str]:
         return source, "expected_source"
     if newest >= state.sources.newest_ns:
         return source, "slack"
-    silent_ns = state.now_ns - int(state.sources.heard[source])
+    silent_ns = now_ns - int(state.sources.heard[source])
     return source, "silent_source" if silent_ns > SILENT_SHARE * state.settings.idle_after_ns else "slow_source"
 
 

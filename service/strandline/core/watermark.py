@@ -14,7 +14,7 @@ from .columns import NO_SOURCE, TIME_MIN
 from .records import Cause
 from .settings import Settings
 from .slack import FixedSlack
-from .sources import NEVER, Sources
+from .sources import Sources
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,14 +42,12 @@ class HoldBound:
 
     def due(self, arrived_by_ns: int) -> int:
         """Newest event time among arrivals up to this instant; TIME_MIN if there is none."""
-        pairs = self.pairs
-        if not pairs or pairs[0][0] > arrived_by_ns:
-            return TIME_MIN
-        while len(pairs) > 1 and pairs[1][0] <= arrived_by_ns:
-            # Both are due now and at every later instant: one pair says so, and none is walked over twice.
-            oldest_ns = pairs.popleft()[0]
-            pairs[0] = (oldest_ns, pairs[0][1])
-        return pairs[0][1]
+        due_ns = TIME_MIN
+        for arrived_ns, newest_ns in self.pairs:
+            if arrived_ns > arrived_by_ns:
+                break
+            due_ns = newest_ns  # walked over once: a mark follows, and forgets what was due
+        return due_ns
 
     def passed(self, watermark_ns: int) -> None:
         """Forget what is released by a watermark."""
@@ -65,7 +63,7 @@ class HoldBound:
 def candidate(settings: Settings, slack: FixedSlack, sources: Sources, hold: HoldBound, now_ns: int) -> Candidate:
     """Where the watermark may stand now. Sources that have fallen idle must have been expired before."""
     if settings.clock == "arrival":
-        best = Candidate(now_ns - slack.slack_ns, Cause.CLOCK, NO_SOURCE)
+        best = Candidate(_behind(now_ns, slack.slack_ns), Cause.CLOCK, NO_SOURCE)
     else:
         least = sources.least()
         if least is None:  # nobody is waited for: the most advanced source leads
@@ -79,4 +77,4 @@ def candidate(settings: Settings, slack: FixedSlack, sources: Sources, hold: Hol
 
 
 def _behind(time_ns: int, slack_ns: int) -> int:
-    return TIME_MIN if time_ns == NEVER else max(TIME_MIN, time_ns - slack_ns)
+    return max(TIME_MIN, time_ns - slack_ns)  # so NEVER, which is TIME_MIN, stays where it is

@@ -1,0 +1,167 @@
+"""The service: feeds, HTTP and signals put together, and the written order of a stop.
+
+Nothing is decided here about events. Start: read every journal, connect the sinks, then listen. Stop (SIGTERM, SIGINT):
+stop accepting; answer those who wait on a sync; deliver within `drain_at_most`; save and close. A second signal stops
+at once: the journal has everything that was answered.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import contextlib
+import logging
+import os
+import signal
+from collections.abc import Mapping
+from pathlib import Path
+
+import msgspec
+from aiohttp import web
+from prometheus_client.aiohttp import make_aiohttp_handler
+
+from . import observe, openapi
+from .clock import SystemClock
+from .config import Config
+from .errors import StrandlineError
+from .ingest import endpoint
+from .ingest.endpoint import BODIES, CONFIG, FEEDS
+from .journal.disk import LocalDisk
+from .metrics import make_registry
+from .problems import as_problems
+from .runtime import FeedRuntime
+
+log = logging.getLogger("strandline")
+TICK_S = 0.25
+EXIT_FAILED = 3
+EXIT_AT_ONCE = 130
+
+
+def make_app(config: Config, feeds: dict[str, FeedRuntime]) -> web.Application:
+    """The HTTP application over feeds that are open."""
+    app = web.Application(middlewares=[as_problems])
+    app[FEEDS], app[CONFIG] = feeds, config
+    app[BODIES] = asyncio.Semaphore(config.limits.bodies_at_most)
+    app.add_routes(
+        [
+            web.post("/v1/feeds/{feed}/events", endpoint.post_events),
+            web.post("/v1/feeds/{feed}/marks", endpoint.post_marks),
+            web.post("/v1/feeds/{feed}/excuse", endpoint.post_excuse),
+            web.post("/v1/feeds/{feed}/drain", endpoint.post_drain),
+            web.get("/v1/feeds", observe.get_feeds),
+            web.get("/v1/feeds/{feed}", observe.get_feed),
+            web.get("/v1/feeds/{feed}/sources", observe.get_sources),
+            web.get("/v1/feeds/{feed}/late", observe.get_late),
+            web.get("/v1/feeds/{feed}/quarantine", observe.get_quarantine),
+            web.get("/v1/feeds/{feed}/ordered", observe.get_ordered),
+            web.get("/metrics", make_aiohttp_handler(make_registry(feeds))),
+            web.get("/health/live", observe.get_live),
+            web.get("/health/ready", observe.get_ready),
+            web.get("/openapi.json", _get_openapi),
+        ]
+    )
+    return app
+
+
+async def _get_openapi(request: web.Request) -> web.Response:
+    del request
+    return web.Response(body=msgspec.json.encode(openapi.document()), content_type="application/json")
+
+
+class Service:
+    """The feeds of one process and the listener in front of them."""
+
+    def __init__(self, config: Config) -> None:
+        self.config = config
+        self.clock = SystemClock()
+        self.disk = LocalDisk(config.data_dir)
+        self.feeds: dict[str, FeedRuntime] = {}
+        self.stopping = asyncio.Event()
+        self.failure: str | None = None
+        self.port = config.listen.port
+        self._runner: web.AppRunner | None = None
+        self._ticker: asyncio.Task[None] | None = None
+
+    async def start(self) -> None:
+        """Open every feed, then listen."""
+        self.disk.lock("lock")
+        for feed in self.config.feeds:
+            runtime = FeedRuntime(feed, self.config.feed_dir(feed), self.disk, self.clock, self._failed)
+            self.feeds[feed.name] = runtime
+            await runtime.open()
+        self._ticker = asyncio.create_task(self._tick())
+        app = make_app(self.config, self.feeds)
+        app.on_shutdown.append(self._hush)
+        # Bodies are decompressed by our own code, within limits; a client that is gone ends its handler.
+        self._runner = web.AppRunner(app, auto_decompress=False, handler_cancellation=True, access_log=None)
+        await self._runner.setup()
+        site = web.TCPSite(self._runner, self.config.listen.host, self.config.listen.port)
+        await site.start()
+        addresses = self._runner.addresses
+        self.port = int(addresses[0][1]) if addresses else self.config.listen.port
+        log.info("listening on http://%s:%d", self.config.listen.host, self.port)
+
+    async def _hush(self, app: web.Application) -> None:
+        del app
+        for runtime in self.feeds.values():
+            runtime.recent.close()
+
+    async def stop(self) -> None:
+        """Stop in the written order."""
+        limit_s = self.config.drain_at_most_ns / 1e9
+        if self._ticker:
+            self._ticker.cancel()
+            with contextlib.suppress(asyncio.CancelledError):
+                await self._ticker
+        await asyncio.gather(*(runtime.close(limit_s) for runtime in self.feeds.values()))
+        if self._runner:
+            await self._runner.cleanup()
+        self.disk.close()
+
+    def _failed(self, feed: str, error: Exception) -> None:
+        log.critical("feed %s: %s; the service stops and recovers at its next start", feed, error)
+        self.failure = f"feed {feed}: {error}"
+        self.stopping.set()
+
+    async def _tick(self) -> None:
+        while True:
+            await asyncio.sleep(TICK_S)
+            for runtime in self.feeds.values():
+                runtime.tick()
+
+
+async def serve(config: Config, ready_file: Path | None = None) -> int:
+    """Run until a signal or a failure; the exit code."""
+    service = Service(config)
+    loop = asyncio.get_running_loop()
+    signals = 0
+
+    def on_signal() -> None:
+        nonlocal signals
+        signals += 1
+        if signals > 1:
+            log.warning("second signal: stopping at once; what was answered is in the journal")
+            os._exit(EXIT_AT_ONCE)
+        log.info("stopping: delivering what is released for at most %.0f s", config.drain_at_most_ns / 1e9)
+        service.stopping.set()
+
+    for number in (signal.SIGTERM, signal.SIGINT):
+        loop.add_signal_handler(number, on_signal)
+    await service.start()
+    if ready_file:
+        ready_file.write_text(f"{service.port}\n")
+    await service.stopping.wait()
+    await service.stop()
+    log.info("stopped")
+    return EXIT_FAILED if service.failure else 0
+
+
+def run(config: Config, config_path: Path | None = None, environ: Mapping[str, str] | None = None) -> int:
+    """Run the service in this process until it is told to stop; the exit code. Raises StrandlineError, OSError."""
+    del config_path, environ
+    if not config.feeds:
+        raise StrandlineError("the configuration names no feed: add a [[feed]] with a name")
+    logging.basicConfig(level=logging.INFO, format="%(asctime)s %(levelname)s %(name)s: %(message)s")
+    import uvloop  # noqa: PLC0415 - only the running service needs it
+
+    with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
+        return runner.run(serve(config))

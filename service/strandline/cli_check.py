@@ -1,0 +1,55 @@
+"""`strandline check`: a configuration's faults, or what it amounts to. Reading it is `strandline.config`."""
+
+from __future__ import annotations
+
+import argparse
+import os
+import sys
+from typing import Any
+
+import msgspec
+
+from .cli_answers import FINE, WRONG_USE, write_table
+from .config import Config, Feed, load
+from .config_units import duration_text
+from .errors import ConfigError
+
+
+def check(options: argparse.Namespace) -> int:
+    """Answer for one file. Without --json, faults are raised as ConfigError for the command line to tell."""
+    try:
+        config = load(options.file, os.environ)
+    except ConfigError as error:
+        if not options.json:
+            raise
+        _write_json({"file": str(options.file), "ok": False, "faults": error.faults})
+        return WRONG_USE
+    if options.json:
+        _write_json({"file": str(options.file), "ok": True, "faults": [], "feeds": [_feed(f) for f in config.feeds]})
+    else:
+        _write(str(options.file), config)
+    return FINE
+
+
+def _write(file: str, config: Config) -> None:
+    sys.stdout.write(f"{file} has no fault. Listens on {config.listen}, keeps its data in {config.data_dir}.\n")
+    headings = ("feed", "slack", "idle after", "hold at most", "sinks")
+    write_table(headings, ((feed.name, *_waits(feed), ", ".join(_sinks(feed))) for feed in config.feeds))
+
+
+def _waits(feed: Feed) -> list[str]:
+    return [duration_text(ns) for ns in (feed.slack_ns, feed.idle_after_ns, feed.hold_at_most_ns)]
+
+
+def _sinks(feed: Feed) -> list[str]:
+    return [sink.name if sink.name == sink.kind else f"{sink.name} ({sink.kind})" for sink in feed.sinks]
+
+
+def _feed(feed: Feed) -> dict[str, Any]:
+    sinks = [{"name": sink.name, "kind": sink.kind} for sink in feed.sinks]
+    settings: dict[str, Any] = msgspec.to_builtins(feed.settings())
+    return settings | {"sinks": sinks}
+
+
+def _write_json(answer: dict[str, Any]) -> None:
+    sys.stdout.write(msgspec.json.encode(answer).decode() + "\n")

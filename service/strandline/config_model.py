@@ -1,0 +1,199 @@
+"""The configuration as values: every key with its kind, its default and what it is for, declared once.
+
+Reading is `config_read`, overriding `config_overrides`, comparing keys with each other `config_checks`; the
+documentation's table is made from here too (`config_table`). Structs are frozen. Times in ns, sizes in bytes, paths as
+they will be opened. Where a key's unit is in its value ("5s"), the attribute's name ends with it (`slack_ns`).
+"""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated, ClassVar, Literal
+
+import msgspec
+from msgspec import field
+
+from .config_kinds import Address, address, choice, count, duration, name, path, pointer, share, size, texts
+from .config_read import Key, Table, Tables
+from .core.settings import SECOND_NS, Settings
+from .ingest.limits import BodyLimits
+
+KIB, MIB, GIB = 2**10, 2**20, 2**30
+
+FEED_NAME = name("a-z0-9-", "1 to 63 of a-z, 0-9 and -, the first a letter or digit")
+SINK_NAME = name("a-z0-9_-", "1 to 63 of a-z, 0-9, - and _, the first a letter or digit", reserved="lanes")
+
+
+class SteeredSlack(msgspec.Struct, frozen=True):
+    """A slack that follows the share of events that may be late. Read and checked; this version then refuses it."""
+
+    late_share: Annotated[float, Key(share(), "share of the events that may be late")] = 0.001
+    at_most_ns: Annotated[int, Key(duration(), "the longest slack")] = field(default=30 * SECOND_NS, name="at_most")
+    at_least_ns: Annotated[int, Key(duration(), "the shortest slack")] = field(default=0, name="at_least")
+
+
+class EventTime(msgspec.Struct, frozen=True):
+    """Where an event's time stands and how it is written."""
+
+    at: Annotated[str, Key(pointer(), "where in an event its time stands")] = "/time"
+    unit: Annotated[
+        Literal["rfc3339", "s", "ms", "us", "ns"],
+        Key(choice("rfc3339", "s", "ms", "us", "ns"), "RFC 3339 text, or an integer since 1970 UTC in this unit"),
+    ] = "rfc3339"
+
+
+class Journal(msgspec.Struct, frozen=True):
+    """How much room a feed's journal takes."""
+
+    segment_bytes: Annotated[int, Key(size("64KiB", "4GiB"), "room that one file of the journal reserves")] = 64 * MIB
+    at_most_bytes: Annotated[
+        int, Key(size("128KiB"), "room for all files; at this limit events are refused until the sinks have caught up")
+    ] = field(default=8 * GIB, name="at_most")
+
+
+class SinkConfig(msgspec.Struct, frozen=True):
+    """What every kind of sink has. A further kind is one more struct and one line in SINK_KINDS."""
+
+    kind: ClassVar[str] = ""
+    # "{feed}" in the default of a path stands for the feed's name; relative paths start at `data_dir`.
+    name: Annotated[str, Key(SINK_NAME, "unique within the feed; in metrics and on the dashboard")] = "{kind}"
+
+    def options(self) -> dict[str, object]:
+        """What `sinks.make_sink` takes for this kind; times become seconds there (`roll_every_s`)."""
+        options = {key: getattr(self, key) for key in self.__struct_fields__ if key != "name"}
+        times = {key: value for key, value in options.items() if key.endswith("_ns")}
+        return {key: value for key, value in options.items() if key not in times} | {
+            f"{key.removesuffix('_ns')}_s": value / SECOND_NS for key, value in times.items()
+        }
+
+
+class SqliteConfig(SinkConfig, frozen=True):
+    """One SQLite file: tables `events` and `late`, the position reached in the same transaction."""
+
+    kind: ClassVar[str] = "sqlite"
+    path: Annotated[Path, Key(path(), "the file, which feeds may share; relative to `data_dir`")] = Path("{feed}.db")
+
+
+class NdjsonConfig(SinkConfig, frozen=True):
+    """Files of newline-delimited JSON in one folder."""
+
+    kind: ClassVar[str] = "ndjson"
+    directory: Annotated[Path, Key(path(), "the folder, which feeds may share; relative to `data_dir`")] = Path(
+        "{feed}-ndjson"
+    )
+    roll_bytes: Annotated[int, Key(size("1KiB"), "a new file is begun beyond this size")] = 64 * MIB
+    roll_every_ns: Annotated[int, Key(duration("1s"), "a new file is begun after this time")] = field(
+        default=10 * SECOND_NS, name="roll_every"
+    )
+
+
+SINK_KINDS: dict[str, type[SinkConfig]] = {
+    "sqlite": SqliteConfig,
+    "ndjson": NdjsonConfig,
+}
+SINK_KINDS_LATER = ("postgres", "remote_write", "http")  # promised; named in the fault, so that nobody hunts a typo
+
+
+class Feed(msgspec.Struct, frozen=True):
+    """One feed."""
+
+    name: Annotated[str, Key(FEED_NAME, "the feed's name in addresses, metrics and on the dashboard")]
+    time: Annotated[EventTime, Table(EventTime)] = EventTime()
+    source: Annotated[str | None, Key(pointer(), "where an event names its source; without it: one source")] = None
+    id: Annotated[str | None, Key(pointer(), "where an event carries its id; with it a repeat is recognised")] = None
+    slack_ns: Annotated[
+        int, Key(duration(), "how far the watermark stays behind: lateness up to it is put in order", SteeredSlack)
+    ] = field(default=5 * SECOND_NS, name="slack")
+    idle_after_ns: Annotated[
+        int, Key(duration("1ms"), "a source that is silent this long no longer holds the watermark")
+    ] = field(default=30 * SECOND_NS, name="idle_after")
+    hold_at_most_ns: Annotated[int, Key(duration("1ms"), "no event is held longer, by the arrival clock")] = field(
+        default=60 * SECOND_NS, name="hold_at_most"
+    )
+    ahead_limit_ns: Annotated[
+        int, Key(duration(), "an event further ahead of the arrival clock goes to quarantine and moves nothing")
+    ] = field(default=10 * SECOND_NS, name="ahead_limit")
+    clock: Annotated[
+        Literal["event", "arrival"],
+        Key(choice("event", "arrival"), "what the watermark follows: the newest event times, or the arrival clock"),
+    ] = "event"
+    expect_sources: Annotated[
+        tuple[str, ...], Key(texts("source", 256), "sources that hold the feed before they were heard")
+    ] = ()
+    held_events_at_most: Annotated[
+        int, Key(count(1, 1_000_000_000), "events held (some 24 bytes each); beyond it events are refused")
+    ] = 10_000_000
+    undelivered_events_at_most: Annotated[
+        int, Key(count(1, 1_000_000_000), "released events that a sink has not taken; beyond it nothing is released")
+    ] = 2_000_000
+    sources_at_most: Annotated[int, Key(count(1, 10_000_000), "sources; beyond it a new one is refused")] = 100_000
+    batch_events_at_most: Annotated[int, Key(count(1, 1_000_000), "events in one batch for a sink")] = 50_000
+    # A request becomes one record, and 256 MiB may wait for the disk: 128 MiB and 32 bytes for each of 10^6 events fit.
+    body_bytes_at_most: Annotated[int, Key(size("1B", "128MiB"), "a request's body as it is sent")] = 16 * MIB
+    decoded_bytes_at_most: Annotated[int, Key(size("1B", "128MiB"), "a request's body, decompressed")] = 64 * MIB
+    event_bytes_at_most: Annotated[int, Key(size("1B", "128MiB"), "one event; a longer one goes to quarantine")] = MIB
+    events_at_most: Annotated[int, Key(count(1, 1_000_000), "events in one request")] = 100_000
+    nesting_at_most: Annotated[int, Key(count(1, 200), "levels of nesting in one event")] = 64
+    lanes_at_most_bytes: Annotated[
+        int, Key(size("1MiB"), "room for the late lane and the quarantine together, as they are kept for you to read")
+    ] = field(default=GIB, name="lanes_at_most")
+    journal: Annotated[Journal, Table(Journal)] = Journal()
+    sinks: Annotated[tuple[SinkConfig, ...], Tables(SINK_KINDS, SINK_KINDS_LATER)] = field(default=(), name="sink")
+
+    def settings(self) -> Settings:
+        """What the core must know of this feed; it is journaled with the feed."""
+        return Settings(
+            name=self.name,
+            slack_ns=self.slack_ns,
+            idle_after_ns=self.idle_after_ns,
+            hold_at_most_ns=self.hold_at_most_ns,
+            ahead_limit_ns=self.ahead_limit_ns,
+            clock=self.clock,
+            expect_sources=self.expect_sources,
+            held_events_at_most=self.held_events_at_most,
+            undelivered_events_at_most=self.undelivered_events_at_most,
+            sources_at_most=self.sources_at_most,
+            batch_events_at_most=self.batch_events_at_most,
+        )
+
+    def body_limits(self) -> BodyLimits:
+        """What decoding must know of this feed's limits."""
+        return BodyLimits(
+            body_bytes_at_most=self.body_bytes_at_most,
+            decoded_bytes_at_most=self.decoded_bytes_at_most,
+            event_bytes_at_most=self.event_bytes_at_most,
+            events_at_most=self.events_at_most,
+            nesting_at_most=self.nesting_at_most,
+        )
+
+
+class Limits(msgspec.Struct, frozen=True):
+    """Limits of the whole service."""
+
+    bodies_at_most: Annotated[
+        int, Key(count(1, 10_000), "request bodies in memory at one time; a further request waits unread")
+    ] = 64
+
+
+class Config(msgspec.Struct, frozen=True):
+    """The whole configuration."""
+
+    listen: Annotated[Address, Key(address(), "where the service listens; port 0 takes any free one")] = Address(
+        "127.0.0.1", 8600
+    )
+    data_dir: Annotated[
+        Path, Key(path(), "the folder for all that the service keeps; relative to the folder it is started in")
+    ] = Path("strandline-data")
+    drain_at_most_ns: Annotated[
+        int, Key(duration("0s", "1h"), "how long a stop waits until the sinks have taken what was released")
+    ] = field(default=20 * SECOND_NS, name="drain_at_most")
+    limits: Annotated[Limits, Table(Limits)] = Limits()
+    feeds: Annotated[tuple[Feed, ...], Tables({"": Feed})] = field(default=(), name="feed")
+
+    def feed(self, wanted: str) -> Feed | None:
+        """The feed of this name, if there is one."""
+        return next((feed for feed in self.feeds if feed.name == wanted), None)
+
+    def feed_dir(self, feed: Feed) -> Path:
+        """The folder of one feed's journal and lanes."""
+        return self.data_dir / "feeds" / feed.name

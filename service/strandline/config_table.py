@@ -1,0 +1,65 @@
+"""The configuration's keys as Markdown tables, made from their declarations: `python -m strandline.config_table`.
+
+deploy/configuration.md holds the result between its two marker lines; a test compares.
+"""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Iterator
+from typing import Any
+
+import msgspec
+
+from .config_model import Config, SinkConfig
+from .config_read import Declared, Key, declared, tables_of
+
+BEGIN, END = "<!-- keys: begin -->", "<!-- keys: end -->"
+
+
+def config_table() -> str:
+    """One table of keys per table of the file, as Markdown, without the marker lines."""
+    return "\n".join(line for title, struct in tables_of(Config) for line in _section(title, struct))
+
+
+def _section(title: str, struct: type[msgspec.Struct]) -> Iterator[str]:
+    about = " ".join((struct.__doc__ or "").split())
+    yield f"### {_heading(title, struct)}\n"
+    yield f"{about}\n"
+    yield "| key | default | value | what it is for |"
+    yield "|---|---|---|---|"
+    if issubclass(struct, SinkConfig):
+        yield f'| `kind` | (required) | `"{struct.kind}"` | the kind of sink |'
+    for item in declared(struct).values():
+        if isinstance(item.mark, Key):
+            about = item.mark.about.replace("|", "\\|")
+            yield f"| `{item.key}` | {_default(item, item.mark)} | {item.mark.kind.about} | {about} |"
+    yield ""
+
+
+def _heading(title: str, struct: type[msgspec.Struct]) -> str:
+    if not title:
+        return "At the top of the file"
+    name = title.split(" ", maxsplit=1)[0]
+    if issubclass(struct, SinkConfig):
+        return f'`[[{name}]]` with `kind = "{struct.kind}"`'
+    last = name.rsplit(".", maxsplit=1)[-1]
+    return f"`[[{name}]]`" if name == "feed" else f"`{last} = {{ ... }}`{' of a feed' if '.' in name else ''}"
+
+
+def _default(item: Declared, key: Key) -> str:
+    if item.required:
+        return "(required)"
+    if item.default is None:
+        return "(unset)"
+    return "`" + key.kind.show(_spelled(item.default)) + "`"
+
+
+def _spelled(default: Any) -> Any:
+    """A default with its placeholders as a reader would say them."""
+    text = str(default)
+    return text.replace("{feed}", "<feed>").replace("{kind}", "<kind>") if "{" in text else default
+
+
+if __name__ == "__main__":
+    sys.stdout.write(config_table() + "\n")

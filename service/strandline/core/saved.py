@@ -1,0 +1,148 @@
+"""A state as bytes and back: what a snapshot of the core holds. After restoring it, only later records need folding.
+
+Columns go as they are, everything else as one MessagePack map in front. A snapshot is an aid: it may always be thrown
+away as long as the journal is whole, so its layout carries a version and no promise beyond it.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import msgspec
+import numpy as np
+from numpy.typing import NDArray
+
+from .columns import REF, Batch, QuarantineEntry, as_rows, empty_refs, empty_times
+from .effects import Buffer
+from .outbox import LANES
+from .records import Cause
+from .runs import Strand, joined
+from .settings import Settings
+from .state import State
+
+SAVED_VERSION = 1
+_FIGURES = ("lateness", "hold", "run_length")
+
+
+class _Columns:
+    """Collects columns behind a header, or hands them out again in the same order."""
+
+    def __init__(self, body: memoryview | None = None) -> None:
+        self.parts: list[Buffer] = []
+        self.lengths: list[int] = []
+        self._body, self._offset = body, 0
+
+    def put(self, column: NDArray[Any]) -> None:
+        """A column that never changes any more: it is not copied."""
+        self.lengths.append(len(column))
+        if len(column):
+            self.parts.append(np.ascontiguousarray(column).view(np.uint8).data)
+
+    def get(self, dtype: Any) -> NDArray[Any]:
+        assert self._body is not None
+        count = self.lengths.pop(0)
+        if count * np.dtype(dtype).itemsize > len(self._body) - self._offset:
+            raise ValueError("cut short")
+        column = np.frombuffer(self._body, dtype=dtype, count=count, offset=self._offset)
+        self._offset += column.nbytes
+        return column.copy()
+
+    def require_end(self) -> None:
+        assert self._body is not None
+        if self.lengths or self._offset != len(self._body):
+            raise ValueError("there is more in it than it says")
+
+
+def save(state: State) -> list[Buffer]:
+    """The state as parts of one body. They do not change with the state: it may go on while they are written."""
+    columns = _Columns()
+    count = len(state.sources.names)
+    for column in (state.sources.newest, state.sources.heard, state.sources.active, state.sources.excused):
+        columns.put(column[:count].copy())
+    for column in state.arrivals.columns():
+        columns.put(column.copy())
+    for run in state.runs.runs:
+        strand = joined(list(run.chunks))
+        columns.put(strand.times)
+        columns.put(strand.refs)
+    batches = [_save_batch(batch, columns) for lane in LANES for batch in state.outbox.undelivered(lane)]
+    header = {
+        "version": SAVED_VERSION,
+        "settings": state.settings,
+        "clock": [state.now_ns, state.watermark_ns, state.marked_ns, int(state.cause)],
+        "slack_ns": state.slack.slack_ns,
+        "names": state.sources.names,
+        "newest_ns": state.sources.newest_ns,
+        "runs": len(state.runs.runs),
+        "opened": state.runs.opened,
+        "hold": list(state.hold.pairs),
+        "ledger": state.ledger,
+        "next_number": state.outbox.next_number,
+        "positions": state.outbox.positions,
+        "batches": batches,
+        "figures": [
+            [getattr(state.figures, name).counts.tolist(), getattr(state.figures, name).total] for name in _FIGURES
+        ],
+        "counts": [state.figures.arrivals, state.figures.marks, state.figures.marks_by_cause],
+        "lengths": columns.lengths,
+    }
+    packed = msgspec.msgpack.encode(header)
+    return [len(packed).to_bytes(8, "little"), packed, *columns.parts]
+
+
+def _save_batch(batch: Batch, columns: _Columns) -> list[Any]:
+    columns.put(batch.times)
+    columns.put(batch.refs)
+    entries = [[e.line, e.reason, e.detail, e.place, e.length] for e in batch.entries]
+    return [batch.lane, batch.number, batch.instant_ns, batch.ready_lsn, batch.behind_ns, entries]
+
+
+def restore(body: Buffer) -> State:
+    """The state behind a saved body. Raises ValueError if it is of another version or cut short."""
+    view = memoryview(body)
+    size = int.from_bytes(view[:8], "little")
+    try:
+        header = msgspec.msgpack.decode(view[8 : 8 + size])
+        if header["version"] != SAVED_VERSION:
+            raise ValueError(f"version {header['version']}, this program reads {SAVED_VERSION}")
+        return _restored(header, _Columns(view[8 + size :]))
+    except (ValueError, TypeError, LookupError, msgspec.MsgspecError) as error:
+        raise ValueError(f"the snapshot cannot be read: {error}") from error
+
+
+def _restored(header: dict[str, Any], columns: _Columns) -> State:
+    columns.lengths = header["lengths"]
+    state = State(msgspec.convert(header["settings"], Settings))
+    state.now_ns, state.watermark_ns, state.marked_ns, cause = header["clock"]
+    state.cause = Cause(cause)
+    state.slack.slack_ns = header["slack_ns"]
+    newest, heard = columns.get(np.int64), columns.get(np.int64)
+    active, excused = columns.get(np.bool_), columns.get(np.bool_)
+    state.sources.restore(header["names"], newest, heard, active, excused, header["newest_ns"])
+    state.arrivals.restore(columns.get(np.int64), columns.get(np.int64), columns.get(np.int64))
+    for _ in range(header["runs"]):
+        state.runs.reopen(Strand(columns.get(np.int64), as_rows(columns.get(REF))))
+    state.runs.opened = header["opened"]
+    state.hold.pairs.extend((arrived, newest) for arrived, newest in header["hold"])
+    state.ledger = msgspec.convert(header["ledger"], type(state.ledger))
+    _restore_outbox(state, header, columns)
+    for name, (counts, total) in zip(_FIGURES, header["figures"], strict=True):
+        figure = getattr(state.figures, name)
+        figure.counts[:] = counts
+        figure.total = total
+    state.figures.arrivals, state.figures.marks, state.figures.marks_by_cause = header["counts"]
+    columns.require_end()
+    return state
+
+
+def _restore_outbox(state: State, header: dict[str, Any], columns: _Columns) -> None:
+    outbox = state.outbox
+    outbox.positions = header["positions"]
+    for lane, number, instant_ns, ready_lsn, behind_ns, entries in header["batches"]:
+        times, refs = columns.get(np.int64), columns.get(REF)
+        outbox.next_number[lane] = number
+        rows = [QuarantineEntry(*entry) for entry in entries]
+        if lane == "quarantine":
+            times, refs = empty_times(), empty_refs()
+        outbox.add(Batch(lane, number, times, refs, instant_ns, ready_lsn, behind_ns, rows))
+    outbox.next_number.update(header["next_number"])

@@ -1,0 +1,44 @@
+"""The six hops of a feed, as an observer sees them: what waits at each, for how long, and when it last advanced.
+
+Bookkeeping for the shell's own hops; what the core and the sinks know of theirs is read where it stands.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+HOPS = ("ingest", "decode", "journal", "runs", "release", "sinks")
+
+
+@dataclass(slots=True)
+class Hop:
+    """One hop. `waiting` counts bodies at ingest and decode, events behind them. Times: arrival clock, ns."""
+
+    waiting: int = 0
+    oldest_ns: int | None = None
+    advanced_ns: int | None = None
+
+
+class Bodies:
+    """Request bodies at one hop: when each began to wait, and when one last went on."""
+
+    def __init__(self) -> None:
+        self._since: dict[int, int] = {}
+        self._count = 0
+        self.advanced_ns: int | None = None
+
+    def begin(self, now_ns: int) -> int:
+        """A body waits from now on; a ticket to give back."""
+        self._count += 1
+        self._since[self._count] = now_ns
+        return self._count
+
+    def end(self, ticket: int, now_ns: int, *, advanced: bool) -> None:
+        """It waits no more: it went on, or was given up."""
+        del self._since[ticket]
+        if advanced:
+            self.advanced_ns = now_ns
+
+    def hop(self) -> Hop:
+        """As an observer sees it."""
+        return Hop(len(self._since), next(iter(self._since.values()), None), self.advanced_ns)

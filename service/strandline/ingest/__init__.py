@@ -1,0 +1,1 @@
+"""Bodies to columns: what a request carries becomes one arrival, or a reason why not. No ordering lives in here."""

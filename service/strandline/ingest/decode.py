@@ -1,0 +1,275 @@
+"""Decoding: one body to one arrival, by columns where all is well, line by line where something is not.
+
+Here live the decoder of a feed and the two ways it goes. The fast way decodes the whole payload at once and takes its
+columns; it gives up at the first irregularity. The slow way judges every line, keeps the good ones and names the
+others. Both give the same arrival (a property test holds them together). No HTTP, no clock, no ordering.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping, Sequence
+from typing import Annotated, Any, NamedTuple
+
+import msgspec
+import numpy as np
+from numpy.typing import NDArray
+
+from ..core.columns import Arrival, Fault, Times
+from ..errors import BodyError
+from .limits import BodyLimits
+from .lines import MEDIA_TYPES, Lines, is_utf8, split_body, utf8_fault
+from .nesting import deep_suspects, deepest
+from .pointer import Fields, Values
+from .timestamps import unit_bounds
+from .values import (
+    LineFault,
+    Rows,
+    Unit,
+    check_id,
+    check_source,
+    check_time,
+    identity_column,
+    number_column,
+    source_column,
+    time_column,
+)
+
+
+class _Columns(NamedTuple):
+    times: Times
+    sources: NDArray[np.uint32]
+    new_sources: Sequence[str]
+    identities: NDArray[np.uint64] | None
+    bad: Rows  # rows that break the law of their field
+
+
+class Decoder:
+    """Turns the bodies of one feed into arrivals. Holds no state between bodies; may be shared between threads."""
+
+    def __init__(
+        self,
+        feed_name: str,
+        time_at: str,
+        time_unit: Unit,
+        source: str | None = None,
+        id: str | None = None,
+        limits: BodyLimits | None = None,
+    ) -> None:
+        """`time_at`, `source` and `id` are JSON Pointers. Raises pointer.PointerError.
+
+        Without `source` every event's source is the feed's name; without `id` arrivals have no identities.
+        """
+        self._feed_name, self._unit, self._limits = feed_name, time_unit, limits or BodyLimits()
+        self._at = Values(time_at, source, id)
+        self._fields = Fields(time_at, _time_type(time_unit), source, id)
+
+    def decode(self, body: bytes, media_type: str, source_numbers: Mapping[str, int]) -> Arrival:
+        """The body, decoded; `media_type` is one of lines.MEDIA_TYPES.
+
+        `source_numbers` is the feed's table of sources, numbered from 0 without gaps. Raises BodyError (413, 415, 422);
+        a line that is no event is a fault of the arrival and hinders no other.
+        """
+        lines = self._lines(body, media_type)
+        return self._at_once(lines, source_numbers) or self._line_by_line(lines, source_numbers)
+
+    def decode_line_by_line(self, body: bytes, media_type: str, source_numbers: Mapping[str, int]) -> Arrival:
+        """What `decode` answers, always by the slow way: the reference that tests hold the fast way against."""
+        return self._line_by_line(self._lines(body, media_type), source_numbers)
+
+    def _lines(self, body: bytes, media_type: str) -> Lines:
+        if len(body) > self._limits.decoded_bytes_at_most:
+            detail = (
+                f"the body has {len(body)} bytes, {self._limits.decoded_bytes_at_most} are allowed: send less at once"
+            )
+            raise BodyError(413, "Content Too Large", detail)
+        if media_type not in MEDIA_TYPES:
+            raise BodyError(415, "Unsupported Media Type", f"bodies may be {', '.join(MEDIA_TYPES)}")
+        return split_body(body, media_type, self._limits)
+
+    # --- the fast way ---
+
+    def _at_once(self, lines: Lines, source_numbers: Mapping[str, int]) -> Arrival | None:
+        """The whole payload in one go, or None when any line needs a closer look."""
+        decoder, count = self._fields.decoder, len(lines.ends)
+        if decoder is None or not count or not lines.is_regular or not is_utf8(lines.payload):
+            return None
+        lengths = lines.ends - lines.starts
+        if lengths.max() > self._limits.event_bytes_at_most:
+            return None
+        try:
+            records = decoder.decode_lines(lines.payload)
+        except (msgspec.DecodeError, RecursionError):
+            return None
+        if len(records) != count or self._is_deep(lines):
+            return None
+        columns = self._columns(records, source_numbers)
+        return None if columns.bad else _arrival(lines, columns, lines.faults)
+
+    def _is_deep(self, lines: Lines) -> bool:
+        limit = self._limits.nesting_at_most
+        suspects = deep_suspects(lines.payload, lines.starts, limit)
+        if not len(suspects):
+            return False
+        keep = np.zeros(len(lines.ends), np.bool_)
+        keep[suspects] = True
+        return deepest(lines.select(keep).payload) > limit
+
+    def _columns(self, records: Sequence[Any], source_numbers: Mapping[str, int]) -> _Columns:
+        """Columns of records, whose values have the types of their fields, and the rows that break a law even so."""
+        fields, count = self._fields, len(records)
+        times, bad_times = time_column(fields.times(records), self._unit)
+        new: Sequence[str] = ()
+        bad_sources: Rows = ()
+        if self._at.source is None:
+            number = source_numbers.get(self._feed_name, len(source_numbers))
+            sources = np.full(count, number, np.uint32)
+            new = [self._feed_name] if count and number == len(source_numbers) else []
+        else:
+            try:
+                sources = number_column(fields.source_numbers(records, source_numbers))
+            except KeyError:  # a new name, an integer or a fault
+                sources, new, bad_sources = source_column(fields.sources(records), source_numbers)
+        if self._at.id is None:
+            return _Columns(times, sources, new, None, [*bad_times, *bad_sources])
+        names = [self._feed_name] * count if self._at.source is None else fields.sources(records)
+        identities, bad_ids = identity_column(names, fields.ids(records))
+        return _Columns(times, sources, new, identities, [*bad_times, *bad_sources, *bad_ids])
+
+    # --- the slow way ---
+
+    def _line_by_line(self, lines: Lines, source_numbers: Mapping[str, int]) -> Arrival:
+        """Every line on its own; then columns of the good ones, which may show more faults."""
+        records: list[Any] = []
+        kept: list[int] = []
+        faults = list(lines.faults)
+        judge = _Judge(lines, self._fields, self._at, self._unit, self._limits)
+        for index, line in enumerate(lines):
+            try:
+                records.append(judge.record(index, line))
+                kept.append(index)
+            except LineFault as fault:
+                faults.append(self._fault(lines, index, line, fault))
+        columns = self._columns(records, source_numbers)
+        if columns.bad:
+            bad = set(columns.bad)
+            for row in bad:
+                line = lines.payload[lines.starts[kept[row]] : lines.ends[kept[row]]]
+                faults.append(self._fault(lines, kept[row], line, judge.fault_of(line)))
+            records = [record for row, record in enumerate(records) if row not in bad]
+            kept = [index for row, index in enumerate(kept) if row not in bad]
+            columns = self._columns(records, source_numbers)
+        keep = np.zeros(len(lines.ends), np.bool_)
+        keep[kept] = True
+        return _arrival(lines.select(keep), columns, tuple(sorted(faults, key=lambda fault: fault.line)))
+
+    def _fault(self, lines: Lines, index: int, line: bytes, fault: LineFault) -> Fault:
+        return Fault(lines.number(index), fault.reason, fault.detail, line[: self._limits.event_bytes_at_most])
+
+
+def _time_type(unit: Unit) -> Any:
+    """What msgspec decodes times as. Bounds cost nothing, and without them 2**64 would decode to a Python integer."""
+    if unit == "rfc3339":
+        return str
+    least, greatest = unit_bounds(unit)
+    return Annotated[int, msgspec.Meta(ge=least, le=greatest)]
+
+
+def _arrival(lines: Lines, columns: _Columns, faults: Sequence[Fault]) -> Arrival:
+    numbers = lines.numbers
+    if numbers is not None and (not len(numbers) or numbers[-1] == len(numbers)):  # ascending: then it is 1, 2, 3, ...
+        numbers = None
+    return Arrival(
+        times=columns.times,
+        sources=columns.sources,
+        lengths=(lines.ends - lines.starts).astype(np.uint32),
+        payload=lines.payload,
+        new_sources=columns.new_sources,
+        line_numbers=numbers,
+        faults=faults,
+        identities=columns.identities,
+    )
+
+
+class _Judge:
+    """Judges the lines of one body one by one."""
+
+    def __init__(self, lines: Lines, fields: Fields, at: Values, unit: Unit, limits: BodyLimits) -> None:
+        self._fields, self._at, self._unit, self._limits = fields, at, unit, limits
+        self._is_utf8 = is_utf8(lines.payload)
+        suspects = deep_suspects(lines.payload, lines.starts, limits.nesting_at_most)
+        large = np.flatnonzero(lines.ends - lines.starts > limits.event_bytes_at_most)
+        self._doubtful = frozenset(suspects.tolist()) | frozenset(large.tolist())
+
+    def record(self, index: int, line: bytes) -> Any:
+        """The line as a record of the feed's fields. Raises LineFault."""
+        if index in self._doubtful:
+            self._check_limits(line)
+        if not self._is_utf8:
+            self._check_utf8(line)
+        if self._fields.decoder is not None:
+            try:
+                return self._fields.decoder.decode(line)
+            except (msgspec.DecodeError, RecursionError):
+                pass
+        # The general way knows the last value of a repeated member, and why a line is no event.
+        values = self._read(line)
+        fault = self._law_broken(values)
+        if fault is not None:
+            raise fault
+        return self._fields.record(values)
+
+    def fault_of(self, line: bytes) -> LineFault:
+        """Why a line is no event whose record the columns call bad; a property test holds the two laws together."""
+        fault = self._law_broken(self._read(line))
+        assert fault is not None, "columns and scalar law differ"
+        return fault
+
+    def _check_limits(self, line: bytes) -> None:
+        if len(line) > self._limits.event_bytes_at_most:
+            detail = f"the line has {len(line)} bytes, {self._limits.event_bytes_at_most} are allowed"
+            raise LineFault("too_large", detail)
+        if deepest(line) > self._limits.nesting_at_most:
+            raise self._too_deep()
+
+    def _check_utf8(self, line: bytes) -> None:
+        fault = None if line.isascii() else utf8_fault(line)
+        if fault is not None:
+            raise LineFault("malformed", f"not UTF-8: {fault}")
+
+    def _too_deep(self) -> LineFault:
+        return LineFault("too_deep", f"nested deeper than {self._limits.nesting_at_most} levels")
+
+    def _read(self, line: bytes) -> Values:
+        try:
+            return self._fields.read(line)
+        except RecursionError:
+            raise self._too_deep() from None
+        except msgspec.DecodeError as error:
+            raise self._not_an_object(line, str(error)) from None
+
+    def _law_broken(self, values: Values) -> LineFault | None:
+        """Why these are no time, source and id."""
+        try:
+            check_time(values.time, self._unit, self._at.time)
+            if self._at.source is not None:
+                check_source(values.source, self._at.source)
+            if self._at.id is not None:
+                check_id(values.id, self._at.id)
+        except LineFault as fault:
+            return fault
+        return None
+
+    def _not_an_object(self, line: bytes, message: str) -> LineFault:
+        if message.startswith("Expected `object`"):
+            return LineFault("malformed", f"not a JSON object: {message[0].lower()}{message[1:]}")
+        if b"\\u" in line:
+            # msgspec calls half a surrogate pair malformed JSON; the grammar allows it, so say where it stands.
+            try:
+                document = json.loads(line)
+            except (ValueError, RecursionError):
+                document = None
+            if isinstance(document, dict):
+                fault = self._law_broken(self._fields.pick(document))
+                return fault or LineFault("malformed", "a string holds half a surrogate pair")
+        return LineFault("malformed", f"not one JSON object: {message.removeprefix('JSON is malformed: ')}")

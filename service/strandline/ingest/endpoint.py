@@ -1,0 +1,146 @@
+"""The HTTP side of ingest: events, promises, excuses and drains in; answers once they are durable.
+
+Reads bodies within limits and hands columns to the feed. What is accepted, late or refused is decided by the core.
+"""
+
+from __future__ import annotations
+
+import asyncio
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import asdict
+from typing import TypeVar
+
+import msgspec
+from aiohttp import web
+
+from ..config import Config
+from ..errors import BodyError
+from ..hops import Bodies
+from ..problems import NotThere
+from ..runtime import FeedRuntime
+from .encodings import decompress, media_type_of
+from .timestamps import parse_rfc3339
+
+FEEDS = web.AppKey("feeds", dict[str, FeedRuntime])
+CONFIG = web.AppKey("config", Config)
+BODIES = web.AppKey("bodies", asyncio.Semaphore)
+BODY_WITHIN_S = 60.0
+ACT_BYTES_AT_MOST = 16 * 1024
+REASON_CHARACTERS_AT_MOST = 500
+Act = TypeVar("Act", bound=msgspec.Struct)
+
+
+class Promise(msgspec.Struct, forbid_unknown_fields=True):
+    """Nothing older than `time` (RFC 3339) will come from `source`."""
+
+    source: str
+    time: str
+
+
+class Excuse(msgspec.Struct, forbid_unknown_fields=True):
+    """Do not wait for `source` until it speaks again; `reason` is kept with the act."""
+
+    source: str
+    reason: str = ""
+
+
+def runtime_of(request: web.Request) -> FeedRuntime:
+    """The feed that the path names."""
+    feeds, name = request.app[FEEDS], request.match_info["feed"]
+    runtime = feeds.get(name)
+    if runtime is None:
+        raise NotThere(f"there is no feed {name[:100]!r}; there are: {', '.join(sorted(feeds)) or 'none'}")
+    return runtime
+
+
+async def post_events(request: web.Request) -> web.Response:
+    """Take events; answer what became of each once all of it is durable."""
+    runtime = runtime_of(request)
+    media_type = media_type_of(request.headers.get("Content-Type", ""))
+    async with request.app[BODIES]:
+        with _at(runtime.reading, runtime):
+            body = await read_body(request, runtime.config.body_bytes_at_most)
+        with _at(runtime.decoding, runtime):
+            encodings = ",".join(request.headers.getall("Content-Encoding", []))
+            decoded = decompress(body, encodings, runtime.config.decoded_bytes_at_most)
+            arrival = runtime.decoder.decode(decoded, media_type, runtime.feed.state.sources.numbers)
+        # Nothing awaits between decoding and the core: the numbers of new sources are still right.
+        outcome = await runtime.arrive(arrival)
+    return web.Response(body=msgspec.json.encode(asdict(outcome)), content_type="application/json")
+
+
+@contextmanager
+def _at(bodies: Bodies, runtime: FeedRuntime) -> Iterator[None]:
+    ticket = bodies.begin(runtime.clock.now_ns())
+    advanced = False
+    try:
+        yield
+        advanced = True
+    finally:
+        bodies.end(ticket, runtime.clock.now_ns(), advanced=advanced)
+
+
+async def read_body(request: web.Request, bytes_at_most: int) -> bytes:
+    """The body as it was sent. Raises BodyError 413 beyond the limit, 408 for one that does not come in time."""
+    too_large = BodyError(
+        413,
+        "Content Too Large",
+        f"the body is larger than body_bytes_at_most ({bytes_at_most:,} bytes): send fewer events at a time",
+    )
+    if (request.content_length or 0) > bytes_at_most:
+        raise too_large
+    chunks: list[bytes] = []
+    size = 0
+    try:
+        async with asyncio.timeout(BODY_WITHIN_S):
+            async for chunk in request.content.iter_any():
+                size += len(chunk)
+                if size > bytes_at_most:
+                    raise too_large
+                chunks.append(chunk)
+    except TimeoutError:
+        raise BodyError(
+            408, "Request Timeout", f"the body was not complete within {BODY_WITHIN_S:.0f} s ({size:,} bytes came)"
+        ) from None
+    return chunks[0] if len(chunks) == 1 else b"".join(chunks)
+
+
+async def post_marks(request: web.Request) -> web.Response:
+    """Take a source's promise that nothing older will come from it."""
+    runtime = runtime_of(request)
+    promise = await _read_act(request, Promise)
+    if not 1 <= len(promise.source.encode(errors="replace")) <= 256:
+        raise BodyError(422, "Unprocessable Content", "/source: a source has 1 to 256 bytes")
+    try:
+        time_ns = parse_rfc3339(promise.time)
+    except ValueError as error:
+        raise BodyError(422, "Unprocessable Content", f"/time: {error}") from error
+    await runtime.act(lambda now_ns, token: runtime.feed.promise(promise.source, time_ns, now_ns, token))
+    return web.Response(status=204)
+
+
+async def post_excuse(request: web.Request) -> web.Response:
+    """Do not wait for a source until it speaks again."""
+    runtime = runtime_of(request)
+    excuse = await _read_act(request, Excuse)
+    if excuse.source not in runtime.feed.state.sources.numbers:
+        raise NotThere(f"no source {excuse.source[:100]!r} has been heard or expected in feed {runtime.config.name}")
+    reason = excuse.reason[:REASON_CHARACTERS_AT_MOST]
+    await runtime.act(lambda now_ns, token: runtime.feed.excuse(excuse.source, reason, now_ns, token))
+    return web.Response(status=204)
+
+
+async def post_drain(request: web.Request) -> web.Response:
+    """Release all that is held, in order; what is older than that and still comes is late."""
+    runtime = runtime_of(request)
+    await runtime.act(runtime.feed.drain)
+    return web.Response(status=204)
+
+
+async def _read_act(request: web.Request, shape: type[Act]) -> Act:
+    body = await read_body(request, ACT_BYTES_AT_MOST)
+    try:
+        return msgspec.json.decode(body, type=shape)
+    except (msgspec.DecodeError, UnicodeDecodeError, RecursionError) as error:
+        raise BodyError(422, "Unprocessable Content", f"the body is not what is expected here: {error}") from error

@@ -1,0 +1,408 @@
+"""The journal of one feed: frames appended in memory, written and synced in groups, read back by position.
+
+Here lives which segment a frame goes to, what is refused, what is failed and what is kept. Synchronous: no asyncio
+(that is `commit`), no meaning of a record (that is strandline.core.records).
+
+**Threads.** `reserve` and `append` belong to one thread, the event loop's. `flush`, `replenish`, `drop_before` and
+`close` belong to one worker at a time. `write_snapshot` may run in a third thread beside them. `frames`, `gather` and
+`line_bytes` (see `reading`) may be called from any. What two threads touch (the queue, the table of segments, the
+failure) changes under one lock that is never held across a call to the disk; a queued frame is handed over whole, and a
+segment's handle is used by the worker alone.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Iterable, Sequence
+from dataclasses import dataclass
+from itertools import groupby, pairwise
+from operator import attrgetter
+from threading import Lock
+from typing import NoReturn
+
+from strandline.core.effects import Buffer
+from strandline.core.records import VERSION, frame_bytes
+from strandline.errors import JournalError, JournalFailed, JournalFull
+from strandline.ports import Disk, File
+
+from . import snapshots
+from .counters import Counters
+from .frame import BODY_BYTES_AT_MOST, encode_frame, flatten
+from .reading import Readable
+from .recovery import make_certain, recover
+from .segments import SEGMENT_HEADER_BYTES, Maps, Segment, digest_of, segment_name
+from .spares import SHORTAGES, Spares
+
+SEGMENT_BYTES = 64 << 20
+JOURNAL_BYTES_AT_MOST = 8 << 30
+QUEUED_BYTES_AT_MOST = 256 << 20
+HEADROOM_BYTES = 64 << 10  # some 800 marks of 64 bytes a frame: what frees room must not lack it
+
+
+@dataclass(frozen=True, slots=True)
+class _Queued:
+    segment: Segment
+    lsn: int
+    kind: int
+    version: int
+    parts: list[Buffer]
+    bytes: int
+
+
+class Journal(Readable):
+    """One feed's journal. Make it with `open`; every limit is in bytes and is checked before anything is written."""
+
+    def __init__(
+        self, disk: Disk, directory: str, digest: bytes, *, segment_bytes: int, journal_bytes_at_most: int,
+        queued_bytes_at_most: int, clock: Callable[[], float], read_only: bool,
+    ) -> None:  # fmt: skip
+        super().__init__(directory, Maps.on(disk))
+        self._disk = disk
+        self._digest = digest
+        self._segment_bytes = segment_bytes
+        self._bytes_at_most = journal_bytes_at_most
+        self._queued_at_most = queued_bytes_at_most
+        self._headroom = min(HEADROOM_BYTES, segment_bytes // 4)
+        self._clock = clock
+        self._read_only = read_only
+        self._spares = Spares(disk, directory, segment_bytes)
+        self._lock = Lock()
+        self._snapshot_lock = Lock()
+        self._segments_bytes = 0
+        self._queue: list[_Queued] = []
+        self._queued_bytes = 0
+        self._next_lsn = 0
+        self._failure: str | None = None
+        self._opened = False
+        self.counters = Counters()
+        self.cut_bytes = 0
+
+    @classmethod
+    def open(
+        cls, disk: Disk, directory: str, *, segment_bytes: int = SEGMENT_BYTES,
+        journal_bytes_at_most: int = JOURNAL_BYTES_AT_MOST, queued_bytes_at_most: int = QUEUED_BYTES_AT_MOST,
+        read_only: bool = False, clock: Callable[[], float] = time.perf_counter,
+    ) -> Journal:  # fmt: skip
+        """Read the directory back to its longest valid prefix (see `recovery`) and make that durable.
+
+        The directory's last name is the feed's. `read_only` changes nothing on the disk, takes the segments of any one
+        feed and refuses to append: for captures, and for looking on while another process writes. `clock` (seconds)
+        times syncs. Raises JournalError where something durable is missing or the disk does not answer.
+        """
+        if segment_bytes < 1024 or journal_bytes_at_most < 2 * segment_bytes:
+            raise ValueError("segment_bytes must be at least 1024 and journal_bytes_at_most two segments")
+        digest = digest_of(directory.rsplit("/", 1)[-1])
+        journal = cls(
+            disk, directory, digest, segment_bytes=segment_bytes, journal_bytes_at_most=journal_bytes_at_most,
+            queued_bytes_at_most=queued_bytes_at_most, clock=clock, read_only=read_only,
+        )  # fmt: skip
+        try:
+            journal._take_over()
+        except (OSError, JournalFailed) as error:
+            raise JournalError(
+                f"{directory}: the journal could not be opened ({error}); check the disk and the rights on data_dir"
+            ) from error
+        finally:
+            if not journal._opened:
+                journal._give_back()
+        return journal
+
+    def _take_over(self) -> None:
+        """Read what is on the disk, and make it certain and ready for appending unless it is only read."""
+        found = recover(self._disk, self._directory, self._maps, own=not self._read_only)
+        self._segments = tuple(found.segments)
+        self._segments_bytes = sum(segment.size for segment in found.segments)
+        self._digest = found.digest or self._digest
+        if not self._read_only:
+            self.cut_bytes = make_certain(self._disk, found, self._maps)
+            snapshots.remove_unfinished(self._disk, self._directory)
+            self._spares.adopt()
+        self._next_lsn = self._durable_lsn = found.next_lsn
+        if not self._read_only:
+            self.replenish()
+        self._opened = True
+
+    # ---- what there is --------------------------------------------------------------------------------------------
+
+    @property
+    def next_lsn(self) -> int:
+        """Position of the frame that is appended next."""
+        return self._next_lsn
+
+    @property
+    def bytes_used(self) -> int:
+        """Bytes that the segments take on the disk, at their reserved size, the spare ones included; no snapshots."""
+        return self._segments_bytes + self._spares.bytes_reserved
+
+    @property
+    def queued_bytes(self) -> int:
+        """Bytes of frames that were appended and are not synced yet."""
+        return self._queued_bytes
+
+    @property
+    def failed(self) -> bool:
+        """Whether a write or a sync has failed: then nothing but reading works any more."""
+        return self._failure is not None
+
+    # ---- appending (the loop's thread) ----------------------------------------------------------------------------
+
+    def reserve(self, body_bytes: Iterable[int], *, of_headroom: bool = False) -> None:
+        """Make sure that records with bodies of these sizes fit now.
+
+        Call it before deciding and append without waiting in between. `of_headroom` is for the small records that free
+        room or that must not wait (marks, positions of sinks, acts): the limits do not count for them, and everyone
+        else leaves HEADROOM_BYTES (a quarter of a small segment) of reserved room for them.
+
+        The room is one stretch, in the current segment or in a spare one, for all of it and the headroom. So whatever
+        is appended fits, however it is split and whatever small records come in between: a frame that does not fit the
+        current segment goes to the largest spare, and so does all that follows. What is larger than a segment gets one
+        made for it. Rarely blocks: only there, and where the spare was used up faster than it was replaced.
+
+        Raises JournalFull("journal_full" or "disk_full"), nothing having been written; JournalFailed.
+        """
+        need = sum(map(frame_bytes, body_bytes))
+        self._raise_if_unusable()
+        if not of_headroom:
+            self._check_limits(need)
+        stretch = need if of_headroom else need + self._headroom
+        if stretch > self._left and not self._spares.hold(stretch):
+            if not of_headroom:
+                self._check_limits(need, more=max(self._segment_bytes, stretch + SEGMENT_HEADER_BYTES))
+            self._make_spare(stretch)
+
+    def append(self, lsn: int, kind: int, parts: Sequence[Buffer], version: int = VERSION) -> None:
+        """Queue one record; its frame starts at `lsn`, which must be next_lsn. The parts must not change until synced.
+
+        Without a fitting `reserve` before it this may raise JournalFull, when the deciding is already done.
+        """
+        self._raise_if_unusable()
+        if lsn != self._next_lsn:
+            raise ValueError(f"a record for position {lsn}, but the journal stands at {self._next_lsn}")
+        bodies = flatten(parts)
+        body_bytes = sum(memoryview(part).nbytes for part in bodies)
+        if body_bytes > BODY_BYTES_AT_MOST:
+            raise ValueError(f"a body of {body_bytes} bytes does not fit a frame (at most {BODY_BYTES_AT_MOST})")
+        size = frame_bytes(body_bytes)
+        if size > self._left:
+            self._begin_segment(body_bytes)
+        with self._lock:
+            self._queue.append(_Queued(self._segments[-1], lsn, kind, version, bodies, size))
+            self._queued_bytes += size
+            self._next_lsn += size
+
+    @property
+    def _left(self) -> int:
+        """Room in the segment that is being filled, what is queued for it taken off."""
+        if not self._segments:
+            return 0
+        last = self._segments[-1]
+        return last.first_lsn + last.room - self._next_lsn
+
+    def _begin_segment(self, body_bytes: int) -> None:
+        spare = self._spares.take(frame_bytes(body_bytes))
+        if spare is None:
+            self.reserve([body_bytes], of_headroom=True)
+            spare = self._spares.take(frame_bytes(body_bytes))
+            assert spare is not None
+        segment = Segment(spare.path, spare.size, self._next_lsn, self._digest, spare.file, named=False)
+        with self._lock:
+            self._segments = (*self._segments, segment)
+            self._segments_bytes += segment.size
+
+    def _check_limits(self, need: int, more: int = 0) -> None:
+        used = self.bytes_used
+        if used + more > self._bytes_at_most:
+            raise JournalFull(
+                "journal_full",
+                f"{self._directory}: {used:,} bytes are in use and {need:,} more need another segment, but "
+                f"journal_bytes_at_most is {self._bytes_at_most:,}: segments go when every sink has taken their "
+                "events; see which sink lags, or raise the limit",
+            )
+        if self._queued_bytes and self._queued_bytes + need > self._queued_at_most:
+            raise JournalFull(
+                "journal_full",
+                f"{self._directory}: {self._queued_bytes:,} bytes wait for the disk and {need:,} more would pass "
+                f"{self._queued_at_most:,}: the disk is slower than the feed; try again, and watch the sync times",
+            )
+
+    def _make_spare(self, frames_bytes: int) -> None:
+        try:
+            self._spares.make(frames_bytes)
+        except OSError as error:
+            self._fail(error, "reserving a segment")
+
+    # ---- writing (the worker's thread) ----------------------------------------------------------------------------
+
+    def flush(self) -> int:
+        """Write everything queued, sync it, and return the position up to which the journal is durable.
+
+        One sync for all of it; one more, and one of the directory, for each segment that is begun. Raises
+        JournalFailed where the disk reports any error: finally, since the kernel may have dropped the pages of a
+        failed sync, and a second sync would then succeed without them.
+        """
+        with self._lock:
+            self._raise_if_unusable()
+            queue, self._queue = self._queue, []
+        try:
+            for segment, group in groupby(queue, key=attrgetter("segment")):
+                self._write(segment, list(group))
+        except BaseException as error:
+            self._fail(error, "writing")
+        return self._durable_lsn
+
+    def _write(self, segment: Segment, group: list[_Queued]) -> None:
+        buffers: list[Buffer] = [] if segment.named else [segment.header(), bytes(SEGMENT_HEADER_BYTES - 40)]
+        offset = segment.offset(group[0].lsn) if segment.named else 0
+        for queued in group:
+            buffers += encode_frame(queued.lsn, queued.kind, queued.parts, queued.version)
+        file = segment.writable()
+        file.write(offset, buffers)
+        self._timed_sync(file)
+        if not segment.named:
+            self._name(segment)
+        end_lsn, size = group[-1].lsn + group[-1].bytes, sum(queued.bytes for queued in group)
+        with self._lock:
+            self._durable_lsn = end_lsn
+            self._queued_bytes -= size
+        self.counters.frames += len(group)
+        self.counters.bytes_written += size
+        segment.note(end_lsn)
+
+    def _timed_sync(self, file: File) -> None:
+        before = self._clock()
+        file.sync()
+        self.counters.synced(self._clock() - before)
+
+    def _name(self, segment: Segment) -> None:
+        """Give a segment its name: all before it is synced by now, and so is what it holds."""
+        path = f"{self._directory}/{segment_name(segment.first_lsn)}"
+        self._disk.rename(segment.path, path)
+        self._disk.sync_directory(self._directory)
+        for older in self._segments:
+            if older is segment:
+                break
+            older.seal()
+        segment.path, segment.named = path, True
+
+    def replenish(self) -> bool:
+        """Reserve a spare segment if there is none and the limit allows it; whether there is one now.
+
+        A lack of room is no failure here: whoever needs the room is refused then, with the reason.
+        """
+        self._raise_if_unusable()
+        if not len(self._spares) and self.bytes_used + self._segment_bytes <= self._bytes_at_most:
+            try:
+                self._make_spare(0)
+            except JournalFull:
+                return False
+        return len(self._spares) > 0
+
+    @property
+    def lacks_spare(self) -> bool:
+        """Whether `replenish` has something to do."""
+        return not len(self._spares)
+
+    def drop_before(self, lsn: int) -> int:
+        """Delete the segments whose frames all end at or before `lsn`, never the last one; returns the bytes freed.
+
+        The oldest goes first and durably before the next, so that a crash leaves no hole. `lsn` must be durable, and a
+        snapshot at or behind it must exist, or the next start has nothing to begin with.
+        """
+        self._raise_if_unusable()
+        if lsn > self._durable_lsn:
+            raise ValueError(f"position {lsn} is not durable yet ({self._durable_lsn} is)")
+        freed = 0
+        while len(self._segments) > 1 and self._segments[1].named and self._segments[1].first_lsn <= lsn:
+            oldest = self._segments[0]
+            with self._lock:
+                self._segments = self._segments[1:]
+                self._segments_bytes -= oldest.size
+            try:
+                self._disk.remove(oldest.path)
+                self._disk.sync_directory(self._directory)
+            except OSError as error:
+                self._fail(error, f"removing {oldest.path}")
+            oldest.seal()
+            self._maps.forget(oldest.path)
+            freed += oldest.size
+        return freed
+
+    def close(self) -> None:
+        """Note, durably, how far the journal is durable, and give the handles back. Nothing may be queued any more."""
+        if self._queue and not self.failed:
+            raise ValueError("flush before closing: records are queued")
+        if self._segments and not self.failed and not self._read_only:
+            # The last note goes out with a sync of its own: after a clean end any damage is told from a torn write.
+            try:
+                self._segments[-1].writable().sync()
+            except OSError as error:
+                self._fail(error, "closing")
+        self._give_back()
+        self._read_only = True
+
+    def _give_back(self) -> None:
+        for segment in self._segments:
+            segment.seal()
+        self._spares.close()
+
+    def _raise_if_unusable(self) -> None:
+        if self._failure is not None:
+            raise JournalFailed(self._failure)
+        if self._read_only:
+            raise ValueError(f"{self._directory}: the journal is closed, or was opened for reading only")
+
+    def _fail(self, error: BaseException, doing: str) -> NoReturn:
+        """Mark the journal failed, for good. What is no OSError leaves as it came: it is a fault of the program."""
+        with self._lock:
+            if self._failure is None:
+                self._failure = (
+                    f"{self._directory}: {doing} failed ({error}); the journal is durable up to position "
+                    f"{self._durable_lsn}, what came behind may or may not be on disk: check the disk, then restart"
+                )
+        if isinstance(error, OSError):
+            raise JournalFailed(self._failure) from error
+        raise error
+
+    # ---- snapshots ------------------------------------------------------------------------------------------------
+
+    def write_snapshot(self, lsn: int, parts: Sequence[Buffer]) -> None:
+        """Keep a body that stands for everything before `lsn`, durably; the two newest are kept.
+
+        Raises JournalFull("disk_full") where there is no room for it; JournalFailed where the disk reports an error.
+        """
+        self._raise_if_unusable()
+        if lsn > self._durable_lsn:
+            raise ValueError(f"position {lsn} is not durable yet ({self._durable_lsn} is)")
+        with self._snapshot_lock:
+            try:
+                snapshots.write_snapshot(self._disk, self._directory, lsn, self._digest, parts)
+            except OSError as error:
+                if error.errno not in SHORTAGES:
+                    self._fail(error, "writing a snapshot")
+                raise JournalFull(
+                    "disk_full", f"{self._directory}: no room for a snapshot ({error.strerror or error}); free some"
+                ) from error
+
+    def snapshots(self) -> list[tuple[int, memoryview]]:
+        """Position and body of each intact snapshot, the newest first. Raises OSError."""
+        return snapshots.read_snapshots(self._disk, self._directory, self._digest)
+
+    def check(self) -> None:
+        """Assert every invariant. Not while another thread is writing."""
+        assert 0 <= self.first_lsn <= self._durable_lsn <= self._next_lsn
+        for older, newer in pairwise(self._segments):
+            assert older.first_lsn < newer.first_lsn <= older.first_lsn + older.room
+            assert older.named or not newer.named
+            assert newer.digest == older.digest == self._digest
+        if self._segments:
+            last = self._segments[-1]
+            assert last.first_lsn <= self._next_lsn <= last.first_lsn + last.room
+        assert self._segments_bytes == sum(segment.size for segment in self._segments)
+        self.counters.check()
+        if self.failed:
+            return
+        lsn = self._durable_lsn
+        for queued in self._queue:
+            assert queued.lsn == lsn and queued.segment in self._segments
+            lsn += queued.bytes
+        assert lsn == self._next_lsn and self._queued_bytes == self._next_lsn - self._durable_lsn

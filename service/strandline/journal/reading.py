@@ -1,0 +1,133 @@
+"""Reading a journal by position: frames in order, and event lines from anywhere in it.
+
+Here lives finding the segments that positions lie in; copying lines fast is `gather`, writing is `journal`. Any thread
+may read: the table of segments is a tuple that is replaced, never changed, and a mapping stays valid while it is held.
+"""
+
+from __future__ import annotations
+
+from bisect import bisect_right
+from collections.abc import Iterator
+from operator import attrgetter
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from strandline.errors import JournalError
+
+from .frame import Frame, decode_frame, octets
+from .gather import Positions, Source, block, lines
+from .segments import SEGMENT_HEADER_BYTES, Maps, Segment
+
+
+class Readable:
+    """What can be read of a journal: its segments, oldest first, up to what is durable."""
+
+    def __init__(self, directory: str, maps: Maps) -> None:
+        self._directory = directory
+        self._maps = maps
+        self._segments: tuple[Segment, ...] = ()
+        self._durable_lsn = 0
+
+    @property
+    def first_lsn(self) -> int:
+        """Position of the oldest frame that is kept; where the first one will stand while there is none."""
+        segments = self._segments
+        return segments[0].first_lsn if segments else self._durable_lsn
+
+    @property
+    def durable_lsn(self) -> int:
+        """Everything before this position is synced."""
+        return self._durable_lsn
+
+    def frames(self, from_lsn: int | None = None) -> Iterator[Frame]:
+        """The frames from a position (None: from the oldest) up to what is durable now, each CRC checked, no copies.
+
+        A position inside a frame begins with the next one. Raises JournalError where the position is no longer kept, or
+        where a frame is not intact.
+        """
+        segments, end_lsn = self._segments, self._durable_lsn
+        start = from_lsn if from_lsn is not None else self.first_lsn
+        if start < self.first_lsn:
+            raise JournalError(
+                f"{self._directory}: position {start} is no longer kept, the oldest segment starts at {self.first_lsn}"
+            )
+        for index in range(max(0, self._index(segments, start)), len(segments)):
+            until = min(end_lsn, segments[index + 1].first_lsn) if index + 1 < len(segments) else end_lsn
+            yield from self._frames_of(segments[index], start, until)
+
+    def _frames_of(self, segment: Segment, start: int, until: int) -> Iterator[Frame]:
+        lsn = segment.first_lsn
+        if lsn >= until:
+            return
+        view = self._maps.view(segment.path)
+        flat = octets(view)
+        limit = segment.offset(until)
+        while lsn < until:
+            frame = decode_frame(view, flat, segment.offset(lsn), limit, lsn)
+            if frame is None:
+                raise JournalError(
+                    f"{segment.path}: the frame at byte {segment.offset(lsn)} (position {lsn}) is not intact any more: "
+                    "the disk changed what it had synced; check the disk and restore the file from a copy"
+                )
+            if lsn >= start:
+                yield frame
+            lsn = frame.end_lsn
+
+    def line_bytes(self, places: ArrayLike, lengths: ArrayLike) -> list[bytes]:
+        """The lines at these positions, one bytes object each, without line feeds. Arguments as for `gather`."""
+        return lines(*self._located(places, lengths))
+
+    def gather(self, places: ArrayLike, lengths: ArrayLike) -> bytes:
+        """The lines one after the other, each followed by a line feed.
+
+        `places` integer[n] are the positions of the lines' first bytes, `lengths` integer[n] bytes without the line
+        feed; in any order. Raises JournalError where one is not kept, or not durable yet. Not CRC checked again: what
+        is read was checked when the journal was opened, or written by this process.
+        """
+        return block(*self._located(places, lengths))
+
+    def _located(
+        self, places: ArrayLike, lengths: ArrayLike
+    ) -> tuple[list[Source], NDArray[np.intp] | None, Positions, Positions]:
+        """Sources, number of each line's source (None: all in the first), offsets and lengths, for `gather`."""
+        begins, counts = np.asarray(places, np.int64), np.asarray(lengths, np.int64)
+        if not len(begins):
+            return [], None, begins, counts
+        durable_lsn, segments = self._durable_lsn, self._segments
+        low, high, end = int(begins.min()), int(begins.max()), int((begins + counts).max())
+        first, last = self._index(segments, low), self._index(segments, high)
+        if first < 0 or end > durable_lsn or high >= durable_lsn or counts.min() < 0:
+            raise self._not_kept(low, end)
+        if first == last:
+            source = self._source(segments, first, durable_lsn)
+            if end - source.shift > source.end:
+                raise self._not_kept(low, end)
+            return [source], None, begins - source.shift, counts
+        bounds = [segment.first_lsn for segment in segments[first + 1 : last + 1]]
+        owners = np.searchsorted(np.array(bounds, np.int64), begins, side="right")
+        # Only segments that are asked for are mapped: a straggler may lie a hundred segments before the rest.
+        present = np.bincount(owners) > 0
+        sources = [self._source(segments, first + index, durable_lsn) for index in np.flatnonzero(present).tolist()]
+        owners = (np.cumsum(present) - 1)[owners]
+        offsets = begins - np.array([source.shift for source in sources], np.int64)[owners]
+        if (offsets + counts > np.array([source.end for source in sources], np.int64)[owners]).any():
+            raise self._not_kept(low, end)
+        return sources, owners, offsets, counts
+
+    def _source(self, segments: tuple[Segment, ...], index: int, durable_lsn: int) -> Source:
+        segment = segments[index]
+        end_lsn = min(durable_lsn, segments[index + 1].first_lsn) if index + 1 < len(segments) else durable_lsn
+        view = self._maps.view(segment.path)
+        return Source(view, segment.first_lsn - SEGMENT_HEADER_BYTES, segment.offset(end_lsn))
+
+    def _not_kept(self, low: int, high: int) -> JournalError:
+        return JournalError(
+            f"{self._directory}: lines from position {low} to {high} were asked for, but only "
+            f"{self.first_lsn} to {self._durable_lsn} is kept and durable, each line inside one segment"
+        )
+
+    @staticmethod
+    def _index(segments: tuple[Segment, ...], lsn: int) -> int:
+        """Number of the segment that a position lies in; -1 before the first."""
+        return bisect_right(segments, lsn, key=attrgetter("first_lsn")) - 1

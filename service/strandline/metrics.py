@@ -1,0 +1,145 @@
+"""The metrics: names, meanings and where each value comes from. A custom collector reads plain counts when it is asked.
+
+What each metric means is written down in `metrics_reference`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Mapping
+from itertools import accumulate
+
+from prometheus_client import CollectorRegistry
+from prometheus_client.core import CounterMetricFamily, GaugeMetricFamily, HistogramMetricFamily, Metric
+from prometheus_client.registry import Collector
+
+from .core.columns import TIME_MIN
+from .core.histogram import Histogram
+from .core.view import HOLD_WHYS, View
+from .journal.counters import SYNC_BOUNDS_S
+from .metrics_reference import METRICS
+from .runtime import FeedRuntime
+from .sinks.delivery import DeliveryState
+
+
+class FeedCollector(Collector):
+    """Reads the feeds' plain counts at the moment of a scrape."""
+
+    def __init__(self, feeds: Mapping[str, FeedRuntime]) -> None:
+        self._feeds = feeds
+
+    def describe(self) -> Iterator[Metric]:
+        """Families without samples: registering must not read the feeds."""
+        yield from _families().values()
+
+    def collect(self) -> Iterator[Metric]:
+        """Families with a sample for each feed."""
+        families = _families()
+        for name, runtime in self._feeds.items():
+            _Sampler(families, name, runtime).fill()
+        yield from families.values()
+
+
+def make_registry(feeds: Mapping[str, FeedRuntime]) -> CollectorRegistry:
+    """A registry that shows these feeds and nothing else."""
+    registry = CollectorRegistry(auto_describe=False)
+    registry.register(FeedCollector(feeds))
+    return registry
+
+
+def _families() -> dict[str, Metric]:
+    kinds: dict[str, Callable[..., Metric]] = {
+        "counter": CounterMetricFamily,
+        "gauge": GaugeMetricFamily,
+        "histogram": HistogramMetricFamily,
+    }
+    return {
+        name: kinds[meaning.kind](name, meaning.help, labels=("feed", *meaning.labels))
+        for name, meaning in METRICS.items()
+    }
+
+
+class _Sampler:
+    """Adds one feed's samples to the families."""
+
+    def __init__(self, families: Mapping[str, Metric], feed: str, runtime: FeedRuntime) -> None:
+        self.families, self.feed, self.runtime = families, feed, runtime
+        self.view: View = runtime.view()
+
+    def add(self, name: str, value: float, *labels: str) -> None:
+        self.families[name].add_metric((self.feed, *labels), value)  # type: ignore[attr-defined]
+
+    def age_s(self, then_ns: int | None) -> float:
+        if then_ns is None or then_ns == TIME_MIN:
+            return 0.0
+        return max(0.0, (self.view.now_ns - then_ns) / 1e9)
+
+    def fill(self) -> None:
+        self._books()
+        self._order()
+        self._journal()
+        self._sinks()
+        self._hops()
+
+    def _books(self) -> None:
+        ledger = self.view.ledger
+        for column in ("received", "released", "late", "duplicate", "quarantined"):
+            self.add(f"strandline_events_{column}", ledger[column])
+        self.add("strandline_events_held", ledger["buffered"])
+        self.add("strandline_books_unbalanced_events", self.view.balance)
+        for reason, count in self.view.refusals.items():
+            self.add("strandline_requests_refused", count, reason)
+        self.add("strandline_lanes_bytes", self.runtime.lane_store.size.file_bytes)
+
+    def _order(self) -> None:
+        view, figures = self.view, self.runtime.feed.state.figures
+        self.add("strandline_held_oldest_seconds", self.age_s(view.held_oldest_ns))
+        self.add("strandline_watermark_age_seconds", self.age_s(view.watermark_ns))
+        self.add("strandline_watermark_advanced_seconds", self.age_s(view.marked_ns))
+        self.add("strandline_slack_seconds", view.slack_ns / 1e9)
+        for why in HOLD_WHYS:
+            self.add("strandline_hold", float(why == view.hold.why), why)
+        self.add("strandline_open_runs", len(view.open_runs))
+        self.add("strandline_sources", view.sources)
+        self.add("strandline_sources_active", view.sources_active)
+        for cause, count in view.marks.items():
+            self.add("strandline_marks", count, cause)
+        self.add("strandline_comparisons", view.comparisons)
+        self.add("strandline_copies", view.copies)
+        self.add("strandline_gallops", view.gallops)
+        self.histogram("strandline_lateness_seconds", figures.lateness, 1e9)
+        self.histogram("strandline_hold_seconds", figures.hold, 1e9)
+        self.histogram("strandline_run_length_events", figures.run_length, 1)
+
+    def histogram(self, name: str, counts: Histogram, unit: float) -> None:
+        bounds = [*(repr(bound / unit) for bound in counts.bounds), "+Inf"]
+        cumulated = counts.counts.cumsum().tolist()
+        buckets = list(zip(bounds, cumulated, strict=True))
+        self.families[name].add_metric((self.feed,), buckets, counts.total / unit)  # type: ignore[attr-defined]
+
+    def _journal(self) -> None:
+        journal = self.runtime.journal
+        counters = journal.counters
+        self.add("strandline_journal_bytes", journal.bytes_used)
+        self.add("strandline_journal_unsynced_bytes", journal.queued_bytes)
+        self.add("strandline_journal_syncs", counters.syncs)
+        bounds = [*map(repr, SYNC_BOUNDS_S), "+Inf"]
+        buckets = list(zip(bounds, accumulate(counters.sync_counts), strict=True))
+        self.families["strandline_journal_sync_seconds"].add_metric(  # type: ignore[attr-defined]
+            (self.feed,), buckets, counters.sync_seconds_total
+        )
+
+    def _sinks(self) -> None:
+        for name, delivery in self.runtime.deliveries.items():
+            state: DeliveryState = delivery.state()
+            self.add("strandline_sink_retries", state.retries, name)
+            self.add("strandline_sink_failing", float(state.failing_since_ns is not None), name)
+            for lane, waiting in state.lanes.items():
+                self.add("strandline_sink_waiting_events", waiting.events, name, lane)
+                self.add("strandline_sink_oldest_seconds", self.age_s(waiting.oldest_instant_ns), name, lane)
+                self.add("strandline_sink_delivered_events", waiting.delivered_events, name, lane)
+
+    def _hops(self) -> None:
+        for name, hop in self.runtime.hops().items():
+            self.add("strandline_hop_waiting", hop.waiting, name)
+            self.add("strandline_hop_oldest_seconds", self.age_s(hop.oldest_ns), name)
+            self.add("strandline_hop_advanced_seconds", self.age_s(hop.advanced_ns), name)

@@ -1,0 +1,163 @@
+"""The OpenAPI 3.1 document at /openapi.json: what each address takes and answers, from the same types.
+
+Data only; the addresses themselves are registered in `app`, and a test compares the two lists.
+"""
+
+from __future__ import annotations
+
+from functools import cache
+from typing import Any
+
+import msgspec
+
+from .core.effects import Outcome
+from .errors import FAULT_REASONS, REFUSALS
+from .ingest.endpoint import Excuse, Promise
+
+Json = dict[str, Any]
+EVENT_MEDIA_TYPES = ("application/x-ndjson", "application/jsonl", "application/json")
+_FEED: Json = {
+    "name": "feed",
+    "in": "path",
+    "required": True,
+    "description": "name of a configured feed",
+    "schema": {"type": "string", "pattern": "^[a-z0-9][a-z0-9-]{0,62}$"},
+}
+
+
+def _query(name: str, description: str, schema: Json) -> Json:
+    return {"name": name, "in": "query", "required": False, "description": description, "schema": schema}
+
+
+_WHOLE: Json = {"type": "integer", "minimum": 0, "maximum": 10**18 - 1}
+_PAGE = [
+    _query("after", "rows behind this number; a page's `next_after`", _WHOLE),
+    _query("limit", "rows of one page, at most 1000", _WHOLE),
+]
+
+
+def _problems(*statuses: int) -> Json:
+    titles = {
+        400: "a parameter is not what it should be",
+        404: "there is no such feed or source",
+        408: "the body did not come in time",
+        410: "the batch asked for is no longer at hand here",
+        413: "the body, or what it decompresses to, is larger than the feed's limits",
+        415: "media type or content coding is not supported (then Accept-Encoding says which are)",
+        422: "the body cannot be read as what it says it is",
+        429: "a limit is reached; Retry-After says when to come again",
+        503: "stopping, starting, out of disk, or stopped after a failed write",
+    }
+    content = {"application/problem+json": {"schema": {"$ref": "#/components/schemas/Problem"}}}
+    return {str(status): {"description": titles[status], "content": content} for status in statuses}
+
+
+def _answer(description: str, schema: Json, media_type: str = "application/json") -> Json:
+    return {"200": {"description": description, "content": {media_type: {"schema": schema}}}}
+
+
+def _get(summary: str, responses: Json, parameters: list[Json] | None = None) -> Json:
+    return {"get": {"summary": summary, "parameters": parameters or [], "responses": responses}}
+
+
+def _act(summary: str, schema: str | None) -> Json:
+    operation: Json = {
+        "summary": summary,
+        "parameters": [_FEED],
+        "responses": {
+            "204": {"description": "durable"},
+            **_problems(404, 408, 413, 422, 429, 503),
+        },
+    }
+    if schema:
+        content = {"application/json": {"schema": {"$ref": f"#/components/schemas/{schema}"}}}
+        operation["requestBody"] = {"required": True, "content": content}
+    return {"post": operation}
+
+
+def _events() -> Json:
+    body: Json = {"type": "string", "description": "one JSON object a line (or an array, or one object)"}
+    content: Json = {media_type: {"schema": body} for media_type in EVENT_MEDIA_TYPES}
+    content["application/json"] = {"schema": {}}
+    return {
+        "post": {
+            "summary": "Send events; answered once all of them are durable",
+            "description": "A request is one arrival. Content-Encoding gzip and zstd are understood.",
+            "parameters": [_FEED],
+            "requestBody": {"required": True, "content": content},
+            "responses": {
+                **_answer("what became of the events", {"$ref": "#/components/schemas/Outcome"}),
+                **_problems(404, 408, 413, 415, 422, 429, 503),
+            },
+        }
+    }
+
+
+def _paths() -> Json:
+    document: Json = {"type": "object"}
+    source = _query("source", "only this source", {"type": "string"})
+    ordered = _query("after", "batches behind this number; without it those released from now on", _WHOLE)
+    return {
+        "/v1/feeds/{feed}/events": _events(),
+        "/v1/feeds/{feed}/marks": _act("Promise: nothing older will come from this source", "Promise"),
+        "/v1/feeds/{feed}/excuse": _act("Do not wait for this source until it speaks again", "Excuse"),
+        "/v1/feeds/{feed}/drain": _act("Release all that is held, in order", None),
+        "/v1/feeds": _get("Every feed", _answer("feeds", document)),
+        "/v1/feeds/{feed}": _get(
+            "Watermark, slack, hold, open runs, books, hops, sinks",
+            {**_answer("the feed", document), **_problems(404)},
+            [_FEED],
+        ),
+        "/v1/feeds/{feed}/sources": _get(
+            "Sources", {**_answer("sources", document), **_problems(400, 404)}, [_FEED, *_PAGE]
+        ),
+        "/v1/feeds/{feed}/late": _get(
+            "Late events", {**_answer("late events", document), **_problems(400, 404)}, [_FEED, *_PAGE, source]
+        ),
+        "/v1/feeds/{feed}/quarantine": _get(
+            "Lines in quarantine", {**_answer("lines", document), **_problems(400, 404)}, [_FEED, *_PAGE]
+        ),
+        "/v1/feeds/{feed}/ordered": _get(
+            "The ordered output as it is released, without end",
+            {
+                **_answer("one JSON line an event", {"type": "string"}, "application/x-ndjson"),
+                **_problems(400, 404, 410),
+            },
+            [_FEED, ordered],
+        ),
+        "/metrics": _get("Metrics", _answer("exposition format", {"type": "string"}, "text/plain")),
+        "/health/live": _get("The process is alive", _answer("alive", document)),
+        "/health/ready": _get("Ready to take events", {**_answer("ready", document), **_problems(503)}),
+        "/openapi.json": _get("This document", _answer("OpenAPI 3.1", document)),
+    }
+
+
+@cache
+def document() -> Json:
+    """The whole document."""
+    _, components = msgspec.json.schema_components(
+        [Outcome, Promise, Excuse], ref_template="#/components/schemas/{name}"
+    )
+    reasons = ", ".join(sorted(FAULT_REASONS))
+    components["AnswerFault"]["description"] = f"One line that was not accepted; reason is one of: {reasons}."
+    components["Problem"] = {
+        "description": f"RFC 9457. `type` ends in one of: {', '.join(sorted(REFUSALS))}, or is about:blank.",
+        "type": "object",
+        "required": ["type", "title", "status", "detail"],
+        "properties": {
+            "type": {"type": "string"},
+            "title": {"type": "string"},
+            "status": {"type": "integer", "minimum": 400, "maximum": 599},
+            "detail": {"type": "string"},
+        },
+    }
+    return {
+        "openapi": "3.1.0",
+        "info": {
+            "title": "Strandline",
+            "version": "1",
+            "description": "Keeps timestamped event feeds in order although events arrive late.",
+        },
+        "paths": _paths(),
+        "components": {"schemas": components},
+    }

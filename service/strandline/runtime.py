@@ -1,0 +1,381 @@
+"""One feed at work: carries out what the core decides. Journal, group commit, sinks and waiting requests meet here.
+
+No decision about order, lateness or the watermark is taken here, and no state spans an await except who waits for what.
+The written order of a stop is in `close`.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import logging
+import random
+from collections.abc import Callable, Mapping, Sequence
+from pathlib import Path
+from typing import NamedTuple
+
+from .config import Feed as FeedConfig
+from .core.columns import TIME_MIN, Arrival, Batch, Lane
+from .core.effects import Answer, Append, Deliver, Effect, Outcome, Refuse, Sync
+from .core.feed import Feed
+from .core.records import arrival_body_bytes
+from .core.view import View
+from .errors import JournalError, JournalFailed, JournalFull, SinkRetry, StrandlineError
+from .hops import Bodies, Hop
+from .ingest.decode import Decoder
+from .journal.commit import GroupCommit
+from .journal.journal import Journal
+from .lines import JournalLines
+from .ports import Clock, Disk, Sink
+from .problems import Refused
+from .recent import Recent
+from .sinks import make_sink
+from .sinks.delivery import Delivery
+from .sinks.lanes import LaneStore
+
+log = logging.getLogger(__name__)
+LANE_STORE = "lanes"
+SMALL_RECORD_BYTES = 4096  # more than any record that is not an arrival's
+OPEN_WITHIN_S = 5.0  # a store that does not answer by then is connected to later, by its delivery
+
+
+class _Waiter(NamedTuple):
+    """Who waits for a sync: since when, and for how many events."""
+
+    future: asyncio.Future[Outcome | None]
+    since_ns: int
+    events: int
+
+
+class FeedRuntime:
+    """The shell of one feed. Lives on one event loop; `open` first, then everything else, `close` last."""
+
+    def __init__(
+        self, config: FeedConfig, folder: Path, disk: Disk, clock: Clock, on_failed: Callable[[str, Exception], None]
+    ) -> None:
+        self.config, self.folder, self.clock = config, folder, clock
+        self.journal = Journal.open(
+            disk,
+            f"feeds/{config.name}",
+            segment_bytes=config.journal.segment_bytes,
+            journal_bytes_at_most=config.journal.at_most_bytes,
+        )
+        self.feed = Feed(config.settings())
+        self.recent = Recent()
+        self.lines = JournalLines(self.journal, self.feed)
+        self.commit = GroupCommit(self.journal, self._durable, self._failed)
+        self.decoder = Decoder(
+            config.name, config.time.at, config.time.unit, config.source, config.id, limits=config.body_limits()
+        )
+        self.lane_store = LaneStore(folder / "lanes.db")
+        self.deliveries: dict[str, Delivery] = {}
+        self.accepting = self._started = False
+        self.failure: str | None = None
+        self._positions_found: dict[str, dict[Lane, int]] = {}
+        self._opened_bell = asyncio.Event()
+        self._on_failed = on_failed
+        self.reading, self.decoding = Bodies(), Bodies()
+        self._synced = asyncio.Event()  # rung and replaced at each sync, and at a failure
+        self._synced_ns: int | None = None
+        self._delivered_ns: int | None = None
+        self._taken_ns: int | None = None
+        self._waiters: dict[int, _Waiter] = {}
+        self._tokens = 0
+        self._saved_lsn = 0
+        self._saved_bytes = 0
+        self._housekeeping: asyncio.Task[None] | None = None
+
+    # ---- start and stop -------------------------------------------------------------------------------------------
+
+    def recover(self) -> int:
+        """Fold what the journal holds, from its newest usable snapshot on; how many records were folded. Blocking."""
+        for lsn, body in self.journal.snapshots():
+            try:
+                self.feed.restore(body, lsn)
+            except (ValueError, LookupError, TypeError) as error:
+                log.warning("%s: the snapshot at %d cannot be used (%s)", self.config.name, lsn, error)
+                continue
+            self._saved_lsn = lsn
+            break
+        if self.feed.next_lsn < self.journal.first_lsn:
+            raise JournalError(
+                f"feeds/{self.config.name}: no usable snapshot, and the journal begins only at "
+                f"{self.journal.first_lsn}; restore the folder from a copy"
+            )
+        folded = 0
+        for frame in self.journal.frames(self.feed.next_lsn):
+            self.feed.fold(frame.kind, frame.version, frame.body, frame.lsn)
+            folded += 1
+        return folded
+
+    async def open(self) -> None:
+        """Recover, connect the sinks and begin to work."""
+        folded = await asyncio.to_thread(self.recover)
+        self.lines.watch(self.feed)
+        sinks: dict[str, Sink] = {LANE_STORE: self.lane_store}
+        for sink in self.config.sinks:
+            sinks[sink.name] = make_sink(sink.kind, self.config.name, self.clock, **sink.options())
+        remembered = self.feed.state.outbox.positions
+        for name, sink_object in sinks.items():
+            self.deliveries[name] = self._delivery(name, sink_object, remembered.get(name, {}))
+            self.deliveries[name].start()
+        positions = await self._positions()
+        served = {name: sink_object.lanes for name, sink_object in sinks.items()}
+        self.journal.reserve([SMALL_RECORD_BYTES] * 4, of_headroom=True)
+        self.carry_out(self.feed.start(self.clock.now_ns(), served, positions, self.config.settings()))
+        self._started = self.accepting = True
+        log.info(
+            "%s: %d records folded, %d events held, watermark %d",
+            self.config.name, folded, self.feed.state.runs.held, self.feed.state.watermark_ns,
+        )  # fmt: skip
+
+    def _delivery(self, name: str, sink: Sink, remembered: Mapping[Lane, int]) -> Delivery:
+        return Delivery(
+            name,
+            sink,
+            self.lines,
+            clock=self.clock,
+            random_source=random.Random(),
+            on_taken=self._taken,
+            on_refused=self._refused,
+            on_opened=self._opened,
+            remembered=remembered,
+        )
+
+    async def _positions(self) -> dict[str, dict[Lane, int]]:
+        """Where the stores say they stand. A new journal waits for all of them: it must not use a number twice."""
+        new = self.feed.next_lsn == 0
+        while len(self._positions_found) < len(self.deliveries):
+            bell = self._opened_bell
+            try:
+                async with asyncio.timeout(OPEN_WITHIN_S):
+                    await bell.wait()
+            except TimeoutError:
+                missing = ", ".join(sorted(self.deliveries.keys() - self._positions_found.keys()))
+                log.warning("%s: no answer yet from sink %s", self.config.name, missing)
+                if not new:
+                    break
+        return dict(self._positions_found)
+
+    def _opened(self, name: str, positions: Mapping[Lane, int]) -> None:
+        """A store has answered where it stands. Raises StrandlineError if it is ahead of this journal."""
+        if self._started:
+            for lane, number in positions.items():
+                if number >= self.feed.state.outbox.next_number[lane]:
+                    raise StrandlineError(
+                        f"the store has taken batch {number} of lane {lane}, this journal has not got there: it was "
+                        "replaced by an older one; restart the service, so that it numbers on from there"
+                    )
+        self._positions_found[name] = dict(positions)
+        bell, self._opened_bell = self._opened_bell, asyncio.Event()
+        bell.set()
+
+    async def close(self, drain_at_most_s: float) -> None:
+        """Stop in this order: take nothing more; answer who waits on a sync; deliver within the limit; save; close."""
+        self.accepting = False
+        if self.failure is None:
+            await self._settle()
+        await asyncio.gather(*(delivery.drain(drain_at_most_s) for delivery in self.deliveries.values()))
+        if self._housekeeping:
+            await self._housekeeping
+        if self.failure is None:
+            try:
+                await self._save()
+            except JournalFull as error:
+                log.warning("%s: no snapshot was written at the stop: %s", self.config.name, error)
+        await self.commit.close()
+        for delivery in self.deliveries.values():
+            await delivery.close()
+        self._refuse_waiters("stopping", "the service is stopping")
+        self.journal.close()
+
+    # ---- inputs ---------------------------------------------------------------------------------------------------
+
+    async def arrive(self, arrival: Arrival) -> Outcome:
+        """Hand one request to the core and wait until it is durable. Raises Refused."""
+        self._check_open()
+        self._check_lanes(arrival)
+        names = sum(len(name.encode()) + 8 for name in arrival.new_sources)
+        self._reserve([arrival_body_bytes(arrival), SMALL_RECORD_BYTES, SMALL_RECORD_BYTES, names])
+        now_ns = self.clock.now_ns()
+        outcome = await self._ask(lambda token: self.feed.arrive(arrival, now_ns, token), now_ns, arrival.received)
+        assert outcome is not None
+        return outcome
+
+    async def act(self, act: Callable[[int, int], list[Effect]]) -> None:
+        """Carry out an act of an operator or a source, `act(now_ns, token)`, and wait until it is durable."""
+        self._check_open()
+        self._reserve([SMALL_RECORD_BYTES] * 3, of_headroom=True)
+        now_ns = self.clock.now_ns()
+        await self._ask(lambda token: act(now_ns, token), now_ns, 0)
+
+    def tick(self) -> None:
+        """Time has gone on."""
+        if self.accepting and self.failure is None and self._has_headroom():
+            self.carry_out(self.feed.tick(self.clock.now_ns()))
+            self._keep_house()
+
+    def _taken(self, sink: str, lane: Lane, number: int) -> None:
+        self._taken_ns = self.clock.now_ns()
+        if self.failure is None and self._has_headroom():
+            self.carry_out(self.feed.taken(sink, lane, number, self.clock.now_ns()))
+
+    async def _refused(self, sink: str, batches: Sequence[Batch], detail: str) -> None:
+        # Nothing is let go before it is kept somewhere else: until then it waits, and the sink's error says why.
+        raise SinkRetry(f"{len(batches)} batches are refused for good and wait here: {detail}", retry_after_s=60)
+
+    async def _ask(self, ask: Callable[[int], list[Effect]], now_ns: int, events: int) -> Outcome | None:
+        self._tokens += 1
+        future: asyncio.Future[Outcome | None] = asyncio.get_running_loop().create_future()
+        self._waiters[self._tokens] = _Waiter(future, now_ns, events)
+        self.carry_out(ask(self._tokens))
+        return await future
+
+    def _check_open(self) -> None:
+        if self.failure is not None:
+            raise Refused("failed", f"feed {self.config.name}: {self.failure}", 10)
+        if not self.accepting:
+            raise Refused("stopping", "the service is stopping or still starting; try again", 5)
+
+    def _check_lanes(self, arrival: Arrival) -> None:
+        size, limit = self.lane_store.size, self.config.lanes_at_most_bytes
+        if size.file_bytes > limit:
+            detail = (
+                f"the late lane and the quarantine of {self.config.name} take {size.file_bytes:,} bytes and "
+                f"lanes_at_most is {limit:,}: export and remove what is settled, or raise the limit"
+            )
+            self.feed.note_refusal("lanes_full")
+            raise Refused("lanes_full", detail, 60)
+
+    def _reserve(self, sizes: Sequence[int], *, of_headroom: bool = False) -> None:
+        try:
+            self.journal.reserve(sizes, of_headroom=of_headroom)
+        except JournalFull as error:
+            self.feed.note_refusal(error.reason)
+            raise Refused(error.reason, str(error), 5) from error
+        except JournalFailed as error:
+            raise Refused("failed", str(error), 10) from error
+
+    def _has_headroom(self) -> bool:
+        try:
+            self.journal.reserve([SMALL_RECORD_BYTES] * 2, of_headroom=True)
+        except (JournalFull, JournalFailed) as error:
+            log.debug("%s: no room for a mark now: %s", self.config.name, error)
+            return False
+        return True
+
+    # ---- effects --------------------------------------------------------------------------------------------------
+
+    def carry_out(self, effects: list[Effect]) -> None:
+        """Do what the core asks for, in its order."""
+        for effect in effects:
+            match effect:
+                case Append():
+                    self.journal.append(effect.lsn, effect.kind, effect.parts)
+                case Sync():
+                    self.commit.kick()
+                case Deliver():
+                    self._deliver(effect.batch)
+                case Answer():
+                    waiter = self._waiters.pop(effect.token, None)
+                    if waiter and not waiter.future.done():
+                        waiter.future.set_result(effect.outcome)
+                case Refuse():
+                    waiter = self._waiters.pop(effect.token, None)
+                    if waiter and not waiter.future.done():
+                        waiter.future.set_exception(Refused(effect.reason, effect.detail, effect.retry_after_s))
+
+    def _deliver(self, batch: Batch) -> None:
+        self._delivered_ns = self.clock.now_ns()
+        for delivery in self.deliveries.values():
+            delivery.offer(batch)
+        if batch.lane == "ordered":
+            self.recent.add(batch)
+
+    async def _settle(self) -> None:
+        """Wait until everything that was appended so far is durable. Raises JournalFailed."""
+        lsn = self.feed.next_lsn
+        while self.journal.durable_lsn < lsn:
+            if self.failure is not None:
+                raise JournalFailed(self.failure)
+            bell = self._synced
+            self.commit.kick()
+            await bell.wait()
+
+    def _durable(self, lsn: int) -> None:
+        bell, self._synced = self._synced, asyncio.Event()
+        bell.set()
+        self._synced_ns = self.clock.now_ns()
+        self.carry_out(self.feed.synced(lsn))
+
+    def _failed(self, error: Exception) -> None:
+        self.failure = str(error)
+        self._synced.set()
+        self._refuse_waiters("failed", f"a write failed and nothing more is accepted until a restart: {error}")
+        self._on_failed(self.config.name, error)
+
+    def _refuse_waiters(self, reason: str, detail: str) -> None:
+        waiters, self._waiters = self._waiters, {}
+        for waiter in waiters.values():
+            if not waiter.future.done():
+                waiter.future.set_exception(Refused(reason, detail, 10))
+
+    # ---- housekeeping: snapshots and retention --------------------------------------------------------------------
+
+    def _keep_house(self) -> None:
+        if self._housekeeping and self._housekeeping.done():
+            self._housekeeping.result()
+            self._housekeeping = None
+        grown = self.feed.next_lsn - self._saved_lsn
+        # A snapshot is written when the journal has grown by a segment and by four times the snapshot's own size, so
+        # that snapshots stay below a quarter of what is written.
+        due = grown >= max(self.config.journal.segment_bytes, 4 * self._saved_bytes)
+        if self._housekeeping is None and (due or self.journal.lacks_spare):
+            self._housekeeping = asyncio.create_task(self._house(due))
+
+    async def _house(self, due: bool) -> None:
+        try:
+            if due:
+                await self._save()
+            await self.commit.run(self.journal.replenish)
+        except JournalFull as error:
+            log.warning("%s: %s", self.config.name, error)
+        except JournalFailed as error:
+            if self.failure is None:
+                self._failed(error)
+
+    async def _save(self) -> None:
+        """Write a snapshot of the core and delete the segments that nothing needs any more."""
+        lsn, parts = self.feed.next_lsn, self.feed.save()
+        if lsn == self._saved_lsn:
+            return
+        await self._settle()
+        await asyncio.to_thread(self.journal.write_snapshot, lsn, parts)
+        older, self._saved_lsn = self._saved_lsn, lsn
+        self._saved_bytes = sum(len(part) for part in parts)
+        # The older of the two kept snapshots must stay usable: the newer one may turn out damaged.
+        keep = min(older, self.feed.needed_place)
+        await self.commit.run(lambda: self.journal.drop_before(min(keep, self.journal.durable_lsn)))
+        self.recent.forget_before(self.journal.first_lsn)
+
+    # ---- observers ------------------------------------------------------------------------------------------------
+
+    def view(self) -> View:
+        """The feed as observers see it."""
+        return self.feed.snapshot(self.clock.now_ns())
+
+    def hops(self) -> dict[str, Hop]:
+        """The six hops, by name, in the order in which events pass them."""
+        state, waiters = self.feed.state, list(self._waiters.values())
+        oldest_waiter = waiters[0].since_ns if waiters else None
+        unsynced, unsynced_ns = self.feed.unsynced()
+        lanes = [lane for delivery in self.deliveries.values() for lane in delivery.state().lanes.values()]
+        waiting = [lane.oldest_instant_ns for lane in lanes if lane.oldest_instant_ns is not None]
+        marked_ns = None if state.marked_ns == TIME_MIN else state.marked_ns
+        return {
+            "ingest": self.reading.hop(),
+            "decode": self.decoding.hop(),
+            "journal": Hop(sum(waiter.events for waiter in waiters), oldest_waiter, self._synced_ns),
+            "runs": Hop(state.runs.held, state.arrivals.oldest_ns, marked_ns),
+            "release": Hop(unsynced, unsynced_ns, self._delivered_ns),
+            "sinks": Hop(sum(lane.events for lane in lanes), min(waiting, default=None), self._taken_ns),
+        }

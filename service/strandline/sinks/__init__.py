@@ -1,0 +1,52 @@
+"""Where released batches go: one module a kind of sink, the keeper of the late lane and quarantine, and delivery.
+
+`make_sink` knows the kinds and imports a kind's module only when one is made.
+"""
+
+from __future__ import annotations
+
+import importlib
+import inspect
+from typing import TYPE_CHECKING
+
+from ..errors import StrandlineError
+
+if TYPE_CHECKING:
+    from ..ports import Clock, Sink
+
+# kind -> module and class. Each constructor takes `feed`, `clock` if it names it, and the kind's own options.
+SINK_KINDS: dict[str, tuple[str, str]] = {
+    "sqlite": ("sqlite", "SqliteSink"),
+    "ndjson": ("ndjson", "NdjsonSink"),
+}
+
+
+def make_sink(kind: str, feed: str, clock: Clock, **options: object) -> Sink:
+    """A sink of this kind for this feed; nothing is opened yet.
+
+    Options are the constructor's: sqlite: path; ndjson: directory, roll_bytes, roll_every_s. Raises StrandlineError for
+    a kind that is not known, and for options that the kind does not have or lacks.
+    """
+    if kind not in SINK_KINDS:
+        raise StrandlineError(f"there is no kind of sink named {kind!r}: name one of {', '.join(SINK_KINDS)}")
+    module, name = SINK_KINDS[kind]
+    maker = getattr(importlib.import_module(f".{module}", __name__), name)
+    given: dict[str, object] = {"feed": feed, **options}
+    parameters = inspect.signature(maker).parameters
+    if "clock" in parameters:
+        given["clock"] = clock
+    wrong = sorted(set(given) - set(parameters))
+    lacking = [each.name for each in parameters.values() if each.default is each.empty and each.name not in given]
+    if wrong or lacking:
+        raise StrandlineError(f"a sink of kind {kind} " + _faults(wrong, lacking))
+    sink: Sink = maker(**given)
+    return sink
+
+
+def _faults(wrong: list[str], lacking: list[str]) -> str:
+    parts = []
+    if wrong:
+        parts.append(f"has no option {', '.join(wrong)}")
+    if lacking:
+        parts.append(f"needs {', '.join(lacking)}")
+    return " and ".join(parts)

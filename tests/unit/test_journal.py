@@ -1,0 +1,603 @@
+"""The journal on real files: append, flush, reopen, limits, retention, snapshots, damage, reading lines back."""
+
+from __future__ import annotations
+
+import errno
+from pathlib import Path
+
+import pytest
+from helpers_journal import FEED, SMALL, append, ends, flush, lines_body, opened, records_of, write
+from simdisk import SimDisk
+
+from strandline.core.records import FRAME_HEADER_BYTES, frame_bytes
+from strandline.errors import JournalError, JournalFailed, JournalFull
+from strandline.journal import segments
+from strandline.journal.disk import LocalDisk
+from strandline.journal.journal import HEADROOM_BYTES, Journal
+from strandline.journal.recovery import keep_prefix
+
+LEVELS = [(3, b'{"station":"weir-%d","level":1.5}\n' % number * 5) for number in range(60)]
+
+
+@pytest.fixture
+def disk(tmp_path: Path) -> LocalDisk:
+    """A disk on real files."""
+    return LocalDisk(tmp_path)
+
+
+def folder(tmp_path: Path) -> list[str]:
+    """Names in the feed's directory."""
+    return sorted(path.name for path in (tmp_path / FEED).iterdir())
+
+
+def segment_files(tmp_path: Path) -> list[Path]:
+    """The feed's segments, oldest first."""
+    return sorted((tmp_path / FEED).glob("journal-*.seg"))
+
+
+def flip(path: Path, offset: int, bit: int = 0) -> None:
+    """Damage one bit of a file."""
+    content = bytearray(path.read_bytes())
+    content[offset] ^= 1 << bit
+    path.write_bytes(content)
+
+
+# ---- appending and reading back -------------------------------------------------------------------------------------
+
+
+def test_an_empty_journal(disk: LocalDisk) -> None:
+    journal = opened(disk)
+    assert (journal.first_lsn, journal.next_lsn, journal.durable_lsn) == (0, 0, 0)
+    assert flush(journal) == 0 and records_of(journal) == [] and journal.counters.syncs == 0
+    assert journal.line_bytes([], []) == [] and journal.gather([], []) == b""
+
+
+def test_what_is_flushed_is_read_back_here_and_after_a_restart(disk: LocalDisk) -> None:
+    journal = opened(disk)
+    positions = write(journal, *LEVELS[:3]) + write(journal, *LEVELS[3:])
+    assert positions == [0, *ends(LEVELS)[:-1]] and journal.durable_lsn == journal.next_lsn == ends(LEVELS)[-1]
+    assert records_of(journal) == LEVELS
+    journal.close()
+    again = opened(disk)
+    assert records_of(again) == LEVELS and again.durable_lsn == ends(LEVELS)[-1] and again.cut_bytes == 0
+    assert [frame.lsn for frame in again.frames()] == positions
+    assert write(again, (4, b"mark")) == [ends(LEVELS)[-1]]
+    assert records_of(again)[-1] == (4, b"mark")
+
+
+def test_frames_never_cross_segments_and_segments_follow_without_a_gap(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    for record in LEVELS:
+        write(journal, record)
+    names = [path.name for path in segment_files(tmp_path)]
+    assert len(names) == 3 and names[0] == f"journal-{0:020d}.seg"
+    assert {path.stat().st_size for path in segment_files(tmp_path)} == {4096}
+    firsts = [segments.first_lsn_of(name) for name in names]
+    assert set(firsts) <= {0, *ends(LEVELS)}
+
+
+def test_one_group_may_span_segments(disk: LocalDisk) -> None:
+    journal = opened(disk)
+    append(journal, *LEVELS)
+    assert records_of(journal) == []
+    before = journal.counters.syncs
+    flush(journal)
+    assert records_of(journal) == LEVELS and journal.counters.syncs - before == 3
+    assert journal.counters.frames == 60 and journal.counters.bytes_written == ends(LEVELS)[-1]
+
+
+def test_a_record_larger_than_a_segment_gets_one_of_its_own(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    large = (3, bytes(range(256)) * 100)
+    records = [LEVELS[0], large, LEVELS[1]]
+    write(journal, *records)
+    assert records_of(opened(disk)) == records
+    assert sorted(path.stat().st_size for path in segment_files(tmp_path))[-1] == 28672
+
+
+def test_frames_from_a_position(disk: LocalDisk) -> None:
+    journal = opened(disk)
+    positions = write(journal, *LEVELS)
+    for number in (0, 1, 20, 59):
+        assert records_of(journal, positions[number]) == LEVELS[number:]
+        assert records_of(journal, positions[number] - 1 if number else 0) == LEVELS[number:]
+    assert records_of(journal, journal.next_lsn) == []
+
+
+def test_bodies_of_frames_are_views_of_the_map(disk: LocalDisk) -> None:
+    journal = opened(disk)
+    write(journal, LEVELS[0])
+    [frame] = journal.frames()
+    assert isinstance(frame.body, memoryview) and frame.body.readonly and frame.body.obj is not None
+    assert frame.end_lsn == journal.next_lsn and frame.version == 1
+
+
+def test_a_record_for_another_position_is_refused(disk: LocalDisk) -> None:
+    journal = opened(disk)
+    with pytest.raises(ValueError, match="stands at 0"):
+        journal.append(8, 3, [b"a"])
+
+
+def test_the_order_of_threads_is_free_between_append_and_flush(disk: LocalDisk) -> None:
+    # What is appended while a flush runs belongs to the next one: the queue is handed over whole.
+    journal = opened(disk)
+    append(journal, LEVELS[0])
+    flushed = journal.flush()
+    append(journal, LEVELS[1])
+    assert flushed == journal.durable_lsn == ends(LEVELS)[0] and journal.queued_bytes == frame_bytes(len(LEVELS[1][1]))
+
+
+def test_a_closed_journal_takes_nothing(disk: LocalDisk) -> None:
+    journal = opened(disk)
+    append(journal, LEVELS[0])
+    with pytest.raises(ValueError, match="queued"):
+        journal.close()
+    flush(journal)
+    journal.close()
+    journal.close()
+    with pytest.raises(ValueError, match="closed"):
+        journal.append(journal.next_lsn, 3, [b"a"])
+
+
+def test_reading_only_changes_nothing(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    write(journal, *LEVELS[:20])
+    copy = tmp_path / "captures" / "yesterday"
+    copy.mkdir(parents=True)
+    for path in segment_files(tmp_path):
+        (copy / path.name).write_bytes(path.read_bytes())
+    before = {path.name: path.read_bytes() for path in copy.iterdir()}
+    reader = Journal.open(LocalDisk(tmp_path, read_only=True), "captures/yesterday", read_only=True)
+    assert records_of(reader) == LEVELS[:20]
+    for act in (lambda: reader.append(reader.next_lsn, 3, [b"a"]), reader.flush, lambda: reader.reserve([1])):
+        with pytest.raises(ValueError, match="reading only"):
+            act()
+    reader.close()
+    assert {path.name: path.read_bytes() for path in copy.iterdir()} == before
+
+
+# ---- limits ---------------------------------------------------------------------------------------------------------
+
+
+def filled(journal: Journal) -> int:
+    """Append until the journal refuses; returns how many records it took."""
+    for number in range(10_000):
+        try:
+            write(journal, (3, bytes(500)))
+        except JournalFull:
+            return number
+        journal.replenish()
+    raise AssertionError("the journal never refused")
+
+
+def test_a_full_journal_refuses_with_numbers_and_keeps_headroom(disk: LocalDisk) -> None:
+    journal = opened(disk, journal_bytes_at_most=4 * 4096)
+    count = filled(journal)
+    assert count == 4 * (4032 // frame_bytes(500)) - 2 and journal.bytes_used == 4 * 4096
+    with pytest.raises(JournalFull, match=r"16,384 bytes are in use.*journal_bytes_at_most is 16,384") as full:
+        journal.reserve([500])
+    assert full.value.reason == "journal_full" and journal.next_lsn == count * frame_bytes(500)
+    marks = [(4, bytes(40))] * (1024 // frame_bytes(40))
+    journal.reserve([40] * len(marks), of_headroom=True)
+    assert journal.bytes_used == 4 * 4096
+    for kind, body in marks:
+        journal.append(journal.next_lsn, kind, [body])
+    flush(journal)
+    assert records_of(journal)[count:] == marks
+
+
+def test_small_records_pass_the_limit_and_others_still_do_not(disk: LocalDisk) -> None:
+    journal = opened(disk, journal_bytes_at_most=2 * 4096)
+    filled(journal)
+    for _ in range(200):
+        journal.reserve([40], of_headroom=True)
+        journal.append(journal.next_lsn, 4, [bytes(40)])
+        flush(journal)
+    assert journal.bytes_used > 2 * 4096
+    with pytest.raises(JournalFull) as full:
+        journal.reserve([8])
+    assert full.value.reason == "journal_full"
+
+
+def test_room_comes_back_with_retention(disk: LocalDisk) -> None:
+    journal = opened(disk, journal_bytes_at_most=3 * 4096)
+    filled(journal)
+    assert journal.drop_before(journal.durable_lsn) == 2 * 4096
+    journal.check()
+    assert filled(journal) > 10
+
+
+def test_the_default_headroom_is_the_stated_one() -> None:
+    assert HEADROOM_BYTES == 64 << 10
+
+
+def test_a_full_disk_refuses_before_the_first_byte() -> None:
+    disk = SimDisk(capacity_bytes=4 * 4096)
+    journal = opened(disk)
+    filled(journal)
+    position = journal.next_lsn
+    with pytest.raises(JournalFull, match="No space left") as full:
+        journal.reserve([500])
+    assert full.value.reason == "disk_full" and journal.next_lsn == position and not journal.failed
+    journal.reserve([40] * 10, of_headroom=True)
+    disk.capacity_bytes = 8 * 4096
+    write(journal, (3, bytes(500)))
+    journal.check()
+
+
+def test_a_full_disk_does_not_keep_a_journal_from_starting() -> None:
+    disk = SimDisk(capacity_bytes=4 * 4096)
+    journal = opened(disk)
+    filled(journal)
+    records = records_of(journal)
+    assert records_of(opened(disk.restarted())) == records
+
+
+def test_what_waits_for_the_disk_is_limited(disk: LocalDisk) -> None:
+    journal = opened(disk, queued_bytes_at_most=2000)
+    append(journal, (3, bytes(1500)))
+    with pytest.raises(JournalFull, match=r"1,520 bytes wait for the disk and 1,016 more would pass 2,000"):
+        journal.reserve([1000])
+    journal.reserve([1000], of_headroom=True)
+    flush(journal)
+    append(journal, (3, bytes(1000)))
+
+
+def test_limits_that_cannot_work_are_refused(disk: LocalDisk) -> None:
+    for limits in ({"segment_bytes": 512}, {"journal_bytes_at_most": 5000}):
+        with pytest.raises(ValueError, match="segment_bytes"):
+            Journal.open(disk, FEED, **{**SMALL, **limits})
+
+
+def test_a_spare_is_made_ahead_and_taken_over(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    assert folder(tmp_path) == ["spare-0.seg"] and not journal.lacks_spare
+    write(journal, LEVELS[0])
+    assert journal.lacks_spare and journal.replenish() and not journal.lacks_spare
+    journal.close()
+    again = opened(disk)
+    assert folder(tmp_path) == [f"journal-{0:020d}.seg", "spare-1.seg"] and not again.lacks_spare
+    again.close()
+    flip(tmp_path / FEED / "spare-1.seg", 4000)
+    opened(disk)
+    assert folder(tmp_path) == [f"journal-{0:020d}.seg", "spare-2.seg"]
+
+
+# ---- retention and snapshots ----------------------------------------------------------------------------------------
+
+
+def test_whole_segments_before_a_position_go_and_never_the_last(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    positions = write(journal, *LEVELS)
+    firsts = [segments.first_lsn_of(path.name) or 0 for path in segment_files(tmp_path)]
+    assert journal.drop_before(firsts[1] - 1) == 0 and journal.first_lsn == 0
+    assert journal.drop_before(firsts[1]) == 4096 and journal.first_lsn == firsts[1]
+    journal.check()
+    kept = LEVELS[positions.index(firsts[1]) :]
+    assert records_of(journal) == kept
+    with pytest.raises(JournalError, match="no longer kept"):
+        list(journal.frames(0))
+    with pytest.raises(JournalError, match="were asked for"):
+        journal.gather([0], [8])
+    with pytest.raises(ValueError, match="not durable"):
+        journal.drop_before(journal.next_lsn + 1)
+    assert journal.drop_before(journal.next_lsn) == 4096 and journal.first_lsn == firsts[2]
+    journal.close()
+    assert records_of(opened(disk)) == LEVELS[positions.index(firsts[2]) :]
+
+
+def test_a_segment_that_only_a_queued_record_begins_does_not_free_the_one_before() -> None:
+    disk = SimDisk()
+    journal = opened(disk)
+    write(journal, (3, bytes(3900)))
+    append(journal, (3, bytes(3900)))
+    assert journal.drop_before(journal.durable_lsn) == 0
+    after = opened(disk.crash(lambda count: 0))
+    assert after.next_lsn == frame_bytes(3900)
+
+
+def test_lines_that_are_held_survive_the_removal_of_their_segment(disk: LocalDisk) -> None:
+    journal = opened(disk)
+    write(journal, *LEVELS)
+    first = next(journal.frames()).body
+    journal.drop_before(journal.durable_lsn)
+    assert bytes(first) == LEVELS[0][1]
+
+
+def test_snapshots_newest_first_and_two_are_kept(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    assert journal.snapshots() == []
+    taken = []
+    for number in range(4):
+        write(journal, LEVELS[number])
+        journal.write_snapshot(journal.durable_lsn, [b"state", bytearray(b" %d" % number), b""])
+        taken.append((journal.durable_lsn, b"state %d" % number))
+        assert [(lsn, bytes(body)) for lsn, body in journal.snapshots()] == taken[: -3 if number > 1 else None : -1]
+    journal.close()
+    again = opened(disk)
+    assert [(lsn, bytes(body)) for lsn, body in again.snapshots()] == taken[:1:-1]
+    assert len([name for name in folder(tmp_path) if name.startswith("snapshot")]) == 2
+
+
+def test_a_snapshot_may_be_empty_and_be_taken_again(disk: LocalDisk) -> None:
+    journal = opened(disk)
+    for body in (b"", b"twice", b"thrice"):
+        journal.write_snapshot(0, [body])
+        assert [(lsn, bytes(found)) for lsn, found in journal.snapshots()] == [(0, body)]
+    with pytest.raises(ValueError, match="not durable"):
+        journal.write_snapshot(8, [b""])
+
+
+def test_a_damaged_snapshot_is_left_out(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    for record in LEVELS[:2]:
+        write(journal, record)
+        journal.write_snapshot(journal.durable_lsn, [b"state"])
+    newest = sorted((tmp_path / FEED).glob("snapshot-*.snap"))[-1]
+    size = newest.stat().st_size
+    for offset in range(size):
+        flip(newest, offset)
+        assert [lsn for lsn, _ in journal.snapshots()] == ends(LEVELS)[:1], offset
+        flip(newest, offset)
+    for kept in (0, 63, size - 1):
+        newest.write_bytes(newest.read_bytes()[:kept])
+        assert [lsn for lsn, _ in journal.snapshots()] == ends(LEVELS)[:1]
+
+
+def test_an_unfinished_snapshot_is_removed(disk: LocalDisk, tmp_path: Path) -> None:
+    opened(disk).close()
+    (tmp_path / FEED / f"snapshot-{0:020d}.tmp").write_bytes(b"half")
+    opened(disk)
+    assert folder(tmp_path) == ["spare-0.seg"]
+
+
+def test_no_room_for_a_snapshot_is_no_failure() -> None:
+    disk = SimDisk(capacity_bytes=3 * 4096)
+    journal = opened(disk)
+    write(journal, LEVELS[0])
+    journal.replenish()
+    with pytest.raises(JournalFull, match="snapshot") as full:
+        journal.write_snapshot(journal.durable_lsn, [bytes(8000)])
+    assert full.value.reason == "disk_full" and not journal.failed
+    write(journal, LEVELS[1])
+
+
+# ---- what a crash leaves, and what a bad disk does ------------------------------------------------------------------
+
+
+def test_a_torn_end_is_cut_and_never_comes_back(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    write(journal, *LEVELS[:3])
+    size = frame_bytes(len(LEVELS[0][1]))
+    [path] = segment_files(tmp_path)
+    flushed = path.read_bytes()
+    # As if two more frames had been under way and only the second had reached the disk.
+    write(journal, *LEVELS[3:5])
+    torn = bytearray(flushed)
+    second = 64 + 4 * size
+    torn[second : second + size] = path.read_bytes()[second : second + size]
+    path.write_bytes(torn)
+    again = opened(disk)
+    assert records_of(again) == LEVELS[:3] and again.cut_bytes == 2 * size - (-len(LEVELS[4][1]) % 8)
+    # A frame of the lost one's size must not make the one behind it readable again.
+    write(again, LEVELS[5])
+    again.close()
+    assert records_of(opened(disk)) == [*LEVELS[:3], LEVELS[5]]
+
+
+def test_damage_before_a_noted_position_is_told_and_nothing_is_touched(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    write(journal, *LEVELS[:2])
+    write(journal, *LEVELS[2:4])
+    journal.close()
+    [path] = segment_files(tmp_path)
+    size = frame_bytes(len(LEVELS[0][1]))
+    flip(path, 64 + size + 30)
+    before = path.read_bytes()
+    expected = (
+        rf"{path.name}: the frame at byte {64 + size} \(position {size}\) is not intact, although the journal was durable "
+        rf"up to position {4 * size}.*intact again from byte {64 + 2 * size}; later segments: 0"
+    )
+    with pytest.raises(JournalError, match=expected):
+        opened(disk)
+    assert path.read_bytes() == before
+    assert keep_prefix(disk, FEED) == []
+    assert records_of(opened(disk)) == LEVELS[:1]
+
+
+def test_after_a_clean_end_damage_to_the_very_last_frame_is_told(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    write(journal, LEVELS[0])
+    journal.close()
+    flip(segment_files(tmp_path)[0], 70)
+    with pytest.raises(JournalError, match="No intact frame follows"):
+        opened(disk)
+
+
+def test_damage_in_an_earlier_segment_is_told_and_can_be_given_up(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    positions = write(journal, *LEVELS)
+    journal.write_snapshot(0, [b"early"])
+    journal.write_snapshot(journal.durable_lsn, [b"late"])
+    journal.close()
+    paths = segment_files(tmp_path)
+    flip(paths[1], 64 + frame_bytes(len(LEVELS[0][1])) + 9)
+    with pytest.raises(JournalError, match="later segments: 1"):
+        opened(disk)
+    lost = keep_prefix(disk, FEED)
+    assert lost == [f"lost-{paths[2].name}", f"lost-snapshot-{ends(LEVELS)[-1]:020d}.snap"]
+    kept = positions.index(segments.first_lsn_of(paths[1].name)) + 1
+    again = opened(disk)
+    assert records_of(again) == LEVELS[:kept] and [bytes(body) for _, body in again.snapshots()] == [b"early"]
+    write(again, LEVELS[0])
+    again.close()
+    assert records_of(opened(disk)) == [*LEVELS[:kept], LEVELS[0]]
+
+
+def test_frames_tell_when_a_frame_goes_bad_while_the_journal_is_open(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    write(journal, *LEVELS[:2])
+    with segment_files(tmp_path)[0].open("r+b") as file:
+        file.seek(100)
+        file.write(b"\xff")
+    with pytest.raises(JournalError, match=r"byte 64 \(position 0\) is not intact any more"):
+        list(journal.frames())
+
+
+@pytest.mark.parametrize(
+    ("damage", "told"),
+    [
+        (lambda paths: paths[1].unlink(), "a segment between them is missing"),
+        (lambda paths: flip(paths[1], 3), "the header at byte 0 is damaged"),
+        (lambda paths: flip(paths[1], 17), "the header at byte 0 is damaged"),
+        (lambda paths: paths[1].write_bytes(b""), "too few for a segment"),
+        (lambda paths: paths[2].rename(paths[2].with_name(segments.segment_name(99_999))), "give it its name back"),
+        (lambda paths: paths[0].write_bytes(paths[0].read_bytes()[:8] + b"\2\0\0\0"), "too few for a segment"),
+        (
+            lambda paths: paths[0].write_bytes(paths[0].read_bytes()[:8] + b"\2\0\0\0" + paths[0].read_bytes()[12:]),
+            "written in format 2, this program reads up to 1",
+        ),
+    ],
+    ids=["missing", "magic", "position", "empty", "renamed", "short", "newer"],
+)
+def test_segments_that_cannot_be_right(disk: LocalDisk, tmp_path: Path, damage, told: str) -> None:
+    journal = opened(disk)
+    write(journal, *LEVELS)
+    journal.close()
+    damage(segment_files(tmp_path))
+    with pytest.raises(JournalError, match=told):
+        opened(disk)
+    with pytest.raises(JournalError, match=told):
+        Journal.open(disk, FEED, read_only=True)
+    keep_prefix(disk, FEED)
+    records = records_of(opened(disk))
+    assert records == LEVELS[: len(records)]
+
+
+def test_another_feeds_segments_are_told(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    write(journal, LEVELS[0])
+    journal.close()
+    (tmp_path / FEED).rename(tmp_path / "feeds" / "rain-gauges")
+    with pytest.raises(JournalError, match="belongs to another feed"):
+        opened(disk, "feeds/rain-gauges")
+    assert records_of(Journal.open(disk, "feeds/rain-gauges", read_only=True)) == LEVELS[:1]
+
+
+def test_a_missing_last_segment_is_told_by_a_snapshot(disk: LocalDisk, tmp_path: Path) -> None:
+    journal = opened(disk)
+    write(journal, *LEVELS)
+    journal.write_snapshot(journal.durable_lsn, [b"state"])
+    journal.close()
+    segment_files(tmp_path)[-1].unlink()
+    with pytest.raises(JournalError, match=rf"taken at position {ends(LEVELS)[-1]}, but the journal ends at"):
+        opened(disk)
+
+
+def test_a_failed_sync_is_final() -> None:
+    disk = SimDisk()
+    journal = opened(disk)
+    write(journal, LEVELS[0])
+    append(journal, LEVELS[1])
+    with disk.failing(1) as faults, pytest.raises(JournalFailed, match=r"durable up to position 184.*check the disk"):
+        journal.flush()
+    assert faults.failed == f"sync {FEED}/spare-0.seg" and journal.failed  # the name it was opened under
+    journal.check()
+    for act in (
+        journal.flush, journal.replenish, lambda: journal.reserve([8]), lambda: journal.append(0, 3, [b""]),
+        lambda: journal.drop_before(0), lambda: journal.write_snapshot(0, [b""]),
+    ):  # fmt: skip
+        with pytest.raises(JournalFailed, match="restart"):
+            act()
+    assert records_of(journal) == LEVELS[:1]
+    journal.close()
+    assert disk.handles == 0
+
+
+def test_an_error_of_the_program_while_writing_is_final_too() -> None:
+    disk = SimDisk()
+    journal = opened(disk)
+    append(journal, LEVELS[0])
+    with disk.failing(0, MemoryError), pytest.raises(MemoryError):
+        journal.flush()
+    with pytest.raises(JournalFailed):
+        journal.flush()
+
+
+def test_handles_are_given_back() -> None:
+    disk = SimDisk()
+    journal = opened(disk)
+    for record in LEVELS:
+        write(journal, record)
+    journal.gather([20], [5])
+    assert disk.handles == 2 - journal.lacks_spare
+    journal.close()
+    assert disk.handles == 0
+
+
+def test_a_shortage_of_handles_refuses_and_passes() -> None:
+    disk = SimDisk()
+    journal = opened(disk)
+    write(journal, (3, bytes(2900)))
+    with (
+        disk.failing(0, lambda: OSError(errno.EMFILE, "Too many open files")),
+        pytest.raises(JournalFull, match="Too many open files"),
+    ):
+        journal.reserve([2000])
+    write(journal, (3, bytes(2000)))
+
+
+# ---- lines ----------------------------------------------------------------------------------------------------------
+
+
+def test_lines_come_back_from_anywhere(disk: LocalDisk) -> None:
+    journal = opened(disk)
+    lines = [b'{"station":"weir-%d","level":%d}' % (number % 7, number) for number in range(400)]
+    places = []
+    for first in range(0, 400, 10):
+        some = lines[first : first + 10]
+        [lsn] = write(journal, (3, lines_body(*some)))
+        offset = lsn + FRAME_HEADER_BYTES
+        for line in some:
+            places.append(offset)
+            offset += len(line) + 1
+    lengths = [len(line) for line in lines]
+    assert journal.line_bytes(places, lengths) == lines
+    assert journal.gather(places, lengths) == lines_body(*lines)
+    order = sorted(range(400), key=lambda number: number * 7919 % 400)
+    assert journal.line_bytes([places[n] for n in order], [lengths[n] for n in order]) == [lines[n] for n in order]
+    assert journal.gather([places[n] for n in order], [lengths[n] for n in order]) == lines_body(*(lines[n] for n in order))
+
+
+def test_lines_that_are_not_kept_or_not_durable_are_refused(disk: LocalDisk) -> None:
+    journal = opened(disk)
+    write(journal, *LEVELS)
+    append(journal, LEVELS[0])
+    boundary = journal._segments[1].first_lsn
+    for places, lengths in (
+        ([-1], [1]), ([journal.durable_lsn], [0]), ([journal.durable_lsn - 1], [2]), ([boundary - 2], [4]),
+        ([0, boundary - 2], [4, 4]), ([8], [-1]), ([0, boundary], [boundary + 1, 1]),
+    ):  # fmt: skip
+        for act in (journal.gather, journal.line_bytes):
+            with pytest.raises(JournalError, match="were asked for"):
+                act(places, lengths)
+
+
+def test_mappings_are_bounded() -> None:
+    disk = SimDisk()
+    opened_paths = []
+
+    def open_file(path: str):
+        opened_paths.append(path)
+        return disk.open(path)
+
+    for number in range(5):
+        disk.create(f"a/{number}", 8)
+    maps = segments.Maps(open_file, at_most=3)
+    first = maps.view("a/0")
+    for number in (0, 1, 2, 3, 4, 4):
+        maps.view(f"a/{number}")
+    assert len(maps) == 3 and opened_paths == [f"a/{number}" for number in range(5)] and len(first) == 8
+    maps.forget("a/4")
+    maps.view("a/0")
+    assert len(maps) == 3 and opened_paths[-1] == "a/0"
