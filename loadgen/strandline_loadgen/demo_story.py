@@ -27,7 +27,7 @@ SECONDS_AT_LEAST, SECONDS_AT_MOST = 8, 3600
 
 @dataclass(frozen=True, slots=True)
 class Pace:
-    """The feed's settings for a demonstration of so many seconds: waits shrink with it, so that all of them are seen."""
+    """The feed's settings for a demonstration of so many seconds: waits shrink with it, so that all are seen."""
 
     slack_s: float
     idle_after_s: float
@@ -77,9 +77,15 @@ def _feed(seconds: float, seed: int) -> Trace:
             ("bursty_gateways", STORM_TO, 1.0, burst),
         ]:
             rate = (STORM_EVENTS_PER_S if STORM_FROM <= begin < STORM_TO else CALM_EVENTS_PER_S) / len(GATEWAYS)
-            events, start_ns = int(rate * (end - begin) * seconds), int(begin * seconds * 1e9)
-            law = dict(given, events_per_s=rate, sources=1, start_ns=start_ns)
-            parts.append(_of(gateway, shape(name, events, seed + len(parts), **law)))
+            room, law = rate * (end - begin) * seconds, dict(given, events_per_s=rate, sources=1)
+            # An outage is a share of the whole, so its events are as many as go in; of the others more are made, and
+            # those are kept that come in time.
+            events = int(room) if name == "outage_and_catch_up" else int(1.5 * room) + 20
+            made = shape(name, events, seed + len(parts), start_ns=int(begin * seconds * 1e9), **law)
+            kept = (
+                len(made) if name == "outage_and_catch_up" else int(np.searchsorted(made.arrivals, end * seconds * 1e9))
+            )
+            parts.append(_of(gateway, made.part(0, kept)))
     behind_s, start_ns = (STRAGGLER_AT - STRAGGLER_FROM) * seconds, int(STRAGGLER_FROM * seconds * 1e9)
     straggler = shape("slow_source", 1, seed, behind_s=behind_s, sources=1, start_ns=start_ns)
     return join("storm", [*parts, _of("ford", straggler)])

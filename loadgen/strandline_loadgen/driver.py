@@ -65,9 +65,12 @@ def every(interval_s: float) -> Schedule:
     return lambda body: body.number * interval_s
 
 
-def as_arrived(trace: Trace, speed: float = 1.0) -> Schedule:
-    """Each body when its last event arrived in the trace, `speed` times as fast."""
-    first = int(trace.arrivals[0]) if len(trace) else 0
+def as_arrived(trace: Trace, speed: float = 1.0, begin_ns: int | None = None) -> Schedule:
+    """Each body when its last event arrived in the trace, `speed` times as fast.
+
+    The sending begins at `begin_ns` of the trace's arrival clock (None: with its first arrival).
+    """
+    first = begin_ns if begin_ns is not None else int(trace.arrivals[0]) if len(trace) else 0
     return lambda body: (body.due_ns - first) / 1e9 / speed
 
 

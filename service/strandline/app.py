@@ -2,7 +2,8 @@
 
 Nothing is decided here about events. Start: read every journal, connect the sinks, then listen. Stop (SIGTERM, SIGINT):
 stop accepting; answer those who wait on a sync; deliver within `drain_at_most`; save and close. A second signal stops
-at once: the journal has everything that was answered.
+at once: the journal has everything that was answered. SIGHUP reads the whole configuration again, and swaps it or keeps
+the old one and says why.
 """
 
 from __future__ import annotations
@@ -21,7 +22,7 @@ from prometheus_client.aiohttp import make_aiohttp_handler
 
 from . import observe, openapi
 from .clock import SystemClock
-from .config import Config
+from .config import Config, load
 from .errors import StrandlineError
 from .ingest import endpoint
 from .ingest.endpoint import BODIES, CONFIG, FEEDS
@@ -117,6 +118,23 @@ class Service:
             await self._runner.cleanup()
         self.disk.close()
 
+    def reload(self, path: Path | None, environ: Mapping[str, str]) -> bool:
+        """Read the configuration again; whether it was taken over. All or nothing: one fixed key keeps all as it was."""
+        try:
+            if path is None:
+                raise StrandlineError("the service was started without a file")
+            config = load(path, environ)
+            if fixed := fixed_changes(self.config, config):
+                raise StrandlineError(f"{', '.join(fixed)} can only change with a restart")
+        except (StrandlineError, OSError) as error:
+            log.error("the configuration stays as it was: %s", error)
+            return False
+        for feed in config.feeds:
+            self.feeds[feed.name].reconfigure(feed)
+        self.config = config
+        log.info("the configuration was read again and is in force")
+        return True
+
     def _failed(self, feed: str, error: Exception) -> None:
         log.critical("feed %s: %s; the service stops and recovers at its next start", feed, error)
         self.failure = f"feed {feed}: {error}"
@@ -129,8 +147,19 @@ class Service:
                 runtime.tick()
 
 
-async def serve(config: Config, ready_file: Path | None = None) -> int:
-    """Run until a signal or a failure; the exit code."""
+def fixed_changes(old: Config, new: Config) -> list[str]:
+    """Keys that differ and that a running service cannot change."""
+    found = [key for key in ("listen", "data_dir", "limits") if getattr(old, key) != getattr(new, key)]
+    if [feed.name for feed in old.feeds] != [feed.name for feed in new.feeds]:
+        return [*found, "the list of feeds"]
+    for before, after in zip(old.feeds, new.feeds, strict=True):
+        keys = ("time", "source", "id", "journal", "sinks")
+        found += [f"{key} of feed {after.name}" for key in keys if getattr(before, key) != getattr(after, key)]
+    return found
+
+
+async def serve(config: Config, config_path: Path | None = None) -> int:
+    """Run until a signal or a failure; the exit code. Says on stdout where it listens, once it does."""
     service = Service(config)
     loop = asyncio.get_running_loop()
     signals = 0
@@ -146,22 +175,21 @@ async def serve(config: Config, ready_file: Path | None = None) -> int:
 
     for number in (signal.SIGTERM, signal.SIGINT):
         loop.add_signal_handler(number, on_signal)
+    loop.add_signal_handler(signal.SIGHUP, service.reload, config_path, os.environ)
     await service.start()
-    if ready_file:
-        ready_file.write_text(f"{service.port}\n")
+    print(f"listening on http://{config.listen.host}:{service.port}", flush=True)
     await service.stopping.wait()
     await service.stop()
     log.info("stopped")
     return EXIT_FAILED if service.failure else 0
 
 
-def run(config: Config, config_path: Path | None = None, environ: Mapping[str, str] | None = None) -> int:
+def run(config: Config, config_path: Path | None = None) -> int:
     """Run the service in this process until it is told to stop; the exit code. Raises StrandlineError, OSError."""
-    del config_path, environ
     if not config.feeds:
         raise StrandlineError("the configuration names no feed: add a [[feed]] with a name")
     logging.basicConfig(level=logging.INFO, format="%(asctime)s %(levelname)s %(name)s: %(message)s")
     import uvloop  # noqa: PLC0415 - only the running service needs it
 
     with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
-        return runner.run(serve(config))
+        return runner.run(serve(config, config_path))

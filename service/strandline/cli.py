@@ -155,11 +155,11 @@ def _add_lane(commands: Any, lane: str, things: str, thing: str, narrow: str) ->
         place.add_argument("--data-dir", type=Path, metavar="DIR", help="the service's folder, without a configuration")
 
 
-def seconds(text: str) -> float:
+def seconds(text: str) -> int:
     """A number of seconds, for argparse."""
-    given = float(text)
-    if not 1 <= given <= 86_400:
-        raise argparse.ArgumentTypeError(f"{text} is outside of 1 to 86400 seconds")
+    given = int(text)
+    if not 8 <= given <= 3_600:
+        raise argparse.ArgumentTypeError(f"{text} is outside of 8 to 3600 seconds")
     return given
 
 

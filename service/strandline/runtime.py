@@ -19,8 +19,9 @@ from .core.effects import Answer, Append, Deliver, Effect, Outcome, Refuse, Sync
 from .core.feed import Feed
 from .core.records import arrival_body_bytes
 from .core.view import View
-from .errors import JournalError, JournalFailed, JournalFull, SinkRetry, StrandlineError
+from .errors import JournalFailed, JournalFull, SinkRetry, StrandlineError
 from .hops import Bodies, Hop
+from .housekeeping import Housekeeper
 from .ingest.decode import Decoder
 from .journal.commit import GroupCommit
 from .journal.journal import Journal
@@ -36,6 +37,11 @@ log = logging.getLogger(__name__)
 LANE_STORE = "lanes"
 SMALL_RECORD_BYTES = 4096  # more than any record that is not an arrival's
 OPEN_WITHIN_S = 5.0  # a store that does not answer by then is connected to later, by its delivery
+
+
+def decoder_of(config: FeedConfig) -> Decoder:
+    """The decoder of a feed's bodies."""
+    return Decoder(config.name, config.time.at, config.time.unit, config.source, config.id, limits=config.body_limits())
 
 
 class _Waiter(NamedTuple):
@@ -63,9 +69,7 @@ class FeedRuntime:
         self.recent = Recent()
         self.lines = JournalLines(self.journal, self.feed)
         self.commit = GroupCommit(self.journal, self._durable, self._failed)
-        self.decoder = Decoder(
-            config.name, config.time.at, config.time.unit, config.source, config.id, limits=config.body_limits()
-        )
+        self.decoder = decoder_of(config)
         self.lane_store = LaneStore(folder / "lanes.db")
         self.deliveries: dict[str, Delivery] = {}
         self.accepting = self._started = False
@@ -80,36 +84,14 @@ class FeedRuntime:
         self._taken_ns: int | None = None
         self._waiters: dict[int, _Waiter] = {}
         self._tokens = 0
-        self._saved_lsn = 0
-        self._saved_bytes = 0
+        self._house = Housekeeper(self.journal, self.feed, self.commit, self._settle)
         self._housekeeping: asyncio.Task[None] | None = None
 
     # ---- start and stop -------------------------------------------------------------------------------------------
 
-    def recover(self) -> int:
-        """Fold what the journal holds, from its newest usable snapshot on; how many records were folded. Blocking."""
-        for lsn, body in self.journal.snapshots():
-            try:
-                self.feed.restore(body, lsn)
-            except (ValueError, LookupError, TypeError) as error:
-                log.warning("%s: the snapshot at %d cannot be used (%s)", self.config.name, lsn, error)
-                continue
-            self._saved_lsn = lsn
-            break
-        if self.feed.next_lsn < self.journal.first_lsn:
-            raise JournalError(
-                f"feeds/{self.config.name}: no usable snapshot, and the journal begins only at "
-                f"{self.journal.first_lsn}; restore the folder from a copy"
-            )
-        folded = 0
-        for frame in self.journal.frames(self.feed.next_lsn):
-            self.feed.fold(frame.kind, frame.version, frame.body, frame.lsn)
-            folded += 1
-        return folded
-
     async def open(self) -> None:
         """Recover, connect the sinks and begin to work."""
-        folded = await asyncio.to_thread(self.recover)
+        folded = await asyncio.to_thread(self._house.recover)
         self.lines.watch(self.feed)
         sinks: dict[str, Sink] = {LANE_STORE: self.lane_store}
         for sink in self.config.sinks:
@@ -179,7 +161,7 @@ class FeedRuntime:
             await self._housekeeping
         if self.failure is None:
             try:
-                await self._save()
+                await self._house.save()
             except JournalFull as error:
                 log.warning("%s: no snapshot was written at the stop: %s", self.config.name, error)
         await self.commit.close()
@@ -193,7 +175,7 @@ class FeedRuntime:
     async def arrive(self, arrival: Arrival) -> Outcome:
         """Hand one request to the core and wait until it is durable. Raises Refused."""
         self._check_open()
-        self._check_lanes(arrival)
+        self._check_lanes()
         names = sum(len(name.encode()) + 8 for name in arrival.new_sources)
         self._reserve([arrival_body_bytes(arrival), SMALL_RECORD_BYTES, SMALL_RECORD_BYTES, names])
         now_ns = self.clock.now_ns()
@@ -207,6 +189,14 @@ class FeedRuntime:
         self._reserve([SMALL_RECORD_BYTES] * 3, of_headroom=True)
         now_ns = self.clock.now_ns()
         await self._ask(lambda token: act(now_ns, token), now_ns, 0)
+
+    def reconfigure(self, config: FeedConfig) -> None:
+        """Go on with other settings and limits; what cannot change while it runs must be the same."""
+        self.config = config
+        self.decoder = decoder_of(config)
+        served = {name: delivery.lanes for name, delivery in self.deliveries.items()}
+        if self._has_headroom():
+            self.carry_out(self.feed.start(self.clock.now_ns(), served, settings=config.settings()))
 
     def tick(self) -> None:
         """Time has gone on."""
@@ -236,12 +226,15 @@ class FeedRuntime:
         if not self.accepting:
             raise Refused("stopping", "the service is stopping or still starting; try again", 5)
 
-    def _check_lanes(self, arrival: Arrival) -> None:
-        size, limit = self.lane_store.size, self.config.lanes_at_most_bytes
-        if size.file_bytes > limit:
+    def _lanes_full(self) -> bool:
+        return self.lane_store.size.file_bytes > self.config.lanes_at_most_bytes
+
+    def _check_lanes(self) -> None:
+        if self._lanes_full():
             detail = (
-                f"the late lane and the quarantine of {self.config.name} take {size.file_bytes:,} bytes and "
-                f"lanes_at_most is {limit:,}: export and remove what is settled, or raise the limit"
+                f"the late lane and the quarantine of {self.config.name} take {self.lane_store.size.file_bytes:,} "
+                f"bytes and lanes_at_most is {self.config.lanes_at_most_bytes:,}: export what is settled and remove it "
+                "with `strandline late forget` or `strandline quarantine forget`, or raise the limit"
             )
             self.feed.note_refusal("lanes_full")
             raise Refused("lanes_full", detail, 60)
@@ -319,43 +312,30 @@ class FeedRuntime:
             if not waiter.future.done():
                 waiter.future.set_exception(Refused(reason, detail, 10))
 
-    # ---- housekeeping: snapshots and retention --------------------------------------------------------------------
+    # ---- housekeeping ---------------------------------------------------------------------------------------------
 
     def _keep_house(self) -> None:
         if self._housekeeping and self._housekeeping.done():
             self._housekeeping.result()
             self._housekeeping = None
-        grown = self.feed.next_lsn - self._saved_lsn
-        # A snapshot is written when the journal has grown by a segment and by four times the snapshot's own size, so
-        # that snapshots stay below a quarter of what is written.
-        due = grown >= max(self.config.journal.segment_bytes, 4 * self._saved_bytes)
-        if self._housekeeping is None and (due or self.journal.lacks_spare):
-            self._housekeeping = asyncio.create_task(self._house(due))
+        if self._housekeeping is None and (self._house.due(self._segment_bytes) or self._lanes_full()):
+            self._housekeeping = asyncio.create_task(self._keep_house_now())
 
-    async def _house(self, due: bool) -> None:
+    async def _keep_house_now(self) -> None:
         try:
-            if due:
-                await self._save()
-            await self.commit.run(self.journal.replenish)
-        except JournalFull as error:
-            log.warning("%s: %s", self.config.name, error)
+            await self._house.run(self._segment_bytes)
+            self.recent.forget_before(self.journal.first_lsn)
+            if self._lanes_full():
+                await self.lane_store.measure()  # somebody may have removed what is settled
         except JournalFailed as error:
             if self.failure is None:
                 self._failed(error)
+        except StrandlineError as error:
+            log.warning("%s: %s", self.config.name, error)
 
-    async def _save(self) -> None:
-        """Write a snapshot of the core and delete the segments that nothing needs any more."""
-        lsn, parts = self.feed.next_lsn, self.feed.save()
-        if lsn == self._saved_lsn:
-            return
-        await self._settle()
-        await asyncio.to_thread(self.journal.write_snapshot, lsn, parts)
-        older, self._saved_lsn = self._saved_lsn, lsn
-        self._saved_bytes = sum(len(part) for part in parts)
-        # The older of the two kept snapshots must stay usable: the newer one may turn out damaged.
-        keep = min(older, self.feed.needed_place)
-        await self.commit.run(lambda: self.journal.drop_before(min(keep, self.journal.durable_lsn)))
-        self.recent.forget_before(self.journal.first_lsn)
+    @property
+    def _segment_bytes(self) -> int:
+        return self.config.journal.segment_bytes
 
     # ---- observers ------------------------------------------------------------------------------------------------
 

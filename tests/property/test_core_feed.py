@@ -9,8 +9,7 @@ from __future__ import annotations
 import dataclasses
 from typing import Any
 
-import msgspec
-from helpers_feed import FOR_EVER_NS, Shell, batches_of, marks, patient, same_batch, saved_bytes
+from helpers_feed import FOR_EVER_NS, Shell, batches_of, marks, same_batch, saved_bytes
 from helpers_model import Model
 from hypothesis import event, given, settings
 from hypothesis import strategies as st
@@ -128,14 +127,14 @@ def test_the_feed_follows_the_rule_of_the_watermark(
     shell, model = Shell(chosen, sinks={"store": ["ordered"]}), model_of(chosen)
     numbers: dict[bytes, int] = {}
     now_ns = sent = 0
-    for step, passed in history:
+    for drawn, passed in history:
         now_ns += passed
-        match step:
-            case ("events", rows, _):
-                step = ("events", rows, [])
-                numbers |= {f"{shell.tokens + 1}.{index}".encode(): sent + index for index in range(len(rows))}
-            case ("taken", _, _):
-                step = ("taken", "store", 0)
+        step = drawn
+        if drawn[0] == "events":
+            step = ("events", drawn[1], [])
+            numbers |= {f"{shell.tokens + 1}.{index}".encode(): sent + index for index in range(len(drawn[1]))}
+        elif drawn[0] == "taken":
+            step = ("taken", "store", 0)
         carry_out(shell, step, now_ns)
         tell(model, step, now_ns, sent)
         sent = len(numbers)
@@ -220,8 +219,15 @@ def test_the_order_inside_a_request_changes_nothing_but_the_order_of_equal_times
     assert sorted(one.out_times("late")) == sorted(other.out_times("late"))
     assert marks(one.records) == marks(other.records)
     assert one.feed.state.ledger == other.feed.state.ledger
-    counted = [{token: msgspec.structs for token in shell.answers} for shell in (one, other)]
-    assert counted[0].keys() == counted[1].keys()
+    assert counts(one) == counts(other)
+
+
+def counts(shell: Shell) -> dict[int, tuple[int, ...] | None]:
+    """The answers without the lines that they name."""
+    return {
+        token: outcome and (outcome.received, outcome.accepted, outcome.late, outcome.duplicate, outcome.quarantined)
+        for token, outcome in shell.answers.items()
+    }
 
 
 # ---- fold again -----------------------------------------------------------------------------------------------------
@@ -235,7 +241,8 @@ changes = st.tuples(
         max_size=2,
     ),
 )
-eventful = st.lists(st.tuples(st.one_of(steps, steps, steps, changes), st.sampled_from((0, 1, 1, 2, 5, -1))), max_size=25)
+passing = st.sampled_from((0, 1, 1, 2, 5, -1))
+eventful = st.lists(st.tuples(st.one_of(steps, steps, steps, changes), passing), max_size=25)
 
 
 @settings(max_examples=250)
@@ -302,9 +309,7 @@ def test_a_restart_goes_on_with_the_same_numbers_and_loses_nothing(
 
 @settings(max_examples=150)
 @given(small_settings(hold_at_most_ns=5, undelivered_events_at_most=1_000_000), histories)
-def test_no_event_is_held_longer_than_the_limit(
-    chosen: Settings, history: list[tuple[tuple[Any, ...], int]]
-) -> None:
+def test_no_event_is_held_longer_than_the_limit(chosen: Settings, history: list[tuple[tuple[Any, ...], int]]) -> None:
     shell = Shell(chosen, sinks=SINKS)
     now_ns = 0
     for step, passed in history:

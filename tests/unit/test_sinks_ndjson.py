@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import errno
 import json
 import re
 import resource
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
+from typing import Any
 from urllib.parse import unquote
 
 import pytest
@@ -18,7 +20,8 @@ from sink_conformance import HOSTILE, SinkConformance
 from strandline.core.columns import Lane
 from strandline.errors import SinkRetry, StrandlineError
 from strandline.ports import Sink
-from strandline.sinks import make_sink
+from strandline.sinks import files as file_calls
+from strandline.sinks import make_sink, ndjson
 from strandline.sinks.ndjson import NdjsonSink, feed_part, late_lines
 
 FILE = re.compile(r"(.*)-(ordered|late)-([0-9]{20})-([0-9]{20})\.ndjson", re.DOTALL)
@@ -204,6 +207,68 @@ async def test_a_rename_that_fails_leaves_nothing(tmp_path: Path) -> None:
     assert await sink.flush(lines) == {"ordered": 2}
     await sink.close()
     assert lines_of(tmp_path, "river-gauges", "ordered") == [row[0] for row in lines.expected(batches)]
+
+
+class Watched:
+    """The calls that make files durable, each carried out and noted down; `fails` names one that fails instead."""
+
+    def __init__(self, patch: pytest.MonkeyPatch) -> None:
+        self.calls: list[str] = []
+        self.fails = ""
+        for owner, name in ((ndjson, "sync_data"), (Path, "rename"), (ndjson, "sync_directory")):
+            patch.setattr(owner, name, self._watching(name, getattr(owner, name)))
+
+    def _watching(self, name: str, plain: Callable[..., Any]) -> Callable[..., Any]:
+        def call(*arguments: Any) -> Any:
+            self.calls.append(name)
+            if name == self.fails:
+                raise OSError(errno.EIO, "Input/output error")
+            return plain(*arguments)
+
+        return call
+
+
+async def test_a_file_is_synced_then_renamed_then_its_folder_is_synced(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    sink, _, lines = await opened(tmp_path)
+    watched = Watched(monkeypatch)
+    await sink.take(lines.batches("ordered", [1]), lines)
+    assert watched.calls == []
+    await sink.flush(lines)
+    assert watched.calls == ["sync_data", "rename", "sync_directory"]
+    await sink.close()
+
+
+@pytest.mark.parametrize("step", ["sync_data", "rename", "sync_directory"])
+async def test_what_could_not_be_made_durable_is_written_anew(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, step: str
+) -> None:
+    """After a sync that failed the same bytes must not be synced again: the system may have dropped them already."""
+    sink, _, lines = await opened(tmp_path)
+    batches = lines.batches("ordered", [1, 2])
+    watched = Watched(monkeypatch)
+    watched.fails = step
+    await sink.take(batches, lines)
+    with pytest.raises(SinkRetry, match="see whether its disk is failing"):
+        await sink.flush(lines)
+    assert names(tmp_path) == []
+    watched.fails = ""
+    assert await sink.flush(lines) == {}
+    await sink.take(batches, lines)
+    assert await sink.flush(lines) == {"ordered": 2}
+    await sink.close()
+    assert lines_of(tmp_path, "river-gauges", "ordered") == [row[0] for row in lines.expected(batches)]
+
+
+def test_new_folders_are_kept_by_the_folders_above_them(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    synced: list[Path] = []
+    plain = file_calls.sync_directory
+    monkeypatch.setattr(file_calls, "sync_directory", lambda folder: (synced.append(folder), plain(folder)))
+    file_calls.make_directory(tmp_path / "a" / "b")
+    assert sorted(synced) == [tmp_path, tmp_path / "a"]
+    file_calls.make_directory(tmp_path / "a" / "b")
+    assert len(synced) == 2
 
 
 async def test_one_lanes_trouble_leaves_the_other_alone(tmp_path: Path) -> None:

@@ -251,6 +251,8 @@ def decode_arrival(body: Buffer, lsn: int) -> ArrivalBody:
     rows = _unpack_faults(memoryview(body)[len(body) - table_bytes :]) if faults else []
     if len(rows) != faults:
         raise ValueError(f"an arrival record names {faults} faults but holds {len(rows)}")
+    if len(body) != offset + payload_bytes + sum(row.length for row in rows) + table_bytes:
+        raise ValueError(f"an arrival record of {len(body)} bytes does not hold what it says")
     place = lsn + FRAME_HEADER_BYTES + offset
     return ArrivalBody(
         arrived_ns, times, lengths, sources, line_numbers, identities, rows, place, place + payload_bytes  # type: ignore[arg-type]

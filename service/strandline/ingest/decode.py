@@ -199,14 +199,18 @@ class _Judge:
         self._is_utf8 = is_utf8(lines.payload)
         suspects = deep_suspects(lines.payload, lines.starts, limits.nesting_at_most)
         large = np.flatnonzero(lines.ends - lines.starts > limits.event_bytes_at_most)
-        self._doubtful = frozenset(suspects.tolist()) | frozenset(large.tolist())
+        self._deep_suspects, self._large = frozenset(suspects.tolist()), frozenset(large.tolist())
 
     def record(self, index: int, line: bytes) -> Any:
         """The line as a record of the feed's fields. Raises LineFault."""
-        if index in self._doubtful:
-            self._check_limits(line)
-        if not self._is_utf8:
-            self._check_utf8(line)
+        if index in self._large:
+            detail = f"the line has {len(line)} bytes, {self._limits.event_bytes_at_most} are allowed"
+            raise LineFault("too_large", detail)
+        fault = None if self._is_utf8 else utf8_fault(line)
+        if fault is not None:
+            raise LineFault("malformed", f"not UTF-8: {fault}")
+        if index in self._deep_suspects and deepest(line) > self._limits.nesting_at_most:
+            raise self._too_deep()
         if self._fields.decoder is not None:
             try:
                 return self._fields.decoder.decode(line)
@@ -214,9 +218,9 @@ class _Judge:
                 pass
         # The general way knows the last value of a repeated member, and why a line is no event.
         values = self._read(line)
-        fault = self._law_broken(values)
-        if fault is not None:
-            raise fault
+        broken = self._law_broken(values)
+        if broken is not None:
+            raise broken
         return self._fields.record(values)
 
     def fault_of(self, line: bytes) -> LineFault:
@@ -224,18 +228,6 @@ class _Judge:
         fault = self._law_broken(self._read(line))
         assert fault is not None, "columns and scalar law differ"
         return fault
-
-    def _check_limits(self, line: bytes) -> None:
-        if len(line) > self._limits.event_bytes_at_most:
-            detail = f"the line has {len(line)} bytes, {self._limits.event_bytes_at_most} are allowed"
-            raise LineFault("too_large", detail)
-        if deepest(line) > self._limits.nesting_at_most:
-            raise self._too_deep()
-
-    def _check_utf8(self, line: bytes) -> None:
-        fault = None if line.isascii() else utf8_fault(line)
-        if fault is not None:
-            raise LineFault("malformed", f"not UTF-8: {fault}")
 
     def _too_deep(self) -> LineFault:
         return LineFault("too_deep", f"nested deeper than {self._limits.nesting_at_most} levels")
@@ -266,10 +258,15 @@ class _Judge:
         if b"\\u" in line:
             # msgspec calls half a surrogate pair malformed JSON; the grammar allows it, so say where it stands.
             try:
-                document = json.loads(line)
+                document = json.loads(line, parse_constant=_refuse_constant)
             except (ValueError, RecursionError):
                 document = None
             if isinstance(document, dict):
                 fault = self._law_broken(self._fields.pick(document))
                 return fault or LineFault("malformed", "a string holds half a surrogate pair")
         return LineFault("malformed", f"not one JSON object: {message.removeprefix('JSON is malformed: ')}")
+
+
+def _refuse_constant(name: str) -> None:
+    """NaN and the infinities, which the standard library lets pass."""
+    raise ValueError(name)

@@ -95,12 +95,12 @@ def _too_many(what: str, count: int, limits: BodyLimits) -> BodyError:
 
 def is_utf8(body: bytes) -> bool:
     """Whether the body is UTF-8; msgspec does not look inside the members that it skips."""
-    return body.isascii() or utf8_fault(body) is None
+    return utf8_fault(body) is None
 
 
 def utf8_fault(body: bytes) -> str | None:
     """What is wrong with the text as UTF-8, and at which byte. Long texts go in steps, so that memory is bounded."""
-    place = 0
+    place = len(body) if body.isascii() else 0
     while place < len(body):
         end = min(len(body), place + _UTF8_STEP)
         while end < len(body) and end > place and body[end] & 0xC0 == 0x80 and end > place + _UTF8_STEP - 4:
@@ -200,7 +200,7 @@ def _split_json(body: bytes, limits: BodyLimits) -> Lines:
     text = body.strip(b" \t\r\n")
     if not text:
         return _split_lines(b"", limits)
-    fault = None if body.isascii() else utf8_fault(body)
+    fault = utf8_fault(body)
     if fault is not None:
         raise _not_json(f"it is not UTF-8: {fault}")
     if text[:1] == b"[":

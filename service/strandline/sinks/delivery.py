@@ -110,6 +110,11 @@ class Delivery:
         return True
 
     @property
+    def lanes(self) -> tuple[Lane, ...]:
+        """The lanes that the sink takes."""
+        return self._waiting.lanes
+
+    @property
     def flush_after_s(self) -> float:
         """How long the sink may hold what is not durable before it is asked to flush."""
         return self._sink.flush_after_s
@@ -310,6 +315,8 @@ class Delivery:
         unexpected = None if isinstance(error, SinkRetry) else error
         text = "sink %s: %s; batches wait, next try in %.1f s"
         logger.warning(text, self.name, self._last_error, delay_s, exc_info=unexpected)
+        if self._urged:
+            return
         self._backing_off = True
         try:
             await self._rest(delay_s)
