@@ -1,14 +1,22 @@
-"""A sink for tests of delivery: it does what its script says, call by call, and keeps what it took like a real one."""
+"""What tests of delivery share: a sink that does what its script says, and one delivery with everything around it.
+
+The sink keeps what it took like a real one; time and chance belong to the test.
+"""
 
 from __future__ import annotations
 
 import asyncio
+import random
 from collections import deque
-from collections.abc import Callable, Sequence
+from collections.abc import AsyncIterator, Callable, Sequence
+from contextlib import asynccontextmanager
+from typing import Any
 
+from helpers_sinks import HeldLines, VirtualTime, settle
 from strandline.core.columns import Batch, Lane
 from strandline.errors import SinkRefused, SinkRetry
 from strandline.ports import Lines
+from strandline.sinks.delivery import Delivery
 
 Step = str | Exception | asyncio.Event
 
@@ -82,3 +90,73 @@ class ScriptedSink:
         if step == "kept":
             raise SinkRetry("the answer was lost on its way")
         return self._reached()
+
+
+SEED = 20_260_501
+
+
+class Desk:
+    """One delivery with everything around it."""
+
+    def __init__(self, sink: ScriptedSink, **options: Any) -> None:
+        self.sink = sink
+        self.time = VirtualTime()
+        self.lines = HeldLines()
+        self.taken: list[tuple[Lane, int]] = []
+        self.refused: list[tuple[list[int], str]] = []
+        self.refusing: list[Exception] = []
+        self.delivery = Delivery(
+            "river-store",
+            sink,
+            self.lines,
+            clock=self.time,
+            random_source=random.Random(SEED),
+            on_taken=lambda name, lane, number: self.taken.append((lane, number)),
+            on_refused=self._refused,
+            sleep=self.time.sleep,
+            **options,
+        )
+        sink.watch = self.delivery.check
+
+    async def _refused(self, name: str, batches: Sequence[Batch], detail: str) -> None:
+        if self.refusing:
+            raise self.refusing.pop(0)
+        self.refused.append(([batch.number for batch in batches], detail))
+
+    def offer(self, lane: Lane, *numbers: int, rows: int = 2) -> None:
+        for number in numbers:
+            self.delivery.offer(self.lines.batch(lane, number, rows))
+            self.delivery.check()
+
+    async def settled(self) -> None:
+        await settle()
+        self.delivery.check()
+
+    @property
+    def takes(self) -> list[tuple[Lane | None, list[int]]]:
+        return [(lane, numbers) for what, lane, numbers in self.sink.calls if what == "take"]
+
+
+@asynccontextmanager
+async def desk(sink: ScriptedSink | None = None, *, started: bool = True, **options: Any) -> AsyncIterator[Desk]:
+    made = Desk(sink or ScriptedSink(), **options)
+    if started:
+        made.delivery.start()
+    await made.settled()
+    try:
+        yield made
+        made.delivery.check()
+    finally:
+        await made.delivery.close()
+    assert made.sink.closed
+
+
+async def with_time(at: Desk, call: Any, seconds: float) -> Any:
+    """The call's result, while time passes."""
+    task = asyncio.ensure_future(call)
+    await at.time.advance(seconds)
+    return await task
+
+
+def batches_left(left: dict[Lane, Any]) -> dict[Lane, int]:
+    return {lane: state.batches for lane, state in left.items()}

@@ -4,7 +4,8 @@
 
 * A write reaches the live content at once (mappings show it) and the medium at a sync, or earlier, or never, sector
   by sector in any order: after a power failure each sector holds what was synced last, or any version written since;
-  with `torn_sectors` even the first bytes of a newer version and the rest of an older one.
+  with `torn_sectors` even the first bytes of a newer version and the rest of an older one, with `flipped_bits` one bit
+  turned in what was being written.
 * A name made, moved or removed reaches the medium at a sync of its directory, or earlier, or never. `any_order`
   lets a later change of a directory survive an earlier one (a file system that keeps no order of its own).
 * A failed sync loses the pages: they read well, count as clean, and no later sync writes them (`Faults`).
@@ -57,7 +58,7 @@ class Inode:
         """A failed sync: what was dirty counts as clean, and is not on the medium."""
         self.dirty.clear()
 
-    def after_power_failure(self, choose: Choose, torn_sectors: bool) -> Inode:
+    def after_power_failure(self, choose: Choose, torn_sectors: bool, flipped_bits: bool) -> Inode:
         """The file as the next start finds it."""
         found = bytearray(self.durable)
         for sector, versions in sorted(self.dirty.items()):
@@ -68,8 +69,19 @@ class Inode:
                 older = candidates[choose(len(candidates))]
                 cut = choose(len(chosen) + 1)
                 chosen = chosen[:cut] + older[cut:]
+            if flipped_bits and choose(2):
+                chosen = _flipped(chosen, candidates, choose)
             found[begin : begin + SECTOR_BYTES] = chosen
         return Inode(bytearray(found), found)
+
+
+def _flipped(chosen: bytes, candidates: list[bytes], choose: Choose) -> bytes:
+    """One bit turned, in a byte that was being changed; bytes that were written again as they stood keep."""
+    changing = [at for at in range(len(chosen)) if len({candidate[at] for candidate in candidates}) > 1]
+    if not changing:
+        return chosen
+    at = changing[choose(len(changing))]
+    return chosen[:at] + bytes([chosen[at] ^ 1 << choose(8)]) + chosen[at + 1 :]
 
 
 @dataclass(frozen=True)
@@ -237,7 +249,9 @@ class SimDisk:
         """Bytes of the files that a name leads to."""
         return sum(len(inode.live) for directory in self._directories.values() for inode in directory.live.values())
 
-    def crash(self, choose: Choose, *, torn_sectors: bool = False, any_order: bool = False) -> SimDisk:
+    def crash(
+        self, choose: Choose, *, torn_sectors: bool = False, any_order: bool = False, flipped_bits: bool = False
+    ) -> SimDisk:
         """The disk as it is found after a power failure now. This one stays as it is, so that many can be tried."""
         after = SimDisk(self.capacity_bytes)
         inodes: dict[Inode, Inode] = {}
@@ -245,7 +259,7 @@ class SimDisk:
             names = directory.after_power_failure(choose, any_order)
             for inode in names.values():
                 if inode not in inodes:
-                    inodes[inode] = inode.after_power_failure(choose, torn_sectors)
+                    inodes[inode] = inode.after_power_failure(choose, torn_sectors, flipped_bits)
             after._directories[path] = Directory({name: inodes[inode] for name, inode in names.items()})
         return after
 

@@ -21,7 +21,7 @@ from strandline.errors import StrandlineError
 from strandline.ports import Sink
 
 HOSTILE = [
-    'quote\' double" back\\slash',
+    "quote' double\" back\\slash",
     "line\nfeed\ttab\rreturn",
     "nul\0inside",
     "../../up",

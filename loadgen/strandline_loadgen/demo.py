@@ -1,7 +1,7 @@
 """The demonstration: a storm on an invented river, played over real HTTP at a real service, and judged at the end.
 
 Here live the order of events and what a person sees. The feed is made in `demo_story`, the service runs in a process of
-its own (`demo_service`), the verdict is the checker's, read from the store itself. Nothing outside a temporary folder
+its own (`child`), the verdict is the checker's, read from the store itself. Nothing outside a temporary folder
 is touched.
 """
 
@@ -23,14 +23,15 @@ from rich.text import Text
 
 from .bodies import Body, bodies, cut_by_window
 from .checker import Verdict, judge
-from .demo_service import FEED, ChildService, ServiceTrouble, store_in
-from .demo_story import GATEWAYS, Moment, Story, story
+from .child import ChildServer, ServiceTrouble, free_port, serve
+from .demo_story import GATEWAYS, Moment, Pace, Story, story
 from .driver import Delivery, Target, as_arrived, send
 from .evidence import Digests
 from .exits import FINE, INTERRUPTED, NO, NOT_REACHED, WRONG_USE
 from .stores import Reading, digests_of, read_sqlite, with_digests
 from .trace import Int64s, Trace
 
+FEED = "river-gauges"
 WINDOW_NS = 100_000_000  # a request for what arrives in a tenth of a second
 LOOKS_PER_S = 4
 PLAIN_LINES = 12  # status lines over the whole time where there is no terminal
@@ -55,6 +56,33 @@ def run(seconds: float = 60, *, seed: int = 1, console: Console | None = None) -
     return FINE if verdict.ok else NO
 
 
+def configuration(port: int, folder: Path, pace: Pace) -> str:
+    """The service's configuration file."""
+    return f"""listen = "127.0.0.1:{port}"
+data_dir = "{folder.as_posix()}/data"
+[[feed]]
+name = "{FEED}"
+time = {{ at = "/observed_at", unit = "rfc3339" }}
+source = "/station"
+slack = "{_ms(pace.slack_s)}"
+idle_after = "{_ms(pace.idle_after_s)}"
+hold_at_most = "{_ms(pace.hold_at_most_s)}"
+ahead_limit = "{_ms(pace.ahead_limit_s)}"
+[[feed.sink]]
+kind = "sqlite"
+path = "{store_in(folder).as_posix()}"
+"""
+
+
+def store_in(folder: Path) -> Path:
+    """Where the SQLite sink of a service in this folder writes."""
+    return folder / "river.db"
+
+
+def _ms(seconds: float) -> str:
+    return f"{round(seconds * 1000)}ms"
+
+
 async def _play(told: Story, seconds: float, folder: Path, screen: Console) -> Verdict:
     """Start the service, send the feed, tell what happens, drain, stop, judge."""
     pace = told.pace
@@ -64,7 +92,9 @@ async def _play(told: Story, seconds: float, folder: Path, screen: Console) -> V
         f"A service of its own puts their feed in order: it waits {pace.slack_s:.3g} s for stragglers (slack), and "
         f"holds no reading longer than {pace.hold_at_most_s:.3g} s (hold_at_most).",
     )
-    async with ChildService(folder, pace) as service:
+    port, file = free_port(), folder / "strandline.toml"
+    file.write_text(configuration(port, folder, pace))
+    async with ChildServer(serve(file), port, folder / "service.log") as service:
         dashboard = f", its dashboard is at {service.url}/" if await service.has_dashboard() else f" at {service.url}"
         say(screen, f"The service listens{dashboard}. This takes {seconds:g} s.\n")
         begin_ns = time.time_ns()
@@ -81,7 +111,7 @@ async def _play(told: Story, seconds: float, folder: Path, screen: Console) -> V
             with contextlib.suppress(asyncio.CancelledError):
                 await telling
         say(screen, "The feed has ended. What is still held is let go, in order (drain), and the service is stopped.")
-        await service.drain()
+        await service.drain(FEED)
         code = await service.stop()
         if code != 0:
             raise ServiceTrouble(f"the service ended with {code}:\n{service.last_words()}")
@@ -100,7 +130,7 @@ def _digested(made: Iterator[Body], digests: list[Digests]) -> Iterator[Body]:
         yield body
 
 
-async def _tell(service: ChildService, moments: tuple[Moment, ...], seconds: float, screen: Console) -> None:
+async def _tell(service: ChildServer, moments: tuple[Moment, ...], seconds: float, screen: Console) -> None:
     """Say each moment when it comes, and between them how the feed stands. Runs until it is cancelled."""
     begin = time.monotonic()
     left, plain_every = list(moments), max(1, round(seconds * LOOKS_PER_S / PLAIN_LINES))
@@ -109,7 +139,7 @@ async def _tell(service: ChildService, moments: tuple[Moment, ...], seconds: flo
             now_s = time.monotonic() - begin
             while left and left[0].at_s <= now_s:
                 say(screen, f"{_clock(now_s)}  {left.pop(0).text}")
-            status = f"{_clock(now_s)}  {standing(await service.look())}"
+            status = f"{_clock(now_s)}  {standing(await service.look(FEED))}"
             if screen.is_terminal:
                 live.update(Text(status, style="dim", overflow="ellipsis", no_wrap=True), refresh=True)
             elif look % plain_every == 0:

@@ -54,6 +54,13 @@ def _ns(seconds: Floats) -> Int64s:
     return np.rint(seconds * 1e9).astype(np.int64)
 
 
+def _some(n: int, share: float, random: Random) -> NDArray[np.bool_]:
+    """Which of n are hit: `share` of them, at least one."""
+    hit = np.zeros(n, dtype=bool)
+    hit[random.permutation(n)[: max(1, round(share * n))]] = True
+    return hit
+
+
 def observe(
     events: int,
     random: Random,
@@ -157,8 +164,7 @@ def _outage_and_catch_up(
     up `catch_up` times as fast as they observed, and are in time again once the backlog is gone.
     """
     _require(catch_up > 1, f"catch_up is {catch_up}; below 1 the backlog would never end")
-    hit = np.zeros(len(seen.source_names), dtype=bool)
-    hit[random.permutation(len(hit))[: max(1, round(sources_hit * len(hit)))]] = True
+    hit = _some(len(seen.source_names), sources_hit, random)
     begin, end = seen.moment_ns(from_share), seen.moment_ns(from_share + outage_share)
     caught_up = end + ((seen.times - begin) / catch_up).astype(np.int64)
     waits = hit[seen.sources] & (seen.times >= begin) & (seen.times < caught_up)
@@ -175,8 +181,7 @@ def _clock_step(
     seen: Observations, random: Random, *, step_s: float = -30.0, at_share: float = 0.5, sources_hit: float = 0.25
 ) -> Trace:
     """Some sources' clocks jump by step_s seconds at `at_share` of the span and stay wrong. The links are quick."""
-    hit = np.zeros(len(seen.source_names), dtype=bool)
-    hit[random.permutation(len(hit))[: max(1, round(sources_hit * len(hit)))]] = True
+    hit = _some(len(seen.source_names), sources_hit, random)
     wrong = hit[seen.sources] & (seen.times >= seen.moment_ns(at_share))
     return seen.arriving("clock_step", seen.times.copy(), seen.times + wrong * int(step_s * 1e9))
 
@@ -186,8 +191,7 @@ def _far_future(
 ) -> Trace:
     """Bounded jitter, but `share` of the events (at least one) claim a time ahead_s seconds in the future."""
     n = len(seen.times)
-    wrong = np.zeros(n, dtype=bool)
-    wrong[random.permutation(n)[: max(1, round(share * n))]] = True
+    wrong = _some(n, share, random)
     arrivals = seen.times + _ns(random.uniform(0, jitter_s, n))
     return seen.arriving("far_future", arrivals, seen.times + wrong * int(ahead_s * 1e9))
 

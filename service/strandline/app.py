@@ -22,14 +22,16 @@ from prometheus_client.aiohttp import make_aiohttp_handler
 
 from . import observe, openapi
 from .clock import SystemClock
-from .config import Config, load
+from .config import Address, Config, load
 from .errors import StrandlineError
 from .ingest import endpoint
 from .ingest.endpoint import BODIES, CONFIG, FEEDS
 from .journal.disk import LocalDisk
 from .metrics import make_registry
+from .ports import Clock, Disk
 from .problems import as_problems
-from .runtime import FeedRuntime
+from .runtime import FeedRuntime, MakeSink
+from .sinks import make_sink
 
 log = logging.getLogger("strandline")
 TICK_S = 0.25
@@ -71,22 +73,33 @@ async def _get_openapi(request: web.Request) -> web.Response:
 class Service:
     """The feeds of one process and the listener in front of them."""
 
-    def __init__(self, config: Config) -> None:
+    def __init__(
+        self,
+        config: Config,
+        *,
+        clock: Clock | None = None,
+        disk: Disk | None = None,
+        make: MakeSink = make_sink,
+    ) -> None:
+        """`disk` is for the journals and starts at `data_dir`, `make` makes the configured sinks."""
         self.config = config
-        self.clock = SystemClock()
-        self.disk = LocalDisk(config.data_dir)
+        self.clock = clock or SystemClock()
+        self._folder = LocalDisk(config.data_dir)
+        self._disk, self._make = disk or self._folder, make
         self.feeds: dict[str, FeedRuntime] = {}
         self.stopping = asyncio.Event()
         self.failure: str | None = None
-        self.port = config.listen.port
+        self.address = config.listen
         self._runner: web.AppRunner | None = None
         self._ticker: asyncio.Task[None] | None = None
+        self._stopped = False
 
     async def start(self) -> None:
         """Open every feed, then listen."""
-        self.disk.lock("lock")
+        self._folder.lock("lock")
         for feed in self.config.feeds:
-            runtime = FeedRuntime(feed, self.config.feed_dir(feed), self.disk, self.clock, self._failed)
+            folder = self.config.feed_dir(feed)
+            runtime = FeedRuntime(feed, folder, self._disk, self.clock, self._failed, self._make)
             self.feeds[feed.name] = runtime
             await runtime.open()
         self._ticker = asyncio.create_task(self._tick())
@@ -97,9 +110,8 @@ class Service:
         await self._runner.setup()
         site = web.TCPSite(self._runner, self.config.listen.host, self.config.listen.port)
         await site.start()
-        addresses = self._runner.addresses
-        self.port = int(addresses[0][1]) if addresses else self.config.listen.port
-        log.info("listening on http://%s:%d", self.config.listen.host, self.port)
+        self.address = Address(self.address.host, int(self._runner.addresses[0][1]))
+        log.info("listening on http://%s", self.address)
 
     async def _hush(self, app: web.Application) -> None:
         del app
@@ -107,7 +119,10 @@ class Service:
             runtime.recent.close()
 
     async def stop(self) -> None:
-        """Stop in the written order."""
+        """Stop in the written order. A second call does nothing."""
+        if self._stopped:
+            return
+        self._stopped = True
         limit_s = self.config.drain_at_most_ns / 1e9
         if self._ticker:
             self._ticker.cancel()
@@ -116,10 +131,10 @@ class Service:
         await asyncio.gather(*(runtime.close(limit_s) for runtime in self.feeds.values()))
         if self._runner:
             await self._runner.cleanup()
-        self.disk.close()
+        self._folder.close()
 
     def reload(self, path: Path | None, environ: Mapping[str, str]) -> bool:
-        """Read the configuration again; whether it was taken over. All or nothing: one fixed key keeps all as it was."""
+        """Read the configuration again; whether it was taken over. One fixed key keeps all as it was."""
         try:
             if path is None:
                 raise StrandlineError("the service was started without a file")
@@ -158,9 +173,8 @@ def fixed_changes(old: Config, new: Config) -> list[str]:
     return found
 
 
-async def serve(config: Config, config_path: Path | None = None) -> int:
+async def serve(service: Service, config_path: Path | None = None) -> int:
     """Run until a signal or a failure; the exit code. Says on stdout where it listens, once it does."""
-    service = Service(config)
     loop = asyncio.get_running_loop()
     signals = 0
 
@@ -170,14 +184,14 @@ async def serve(config: Config, config_path: Path | None = None) -> int:
         if signals > 1:
             log.warning("second signal: stopping at once; what was answered is in the journal")
             os._exit(EXIT_AT_ONCE)
-        log.info("stopping: delivering what is released for at most %.0f s", config.drain_at_most_ns / 1e9)
+        log.info("stopping: delivering what is released for at most %.0f s", service.config.drain_at_most_ns / 1e9)
         service.stopping.set()
 
     for number in (signal.SIGTERM, signal.SIGINT):
         loop.add_signal_handler(number, on_signal)
     loop.add_signal_handler(signal.SIGHUP, service.reload, config_path, os.environ)
     await service.start()
-    print(f"listening on http://{config.listen.host}:{service.port}", flush=True)
+    print(f"listening on http://{service.address}", flush=True)
     await service.stopping.wait()
     await service.stop()
     log.info("stopped")
@@ -192,4 +206,4 @@ def run(config: Config, config_path: Path | None = None) -> int:
     import uvloop  # noqa: PLC0415 - only the running service needs it
 
     with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
-        return runner.run(serve(config, config_path))
+        return runner.run(serve(Service(config), config_path))

@@ -36,6 +36,7 @@ from .sinks.lanes import LaneStore
 log = logging.getLogger(__name__)
 LANE_STORE = "lanes"
 SMALL_RECORD_BYTES = 4096  # more than any record that is not an arrival's
+MakeSink = Callable[..., Sink]  # called as `sinks.make_sink`
 OPEN_WITHIN_S = 5.0  # a store that does not answer by then is connected to later, by its delivery
 
 
@@ -56,9 +57,15 @@ class FeedRuntime:
     """The shell of one feed. Lives on one event loop; `open` first, then everything else, `close` last."""
 
     def __init__(
-        self, config: FeedConfig, folder: Path, disk: Disk, clock: Clock, on_failed: Callable[[str, Exception], None]
+        self,
+        config: FeedConfig,
+        folder: Path,
+        disk: Disk,
+        clock: Clock,
+        on_failed: Callable[[str, Exception], None],
+        make: MakeSink = make_sink,
     ) -> None:
-        self.config, self.folder, self.clock = config, folder, clock
+        self.config, self.folder, self.clock, self._make = config, folder, clock, make
         self.journal = Journal.open(
             disk,
             f"feeds/{config.name}",
@@ -95,7 +102,7 @@ class FeedRuntime:
         self.lines.watch(self.feed)
         sinks: dict[str, Sink] = {LANE_STORE: self.lane_store}
         for sink in self.config.sinks:
-            sinks[sink.name] = make_sink(sink.kind, self.config.name, self.clock, **sink.options())
+            sinks[sink.name] = self._make(sink.kind, self.config.name, self.clock, **sink.options())
         remembered = self.feed.state.outbox.positions
         for name, sink_object in sinks.items():
             self.deliveries[name] = self._delivery(name, sink_object, remembered.get(name, {}))

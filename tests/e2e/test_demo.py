@@ -7,8 +7,8 @@ from pathlib import Path
 
 import pytest
 from rich.console import Console
-from strandline_loadgen.demo import run
-from strandline_loadgen.demo_service import ChildService, ServiceTrouble
+from strandline_loadgen.child import ChildServer, ServiceTrouble, free_port, serve
+from strandline_loadgen.demo import configuration, run
 from strandline_loadgen.demo_story import SECONDS_AT_LEAST, Pace
 
 
@@ -34,6 +34,8 @@ def test_a_wrong_number_of_seconds_is_wrong_use(capsys: pytest.CaptureFixture[st
 
 async def test_a_service_that_cannot_start_is_told_with_its_last_words(tmp_path: Path) -> None:
     (tmp_path / "data").write_text("a file where the folder should be")
+    port, file = free_port(), tmp_path / "strandline.toml"
+    file.write_text(configuration(port, tmp_path, Pace.of(10)))
     with pytest.raises(ServiceTrouble, match=r"the service did not start:\n.+"):
-        async with ChildService(tmp_path, Pace.of(10)):
+        async with ChildServer(serve(file), port, tmp_path / "service.log"):
             pass

@@ -20,7 +20,7 @@ from strandline.ingest.nesting import deep_items, deep_suspects, deepest
 from strandline.ingest.timestamps import TimestampError, from_unit, parse_rfc3339
 
 NDJSON = "application/x-ndjson"
-LIMITS = BodyLimits(event_bytes_at_most=300, nesting_at_most=6)
+LIMITS = BodyLimits(event_bytes_at_most=700, nesting_at_most=6)
 TABLE = {"gauge-1": 0, "gauge-2": 1, "ö": 2}
 FEEDS = {
     "flat": Decoder("river", "/ts", "ns", "/station", "/id", LIMITS),
@@ -88,12 +88,21 @@ def members(draw, depth=0):
 
 
 @st.composite
-def good_lines(draw):
-    """Lines that are events of the feed "flat", of "text" and of "nested"."""
+def good_lines(draw, odds=True):
+    """Lines that are events of the feeds "flat", "text" and "nested", but for what is too long or too deep in them."""
     time = draw(st.integers(-(2**63), 2**63 - 1))
     station = draw(st.sampled_from(["gauge-1", "gauge-2", "ö", "neu", 7]))
     event = {"ts": time, "station": station, "id": draw(st.integers(0, 9) | st.text("abc", min_size=1, max_size=3))}
     event |= {"at": "2026-01-31T12:34:56Z", "meta": {"ts": time, "from": {"station": station}}}
+    odd = draw(st.integers(0, 7)) if odds else 7
+    if odd == 0:
+        event["note"] = "x" * draw(st.integers(550, 650))
+    elif odd == 1:
+        event["note"] = json.loads("[" * (depth := draw(st.integers(4, 7))) + "]" * depth)
+    elif odd == 2:
+        event["station"] = draw(st.sampled_from(["", "x" * 256, "x" * 257, "ö" * 129]))
+    elif odd == 3:
+        event["id"] = draw(st.sampled_from(["", 10**255, 10**256]))
     return json.dumps(event, ensure_ascii=draw(st.booleans()), separators=(",", ":"))
 
 
@@ -247,6 +256,7 @@ feeds = st.sampled_from(list(FEEDS))
 @given(bodies(), feeds)
 @example(b'{"ts":1,"station":"a","id":1}{"ts":2,"station":"a","id":1}\n\n', "flat")
 @example(b'{"ts":\n1,"station":"a","id":1}{"ts":2,"station":"a","id":1}\n', "flat")
+@example(b'{"ts":1,"station":"a","id":1,"x":\n{}}{"ts":2,"station":"a","id":1}\n', "flat")
 @example(b'{"ts":"x","ts":1,"station":"a","id":1}\n', "flat")
 @example(b'{"ts":"x","ts":1,"station":"a","v":1e999,"id":1}\n', "flat")
 @example(b'{"meta":{"ts":1,"from":{"station":"a"}},"meta":{"ts":2},"id":1}\n', "nested")
@@ -273,7 +283,7 @@ def test_fast_slow_and_outside_opinion_agree(body, feed):
         assert len(dict(zip(pairs, arrival.identities.tolist(), strict=True))) == len(set(arrival.identities.tolist()))
 
 
-@given(st.lists(good_lines(), min_size=1, max_size=30), st.sampled_from(["flat", "text", "nested"]))
+@given(st.lists(good_lines(odds=False), min_size=1, max_size=30), st.sampled_from(["flat", "text", "nested"]))
 def test_a_clean_body_is_its_own_payload(lines, feed):
     body = "".join(line + "\n" for line in lines).encode()
     arrival = FEEDS[feed].decode(body, NDJSON, TABLE)
@@ -344,7 +354,9 @@ def test_depth_by_brackets(text):
     assert deepest(text.encode()) == depth_of(text)
 
 
-@given(st.lists(st.text('[]{}",\\a', max_size=30), min_size=1), st.integers(1, 8))
+@given(st.lists(st.text('[]{}",\\a', max_size=30) | st.text("[{", max_size=9), min_size=1), st.integers(1, 8))
+@example(["[[["], 2)
+@example(["{", "[[[", "{"], 2)
 def test_no_deep_line_escapes_suspicion(lines, limit):
     payload = "".join(line + "\n" for line in lines).encode()
     lengths = np.array([len(line) + 1 for line in lines])

@@ -8,7 +8,6 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-
 from strandline.journal import gather
 from strandline.journal.gather import Source
 
@@ -115,4 +114,4 @@ def test_any_places_are_equal(data: st.DataObject) -> None:
 def test_the_thresholds_are_met_by_the_tests_above() -> None:
     # 1,500 scattered lines of few lengths must be beyond every break-even, or the windows would go untested.
     assert gather.TWO_WINDOWS_FROM * 2 * 2 < 1500 and gather.SHARED_LENGTH_FROM * 33 < 1500
-    assert gather.ONE_WINDOW_FROM < 150 and gather.LONG_STRETCH_BYTES < 2000
+    assert gather.ONE_WINDOW_FROM < 150 and 300 < gather.LONG_STRETCH_BYTES < 2000

@@ -35,7 +35,10 @@ def test_the_least_is_what_a_plain_list_says(size: int, updates: list[list[tuple
         changed = {place % size: value for place, value in update}  # a place once, or twice with one value
         for place, value in changed.items():
             plain[place] = value
-        least.update(np.array(list(changed), dtype=np.intp), np.array(list(changed.values()), dtype=np.int64))
+        if len(changed) == 1:
+            least.set(*changed.popitem())
+        else:
+            least.update(np.array(list(changed), dtype=np.intp), np.array(list(changed.values()), dtype=np.int64))
         agree(least, plain, bound)
 
 

@@ -57,6 +57,25 @@ def test_batches_that_wait_for_a_sync_leave_once_when_settings_change() -> None:
     assert shell.out("ordered") == [b"1.0", b"1.1"]
 
 
+def test_a_lane_that_is_served_from_now_on_loses_no_batch_that_waits_for_a_sync() -> None:
+    shell = Shell(patient(), sinks={}, synchronous=False)
+    shell.events([10, 20], 1)
+    shell.do(shell.feed.start(2, ORDERED))
+    shell.sync()
+    assert shell.out("ordered") == [b"1.0", b"1.1"]
+
+
+def test_new_settings_deliver_nothing_again_but_what_a_new_sink_needs() -> None:
+    shell = Shell(patient(), sinks={"store": ["ordered", "late"]})
+    shell.events([10, 20], 1)
+    shell.events([30, 5], 2)
+    shell.do(shell.feed.start(3, {"store": ["ordered", "late"]}, settings=patient(slack_ns=6)))
+    assert [batch.number for batch in shell.batches["ordered"]] == [1, 2]
+    shell.do(shell.feed.start(4, {"store": ["ordered", "late"], "copy": ["ordered"]}))
+    assert [batch.number for batch in shell.batches["ordered"]] == [1, 2, 1, 2]
+    assert [batch.number for batch in shell.batches["late"]] == [1]
+
+
 def test_an_empty_request_is_answered_at_once_and_not_journaled() -> None:
     shell = Shell(patient(), synchronous=False)
     before = len(shell.records)

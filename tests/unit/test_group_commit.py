@@ -29,7 +29,7 @@ class Gate(Faults):
     def meet(self, name: str, path: str, partly=lambda: None) -> None:
         if name == "sync" and self.closed:
             self.arrived.release()
-            self.through.acquire()
+            assert self.through.acquire(timeout=60)
         super().meet(name, path, partly)
 
 

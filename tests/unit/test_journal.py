@@ -8,7 +8,6 @@ from pathlib import Path
 import pytest
 from helpers_journal import FEED, SMALL, append, ends, flush, lines_body, opened, records_of, write
 from simdisk import SimDisk
-
 from strandline.core.records import FRAME_HEADER_BYTES, frame_bytes
 from strandline.errors import JournalError, JournalFailed, JournalFull
 from strandline.journal import segments
@@ -174,7 +173,7 @@ def test_a_full_journal_refuses_with_numbers_and_keeps_headroom(disk: LocalDisk)
     journal = opened(disk, journal_bytes_at_most=4 * 4096)
     count = filled(journal)
     assert count == 4 * (4032 // frame_bytes(500)) - 2 and journal.bytes_used == 4 * 4096
-    with pytest.raises(JournalFull, match=r"16,384 bytes are in use.*journal_bytes_at_most is 16,384") as full:
+    with pytest.raises(JournalFull, match=r"520 bytes more would take the segments to 20,480 bytes.*at_most is 16,384") as full:
         journal.reserve([500])
     assert full.value.reason == "journal_full" and journal.next_lsn == count * frame_bytes(500)
     marks = [(4, bytes(40))] * (1024 // frame_bytes(40))
@@ -244,7 +243,7 @@ def test_what_waits_for_the_disk_is_limited(disk: LocalDisk) -> None:
 
 
 def test_limits_that_cannot_work_are_refused(disk: LocalDisk) -> None:
-    for limits in ({"segment_bytes": 512}, {"journal_bytes_at_most": 5000}):
+    for limits in ({"segment_bytes": 192}, {"journal_bytes_at_most": 5000}):
         with pytest.raises(ValueError, match="segment_bytes"):
             Journal.open(disk, FEED, **{**SMALL, **limits})
 
@@ -566,7 +565,9 @@ def test_lines_come_back_from_anywhere(disk: LocalDisk) -> None:
     assert journal.gather(places, lengths) == lines_body(*lines)
     order = sorted(range(400), key=lambda number: number * 7919 % 400)
     assert journal.line_bytes([places[n] for n in order], [lengths[n] for n in order]) == [lines[n] for n in order]
-    assert journal.gather([places[n] for n in order], [lengths[n] for n in order]) == lines_body(*(lines[n] for n in order))
+    assert journal.gather([places[n] for n in order], [lengths[n] for n in order]) == lines_body(
+        *(lines[n] for n in order)
+    )
 
 
 def test_lines_that_are_not_kept_or_not_durable_are_refused(disk: LocalDisk) -> None:

@@ -1,4 +1,4 @@
-"""The keeper of the late lane and quarantine: its rows, numbers that never return, reading while it writes, its size."""
+"""The keeper of the late lane and quarantine: rows, numbers that never return, reading while it writes, size."""
 
 from __future__ import annotations
 
@@ -190,7 +190,7 @@ async def test_what_cannot_be_read_is_named(tmp_path: Path) -> None:
         late_rows(path)
     (tmp_path / "file").write_bytes(b"")
     store = LaneStore(tmp_path / "file" / "lanes.db")
-    with pytest.raises(SinkRetry, match="the folder of .* cannot be made"):
+    with pytest.raises(SinkRetry, match=r"the folder of .* cannot be made"):
         await store.open()
     await store.close()
 

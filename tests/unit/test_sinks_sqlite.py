@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import os
 import sqlite3
 import subprocess
 import sys
@@ -247,8 +246,8 @@ async def test_a_file_that_is_moved_away_is_noticed(tmp_path: Path, caplog: pyte
     path = tmp_path / "river.db"
     lines = HeldLines()
     sink = await filled(path, lines)
-    for name in os.listdir(tmp_path):
-        (tmp_path / name).rename(tmp_path / f"old-{name}")
+    for each in list(tmp_path.iterdir()):
+        each.rename(tmp_path / f"old-{each.name}")
     await sink.take([lines.batch("ordered", 3, 4)], lines)
     await sink.close()
     assert "moved or deleted" in caplog.text

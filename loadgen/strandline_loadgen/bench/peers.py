@@ -14,7 +14,7 @@ import time
 from bisect import bisect_right, insort
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from functools import partial
+from functools import cache, partial
 from typing import Any, Protocol
 
 import numpy as np
@@ -111,8 +111,8 @@ class NumpyResort:
         return released
 
 
-class ListSort:
-    """list.sort over everything held, at each batch."""
+class Listed:
+    """What contestants that keep one list have in common."""
 
     def __init__(self) -> None:
         self.held: list[Pair] = []
@@ -120,6 +120,10 @@ class ListSort:
     def fill(self, course: Course) -> None:
         """One sort (a sorted list is a heap, too)."""
         self.held = course.held()
+
+
+class ListSort(Listed):
+    """list.sort over everything held, at each batch."""
 
     def turn(self, course: Course, batch: int) -> Any:
         """Tuples in, tuples out."""
@@ -128,15 +132,8 @@ class ListSort:
         return _cut(self.held, course.watermarks[batch])
 
 
-class Insort:
+class Insort(Listed):
     """bisect.insort for each event into one sorted list."""
-
-    def __init__(self) -> None:
-        self.held: list[Pair] = []
-
-    def fill(self, course: Course) -> None:
-        """One sort (a sorted list is a heap, too)."""
-        self.held = course.held()
 
     def turn(self, course: Course, batch: int) -> Any:
         """Tuples in, tuples out."""
@@ -146,15 +143,8 @@ class Insort:
         return _cut(held, course.watermarks[batch])
 
 
-class Heap:
+class Heap(Listed):
     """heapq: a push for each event, a pop for each release."""
-
-    def __init__(self) -> None:
-        self.held: list[Pair] = []
-
-    def fill(self, course: Course) -> None:
-        """One sort (a sorted list is a heap, too)."""
-        self.held = course.held()
 
     def turn(self, course: Course, batch: int) -> Any:
         """Tuples in, tuples out."""
@@ -208,6 +198,7 @@ PEERS: dict[str, Callable[[], Contestant]] = {
 }
 
 
+@cache
 def course_of(held: int, scale: Scale) -> Course:
     """Exponential delays with a mean of a fifth of the slack K; then four fifths of what comes in the slack are held.
 

@@ -102,6 +102,16 @@ class Batch:
         return len(self.entries) if self.lane == "quarantine" else len(self.times)
 
 
+def least_of(times: Times) -> int:
+    """Least time of a column with at least one row; for one row without the 2 us of a reduction."""
+    return int(times[0]) if len(times) == 1 else int(times.min())
+
+
+def greatest_of(times: Times) -> int:
+    """Greatest time of a column with at least one row."""
+    return int(times[0]) if len(times) == 1 else int(times.max())
+
+
 def empty_times() -> Times:
     """A time column without rows."""
     return np.empty(0, dtype=np.int64)

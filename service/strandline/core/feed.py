@@ -120,19 +120,23 @@ class Feed:
             if number >= self.state.outbox.next_number[lane]:
                 # The store has seen more than this journal knows: never use those numbers for something else.
                 self._record(effects, NumbersRecord(now, lane, number + 1))
+        before = self.state.outbox.positions if self._started else {}
+        again = {lane for name, lanes in served.items() for lane in lanes if lane not in before.get(name, {})}
         self._record(effects, SettingsRecord(now, chosen, served, not self._started, stand))
         self._started = True
-        self._redeliver()
+        self._redeliver(again)
         return self._done(effects, now, sync=True)
 
-    def _redeliver(self) -> None:
-        """Deliver all that is undelivered; keep what waits here besides: answers, and batches that no sink takes."""
-        serves = self.state.outbox.serves
-        kept = [row for row in self._waiting if not (isinstance(row[1], Deliver) and serves(row[1].batch.lane))]
-        self._waiting = deque(kept)
-        for lane in self.state.outbox.next_number:
-            for batch in self.state.outbox.undelivered(lane):
-                self._waiting.append((self.next_lsn, Deliver(batch)))
+    def _redeliver(self, lanes: set[Lane]) -> None:
+        """Deliver all that is undelivered in these lanes, for a sink is new to them; what else waits here waits on."""
+        batches = [batch for lane in sorted(lanes) for batch in self.state.outbox.undelivered(lane)]
+        again = {(batch.lane, batch.number) for batch in batches}
+        self._waiting = deque(
+            (lsn, effect)
+            for lsn, effect in self._waiting
+            if isinstance(effect, Answer) or (effect.batch.lane, effect.batch.number) not in again
+        )
+        self._waiting.extend((self.next_lsn, Deliver(batch)) for batch in batches)
 
     # ---- inputs ---------------------------------------------------------------------------------------------------
 
@@ -335,9 +339,13 @@ def _require_consistent(arrival: Arrival, known: Mapping[str, int]) -> None:
     rows, names = len(arrival.times), arrival.new_sources
     if len(arrival.sources) != rows or len(arrival.lengths) != rows:
         raise ValueError("an arrival's columns must have equal lengths")
-    if rows and int(arrival.sources.max()) >= len(known) + len(names):
-        raise ValueError(f"an arrival names source {arrival.sources.max()}, {len(known) + len(names)} are known")
-    if len(arrival.payload) != int(arrival.lengths.sum(dtype=np.int64)) + rows:
+    if rows == 1:
+        greatest, length = int(arrival.sources[0]), int(arrival.lengths[0])
+    else:
+        greatest, length = int(arrival.sources.max(initial=0)), int(arrival.lengths.sum(dtype=np.int64))
+    if rows and greatest >= len(known) + len(names):
+        raise ValueError(f"an arrival names source {greatest}, {len(known) + len(names)} are known")
+    if len(arrival.payload) != length + rows:
         raise ValueError(f"an arrival's payload of {len(arrival.payload)} bytes is not the sum of its lines")
     if names and (len(set(names)) < len(names) or any(name in known for name in names)):
         raise ValueError("an arrival's new sources have numbers already: decode it against the present table")

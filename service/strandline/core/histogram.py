@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from bisect import bisect_left
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -23,10 +25,13 @@ class Histogram:
 
     def add(self, values: NDArray[np.int64]) -> None:
         """Count a column; some 11 ns a value."""
+        if len(values) == 1:
+            self.add_same(int(values[0]), 1)
+            return
         self.counts += np.bincount(np.searchsorted(self._edges, values), minlength=len(self.counts))
         self.total += int(values.sum(dtype=np.float64))
 
     def add_same(self, value: int, times: int) -> None:
         """Count one value several times."""
-        self.counts[int(np.searchsorted(self._edges, value))] += times
+        self.counts[bisect_left(self.bounds, value)] += times
         self.total += value * times

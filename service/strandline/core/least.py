@@ -8,6 +8,8 @@ Nothing about sources or time is known here.
 
 from __future__ import annotations
 
+import itertools
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -20,6 +22,7 @@ class Least:
 
     def __init__(self) -> None:
         self._levels: list[NDArray[np.int64]] = [np.full(WIDTH, NONE, dtype=np.int64)]
+        self._least: tuple[int, int] | None = (NONE, -1)  # None: to be looked for
 
     def grow(self, places: int) -> None:
         """Make room for at least `places` places; new ones take no part."""
@@ -33,19 +36,39 @@ class Least:
 
     def rebuild(self, values: NDArray[np.int64]) -> None:
         """Take these values for all places at once."""
+        self._least = None
         self._levels = [_padded(values)]
         while len(self._levels[-1]) > WIDTH:
             self._levels.append(_padded(self._levels[-1].reshape(-1, WIDTH).min(axis=1)))
 
     def update(self, places: NDArray[np.intp], values: NDArray[np.int64]) -> None:
         """Set values; where a place is named twice, both times with the same value."""
+        self._least = None
         self._levels[0][places] = values
-        for below, above in zip(self._levels, self._levels[1:], strict=False):
+        for below, above in itertools.pairwise(self._levels):
             places = _parents(places, len(above))
             above[places] = below.reshape(-1, WIDTH)[places].min(axis=1)
 
+    def set(self, place: int, value: int) -> None:
+        """Set one value: the same as `update` for one place, at a tenth of its cost where the least stays the least."""
+        self._levels[0][place] = value
+        if self._least is not None:
+            least, at = self._least
+            if place == at or at < 0:
+                self._least = None
+            elif (value, place) < (least, at):
+                self._least = (value, place)
+        for below, above in itertools.pairwise(self._levels):
+            place >>= 6
+            above[place] = below[place * WIDTH : (place + 1) * WIDTH].min()
+
     def least(self) -> tuple[int, int]:
         """(value, place) of the least value; (NONE, -1) if none takes part. Of equal ones the lowest place."""
+        if self._least is None:
+            self._least = self._found()
+        return self._least
+
+    def _found(self) -> tuple[int, int]:
         place = 0
         for level in reversed(self._levels):
             block = level[place * WIDTH : (place + 1) * WIDTH]
@@ -68,9 +91,10 @@ class Least:
 
     def check(self) -> None:
         """Assert that every node is the least of its children."""
-        for below, above in zip(self._levels, self._levels[1:], strict=False):
+        for below, above in itertools.pairwise(self._levels):
             least = below.reshape(-1, WIDTH).min(axis=1)
             assert np.array_equal(above[: len(least)], least) and np.all(above[len(least) :] == NONE)
+        assert self.least() == self._found()
 
 
 def _padded(values: NDArray[np.int64]) -> NDArray[np.int64]:

@@ -79,6 +79,8 @@ def stretches(times: Times, minimum: int) -> list[Stretch]:
 
 def runs_of(times: Times, refs: Refs, minimum: int | None = None) -> list[Strand]:
     """The arrival's rows as runs; concatenated and stably sorted they equal the arrival stably sorted."""
+    if len(times) == 1:
+        return [Strand(times, refs)]
     least = minimum_run(len(times), MINIMUM_RUN_BITS) if minimum is None else minimum
     result = []
     for start, stop, order in stretches(times, least):
@@ -147,7 +149,8 @@ class Run:
 class OpenRuns:
     """The open runs in order of opening; their tails strictly descend.
 
-    `tails` and `heads` are kept as columns, so that dealing and cutting touch only runs that take part.
+    Tails and heads are kept as columns, so that dealing and cutting touch only runs that take part. Tails are kept
+    turned round (all bits inverted, which unlike a minus never overflows), so that they ascend and can be searched.
     """
 
     def __init__(self) -> None:
@@ -155,8 +158,9 @@ class OpenRuns:
         self.held = 0
         self.comparisons = 0
         self.opened = 0
-        self._tails = np.empty(16, dtype=np.int64)
+        self._turned_tails = np.empty(16, dtype=np.int64)
         self._heads = np.empty(16, dtype=np.int64)
+        self._head_ns: int | None = None
 
     def deal(self, strand: Strand) -> None:
         """Put a run's rows behind the first open run whose tail they may follow; what fits nowhere opens a run."""
@@ -165,19 +169,30 @@ class OpenRuns:
         if not rows:
             return
         self.held += rows
-        if count and times[0] >= self._tails[0]:
-            self.comparisons += 1
-            self._extend(0, strand)
+        # Only the runs between the one that takes the last row and the one that takes the first can take part.
+        first = self._taker(int(times[-1]))
+        last = self._taker(int(times[0])) if rows > 1 else first
+        if first == last < count:
+            self._extend(first, strand)
             return
-        cuts = np.searchsorted(times, self._tails[:count])
-        self.comparisons += count * rows.bit_length()
-        stops = np.concatenate(([rows], cuts[:-1])) if count else cuts
-        for index in np.flatnonzero(stops > cuts).tolist():
-            start, stop = int(cuts[index]), int(stops[index])
-            self._extend(index, Strand(times[start:stop], refs[start:stop]))
-        first = int(cuts[-1]) if count else rows
-        if first:
-            self._open(Strand(times[:first], refs[:first]))
+        tails = ~self._turned_tails[first : min(last + 1, count)]
+        cuts = np.searchsorted(times, tails)
+        self.comparisons += len(cuts) * rows.bit_length()
+        stops = np.concatenate(([rows], cuts))
+        for offset in np.flatnonzero(stops[:-1] > cuts).tolist():
+            start, stop = int(cuts[offset]), int(stops[offset])
+            self._extend(first + offset, Strand(times[start:stop], refs[start:stop]))
+        if last == count:
+            self._open(Strand(times[: stops[-1]], refs[: stops[-1]]))
+
+    def _taker(self, time: int) -> int:
+        """Index of the first run that a row of this time may follow (its tail is at or before it); else their count."""
+        turned = self._turned_tails[: len(self.runs)]
+        if len(turned) and time >= ~int(turned[0]):  # most rows follow the run that is furthest ahead
+            self.comparisons += 1
+            return 0
+        self.comparisons += 1 + len(turned).bit_length()
+        return int(turned.searchsorted(~time))
 
     def reopen(self, strand: Strand) -> None:
         """Open a saved run again, behind the ones that were opened before it."""
@@ -186,23 +201,28 @@ class OpenRuns:
 
     def _extend(self, index: int, piece: Strand) -> None:
         self.runs[index].append(piece)
-        self._tails[index] = piece.times[-1]
+        self._turned_tails[index] = ~int(piece.times[-1])
 
     def _open(self, piece: Strand) -> None:
         count = len(self.runs)
-        if count == len(self._tails):
-            self._tails, self._heads = np.resize(self._tails, 2 * count), np.resize(self._heads, 2 * count)
+        if count == len(self._heads):
+            self._turned_tails = np.resize(self._turned_tails, 2 * count)
+            self._heads = np.resize(self._heads, 2 * count)
         run = Run()
         run.append(piece)
         self.runs.append(run)
-        self._tails[count], self._heads[count] = piece.times[-1], piece.times[0]
+        self._turned_tails[count], self._heads[count] = ~int(piece.times[-1]), piece.times[0]
+        head = int(piece.times[0])
+        self._head_ns = head if self._head_ns is None else min(self._head_ns, head)
         self.opened += 1
 
     def cut(self, watermark: int) -> list[Strand]:
         """Heads at or before the watermark, one strand for each run that has one, in order of opening."""
+        if self._head_ns is None or self._head_ns > watermark:
+            return []
         count = len(self.runs)
         heads: list[Strand] = []
-        closed = False
+        closed: list[int] = []
         for index in np.flatnonzero(self._heads[:count] <= watermark).tolist():
             run = self.runs[index]
             chunks, comparisons = run.cut(watermark)
@@ -212,23 +232,34 @@ class OpenRuns:
             if run.length:
                 self._heads[index] = run.chunks[0].times[0]
             else:
-                closed = True
+                closed.append(index)
         if closed:
-            stay = [index for index, run in enumerate(self.runs) if run.length]
-            self._tails[: len(stay)] = self._tails[stay]
-            self._heads[: len(stay)] = self._heads[stay]
-            self.runs = [self.runs[index] for index in stay]
+            self._close(closed)
+        self._head_ns = int(self._heads[: len(self.runs)].min()) if self.runs else None
         return heads
+
+    def _close(self, closed: list[int]) -> None:
+        """Forget the runs at these indices (ascending)."""
+        count = len(self.runs)
+        stay = count - len(closed)
+        if stay:
+            self._turned_tails[:stay] = np.delete(self._turned_tails[:count], closed)
+            self._heads[:stay] = np.delete(self._heads[:count], closed)
+        if 16 * len(closed) < count:  # moving the list up costs 1 us a closed run, walking over it 20 ns an open one
+            for index in reversed(closed):
+                del self.runs[index]
+        else:
+            self.runs = [run for run in self.runs if run.length]
 
     @property
     def head_ns(self) -> int | None:
         """Least event time held."""
-        return int(self._heads[: len(self.runs)].min()) if self.runs else None
+        return self._head_ns
 
     @property
     def tail_ns(self) -> int | None:
         """Greatest event time held."""
-        return int(self._tails[0]) if self.runs else None
+        return ~int(self._turned_tails[0]) if self.runs else None
 
     def lengths(self) -> list[int]:
         """Events held by each open run."""
@@ -237,13 +268,15 @@ class OpenRuns:
     def check(self) -> None:
         """Assert the invariants: tails strictly descend, runs ascend, columns and counts agree with the chunks."""
         count = len(self.runs)
-        assert np.all(self._tails[1:count] < self._tails[: max(count - 1, 0)]), "tails must strictly descend"
+        tails = ~self._turned_tails[:count]
+        assert np.all(tails[1:] < tails[:-1]), "tails must strictly descend"
         for index, run in enumerate(self.runs):
             times = np.concatenate([chunk.times for chunk in run.chunks])
             assert len(times) == run.length > 0 and np.all(times[1:] >= times[:-1])
-            assert times[-1] == self._tails[index] and times[0] == self._heads[index]
+            assert times[-1] == tails[index] and times[0] == self._heads[index]
             assert all(len(chunk.times) == len(chunk.refs) > 0 for chunk in run.chunks)
         assert self.held == sum(run.length for run in self.runs)
+        assert self._head_ns == min(self._heads[:count].tolist(), default=None)
 
 
 def joined(chunks: list[Strand]) -> Strand:

@@ -59,7 +59,8 @@ class _Generation:
 
     def values(self) -> Identities:
         """All identities, in the order of their slots."""
-        return self.slots[self.slots != 0]
+        values: Identities = self.slots[self.slots != 0]
+        return values
 
 
 class Seen:

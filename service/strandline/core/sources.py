@@ -66,6 +66,10 @@ class Sources:
 
     def hear(self, sources: NDArray[np.uint32], times: Times, now_ns: int) -> None:
         """Take note of events (at least one), none of them too far in the future."""
+        if len(times) == 1:
+            self.newest_ns = max(self.newest_ns, int(times[0]))
+            self.promise(int(sources[0]), int(times[0]), now_ns)
+            return
         numbers = sources.astype(np.intp)
         np.maximum.at(self.newest, numbers, times)
         self.newest_ns = max(self.newest_ns, int(times.max()))
@@ -78,11 +82,13 @@ class Sources:
 
     def promise(self, source: int, time_ns: int, now_ns: int) -> None:
         """Nothing older than time_ns will come from this source; it counts as a word of the source."""
-        self.newest[source] = max(int(self.newest[source]), time_ns)
+        newest = max(int(self.newest[source]), time_ns)
+        self.newest[source] = newest
         self.heard[source] = now_ns
         self.active[source] = True
         self.excused[source] = False
-        self._refresh(np.array([source], dtype=np.intp))
+        self._by_heard.set(source, now_ns)
+        self._by_newest.set(source, min(newest, NONE - 1))
 
     def excuse(self, source: int) -> None:
         """Do not wait for this source until it speaks again."""

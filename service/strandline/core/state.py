@@ -25,6 +25,8 @@ from .columns import (
     as_rows,
     empty_refs,
     empty_times,
+    greatest_of,
+    least_of,
 )
 from .effects import AnswerFault, Outcome
 from .histogram import POWERS, SECONDS_NS, Histogram
@@ -134,9 +136,10 @@ class State:
             entries += ahead
         late = 0
         if len(times):
-            self._note_lateness(times)
+            oldest = least_of(times)
+            self._note_lateness(times, oldest)
             self.sources.hear(refs["source"], times, body.arrived_ns)
-            if int(times.min()) < self.watermark_ns:
+            if oldest < self.watermark_ns:
                 times, refs, late_batch = self._without_late(times, refs, body.arrived_ns, end_lsn)
                 batches.append(late_batch)
                 late = len(late_batch)
@@ -157,7 +160,7 @@ class State:
 
     def _without_ahead(self, body: ArrivalBody, times: Times, refs: Refs) -> tuple[Times, Refs, list[QuarantineEntry]]:
         bound = body.arrived_ns + self.settings.ahead_limit_ns
-        if int(times.max()) <= bound:
+        if greatest_of(times) <= bound:
             return times, refs, []
         ahead = times > bound
         found = []
@@ -179,9 +182,9 @@ class State:
         number = self.outbox.next_number["quarantine"]
         return Batch("quarantine", number, empty_times(), empty_refs(), arrived_ns, end_lsn, entries=entries)
 
-    def _note_lateness(self, times: Times) -> None:
+    def _note_lateness(self, times: Times, oldest: int) -> None:
         newest = self.sources.newest_ns
-        if int(times.min()) >= newest:
+        if oldest >= newest:
             self.figures.lateness.add_same(0, len(times))
         else:
             # int64 times can lie further apart than int64 holds; uint64 holds every distance.
@@ -190,7 +193,7 @@ class State:
 
     def _hold(self, times: Times, refs: Refs, body: ArrivalBody) -> None:
         self.arrivals.note(body.payload_place, body.arrived_ns, len(times))
-        self.hold.note(body.arrived_ns, int(times.max()))
+        self.hold.note(body.arrived_ns, greatest_of(times))
         runs = runs_of(times, as_rows(refs))
         for run in runs:
             self.runs.deal(run)
@@ -245,6 +248,8 @@ class State:
 
 
 def _refs(body: ArrivalBody) -> Refs:
+    if len(body.times) == 1:
+        return np.array([(body.payload_place, body.lengths[0], body.sources[0])], dtype=REF)
     refs = np.empty(len(body.times), dtype=REF)
     steps = body.lengths.astype(np.int64)
     steps += 1  # the line feed

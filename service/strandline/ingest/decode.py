@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from ..core.columns import Arrival, Fault, Times
 from ..errors import BodyError
 from .limits import BodyLimits
-from .lines import MEDIA_TYPES, Lines, is_utf8, split_body, utf8_fault
+from .lines import MEDIA_TYPES, Lines, is_utf8, json_fault, split_body, utf8_fault
 from .nesting import deep_suspects, deepest
 from .pointer import Fields, Values
 from .timestamps import unit_bounds
@@ -238,7 +238,7 @@ class _Judge:
         except RecursionError:
             raise self._too_deep() from None
         except msgspec.DecodeError as error:
-            raise self._not_an_object(line, str(error)) from None
+            raise self._not_an_object(line, error) from None
 
     def _law_broken(self, values: Values) -> LineFault | None:
         """Why these are no time, source and id."""
@@ -252,9 +252,10 @@ class _Judge:
             return fault
         return None
 
-    def _not_an_object(self, line: bytes, message: str) -> LineFault:
-        if message.startswith("Expected `object`"):
-            return LineFault("malformed", f"not a JSON object: {message[0].lower()}{message[1:]}")
+    def _not_an_object(self, line: bytes, error: msgspec.DecodeError) -> LineFault:
+        what, place = json_fault(error, len(line))
+        if isinstance(error, msgspec.ValidationError):
+            return LineFault("malformed", f"not a JSON object: {what}")
         if b"\\u" in line:
             # msgspec calls half a surrogate pair malformed JSON; the grammar allows it, so say where it stands.
             try:
@@ -264,7 +265,7 @@ class _Judge:
             if isinstance(document, dict):
                 fault = self._law_broken(self._fields.pick(document))
                 return fault or LineFault("malformed", "a string holds half a surrogate pair")
-        return LineFault("malformed", f"not one JSON object: {message.removeprefix('JSON is malformed: ')}")
+        return LineFault("malformed", f"not one JSON object at byte {place}: {what}")
 
 
 def _refuse_constant(name: str) -> None:

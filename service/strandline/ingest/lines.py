@@ -218,10 +218,14 @@ def _split_array(body: bytes, text: bytes, limits: BodyLimits) -> Lines:
     if len(body) > _COMMAS_AT_MOST and body.count(b",") > _COMMAS_AT_MOST:
         _deep_items(body, limits)
     try:
-        return _of_items(_decoded(_ITEMS, body), _has_breaks(text), limits)
+        items, deep = _decoded(_ITEMS, body), []
     except RecursionError:
         deep = _deep_items(body, limits)
-    items = _without(body, deep)
+        items = _without(body, deep)
+    if len(items) > limits.events_at_most:
+        raise _too_many("items", len(items), limits)
+    if not deep:
+        return _of_items(items, _has_breaks(text), limits)
     faults = tuple(_too_deep(number, body[start:end].strip(), limits) for number, start, end in deep)
     keep = np.ones(len(items), np.bool_)
     keep[[number - 1 for number, _, _ in deep]] = False
@@ -252,9 +256,17 @@ def _decoded(decoder: msgspec.json.Decoder[Any], body: bytes) -> Any:
     try:
         return decoder.decode(body)
     except msgspec.DecodeError as error:
-        text = str(error).removeprefix("JSON is malformed: ")
-        place = _BYTE.search(text)
-        raise _not_json(_BYTE.sub("", text), len(body) if place is None else int(place[1])) from None
+        raise _not_json(*json_fault(error, len(body))) from None
+
+
+def json_fault(error: msgspec.DecodeError, size: int) -> tuple[str, int]:
+    """What msgspec says is wrong with a JSON text of `size` bytes, and at which byte, counting from 0."""
+    text = str(error).removeprefix("JSON is malformed: ")
+    place = _BYTE.search(text)
+    if place is None:
+        return f"{text[0].lower()}{text[1:]}", size
+    text = _BYTE.sub("", text)
+    return text, int(place[1]) - (text == "trailing characters")  # for these it counts from 1
 
 
 def _not_json(why: str, place: int | None = None) -> BodyError:

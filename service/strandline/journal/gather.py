@@ -27,14 +27,15 @@ from .frame import Octets, octets
 LINE_FEED = 10
 Positions = NDArray[np.int64]
 
-# A mean stretch of this many bytes is as well copied by a slice (memcpy of 1 KiB costs what a slice object does).
-LONG_STRETCH_BYTES = 1024
+# From this mean size on a slice copies as well: at 520 bytes two windows cost 217 against 169 ns (n = 5,000) and 269
+# against 272 (n = 50,000), at 250 bytes 132 against 145 and 170 against 235.
+LONG_STRETCH_BYTES = 400
 # One window beats slices from 8 stretches on (50: 34 against 132 ns a line); two windows have some 10 us to earn back
 # in each class: at 100 stretches in one class 125 against 116 ns, at 200 90 against 104; three classes: 400.
 ONE_WINDOW_FROM = 8
 TWO_WINDOWS_FROM = 160
-# Rows copied at a time by windows: the intermediate array stays in the second-level cache.
-ROWS_AT_ONCE = 4096
+# Rows copied at a time by two windows: the intermediate array stays in the second-level cache (51 against 56 ns).
+ROWS_AT_ONCE = 1024
 # Lines that must share a length, in the mean, before single lines come out of a window for each length (33 lengths:
 # at 30 a length 109 against 105 ns a line, at 151 75 against 134).
 SHARED_LENGTH_FROM = 40
@@ -84,16 +85,12 @@ def lines(
 ) -> list[bytes]:
     """The lines as bytes objects, without line feeds; arguments as for `block`.
 
-    Stretches of several lines are split at their line feeds (30-40 ns a line). Else lines of one length come out of
-    one window as a list (19-46), few lengths out of a window each (44-100), and the rest out of slices (100-300).
+    Lines of one length come out of one window as a list (19-46 ns a line), few lengths out of a window each (44-100),
+    the rest out of slices (100-300). Splitting a block at its line feeds was slower than slices (127 against 100).
     """
     count = len(offsets)
     if not count:
         return []
-    if _room_behind(sources, owners, offsets, lengths) and len(stretches(owners, offsets, lengths)) * 4 <= count:
-        split = block(sources, owners, offsets, lengths)[:-1].split(b"\n")
-        if len(split) == count:  # else a line holds a line feed itself
-            return split
     if owners is None:
         return _by_length(sources[0].view, offsets, lengths)
     found = np.empty(count, object)

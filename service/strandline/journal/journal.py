@@ -14,11 +14,10 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterable, Sequence
-from dataclasses import dataclass
 from itertools import groupby, pairwise
 from operator import attrgetter
 from threading import Lock
-from typing import NoReturn
+from typing import NamedTuple, NoReturn
 
 from strandline.core.effects import Buffer
 from strandline.core.records import VERSION, frame_bytes
@@ -28,19 +27,20 @@ from strandline.ports import Disk, File
 from . import snapshots
 from .counters import Counters
 from .frame import BODY_BYTES_AT_MOST, encode_frame, flatten
+from .limits import Limits
 from .reading import Readable
 from .recovery import make_certain, recover
 from .segments import SEGMENT_HEADER_BYTES, Maps, Segment, digest_of, segment_name
 from .spares import SHORTAGES, Spares
 
 SEGMENT_BYTES = 64 << 20
+SEGMENT_BYTES_AT_LEAST = 200  # a header, a quarter of headroom for one mark, and a frame: what simulations use
 JOURNAL_BYTES_AT_MOST = 8 << 30
 QUEUED_BYTES_AT_MOST = 256 << 20
 HEADROOM_BYTES = 64 << 10  # some 800 marks of 64 bytes a frame: what frees room must not lack it
 
 
-@dataclass(frozen=True, slots=True)
-class _Queued:
+class _Queued(NamedTuple):
     segment: Segment
     lsn: int
     kind: int
@@ -60,8 +60,7 @@ class Journal(Readable):
         self._disk = disk
         self._digest = digest
         self._segment_bytes = segment_bytes
-        self._bytes_at_most = journal_bytes_at_most
-        self._queued_at_most = queued_bytes_at_most
+        self._limits = Limits(directory, journal_bytes_at_most, queued_bytes_at_most)
         self._headroom = min(HEADROOM_BYTES, segment_bytes // 4)
         self._clock = clock
         self._read_only = read_only
@@ -89,8 +88,8 @@ class Journal(Readable):
         feed and refuses to append: for captures, and for looking on while another process writes. `clock` (seconds)
         times syncs. Raises JournalError where something durable is missing or the disk does not answer.
         """
-        if segment_bytes < 1024 or journal_bytes_at_most < 2 * segment_bytes:
-            raise ValueError("segment_bytes must be at least 1024 and journal_bytes_at_most two segments")
+        if segment_bytes < SEGMENT_BYTES_AT_LEAST or journal_bytes_at_most < 2 * segment_bytes:
+            raise ValueError(f"{segment_bytes=} must be {SEGMENT_BYTES_AT_LEAST} or more, and the limit two segments")
         digest = digest_of(directory.rsplit("/", 1)[-1])
         journal = cls(
             disk, directory, digest, segment_bytes=segment_bytes, journal_bytes_at_most=journal_bytes_at_most,
@@ -163,11 +162,12 @@ class Journal(Readable):
         need = sum(map(frame_bytes, body_bytes))
         self._raise_if_unusable()
         if not of_headroom:
-            self._check_limits(need)
+            self._limits.check(need, self.bytes_used, self._queued_bytes)
         stretch = need if of_headroom else need + self._headroom
         if stretch > self._left and not self._spares.hold(stretch):
             if not of_headroom:
-                self._check_limits(need, more=max(self._segment_bytes, stretch + SEGMENT_HEADER_BYTES))
+                more = max(self._segment_bytes, stretch + SEGMENT_HEADER_BYTES)
+                self._limits.check(need, self.bytes_used + more, self._queued_bytes)
             self._make_spare(stretch)
 
     def append(self, lsn: int, kind: int, parts: Sequence[Buffer], version: int = VERSION) -> None:
@@ -208,22 +208,6 @@ class Journal(Readable):
         with self._lock:
             self._segments = (*self._segments, segment)
             self._segments_bytes += segment.size
-
-    def _check_limits(self, need: int, more: int = 0) -> None:
-        used = self.bytes_used
-        if used + more > self._bytes_at_most:
-            raise JournalFull(
-                "journal_full",
-                f"{self._directory}: {used:,} bytes are in use and {need:,} more need another segment, but "
-                f"journal_bytes_at_most is {self._bytes_at_most:,}: segments go when every sink has taken their "
-                "events; see which sink lags, or raise the limit",
-            )
-        if self._queued_bytes and self._queued_bytes + need > self._queued_at_most:
-            raise JournalFull(
-                "journal_full",
-                f"{self._directory}: {self._queued_bytes:,} bytes wait for the disk and {need:,} more would pass "
-                f"{self._queued_at_most:,}: the disk is slower than the feed; try again, and watch the sync times",
-            )
 
     def _make_spare(self, frames_bytes: int) -> None:
         try:
@@ -290,7 +274,7 @@ class Journal(Readable):
         A lack of room is no failure here: whoever needs the room is refused then, with the reason.
         """
         self._raise_if_unusable()
-        if not len(self._spares) and self.bytes_used + self._segment_bytes <= self._bytes_at_most:
+        if not len(self._spares) and self.bytes_used + self._segment_bytes <= self._limits.bytes_at_most:
             try:
                 self._make_spare(0)
             except JournalFull:
@@ -388,7 +372,7 @@ class Journal(Readable):
         return snapshots.read_snapshots(self._disk, self._directory, self._digest)
 
     def check(self) -> None:
-        """Assert every invariant. Not while another thread is writing."""
+        """Assert every invariant. For the loop's thread; a flush may be running."""
         assert 0 <= self.first_lsn <= self._durable_lsn <= self._next_lsn
         for older, newer in pairwise(self._segments):
             assert older.first_lsn < newer.first_lsn <= older.first_lsn + older.room
@@ -399,10 +383,10 @@ class Journal(Readable):
             assert last.first_lsn <= self._next_lsn <= last.first_lsn + last.room
         assert self._segments_bytes == sum(segment.size for segment in self._segments)
         self.counters.check()
-        if self.failed:
-            return
-        lsn = self._durable_lsn
-        for queued in self._queue:
-            assert queued.lsn == lsn and queued.segment in self._segments
-            lsn += queued.bytes
-        assert lsn == self._next_lsn and self._queued_bytes == self._next_lsn - self._durable_lsn
+        with self._lock:
+            # What a flush has taken over lies between what is durable and what is queued.
+            lsn = self._next_lsn - sum(queued.bytes for queued in self._queue)
+            assert self._durable_lsn <= lsn and self._queued_bytes == self._next_lsn - self._durable_lsn
+            for queued in self._queue:
+                assert queued.lsn == lsn and queued.segment in self._segments
+                lsn += queued.bytes

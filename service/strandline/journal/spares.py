@@ -73,7 +73,8 @@ class Spares:
         """
         size = self._segment_bytes
         if SEGMENT_HEADER_BYTES + frames_bytes > size:
-            size = -(-(SEGMENT_HEADER_BYTES + frames_bytes) // PAGE_BYTES) * PAGE_BYTES
+            step = min(PAGE_BYTES, size)
+            size = -(-(SEGMENT_HEADER_BYTES + frames_bytes) // step) * step
         with self._lock:
             path = f"{self._directory}/spare-{self._next_number}.seg"
             self._next_number += 1

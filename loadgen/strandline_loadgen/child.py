@@ -1,6 +1,6 @@
-"""A real service as a child process, for the demonstration: start, look, drain, stop. Reads its published HTTP only.
+"""A server as a child process, for the demonstration and the benchmark: start, look, drain, stop.
 
-The child gets a temporary folder, a free port of the loopback address and one feed with a SQLite sink.
+The child listens at a free port of the loopback address; of the service only published HTTP is used.
 """
 
 from __future__ import annotations
@@ -9,52 +9,23 @@ import asyncio
 import socket
 import subprocess
 import sys
+from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
 import aiohttp
 import msgspec
 
-from .demo_story import Pace
-
-FEED = "river-gauges"
 READY_S_AT_MOST = 20.0
-STOP_S_AT_MOST = 30.0
-LOOK_S_AT_MOST = 2.0
-EMPTY_S_AT_MOST = 20.0
+STOP_S_AT_MOST = 60.0
+LOOK_S_AT_MOST = 5.0
+EMPTY_S_AT_MOST = 120.0
 POLL_S = 0.1
 LOG_BYTES_SHOWN = 2000
 
 
 class ServiceTrouble(Exception):
     """The service did not start, answer or stop; the text says what it wrote last."""
-
-
-def configuration(port: int, folder: Path, pace: Pace) -> str:
-    """The service's configuration file."""
-    return f"""listen = "127.0.0.1:{port}"
-data_dir = "{folder.as_posix()}/data"
-[[feed]]
-name = "{FEED}"
-time = {{ at = "/observed_at", unit = "rfc3339" }}
-source = "/station"
-slack = "{_ms(pace.slack_s)}"
-idle_after = "{_ms(pace.idle_after_s)}"
-hold_at_most = "{_ms(pace.hold_at_most_s)}"
-ahead_limit = "{_ms(pace.ahead_limit_s)}"
-[[feed.sink]]
-kind = "sqlite"
-path = "{store_in(folder).as_posix()}"
-"""
-
-
-def store_in(folder: Path) -> Path:
-    """Where the SQLite sink of a service in this folder writes."""
-    return folder / "river.db"
-
-
-def _ms(seconds: float) -> str:
-    return f"{round(seconds * 1000)}ms"
 
 
 def free_port() -> int:
@@ -65,28 +36,24 @@ def free_port() -> int:
         return port
 
 
-class ChildService:
-    """The service's process. `async with` starts it, waits until it is ready, and stops it whatever happens."""
+def serve(file: Path) -> list[str]:
+    """The command that runs the service with this configuration."""
+    return [sys.executable, "-m", "strandline.cli", "serve", str(file)]
 
-    def __init__(self, folder: Path, pace: Pace) -> None:
-        self._folder, self._pace = folder, pace
-        self._log = folder / "service.log"
+
+class ChildServer:
+    """A server's process. `async with` starts it, waits until it is ready, and ends it whatever happens."""
+
+    def __init__(self, command: Sequence[str], port: int, log: Path) -> None:
+        self._command, self._log = command, log
         self._process: subprocess.Popen[bytes] | None = None
         self._session: aiohttp.ClientSession | None = None
-        self.url = ""
-
-    async def __aenter__(self) -> ChildService:
-        port = free_port()
         self.url = f"http://127.0.0.1:{port}"
-        file = self._folder / "strandline.toml"
-        file.write_text(configuration(port, self._folder, self._pace))
+
+    async def __aenter__(self) -> ChildServer:
         with self._log.open("wb") as log:
             self._process = subprocess.Popen(  # a session of its own: Ctrl-C reaches it through us, once
-                [sys.executable, "-m", "strandline.cli", "serve", str(file)],
-                stdin=subprocess.DEVNULL,
-                stdout=log,
-                stderr=log,
-                start_new_session=True,
+                self._command, stdin=subprocess.DEVNULL, stdout=log, stderr=log, start_new_session=True
             )
         self._session = aiohttp.ClientSession(timeout=aiohttp.ClientTimeout(total=LOOK_S_AT_MOST))
         try:
@@ -115,9 +82,9 @@ class ChildService:
         except TimeoutError:
             raise ServiceTrouble(f"the service was not ready in {READY_S_AT_MOST:g} s:\n{self.last_words()}") from None
 
-    async def look(self) -> dict[str, Any] | None:
+    async def look(self, feed: str) -> dict[str, Any] | None:
         """What the service says of the feed; None while it does not answer."""
-        return await self._get(f"/v1/feeds/{FEED}")
+        return await self._get(f"/v1/feeds/{feed}")
 
     async def has_dashboard(self) -> bool:
         """Does the service show itself to a browser?"""
@@ -138,15 +105,15 @@ class ChildService:
             return None
         return found if isinstance(found, dict) else None
 
-    async def drain(self) -> None:
+    async def drain(self, feed: str) -> None:
         """Let go what is held, and wait until nothing is. Raises ServiceTrouble."""
         assert self._session is not None
         try:
-            async with self._session.post(f"{self.url}/v1/feeds/{FEED}/drain") as answer:
+            async with self._session.post(f"{self.url}/v1/feeds/{feed}/drain") as answer:
                 if answer.status >= 400:
                     raise ServiceTrouble(f"the drain was refused: {answer.status} {await answer.text()}")
             async with asyncio.timeout(EMPTY_S_AT_MOST):
-                while (await self.look() or {}).get("ledger", {}).get("buffered") != 0:
+                while (await self.look(feed) or {}).get("ledger", {}).get("buffered") != 0:
                     await asyncio.sleep(POLL_S)
         except (aiohttp.ClientError, TimeoutError) as error:
             raise ServiceTrouble(f"the feed could not be drained ({error}):\n{self.last_words()}") from error

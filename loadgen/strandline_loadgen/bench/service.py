@@ -1,0 +1,139 @@
+"""Rows on the whole service over HTTP: journal, sync, ordering, NDJSON sink, against a bare handler (see `bare`).
+
+Both run in a process of their own and get the same bodies over the same number of connections, as fast as they answer.
+The value is the share of the bare handler's rate that the service reaches, counted from the first body to the last
+answer. After each run the service is drained and stopped, and the judge reads its files: a run that is not well has no
+figure. Sender and server share the machine's cores, which flatters neither and narrows the difference.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import sys
+import tempfile
+import time
+from dataclasses import dataclass
+from functools import partial
+from pathlib import Path
+
+import numpy as np
+import uvloop
+
+from strandline_loadgen.bodies import Body, Style, bodies, cut_by_count
+from strandline_loadgen.checker import judge
+from strandline_loadgen.child import ChildServer, free_port, serve
+from strandline_loadgen.driver import Delivery, Target, send
+from strandline_loadgen.shapes import shape
+from strandline_loadgen.stores import Reading, read_ndjson
+from strandline_loadgen.trace import Int64s, Trace
+
+from .harness import Measure, Row, Sample, Scale
+
+FEED = "bench"
+GOAL = 0.5
+CONNECTIONS = {500: 16, 5_000: 8}
+EVENTS_SHARE = {500: 0.3, 5_000: 1.0}  # of the scale's events: smaller bodies take longer
+CONFIGURATION = """listen = "127.0.0.1:{port}"
+data_dir = "{folder}/data"
+drain_at_most = "5m"
+[[feed]]
+name = "bench"
+time = {{ at = "/observed_at", unit = "ns" }}
+source = "/station"
+slack = "20s"
+idle_after = "1h"
+hold_at_most = "1h"
+ahead_limit = "1h"
+[[feed.sink]]
+kind = "ndjson"
+directory = "{folder}/out"
+"""
+
+
+@dataclass(frozen=True, slots=True)
+class Course:
+    """Bodies, made before anything is timed; and how they are sent."""
+
+    trace: Trace
+    bounds: Int64s
+    bodies: list[Body]
+    connections: int
+
+
+def course_of(body_events: int, scale: Scale) -> Course:
+    """Exponential delays (mean 2 s) at 10,000 events a second, the last one just arrived."""
+    events = int(scale.events * EVENTS_SHARE[body_events])
+    trace = shape("exponential", events, scale.seed, events_per_s=10_000.0, mean_s=2.0)
+    trace = trace.shifted(time.time_ns() - int(trace.arrivals[-1]))
+    bounds = cut_by_count(trace, body_events)
+    return Course(trace, bounds, list(bodies(trace, bounds, Style("ns"))), CONNECTIONS[body_events])
+
+
+async def events_per_s_bare(course: Course, folder: Path) -> float:
+    """The yardstick's rate."""
+    port = free_port()
+    command = [sys.executable, "-m", "strandline_loadgen.bench.bare", str(port), str(folder)]
+    async with ChildServer(command, port, folder / "bare.log") as server:
+        done = await _sent(server, course)
+        await server.stop()
+    return len(course.trace) / done.seconds
+
+
+async def events_per_s_service(course: Course, folder: Path) -> tuple[float, float]:
+    """The service's rate, and the seconds from the last answer until all was delivered and the service had stopped."""
+    port, file = free_port(), folder / "strandline.toml"
+    file.write_text(CONFIGURATION.format(port=port, folder=folder.as_posix()))
+    async with ChildServer(serve(file), port, folder / "service.log") as server:
+        done = await _sent(server, course)
+        answered = time.monotonic()
+        await server.drain(FEED)
+        code = await server.stop()
+        rest_s = time.monotonic() - answered
+        if code != 0:
+            raise RuntimeError(f"the service ended with {code}, no figure would mean anything:\n{server.last_words()}")
+    _check(course, done, folder)
+    return len(course.trace) / done.seconds, rest_s
+
+
+async def _sent(server: ChildServer, course: Course) -> Delivery:
+    done = await send(course.bodies, Target(server.url, FEED, connections=course.connections, keys="bench"))
+    if not done.answered.all() or done.refused or done.resent:
+        raise RuntimeError(
+            f"{np.count_nonzero(~done.answered)} bodies unanswered, {done.refused} refused, {done.resent} resent: no "
+            f"figure would mean anything\n{done.failures[:3]}\n{server.last_words()}"
+        )
+    return done
+
+
+def _check(course: Course, done: Delivery, folder: Path) -> None:
+    reading = Reading(course.trace.source_names)
+    lanes = [read_ndjson(folder / "out", FEED, lane, reading) for lane in ("ordered", "late")]
+    told = {"accepted": done.sums["accepted"], "late": done.sums["late"]}
+    verdict = judge(done.evidence(course.trace, course.bounds), *lanes, duplicates=0, told=told)
+    if not verdict.ok:
+        raise RuntimeError(f"what the service delivered is not right, no figure would mean anything:\n{verdict}")
+
+
+async def _visit(course: Course) -> Sample:
+    with tempfile.TemporaryDirectory(prefix="strandline-bench-") as name:
+        bare = await events_per_s_bare(course, Path(name))
+        service, rest_s = await events_per_s_service(course, Path(name))
+    return Sample(service / bare, {"events/s": service, "bare events/s": bare, "s to deliver the rest": rest_s})
+
+
+def _prepare(body_events: int, scale: Scale) -> Measure:
+    course = course_of(body_events, scale)
+
+    def measure() -> Sample:
+        with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
+            return runner.run(_visit(course))
+
+    return measure
+
+
+def rows(scale: Scale) -> list[Row]:
+    """A row for each size of body."""
+    return [
+        Row(f"service over HTTP, bodies of {size:,} events", "x", partial(_prepare, size), GOAL, "at least")
+        for size in EVENTS_SHARE
+    ]
