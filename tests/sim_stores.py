@@ -201,7 +201,6 @@ class Stores:
 
         def connect(*given: Any, **options: Any) -> sqlite3.Connection:
             connection = sqlite3.connect(*given, factory=Watched, **options)
-            sqlite3.Connection.execute(connection, "PRAGMA mmap_size=0")
             world._connections.append(connection)
             return connection
 

@@ -35,6 +35,7 @@ from .sinks import make_sink
 
 log = logging.getLogger("strandline")
 TICK_S = 0.25
+SHUTDOWN_WITHIN_S = 2.0  # for requests and streams that do not end by themselves once the feeds are closed
 EXIT_FAILED = 3
 EXIT_AT_ONCE = 130
 
@@ -95,7 +96,14 @@ class Service:
         self._stopped = False
 
     async def start(self) -> None:
-        """Open every feed, then listen."""
+        """Open every feed, then listen. What was begun is undone where that fails or is cancelled."""
+        try:
+            await self._start()
+        except BaseException:
+            await self.stop()
+            raise
+
+    async def _start(self) -> None:
         self._folder.lock("lock")
         for feed in self.config.feeds:
             folder = self.config.feed_dir(feed)
@@ -106,7 +114,10 @@ class Service:
         app = make_app(self.config, self.feeds)
         app.on_shutdown.append(self._hush)
         # Bodies are decompressed by our own code, within limits; a client that is gone ends its handler.
-        self._runner = web.AppRunner(app, auto_decompress=False, handler_cancellation=True, access_log=None)
+        self._runner = web.AppRunner(
+            app, auto_decompress=False, handler_cancellation=True, access_log=None,
+            shutdown_timeout=SHUTDOWN_WITHIN_S,
+        )  # fmt: skip
         await self._runner.setup()
         site = web.TCPSite(self._runner, self.config.listen.host, self.config.listen.port)
         await site.start()
@@ -136,6 +147,8 @@ class Service:
     def reload(self, path: Path | None, environ: Mapping[str, str]) -> bool:
         """Read the configuration again; whether it was taken over. One fixed key keeps all as it was."""
         try:
+            if self._runner is None or self._stopped:
+                raise StrandlineError("the service is starting or stopping")
             if path is None:
                 raise StrandlineError("the service was started without a file")
             config = load(path, environ)
@@ -158,8 +171,12 @@ class Service:
     async def _tick(self) -> None:
         while True:
             await asyncio.sleep(TICK_S)
-            for runtime in self.feeds.values():
-                runtime.tick()
+            for name, runtime in self.feeds.items():
+                try:
+                    runtime.tick()
+                except Exception as error:  # else the ticks of all feeds would end, and nobody would be told
+                    log.exception("an unforeseen error in a tick")
+                    self._failed(name, error)
 
 
 def fixed_changes(old: Config, new: Config) -> list[str]:
@@ -171,6 +188,20 @@ def fixed_changes(old: Config, new: Config) -> list[str]:
         keys = ("time", "source", "id", "journal", "sinks")
         found += [f"{key} of feed {after.name}" for key in keys if getattr(before, key) != getattr(after, key)]
     return found
+
+
+async def _started(service: Service) -> bool:
+    """Start it; False where it was told to stop first, while a store or a long journal was waited for."""
+    starting, told = asyncio.create_task(service.start()), asyncio.create_task(service.stopping.wait())
+    await asyncio.wait([starting, told], return_when=asyncio.FIRST_COMPLETED)
+    told.cancel()
+    if not starting.done():
+        starting.cancel()
+        await asyncio.wait([starting])
+    if starting.cancelled():
+        return False
+    await starting
+    return True
 
 
 async def serve(service: Service, config_path: Path | None = None) -> int:
@@ -190,8 +221,8 @@ async def serve(service: Service, config_path: Path | None = None) -> int:
     for number in (signal.SIGTERM, signal.SIGINT):
         loop.add_signal_handler(number, on_signal)
     loop.add_signal_handler(signal.SIGHUP, service.reload, config_path, os.environ)
-    await service.start()
-    print(f"listening on http://{service.address}", flush=True)
+    if await _started(service):
+        print(f"listening on http://{service.address}", flush=True)
     await service.stopping.wait()
     await service.stop()
     log.info("stopped")

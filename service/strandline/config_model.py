@@ -129,6 +129,16 @@ class Feed(msgspec.Struct, frozen=True):
     sources_at_most: Annotated[int, Key(count(1, 10_000_000), "sources; beyond it a new one is refused")] = 100_000
     batch_events_at_most: Annotated[int, Key(count(1, 1_000_000), "events in one batch for a sink")] = 50_000
     # A request becomes one record, and 256 MiB may wait for the disk: 128 MiB and 32 bytes for each of 10^6 events fit.
+    batch_bytes_at_most: Annotated[
+        int, Key(size("1KiB", "1GiB"), "bytes of events in one batch for a sink; a longer event is a batch of its own")
+    ] = 32 * MIB
+    id_window_events: Annotated[
+        int, Key(count(0, 100_000_000), "with `id`: a repeat among at least so many last events is recognised")
+    ] = 1_000_000
+    keys_at_most: Annotated[int, Key(count(0, 1_000_000), "Idempotency-Keys whose answers are kept")] = 10_000
+    keys_kept_for_ns: Annotated[int, Key(duration("1s"), "how long a key's answer is kept")] = field(
+        default=24 * 3600 * SECOND_NS, name="keys_kept_for"
+    )
     body_bytes_at_most: Annotated[int, Key(size("1B", "128MiB"), "a request's body as it is sent")] = 16 * MIB
     decoded_bytes_at_most: Annotated[int, Key(size("1B", "128MiB"), "a request's body, decompressed")] = 64 * MIB
     event_bytes_at_most: Annotated[int, Key(size("1B", "128MiB"), "one event; a longer one goes to quarantine")] = MIB
@@ -154,6 +164,10 @@ class Feed(msgspec.Struct, frozen=True):
             undelivered_events_at_most=self.undelivered_events_at_most,
             sources_at_most=self.sources_at_most,
             batch_events_at_most=self.batch_events_at_most,
+            batch_bytes_at_most=self.batch_bytes_at_most,
+            id_window_events=self.id_window_events,
+            keys_at_most=self.keys_at_most,
+            keys_kept_for_ns=self.keys_kept_for_ns,
         )
 
     def body_limits(self) -> BodyLimits:

@@ -25,6 +25,8 @@ REFUSALS: dict[str, tuple[int, str]] = {
     "held_full": (429, "Too many events are held"),
     "journal_full": (429, "The journal has reached its limit"),
     "sources_full": (429, "Too many sources"),
+    "key_in_flight": (409, "The first request with this key is not answered yet"),
+    "key_reused": (422, "This key came before with another body"),
     "lanes_full": (429, "The late lane or the quarantine has reached its limit"),
     "disk_full": (503, "The disk has no room for the journal"),
     "promise_ahead": (422, "The promise lies in the future"),

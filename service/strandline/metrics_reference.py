@@ -148,6 +148,5 @@ def metrics_table() -> str:
     rows = ["| metric | kind | labels | what it tells | what to do |", "| --- | --- | --- | --- | --- |"]
     for name, meaning in METRICS.items():
         labels = ", ".join(("feed", *meaning.labels))
-        shown = f"{name}_total" if meaning.kind == "counter" else name
-        rows.append(f"| `{shown}` | {meaning.kind} | {labels} | {meaning.help} | {meaning.act} |")
+        rows.append(f"| `{name}` | {meaning.kind} | {labels} | {meaning.help} | {meaning.act} |")
     return "\n".join(rows) + "\n"

@@ -1,6 +1,6 @@
 """What can be seen over HTTP: feeds, sources, lanes, the ordered output, health. Reads only; changes nothing.
 
-Times leave as RFC 3339 text, durations in seconds, for people; `*_ns` stay for programs.
+What a feed looks like is written in `documents`.
 """
 
 from __future__ import annotations
@@ -8,137 +8,25 @@ from __future__ import annotations
 import asyncio
 from collections.abc import Iterator
 from dataclasses import asdict
-from typing import Any
 
 import msgspec
 from aiohttp import web
 
-from .core.columns import TIME_MIN, Batch
-from .core.view import HOLD_WHYS, View, sources_of
+from .core.columns import Batch
+from .core.view import sources_of
+from .documents import age_s, feed_document, stalls_of, time_text
 from .errors import JournalError
 from .ingest.endpoint import FEEDS, runtime_of
-from .ingest.timestamps import format_rfc3339
 from .problems import problem
 from .runtime import FeedRuntime
-from .sinks.delivery import DeliveryState
 from .sinks.lanes import late_rows, quarantine_rows
 
 ROWS_AT_MOST = 1000
-STALLED_AFTER_S = 30.0
 KEEPALIVE_S = 15.0
 
 
 def _json(value: object, status: int = 200) -> web.Response:
     return web.Response(status=status, body=msgspec.json.encode(value), content_type="application/json")
-
-
-def _time(time_ns: int | None) -> str | None:
-    return None if time_ns is None or time_ns == TIME_MIN else format_rfc3339(time_ns)
-
-
-def _age_s(now_ns: int, then_ns: int | None) -> float | None:
-    return None if then_ns is None or then_ns == TIME_MIN else round((now_ns - then_ns) / 1e9, 3)
-
-
-def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
-    """One feed, as GET /v1/feeds/{feed} answers it."""
-    view = runtime.view()
-    lengths = sorted(view.open_runs, reverse=True)
-    return {
-        "name": view.name,
-        "now": _time(view.now_ns),
-        "state": state_of(runtime),
-        "failure": runtime.failure,
-        "clock": view.clock,
-        "watermark": _time(view.watermark_ns),
-        "watermark_ns": None if view.watermark_ns == TIME_MIN else view.watermark_ns,
-        "watermark_age_s": _age_s(view.now_ns, view.watermark_ns),
-        "newest": _time(view.newest_ns),
-        "slack_s": view.slack_ns / 1e9,
-        "hold": {
-            "why": view.hold.why,
-            "explanation": HOLD_WHYS[view.hold.why],
-            "source": view.hold_source,
-            "since": _time(view.hold.since_ns),
-            "for_s": _age_s(view.now_ns, view.hold.since_ns),
-        },
-        "held": {
-            "events": view.held_events,
-            "oldest_arrived": _time(view.held_oldest_ns),
-            "oldest_age_s": _age_s(view.now_ns, view.held_oldest_ns),
-            "open_runs": len(lengths),
-            "longest_runs": lengths[:10],
-        },
-        "ledger": {**view.ledger, "balanced": view.balance == 0},
-        "sources": {"known": view.sources, "active": view.sources_active},
-        "last_batch": {lane: number - 1 for lane, number in view.next_number.items()},
-        "marks": view.marks,
-        "refusals": view.refusals,
-        "journal": {
-            "bytes": runtime.journal.bytes_used,
-            "bytes_at_most": runtime.config.journal.at_most_bytes,
-            "first_lsn": runtime.journal.first_lsn,
-            "next_lsn": runtime.feed.next_lsn,
-            "unsynced_bytes": runtime.journal.queued_bytes,
-        },
-        "hops": {
-            name: {
-                "waiting": hop.waiting,
-                "oldest_age_s": _age_s(view.now_ns, hop.oldest_ns),
-                "last_advanced": _time(hop.advanced_ns),
-            }
-            for name, hop in runtime.hops().items()
-        },
-        "sinks": {name: _sink(runtime, view, name) for name in runtime.deliveries},
-    }
-
-
-def state_of(runtime: FeedRuntime) -> str:
-    """In a word: "failed", "stopping", "stalled" or "running"."""
-    if runtime.failure is not None:
-        return "failed"
-    if not runtime.accepting:
-        return "stopping"
-    return "stalled" if stalls_of(runtime) else "running"
-
-
-def stalls_of(runtime: FeedRuntime) -> list[str]:
-    """Sentences about work that waits while nothing advances; empty when all is well."""
-    view, found = runtime.view(), []
-    bound_s = STALLED_AFTER_S + runtime.config.hold_at_most_ns / 1e9
-    held_s = _age_s(view.now_ns, view.held_oldest_ns)
-    if held_s is not None and held_s > bound_s:
-        found.append(f"an event has been held for {held_s:.0f} s, hold_at_most is {bound_s - STALLED_AFTER_S:.0f} s")
-    for name, delivery in runtime.deliveries.items():
-        state = delivery.state()
-        for lane, waiting in state.lanes.items():
-            since = max(waiting.oldest_instant_ns or 0, waiting.advanced_at_ns or 0)
-            waits_s = _age_s(view.now_ns, since) if waiting.batches else None
-            if waits_s is not None and waits_s > STALLED_AFTER_S + delivery.flush_after_s:
-                why = state.last_error or ("it is paused" if state.paused else "it does not answer")
-                found.append(f"sink {name} has taken nothing of lane {lane} for {waits_s:.0f} s: {why}")
-    return found
-
-
-def _sink(runtime: FeedRuntime, view: View, name: str) -> dict[str, Any]:
-    state: DeliveryState = runtime.deliveries[name].state()
-    lanes = {}
-    for lane, waiting in state.lanes.items():
-        lanes[lane] = {
-            "waiting_batches": waiting.batches,
-            "waiting_events": waiting.events,
-            "oldest_age_s": _age_s(view.now_ns, waiting.oldest_instant_ns),
-            "taken_up_to_batch": waiting.reached,
-            "last_advanced": _time(waiting.advanced_at_ns),
-        }
-    return {
-        "lanes": lanes,
-        "connected": state.opened,
-        "paused": state.paused,
-        "failing_since": _time(state.failing_since_ns),
-        "last_error": state.last_error,
-        "retries": state.retries,
-    }
 
 
 async def get_feeds(request: web.Request) -> web.Response:
@@ -160,9 +48,9 @@ async def get_sources(request: web.Request) -> web.Response:
     rows = [
         {
             "source": source.name,
-            "newest": _time(source.newest_ns),
-            "last_heard": _time(source.heard_ns),
-            "silent_s": _age_s(now_ns, source.heard_ns),
+            "newest": time_text(source.newest_ns),
+            "last_heard": time_text(source.heard_ns),
+            "silent_s": age_s(now_ns, source.heard_ns),
             "active": source.active,
             "excused": source.excused,
         }

@@ -45,7 +45,7 @@ def problem(
 def refused(error: Refused) -> web.Response:
     """The answer to a refusal: when to come again is said where coming again helps."""
     status, title = REFUSALS[error.reason]
-    headers = {"Retry-After": str(error.retry_after_s)} if status in (429, 503) else {}
+    headers = {"Retry-After": str(error.retry_after_s)} if status in (409, 429, 503) else {}
     return problem(status, title, error.detail, kind=error.reason, headers=headers)
 
 

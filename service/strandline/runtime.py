@@ -9,12 +9,13 @@ from __future__ import annotations
 import asyncio
 import logging
 import random
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Awaitable, Callable, Mapping, Sequence
+from functools import partial
 from pathlib import Path
 from typing import NamedTuple
 
 from .config import Feed as FeedConfig
-from .core.columns import TIME_MIN, Arrival, Batch, Lane
+from .core.columns import TIME_MIN, Arrival, Batch, Lane, RequestKey
 from .core.effects import Answer, Append, Deliver, Effect, Outcome, Refuse, Sync
 from .core.feed import Feed
 from .core.records import arrival_body_bytes
@@ -91,6 +92,7 @@ class FeedRuntime:
         self._taken_ns: int | None = None
         self._waiters: dict[int, _Waiter] = {}
         self._tokens = 0
+        self._untold: dict[tuple[str, Lane], int] = {}  # positions of sinks that the core was not told yet
         self._house = Housekeeper(self.journal, self.feed, self.commit, self._settle)
         self._housekeeping: asyncio.Task[None] | None = None
 
@@ -159,34 +161,45 @@ class FeedRuntime:
         bell.set()
 
     async def close(self, drain_at_most_s: float) -> None:
-        """Stop in this order: take nothing more; answer who waits on a sync; deliver within the limit; save; close."""
+        """Stop in this order: take nothing more; answer who waits on a sync; deliver within the limit; save; close.
+
+        A write that fails on the way is told as any other, and the rest is done all the same.
+        """
         self.accepting = False
-        if self.failure is None:
-            await self._settle()
+        await self._at_last(self._settle)
         await asyncio.gather(*(delivery.drain(drain_at_most_s) for delivery in self.deliveries.values()))
         if self._housekeeping:
             await self._housekeeping
-        if self.failure is None:
-            try:
-                await self._house.save()
-            except JournalFull as error:
-                log.warning("%s: no snapshot was written at the stop: %s", self.config.name, error)
+        # From here on no sink reports anything, so nothing is appended behind the snapshot.
+        await asyncio.gather(*(delivery.close() for delivery in self.deliveries.values()))
+        await self._at_last(self._house.save)
         await self.commit.close()
-        for delivery in self.deliveries.values():
-            await delivery.close()
         self._refuse_waiters("stopping", "the service is stopping")
-        self.journal.close()
+        try:
+            self.journal.close()
+        except JournalFailed as error:
+            self._failed(error)
+
+    async def _at_last(self, work: Callable[[], Awaitable[None]]) -> None:
+        if not self._started or self.failure is not None:
+            return
+        try:
+            await work()
+        except JournalFull as error:
+            log.warning("%s: no snapshot was written at the stop: %s", self.config.name, error)
+        except JournalFailed as error:
+            self._failed(error)
 
     # ---- inputs ---------------------------------------------------------------------------------------------------
 
-    async def arrive(self, arrival: Arrival) -> Outcome:
+    async def arrive(self, arrival: Arrival, key: RequestKey | None = None) -> Outcome:
         """Hand one request to the core and wait until it is durable. Raises Refused."""
         self._check_open()
         self._check_lanes()
         names = sum(len(name.encode()) + 8 for name in arrival.new_sources)
         self._reserve([arrival_body_bytes(arrival), SMALL_RECORD_BYTES, SMALL_RECORD_BYTES, names])
         now_ns = self.clock.now_ns()
-        outcome = await self._ask(lambda token: self.feed.arrive(arrival, now_ns, token), now_ns, arrival.received)
+        outcome = await self._ask(lambda token: self.feed.arrive(arrival, now_ns, token, key), now_ns, arrival.received)
         assert outcome is not None
         return outcome
 
@@ -203,18 +216,26 @@ class FeedRuntime:
         self.decoder = decoder_of(config)
         served = {name: delivery.lanes for name, delivery in self.deliveries.items()}
         if self._has_headroom():
-            self.carry_out(self.feed.start(self.clock.now_ns(), served, settings=config.settings()))
+            self._do(lambda: self.feed.start(self.clock.now_ns(), served, settings=config.settings()))
 
     def tick(self) -> None:
         """Time has gone on."""
+        if self.accepting:
+            self._tell_positions()
         if self.accepting and self.failure is None and self._has_headroom():
-            self.carry_out(self.feed.tick(self.clock.now_ns()))
+            self._do(lambda: self.feed.tick(self.clock.now_ns()))
             self._keep_house()
 
     def _taken(self, sink: str, lane: Lane, number: int) -> None:
         self._taken_ns = self.clock.now_ns()
-        if self.failure is None and self._has_headroom():
-            self.carry_out(self.feed.taken(sink, lane, number, self.clock.now_ns()))
+        self._untold[sink, lane] = number
+        self._tell_positions()
+
+    def _tell_positions(self) -> None:
+        """Tell the core how far sinks are; what finds no room in the journal waits for the next tick."""
+        while self._untold and self.failure is None and self._has_headroom():
+            (sink, lane), number = self._untold.popitem()
+            self._do(partial(self.feed.taken, sink, lane, number, self.clock.now_ns()))
 
     async def _refused(self, sink: str, batches: Sequence[Batch], detail: str) -> None:
         # Nothing is let go before it is kept somewhere else: until then it waits, and the sink's error says why.
@@ -224,8 +245,16 @@ class FeedRuntime:
         self._tokens += 1
         future: asyncio.Future[Outcome | None] = asyncio.get_running_loop().create_future()
         self._waiters[self._tokens] = _Waiter(future, now_ns, events)
-        self.carry_out(ask(self._tokens))
+        self._do(partial(ask, self._tokens))
         return await future
+
+    def _do(self, ask: Callable[[], list[Effect]]) -> None:
+        """Let the core decide, and carry it out. An error on the way is final: state and journal may differ by then."""
+        try:
+            self.carry_out(ask())
+        except Exception as error:
+            log.exception("%s: an unforeseen error", self.config.name)
+            self._failed(error)
 
     def _check_open(self) -> None:
         if self.failure is not None:
@@ -305,12 +334,14 @@ class FeedRuntime:
         bell, self._synced = self._synced, asyncio.Event()
         bell.set()
         self._synced_ns = self.clock.now_ns()
-        self.carry_out(self.feed.synced(lsn))
+        self._do(partial(self.feed.synced, lsn))
 
     def _failed(self, error: Exception) -> None:
-        self.failure = str(error)
+        if self.failure is not None:
+            return
+        self.failure = str(error) or type(error).__name__
         self._synced.set()
-        self._refuse_waiters("failed", f"a write failed and nothing more is accepted until a restart: {error}")
+        self._refuse_waiters("failed", f"nothing more is accepted until a restart: {self.failure}")
         self._on_failed(self.config.name, error)
 
     def _refuse_waiters(self, reason: str, detail: str) -> None:
@@ -323,7 +354,6 @@ class FeedRuntime:
 
     def _keep_house(self) -> None:
         if self._housekeeping and self._housekeeping.done():
-            self._housekeeping.result()
             self._housekeeping = None
         if self._housekeeping is None and (self._house.due(self._segment_bytes) or self._lanes_full()):
             self._housekeeping = asyncio.create_task(self._keep_house_now())
@@ -335,10 +365,12 @@ class FeedRuntime:
             if self._lanes_full():
                 await self.lane_store.measure()  # somebody may have removed what is settled
         except JournalFailed as error:
-            if self.failure is None:
-                self._failed(error)
+            self._failed(error)
         except StrandlineError as error:
             log.warning("%s: %s", self.config.name, error)
+        except Exception as error:
+            log.exception("%s: an unforeseen error while keeping house", self.config.name)
+            self._failed(error)
 
     @property
     def _segment_bytes(self) -> int:

@@ -7,7 +7,6 @@ import mmap
 import google_crc32c
 import numpy as np
 import pytest
-
 from strandline.journal.frame import extend_crc
 
 # RFC 3720, appendix B.4 ("CRC Examples"). The RFC prints the four CRC bytes in the order in which they are sent,
@@ -20,7 +19,8 @@ RFC_3720_B4 = [
     (
         "an iSCSI - SCSI Read (10) Command PDU",
         bytes.fromhex(
-            "01c00000 00000000 00000000 00000000 14000000 00000400 00000014 00000018 28000000 00000000 02000000 00000000"
+            "01c00000 00000000 00000000 00000000 14000000 00000400 00000014 00000018 "
+            "28000000 00000000 02000000 00000000"
         ),
         "563a96d9",
     ),
@@ -30,7 +30,8 @@ RFC_3720_B4 = [
 @pytest.mark.parametrize(("data", "sent"), [row[1:] for row in RFC_3720_B4], ids=[row[0] for row in RFC_3720_B4])
 def test_rfc_3720_vectors(data: bytes, sent: str) -> None:
     expected = int.from_bytes(bytes.fromhex(sent), "little")
-    for buffer in (data, bytearray(data), memoryview(data), memoryview(bytearray(data)), np.frombuffer(data, "<u4").data):
+    words = np.frombuffer(data, "<u4").data
+    for buffer in (data, bytearray(data), memoryview(data), memoryview(bytearray(data)), words):
         assert extend_crc(0, buffer) == expected
     for cut in range(1, len(data)):
         assert extend_crc(extend_crc(0, data[:cut]), memoryview(data)[cut:]) == expected

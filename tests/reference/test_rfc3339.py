@@ -275,6 +275,7 @@ def _one(text):
 @given(st.lists(_texts(), max_size=60) | st.tuples(_texts(), st.integers(0, 40)).map(lambda pair: [pair[0]] * pair[1]))
 @example(["2026-01-31T00:00:00Z\n2026-01-31T00:00:01Z"] + ["2026-01-31T00:00:00Z"] * 18 + [""])
 @example(["2026-01-31T00:00:00Z"] * 19 + ["2026-01-31T00:00:0\n"])
+@example([*["2026-01-31T00:00:00Z"] * 12, "2026-01-31T00:00:00Z\n2026-01-31T00:00:00Z", "", "2026-01-31T00:00:00"])
 @example(["2026-01-31T00:00:00Z\n", "2026-01-31T00:00:0Z", *["2026-01-31T00:00:00Z"] * 18])
 def test_column_and_scalar_agree(texts):
     found, errors = parse_rfc3339_column(texts)

@@ -8,7 +8,6 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-
 from strandline.core.records import frame_bytes
 from strandline.journal.frame import decode_frame, encode_frame, flatten, intact_end, next_intact, octets
 

@@ -8,7 +8,6 @@ from pathlib import Path
 
 from helpers_journal import append, ends, opened, records_of
 from simdisk import Faults, SimDisk
-
 from strandline.errors import JournalFailed
 from strandline.journal.commit import GroupCommit
 from strandline.journal.counters import SYNC_BOUNDS_S, Counters

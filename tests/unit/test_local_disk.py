@@ -11,7 +11,6 @@ from collections.abc import Sequence
 from pathlib import Path
 
 import pytest
-
 from strandline.errors import JournalError
 from strandline.journal.disk import LocalDisk, reserve, write_all, write_zeros
 

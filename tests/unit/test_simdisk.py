@@ -8,7 +8,6 @@ from pathlib import Path
 import pytest
 from helpers_journal import seeded
 from simdisk import SECTOR_BYTES, SimDisk
-
 from strandline.journal.disk import LocalDisk
 
 

@@ -69,6 +69,14 @@ class Arrival:
 
 
 @dataclass(frozen=True, slots=True)
+class RequestKey:
+    """A request's idempotency key, and a fingerprint of what it brought."""
+
+    text: str
+    fingerprint: bytes
+
+
+@dataclass(frozen=True, slots=True)
 class QuarantineEntry:
     """Why one line is in quarantine, and where in the journal it lies."""
 

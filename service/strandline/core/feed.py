@@ -12,13 +12,14 @@ from collections.abc import Mapping, Sequence
 
 import numpy as np
 
-from .columns import NO_SOURCE, TIME_MIN, Arrival, Lane
+from .columns import NO_SOURCE, TIME_MIN, Arrival, Lane, RequestKey
 from .effects import Answer, Append, Buffer, Deliver, Effect, Outcome, Refuse, Sync
 from .records import (
     VERSION,
     Cause,
     ExcuseRecord,
     IdleRecord,
+    KeyRecord,
     Kind,
     Mark,
     NumbersRecord,
@@ -140,9 +141,14 @@ class Feed:
 
     # ---- inputs ---------------------------------------------------------------------------------------------------
 
-    def arrive(self, arrival: Arrival, now_ns: int, token: int) -> list[Effect]:
-        """One request came. Answered, or refused whole, under its token. Raises ValueError if it contradicts itself."""
+    def arrive(self, arrival: Arrival, now_ns: int, token: int, key: RequestKey | None = None) -> list[Effect]:
+        """One request came. Answered, or refused whole, under its token. Raises ValueError if it contradicts itself.
+
+        A request whose key came before is not taken again: it gets the first one's answer, or is refused.
+        """
         _require_consistent(arrival, self.state.sources.numbers)
+        if key is not None and (known := self._known(key, self._now(now_ns), token)):
+            return [known]
         refusal = self._refusal(arrival, token)
         if refusal:
             self.note_refusal(refusal.reason)
@@ -155,6 +161,8 @@ class Feed:
         if arrival.new_sources:
             names = list(arrival.new_sources)
             self._record(effects, SourcesRecord(len(self.state.sources.names), names))
+        if key is not None:
+            self._record(effects, KeyRecord(now, key.text, key.fingerprint))
         lsn = self.next_lsn
         self._append(effects, Kind.ARRIVAL, arrival_parts(arrival, now))
         outcome, batches = self.state.fold_arrival(arrival_body(arrival, now, lsn), self.next_lsn)
@@ -224,6 +232,20 @@ class Feed:
 
     # ---- decisions ------------------------------------------------------------------------------------------------
 
+    def _known(self, key: RequestKey, now: int, token: int) -> Answer | Refuse | None:
+        kept = self.state.keys.find(key.text, now - self.state.settings.keys_kept_for_ns)
+        if kept is None:
+            return None
+        if kept.fingerprint != key.fingerprint:
+            detail = f"the key {key.text[:100]!r} came before with another body: use a new key for a new body"
+            self.note_refusal("key_reused")
+            return Refuse(token, "key_reused", detail, 0)
+        if kept.end_lsn > self.durable_lsn:
+            detail = f"a request with the key {key.text[:100]!r} is being worked on: ask again for its answer"
+            self.note_refusal("key_in_flight")
+            return Refuse(token, "key_in_flight", detail, 1)
+        return Answer(token, kept.outcome)
+
     def _refusal(self, arrival: Arrival, token: int) -> Refuse | None:
         state = self.state
         held, limit = state.runs.held + len(arrival.times), state.settings.held_events_at_most
@@ -271,6 +293,7 @@ class Feed:
             batch_events_at_most=state.settings.batch_events_at_most,
             source=best.source,
             cause=best.cause,
+            batch_bytes_at_most=state.settings.batch_bytes_at_most,
         )
         self._append(effects, Kind.MARK, [encode_mark(mark)])
         for batch in state.fold_mark(mark, self.next_lsn):

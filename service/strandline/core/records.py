@@ -10,6 +10,7 @@ import struct
 from collections.abc import Sequence
 from dataclasses import dataclass
 from enum import IntEnum
+from typing import Any
 
 import msgspec
 import numpy as np
@@ -23,7 +24,8 @@ FRAME_HEADER_BYTES = 16
 VERSION = 1
 # arrived_ns, events, faults, flags, bytes of the faults' table, bytes of the payload
 _ARRIVAL = struct.Struct("<qIIIIQ")
-_MARK = struct.Struct("<qqQIIB7x")  # decided_ns, watermark_ns, first batch, events a batch, source, cause
+# decided_ns, watermark_ns, first batch, events a batch, source, cause, bytes a batch
+_MARK = struct.Struct("<qqQIIBxxxI")
 SMALL_EVENTS = 64  # columns up to this length are copied together: a memoryview costs as much as copying 3 kB
 _HAS_IDENTITIES = 1
 _HAS_LINE_NUMBERS = 2
@@ -46,6 +48,7 @@ class Kind(IntEnum):
     EXCUSE = 7
     NUMBERS = 8
     IDLE = 9
+    KEY = 10
 
 
 class Cause(IntEnum):
@@ -117,9 +120,17 @@ class IdleRecord(msgspec.Struct, frozen=True, array_like=True):
     now_ns: int
 
 
+class KeyRecord(msgspec.Struct, frozen=True, array_like=True):
+    """The arrival record that follows came under this idempotency key, with a body of this fingerprint."""
+
+    now_ns: int
+    key: str
+    fingerprint: bytes
+
+
 @dataclass(frozen=True, slots=True)
 class Mark:
-    """A step of the watermark. Its release is numbered from `first_batch` in batches of `batch_events_at_most`."""
+    """A step of the watermark. Its release is numbered from `first_batch`, in batches within the two limits."""
 
     decided_ns: int
     watermark_ns: int
@@ -127,6 +138,7 @@ class Mark:
     batch_events_at_most: int
     source: int  # the source whose newest event the step follows; NO_SOURCE if none
     cause: Cause
+    batch_bytes_at_most: int = 2**32 - 1  # of lines; a batch holds one event at least
 
 
 class FaultRow(msgspec.Struct, frozen=True, array_like=True):
@@ -161,8 +173,18 @@ SMALL_KINDS = {
     Kind.EXCUSE: ExcuseRecord,
     Kind.NUMBERS: NumbersRecord,
     Kind.IDLE: IdleRecord,
+    Kind.KEY: KeyRecord,
 }
-SmallRecord = SettingsRecord | SourcesRecord | TakenRecord | PromiseRecord | ExcuseRecord | NumbersRecord | IdleRecord
+SmallRecord = (
+    SettingsRecord
+    | SourcesRecord
+    | TakenRecord
+    | PromiseRecord
+    | ExcuseRecord
+    | NumbersRecord
+    | IdleRecord
+    | KeyRecord
+)
 _KIND_OF = {struct_type: kind for kind, struct_type in SMALL_KINDS.items()}
 _pack = msgspec.msgpack.Encoder().encode
 _unpack_faults = msgspec.msgpack.Decoder(list[FaultRow]).decode
@@ -183,14 +205,20 @@ def decode_small(kind: Kind, body: Buffer) -> SmallRecord:
 def encode_mark(mark: Mark) -> bytes:
     """A mark's body, 40 bytes."""
     return _MARK.pack(
-        mark.decided_ns, mark.watermark_ns, mark.first_batch, mark.batch_events_at_most, mark.source, mark.cause
+        mark.decided_ns,
+        mark.watermark_ns,
+        mark.first_batch,
+        mark.batch_events_at_most,
+        mark.source,
+        mark.cause,
+        mark.batch_bytes_at_most,
     )
 
 
 def decode_mark(body: Buffer) -> Mark:
     """The mark behind a body. Raises struct.error or ValueError."""
-    decided, watermark, first, at_most, source, cause = _MARK.unpack(body)
-    return Mark(decided, watermark, first, at_most, source, Cause(cause))
+    decided, watermark, first, events, source, cause, octets = _MARK.unpack(body)
+    return Mark(decided, watermark, first, events, source, Cause(cause), octets)
 
 
 def arrival_parts(arrival: Arrival, arrived_ns: int) -> list[Buffer]:
@@ -240,7 +268,7 @@ def decode_arrival(body: Buffer, lsn: int) -> ArrivalBody:
     arrived_ns, events, faults, flags, table_bytes, payload_bytes = _ARRIVAL.unpack_from(body)
     offset = _ARRIVAL.size
 
-    def column(present: bool, dtype: str) -> NDArray[np.generic] | None:
+    def column(present: bool, dtype: str) -> NDArray[Any] | None:
         nonlocal offset
         if not present:
             return None
@@ -258,6 +286,6 @@ def decode_arrival(body: Buffer, lsn: int) -> ArrivalBody:
     if len(body) != offset + payload_bytes + sum(row.length for row in rows) + table_bytes:
         raise ValueError(f"an arrival record of {len(body)} bytes does not hold what it says")
     place = lsn + FRAME_HEADER_BYTES + offset
-    return ArrivalBody(
-        arrived_ns, times, lengths, sources, line_numbers, identities, rows, place, place + payload_bytes  # type: ignore[arg-type]
-    )  # fmt: skip
+    assert times is not None and lengths is not None and sources is not None
+    faults_place = place + payload_bytes
+    return ArrivalBody(arrived_ns, times, lengths, sources, line_numbers, identities, rows, place, faults_place)

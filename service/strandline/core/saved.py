@@ -12,8 +12,9 @@ import msgspec
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import REF, Batch, QuarantineEntry, as_rows, empty_refs, empty_times
-from .effects import Buffer
+from .columns import REF, TIME_MIN, Batch, QuarantineEntry, as_rows, empty_refs, empty_times
+from .effects import Buffer, Outcome
+from .keys import Kept
 from .outbox import LANES
 from .records import Cause
 from .runs import Strand, joined
@@ -61,6 +62,8 @@ def save(state: State) -> list[Buffer]:
         columns.put(column[:count].copy())
     for column in state.arrivals.columns():
         columns.put(column.copy())
+    for identities in state.seen.columns():
+        columns.put(identities)
     for run in state.runs.runs:
         strand = joined(list(run.chunks))
         columns.put(strand.times)
@@ -80,6 +83,7 @@ def save(state: State) -> list[Buffer]:
         "next_number": state.outbox.next_number,
         "positions": state.outbox.positions,
         "batches": batches,
+        "keys": [[key, k.fingerprint, k.outcome, k.arrived_ns, k.end_lsn] for key, k in state.keys.kept.items()],
         "figures": [
             [getattr(state.figures, name).counts.tolist(), getattr(state.figures, name).total] for name in _FIGURES
         ],
@@ -120,6 +124,10 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
     active, excused = columns.get(np.bool_), columns.get(np.bool_)
     state.sources.restore(header["names"], newest, heard, active, excused, header["newest_ns"])
     state.arrivals.restore(columns.get(np.int64), columns.get(np.int64), columns.get(np.int64))
+    state.seen.restore(columns.get(np.uint64), columns.get(np.uint64))
+    for key, fingerprint, outcome, arrived_ns, end_lsn in header["keys"]:
+        kept = Kept(fingerprint, msgspec.convert(outcome, Outcome), arrived_ns, end_lsn)
+        state.keys.keep(key, kept, len(header["keys"]), TIME_MIN)
     for _ in range(header["runs"]):
         state.runs.reopen(Strand(columns.get(np.int64), as_rows(columns.get(REF))))
     state.runs.opened = header["opened"]

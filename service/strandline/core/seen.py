@@ -107,5 +107,5 @@ class Seen:
         """Assert counts and that every identity is found."""
         for generation in (self._younger, self._older):
             values = generation.values()
-            assert len(values) == generation.count == len(np.unique(values)) <= max(self.window, 0)
+            assert len(values) == generation.count == len(np.unique(values))
             assert 2 * generation.count <= len(generation.slots) and bool(np.all(generation.has(values)))

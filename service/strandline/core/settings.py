@@ -26,3 +26,7 @@ class Settings(msgspec.Struct, frozen=True, forbid_unknown_fields=True):
     undelivered_events_at_most: int = 2_000_000  # released, not yet taken by every sink; beyond it no mark is set
     sources_at_most: int = 100_000
     batch_events_at_most: int = 50_000
+    batch_bytes_at_most: int = 32 << 20  # of lines in one batch; a longer line is a batch of its own
+    id_window_events: int = 1_000_000  # with an id: a repeat among at least so many last events is recognised
+    keys_at_most: int = 10_000  # idempotency keys whose answers are kept
+    keys_kept_for_ns: int = 24 * 3600 * SECOND_NS

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -30,6 +31,7 @@ from .columns import (
 )
 from .effects import AnswerFault, Outcome
 from .histogram import POWERS, SECONDS_NS, Histogram
+from .keys import Kept, Keys
 from .ledger import Ledger
 from .merge import Merger
 from .outbox import Outbox
@@ -38,6 +40,7 @@ from .records import (
     Cause,
     ExcuseRecord,
     IdleRecord,
+    KeyRecord,
     Mark,
     NumbersRecord,
     PromiseRecord,
@@ -47,6 +50,7 @@ from .records import (
     TakenRecord,
 )
 from .runs import OpenRuns, runs_of
+from .seen import Seen
 from .settings import Settings
 from .slack import FixedSlack
 from .sources import Sources
@@ -82,6 +86,9 @@ class State:
         self.hold = HoldBound()
         self.outbox = Outbox()
         self.ledger = Ledger()
+        self.seen = Seen(settings.id_window_events)
+        self.keys = Keys()
+        self._key: KeyRecord | None = None  # of the arrival record that must follow
         self.figures = Figures(Histogram(SECONDS_NS), Histogram(SECONDS_NS), Histogram(POWERS))
 
     def fold_small(self, record: SmallRecord) -> None:
@@ -102,11 +109,15 @@ class State:
                 self.outbox.next_number[record.lane] = max(self.outbox.next_number[record.lane], record.next_number)
             case IdleRecord():
                 pass  # what it says is what `advance` does
+            case KeyRecord():
+                self._key = record
         self.advance(record.now_ns)
 
     def _fold_settings(self, record: SettingsRecord) -> None:
         before, self.settings = self.settings, record.settings
         self.slack.slack_ns = record.settings.slack_ns
+        self.seen.window = record.settings.id_window_events
+        self._key = None  # a crash may have cut off the arrival that it announced
         self.outbox.serve(record.sinks, record.positions)
         expected: Sequence[str] = record.settings.expect_sources
         if record.resumed:
@@ -128,13 +139,15 @@ class State:
         self.advance(body.arrived_ns)
         self.figures.arrivals += 1
         received = len(body.times) + len(body.faults)
-        times, refs = body.times, _refs(body)
+        times, refs, identities = body.times, _refs(body), body.identities
         batches: list[Batch] = []
         entries = _faulty(body)
+        duplicate = late = 0
         if len(times):
-            times, refs, ahead = self._without_ahead(body, times, refs)
+            times, refs, identities, ahead = self._without_ahead(body, times, refs)
             entries += ahead
-        late = 0
+        if len(times) and identities is not None and self.seen.window:
+            times, refs, duplicate = self._without_repeats(times, refs, identities, body.arrived_ns)
         if len(times):
             oldest = least_of(times)
             self._note_lateness(times, oldest)
@@ -152,16 +165,39 @@ class State:
         ledger = self.ledger
         ledger.received += received
         ledger.late += late
+        ledger.duplicate += duplicate
         ledger.quarantined += len(entries)
         ledger.buffered += len(times)
         faults = [AnswerFault(entry.line, entry.reason, entry.detail) for entry in entries]
         faults.sort(key=lambda fault: fault.line)
-        return Outcome(received, len(times), late, 0, len(entries), faults), batches
+        outcome = Outcome(received, len(times), late, duplicate, len(entries), faults)
+        self._keep_answer(outcome, body.arrived_ns, end_lsn)
+        return outcome, batches
 
-    def _without_ahead(self, body: ArrivalBody, times: Times, refs: Refs) -> tuple[Times, Refs, list[QuarantineEntry]]:
+    def _keep_answer(self, outcome: Outcome, arrived_ns: int, end_lsn: int) -> None:
+        key, self._key = self._key, None
+        if key is not None:
+            kept = Kept(key.fingerprint, outcome, arrived_ns, end_lsn)
+            settings = self.settings
+            self.keys.keep(key.key, kept, settings.keys_at_most, arrived_ns - settings.keys_kept_for_ns)
+
+    def _without_repeats(
+        self, times: Times, refs: Refs, identities: NDArray[np.uint64], arrived_ns: int
+    ) -> tuple[Times, Refs, int]:
+        first = self.seen.first_time(identities)
+        repeats = len(first) - int(np.count_nonzero(first))
+        if not repeats:
+            return times, refs, 0
+        self.sources.hear(refs["source"], times, arrived_ns)  # a repeat is a word of its source too
+        return *_pick(times, refs, first), repeats
+
+    def _without_ahead(
+        self, body: ArrivalBody, times: Times, refs: Refs
+    ) -> tuple[Times, Refs, NDArray[np.uint64] | None, list[QuarantineEntry]]:
+        identities = body.identities
         bound = body.arrived_ns + self.settings.ahead_limit_ns
         if greatest_of(times) <= bound:
-            return times, refs, []
+            return times, refs, identities, []
         ahead = times > bound
         found = []
         for index in np.flatnonzero(ahead).tolist():
@@ -170,7 +206,7 @@ class State:
             detail = f"the event time lies {seconds:.3f} s beyond the arrival clock"
             ref = refs[index]
             found.append(QuarantineEntry(line, "ahead", detail, int(ref["place"]), int(ref["length"])))
-        return *_pick(times, refs, ~ahead), found
+        return *_pick(times, refs, ~ahead), None if identities is None else identities[~ahead], found
 
     def _without_late(self, times: Times, refs: Refs, arrived_ns: int, end_lsn: int) -> tuple[Times, Refs, Batch]:
         late = times < self.watermark_ns
@@ -184,8 +220,8 @@ class State:
 
     def _note_lateness(self, times: Times, oldest: int) -> None:
         newest = self.sources.newest_ns
-        if oldest >= newest:
-            self.figures.lateness.add_same(0, len(times))
+        if oldest >= newest or len(times) == 1:
+            self.figures.lateness.add_same(min(max(newest - oldest, 0), TIME_MAX), len(times))
         else:
             # int64 times can lie further apart than int64 holds; uint64 holds every distance.
             lateness = (np.uint64(newest % 2**64) - np.minimum(times, newest).view(np.uint64)).view(np.int64)
@@ -223,17 +259,10 @@ class State:
 
     def _batches(self, times: Times, refs: Refs, mark: Mark, end_lsn: int) -> list[Batch]:
         assert mark.first_batch == self.outbox.next_number["ordered"]
-        size = mark.batch_events_at_most
+        bounds = _bounds(refs["length"], mark.batch_events_at_most, mark.batch_bytes_at_most)
         return [
-            Batch(
-                "ordered",
-                mark.first_batch + index,
-                times[start : start + size],
-                refs[start : start + size],
-                mark.decided_ns,
-                end_lsn,
-            )
-            for index, start in enumerate(range(0, len(times), size))
+            Batch("ordered", mark.first_batch + index, times[start:stop], refs[start:stop], mark.decided_ns, end_lsn)
+            for index, (start, stop) in enumerate(pairwise(bounds))
         ]
 
     def check(self) -> None:
@@ -243,6 +272,8 @@ class State:
         self.sources.check()
         self.arrivals.check(self.runs.held)
         self.outbox.check()
+        self.seen.check()
+        self.keys.check()
         head = self.runs.head_ns
         assert head is None or head >= self.watermark_ns, "held behind the watermark"
 
@@ -272,3 +303,18 @@ def _faulty(body: ArrivalBody) -> list[QuarantineEntry]:
         entries.append(QuarantineEntry(row.line, row.reason, row.detail, place, row.length))
         place += row.length
     return entries
+
+
+def _bounds(lengths: NDArray[np.uint32], events_at_most: int, bytes_at_most: int) -> list[int]:
+    """Where batches begin and end, so that each is within both limits or a single event."""
+    rows = len(lengths)
+    if rows <= events_at_most and int(lengths.sum(dtype=np.int64)) <= bytes_at_most:
+        return [0, rows]
+    ends = np.cumsum(lengths, dtype=np.int64)
+    bounds = [0]
+    while bounds[-1] < rows:
+        start = bounds[-1]
+        before = int(ends[start - 1]) if start else 0
+        within = int(np.searchsorted(ends, before + bytes_at_most, side="right"))
+        bounds.append(min(rows, start + events_at_most, max(within, start + 1)))
+    return bounds

@@ -80,6 +80,8 @@ class View:
     gallops: int
     merges: int
     refusals: dict[str, int]
+    identities_known: int
+    keys_kept: int
 
 
 def hold_of(state: State, before: Hold, now_ns: int) -> Hold:
@@ -140,6 +142,8 @@ def view_of(state: State, hold: Hold, now_ns: int, refusals: dict[str, int]) -> 
         gallops=counts.gallops,
         merges=counts.merges,
         refusals=refusals,
+        identities_known=state.seen.known,
+        keys_kept=len(state.keys.kept),
     )
 
 

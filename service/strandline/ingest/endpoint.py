@@ -6,6 +6,8 @@ Reads bodies within limits and hands columns to the feed. What is accepted, late
 from __future__ import annotations
 
 import asyncio
+import hashlib
+import re
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import asdict
@@ -15,6 +17,7 @@ import msgspec
 from aiohttp import web
 
 from ..config import Config
+from ..core.columns import RequestKey
 from ..errors import BodyError
 from ..hops import Bodies
 from ..problems import NotThere
@@ -28,6 +31,8 @@ BODIES = web.AppKey("bodies", asyncio.Semaphore)
 BODY_WITHIN_S = 60.0
 ACT_BYTES_AT_MOST = 16 * 1024
 REASON_CHARACTERS_AT_MOST = 500
+KEY_CHARACTERS_AT_MOST = 1024
+_KEY = re.compile(r'"((?:[\x20-\x21\x23-\x5b\x5d-\x7e]|\\["\\])*)"')
 Act = TypeVar("Act", bound=msgspec.Struct)
 
 
@@ -65,9 +70,29 @@ async def post_events(request: web.Request) -> web.Response:
             encodings = ",".join(request.headers.getall("Content-Encoding", []))
             decoded = decompress(body, encodings, runtime.config.decoded_bytes_at_most)
             arrival = runtime.decoder.decode(decoded, media_type, runtime.feed.state.sources.numbers)
+            key = request_key(request.headers.getall("Idempotency-Key", []), media_type, decoded)
         # Nothing awaits between decoding and the core: the numbers of new sources are still right.
-        outcome = await runtime.arrive(arrival)
+        outcome = await runtime.arrive(arrival, key)
     return web.Response(body=msgspec.json.encode(asdict(outcome)), content_type="application/json")
+
+
+def request_key(headers: list[str], media_type: str, body: bytes) -> RequestKey | None:
+    """The idempotency key of a request, a structured-field String (RFC 8941 3.3.3), quotes and all.
+
+    Header and meaning: the IETF draft "The Idempotency-Key HTTP Header Field". Raises BodyError 400.
+    """
+    if not headers:
+        return None
+    match = _KEY.fullmatch(headers[0].strip(" \t"))
+    text = re.sub(r"\\(.)", r"\1", match[1]) if match else ""
+    if len(headers) > 1 or not 1 <= len(text) <= KEY_CHARACTERS_AT_MOST:
+        detail = (
+            f"Idempotency-Key must be one text of 1 to {KEY_CHARACTERS_AT_MOST} printable ASCII characters in double "
+            'quotes, such as "8e03978e-40d5-43e8-bc93-6894a57f9324"'
+        )
+        raise BodyError(400, "Bad Request", detail)
+    fingerprint = hashlib.blake2b(media_type.encode() + b"\0" + body, digest_size=16).digest()
+    return RequestKey(text, fingerprint)
 
 
 @contextmanager

