@@ -11,7 +11,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
-from strandline.core.columns import Arrival, Batch, Fault, Lane
+from strandline.core.columns import Arrival, Batch, Fault, Lane, RequestKey
 from strandline.core.effects import Answer, Append, Deliver, Effect, Outcome, Refuse, Sync
 from strandline.core.feed import Feed
 from strandline.core.records import FRAME_HEADER_BYTES, VERSION, Kind, decode_arrival, decode_mark, frame_bytes
@@ -43,6 +43,7 @@ def arrival(
     new_sources: Sequence[str] = (),
     line_numbers: Sequence[int] | None = None,
     faults: Sequence[Fault] = (),
+    identities: Sequence[int] | None = None,
 ) -> Arrival:
     """An arrival from plain lists; without lines, event i's line is the text of i."""
     count = len(times)
@@ -56,6 +57,7 @@ def arrival(
         new_sources=new_sources,
         line_numbers=None if line_numbers is None else np.array(line_numbers, dtype=np.int64),
         faults=faults,
+        identities=None if identities is None else np.array(identities, dtype=np.uint64),
     )
 
 
@@ -92,15 +94,27 @@ class Shell:
 
     # ---- inputs ---------------------------------------------------------------------------------------------------
 
-    def send(self, given: Arrival, now_ns: int) -> Outcome | None:
+    def send(self, given: Arrival, now_ns: int, key: RequestKey | None = None) -> Outcome | None:
         """One request; its answer's counts if it was answered at once, None if it waits or was refused."""
         self.tokens += 1
-        self.requests[self.tokens] = given
-        self.do(self.feed.arrive(given, now_ns, self.tokens))
+        before = len(self.records)
+        effects = self.feed.arrive(given, now_ns, self.tokens, key)
+        self.do(effects)
+        if any(
+            record.kind == Kind.ARRIVAL for record in self.records[before:]
+        ):  # else refused, or answered from memory
+            self.requests[self.tokens] = given
         return self.answers.get(self.tokens)
 
     def events(
-        self, times: Sequence[int], now_ns: int, source: str | Sequence[str] = "gw-0", faults: Sequence[Fault] = ()
+        self,
+        times: Sequence[int],
+        now_ns: int,
+        source: str | Sequence[str] = "gw-0",
+        faults: Sequence[Fault] = (),
+        *,
+        identities: Sequence[int] | None = None,
+        key: RequestKey | None = None,
     ) -> Outcome | None:
         """Events of named sources; event i of the request gets a line that no other event has."""
         named = [source] * len(times) if isinstance(source, str) else list(source)
@@ -108,7 +122,8 @@ class Shell:
         new = [name for name in dict.fromkeys(named) if name not in known]
         numbers = [known[name] if name in known else len(known) + new.index(name) for name in named]
         lines = [f"{self.tokens + 1}.{index}".encode() for index in range(len(times))]
-        return self.send(arrival(times, numbers, lines=lines, new_sources=new, faults=faults), now_ns)
+        made = arrival(times, numbers, lines=lines, new_sources=new, faults=faults, identities=identities)
+        return self.send(made, now_ns, key)
 
     def act(self, name: str, *arguments: object, now_ns: int) -> int:
         """promise(source, time_ns), excuse(source, reason) or drain(); its token."""
@@ -175,11 +190,10 @@ class Shell:
         return [time for batch in self.batches[lane] for time in batch.times.tolist()]
 
     def taken_in(self) -> list[tuple[int, bytes]]:
-        """(event time, line) of every event whose request was answered, in order of arrival."""
+        """(event time, line) of every event that was journaled, in order of arrival."""
         rows = []
-        for token, given in self.requests.items():
-            if token in self.answers:
-                rows += zip(given.times.tolist(), bytes(given.payload).split(b"\n")[:-1], strict=True)
+        for given in self.requests.values():
+            rows += zip(given.times.tolist(), bytes(given.payload).split(b"\n")[:-1], strict=True)
         return rows
 
     # ---- folding again --------------------------------------------------------------------------------------------

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import random
 from collections.abc import Callable, Iterable
+from pathlib import Path
 
 from strandline.core.records import frame_bytes
 from strandline.journal.journal import Journal
@@ -13,6 +14,7 @@ FEED = "feeds/river-gauges"
 SMALL = {"segment_bytes": 4096, "journal_bytes_at_most": 1 << 20}
 
 Record = tuple[int, bytes]  # kind, body
+LEVELS: list[Record] = [(3, b'{"station":"weir-%d","level":1.5}\n' % number * 5) for number in range(60)]
 
 
 def opened(disk: Disk, directory: str = FEED, **limits: int) -> Journal:
@@ -69,3 +71,20 @@ def lines_body(*lines: bytes) -> bytes:
 def seeded(seed: int) -> Callable[[int], int]:
     """Choices for SimDisk.crash that the same seed repeats."""
     return random.Random(seed).randrange
+
+
+def folder(tmp_path: Path) -> list[str]:
+    """Names in the feed's directory."""
+    return sorted(path.name for path in (tmp_path / FEED).iterdir())
+
+
+def segment_files(tmp_path: Path) -> list[Path]:
+    """The feed's segments, oldest first."""
+    return sorted((tmp_path / FEED).glob("journal-*.seg"))
+
+
+def flip(path: Path, offset: int, bit: int = 0) -> None:
+    """Damage one bit of a file."""
+    content = bytearray(path.read_bytes())
+    content[offset] ^= 1 << bit
+    path.write_bytes(content)

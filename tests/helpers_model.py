@@ -38,6 +38,8 @@ class Model:
     released: list[tuple[int, int]] = field(default_factory=list)
     late: list[int] = field(default_factory=list)
     ahead: list[int] = field(default_factory=list)
+    repeats: list[int] = field(default_factory=list)
+    identities: set[int | None] = field(default_factory=set)
     undelivered: int = 0
 
     def start(self, names: tuple[str, ...], now: int) -> None:
@@ -69,12 +71,12 @@ class Model:
         self.released += out
         self.undelivered += len(out)
 
-    def arrive(self, events: list[tuple[int, int, str]], now: int) -> None:
-        """Events (time, number, source) of one request."""
+    def arrive(self, events: list[tuple[int, int, str, int | None]], now: int) -> None:
+        """Events (time, number, source, identity or None) of one request."""
         self.now = max(self.now, now)
         self.mark(only_releasing=False)
         stood = self.watermark
-        for time, number, name in events:
+        for time, number, name, identity in events:
             source = self.sources.setdefault(name, ModelSource())
             if time > self.now + self.ahead_limit:
                 self.ahead.append(number)
@@ -82,6 +84,10 @@ class Model:
             source.newest, source.heard = max(source.newest, time), self.now
             source.active, source.excused = True, False
             self.newest = max(self.newest, time)
+            if identity in self.identities:
+                self.repeats.append(number)
+                continue
+            self.identities |= {identity} - {None}
             if time < stood:
                 self.late.append(number)
             else:

@@ -128,6 +128,10 @@ class Process:
         """Whether it has started and works."""
         return self.runtime.accepting and self.failure is None
 
+    def stop_opening(self) -> None:
+        """A stop that comes while it still starts ends the starting first, as `app` does it."""
+        self._opening.cancel()
+
     def act(self, name: str, *given: Any) -> None:
         """promise(source, time_ns), excuse(source, reason) or drain(), as the endpoint does it."""
         self._acts.append(self.loop.create_task(self._act(name, given)))
@@ -146,6 +150,8 @@ class Process:
         runtime = self.runtime
         assert not self.loop.complaints, self.loop.complaints
         self._look_at_acts()
+        if self._opening.cancelled():
+            return
         if self._opening.done() and self._opening.exception() is not None:
             error = self._opening.exception()
             self.ended = f"did not start: {error!r}"

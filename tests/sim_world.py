@@ -109,11 +109,10 @@ class World:
         try:
             getattr(self, f"_{action}")(self.process)
             self._settle()
+            self._look()
         except PowerCut as where:
             self.tally.counts[f"died in: {str(where).split()[0]}"] += 1
             self._die()
-        else:
-            self._look()
 
     def _settle(self) -> None:
         if self.loop is not None:
@@ -135,6 +134,7 @@ class World:
 
     def _start(self) -> None:
         weather = Weather(self.chance)
+        weather.starved = self.disk.capacity_bytes is not None
         if not self._calm and self.chance.random() < 0.25:
             weather.dies_in = 1 + self.choose(25)  # while it starts
         if not self._calm and self.chance.random() < 0.1:
@@ -148,6 +148,7 @@ class World:
                 self.config, self.folder, self.disk, weather, self.stores, self.history, self.loop, clock
             )
             self.loop.settle()
+            self._look()
         except PowerCut:
             self.tally.counts["died while starting"] += 1
             self._die()
@@ -156,8 +157,6 @@ class World:
                 raise
             self.tally.counts["did not start"] += 1
             self._release()
-        else:
-            self._look()
 
     def _die(self, *, power: bool | None = None) -> None:
         """The process is gone; the machine too, or not."""
@@ -191,6 +190,8 @@ class World:
         """SIGTERM: an orderly stop, which ends within its time whatever is ill."""
         assert self.loop is not None
         self.tally.counts["stopped"] += 1
+        process.stop_opening()
+        self.loop.settle()
         closing = self.loop.create_task(process.runtime.close(self.chance.choice((0.0, 2.0))))
         for _ in range(200):
             self.loop.work_off()
@@ -207,6 +208,8 @@ class World:
     # ---- what can happen --------------------------------------------------------------------------------------------
 
     def _send(self, process: Process) -> None:
+        if not process.up and self.chance.random() < 0.9:
+            return
         request = self.crowd.next_request()
         if request is not None and self.loop is not None:
             self.mono_ns = max(self.mono_ns, request.due_ns - self._begin_ns)

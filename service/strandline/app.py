@@ -56,7 +56,8 @@ def make_app(config: Config, feeds: dict[str, FeedRuntime]) -> web.Application:
             web.get("/v1/feeds/{feed}/sources", observe.get_sources),
             web.get("/v1/feeds/{feed}/late", observe.get_late),
             web.get("/v1/feeds/{feed}/quarantine", observe.get_quarantine),
-            web.get("/v1/feeds/{feed}/ordered", observe.get_ordered),
+            web.get("/v1/feeds/{feed}/refused", observe.get_refused),
+            web.get("/v1/feeds/{feed}/ordered", observe.get_ordered, allow_head=False),
             web.get("/metrics", make_aiohttp_handler(make_registry(feeds))),
             web.get("/health/live", observe.get_live),
             web.get("/health/ready", observe.get_ready),
@@ -154,6 +155,8 @@ class Service:
             config = load(path, environ)
             if fixed := fixed_changes(self.config, config):
                 raise StrandlineError(f"{', '.join(fixed)} can only change with a restart")
+            if full := [name for name, runtime in self.feeds.items() if not runtime.has_headroom()]:
+                raise StrandlineError(f"the disk has no room to note it in the journal of {', '.join(full)}")
         except (StrandlineError, OSError) as error:
             log.error("the configuration stays as it was: %s", error)
             return False

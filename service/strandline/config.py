@@ -1,9 +1,9 @@
 """The configuration: one TOML file and `STRANDLINE_...` variables in, frozen structs out, or every fault at once.
 
-This is the door: other rooms import from here only. Behind it `config_model` declares the keys, `config_kinds` and
-`config_units` read single values, `config_read` walks the tables, `config_overrides` knows the variables,
-`config_checks` compares keys, `config_table` documents them. Nothing is opened, created or connected here, except that
-`load` reads the file.
+This is the door: other rooms import from here only. Behind it `config_model` and `config_sinks` declare the keys,
+`config_kinds` and `config_units` read single values, `config_read` walks the tables, `config_overrides` knows the
+variables, `config_checks` and `config_sink_checks` compare keys, `config_table` documents them. Nothing is opened,
+created or connected here, except that `load` reads the file.
 """
 
 from __future__ import annotations
@@ -17,9 +17,10 @@ import msgspec
 
 from .config_checks import check
 from .config_kinds import Address
-from .config_model import Config, EventTime, Feed, Journal, Limits, NdjsonConfig, SinkConfig, SqliteConfig
+from .config_model import Config, EventTime, Feed, Journal, Limits
 from .config_overrides import override
 from .config_read import Reading, declared, tables_of
+from .config_sinks import HttpConfig, NdjsonConfig, PostgresConfig, SinkConfig, SqliteConfig
 from .errors import ConfigError
 
 __all__ = [
@@ -27,9 +28,11 @@ __all__ = [
     "Config",
     "EventTime",
     "Feed",
+    "HttpConfig",
     "Journal",
     "Limits",
     "NdjsonConfig",
+    "PostgresConfig",
     "SinkConfig",
     "SqliteConfig",
     "load",

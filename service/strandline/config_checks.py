@@ -13,8 +13,10 @@ from pathlib import Path
 import msgspec
 
 from .config_kinds import quoted
-from .config_model import SINK_KINDS, Config, Feed, SinkConfig
+from .config_model import Config, Feed
 from .config_read import Key, Place, Reading, declared
+from .config_sink_checks import check_sinks
+from .config_sinks import SINK_KINDS, SinkConfig
 from .ingest.pointer import Fields, PointerError
 
 
@@ -87,6 +89,7 @@ def check(config: Config, reading: Reading) -> None:
     _check_names(config, reading)
     _check_sink_names(config, reading)
     _check_sink_paths(config, reading)
+    check_sinks(_sinks(config, reading), reading)
 
 
 def _judge(rule: Rule, feed: Feed, place: Place, reading: Reading) -> None:

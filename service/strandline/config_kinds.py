@@ -12,6 +12,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, NamedTuple
+from urllib.parse import urlsplit
 
 from .config_units import duration_ns, duration_text, size_bytes, size_text
 
@@ -34,6 +35,7 @@ class Kind:
     read: Callable[[object], Any]
     show: Callable[[Any], str]
     from_text: Callable[[str], object] = str
+    secret: bool = False  # may hold a password: never shown
 
 
 class Address(NamedTuple):
@@ -200,11 +202,102 @@ def texts(noun: str, bytes_at_most: int) -> Kind:
     return Kind(f"list of {noun}s", read, lambda items: f"[{', '.join(map(quoted, items))}]", _list_from_text)
 
 
-def _text(raw: object) -> str:
+def identifier() -> Kind:
+    """The name of something in a database."""
+
+    def read(raw: object) -> str:
+        text = _text(raw)
+        if not 1 <= len(text.encode()) <= 63 or not text.isprintable():
+            raise ValueError("is no name: 1 to 63 bytes that can be printed; a schema is named in `schema`")
+        return text
+
+    return Kind("name of 1 to 63 bytes", read, quoted)
+
+
+def secret(noun: str, bytes_at_most: int, *, hidden: bool = True) -> Kind:
+    """A line of text that is not shown, unless it is only where the secret lies."""
+
+    def read(raw: object) -> str:
+        text = _text(raw, bytes_at_most)
+        if not text or not text.isprintable() or (hidden and not text.isascii()):
+            raise ValueError(f"is no {noun}: one line is expected{', of ASCII' if hidden else ''}")
+        return text
+
+    return Kind(noun, read, quoted, secret=hidden)
+
+
+def postgres_address() -> Kind:
+    """Where a PostgreSQL database is, as its own programs take it. It may hold a password."""
+
+    def read(raw: object) -> str:
+        text = _text(raw)
+        try:
+            parts = urlsplit(text)
+            _ = parts.port if "," not in parts.netloc else None  # several hosts, each with a port, are allowed
+        except ValueError:
+            raise ValueError("is no address: special characters in a password are written %XX") from None
+        if parts.scheme not in ("postgres", "postgresql") or not text.isprintable() or "://" not in text:
+            raise ValueError('is no address of PostgreSQL: write "postgres://user@host/database"')
+        return text
+
+    return Kind("`postgres://...`", read, quoted, secret=True)
+
+
+def url() -> Kind:
+    """An address that events are sent to. It may hold a password, or a token in its query."""
+
+    def read(raw: object) -> str:
+        text = _text(raw)
+        try:
+            parts = urlsplit(text)
+            usable = parts.scheme in ("http", "https") and bool(parts.hostname) and parts.port != 0
+        except ValueError:
+            usable = False
+        if not usable or not text.isascii() or not text.isprintable() or " " in text:
+            raise ValueError('is no address: write "http://host:port/path" or "https://..."')
+        if parts.fragment:
+            raise ValueError("ends with a fragment (#...), which is never sent")
+        return text
+
+    return Kind("`http://...` or `https://...`", read, quoted, secret=True)
+
+
+_HEADER_NAME = re.compile(r"[!#$%&'*+.^_`|~0-9A-Za-z-]{1,64}")  # RFC 9110, 5.1: a token
+HEADERS_AT_MOST = 32
+OWN_HEADERS = re.compile(
+    "host|connection|expect|content-type|content-encoding|content-length|transfer-encoding|accept-encoding"
+    "|idempotency-key|strandline-.*",
+    re.IGNORECASE,
+)
+
+
+def headers() -> Kind:
+    """A table of header fields; their values may be secrets."""
+
+    def read(raw: object) -> tuple[tuple[str, str], ...]:
+        if not isinstance(raw, dict):
+            raise ValueError('is no table: write { X-Station = "north" }')
+        if len(raw) > HEADERS_AT_MOST or len({key.lower() for key in raw}) < len(raw):
+            raise ValueError(f"names more than {HEADERS_AT_MOST} headers, or one of them twice")
+        for key, value in raw.items():
+            if _HEADER_NAME.fullmatch(key) is None or OWN_HEADERS.fullmatch(key):
+                raise ValueError(f"holds {shown(key)}, which is no header's name or one that the sink sets itself")
+            if not isinstance(value, str) or not value.isascii() or not value.isprintable() or len(value) > 4096:
+                raise ValueError(f"holds {shown(key)}, whose value is no line of at most 4,096 ASCII characters")
+        return tuple(raw.items())
+
+    return Kind("table of header fields", read, _header_table, secret=True)
+
+
+def _header_table(pairs: tuple[tuple[str, str], ...]) -> str:
+    return "{ " + ", ".join(f"{key} = {quoted(value)}" for key, value in pairs) + " }" if pairs else "{}"
+
+
+def _text(raw: object, characters_at_most: int = TEXT_CHARACTERS_AT_MOST) -> str:
     if not isinstance(raw, str):
         raise ValueError("is no text: put it in quotes")
-    if len(raw) > TEXT_CHARACTERS_AT_MOST:
-        raise ValueError(f"is longer than {TEXT_CHARACTERS_AT_MOST:,} characters")
+    if len(raw) > characters_at_most:
+        raise ValueError(f"is longer than {characters_at_most:,} characters")
     return raw
 
 

@@ -1,27 +1,41 @@
 """The configuration as values: every key with its kind, its default and what it is for, declared once.
 
-Reading is `config_read`, overriding `config_overrides`, comparing keys with each other `config_checks`; the
-documentation's table is made from here too (`config_table`). Structs are frozen. Times in ns, sizes in bytes, paths as
-they will be opened. Where a key's unit is in its value ("5s"), the attribute's name ends with it (`slack_ns`).
+Reading is `config_read`, overriding `config_overrides`, comparing keys with each other `config_checks`, the kinds of
+sinks `config_sinks`; the documentation's table is made from here too (`config_table`). Structs are frozen. Times in ns,
+sizes in bytes, paths as they will be opened. Where a key's unit is in its value ("5s"), the attribute's name ends with
+it (`slack_ns`).
 """
 
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Annotated, ClassVar, Literal
+from typing import Annotated, Literal
 
 import msgspec
 from msgspec import field
 
 from .config_kinds import Address, address, choice, count, duration, name, path, pointer, share, size, texts
 from .config_read import Key, Table, Tables
+from .config_sinks import SINK_KINDS, SINK_KINDS_LATER, NdjsonConfig, SinkConfig, SqliteConfig
 from .core.settings import SECOND_NS, Settings
 from .ingest.limits import BodyLimits
+
+__all__ = [
+    "SINK_KINDS",
+    "Config",
+    "EventTime",
+    "Feed",
+    "Journal",
+    "Limits",
+    "NdjsonConfig",
+    "SinkConfig",
+    "SqliteConfig",
+    "SteeredSlack",
+]
 
 KIB, MIB, GIB = 2**10, 2**20, 2**30
 
 FEED_NAME = name("a-z0-9-", "1 to 63 of a-z, 0-9 and -, the first a letter or digit")
-SINK_NAME = name("a-z0-9_-", "1 to 63 of a-z, 0-9, - and _, the first a letter or digit", reserved="lanes")
 
 
 class SteeredSlack(msgspec.Struct, frozen=True):
@@ -49,49 +63,6 @@ class Journal(msgspec.Struct, frozen=True):
     at_most_bytes: Annotated[
         int, Key(size("128KiB"), "room for all files; at this limit events are refused until the sinks have caught up")
     ] = field(default=8 * GIB, name="at_most")
-
-
-class SinkConfig(msgspec.Struct, frozen=True):
-    """What every kind of sink has. A further kind is one more struct and one line in SINK_KINDS."""
-
-    kind: ClassVar[str] = ""
-    # "{feed}" in the default of a path stands for the feed's name; relative paths start at `data_dir`.
-    name: Annotated[str, Key(SINK_NAME, "unique within the feed; in metrics and on the dashboard")] = "{kind}"
-
-    def options(self) -> dict[str, object]:
-        """What `sinks.make_sink` takes for this kind; times become seconds there (`roll_every_s`)."""
-        options = {key: getattr(self, key) for key in self.__struct_fields__ if key != "name"}
-        times = {key: value for key, value in options.items() if key.endswith("_ns")}
-        return {key: value for key, value in options.items() if key not in times} | {
-            f"{key.removesuffix('_ns')}_s": value / SECOND_NS for key, value in times.items()
-        }
-
-
-class SqliteConfig(SinkConfig, frozen=True):
-    """One SQLite file: tables `events` and `late`, the position reached in the same transaction."""
-
-    kind: ClassVar[str] = "sqlite"
-    path: Annotated[Path, Key(path(), "the file, which feeds may share; relative to `data_dir`")] = Path("{feed}.db")
-
-
-class NdjsonConfig(SinkConfig, frozen=True):
-    """Files of newline-delimited JSON in one folder."""
-
-    kind: ClassVar[str] = "ndjson"
-    directory: Annotated[Path, Key(path(), "the folder, which feeds may share; relative to `data_dir`")] = Path(
-        "{feed}-ndjson"
-    )
-    roll_bytes: Annotated[int, Key(size("1KiB"), "a new file is begun beyond this size")] = 64 * MIB
-    roll_every_ns: Annotated[int, Key(duration("1s"), "a new file is begun after this time")] = field(
-        default=10 * SECOND_NS, name="roll_every"
-    )
-
-
-SINK_KINDS: dict[str, type[SinkConfig]] = {
-    "sqlite": SqliteConfig,
-    "ndjson": NdjsonConfig,
-}
-SINK_KINDS_LATER = ("postgres", "remote_write", "http")  # promised; named in the fault, so that nobody hunts a typo
 
 
 class Feed(msgspec.Struct, frozen=True):

@@ -22,8 +22,9 @@ from typing import Any
 import msgspec
 
 from .config_kinds import Kind
-from .config_model import SINK_KINDS, Config, Feed
+from .config_model import Config, Feed
 from .config_read import Key, Place, Reading, Table, declared
+from .config_sinks import SINK_KINDS
 
 PREFIX = "STRANDLINE_"
 FIXED = ("name", "kind")

@@ -176,7 +176,7 @@ class Reading:
                     self.written.add(place)
                     yield item.attribute, value
                 except ValueError as error:
-                    self.fault(place, str(error), shown(raw))
+                    self.fault(place, str(error), "(not shown)" if kind.secret else shown(raw))
             case Table(struct):
                 if isinstance(raw, dict):
                     yield item.attribute, self.table(struct, raw, place)

@@ -11,8 +11,9 @@ from typing import Any
 
 import msgspec
 
-from .config_model import Config, SinkConfig
+from .config_model import Config
 from .config_read import Declared, Key, declared, tables_of
+from .config_sinks import SinkConfig
 
 BEGIN, END = "<!-- keys: begin -->", "<!-- keys: end -->"
 
@@ -40,7 +41,10 @@ def _section(title: str, struct: type[msgspec.Struct]) -> Iterator[str]:
 def _heading(title: str, struct: type[msgspec.Struct]) -> str:
     if not title:
         return "At the top of the file"
-    name = title.split(" ", maxsplit=1)[0]
+    name, _, below = title.partition(" ")
+    if below and not issubclass(struct, SinkConfig):
+        kind, _, key = below.partition(".")
+        return f'`{key} = [ {{ ... }} ]` of a sink with `kind = "{kind}"`'
     if issubclass(struct, SinkConfig):
         return f'`[[{name}]]` with `kind = "{struct.kind}"`'
     last = name.rsplit(".", maxsplit=1)[-1]

@@ -121,6 +121,10 @@ def stalls_of(runtime: FeedRuntime) -> list[str]:
     held_s = age_s(view.now_ns, view.held_oldest_ns)
     if held_s is not None and held_s > bound_s:
         found.append(f"an event has been held for {held_s:.0f} s, hold_at_most is {bound_s - STALLED_AFTER_S:.0f} s")
+    journal = runtime.hops()["journal"]
+    waits_s = age_s(view.now_ns, journal.oldest_ns)
+    if waits_s is not None and waits_s > STALLED_AFTER_S:
+        found.append(f"a request has waited for a sync of the journal for {waits_s:.0f} s: the disk does not answer")
     for name, delivery in runtime.deliveries.items():
         state = delivery.state()
         for lane, waiting in state.lanes.items():

@@ -26,7 +26,6 @@ class Housekeeper:
         self._journal, self._feed, self._commit, self._settle = journal, feed, commit, settle
         self._saved_lsn = 0
         self._saved_bytes = 0
-        self._saved_needing = -1  # what the core needed when it was last saved
 
     def recover(self) -> int:
         """Fold what the journal holds, from its newest usable snapshot on; how many records were folded. Blocking.
@@ -62,7 +61,7 @@ class Housekeeper:
         grown = self._feed.next_lsn - self._saved_lsn
         if grown >= max(segment_bytes, 4 * self._saved_bytes):
             return True
-        return self._journal.lacks_spare and self._feed.needed_place > self._saved_needing
+        return self._journal.short_of_room and self._journal.frees(self._feed.needed_place)
 
     async def run(self, segment_bytes: int) -> None:
         """Do what is due. Raises JournalFailed; a lack of room is logged and tried again later."""
@@ -80,7 +79,6 @@ class Housekeeper:
         Raises JournalFull (nothing is lost: the journal goes back further), JournalFailed.
         """
         lsn, parts, needed = self._feed.next_lsn, self._feed.save(), self._feed.needed_place
-        self._saved_needing = needed
         older = self._saved_lsn
         if lsn > older:
             await self._settle()
@@ -88,5 +86,5 @@ class Housekeeper:
             self._saved_lsn, self._saved_bytes = lsn, sum(len(part) for part in parts)
         # The older of the two kept snapshots stays usable, in case the newer one turns out damaged; where room is
         # short there is no such choice.
-        keep = min(lsn if self._journal.lacks_spare else older, needed, self._journal.durable_lsn)
+        keep = min(lsn if self._journal.short_of_room else older, needed, self._journal.durable_lsn)
         await self._commit.run(lambda: self._journal.drop_before(keep))

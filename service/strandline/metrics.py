@@ -15,6 +15,7 @@ from prometheus_client.registry import Collector
 from .core.columns import TIME_MIN
 from .core.histogram import Histogram
 from .core.view import HOLD_WHYS, View
+from .errors import REFUSALS
 from .journal.counters import SYNC_BOUNDS_S
 from .metrics_reference import METRICS
 from .runtime import FeedRuntime
@@ -86,8 +87,8 @@ class _Sampler:
             self.add(f"strandline_events_{column}", ledger[column])
         self.add("strandline_events_held", ledger["buffered"])
         self.add("strandline_books_unbalanced_events", self.view.balance)
-        for reason, count in self.view.refusals.items():
-            self.add("strandline_requests_refused", count, reason)
+        for reason in REFUSALS:  # those that never happened too: a counter that begins at 1 shows no increase
+            self.add("strandline_requests_refused", self.view.refusals.get(reason, 0), reason)
         self.add("strandline_lanes_bytes", self.runtime.lane_store.size.file_bytes)
 
     def _order(self) -> None:

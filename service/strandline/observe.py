@@ -7,9 +7,10 @@ from __future__ import annotations
 
 import asyncio
 from collections.abc import Iterator
-from dataclasses import asdict
+from dataclasses import asdict, replace
 
 import msgspec
+import numpy as np
 from aiohttp import web
 
 from .core.columns import Batch
@@ -19,10 +20,12 @@ from .errors import JournalError
 from .ingest.endpoint import FEEDS, runtime_of
 from .problems import problem
 from .runtime import FeedRuntime
-from .sinks.lanes import late_rows, quarantine_rows
+from .sinks.lanes import late_rows, quarantine_rows, refused_rows
 
 ROWS_AT_MOST = 1000
 KEEPALIVE_S = 15.0
+WRITE_WITHIN_S = 30.0  # a listener that takes nothing for so long is let go
+PIECE_BYTES = 1 << 20  # of a batch in memory for one listener, before and beside what its connection holds
 
 
 def _json(value: object, status: int = 200) -> web.Response:
@@ -84,44 +87,93 @@ async def get_quarantine(request: web.Request) -> web.Response:
     return _json({"quarantine": shown, "next_after": rows[-1].number if rows else None})
 
 
+async def get_refused(request: web.Request) -> web.Response:
+    """Events of batches that sinks refused for good, oldest first, a page at a time; why stands in `detail`."""
+    runtime = runtime_of(request)
+    rows = await asyncio.to_thread(
+        refused_rows,
+        runtime.folder / "lanes.db",
+        after=_number(request, "after", 0),
+        limit=_limit(request),
+        sink=request.query.get("sink"),
+    )
+    shown = [{**asdict(row), "event": row.event.decode(errors="replace")} for row in rows]
+    return _json({"refused": shown, "next_after": rows[-1].number if rows else None})
+
+
 async def get_ordered(request: web.Request) -> web.StreamResponse:
     """The ordered output as it is released, one JSON line an event, from the batch after `after` on; without end."""
     runtime = runtime_of(request)
-    recent = runtime.recent
-    last = runtime.feed.state.outbox.next_number["ordered"] - 1
-    number = _number(request, "after", last)
-    first = recent.first_number
-    if number < last and (first is None or number + 1 < first):
-        detail = f"batches from {first or last + 1} on are still at hand here; older ones are in the feed's sinks"
+    recent, last = runtime.recent, runtime.feed.state.outbox.next_number["ordered"] - 1
+    number = _number(request, "after", recent.reached)
+    if number > last:
+        raise web.HTTPBadRequest(text=f"?after={number} names a batch that was never released; the last one is {last}")
+    if not recent.holds_all_after(number):
+        detail = f"batches from {recent.first_number} on are still at hand here; older ones are in the feed's sinks"
         return problem(410, "Gone", detail)
     response = web.StreamResponse(headers={"Content-Type": "application/x-ndjson", "Cache-Control": "no-store"})
     await response.prepare(request)
-    while not recent.closed:
+    try:
+        await _listen(runtime, response, number)
+    except (ConnectionError, TimeoutError):  # gone, or takes nothing any more
+        if request.transport is not None:
+            request.transport.abort()
+    return response
+
+
+async def _listen(runtime: FeedRuntime, response: web.StreamResponse, number: int) -> None:
+    """Write batches as they come. Ends with the service, or where the listener was too slow: it is told when it comes
+    again. Raises TimeoutError, ConnectionError."""
+    recent = runtime.recent
+    while True:
         bell = recent.bell()
-        for batch in recent.after(number):
-            try:
-                block = await asyncio.to_thread(ordered_block, runtime, batch)
-            except JournalError:
-                return response  # the listener was too slow; it will be told so when it comes again
-            await response.write(block)
+        for batch in recent.after(number) if recent.holds_all_after(number) else ():
+            first = 0
+            for piece in pieces_of(batch):
+                try:
+                    block = await asyncio.to_thread(ordered_block, runtime, piece, first)
+                except JournalError:
+                    return
+                await _write(response, block)
+                first += len(piece)
             number = batch.number
+        if recent.closed or not recent.holds_all_after(number):
+            return
         try:
             async with asyncio.timeout(KEEPALIVE_S):
                 await bell.wait()
         except TimeoutError:
-            await response.write(b"\n")  # an empty line keeps the connection alive
-    return response
+            await _write(response, b"\n")  # an empty line keeps the connection alive
 
 
-def ordered_block(runtime: FeedRuntime, batch: Batch) -> bytes:
-    """A batch as lines {"batch":…,"position":…,"time_ns":…,"source":…,"event":…}; the event's bytes as they came."""
-    return b"".join(_ordered_lines(runtime, batch))
+async def _write(response: web.StreamResponse, block: bytes) -> None:
+    async with asyncio.timeout(WRITE_WITHIN_S):
+        await response.write(block)
 
 
-def _ordered_lines(runtime: FeedRuntime, batch: Batch) -> Iterator[bytes]:
+def pieces_of(batch: Batch) -> Iterator[Batch]:
+    """The batch in pieces of at most PIECE_BYTES of lines, or of one event."""
+    ends = np.cumsum(batch.refs["length"].astype(np.int64) + 1)
+    start = 0
+    while start < len(batch):
+        reach = (int(ends[start - 1]) if start else 0) + PIECE_BYTES
+        stop = max(start + 1, int(np.searchsorted(ends, reach, side="right")))
+        yield replace(batch, times=batch.times[start:stop], refs=batch.refs[start:stop])
+        start = stop
+
+
+def ordered_block(runtime: FeedRuntime, batch: Batch, first: int = 0) -> bytes:
+    """Lines {"batch":…,"position":…,"time_ns":…,"source":…,"event":…}; the event's bytes as they came.
+
+    `first` is the position of the piece's first event in its batch.
+    """
+    return b"".join(_ordered_lines(runtime, batch, first))
+
+
+def _ordered_lines(runtime: FeedRuntime, batch: Batch, first: int) -> Iterator[bytes]:
     names, encoded = runtime.lines.source_names(), {}
     rows = zip(batch.times.tolist(), batch.refs["source"].tolist(), runtime.lines.lines(batch), strict=True)
-    for position, (time_ns, source, line) in enumerate(rows):
+    for position, (time_ns, source, line) in enumerate(rows, first):
         if source not in encoded:
             encoded[source] = msgspec.json.encode(names[source])
         yield b'{"batch":%d,"position":%d,"time_ns":%d,"source":%b,"event":%b}\n' % (

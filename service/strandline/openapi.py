@@ -117,6 +117,11 @@ def _paths() -> Json:
         "/v1/feeds/{feed}/quarantine": _get(
             "Lines in quarantine", {**_answer("lines", document), **_problems(400, 404)}, [_FEED, *_PAGE]
         ),
+        "/v1/feeds/{feed}/refused": _get(
+            "Events of batches that sinks refused for good",
+            {**_answer("events, with sink and reason", document), **_problems(400, 404)},
+            [_FEED, *_PAGE, _query("sink", "only what this sink refused", {"type": "string"})],
+        ),
         "/v1/feeds/{feed}/ordered": _get(
             "The ordered output as it is released, without end",
             {

@@ -8,7 +8,7 @@ from collections.abc import Awaitable, Callable
 import msgspec
 from aiohttp import web
 
-from .errors import REFUSALS, BodyError
+from .errors import REFUSALS, BodyError, StrandlineError
 
 log = logging.getLogger(__name__)
 MEDIA_TYPE = "application/problem+json"
@@ -66,7 +66,11 @@ async def as_problems(request: web.Request, handler: Handler) -> web.StreamRespo
             raise
         kept = {name: value for name, value in error.headers.items() if name in ("Allow", "Retry-After")}
         return problem(error.status, error.reason, _detail(request, error), headers=kept)
+    except StrandlineError as error:
+        return problem(503, "Service Unavailable", str(error), headers={"Retry-After": "5"})
     except Exception:
+        if request.writer.output_size:  # too late for another answer: the connection ends, and aiohttp logs the error
+            raise
         log.exception("an unforeseen error while answering %s %s", request.method, request.path)
         return problem(500, "Internal Server Error", "an unforeseen error; the service's log has the details")
 

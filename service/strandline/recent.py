@@ -19,15 +19,24 @@ class Recent:
     def __init__(self) -> None:
         self._batches: deque[tuple[Batch, int]] = deque()
         self._events = 0
+        self._gone = 0  # batches up to this number are in the window no more
         self._bell = asyncio.Event()
+        self.reached = 0  # number of the last batch that has left
         self.closed = False
+
+    def begin(self, number: int) -> None:
+        """Batches up to this number left before the window was there."""
+        self.reached = self._gone = number
 
     def add(self, batch: Batch) -> None:
         """A batch has left."""
+        if not self._batches:
+            self._gone = batch.number - 1
         self._batches.append((batch, int(batch.refs["place"].min())))
         self._events += len(batch)
+        self.reached = max(self.reached, batch.number)
         while self._events > EVENTS_AT_MOST and len(self._batches) > 1:
-            self._events -= len(self._batches.popleft()[0])
+            self._forget_oldest()
         self._ring()
 
     def forget_before(self, place: int) -> None:
@@ -36,16 +45,25 @@ class Recent:
         while keep and self._batches[keep - 1][1] >= place:
             keep -= 1
         for _ in range(keep):
-            self._events -= len(self._batches.popleft()[0])
+            self._forget_oldest()
+
+    def _forget_oldest(self) -> None:
+        batch, _ = self._batches.popleft()
+        self._events -= len(batch)
+        self._gone = batch.number
+
+    def holds_all_after(self, number: int) -> bool:
+        """Whether no batch with a higher number has gone from the window."""
+        return number >= self._gone
 
     def after(self, number: int) -> list[Batch]:
         """Batches with a higher number, oldest first."""
         return [batch for batch, _ in self._batches if batch.number > number]
 
     @property
-    def first_number(self) -> int | None:
-        """Number of the oldest batch in the window."""
-        return self._batches[0][0].number if self._batches else None
+    def first_number(self) -> int:
+        """Number of the oldest batch in the window, or that the next one can have."""
+        return self._gone + 1
 
     def close(self) -> None:
         """Let everyone who waits go home."""
@@ -59,3 +77,10 @@ class Recent:
     def bell(self) -> asyncio.Event:
         """Set when the next batch has come. Take it before looking, wait on it after."""
         return self._bell
+
+    def check(self) -> None:
+        """Assert that numbers ascend from what is gone to what was reached, and that the count is right."""
+        numbers = [self._gone, *(batch.number for batch, _ in self._batches)]
+        assert all(first < later for first, later in zip(numbers, numbers[1:], strict=False))
+        assert numbers[-1] <= self.reached
+        assert self._events == sum(len(batch) for batch, _ in self._batches)

@@ -12,7 +12,6 @@ import random
 from collections.abc import Awaitable, Callable, Mapping, Sequence
 from functools import partial
 from pathlib import Path
-from typing import NamedTuple
 
 from .config import Feed as FeedConfig
 from .core.columns import TIME_MIN, Arrival, Batch, Lane, RequestKey
@@ -33,6 +32,7 @@ from .recent import Recent
 from .sinks import make_sink
 from .sinks.delivery import Delivery
 from .sinks.lanes import LaneStore
+from .waiters import Waiters
 
 log = logging.getLogger(__name__)
 LANE_STORE = "lanes"
@@ -44,14 +44,6 @@ OPEN_WITHIN_S = 5.0  # a store that does not answer by then is connected to late
 def decoder_of(config: FeedConfig) -> Decoder:
     """The decoder of a feed's bodies."""
     return Decoder(config.name, config.time.at, config.time.unit, config.source, config.id, limits=config.body_limits())
-
-
-class _Waiter(NamedTuple):
-    """Who waits for a sync: since when, and for how many events."""
-
-    future: asyncio.Future[Outcome | None]
-    since_ns: int
-    events: int
 
 
 class FeedRuntime:
@@ -90,8 +82,7 @@ class FeedRuntime:
         self._synced_ns: int | None = None
         self._delivered_ns: int | None = None
         self._taken_ns: int | None = None
-        self._waiters: dict[int, _Waiter] = {}
-        self._tokens = 0
+        self._waiters = Waiters()
         self._untold: dict[tuple[str, Lane], int] = {}  # positions of sinks that the core was not told yet
         self._house = Housekeeper(self.journal, self.feed, self.commit, self._settle)
         self._housekeeping: asyncio.Task[None] | None = None
@@ -102,6 +93,7 @@ class FeedRuntime:
         """Recover, connect the sinks and begin to work."""
         folded = await asyncio.to_thread(self._house.recover)
         self.lines.watch(self.feed)
+        self.recent.begin(self.feed.state.outbox.next_number["ordered"] - 1)
         sinks: dict[str, Sink] = {LANE_STORE: self.lane_store}
         for sink in self.config.sinks:
             sinks[sink.name] = self._make(sink.kind, self.config.name, self.clock, **sink.options())
@@ -174,7 +166,7 @@ class FeedRuntime:
         await asyncio.gather(*(delivery.close() for delivery in self.deliveries.values()))
         await self._at_last(self._house.save)
         await self.commit.close()
-        self._refuse_waiters("stopping", "the service is stopping")
+        self._waiters.refuse_all("stopping", "the service is stopping")
         try:
             self.journal.close()
         except JournalFailed as error:
@@ -215,14 +207,14 @@ class FeedRuntime:
         self.config = config
         self.decoder = decoder_of(config)
         served = {name: delivery.lanes for name, delivery in self.deliveries.items()}
-        if self._has_headroom():
+        if self.has_headroom():
             self._do(lambda: self.feed.start(self.clock.now_ns(), served, settings=config.settings()))
 
     def tick(self) -> None:
         """Time has gone on."""
         if self.accepting:
             self._tell_positions()
-        if self.accepting and self.failure is None and self._has_headroom():
+        if self.accepting and self.failure is None and self.has_headroom():
             self._do(lambda: self.feed.tick(self.clock.now_ns()))
             self._keep_house()
 
@@ -233,26 +225,33 @@ class FeedRuntime:
 
     def _tell_positions(self) -> None:
         """Tell the core how far sinks are; what finds no room in the journal waits for the next tick."""
-        while self._untold and self.failure is None and self._has_headroom():
+        while self._untold and self.failure is None and self.has_headroom():
             (sink, lane), number = self._untold.popitem()
             self._do(partial(self.feed.taken, sink, lane, number, self.clock.now_ns()))
 
     async def _refused(self, sink: str, batches: Sequence[Batch], detail: str) -> None:
-        # Nothing is let go before it is kept somewhere else: until then it waits, and the sink's error says why.
-        raise SinkRetry(f"{len(batches)} batches are refused for good and wait here: {detail}", retry_after_s=60)
+        await self.lane_store.keep_refused(sink, batches, detail, self.lines, self.config.lanes_at_most_bytes)
 
     async def _ask(self, ask: Callable[[int], list[Effect]], now_ns: int, events: int) -> Outcome | None:
-        self._tokens += 1
-        future: asyncio.Future[Outcome | None] = asyncio.get_running_loop().create_future()
-        self._waiters[self._tokens] = _Waiter(future, now_ns, events)
-        self._do(partial(ask, self._tokens))
+        token, future = self._waiters.begin(now_ns, events)
+        try:
+            self._do(partial(ask, token))
+        except (ValueError, LookupError):
+            self._waiters.forget(token)
+            raise
         return await future
 
     def _do(self, ask: Callable[[], list[Effect]]) -> None:
-        """Let the core decide, and carry it out. An error on the way is final: state and journal may differ by then."""
+        """Let the core decide, and carry it out. An error on the way is final: state and journal may differ by then.
+
+        Raises ValueError or LookupError, nothing having changed, for an input that contradicts itself.
+        """
+        before = self.feed.next_lsn
         try:
             self.carry_out(ask())
         except Exception as error:
+            if isinstance(error, (ValueError, LookupError)) and self.feed.next_lsn == before == self.journal.next_lsn:
+                raise
             log.exception("%s: an unforeseen error", self.config.name)
             self._failed(error)
 
@@ -284,7 +283,8 @@ class FeedRuntime:
         except JournalFailed as error:
             raise Refused("failed", str(error), 10) from error
 
-    def _has_headroom(self) -> bool:
+    def has_headroom(self) -> bool:
+        """Whether the journal has room for a mark or another small record."""
         try:
             self.journal.reserve([SMALL_RECORD_BYTES] * 2, of_headroom=True)
         except (JournalFull, JournalFailed) as error:
@@ -305,13 +305,10 @@ class FeedRuntime:
                 case Deliver():
                     self._deliver(effect.batch)
                 case Answer():
-                    waiter = self._waiters.pop(effect.token, None)
-                    if waiter and not waiter.future.done():
-                        waiter.future.set_result(effect.outcome)
+                    self._waiters.answer(effect.token, effect.outcome)
                 case Refuse():
-                    waiter = self._waiters.pop(effect.token, None)
-                    if waiter and not waiter.future.done():
-                        waiter.future.set_exception(Refused(effect.reason, effect.detail, effect.retry_after_s))
+                    refusal = Refused(effect.reason, effect.detail, effect.retry_after_s)
+                    self._waiters.refuse(effect.token, refusal)
 
     def _deliver(self, batch: Batch) -> None:
         self._delivered_ns = self.clock.now_ns()
@@ -341,14 +338,8 @@ class FeedRuntime:
             return
         self.failure = str(error) or type(error).__name__
         self._synced.set()
-        self._refuse_waiters("failed", f"nothing more is accepted until a restart: {self.failure}")
+        self._waiters.refuse_all("failed", f"nothing more is accepted until a restart: {self.failure}")
         self._on_failed(self.config.name, error)
-
-    def _refuse_waiters(self, reason: str, detail: str) -> None:
-        waiters, self._waiters = self._waiters, {}
-        for waiter in waiters.values():
-            if not waiter.future.done():
-                waiter.future.set_exception(Refused(reason, detail, 10))
 
     # ---- housekeeping ---------------------------------------------------------------------------------------------
 
@@ -384,8 +375,7 @@ class FeedRuntime:
 
     def hops(self) -> dict[str, Hop]:
         """The six hops, by name, in the order in which events pass them."""
-        state, waiters = self.feed.state, list(self._waiters.values())
-        oldest_waiter = waiters[0].since_ns if waiters else None
+        state = self.feed.state
         unsynced, unsynced_ns = self.feed.unsynced()
         lanes = [lane for delivery in self.deliveries.values() for lane in delivery.state().lanes.values()]
         waiting = [lane.oldest_instant_ns for lane in lanes if lane.oldest_instant_ns is not None]
@@ -393,7 +383,7 @@ class FeedRuntime:
         return {
             "ingest": self.reading.hop(),
             "decode": self.decoding.hop(),
-            "journal": Hop(sum(waiter.events for waiter in waiters), oldest_waiter, self._synced_ns),
+            "journal": Hop(self._waiters.events, self._waiters.oldest_ns, self._synced_ns),
             "runs": Hop(state.runs.held, state.arrivals.oldest_ns, marked_ns),
             "release": Hop(unsynced, unsynced_ns, self._delivered_ns),
             "sinks": Hop(sum(lane.events for lane in lanes), min(waiting, default=None), self._taken_ns),

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from helpers_feed import FOR_EVER_NS, Shell, arrival, patient, saved_bytes
-from strandline.core.columns import TIME_MAX, TIME_MIN, Arrival, Fault
+from strandline.core.columns import TIME_MAX, TIME_MIN, Arrival, Fault, RequestKey
 from strandline.core.effects import Answer, Deliver
 from strandline.core.feed import Feed
 from strandline.core.records import VERSION, Cause, Kind
@@ -260,6 +260,8 @@ def test_a_release_is_split_into_batches() -> None:
         Arrival(np.zeros(2, np.int64), np.zeros(1, np.uint32), np.ones(2, np.uint32), b"x\ny\n"),
         Arrival(np.zeros(2, np.int64), np.zeros(2, np.uint32), np.ones(1, np.uint32), b"x\ny\n"),
         Arrival(np.zeros(1, np.int64), np.zeros(1, np.uint32), np.ones(1, np.uint32), b"xyz\n"),
+        arrival([1, 2], 0, identities=[1]),
+        arrival([1, 2], 0, line_numbers=[1, 2, 3]),
     ],
 )
 def test_an_arrival_that_contradicts_itself_is_refused_before_it_is_journaled(given: Arrival) -> None:
@@ -477,3 +479,52 @@ def test_where_the_sinks_said_they_stand_is_in_the_journal() -> None:
     shell.do(shell.feed.start(20, both, {"store": {"ordered": 2}, "copy": {"ordered": 9}}))
     assert shell.feed.state.outbox.next_number["ordered"] == 10
     assert saved_bytes(shell.feed) == saved_bytes(shell.folded())
+
+
+# ---- repeats --------------------------------------------------------------------------------------------------------
+
+
+def test_lateness_is_judged_against_the_state_before_the_request_when_part_of_it_is_a_repeat() -> None:
+    one, other = Shell(patient(slack_ns=100)), Shell(patient(slack_ns=100))
+    for shell in (one, other):
+        shell.events([10], 1, identities=[7])
+    one.events([50, 20], 2, identities=[8, 9])
+    other.events([10, 50, 20], 2, identities=[7, 8, 9])  # the same, and one repeat
+    counts = [shell.feed.state.figures.lateness.counts.tolist() for shell in (one, other)]
+    assert counts[0] == counts[1] and sum(counts[0]) == 3 and counts[0][0] == 3
+
+
+def test_a_request_of_repeats_only_is_a_word_of_its_sources() -> None:
+    shell = Shell(patient(idle_after_ns=10, slack_ns=5))
+    shell.events([100, 90], 1, ["a", "b"], identities=[1, 2])
+    outcome = shell.events([90], 9, "b", identities=[2])
+    assert outcome is not None and (outcome.duplicate, outcome.accepted) == (1, 0)
+    shell.tick(12)
+    assert not shell.feed.state.sources.is_active("a") and shell.feed.state.sources.is_active("b")
+
+
+def test_a_key_is_forgotten_after_its_time_and_may_be_used_again() -> None:
+    shell = Shell(patient(keys_kept_for_ns=10))
+    faulty = [fault(), fault(2)]
+    first = RequestKey("k", b"1")
+    shell.events([1], 0, faults=faulty, key=first)
+    shell.events([2], 1, key=RequestKey("other", b"2"))
+    assert shell.events([1], 10, faults=faulty, key=first) == shell.answers[1]
+    assert len(shell.requests) == 2  # answered from memory
+    outcome = shell.events([3], 11, key=RequestKey("k", b"3"))
+    assert outcome is not None and outcome.received == 1 and len(shell.requests) == 3
+    assert list(shell.feed.state.keys.kept) == ["other", "k"]
+    shell.events([4], 12, key=RequestKey("third", b"4"))
+    assert list(shell.feed.state.keys.kept) == ["k", "third"], "the oldest go first"
+
+
+def test_a_key_with_another_body_is_refused_and_one_whose_request_waits_too() -> None:
+    shell = Shell(patient(), synchronous=False)
+    shell.events([1], 0, key=RequestKey("k", b"1"))
+    shell.events([1], 0, key=RequestKey("k", b"1"))
+    assert shell.refusals[2].reason == "key_in_flight"
+    shell.sync()
+    assert shell.events([1], 0, key=RequestKey("k", b"1")) == shell.answers[1]
+    shell.events([2], 0, key=RequestKey("k", b"2"))
+    assert shell.refusals[4].reason == "key_reused"
+    assert len(shell.requests) == 1

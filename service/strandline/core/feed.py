@@ -360,7 +360,9 @@ class Feed:
 def _require_consistent(arrival: Arrival, known: Mapping[str, int]) -> None:
     """Raise ValueError for what could not be folded: a record that is written stands for ever."""
     rows, names = len(arrival.times), arrival.new_sources
-    if len(arrival.sources) != rows or len(arrival.lengths) != rows:
+    optional = (arrival.identities, arrival.line_numbers)
+    columns = (arrival.sources, arrival.lengths, *(column for column in optional if column is not None))
+    if any(len(column) != rows for column in columns):
         raise ValueError("an arrival's columns must have equal lengths")
     if rows == 1:
         greatest, length = int(arrival.sources[0]), int(arrival.lengths[0])

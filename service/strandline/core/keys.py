@@ -34,6 +34,9 @@ class Keys:
 
     def keep(self, key: str, kept: Kept, keys_at_most: int, since_ns: int) -> None:
         """Remember an answer, and forget what is beyond the limits or older than since_ns."""
+        expired = self.kept.pop(key, None)  # it may have come before, longer ago than `find` looks: it is new now
+        if expired is not None:
+            self._faults -= len(expired.outcome.faults)
         self.kept[key] = kept
         self._faults += len(kept.outcome.faults)
         while self.kept:

@@ -146,16 +146,17 @@ class State:
         if len(times):
             times, refs, identities, ahead = self._without_ahead(body, times, refs)
             entries += ahead
+        words, word_refs = times, refs  # a repeat is a word of its source too
         if len(times) and identities is not None and self.seen.window:
-            times, refs, duplicate = self._without_repeats(times, refs, identities, body.arrived_ns)
+            times, refs, duplicate = self._without_repeats(times, refs, identities)
         if len(times):
-            oldest = least_of(times)
-            self._note_lateness(times, oldest)
-            self.sources.hear(refs["source"], times, body.arrived_ns)
-            if oldest < self.watermark_ns:
-                times, refs, late_batch = self._without_late(times, refs, body.arrived_ns, end_lsn)
-                batches.append(late_batch)
-                late = len(late_batch)
+            self._note_lateness(times)
+        if len(words):
+            self.sources.hear(word_refs["source"], words, body.arrived_ns)
+        if len(times) and least_of(times) < self.watermark_ns:
+            times, refs, late_batch = self._without_late(times, refs, body.arrived_ns, end_lsn)
+            batches.append(late_batch)
+            late = len(late_batch)
         if len(times):
             self._hold(times, refs, body)
         if entries:
@@ -181,14 +182,11 @@ class State:
             settings = self.settings
             self.keys.keep(key.key, kept, settings.keys_at_most, arrived_ns - settings.keys_kept_for_ns)
 
-    def _without_repeats(
-        self, times: Times, refs: Refs, identities: NDArray[np.uint64], arrived_ns: int
-    ) -> tuple[Times, Refs, int]:
+    def _without_repeats(self, times: Times, refs: Refs, identities: NDArray[np.uint64]) -> tuple[Times, Refs, int]:
         first = self.seen.first_time(identities)
         repeats = len(first) - int(np.count_nonzero(first))
         if not repeats:
             return times, refs, 0
-        self.sources.hear(refs["source"], times, arrived_ns)  # a repeat is a word of its source too
         return *_pick(times, refs, first), repeats
 
     def _without_ahead(
@@ -218,8 +216,8 @@ class State:
         number = self.outbox.next_number["quarantine"]
         return Batch("quarantine", number, empty_times(), empty_refs(), arrived_ns, end_lsn, entries=entries)
 
-    def _note_lateness(self, times: Times, oldest: int) -> None:
-        newest = self.sources.newest_ns
+    def _note_lateness(self, times: Times) -> None:
+        newest, oldest = self.sources.newest_ns, least_of(times)
         if oldest >= newest or len(times) == 1:
             self.figures.lateness.add_same(min(max(newest - oldest, 0), TIME_MAX), len(times))
         else:

@@ -73,6 +73,7 @@ class Journal(Readable):
         self._next_lsn = 0
         self._failure: str | None = None
         self._opened = False
+        self._short = False
         self.counters = Counters()
         self.cut_bytes = 0
 
@@ -161,13 +162,14 @@ class Journal(Readable):
         """
         need = sum(map(frame_bytes, body_bytes))
         self._raise_if_unusable()
-        if not of_headroom:
-            self._limits.check(need, self.bytes_used, self._queued_bytes)
         stretch = need if of_headroom else need + self._headroom
+        more = 0
         if stretch > self._left and not self._spares.hold(stretch):
-            if not of_headroom:
-                more = max(self._segment_bytes, stretch + SEGMENT_HEADER_BYTES)
-                self._limits.check(need, self.bytes_used + more, self._queued_bytes)
+            more = max(self._segment_bytes, stretch + SEGMENT_HEADER_BYTES)
+        if not of_headroom:
+            self._short = self.bytes_used + more > self._limits.bytes_at_most
+            self._limits.check(need, self.bytes_used + more, self._queued_bytes)
+        if more:
             self._make_spare(stretch)
 
     def append(self, lsn: int, kind: int, parts: Sequence[Buffer], version: int = VERSION) -> None:
@@ -212,6 +214,9 @@ class Journal(Readable):
     def _make_spare(self, frames_bytes: int) -> None:
         try:
             self._spares.make(frames_bytes)
+        except JournalFull:
+            self._short = True
+            raise
         except OSError as error:
             self._fail(error, "reserving a segment")
 
@@ -286,6 +291,17 @@ class Journal(Readable):
         """Whether `replenish` has something to do."""
         return not len(self._spares)
 
+    @property
+    def short_of_room(self) -> bool:
+        """Whether the limit or the disk has no room for one more segment, or somebody was refused for want of it."""
+        full = self.lacks_spare and self.bytes_used + self._segment_bytes > self._limits.bytes_at_most
+        return full or self._short
+
+    def frees(self, lsn: int) -> bool:
+        """Whether `drop_before(lsn)` would delete something, were `lsn` durable."""
+        segments = self._segments
+        return len(segments) > 1 and segments[1].first_lsn <= lsn
+
     def drop_before(self, lsn: int) -> int:
         """Delete the segments whose frames all end at or before `lsn`, never the last one; returns the bytes freed.
 
@@ -309,6 +325,7 @@ class Journal(Readable):
             oldest.seal()
             self._maps.forget(oldest.path)
             freed += oldest.size
+            self._short = False
         return freed
 
     def close(self) -> None:

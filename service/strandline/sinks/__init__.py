@@ -18,19 +18,25 @@ if TYPE_CHECKING:
 SINK_KINDS: dict[str, tuple[str, str]] = {
     "sqlite": ("sqlite", "SqliteSink"),
     "ndjson": ("ndjson", "NdjsonSink"),
+    "postgres": ("postgres", "PostgresSink"),
+    "http": ("http", "HttpSink"),
 }
 
 
 def make_sink(kind: str, feed: str, clock: Clock, **options: object) -> Sink:
     """A sink of this kind for this feed; nothing is opened yet.
 
-    Options are the constructor's: sqlite: path; ndjson: directory, roll_bytes, roll_every_s. Raises StrandlineError for
-    a kind that is not known, and for options that the kind does not have or lacks.
+    Options are the constructor's, such as `path` for sqlite. Raises StrandlineError for a kind that is not known or not
+    installed, and for options that the kind does not have or lacks.
     """
     if kind not in SINK_KINDS:
         raise StrandlineError(f"there is no kind of sink named {kind!r}: name one of {', '.join(SINK_KINDS)}")
     module, name = SINK_KINDS[kind]
-    maker = getattr(importlib.import_module(f".{module}", __name__), name)
+    try:
+        maker = getattr(importlib.import_module(f".{module}", __name__), name)
+    except ModuleNotFoundError as error:
+        advice = f"install strandline with its extra: pip install 'strandline[{kind}]'"
+        raise StrandlineError(f"a sink of kind {kind} needs the package {error.name}: {advice}") from error
     given: dict[str, object] = {"feed": feed, **options}
     parameters = inspect.signature(maker).parameters
     if "clock" in parameters:

@@ -8,9 +8,11 @@ from __future__ import annotations
 
 import gzip
 import io
-from collections.abc import Mapping, Sequence
+import os
+from collections.abc import Sequence
 from functools import partial
 from pathlib import Path
+from typing import Literal
 from urllib.parse import quote
 
 import aiohttp
@@ -52,20 +54,20 @@ class HttpSink:
         feed: str,
         clock: Clock,
         *,
-        late_url: str = "",
-        headers: Mapping[str, str] | None = None,
-        token: str = "",
-        token_file: Path | None = None,
-        compress: bool = False,
+        late_url: str | None = None,
+        headers: Sequence[tuple[str, str]] = (),
+        token: str | None = None,
+        token_file: str | os.PathLike[str] | None = None,
+        compression: Literal["none", "gzip"] = "none",
         timeout_s: float = 30.0,
         answer_bytes_at_most: int = ANSWER_BYTES_AT_MOST,
     ) -> None:
-        """`late_url` "": the same one. `token` or the content of `token_file` is sent as a bearer token."""
+        """`late_url` None: the same one. `token` or the content of `token_file` is sent as a bearer token."""
         self._urls: dict[Lane, str] = {"ordered": url, "late": late_url or url}
         self._feed, self._clock = quote(feed, safe=""), clock
         self._headers = dict(headers or {})
-        self._token, self._token_file = token, token_file
-        self._compress, self._answer_bytes_at_most = compress, answer_bytes_at_most
+        self._token, self._token_file = token, None if token_file is None else Path(token_file)
+        self._compress, self._answer_bytes_at_most = compression == "gzip", answer_bytes_at_most
         self._timeout = aiohttp.ClientTimeout(total=timeout_s, sock_connect=min(timeout_s, CONNECT_WITHIN_S))
         self._thread = OwnThread(f"http {feed}")
         self._session: aiohttp.ClientSession | None = None
@@ -82,7 +84,7 @@ class HttpSink:
         return 0.0
 
     async def open(self) -> dict[Lane, int]:
-        """Nothing is asked of the receiver: it cannot tell a position. Raises SinkRetry where the token is not there."""
+        """Ask nothing of the receiver, which cannot tell a position. Raises SinkRetry where the token is not there."""
         await self._authorization()
         self._reached = {}
         return {}

@@ -1,111 +1,57 @@
-"""The built-in keeper of the late lane and the quarantine, and how both are read while the service runs.
+"""The built-in keeper of the late lane, of the quarantine, and of what sinks refused for good.
 
 One SQLite file a feed, behind the same port as every sink, so that nothing in either lane is lost when segments of the
-journal are deleted. Sending late events again, and limits on how much may be kept, are decided elsewhere: `size` tells.
+journal are deleted. Sending events again, and limits on how much may be kept, are decided elsewhere: `size` tells. The
+file's shape is `lane_tables`, reading it while the service runs is `lane_reading`; both are at hand from here.
 """
 
 from __future__ import annotations
 
-import contextlib
 import os
 import sqlite3
-from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
-from pathlib import Path
-from typing import Any, Literal
+from collections.abc import Sequence
+from functools import partial
 
 from ..core.columns import Batch, Lane
-from ..errors import StrandlineError
+from ..errors import SinkRetry
 from ..ports import Lines
-from .database import BUSY_WAIT_S, Database, Table, connect, insert_columns, trouble
+from .database import Database, insert_columns
+from .lane_reading import ROWS_AT_MOST, forget_rows, lanes_size, late_rows, quarantine_rows, refused_rows
+from .lane_tables import (
+    LATE,
+    QUARANTINE,
+    REFUSED,
+    TABLES,
+    KeptLane,
+    LanesSize,
+    LateRow,
+    QuarantineRow,
+    RefusedRow,
+    measured,
+)
 from .rows import event_texts, late_by_ns, one_lane, source_column
 
-KeptLane = Literal["late", "quarantine"]
-LANES: tuple[KeptLane, ...] = ("late", "quarantine")
-ROWS_AT_MOST = 10_000  # rows of one reading
-ROW_BYTES_AT_MOST = 16 * 1024 * 1024  # bytes of events of one reading, after the first row
+__all__ = [
+    "ROWS_AT_MOST",
+    "KeptLane",
+    "LaneStore",
+    "LanesSize",
+    "LateRow",
+    "QuarantineRow",
+    "RefusedRow",
+    "forget_rows",
+    "lanes_size",
+    "late_rows",
+    "quarantine_rows",
+    "refused_rows",
+]
 
-LATE = Table(
-    "late",
-    (
-        ("number", "INTEGER PRIMARY KEY"),
-        ("batch", "INTEGER NOT NULL"),
-        ("time_ns", "INTEGER NOT NULL"),
-        ("source", "TEXT"),
-        ("arrived_ns", "INTEGER NOT NULL"),
-        ("late_by_ns", "INTEGER NOT NULL"),
-        ("watermark_ns", "INTEGER NOT NULL"),
-        ("event", "TEXT NOT NULL"),
-    ),
-)
-QUARANTINE = Table(
-    "quarantine",
-    (
-        ("number", "INTEGER PRIMARY KEY"),
-        ("batch", "INTEGER NOT NULL"),
-        ("arrived_ns", "INTEGER NOT NULL"),
-        ("line", "INTEGER NOT NULL"),
-        ("reason", "TEXT NOT NULL"),
-        ("detail", "TEXT NOT NULL"),
-        ("event", "BLOB NOT NULL"),
-    ),
-)
-# One row a lane: the position (last batch), the last number given (never given again, also after rows were forgotten),
-# and what is kept, counted in the same transaction, since counting a million rows takes as long as reading them.
-KEPT = Table(
-    "kept",
-    (
-        ("lane", "TEXT NOT NULL PRIMARY KEY"),
-        ("batch", "INTEGER NOT NULL"),
-        ("number", "INTEGER NOT NULL"),
-        ("rows", "INTEGER NOT NULL"),
-        ("bytes", "INTEGER NOT NULL"),
-    ),
-    options="WITHOUT ROWID",
-)
-TABLES = (LATE, QUARANTINE, KEPT)
-
-
-@dataclass(frozen=True, slots=True)
-class LateRow:
-    """One late event. Times in ns since 1970 UTC; `watermark_ns` is the watermark that it came behind."""
-
-    number: int
-    batch: int
-    time_ns: int
-    source: str | None
-    arrived_ns: int
-    late_by_ns: int
-    watermark_ns: int
-    event: str
-
-
-@dataclass(frozen=True, slots=True)
-class QuarantineRow:
-    """One line that could not be an event: why, which line of its request (from 1), and its bytes as they came."""
-
-    number: int
-    batch: int
-    arrived_ns: int
-    line: int
-    reason: str
-    detail: str
-    event: bytes
-
-
-@dataclass(frozen=True, slots=True)
-class LanesSize:
-    """What is kept: rows and bytes of events by lane, and the bytes of the files on disk."""
-
-    late_rows: int = 0
-    late_bytes: int = 0
-    quarantine_rows: int = 0
-    quarantine_bytes: int = 0
-    file_bytes: int = 0
+LANES: tuple[Lane, ...] = ("late", "quarantine")
+FULL_RETRY_S = 60.0
 
 
 class LaneStore:
-    """Keeps the late lane and the quarantine of one feed, each event exactly once across crashes.
+    """Keeps the late lane and the quarantine of one feed, and what its sinks refused, each once across crashes.
 
     Rows are numbered from 1 in order of arrival. Nothing is dropped here at any size: `size` is current after each
     `open`, `take` and `measure`, and whoever feeds this store refuses requests at its limit.
@@ -148,12 +94,31 @@ class LaneStore:
         await self._database.transaction(_positions, self._measure)
         return self._size
 
+    async def keep_refused(
+        self, sink: str, batches: Sequence[Batch], detail: str, lines: Lines, bytes_at_most: int
+    ) -> None:
+        """Keep batches that a sink refused for good, once each; durable when this returns. May be called at any time.
+
+        Raises SinkRetry where the file has `bytes_at_most` or more: what is settled must be removed first. Other errors
+        as for `Database.transaction`.
+        """
+        if self._size.file_bytes >= bytes_at_most:
+            await self.measure()
+        if self._size.file_bytes >= bytes_at_most:
+            raise SinkRetry(
+                f"{len(batches)} batches are refused for good and wait, since {self._database.path} has reached "
+                f"lanes_at_most: export and forget what is settled, or raise the limit. Why they are refused: {detail}",
+                retry_after_s=FULL_RETRY_S,
+            )
+        work = partial(_keep_refused, sink=sink, batches=batches, detail=detail, lines=lines)
+        await self._database.transaction(work, self._measure)
+
     async def close(self) -> None:
         """Release the file."""
         await self._database.close()
 
     def _measure(self, connection: sqlite3.Connection) -> None:
-        self._size = _measured(connection, self._database.path)
+        self._size = measured(connection, self._database.path)
 
 
 # ---- writing, in the thread -----------------------------------------------------------------------------------------
@@ -213,114 +178,35 @@ def _event_bytes(batches: Sequence[Batch]) -> int:
     return sum(sum(e.length for e in batch.entries) + int(batch.refs["length"].sum()) for batch in batches)
 
 
-def _measured(connection: sqlite3.Connection, path: Path) -> LanesSize:
-    kept = {lane: (rows, size) for lane, rows, size in connection.execute("SELECT lane, rows, bytes FROM kept")}
-    return LanesSize(*kept.get("late", (0, 0)), *kept.get("quarantine", (0, 0)), _file_bytes(path))
+# ---- what sinks refused ---------------------------------------------------------------------------------------------
 
 
-def _file_bytes(path: Path) -> int:
-    total = 0
-    for each in (path, path.with_name(path.name + "-wal")):
-        with contextlib.suppress(FileNotFoundError):
-            total += each.stat().st_size
-    return total
+def _keep_refused(
+    connection: sqlite3.Connection, *, sink: str, batches: Sequence[Batch], detail: str, lines: Lines
+) -> None:
+    """After a crash a batch can be refused, and come here, again: one that is there already is passed over."""
+    known = "SELECT 1 FROM refused WHERE sink = ? AND lane = ? AND batch = ? LIMIT 1"
+    for batch in batches:
+        if len(batch) and connection.execute(known, (sink, batch.lane, batch.number)).fetchone() is None:
+            (last,) = connection.execute("SELECT number FROM kept WHERE lane = 'refused'").fetchone() or (0,)
+            insert_columns(connection, REFUSED.name, _refused_columns(sink, batch, detail, lines, last + 1))
+            connection.execute(_KEEP, ("refused", 0, last + len(batch), len(batch), _event_bytes([batch])))
 
 
-# ---- reading, from another connection or another program ------------------------------------------------------------
-
-
-def late_rows(
-    path: str | os.PathLike[str],
-    after: int = 0,
-    limit: int = 100,
-    source: str | None = None,
-    since_ns: int | None = None,
-) -> list[LateRow]:
-    """Late events with a number above `after`, ascending; of one source, or arrived at `since_ns` or later, if asked.
-
-    At most `limit` (1 to 10,000) and some 16 MiB of events: read on after the last number until nothing comes. Empty
-    where there is no file yet. A reader never holds the service up. Raises StrandlineError.
-    """
-    wanted = {"number > ?": after, "source = ?": source, "arrived_ns >= ?": since_ns}
-    return [LateRow(*row) for row in _rows(Path(path), LATE, wanted, limit)]
-
-
-def quarantine_rows(
-    path: str | os.PathLike[str],
-    after: int = 0,
-    limit: int = 100,
-    reason: str | None = None,
-    since_ns: int | None = None,
-) -> list[QuarantineRow]:
-    """Lines in quarantine with a number above `after`, ascending; of one reason, if asked. Else as `late_rows`."""
-    wanted = {"number > ?": after, "reason = ?": reason, "arrived_ns >= ?": since_ns}
-    return [QuarantineRow(*row) for row in _rows(Path(path), QUARANTINE, wanted, limit)]
-
-
-def lanes_size(path: str | os.PathLike[str]) -> LanesSize:
-    """What a file keeps; all 0 where there is none yet. Raises StrandlineError."""
-    with _reading(Path(path)) as connection:
-        return LanesSize() if connection is None else _measured(connection, Path(path))
-
-
-def forget_rows(path: str | os.PathLike[str], lane: KeptLane, through: int) -> int:
-    """Delete a lane's rows up to and including number `through`, and give their room back to the disk.
-
-    For an operator who has exported them, also while the service runs. Returns how many. Raises StrandlineError.
-    """
-    place = Path(path)
-    if lane not in LANES:
-        raise StrandlineError(f"there is no lane {lane!r} to forget rows of: name one of {', '.join(LANES)}")
-    if lanes_size(place) == LanesSize():
-        return 0
-    with _sentences(place), contextlib.closing(connect(place, TABLES)) as connection:
-        connection.execute("BEGIN IMMEDIATE")
-        rows, size = connection.execute(
-            f"SELECT count(*), coalesce(sum(length(CAST(event AS BLOB))), 0) FROM {lane} WHERE number <= ?", (through,)
-        ).fetchone()
-        connection.execute(f"DELETE FROM {lane} WHERE number <= ?", (through,))
-        connection.execute("UPDATE kept SET rows = rows - ?, bytes = bytes - ? WHERE lane = ?", (rows, size, lane))
-        connection.execute("COMMIT")
-        connection.executescript("PRAGMA incremental_vacuum")  # `execute` would step once, which frees one page
-        connection.execute("PRAGMA wal_checkpoint(TRUNCATE)").fetchall()
-        return int(rows)
-
-
-def _rows(path: Path, table: Table, wanted: Mapping[str, object], limit: int) -> list[tuple[Any, ...]]:
-    if not 1 <= limit <= ROWS_AT_MOST:
-        raise StrandlineError(f"{limit} rows cannot be read at once: ask for 1 to {ROWS_AT_MOST:,}")
-    conditions = {condition: value for condition, value in wanted.items() if value is not None}
-    query = f"SELECT * FROM {table.name} WHERE {' AND '.join(conditions)} ORDER BY number LIMIT ?"
-    rows: list[tuple[Any, ...]] = []
-    room = ROW_BYTES_AT_MOST
-    with _reading(path) as connection:
-        for row in [] if connection is None else connection.execute(query, (*conditions.values(), limit)):
-            room -= len(row[-1])
-            if rows and room < 0:
-                break
-            rows.append(row)
-    return rows
-
-
-@contextlib.contextmanager
-def _reading(path: Path) -> Iterator[sqlite3.Connection | None]:
-    """A connection that cannot write; None where there is no file, or none with its tables yet."""
-    with _sentences(path):
-        if not path.exists():
-            yield None
-            return
-        address = path.absolute().as_uri() + "?mode=ro"
-        connection = sqlite3.connect(address, uri=True, timeout=BUSY_WAIT_S, isolation_level=None)
-        with contextlib.closing(connection):
-            made = connection.execute("SELECT count(*) FROM sqlite_master WHERE name IN ('late', 'kept')").fetchone()
-            yield connection if made == (2,) else None
-
-
-@contextlib.contextmanager
-def _sentences(path: Path) -> Iterator[None]:
-    try:
-        yield
-    except sqlite3.Error as error:
-        raise trouble(path, error) from error
-    except OSError as error:
-        raise StrandlineError(f"{path} cannot be read: {error.strerror or error}") from error
+def _refused_columns(sink: str, batch: Batch, detail: str, lines: Lines, first: int) -> list[Sequence[object]]:
+    rows = len(batch)
+    nothing = [None] * rows
+    placed = batch.lane != "quarantine"
+    return [
+        range(first, first + rows),
+        [sink] * rows,
+        [batch.lane] * rows,
+        [batch.number] * rows,
+        range(rows),
+        [batch.instant_ns] * rows,
+        batch.times.tolist() if placed else nothing,
+        [batch.behind_ns] * rows if batch.lane == "late" else nothing,
+        source_column(batch, lines) if placed else nothing,
+        [detail] * rows,
+        lines.lines(batch),
+    ]

@@ -11,9 +11,9 @@ from collections.abc import Iterator, Sequence
 from ..core.columns import Batch, Lane
 from ..errors import SinkRefused, SinkRetry, StrandlineError
 from ..ports import Lines
-from .postgres_columns import DEFAULT, Column, key_of, settled
+from .postgres_columns import ASIDE_TABLE, DEFAULT, Column, key_of, settled
 from .postgres_fields import storable
-from .postgres_rows import ASIDE, ASIDE_KEY, ASIDE_TABLE, LATE, RowMaker, Rows
+from .postgres_rows import ASIDE, ASIDE_KEY, LATE, RowMaker, Rows
 from .postgres_server import (
     POSITION,
     Connection,

@@ -8,7 +8,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
-NAME_BYTES_AT_MOST = 63  # PostgreSQL cuts longer identifiers short without an error (NAMEDATALEN - 1)
+ASIDE_TABLE, POSITION_TABLE = OWN_TABLES = ("strandline_aside", "strandline_position")
 
 # Types by the name that the configuration uses -> the name that the server's catalogue shows.
 TYPES: dict[str, str] = {

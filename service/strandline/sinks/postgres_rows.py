@@ -11,7 +11,7 @@ from typing import Any
 
 from ..core.columns import Batch
 from ..ports import Lines
-from .postgres_columns import DEFAULT, VALUES, Column, holds_events
+from .postgres_columns import ASIDE_TABLE, DEFAULT, VALUES, Column, holds_events
 from .postgres_fields import Fields, Values, microseconds, storable, storable_column
 from .rows import event_texts, late_by_ns, source_column
 
@@ -30,7 +30,6 @@ POSITIONS = (
     Column("table_name", "table_name", type="text"),
     Column("batch", "batch", type="bigint"),
 )
-ASIDE_TABLE, POSITION_TABLE = "strandline_aside", "strandline_position"
 ASIDE_KEY = ("table_name", "feed", "batch", "position")
 POSITION_KEY = ("feed", "lane", "table_name")
 

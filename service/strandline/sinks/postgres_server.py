@@ -15,8 +15,8 @@ import asyncpg
 
 from ..core.columns import Lane
 from ..errors import SinkRetry, StrandlineError
-from .postgres_columns import TYPES, Column, definition, quoted
-from .postgres_rows import POSITION_KEY, POSITION_TABLE, POSITIONS
+from .postgres_columns import POSITION_TABLE, TYPES, Column, definition, quoted
+from .postgres_rows import POSITION_KEY, POSITIONS
 
 Connection: TypeAlias = "asyncpg.Connection[asyncpg.Record]"
 CONNECT_WITHIN_S = 10.0

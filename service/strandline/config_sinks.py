@@ -1,0 +1,148 @@
+"""The kinds of sinks as a configuration describes them, each one struct. What a sink does is `strandline.sinks`.
+
+Rules that compare keys, of one sink or of several, are `config_sink_checks`.
+"""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated, ClassVar, Literal
+
+import msgspec
+from msgspec import field
+
+from .config_kinds import (
+    choice,
+    duration,
+    headers,
+    identifier,
+    name,
+    path,
+    pointer,
+    postgres_address,
+    secret,
+    size,
+    url,
+)
+from .config_read import Key, Tables
+from .core.settings import SECOND_NS
+from .sinks.postgres_columns import TYPES, VALUES, Column
+
+MIB = 2**20
+
+SINK_NAME = name("a-z0-9_-", "1 to 63 of a-z, 0-9, - and _, the first a letter or digit", reserved="lanes")
+
+
+class SinkConfig(msgspec.Struct, frozen=True):
+    """What every kind of sink has. A further kind is one more struct and one line in SINK_KINDS."""
+
+    kind: ClassVar[str] = ""
+    # "{feed}" in the default of a path stands for the feed's name; relative paths start at `data_dir`.
+    name: Annotated[str, Key(SINK_NAME, "unique within the feed; in metrics and on the dashboard")] = "{kind}"
+
+    def options(self) -> dict[str, object]:
+        """What `sinks.make_sink` takes for this kind; times become seconds there (`roll_every_s`)."""
+        options = {key: getattr(self, key) for key in self.__struct_fields__ if key != "name"}
+        times = {key: value for key, value in options.items() if key.endswith("_ns")}
+        return {key: value for key, value in options.items() if key not in times} | {
+            f"{key.removesuffix('_ns')}_s": value / SECOND_NS for key, value in times.items()
+        }
+
+
+class SqliteConfig(SinkConfig, frozen=True):
+    """One SQLite file: tables `events` and `late`, the position reached in the same transaction."""
+
+    kind: ClassVar[str] = "sqlite"
+    path: Annotated[Path, Key(path(), "the file, which feeds may share; relative to `data_dir`")] = Path("{feed}.db")
+
+
+class NdjsonConfig(SinkConfig, frozen=True):
+    """Files of newline-delimited JSON in one folder."""
+
+    kind: ClassVar[str] = "ndjson"
+    directory: Annotated[Path, Key(path(), "the folder, which feeds may share; relative to `data_dir`")] = Path(
+        "{feed}-ndjson"
+    )
+    roll_bytes: Annotated[int, Key(size("1KiB"), "a new file is begun beyond this size")] = 64 * MIB
+    roll_every_ns: Annotated[int, Key(duration("1s"), "a new file is begun after this time")] = field(
+        default=10 * SECOND_NS, name="roll_every"
+    )
+
+
+class PostgresColumn(msgspec.Struct, frozen=True):
+    """One column of `table`: a value that is known of every event (`value`), or one out of the event (`at`).
+
+    With neither, the value that the column is named after. A value that does not fit its type is NULL where the table
+    has a column of type text for `event`; otherwise the row goes, whole, to the table `strandline_aside`. A text column
+    takes anything: strings as they are, everything else as JSON.
+    """
+
+    name: Annotated[str, Key(identifier(), "the column's name")]
+    value: Annotated[str | None, Key(choice(*VALUES), "what is known of every event")] = None
+    at: Annotated[str | None, Key(pointer(), "where in an event the value stands")] = None
+    type: Annotated[
+        str | None, Key(choice(*TYPES), "the column's type; by default that of `value`, and text with `at`")
+    ] = None
+
+    def column(self) -> Column:
+        """As the sink takes it."""
+        return Column(self.name, self.value or "", self.at or "", self.type or "")
+
+
+class PostgresConfig(SinkConfig, frozen=True):
+    """Tables of a PostgreSQL database, the position reached in the same transaction. Needs the extra `postgres`."""
+
+    kind: ClassVar[str] = "postgres"
+    dsn: Annotated[
+        str,
+        Key(
+            postgres_address(),
+            "the database, `postgres://user@host/database`; what it leaves out is taken from the variables `PGHOST`, "
+            "`PGUSER`, `PGPASSWORD` and so on, or from a password file",
+        ),
+    ] = "postgres://"
+    schema: Annotated[str, Key(identifier(), "the schema of all tables; it must be there")] = "public"
+    table: Annotated[str, Key(identifier(), "the table for ordered events, made if absent; feeds may share it")] = (
+        "events"
+    )
+    late_table: Annotated[str, Key(identifier(), "the table for late events, made if absent; feeds may share it")] = (
+        "late"
+    )
+    columns: Annotated[tuple[PostgresColumn, ...], Tables({"": PostgresColumn})] = ()
+    timeout_ns: Annotated[int, Key(duration("100ms", "1h"), "the longest wait for one answer of the server")] = field(
+        default=60 * SECOND_NS, name="timeout"
+    )
+
+    def options(self) -> dict[str, object]:
+        """As for every sink."""
+        return super().options() | {"columns": tuple(column.column() for column in self.columns)}
+
+
+class HttpConfig(SinkConfig, frozen=True, kw_only=True):
+    """One POST of NDJSON for each batch, with its number as Idempotency-Key."""
+
+    kind: ClassVar[str] = "http"
+    url: Annotated[str, Key(url(), "where ordered events are sent")]
+    late_url: Annotated[str | None, Key(url(), "where late events are sent; by default the same")] = None
+    headers: Annotated[tuple[tuple[str, str], ...], Key(headers(), "sent with every request")] = ()
+    token: Annotated[
+        str | None,
+        Key(secret("token", 4096), "sent as `Authorization: Bearer`; better in its variable than in the file"),
+    ] = None
+    token_file: Annotated[
+        str | None, Key(secret("path", 4096, hidden=False), "a file that holds the token, read for each request")
+    ] = None
+    compression: Annotated[Literal["none", "gzip"], Key(choice("none", "gzip"), "of the bodies that are sent")] = "none"
+    timeout_ns: Annotated[int, Key(duration("100ms", "1h"), "the longest wait for an answer, sending included")] = (
+        field(default=30 * SECOND_NS, name="timeout")
+    )
+    answer_bytes_at_most: Annotated[int, Key(size("1KiB", "16MiB"), "of an answer's body that are read")] = 64 * 1024
+
+
+SINK_KINDS: dict[str, type[SinkConfig]] = {
+    "sqlite": SqliteConfig,
+    "ndjson": NdjsonConfig,
+    "postgres": PostgresConfig,
+    "http": HttpConfig,
+}
+SINK_KINDS_LATER = ("remote_write",)  # promised; named in the fault, so that nobody hunts a typo
