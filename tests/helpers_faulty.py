@@ -19,7 +19,7 @@ from strandline.sinks import make_sink
 
 
 class FaultyDisk:
-    """A Disk. `errors` says which operation fails from now on, and how; `syncing` holds every sync while it is clear."""
+    """A Disk. `errors`: operations that fail from now on, and how; `syncing` holds every sync while it is clear."""
 
     def __init__(self, root: Path) -> None:
         self._disk = LocalDisk(root)

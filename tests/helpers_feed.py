@@ -100,9 +100,8 @@ class Shell:
         before = len(self.records)
         effects = self.feed.arrive(given, now_ns, self.tokens, key)
         self.do(effects)
-        if any(
-            record.kind == Kind.ARRIVAL for record in self.records[before:]
-        ):  # else refused, or answered from memory
+        # Without a record it was refused, or answered from memory.
+        if any(record.kind == Kind.ARRIVAL for record in self.records[before:]):
             self.requests[self.tokens] = given
         return self.answers.get(self.tokens)
 

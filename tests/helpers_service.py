@@ -115,6 +115,23 @@ class Answer:
         return json.loads(self.content)
 
 
+def problem_of(answer: Answer, status: int, kind: str = "about:blank") -> str:
+    """Assert that it is this problem (RFC 9457 sections 3 and 3.1: media type, members, status as sent); its detail."""
+    found = answer.json
+    assert (answer.status, answer.headers["Content-Type"]) == (status, PROBLEM), found
+    assert found["status"] == status
+    assert found["type"] == (kind if kind == "about:blank" else f"urn:strandline:problem:{kind}")
+    assert found["title"] and found["detail"]
+    return str(found["detail"])
+
+
+def retry_after(answer: Answer) -> int:
+    """RFC 9110 section 10.2.3: delay-seconds = 1*DIGIT."""
+    text = answer.headers["Retry-After"]
+    assert text.isascii() and text.isdigit()
+    return int(text)
+
+
 @dataclass(slots=True)
 class Running:
     """A service in this process, and a client for it."""

@@ -15,8 +15,9 @@ from typing import Protocol
 
 import google_crc32c
 import numpy as np
-from strandline.core.columns import Arrival
+from strandline.core.columns import Arrival, RequestKey
 from strandline.core.effects import Outcome
+from strandline.ingest.endpoint import request_key
 from strandline.problems import Refused
 from strandline_loadgen.bodies import Renderer, Style
 from strandline_loadgen.evidence import Rows, Sent
@@ -26,7 +27,7 @@ NDJSON = "application/x-ndjson"
 FIRST_FAULTY_ID = 5_000_000_000
 ID = re.compile(rb'"id":\s*(\d+)')
 # Refusals after which nothing may have been taken; after any other end of a request it may or may not have been.
-CLEAN = {"held_full", "journal_full", "disk_full", "sources_full", "lanes_full"}
+CLEAN = {"held_full", "journal_full", "disk_full", "sources_full", "lanes_full", "key_in_flight"}
 FINAL = {"sources_full"}  # no repeating helps
 
 
@@ -40,7 +41,21 @@ class Service(Protocol):
 
     def decode(self, payload: bytes) -> Arrival: ...
 
-    async def arrive(self, arrival: Arrival) -> Outcome: ...
+    async def arrive(self, arrival: Arrival, key: RequestKey | None) -> Outcome: ...
+
+
+@dataclass(frozen=True, slots=True)
+class Habits:
+    """How the senders behave, by shares of their requests; `events_a_request` None: 1 to 5.
+
+    `keys_last`: the service keeps every key for as long as anybody may send its request again.
+    """
+
+    storm_share: float = 0.05
+    faulty_share: float = 0.1
+    keyed_share: float = 0.0
+    keys_last: bool = True
+    events_a_request: int | None = None
 
 
 @dataclass(slots=True)
@@ -54,11 +69,19 @@ class Request:
     due_ns: int
     repeats: bool  # whether it is sent again when no answer came
     storms: bool  # whether it is sent again although it was answered
+    key: str | None = None
     tries: int = 0
+    answer: Outcome | None = None
 
     @property
     def payload(self) -> bytes:
         return b"".join(line + b"\n" for line in self.lines)
+
+    def add_faulty(self, at: int, number: int) -> None:
+        """A line that is no event, with an id of its own."""
+        self.lines.insert(at, b'{"id":%d, "observed_at"' % number)
+        for column, value in ((self.ids, number), (self.times, 0), (self.sources, 0)):
+            column.insert(at, value)
 
 
 @dataclass(slots=True, eq=False)
@@ -76,6 +99,7 @@ class Crowd:
     """All senders. `attempts` are in the order in which the service was given them."""
 
     chance: random.Random
+    habits: Habits
     requests: list[Request]
     attempts: list[Attempt] = field(default_factory=list)
     waiting: dict[Attempt, asyncio.Task[None]] = field(default_factory=dict)
@@ -85,13 +109,14 @@ class Crowd:
     _next: int = 0
 
     @classmethod
-    def of(cls, trace: Trace, chance: random.Random, storm_share: float, faulty_share: float) -> Crowd:
-        """Cut a trace into requests of 1 to 5 events, in order of arrival, some with a faulty line among them."""
+    def of(cls, trace: Trace, chance: random.Random, habits: Habits) -> Crowd:
+        """Cut a trace into requests, in order of arrival, some with a faulty line among their events."""
         renderer = Renderer(trace, Style("ns", chance.choice((1, 1, 120))))
         lines = renderer.lines(0, len(trace)).split(b"\n")[:-1]
-        requests, start, faulty = [], 0, FIRST_FAULTY_ID
+        requests: list[Request] = []
+        start = 0
         while start < len(trace):
-            stop = min(len(trace), start + chance.choice((1, 1, 2, 3, 5)))
+            stop = min(len(trace), start + (habits.events_a_request or chance.choice((1, 1, 2, 3, 5))))
             request = Request(
                 lines[start:stop],
                 trace.ids[start:stop].tolist(),
@@ -99,18 +124,14 @@ class Crowd:
                 trace.sources[start:stop].tolist(),
                 int(trace.arrivals[stop - 1]),
                 repeats=chance.random() < 0.9,
-                storms=chance.random() < storm_share,
+                storms=chance.random() < habits.storm_share,
+                key=f"request {start}" if chance.random() < habits.keyed_share else None,
             )
-            if chance.random() < faulty_share:
-                at = chance.randrange(len(request.lines) + 1)
-                request.lines.insert(at, b'{"id":%d, "observed_at"' % faulty)
-                request.ids.insert(at, faulty)
-                request.times.insert(at, 0)
-                request.sources.insert(at, 0)
-                faulty += 1
+            if chance.random() < habits.faulty_share:
+                request.add_faulty(chance.randrange(len(request.lines) + 1), FIRST_FAULTY_ID + start)
             requests.append(request)
             start = stop
-        return cls(chance, requests)
+        return cls(chance, habits, requests)
 
     # ---- sending ----------------------------------------------------------------------------------------------------
 
@@ -133,7 +154,9 @@ class Crowd:
         try:
             arrival = service.decode(attempt.request.payload)
             self.attempts.append(attempt)
-            outcome = await service.arrive(arrival)
+            key = attempt.request.key
+            fingerprint = None if key is None else request_key([f'"{key}"'], NDJSON, attempt.request.payload)
+            outcome = await service.arrive(arrival, fingerprint)
         except Refused as refusal:
             if attempt.state == "waiting":
                 self._refused(attempt, refusal.reason)
@@ -147,6 +170,9 @@ class Crowd:
         parts = outcome.accepted + outcome.late + outcome.duplicate + outcome.quarantined
         assert outcome.received == parts == len(attempt.request.ids), outcome
         self._ended(attempt, "answered", outcome=outcome)
+        if self._is_one(attempt.request):
+            assert attempt.request.answer in (None, outcome), "one key, two answers"
+            attempt.request.answer = outcome
         if attempt.request.storms and attempt.request.tries < 4 and not self.calm:
             self.again.append(attempt.request)
 
@@ -190,22 +216,45 @@ class Crowd:
 
     # ---- for the judge ----------------------------------------------------------------------------------------------
 
+    def _is_one(self, request: Request) -> bool:
+        """Whether all attempts at it are one request for the service."""
+        return request.key is not None and self.habits.keys_last
+
     def sent(self) -> Sent:
-        """What was sent and may have been taken, in order of arrival, and whether it was answered."""
-        attempts = [attempt for attempt in self.attempts if attempt.state != "refused"]
-        rows = [attempt.request for attempt in attempts]
+        """What was sent and may have been taken, in order of arrival, and whether it was answered.
+
+        Attempts under one key that lasts are one request, which arrived at one of them.
+        """
+        spans: list[tuple[Request, list[int], list[bool]]] = []
+        known: dict[str, int] = {}
+        for number, attempt in enumerate(self.attempts):
+            if attempt.state == "refused":
+                continue
+            request = attempt.request
+            if not self._is_one(request) or known.setdefault(request.key or "", len(spans)) == len(spans):
+                spans.append((request, [], []))
+            place = known[request.key or ""] if self._is_one(request) else -1
+            spans[place][1].append(number)
+            spans[place][2].append(attempt.state == "answered")
+        rows = [request for request, _, _ in spans]
         events = Rows(
             np.array([each for request in rows for each in request.ids], dtype=np.int64),
             np.array([each for request in rows for each in request.times], dtype=np.int64),
             np.array([each for request in rows for each in request.sources], dtype=np.uint32),
             np.array([google_crc32c.value(line) for request in rows for line in request.lines], dtype=np.uint32),
         )
-        requests = np.repeat(np.arange(len(rows), dtype=np.int64), [len(request.ids) for request in rows])
-        return Sent(events, requests, answered=np.array([a.state == "answered" for a in attempts], dtype=bool))
+        return Sent(
+            events,
+            np.repeat(np.arange(len(rows), dtype=np.int64), [len(request.ids) for request in rows]),
+            begins=np.array([min(numbers) for _, numbers, _ in spans], dtype=np.int64),
+            ends=np.array([max(numbers) for _, numbers, _ in spans], dtype=np.int64),
+            answered=np.array([any(answered) for _, _, answered in spans], dtype=bool),
+        )
 
     def told(self) -> dict[str, int]:
-        """Sums over the answers."""
-        outcomes = [attempt.outcome for attempt in self.attempts if attempt.outcome is not None]
+        """Sums over the answers; those under one key that lasts count once."""
+        outcomes = [attempt.outcome for attempt in self.attempts if attempt.outcome and not self._is_one(attempt.request)]
+        outcomes += [request.answer for request in self.requests if request.answer is not None]
         return {name: sum(getattr(each, name) for each in outcomes) for name in ("accepted", "late", "quarantined")}
 
     def check_answers(self, lanes: dict[str, list[int]]) -> None:

@@ -22,7 +22,7 @@ from sim_weather import Weather
 from simdisk import SimDisk
 from strandline import runtime as runtime_module
 from strandline.config_model import Feed as FeedConfig
-from strandline.core.columns import Arrival
+from strandline.core.columns import Arrival, RequestKey
 from strandline.core.effects import Outcome
 from strandline.errors import JournalError, JournalFailed, JournalFull
 from strandline.journal import commit
@@ -120,8 +120,8 @@ class Process:
     def decode(self, payload: bytes) -> Arrival:
         return self.runtime.decoder.decode(payload, NDJSON, self.runtime.feed.state.sources.numbers)
 
-    async def arrive(self, arrival: Arrival) -> Outcome:
-        return await self.runtime.arrive(arrival)
+    async def arrive(self, arrival: Arrival, key: RequestKey | None) -> Outcome:
+        return await self.runtime.arrive(arrival, key)
 
     @property
     def up(self) -> bool:

@@ -8,10 +8,11 @@ from __future__ import annotations
 
 import random
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import msgspec
+from sim_clients import Habits
 from sim_stores import ReceiverConfig
 from strandline.config_model import EventTime, Feed, Journal, NdjsonConfig, SinkConfig, SqliteConfig
 from strandline_loadgen.shapes import SHAPES, shape
@@ -41,9 +42,9 @@ class Scenario:
     trace: Trace
     steps: int
     weights: dict[str, float] = field(default_factory=lambda: dict(WEIGHTS))
-    storm_share: float = 0.05
-    faulty_share: float = 0.1
+    habits: Habits = Habits()
     fixed: dict[str, object] = field(default_factory=dict)  # keys of the feed that never change
+    id_lasts: bool = False  # whether every repeat of an event is recognised
     slow_down_s: float = 1.0  # how long the service is away between two lives, at most
 
     def feed(self, folder: Path, before: Feed | None = None) -> Feed:
@@ -107,14 +108,14 @@ def _low_tide(scenario: Scenario) -> None:
     chance = scenario.chance
     ahead_s = chance.choice((0.3, 3.0, 8.0))
     scenario.trace = _trace(chance, "low_tide", sources=chance.choice((3, 6)), ahead_s=ahead_s)
-    scenario.fixed = {"ahead_limit_ns": chance.choice((10 * SECOND_NS, FOR_EVER_NS)), "clock": "event"}
+    scenario.fixed |= {"ahead_limit_ns": chance.choice((10 * SECOND_NS, FOR_EVER_NS)), "clock": "event"}
 
 
 def _far_future(scenario: Scenario) -> None:
     """Some events claim a time that lies days ahead; sometimes the feed takes them."""
     chance = scenario.chance
     scenario.trace = _trace(chance, "far_future", share=0.05)
-    scenario.fixed = {"ahead_limit_ns": chance.choice((SECOND_NS, 10 * SECOND_NS, FOR_EVER_NS))}
+    scenario.fixed |= {"ahead_limit_ns": chance.choice((SECOND_NS, 10 * SECOND_NS, FOR_EVER_NS))}
 
 
 def _clock_step(scenario: Scenario) -> None:
@@ -128,7 +129,7 @@ def _storm(scenario: Scenario) -> None:
     """Everything is sent again and again, answered or not."""
     chance = scenario.chance
     scenario.trace = _trace(chance, "duplicates", share=0.5)
-    scenario.storm_share = 0.6
+    scenario.habits = replace(scenario.habits, storm_share=0.6)
     scenario.weights["leave"] = 6
 
 
@@ -189,5 +190,21 @@ def scenario_of(seed: int, pattern: str | None = None) -> Scenario:
     chance = random.Random(f"{seed}/{pattern or ''}")
     name = pattern or chance.choice(sorted(PATTERNS))
     scenario = Scenario(seed, name, chance, None, steps=chance.choice((250, 350, 450)))  # type: ignore[arg-type]
+    _draw_repeats(scenario)
     PATTERNS[name](scenario)
     return scenario
+
+
+def _draw_repeats(scenario: Scenario) -> None:
+    """Whether and for how long repeats are recognised: by id, by key, not at all."""
+    chance = scenario.chance
+    last = chance.random() < 0.7
+    keyed = chance.choice((0.0, 0.5, 1.0))
+    scenario.habits = Habits(keyed_share=keyed, keys_last=last)
+    window, by_id = chance.choice((2, 5, 1_000_000, 1_000_000)), chance.random() < 0.4
+    scenario.id_lasts = by_id and window == 1_000_000
+    scenario.fixed = {
+        "id": "/id" if by_id else None,
+        "id_window_events": window,
+        "keys_at_most": 10_000 if last else chance.choice((0, 1, 3)),
+    }

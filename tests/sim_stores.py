@@ -19,12 +19,12 @@ from sim_loop import beside, swapped
 from sim_weather import Weather
 from strandline.config_model import SinkConfig
 from strandline.core.columns import Batch, Lane
-from strandline.errors import SinkRetry
+from strandline.errors import SinkRefused, SinkRetry
 from strandline.ports import Clock, Lines, Sink
 from strandline.sinks import database, make_sink, ndjson
 
 Result = TypeVar("Result")
-MOODS = ("well", "refuses", "hangs", "hangs late", "loses answers", "fails within")
+MOODS = ("well", "refuses", "refuses for good", "hangs", "hangs late", "loses answers", "fails within")
 Taken = tuple[list[bytes], list[int], list[str]]  # lines, event times, source names of one batch
 
 
@@ -95,6 +95,13 @@ class Flaky:
         return await self._call(self._inner.open)
 
     async def take(self, batches: Sequence[Batch], lines: Lines) -> dict[Lane, int]:
+        if self._stores.moods.get(self._name) == "refuses for good":
+            assert self._stores.weather is not None
+            chance = self._stores.weather.chance
+            refused = [batch.number for batch in batches if chance.random() < 0.5]
+            if refused:
+                self._stores.met["refuses for good"] = self._stores.met.get("refuses for good", 0) + 1
+                raise SinkRefused("the store has no place for these", refused)
         return await self._call(lambda: self._inner.take(batches, lines))
 
     async def flush(self, lines: Lines) -> dict[Lane, int]:

@@ -6,42 +6,53 @@ from pathlib import Path
 
 import numpy as np
 from sim_clients import Crowd, ids_in
-from sim_history import History
 from sim_scenario import FEED, Scenario
 from sim_stores import Stores
 from strandline.config_model import Feed
 from strandline.core.columns import Lane
-from strandline.sinks.lanes import late_rows, quarantine_rows
+from strandline.sinks.lanes import late_rows, quarantine_rows, refused_rows
 from strandline_loadgen.checker import judge
 from strandline_loadgen.evidence import Rows
 from strandline_loadgen.stores import Reading, read_ndjson, read_sqlite
 
 
 def judge_stores(
-    scenario: Scenario, config: Feed, stores: Stores, crowd: Crowd, folder: Path, history: History
+    scenario: Scenario, config: Feed, stores: Stores, crowd: Crowd, folder: Path
 ) -> None:
     """Each store alone: nothing lost, nothing invented, nothing twice, everything in order. Raises AssertionError."""
     reading = Reading(scenario.trace.source_names, digests=True)
-    sent = crowd.sent()
-    quarantined = ids_in([row.event for row in quarantine_rows(folder / "lanes.db", limit=10_000)])
-    kept_late = [row for row in late_rows(folder / "lanes.db", limit=10_000)]
-    late_ids = ids_in([row.event.encode() for row in kept_late])
+    sent, lanes = crowd.sent(), folder / "lanes.db"
+    quarantined = ids_in([row.event for row in quarantine_rows(lanes, limit=10_000)])
+    late_ids = ids_in([row.event.encode() for row in late_rows(lanes, limit=10_000)])
     exact = all(attempt.state in ("answered", "refused") for attempt in crowd.attempts)
+    repeats = scenario.fixed.get("id") is not None or not crowd.habits.keys_last
     told = crowd.told()
     for name in [sink.name for sink in config.sinks]:
         ordered, late = (_rows(name, lane, stores, folder, reading) for lane in ("ordered", "late"))
+        elsewhere = _refused(name, folder, reading, {*ordered.ids.tolist(), *late.ids.tolist()})
         verdict = judge(
             sent,
             ordered,
-            late,
+            [late, elsewhere],
             quarantined=np.array(quarantined, dtype=np.int64),
-            duplicates=0,
-            told={key: told[key] for key in ("accepted", "late")} if exact else None,
+            duplicates=None if repeats else 0,  # None: an event that is there may be there less often than it was sent
+            told={key: told[key] for key in ("accepted", "late")} if exact and not len(elsewhere) else None,
         )
         assert verdict.ok, f"{name}: {verdict}"
-        assert sorted(late.ids.tolist()) == sorted(late_ids), f"{name} and the lane store hold other late events"
-        crowd.check_answers({"ordered": ordered.ids.tolist(), "late": late_ids})
+        all_ids = [*ordered.ids.tolist(), *late.ids.tolist(), *elsewhere.ids.tolist()]
+        assert not scenario.id_lasts or len(set(all_ids)) == len(all_ids), f"{name}: a repeat was not recognised"
+        if not len(elsewhere):
+            assert sorted(late.ids.tolist()) == sorted(late_ids), f"{name} and the lane store hold other late events"
+            crowd.check_answers({"ordered": ordered.ids.tolist(), "late": late_ids})
     assert not exact or told["quarantined"] == len(quarantined)
+
+
+def _refused(name: str, folder: Path, reading: Reading, there: set[int]) -> Rows:
+    """What this store refused for good and is kept for it, less what it took after all when it was offered again."""
+    rows = [row for row in refused_rows(folder / "lanes.db", limit=10_000, sink=name)]
+    rows = [row for row, number in zip(rows, ids_in([row.event for row in rows]), strict=True) if number not in there]
+    block = b"".join(row.event + b"\n" for row in rows)
+    return reading.rows(block, [row.time_ns or 0 for row in rows], [row.source for row in rows])
 
 
 def _rows(name: str, lane: Lane, stores: Stores, folder: Path, reading: Reading) -> Rows:

@@ -7,22 +7,20 @@ within a bounded number of rounds.
 
 from __future__ import annotations
 
-import asyncio
-import random
 from collections import Counter
-from dataclasses import dataclass, field
+from dataclasses import asdict, dataclass, field
 from pathlib import Path
 
 from sim_clients import Crowd
 from sim_history import History
 from sim_loop import PowerCut, SimLoop
 from sim_process import Process, SimClock
-from sim_scenario import FOR_EVER_NS, SECOND_NS, Scenario
+from sim_scenario import SECOND_NS, Scenario
 from sim_stores import MOODS, Stores
 from sim_verdict import judge_stores
 from sim_weather import Weather
 from simdisk import SimDisk
-from strandline.errors import JournalError, JournalFailed, JournalFull
+from strandline.errors import JournalError
 
 ROUNDS_AT_MOST = 600
 
@@ -58,7 +56,7 @@ class World:
         self.config = scenario.feed(folder)
         self.history = History(self.config.settings())
         trace = scenario.trace
-        self.crowd = Crowd.of(trace, self.chance, scenario.storm_share, scenario.faulty_share)
+        self.crowd = Crowd.of(trace, self.chance, scenario.habits)
         self.disk = SimDisk()
         self.mono_ns = 0
         self.skew_ns = 0
@@ -93,7 +91,7 @@ class World:
             self._be_calm()
             self._live_on()
             self._end()
-        judge_stores(self.scenario, self.config, self.stores, self.crowd, self.folder, self.history)
+        judge_stores(self.scenario, self.config, self.stores, self.crowd, self.folder)
         self._count()
         return self.tally
 
@@ -353,6 +351,8 @@ class World:
         feed = self.process.runtime.feed
         self._stop(self.process)
         self.history.finish(feed)
+        for name, number in asdict(feed.state.ledger).items():
+            self.tally.counts[f"event {name}"] += number
 
     def _count(self) -> None:
         self.tally.events += sum(len(request.ids) for request in self.crowd.requests)

@@ -167,8 +167,8 @@ class Service:
         return True
 
     def _failed(self, feed: str, error: Exception) -> None:
-        log.critical("feed %s: %s; the service stops and recovers at its next start", feed, error)
-        self.failure = f"feed {feed}: {error}"
+        self.failure = f"feed {feed}: {str(error) or type(error).__name__}"
+        log.critical("%s; the service stops and recovers at its next start", self.failure)
         self.stopping.set()
 
     async def _tick(self) -> None:

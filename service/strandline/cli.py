@@ -19,6 +19,7 @@ from .errors import FAULT_REASONS, ConfigError, StrandlineError
 
 NARROW: dict[str, dict[str, Any]] = {
     "source": {"metavar": "NAME"},
+    "sink": {"metavar": "NAME"},
     "reason": {"choices": sorted(FAULT_REASONS), "metavar": "REASON"},
 }
 
@@ -62,6 +63,7 @@ def parser() -> argparse.ArgumentParser:
     _add_check(commands)
     _add_lane(commands, "late", "events that came too late to be put in order", "late event", "source")
     _add_lane(commands, "quarantine", "lines that could not be events of their feed", "line in quarantine", "reason")
+    _add_lane(commands, "refused", "events of batches that a sink refused for good", "refused event", "sink")
     return top
 
 
@@ -129,7 +131,7 @@ def _add_check(commands: Any) -> None:
 
 
 def _add_lane(commands: Any, lane: str, things: str, thing: str, narrow: str) -> None:
-    """`late` and `quarantine`: list, export, forget."""
+    """`late`, `quarantine` and `refused`: list, export, forget."""
     group = commands.add_parser(lane, help=f"look at {things}", description=f"Look at {things}.")
     acts = group.add_subparsers(title="commands", metavar="COMMAND", required=True)
     example = f"  strandline {lane} list --feed river-gauges --since 1h"

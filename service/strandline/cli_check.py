@@ -38,7 +38,7 @@ def _write(file: str, config: Config) -> None:
 
 
 def _waits(feed: Feed) -> list[str]:
-    return [duration_text(ns) for ns in (feed.slack_ns, feed.idle_after_ns, feed.hold_at_most_ns)]
+    return [duration_text(ns) for ns in (feed.longest_slack_ns, feed.idle_after_ns, feed.hold_at_most_ns)]
 
 
 def _sinks(feed: Feed) -> list[str]:

@@ -1,4 +1,4 @@
-"""`strandline late` and `strandline quarantine`: list, export and forget what a feed's lanes keep.
+"""`strandline late`, `quarantine` and `refused`: list, export and forget what a feed's lane store keeps.
 
 Reads the file <data_dir>/feeds/<feed>/lanes.db through `sinks.lanes`, also while the service runs.
 """
@@ -27,15 +27,19 @@ from .sinks.lanes import (
     KeptLane,
     LateRow,
     QuarantineRow,
+    RefusedRow,
     forget_rows,
     lanes_size,
     late_rows,
     quarantine_rows,
+    refused_rows,
 )
 
 EVENT_CHARACTERS_AT_MOST = 200  # of an event in a table; `export` and --json give it whole
+DETAIL_CHARACTERS_AT_MOST = 100  # of why a sink refused it, likewise
 
-Row = LateRow | QuarantineRow
+Row = LateRow | QuarantineRow | RefusedRow
+NAMES: dict[KeptLane, str] = {"late": "the late lane", "quarantine": "quarantine", "refused": "what sinks refused"}
 
 
 def list_rows(options: argparse.Namespace, lane: KeptLane) -> int:
@@ -69,7 +73,7 @@ def export_rows(options: argparse.Namespace, lane: KeptLane) -> int:
 def forget(options: argparse.Namespace, lane: KeptLane) -> int:
     """Delete rows up to a number."""
     count = forget_rows(lanes_path(options), lane, options.through)
-    sys.stdout.write(f"{count:,} deleted from {'the late lane' if lane == 'late' else 'quarantine'}\n")
+    sys.stdout.write(f"{count:,} deleted from {NAMES[lane]}\n")
     return FINE
 
 
@@ -107,23 +111,29 @@ def _reader(options: argparse.Namespace, lane: KeptLane) -> Callable[[int, int],
     path, since = lanes_path(options), since_ns(options.since, time.time_ns())
     if lane == "late":
         return lambda after, limit: late_rows(path, after, limit, options.narrow, since)
+    if lane == "refused":
+        return lambda after, limit: refused_rows(path, after, limit, options.narrow, since)
     return lambda after, limit: quarantine_rows(path, after, limit, options.narrow, since)
 
 
 _HEADINGS: dict[KeptLane, tuple[str, ...]] = {
     "late": ("number", "event time", "late by", "arrived", "source", "event"),
     "quarantine": ("number", "arrived", "line", "reason", "what was wrong", "bytes as they came"),
+    "refused": ("number", "sink", "lane", "batch", "event time", "source", "why", "event"),
 }
 
 
 def _cells(row: Row) -> tuple[str, ...]:
-    arrived = format_rfc3339(row.arrived_ns)
     if isinstance(row, LateRow):
         late_by = f"{row.late_by_ns / 1e9:.3f}s"
-        event = row.event[:EVENT_CHARACTERS_AT_MOST]
+        event, arrived = row.event[:EVENT_CHARACTERS_AT_MOST], format_rfc3339(row.arrived_ns)
         return str(row.number), format_rfc3339(row.time_ns), late_by, arrived, row.source or "", event
     event = row.event[: 4 * EVENT_CHARACTERS_AT_MOST].decode(errors="backslashreplace")[:EVENT_CHARACTERS_AT_MOST]
-    return str(row.number), arrived, str(row.line), row.reason, row.detail, event
+    if isinstance(row, RefusedRow):
+        time = "" if row.time_ns is None else format_rfc3339(row.time_ns)
+        detail = row.detail[:DETAIL_CHARACTERS_AT_MOST]
+        return str(row.number), row.sink, row.lane, str(row.batch), time, row.source or "", detail, event
+    return str(row.number), format_rfc3339(row.arrived_ns), str(row.line), row.reason, row.detail, event
 
 
 def _raw_line(row: Row) -> bytes:
@@ -131,7 +141,7 @@ def _raw_line(row: Row) -> bytes:
 
 
 def _json_line(row: Row) -> bytes:
-    """All that is known of a row; a late event as JSON within it, quarantined bytes as text or else as base64."""
+    """All that is known of a row; a late event as JSON within it, other bytes as text or else as base64."""
     known: dict[str, Any] = {name: getattr(row, name) for name in row.__dataclass_fields__ if name != "event"}
     if isinstance(row, LateRow):
         known["event"] = msgspec.Raw(row.event.encode())
@@ -152,8 +162,7 @@ def _progress(path: Path, lane: KeptLane) -> Iterator[Callable[[int], None]]:
     from rich.console import Console  # noqa: PLC0415 - 60 ms, only where there is a terminal
     from rich.progress import Progress  # noqa: PLC0415
 
-    size = lanes_size(path)
-    total = size.late_rows if lane == "late" else size.quarantine_rows
+    total: int = getattr(lanes_size(path), f"{lane}_rows")
     with Progress(console=Console(stderr=True)) as bar:
         task = bar.add_task("exported", total=total)
         yield lambda count: bar.advance(task, count)

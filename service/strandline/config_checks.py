@@ -13,7 +13,7 @@ from pathlib import Path
 import msgspec
 
 from .config_kinds import quoted
-from .config_model import Config, Feed
+from .config_model import Config, Feed, SteeredSlack
 from .config_read import Key, Place, Reading, declared
 from .config_sink_checks import check_sinks
 from .config_sinks import SINK_KINDS, SinkConfig
@@ -31,8 +31,13 @@ class Rule:
 
 FEED_RULES = (
     Rule(
+        ("slack.at_least", "slack.at_most"),
+        lambda feed: isinstance(feed.slack_ns, SteeredSlack) and feed.slack_ns.at_least_ns > feed.slack_ns.at_most_ns,
+        "is longer than at_most = {}",
+    ),
+    Rule(
         ("hold_at_most", "slack"),
-        lambda feed: feed.hold_at_most_ns < feed.slack_ns,
+        lambda feed: feed.hold_at_most_ns < feed.longest_slack_ns,
         "is shorter than slack = {}: no event could wait for all of its slack",
     ),
     Rule(
@@ -103,7 +108,9 @@ def _value(struct: msgspec.Struct, steps: Place, written: bool) -> str:
     """The value at a place below a struct, as TOML."""
     item = declared(type(struct))[str(steps[0])]
     value = getattr(struct, item.attribute)
-    if isinstance(item.mark, Key):
+    if isinstance(value, msgspec.Struct) and len(steps) == 1:
+        return "{ ... }"
+    if isinstance(item.mark, Key) and not isinstance(value, msgspec.Struct):
         shown = "unset" if value is None else item.mark.kind.show(value)
         return shown if written else f"{shown} (the default)"
     return _value(value, steps[1:], written)

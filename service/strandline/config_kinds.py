@@ -15,6 +15,7 @@ from typing import Any, NamedTuple
 from urllib.parse import urlsplit
 
 from .config_units import duration_ns, duration_text, size_bytes, size_text
+from .sinks.remote_write_series import LABEL_BYTES_AT_MOST, LABEL_NAME, LABELS_AT_MOST, METRIC_NAME, Pairs
 
 TEXT_CHARACTERS_AT_MOST = 1024
 LIST_ITEMS_AT_MOST = 10_000
@@ -286,11 +287,54 @@ def headers() -> Kind:
                 raise ValueError(f"holds {shown(key)}, whose value is no line of at most 4,096 ASCII characters")
         return tuple(raw.items())
 
-    return Kind("table of header fields", read, _header_table, secret=True)
+    return Kind("table of header fields", read, _pairs_table, secret=True)
 
 
-def _header_table(pairs: tuple[tuple[str, str], ...]) -> str:
+def _pairs_table(pairs: tuple[tuple[str, str], ...]) -> str:
     return "{ " + ", ".join(f"{key} = {quoted(value)}" for key, value in pairs) + " }" if pairs else "{}"
+
+
+def metric_name() -> Kind:
+    """The name of a series."""
+
+    def read(raw: object) -> str:
+        if METRIC_NAME.fullmatch(_text(raw)) is None:
+            raise ValueError("is no series name: letters, digits, _ and :, at most 200, the first one no digit")
+        return str(raw)
+
+    return Kind("letters, digits, `_` and `:`, the first one no digit", read, quoted)
+
+
+def labels(of: Kind) -> Kind:
+    """A table of labels by name, each with a value of a kind."""
+
+    def read(raw: object) -> Pairs:
+        if not isinstance(raw, dict):
+            raise ValueError('is no table: write { station = "..." }')
+        if len(raw) > LABELS_AT_MOST:
+            raise ValueError(f"names more than {LABELS_AT_MOST} labels")
+        for key, value in raw.items():
+            if LABEL_NAME.fullmatch(key) is None:
+                raise ValueError(f"holds {shown(key)}, which is no label's name: letters, digits and _, none of the "
+                                 "receiver's own, which begin with __")  # fmt: skip
+            try:
+                of.read(value)
+            except ValueError as error:
+                raise ValueError(f"holds {key} = {shown(value)}, which {error}") from None
+        return tuple(raw.items())
+
+    return Kind(f"table of labels, each a {of.about}", read, _pairs_table)
+
+
+def label_value() -> Kind:
+    """The value of a label that never changes."""
+
+    def read(raw: object) -> str:
+        if not 1 <= len(_text(raw).encode()) <= LABEL_BYTES_AT_MOST:
+            raise ValueError(f"is no text of 1 to {LABEL_BYTES_AT_MOST:,} bytes")
+        return str(raw)
+
+    return Kind("text", read, quoted)
 
 
 def _text(raw: object, characters_at_most: int = TEXT_CHARACTERS_AT_MOST) -> str:

@@ -39,7 +39,7 @@ FEED_NAME = name("a-z0-9-", "1 to 63 of a-z, 0-9 and -, the first a letter or di
 
 
 class SteeredSlack(msgspec.Struct, frozen=True):
-    """A slack that follows the share of events that may be late. Read and checked; this version then refuses it."""
+    """A slack that is steered, so that this share of the events is late; in the place of a fixed slack."""
 
     late_share: Annotated[float, Key(share(), "share of the events that may be late")] = 0.001
     at_most_ns: Annotated[int, Key(duration(), "the longest slack")] = field(default=30 * SECOND_NS, name="at_most")
@@ -73,7 +73,8 @@ class Feed(msgspec.Struct, frozen=True):
     source: Annotated[str | None, Key(pointer(), "where an event names its source; without it: one source")] = None
     id: Annotated[str | None, Key(pointer(), "where an event carries its id; with it a repeat is recognised")] = None
     slack_ns: Annotated[
-        int, Key(duration(), "how far the watermark stays behind: lateness up to it is put in order", SteeredSlack)
+        int | SteeredSlack,
+        Key(duration(), "how far the watermark stays behind: lateness up to it is put in order", SteeredSlack),
     ] = field(default=5 * SECOND_NS, name="slack")
     idle_after_ns: Annotated[
         int, Key(duration("1ms"), "a source that is silent this long no longer holds the watermark")
@@ -121,11 +122,18 @@ class Feed(msgspec.Struct, frozen=True):
     journal: Annotated[Journal, Table(Journal)] = Journal()
     sinks: Annotated[tuple[SinkConfig, ...], Tables(SINK_KINDS, SINK_KINDS_LATER)] = field(default=(), name="sink")
 
+    @property
+    def longest_slack_ns(self) -> int:
+        """The slack, or the longest that it may grow to."""
+        return self.slack_ns.at_most_ns if isinstance(self.slack_ns, SteeredSlack) else self.slack_ns
+
     def settings(self) -> Settings:
         """What the core must know of this feed; it is journaled with the feed."""
         return Settings(
             name=self.name,
-            slack_ns=self.slack_ns,
+            slack_ns=self.longest_slack_ns,
+            slack_at_least_ns=self.slack_ns.at_least_ns if isinstance(self.slack_ns, SteeredSlack) else 0,
+            late_share=self.slack_ns.late_share if isinstance(self.slack_ns, SteeredSlack) else None,
             idle_after_ns=self.idle_after_ns,
             hold_at_most_ns=self.hold_at_most_ns,
             ahead_limit_ns=self.ahead_limit_ns,

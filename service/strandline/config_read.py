@@ -26,7 +26,7 @@ NEAR_MISSES_AT_MOST = 200  # looking for the key that was meant takes some 0.1 m
 
 @dataclass(frozen=True, slots=True)
 class Key:
-    """A key with one value. `table` is a struct that the key may hold one day instead; until then it is refused."""
+    """A key with one value. `table` is a struct that it may hold instead."""
 
     kind: Kind
     about: str
@@ -83,6 +83,8 @@ def tables_of(struct: type[msgspec.Struct], title: str = "") -> Iterator[tuple[s
         place = f"{title}.{item.key}" if title else item.key
         if isinstance(item.mark, Table):
             yield from tables_of(item.mark.struct, place)
+        elif isinstance(item.mark, Key) and item.mark.table is not None:
+            yield from tables_of(item.mark.table, place)
         elif isinstance(item.mark, Tables):
             for kind, below in item.mark.structs.items():
                 yield from tables_of(below, f"{place} {kind}".rstrip())
@@ -167,9 +169,7 @@ class Reading:
         match item.mark:
             case Key(kind, _, table):
                 if table is not None and isinstance(raw, dict):
-                    self.table(table, raw, place)
-                    fixed = f"{item.key} = {kind.show(item.default)}"
-                    self.fault(place, f"is a table, but only a fixed value is supported yet: write {fixed}")
+                    yield item.attribute, self.table(table, raw, place)
                     return
                 try:
                     value = kind.read(raw)

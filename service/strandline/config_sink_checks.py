@@ -9,8 +9,10 @@ from collections.abc import Iterable, Iterator
 
 from .config_kinds import quoted
 from .config_read import Place, Reading
-from .config_sinks import HttpConfig, PostgresConfig, SinkConfig
+from .config_sinks import HttpConfig, PostgresConfig, RemoteWriteConfig, SinkConfig
 from .sinks.postgres_columns import OWN_TABLES, settled
+
+SERIES_AT_MOST = 100  # series names that one event feeds
 
 
 def check_sinks(sinks: Iterable[tuple[int, Place, SinkConfig]], reading: Reading) -> None:
@@ -20,8 +22,10 @@ def check_sinks(sinks: Iterable[tuple[int, Place, SinkConfig]], reading: Reading
         if isinstance(sink, PostgresConfig):
             _check_columns(sink, place, reading)
             _check_tables(sink, place, reading)
-        if isinstance(sink, HttpConfig):
+        if isinstance(sink, HttpConfig | RemoteWriteConfig):
             _check_secrets(sink, place, reading)
+        if isinstance(sink, RemoteWriteConfig):
+            _check_series(sink, place, reading)
         for key, target in _targets(sink):
             if reading.is_faulty((*place, key)):
                 continue
@@ -68,9 +72,22 @@ def _check_tables(sink: PostgresConfig, place: Place, reading: Reading) -> None:
             reading.fault((*place, key), sentence, quoted(getattr(sink, key)))
 
 
-def _check_secrets(sink: HttpConfig, place: Place, reading: Reading) -> None:
+def _check_series(sink: RemoteWriteConfig, place: Place, reading: Reading) -> None:
+    series = (*place, "series")
+    if not sink.series and not reading.is_faulty(series):
+        reading.fault(series, 'is missing: write series = [ { name = "...", value = "/..." } ]')
+    if len(sink.series) > SERIES_AT_MOST:
+        reading.fault(series, f"has more than {SERIES_AT_MOST} entries")
+    fixed = {name for name, _ in sink.external_labels}
+    for number, each in enumerate(sink.series):
+        for name in sorted(fixed & {name for name, _ in each.labels}):
+            reading.fault((*series, number, "labels"), f"holds {name}, which is one of external_labels already")
+
+
+def _check_secrets(sink: HttpConfig | RemoteWriteConfig, place: Place, reading: Reading) -> None:
     named = ["token"] if sink.token else []
     named += ["token_file"] if sink.token_file else []
-    named += ["headers"] if any(key.lower() == "authorization" for key, _ in sink.headers) else []
+    headers = sink.headers if isinstance(sink, HttpConfig) else ()
+    named += ["headers"] if any(key.lower() == "authorization" for key, _ in headers) else []
     if len(named) > 1:
         reading.fault((*place, named[-1]), f"and `{named[0]}` both say what `Authorization` is: name one of them")

@@ -40,6 +40,7 @@ def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
         "watermark_age_s": age_s(view.now_ns, view.watermark_ns),
         "newest": time_text(view.newest_ns),
         "slack_s": view.slack_ns / 1e9,
+        "steering": _steering(view),
         "hold": _hold(view),
         "held": _held(view),
         "ledger": {**view.ledger, "balanced": view.balance == 0},
@@ -58,6 +59,33 @@ def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
             for name, hop in runtime.hops().items()
         },
         "sinks": {name: _sink(runtime, view, name) for name in runtime.deliveries},
+    }
+
+
+def _steering(view: View) -> dict[str, Any] | None:
+    steering = view.steering
+    if steering is None:
+        return None
+    words = "the slack is steered"
+    if steering.warming_up:
+        words = "warming up: the longest wait holds until the first events have shown how late they come"
+    elif steering.binding:
+        words = (
+            f"target and longest wait contradict each other: a late share of {steering.target:g} needs more than "
+            f"{steering.at_most_ns / 1e9:g} s; with that wait it is about {steering.attainable:.2g}"
+        )
+    return {
+        "late_share_target": steering.target,
+        "late_share_last_minute": steering.share_minute,
+        "late_share_last_hour": steering.share_hour,
+        "late_share_since_begin": steering.share_begun,
+        "late_share_this_stretch": steering.share_stretch,
+        "bound_this_stretch": steering.bound,
+        "at_most_s": steering.at_most_ns / 1e9,
+        "at_least_s": steering.at_least_ns / 1e9,
+        "contradiction": steering.binding,
+        "attainable_late_share": steering.attainable,
+        "explanation": words,
     }
 
 
@@ -154,4 +182,5 @@ def _sink(runtime: FeedRuntime, view: View, name: str) -> dict[str, Any]:
         "failing_since": time_text(state.failing_since_ns),
         "last_error": state.last_error,
         "retries": state.retries,
+        "counts": state.counts,
     }

@@ -5,6 +5,8 @@ No HTTP, no logging: a reason's status code lives here because the list must be 
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
+
 # Why one line is no event of its feed: reason -> what to do about it (shown in the documentation).
 FAULT_REASONS: dict[str, str] = {
     "malformed": "the line is not one JSON object, or not UTF-8: mend the producer's encoder",
@@ -80,8 +82,8 @@ class SinkRetry(StrandlineError):
 
 
 class SinkRefused(StrandlineError):
-    """The store will never take these batches."""
+    """The store will never take these batches; or, of those in `rows`, never these rows, and it has all others."""
 
-    def __init__(self, detail: str, numbers: list[int]) -> None:
+    def __init__(self, detail: str, numbers: list[int], rows: Mapping[int, Sequence[int]] | None = None) -> None:
         super().__init__(detail)
-        self.numbers = numbers
+        self.numbers, self.rows = numbers, rows or {}

@@ -133,6 +133,8 @@ class _Sampler:
         for name, delivery in self.runtime.deliveries.items():
             state: DeliveryState = delivery.state()
             self.add("strandline_sink_retries", state.retries, name)
+            for reason, count in state.counts.items():
+                self.add("strandline_sink_refused_samples", count, name, reason)
             self.add("strandline_sink_failing", float(state.failing_since_ns is not None), name)
             for lane, waiting in state.lanes.items():
                 self.add("strandline_sink_waiting_events", waiting.events, name, lane)

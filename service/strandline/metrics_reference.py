@@ -132,6 +132,12 @@ METRICS: dict[str, Meaning] = {
     "strandline_sink_retries": Meaning(
         "counter", "Calls to a sink that failed and are tried again.", "Grows: read the sink's last error.", ("sink",)
     ),
+    "strandline_sink_refused_samples": Meaning(
+        "counter",
+        "Samples that a sink did not send or its store did not take, by reason.",
+        "Grows: the reason says what to mend; see `counts` of the sink.",
+        ("sink", "reason"),
+    ),
     "strandline_sink_failing": Meaning(
         "gauge", "1 while a sink fails.", "1: read the sink's last error at /v1/feeds/{feed}.", ("sink",)
     ),

@@ -6,8 +6,8 @@ a simulation calls it directly.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from typing import Protocol
+from collections.abc import Mapping, Sequence
+from typing import Protocol, runtime_checkable
 
 from .core.columns import Batch, Lane
 from .core.effects import Buffer
@@ -116,3 +116,14 @@ class Sink(Protocol):
 
     async def close(self) -> None:
         """Release the store. Does not flush."""
+
+
+@runtime_checkable
+class Counting(Protocol):
+    """What a sink may have besides: counts of samples that its store does not hold, or held already, by reason.
+
+    Reasons are from a closed list, never from an event. Since the start of the process; shown to observers.
+    """
+
+    def counts(self) -> Mapping[str, int]:
+        """The counts so far. Called on the loop at any time; must not wait."""

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import asyncio
 from collections import deque
+from itertools import pairwise
 
 from .core.columns import Batch
 
@@ -81,6 +82,6 @@ class Recent:
     def check(self) -> None:
         """Assert that numbers ascend from what is gone to what was reached, and that the count is right."""
         numbers = [self._gone, *(batch.number for batch, _ in self._batches)]
-        assert all(first < later for first, later in zip(numbers, numbers[1:], strict=False))
+        assert all(first < later for first, later in pairwise(numbers))
         assert numbers[-1] <= self.reached
         assert self._events == sum(len(batch) for batch, _ in self._batches)

@@ -19,7 +19,7 @@ from .core.effects import Answer, Append, Deliver, Effect, Outcome, Refuse, Sync
 from .core.feed import Feed
 from .core.records import arrival_body_bytes
 from .core.view import View
-from .errors import JournalFailed, JournalFull, SinkRetry, StrandlineError
+from .errors import JournalFailed, JournalFull, StrandlineError
 from .hops import Bodies, Hop
 from .housekeeping import Housekeeper
 from .ingest.decode import Decoder
@@ -224,8 +224,12 @@ class FeedRuntime:
         self._tell_positions()
 
     def _tell_positions(self) -> None:
-        """Tell the core how far sinks are; what finds no room in the journal waits for the next tick."""
-        while self._untold and self.failure is None and self.has_headroom():
+        """Tell the core how far sinks are; what finds no room in the journal waits for the next tick.
+
+        Never before the start: a mark would release behind batches that were not delivered again yet, and a sink that
+        is offered the newer one first takes the older one for a repeat.
+        """
+        while self._started and self._untold and self.failure is None and self.has_headroom():
             (sink, lane), number = self._untold.popitem()
             self._do(partial(self.feed.taken, sink, lane, number, self.clock.now_ns()))
 

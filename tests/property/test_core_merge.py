@@ -45,7 +45,7 @@ smallness = st.fixed_dictionaries(
     {
         "GALLOP_PAYS_EVENTS": st.sampled_from((1, 2, 5, 1024)),
         "WINDOW_EVENTS": st.sampled_from((1, 2, 3, 4096)),
-        "FUSE_EVENTS": st.sampled_from((1, 4, 20, 16384)),
+        "FUSE_EVENTS": st.sampled_from((1, 4, 20, 2**18)),
         "GALLOP_WINS": st.sampled_from((1, 2, 7)),
         "GALLOP_WINS_AT_MOST": st.sampled_from((2, 8, 4096)),
     }
@@ -201,3 +201,22 @@ def test_a_merge_does_not_touch_its_inputs() -> None:
         result = Merger(fusing=fusing).merge(given_heads)
         assert isinstance(result, Strand)
     assert [(one.times.tobytes(), one.refs.tobytes()) for one in given_heads] == before
+
+
+@given(heads, st.integers(1, 40))
+def test_no_sort_takes_more_rows_than_the_limit_but_a_single_head(columns: list[list[int]], limit: int) -> None:
+    merger = Merger()
+    sizes: list[list[int]] = []
+    interleave = merger._interleave
+
+    def noted(group: list[Strand]) -> Strand:
+        sizes.append([len(one.times) for one in group])
+        return interleave(group)
+
+    merger._interleave = noted  # type: ignore[method-assign]
+    with constants(FUSE_EVENTS=limit):
+        merger.merge(strands(columns))
+    assert all(len(group) == 1 or sum(group) <= limit for group in sizes)
+    assert [size for group in sizes for size in group] == [len(times) for times in columns]
+    for group, following in itertools.pairwise(sizes):
+        assert sum(group) + following[0] > limit, "a group is as large as it may be"

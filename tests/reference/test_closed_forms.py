@@ -20,6 +20,7 @@ import numpy as np
 import pytest
 from helpers_feed import patient
 from helpers_single import Passed, pass_poisson, poisson, two_at_a_time
+from strandline.core.settings import Settings
 
 EVENTS = 200_000
 ENDS = 5_000  # left out at both ends: the feed fills and drains there
@@ -53,19 +54,17 @@ def forms(rate: float, mu: float, slack: float) -> tuple[float, float, float, fl
     )
 
 
+def by(clock: str, slack: float) -> Settings:
+    """Settings of a feed with this clock and this slack in seconds."""
+    return patient(clock=clock, slack_ns=round(slack * 1e9))
+
+
 @pytest.fixture(scope="module")
 def passed() -> Iterator[dict[tuple[float, float, float, str], Passed]]:
     """Every parameter set by both clocks, through the feed, in two processes."""
     with two_at_a_time() as pool:
         futures = {
-            (rate, mu, slack, clock): pool.submit(
-                pass_poisson,
-                float(rate),
-                1 / mu,
-                EVENTS,
-                SEED,
-                patient(clock=clock, slack_ns=round(slack * 1e9)),
-            )  # fmt: skip
+            (rate, mu, slack, clock): pool.submit(pass_poisson, float(rate), 1 / mu, EVENTS, SEED, by(clock, slack))
             for rate, mu, slack, *_ in PRINTED
             for clock in ("event", "arrival")
         }

@@ -271,12 +271,15 @@ def test_a_faulty_value_is_not_compared() -> None:
     assert "slack" in only_fault(FEED + "slack = '90'\nhold_at_most = '1s'")
 
 
-def test_a_steered_slack_is_recognised_and_refused() -> None:
-    fault = only_fault(FEED + "slack = { late_share = 0.001, at_most = '30s', at_least = '0s' }")
-    assert fault.startswith('s.toml: feed[1].slack of "river-gauges" is a table, but only a fixed value is supported')
-    assert fault.endswith('yet: write slack = "5s"')
+def test_a_steered_slack_stands_in_the_place_of_a_fixed_one() -> None:
+    text = FEED + "slack = { late_share = 0.001, at_most = '30s', at_least = '1s' }"
+    settings = parse(text, {}).feeds[0].settings()
+    assert (settings.late_share, settings.slack_ns, settings.slack_at_least_ns) == (0.001, 30 * 10**9, 10**9)
+    assert parse(FEED, {}).feeds[0].settings().late_share is None
+    assert "hold_at_most" in only_fault(FEED + "slack = { late_share = 0.1, at_most = '2m' }")
+    assert "at_least" in only_fault(FEED + "slack = { late_share = 0.1, at_most = '2s', at_least = '3s' }")
     found = faults(FEED + "slack = { late_share = 1.5, at_mst = '30s' }")
-    assert len(found) == 3
+    assert len(found) == 2
     assert 'feed[1].slack.at_mst of "river-gauges" is no key of `slack`; did you mean `at_most`?' in found[0]
     assert "= 1.5 is no share: write a number between 0 and 1" in found[1]
 

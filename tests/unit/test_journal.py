@@ -14,14 +14,13 @@ from helpers_journal import (
     flip,
     flush,
     folder,
-    lines_body,
     opened,
     records_of,
     segment_files,
     write,
 )
 from simdisk import SimDisk
-from strandline.core.records import FRAME_HEADER_BYTES, frame_bytes
+from strandline.core.records import frame_bytes
 from strandline.errors import JournalError, JournalFull
 from strandline.journal import segments
 from strandline.journal.disk import LocalDisk
@@ -166,7 +165,7 @@ def test_a_full_journal_refuses_with_numbers_and_keeps_headroom(disk: LocalDisk)
     journal = opened(disk, journal_bytes_at_most=4 * 4096)
     count = filled(journal)
     assert count == 4 * (4032 // frame_bytes(500)) - 2 and journal.bytes_used == 4 * 4096
-    expected = r"520 bytes more would take the segments to 20,480 bytes.*at_most is 16,384"
+    expected = r"520 bytes more would take the segments to 20,480 bytes.*limit.*is 16,384"
     with pytest.raises(JournalFull, match=expected) as full:
         journal.reserve([500])
     assert full.value.reason == "journal_full" and journal.next_lsn == count * frame_bytes(500)
@@ -353,61 +352,3 @@ def test_no_room_for_a_snapshot_is_no_failure() -> None:
         journal.write_snapshot(journal.durable_lsn, [bytes(8000)])
     assert full.value.reason == "disk_full" and not journal.failed
     write(journal, LEVELS[1])
-
-
-# ---- lines ----------------------------------------------------------------------------------------------------------
-
-
-def test_lines_come_back_from_anywhere(disk: LocalDisk) -> None:
-    journal = opened(disk)
-    lines = [b'{"station":"weir-%d","level":%d}' % (number % 7, number) for number in range(400)]
-    places = []
-    for first in range(0, 400, 10):
-        some = lines[first : first + 10]
-        [lsn] = write(journal, (3, lines_body(*some)))
-        offset = lsn + FRAME_HEADER_BYTES
-        for line in some:
-            places.append(offset)
-            offset += len(line) + 1
-    lengths = [len(line) for line in lines]
-    assert journal.line_bytes(places, lengths) == lines
-    assert journal.gather(places, lengths) == lines_body(*lines)
-    order = sorted(range(400), key=lambda number: number * 7919 % 400)
-    assert journal.line_bytes([places[n] for n in order], [lengths[n] for n in order]) == [lines[n] for n in order]
-    assert journal.gather([places[n] for n in order], [lengths[n] for n in order]) == lines_body(
-        *(lines[n] for n in order)
-    )
-
-
-def test_lines_that_are_not_kept_or_not_durable_are_refused(disk: LocalDisk) -> None:
-    journal = opened(disk)
-    write(journal, *LEVELS)
-    append(journal, LEVELS[0])
-    boundary = journal._segments[1].first_lsn
-    for places, lengths in (
-        ([-1], [1]), ([journal.durable_lsn], [0]), ([journal.durable_lsn - 1], [2]), ([boundary - 2], [4]),
-        ([0, boundary - 2], [4, 4]), ([8], [-1]), ([0, boundary], [boundary + 1, 1]),
-    ):  # fmt: skip
-        for act in (journal.gather, journal.line_bytes):
-            with pytest.raises(JournalError, match="were asked for"):
-                act(places, lengths)
-
-
-def test_mappings_are_bounded() -> None:
-    disk = SimDisk()
-    opened_paths = []
-
-    def open_file(path: str):
-        opened_paths.append(path)
-        return disk.open(path)
-
-    for number in range(5):
-        disk.create(f"a/{number}", 8)
-    maps = segments.Maps(open_file, at_most=3)
-    first = maps.view("a/0")
-    for number in (0, 1, 2, 3, 4, 4):
-        maps.view(f"a/{number}")
-    assert len(maps) == 3 and opened_paths == [f"a/{number}" for number in range(5)] and len(first) == 8
-    maps.forget("a/4")
-    maps.view("a/0")
-    assert len(maps) == 3 and opened_paths[-1] == "a/0"

@@ -55,7 +55,7 @@ def test_any_number_of_buffers_is_written(tmp_path: Path, count: int) -> None:
 
 @pytest.mark.parametrize("at_most", [1, 3, 7])
 def test_short_writes_are_continued(tmp_path: Path, at_most: int) -> None:
-    def short(descriptor: int, buffers: Sequence[memoryview], offset: int) -> int:
+    def short(descriptor: int, buffers: Sequence[bytes | memoryview], offset: int) -> int:
         """As a system may: some bytes of the first buffers only."""
         return os.pwritev(descriptor, [b"".join(buffers)[:at_most]], offset)
 

@@ -17,13 +17,14 @@ from .runs import Strand, joined
 
 GALLOP_WINS = 7
 GALLOP_WINS_AT_MOST = 4096
-# One round of galloping (two searches, four block copies) costs some 9 us, interleaving some 9 ns an event (measured):
-# a round pays when it moves about a thousand events.
+# One round of galloping (two searches, four block copies) costs some 8 us, interleaving some 8 ns an event (measured,
+# ordering.md): a round pays when it moves about a thousand events.
 GALLOP_PAYS_EVENTS = 1024
 WINDOW_EVENTS = 4096  # rows of each side that one interleaving step looks at; doubles while interleaving goes on
-# Heads are interleaved several at a time up to this many rows: the stable sort merges neighbours in compiled code, and
-# below it the interpreter's cost of a merge (some 25 us) would be more than half.
-FUSE_EVENTS = 16384
+# Neighbouring heads are merged together by one stable sort up to this many rows: it finds the runs and gallops over
+# them in compiled code, and takes 8 to 27 ns an event for 32 heads of 250,000 rows where merging two by two takes 29 to
+# 87 (ordering.md). Beyond it long streaks copied as blocks are as good or better, and the sort needs memory at once.
+FUSE_EVENTS = 1 << 18
 STREAK_BUCKETS = 24
 
 

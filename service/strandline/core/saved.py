@@ -19,6 +19,7 @@ from .outbox import LANES
 from .records import Cause
 from .runs import Strand, joined
 from .settings import Settings
+from .slack import SteeredSlack
 from .state import State
 
 SAVED_VERSION = 1
@@ -73,7 +74,7 @@ def save(state: State) -> list[Buffer]:
         "version": SAVED_VERSION,
         "settings": state.settings,
         "clock": [state.now_ns, state.watermark_ns, state.marked_ns, int(state.cause)],
-        "slack_ns": state.slack.slack_ns,
+        "slack": state.slack.saved() if isinstance(state.slack, SteeredSlack) else None,
         "names": state.sources.names,
         "newest_ns": state.sources.newest_ns,
         "runs": len(state.runs.runs),
@@ -119,7 +120,8 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
     state = State(msgspec.convert(header["settings"], Settings))
     state.now_ns, state.watermark_ns, state.marked_ns, cause = header["clock"]
     state.cause = Cause(cause)
-    state.slack.slack_ns = header["slack_ns"]
+    if isinstance(state.slack, SteeredSlack):
+        state.slack.restore(header["slack"])
     newest, heard = columns.get(np.int64), columns.get(np.int64)
     active, excused = columns.get(np.bool_), columns.get(np.bool_)
     state.sources.restore(header["names"], newest, heard, active, excused, header["newest_ns"])

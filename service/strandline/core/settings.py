@@ -16,7 +16,9 @@ class Settings(msgspec.Struct, frozen=True, forbid_unknown_fields=True):
     """The settings of one feed that its decisions depend on. Times in ns; `*_at_most` are inclusive limits."""
 
     name: str
-    slack_ns: int = 5 * SECOND_NS
+    slack_ns: int = 5 * SECOND_NS  # where late_share is given: the longest that the slack may be
+    slack_at_least_ns: int = 0
+    late_share: float | None = None  # share of events that may be late; without it the slack is fixed
     idle_after_ns: int = 30 * SECOND_NS
     hold_at_most_ns: int = 60 * SECOND_NS
     ahead_limit_ns: int = 10 * SECOND_NS

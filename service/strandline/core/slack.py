@@ -10,11 +10,13 @@ from __future__ import annotations
 
 import math
 from collections import deque
-from dataclasses import dataclass
+from dataclasses import astuple, dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from .settings import Settings
 from .sketch import Sketch
 
 WARM_UP_EVENTS = 200  # seen before the first slack is taken from their lateness; until then the longest wait holds
@@ -103,15 +105,16 @@ class SteeredSlack:
         eta = STEP_PER_TAIL * self._tail_ns()
         if self.stretch is None:
             self.exact_ns = min(max(self._first_ns(), float(self.at_least_ns)), float(self.at_most_ns))
-            self._begin(eta)
+            self.begin(eta)
         elif not self.stretch.eta_ns / RETUNE_RATIO <= eta <= self.stretch.eta_ns * RETUNE_RATIO:
-            self._begin(eta)
+            self.begin(eta)
         memory = max(MEMORY_PER_LATE / self.target, MEMORY_EVENTS)
         if self.sketch.total > 2 * memory:
             self.sketch.fade()
         self._tune_at = self.events + max(1, int(min(self.events / 4, memory / 4)))
 
-    def _begin(self, eta_ns: float) -> None:
+    def begin(self, eta_ns: float) -> None:
+        """Begin a stretch of constant eta from the present slack."""
         self.stretch = Stretch(eta_ns, self.exact_ns)
         self.stretches += 1
 
@@ -156,4 +159,40 @@ class SteeredSlack:
         return self.sketch.share_above(self.at_most_ns)
 
 
+    def saved(self) -> list[Any]:
+        """All of it as plain values."""
+        stretch = self.stretch
+        return [
+            self.exact_ns,
+            self.events,
+            self.late,
+            None if stretch is None else list(astuple(stretch)),
+            self.stretches,
+            list(self.periods),
+            self._tune_at,
+            self.sketch.counts.tolist(),
+        ]
+
+    def restore(self, values: list[Any]) -> None:
+        """Take over saved values."""
+        self.exact_ns, self.events, self.late, stretch, self.stretches, periods, self._tune_at, counts = values
+        self.stretch = None if stretch is None else Stretch(*stretch)
+        self.periods.extend(tuple(row) for row in periods)
+        self.sketch.counts[:] = counts
+        self.sketch.total = float(self.sketch.counts.sum())
+
+
 Slack = FixedSlack | SteeredSlack
+
+
+def slack_of(settings: Settings, before: Slack | None = None) -> Slack:
+    """The slack that these settings ask for; one that is steered towards the same target goes on from where it is."""
+    if settings.late_share is None:
+        return FixedSlack(settings.slack_ns)
+    fresh = SteeredSlack(settings.late_share, settings.slack_ns, settings.slack_at_least_ns)
+    if isinstance(before, SteeredSlack) and before.target == fresh.target:
+        fresh.restore(before.saved())
+        fresh.exact_ns = min(max(fresh.exact_ns, float(fresh.at_least_ns)), float(fresh.at_most_ns))
+        if fresh.exact_ns != before.exact_ns and fresh.stretch is not None:
+            fresh.begin(fresh.stretch.eta_ns)  # a jump begins a stretch: identity and bound hold within one
+    return fresh

@@ -52,9 +52,9 @@ from .records import (
 from .runs import OpenRuns, runs_of
 from .seen import Seen
 from .settings import Settings
-from .slack import FixedSlack
+from .slack import FixedSlack, Slack, slack_of
 from .sources import Sources
-from .watermark import HoldBound
+from .watermark import HoldBound, basis_of
 
 
 @dataclass(slots=True)
@@ -74,7 +74,7 @@ class State:
 
     def __init__(self, settings: Settings) -> None:
         self.settings = settings
-        self.slack = FixedSlack(settings.slack_ns)
+        self.slack: Slack = slack_of(settings)
         self.now_ns = TIME_MIN  # arrival clock of the last record
         self.watermark_ns = TIME_MIN
         self.marked_ns = TIME_MIN  # when it last moved
@@ -115,7 +115,7 @@ class State:
 
     def _fold_settings(self, record: SettingsRecord) -> None:
         before, self.settings = self.settings, record.settings
-        self.slack.slack_ns = record.settings.slack_ns
+        self.slack = slack_of(record.settings, self.slack)
         self.seen.window = record.settings.id_window_events
         self._key = None  # a crash may have cut off the arrival that it announced
         self.outbox.serve(record.sinks, record.positions)
@@ -151,12 +151,15 @@ class State:
             times, refs, duplicate = self._without_repeats(times, refs, identities)
         if len(times):
             self._note_lateness(times)
+        events, behind = len(times), self._behind(times, body.arrived_ns)
         if len(words):
             self.sources.hear(word_refs["source"], words, body.arrived_ns)
         if len(times) and least_of(times) < self.watermark_ns:
             times, refs, late_batch = self._without_late(times, refs, body.arrived_ns, end_lsn)
             batches.append(late_batch)
             late = len(late_batch)
+        if events:
+            self.slack.learn(body.arrived_ns, events, late, behind)
         if len(times):
             self._hold(times, refs, body)
         if entries:
@@ -221,9 +224,14 @@ class State:
         if oldest >= newest or len(times) == 1:
             self.figures.lateness.add_same(min(max(newest - oldest, 0), TIME_MAX), len(times))
         else:
-            # int64 times can lie further apart than int64 holds; uint64 holds every distance.
-            lateness = (np.uint64(newest % 2**64) - np.minimum(times, newest).view(np.uint64)).view(np.int64)
-            self.figures.lateness.add(np.where(lateness < 0, TIME_MAX, lateness))
+            self.figures.lateness.add(_distances(newest, times))
+
+    def _behind(self, times: Times, arrived_ns: int) -> NDArray[np.int64] | None:
+        """How far each event stands behind what the watermark follows, before the slack; None where nobody asks."""
+        if isinstance(self.slack, FixedSlack):
+            return None
+        basis = arrived_ns if self.settings.clock == "arrival" else basis_of(self.sources)
+        return None if not len(times) or least_of(times) >= basis else _distances(basis, times)
 
     def _hold(self, times: Times, refs: Refs, body: ArrivalBody) -> None:
         self.arrivals.note(body.payload_place, body.arrived_ns, len(times))
@@ -270,6 +278,7 @@ class State:
         self.sources.check()
         self.arrivals.check(self.runs.held)
         self.outbox.check()
+        self.hold.check(self.runs.tail_ns)
         self.seen.check()
         self.keys.check()
         head = self.runs.head_ns
@@ -301,6 +310,12 @@ def _faulty(body: ArrivalBody) -> list[QuarantineEntry]:
         entries.append(QuarantineEntry(row.line, row.reason, row.detail, place, row.length))
         place += row.length
     return entries
+
+
+def _distances(newest: int, times: Times) -> NDArray[np.int64]:
+    """newest minus each time, at least 0 and at most TIME_MAX: int64 times can lie further apart than int64 holds."""
+    distances = (np.uint64(newest % 2**64) - np.minimum(times, newest).view(np.uint64)).view(np.int64)
+    return np.where(distances < 0, TIME_MAX, distances)
 
 
 def _bounds(lengths: NDArray[np.uint32], events_at_most: int, bytes_at_most: int) -> list[int]:

@@ -12,6 +12,8 @@ import numpy as np
 from .columns import NO_SOURCE, TIME_MIN, Lane
 from .outbox import LANES
 from .records import Cause
+from .settings import SECOND_NS
+from .slack import Slack, SteeredSlack
 from .sources import NEVER
 from .state import State
 
@@ -82,6 +84,24 @@ class View:
     refusals: dict[str, int]
     identities_known: int
     keys_kept: int
+    steering: Steering | None
+
+
+@dataclass(frozen=True, slots=True)
+class Steering:
+    """A steered slack: the wanted share of late events, the shares reached, and how sure they are."""
+
+    target: float
+    at_most_ns: int
+    at_least_ns: int
+    share_minute: float | None
+    share_hour: float | None
+    share_begun: float | None  # since the feed began
+    share_stretch: float | None  # since eta last changed; within `bound` of the target, whatever comes
+    bound: float | None
+    warming_up: bool
+    binding: bool  # target and longest wait contradict each other
+    attainable: float  # the share that the longest wait can give
 
 
 def hold_of(state: State, before: Hold, now_ns: int) -> Hold:
@@ -144,6 +164,26 @@ def view_of(state: State, hold: Hold, now_ns: int, refusals: dict[str, int]) -> 
         refusals=refusals,
         identities_known=state.seen.known,
         keys_kept=len(state.keys.kept),
+        steering=_steering(state.slack, now_ns),
+    )
+
+
+def _steering(slack: Slack, now_ns: int) -> Steering | None:
+    if not isinstance(slack, SteeredSlack):
+        return None
+    stretch = slack.stretch
+    return Steering(
+        target=slack.target,
+        at_most_ns=slack.at_most_ns,
+        at_least_ns=slack.at_least_ns,
+        share_minute=slack.share_since(now_ns - 60 * SECOND_NS),
+        share_hour=slack.share_since(now_ns - 3600 * SECOND_NS),
+        share_begun=slack.late / slack.events if slack.events else None,
+        share_stretch=stretch.late / stretch.events if stretch is not None and stretch.events else None,
+        bound=slack.bound,
+        warming_up=stretch is None,
+        binding=slack.binding,
+        attainable=slack.attainable,
     )
 
 

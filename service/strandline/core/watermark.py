@@ -9,11 +9,12 @@ from __future__ import annotations
 
 from collections import deque
 from dataclasses import dataclass
+from itertools import pairwise
 
 from .columns import NO_SOURCE, TIME_MIN
 from .records import Cause
 from .settings import Settings
-from .slack import FixedSlack
+from .slack import Slack
 from .sources import Sources
 
 
@@ -54,13 +55,13 @@ class HoldBound:
         while self.pairs and self.pairs[0][1] <= watermark_ns:
             self.pairs.popleft()
 
-    @property
-    def oldest_ns(self) -> int | None:
-        """An instant that no held event arrived before; None when nothing is held."""
-        return self.pairs[0][0] if self.pairs else None
+    def check(self, tail_ns: int | None) -> None:
+        """Assert that pairs ascend and that the last one is of the newest event held (`tail_ns`)."""
+        assert all(one[0] <= other[0] and one[1] < other[1] for one, other in pairwise(self.pairs))
+        assert (self.pairs[-1][1] if self.pairs else None) == tail_ns
 
 
-def candidate(settings: Settings, slack: FixedSlack, sources: Sources, hold: HoldBound, now_ns: int) -> Candidate:
+def candidate(settings: Settings, slack: Slack, sources: Sources, hold: HoldBound, now_ns: int) -> Candidate:
     """Where the watermark may stand now. Sources that have fallen idle must have been expired before."""
     if settings.clock == "arrival":
         best = Candidate(_behind(now_ns, slack.slack_ns), Cause.CLOCK, NO_SOURCE)
@@ -74,6 +75,12 @@ def candidate(settings: Settings, slack: FixedSlack, sources: Sources, hold: Hol
     if due > best.watermark_ns:
         return Candidate(due, Cause.HOLD_AT_MOST, best.source)
     return best
+
+
+def basis_of(sources: Sources) -> int:
+    """What the watermark follows with the event clock, before the slack; NEVER before anything was heard."""
+    least = sources.least()
+    return sources.newest_ns if least is None else least[0]
 
 
 def _behind(time_ns: int, slack_ns: int) -> int:

@@ -137,6 +137,9 @@ async def post_marks(request: web.Request) -> web.Response:
     promise = await _read_act(request, Promise)
     if not 1 <= len(promise.source.encode(errors="replace")) <= 256:
         raise BodyError(422, "Unprocessable Content", "/source: a source has 1 to 256 bytes")
+    name, config = promise.source, runtime.config
+    if config.source is None and name != config.name:  # it would hold the feed, and no event could ever be its own
+        raise NotThere(f"no source {name[:100]!r}: all events of feed {config.name} are of one source, {config.name!r}")
     try:
         time_ns = parse_rfc3339(promise.time)
     except ValueError as error:

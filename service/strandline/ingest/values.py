@@ -91,7 +91,15 @@ def check_time(value: Any, unit: Unit, at: str) -> int:
 
 def check_source(value: Any, at: str) -> str:
     """The source's name. Raises LineFault (source_missing, source_invalid)."""
-    return _check_text(value, "source", at, SOURCE_BYTES_AT_MOST)
+    text = _check_text(value, "source", at, SOURCE_BYTES_AT_MOST)
+    if "\0" in text:  # stores that write sources as text could not hold it (PostgreSQL 15 documentation, section 8.3)
+        raise LineFault("source_invalid", f"{shown(at, _POINTER_CHARACTERS)} holds {_found(value)}: it has a NUL (U+0000)")
+    return text
+
+
+def is_source(text: str) -> bool:
+    """The law of check_source for a text."""
+    return _is_text(text, SOURCE_BYTES_AT_MOST) and "\0" not in text
 
 
 def check_id(value: Any, at: str) -> str:
@@ -154,7 +162,7 @@ def source_column(values: Sequence[str | int], table: Mapping[str, int]) -> tupl
     bad: set[str] = set()
     for text in dict.fromkeys(texts):
         number = table.get(text)
-        if number is None and not _is_text(text, SOURCE_BYTES_AT_MOST):
+        if number is None and not is_source(text):
             bad.add(text)
             number = 0
         elif number is None:

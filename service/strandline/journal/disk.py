@@ -39,8 +39,8 @@ class LocalFile:
 
     def write(self, offset: int, buffers: Sequence[Buffer]) -> None:
         """Write the buffers one after the other from `offset`. Raises OSError; ValueError beyond the file's size."""
-        left = [view for view in map(_plain, buffers) if view.nbytes]
-        total = sum(view.nbytes for view in left)
+        left = [buffer if type(buffer) is bytes else _plain(buffer) for buffer in buffers]
+        total = sum(map(len, left))
         if offset < 0 or offset + total > self._size:
             raise ValueError(f"{total} bytes at {offset} do not fit a file of {self._size}")
         write_all(self._descriptor, left, offset)
@@ -64,22 +64,23 @@ class LocalFile:
 
 def write_all(
     descriptor: int,
-    buffers: list[memoryview],
+    buffers: list[bytes | memoryview],
     offset: int,
-    pwritev: Callable[[int, Sequence[memoryview], int], int] = os.pwritev,
+    pwritev: Callable[[int, Sequence[bytes | memoryview], int], int] = os.pwritev,
 ) -> None:
-    """Write non-empty buffers to the last byte, however many they are and however little the system takes at a time."""
+    """Write buffers of bytes to the last one, however many they are and however little the system takes at a time."""
     first = 0
     while first < len(buffers):
-        written = pwritev(descriptor, buffers[first : first + BUFFERS_AT_MOST], offset)
-        if written == 0:
+        some = buffers[first : first + BUFFERS_AT_MOST]
+        written = pwritev(descriptor, some, offset)
+        if written == 0 and any(some):
             raise OSError(errno.EIO, "the system wrote nothing and named no reason")
         offset += written
-        while first < len(buffers) and written >= buffers[first].nbytes:
-            written -= buffers[first].nbytes
+        while first < len(buffers) and written >= len(buffers[first]):
+            written -= len(buffers[first])
             first += 1
         if written:
-            buffers[first] = buffers[first][written:]
+            buffers[first] = memoryview(buffers[first])[written:]
 
 
 def _plain(buffer: Buffer) -> memoryview:

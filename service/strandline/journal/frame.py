@@ -25,6 +25,7 @@ from strandline.core.records import FRAME_HEADER_BYTES, VERSION, frame_bytes
 
 ALIGNMENT = 8
 BODY_BYTES_AT_MOST = 2**32 - 1
+JOINED_BYTES_AT_MOST = 4096  # up to here copying a body costs less than another buffer does
 
 _HEADER = struct.Struct("<IIBBHI")
 _COVERED = struct.Struct("<IBBHI")  # the header without its CRC
@@ -67,10 +68,16 @@ def extend_crc(crc: int, part: Buffer) -> int:
 
 
 def encode_frame(lsn: int, kind: int, parts: Sequence[Buffer], version: int = VERSION) -> list[Buffer]:
-    """The buffers of one frame, to be written one after the other: header, the parts of `flatten`, padding."""
-    body_bytes = sum(map(_bytes_of, parts))
+    """The buffers of one frame, to be written one after the other: header, the parts of `flatten`, padding.
+
+    A small frame comes joined, as one buffer: one CRC and one buffer to write instead of several.
+    """
+    body_bytes = sum(map(bytes_of, parts))
     padding = _PADDING[-body_bytes % ALIGNMENT]
     covered = _COVERED.pack(body_bytes, kind, version, 0, lsn & _LOW)
+    if body_bytes <= JOINED_BYTES_AT_MOST:
+        rest = b"".join((covered, *parts, padding))
+        return [google_crc32c.value(rest).to_bytes(4, "little") + rest]
     crc = google_crc32c.value(covered)
     for part in parts:
         crc = extend_crc(crc, part)
@@ -79,7 +86,8 @@ def encode_frame(lsn: int, kind: int, parts: Sequence[Buffer], version: int = VE
     return [google_crc32c.extend(crc, padding).to_bytes(4, "little") + covered, *parts, padding]
 
 
-def _bytes_of(part: Buffer) -> int:
+def bytes_of(part: Buffer) -> int:
+    """Bytes of one of the parts of `flatten`."""
     return part.nbytes if isinstance(part, memoryview) else len(part)
 
 

@@ -17,20 +17,21 @@ from collections.abc import Callable, Iterable, Sequence
 from itertools import groupby, pairwise
 from operator import attrgetter
 from threading import Lock
-from typing import NamedTuple, NoReturn
+from typing import NoReturn
 
 from strandline.core.effects import Buffer
 from strandline.core.records import VERSION, frame_bytes
 from strandline.errors import JournalError, JournalFailed, JournalFull
-from strandline.ports import Disk, File
+from strandline.ports import Disk
 
 from . import snapshots
 from .counters import Counters
-from .frame import BODY_BYTES_AT_MOST, encode_frame, flatten
+from .frame import BODY_BYTES_AT_MOST, bytes_of, flatten
+from .group import Queued, write_group
 from .limits import Limits
 from .reading import Readable
 from .recovery import make_certain, recover
-from .segments import SEGMENT_HEADER_BYTES, Maps, Segment, digest_of, segment_name
+from .segments import SEGMENT_HEADER_BYTES, Maps, Segment, digest_of
 from .spares import SHORTAGES, Spares
 
 SEGMENT_BYTES = 64 << 20
@@ -38,15 +39,6 @@ SEGMENT_BYTES_AT_LEAST = 200  # a header, a quarter of headroom for one mark, an
 JOURNAL_BYTES_AT_MOST = 8 << 30
 QUEUED_BYTES_AT_MOST = 256 << 20
 HEADROOM_BYTES = 64 << 10  # some 800 marks of 64 bytes a frame: what frees room must not lack it
-
-
-class _Queued(NamedTuple):
-    segment: Segment
-    lsn: int
-    kind: int
-    version: int
-    parts: list[Buffer]
-    bytes: int
 
 
 class Journal(Readable):
@@ -68,7 +60,7 @@ class Journal(Readable):
         self._lock = Lock()
         self._snapshot_lock = Lock()
         self._segments_bytes = 0
-        self._queue: list[_Queued] = []
+        self._queue: list[Queued] = []
         self._queued_bytes = 0
         self._next_lsn = 0
         self._failure: str | None = None
@@ -167,8 +159,9 @@ class Journal(Readable):
         if stretch > self._left and not self._spares.hold(stretch):
             more = max(self._segment_bytes, stretch + SEGMENT_HEADER_BYTES)
         if not of_headroom:
-            self._short = self.bytes_used + more > self._limits.bytes_at_most
-            self._limits.check(need, self.bytes_used + more, self._queued_bytes)
+            used = self._segments_bytes + more if more else self.bytes_used  # a larger spare replaces the others
+            self._short = used > self._limits.bytes_at_most
+            self._limits.check(need, used, self._queued_bytes)
         if more:
             self._make_spare(stretch)
 
@@ -181,14 +174,14 @@ class Journal(Readable):
         if lsn != self._next_lsn:
             raise ValueError(f"a record for position {lsn}, but the journal stands at {self._next_lsn}")
         bodies = flatten(parts)
-        body_bytes = sum(memoryview(part).nbytes for part in bodies)
+        body_bytes = sum(map(bytes_of, bodies))
         if body_bytes > BODY_BYTES_AT_MOST:
             raise ValueError(f"a body of {body_bytes} bytes does not fit a frame (at most {BODY_BYTES_AT_MOST})")
         size = frame_bytes(body_bytes)
         if size > self._left:
             self._begin_segment(body_bytes)
         with self._lock:
-            self._queue.append(_Queued(self._segments[-1], lsn, kind, version, bodies, size))
+            self._queue.append(Queued(self._segments[-1], lsn, kind, version, bodies, size))
             self._queued_bytes += size
             self._next_lsn += size
 
@@ -239,39 +232,17 @@ class Journal(Readable):
             self._fail(error, "writing")
         return self._durable_lsn
 
-    def _write(self, segment: Segment, group: list[_Queued]) -> None:
-        buffers: list[Buffer] = [] if segment.named else [segment.header(), bytes(SEGMENT_HEADER_BYTES - 40)]
-        offset = segment.offset(group[0].lsn) if segment.named else 0
-        for queued in group:
-            buffers += encode_frame(queued.lsn, queued.kind, queued.parts, queued.version)
-        file = segment.writable()
-        file.write(offset, buffers)
-        self._timed_sync(file)
-        if not segment.named:
-            self._name(segment)
+    def _write(self, segment: Segment, group: list[Queued]) -> None:
+        begins = not segment.named
+        write_group(self._disk, segment, group, self.counters, self._clock)
+        if begins:
+            for older in self._segments[: self._segments.index(segment)]:
+                older.seal()
         end_lsn, size = group[-1].lsn + group[-1].bytes, sum(queued.bytes for queued in group)
         with self._lock:
             self._durable_lsn = end_lsn
             self._queued_bytes -= size
-        self.counters.frames += len(group)
-        self.counters.bytes_written += size
         segment.note(end_lsn)
-
-    def _timed_sync(self, file: File) -> None:
-        before = self._clock()
-        file.sync()
-        self.counters.synced(self._clock() - before)
-
-    def _name(self, segment: Segment) -> None:
-        """Give a segment its name: all before it is synced by now, and so is what it holds."""
-        path = f"{self._directory}/{segment_name(segment.first_lsn)}"
-        self._disk.rename(segment.path, path)
-        self._disk.sync_directory(self._directory)
-        for older in self._segments:
-            if older is segment:
-                break
-            older.seal()
-        segment.path, segment.named = path, True
 
     def replenish(self) -> bool:
         """Reserve a spare segment if there is none and the limit allows it; whether there is one now.

@@ -28,8 +28,8 @@ class Limits:
             raise JournalFull(
                 "journal_full",
                 f"{self.directory}: {need:,} bytes more would take the segments to {used:,} bytes, and "
-                f"journal_bytes_at_most is {self.bytes_at_most:,}: segments go when every sink has taken their events; "
-                "see which sink lags, or raise the limit",
+                f"the limit (`journal.at_most`) is {self.bytes_at_most:,}: segments go when every sink has taken their "
+                "events; see which sink lags, or raise the limit",
             )
         if queued and queued + need > self.queued_bytes_at_most:
             raise JournalFull(

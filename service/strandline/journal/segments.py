@@ -102,7 +102,7 @@ def _header_crc(fixed: bytes) -> int:
     return extend_crc(0, fixed[:12] + fixed[16 : _FIXED.size])
 
 
-@dataclass(slots=True)
+@dataclass(slots=True, eq=False)
 class Segment:
     """One segment in use. `file` is the handle for writing, None once the segment is full or was opened for reading.
 

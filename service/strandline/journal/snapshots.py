@@ -17,7 +17,7 @@ from collections.abc import Sequence
 from strandline.core.effects import Buffer
 from strandline.ports import Disk
 
-from .frame import extend_crc, flatten
+from .frame import bytes_of, extend_crc, flatten
 from .recovery import SNAPSHOT_NAME
 
 MAGIC = b"\xb5still\r\n"
@@ -36,7 +36,7 @@ def snapshot_name(lsn: int) -> str:
 def write_snapshot(disk: Disk, directory: str, lsn: int, digest: bytes, parts: Sequence[Buffer]) -> None:
     """Make a snapshot durable, then remove all but the two newest. Raises OSError; two snapshots stay in any case."""
     bodies = flatten(parts)
-    body_bytes = sum(memoryview(part).nbytes for part in bodies)
+    body_bytes = sum(map(bytes_of, bodies))
     blank = _HEADER.pack(MAGIC, FORMAT_VERSION, 0, lsn, body_bytes, digest)
     crc = _crc(blank, bodies)
     header = _HEADER.pack(MAGIC, FORMAT_VERSION, crc, lsn, body_bytes, digest)

@@ -67,9 +67,10 @@ class Spares:
                 self._disk.remove(path)
 
     def make(self, frames_bytes: int) -> None:
-        """Reserve one more segment that holds at least `frames_bytes` of frames.
+        """Reserve a segment that holds at least `frames_bytes` of frames, in place of those that are too small for it.
 
-        Raises JournalFull("disk_full") where the system lacks room; OSError for anything else that goes wrong.
+        Else spares of every size would gather: each takes room of the limit, and only the largest is ever used. Raises
+        JournalFull("disk_full") where the system lacks room; OSError for anything else that goes wrong.
         """
         size = self._segment_bytes
         if SEGMENT_HEADER_BYTES + frames_bytes > size:
@@ -95,8 +96,12 @@ class Spares:
                 raise _disk_full(path, size, error) from error
             raise
         with self._lock:
-            self._spares.append(Spare(path, size, file))
-            self._spares.sort(key=lambda spare: -spare.size)
+            # Two threads may make one at a time: what is larger was promised to somebody.
+            replaced = [spare for spare in self._spares if spare.size <= size]
+            self._spares = [*(spare for spare in self._spares if spare.size > size), Spare(path, size, file)]
+        for spare in replaced:
+            spare.file.close()
+            self._disk.remove(spare.path)
 
     def hold(self, frames_bytes: int) -> bool:
         """Whether the largest spare holds any frames of that many bytes together, in any order."""

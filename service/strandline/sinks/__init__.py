@@ -20,6 +20,7 @@ SINK_KINDS: dict[str, tuple[str, str]] = {
     "ndjson": ("ndjson", "NdjsonSink"),
     "postgres": ("postgres", "PostgresSink"),
     "http": ("http", "HttpSink"),
+    "remote_write": ("remote_write", "RemoteWriteSink"),
 }
 
 

@@ -15,7 +15,8 @@ from typing import Any, TypeVar
 
 from ..core.columns import Batch, Lane
 from ..errors import SinkRefused, SinkRetry
-from ..ports import Clock, Lines, Sink
+from ..ports import Clock, Counting, Lines, Sink
+from .rows import rows_of
 from .waiting import LaneState, Waiting
 
 Result = TypeVar("Result")
@@ -48,6 +49,7 @@ class DeliveryState:
     failing_since_ns: int | None  # None while all is well
     last_error: str | None  # kept after recovery
     retries: int
+    counts: dict[str, int]  # of a sink that counts: samples by reason
 
 
 class Delivery:
@@ -55,9 +57,10 @@ class Delivery:
 
     on_taken(sink, lane, number) is called on the loop once a lane is settled up to `number`: durable, or refused and
     handed over. on_refused(sink, batches, detail) must keep the batches for a later resend; only when it returns are
-    they settled (an error there is retried like one of the sink). After a crash a refused batch can be offered, and
-    refused, again: its number tells. `remembered` are the journal's positions, used for lanes that the store itself
-    cannot know. `sleep` and `random_source` are passed in, so that a test owns time and chance.
+    they settled (an error there is retried like one of the sink). Of a batch that the sink has in part it is given only
+    the refused rows. After a crash a refused batch can be offered, and refused, again: its number tells. `remembered`
+    are the journal's positions, used for lanes that the store itself cannot know. `sleep` and `random_source` are
+    passed in, so that a test owns time and chance.
     """
 
     def __init__(
@@ -175,6 +178,7 @@ class Delivery:
             failing_since_ns=self._failing_since_ns,
             last_error=self._last_error,
             retries=self._retries,
+            counts=dict(self._sink.counts()) if isinstance(self._sink, Counting) else {},
         )
 
     def check(self) -> None:
@@ -252,10 +256,11 @@ class Delivery:
         if not refused:
             raise SinkRetry(f"the sink refused batches that were not offered: {refusal}") from refusal
         logger.warning("sink %s refused %d batches for good: %s", self.name, len(refused), refusal)
-        await self._on_refused(self.name, refused, str(refusal))
+        parts = [rows_of(batch, refusal.rows.get(batch.number)) for batch in refused]
+        await self._on_refused(self.name, parts, str(refusal))
         self._last_error = str(refusal)
         self._waiting.again()
-        self._waiting.refuse(refused, self._clock.now_ns())
+        self._waiting.refuse(refused, self._clock.now_ns(), {part.number: len(part) for part in parts})
         self._set_flush_timer(anew=True)
         self._advanced()
 

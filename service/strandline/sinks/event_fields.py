@@ -43,7 +43,7 @@ class EventFields:
             self._decoder = msgspec.json.Decoder(msgspec.defstruct("Wanted", fields, rename=rename, gc=False))
 
     def columns(self, block: bytes, count: int) -> list[list[Any]]:
-        """For each pointer the values of the block's `count` lines: None for nothing or null, UNHELD, any JSON value."""
+        """For each pointer the values in the block's `count` lines: None for nothing or null, UNHELD, any JSON."""
         records = self._decoded(block, count)
         if records is None:
             lines = block.split(b"\n")[:-1]

@@ -7,7 +7,6 @@ lost is sent again under the same Idempotency-Key. When to try again is decided 
 from __future__ import annotations
 
 import gzip
-import io
 import os
 from collections.abc import Sequence
 from functools import partial
@@ -15,13 +14,11 @@ from pathlib import Path
 from typing import Literal
 from urllib.parse import quote
 
-import aiohttp
-from yarl import URL
-
 from ..core.columns import Batch, Lane
-from ..errors import SinkRefused, SinkRetry, StrandlineError
+from ..errors import SinkRefused, SinkRetry
 from ..ports import Clock, Lines
 from .ndjson import late_lines
+from .posting import ANSWER_BYTES_AT_MOST, SHOWN_CHARACTERS, Answered, Poster, shown_url
 from .retry_after import retry_after_s
 from .rows import one_lane
 from .worker import OwnThread
@@ -29,9 +26,6 @@ from .worker import OwnThread
 LANES: tuple[Lane, ...] = ("ordered", "late")
 MEDIA_TYPE = "application/x-ndjson"
 GZIP_LEVEL = 1  # 5,000 events of 160 bytes: 3.5 ms to 22 %; level 6 takes 12 ms to 16 %
-ANSWER_BYTES_AT_MOST = 64 * 1024
-SHOWN_CHARACTERS = 300  # of an answer, in the refusal
-CONNECT_WITHIN_S = 10.0
 
 # 4xx that say nothing about the batch itself. 408 and 429: RFC 9110, 15.5.9, and RFC 6585; try again. 409: the
 # Idempotency-Key draft has it answered while the first request under the same key is still at work. 425: RFC 8470, "too
@@ -65,12 +59,15 @@ class HttpSink:
         """`late_url` None: the same one. `token` or the content of `token_file` is sent as a bearer token."""
         self._urls: dict[Lane, str] = {"ordered": url, "late": late_url or url}
         self._feed, self._clock = quote(feed, safe=""), clock
-        self._headers = dict(headers or {})
-        self._token, self._token_file = token, None if token_file is None else Path(token_file)
-        self._compress, self._answer_bytes_at_most = compression == "gzip", answer_bytes_at_most
-        self._timeout = aiohttp.ClientTimeout(total=timeout_s, sock_connect=min(timeout_s, CONNECT_WITHIN_S))
+        self._headers, self._compress = dict(headers), compression == "gzip"
         self._thread = OwnThread(f"http {feed}")
-        self._session: aiohttp.ClientSession | None = None
+        self._poster = Poster(
+            self._thread,
+            timeout_s=timeout_s,
+            token=token or "",
+            token_file=None if token_file is None else Path(token_file),
+            answer_bytes_at_most=answer_bytes_at_most,
+        )
         self._reached: dict[Lane, int] = {}
 
     @property
@@ -85,7 +82,7 @@ class HttpSink:
 
     async def open(self) -> dict[Lane, int]:
         """Ask nothing of the receiver, which cannot tell a position. Raises SinkRetry where the token is not there."""
-        await self._authorization()
+        await self._poster.authorization()
         self._reached = {}
         return {}
 
@@ -108,9 +105,7 @@ class HttpSink:
 
     async def close(self) -> None:
         """Close the connections, after what still runs."""
-        session, self._session = self._session, None
-        if session is not None:
-            await session.close()
+        await self._poster.close()
         await self._thread.close(lambda: None)
 
     # ---- one batch --------------------------------------------------------------------------------------------------
@@ -121,32 +116,14 @@ class HttpSink:
         return gzip.compress(block, GZIP_LEVEL, mtime=0) if self._compress else block
 
     async def _send(self, batch: Batch, body: bytes) -> None:
-        if self._session is None:
-            self._session = aiohttp.ClientSession(
-                connector=aiohttp.TCPConnector(limit=1),
-                timeout=self._timeout,
-                cookie_jar=aiohttp.DummyCookieJar(),
-                auto_decompress=False,  # an answer's body is only shown to people, and only its beginning
-            )
         url = self._urls[batch.lane]
-        headers = self._headers_of(batch) | await self._authorization()
-        try:
-            # A stream, not the bytes: aiohttp would hand them to the system in one piece, however many they are.
-            async with self._session.post(url, data=io.BytesIO(body), headers=headers, allow_redirects=False) as answer:
-                if 200 <= answer.status < 300:
-                    await self._drain(answer)
-                else:
-                    await self._judge(batch, answer)
-        except TimeoutError as error:
-            raise SinkRetry(f"{self._shown(url)} did not answer in {self._timeout.total:g} s") from error
-        except (aiohttp.ClientError, OSError) as error:
-            told = str(error) or type(error).__name__
-            raise SinkRetry(f"{self._shown(url)} cannot be reached: {told}") from error
+        answered = await self._poster.post(url, body, self._headers_of(batch))
+        if not 200 <= answered.status < 300:
+            self._judge(batch, url, answered)
 
     def _headers_of(self, batch: Batch) -> dict[str, str]:
         own = {
             "Content-Type": MEDIA_TYPE,
-            "Accept-Encoding": "identity",
             "Idempotency-Key": f'"{self._feed}-{batch.lane}-{batch.number}"',
             "Strandline-Feed": self._feed,
             "Strandline-Lane": batch.lane,
@@ -154,59 +131,13 @@ class HttpSink:
         }
         return self._headers | own | ({"Content-Encoding": "gzip"} if self._compress else {})
 
-    async def _authorization(self) -> dict[str, str]:
-        """The token's header. Its file is read each time: whoever keeps it there may renew it."""
-        token = self._token
-        if self._token_file is not None:
-            file = self._token_file
-            try:
-                token = (await self._thread.run(file.read_text)).strip()
-            except (OSError, UnicodeDecodeError) as error:
-                told = getattr(error, "strerror", None) or error
-                raise SinkRetry(f"the token in {file} cannot be read: {told}") from error
-            if not (token.isascii() and token.isprintable()):
-                raise StrandlineError(f"{file} holds no token: one line of ASCII is expected")
-        return {"Authorization": f"Bearer {token}"} if token else {}
-
-    async def _drain(self, answer: aiohttp.ClientResponse) -> bytes:
-        """The beginning of the body; where it is longer, late or broken off, the connection is not used again.
-
-        The status stands before the body, so nothing in the body can turn a batch that was taken into one that was not.
-        """
-        content = b""
-        try:
-            while len(content) < self._answer_bytes_at_most:
-                piece = await answer.content.read(self._answer_bytes_at_most - len(content))
-                if not piece:
-                    return content
-                content += piece
-        except (aiohttp.ClientError, TimeoutError, OSError):
-            pass
-        answer.close()
-        return content
-
-    async def _judge(self, batch: Batch, answer: aiohttp.ClientResponse) -> None:
+    def _judge(self, batch: Batch, url: str, answered: Answered) -> None:
         """Raise what an answer without success means."""
-        said = _line_of(await self._drain(answer))
-        place = f"{self._shown(self._urls[batch.lane])} answered batch {batch.number} of lane {batch.lane} with "
-        told = f"{place}{answer.status} {answer.reason or ''}".rstrip() + (f": {said}" if said else "")
-        if 300 <= answer.status < 400:
-            location = answer.headers.get("Location", "")
-            raise SinkRetry(
-                f"{told}; redirects are not followed, name the address {location[:SHOWN_CHARACTERS]!r} itself"
-            )
-        if 400 <= answer.status < 500 and answer.status not in TRIED_AGAIN:
+        status = answered.status
+        told = f"{shown_url(url)} answered batch {batch.number} of lane {batch.lane} with {answered.told}"
+        if 300 <= status < 400:
+            location = answered.headers.get("Location", "")[:SHOWN_CHARACTERS]
+            raise SinkRetry(f"{told}; redirects are not followed: name the address {location!a} itself")
+        if 400 <= status < 500 and status not in TRIED_AGAIN:
             raise SinkRefused(told, [batch.number])
-        raise SinkRetry(told, retry_after_s(answer.headers.get("Retry-After"), self._clock.now_ns()))
-
-    @staticmethod
-    def _shown(url: str) -> str:
-        """The address for a person: without what may be a secret in it."""
-        return str(URL(url).with_user(None).with_query(None).with_fragment(None))
-
-
-def _line_of(content: bytes) -> str:
-    """The start of an answer's body as one harmless line."""
-    text = " ".join(content[: 4 * SHOWN_CHARACTERS].decode(errors="replace").split())
-    shown = "".join(character if character.isprintable() else "?" for character in text)
-    return shown if len(shown) <= SHOWN_CHARACTERS else shown[: SHOWN_CHARACTERS - 3] + "..."
+        raise SinkRetry(told, retry_after_s(answered.headers.get("Retry-After"), self._clock.now_ns()))

@@ -139,8 +139,13 @@ class LanesSize:
 def measured(connection: sqlite3.Connection, path: Path) -> LanesSize:
     """What the file keeps, as the connection sees it."""
     kept = {lane: (rows, size) for lane, rows, size in connection.execute("SELECT lane, rows, bytes FROM kept")}
-    counts = [count for lane in KEPT_LANES for count in kept.get(lane, (0, 0))]
-    return LanesSize(*counts, file_bytes=_file_bytes(path))
+    none = (0, 0)
+    counts = {
+        f"{lane}_{what}": count
+        for lane in KEPT_LANES
+        for what, count in zip(("rows", "bytes"), kept.get(lane, none), strict=True)
+    }
+    return LanesSize(**counts, file_bytes=_file_bytes(path))
 
 
 def _file_bytes(path: Path) -> int:

@@ -160,13 +160,11 @@ class PostgresSink:
         if self._connection is not None and self._connection.is_closed():
             self._drop()
         if self._connection is None:
-            connection = await connect(self._dsn, self._timeout_s)
             try:
-                await self._learn(connection)
-            except BaseException:
-                connection.terminate()
-                raise
-            self._connection = connection
+                self._connection = await connect(self._dsn, self._timeout_s)
+                await self._learn(self._connection)
+            except StrandlineError as error:
+                raise StrandlineError(f"{self._place}: {error}") from error
         return self._connection
 
     async def _learn(self, connection: Connection) -> None:

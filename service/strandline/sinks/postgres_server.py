@@ -9,7 +9,7 @@ import os
 from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 from typing import Any, TypeAlias
-from urllib.parse import unquote, urlsplit
+from urllib.parse import parse_qs, unquote, urlsplit
 
 import asyncpg
 
@@ -39,9 +39,10 @@ POSITION = Table(POSITION_TABLE, POSITIONS, POSITION_KEY, ("SELECT", "INSERT", "
 def place_of(dsn: str) -> str:
     """The server and database that an address names, for a person: without user, password and parameters."""
     parts = urlsplit(dsn)
-    hosts = parts.netloc.rpartition("@")[2] or os.environ.get("PGHOST", "") or "its default host"
+    asked = parse_qs(parts.query).get("host", [""])[0]
+    hosts = parts.netloc.rpartition("@")[2] or asked or os.environ.get("PGHOST", "") or "its default host"
     database = unquote(parts.path.lstrip("/")) or os.environ.get("PGDATABASE", "")
-    return f"PostgreSQL at {hosts}{'/' + database if database else ''}"
+    return f"PostgreSQL at {hosts}{', database ' + database if database else ''}"
 
 
 async def connect(dsn: str, timeout_s: float) -> Connection:

@@ -76,7 +76,10 @@ class Poster:
         except TimeoutError as error:
             raise SinkRetry(f"{shown_url(url)} did not answer in {self._timeout.total:g} s") from error
         except (aiohttp.ClientError, OSError) as error:
-            raise SinkRetry(f"{shown_url(url)} cannot be reached: {str(error) or type(error).__name__}") from error
+            # The text of a ClientResponseError holds the whole address, secrets too; its message does not.
+            told = error.message if isinstance(error, aiohttp.ClientResponseError) else str(error)
+            sentence = " ".join(told.split()) or type(error).__name__
+            raise SinkRetry(f"{shown_url(url)} cannot be reached: {sentence}") from error
 
     async def authorization(self) -> dict[str, str]:
         """The token's header. Its file is read each time: whoever keeps it there may renew it.

@@ -12,8 +12,8 @@ from dataclasses import dataclass, field
 
 from ..core.columns import Lane
 from .database import Database, Table
+from .remote_write_samples import Place
 
-Place = tuple[int, int]  # number of a batch, and how many of its rows
 NOWHERE: Place = (0, 0)
 
 PROGRESS = Table(

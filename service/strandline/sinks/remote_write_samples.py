@@ -6,49 +6,24 @@ is decided in `remote_write_settling`.
 
 from __future__ import annotations
 
-import re
-from collections.abc import Mapping, Sequence
+from bisect import bisect_left, bisect_right
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from operator import itemgetter
 from typing import Any, NamedTuple
 
-import msgspec
 import numpy as np
 
 from ..core.columns import Batch
 from ..errors import StrandlineError
 from ..ports import Lines
 from .event_fields import EventFields
+from .remote_write_series import LABEL_BYTES_AT_MOST, Pairs, SeriesRule
 from .remote_write_wire import labels_bytes
 
-# "Data model" of the Prometheus documentation: metric names, label names; two underscores lead names of its own.
-METRIC_NAME = re.compile("[a-zA-Z_:][a-zA-Z0-9_:]*")
-LABEL_NAME = re.compile("(?!__)[a-zA-Z_][a-zA-Z0-9_]*")
-LABEL_BYTES_AT_MOST = 1024  # of a value that comes from an event
 SERIES_KNOWN_AT_MOST = 200_000  # some 0.5 KiB each; beyond it they are forgotten, and met again as new ones
 MS_NS = 1_000_000
-
-# Why a sample is not sent, or not taken -> what it means (shown in the documentation). The counts of the sink.
-REASONS: dict[str, str] = {
-    "value_missing": "the event has no number at the series' `value`; the sample is not sent",
-    "label_invalid": "a label is no string, integer or boolean, or is longer than 1,024 bytes; the sample is not sent",
-    "equal_time": "the series has another value at the same millisecond: within a request the last to come is sent, "
-    "one that follows in a later request is not",
-    "future": "the time lies further than `ahead_at_most` beyond the receiver's clock; the event is kept as refused",
-    "out_of_order": "the receiver has a later sample of the series already; the event is kept as refused",
-    "duplicate_timestamp": "the receiver has another value at this time; the event is kept as refused",
-    "out_of_bounds": "the receiver takes nothing so old any more; the event is kept as refused",
-    "too_old": "the time lies before the receiver's own out-of-order window; the event is kept as refused",
-    "already_there": "an answer was lost, and the receiver had taken the sample; nothing is missing",
-}
-
-
-class SeriesRule(msgspec.Struct, frozen=True):
-    """One series name that events feed: pointers to its value and to those of its labels."""
-
-    name: str
-    value: str
-    labels: Mapping[str, str] = {}
+Place = tuple[int, int]  # number of a batch, and how many of its rows
 
 
 @dataclass(slots=True, eq=False)
@@ -71,9 +46,9 @@ class Sample(NamedTuple):
 
 @dataclass(frozen=True, slots=True)
 class Group:
-    """Batches of one lane, one after the other, as samples in order of row.
+    """Batches of one lane, one after the other, as samples in order of row; rows count from 0 through all of them.
 
-    `faults` are (row, reason) of samples that cannot be sent.
+    `faults` are (row, reason) of samples that cannot be sent. A place is a batch's number and how many of its rows.
     """
 
     numbers: list[int]  # of the batches
@@ -83,7 +58,30 @@ class Group:
 
     @property
     def rows(self) -> int:
+        """Events of all batches."""
         return self.ends[-1] if self.ends else 0
+
+    def row(self, place: Place) -> int:
+        """How many rows stand before a place, as far as its batch is one of these."""
+        index = bisect_left(self.numbers, place[0])
+        before = self.ends[index - 1] if index else 0
+        inside = index < len(self.numbers) and self.numbers[index] == place[0]
+        return before + place[1] if inside else before
+
+    def place(self, row: int) -> Place:
+        """The place behind so many rows, at least one."""
+        index = bisect_left(self.ends, row)
+        return self.numbers[index], row - (self.ends[index - 1] if index else 0)
+
+    def whole(self, row: int) -> int | None:
+        """Number of the last batch that so many rows hold as a whole, if there is one."""
+        index = bisect_right(self.ends, row)
+        return self.numbers[index - 1] if index else None
+
+    def between(self, row: int, end: int) -> tuple[list[Sample], list[tuple[int, str]]]:
+        """Samples and faults of some of the rows."""
+        samples = self.samples[bisect_left(self.samples, (row,)) : bisect_left(self.samples, (end,))]
+        return samples, [fault for fault in self.faults if row <= fault[0] < end]
 
 
 class SampleMaker:
@@ -92,12 +90,13 @@ class SampleMaker:
     def __init__(
         self,
         rules: Sequence[SeriesRule],
-        external_labels: Mapping[str, str],
+        external_labels: Pairs,
         *,
         series_known_at_most: int = SERIES_KNOWN_AT_MOST,
     ) -> None:
         """Raises ingest.pointer.PointerError."""
-        pointers = list(dict.fromkeys(at for rule in rules for at in (rule.value, *rule.labels.values())))
+        named = (at for rule in rules for at in (rule.value, *(label_at for _, label_at in rule.labels)))
+        pointers = list(dict.fromkeys(named))
         self._fields = EventFields(pointers)
         self._columns = {pointer: index for index, pointer in enumerate(pointers)}
         self._rules, self._external = rules, dict(external_labels)
@@ -128,11 +127,9 @@ class SampleMaker:
         for number in range(len(self._rules)):
             self._add_rule(group, number, first_row, times_ms, found)
 
-    def _add_rule(
-        self, group: Group, number: int, row: int, times_ms: list[int], found: list[list[Any]]
-    ) -> None:
+    def _add_rule(self, group: Group, number: int, row: int, times_ms: list[int], found: list[list[Any]]) -> None:
         rule = self._rules[number]
-        columns = [list(map(label_text, found[self._columns[at]])) for at in rule.labels.values()]
+        columns = [list(map(label_text, found[self._columns[at]])) for _, at in rule.labels]
         keys: Any = zip(*columns, strict=True) if columns else ((),) * len(times_ms)
         known, samples, faults = self._known, group.samples, group.faults
         for key, value, time_ms in zip(keys, found[self._columns[rule.value]], times_ms, strict=True):
@@ -148,7 +145,7 @@ class SampleMaker:
 
     def _new(self, number: int, key: tuple[str, ...]) -> Series:
         rule = self._rules[number]
-        labels = self._external | {name: text for name, text in zip(rule.labels, key, strict=True) if text}
+        labels = self._external | {name: text for (name, _), text in zip(rule.labels, key, strict=True) if text}
         sent = labels_bytes([*labels.items(), ("__name__", rule.name)])
         series = self._by_labels.setdefault(sent, Series(sent))
         self._known[number, *key] = series

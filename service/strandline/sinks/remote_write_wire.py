@@ -24,7 +24,7 @@ CONTENT_HEADERS = {
     "X-Prometheus-Remote-Write-Version": "0.1.0",
 }
 _FIRST, _SECOND = 0x0A, 0x12  # the keys of fields 1 and 2 that carry bytes: number << 3 | 2
-_VALUE = struct.Struct("<BBBdB")  # of a Sample up to its timestamp: key 2 and size, key 1 as a double, key 2 as a varint
+_VALUE = struct.Struct("<BBBdB")  # a Sample up to its timestamp: its key and size, key and value, key
 _DOUBLE, _VARINT = 0x09, 0x10
 _VALUE_BYTES = 10  # of a Sample's own bytes before the varint: key, double, key
 

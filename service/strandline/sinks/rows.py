@@ -7,6 +7,7 @@ whole block is decoded at once and split: 73 ns an event of 143 bytes, against 9
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from itertools import pairwise
 
 import numpy as np
@@ -56,6 +57,16 @@ def late_by_ns(batch: Batch) -> list[int]:
     distance = behind - batch.times.astype(np.uint64)  # modulo 2**64, hence exact for every time before the watermark
     late: list[int] = np.where(batch.times < batch.behind_ns, np.minimum(distance, TIME_MAX), 0).tolist()
     return late
+
+
+def rows_of(batch: Batch, rows: Sequence[int] | None) -> Batch:
+    """The batch with only these of its rows, ascending; None: all of it, as it is."""
+    if rows is None:
+        return batch
+    chosen = list(rows)
+    if batch.lane == "quarantine":
+        return replace(batch, entries=[batch.entries[row] for row in chosen])
+    return replace(batch, times=batch.times[chosen], refs=batch.refs[chosen])
 
 
 def one_lane(batches: Sequence[Batch]) -> None:

@@ -8,7 +8,7 @@ at once; the position passes it when everything before it is durable.
 from __future__ import annotations
 
 from collections import deque
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from itertools import pairwise
 
@@ -109,14 +109,19 @@ class Waiting:
                 lane.delivered_events += len(batch)
         return self._move(lane, number, now_ns)
 
-    def refuse(self, group: Sequence[Batch], now_ns: int) -> None:
-        """The sink will never take these; they leave, and count as settled once all before them are durable."""
+    def refuse(self, group: Sequence[Batch], now_ns: int, events: Mapping[int, int] | None = None) -> None:
+        """The sink will never take these; they leave, and count as settled once all before them are durable.
+
+        `events`: how many of a batch's events are refused, by its number; the others count as delivered.
+        """
         lane = self._lanes[group[0].lane]
         gone = {batch.number for batch in group}
         for batch in group:
             lane.events -= len(batch)
             lane.refused_batches += 1
-            lane.refused_events += len(batch)
+            refused = len(batch) if events is None else events[batch.number]
+            lane.refused_events += refused
+            lane.delivered_events += len(batch) - refused
         lane.taken = deque(batch for batch in lane.taken if batch.number not in gone)
         lane.untaken = deque(batch for batch in lane.untaken if batch.number not in gone)
         lane.refused |= gone

@@ -1,0 +1,55 @@
+"""Writing one group of frames into one segment, durably: the only place where frames reach the disk.
+
+What a group is, what follows from its being durable, and what a failure means is `journal`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from typing import NamedTuple
+
+from strandline.core.effects import Buffer
+from strandline.ports import Disk
+
+from .counters import Counters
+from .frame import encode_frame
+from .segments import SEGMENT_HEADER_BYTES, Segment, segment_name
+
+
+class Queued(NamedTuple):
+    """A frame that waits to be written. `parts` are those of `flatten`, `bytes` those of the whole frame."""
+
+    segment: Segment
+    lsn: int
+    kind: int
+    version: int
+    parts: list[Buffer]
+    bytes: int
+
+
+def write_group(
+    disk: Disk, segment: Segment, group: Sequence[Queued], counters: Counters, clock: Callable[[], float]
+) -> None:
+    """Write frames that follow each other in a segment and sync them; name the segment if these are its first.
+
+    Everything before the group is durable already: so a segment's name proves that. Raises OSError; what then is on
+    the disk is open.
+    """
+    header = segment.header()
+    buffers: list[Buffer] = [] if segment.named else [header, bytes(SEGMENT_HEADER_BYTES - len(header))]
+    offset = segment.offset(group[0].lsn) if segment.named else 0
+    for queued in group:
+        buffers += encode_frame(queued.lsn, queued.kind, queued.parts, queued.version)
+    file = segment.writable()
+    file.write(offset, buffers)
+    before = clock()
+    file.sync()
+    counters.synced(clock() - before)
+    if not segment.named:
+        directory = segment.path.rpartition("/")[0]
+        path = f"{directory}/{segment_name(segment.first_lsn)}"
+        disk.rename(segment.path, path)
+        disk.sync_directory(directory)
+        segment.path, segment.named = path, True
+    counters.frames += len(group)
+    counters.bytes_written += sum(queued.bytes for queued in group)
