@@ -1,4 +1,4 @@
-"""A real Prometheus as a receiver of remote writes, for tests: started on a free port, ready by polling, asked over HTTP.
+"""A real Prometheus as a receiver of remote writes: started on a free port, ready by polling, asked over HTTP.
 
 Starting, writing and reading only; what must come of it is the tests' business. `Receiver.pipelined` writes many
 requests on one connection without waiting between them: the server works them off in order, one after the other.

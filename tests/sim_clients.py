@@ -253,7 +253,7 @@ class Crowd:
 
     def told(self) -> dict[str, int]:
         """Sums over the answers; those under one key that lasts count once."""
-        outcomes = [attempt.outcome for attempt in self.attempts if attempt.outcome and not self._is_one(attempt.request)]
+        outcomes = [each.outcome for each in self.attempts if each.outcome and not self._is_one(each.request)]
         outcomes += [request.answer for request in self.requests if request.answer is not None]
         return {name: sum(getattr(each, name) for each in outcomes) for name in ("accepted", "late", "quarantined")}
 

@@ -29,7 +29,7 @@ from strandline.journal import commit
 from strandline.problems import Refused
 from strandline.runtime import FeedRuntime
 
-SMALL_RECORD_BYTES = 160  # what the runtime reckons for a small record; 4096 would make every tiny segment a large one
+SMALL_RECORD_BYTES = 256  # what the runtime reckons for a small record; 4096 would make every tiny segment a large one
 
 
 @contextmanager

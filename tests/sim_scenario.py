@@ -42,7 +42,7 @@ class Scenario:
     trace: Trace
     steps: int
     weights: dict[str, float] = field(default_factory=lambda: dict(WEIGHTS))
-    habits: Habits = Habits()
+    habits: Habits = field(default_factory=Habits)
     fixed: dict[str, object] = field(default_factory=dict)  # keys of the feed that never change
     id_lasts: bool = False  # whether every repeat of an event is recognised
     slow_down_s: float = 1.0  # how long the service is away between two lives, at most

@@ -95,13 +95,9 @@ class Flaky:
         return await self._call(self._inner.open)
 
     async def take(self, batches: Sequence[Batch], lines: Lines) -> dict[Lane, int]:
-        if self._stores.moods.get(self._name) == "refuses for good":
-            assert self._stores.weather is not None
-            chance = self._stores.weather.chance
-            refused = [batch.number for batch in batches if chance.random() < 0.5]
-            if refused:
-                self._stores.met["refuses for good"] = self._stores.met.get("refuses for good", 0) + 1
-                raise SinkRefused("the store has no place for these", refused)
+        refused = self._stores.refused_for_good(self._name, batches)
+        if refused:
+            raise SinkRefused("the store has no place for these", refused)
         return await self._call(lambda: self._inner.take(batches, lines))
 
     async def flush(self, lines: Lines) -> dict[Lane, int]:
@@ -136,6 +132,7 @@ class Stores:
     moods: dict[str, str] = field(default_factory=dict)
     met: dict[str, int] = field(default_factory=dict)
     hanging: list[asyncio.Future[None]] = field(default_factory=list)
+    never: set[tuple[str, Lane, int]] = field(default_factory=set)
     weather: Weather | None = None
     _connections: list[sqlite3.Connection] = field(default_factory=list)
     _file_sinks: list[ndjson.NdjsonSink] = field(default_factory=list)
@@ -166,6 +163,16 @@ class Stores:
             future.set_result(None)
         else:
             future.set_exception(ConnectionResetError("the connection broke off"))
+
+    def refused_for_good(self, name: str, batches: Sequence[Batch]) -> list[int]:
+        """Numbers of those that a store will never take; what it refused once it refuses always."""
+        for batch in batches if self.moods.get(name) == "refuses for good" else ():
+            assert self.weather is not None
+            if self.weather.chance.random() < 0.3:
+                self.never.add((name, batch.lane, batch.number))
+        found = [batch.number for batch in batches if (name, batch.lane, batch.number) in self.never]
+        self.met["refuses for good"] = self.met.get("refuses for good", 0) + bool(found)
+        return found
 
     def fail_soon(self) -> None:
         """Some step of what the stores do next fails."""

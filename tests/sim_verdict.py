@@ -29,7 +29,7 @@ def judge_stores(
     told = crowd.told()
     for name in [sink.name for sink in config.sinks]:
         ordered, late = (_rows(name, lane, stores, folder, reading) for lane in ("ordered", "late"))
-        elsewhere = _refused(name, folder, reading, {*ordered.ids.tolist(), *late.ids.tolist()})
+        elsewhere = _refused(name, folder, reading)
         verdict = judge(
             sent,
             ordered,
@@ -47,10 +47,9 @@ def judge_stores(
     assert not exact or told["quarantined"] == len(quarantined)
 
 
-def _refused(name: str, folder: Path, reading: Reading, there: set[int]) -> Rows:
-    """What this store refused for good and is kept for it, less what it took after all when it was offered again."""
-    rows = [row for row in refused_rows(folder / "lanes.db", limit=10_000, sink=name)]
-    rows = [row for row, number in zip(rows, ids_in([row.event for row in rows]), strict=True) if number not in there]
+def _refused(name: str, folder: Path, reading: Reading) -> Rows:
+    """What this store refused for good, as it is kept for it."""
+    rows = refused_rows(folder / "lanes.db", limit=10_000, sink=name)
     block = b"".join(row.event + b"\n" for row in rows)
     return reading.rows(block, [row.time_ns or 0 for row in rows], [row.source for row in rows])
 
@@ -71,5 +70,6 @@ def _rows(name: str, lane: Lane, stores: Stores, folder: Path, reading: Reading)
 def _joined(pieces: list[Rows]) -> Rows:
     columns = ("ids", "times", "sources", "digests")
     empty = [np.empty(0, dtype=kind) for kind in (np.int64, np.int64, np.uint32, np.uint32)]
-    parts = [[getattr(piece, column) for piece in pieces] or [none] for column, none in zip(columns, empty, strict=True)]
+    pairs = zip(columns, empty, strict=True)
+    parts = [[getattr(piece, column) for piece in pieces] or [none] for column, none in pairs]
     return Rows(*(np.concatenate(part) for part in parts))

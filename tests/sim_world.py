@@ -1,7 +1,7 @@
 """A simulated world: lives of the service, one after the other, under faults, then without; and the judgement.
 
-Two phases. With faults on everything is safe: what was answered is kept, nothing is invented, nothing comes out twice or
-out of order. With faults off everything is alive: all senders get their answers and all that was accepted comes out
+Two phases. With faults on everything is safe: what was answered is kept, nothing is invented, nothing comes out twice
+or out of order. With faults off everything is alive: all senders get their answers and all that was accepted comes out
 within a bounded number of rounds.
 """
 

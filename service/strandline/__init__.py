@@ -8,7 +8,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from .order import order as order
+    from .ordering import order as order
 
 __all__ = ["order"]
 
@@ -16,7 +16,7 @@ __all__ = ["order"]
 def __getattr__(name: str) -> Any:
     # On first use only: importing numpy takes some 100 ms, and `strandline --help` must not wait for it.
     if name == "order":
-        from .order import order  # noqa: PLC0415
+        from .ordering import order  # noqa: PLC0415
 
         return order
     raise AttributeError(f"module 'strandline' has no attribute {name!r}")

@@ -23,9 +23,11 @@ from prometheus_client.aiohttp import make_aiohttp_handler
 from . import observe, openapi
 from .clock import SystemClock
 from .config import Address, Config, load
+from .connections import Connections, make_room_for
 from .errors import StrandlineError
 from .ingest import endpoint
-from .ingest.endpoint import BODIES, CONFIG, FEEDS
+from .ingest.endpoint import BODIES, CONFIG, FEEDS, THREAD
+from .ingest.offload import make_thread
 from .journal.disk import LocalDisk
 from .metrics import make_registry
 from .ports import Clock, Disk
@@ -35,6 +37,7 @@ from .sinks import make_sink
 
 log = logging.getLogger("strandline")
 TICK_S = 0.25
+BACKLOG = 1024  # connections that the kernel may keep until they are taken
 SHUTDOWN_WITHIN_S = 2.0  # for requests and streams that do not end by themselves once the feeds are closed
 EXIT_FAILED = 3
 EXIT_AT_ONCE = 130
@@ -45,6 +48,8 @@ def make_app(config: Config, feeds: dict[str, FeedRuntime]) -> web.Application:
     app = web.Application(middlewares=[as_problems])
     app[FEEDS], app[CONFIG] = feeds, config
     app[BODIES] = asyncio.Semaphore(config.limits.bodies_at_most)
+    app[THREAD] = make_thread()
+    app.on_cleanup.append(_end_thread)
     app.add_routes(
         [
             web.post("/v1/feeds/{feed}/events", endpoint.post_events),
@@ -65,6 +70,10 @@ def make_app(config: Config, feeds: dict[str, FeedRuntime]) -> web.Application:
         ]
     )
     return app
+
+
+async def _end_thread(app: web.Application) -> None:
+    app[THREAD].shutdown(wait=False, cancel_futures=True)
 
 
 async def _get_openapi(request: web.Request) -> web.Response:
@@ -93,6 +102,7 @@ class Service:
         self.failure: str | None = None
         self.address = config.listen
         self._runner: web.AppRunner | None = None
+        self._listener: asyncio.Server | None = None
         self._ticker: asyncio.Task[None] | None = None
         self._stopped = False
 
@@ -114,15 +124,22 @@ class Service:
         self._ticker = asyncio.create_task(self._tick())
         app = make_app(self.config, self.feeds)
         app.on_shutdown.append(self._hush)
+        limits = self.config.limits
         # Bodies are decompressed by our own code, within limits; a client that is gone ends its handler.
         self._runner = web.AppRunner(
             app, auto_decompress=False, handler_cancellation=True, access_log=None,
-            shutdown_timeout=SHUTDOWN_WITHIN_S,
+            shutdown_timeout=SHUTDOWN_WITHIN_S, keepalive_timeout=limits.idle_connection_within_ns / 1e9,
         )  # fmt: skip
         await self._runner.setup()
-        site = web.TCPSite(self._runner, self.config.listen.host, self.config.listen.port)
-        await site.start()
-        self.address = Address(self.address.host, int(self._runner.addresses[0][1]))
+        server = self._runner.server
+        assert server is not None
+        self._listener = await asyncio.get_running_loop().create_server(
+            Connections(server, make_room_for(limits.connections_at_most)),
+            self.config.listen.host,
+            self.config.listen.port,
+            backlog=BACKLOG,
+        )
+        self.address = Address(self.address.host, int(self._listener.sockets[0].getsockname()[1]))
         log.info("listening on http://%s", self.address)
 
     async def _hush(self, app: web.Application) -> None:
@@ -141,6 +158,8 @@ class Service:
             with contextlib.suppress(asyncio.CancelledError):
                 await self._ticker
         await asyncio.gather(*(runtime.close(limit_s) for runtime in self.feeds.values()))
+        if self._listener:
+            self._listener.close()
         if self._runner:
             await self._runner.cleanup()
         self._folder.close()

@@ -115,6 +115,9 @@ class Feed(msgspec.Struct, frozen=True):
     decoded_bytes_at_most: Annotated[int, Key(size("1B", "128MiB"), "a request's body, decompressed")] = 64 * MIB
     event_bytes_at_most: Annotated[int, Key(size("1B", "128MiB"), "one event; a longer one goes to quarantine")] = MIB
     events_at_most: Annotated[int, Key(count(1, 1_000_000), "events in one request")] = 100_000
+    faults_at_most: Annotated[
+        int, Key(count(0, 1_000_000), "lines of one request that are no events; with more the whole request is refused")
+    ] = 10_000
     nesting_at_most: Annotated[int, Key(count(1, 200), "levels of nesting in one event")] = 64
     lanes_at_most_bytes: Annotated[
         int, Key(size("1MiB"), "room for the late lane and the quarantine together, as they are kept for you to read")
@@ -156,6 +159,7 @@ class Feed(msgspec.Struct, frozen=True):
             decoded_bytes_at_most=self.decoded_bytes_at_most,
             event_bytes_at_most=self.event_bytes_at_most,
             events_at_most=self.events_at_most,
+            faults_at_most=self.faults_at_most,
             nesting_at_most=self.nesting_at_most,
         )
 
@@ -166,6 +170,15 @@ class Limits(msgspec.Struct, frozen=True):
     bodies_at_most: Annotated[
         int, Key(count(1, 10_000), "request bodies in memory at one time; a further request waits unread")
     ] = 64
+    body_within_ns: Annotated[
+        int, Key(duration("10ms", "1h"), "a request whose body is not complete by then is refused")
+    ] = field(default=60 * SECOND_NS, name="body_within")
+    connections_at_most: Annotated[
+        int, Key(count(1, 1_000_000), "connections at one time; a further one is refused at once")
+    ] = 4_096
+    idle_connection_within_ns: Annotated[
+        int, Key(duration("10ms", "1d"), "a connection is closed on which no request came for so long")
+    ] = field(default=120 * SECOND_NS, name="idle_connection_within")
 
 
 class Config(msgspec.Struct, frozen=True):

@@ -14,10 +14,11 @@ FAULT_REASONS: dict[str, str] = {
     "time_invalid": "the value there is no time in the feed's unit: check `time.unit` against a sample line",
     "time_out_of_range": "the time cannot be held in int64 nanoseconds (1677-09-21 to 2262-04-11)",
     "source_missing": "nothing stands at the feed's `source` pointer",
-    "source_invalid": "a source must be a string or an integer of at most 256 bytes",
+    "source_invalid": "a source must be a string or an integer of at most 256 bytes, without U+0000",
     "id_missing": "nothing stands at the feed's `id` pointer",
     "id_invalid": "an id must be a string or an integer of at most 1024 bytes",
     "too_large": "the line is longer than `event_bytes_at_most`",
+    "cloudevent_invalid": "the event breaks a rule of CloudEvents 1.0, which the detail names: mend the producer",
     "too_deep": "the value is nested deeper than `nesting_at_most`",
     "ahead": "the event time lies further than `ahead_limit` beyond the arrival clock: check the sender's clock",
 }
@@ -29,6 +30,7 @@ REFUSALS: dict[str, tuple[int, str]] = {
     "sources_full": (429, "Too many sources"),
     "key_in_flight": (409, "The first request with this key is not answered yet"),
     "key_reused": (422, "This key came before with another body"),
+    "too_many_faults": (422, "Too many lines are no events of this feed"),
     "lanes_full": (429, "The late lane or the quarantine has reached its limit"),
     "disk_full": (503, "The disk has no room for the journal"),
     "promise_ahead": (422, "The promise lies in the future"),
@@ -50,11 +52,24 @@ class ConfigError(StrandlineError):
 
 
 class BodyError(StrandlineError):
-    """A whole body is refused before any line of it is judged."""
+    """A whole body is refused: it cannot be read as what it says it is, or is beyond a limit."""
 
     def __init__(self, status: int, title: str, detail: str, accept_encoding: str | None = None) -> None:
         super().__init__(detail)
         self.status, self.title, self.detail, self.accept_encoding = status, title, detail, accept_encoding
+
+
+class TooManyFaults(StrandlineError):
+    """A whole body is refused because more of its lines are no events than `faults_at_most`.
+
+    `faults` are the first of them: line, reason and detail of each.
+    """
+
+    reason = "too_many_faults"  # a key of REFUSALS
+
+    def __init__(self, detail: str, faults: Sequence[tuple[int, str, str]]) -> None:
+        super().__init__(detail)
+        self.faults = faults
 
 
 class JournalError(StrandlineError):

@@ -13,15 +13,25 @@ import msgspec
 from .core.effects import Outcome
 from .errors import FAULT_REASONS, REFUSALS
 from .ingest.endpoint import Excuse, Promise
+from .ingest.formats import MEDIA_TYPES
 
 Json = dict[str, Any]
-EVENT_MEDIA_TYPES = ("application/x-ndjson", "application/jsonl", "application/json")
+TEXT_MEDIA_TYPES = ("application/x-ndjson", "application/jsonl", "application/json-seq")
 _FEED: Json = {
     "name": "feed",
     "in": "path",
     "required": True,
     "description": "name of a configured feed",
     "schema": {"type": "string", "pattern": "^[a-z0-9][a-z0-9-]{0,62}$"},
+}
+
+
+_KEY: Json = {
+    "name": "Idempotency-Key",
+    "in": "header",
+    "required": False,
+    "description": "a text in double quotes that a retry repeats: it is then answered as the first request was",
+    "schema": {"type": "string"},
 }
 
 
@@ -38,9 +48,10 @@ _PAGE = [
 
 def _problems(*statuses: int) -> Json:
     titles = {
-        400: "a parameter is not what it should be",
+        400: "a parameter or a header is not what it should be",
         404: "there is no such feed or source",
         408: "the body did not come in time",
+        409: "the first request with this key is not answered yet",
         410: "the batch asked for is no longer at hand here",
         413: "the body, or what it decompresses to, is larger than the feed's limits",
         415: "media type or content coding is not supported (then Accept-Encoding says which are)",
@@ -76,18 +87,18 @@ def _act(summary: str, schema: str | None) -> Json:
 
 
 def _events() -> Json:
-    body: Json = {"type": "string", "description": "one JSON object a line (or an array, or one object)"}
-    content: Json = {media_type: {"schema": body} for media_type in EVENT_MEDIA_TYPES}
-    content["application/json"] = {"schema": {}}
+    lines: Json = {"type": "string", "description": "one JSON object a line"}
+    whole: Json = {"description": "one event, or an array of them"}
+    content = {name: {"schema": lines if name in TEXT_MEDIA_TYPES else whole} for name in MEDIA_TYPES}
     return {
         "post": {
             "summary": "Send events; answered once all of them are durable",
             "description": "A request is one arrival. Content-Encoding gzip and zstd are understood.",
-            "parameters": [_FEED],
+            "parameters": [_FEED, _KEY],
             "requestBody": {"required": True, "content": content},
             "responses": {
                 **_answer("what became of the events", {"$ref": "#/components/schemas/Outcome"}),
-                **_problems(404, 408, 413, 415, 422, 429, 503),
+                **_problems(400, 404, 408, 409, 413, 415, 422, 429, 503),
             },
         }
     }
@@ -112,14 +123,14 @@ def _paths() -> Json:
             "Sources", {**_answer("sources", document), **_problems(400, 404)}, [_FEED, *_PAGE]
         ),
         "/v1/feeds/{feed}/late": _get(
-            "Late events", {**_answer("late events", document), **_problems(400, 404)}, [_FEED, *_PAGE, source]
+            "Late events", {**_answer("late events", document), **_problems(400, 404, 503)}, [_FEED, *_PAGE, source]
         ),
         "/v1/feeds/{feed}/quarantine": _get(
-            "Lines in quarantine", {**_answer("lines", document), **_problems(400, 404)}, [_FEED, *_PAGE]
+            "Lines in quarantine", {**_answer("lines", document), **_problems(400, 404, 503)}, [_FEED, *_PAGE]
         ),
         "/v1/feeds/{feed}/refused": _get(
             "Events of batches that sinks refused for good",
-            {**_answer("events, with sink and reason", document), **_problems(400, 404)},
+            {**_answer("events, with sink and reason", document), **_problems(400, 404, 503)},
             [_FEED, *_PAGE, _query("sink", "only what this sink refused", {"type": "string"})],
         ),
         "/v1/feeds/{feed}/ordered": _get(

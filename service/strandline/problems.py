@@ -8,7 +8,7 @@ from collections.abc import Awaitable, Callable
 import msgspec
 from aiohttp import web
 
-from .errors import REFUSALS, BodyError, StrandlineError
+from .errors import REFUSALS, BodyError, StrandlineError, TooManyFaults
 
 log = logging.getLogger(__name__)
 MEDIA_TYPE = "application/problem+json"
@@ -28,14 +28,24 @@ class NotThere(Exception):
 
 
 def problem(
-    status: int, title: str, detail: str, *, kind: str | None = None, headers: dict[str, str] | None = None
+    status: int,
+    title: str,
+    detail: str,
+    *,
+    kind: str | None = None,
+    headers: dict[str, str] | None = None,
+    more: dict[str, object] | None = None,
 ) -> web.Response:
-    """A problem details answer. `kind` is a stable name of the problem's type; without it the status says all."""
+    """A problem details answer. `kind` is a stable name of the problem's type; without it the status says all.
+
+    `more` are extension members (RFC 9457 section 3.2).
+    """
     members = {
         "type": f"urn:strandline:problem:{kind}" if kind else "about:blank",
         "title": title,
         "status": status,
         "detail": detail,
+        **(more or {}),
     }
     return web.Response(
         status=status, body=msgspec.json.encode(members), content_type=MEDIA_TYPE, headers=headers or {}
@@ -61,6 +71,10 @@ async def as_problems(request: web.Request, handler: Handler) -> web.StreamRespo
     except BodyError as error:
         headers = {"Accept-Encoding": error.accept_encoding} if error.accept_encoding else {}
         return problem(error.status, error.title, error.detail, headers=headers)
+    except TooManyFaults as error:
+        status, title = REFUSALS[error.reason]
+        named = [{"line": line, "reason": reason, "detail": detail} for line, reason, detail in error.faults]
+        return problem(status, title, str(error), kind=error.reason, more={"faults": named})
     except web.HTTPException as error:
         if error.status < 400:
             raise

@@ -12,6 +12,7 @@ from typing import Any
 
 from helpers_feed import FOR_EVER_NS, Shell, batches_of, marks, same_batch, saved_bytes
 from helpers_model import Model
+from helpers_strands import constants
 from hypothesis import event, given, settings
 from hypothesis import strategies as st
 from strandline.core.columns import Fault, RequestKey
@@ -272,9 +273,10 @@ def counts(shell: Shell) -> dict[int, tuple[int, ...] | None]:
 
 # ---- fold again -----------------------------------------------------------------------------------------------------
 
+steered = small_settings(late_share=0.2, slack_ns=12, slack_at_least_ns=1)
 changes = st.tuples(
     st.just("settings"),
-    small_settings(),
+    small_settings() | steered,
     st.dictionaries(
         st.sampled_from(("store", "lanes", "gone")),
         st.dictionaries(st.sampled_from(("ordered", "late", "quarantine")), st.integers(0, 9), max_size=2),
@@ -287,10 +289,15 @@ eventful = st.lists(st.tuples(st.one_of(steps, steps, steps, changes, keyed), pa
 
 
 @settings(max_examples=250)
-@given(small_settings(), eventful, st.integers(0, 25), st.booleans())
+@given(small_settings() | steered, eventful, st.integers(0, 25), st.booleans())
 def test_the_journal_folded_again_gives_the_same_state_and_the_same_batches(
     chosen: Settings, history: list[tuple[tuple[Any, ...], int]], pause: int, synchronous: bool
 ) -> None:
+    with constants(WARM_UP_EVENTS=5):
+        folded_again(chosen, history, pause, synchronous)
+
+
+def folded_again(chosen: Settings, history: list[tuple[tuple[Any, ...], int]], pause: int, synchronous: bool) -> None:
     shell = Shell(chosen, sinks=SINKS, synchronous=synchronous)
     now_ns, saved, lsn = 0, saved_bytes(shell.feed), shell.feed.next_lsn
     for index, (step, passed) in enumerate(history):
@@ -312,7 +319,7 @@ def test_the_journal_folded_again_gives_the_same_state_and_the_same_batches(
 
 
 @settings(max_examples=150)
-@given(small_settings(), eventful, st.integers(0, 25))
+@given(small_settings() | steered, eventful, st.integers(0, 25))
 def test_a_restart_goes_on_with_the_same_numbers_and_loses_nothing(
     chosen: Settings, history: list[tuple[tuple[Any, ...], int]], crash: int
 ) -> None:

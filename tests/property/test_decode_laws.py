@@ -203,7 +203,7 @@ def opinion(line: bytes, feed: str):
     if not isinstance(document, dict):
         return "malformed"
     found = [opinion_on_time(stands_at(document, time_at), unit)]
-    found += [opinion_on_text(stands_at(document, source_at), "source", 256) if source_at else "river"]
+    found += [opinion_on_source(stands_at(document, source_at)) if source_at else "river"]
     found += [opinion_on_text(stands_at(document, id_at), "id", 1024) if id_at else None]
     for value in found:
         if isinstance(value, Broken):
@@ -235,6 +235,11 @@ def opinion_on_text(value, role, bytes_at_most):
     size = len(str(value).encode("utf-8", "surrogatepass"))
     surrogate = any(0xD800 <= ord(character) < 0xE000 for character in str(value))
     return Broken(f"{role}_invalid") if surrogate or not 1 <= size <= bytes_at_most else str(value)
+
+
+def opinion_on_source(value):
+    found = opinion_on_text(value, "source", 256)
+    return Broken("source_invalid") if isinstance(found, str) and "\0" in found else found
 
 
 def lines_of(body: bytes):

@@ -37,6 +37,7 @@ from strandline.core.records import (
 )
 from strandline.core.saved import restore, save
 from strandline.core.settings import Settings
+from strandline.core.slack import SteeredSlack
 
 int64 = st.integers(TIME_MIN, TIME_MAX)
 names = st.text(max_size=8)
@@ -171,3 +172,17 @@ def test_a_damaged_state_is_refused_or_at_least_read_to_its_end(shell: Shell, da
         restore(body[:cut])
     with pytest.raises(ValueError, match="snapshot"):
         restore(body + bytes(data.draw(st.integers(1, 9))))
+
+
+def test_a_steered_slack_is_restored_to_the_last_bit() -> None:
+    """Its sketch fades by halving; after some 45 times its counts no longer add up exactly in float64."""
+    generator, steered = np.random.default_rng(1), SteeredSlack(0.05, 10**12)
+    for second in range(1000):
+        lateness = generator.exponential(1e9, 777).astype(np.int64)
+        late = int(np.count_nonzero(lateness > steered.slack_ns))
+        steered.learn(second * 10**9, len(lateness), late, lateness)
+        if second % 50 == 0:
+            restored = SteeredSlack(0.05, 10**12)
+            restored.restore(steered.saved())
+            assert restored.saved() == steered.saved()
+            assert restored.sketch.total == steered.sketch.total

@@ -24,7 +24,6 @@ from helpers_service import (
     problem_of,
     running,
 )
-from strandline.ingest import endpoint
 
 # ---- 200 ------------------------------------------------------------------------------------------------------------
 
@@ -135,15 +134,14 @@ async def test_a_method_that_is_not_possible(tmp_path: Path, method: str, path: 
 # ---- bodies that are refused ----------------------------------------------------------------------------------------
 
 
-async def test_a_body_that_does_not_come(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr(endpoint, "BODY_WITHIN_S", 0.05)
+async def test_a_body_that_does_not_come(tmp_path: Path) -> None:
     over = asyncio.Event()
 
     async def some_and_no_more() -> AsyncIterator[bytes]:
         yield event_line(1)
         await over.wait()
 
-    async with running(configuration(tmp_path)) as service:
+    async with running(configuration(tmp_path, top='[limits]\nbody_within = "50ms"')) as service:
         answer = await service.post("events", some_and_no_more())
         over.set()
         assert f"{len(event_line(1))} bytes came" in problem_of(answer, 408)

@@ -23,13 +23,16 @@ class Histogram:
         self.total = 0
         self._edges = np.array(bounds, dtype=np.int64)
 
-    def add(self, values: NDArray[np.int64]) -> None:
-        """Count a column; some 11 ns a value."""
+    def add(self, values: NDArray[np.int64], times: NDArray[np.int64] | None = None) -> None:
+        """Count a column, each value once or `times` times; some 11 ns a value."""
         if len(values) == 1:
-            self.add_same(int(values[0]), 1)
+            self.add_same(int(values[0]), 1 if times is None else int(times[0]))
             return
-        self.counts += np.bincount(np.searchsorted(self._edges, values), minlength=len(self.counts))
-        self.total += int(values.sum(dtype=np.float64))
+        places = np.searchsorted(self._edges, values)
+        counted = np.bincount(places, weights=times, minlength=len(self.counts))
+        self.counts += counted.astype(np.int64)
+        weighed = values.astype(np.float64) if times is None else values * times.astype(np.float64)
+        self.total += int(weighed.sum())
 
     def add_same(self, value: int, times: int) -> None:
         """Count one value several times."""

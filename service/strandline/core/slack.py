@@ -158,7 +158,6 @@ class SteeredSlack:
         """The late share that the longest wait can give, from the lateness remembered."""
         return self.sketch.share_above(self.at_most_ns)
 
-
     def saved(self) -> list[Any]:
         """All of it as plain values."""
         stretch = self.stretch
@@ -171,15 +170,16 @@ class SteeredSlack:
             list(self.periods),
             self._tune_at,
             self.sketch.counts.tolist(),
+            self.sketch.total,  # not the sum of the counts to the last bit, once they have faded often
         ]
 
     def restore(self, values: list[Any]) -> None:
         """Take over saved values."""
-        self.exact_ns, self.events, self.late, stretch, self.stretches, periods, self._tune_at, counts = values
+        self.exact_ns, self.events, self.late, stretch, self.stretches, periods, self._tune_at, counts, total = values
         self.stretch = None if stretch is None else Stretch(*stretch)
         self.periods.extend(tuple(row) for row in periods)
         self.sketch.counts[:] = counts
-        self.sketch.total = float(self.sketch.counts.sum())
+        self.sketch.total = total
 
 
 Slack = FixedSlack | SteeredSlack

@@ -255,7 +255,8 @@ class State:
             return []
         strand = self.merger.merge(heads)
         rows, refs = len(strand.times), as_refs(strand.refs)
-        self.figures.hold.add(np.maximum(mark.decided_ns - self.arrivals.release(refs), 0))
+        came_ns, counts = self.arrivals.release(refs)
+        self.figures.hold.add(np.maximum(mark.decided_ns - came_ns, 0), counts)
         self.ledger.released += rows
         self.ledger.buffered -= rows
         batches = self._batches(strand.times, refs, mark, end_lsn)

@@ -73,7 +73,7 @@ _attributes = msgspec.json.Decoder(list[_Attribute])
 
 
 def fault_of(event: bytes) -> LineFault | None:
-    """Which rule one JSON object breaks first, the required attributes before the others; None if it is a CloudEvent."""
+    """The rule that one JSON object breaks first, required attributes before others; None if it is a CloudEvent."""
     members = _members.decode(event)
     try:
         for name in REQUIRED:

@@ -16,9 +16,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ..core.columns import Arrival, Fault, Times
-from ..errors import BodyError
+from ..errors import TooManyFaults
+from . import cloudevents
+from .formats import split_body
+from .json_items import json_fault
 from .limits import BodyLimits
-from .lines import MEDIA_TYPES, Lines, is_utf8, json_fault, split_body, utf8_fault
+from .lines import Lines, is_utf8, utf8_fault
 from .nesting import deep_suspects, deepest
 from .pointer import Fields, Values
 from .timestamps import unit_bounds
@@ -34,6 +37,8 @@ from .values import (
     source_column,
     time_column,
 )
+
+FAULTS_NAMED = 10  # in the refusal of a body for its many faults
 
 
 class _Columns(NamedTuple):
@@ -65,31 +70,27 @@ class Decoder:
         self._fields = Fields(time_at, _time_type(time_unit), source, id)
 
     def decode(self, body: bytes, media_type: str, source_numbers: Mapping[str, int]) -> Arrival:
-        """The body, decoded; `media_type` is one of lines.MEDIA_TYPES.
+        """The body, decoded; `media_type` is one of formats.MEDIA_TYPES.
 
-        `source_numbers` is the feed's table of sources, numbered from 0 without gaps. Raises BodyError (413, 415, 422);
-        a line that is no event is a fault of the arrival and hinders no other.
+        `source_numbers` is the feed's table of sources, numbered from 0 without gaps. Raises BodyError (413, 415, 422)
+        and TooManyFaults; a line that is no event is a fault of the arrival and hinders no other.
         """
-        lines = self._lines(body, media_type)
-        return self._at_once(lines, source_numbers) or self._line_by_line(lines, source_numbers)
+        lines = self.split(body, media_type)
+        return self.at_once(lines, source_numbers) or self.line_by_line(lines, source_numbers)
 
     def decode_line_by_line(self, body: bytes, media_type: str, source_numbers: Mapping[str, int]) -> Arrival:
         """What `decode` answers, always by the slow way: the reference that tests hold the fast way against."""
-        return self._line_by_line(self._lines(body, media_type), source_numbers)
+        return self.line_by_line(self.split(body, media_type), source_numbers)
 
-    def _lines(self, body: bytes, media_type: str) -> Lines:
-        if len(body) > self._limits.decoded_bytes_at_most:
-            detail = (
-                f"the body has {len(body)} bytes, {self._limits.decoded_bytes_at_most} are allowed: send less at once"
-            )
-            raise BodyError(413, "Content Too Large", detail)
-        if media_type not in MEDIA_TYPES:
-            raise BodyError(415, "Unsupported Media Type", f"bodies may be {', '.join(MEDIA_TYPES)}")
+    # `decode` in its steps, for who wants to do them in different places.
+
+    def split(self, body: bytes, media_type: str) -> Lines:
+        """The body as lines. Raises BodyError (413, 415, 422)."""
         return split_body(body, media_type, self._limits)
 
     # --- the fast way ---
 
-    def _at_once(self, lines: Lines, source_numbers: Mapping[str, int]) -> Arrival | None:
+    def at_once(self, lines: Lines, source_numbers: Mapping[str, int]) -> Arrival | None:
         """The whole payload in one go, or None when any line needs a closer look."""
         decoder, count = self._fields.decoder, len(lines.ends)
         if decoder is None or not count or not lines.is_regular or not is_utf8(lines.payload):
@@ -104,7 +105,10 @@ class Decoder:
         if len(records) != count or self._is_deep(lines):
             return None
         columns = self._columns(records, source_numbers)
-        return None if columns.bad else _arrival(lines, columns, lines.faults)
+        if columns.bad or (lines.are_cloudevents and not cloudevents.all_sound(lines.payload, count)):
+            return None
+        self._check_faults(lines.faults)
+        return _arrival(lines, columns, lines.faults)
 
     def _is_deep(self, lines: Lines) -> bool:
         limit = self._limits.nesting_at_most
@@ -138,8 +142,8 @@ class Decoder:
 
     # --- the slow way ---
 
-    def _line_by_line(self, lines: Lines, source_numbers: Mapping[str, int]) -> Arrival:
-        """Every line on its own; then columns of the good ones, which may show more faults."""
+    def line_by_line(self, lines: Lines, source_numbers: Mapping[str, int]) -> Arrival:
+        """Every line on its own; then columns of the good ones, which may show more faults. Raises TooManyFaults."""
         records: list[Any] = []
         kept: list[int] = []
         faults = list(lines.faults)
@@ -150,18 +154,36 @@ class Decoder:
                 kept.append(index)
             except LineFault as fault:
                 faults.append(self._fault(lines, index, line, fault))
+                self._check_faults(faults)
         columns = self._columns(records, source_numbers)
-        if columns.bad:
-            bad = set(columns.bad)
-            for row in bad:
-                line = lines.payload[lines.starts[kept[row]] : lines.ends[kept[row]]]
-                faults.append(self._fault(lines, kept[row], line, judge.fault_of(line)))
+        broken, bad = set(columns.bad), set()
+        # The rules of CloudEvents are about whole events: then every line is looked at once more.
+        for row in range(len(records)) if lines.are_cloudevents else sorted(broken):
+            line = lines.payload[lines.starts[kept[row]] : lines.ends[kept[row]]]
+            found = judge.fault_of(line, broken=row in broken)
+            if found is not None:
+                bad.add(row)
+                faults.append(self._fault(lines, kept[row], line, found))
+                self._check_faults(faults)
+        if bad:
             records = [record for row, record in enumerate(records) if row not in bad]
             kept = [index for row, index in enumerate(kept) if row not in bad]
             columns = self._columns(records, source_numbers)
         keep = np.zeros(len(lines.ends), np.bool_)
         keep[kept] = True
-        return _arrival(lines.select(keep), columns, tuple(sorted(faults, key=lambda fault: fault.line)))
+        return _arrival(lines.select(keep), columns, tuple(sorted(faults, key=_line_of)))
+
+    def _check_faults(self, faults: Sequence[Fault]) -> None:
+        """Raise TooManyFaults at once: else a body of faults only would be judged to its end, for seconds."""
+        if len(faults) <= self._limits.faults_at_most:
+            return
+        first = [(fault.line, fault.reason, fault.detail) for fault in sorted(faults, key=_line_of)[:FAULTS_NAMED]]
+        line, reason, detail = first[0]
+        raise TooManyFaults(
+            f"more than {self._limits.faults_at_most} lines are no events of this feed, so none was taken; "
+            f"line {line}: {reason}: {detail}",
+            first,
+        )
 
     def _fault(self, lines: Lines, index: int, line: bytes, fault: LineFault) -> Fault:
         return Fault(lines.number(index), fault.reason, fault.detail, line[: self._limits.event_bytes_at_most])
@@ -173,6 +195,10 @@ def _time_type(unit: Unit) -> Any:
         return str
     least, greatest = unit_bounds(unit)
     return Annotated[int, msgspec.Meta(ge=least, le=greatest)]
+
+
+def _line_of(fault: Fault) -> int:
+    return fault.line
 
 
 def _arrival(lines: Lines, columns: _Columns, faults: Sequence[Fault]) -> Arrival:
@@ -223,10 +249,12 @@ class _Judge:
             raise broken
         return self._fields.record(values)
 
-    def fault_of(self, line: bytes) -> LineFault:
-        """Why a line is no event whose record the columns call bad; a property test holds the two laws together."""
+    def fault_of(self, line: bytes, broken: bool) -> LineFault | None:
+        """Why a line is no event that has a record: because the columns call it `broken`, or else as a CloudEvent."""
+        if not broken:
+            return cloudevents.fault_of(line)
         fault = self._law_broken(self._read(line))
-        assert fault is not None, "columns and scalar law differ"
+        assert fault is not None, "columns and scalar law differ"  # a property test holds the two laws together
         return fault
 
     def _too_deep(self) -> LineFault:

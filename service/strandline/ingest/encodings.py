@@ -7,13 +7,13 @@ from __future__ import annotations
 
 import re
 import zlib
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Container, Iterator
 from io import BytesIO
 
 import zstandard
 
 from ..errors import BodyError
-from .lines import MEDIA_TYPES
+from .formats import MEDIA_TYPES
 
 ACCEPT_ENCODING = "gzip, zstd"
 CODINGS_AT_MOST = 2
@@ -31,12 +31,20 @@ _ZSTD_WINDOW_BYTES = 8 * 1024 * 1024  # RFC 9659: no larger window in the conten
 _PARTS_AT_MOST = 200_000
 
 _UTF8 = ("utf-8", "utf8")
+_BINARY_MODE = ("ce-specversion", "ce-id", "ce-source", "ce-type")
 
 Steps = Callable[[bytes], Iterator[bytes]]
 
 
-def media_type_of(content_type: str | None) -> str:
-    """The body's media type, one of lines.MEDIA_TYPES. Raises BodyError 415, also for a charset other than UTF-8."""
+def media_type_of(content_type: str | None, headers: Container[str] = ()) -> str:
+    """The body's media type, one of formats.MEDIA_TYPES. Raises BodyError 415, also for a charset other than UTF-8.
+
+    `headers` are the names of all header fields, in any case: a CloudEvent whose attributes stand there, in binary mode
+    (HTTP Protocol Binding for CloudEvents 1.0.2 section 3.1), would be taken for its data alone.
+    """
+    is_structured = (content_type or "").lstrip(" \t").lower().startswith("application/cloudevents")
+    if not is_structured and any(name in headers for name in _BINARY_MODE):
+        raise _unsupported("CloudEvents in binary mode (attributes in header fields) are not taken here")
     match = _MEDIA_TYPE.match(content_type or "")
     if match is None:
         raise _unsupported("the request names no media type")

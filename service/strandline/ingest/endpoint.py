@@ -9,6 +9,7 @@ import asyncio
 import hashlib
 import re
 from collections.abc import Iterator
+from concurrent.futures import ThreadPoolExecutor
 from contextlib import contextmanager
 from dataclasses import asdict
 from typing import TypeVar
@@ -17,18 +18,20 @@ import msgspec
 from aiohttp import web
 
 from ..config import Config
-from ..core.columns import RequestKey
-from ..errors import BodyError
+from ..core.columns import Arrival, RequestKey
+from ..errors import BodyError, TooManyFaults
 from ..hops import Bodies
 from ..problems import NotThere
 from ..runtime import FeedRuntime
 from .encodings import decompress, media_type_of
+from .offload import decoded
 from .timestamps import parse_rfc3339
+from .values import SOURCE_BYTES_AT_MOST, is_source
 
 FEEDS = web.AppKey("feeds", dict[str, FeedRuntime])
 CONFIG = web.AppKey("config", Config)
 BODIES = web.AppKey("bodies", asyncio.Semaphore)
-BODY_WITHIN_S = 60.0
+THREAD = web.AppKey("thread", ThreadPoolExecutor)  # see ingest.offload
 ACT_BYTES_AT_MOST = 16 * 1024
 REASON_CHARACTERS_AT_MOST = 500
 KEY_CHARACTERS_AT_MOST = 1024
@@ -62,18 +65,27 @@ def runtime_of(request: web.Request) -> FeedRuntime:
 async def post_events(request: web.Request) -> web.Response:
     """Take events; answer what became of each once all of it is durable."""
     runtime = runtime_of(request)
-    media_type = media_type_of(request.headers.get("Content-Type", ""))
+    media_type = media_type_of(request.headers.get("Content-Type", ""), request.headers)
     async with request.app[BODIES]:
         with _at(runtime.reading, runtime):
             body = await read_body(request, runtime.config.body_bytes_at_most)
         with _at(runtime.decoding, runtime):
             encodings = ",".join(request.headers.getall("Content-Encoding", []))
-            decoded = decompress(body, encodings, runtime.config.decoded_bytes_at_most)
-            arrival = runtime.decoder.decode(decoded, media_type, runtime.feed.state.sources.numbers)
-            key = request_key(request.headers.getall("Idempotency-Key", []), media_type, decoded)
+            body = decompress(body, encodings, runtime.config.decoded_bytes_at_most)
+            key = request_key(request.headers.getall("Idempotency-Key", []), media_type, body)
+            arrival = await _arrival(request, runtime, body, media_type)
         # Nothing awaits between decoding and the core: the numbers of new sources are still right.
         outcome = await runtime.arrive(arrival, key)
     return web.Response(body=msgspec.json.encode(asdict(outcome)), content_type="application/json")
+
+
+async def _arrival(request: web.Request, runtime: FeedRuntime, body: bytes, media_type: str) -> Arrival:
+    try:
+        table = runtime.feed.state.sources.numbers
+        return await decoded(runtime.decoder, body, media_type, table, request.app[THREAD])
+    except TooManyFaults as error:
+        runtime.feed.note_refusal(error.reason)
+        raise
 
 
 def request_key(headers: list[str], media_type: str, body: bytes) -> RequestKey | None:
@@ -115,19 +127,19 @@ async def read_body(request: web.Request, bytes_at_most: int) -> bytes:
     )
     if (request.content_length or 0) > bytes_at_most:
         raise too_large
+    within_s = request.app[CONFIG].limits.body_within_ns / 1e9
     chunks: list[bytes] = []
     size = 0
     try:
-        async with asyncio.timeout(BODY_WITHIN_S):
+        async with asyncio.timeout(within_s):
             async for chunk in request.content.iter_any():
                 size += len(chunk)
                 if size > bytes_at_most:
                     raise too_large
                 chunks.append(chunk)
     except TimeoutError:
-        raise BodyError(
-            408, "Request Timeout", f"the body was not complete within {BODY_WITHIN_S:.0f} s ({size:,} bytes came)"
-        ) from None
+        detail = f"the body was not complete within {within_s:g} s, which is body_within ({size:,} bytes came)"
+        raise BodyError(408, "Request Timeout", detail) from None
     return chunks[0] if len(chunks) == 1 else b"".join(chunks)
 
 
@@ -135,8 +147,9 @@ async def post_marks(request: web.Request) -> web.Response:
     """Take a source's promise that nothing older will come from it."""
     runtime = runtime_of(request)
     promise = await _read_act(request, Promise)
-    if not 1 <= len(promise.source.encode(errors="replace")) <= 256:
-        raise BodyError(422, "Unprocessable Content", "/source: a source has 1 to 256 bytes")
+    if not is_source(promise.source):
+        detail = f"/source: a source has 1 to {SOURCE_BYTES_AT_MOST} bytes and no U+0000"
+        raise BodyError(422, "Unprocessable Content", detail)
     name, config = promise.source, runtime.config
     if config.source is None and name != config.name:  # it would hold the feed, and no event could ever be its own
         raise NotThere(f"no source {name[:100]!r}: all events of feed {config.name} are of one source, {config.name!r}")

@@ -39,9 +39,9 @@ class _NotJson(Exception):
 
 
 def split_json(body: bytes, limits: BodyLimits, wanted: str = EITHER) -> Lines:
-    """The object, or the items of the array, as lines. `wanted` is EITHER, OBJECT or ARRAY. Raises BodyError (413, 422).
+    """The object, or the items of the array, as lines; an empty body is nothing. `wanted` is EITHER, OBJECT or ARRAY.
 
-    An empty body is nothing.
+    Raises BodyError (413, 422).
     """
     try:
         return _split(body, limits, wanted)

@@ -14,4 +14,5 @@ class BodyLimits(msgspec.Struct, frozen=True, forbid_unknown_fields=True):
     decoded_bytes_at_most: int = 64 * MEBIBYTE  # after every content coding is undone
     event_bytes_at_most: int = MEBIBYTE
     events_at_most: int = 100_000
+    faults_at_most: int = 10_000  # lines that are no events; with more of them the whole body is refused
     nesting_at_most: int = 64

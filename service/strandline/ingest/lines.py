@@ -37,6 +37,7 @@ class Lines:
     numbers: Places | None = None  # int64[n], counting from 1; None: line i has number i + 1
     faults: tuple[Fault, ...] = ()  # items that no line was made of
     is_regular: bool = False  # see _is_regular
+    are_cloudevents: bool = False  # each must keep the rules of CloudEvents too
 
     def __iter__(self) -> Iterator[bytes]:
         return iter(self.payload.split(b"\n")[:-1])
@@ -47,12 +48,10 @@ class Lines:
 
     def select(self, keep: NDArray[np.bool_]) -> Lines:
         """Only the lines that `keep` marks, closed up."""
-        return Lines(
-            self._stretches(keep),
-            *_places((self.ends - self.starts)[keep]),
-            np.flatnonzero(keep) + 1 if self.numbers is None else self.numbers[keep],
-            self.faults,
-        )
+        starts, ends = _places((self.ends - self.starts)[keep])
+        numbers = np.flatnonzero(keep) + 1 if self.numbers is None else self.numbers[keep]
+        payload = self._stretches(keep)
+        return replace(self, payload=payload, starts=starts, ends=ends, numbers=numbers, is_regular=False)
 
     def _stretches(self, keep: NDArray[np.bool_]) -> bytes:
         """The bytes of the marked lines; one slice for each stretch of neighbours."""

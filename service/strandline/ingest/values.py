@@ -92,8 +92,9 @@ def check_time(value: Any, unit: Unit, at: str) -> int:
 def check_source(value: Any, at: str) -> str:
     """The source's name. Raises LineFault (source_missing, source_invalid)."""
     text = _check_text(value, "source", at, SOURCE_BYTES_AT_MOST)
-    if "\0" in text:  # stores that write sources as text could not hold it (PostgreSQL 15 documentation, section 8.3)
-        raise LineFault("source_invalid", f"{shown(at, _POINTER_CHARACTERS)} holds {_found(value)}: it has a NUL (U+0000)")
+    if "\0" in text:  # stores could not hold it as text (PostgreSQL's documentation, "Character Types")
+        found = f"{shown(at, _POINTER_CHARACTERS)} holds {_found(value)}"
+        raise LineFault("source_invalid", f"{found}: no source has the character U+0000")
     return text
 
 

@@ -22,7 +22,7 @@ _FAULTS = (msgspec.MsgspecError, RecursionError)
 
 
 class Unheld:
-    """What stands for a value that Python cannot hold: a number beyond double, half a surrogate pair. One object."""
+    """What stands for a value that Python cannot hold, such as a number beyond double. One object: UNHELD."""
 
 
 UNHELD = Unheld()

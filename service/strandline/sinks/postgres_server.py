@@ -20,6 +20,7 @@ from .postgres_rows import POSITION_KEY, POSITIONS
 
 Connection: TypeAlias = "asyncpg.Connection[asyncpg.Record]"
 CONNECT_WITHIN_S = 10.0
+LOCK_SHARE = 0.8  # of the time for an answer: then it is the server that says what it waited for
 MAKING_LOCK = 0x5374726E646C696E  # of pg_advisory_xact_lock: two feeds that start together make their tables in turn
 
 
@@ -48,7 +49,7 @@ def place_of(dsn: str) -> str:
 async def connect(dsn: str, timeout_s: float) -> Connection:
     """A connection whose commits are on the server's disk when they are answered. Raises what the driver raises.
 
-    Locks are not waited for, and a transaction of a process that stands still is not kept, longer than `timeout_s`.
+    Locks are not waited for longer than `timeout_s`, nor is the transaction of a process that stands still kept open.
     """
     connection = await asyncpg.connect(
         dsn,
@@ -57,7 +58,7 @@ async def connect(dsn: str, timeout_s: float) -> Connection:
         server_settings={"application_name": "strandline"},
     )
     try:
-        timeout = f"{max(1, round(timeout_s * 1000))}ms"
+        timeout = f"{max(1, round(timeout_s * LOCK_SHARE * 1000))}ms"
         for setting in ("lock_timeout", "idle_in_transaction_session_timeout"):
             await connection.execute("SELECT set_config($1, $2, false)", setting, timeout)
         if await connection.fetchval("SHOW synchronous_commit") == "off":  # else a crash loses what was answered

@@ -19,7 +19,7 @@ from .posting import Answered, Poster, shown_url
 from .remote_write_progress import Progress, ProgressFile
 from .remote_write_samples import MS_NS, SampleMaker
 from .remote_write_sending import LaneSender
-from .remote_write_series import Pairs, SeriesRule
+from .remote_write_series import REASONS, Pairs, SeriesRule
 from .remote_write_settling import PERMANENT, Settlement
 from .remote_write_wire import CONTENT_HEADERS
 from .retry_after import SECOND_NS, http_date_ns, retry_after_s
@@ -84,8 +84,8 @@ class RemoteWriteSink:
         return 0.0
 
     def counts(self) -> dict[str, int]:
-        """Samples by reason (`remote_write_series.REASONS`), since the start of the process."""
-        return dict(self._counts)
+        """Samples by reason, since the start of the process."""
+        return {reason: self._counts[reason] for reason in REASONS}
 
     async def open(self) -> dict[Lane, int]:
         """Read the position reached; the receiver is not asked. Errors as for `Database.transaction`, and the token's.

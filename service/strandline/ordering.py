@@ -1,12 +1,14 @@
 """Ordering any iterable in a Python program, lazily, through the same core as the service: `strandline.order(...)`.
 
-No file, no clock, no thread. The events stay Python objects here, keyed by the place that the feed gives each of them
+The module must not have the function's name: once imported it would stand in its place in the package. No file, no
+clock, no thread. The events stay Python objects here, keyed by the place that the feed gives each of them
 in a journal that nobody writes.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Iterator
+from operator import index
 from typing import Generic, TypeVar
 
 import numpy as np
@@ -18,6 +20,7 @@ from .core.records import Kind, arrival_body
 from .core.settings import Settings
 
 Event = TypeVar("Event")
+SLACK_AT_MOST = 2**64 - 1  # no two int64 lie further apart
 _FAR = 2**62
 
 
@@ -37,9 +40,10 @@ def order(
     is left out). Raises ValueError if `slack` is negative, TypeError or OverflowError if a time is no integer or does
     not fit.
     """
+    slack = index(slack)
     if slack < 0:
         raise ValueError(f"slack must not be negative, it is {slack}")
-    return _Ordering(time, slack, source, late).run(events)
+    return _Ordering(time, min(slack, SLACK_AT_MOST), source, late).run(events)
 
 
 class _Ordering(Generic[Event]):
@@ -74,9 +78,7 @@ class _Ordering(Generic[Event]):
         yield from self._final(self.feed.drain(0, 0))
 
     def _arrive(self, event: Event) -> list[Effect]:
-        time = self.time(event)
-        if not isinstance(time, int):
-            raise TypeError(f"`time` must give an int, it gave {type(time).__name__}")
+        time = index(self.time(event))
         if not TIME_MIN < time <= TIME_MAX:
             raise OverflowError(f"the time {time} does not fit int64")
         name = self.source(event) if self.source else ""
