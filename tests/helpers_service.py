@@ -12,13 +12,14 @@ import os
 import re
 import select
 import signal
+import sqlite3
 import subprocess
 import sys
 import time
 import urllib.error
 import urllib.request
 from collections.abc import AsyncIterator, Callable, Iterable, Mapping
-from contextlib import asynccontextmanager
+from contextlib import asynccontextmanager, closing
 from dataclasses import dataclass
 from pathlib import Path
 from types import TracebackType
@@ -68,6 +69,14 @@ def configuration(folder: Path, *, sinks: str = "", top: str = "", more: str = "
 def store_in(folder: Path) -> Path:
     """Where the SQLite sink of `configuration` writes."""
     return folder / "river.db"
+
+
+def stored(folder: Path, lane: str = "events") -> list[int]:
+    """Seconds of the events in the store, in its order; the late ones (`late`) as they came."""
+    order = "batch, position" if lane == "events" else "rowid"
+    with closing(sqlite3.connect(store_in(folder))) as connection:
+        rows = connection.execute(f"SELECT time_ns FROM {lane} WHERE feed = ? ORDER BY {order}", (FEED,)).fetchall()
+    return [time_ns // 10**9 - BEGIN_S for (time_ns,) in rows]
 
 
 def config_of(text: str) -> Config:
@@ -247,11 +256,11 @@ class Process:
     def start(self) -> None:
         """Start it and wait until it is ready."""
         self.begin()
-        self.url = self._listens_at()
+        self.url = self.listens()
         self.until(lambda: self.status("/health/ready") == 200, "it is not ready")
 
-    def _listens_at(self) -> str:
-        """The address that it tells on stdout, once it listens."""
+    def listens(self) -> str:
+        """Wait until it listens; the address, which it tells on stdout."""
         assert self.process is not None and self.process.stdout is not None
         told, _, _ = select.select([self.process.stdout], [], [], DEADLINE_S)
         line = self.process.stdout.readline().decode() if told else ""
@@ -280,12 +289,18 @@ class Process:
         self.process.stdout.close()
         return code
 
+    def run(self, *arguments: str) -> int:
+        """Another command of `strandline`, with this configuration, while the service runs; its exit code."""
+        command = [sys.executable, "-m", "strandline.cli", *arguments, "--config", str(self.file)]
+        with self.log.open("ab") as log:
+            return subprocess.run(command, stdout=log, stderr=log, env=self._environ, check=False).returncode
+
     # ---- asking -----------------------------------------------------------------------------------------------------
 
-    def ask(self, path: str, body: bytes | None = None) -> Answer:
-        """One request on a connection of its own. Raises OSError while nothing answers."""
-        url = f"{self.url}{path}"
-        request = urllib.request.Request(url, data=body, headers={"Content-Type": NDJSON} if body is not None else {})
+    def ask(self, path: str, body: bytes | None = None, headers: Mapping[str, str] | None = None) -> Answer:
+        """One request on a connection of its own, POST where it has a body. Raises OSError while nothing answers."""
+        given = {**({} if body is None else {"Content-Type": NDJSON}), **(headers or {})}
+        request = urllib.request.Request(f"{self.url}{path}", data=body, headers=given)
         try:
             with urllib.request.urlopen(request, timeout=DEADLINE_S) as answer:
                 return Answer(answer.status, dict(answer.headers), answer.read())

@@ -21,14 +21,14 @@ from strandline_loadgen.trace import Trace
 SECOND_NS = 1_000_000_000
 FEED = "river-gauges"
 FOR_EVER_NS = 400 * 86_400 * SECOND_NS
-# A request of 5 events of 120 bytes with a faulty line, its small records and the headroom; three must fit at once.
-REQUEST_BYTES = 1600
+# A request of 5 events of 120 bytes with a faulty line, its small records and the headroom of the segment sizes below.
+REQUEST_BYTES = 2300
 
 # What can happen in a step, and how often while all is usual.
 WEIGHTS: dict[str, float] = {
     "send": 30, "tick": 14, "pass_time": 8, "run_job": 45, "tell_job": 45, "leave": 1, "promise": 1, "excuse": 0.6,
     "drain": 0.4, "reconfigure": 0.6, "mood": 4, "let_go": 6, "step_clock": 0.5, "kill": 1.5, "cut_power": 1.5,
-    "arm": 3.5, "arm_store": 1.0, "disk_trouble": 0.7, "disk_room": 1.0, "stop": 0.7,
+    "arm": 3.5, "arm_store": 1.0, "disk_trouble": 0.7, "disk_room": 1.0, "stop": 0.7, "collect": 1,
 }  # fmt: skip
 
 
@@ -70,9 +70,9 @@ class Scenario:
 
     def journal(self) -> Journal:
         """Segments from the least size on; the limit from the least that a request fits in."""
-        segment_bytes = self.chance.choice((200, 264, 400, 1000, 2048, 8192))
+        segment_bytes = self.chance.choice((200, 264, 400, 1000, 2504, 8192))
         at_most_bytes = segment_bytes * self.chance.choice((2, 3, 6, 100))
-        if segment_bytes < REQUEST_BYTES + 64:
+        if segment_bytes < REQUEST_BYTES:  # else two segments must do, as the configuration promises
             at_most_bytes = max(at_most_bytes, 4 * REQUEST_BYTES)
         return Journal(segment_bytes, at_most_bytes)
 

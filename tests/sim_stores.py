@@ -98,7 +98,12 @@ class Flaky:
         refused = self._stores.refused_for_good(self._name, batches)
         if refused:
             raise SinkRefused("the store has no place for these", refused)
-        return await self._call(lambda: self._inner.take(batches, lines))
+        return await self._call(lambda: self._take(batches, lines))
+
+    async def _take(self, batches: Sequence[Batch], lines: Lines) -> dict[Lane, int]:
+        answer = await self._inner.take(batches, lines)
+        self._stores.has.update((self._name, batch.lane, batch.number) for batch in batches)
+        return answer
 
     async def flush(self, lines: Lines) -> dict[Lane, int]:
         return await self._call(lambda: self._inner.flush(lines))
@@ -132,6 +137,7 @@ class Stores:
     moods: dict[str, str] = field(default_factory=dict)
     met: dict[str, int] = field(default_factory=dict)
     hanging: list[asyncio.Future[None]] = field(default_factory=list)
+    has: set[tuple[str, Lane, int]] = field(default_factory=set)
     never: set[tuple[str, Lane, int]] = field(default_factory=set)
     weather: Weather | None = None
     _connections: list[sqlite3.Connection] = field(default_factory=list)
@@ -165,10 +171,12 @@ class Stores:
             future.set_exception(ConnectionResetError("the connection broke off"))
 
     def refused_for_good(self, name: str, batches: Sequence[Batch]) -> list[int]:
-        """Numbers of those that a store will never take; what it refused once it refuses always."""
+        """Numbers of those that a store will never take: what it refused once, it refuses always, and never what it has.
+        """
         for batch in batches if self.moods.get(name) == "refuses for good" else ():
             assert self.weather is not None
-            if self.weather.chance.random() < 0.3:
+            known = (name, batch.lane, batch.number) in self.has or batch.number in self.receiver.batches[batch.lane]
+            if not known and self.weather.chance.random() < 0.3:
                 self.never.add((name, batch.lane, batch.number))
         found = [batch.number for batch in batches if (name, batch.lane, batch.number) in self.never]
         self.met["refuses for good"] = self.met.get("refuses for good", 0) + bool(found)
@@ -180,6 +188,13 @@ class Stores:
         self.weather.store_fails_in = 1 + self.weather.chance.randrange(8)
         kind = self.weather.chance.choice((sqlite3.OperationalError, ConnectionError))
         self.weather.store_error = lambda: kind("simulated")
+
+    def collect(self) -> None:
+        """Somebody fetches the complete files, away from where the service sees them."""
+        fetched = self.folder / "fetched"
+        fetched.mkdir(exist_ok=True)
+        for path in sorted((self.folder / "files").glob("*.ndjson")):
+            path.rename(fetched / path.name)
 
     def died(self) -> None:
         """The process is gone: the system closes what it held open, and open transactions are void."""

@@ -27,6 +27,7 @@ def judge_stores(
     exact = all(attempt.state in ("answered", "refused") for attempt in crowd.attempts)
     repeats = scenario.fixed.get("id") is not None or not crowd.habits.keys_last
     told = crowd.told()
+    stores.collect()
     for name in [sink.name for sink in config.sinks]:
         ordered, late = (_rows(name, lane, stores, folder, reading) for lane in ("ordered", "late"))
         elsewhere = _refused(name, folder, reading)
@@ -59,7 +60,7 @@ def _rows(name: str, lane: Lane, stores: Stores, folder: Path, reading: Reading)
     if name == "store":
         return _joined(list(read_sqlite(folder / "river.db", FEED, lane, reading)))
     if name == "files":
-        return _joined(list(read_ndjson(folder / "files", FEED, lane, reading)))
+        return _joined(list(read_ndjson(folder / "fetched", FEED, lane, reading)))
     batches = [taken for _, taken in sorted(stores.receiver.batches[lane].items())]
     lines = [line for taken in batches for line in taken[0]]
     times = [time for taken in batches for time in taken[1]]

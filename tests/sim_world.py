@@ -258,6 +258,9 @@ class World:
         name = self.chance.choice([sink.name for sink in self.config.sinks])
         self.stores.moods[name] = self.chance.choice(MOODS)
 
+    def _collect(self, process: Process) -> None:
+        self.stores.collect()
+
     def _let_go(self, process: Process) -> None:
         self.stores.let_go(self.choose)
 

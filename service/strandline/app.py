@@ -26,8 +26,8 @@ from .config import Address, Config, load
 from .connections import Connections, make_room_for
 from .errors import StrandlineError
 from .ingest import endpoint
-from .ingest.endpoint import BODIES, CONFIG, FEEDS, THREAD
-from .ingest.offload import make_thread
+from .ingest.endpoint import ASIDE, BODIES, CONFIG, FEEDS
+from .ingest.offload import Aside
 from .journal.disk import LocalDisk
 from .metrics import make_registry
 from .ports import Clock, Disk
@@ -48,8 +48,8 @@ def make_app(config: Config, feeds: dict[str, FeedRuntime]) -> web.Application:
     app = web.Application(middlewares=[as_problems])
     app[FEEDS], app[CONFIG] = feeds, config
     app[BODIES] = asyncio.Semaphore(config.limits.bodies_at_most)
-    app[THREAD] = make_thread()
-    app.on_cleanup.append(_end_thread)
+    app[ASIDE] = Aside()
+    app.on_cleanup.append(_close_aside)
     app.add_routes(
         [
             web.post("/v1/feeds/{feed}/events", endpoint.post_events),
@@ -72,8 +72,8 @@ def make_app(config: Config, feeds: dict[str, FeedRuntime]) -> web.Application:
     return app
 
 
-async def _end_thread(app: web.Application) -> None:
-    app[THREAD].shutdown(wait=False, cancel_futures=True)
+async def _close_aside(app: web.Application) -> None:
+    app[ASIDE].close()
 
 
 async def _get_openapi(request: web.Request) -> web.Response:

@@ -63,6 +63,10 @@ class Journal(msgspec.Struct, frozen=True):
     at_most_bytes: Annotated[
         int, Key(size("128KiB"), "room for all files; at this limit events are refused until the sinks have caught up")
     ] = field(default=8 * GIB, name="at_most")
+    retain_ns: Annotated[
+        int,
+        Key(duration("0s"), "how long what nothing needs any more stays, to be replayed; it goes first at the limit"),
+    ] = field(default=0, name="retain")
 
 
 class Feed(msgspec.Struct, frozen=True):

@@ -45,6 +45,7 @@ def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
         "held": _held(view),
         "ledger": {**view.ledger, "balanced": view.balance == 0},
         "sources": {"known": view.sources, "active": view.sources_active},
+        "promises": {"broken": view.promises_broken, "broken_most_by": view.promises_broken_by},
         "last_batch": {lane: number - 1 for lane, number in view.next_number.items()},
         "marks": view.marks,
         "refusals": view.refusals,

@@ -1,6 +1,7 @@
 """Keeping a feed's folder in bounds: snapshots of the core, deletion of journal segments, a spare segment ahead.
 
-What is still needed is told by the core; nothing here looks at events.
+What is still needed is told by the core; nothing here looks at events. How long segments stay beyond that, for a
+replay, is `retention`; they go first where room is short.
 """
 
 from __future__ import annotations
@@ -10,9 +11,12 @@ import logging
 from collections.abc import Awaitable, Callable
 
 from .core.feed import Feed
+from .core.records import instant_of
 from .errors import JournalError, JournalFull
 from .journal.commit import GroupCommit
 from .journal.journal import Journal
+from .ports import Clock
+from .retention import Retention
 
 log = logging.getLogger(__name__)
 
@@ -21,18 +25,22 @@ class Housekeeper:
     """Looks after one journal. `settle` waits until all that was appended is durable."""
 
     def __init__(
-        self, journal: Journal, feed: Feed, commit: GroupCommit, settle: Callable[[], Awaitable[None]]
-    ) -> None:
+        self, journal: Journal, feed: Feed, commit: GroupCommit, settle: Callable[[], Awaitable[None]], clock: Clock,
+        retain_ns: int = 0,
+    ) -> None:  # fmt: skip
         self._journal, self._feed, self._commit, self._settle = journal, feed, commit, settle
+        self._clock = clock
         self._saved_lsn = 0
         self._saved_bytes = 0
+        self._retention = Retention(retain_ns)
+        journal.keeps_snapshots = retain_ns > 0
 
     def recover(self) -> int:
         """Fold what the journal holds, from its newest usable snapshot on; how many records were folded. Blocking.
 
         Raises JournalError where the records between the newest usable snapshot and the journal's start are gone.
         """
-        for lsn, body in self._journal.snapshots():
+        for lsn, body in self._journal.intact_snapshots():
             try:
                 self._feed.restore(body, lsn)
             except (ValueError, LookupError, TypeError) as error:
@@ -49,11 +57,24 @@ class Housekeeper:
         for frame in self._journal.frames(self._feed.next_lsn):
             self._feed.fold(frame.kind, frame.version, frame.body, frame.lsn)
             folded += 1
+        if self._retention.retain_ns:
+            # How long they have been free is not written down: they count from when the next segment was begun.
+            free_lsn = min(self._saved_lsn, self._feed.needed_place)
+            self._retention.note(self._journal.ends, free_lsn, self._begun_ns)
         return folded
+
+    def _begun_ns(self, first_lsn: int) -> int:
+        """Arrival clock of the first record at or behind a position that has one."""
+        instants = (instant_of(frame.kind, frame.body) for frame in self._journal.frames(first_lsn))
+        return next((instant for instant in instants if instant is not None), self._clock.now_ns())
 
     def due(self, segment_bytes: int) -> bool:
         """Whether `run` has something to do."""
-        return self._snapshot_due(segment_bytes) or self._journal.lacks_spare
+        return self._snapshot_due(segment_bytes) or self._journal.lacks_spare or self._retained_due()
+
+    def _retained_due(self) -> bool:
+        ends = self._retention.ends
+        return bool(ends) and (self._journal.tight or self._retention.through(self._clock.now_ns()) > 0)
 
     def _snapshot_due(self, segment_bytes: int) -> bool:
         # When the journal has grown by a segment and by four times the snapshot's own size, so that snapshots stay
@@ -66,6 +87,8 @@ class Housekeeper:
     async def run(self, segment_bytes: int) -> None:
         """Do what is due. Raises JournalFailed; a lack of room is logged and tried again later."""
         try:
+            if self._retained_due():
+                await self._drop(self._retention.ends[-1])
             if self._snapshot_due(segment_bytes):
                 await self.save()
             if self._journal.lacks_spare:
@@ -87,4 +110,18 @@ class Housekeeper:
         # The older of the two kept snapshots stays usable, in case the newer one turns out damaged; where room is
         # short there is no such choice.
         keep = min(lsn if self._journal.short_of_room else older, needed, self._journal.durable_lsn)
-        await self._commit.run(lambda: self._journal.drop_before(keep))
+        await self._drop(keep)
+
+    async def _drop(self, free_lsn: int) -> None:
+        """Delete segments before a position that were free for long enough, or as many as are short of room."""
+        now_ns = self._clock.now_ns()
+        self._retention.note(self._journal.ends, free_lsn, lambda end: now_ns)
+        await self._commit.run(lambda: self._drop_now(now_ns))
+        self._retention.note(self._journal.ends, free_lsn, lambda end: now_ns)
+
+    def _drop_now(self, now_ns: int) -> None:
+        self._journal.drop_before(self._retention.through(now_ns))
+        for end in self._retention.ends:
+            if not self._journal.tight:
+                return
+            self._journal.drop_before(end)

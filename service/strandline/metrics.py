@@ -87,6 +87,7 @@ class _Sampler:
             self.add(f"strandline_events_{column}", ledger[column])
         self.add("strandline_events_held", ledger["buffered"])
         self.add("strandline_books_unbalanced_events", self.view.balance)
+        self.add("strandline_promises_broken", self.view.promises_broken)
         for reason in REFUSALS:  # those that never happened too: a counter that begins at 1 shows no increase
             self.add("strandline_requests_refused", self.view.refusals.get(reason, 0), reason)
         self.add("strandline_lanes_bytes", self.runtime.lane_store.size.file_bytes)

@@ -34,6 +34,11 @@ METRICS: dict[str, Meaning] = {
     "strandline_events_quarantined": Meaning(
         "counter", "Lines that cannot be events of the feed.", "Grows: read the quarantine; mend the sender's encoding."
     ),
+    "strandline_promises_broken": Meaning(
+        "counter",
+        "Events that came older than their source had promised.",
+        "Grows: the feed names the source that broke most; mend what makes its promises.",
+    ),
     "strandline_events_held": Meaning(
         "gauge", "Events held in runs.", "Grows without end: see who holds the feed; excuse the source if it is dead."
     ),

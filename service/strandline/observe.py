@@ -56,6 +56,8 @@ async def get_sources(request: web.Request) -> web.Response:
             "silent_s": age_s(now_ns, source.heard_ns),
             "active": source.active,
             "excused": source.excused,
+            "promised": time_text(source.promised_ns),
+            "promises_broken": source.promises_broken,
         }
         for source in sources_of(runtime.feed.state, after, limit)
     ]

@@ -13,10 +13,17 @@ import msgspec
 from .core.effects import Outcome
 from .errors import FAULT_REASONS, REFUSALS
 from .ingest.endpoint import Excuse, Promise
-from .ingest.formats import MEDIA_TYPES
+from .ingest.formats import FORMATS
 
 Json = dict[str, Any]
-TEXT_MEDIA_TYPES = ("application/x-ndjson", "application/jsonl", "application/json-seq")
+# An item that is no event is a fault in the answer, so it is no matter of these schemas.
+_TEXT: Json = {"type": "string"}
+_BODIES: dict[str, Json] = {
+    "application/json": {"type": ["object", "array"]},
+    "application/cloudevents+json": {"type": "object"},
+    "application/cloudevents-batch+json": {"type": "array"},
+    "application/vnd.msgpack": {"type": "string", "format": "binary"},
+}
 _FEED: Json = {
     "name": "feed",
     "in": "path",
@@ -87,9 +94,7 @@ def _act(summary: str, schema: str | None) -> Json:
 
 
 def _events() -> Json:
-    lines: Json = {"type": "string", "description": "one JSON object a line"}
-    whole: Json = {"description": "one event, or an array of them"}
-    content = {name: {"schema": lines if name in TEXT_MEDIA_TYPES else whole} for name in MEDIA_TYPES}
+    content = {name: {"schema": _BODIES.get(name, _TEXT) | {"description": form.what}} for name, form in FORMATS.items()}
     return {
         "post": {
             "summary": "Send events; answered once all of them are durable",

@@ -84,7 +84,9 @@ class FeedRuntime:
         self._taken_ns: int | None = None
         self._waiters = Waiters()
         self._untold: dict[tuple[str, Lane], int] = {}  # positions of sinks that the core was not told yet
-        self._house = Housekeeper(self.journal, self.feed, self.commit, self._settle)
+        self._house = Housekeeper(
+            self.journal, self.feed, self.commit, self._settle, clock, config.journal.retain_ns
+        )  # fmt: skip
         self._housekeeping: asyncio.Task[None] | None = None
 
     # ---- start and stop -------------------------------------------------------------------------------------------

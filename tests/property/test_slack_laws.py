@@ -1,4 +1,4 @@
-"""Laws of the pass that finds every slack at once: it agrees with a slow simulation of each slack, in whatever chunks."""
+"""Laws of the pass that finds every slack at once: it agrees with slow simulations of each slack, in any chunks."""
 
 from __future__ import annotations
 

@@ -16,18 +16,10 @@ from pathlib import Path
 import pytest
 from helpers_delivery import ScriptedSink
 from helpers_faulty import FaultyDisk, planted, scripted
-from helpers_service import BEGIN_S, PROBLEM, Process, config_of, configuration, events, eventually, running, store_in
+from helpers_service import PROBLEM, Process, config_of, configuration, events, eventually, running, store_in, stored
 from strandline import runtime as runtime_module
 from strandline.app import EXIT_AT_ONCE, EXIT_FAILED, Service, serve
 from strandline.errors import SinkRetry
-
-
-def stored(folder: Path) -> list[int]:
-    """Seconds of the ordered events in the store, in its order."""
-    with sqlite3.connect(store_in(folder)) as connection:
-        rows = connection.execute("SELECT time_ns FROM events ORDER BY batch, position").fetchall()
-    connection.close()
-    return [time_ns // 10**9 - BEGIN_S for (time_ns,) in rows]
 
 
 def small_journal(folder: Path, at_most: str, **keys: object) -> str:

@@ -202,6 +202,13 @@ def decode_small(kind: Kind, body: Buffer) -> SmallRecord:
     return record
 
 
+def instant_of(kind: int, body: Buffer) -> int | None:
+    """The arrival clock of a record; None for names of sources, which have none. Raises as the decoders do."""
+    if kind in (Kind.ARRIVAL, Kind.MARK):
+        return int.from_bytes(memoryview(body)[:8], "little", signed=True)
+    return getattr(decode_small(Kind(kind), body), "now_ns", None)
+
+
 def encode_mark(mark: Mark) -> bytes:
     """A mark's body, 40 bytes."""
     return _MARK.pack(

@@ -59,7 +59,11 @@ def save(state: State) -> list[Buffer]:
     """The state as parts of one body. They do not change with the state: it may go on while they are written."""
     columns = _Columns()
     count = len(state.sources.names)
-    for column in (state.sources.newest, state.sources.heard, state.sources.active, state.sources.excused):
+    sources = state.sources
+    for column in (
+        *(sources.newest, sources.heard, sources.active, sources.excused),
+        *(sources.promised, sources.broken),
+    ):
         columns.put(column[:count].copy())
     for column in state.arrivals.columns():
         columns.put(column.copy())
@@ -124,7 +128,8 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
         state.slack.restore(header["slack"])
     newest, heard = columns.get(np.int64), columns.get(np.int64)
     active, excused = columns.get(np.bool_), columns.get(np.bool_)
-    state.sources.restore(header["names"], newest, heard, active, excused, header["newest_ns"])
+    promised, broken = columns.get(np.int64), columns.get(np.int64)
+    state.sources.restore(header["names"], newest, heard, active, excused, promised, broken, header["newest_ns"])
     state.arrivals.restore(columns.get(np.int64), columns.get(np.int64), columns.get(np.int64))
     state.seen.restore(columns.get(np.uint64), columns.get(np.uint64))
     for key, fingerprint, outcome, arrived_ns, end_lsn in header["keys"]:

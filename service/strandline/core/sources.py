@@ -29,7 +29,11 @@ class Sources:
         self.heard: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # arrival clock of its last word
         self.active: NDArray[np.bool_] = np.empty(0, dtype=np.bool_)
         self.excused: NDArray[np.bool_] = np.empty(0, dtype=np.bool_)
+        self.promised: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # nothing older was to come; NEVER: no promise
+        self.broken: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # events that came older than promised
         self.newest_ns = NEVER  # newest event time over all sources
+        self.broken_events = 0
+        self._promising = False
         self._by_newest = Least()  # active and not excused ones
         self._by_heard = Least()  # active ones
 
@@ -46,6 +50,8 @@ class Sources:
             self.heard = _grown(self.heard, size, NEVER)
             self.active = _grown(self.active, size, False)
             self.excused = _grown(self.excused, size, False)
+            self.promised = _grown(self.promised, size, NEVER)
+            self.broken = _grown(self.broken, size, 0)
             self._by_newest.grow(size)
             self._by_heard.grow(size)
 
@@ -68,7 +74,7 @@ class Sources:
         """Take note of events (at least one), none of them too far in the future."""
         if len(times) == 1:
             self.newest_ns = max(self.newest_ns, int(times[0]))
-            self.promise(int(sources[0]), int(times[0]), now_ns)
+            self._word(int(sources[0]), int(times[0]), now_ns)
             return
         numbers = sources.astype(np.intp)
         np.maximum.at(self.newest, numbers, times)
@@ -82,6 +88,21 @@ class Sources:
 
     def promise(self, source: int, time_ns: int, now_ns: int) -> None:
         """Nothing older than time_ns will come from this source; it counts as a word of the source."""
+        self.promised[source] = max(int(self.promised[source]), time_ns)
+        self._promising = True
+        self._word(source, time_ns, now_ns)
+
+    def note_broken(self, sources: NDArray[np.uint32], times: Times) -> None:
+        """Count events that are older than what their source had promised before they came."""
+        if not self._promising:
+            return
+        broken = times < self.promised[sources]
+        count = int(np.count_nonzero(broken))
+        if count:
+            np.add.at(self.broken, sources[broken], 1)
+            self.broken_events += count
+
+    def _word(self, source: int, time_ns: int, now_ns: int) -> None:
         newest = max(int(self.newest[source]), time_ns)
         self.newest[source] = newest
         self.heard[source] = now_ns
@@ -144,6 +165,8 @@ class Sources:
         heard: Times,
         active: NDArray[np.bool_],
         excused: NDArray[np.bool_],
+        promised: Times,
+        broken: Times,
         newest_ns: int,
     ) -> None:
         """Take over a saved state (columns by number)."""
@@ -151,7 +174,9 @@ class Sources:
         count = len(self.names)
         self.newest[:count], self.heard[:count] = newest, heard
         self.active[:count], self.excused[:count] = active, excused
-        self.newest_ns = newest_ns
+        self.promised[:count], self.broken[:count] = promised, broken
+        self.newest_ns, self.broken_events = newest_ns, int(broken.sum())
+        self._promising = bool(np.any(promised != NEVER))
         if count:
             self._refresh(np.arange(count))
 
@@ -164,6 +189,8 @@ class Sources:
         heard = np.where(self.active[:count], self.heard[:count], NONE)
         assert np.array_equal(self._by_heard.values()[:count], heard)
         assert np.array_equal(self._by_newest.values()[:count], self._waited_for(np.arange(count)))
+        assert self.broken_events == int(self.broken[:count].sum())
+        assert self._promising == bool(np.any(self.promised[:count] != NEVER))
 
 
 def _grown(column: NDArray[Any], size: int, fill: int | bool) -> NDArray[Any]:

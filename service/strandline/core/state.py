@@ -153,6 +153,7 @@ class State:
             self._note_lateness(times)
         events, behind = len(times), self._behind(times, body.arrived_ns)
         if len(words):
+            self.sources.note_broken(word_refs["source"], words)
             self.sources.hear(word_refs["source"], words, body.arrived_ns)
         if len(times) and least_of(times) < self.watermark_ns:
             times, refs, late_batch = self._without_late(times, refs, body.arrived_ns, end_lsn)

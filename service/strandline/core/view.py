@@ -85,6 +85,8 @@ class View:
     identities_known: int
     keys_kept: int
     steering: Steering | None
+    promises_broken: int  # events that came older than their source had promised
+    promises_broken_by: str | None  # the source that broke most
 
 
 @dataclass(frozen=True, slots=True)
@@ -165,7 +167,15 @@ def view_of(state: State, hold: Hold, now_ns: int, refusals: dict[str, int]) -> 
         identities_known=state.seen.known,
         keys_kept=len(state.keys.kept),
         steering=_steering(state.slack, now_ns),
+        promises_broken=state.sources.broken_events,
+        promises_broken_by=_breaker(state),
     )
+
+
+def _breaker(state: State) -> str | None:
+    if not state.sources.broken_events:
+        return None
+    return state.sources.names[int(state.sources.broken.argmax())]
 
 
 def _steering(slack: Slack, now_ns: int) -> Steering | None:
@@ -207,6 +217,8 @@ class SourceView:
     heard_ns: int | None
     active: bool
     excused: bool
+    promised_ns: int | None
+    promises_broken: int
 
 
 def sources_of(state: State, after: int, limit: int) -> list[SourceView]:
@@ -220,6 +232,8 @@ def sources_of(state: State, after: int, limit: int) -> list[SourceView]:
             _known(sources.heard[number]),
             bool(sources.active[number]),
             bool(sources.excused[number]),
+            _known(sources.promised[number]),
+            int(sources.broken[number]),
         )
         for number in range(after, stop)
     ]

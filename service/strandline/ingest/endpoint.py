@@ -9,7 +9,6 @@ import asyncio
 import hashlib
 import re
 from collections.abc import Iterator
-from concurrent.futures import ThreadPoolExecutor
 from contextlib import contextmanager
 from dataclasses import asdict
 from typing import TypeVar
@@ -24,14 +23,14 @@ from ..hops import Bodies
 from ..problems import NotThere
 from ..runtime import FeedRuntime
 from .encodings import decompress, media_type_of
-from .offload import decoded
+from .offload import Aside, decoded
 from .timestamps import parse_rfc3339
 from .values import SOURCE_BYTES_AT_MOST, is_source
 
 FEEDS = web.AppKey("feeds", dict[str, FeedRuntime])
 CONFIG = web.AppKey("config", Config)
 BODIES = web.AppKey("bodies", asyncio.Semaphore)
-THREAD = web.AppKey("thread", ThreadPoolExecutor)  # see ingest.offload
+ASIDE = web.AppKey("aside", Aside)
 ACT_BYTES_AT_MOST = 16 * 1024
 REASON_CHARACTERS_AT_MOST = 500
 KEY_CHARACTERS_AT_MOST = 1024
@@ -82,7 +81,7 @@ async def post_events(request: web.Request) -> web.Response:
 async def _arrival(request: web.Request, runtime: FeedRuntime, body: bytes, media_type: str) -> Arrival:
     try:
         table = runtime.feed.state.sources.numbers
-        return await decoded(runtime.decoder, body, media_type, table, request.app[THREAD])
+        return await decoded(runtime.decoder, body, media_type, table, request.app[ASIDE])
     except TooManyFaults as error:
         runtime.feed.note_refusal(error.reason)
         raise

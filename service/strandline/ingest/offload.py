@@ -9,9 +9,11 @@ and the core.
 from __future__ import annotations
 
 import asyncio
-from collections.abc import Mapping
+import contextlib
+from collections.abc import Callable, Mapping
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
+from functools import partial
 
 import numpy as np
 
@@ -23,25 +25,50 @@ from .formats import FORMATS
 JUDGED_BYTES, JUDGED_LINES = 256 * 1024, 2_000
 
 
-def make_thread() -> ThreadPoolExecutor:
-    """The thread. A single one: many would share the same interpreter lock, and each would slow the loop down."""
-    return ThreadPoolExecutor(1, "decode")
+class Aside:
+    """The thread, and the turn to use it. Only one: many would share the interpreter's lock and slow the loop down."""
+
+    def __init__(self) -> None:
+        self._thread = ThreadPoolExecutor(1, "decode")
+        self._turn = asyncio.Lock()
+
+    async def run(self, work: Callable[[], Arrival]) -> Arrival:
+        """Wait for the turn, then for the work.
+
+        Who is cancelled still waits for work that has begun: until it ends it needs its body's place in memory.
+        """
+        async with self._turn:
+            future = asyncio.get_running_loop().run_in_executor(self._thread, work)
+            try:
+                return await asyncio.shield(future)
+            except asyncio.CancelledError:
+                await _settled(future)
+                raise
+
+    def close(self) -> None:
+        """Take no more work."""
+        self._thread.shutdown(wait=False, cancel_futures=True)
 
 
-async def decoded(
-    decoder: Decoder, body: bytes, media_type: str, table: Mapping[str, int], thread: ThreadPoolExecutor
-) -> Arrival:
+async def _settled(future: asyncio.Future[Arrival]) -> None:
+    while not future.done():
+        with contextlib.suppress(asyncio.CancelledError):
+            await asyncio.wait([future])
+    if not future.cancelled():
+        future.exception()  # nobody wants to know it any more
+
+
+async def decoded(decoder: Decoder, body: bytes, media_type: str, table: Mapping[str, int], aside: Aside) -> Arrival:
     """What `decoder.decode` answers, without holding the loop up. `table` may grow meanwhile: it is read last."""
-    loop = asyncio.get_running_loop()
     if media_type in FORMATS and len(body) > FORMATS[media_type].loop_bytes:
-        return numbered(await loop.run_in_executor(thread, decoder.decode, body, media_type, {}), table)
+        return numbered(await aside.run(partial(decoder.decode, body, media_type, {})), table)
     lines = decoder.split(body, media_type)
     arrival = decoder.at_once(lines, table)
     if arrival is not None:
         return arrival
     if len(lines.payload) <= JUDGED_BYTES and len(lines.ends) <= JUDGED_LINES:
         return decoder.line_by_line(lines, table)
-    return numbered(await loop.run_in_executor(thread, decoder.line_by_line, lines, {}), table)
+    return numbered(await aside.run(partial(decoder.line_by_line, lines, {})), table)
 
 
 def numbered(arrival: Arrival, table: Mapping[str, int]) -> Arrival:

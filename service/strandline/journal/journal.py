@@ -13,7 +13,7 @@ segment's handle is used by the worker alone.
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from itertools import groupby, pairwise
 from operator import attrgetter
 from threading import Lock
@@ -68,6 +68,7 @@ class Journal(Readable):
         self._short = False
         self.counters = Counters()
         self.cut_bytes = 0
+        self.keeps_snapshots = False  # those too that a replay of the oldest segments can begin from
 
     @classmethod
     def open(
@@ -268,6 +269,17 @@ class Journal(Readable):
         full = self.lacks_spare and self.bytes_used + self._segment_bytes > self._limits.bytes_at_most
         return full or self._short
 
+    @property
+    def tight(self) -> bool:
+        """Whether the limit leaves no room for a segment behind the spare one: what nothing needs had better go."""
+        more = self._segment_bytes * (1 + self.lacks_spare)
+        return self._short or self.bytes_used + more > self._limits.bytes_at_most
+
+    @property
+    def ends(self) -> list[int]:
+        """Where each segment but the last ends, the oldest first: what `drop_before` can delete up to."""
+        return [segment.first_lsn for segment in self._segments[1:] if segment.named]
+
     def frees(self, lsn: int) -> bool:
         """Whether `drop_before(lsn)` would delete something, were `lsn` durable."""
         segments = self._segments
@@ -340,6 +352,8 @@ class Journal(Readable):
     def write_snapshot(self, lsn: int, parts: Sequence[Buffer]) -> None:
         """Keep a body that stands for everything before `lsn`, durably; the two newest are kept.
 
+        With `keeps_snapshots` also those that stand at or behind the oldest segment that is kept.
+
         Raises JournalFull("disk_full") where there is no room for it; JournalFailed where the disk reports an error.
         """
         self._raise_if_unusable()
@@ -347,7 +361,8 @@ class Journal(Readable):
             raise ValueError(f"position {lsn} is not durable yet ({self._durable_lsn} is)")
         with self._snapshot_lock:
             try:
-                snapshots.write_snapshot(self._disk, self._directory, lsn, self._digest, parts)
+                kept_from = self.first_lsn if self.keeps_snapshots else snapshots.MAX_LSN
+                snapshots.write_snapshot(self._disk, self._directory, lsn, self._digest, parts, kept_from)
             except OSError as error:
                 if error.errno not in SHORTAGES:
                     self._fail(error, "writing a snapshot")
@@ -357,7 +372,11 @@ class Journal(Readable):
 
     def snapshots(self) -> list[tuple[int, memoryview]]:
         """Position and body of each intact snapshot, the newest first. Raises OSError."""
-        return snapshots.read_snapshots(self._disk, self._directory, self._digest)
+        return list(self.intact_snapshots())
+
+    def intact_snapshots(self) -> Iterator[tuple[int, memoryview]]:
+        """The same one by one: each is read through only when it is asked for. Raises OSError."""
+        return snapshots.intact_snapshots(self._disk, self._directory, self._digest)
 
     def check(self) -> None:
         """Assert every invariant. For the loop's thread; a flush may be running."""

@@ -15,7 +15,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from strandline.errors import JournalError
 
-from .frame import Frame, decode_frame, octets
+from .frame import Frame, decode_frame, intact_end, octets
 from .gather import Positions, Source, block, lines
 from .segments import SEGMENT_HEADER_BYTES, Maps, Segment
 
@@ -66,10 +66,7 @@ class Readable:
         while lsn < until:
             frame = decode_frame(view, flat, segment.offset(lsn), limit, lsn)
             if frame is None:
-                raise JournalError(
-                    f"{segment.path}: the frame at byte {segment.offset(lsn)} (position {lsn}) is not intact any more: "
-                    "the disk changed what it had synced; check the disk and restore the file from a copy"
-                )
+                raise _changed(segment, lsn)
             if lsn >= start:
                 yield frame
             lsn = frame.end_lsn
@@ -82,8 +79,8 @@ class Readable:
         """The lines one after the other, each followed by a line feed.
 
         `places` integer[n] are the positions of the lines' first bytes, `lengths` integer[n] bytes without the line
-        feed; in any order. Raises JournalError where one is not kept, or not durable yet. Not CRC checked again: what
-        is read was checked when the journal was opened, or written by this process.
+        feed; in any order. Raises JournalError where one is not kept, or not durable yet. What is read was checked when
+        the journal was opened, or written by this process, or its segment is read through and checked here, once.
         """
         return block(*self._located(places, lengths))
 
@@ -119,7 +116,20 @@ class Readable:
         segment = segments[index]
         end_lsn = min(durable_lsn, segments[index + 1].first_lsn) if index + 1 < len(segments) else durable_lsn
         view = self._maps.view(segment.path)
+        if segment.unread:
+            self._read_through(segment, view, end_lsn)
         return Source(view, segment.first_lsn - SEGMENT_HEADER_BYTES, segment.offset(end_lsn))
+
+    @staticmethod
+    def _read_through(segment: Segment, view: memoryview, end_lsn: int) -> None:
+        """Check every frame of a segment that the start passed over; two threads may do it twice, to the same end.
+
+        The whole segment, not the frame that a line lies in: frames can only be found from the front.
+        """
+        end = intact_end(view, octets(view), SEGMENT_HEADER_BYTES, segment.offset(end_lsn), segment.first_lsn)
+        if end < segment.offset(end_lsn):
+            raise _changed(segment, segment.first_lsn + end - SEGMENT_HEADER_BYTES)
+        segment.unread = False
 
     def _not_kept(self, low: int, high: int) -> JournalError:
         return JournalError(
@@ -131,3 +141,10 @@ class Readable:
     def _index(segments: tuple[Segment, ...], lsn: int) -> int:
         """Number of the segment that a position lies in; -1 before the first."""
         return bisect_right(segments, lsn, key=attrgetter("first_lsn")) - 1
+
+
+def _changed(segment: Segment, lsn: int) -> JournalError:
+    return JournalError(
+        f"{segment.path}: the frame at byte {segment.offset(lsn)} (position {lsn}) is not intact any more: "
+        "the disk changed what it had synced; check the disk and restore the file from a copy"
+    )

@@ -13,13 +13,16 @@ highest of them is the *floor*.
 * What cannot be told from a torn end: damage to the last group synced before a crash of the machine, while its note was
   not durable yet (the note goes out with the next sync or by itself within the kernel's write-back time, some 30 s).
 
+Segments that end at or before the newest intact snapshot are not read: their headers, notes and names are judged, and
+their frames are marked `unread`. Whoever folds frames checks each of them, and whoever gathers lines from an unread
+segment reads it through first (`reading`). Without an intact snapshot everything is read.
+
 What is intact behind the floor is written again before it is synced. A process that died of a failed sync leaves pages
 that read well, count as clean and are not on the disk: a sync alone would do nothing for them.
 """
 
 from __future__ import annotations
 
-import re
 from collections.abc import Iterator
 from dataclasses import dataclass, field
 
@@ -38,9 +41,8 @@ from .segments import (
     noted_lsn,
     segment_name,
 )
+from .snapshots import SNAPSHOT_NAME, intact_snapshots
 from .spares import last_set
-
-SNAPSHOT_NAME = re.compile(r"snapshot-([0-9]{20})\.snap")
 
 
 @dataclass(slots=True)
@@ -66,12 +68,19 @@ def recover(disk: Disk, directory: str, maps: Maps, *, own: bool) -> Recovered:
         first_lsn = first_lsn_of(name)
         if first_lsn is not None:
             found.segments.append(_known(f"{directory}/{name}", first_lsn, found, maps))
+    stands_lsn = _stands_for(disk, directory, found)
     # Sorted names are sorted positions: the digits are of one length.
     for index, segment in enumerate(found.segments):
         follower = found.segments[index + 1] if index + 1 < len(found.segments) else None
+        segment.unread = follower is not None and follower.first_lsn <= stands_lsn
         found.next_lsn = _checked_end(segment, follower, found, maps)
     _check_snapshots(names, directory, found)
     return found
+
+
+def _stands_for(disk: Disk, directory: str, found: Recovered) -> int:
+    """Position of the newest intact snapshot, which stands for everything before it; 0 where there is none."""
+    return next((lsn for lsn, _ in intact_snapshots(disk, directory, found.digest)), 0)
 
 
 def _known(path: str, first_lsn: int, found: Recovered, maps: Maps) -> Segment:
@@ -90,14 +99,19 @@ def _known(path: str, first_lsn: int, found: Recovered, maps: Maps) -> Segment:
 
 
 def _checked_end(segment: Segment, follower: Segment | None, found: Recovered, maps: Maps) -> int:
-    """Position where the segment's intact frames end; raises where one is missing that was durable."""
-    view = maps.view(segment.path)
-    flat = octets(view)
+    """Position where the segment's intact frames end; raises where one is missing that was durable.
+
+    An unread segment is taken to reach its follower, if it can.
+    """
     limit = segment.size
     if follower is not None:
         limit = segment.offset(follower.first_lsn)
         if limit > segment.size:
             raise _hole(segment, follower)
+        if segment.unread:
+            return follower.first_lsn
+    view = maps.view(segment.path)
+    flat = octets(view)
     end = intact_end(view, flat, SEGMENT_HEADER_BYTES, limit, segment.first_lsn)
     end_lsn = segment.first_lsn + end - SEGMENT_HEADER_BYTES
     durable_lsn = follower.first_lsn if follower else found.floor_lsn

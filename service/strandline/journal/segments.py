@@ -106,7 +106,8 @@ def _header_crc(fixed: bytes) -> int:
 class Segment:
     """One segment in use. `file` is the handle for writing, None once the segment is full or was opened for reading.
 
-    `named` is False while its file still has the name of a spare one: none of its frames was written yet.
+    `named` is False while its file still has the name of a spare one: none of its frames was written yet. `unread` is
+    True while its frames were neither checked nor written by this process, because a snapshot stands for them.
     """
 
     path: str
@@ -116,6 +117,7 @@ class Segment:
     file: File | None = None
     named: bool = True
     turn: int = 0
+    unread: bool = False
 
     @property
     def room(self) -> int:

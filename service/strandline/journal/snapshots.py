@@ -1,7 +1,8 @@
 """Snapshot files: a body that stands for all of the journal before a position, so that a start need not fold it all.
 
 Here lives the file, not what is in the body. A snapshot is written to a temporary name, synced, renamed, and its
-directory synced: a file with a snapshot's name is whole, or the disk has damaged it since. The two newest are kept.
+directory synced: a file with a snapshot's name is whole, or the disk has damaged it since. The two newest are kept,
+and where segments are retained for replay those that a replay of them can begin from.
 
     magic 8 | format version u32 | crc32c u32 | position u64 | body bytes u64 | digest of the feed's name 16 | zeros 16
     body
@@ -11,20 +12,22 @@ The CRC runs over the rest of the header (64 bytes without the CRC itself) and t
 
 from __future__ import annotations
 
+import re
 import struct
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 
 from strandline.core.effects import Buffer
 from strandline.ports import Disk
 
 from .frame import bytes_of, extend_crc, flatten
-from .recovery import SNAPSHOT_NAME
 
 MAGIC = b"\xb5still\r\n"
 FORMAT_VERSION = 1
 HEADER_BYTES = 64
 KEPT = 2
+MAX_LSN = 2**64
 
+SNAPSHOT_NAME = re.compile(r"snapshot-([0-9]{20})\.snap")
 _HEADER = struct.Struct("<8sIIQQ16s16x")
 
 
@@ -33,8 +36,13 @@ def snapshot_name(lsn: int) -> str:
     return f"snapshot-{lsn:020d}.snap"
 
 
-def write_snapshot(disk: Disk, directory: str, lsn: int, digest: bytes, parts: Sequence[Buffer]) -> None:
-    """Make a snapshot durable, then remove all but the two newest. Raises OSError; two snapshots stay in any case."""
+def write_snapshot(
+    disk: Disk, directory: str, lsn: int, digest: bytes, parts: Sequence[Buffer], kept_from_lsn: int = MAX_LSN
+) -> None:
+    """Make a snapshot durable, then remove all but the two newest and those at or behind `kept_from_lsn`.
+
+    Raises OSError; two snapshots stay in any case.
+    """
     bodies = flatten(parts)
     body_bytes = sum(map(bytes_of, bodies))
     blank = _HEADER.pack(MAGIC, FORMAT_VERSION, 0, lsn, body_bytes, digest)
@@ -50,18 +58,21 @@ def write_snapshot(disk: Disk, directory: str, lsn: int, digest: bytes, parts: S
         file.close()
     disk.rename(temporary, f"{directory}/{snapshot_name(lsn)}")
     disk.sync_directory(directory)
-    for old in snapshot_lsns(disk, directory)[KEPT:]:
+    for old in (old for old in snapshot_lsns(disk, directory)[KEPT:] if old < kept_from_lsn):
         disk.remove(f"{directory}/{snapshot_name(old)}")
 
 
 def read_snapshots(disk: Disk, directory: str, digest: bytes) -> list[tuple[int, memoryview]]:
     """Position and body of each intact snapshot, the newest first; a damaged one is left out. Raises OSError."""
-    found = []
+    return list(intact_snapshots(disk, directory, digest))
+
+
+def intact_snapshots(disk: Disk, directory: str, digest: bytes) -> Iterator[tuple[int, memoryview]]:
+    """The same one by one: each is read through only when it is asked for."""
     for lsn in snapshot_lsns(disk, directory):
         body = _body(disk, f"{directory}/{snapshot_name(lsn)}", lsn, digest)
         if body is not None:
-            found.append((lsn, body))
-    return found
+            yield lsn, body
 
 
 def snapshot_lsns(disk: Disk, directory: str) -> list[int]:

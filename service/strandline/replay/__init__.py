@@ -1,1 +1,1 @@
-"""What can be learned from traffic that has been: figures of disorder, every slack at once, captures, replay, advice."""
+"""What traffic that has been can teach: figures of disorder, every slack at once, captures, replay, advice."""

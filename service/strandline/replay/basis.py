@@ -4,9 +4,10 @@ Three of them: the newest event time over all sources, the arrival clock, and th
 event times. A basis never goes back, and it does not depend on the slack: the watermark of slack S is basis - S. So one
 pass serves every slack. State is carried from block to block; slacks and held events are not known here.
 
-The rule is the one of `core/watermark.py` (without its bound on holding, excuses and promises, which are an operator's):
-a source counts from its first event until it has been silent for `idle_after_ns`, and again when it speaks; where
-nobody counts, the newest over all leads. A source falls idle at an instant between arrivals: that is a step of its own.
+The rule is the one of `core/watermark.py` (without its bound on holding, excuses and promises, which are an
+operator's): a source counts from its first event until it has been silent for `idle_after_ns`, and again when it
+speaks; where nobody counts, the newest over all leads. A source falls idle at an instant between arrivals: that is a
+step of its own.
 """
 
 from __future__ import annotations
@@ -51,8 +52,8 @@ class Requests:
 class Moves:
     """What a block did to a basis: where it stood before and after each request, and the steps it rose by.
 
-    Step i: at `instants[i]` the basis rose to `values[i]` (strictly ascending), when `rows[i]` rows of the block had come
-    in earlier requests.
+    Step i: at `instants[i]` the basis rose to `values[i]` (strictly ascending), when `rows[i]` rows of the block had
+    come in earlier requests.
     """
 
     before: Int64s
@@ -120,7 +121,8 @@ class LeastOfSources:
         """Costs some 60 ns an event where each request holds one, and 20 ns a source and block.
 
         Every word of a source lasts over an interval: from its request until the source's next word, or until it falls
-        idle. The basis is the least value among the intervals that cover a point, so it is found for all points at once.
+        idle. The basis is the least value among the intervals that cover a point, so it is found for all points at
+        once.
         """
         rows, requests = len(block.times), len(block.starts)
         sources, spoken, newest = self._words(block)
@@ -217,10 +219,11 @@ class LeastOfSources:
 def grouped_greatest(values: Int64s, fresh: NDArray[np.bool_]) -> Int64s:
     """Running greatest value that begins anew wherever `fresh` is true (it is so in the first row).
 
-    What is lifted by a group's number times more than the range of values ascends with the group, so one running greatest
-    serves them all. Where int64 has no room for that, ranks are lifted instead of the values (10 times the cost).
+    What is lifted by a group's number times more than the range of values ascends with the group, so one running
+    greatest serves them all. Where int64 has no room for that, ranks are lifted instead of the values (10 times the
+    cost).
     """
-    groups = np.cumsum(fresh)
+    groups = np.cumsum(fresh, dtype=np.int64)
     least, lift = int(values.min()), int(values.max()) - int(values.min()) + 1
     if lift * (int(groups[-1]) + 1) < 2**62:
         groups *= lift
@@ -238,8 +241,8 @@ def grouped_greatest(values: Int64s, fresh: NDArray[np.bool_]) -> Int64s:
 def least_covering(begins: Int64s, ends: Int64s, values: Int64s, length: int) -> Int64s:
     """For each place from 0 to length - 1 the least value among the intervals [begin, end) over it; NONE without any.
 
-    An interval is two that overlap, each of a power of two in length; from the longest to the shortest, what lies over a
-    stretch is handed on to its halves. Costs length x log2(length) comparisons in columns (0.7 ns each).
+    An interval is two that overlap, each of a power of two in length; from the longest to the shortest, what lies over
+    a stretch is handed on to its halves. Costs length x log2(length) comparisons in columns (0.7 ns each).
     """
     spans = ends - begins
     powers = ((np.maximum(spans, 1).astype(np.float64).view(np.int64) >> 52) - 1023).astype(np.int8)

@@ -1,12 +1,12 @@
-"""What slacks would hold back: for each slack of a grid the events and bytes held over time, and how long each was held.
+"""What slacks would hold back: for each slack of a grid the events and bytes held over time, and the hold of each.
 
 An event is held by slack S while the basis stands below its time + S; it is held at all if the basis stood below that
 after its own request. Here lives the pass that finds this for a grid of slacks at once, block by block, with the events
 that the longest slack holds carried along. Where the basis comes from, and who is late, is not known here.
 
-Method: held events and those of the block are sorted by event time once for all slacks. For a slack the basis's steps are
-looked up in that column: what lies between two of them was let go at the second. Counting, along it, the events that
-the slack held at all (`levels`, one byte an event) gives releases; counting them along the order of arrival gives
+Method: held events and those of the block are sorted by event time once for all slacks. For a slack the basis's steps
+are looked up in that column: what lies between two of them was let go at the second. Counting, along it, the events
+that the slack held at all (`levels`, one byte an event) gives releases; counting them along the order of arrival gives
 arrivals; the difference of both is what was held, at every step.
 """
 
@@ -22,13 +22,14 @@ from .sketch import Buckets
 
 Int64s = NDArray[np.int64]
 Levels = NDArray[np.uint8]
+Counts = NDArray[np.int32] | NDArray[np.int64]
 
 SLACKS_AT_MOST = 64
 
 
 @dataclass(frozen=True, slots=True)
 class Rows:
-    """Events of a block in order of arrival; `levels` is how many slacks of the grid would not hold the event at all."""
+    """Events of a block in order of arrival; `levels`: how many slacks of the grid would not hold the event at all."""
 
     times: Int64s
     arrivals: Int64s
@@ -49,6 +50,22 @@ class HeldFigure:
     counts: Int64s  # holds of the events that were held and let go
 
 
+@dataclass(frozen=True, slots=True)
+class _Steps:
+    """A block's steps, prepared for all slacks: `before` rows came before each and by the end, `spans` follow each."""
+
+    values: Int64s
+    instants: Int64s
+    before: Int64s
+    spans: NDArray[np.float64]
+    end: int
+
+    @classmethod
+    def of(cls, moves: Moves, rows: int, end: int) -> _Steps:
+        spans = np.diff(moves.instants, append=end).astype(np.float64)
+        return cls(moves.values, moves.instants, np.append(moves.rows, rows), spans, end)
+
+
 class _Account:
     """Events or bytes, for each slack: what is held now, its greatest value, its integral over time."""
 
@@ -57,19 +74,19 @@ class _Account:
         self.peak = np.zeros(slacks, dtype=np.int64)
         self.integral = np.zeros(slacks, dtype=np.float64)
 
-    def move(self, slack: int, came: Int64s, gone: Int64s) -> None:
-        """What came before each step and by the end, what was gone after each step (both running from the block's start)."""
-        held = came + self.now[slack]
-        held[1:] -= gone
-        self.peak[slack] = max(self.peak[slack], held.max())
-        self.now[slack] = held[-1]
+    def move(self, slack: int, came: Counts, gone: Counts) -> None:
+        """What came before each step and by the end, and was gone after each step (running from the block's start)."""
+        came[1:] -= gone
+        self.peak[slack] = max(self.peak[slack], self.now[slack] + int(came.max()))
+        self.now[slack] += int(came[-1])
 
 
 class Held:
     """Follows what each slack of an ascending grid holds.
 
-    `by_clock`: the basis is the arrival clock, so an event is let go at its time + slack; else at the step that reaches it.
-    Beyond `events_at_most` events carried along the longest slacks are given up (`measured` counts the ones that are left).
+    `by_clock`: the basis is the arrival clock, so an event is let go at its time + slack; else at the step that
+    reaches it. Beyond `events_at_most` events carried along the longest slacks are given up (`measured` counts the
+    ones that are left).
     """
 
     def __init__(self, slacks_ns: Int64s, buckets: Buckets, *, by_clock: bool, events_at_most: int) -> None:
@@ -99,8 +116,9 @@ class Held:
         if self.measured:
             self._merge(rows)
             self._wait(rows, end)
+            steps = _Steps.of(moves, len(rows.times), end)
             for slack in range(self.measured):
-                self._follow(slack, rows, moves, end)
+                self._follow(slack, rows, steps)
         self._now_ns = end
         if len(moves.values):
             self._basis = int(moves.values[-1])
@@ -119,7 +137,7 @@ class Held:
             self._lengths = np.concatenate((before, rows.lengths[new]))[order]
 
     def _wait(self, rows: Rows, end: int) -> None:
-        """Add to the integrals what waits to the block's end: what was held at its start, and what came, each by itself."""
+        """Add to the integrals as if all that was held at the block's start, or came, had waited until its end."""
         slacks = len(self._slacks)
         remaining = (end - rows.arrivals).astype(np.float64)
         for account, weights in ((self._events, None), (self._bytes, rows.lengths)):
@@ -129,35 +147,35 @@ class Held:
             by_level = np.bincount(rows.levels, weights=waits, minlength=slacks + 1)[:slacks]
             account.integral += account.now * float(end - self._now_ns) + np.cumsum(by_level)
 
-    def _follow(self, slack: int, rows: Rows, moves: Moves, end: int) -> None:
-        """Follow one slack through the block: arrivals and releases along its steps, and how long each event was held."""
+    def _follow(self, slack: int, rows: Rows, steps: _Steps) -> None:
+        """Follow one slack through the block: arrivals and releases along its steps, and the hold of each event."""
         slack_ns = int(self._slacks[slack])
         low = int(np.searchsorted(self._times, self._basis - slack_ns, side="right"))
-        cuts = np.searchsorted(self._times, moves.values - slack_ns, side="right") - low
+        cuts = np.searchsorted(self._times, steps.values - slack_ns, side="right")
+        cuts -= low
         gone = slice(low, low + int(cuts[-1]) if len(cuts) else low)
         was_held, is_held = self._levels[gone] <= slack, rows.levels <= slack
-        before = np.append(moves.rows, len(rows.times))
-        released = _running(was_held)[cuts]
-        self._events.move(slack, _running(is_held)[before], released)
+        released = _running(was_held).take(cuts)
+        self._events.move(slack, _running(is_held).take(steps.before), released)
         freed = None
         if rows.lengths is not None and self._lengths is not None:
-            freed = _running(self._lengths[gone] * was_held)[cuts]
-            self._bytes.move(slack, _running(rows.lengths * is_held)[before], freed)
+            freed = _running(self._lengths[gone] * was_held).take(cuts)
+            self._bytes.move(slack, _running(rows.lengths * is_held).take(steps.before), freed)
         if not len(was_held):
             return
         if self._by_clock:
             let_go = self._times[gone] + slack_ns
-            saved = (end - let_go).astype(np.float64) * was_held
+            saved = (steps.end - let_go) * was_held.astype(np.float64)
             self._events.integral[slack] -= saved.sum()
-            if self._lengths is not None:
+            if freed is not None and self._lengths is not None:
                 self._bytes.integral[slack] -= float(saved @ self._lengths[gone])
         else:
-            let_go = np.repeat(moves.instants, np.diff(cuts, prepend=0))
-            remaining = (end - moves.instants).astype(np.float64)
-            self._events.integral[slack] -= float(remaining @ np.diff(released, prepend=0))
+            let_go = np.repeat(steps.instants, np.diff(cuts, prepend=0))
+            self._events.integral[slack] -= float(steps.spans @ released)
             if freed is not None:
-                self._bytes.integral[slack] -= float(remaining @ np.diff(freed, prepend=0))
-        places = self.buckets.places(let_go - self._arrivals[gone])
+                self._bytes.integral[slack] -= float(steps.spans @ freed)
+        let_go -= self._arrivals[gone]
+        places = self.buckets.places(let_go)
         places *= was_held
         self._counts[slack] += np.bincount(places, minlength=len(self.buckets))
         self._counts[slack, 0] -= len(was_held) - int(released[-1])
@@ -212,8 +230,9 @@ class Held:
         assert np.all(self._counts >= 0)
 
 
-def _running(column: Int64s | NDArray[np.bool_]) -> Int64s:
-    """Running sums that begin with 0, one more than there are values."""
-    sums = np.zeros(len(column) + 1, dtype=np.int64)
+def _running(column: Int64s | NDArray[np.bool_]) -> Counts:
+    """Running sums that begin with 0, one more than values. Counts of a block fit in int32, at half the cost."""
+    size = len(column) + 1
+    sums: Counts = np.zeros(size, np.int32) if column.dtype == np.bool_ else np.zeros(size, np.int64)
     np.cumsum(column, out=sums[1:])
     return sums

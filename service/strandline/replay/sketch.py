@@ -1,9 +1,9 @@
 """How late events were, kept in bounded memory: counts in buckets of a stated relative error.
 
-Method: DDSketch (Masson, Rim, Lee, PVLDB 12(12), 2019). With a relative error a and g = (1 + a) / (1 - a), bucket i holds
-the values above g^(i-1) up to g^i and answers with 2 g^i / (g + 1), which is within a of each of them. Values are int64
-nanoseconds, so all of them fit in a fixed column (2,185 buckets and one for zero at 1 %: 17 KB); nothing is ever
-collapsed. Merging adds counts, and gives what one sketch of everything would have given.
+Method: DDSketch (Masson, Rim, Lee, PVLDB 12(12), 2019). With a relative error a and g = (1 + a) / (1 - a), bucket i
+holds the values above g^(i-1) up to g^i and answers with 2 g^i / (g + 1), which is within a of each of them. Values
+are int64 nanoseconds, so all of them fit in a fixed column (2,185 buckets and one for zero at 1 %: 17 KB); nothing is
+ever collapsed. Merging adds counts, and gives what one sketch of everything would have given.
 
 No slack is chosen here, and nothing of strandline is imported: the live service and the pass over a capture share it.
 """
@@ -55,8 +55,8 @@ class Buckets:
         powers = self.gamma ** np.arange(last, dtype=np.float64)
         self.upper: Int64s = np.concatenate(([0], powers.astype(np.int64), [VALUE_MAX]))
         self._uppers: list[int] = self.upper.tolist()
-        # Cells: the exponent of a float64 and its first bits. A cell is narrower than a bucket, so at most one bound lies
-        # in it: a look into a table and one comparison find the place, at 4 ns a value (searchsorted over 2,185: 27 ns).
+        # Cells: the exponent of a float64 and its first bits. A cell is narrower than a bucket, so at most one bound
+        # lies in it: a look into a table and one comparison find the place, at 4 ns a value (searchsorted: 27 ns).
         bits = math.ceil(-math.log2(1 - 1 / self.gamma))
         self._shift = 52 - bits
         self._base = (1023 << bits) - 1  # cell 0 is for values of 0 and less

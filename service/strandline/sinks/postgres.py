@@ -138,9 +138,9 @@ class PostgresSink:
     async def _write(self, connection: Connection, lane: Lane, number: int, tables: Sequence[Rows]) -> None:
         """One transaction: the position first, which locks it, then the rows."""
         reached = self._positions[lane]
-        pass
+        await connection.execute("BEGIN")
         place = (self._feed, lane, self._stored[lane])
-        if await connection.execute(self._moving, *place, number, reached) != "UPDATE 1":
+        if await connection.execute(self._moving, *place, number, reached) == "nothing":
             raise self._moved(lane)
         for rows in tables:
             for piece in rows.pieces(ROWS_AT_ONCE):

@@ -1,0 +1,77 @@
+"""The OpenAPI document against a real process: schemathesis makes requests, sound and unsound, and judges the answers.
+
+Its checks ask: no 5xx but a documented one, only documented statuses, content types and headers as documented, bodies
+that keep their schemas, 405 for methods that are not offered, unsound requests refused. Not asked is
+`positive_data_acceptance`: in JSON Schema 1.0 is an integer and any text is a time, and to refuse both is right.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterator
+from typing import Any
+
+import msgspec
+import pytest
+import requests
+import schemathesis
+from helpers_service import FEED, Process, configuration
+from hypothesis import HealthCheck, Phase, settings
+from strandline.openapi import document
+
+EXAMPLES = 60  # of each address, beside schemathesis' own list of cases at the edges; some 25 s in all (measured)
+
+
+def asked() -> Any:
+    """The document with the names of one feed that is there and one that is not: others say no more than the latter."""
+    made = json.loads(msgspec.json.encode(document()))
+    for operations in made["paths"].values():
+        for operation in operations.values():
+            for parameter in operation["parameters"]:
+                if parameter["name"] == "feed":
+                    parameter["schema"] = {"enum": [FEED, FEED, "sea-gauges"]}
+    return made
+
+
+@schemathesis.serializer("application/x-ndjson", "application/jsonl", "application/json-seq", "application/vnd.msgpack")
+def as_it_is(context: schemathesis.SerializationContext, value: Any) -> bytes:
+    """Texts are sent as they are; whatever else is drawn, as JSON."""
+    if isinstance(value, bytes):
+        return value
+    return value.encode("utf-8", "surrogatepass") if isinstance(value, str) else json.dumps(value).encode()
+
+
+schema = schemathesis.openapi.from_dict(asked()).exclude(path="/v1/feeds/{feed}/ordered")  # it has no end
+
+
+@pytest.fixture(scope="module")
+def service(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Process]:
+    folder = tmp_path_factory.mktemp("schemathesis")
+    keys = {"id": "/id", "sources_at_most": 50, "body_bytes_at_most": "64KiB", "keys_at_most": 10}
+    with Process(folder, configuration(folder, **keys)) as process:
+        yield process
+        assert process.document()["ledger"]["balanced"] is True
+        assert "unforeseen" not in process.log.read_text(errors="replace")
+        assert process.terminate() == 0
+
+
+@pytest.fixture(scope="module")
+def session() -> Iterator[requests.Session]:
+    with requests.Session() as session:
+        yield session
+
+
+@schema.parametrize()
+@settings(
+    max_examples=EXAMPLES,
+    phases=[Phase.explicit, Phase.generate],
+    suppress_health_check=list(HealthCheck),
+    database=None,
+    derandomize=True,
+)
+def test_answers_are_as_documented(case: schemathesis.Case, service: Process, session: requests.Session) -> None:
+    case.call_and_validate(
+        base_url=service.url,
+        session=session,
+        excluded_checks=[schemathesis.checks.positive_data_acceptance],
+    )
