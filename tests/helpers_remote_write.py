@@ -134,7 +134,7 @@ Script = Callable[[bytes], str | Told | None]
 @dataclass(slots=True)
 class Served:
     """A model behind HTTP. `script` is asked before each request: None, "ok": answer as the model does; "lose": store
-    it and close the connection; "drop": close it before; (status, text): answer that and store nothing; "hang": store
+    it and close the connection; "lost": store it and answer 500; "drop": close it before; (status, text): answer that and store nothing; "hang": store
     it and never answer. `headers` are sent with each answer, `seen` are the request's."""
 
     model: Model
@@ -152,6 +152,8 @@ class Served:
             request.transport.abort()
             return web.Response()
         status, text = step if isinstance(step, tuple) else self.model.write(body)
+        if step == "lost":
+            status, text = 500, "the answer was lost\n"
         if step == "lose":
             assert request.transport is not None
             request.transport.abort()

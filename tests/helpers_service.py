@@ -66,6 +66,13 @@ def configuration(folder: Path, *, sinks: str = "", top: str = "", more: str = "
     )
 
 
+def small_journal(folder: Path, at_most: str, **keys: object) -> str:
+    """A feed whose journal has segments of 64 KiB, the smallest there are."""
+    limits = dict.fromkeys(("decoded_bytes_at_most", "body_bytes_at_most", "event_bytes_at_most"), "64KiB")
+    more = f'journal = {{ segment_bytes = "64KiB", at_most = "{at_most}" }}'
+    return configuration(folder, more=more, **{**limits, **keys})  # type: ignore[arg-type]
+
+
 def store_in(folder: Path) -> Path:
     """Where the SQLite sink of `configuration` writes."""
     return folder / "river.db"

@@ -210,9 +210,14 @@ class Crowd:
             self._lost(attempt)
 
     @property
+    def left(self) -> int:
+        """Requests that are yet to be answered."""
+        return len(self.requests) - self._next + len(self.again) + len(self.waiting)
+
+    @property
     def finished(self) -> bool:
         """Everything was sent, and nothing is to be sent again or waited for."""
-        return self._next == len(self.requests) and not self.again and not self.waiting
+        return self.left == 0
 
     # ---- for the judge ----------------------------------------------------------------------------------------------
 

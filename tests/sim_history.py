@@ -92,11 +92,7 @@ class History:
 
     def recovered(self, journal: Journal, feed: Feed) -> None:
         """A new process has read the journal back: what was durable is there as it was, what else is there was next."""
-        assert journal.next_lsn >= self.durable_lsn, (
-            f"durable up to {self.durable_lsn}, recovered up to {journal.next_lsn}"
-        )
-        for frame in journal.frames():
-            assert self.records.get(frame.lsn) == (frame.kind, bytes(frame.body)), f"the record at {frame.lsn} changed"
+        self.require_kept(journal)
         kept = {lsn: record for lsn, record in self.records.items() if lsn < journal.next_lsn}
         self.cut_records += len(self.records) - len(kept)
         self.records, self.next_lsn = kept, journal.next_lsn
@@ -107,6 +103,22 @@ class History:
         # Without a record the state is that of the configuration alone.
         same = not self.records or saved_bytes(feed) == saved_bytes(self._folded)
         assert same, "recovered to another state than the records determine"
+
+    def require_kept(self, journal: Journal) -> None:
+        """Assert that a journal holds what was durable, and nothing but what was appended, to the byte."""
+        assert journal.next_lsn >= self.durable_lsn, (
+            f"durable up to {self.durable_lsn}, recovered up to {journal.next_lsn}"
+        )
+        for frame in journal.frames():
+            assert self.records.get(frame.lsn) == (frame.kind, bytes(frame.body)), f"the record at {frame.lsn} changed"
+
+    def folded(self, settings: Settings, until_lsn: int) -> Feed:
+        """A feed that has folded the records up to a position, from the first one on."""
+        feed = Feed(settings)
+        while feed.next_lsn < until_lsn:
+            kind, body = self.records[feed.next_lsn]
+            feed.fold(kind, VERSION, body, feed.next_lsn)
+        return feed
 
     # ---- the fold without snapshots ---------------------------------------------------------------------------------
 

@@ -51,14 +51,14 @@ class Scenario:
         """A configuration; what cannot change while the service runs stays as it was `before`."""
         choice = self.chance.choice
         chosen: dict[str, object] = {
-            "slack_ns": choice((0, 10**7, 5 * 10**8, 2 * SECOND_NS)),
-            "idle_after_ns": choice((10**7, 3 * 10**8, 2 * SECOND_NS, 30 * SECOND_NS)),
-            "hold_at_most_ns": choice((10**7, 5 * 10**8, 3 * SECOND_NS, 20 * SECOND_NS)),
+            "slack_ns": choice((0, 10**7, 5 * 10**8, 2 * SECOND_NS, 6 * SECOND_NS, 20 * SECOND_NS)),
+            "idle_after_ns": choice((10**7, 3 * 10**8, 2 * SECOND_NS, 30 * SECOND_NS, 30 * SECOND_NS)),
+            "hold_at_most_ns": choice((10**7, 3 * SECOND_NS, 20 * SECOND_NS, 20 * SECOND_NS)),
             "ahead_limit_ns": choice((0, 5 * 10**8, 5 * SECOND_NS, FOR_EVER_NS)),
-            "clock": choice(("event", "event", "event", "arrival")),
+            "clock": choice(("event", "event", "event", "event", "arrival")),
             "expect_sources": choice(((), (), ("gauge-00",), ("gauge-01", "never-heard"))),
-            "held_events_at_most": choice((6, 10, 10_000)),
-            "undelivered_events_at_most": choice((1, 2, 5, 10_000)),
+            "held_events_at_most": choice((6, 10, 10_000, 10_000)),
+            "undelivered_events_at_most": choice((1, 2, 5, 20, 10_000, 10_000)),
             "sources_at_most": choice((2, 10_000, 10_000, 10_000)),
             "batch_events_at_most": choice((1, 2, 3, 50_000)),
             **self.fixed,

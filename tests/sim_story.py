@@ -11,6 +11,7 @@ from pathlib import Path
 
 import numpy as np
 from sim_clients import Habits
+from sim_loop import PowerCut
 from sim_scenario import FEED, FOR_EVER_NS, SECOND_NS, Scenario
 from sim_stores import ReceiverConfig
 from sim_verdict import judge_stores
@@ -64,27 +65,49 @@ class Story(World):
             request.repeats = True
 
     def start(self) -> None:
-        """A new life, up and working unless a store hangs."""
+        """A new life, up and working unless a store hangs or the disk fails."""
         self._start()
         self.work()
+
+    def require_up(self) -> None:
+        """Start again where the process has ended; a disk that fails does so at the first try only."""
+        for _ in range(3):
+            if self.process is None:
+                self.start()
 
     def work(self, rounds: int = 1, seconds: float = 0.0) -> None:
         """Everything that can run does, after each passing of time, with a tick."""
         for _ in range(rounds):
-            self.pass_time(seconds)
-            assert self.loop is not None and self.process is not None
-            self.loop.work_off()
-            self._tick(self.process)
-            self.loop.work_off()
-            self._look()
+            self.work_only(seconds)
+            if self.process is not None and self.loop is not None:
+                self._tick(self.process)
+                self._run_all()
+
+    def work_only(self, seconds: float = 0.0) -> None:
+        """Everything that can run without a tick."""
+        self.pass_time(seconds)
+        self._run_all()
 
     def send(self, requests: int = 1) -> None:
         """The next requests, answered or refused if the disk lets them."""
         for _ in range(requests):
-            assert self.process is not None and self.loop is not None
-            self._send(self.process)
+            if self.process is not None:
+                self._send(self.process)
+                self._run_all()
+
+    def _run_all(self) -> None:
+        if self.loop is None:
+            return
+        try:
             self.loop.work_off()
             self._look()
+        except PowerCut:
+            self._die(power=True)
+
+    def stop(self) -> None:
+        """An orderly stop."""
+        if self.process is not None:
+            self._stop(self.process)
 
     def die(self, *, power: bool = False) -> None:
         """The process is gone."""

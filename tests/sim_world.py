@@ -130,13 +130,18 @@ class World:
 
     # ---- lives ------------------------------------------------------------------------------------------------------
 
-    def _start(self) -> None:
+    def _weather(self) -> Weather:
+        """What befalls the next life from its first operation on."""
         weather = Weather(self.chance)
         weather.starved = self.disk.capacity_bytes is not None
         if not self._calm and self.chance.random() < 0.25:
             weather.dies_in = 1 + self.choose(25)  # while it starts
         if not self._calm and self.chance.random() < 0.1:
             weather.error_share = 0.1
+        return weather
+
+    def _start(self) -> None:
+        weather = self._weather()
         if self.chance.random() < 0.3:
             self.config = self.scenario.feed(self.folder, self.config)
         self.loop = SimLoop(lambda: self.mono_ns / 1e9)
@@ -303,26 +308,34 @@ class World:
             weather.store_fails_in = None
 
     def _live_on(self) -> None:
-        """Rounds in which everybody does what there is to do, until there is nothing more."""
-        step_s = max(1.0, self.config.hold_at_most_ns / 3e9, self.config.idle_after_ns / 3e9)
-        for _ in range(ROUNDS_AT_MOST):
-            self.pass_time(step_s)
+        """Rounds in which everybody does what there is to do, until there is nothing more.
+
+        Time goes slowly while senders get on, else in steps that take it past holds, silences and rests soon.
+        """
+        leap_s = max(1.0, self.config.hold_at_most_ns / 3e9, self.config.idle_after_ns / 3e9)
+        left = self.crowd.left
+        for number in range(ROUNDS_AT_MOST):
+            self.pass_time(0.05 if self.crowd.left < left else leap_s)
+            left = self.crowd.left
             if self.process is None:
                 self._start()
                 continue
-            for _ in range(3):
-                self._send(self.process)
-            while self.stores.hanging:
-                self.stores.let_go(self.choose)
-            assert self.loop is not None
-            self.loop.work_off()
-            self._tick(self.process)
-            self.loop.work_off()
-            self._look()
+            self._round(self.process)
             if self.process is not None and self._quiet(self.process):
-                self.tally.counts["rounds to quiet"] += _
+                self.tally.counts["rounds to quiet"] += number
                 return
         raise AssertionError(f"not quiet after {ROUNDS_AT_MOST} rounds: {self._unrest()}")
+
+    def _round(self, process: Process) -> None:
+        assert self.loop is not None
+        for _ in range(3):
+            self._send(process)
+        while self.stores.hanging:
+            self.stores.let_go(self.choose)
+        self.loop.work_off()
+        self._tick(process)
+        self.loop.work_off()
+        self._look()
 
     def _quiet(self, process: Process) -> bool:
         if not process.up or not self.crowd.finished:

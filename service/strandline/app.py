@@ -124,23 +124,26 @@ class Service:
         self._ticker = asyncio.create_task(self._tick())
         app = make_app(self.config, self.feeds)
         app.on_shutdown.append(self._hush)
-        limits = self.config.limits
-        # Bodies are decompressed by our own code, within limits; a client that is gone ends its handler.
-        self._runner = web.AppRunner(
-            app, auto_decompress=False, handler_cancellation=True, access_log=None,
-            shutdown_timeout=SHUTDOWN_WITHIN_S, keepalive_timeout=limits.idle_connection_within_ns / 1e9,
-        )  # fmt: skip
+        await self._listen(app)
+        log.info("listening on http://%s", self.address)
+
+    async def _listen(self, app: web.Application) -> None:
+        limits, listen = self.config.limits, self.config.listen
+        # A client that is gone ends its handler.
+        self._runner = web.AppRunner(app, handler_cancellation=True, shutdown_timeout=SHUTDOWN_WITHIN_S)
         await self._runner.setup()
         server = self._runner.server
         assert server is not None
-        self._listener = await asyncio.get_running_loop().create_server(
-            Connections(server, make_room_for(limits.connections_at_most)),
-            self.config.listen.host,
-            self.config.listen.port,
-            backlog=BACKLOG,
+        connections = Connections(
+            server,
+            make_room_for(limits.connections_at_most),
+            access_log=None,
+            auto_decompress=False,  # bodies are decompressed by our own code, within limits
+            keepalive_timeout=limits.idle_connection_within_ns / 1e9,
         )
-        self.address = Address(self.address.host, int(self._listener.sockets[0].getsockname()[1]))
-        log.info("listening on http://%s", self.address)
+        loop = asyncio.get_running_loop()
+        self._listener = await loop.create_server(connections, listen.host, listen.port, backlog=BACKLOG)
+        self.address = Address(listen.host, int(self._listener.sockets[0].getsockname()[1]))
 
     async def _hush(self, app: web.Application) -> None:
         del app

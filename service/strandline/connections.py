@@ -9,10 +9,13 @@ from __future__ import annotations
 import asyncio
 import logging
 import resource
-from typing import cast
+from http import HTTPStatus
+from typing import Any, cast
 
 import msgspec
 from aiohttp import web
+
+from .problems import problem
 
 log = logging.getLogger(__name__)
 # For segments, stores and programs' own files: each feed maps up to 64 segments, and each sink opens a few.
@@ -37,10 +40,13 @@ def make_room_for(connections: int) -> int:
 
 
 class Connections:
-    """Called for each new connection: makes aiohttp's protocol for it, or one that refuses it."""
+    """Called for each new connection: makes the protocol that serves it, or one that refuses it.
 
-    def __init__(self, server: web.Server, at_most: int) -> None:
-        self._server, self._at_most = server, at_most
+    `options` are those of aiohttp's `web.RequestHandler`.
+    """
+
+    def __init__(self, server: web.Server, at_most: int, **options: Any) -> None:
+        self._server, self._at_most, self._options = server, at_most, options
         self.refused = 0
         self._is_full = False
 
@@ -49,12 +55,34 @@ class Connections:
             if self._is_full:
                 log.warning("connections are taken again; %d were refused since the start", self.refused)
                 self._is_full = False
-            return cast(asyncio.Protocol, self._server())
+            return cast(asyncio.Protocol, _Handler(self._server, loop=asyncio.get_running_loop(), **self._options))
         if not self._is_full:
             log.warning("there are %d connections (connections_at_most): further ones are refused", self._at_most)
             self._is_full = True
         self.refused += 1
         return _Refusal(self._at_most)
+
+
+class _Handler(web.RequestHandler):
+    """Answers what is no HTTP with problem details too, and keeps it out of the log, which strangers must not fill."""
+
+    __slots__ = ()
+
+    def handle_error(
+        self,
+        request: web.BaseRequest,
+        status: int = 500,
+        exc: BaseException | None = None,
+        message: str | None = None,
+    ) -> web.StreamResponse:
+        """The answer to a request that no handler saw. Raises ConnectionError where an answer has begun."""
+        if status >= 500 or request.writer.output_size:
+            return super().handle_error(request, status, exc, message)
+        log.debug("what came from %s cannot be read: %s", request.remote, message)
+        why = (message or "").partition("\n")[0].strip(" :")[:200]
+        answer = problem(status, HTTPStatus(status).phrase, f"the request cannot be read: {ascii(why)[1:-1]}")
+        answer.force_close()
+        return answer
 
 
 class _Refusal(asyncio.Protocol):

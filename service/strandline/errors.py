@@ -76,6 +76,10 @@ class JournalError(StrandlineError):
     """The journal on disk cannot be read; the text names file, position and what to do."""
 
 
+class CaptureError(StrandlineError):
+    """A capture cannot be read, or nothing can be captured; the text names file and byte and what to do."""
+
+
 class JournalFull(StrandlineError):
     """No room can be reserved; nothing was written. `reason` is a key of REFUSALS."""
 

@@ -54,7 +54,7 @@ class Housekeeper:
                 f"{self._journal.first_lsn}; restore the folder from a copy"
             )
         folded = 0
-        for frame in self._journal.frames(self._feed.next_lsn):
+        for frame in self._journal.frames(self._feed.next_lsn, known=True):
             self._feed.fold(frame.kind, frame.version, frame.body, frame.lsn)
             folded += 1
         if self._retention.retain_ns:
@@ -65,7 +65,7 @@ class Housekeeper:
 
     def _begun_ns(self, first_lsn: int) -> int:
         """Arrival clock of the first record at or behind a position that has one."""
-        instants = (instant_of(frame.kind, frame.body) for frame in self._journal.frames(first_lsn))
+        instants = (instant_of(frame.kind, frame.body) for frame in self._journal.frames(first_lsn, known=True))
         return next((instant for instant in instants if instant is not None), self._clock.now_ns())
 
     def due(self, segment_bytes: int) -> bool:

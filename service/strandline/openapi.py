@@ -16,13 +16,11 @@ from .ingest.endpoint import Excuse, Promise
 from .ingest.formats import FORMATS
 
 Json = dict[str, Any]
-# An item that is no event is a fault in the answer, so it is no matter of these schemas.
-_TEXT: Json = {"type": "string"}
+# A schema describes JSON; an item that is no event is a fault in the answer, so it is no matter of these schemas.
 _BODIES: dict[str, Json] = {
     "application/json": {"type": ["object", "array"]},
     "application/cloudevents+json": {"type": "object"},
     "application/cloudevents-batch+json": {"type": "array"},
-    "application/vnd.msgpack": {"type": "string", "format": "binary"},
 }
 _FEED: Json = {
     "name": "feed",
@@ -38,7 +36,7 @@ _KEY: Json = {
     "in": "header",
     "required": False,
     "description": "a text in double quotes that a retry repeats: it is then answered as the first request was",
-    "schema": {"type": "string"},
+    "schema": {"type": "string", "pattern": '^"([ !#-\\[\\]-~]|\\\\["\\\\]){1,1024}"$'},
 }
 
 
@@ -94,7 +92,7 @@ def _act(summary: str, schema: str | None) -> Json:
 
 
 def _events() -> Json:
-    content = {name: {"schema": _BODIES.get(name, _TEXT) | {"description": form.what}} for name, form in FORMATS.items()}
+    content = {name: {"schema": _BODIES.get(name, {}) | {"description": form.what}} for name, form in FORMATS.items()}
     return {
         "post": {
             "summary": "Send events; answered once all of them are durable",

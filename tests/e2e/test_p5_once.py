@@ -28,7 +28,8 @@ async def test_with_a_key_each_request_counts_once(tmp_path: Path) -> None:
     sinks = "\n".join(
         [
             f'[[feed.sink]]\nkind = "sqlite"\npath = {json.dumps(str(store_in(tmp_path)))}',
-            f'[[feed.sink]]\nkind = "ndjson"\ndirectory = {json.dumps(str(files))}\nroll_bytes = "64KiB"\nroll_every = "1s"',
+            f'[[feed.sink]]\nkind = "ndjson"\ndirectory = {json.dumps(str(files))}',
+            'roll_bytes = "64KiB"\nroll_every = "1s"',
         ]
     )
     with Process(tmp_path, fixed_port(tmp_path, slack="10s", sinks=sinks)) as process:

@@ -6,18 +6,21 @@ nothing that it answered, its memory does not grow, and when what filled it goes
 
 from __future__ import annotations
 
+import contextlib
 import gzip
 import json
+import socket
 import sqlite3
 from collections.abc import Callable, Iterator
 from contextlib import closing
 from pathlib import Path
 
 import pytest
-from helpers_service import Answer, Process, body_of, event_line, events, problem_of, retry_after
+from helpers_service import NDJSON, Answer, Process, body_of, event_line, events, problem_of, retry_after
 from strandline.config_model import Config, Feed, Journal, Limits
 
 KIB = 1024
+CONNECTIONS = 20
 FEEDS: dict[str, dict[str, object]] = {
     "held": {"held_events_at_most": 100, "events_at_most": 100, "slack": "1h"},
     "undelivered": {"undelivered_events_at_most": 100, "batch_events_at_most": 100},
@@ -31,6 +34,9 @@ FEEDS: dict[str, dict[str, object]] = {
     "lanes": {"lanes_at_most": "1MiB"},
     "keys": {"keys_at_most": 2},
     "ids": {"id": "/id", "id_window_events": 1000},
+    "faults": {"faults_at_most": 2},
+    "batch-bytes": {"batch_bytes_at_most": "1KiB", "slack": "1h"},
+    "connections": {},
     "journal": {
         **dict.fromkeys(("decoded_bytes_at_most", "body_bytes_at_most", "event_bytes_at_most"), "64KiB"),
         "journal": {"segment_bytes": "64KiB", "at_most": "256KiB"},
@@ -46,7 +52,12 @@ def toml(value: object) -> str:
 
 def text_of(folder: Path) -> str:
     """One feed for each limit, each with a store of its own."""
-    lines = ['listen = "127.0.0.1:0"', f"data_dir = {toml(str(folder / 'data'))}", "[limits]", "bodies_at_most = 3"]
+    lines = [
+        'listen = "127.0.0.1:0"',
+        f"data_dir = {toml(str(folder / 'data'))}",
+        "[limits]",
+        f"connections_at_most = {CONNECTIONS}",
+    ]
     for name, keys in FEEDS.items():
         usual = {"slack": "0s", "idle_after": "1h", "hold_at_most": "1h", "source": "/station", "name": name}
         lines += ["[[feed]]", 'time = { at = "/observed_at", unit = "rfc3339" }']
@@ -211,11 +222,58 @@ def journal_at_most(feed: One, process: Process) -> None:
         start = 1
         while feed.post(events(range(start, start + 100))).status == 200:
             start += 100
-        assert "journal.at_most" in feed.refuses(events([start]), 429, "journal_full")
+        more = events(range(start, start + 100))
+        assert "journal.at_most" in feed.refuses(more, 429, "journal_full")
         used = sum(each.stat().st_size for each in (process.folder / "data" / "feeds" / feed.name).glob("*.seg"))
         assert used <= 256 * KIB
         locker.execute("ROLLBACK")
-    process.until(lambda: feed.post(events([start])).status == 200, "it takes events again")
+    process.until(lambda: feed.post(more).status == 200, "it takes events again")
+
+
+def faults_at_most(feed: One, process: Process) -> None:
+    assert feed.post(body_of(b"{", event_line(1), b"{")).json["quarantined"] == 2
+    feed.refuses(body_of(b"{", event_line(1), b"{", b"{"), 422, "too_many_faults")
+
+
+def batch_bytes_at_most(feed: One, process: Process) -> None:
+    lines = [event_line(second, pad="x" * 300) for second in range(20)]
+    assert feed.post(body_of(*lines, event_line(20, pad="x" * 5000))).status == 200
+    feed.drain()
+    process.until(lambda: feed.rows() == 21, "all is released")
+    sizes = "SELECT sum(length(event)) AS size, count(*) AS n FROM events GROUP BY batch"
+    assert feed.rows(f"SELECT max(size) FROM ({sizes}) WHERE n > 1") <= KIB
+    assert feed.rows(f"SELECT max(size) FROM ({sizes}) WHERE n = 1") > 5000, "a longer event is a batch of its own"
+
+
+def connections_at_most(feed: One, process: Process) -> None:
+    """One connection too many is told so and closed; those that are there go on."""
+    host, port = process.url.removeprefix("http://").split(":")
+    with contextlib.ExitStack() as stack:
+
+        def connect() -> socket.socket:
+            return stack.enter_context(socket.create_connection((host, int(port)), timeout=30))
+
+        first, told = connect(), b""
+        for _ in range(CONNECTIONS + 5):
+            told = refusal(connect())
+            if told:
+                break
+        head, _, body = told.partition(b"\r\n\r\n")
+        assert head.startswith(b"HTTP/1.1 503 ") and b"\r\nRetry-After: " in head
+        assert "connections_at_most" in json.loads(body)["detail"]
+        body = events([1])
+        head = f"POST /v1/feeds/{feed.name}/events HTTP/1.1\r\nHost: a\r\nContent-Type: {NDJSON}\r\n".encode()
+        first.sendall(head + f"Content-Length: {len(body)}\r\n\r\n".encode() + body)
+        assert first.recv(100).startswith(b"HTTP/1.1 200 ")
+        feed.answered += 1
+    process.until(lambda: process.status("/health/ready") == 200, "there is room again")
+
+
+def refusal(connection: socket.socket) -> bytes:
+    """What a new connection is told unasked; nothing where it may stay, which shows by its being asked for."""
+    connection.sendall(b"GET /health/live HTTP/1.1\r\nHost: a\r\n\r\n")
+    told = connection.recv(4096)
+    return b"" if told.startswith(b"HTTP/1.1 200 ") else told
 
 
 def keys_at_most(feed: One, process: Process) -> None:
@@ -237,9 +295,8 @@ def id_window_events(feed: One, process: Process) -> None:
         lines = (event_line(second, id=second) for second in range(start, start + 500))
         assert feed.post(body_of(*lines)).json["duplicate"] == 0
         assert feed.document["repeats"]["identities_known"] <= 2000
-    assert (
-        feed.post(body_of(*(event_line(second, id=second) for second in range(4000, 5000)))).json["duplicate"] == 1000
-    )
+    again = body_of(*(event_line(second, id=second) for second in range(4000, 5000)))
+    assert feed.post(again).json["duplicate"] == 1000
     assert feed.post(body_of(event_line(5000, id=1))).json["duplicate"] == 0
 
 
@@ -255,6 +312,9 @@ ATTACKS: dict[str, tuple[str, Callable[[One, Process], None]]] = {
     "nesting_at_most": ("nesting", nesting_at_most),
     "lanes_at_most_bytes": ("lanes", lanes_at_most),
     "at_most_bytes": ("journal", journal_at_most),
+    "faults_at_most": ("faults", faults_at_most),
+    "batch_bytes_at_most": ("batch-bytes", batch_bytes_at_most),
+    "connections_at_most": ("connections", connections_at_most),
     "keys_at_most": ("keys", keys_at_most),
     "id_window_events": ("ids", id_window_events),
 }

@@ -19,21 +19,28 @@ from helpers_service import FEED, Process, configuration
 from hypothesis import HealthCheck, Phase, settings
 from strandline.openapi import document
 
-EXAMPLES = 60  # of each address, beside schemathesis' own list of cases at the edges; some 25 s in all (measured)
+EXAMPLES = 120  # of each address, beside schemathesis' own list of cases at the edges; some 25 s in all (measured)
+TEXTS = ("application/x-ndjson", "application/jsonl", "application/json-seq", "application/vnd.msgpack")
+
+
+EVENT = {"observed_at": {"type": "string"}, "station": {"type": ["string", "integer"]}, "id": {"type": "string"}}
 
 
 def asked() -> Any:
-    """The document with the names of one feed that is there and one that is not: others say no more than the latter."""
+    """The document with the name of the feed that is there, and with what the bodies of lines may look like."""
     made = json.loads(msgspec.json.encode(document()))
     for operations in made["paths"].values():
         for operation in operations.values():
             for parameter in operation["parameters"]:
                 if parameter["name"] == "feed":
-                    parameter["schema"] = {"enum": [FEED, FEED, "sea-gauges"]}
+                    parameter["schema"] = {"enum": [FEED]}
+    content = made["paths"]["/v1/feeds/{feed}/events"]["post"]["requestBody"]["content"]
+    for name in TEXTS:
+        content[name]["schema"] = {"anyOf": [{}, {"type": "object", "properties": EVENT, "required": list(EVENT)}]}
     return made
 
 
-@schemathesis.serializer("application/x-ndjson", "application/jsonl", "application/json-seq", "application/vnd.msgpack")
+@schemathesis.serializer(*TEXTS)
 def as_it_is(context: schemathesis.SerializationContext, value: Any) -> bytes:
     """Texts are sent as they are; whatever else is drawn, as JSON."""
     if isinstance(value, bytes):

@@ -9,6 +9,7 @@ from pathlib import Path
 from sim_process import seams
 from sim_scenario import SECOND_NS
 from sim_story import Story
+from strandline.config_model import Journal
 
 
 @contextmanager
@@ -38,4 +39,32 @@ def test_a_store_that_answers_before_the_start_lets_nothing_be_released(tmp_path
         story.start()
         story.pass_time(6)  # the store is not waited for any longer
         story.work()
+        story.finish()
+
+
+def test_files_that_were_fetched_before_a_crash_are_not_repeated_in_part(tmp_path: Path) -> None:
+    """P5: whoever fetches files tells a repeat by the numbers in the names, so no file may hold new batches behind
+    ones that an earlier file may have held."""
+    events = [(0, float(second)) for second in range(6)]
+    with told(Story(tmp_path, events, sinks=("files",), batch_events_at_most=1)) as story:
+        story.start()
+        story.send(2)
+        story.work_only(seconds=2)  # without a tick: that the files are complete is told, and not synced yet
+        story.work_only()
+        assert len(list((tmp_path / "files").glob("*ordered*.ndjson"))) == 1
+        story.stores.collect()
+        story.die()
+        story.start()
+        story.send(2)
+        story.work(3, seconds=2)
+        story.finish()
+
+
+def test_a_request_larger_than_the_spare_segment_is_taken_once_room_was_made(tmp_path: Path) -> None:
+    """P7: room is short where somebody was refused for want of it, also while a spare segment lies ready: it may be
+    too small. And spares that are too small must not take the room of the one that is needed."""
+    events = [(0, second / 10) for second in range(200)]
+    journal = Journal(264, 6400)
+    with told(Story(tmp_path, events, journal=journal, events_a_request=5)) as story:
+        story.start()
         story.finish()

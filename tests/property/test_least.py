@@ -101,8 +101,8 @@ def test_sources_do_what_a_dictionary_of_them_would(history: list[tuple[object, 
                     one = plain[number]
                     plain[number] = Plain(max(one.newest, time), now_ns, True, False)
             case ("promise", int(number), int(time)):
-                sources.promise(number, time, now_ns)
-                plain[number] = Plain(max(plain[number].newest, time), now_ns, True, False)
+                sources.promise(number, time, now_ns, slack_ns=3)
+                plain[number] = Plain(max(plain[number].newest, min(time + 3, NONE - 1)), now_ns, True, False)
             case ("excuse", int(number)):
                 sources.excuse(number)
                 plain[number].excused = True
@@ -189,9 +189,11 @@ def test_arrivals_know_when_each_held_event_came(steps: list[tuple[int, int]], r
         if out:
             refs = np.zeros(len(out), dtype=REF)
             refs["place"] = [place for place, _ in out]
-            came, counts = arrivals.release(refs)
+            instants, counts = arrivals.release(refs)
             released = Counter(came_ns for _, came_ns in out)
-            assert {when: many for when, many in zip(came.tolist(), counts.tolist(), strict=True) if many} == released
+            assert {
+                when: many for when, many in zip(instants.tolist(), counts.tolist(), strict=True) if many
+            } == released
         if now_ns == restore_at:
             restored = Arrivals()
             restored.restore(*arrivals.columns())
@@ -200,3 +202,14 @@ def test_arrivals_know_when_each_held_event_came(steps: list[tuple[int, int]], r
         oldest = min(held, default=None)
         assert arrivals.oldest_ns == (oldest and oldest[1])
         assert arrivals.oldest_place == (oldest and oldest[0] - oldest[0] % 10)
+
+
+def test_a_release_of_few_events_does_not_walk_over_the_arrivals_between_them() -> None:
+    arrivals = Arrivals()
+    for now_ns in range(10_000):
+        arrivals.note(now_ns * 100, now_ns, 2)
+    refs = np.zeros(3, dtype=REF)
+    refs["place"] = 0, 500_000, 999_900
+    came_ns, counts = arrivals.release(refs)
+    assert came_ns.tolist() == [0, 5000, 9999] and counts.tolist() == [1, 1, 1]
+    arrivals.check(19_997)

@@ -191,9 +191,8 @@ def test_every_value_reaches_settings_and_limits() -> None:
             'feed[1].sink[1].kind of "river-gauges" is missing: one of sqlite, ndjson',
         ),
         (FEED + "[[feed.sink]]\nkind = 'sqlite'\nname = 'lanes'", "is a name that the service uses itself"),
-        (FEED + "[[feed.sink]]\nkind = 'sqllite'", "is none of sqlite, ndjson; did you mean sqlite?"),
-        (FEED + "[[feed.sink]]\nkind = 'postgres'", '= "postgres" is not in this version yet: one of sqlite, ndjson'),
-        (FEED + "[[feed.sink]]\nkind = 'remote_write'\nurl = 'x'", "is not in this version yet"),
+        (FEED + "[[feed.sink]]\nkind = 'sqllite'", "remote_write; did you mean sqlite?"),
+        (FEED + "[[feed.sink]]\nkind = 'parchment'", '= "parchment" is none of sqlite, ndjson, postgres, http, rem'),
         (
             FEED + "[[feed.sink]]\nkind = 'sqlite'\n[[feed.sink]]\nkind = 'sqlite'\npath = 'b.db'",
             'feed[1].sink[2].name of "river-gauges" = "sqlite" is the name of feed[1].sink[1]',
@@ -247,7 +246,7 @@ def test_all_faults_are_named_at_once() -> None:
     kind = "ndjson"
     roll_every = "1ns"
     [[feed.sink]]
-    kind = "http"
+    kind = "https"
     [[feed]]
     hold_at_most = "1s"
     [[feed]]
@@ -316,9 +315,13 @@ def test_sinks_of_one_feed_and_of_several() -> None:
 def test_each_kind_of_sink_can_be_made() -> None:
     """The names of kinds and of their options are the ones that `strandline.sinks` knows."""
     assert config_model.SINK_KINDS.keys() == sinks.SINK_KINDS.keys()
-    text = "".join(f"[[feed.sink]]\nkind = '{kind}'\n" for kind in config_model.SINK_KINDS)
+    needed = {
+        "http": "url = 'http://localhost/'",
+        "remote_write": "url = 'http://localhost/'\nseries = [ { name = 'level', value = '/level' } ]",
+    }
+    text = "".join(f"[[feed.sink]]\nkind = '{kind}'\n{needed.get(kind, '')}\n" for kind in config_model.SINK_KINDS)
     for sink in feed_of(FEED + text).sinks:
-        assert sinks.make_sink(sink.kind, "river-gauges", SystemClock(), **sink.options()).lanes == ("ordered", "late")
+        assert sinks.make_sink(sink.kind, "river-gauges", SystemClock(), **sink.options()).lanes[0] == "ordered"
 
 
 def test_feeds_may_share_a_place_of_one_kind() -> None:

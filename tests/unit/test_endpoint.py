@@ -294,6 +294,16 @@ async def test_an_excused_source_holds_nothing_until_it_speaks(tmp_path: Path) -
         assert "gw-7" in problem_of(await service.post("excuse", {"source": "gw-7"}), 404)
 
 
+async def test_a_drain_of_nothing_is_answered_too(tmp_path: Path) -> None:
+    """It leaves no record, so no sync comes after it: what is to be answered is durable already."""
+    async with running(configuration(tmp_path)) as service:
+        for _ in range(2):
+            assert (await service.post("drain")).status == 204
+        await service.send([1])
+        await eventually(lambda: service.runtime.journal.durable_lsn == service.runtime.feed.next_lsn)
+        assert (await service.post("drain")).status == 204
+
+
 async def test_a_drain_releases_all_in_order_and_what_is_older_is_late(tmp_path: Path) -> None:
     async with running(configuration(tmp_path, slack="1h")) as service:
         await service.send([5, 1, 9])

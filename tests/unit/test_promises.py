@@ -81,3 +81,15 @@ def test_a_source_that_was_never_heard_can_promise() -> None:
     feed.check()
     assert feed.state.sources.names == ["weir", "mill", "ford"]
     assert feed.snapshot(NOW).sources_active == 3
+
+
+def test_a_promise_lets_the_watermark_go_right_up_to_it() -> None:
+    settings = Settings("gauges", slack_ns=50 * SECOND_NS, idle_after_ns=3600 * SECOND_NS)
+    feed = Feed(settings)
+    feed.start(NOW, {})
+    send(feed, [(990, 0)], ("weir",))
+    assert feed.state.watermark_ns == 940 * SECOND_NS
+    feed.promise("weir", 991 * SECOND_NS, NOW, 2)
+    feed.check()
+    assert feed.state.watermark_ns == 991 * SECOND_NS, "no slack is needed behind a promise"
+    assert released(feed) == [990]

@@ -16,18 +16,21 @@ from pathlib import Path
 import pytest
 from helpers_delivery import ScriptedSink
 from helpers_faulty import FaultyDisk, planted, scripted
-from helpers_service import PROBLEM, Process, config_of, configuration, events, eventually, running, store_in, stored
+from helpers_service import (
+    PROBLEM,
+    Process,
+    config_of,
+    configuration,
+    events,
+    eventually,
+    running,
+    small_journal,
+    store_in,
+    stored,
+)
 from strandline import runtime as runtime_module
 from strandline.app import EXIT_AT_ONCE, EXIT_FAILED, Service, serve
 from strandline.errors import SinkRetry
-
-
-def small_journal(folder: Path, at_most: str, **keys: object) -> str:
-    """A feed whose journal has segments of 64 KiB, the smallest there are."""
-    limits = dict.fromkeys(("decoded_bytes_at_most", "body_bytes_at_most", "event_bytes_at_most"), "64KiB")
-    more = f'journal = {{ segment_bytes = "64KiB", at_most = "{at_most}" }}'
-    return configuration(folder, more=more, **{**limits, **keys})  # type: ignore[arg-type]
-
 
 # ---- a write that fails is final ------------------------------------------------------------------------------------
 

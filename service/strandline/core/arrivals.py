@@ -50,9 +50,13 @@ class Arrivals:
         known = self._places[self._start : self._stop]
         index = np.searchsorted(known, places[starts], side="right") - 1
         low = int(index.min())
-        counts = np.bincount(index - low, weights=lengths).astype(np.int64)
-        came = self._arrived[self._start + low : self._start + low + len(counts)].copy()
-        self._held[self._start + low : self._start + low + len(counts)] -= counts
+        rows, which = np.arange(low, int(index.max()) + 1), index - low
+        if len(rows) > 64 + 4 * len(index):  # few lines of arrivals far apart: leave out those between them
+            rows, which = np.unique(index, return_inverse=True)
+        counts = np.bincount(which, weights=lengths).astype(np.int64)
+        rows += self._start
+        came = self._arrived[rows]
+        self._held[rows] -= counts
         while self._start < self._stop:  # by blocks, each arrival passed once
             block = self._held[self._start : min(self._start + 256, self._stop)]
             holding = np.flatnonzero(block)

@@ -325,7 +325,10 @@ class Feed:
         self._hold = hold_of(self.state, self._hold, now)
         if sync:
             self._asked_lsn = self.next_lsn
-            effects.append(Sync(self.next_lsn))
+            if self.next_lsn > self.durable_lsn:
+                effects.append(Sync(self.next_lsn))
+            else:  # nothing was recorded, so no sync will come that could let go what waits
+                effects += self.synced(self.durable_lsn)
         return effects
 
     # ---- observers ------------------------------------------------------------------------------------------------

@@ -24,6 +24,7 @@ FRAME_HEADER_BYTES = 16
 VERSION = 1
 # arrived_ns, events, faults, flags, bytes of the faults' table, bytes of the payload
 _ARRIVAL = struct.Struct("<qIIIIQ")
+ARRIVAL_FIXED_BYTES = _ARRIVAL.size
 # decided_ns, watermark_ns, first batch, events a batch, source, cause, bytes a batch
 _MARK = struct.Struct("<qqQIIBxxxI")
 SMALL_EVENTS = 64  # columns up to this length are copied together: a memoryview costs as much as copying 3 kB
@@ -189,6 +190,11 @@ _KIND_OF = {struct_type: kind for kind, struct_type in SMALL_KINDS.items()}
 _pack = msgspec.msgpack.Encoder().encode
 _unpack_faults = msgspec.msgpack.Decoder(list[FaultRow]).decode
 _unpack_small = {kind: msgspec.msgpack.Decoder(struct_type).decode for kind, struct_type in SMALL_KINDS.items()}
+
+
+def decode_faults(table: Buffer) -> list[FaultRow]:
+    """The table of an arrival's faulty lines. Raises msgspec.DecodeError or ValidationError."""
+    return _unpack_faults(table)
 
 
 def encode_small(record: SmallRecord) -> tuple[Kind, bytes]:

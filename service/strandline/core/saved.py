@@ -62,7 +62,7 @@ def save(state: State) -> list[Buffer]:
     sources = state.sources
     for column in (
         *(sources.newest, sources.heard, sources.active, sources.excused),
-        *(sources.promised, sources.broken),
+        *(sources.vouched, sources.promised, sources.broken),
     ):
         columns.put(column[:count].copy())
     for column in state.arrivals.columns():
@@ -128,8 +128,8 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
         state.slack.restore(header["slack"])
     newest, heard = columns.get(np.int64), columns.get(np.int64)
     active, excused = columns.get(np.bool_), columns.get(np.bool_)
-    promised, broken = columns.get(np.int64), columns.get(np.int64)
-    state.sources.restore(header["names"], newest, heard, active, excused, promised, broken, header["newest_ns"])
+    words = [columns.get(np.int64) for _ in range(3)]
+    state.sources.restore(header["names"], newest, heard, active, excused, *words, header["newest_ns"])
     state.arrivals.restore(columns.get(np.int64), columns.get(np.int64), columns.get(np.int64))
     state.seen.restore(columns.get(np.uint64), columns.get(np.uint64))
     for key, fingerprint, outcome, arrived_ns, end_lsn in header["keys"]:

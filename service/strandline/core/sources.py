@@ -29,6 +29,8 @@ class Sources:
         self.heard: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # arrival clock of its last word
         self.active: NDArray[np.bool_] = np.empty(0, dtype=np.bool_)
         self.excused: NDArray[np.bool_] = np.empty(0, dtype=np.bool_)
+        # What counts for the watermark where it is later than `newest`: a promise, plus the slack that will be taken off.
+        self.vouched: NDArray[np.int64] = np.empty(0, dtype=np.int64)
         self.promised: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # nothing older was to come; NEVER: no promise
         self.broken: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # events that came older than promised
         self.newest_ns = NEVER  # newest event time over all sources
@@ -50,6 +52,7 @@ class Sources:
             self.heard = _grown(self.heard, size, NEVER)
             self.active = _grown(self.active, size, False)
             self.excused = _grown(self.excused, size, False)
+            self.vouched = _grown(self.vouched, size, NEVER)
             self.promised = _grown(self.promised, size, NEVER)
             self.broken = _grown(self.broken, size, 0)
             self._by_newest.grow(size)
@@ -86,11 +89,15 @@ class Sources:
         self.excused[numbers] = False
         self._refresh(numbers)
 
-    def promise(self, source: int, time_ns: int, now_ns: int) -> None:
-        """Nothing older than time_ns will come from this source; it counts as a word of the source."""
+    def promise(self, source: int, time_ns: int, now_ns: int, slack_ns: int) -> None:
+        """Nothing older than time_ns will come from this source; it counts as a word of the source.
+
+        No slack is needed behind a promise, so the watermark may go right up to it: the slack is added here.
+        """
         self.promised[source] = max(int(self.promised[source]), time_ns)
+        self.vouched[source] = max(int(self.vouched[source]), min(time_ns + slack_ns, NONE - 1))
         self._promising = True
-        self._word(source, time_ns, now_ns)
+        self._word(source, NEVER, now_ns)
 
     def note_broken(self, sources: NDArray[np.uint32], times: Times) -> None:
         """Count events that are older than what their source had promised before they came."""
@@ -109,7 +116,7 @@ class Sources:
         self.active[source] = True
         self.excused[source] = False
         self._by_heard.set(source, now_ns)
-        self._by_newest.set(source, min(newest, NONE - 1))
+        self._by_newest.set(source, min(max(newest, int(self.vouched[source])), NONE - 1))
 
     def excuse(self, source: int) -> None:
         """Do not wait for this source until it speaks again."""
@@ -156,7 +163,8 @@ class Sources:
     def _waited_for(self, numbers: NDArray[np.intp]) -> NDArray[np.int64]:
         # An event at the very end of int64 must not look like a source that takes no part.
         waiting = self.active[numbers] & ~self.excused[numbers]
-        return np.where(waiting, np.minimum(self.newest[numbers], NONE - 1), NONE)
+        known = np.maximum(self.newest[numbers], self.vouched[numbers]) if self._promising else self.newest[numbers]
+        return np.where(waiting, np.minimum(known, NONE - 1), NONE)
 
     def restore(
         self,
@@ -165,6 +173,7 @@ class Sources:
         heard: Times,
         active: NDArray[np.bool_],
         excused: NDArray[np.bool_],
+        vouched: Times,
         promised: Times,
         broken: Times,
         newest_ns: int,
@@ -174,7 +183,7 @@ class Sources:
         count = len(self.names)
         self.newest[:count], self.heard[:count] = newest, heard
         self.active[:count], self.excused[:count] = active, excused
-        self.promised[:count], self.broken[:count] = promised, broken
+        self.vouched[:count], self.promised[:count], self.broken[:count] = vouched, promised, broken
         self.newest_ns, self.broken_events = newest_ns, int(broken.sum())
         self._promising = bool(np.any(promised != NEVER))
         if count:

@@ -102,7 +102,7 @@ class State:
             case TakenRecord():
                 self.outbox.taken(record.sink, record.lane, record.number)
             case PromiseRecord():
-                self.sources.promise(record.source, record.time_ns, record.now_ns)
+                self.sources.promise(record.source, record.time_ns, record.now_ns, self.slack.slack_ns)
             case ExcuseRecord():
                 self.sources.excuse(record.source)
             case NumbersRecord():

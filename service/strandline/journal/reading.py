@@ -40,11 +40,12 @@ class Readable:
         """Everything before this position is synced."""
         return self._durable_lsn
 
-    def frames(self, from_lsn: int | None = None) -> Iterator[Frame]:
+    def frames(self, from_lsn: int | None = None, *, known: bool = False) -> Iterator[Frame]:
         """The frames from a position (None: from the oldest) up to what is durable now, each CRC checked, no copies.
 
-        A position inside a frame begins with the next one. Raises JournalError where the position is no longer kept, or
-        where a frame is not intact.
+        A position inside a frame begins with the next one; frames can only be found from the front, so the segment is
+        read from its start, unless it is `known` that a frame starts at the position. Raises JournalError where the
+        position is no longer kept, or where a frame is not intact.
         """
         segments, end_lsn = self._segments, self._durable_lsn
         start = from_lsn if from_lsn is not None else self.first_lsn
@@ -54,10 +55,11 @@ class Readable:
             )
         for index in range(max(0, self._index(segments, start)), len(segments)):
             until = min(end_lsn, segments[index + 1].first_lsn) if index + 1 < len(segments) else end_lsn
-            yield from self._frames_of(segments[index], start, until)
+            begin = max(start, segments[index].first_lsn) if known else segments[index].first_lsn
+            yield from self._frames_of(segments[index], begin, start, until)
 
-    def _frames_of(self, segment: Segment, start: int, until: int) -> Iterator[Frame]:
-        lsn = segment.first_lsn
+    def _frames_of(self, segment: Segment, begin: int, start: int, until: int) -> Iterator[Frame]:
+        lsn = begin
         if lsn >= until:
             return
         view = self._maps.view(segment.path)

@@ -2,7 +2,9 @@
 
 A file is written under a temporary name, synced, renamed, and its folder synced; only then are its batches reported as
 durable. Names tell the lane and the first and last batch, so the folder itself is the position, and whoever collects
-the files recognises a repeat. When to roll by age is asked from outside; no timer lives here.
+the files recognises a repeat. Before a file is completed a hidden one notes its numbers: should it be complete and
+fetched before this service could say so, then after a crash files begin and end where that one did, and none holds
+repeats and new batches together. When to roll by age is asked from outside; no timer lives here.
 """
 
 from __future__ import annotations
@@ -74,6 +76,7 @@ class NdjsonSink:
         self._thread = OwnThread(f"ndjson {self._prefix}")
         self._parts: dict[Lane, _Part] = {}
         self._reached: dict[Lane, int] = {}
+        self._bounds: dict[Lane, tuple[int, int]] = {}  # batches behind which a file must end
 
     @property
     def lanes(self) -> tuple[Lane, ...]:
@@ -120,6 +123,7 @@ class NdjsonSink:
                 last = max((int(match[2]) for match in complete), default=0)
                 if last:
                     self._reached[lane] = last
+                self._bounds[lane] = self._noted(lane)
         except (FileExistsError, NotADirectoryError, ValueError) as error:
             raise StrandlineError(
                 f"{self._directory} cannot be a folder: {error}. Name another for this sink"
@@ -135,6 +139,8 @@ class NdjsonSink:
                 continue
             block = lines.ndjson(batch) if batch.lane == "ordered" else late_lines(batch, lines)
             try:
+                if part and any(part.last <= bound < batch.number for bound in self._bounds[batch.lane]):
+                    self._roll(batch.lane)
                 part = self._append(batch, block)
                 if part.size >= self._roll_bytes:
                     self._roll(batch.lane)
@@ -180,6 +186,7 @@ class NdjsonSink:
         """Complete a lane's file. After a sync that failed nothing of it can be trusted: the caller throws it away."""
         part = self._parts[lane]
         sync_data(part.descriptor)
+        self._note(lane, part)
         name = f"{self._prefix}-{lane}-{part.first:0{_DIGITS}}-{part.last:0{_DIGITS}}.ndjson"
         part.path.rename(self._directory / name)
         part.path = self._directory / name  # until the folder is synced it may still vanish
@@ -187,6 +194,28 @@ class NdjsonSink:
         del self._parts[lane]
         self._reached[lane] = part.last
         os.close(part.descriptor)
+
+    def _note(self, lane: Lane, part: _Part) -> None:
+        """Say which batches the next complete file holds, before there is one."""
+        path = self._note_path(lane)
+        beside = path.with_name(f"{path.name}.part")
+        descriptor = os.open(beside, os.O_WRONLY | os.O_CREAT | os.O_TRUNC | os.O_CLOEXEC, 0o644)
+        try:
+            os.write(descriptor, f"{part.first} {part.last}\n".encode())
+            sync_data(descriptor)
+        finally:
+            os.close(descriptor)
+        beside.replace(path)
+
+    def _noted(self, lane: Lane) -> tuple[int, int]:
+        """Where the last file that may be complete began and ended: the batch before its first, and its last."""
+        with contextlib.suppress(OSError, ValueError):
+            first, last = map(int, self._note_path(lane).read_text().split())
+            return first - 1, last
+        return 0, 0
+
+    def _note_path(self, lane: Lane) -> Path:
+        return self._directory / f".{self._prefix}-{lane}.completing"
 
     def _discard(self, lane: Lane) -> None:
         part = self._parts.pop(lane, None)

@@ -140,7 +140,7 @@ class PostgresSink:
         reached = self._positions[lane]
         await connection.execute("BEGIN")
         place = (self._feed, lane, self._stored[lane])
-        if await connection.execute(self._moving, *place, number, reached) == "nothing":
+        if await connection.execute(self._moving, *place, number, reached) != "UPDATE 1":
             raise self._moved(lane)
         for rows in tables:
             for piece in rows.pieces(ROWS_AT_ONCE):
