@@ -1,4 +1,4 @@
-"""Damage for the fuzz lane: bytes and texts changed in the ways that break readers. Seeded, pure, some 5 µs a change."""
+"""Damage for the fuzz lane: bytes changed in the ways that break readers. Seeded, pure, some 5 µs a change."""
 
 from __future__ import annotations
 
@@ -7,17 +7,17 @@ from random import Random
 
 INPUT_BYTES_AT_MOST = 4096  # an input stays small, so that many fit into the budget
 TOKENS = (
-    b"\0", b"\n", b"\r\n", b"\x1e", b'"', b"\\", b"{", b"}", b"[", b"]", b",", b":", b"\xff", b"\xc0\x80", b"\xed\xa0\x80",
-    b"\xef\xbb\xbf", b"\\ud800", b"\\u0000", b"null", b"true", b"1e999", b"-0", b"9223372036854775808", b"NaN", b" ",
-    b'""', b"[[[[[[[[", b'{"a":', b"\x81\xa1a", b"\xdd\xff\xff\xff\xff", b"\xc7\x01\x05a", b"\xcb\x7f\xf8", b"\x7f", b"=",
-    b"2026-02-30T00:00:00Z", b"1998-12-31T23:59:60Z", b";", b"%", b"~", b"/", b"-1", b"'", b"#", b"\xe2\x80\xa8",
+    b"\0", b"\n", b"\r\n", b"\x1e", b'"', b"\\", b"{", b"}", b"[", b"]", b",", b":", b"\xff", b"\xc0\x80", b"=", b";",
+    b"\xed\xa0\x80", b"\xef\xbb\xbf", b"\\ud800", b"\\u0000", b"null", b"true", b"1e999", b"-0", b"NaN", b" ", b'""',
+    b"9223372036854775808", b"[[[[[[[[", b'{"a":', b"\x81\xa1a", b"\xdd\xff\xff\xff\xff", b"\xc7\x01\x05a", b"\x7f",
+    b"2026-02-30T00:00:00Z", b"1998-12-31T23:59:60Z", b"%", b"~", b"/", b"-1", b"'", b"#", b"\xe2\x80\xa8",
 )  # fmt: skip
 
 
 def mutated(draw: Random, seed: bytes, others: Sequence[bytes] = (), tokens: Sequence[bytes] = TOKENS) -> bytes:
     """`seed` after none to six changes; `others` are what pieces may be taken from."""
     data = bytearray(seed)
-    for _ in range(draw.choice((0, 1, 1, 1, 2, 3, 6))):
+    for _ in range(draw.choice((0, 0, 1, 1, 1, 2, 3, 6))):
         draw.choice(_CHANGES)(draw, data, others or (seed,), tokens)
         del data[INPUT_BYTES_AT_MOST:]
     return bytes(data)

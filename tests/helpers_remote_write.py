@@ -133,9 +133,13 @@ Script = Callable[[bytes], str | Told | None]
 
 @dataclass(slots=True)
 class Served:
-    """A model behind HTTP. `script` is asked before each request: None, "ok": answer as the model does; "lose": store
-    it and close the connection; "lost": store it and answer 500; "drop": close it before; (status, text): answer that and store nothing; "hang": store
-    it and never answer. `headers` are sent with each answer, `seen` are the request's."""
+    """A model behind HTTP.
+
+    `script` is asked before each request: None, "ok": answer as the model does; "lose": store it and close the
+    connection; "lost": store it and answer 500; "hang": store it and never answer; "drop": close the connection and
+    store nothing; (status, text): answer that and store nothing. `headers` are sent with each answer, `seen` are the
+    requests' own.
+    """
 
     model: Model
     url: str = ""

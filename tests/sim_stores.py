@@ -171,8 +171,7 @@ class Stores:
             future.set_exception(ConnectionResetError("the connection broke off"))
 
     def refused_for_good(self, name: str, batches: Sequence[Batch]) -> list[int]:
-        """Numbers of those that a store will never take: what it refused once, it refuses always, and never what it has.
-        """
+        """Numbers of those that a store will never take: it refuses always what it refused once, never what it has."""
         for batch in batches if self.moods.get(name) == "refuses for good" else ():
             assert self.weather is not None
             known = (name, batch.lane, batch.number) in self.has or batch.number in self.receiver.batches[batch.lane]

@@ -106,8 +106,11 @@ class Story(World):
 
     def stop(self) -> None:
         """An orderly stop."""
-        if self.process is not None:
-            self._stop(self.process)
+        try:
+            if self.process is not None:
+                self._stop(self.process)
+        except PowerCut:
+            self._die(power=True)
 
     def die(self, *, power: bool = False) -> None:
         """The process is gone."""

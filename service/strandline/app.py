@@ -20,7 +20,7 @@ import msgspec
 from aiohttp import web
 from prometheus_client.aiohttp import make_aiohttp_handler
 
-from . import observe, openapi
+from . import lane_acts, observe, openapi
 from .clock import SystemClock
 from .config import Address, Config, load
 from .connections import Connections, make_room_for
@@ -32,8 +32,10 @@ from .journal.disk import LocalDisk
 from .metrics import make_registry
 from .ports import Clock, Disk
 from .problems import as_problems
-from .runtime import FeedRuntime, MakeSink
+from .runtime import FeedRuntime
 from .sinks import make_sink
+from .sinks_of import MakeSink
+from .slack_answer import get_slack
 
 log = logging.getLogger("strandline")
 TICK_S = 0.25
@@ -56,13 +58,18 @@ def make_app(config: Config, feeds: dict[str, FeedRuntime]) -> web.Application:
             web.post("/v1/feeds/{feed}/marks", endpoint.post_marks),
             web.post("/v1/feeds/{feed}/excuse", endpoint.post_excuse),
             web.post("/v1/feeds/{feed}/drain", endpoint.post_drain),
+            web.post("/v1/feeds/{feed}/late/resend", lane_acts.post_late_resend),
+            web.post("/v1/feeds/{feed}/refused/resend", lane_acts.post_refused_resend),
+            web.post("/v1/feeds/{feed}/quarantine/redrive", lane_acts.post_quarantine_redrive),
             web.get("/v1/feeds", observe.get_feeds),
             web.get("/v1/feeds/{feed}", observe.get_feed),
             web.get("/v1/feeds/{feed}/sources", observe.get_sources),
+            web.get("/v1/feeds/{feed}/slack", get_slack),
             web.get("/v1/feeds/{feed}/late", observe.get_late),
             web.get("/v1/feeds/{feed}/quarantine", observe.get_quarantine),
             web.get("/v1/feeds/{feed}/refused", observe.get_refused),
             web.get("/v1/feeds/{feed}/ordered", observe.get_ordered, allow_head=False),
+            web.get("/v1/feeds/{feed}/capture", observe.get_capture, allow_head=False),
             web.get("/metrics", make_aiohttp_handler(make_registry(feeds))),
             web.get("/health/live", observe.get_live),
             web.get("/health/ready", observe.get_ready),

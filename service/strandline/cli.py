@@ -15,6 +15,7 @@ from pathlib import Path
 from typing import Any
 
 from .cli_answers import DEFAULT_FILE, FINE, INTERRUPTED, NOT_REACHED, WRONG_USE, chosen_file, complain
+from .cli_values import amount, connections, hold, pace, recorded_seconds
 from .errors import FAULT_REASONS, ConfigError, StrandlineError
 
 NARROW: dict[str, dict[str, Any]] = {
@@ -22,6 +23,8 @@ NARROW: dict[str, dict[str, Any]] = {
     "sink": {"metavar": "NAME"},
     "reason": {"choices": sorted(FAULT_REASONS), "metavar": "REASON"},
 }
+
+UNITS = ("rfc3339", "s", "ms", "us", "ns")
 
 Command = Callable[[argparse.Namespace], int]
 
@@ -61,6 +64,8 @@ def parser() -> argparse.ArgumentParser:
     _add_serve(commands)
     _add_demo(commands)
     _add_check(commands)
+    _add_capture(commands)
+    _add_replay(commands)
     _add_lane(commands, "late", "events that came too late to be put in order", "late event", "source")
     _add_lane(commands, "quarantine", "lines that could not be events of their feed", "line in quarantine", "reason")
     _add_lane(commands, "refused", "events of batches that a sink refused for good", "refused event", "sink")
@@ -130,6 +135,60 @@ def _add_check(commands: Any) -> None:
     check.add_argument("--json", action="store_true", help="the answer as one JSON object")
 
 
+def _add_capture(commands: Any) -> None:
+    about = (
+        "Takes a stretch of a feed's traffic into one file, for `strandline replay`. SOURCE is one of:\n"
+        "  the service's data_dir (or a feed's folder in it): what its journal holds, see `journal.retain`;\n"
+        "  http://...: what a running service takes in from now on, for --seconds;\n"
+        "  a file of events, NDJSON or .parquet, that tell when they arrived (--arrival)."
+    )
+    example = (
+        "  strandline capture strandline-data --feed river-gauges --from 24h --out yesterday.capture\n"
+        "  strandline capture http://127.0.0.1:8600 --feed river-gauges --seconds 600 --out now.capture\n"
+        "  strandline capture dump.ndjson --arrival /received_at --time /observed_at --out old.capture"
+    )
+    capture = _add(commands, "capture", "take a feed's traffic into a file", about, example, _capture)
+    capture.add_argument("capture_source", metavar="SOURCE", help="a folder, an address or a file")
+    capture.add_argument("--feed", metavar="NAME", help="the feed (for a file: what to call it)")
+    capture.add_argument("--out", type=Path, required=True, metavar="FILE", help="the capture to write")
+    capture.add_argument("--from", dest="from_time", metavar="TIME", help="arrived since: 24h, or an RFC 3339 time")
+    capture.add_argument("--to", dest="to_time", metavar="TIME", help="arrived until")
+    capture.add_argument("--seconds", type=recorded_seconds, default=60, metavar="N", help="how long (default: 60)")
+    capture.add_argument("--without-events", action="store_true", help="only times, sources and lengths")
+    capture.add_argument("--arrival", metavar="POINTER", help="where an event says when it arrived")
+    capture.add_argument("--arrival-unit", choices=UNITS, help="of --arrival (default: that of --unit)")
+    capture.add_argument("--time", metavar="POINTER", help="where an event's own time stands (default: /time)")
+    capture.add_argument("--unit", choices=UNITS, help="of --time (default: rfc3339)")
+    capture.add_argument("--source", metavar="POINTER", help="where an event names its source")
+    capture.add_argument("--id", metavar="POINTER", help="where an event carries its id")
+    capture.add_argument("--json", action="store_true", help="the answer as one JSON object")
+
+
+def _add_replay(commands: Any) -> None:
+    about = (
+        "Plays a capture again: what the feed did; with --config what it would have done with other settings;\n"
+        "with --into URL sends it to a service. Bars (--expect-...) make it a test: exit code 1 where one is missed."
+    )
+    example = (
+        "  strandline replay yesterday.capture --verify\n"
+        "  strandline replay yesterday.capture --config new.toml --expect-late-share 0.001 --expect-hold-p99 5s\n"
+        "  strandline replay yesterday.capture --into http://127.0.0.1:8600 --pace 10x"
+    )
+    replay = _add(commands, "replay", "play a capture again", about, example, _replay)
+    replay.add_argument("capture_file", type=Path, metavar="CAPTURE", help="what `strandline capture` made")
+    replay.add_argument("--config", type=Path, metavar="FILE", help="decide anew with the settings in this file")
+    replay.add_argument("--feed", metavar="NAME", help="the feed in it, or at --into URL (default: the captured one)")
+    replay.add_argument("--verify", action="store_true", help="decide anew and compare each release")
+    replay.add_argument("--digest", action="store_true", help="a digest of all batches, bytes of events included")
+    replay.add_argument("--into", metavar="URL|FILE.db", help="send it there, or write what is released")
+    replay.add_argument("--pace", type=pace, metavar="PACE", help="into a service: recorded (the default), 10x, or max")
+    replay.add_argument("--connections", type=connections, default=1, metavar="N", help="into a service (default: 1)")
+    replay.add_argument("--expect-late-share", type=amount, metavar="SHARE", help="late share at most, such as 0.001")
+    replay.add_argument("--expect-hold-p99", type=hold, metavar="TIME", help="99 in 100 are held so long at most: 5s")
+    replay.add_argument("--expect-peak-held", type=amount, metavar="N", help="events held at one time at most: 2e6")
+    replay.add_argument("--json", action="store_true", help="the answer as one JSON object")
+
+
 def _add_lane(commands: Any, lane: str, things: str, thing: str, narrow: str) -> None:
     """`late`, `quarantine` and `refused`: list, export, forget."""
     group = commands.add_parser(lane, help=f"look at {things}", description=f"Look at {things}.")
@@ -150,11 +209,44 @@ def _add_lane(commands: Any, lane: str, things: str, thing: str, narrow: str) ->
     about = f"Deletes {things} for good, up to\nand including a number that `list` shows. Frees their room."
     forget = _add(acts, "forget", "delete those that you have exported", about, example, _on_lane("forget", lane))
     forget.add_argument("--through", type=int, required=True, metavar="NUMBER", help="the last one to delete")
+    _add_again(acts, lane, things, narrow)
     for command in (listing, export, forget):
         command.add_argument("--feed", required=True, metavar="NAME", help="the feed")
         place = command.add_mutually_exclusive_group()
         place.add_argument("--config", type=Path, metavar="FILE", help=f"configuration (default: {DEFAULT_FILE} here)")
         place.add_argument("--data-dir", type=Path, metavar="DIR", help="the service's folder, without a configuration")
+
+
+def _add_again(acts: Any, lane: str, things: str, narrow: str) -> None:
+    """`late resend`, `refused resend`, `quarantine redrive`: acts of the running service."""
+    act = "redrive" if lane == "quarantine" else "resend"
+    example = f"  strandline {lane} {act} --feed river-gauges --through 120"
+    if act == "resend":
+        short = "have a sink take them once more"
+        about = f"Asks the running service to send {things}\nto one sink once more, in repair batches. They stay listed."
+        example += " --sink archive"
+    else:
+        short = "take them in once more, after a fix"
+        about = "Asks the running service to decode the lines once more.\nThose that are events now are taken, and go."
+    again = _add(acts, act, short, about, example, _again(lane, act))
+    again.add_argument("--feed", required=True, metavar="NAME", help="the feed")
+    again.add_argument("--after", type=int, default=0, metavar="NUMBER", help="only those after this number")
+    again.add_argument("--through", type=int, default=2**63 - 1, metavar="NUMBER", help="up to and including this one")
+    again.add_argument("--url", default="http://127.0.0.1:8600", help="the service (default: http://127.0.0.1:8600)")
+    again.add_argument("--json", action="store_true", help="the answer as JSON")
+    if act == "resend":
+        again.add_argument("--sink", required=True, metavar="NAME", help="the sink, which must take repairs")
+    else:
+        again.add_argument(f"--{narrow}", dest="narrow", help=f"only those of one {narrow}", **NARROW[narrow])
+
+
+def _again(lane: str, act: str) -> Command:
+    def command(options: argparse.Namespace) -> int:
+        from .cli_acts import again  # noqa: PLC0415
+
+        return again(options, lane, act)
+
+    return command
 
 
 def seconds(text: str) -> int:
@@ -193,6 +285,18 @@ def _check(options: argparse.Namespace) -> int:
     from .cli_check import check  # noqa: PLC0415
 
     return check(options)
+
+
+def _capture(options: argparse.Namespace) -> int:
+    from .cli_capture import capture  # noqa: PLC0415
+
+    return capture(options)
+
+
+def _replay(options: argparse.Namespace) -> int:
+    from .cli_replay import replay  # noqa: PLC0415
+
+    return replay(options)
 
 
 def _on_lane(work: str, lane: str) -> Command:

@@ -28,7 +28,7 @@ from .config_kinds import (
     size,
     url,
 )
-from .config_read import Key, Tables
+from .config_read import Key, Table, Tables
 from .core.settings import SECOND_NS
 from .sinks.postgres_columns import TYPES, VALUES, Column
 from .sinks.remote_write_series import Pairs, SeriesRule
@@ -36,6 +36,25 @@ from .sinks.remote_write_series import Pairs, SeriesRule
 MIB = 2**20
 
 SINK_NAME = name("a-z0-9_-", "1 to 63 of a-z, 0-9, - and _, the first a letter or digit", reserved="lanes")
+
+
+class LateConfig(msgspec.Struct, frozen=True):
+    """What becomes of late events at this sink; the lane store keeps them in any case."""
+
+    deliver: Annotated[
+        Literal["lane", "repair", "keep"],
+        Key(
+            choice("lane", "repair", "keep"),
+            "`lane`: as they come; `repair`: now and then, in batches of one partition sorted by source and time; "
+            "`keep`: not at all",
+        ),
+    ] = "lane"
+    every_ns: Annotated[int, Key(duration("1s"), "how often repairs are sent")] = field(
+        default=3600 * SECOND_NS, name="every"
+    )
+    partition_ns: Annotated[int, Key(duration("1s"), "the store's partition: no repair batch reaches over its edge")] = (
+        field(default=86_400 * SECOND_NS, name="partition")
+    )
 
 
 class SinkConfig(msgspec.Struct, frozen=True):
@@ -48,6 +67,7 @@ class SinkConfig(msgspec.Struct, frozen=True):
     def options(self) -> dict[str, object]:
         """What `sinks.make_sink` takes for this kind; times become seconds there (`roll_every_s`)."""
         options = {key: getattr(self, key) for key in self.__struct_fields__ if key != "name"}
+        options = {key: value for key, value in options.items() if not isinstance(value, LateConfig)}
         times = {key: value for key, value in options.items() if key.endswith("_ns")}
         return {key: value for key, value in options.items() if key not in times} | {
             f"{key.removesuffix('_ns')}_s": value / SECOND_NS for key, value in times.items()
@@ -72,6 +92,7 @@ class NdjsonConfig(SinkConfig, frozen=True):
     roll_every_ns: Annotated[int, Key(duration("1s"), "a new file is begun after this time")] = field(
         default=10 * SECOND_NS, name="roll_every"
     )
+    late: Annotated[LateConfig, Table(LateConfig)] = LateConfig()
 
 
 class PostgresColumn(msgspec.Struct, frozen=True):
@@ -129,6 +150,7 @@ class HttpConfig(SinkConfig, frozen=True, kw_only=True):
     kind: ClassVar[str] = "http"
     url: Annotated[str, Key(url(), "where ordered events are sent")]
     late_url: Annotated[str | None, Key(url(), "where late events are sent; by default the same")] = None
+    late: Annotated[LateConfig, Table(LateConfig)] = LateConfig()
     headers: Annotated[tuple[tuple[str, str], ...], Key(headers(), "sent with every request")] = ()
     token: Annotated[
         str | None,

@@ -5,6 +5,7 @@ Times leave as RFC 3339 text, ages in seconds, for people; `*_ns` for programs. 
 
 from __future__ import annotations
 
+from dataclasses import asdict
 from typing import Any
 
 from .core.columns import TIME_MIN
@@ -40,7 +41,7 @@ def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
         "watermark_age_s": age_s(view.now_ns, view.watermark_ns),
         "newest": time_text(view.newest_ns),
         "slack_s": view.slack_ns / 1e9,
-        "steering": _steering(view),
+        "steering": steering_document(view),
         "hold": _hold(view),
         "held": _held(view),
         "ledger": {**view.ledger, "balanced": view.balance == 0},
@@ -59,11 +60,13 @@ def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
             }
             for name, hop in runtime.hops().items()
         },
+        "repairs": {name: asdict(repairer.state()) for name, repairer in runtime.repairers.items()},
         "sinks": {name: _sink(runtime, view, name) for name in runtime.deliveries},
     }
 
 
-def _steering(view: View) -> dict[str, Any] | None:
+def steering_document(view: View) -> dict[str, Any] | None:
+    """A steered slack: target, shares reached, bound, contradiction; None for a fixed one."""
     steering = view.steering
     if steering is None:
         return None

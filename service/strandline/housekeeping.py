@@ -30,7 +30,8 @@ class Housekeeper:
     ) -> None:  # fmt: skip
         self._journal, self._feed, self._commit, self._settle = journal, feed, commit, settle
         self._clock = clock
-        self._saved_lsn = 0
+        self._saved_lsn = 0  # of the newest snapshot
+        self._older_lsn = 0  # of the one before it: the journal goes back to it, should the newest turn out damaged
         self._saved_bytes = 0
         self._retention = Retention(retain_ns)
         journal.keeps_snapshots = retain_ns > 0
@@ -40,13 +41,15 @@ class Housekeeper:
 
         Raises JournalError where the records between the newest usable snapshot and the journal's start are gone.
         """
-        for lsn, body in self._journal.intact_snapshots():
+        intact = self._journal.intact_snapshots()
+        for lsn, body in intact:
             try:
                 self._feed.restore(body, lsn)
             except (ValueError, LookupError, TypeError) as error:
                 log.warning("%s: the snapshot at %d cannot be used (%s)", self._feed.state.settings.name, lsn, error)
                 continue
             self._saved_lsn = lsn
+            self._older_lsn = next((older_lsn for older_lsn, _ in intact), 0)
             break
         if self._feed.next_lsn < self._journal.first_lsn:
             raise JournalError(
@@ -59,7 +62,7 @@ class Housekeeper:
             folded += 1
         if self._retention.retain_ns:
             # How long they have been free is not written down: they count from when the next segment was begun.
-            free_lsn = min(self._saved_lsn, self._feed.needed_place)
+            free_lsn = min(self._older_lsn, self._feed.needed_place)
             self._retention.note(self._journal.ends, free_lsn, self._begun_ns)
         return folded
 
@@ -102,14 +105,14 @@ class Housekeeper:
         Raises JournalFull (nothing is lost: the journal goes back further), JournalFailed.
         """
         lsn, parts, needed = self._feed.next_lsn, self._feed.save(), self._feed.needed_place
-        older = self._saved_lsn
-        if lsn > older:
+        if lsn > self._saved_lsn:
             await self._settle()
             await asyncio.to_thread(self._journal.write_snapshot, lsn, parts)
-            self._saved_lsn, self._saved_bytes = lsn, sum(len(part) for part in parts)
+            self._older_lsn, self._saved_lsn = self._saved_lsn, lsn
+            self._saved_bytes = sum(len(part) for part in parts)
         # The older of the two kept snapshots stays usable, in case the newer one turns out damaged; where room is
         # short there is no such choice.
-        keep = min(lsn if self._journal.short_of_room else older, needed, self._journal.durable_lsn)
+        keep = min(lsn if self._journal.short_of_room else self._older_lsn, needed, self._journal.durable_lsn)
         await self._drop(keep)
 
     async def _drop(self, free_lsn: int) -> None:

@@ -19,12 +19,14 @@ from .documents import age_s, feed_document, stalls_of, time_text
 from .errors import JournalError
 from .ingest.endpoint import FEEDS, runtime_of
 from .problems import problem
+from .replay.recording import SECONDS_AT_MOST, Recording
 from .runtime import FeedRuntime
 from .sinks.lanes import late_rows, quarantine_rows, refused_rows
 
 ROWS_AT_MOST = 1000
 KEEPALIVE_S = 15.0
 WRITE_WITHIN_S = 30.0  # a listener that takes nothing for so long is let go
+CAPTURE_TYPE = "application/octet-stream"
 PIECE_BYTES = 1 << 20  # of a batch in memory for one listener, before and beside what its connection holds
 
 
@@ -120,6 +122,32 @@ async def get_ordered(request: web.Request) -> web.StreamResponse:
     except (ConnectionError, TimeoutError):  # gone, or takes nothing any more
         if request.transport is not None:
             request.transport.abort()
+    return response
+
+
+async def get_capture(request: web.Request) -> web.StreamResponse:
+    """A capture of what the feed takes in from now on, for `seconds`; one at a time for each feed."""
+    runtime = runtime_of(request)
+    seconds = _number(request, "seconds", 60)
+    if not 1 <= seconds <= SECONDS_AT_MOST:
+        raise web.HTTPBadRequest(text=f"?seconds={seconds} must be 1 to {SECONDS_AT_MOST}")
+    if not runtime.accepting:
+        return problem(503, "Service Unavailable", "the feed is starting or stopping", headers={"Retry-After": "5"})
+    if runtime.recording:
+        detail = f"feed {runtime.config.name} is being recorded already; one capture at a time is made of a feed"
+        return problem(429, "Too Many Requests", detail, headers={"Retry-After": "60"})
+    runtime.recording = True
+    response = web.StreamResponse(headers={"Content-Type": CAPTURE_TYPE, "Cache-Control": "no-store"})
+    try:
+        recording = Recording(runtime, seconds=seconds, lines=_number(request, "events", 1) != 0)
+        await response.prepare(request)
+        async for piece in recording.pieces():
+            await _write(response, piece)
+    except (ConnectionError, TimeoutError, JournalError):  # gone or too slow: the file ends without an index
+        if request.transport is not None:
+            request.transport.abort()
+    finally:
+        runtime.recording = False
     return response
 
 

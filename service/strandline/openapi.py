@@ -14,6 +14,7 @@ from .core.effects import Outcome
 from .errors import FAULT_REASONS, REFUSALS
 from .ingest.endpoint import Excuse, Promise
 from .ingest.formats import FORMATS
+from .lane_acts import Redrive, Resend
 
 Json = dict[str, Any]
 # A schema describes JSON; an item that is no event is a fault in the answer, so it is no matter of these schemas.
@@ -45,6 +46,8 @@ def _query(name: str, description: str, schema: Json) -> Json:
 
 
 _WHOLE: Json = {"type": "integer", "minimum": 0, "maximum": 10**18 - 1}
+_DURATION = r"[0-9]{1,9}(\.[0-9]{1,9})?(ns|us|ms|s|m|h)"
+_SLACKS: Json = {"type": "string", "pattern": f"^{_DURATION}(,{_DURATION}){{0,99}}$"}
 _PAGE = [
     _query("after", "rows behind this number; a page's `next_after`", _WHOLE),
     _query("limit", "rows of one page, at most 1000", _WHOLE),
@@ -107,6 +110,21 @@ def _events() -> Json:
     }
 
 
+def _again() -> Json:
+    acts = {
+        "late/resend": ("Send late events to a sink once more, in repair batches", "Resend"),
+        "refused/resend": ("Send what a sink refused once more, in repair batches", "Resend"),
+        "quarantine/redrive": ("Take lines in quarantine in once more, after a fix", "Redrive"),
+    }
+    paths = {}
+    for path, (summary, schema) in acts.items():
+        act = _act(summary, schema)
+        del act["post"]["responses"]["204"]
+        act["post"]["responses"] |= _answer("what was done, in counts", {"type": "object"})
+        paths[f"/v1/feeds/{{feed}}/{path}"] = act
+    return paths
+
+
 def _paths() -> Json:
     document: Json = {"type": "object"}
     source = _query("source", "only this source", {"type": "string"})
@@ -116,6 +134,7 @@ def _paths() -> Json:
         "/v1/feeds/{feed}/marks": _act("Promise: nothing older will come from this source", "Promise"),
         "/v1/feeds/{feed}/excuse": _act("Do not wait for this source until it speaks again", "Excuse"),
         "/v1/feeds/{feed}/drain": _act("Release all that is held, in order", None),
+        **_again(),
         "/v1/feeds": _get("Every feed", _answer("feeds", document)),
         "/v1/feeds/{feed}": _get(
             "Watermark, slack, hold, open runs, books, hops, sinks",
@@ -124,6 +143,11 @@ def _paths() -> Json:
         ),
         "/v1/feeds/{feed}/sources": _get(
             "Sources", {**_answer("sources", document), **_problems(400, 404)}, [_FEED, *_PAGE]
+        ),
+        "/v1/feeds/{feed}/slack": _get(
+            "How long to wait: the late share that each slack would give, from the lateness remembered",
+            {**_answer("slacks, lateness, steering; what of it is exact", document), **_problems(400, 404)},
+            [_FEED, _query("at", "slacks to answer for, such as 3.2s,5s; else a grid", _SLACKS)],
         ),
         "/v1/feeds/{feed}/late": _get(
             "Late events", {**_answer("late events", document), **_problems(400, 404, 503)}, [_FEED, *_PAGE, source]
@@ -144,6 +168,18 @@ def _paths() -> Json:
             },
             [_FEED, ordered],
         ),
+        "/v1/feeds/{feed}/capture": _get(
+            "A capture of what the feed takes in from now on",
+            {
+                **_answer("the capture, as it is recorded", {"type": "string"}, "application/octet-stream"),
+                **_problems(400, 404, 429, 503),
+            },
+            [
+                _FEED,
+                _query("seconds", "how long (60)", {"type": "integer", "minimum": 1, "maximum": 86_400}),
+                _query("events", "0: without the events' bytes", {"type": "integer", "minimum": 0, "maximum": 1}),
+            ],
+        ),
         "/metrics": _get("Metrics", _answer("exposition format", {"type": "string"}, "text/plain")),
         "/health/live": _get("The process is alive", _answer("alive", document)),
         "/health/ready": _get("Ready to take events", {**_answer("ready", document), **_problems(503)}),
@@ -155,7 +191,7 @@ def _paths() -> Json:
 def document() -> Json:
     """The whole document."""
     _, components = msgspec.json.schema_components(
-        [Outcome, Promise, Excuse], ref_template="#/components/schemas/{name}"
+        [Outcome, Promise, Excuse, Resend, Redrive], ref_template="#/components/schemas/{name}"
     )
     reasons = ", ".join(sorted(FAULT_REASONS))
     components["AnswerFault"]["description"] = f"One line that was not accepted; reason is one of: {reasons}."

@@ -29,16 +29,15 @@ from .lines import JournalLines
 from .ports import Clock, Disk, Sink
 from .problems import Refused
 from .recent import Recent
+from .repairing import Repairer
 from .sinks import make_sink
 from .sinks.delivery import Delivery
 from .sinks.lanes import LaneStore
+from .sinks_of import FeedSinks, MakeSink, Positions
 from .waiters import Waiters
 
 log = logging.getLogger(__name__)
-LANE_STORE = "lanes"
 SMALL_RECORD_BYTES = 4096  # more than any record that is not an arrival's
-MakeSink = Callable[..., Sink]  # called as `sinks.make_sink`
-OPEN_WITHIN_S = 5.0  # a store that does not answer by then is connected to later, by its delivery
 
 
 def decoder_of(config: FeedConfig) -> Decoder:
@@ -74,8 +73,8 @@ class FeedRuntime:
         self.deliveries: dict[str, Delivery] = {}
         self.accepting = self._started = False
         self.failure: str | None = None
-        self._positions_found: dict[str, dict[Lane, int]] = {}
-        self._opened_bell = asyncio.Event()
+        self._positions = Positions(config.name)
+        self.repairers: dict[str, Repairer] = {}
         self._on_failed = on_failed
         self.reading, self.decoding = Bodies(), Bodies()
         self._synced = asyncio.Event()  # rung and replaced at each sync, and at a failure
@@ -88,6 +87,7 @@ class FeedRuntime:
             self.journal, self.feed, self.commit, self._settle, clock, config.journal.retain_ns
         )  # fmt: skip
         self._housekeeping: asyncio.Task[None] | None = None
+        self.recording = False  # whether a capture is being made of it
 
     # ---- start and stop -------------------------------------------------------------------------------------------
 
@@ -96,18 +96,20 @@ class FeedRuntime:
         folded = await asyncio.to_thread(self._house.recover)
         self.lines.watch(self.feed)
         self.recent.begin(self.feed.state.outbox.next_number["ordered"] - 1)
-        sinks: dict[str, Sink] = {LANE_STORE: self.lane_store}
-        for sink in self.config.sinks:
-            sinks[sink.name] = self._make(sink.kind, self.config.name, self.clock, **sink.options())
+        made = FeedSinks.made(self.config, self.lane_store, self.folder / "lanes.db", self.clock, self._make)
+        sinks, self.repairers = made.sinks, made.repairers
         remembered = self.feed.state.outbox.positions
         for name, sink_object in sinks.items():
             self.deliveries[name] = self._delivery(name, sink_object, remembered.get(name, {}))
             self.deliveries[name].start()
-        positions = await self._positions()
+        # A new journal has no records yet.
+        positions = await self._positions.wait(set(sinks), for_all=self.feed.next_lsn == 0)
         served = {name: sink_object.lanes for name, sink_object in sinks.items()}
         self.journal.reserve([SMALL_RECORD_BYTES] * 4, of_headroom=True)
         self.carry_out(self.feed.start(self.clock.now_ns(), served, positions, self.config.settings()))
         self._started = self.accepting = True
+        for repairer in self.repairers.values():
+            repairer.start()
         log.info(
             "%s: %d records folded, %d events held, watermark %d",
             self.config.name, folded, self.feed.state.runs.held, self.feed.state.watermark_ns,
@@ -126,33 +128,8 @@ class FeedRuntime:
             remembered=remembered,
         )
 
-    async def _positions(self) -> dict[str, dict[Lane, int]]:
-        """Where the stores say they stand. A new journal waits for all of them: it must not use a number twice."""
-        new = self.feed.next_lsn == 0
-        while len(self._positions_found) < len(self.deliveries):
-            bell = self._opened_bell
-            try:
-                async with asyncio.timeout(OPEN_WITHIN_S):
-                    await bell.wait()
-            except TimeoutError:
-                missing = ", ".join(sorted(self.deliveries.keys() - self._positions_found.keys()))
-                log.warning("%s: no answer yet from sink %s", self.config.name, missing)
-                if not new:
-                    break
-        return dict(self._positions_found)
-
     def _opened(self, name: str, positions: Mapping[Lane, int]) -> None:
-        """A store has answered where it stands. Raises StrandlineError if it is ahead of this journal."""
-        if self._started:
-            for lane, number in positions.items():
-                if number >= self.feed.state.outbox.next_number[lane]:
-                    raise StrandlineError(
-                        f"the store has taken batch {number} of lane {lane}, this journal has not got there: it was "
-                        "replaced by an older one; restart the service, so that it numbers on from there"
-                    )
-        self._positions_found[name] = dict(positions)
-        bell, self._opened_bell = self._opened_bell, asyncio.Event()
-        bell.set()
+        self._positions.told(name, positions, self.feed.state.outbox.next_number if self._started else None)
 
     async def close(self, drain_at_most_s: float) -> None:
         """Stop in this order: take nothing more; answer who waits on a sync; deliver within the limit; save; close.
@@ -161,6 +138,7 @@ class FeedRuntime:
         """
         self.accepting = False
         await self._at_last(self._settle)
+        await asyncio.gather(*(repairer.close() for repairer in self.repairers.values()))
         await asyncio.gather(*(delivery.drain(drain_at_most_s) for delivery in self.deliveries.values()))
         if self._housekeeping:
             await self._housekeeping
@@ -287,14 +265,18 @@ class FeedRuntime:
             self.feed.note_refusal(error.reason)
             raise Refused(error.reason, str(error), 5) from error
         except JournalFailed as error:
+            self._failed(error)
             raise Refused("failed", str(error), 10) from error
 
     def has_headroom(self) -> bool:
         """Whether the journal has room for a mark or another small record."""
         try:
             self.journal.reserve([SMALL_RECORD_BYTES] * 2, of_headroom=True)
-        except (JournalFull, JournalFailed) as error:
+        except JournalFull as error:
             log.debug("%s: no room for a mark now: %s", self.config.name, error)
+            return False
+        except JournalFailed as error:
+            self._failed(error)  # a reservation failed, here or in the journal's thread: nobody else would say so
             return False
         return True
 

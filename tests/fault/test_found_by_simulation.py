@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+import errno
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
 
 from sim_process import seams
 from sim_scenario import SECOND_NS
 from sim_story import Story
+from simdisk import Faults
 from strandline.config_model import Journal
 
 
@@ -31,7 +33,7 @@ def test_a_store_that_answers_before_the_start_lets_nothing_be_released(tmp_path
         story.stores.moods["store"] = "refuses"
         story.send(2)
         story.work()
-        assert [name for name in story.history.left] == [("ordered", 1)]
+        assert list(story.history.left) == [("ordered", 1)]
         assert list(story.stores.receiver.batches["ordered"]) == [1]
         story.die()
         story.stores.moods["store"] = "hangs"
@@ -68,3 +70,32 @@ def test_a_request_larger_than_the_spare_segment_is_taken_once_room_was_made(tmp
     with told(Story(tmp_path, events, journal=journal, events_a_request=5)) as story:
         story.start()
         story.finish()
+
+
+def test_a_journal_that_fails_while_room_is_reserved_ends_the_service(tmp_path: Path) -> None:
+    """P7: nothing is written after it, so no write would ever tell; the service must not stand there as if it did well.
+    """
+    events = [(0, second / 10) for second in range(40)]
+    with told(Story(tmp_path, events, journal=Journal(400, 100_000), slack_ns=10 * SECOND_NS)) as story:
+        story.start()
+        story.send(2)
+        assert story.process is not None and story.process.up
+        story.disk.faults = FailingAt("create")
+        story.process.weather.errors = 1
+        while story.process is not None and story.crowd.left > 2:
+            story.send()
+            story.work(seconds=0.1)
+        assert story.process is None and story.tally.counts["failed"] == 1
+        story.finish()
+
+
+class FailingAt(Faults):
+    """Every operation of this name fails."""
+
+    def __init__(self, operation: str) -> None:
+        super().__init__()
+        self._operation = operation
+
+    def meet(self, name: str, path: str, partly: Callable[[], None] = lambda: None) -> None:
+        if name == self._operation:
+            raise OSError(errno.EIO, "simulated")

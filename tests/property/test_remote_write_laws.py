@@ -27,9 +27,11 @@ NAMES = ["a", "b", "c"]
 # Batches of events: (how far the time goes on in ms, gauge, whether it has a level, whether it has a flow).
 EVENT = st.tuples(st.integers(1, 400), st.sampled_from(NAMES), st.booleans(), st.booleans())
 BATCHES = st.lists(st.lists(EVENT, max_size=9), min_size=1, max_size=6)
-FAULTS = st.lists(
-    st.sampled_from(["ok", "ok", "lose", "lost", "drop", (503, "later"), (429, "slowly"), (413, "too large"), "restart"]),
-    max_size=40,
+# What happens to one request after the other. Not both in one story: a process that ends while a request is in pieces
+# (413) may tell samples as refused that the receiver holds, which the sink's documentation says.
+STEPS = ["ok", "ok", "lose", "lost", "drop", (503, "later"), (429, "slowly")]
+FAULTS = st.one_of(
+    st.lists(st.sampled_from([*STEPS, "restart"]), max_size=40), st.lists(st.sampled_from([*STEPS, (413, "large")]))
 )
 
 

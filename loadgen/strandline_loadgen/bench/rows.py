@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from . import heap, path, peers, service
+from . import heap, path, peers, postgres, recovery, service
 from .harness import Row, Scale
 
 
 def all_rows(scale: Scale) -> list[Row]:
     """The rows at this scale."""
-    return [*path.rows(scale), *peers.rows(scale), *heap.rows(scale), *service.rows(scale)]
+    rooms = (path, peers, heap, recovery, service, postgres)
+    return [row for room in rooms for row in room.rows(scale)]

@@ -79,6 +79,7 @@ def save(state: State) -> list[Buffer]:
         "settings": state.settings,
         "clock": [state.now_ns, state.watermark_ns, state.marked_ns, int(state.cause)],
         "slack": state.slack.saved() if isinstance(state.slack, SteeredSlack) else None,
+        "lateness": state.lateness.saved(),
         "names": state.sources.names,
         "newest_ns": state.sources.newest_ns,
         "runs": len(state.runs.runs),
@@ -126,6 +127,8 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
     state.cause = Cause(cause)
     if isinstance(state.slack, SteeredSlack):
         state.slack.restore(header["slack"])
+    if "lateness" in header:  # not in snapshots of before it was kept: the memory then begins anew
+        state.lateness.restore(header["lateness"])
     newest, heard = columns.get(np.int64), columns.get(np.int64)
     active, excused = columns.get(np.bool_), columns.get(np.bool_)
     words = [columns.get(np.int64) for _ in range(3)]

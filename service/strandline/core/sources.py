@@ -29,7 +29,7 @@ class Sources:
         self.heard: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # arrival clock of its last word
         self.active: NDArray[np.bool_] = np.empty(0, dtype=np.bool_)
         self.excused: NDArray[np.bool_] = np.empty(0, dtype=np.bool_)
-        # What counts for the watermark where it is later than `newest`: a promise, plus the slack that will be taken off.
+        # A promise plus the slack that will be taken off: counts for the watermark where it is later than `newest`.
         self.vouched: NDArray[np.int64] = np.empty(0, dtype=np.int64)
         self.promised: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # nothing older was to come; NEVER: no promise
         self.broken: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # events that came older than promised

@@ -32,6 +32,7 @@ from .columns import (
 from .effects import AnswerFault, Outcome
 from .histogram import POWERS, SECONDS_NS, Histogram
 from .keys import Kept, Keys
+from .lateness import Lateness
 from .ledger import Ledger
 from .merge import Merger
 from .outbox import Outbox
@@ -52,7 +53,7 @@ from .records import (
 from .runs import OpenRuns, runs_of
 from .seen import Seen
 from .settings import Settings
-from .slack import FixedSlack, Slack, slack_of
+from .slack import Slack, slack_of
 from .sources import Sources
 from .watermark import HoldBound, basis_of
 
@@ -75,6 +76,7 @@ class State:
     def __init__(self, settings: Settings) -> None:
         self.settings = settings
         self.slack: Slack = slack_of(settings)
+        self.lateness = Lateness()
         self.now_ns = TIME_MIN  # arrival clock of the last record
         self.watermark_ns = TIME_MIN
         self.marked_ns = TIME_MIN  # when it last moved
@@ -161,6 +163,7 @@ class State:
             late = len(late_batch)
         if events:
             self.slack.learn(body.arrived_ns, events, late, behind)
+            self.lateness.note(body.arrived_ns, events, behind)
         if len(times):
             self._hold(times, refs, body)
         if entries:
@@ -228,9 +231,7 @@ class State:
             self.figures.lateness.add(_distances(newest, times))
 
     def _behind(self, times: Times, arrived_ns: int) -> NDArray[np.int64] | None:
-        """How far each event stands behind what the watermark follows, before the slack; None where nobody asks."""
-        if isinstance(self.slack, FixedSlack):
-            return None
+        """How far each event stands behind what the watermark follows, before the slack; None where none does."""
         basis = arrived_ns if self.settings.clock == "arrival" else basis_of(self.sources)
         return None if not len(times) or least_of(times) >= basis else _distances(basis, times)
 
@@ -283,6 +284,7 @@ class State:
         self.hold.check(self.runs.tail_ns)
         self.seen.check()
         self.keys.check()
+        self.lateness.check()
         head = self.runs.head_ns
         assert head is None or head >= self.watermark_ns, "held behind the watermark"
 

@@ -145,7 +145,7 @@ async def read_body(request: web.Request, bytes_at_most: int) -> bytes:
 async def post_marks(request: web.Request) -> web.Response:
     """Take a source's promise that nothing older will come from it."""
     runtime = runtime_of(request)
-    promise = await _read_act(request, Promise)
+    promise = await read_act(request, Promise)
     if not is_source(promise.source):
         detail = f"/source: a source has 1 to {SOURCE_BYTES_AT_MOST} bytes and no U+0000"
         raise BodyError(422, "Unprocessable Content", detail)
@@ -163,7 +163,7 @@ async def post_marks(request: web.Request) -> web.Response:
 async def post_excuse(request: web.Request) -> web.Response:
     """Do not wait for a source until it speaks again."""
     runtime = runtime_of(request)
-    excuse = await _read_act(request, Excuse)
+    excuse = await read_act(request, Excuse)
     if excuse.source not in runtime.feed.state.sources.numbers:
         raise NotThere(f"no source {excuse.source[:100]!r} has been heard or expected in feed {runtime.config.name}")
     reason = excuse.reason[:REASON_CHARACTERS_AT_MOST]
@@ -178,7 +178,8 @@ async def post_drain(request: web.Request) -> web.Response:
     return web.Response(status=204)
 
 
-async def _read_act(request: web.Request, shape: type[Act]) -> Act:
+async def read_act(request: web.Request, shape: type[Act]) -> Act:
+    """The small JSON body of an act. Raises BodyError."""
     body = await read_body(request, ACT_BYTES_AT_MOST)
     try:
         return msgspec.json.decode(body, type=shape)

@@ -18,6 +18,8 @@ import msgspec
 
 Tokens = tuple[str, ...]
 
+TOKENS_AT_MOST = 200  # the most that `nesting_at_most` can be
+
 _BAD_ESCAPE = re.compile("~(?![01])")
 _INDEX = re.compile("0|[1-9][0-9]*")
 # Names that msgspec cannot give to a Struct's field.
@@ -61,6 +63,9 @@ def parse_pointer(text: str) -> Tokens:
         raise PointerError(f"{text!r} is no JSON Pointer: '~' at character {bad.start()} must be '~0' or '~1'")
     if not text.isascii() and any(0xD800 <= ord(character) < 0xE000 for character in text):
         raise PointerError(f"{text!r} names half a surrogate pair, which no JSON text can contain")
+    steps = text.count("/")
+    if steps > TOKENS_AT_MOST:
+        raise PointerError(f"the pointer has {steps} steps, and no event is nested deeper than {TOKENS_AT_MOST}")
     return tuple(token.replace("~1", "/").replace("~0", "~") for token in text.split("/")[1:])
 
 

@@ -68,7 +68,7 @@ class CaptureWriter:
     def __init__(
         self, write: Callable[[bytes], object], meta: Meta, *, state: Sequence[Buffer] = (), held: bytes = b""
     ) -> None:
-        """`state` is what `core.saved.save` gave at `meta.start_lsn`, `held` the lines of `held_lines` with line feeds."""
+        """`state` is what `core.saved.save` gave at `meta.start_lsn`, `held` the lines of `held_lines`."""
         if meta.record_version != VERSION:
             raise CaptureError(f"records of version {meta.record_version} cannot be written, only {VERSION}")
         self.meta = meta
@@ -91,7 +91,7 @@ class CaptureWriter:
         return self._sections.bytes_written
 
     def add(self, kind: int, version: int, lsn: int, body: Buffer) -> None:
-        """One record of the journal, the next one. Raises CaptureError for a version that this program does not know."""
+        """One record of the journal, the next one. Raises CaptureError for a version that is not read here."""
         if version != VERSION:
             raise CaptureError(f"the record at position {lsn} is of version {version}; this program reads {VERSION}")
         gathered = self._gathered
@@ -238,7 +238,7 @@ class Capture:
             yield block
 
     def line_sections(self) -> list[tuple[int, int]]:
-        """Where the lines' sections begin, counted over all bytes of lines, and how many bytes each holds; ascending."""
+        """Where the sections of lines begin, counted over all bytes of lines, and how long each is; ascending."""
         return [(section.summary.first_line, section.plain_bytes) for section in self._lines]
 
     def line_section(self, number: int) -> memoryview:

@@ -52,7 +52,7 @@ class ReorderDensity:
 
 @dataclass(frozen=True, slots=True)
 class OccupancyDensity:
-    """RBD: after counts[b] arrivals b numbers were kept back. `occupancy` has a value a row, -1 where it was ignored."""
+    """RBD: after counts[b] arrivals b were kept back. `occupancy` has a value a row, -1 where it was ignored."""
 
     counts: Int64s
     occupancy: Int64s
@@ -70,14 +70,14 @@ class OccupancyDensity:
 
 
 def ranks(times: Int64s) -> Int64s:
-    """Event times as sequence numbers from 0 on: equal times by order of arrival, so there is no loss and no duplicate."""
+    """Event times as sequence numbers from 0 on: equal times by order of arrival, so without loss or duplicates."""
     numbers = np.empty(len(times), dtype=np.int64)
     numbers[np.argsort(times, kind="stable")] = np.arange(len(times))
     return numbers
 
 
 def reorder_density(numbers: Int64s, threshold: int) -> ReorderDensity:
-    """RD with displacement threshold DT. Raises ValueError for a threshold below 0 or above 10^7, or numbers beyond 2^62."""
+    """RD with displacement threshold DT. Raises ValueError for one below 0 or above 10^7, or numbers beyond 2^62."""
     _require(numbers, threshold)
     receive_index, displacement = np.full((2, len(numbers)), NOT_COUNTED, dtype=np.int64)
     kept = first_copies(numbers)
@@ -184,7 +184,7 @@ def _complete(numbers: Int64s, limit: int) -> Int64s | None:
 
 
 def _keep_back(numbers: Int64s, limit: int, expected: int) -> Int64s:
-    """Section 7.2, arrival by arrival; while nothing is kept back, whole stretches without a break are passed on at once."""
+    """Section 7.2, arrival by arrival; while nothing is kept back, stretches without a break are passed on at once."""
     occupancy = np.full(len(numbers), -1, dtype=np.int64)
     breaks = np.append(np.flatnonzero(numbers[1:] != numbers[:-1] + 1) + 1, len(numbers))
     buffered: set[int] = set()
@@ -192,7 +192,7 @@ def _keep_back(numbers: Int64s, limit: int, expected: int) -> Int64s:
     row = 0
     ends = iter(breaks.tolist())
     end = next(ends)
-    values = memoryview(np.ascontiguousarray(numbers))
+    values = np.ascontiguousarray(numbers).data
     while row < len(numbers):
         number = values[row]
         while end <= row:
@@ -236,4 +236,3 @@ def _require(numbers: Int64s, threshold: int) -> None:
         raise ValueError(f"a threshold lies between 0 and {THRESHOLD_AT_MOST}, not at {threshold}")
     if len(numbers) and not (numbers.min() >= KEY_LEAST and numbers.max() <= KEY_GREATEST):
         raise ValueError("numbers must lie between -2^62 and 2^62")
-

@@ -65,7 +65,7 @@ class Holds(Histogram):
 
 @dataclass(slots=True)
 class Figures:
-    """The sum of a replay. Holds in ns, over the events that were released in it; late share over all that it judged."""
+    """The sum of a replay. Holds in ns, over the events that it released; late share over all that it judged."""
 
     feed: str
     from_ns: int

@@ -78,8 +78,7 @@ def capture_file(
     lines: bool = True,
     progress: Callable[[int, int], object] = lambda done, of: None,
 ) -> tuple[CaptureWriter, Skipped]:
-    """Write the capture of a file; what is in it, and what was left out. `progress` is told bytes done, and of how
-    many.
+    """Write the capture of a file; what is in it, and what was left out. `progress` is told bytes done, of how many.
 
     Raises CaptureError where the file is not in order of arrival or no line of it has an instant; OSError.
     """
@@ -143,8 +142,8 @@ class _Taker:
             row = int(back[0])
             line = self._lines + (row + 1 if came.line_numbers is None else int(came.line_numbers[row]))
             raise CaptureError(
-                f"{self._path}: line {line:,} arrived at {format_rfc3339(int(came.times[row]))}, before the line in
-                front " "of it: sort the file by the arrival time first (keep the order of equal times)"
+                f"{self._path}: line {line:,} arrived at {format_rfc3339(int(came.times[row]))}, before the line in "
+                "front of it: sort the file by the arrival time first (keep the order of equal times)"
             )
         self._newest_ns = int(came.times[-1])
 
@@ -201,8 +200,7 @@ def ndjson_pieces(file: BinaryIO, path: Path, progress: Callable[[int, int], obj
         else:
             rest += block
         if len(rest) > LINE_BYTES_AT_MOST:
-            raise CaptureError(f"{path}: a line before byte {file.tell():,} is longer than {LINE_BYTES_AT_MOST:,}
-            bytes")
+            raise CaptureError(f"{path}: a line at byte {file.tell():,} is longer than {LINE_BYTES_AT_MOST:,} bytes")
         progress(file.tell(), size)
     if rest.strip():
         yield rest + b"\n"

@@ -122,8 +122,8 @@ def _start(journal: Journal, wanted: Wanted) -> Feed:
         earliest = feed if journal.first_lsn else earliest
     if earliest is None:
         raise CaptureError(
-            f"the journal of {wanted.feed} begins at position {journal.first_lsn}, and no state is known that a capture
-            " f"could begin with ({trouble}): start the service once, which writes one"
+            f"the journal of {wanted.feed} begins at position {journal.first_lsn}, and no state is known that a "
+            f"capture could begin with ({trouble}): start the service once, which writes one"
         )
     return earliest
 

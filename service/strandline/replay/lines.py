@@ -27,7 +27,7 @@ PLACES_AT_FIRST = 4096
 
 
 class Places:
-    """Where stretches of the journal stand in a capture: columns of places and of positions of lines, both ascending."""
+    """Where stretches of the journal stand in a capture: columns of places and positions of lines, both ascending."""
 
     def __init__(self) -> None:
         self._places = np.empty(PLACES_AT_FIRST, np.int64)
@@ -72,6 +72,7 @@ class CapturedLines:
     def __init__(self, capture: Capture, names: Sequence[str]) -> None:
         self._capture, self.names = capture, names
         self.places = Places()
+        self.kept_place: int | None = None  # whoever keeps batches for a while says here from where on they need lines
         found = capture.line_sections()
         self._firsts = np.array([first for first, _ in found], np.int64)
         self._ends = np.array([first + size for first, size in found], np.int64)
@@ -83,6 +84,12 @@ class CapturedLines:
         if len(held.places):
             steps = held.lengths + 1
             self.places.note(held.places, np.cumsum(steps) - steps)
+
+    def forget_before(self, place: int | None) -> None:
+        """Nothing before this place is held (None: nothing is known to be needed, so nothing is forgotten)."""
+        needed = [each for each in (place, self.kept_place) if each is not None]
+        if needed:
+            self.places.forget_before(min(needed))
 
     def lines(self, batch: Batch) -> list[bytes]:
         """The batch's lines, or the raw lines of its entries in quarantine. Raises CaptureError."""

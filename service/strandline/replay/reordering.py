@@ -93,8 +93,7 @@ class NReordering:
 
     def _count(self, n: int) -> int:
         if not 1 <= n < self.received:
-            raise ValueError(f"n-reordering of {self.received} arrivals has an n from 1 to {self.received - 1}, not
-            {n}")
+            raise ValueError(f"of {self.received} arrivals n goes from 1 to {self.received - 1}, not {n}")
         return int(self.counts[n - 1]) if n <= len(self.counts) else 0
 
 
@@ -169,7 +168,7 @@ class Reordering:
 
     @cached_property
     def first_greater(self) -> Int64s:
-        """For each reordered arrival its reordering discontinuity: the position of the first arrival that is greater."""
+        """For each reordered arrival its reordering discontinuity: the position of the first greater arrival."""
         return first_greater(self.keys, self.reordered)
 
     @property

@@ -87,10 +87,8 @@ class Folding:
         return batches
 
     def forget(self) -> None:
-        """Lines before what is held are asked for no more (batches were looked at when they were yielded)."""
-        oldest = self.state.arrivals.oldest_place
-        if oldest is not None:
-            self.lines.places.forget_before(oldest)
+        """Lines before what is held, and before what was yielded and is still kept, are asked for no more."""
+        self.lines.forget_before(self.state.arrivals.oldest_place)
 
     def finish(self) -> None:
         """All has been folded: sum up."""
@@ -162,8 +160,7 @@ class WhatIf:
                 else:
                     yield from self._other(record)
             done += len(block.times)
-            oldest = self.feed.state.arrivals.oldest_place
-            self.lines.places.forget_before(self.feed.next_lsn if oldest is None else oldest)
+            self.lines.forget_before(self.feed.state.arrivals.oldest_place)
             progress(done)
         yield from self._pass(self.capture.last_ns)
         sum_up(self.figures, self.feed.state, self.holds, {})

@@ -1,14 +1,15 @@
 """Does the same journal give the same releases? Folds a capture, decides it anew beside that, and compares (P8).
 
-The captured records tell what came in and when. Each input is given to a feed in the same state; what it decides must be
-the records that were captured, position by position, and its batches must have the digests of the folded ones. Starts
-are inputs too; the few records before one are folded only, since the crash may have cut what was decided with them.
+The captured records tell what came in and when. Each input is given to a feed in the same state; what it decides must
+be the records that were captured, position by position, and its batches must have the digests of the folded ones.
+Starts are folded, and so are the few records before one, since the crash may have cut what was decided with them.
 """
 
 from __future__ import annotations
 
 from collections import deque
 from collections.abc import Iterator
+from itertools import islice
 from typing import NamedTuple
 
 from strandline.core.columns import Batch, RequestKey
@@ -93,21 +94,21 @@ class Verifying:
     def batches(self, progress: Progress = _quiet) -> Iterator[Batch]:
         """The folded batches, each compared with what is decided anew. Ends early where something is unlike."""
         source = self._records(progress)
-        self._window.extend(placed for placed, _ in zip(source, range(LOOK_AHEAD), strict=False))
+        self._window.extend(islice(source, LOOK_AHEAD))
         while self._window:
             try:
                 consumed, decided = self._next_input()
-                for batch in decided:
-                    self._match(batch, self._again.of(batch))
                 for _ in range(consumed):
                     placed = self._window.popleft()
                     for batch in self.told.fold(placed.block, placed.record):
                         self._match(batch, self.digests.add(batch))
                         yield batch
+                for batch in decided:
+                    self._match(batch, self._again.of(batch))
             except Unlike as error:
                 self.unlike = str(error)
                 break
-            self._window.extend(placed for _, placed in zip(range(LOOK_AHEAD - len(self._window)), source, strict=False))
+            self._window.extend(islice(source, LOOK_AHEAD - len(self._window)))
         if self._unmatched and self.unlike is None:
             (lane, number), _ = next(iter(self._unmatched.items()))
             self.unlike = f"batch {number} of lane {lane} came out on one side only"
@@ -147,8 +148,8 @@ class Verifying:
         if not appended:
             placed = self._window[0]
             raise Unlike(
-                f"the record at position {placed.record.lsn} ({Kind(placed.kind).name}) is not decided when its input is "
-                "given again"
+                f"the record at position {placed.record.lsn} ({Kind(placed.kind).name}) is not decided when its input "
+                "is given again"
             )
         found = self._feed.synced(self._feed.next_lsn)
         return len(appended), [effect.batch for effect in found if isinstance(effect, Deliver)]

@@ -19,6 +19,7 @@ from ..errors import SinkRefused, SinkRetry
 from ..ports import Clock, Lines
 from .ndjson import late_lines
 from .posting import ANSWER_BYTES_AT_MOST, SHOWN_CHARACTERS, Answered, Poster, shown_url
+from .repairs import Repair
 from .retry_after import retry_after_s
 from .rows import one_lane
 from .worker import OwnThread
@@ -99,6 +100,13 @@ class HttpSink:
                 self._reached[batch.lane] = batch.number
         return dict(self._reached)
 
+    async def repair(self, repair: Repair) -> None:
+        """Send one repair batch to the late events' URL. Raises SinkRetry and SinkRefused."""
+        body = await self._thread.run(lambda: self._packed(repair.ndjson()))
+        answered = await self._poster.post(self._urls["late"], body, self._headers_of("repair", repair.number))
+        if not 200 <= answered.status < 300:
+            self._judge("repair", repair.number, self._urls["late"], answered)
+
     async def flush(self, lines: Lines) -> dict[Lane, int]:
         """Everything that was taken was answered already."""
         return {}
@@ -113,31 +121,34 @@ class HttpSink:
     def _body(self, batch: Batch, lines: Lines) -> bytes:
         """In the thread."""
         block = lines.ndjson(batch) if batch.lane == "ordered" else late_lines(batch, lines)
+        return self._packed(block)
+
+    def _packed(self, block: bytes) -> bytes:
         return gzip.compress(block, GZIP_LEVEL, mtime=0) if self._compress else block
 
     async def _send(self, batch: Batch, body: bytes) -> None:
         url = self._urls[batch.lane]
-        answered = await self._poster.post(url, body, self._headers_of(batch))
+        answered = await self._poster.post(url, body, self._headers_of(batch.lane, batch.number))
         if not 200 <= answered.status < 300:
-            self._judge(batch, url, answered)
+            self._judge(batch.lane, batch.number, url, answered)
 
-    def _headers_of(self, batch: Batch) -> dict[str, str]:
+    def _headers_of(self, lane: str, number: int) -> dict[str, str]:
         own = {
             "Content-Type": MEDIA_TYPE,
-            "Idempotency-Key": f'"{self._feed}-{batch.lane}-{batch.number}"',
+            "Idempotency-Key": f'"{self._feed}-{lane}-{number}"',
             "Strandline-Feed": self._feed,
-            "Strandline-Lane": batch.lane,
-            "Strandline-Batch": str(batch.number),
+            "Strandline-Lane": lane,
+            "Strandline-Batch": str(number),
         }
         return self._headers | own | ({"Content-Encoding": "gzip"} if self._compress else {})
 
-    def _judge(self, batch: Batch, url: str, answered: Answered) -> None:
+    def _judge(self, lane: str, number: int, url: str, answered: Answered) -> None:
         """Raise what an answer without success means."""
         status = answered.status
-        told = f"{shown_url(url)} answered batch {batch.number} of lane {batch.lane} with {answered.told}"
+        told = f"{shown_url(url)} answered batch {number} of lane {lane} with {answered.told}"
         if 300 <= status < 400:
             location = answered.headers.get("Location", "")[:SHOWN_CHARACTERS]
             raise SinkRetry(f"{told}; redirects are not followed: name the address {location!a} itself")
         if 400 <= status < 500 and status not in TRIED_AGAIN:
-            raise SinkRefused(told, [batch.number])
+            raise SinkRefused(told, [number])
         raise SinkRetry(told, retry_after_s(answered.headers.get("Retry-After"), self._clock.now_ns()))

@@ -5,7 +5,7 @@ from __future__ import annotations
 import contextlib
 import os
 import sqlite3
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -99,6 +99,21 @@ def forget_rows(path: str | os.PathLike[str], lane: KeptLane, through: int) -> i
         connection.executescript("PRAGMA incremental_vacuum")  # `execute` would step once, which frees one page
         connection.execute("PRAGMA wal_checkpoint(TRUNCATE)").fetchall()
         return int(rows)
+
+
+def forget_exactly(path: str | os.PathLike[str], lane: KeptLane, numbers: Sequence[int]) -> int:
+    """Delete these rows of a lane, which are settled. Returns how many. Raises StrandlineError. Blocking."""
+    place = Path(path)
+    with _sentences(place), contextlib.closing(connect(place, TABLES)) as connection:
+        connection.execute("BEGIN IMMEDIATE")
+        rows = size = 0
+        for number in numbers:
+            query = f"DELETE FROM {lane} WHERE number = ? RETURNING length(CAST(event AS BLOB))"
+            gone = connection.execute(query, (number,)).fetchall()
+            rows, size = rows + len(gone), size + sum(length for (length,) in gone)
+        connection.execute("UPDATE kept SET rows = rows - ?, bytes = bytes - ? WHERE lane = ?", (rows, size, lane))
+        connection.execute("COMMIT")
+        return rows
 
 
 def _rows(path: Path, table: Table, wanted: Mapping[str, object], limit: int) -> list[tuple[Any, ...]]:

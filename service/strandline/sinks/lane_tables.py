@@ -72,7 +72,19 @@ KEPT = Table(
     ),
     options="WITHOUT ROWID",
 )
-TABLES = (LATE, QUARANTINE, REFUSED, KEPT)
+# One row a sink that takes repairs: late rows up to `through` were sent; those up to `until` are on their way in
+# batches numbered from `number` (until == through: nothing is on its way, `number` is the next one's).
+REPAIRS = Table(
+    "repairs",
+    (
+        ("sink", "TEXT NOT NULL PRIMARY KEY"),
+        ("through", "INTEGER NOT NULL"),
+        ("until", "INTEGER NOT NULL"),
+        ("number", "INTEGER NOT NULL"),
+    ),
+    options="WITHOUT ROWID",
+)
+TABLES = (LATE, QUARANTINE, REFUSED, KEPT, REPAIRS)
 
 
 @dataclass(frozen=True, slots=True)

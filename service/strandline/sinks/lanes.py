@@ -10,13 +10,22 @@ from __future__ import annotations
 import os
 import sqlite3
 from collections.abc import Sequence
+from dataclasses import dataclass
 from functools import partial
 
 from ..core.columns import Batch, Lane
 from ..errors import SinkRetry
 from ..ports import Lines
 from .database import Database, insert_columns
-from .lane_reading import ROWS_AT_MOST, forget_rows, lanes_size, late_rows, quarantine_rows, refused_rows
+from .lane_reading import (
+    ROWS_AT_MOST,
+    forget_exactly,
+    forget_rows,
+    lanes_size,
+    late_rows,
+    quarantine_rows,
+    refused_rows,
+)
 from .lane_tables import (
     LATE,
     QUARANTINE,
@@ -39,6 +48,7 @@ __all__ = [
     "LateRow",
     "QuarantineRow",
     "RefusedRow",
+    "forget_exactly",
     "forget_rows",
     "lanes_size",
     "late_rows",
@@ -113,6 +123,19 @@ class LaneStore:
         work = partial(_keep_refused, sink=sink, batches=batches, detail=detail, lines=lines)
         await self._database.transaction(work, self._measure)
 
+    async def plan_repair(self, sink: str, rows_at_most: int) -> RepairPlan:
+        """Which late rows a sink's next repairs take, durably decided; the same again until `end_repair`."""
+        return await self._database.transaction(partial(_plan_repair, sink=sink, rows_at_most=rows_at_most))
+
+    async def end_repair(self, sink: str, through: int, next_number: int) -> None:
+        """A sink has taken its repairs up to this late row."""
+        row = (sink, through, through, next_number)
+        await self._database.transaction(lambda connection: _set_repair(connection, row))
+
+    async def take_repair_numbers(self, sink: str, count: int) -> int:
+        """The first of `count` numbers of repair batches that nobody else will use."""
+        return await self._database.transaction(partial(_take_repair_numbers, sink=sink, count=count))
+
     async def close(self) -> None:
         """Release the file."""
         await self._database.close()
@@ -176,6 +199,44 @@ def _quarantine_columns(batches: Sequence[Batch], lines: Lines) -> list[list[obj
 
 def _event_bytes(batches: Sequence[Batch]) -> int:
     return sum(sum(e.length for e in batch.entries) + int(batch.refs["length"].sum()) for batch in batches)
+
+
+# ---- repairs --------------------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class RepairPlan:
+    """Late rows above `after` up to `until` go out in repair batches numbered from `number`."""
+
+    after: int
+    until: int
+    number: int
+
+
+def _repair_row(connection: sqlite3.Connection, sink: str) -> tuple[int, int, int]:
+    query = "SELECT through, until, number FROM repairs WHERE sink = ?"
+    return connection.execute(query, (sink,)).fetchone() or (0, 0, 1)
+
+
+def _set_repair(connection: sqlite3.Connection, row: tuple[str, int, int, int]) -> None:
+    connection.execute("INSERT OR REPLACE INTO repairs VALUES (?,?,?,?)", row)
+
+
+def _plan_repair(connection: sqlite3.Connection, *, sink: str, rows_at_most: int) -> RepairPlan:
+    through, until, number = _repair_row(connection, sink)
+    if until == through:
+        query = "SELECT max(number) FROM (SELECT number FROM late WHERE number > ? ORDER BY number LIMIT ?)"
+        until = connection.execute(query, (through, rows_at_most)).fetchone()[0] or through
+        _set_repair(connection, (sink, through, until, number))
+    return RepairPlan(through, until, number)
+
+
+def _take_repair_numbers(connection: sqlite3.Connection, *, sink: str, count: int) -> int:
+    through, until, number = _repair_row(connection, sink)
+    if until != through:
+        raise SinkRetry("repairs are on their way; try again when they have arrived")
+    _set_repair(connection, (sink, through, until, number + count))
+    return number
 
 
 # ---- what sinks refused ---------------------------------------------------------------------------------------------

@@ -25,6 +25,7 @@ from ..core.columns import Batch, Lane
 from ..errors import SinkRetry, StrandlineError
 from ..ports import Clock, Lines
 from .files import make_directory, sync_data, sync_directory
+from .repairs import Repair
 from .rows import late_by_ns, one_lane, source_column
 from .worker import OwnThread
 
@@ -103,6 +104,27 @@ class NdjsonSink:
     async def flush(self, lines: Lines) -> dict[Lane, int]:
         """Complete the files that are being written. Errors as for `take`."""
         return await self._thread.run(self._roll_all)
+
+    async def repair(self, repair: Repair) -> None:
+        """Write one repair batch as a file of its own, complete or absent; one that is there already is a repeat."""
+        await self._thread.run(lambda: self._repair(repair))
+
+    def _repair(self, repair: Repair) -> None:
+        number = f"{repair.number:0{_DIGITS}}"
+        path = self._directory / f"{self._prefix}-repair-{number}-{number}.ndjson"
+        beside = path.with_name(f"{path.name}.part")
+        if path.exists():
+            return
+        try:
+            descriptor = os.open(beside, os.O_WRONLY | os.O_CREAT | os.O_TRUNC | os.O_CLOEXEC, 0o644)
+            with os.fdopen(descriptor, "wb") as file:
+                file.write(repair.ndjson())
+                file.flush()
+                sync_data(file.fileno())
+            beside.rename(path)
+            sync_directory(self._directory)
+        except OSError as error:
+            raise self._trouble(error) from error
 
     async def close(self) -> None:
         """Release the folder; what is not complete is removed, and will be taken again."""

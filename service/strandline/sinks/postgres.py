@@ -5,8 +5,10 @@ Needs the extra `postgres` (asyncpg). Tables, positions and errors are `postgres
 
 from __future__ import annotations
 
+import asyncio
 import contextlib
 from collections.abc import Iterator, Sequence
+from typing import Any
 
 from ..core.columns import Batch, Lane
 from ..errors import SinkRefused, SinkRetry, StrandlineError
@@ -131,27 +133,40 @@ class PostgresSink:
             connection = await self._connected()
             fresh = [batch for batch in batches if batch.number > self._positions[batch.lane]]
             if fresh:
-                make = self._rows.ordered if fresh[0].lane == "ordered" else self._rows.late
-                tables = await self._thread.run(lambda: make(fresh, lines))
-                await self._write(connection, fresh[0].lane, fresh[-1].number, tables)
+                await self._write(connection, fresh, lines)
 
-    async def _write(self, connection: Connection, lane: Lane, number: int, tables: Sequence[Rows]) -> None:
-        """One transaction: the position first, which locks it, then the rows."""
+    async def _write(self, connection: Connection, batches: Sequence[Batch], lines: Lines) -> None:
+        """One transaction: the position first, which locks it, then the rows, made in the thread a piece ahead."""
+        lane, number = batches[0].lane, batches[-1].number
         reached = self._positions[lane]
+        pieces = self._rows.pieces(batches, lines, ROWS_AT_ONCE)
+        tables = await self._piece(pieces)
         await connection.execute("BEGIN")
         place = (self._feed, lane, self._stored[lane])
         if await connection.execute(self._moving, *place, number, reached) != "UPDATE 1":
             raise self._moved(lane)
-        for rows in tables:
-            for piece in rows.pieces(ROWS_AT_ONCE):
-                await connection.copy_records_to_table(
-                    rows.table, schema_name=self._schema, columns=rows.names, records=piece
-                )
+        while tables:
+            ahead = asyncio.create_task(self._piece(pieces))
+            try:
+                await self._copy(connection, tables)
+                tables = await ahead
+            finally:
+                await _ended(ahead)
         self._possible[lane] = {reached, number}
         if await connection.execute("COMMIT") != "COMMIT":
             raise SinkRetry(f"{self._place}: the server undid the transaction")
         self._positions[lane] = number
         self._possible[lane] = {number}
+
+    async def _piece(self, pieces: Iterator[list[Rows]]) -> list[Rows]:
+        """The next piece; empty when there is none."""
+        return await self._thread.run(lambda: next(pieces, []))
+
+    async def _copy(self, connection: Connection, tables: Sequence[Rows]) -> None:
+        for rows in tables:
+            await connection.copy_records_to_table(
+                rows.table, schema_name=self._schema, columns=rows.names, records=rows.records()
+            )
 
     # ---- connecting -------------------------------------------------------------------------------------------------
 
@@ -216,6 +231,14 @@ class PostgresSink:
         if not batches or not lies_in_rows(error, self._own_keys):
             return None
         return SinkRefused(f"{self._place} refuses the rows: {error}", [batch.number for batch in batches])
+
+
+async def _ended(task: asyncio.Task[Any]) -> None:
+    """Give it up, unless it has ended; an error of its own is told by whoever awaits it, or by nobody."""
+    task.cancel()
+    await asyncio.wait([task])
+    if not task.cancelled():
+        task.exception()
 
 
 def _settled(columns: Sequence[Column]) -> list[Column]:

@@ -125,11 +125,11 @@ class Settlement:
 
     def too_large(self) -> bool:
         """The receiver wants smaller requests. False if there is none that is smaller."""
-        part = self._parts[-1]
-        if len(part.indices) == 1:
+        whole = self._parts[-1].tails_of or self._parts[-1]
+        if len(whole.indices) == 1:
             return False
         self._parts.pop()
-        self._halve(part)
+        self._halve(whole)
         return True
 
     def _halve(self, part: Part) -> None:
