@@ -10,7 +10,7 @@ from dataclasses import dataclass
 
 from helpers_service import DEADLINE_S, FEED, NDJSON
 
-_STATUS = re.compile(rb"HTTP/1\.[01] ([0-9]{3}) [^\r\n]*\r\n")
+_STATUS = re.compile(rb"HTTP/[0-9]\.[0-9] ([0-9]{3}) [^\r\n]*")
 
 
 @dataclass(frozen=True, slots=True)

@@ -39,6 +39,7 @@ from .slack_answer import get_slack
 
 log = logging.getLogger("strandline")
 TICK_S = 0.25
+LINGER_S = 2.0  # what still comes after a request was refused is read so long: else its sender might miss the answer
 BACKLOG = 1024  # connections that the kernel may keep until they are taken
 SHUTDOWN_WITHIN_S = 2.0  # for requests and streams that do not end by themselves once the feeds are closed
 EXIT_FAILED = 3
@@ -147,6 +148,7 @@ class Service:
             access_log=None,
             auto_decompress=False,  # bodies are decompressed by our own code, within limits
             keepalive_timeout=limits.idle_connection_within_ns / 1e9,
+            lingering_time=LINGER_S,
         )
         loop = asyncio.get_running_loop()
         self._listener = await loop.create_server(connections, listen.host, listen.port, backlog=BACKLOG)

@@ -66,6 +66,7 @@ def parser() -> argparse.ArgumentParser:
     _add_check(commands)
     _add_capture(commands)
     _add_replay(commands)
+    _add_advise(commands)
     _add_lane(commands, "late", "events that came too late to be put in order", "late event", "source")
     _add_lane(commands, "quarantine", "lines that could not be events of their feed", "line in quarantine", "reason")
     _add_lane(commands, "refused", "events of batches that a sink refused for good", "refused event", "sink")
@@ -189,6 +190,25 @@ def _add_replay(commands: Any) -> None:
     replay.add_argument("--json", action="store_true", help="the answer as one JSON object")
 
 
+def _add_advise(commands: Any) -> None:
+    about = (
+        "Says how long a feed should wait so that at most a wanted share of its events is late: chosen on the\n"
+        "first part of a capture, verified on the rest. Exit code 1 where that was missed or cannot be shown."
+    )
+    example = "  strandline advise yesterday.capture --late-share 0.001 --at-most 30s"
+    advise = _add(commands, "advise", "how long to wait, from a capture", about, example, _advise)
+    advise.add_argument("capture_file", type=Path, metavar="CAPTURE", help="what `strandline capture` made")
+    advise.add_argument("--late-share", type=amount, required=True, metavar="SHARE", help="late at most, such as 0.001")
+    advise.add_argument("--at-most", type=hold, metavar="TIME", help="the longest wait, such as 30s")
+    advise.add_argument("--learn", type=amount, default=2 / 3, metavar="PART", help="to choose on (default: 0.667)")
+    advise.add_argument("--clock", choices=("event", "arrival"), help="(default: the captured feed's, else event)")
+    advise.add_argument("--idle-after", type=hold, metavar="TIME", help="(default: the captured feed's, else 30s)")
+    advise.add_argument("--sources", type=count, default=4, metavar="N", help="sources to look at (default: 4)")
+    advise.add_argument("--quick", action="store_true", help="only the choice: no other slacks, no sources")
+    advise.add_argument("--reordering", action="store_true", help="figures of RFC 4737 and RFC 5236 as well")
+    advise.add_argument("--json", action="store_true", help="the answer as one JSON object")
+
+
 def _add_lane(commands: Any, lane: str, things: str, thing: str, narrow: str) -> None:
     """`late`, `quarantine` and `refused`: list, export, forget."""
     group = commands.add_parser(lane, help=f"look at {things}", description=f"Look at {things}.")
@@ -297,6 +317,12 @@ def _replay(options: argparse.Namespace) -> int:
     from .cli_replay import replay  # noqa: PLC0415
 
     return replay(options)
+
+
+def _advise(options: argparse.Namespace) -> int:
+    from .cli_advise import advise_on  # noqa: PLC0415
+
+    return advise_on(options)
 
 
 def _on_lane(work: str, lane: str) -> Command:

@@ -15,7 +15,7 @@ from typing import Any, cast
 import msgspec
 from aiohttp import web
 
-from .problems import problem
+from .problems import of_http, problem
 
 log = logging.getLogger(__name__)
 # For segments, stores and programs' own files: each feed maps up to 64 segments, and each sink opens a few.
@@ -83,6 +83,15 @@ class _Handler(web.RequestHandler):
         answer = problem(status, HTTPStatus(status).phrase, f"the request cannot be read: {ascii(why)[1:-1]}")
         answer.force_close()
         return answer
+
+
+    async def finish_response(
+        self, request: web.BaseRequest, resp: web.StreamResponse, start_time: float | None
+    ) -> tuple[web.StreamResponse, bool]:
+        """Send an answer; what aiohttp refused before any handler (an `Expect` that it does not know) as a problem."""
+        if isinstance(resp, web.HTTPException) and resp.status >= 400:
+            resp = of_http(request, resp)
+        return await super().finish_response(request, resp, start_time)
 
 
 class _Refusal(asyncio.Protocol):

@@ -59,6 +59,12 @@ def refused(error: Refused) -> web.Response:
     return problem(status, title, error.detail, kind=error.reason, headers=headers)
 
 
+def of_http(request: web.BaseRequest, error: web.HTTPException) -> web.Response:
+    """One of aiohttp's own errors."""
+    kept = {name: value for name, value in error.headers.items() if name in ("Allow", "Retry-After")}
+    return problem(error.status, error.reason, _detail(request, error), headers=kept)
+
+
 @web.middleware
 async def as_problems(request: web.Request, handler: Handler) -> web.StreamResponse:
     """Turn every error of a handler, and of the router, into problem details."""
@@ -78,8 +84,7 @@ async def as_problems(request: web.Request, handler: Handler) -> web.StreamRespo
     except web.HTTPException as error:
         if error.status < 400:
             raise
-        kept = {name: value for name, value in error.headers.items() if name in ("Allow", "Retry-After")}
-        return problem(error.status, error.reason, _detail(request, error), headers=kept)
+        return of_http(request, error)
     except StrandlineError as error:
         return problem(503, "Service Unavailable", str(error), headers={"Retry-After": "5"})
     except Exception:
@@ -89,7 +94,7 @@ async def as_problems(request: web.Request, handler: Handler) -> web.StreamRespo
         return problem(500, "Internal Server Error", "an unforeseen error; the service's log has the details")
 
 
-def _detail(request: web.Request, error: web.HTTPException) -> str:
+def _detail(request: web.BaseRequest, error: web.HTTPException) -> str:
     if error.status == 404:
         return f"nothing is served at {request.path[:200]}; /openapi.json lists what is"
     if error.status == 405:

@@ -1,4 +1,4 @@
-"""The fuzz lane in CI's budget: 100,000 inputs from fixed numbers, and 2,000 requests over sockets. More: tests/fuzz.py.
+"""The fuzz lane in CI's budget: 100,000 inputs of fixed numbers, and 2,000 requests over sockets. More: tests/fuzz.py.
 
 The laws stand with the targets; here it is asked that every outcome comes up, that nothing stays behind, and that the
 lane finds what it is for.
@@ -19,8 +19,8 @@ from fuzz_targets import Target
 from helpers_raw import LAST, Reply, chunked, exchange, post, replies
 from helpers_service import FEED, PROBLEM, body_of, configuration, event_line, running
 
-# Statuses that the OpenAPI document has, and 404 and 405 of addresses that it does not have.
-STATUSES = {200, 204, 400, 404, 405, 408, 409, 410, 413, 415, 422, 429, 503}
+# Statuses that the OpenAPI document has, 404 and 405 of addresses that it does not have, and the answers to Expect.
+STATUSES = {100, 417, 200, 204, 400, 404, 405, 408, 409, 410, 413, 415, 422, 429, 503}
 REQUESTS, AT_A_TIME = 2_000, 40
 
 
@@ -72,15 +72,16 @@ SEEDS = (
     post(json.dumps({"source": "gw-1", "reason": "x"}).encode(), FEED_PATH + "/excuse"),
     post(b"", FEED_PATH + "/drain"),
     f"GET {FEED_PATH}/late?after=0&limit=5 HTTP/1.1\r\nhost: a\r\n\r\n".encode(),
-    f"GET {FEED_PATH}/ordered?after=99 HTTP/1.1\r\nhost: a\r\n\r\n".encode(),
+    f"GET {FEED_PATH}/sources?after=99 HTTP/1.1\r\nhost: a\r\n\r\n".encode(),
     b"GET /metrics HTTP/1.1\r\nhost: a\r\naccept: application/openmetrics-text\r\n\r\n",
     b"OPTIONS * HTTP/1.1\r\nhost: a\r\n\r\n",
-    b"HEAD /health/ready HTTP/1.0\r\n\r\n",
+    b"GET /health/ready HTTP/1.0\r\n\r\n",
 )
 HTTP_TOKENS = (
-    *TOKENS, b"HTTP/1.1", b"content-length: 5\r\n", b"transfer-encoding: chunked\r\n", b"\r\n\r\n", b"GET ", b"%00", b"?",
-    b"upgrade: websocket\r\nconnection: upgrade\r\n", b"host: b\r\n", b"\t", b"content-encoding: gzip\r\n", b"%zz", b"//",
-    b"ffffffffffffffff\r\n", b"-1\r\n", b"expect: x\r\n", b"ce-id: 1\r\n", b"connection: close\r\n", b"a" * 9000, b"..",
+    *TOKENS, b"HTTP/1.1", b"content-length: 5\r\n", b"transfer-encoding: chunked\r\n", b"\r\n\r\n", b"GET ", b"%00",
+    b"upgrade: websocket\r\nconnection: upgrade\r\n", b"host: b\r\n", b"\t", b"content-encoding: gzip\r\n", b"%zz",
+    b"ffffffffffffffff\r\n", b"-1\r\n", b"expect: x\r\n", b"ce-id: 1\r\n", b"connection: close\r\n", b"a" * 9000,
+    b"..", b"//", b"?",
 )  # fmt: skip
 
 

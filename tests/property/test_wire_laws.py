@@ -1,4 +1,4 @@
-"""However a body comes over the wire, it is the same arrival (DESIGN section 6): real HTTP, cut anywhere into pieces."""
+"""However a body comes over the wire, it is one arrival (DESIGN section 6): real HTTP, cut into pieces anywhere."""
 
 from __future__ import annotations
 

@@ -192,7 +192,7 @@ def test_the_two_denominators_of_table_1() -> None:
 
 
 def test_gap_time_of_table_4() -> None:
-    """The RFC prints no clock for table 4; with one of 10 ns an arrival the gap of 7 positions lasts 70 ns (derived)."""
+    """The RFC prints no clock for table 4: with 10 ns an arrival the gap of 7 positions lasts 70 ns (derived)."""
     keys = np.array(EXAMPLES["table 4"].keys, dtype=np.int64)
     found = Reordering(keys, 10 * np.arange(len(keys))).discontinuities
     assert found.gap_times_ns is not None and found.gap_times_ns.tolist() == [0, 70]

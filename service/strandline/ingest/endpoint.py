@@ -10,7 +10,6 @@ import hashlib
 import re
 from collections.abc import Iterator
 from contextlib import contextmanager
-from dataclasses import asdict
 from typing import TypeVar
 
 import msgspec
@@ -75,7 +74,7 @@ async def post_events(request: web.Request) -> web.Response:
             arrival = await _arrival(request, runtime, body, media_type)
         # Nothing awaits between decoding and the core: the numbers of new sources are still right.
         outcome = await runtime.arrive(arrival, key)
-    return web.Response(body=msgspec.json.encode(asdict(outcome)), content_type="application/json")
+    return web.Response(body=msgspec.json.encode(outcome), content_type="application/json")
 
 
 async def _arrival(request: web.Request, runtime: FeedRuntime, body: bytes, media_type: str) -> Arrival:

@@ -224,6 +224,13 @@ class Block:
                 yield Record(kind, lsn, -1, self._smalls[begin:end])
                 small, begin = small + 1, end
 
+    def smalls(self, *kinds: Kind) -> Iterator[tuple[Kind, memoryview]]:
+        """The records of these kinds, which are no arrivals' and no mark's, without a look at the others."""
+        small = self.kinds[self.kinds != Kind.ARRIVAL]
+        for place in np.flatnonzero(np.isin(small, kinds)).tolist():
+            begin = self._small_ends[place - 1] if place else 0
+            yield Kind(int(small[place])), self._smalls[begin : self._small_ends[place]]
+
     def event_arrivals(self) -> Int64s:
         """The arrival clock of each event's request."""
         return np.repeat(self.arrived, self.counts)

@@ -37,7 +37,7 @@ class Holds(Histogram):
     def add(self, values: Int64s, times: Int64s | None = None) -> None:
         """Count a column, each value once or `times` times."""
         super().add(values, times)
-        if not len(values):
+        if len(values) < 2:  # one value is counted by `add_same`, which the line above calls
             return
         weights = np.ones(len(values)) if times is None else times
         self.fine += np.bincount(self.buckets.places(values), weights, len(self.fine)).astype(np.int64)

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 from collections import deque
 from collections.abc import Iterator
-from itertools import islice
+from itertools import islice, takewhile
 from typing import NamedTuple
 
 from strandline.core.columns import Batch, RequestKey
@@ -191,8 +191,18 @@ class Verifying:
             names = decode_small(Kind.SOURCES, first.record.body)
             assert isinstance(names, SourcesRecord)
             return self._act(decode_small(Kind.PROMISE, following.record.body), names.names[0])
+        return self._time_goes_on(first)
+
+    def _time_goes_on(self, first: Placed) -> list[Effect]:
+        """A tick; or a drain with nothing to let go, which alone can move the watermark then."""
         instant = first.instant_ns
-        return [] if instant is None else self._feed.tick(instant)
+        if instant is None:
+            return []
+        own = takewhile(lambda placed: placed.kind in (Kind.IDLE, Kind.MARK), self._window)
+        marked = any(placed.kind == Kind.MARK and placed.instant_ns == instant for placed in own)
+        if marked and not self._feed.state.runs.held:
+            return self._feed.drain(instant, 0)
+        return self._feed.tick(instant)
 
     def _act(self, record: object, source: str | None = None) -> list[Effect]:
         names = self._feed.state.sources.names

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import asyncio
 import contextlib
-from collections.abc import Iterator, Sequence
+from collections.abc import AsyncGenerator, Iterator, Sequence
 from typing import Any
 
 from ..core.columns import Batch, Lane
@@ -140,33 +140,45 @@ class PostgresSink:
         lane, number = batches[0].lane, batches[-1].number
         reached = self._positions[lane]
         pieces = self._rows.pieces(batches, lines, ROWS_AT_ONCE)
-        tables = await self._piece(pieces)
+        first = await self._piece(pieces)
         await connection.execute("BEGIN")
         place = (self._feed, lane, self._stored[lane])
         if await connection.execute(self._moving, *place, number, reached) != "UPDATE 1":
             raise self._moved(lane)
-        while tables:
-            ahead = asyncio.create_task(self._piece(pieces))
-            try:
-                await self._copy(connection, tables)
-                tables = await ahead
-            finally:
-                await _ended(ahead)
+        beside: list[Rows] = []
+        async with contextlib.aclosing(self._records(first, pieces, beside)) as records:
+            await self._copy(connection, first[0], records)
+        for rows in beside:
+            await self._copy(connection, rows, rows.records())
         self._possible[lane] = {reached, number}
         if await connection.execute("COMMIT") != "COMMIT":
             raise SinkRetry(f"{self._place}: the server undid the transaction")
         self._positions[lane] = number
         self._possible[lane] = {number}
 
+    async def _records(
+        self, tables: list[Rows], pieces: Iterator[list[Rows]], beside: list[Rows]
+    ) -> AsyncGenerator[tuple[Any, ...], None]:
+        """The records of the first table, piece by piece; what belongs to another is put into `beside`."""
+        while tables:
+            ahead = asyncio.create_task(self._piece(pieces))
+            try:
+                beside += tables[1:]
+                for record in tables[0].records():
+                    yield record
+                tables = await ahead
+                await asyncio.sleep(0)  # while the server keeps up, nothing else here lets the loop turn
+            finally:
+                await _ended(ahead)
+
     async def _piece(self, pieces: Iterator[list[Rows]]) -> list[Rows]:
         """The next piece; empty when there is none."""
         return await self._thread.run(lambda: next(pieces, []))
 
-    async def _copy(self, connection: Connection, tables: Sequence[Rows]) -> None:
-        for rows in tables:
-            await connection.copy_records_to_table(
-                rows.table, schema_name=self._schema, columns=rows.names, records=rows.records()
-            )
+    async def _copy(self, connection: Connection, rows: Rows, records: Any) -> None:
+        await connection.copy_records_to_table(
+            rows.table, schema_name=self._schema, columns=rows.names, records=records
+        )
 
     # ---- connecting -------------------------------------------------------------------------------------------------
 

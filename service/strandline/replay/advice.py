@@ -1,0 +1,385 @@
+"""Advice on how long to wait: chosen on the first part of a feed, verified on the rest. Pure: columns in, figures out.
+
+The slack is the least that would have kept the wanted late share on the first part, rounded up to three digits; then
+each event of the rest is judged by it, and the share found there has Wilson's interval (`intervals`). Nothing of the
+rest has a say in the choice. What each source costs is found by leaving it out and choosing again (`costs`).
+
+What is exact: late events of the second part (counted one by one), and whose they are. The choice lies within the
+sketch's relative error (0.1 %) above the least slack there is. Not followed: repeated events, promises, excuses and
+`hold_at_most`; a watermark is taken to follow its basis at once (`slacks` says what that means). The interval presumes
+that events are late independently of each other; where they are late in bursts the tenths of the second part show it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass
+from itertools import pairwise
+from typing import Literal, NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .basis import NO_BASIS, ArrivalClock, Basis, LeastOfSources, NewestOfAll, Requests
+from .intervals import order_statistics, wilks, wilson
+from .sketch import LatenessSketch
+from .slacks import SLACK_NS_AT_MOST, BasisName, SlackFigure, SlackFigures
+
+Int64s = NDArray[np.int64]
+Blocks = Callable[[], Iterator[Requests]]  # the feed from its begin, as often as it is asked for
+Verdict = Literal["shown", "open", "missed", "contradiction", "too_short"]
+
+RELATIVE_ERROR = 0.001
+LEARN_PART = 2 / 3
+CONFIDENCE = 0.95
+DIGITS = 3
+TENTHS = 10
+VERDICTS: dict[Verdict, str] = {
+    "shown": "the whole interval lies at or below the target: what was chosen on the first part holds on the second",
+    "open": "the target lies within the interval: the second part agrees with it, but does not prove it",
+    "missed": "the whole interval lies above the target: the feed has changed, or its late events come in bursts",
+    "contradiction": "target and longest wait contradict each other: even the longest wait gives more late events",
+    "too_short": "the capture is too short for this claim: capture for longer, or ask for a larger share",
+}
+
+
+class Rule(NamedTuple):
+    """What the watermark follows."""
+
+    basis: BasisName
+    idle_after_ns: int | None = None
+
+    def begin(self) -> Basis:
+        """The basis of a feed that begins."""
+        if self.basis == "arrival":
+            return ArrivalClock()
+        return NewestOfAll() if self.basis == "event" else LeastOfSources(self.idle_after_ns)
+
+
+class Wanted(NamedTuple):
+    """What is asked for. Raises nothing; `advise` does."""
+
+    late_share: float
+    at_most_ns: int | None = None
+    learn_part: float = LEARN_PART
+    confidence: float = CONFIDENCE
+
+
+@dataclass(slots=True)
+class Part:
+    """A part of the feed by the arrival clock, its last instant included only in the second part."""
+
+    from_ns: int
+    to_ns: int
+    events: int = 0
+    late: int = 0  # with the slack chosen
+
+
+@dataclass(slots=True)
+class Advice:
+    """The slack chosen, and what came of it out of sample. Times in ns."""
+
+    wanted: Wanted
+    rule: Rule
+    first: Part
+    second: Part
+    slack_ns: int  # at most `wanted.at_most_ns`
+    least_ns: int  # before it was rounded up or cut
+    interval_ns: tuple[int, int] | None  # the least slack as sure as `confidence`; None where events are too few
+    late_share: float
+    interval: tuple[float, float]
+    verdict: Verdict
+    events_needed: int  # in each part, for a claim to be possible at all (Wilks)
+    attainable: float | None  # late share of the first part with the longest wait, where it binds
+    tenths: list[Part]
+
+
+def advise(blocks: Blocks, span_ns: tuple[int, int], rule: Rule, wanted: Wanted) -> Advice:
+    """Choose on the first part of the feed, verify on the rest, in one pass.
+
+    `span_ns`: the first and the last arrival. Raises ValueError for a share outside of 0 to 1 or a part without events.
+    """
+    if not 0 < wanted.late_share < 1:
+        raise ValueError(f"a late share lies between 0 and 1, not at {wanted.late_share}")
+    if not 0 < wanted.learn_part < 1:
+        raise ValueError(f"the part to choose on lies between 0 and 1, not at {wanted.learn_part}")
+    if wanted.at_most_ns is not None and not 0 <= wanted.at_most_ns <= SLACK_NS_AT_MOST:
+        raise ValueError("the longest wait lies between 0 and 73 years")
+    cut_ns = cut_of(span_ns, wanted.learn_part)
+    first, second = Part(span_ns[0], cut_ns), Part(cut_ns, span_ns[1])
+    tenths = _tenths(second)
+    bounds = np.array([part.from_ns for part in tenths[1:]], dtype=np.int64)
+    sketch = LatenessSketch(RELATIVE_ERROR)
+    chosen: int | None = None
+    for block, lateness in judged(blocks(), rule):
+        row = row_of(block, cut_ns)
+        sketch.add(lateness[:row])
+        if row == len(lateness):
+            continue
+        chosen = _cut(sketch, wanted) if chosen is None else chosen
+        late = lateness[row:] > chosen
+        _count(tenths, bounds, _row_instants(block)[row:], late)
+        second.late += int(np.count_nonzero(late))
+        second.events += len(late)
+    if chosen is None or not sketch.events or not second.events:
+        raise ValueError(f"{sketch.events:,} events to choose on and {second.events:,} to verify on: one part is empty")
+    first.events, first.late = sketch.events, round(sketch.late_share(chosen).at_most * sketch.events)
+    return _advice(rule, wanted, first, second, tenths, sketch, chosen)
+
+
+def cut_of(span_ns: tuple[int, int], learn_part: float) -> int:
+    """The instant at which the second part begins."""
+    return span_ns[0] + max(1, round((span_ns[1] - span_ns[0]) * learn_part))
+
+
+def row_of(block: Requests, cut_ns: int) -> int:
+    """The first row that arrived at this instant or later."""
+    request = int(np.searchsorted(block.instants, cut_ns))
+    return int(block.starts[request]) if request < len(block.starts) else len(block.times)
+
+
+def judged(blocks: Iterator[Requests], rule: Rule) -> Iterator[tuple[Requests, Int64s]]:
+    """Each block and the lateness of its events, at least 0."""
+    basis = rule.begin()
+    for block in blocks:
+        if len(block.times):
+            moves = basis.add(block)
+            yield block, np.maximum(_by_row(block, moves.before) - block.times, 0)
+
+
+def rounded_up(ns: int) -> int:
+    """The next number up that has three digits, for people to read and paste."""
+    step: int = 10 ** max(0, len(str(ns)) - DIGITS)
+    return -(-ns // step) * step
+
+
+def _cut(sketch: LatenessSketch, wanted: Wanted) -> int:
+    chosen = rounded_up(sketch.slack_for(wanted.late_share))
+    return chosen if wanted.at_most_ns is None else min(chosen, wanted.at_most_ns)
+
+
+def _tenths(second: Part) -> list[Part]:
+    bounds = [second.from_ns + (second.to_ns - second.from_ns) * tenth // TENTHS for tenth in range(TENTHS + 1)]
+    return [Part(begin, end) for begin, end in pairwise(bounds)]
+
+
+def _count(tenths: list[Part], bounds: Int64s, instants: Int64s, late: NDArray[np.bool_]) -> None:
+    places = np.searchsorted(bounds, instants, side="right")
+    counts = np.bincount(places, minlength=TENTHS)
+    lates = np.bincount(places[late], minlength=TENTHS)
+    for part, events, found in zip(tenths, counts.tolist(), lates.tolist(), strict=True):
+        part.events += events
+        part.late += found
+
+
+def _advice(
+    rule: Rule, wanted: Wanted, first: Part, second: Part, tenths: list[Part], sketch: LatenessSketch, chosen: int
+) -> Advice:
+    share, needed = wanted.late_share, wilks(1 - wanted.late_share, wanted.confidence)
+    found = wilson(second.late, second.events, wanted.confidence)
+    binds = wanted.at_most_ns is not None and sketch.late_share(wanted.at_most_ns).at_least > share
+    verdict: Verdict = "shown" if found[1] <= share else "open" if found[0] <= share else "missed"
+    if min(first.events, second.events) < needed:
+        verdict = "too_short"
+    if binds:
+        verdict = "contradiction"
+    ranks = order_statistics(sketch.events, 1 - share, wanted.confidence)
+    return Advice(
+        wanted=wanted,
+        rule=rule,
+        first=first,
+        second=second,
+        slack_ns=chosen,
+        least_ns=sketch.slack_for(share),
+        interval_ns=None if ranks is None else (_of_rank(sketch, ranks[0]), _of_rank(sketch, ranks[1])),
+        late_share=second.late / second.events,
+        interval=found,
+        verdict=verdict,
+        events_needed=needed,
+        attainable=first.late / first.events if binds else None,
+        tenths=tenths,
+    )
+
+
+def _of_rank(sketch: LatenessSketch, rank: int) -> int:
+    place = int(np.searchsorted(np.cumsum(sketch.counts), rank))
+    return min(int(sketch.buckets.upper[place]), sketch.lateness_ns_max)
+
+
+def _by_row(block: Requests, column: Int64s) -> Int64s:
+    if len(block.starts) == len(block.times):
+        return column
+    return np.repeat(column, np.diff(block.starts, append=len(block.times)))
+
+
+def _row_instants(block: Requests) -> Int64s:
+    return _by_row(block, block.instants)
+
+
+# ---- other slacks, and what sources have to do with it --------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class Alternative:
+    """Another slack: late shares of both parts exactly, hold and held over the whole feed."""
+
+    slack_ns: int
+    first_share: float
+    second_share: float
+    figure: SlackFigure
+
+
+@dataclass(slots=True)
+class SourceCost:
+    """A source: its events, those late with the slack chosen, its mean delay, and what would be without it. In ns."""
+
+    source: int
+    events: int
+    late: int
+    delay_ns_mean: float
+    slack_without_ns: int | None = None  # chosen again, without its events
+    lag_saved_ns: float | None = None  # by which the watermark would follow more closely, mean over time
+    late_if_excused: int | None = None  # of its own events, with the slack chosen and nobody waiting for it
+
+
+@dataclass(frozen=True, slots=True)
+class Comparison:
+    """Other slacks, ascending; the sources that cost most; how far the basis lies behind the arrival clock."""
+
+    alternatives: list[Alternative]
+    sources: list[SourceCost]
+    sources_known: int
+    lag_ns_mean: float
+
+
+def compare(blocks: Blocks, advice: Advice, slacks_ns: Sequence[int], sources_at_most: int) -> Comparison:
+    """A second pass: what other slacks would give, and which sources are to be looked at; a third one for those."""
+    cut_ns, rule = advice.second.from_ns, advice.rule
+    grid = sorted({*slacks_ns, advice.slack_ns})
+    figures = SlackFigures(grid, rule.basis, idle_after_ns=rule.idle_after_ns if rule.basis == "sources" else None)
+    edges = np.array(grid, dtype=np.int64)
+    late = np.zeros((2, len(grid) + 1), dtype=np.int64)
+    sums = _SourceSums()
+    for block in blocks():
+        if not len(block.times):
+            continue
+        instants = _row_instants(block)
+        lateness = figures.add(block.times, instants, starts=block.starts, sources=block.sources)
+        row = row_of(block, cut_ns)
+        for part, rows in enumerate((lateness[:row], lateness[row:])):
+            late[part] += np.bincount(np.searchsorted(edges, rows), minlength=len(grid) + 1)
+        sums.add(block, instants, lateness > advice.slack_ns)
+    beyond = late[:, ::-1].cumsum(axis=1)[:, ::-1][:, 1:]  # later than each slack of the grid
+    shares = beyond / late.sum(axis=1, keepdims=True)
+    alternatives = [
+        Alternative(figure.slack_ns, float(shares[0, place]), float(shares[1, place]), figure)
+        for place, figure in enumerate(figures.figures())
+    ]
+    costs = sums.chosen(sources_at_most)
+    if len(sums.events) > 1:
+        _leave_out(blocks, advice, costs)
+    return Comparison(alternatives, costs, int(np.count_nonzero(sums.events)), figures.lag_ns_mean)
+
+
+class _SourceSums:
+    """Events, late events and delays by source number."""
+
+    def __init__(self) -> None:
+        self.events = self.late = np.zeros(0, dtype=np.int64)
+        self.delay = np.zeros(0)
+
+    def add(self, block: Requests, instants: Int64s, late: NDArray[np.bool_]) -> None:
+        if block.sources is None:
+            return
+        size = max(len(self.events), int(block.sources.max()) + 1)
+        if size > len(self.events):
+            more = size - len(self.events)
+            self.events, self.late = (np.append(c, np.zeros(more, np.int64)) for c in (self.events, self.late))
+            self.delay = np.append(self.delay, np.zeros(more))
+        self.events += np.bincount(block.sources, minlength=size)
+        self.late += np.bincount(block.sources[late], minlength=size)
+        self.delay += np.bincount(block.sources, (instants - block.times).astype(np.float64), size)
+
+    def chosen(self, at_most: int) -> list[SourceCost]:
+        """Half of them those with most late events, the others those with the longest mean delay."""
+        mean = self.delay / np.maximum(self.events, 1)
+        heard = np.flatnonzero(self.events)
+        by_late = heard[np.lexsort((-mean[heard], -self.late[heard]))].tolist()
+        by_delay = heard[np.argsort(-mean[heard], kind="stable")].tolist()
+        numbers = by_late[: (at_most + 1) // 2]
+        numbers += [number for number in by_delay if number not in numbers][: at_most - len(numbers)]
+        return [
+            SourceCost(number, int(self.events[number]), int(self.late[number]), float(mean[number]))
+            for number in numbers
+        ]
+
+
+class _Without:
+    """The feed without one source: its lateness sketch on the first part, its lag, and the source's own lateness."""
+
+    def __init__(self, source: int, advice: Advice) -> None:
+        self.source, self.advice = source, advice
+        self.sketch = LatenessSketch(RELATIVE_ERROR)
+        self.late_if_excused = 0
+        self._basis = advice.rule.begin()
+        self._lag = self._span = 0.0
+        self._last: tuple[int, int] | None = None  # instant, and where the basis stood from then on
+
+    def add(self, block: Requests) -> None:
+        """The next block of the whole feed; it has events."""
+        assert block.sources is not None
+        own = block.sources == self.source
+        others, kept = _picked(block, ~own) if own.any() else (block, np.arange(len(block.starts)))
+        before = after = np.empty(0, dtype=np.int64)
+        if len(others.times):
+            moves = self._basis.add(others)
+            before, after = moves.before, moves.after
+            lateness = np.maximum(_by_row(others, before) - others.times, 0)
+            self.sketch.add(lateness[: row_of(others, self.advice.second.from_ns)])
+        if own.any():
+            stood = np.concatenate(([NO_BASIS if self._last is None else self._last[1]], after))
+            request = np.searchsorted(kept, np.arange(len(block.starts)))  # of the others', those before it
+            late = _by_row(block, stood[request])[own] - block.times[own] > self.advice.slack_ns
+            self.late_if_excused += int(np.count_nonzero(late))
+        if len(others.times):
+            self._measure_lag(others.instants, after)
+
+    def _measure_lag(self, instants: Int64s, after: Int64s) -> None:
+        """Add the area between the arrival clock and the basis; it is taken to stand still between two requests."""
+        if self._last is not None:
+            instants = np.concatenate(([self._last[0]], instants))
+            after = np.concatenate(([self._last[1]], after))
+        spans = np.diff(instants).astype(np.float64)
+        self._lag += float(spans @ ((instants - after)[:-1] + spans / 2))
+        self._span += float(spans.sum())
+        self._last = int(instants[-1]), int(after[-1])
+
+    @property
+    def lag_ns_mean(self) -> float | None:
+        """How far the basis lies behind the arrival clock, mean over time; None where no time has passed."""
+        return self._lag / self._span if self._span else None
+
+
+def _picked(block: Requests, rows: NDArray[np.bool_]) -> tuple[Requests, Int64s]:
+    """The block with these rows only, and which of its requests are left."""
+    counts = np.add.reduceat(rows.astype(np.int64), block.starts)
+    kept = np.flatnonzero(counts)
+    starts = (np.cumsum(counts) - counts)[kept]
+    sources = None if block.sources is None else block.sources[rows]
+    return Requests(block.times[rows], starts, block.instants[kept], sources), kept
+
+
+def _leave_out(blocks: Blocks, advice: Advice, costs: list[SourceCost]) -> None:
+    """Choose again without each of these sources, all of them in one pass."""
+    whole = _Without(-1, advice)
+    without = [_Without(cost.source, advice) for cost in costs]
+    for block in blocks():
+        if len(block.times):
+            for each in (whole, *without):
+                each.add(block)
+    for cost, each in zip(costs, without, strict=True):
+        if each.sketch.events:
+            cost.slack_without_ns = rounded_up(each.sketch.slack_for(advice.wanted.late_share))
+        if each.lag_ns_mean is not None and whole.lag_ns_mean is not None:
+            cost.lag_saved_ns = whole.lag_ns_mean - each.lag_ns_mean
+            cost.late_if_excused = each.late_if_excused
