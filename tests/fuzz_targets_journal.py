@@ -215,7 +215,9 @@ def _restore(body: bytes) -> str:
 
 
 TARGETS: dict[str, Target] = {
-    "folders": Target(3_000, _damaged, _recover, frozenset({"refused", "whole", "prefix", "needs its snapshot"}), 4 * 2**20),
+    "folders": Target(
+        3_000, _damaged, _recover, frozenset({"refused", "whole", "prefix", "needs its snapshot"}), 4 * 2**20
+    ),
     "records": Target(1_500, _record, _read_record, frozenset({"refused", "good"})),
     "snapshots": Target(500, _snapshot, _restore, frozenset({"refused", "good"}), 8 * 2**20),
 }

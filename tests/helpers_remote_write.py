@@ -80,7 +80,11 @@ def request(*series: tuple[dict[str, str], Sequence[tuple[int, float]]]) -> byte
 
 @dataclass(slots=True)
 class Model:
-    """The head of a store: what it takes, and in which words it refuses. `window_ms`: its own out-of-order window."""
+    """The head of a store: what it takes, and in which words it refuses. `window_ms`: its own out-of-order window.
+
+    With a window, the store answers two values at one time of a series without a word, and what it then shows at that
+    time is not modelled.
+    """
 
     window_ms: int = 0
     series: dict[Labels, dict[int, float]] = field(default_factory=dict)  # all that is stored
@@ -92,18 +96,19 @@ class Model:
         """One request: all of it or nothing."""
         self.requests.append(body)
         found = decoded(body)
+        first = next((time_ms for _, samples in found for time_ms, _ in samples), 0)
+        newest = first if self.newest_ms is None else self.newest_ms  # before this request
         for labels, samples in found:
             for time_ms, value in samples:
-                refusal = self._refusal(labels, time_ms, value)
+                refusal = self._refusal(labels, time_ms, value, newest)
                 if refusal is not None:
                     return refusal
         for labels, samples in found:
             for time_ms, value in samples:
-                self._store(labels, time_ms, value)
+                self._store(labels, time_ms, value, newest)
         return OK
 
-    def _refusal(self, labels: Labels, time_ms: int, value: float) -> Told | None:
-        newest = time_ms if self.newest_ms is None else self.newest_ms
+    def _refusal(self, labels: Labels, time_ms: int, value: float, newest: int) -> Told | None:
         if time_ms >= newest - BOUNDS_MS:
             last = self.last.get(labels)
             if last is None or time_ms > last[0]:
@@ -114,11 +119,11 @@ class Model:
             return None if time_ms >= newest - self.window_ms else TOO_OLD
         return OUT_OF_BOUNDS if time_ms < newest - BOUNDS_MS else OUT_OF_ORDER
 
-    def _store(self, labels: Labels, time_ms: int, value: float) -> None:
+    def _store(self, labels: Labels, time_ms: int, value: float, newest: int) -> None:
         last = self.last.get(labels)
         if last is None or time_ms > last[0]:
             self.last[labels] = (time_ms, value)
-        elif not self.window_ms:
+        elif not self.window_ms or time_ms < newest - self.window_ms:
             return  # disorder inside one request is dropped without a word
         self.series.setdefault(labels, {}).setdefault(time_ms, value)
         self.newest_ms = time_ms if self.newest_ms is None else max(self.newest_ms, time_ms)

@@ -14,12 +14,13 @@ from pathlib import Path
 import msgspec
 from sim_clients import Habits
 from sim_stores import ReceiverConfig
-from strandline.config_model import EventTime, Feed, Journal, NdjsonConfig, SinkConfig, SqliteConfig
+from strandline.config_model import EventTime, Feed, Journal, NdjsonConfig, SinkConfig, SqliteConfig, SteeredSlack
 from strandline_loadgen.shapes import SHAPES, shape
 from strandline_loadgen.trace import Trace
 
 SECOND_NS = 1_000_000_000
 FEED = "river-gauges"
+STEERED = SteeredSlack(0.1, 4 * SECOND_NS)
 FOR_EVER_NS = 400 * 86_400 * SECOND_NS
 # A request of 5 events of 120 bytes with a faulty line, its small records and the headroom of the segment sizes below.
 REQUEST_BYTES = 2300
@@ -51,7 +52,7 @@ class Scenario:
         """A configuration; what cannot change while the service runs stays as it was `before`."""
         choice = self.chance.choice
         chosen: dict[str, object] = {
-            "slack_ns": choice((0, 10**7, 5 * 10**8, 2 * SECOND_NS, 6 * SECOND_NS, 20 * SECOND_NS)),
+            "slack_ns": choice((0, 10**7, 5 * 10**8, 2 * SECOND_NS, 6 * SECOND_NS, 20 * SECOND_NS, STEERED)),
             "idle_after_ns": choice((10**7, 3 * 10**8, 2 * SECOND_NS, 30 * SECOND_NS, 30 * SECOND_NS)),
             "hold_at_most_ns": choice((10**7, 3 * SECOND_NS, 20 * SECOND_NS, 20 * SECOND_NS)),
             "ahead_limit_ns": choice((0, 5 * 10**8, 5 * SECOND_NS, FOR_EVER_NS)),
@@ -61,6 +62,7 @@ class Scenario:
             "undelivered_events_at_most": choice((1, 2, 5, 20, 10_000, 10_000)),
             "sources_at_most": choice((2, 10_000, 10_000, 10_000)),
             "batch_events_at_most": choice((1, 2, 3, 50_000)),
+            "batch_bytes_at_most": choice((200, 2**25)),
             **self.fixed,
         }
         if before is not None:
@@ -74,7 +76,7 @@ class Scenario:
         at_most_bytes = segment_bytes * self.chance.choice((2, 3, 6, 100))
         if segment_bytes < REQUEST_BYTES:  # else two segments must do, as the configuration promises
             at_most_bytes = max(at_most_bytes, 4 * REQUEST_BYTES)
-        return Journal(segment_bytes, at_most_bytes)
+        return Journal(segment_bytes, at_most_bytes, self.chance.choice((0, 0, 2 * SECOND_NS, 100 * SECOND_NS)))
 
     def sinks(self, folder: Path) -> tuple[SinkConfig, ...]:
         """One to three stores."""

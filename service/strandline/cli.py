@@ -105,6 +105,7 @@ def _add(commands: Any, name: str, help: str, about: str, example: str, command:
 def _add_serve(commands: Any) -> None:
     about = (
         "Takes events over HTTP, puts each feed in order, and writes it to the feed's sinks.\n"
+        "Says on stdout where it listens, once it does: with port 0 in `listen`, the free one that it got.\n"
         "Stops on Ctrl-C or SIGTERM, after what was released has been written (at most `drain_at_most`).\n"
         "A second signal stops at once; nothing that was answered is lost by that."
     )

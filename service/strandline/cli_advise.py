@@ -210,7 +210,7 @@ def _lines(capture: Capture, advice: Advice, answer: dict[str, Any]) -> Iterator
     if advice.attainable is not None:
         yield f"          the longest wait gives {advice.attainable:.3g}; the target needs {_time(advice.least_ns)}"
     if "lag_ns_mean" in answer:
-        yield f"lag       what the watermark follows is {_time(answer['lag_ns_mean'])} behind the arrival clock on average"
+        yield f"lag       what the watermark follows is {_time(answer['lag_ns_mean'])} behind the clock, on average"
     yield f"read in   {answer['seconds']:.2f} s, {answer['events_per_s']:,.0f} events/s"
 
 

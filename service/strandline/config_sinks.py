@@ -182,6 +182,19 @@ class SeriesConfig(msgspec.Struct, frozen=True):
         return SeriesRule(self.name, self.value, self.labels)
 
 
+class RemoteLateConfig(LateConfig, frozen=True):
+    """What becomes of late events. A receiver takes them only with an out-of-order window of its own."""
+
+    deliver: Annotated[
+        Literal["keep", "lane", "repair"],
+        Key(
+            choice("keep", "lane", "repair"),
+            "`keep`: they stay in the lane store; `lane`: sent as they come, in requests of their own; `repair`: sent "
+            "now and then, in batches of one partition",
+        ),
+    ] = "keep"
+
+
 class RemoteWriteConfig(SinkConfig, frozen=True, kw_only=True):
     """Samples of series to a receiver of remote writes 1.0, in order. Needs the extra `remote_write`."""
 
@@ -189,14 +202,7 @@ class RemoteWriteConfig(SinkConfig, frozen=True, kw_only=True):
     url: Annotated[str, Key(url(), "the receiver's address for writes, such as `http://127.0.0.1:9090/api/v1/write`")]
     series: Annotated[tuple[SeriesConfig, ...], Tables({"": SeriesConfig})] = ()
     external_labels: Annotated[Pairs, Key(labels(label_value()), "labels that every series gets")] = ()
-    late: Annotated[
-        Literal["keep", "send"],
-        Key(
-            choice("keep", "send"),
-            "what becomes of late events: kept in the late lane only, or sent too, in requests of their own; the "
-            "receiver then needs an out-of-order window of its own",
-        ),
-    ] = "keep"
+    late: Annotated[RemoteLateConfig, Table(RemoteLateConfig)] = RemoteLateConfig()
     samples_at_most: Annotated[int, Key(count(1, 100_000), "samples in one request")] = 2_000
     ahead_at_most_ns: Annotated[
         int, Key(duration("0s", "30d"), "a sample further beyond the receiver's clock is not sent")

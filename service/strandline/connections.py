@@ -84,7 +84,6 @@ class _Handler(web.RequestHandler):
         answer.force_close()
         return answer
 
-
     async def finish_response(
         self, request: web.BaseRequest, resp: web.StreamResponse, start_time: float | None
     ) -> tuple[web.StreamResponse, bool]:

@@ -57,7 +57,7 @@ class Housekeeper:
                 f"{self._journal.first_lsn}; restore the folder from a copy"
             )
         folded = 0
-        for frame in self._journal.frames(self._feed.next_lsn, known=True):
+        for frame in self._journal.frames(self._feed.next_lsn, known=True, just_read=True):
             self._feed.fold(frame.kind, frame.version, frame.body, frame.lsn)
             folded += 1
         if self._retention.retain_ns:

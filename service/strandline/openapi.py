@@ -125,10 +125,35 @@ def _again() -> Json:
     return paths
 
 
+def _streams() -> Json:
+    ordered = _query("after", "batches behind this number; without it those released from now on", _WHOLE)
+    return {
+        "/v1/feeds/{feed}/ordered": _get(
+            "The ordered output as it is released, without end",
+            {
+                **_answer("one JSON line an event", {"type": "string"}, "application/x-ndjson"),
+                **_problems(400, 404, 410),
+            },
+            [_FEED, ordered],
+        ),
+        "/v1/feeds/{feed}/capture": _get(
+            "A capture of what the feed takes in from now on",
+            {
+                **_answer("the capture, as it is recorded", {"type": "string"}, "application/octet-stream"),
+                **_problems(400, 404, 429, 503),
+            },
+            [
+                _FEED,
+                _query("seconds", "how long (60)", {"type": "integer", "minimum": 1, "maximum": 86_400}),
+                _query("events", "0: without the events' bytes", {"type": "integer", "minimum": 0, "maximum": 1}),
+            ],
+        ),
+    }
+
+
 def _paths() -> Json:
     document: Json = {"type": "object"}
     source = _query("source", "only this source", {"type": "string"})
-    ordered = _query("after", "batches behind this number; without it those released from now on", _WHOLE)
     return {
         "/v1/feeds/{feed}/events": _events(),
         "/v1/feeds/{feed}/marks": _act("Promise: nothing older will come from this source", "Promise"),
@@ -160,26 +185,7 @@ def _paths() -> Json:
             {**_answer("events, with sink and reason", document), **_problems(400, 404, 503)},
             [_FEED, *_PAGE, _query("sink", "only what this sink refused", {"type": "string"})],
         ),
-        "/v1/feeds/{feed}/ordered": _get(
-            "The ordered output as it is released, without end",
-            {
-                **_answer("one JSON line an event", {"type": "string"}, "application/x-ndjson"),
-                **_problems(400, 404, 410),
-            },
-            [_FEED, ordered],
-        ),
-        "/v1/feeds/{feed}/capture": _get(
-            "A capture of what the feed takes in from now on",
-            {
-                **_answer("the capture, as it is recorded", {"type": "string"}, "application/octet-stream"),
-                **_problems(400, 404, 429, 503),
-            },
-            [
-                _FEED,
-                _query("seconds", "how long (60)", {"type": "integer", "minimum": 1, "maximum": 86_400}),
-                _query("events", "0: without the events' bytes", {"type": "integer", "minimum": 0, "maximum": 1}),
-            ],
-        ),
+        **_streams(),
         "/metrics": _get("Metrics", _answer("exposition format", {"type": "string"}, "text/plain")),
         "/health/live": _get("The process is alive", _answer("alive", document)),
         "/health/ready": _get("Ready to take events", {**_answer("ready", document), **_problems(503)}),

@@ -11,13 +11,13 @@ import asyncio
 import contextlib
 import logging
 import random
-from collections.abc import Awaitable, Callable, Sequence
+from collections.abc import Awaitable, Callable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
 from .core.columns import Batch, Lane
 from .errors import SinkRefused, SinkRetry, StrandlineError
-from .ports import Lines, Sink
+from .ports import Counting, Lines, Sink
 from .sinks.lanes import ROWS_AT_MOST, LaneStore, late_rows, refused_rows
 from .sinks.repairs import Repair, RepairRow, TakesRepairs, cut
 
@@ -58,6 +58,10 @@ class WithoutLate:
     async def close(self) -> None:
         """As the sink."""
         await self.sink.close()
+
+    def counts(self) -> Mapping[str, int]:
+        """As the sink, if it counts."""
+        return self.sink.counts() if isinstance(self.sink, Counting) else {}
 
 
 @dataclass(frozen=True, slots=True)

@@ -21,7 +21,7 @@ SLACKS_AT_MOST = 100
 GRID_NS = (0, *(step * 10**power for power in range(6, 13) for step in (1, 2, 5)))
 BASIS = {
     "arrival": "the arrival clock: lateness is the time from the event to its arrival",
-    "event": "the least of the newest event times of the sources waited for: lateness is how far behind it an event came",
+    "event": "the least of the newest event times of the sources waited for: lateness is how far behind it an event is",
 }
 # What of the answer is exact, in words for a person; deploy/advice.md says more.
 EXACT = (
@@ -31,7 +31,7 @@ EXACT = (
     "where the slack is a bucket's bound. Quantiles of lateness are within the relative error from 1 us to 366 days; a "
     "shorter lateness counts as none. Not foreseen: what hold_at_most, excuses and promises would do with another "
     "slack; they only make events later, as do the steps in which a watermark moves less often than its basis. "
-    "Older events fade: at each full hour all weigh half, while more than 100,000 are remembered."
+    "Older events fade: at the first arrival of each hour all weigh half, if more than 100,000 are remembered."
 )
 
 

@@ -50,8 +50,18 @@ def test_a_quantile_is_within_the_relative_error(column: list[int], error: float
             assert abs(found - exact) <= error * exact * (1 + 1e-9)
 
 
-@given(column=columns, error=errors, slack=st.one_of(st.integers(0, 300), st.integers(0, VALUE_MAX)))
-def test_the_late_share_lies_between_the_bounds(column: list[int], error: float, slack: int) -> None:
+@given(
+    column=columns,
+    error=errors,
+    slack=st.one_of(st.integers(0, 300), st.integers(0, VALUE_MAX)),
+    near=st.none() | st.tuples(st.integers(0, 59), st.floats(0.9, 1.1)),
+)
+def test_the_late_share_lies_between_the_bounds(
+    column: list[int], error: float, slack: int, near: tuple[int, float] | None
+) -> None:
+    """Of any slack, and of one that lies in the same bucket as some value, or in the next."""
+    if column and near:
+        slack = min(VALUE_MAX, max(0, round(column[near[0] % len(column)] * near[1])))
     sketch = sketch_of(column, error)
     share = sum(value > slack for value in column) / len(column) if column else 0.0
     bounds = sketch.late_share(slack)

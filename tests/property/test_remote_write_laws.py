@@ -65,7 +65,7 @@ def feed_of(drawn: list[list[tuple[int, str, bool, bool]]], lane: Lane = "ordere
     return feed
 
 
-def make(server: Served, place: Path, late: str = "keep") -> RemoteWriteSink:
+def make(server: Served, place: Path) -> RemoteWriteSink:
     return RemoteWriteSink(
         server.url,
         "river",
@@ -73,13 +73,12 @@ def make(server: Served, place: Path, late: str = "keep") -> RemoteWriteSink:
         RULES,
         place / "progress.db",
         external_labels=(("site", "north"),),
-        late=late,  # type: ignore[arg-type]
         samples_at_most=6,
     )
 
 
 async def deliver(
-    server: Served, place: Path, feed: Feed, restarts: Callable[[], bool], late: str = "keep"
+    server: Served, place: Path, feed: Feed, restarts: Callable[[], bool]
 ) -> tuple[dict[tuple[int, int], str], list[dict[str, int]]]:
     """Offer everything, as delivery does, until it is settled; refused rows, and the counts of every process.
 
@@ -90,7 +89,7 @@ async def deliver(
     counts: list[dict[str, int]] = []
     left = list(feed.batches)
     offered = 0
-    sink = make(server, place, late)
+    sink = make(server, place)
     told = (await sink.open()).get(feed.batches[0].lane, 0)
     for group_size in itertools.cycle([3, 1, 2]):
         left = [batch for batch in left if batch.number > told]
@@ -115,7 +114,7 @@ async def deliver(
         if ended or restarts():
             counts.append(sink.counts())
             await sink.close()
-            sink = make(server, place, late)
+            sink = make(server, place)
             position = (await sink.open()).get(feed.batches[0].lane)
             assert position is None or position >= told
     counts.append(sink.counts())
@@ -220,7 +219,7 @@ def test_late_samples_go_where_a_window_takes_them(
             newest_there = {labels_of("level", "a"): 10_000_000}
             feed = feed_of(drawn, "late", backwards=True)
             server.script, restarts = fault_script(faults)
-            refused, _ = await deliver(server, place, feed, restarts, late="send")
+            refused, _ = await deliver(server, place, feed, restarts)
             held = stored(server.model)
             for key, (value, row) in feed.samples.items():
                 assert held.get(key) == value or row in refused

@@ -6,9 +6,11 @@ import asyncio
 import json
 from pathlib import Path
 
+import pyarrow
 import pytest
 from helpers_captures import figures_of, folded
 from helpers_service import BEGIN_S, FEED, body_of, configuration, event_line, eventually, problem_of, running
+from pyarrow import parquet
 from strandline.core.records import Kind, SourcesRecord, decode_small
 from strandline.errors import CaptureError
 from strandline.journal.disk import LocalDisk
@@ -44,7 +46,8 @@ async def lived(service, clock: Hands, first: int, requests: int) -> None:
     """Requests a second apart, each with an event of two gauges, one of them out of order."""
     for second in range(first, first + requests):
         clock.ns = (BEGIN_S + second) * SECOND_NS
-        assert (await service.post("events", body_of(event_line(second), event_line(second - second % 3, "gw-2")))).status == 200
+        body = body_of(event_line(second), event_line(second - second % 3, "gw-2"))
+        assert (await service.post("events", body)).status == 200
 
 
 def counts(path: Path) -> tuple[int, int, int]:
@@ -223,11 +226,12 @@ def test_a_file_out_of_order_of_arrival_is_told_with_its_line(tmp_path: Path) ->
 
 def test_a_request_is_one_however_the_file_is_read(tmp_path: Path) -> None:
     filler = "x" * 100_000
-    lines = [line(index // 30, index, note=filler) for index in range(3 * PIECE_BYTES // 100_000)]
+    lines = [line(index // 30, index, f"gw-{index % 7}", note=filler) for index in range(3 * PIECE_BYTES // 100_000)]
     path, _ = from_lines(tmp_path, *lines)
     found = requests_of(path)
     assert [request[0] for request in found] == sorted({index // 30 for index in range(len(lines))})
     assert [len(request[1]) for request in found[:-1]] == [30] * (len(found) - 1)
+    assert [name for request in found for name in request[2]] == [f"gw-{index % 7}" for index in range(len(lines))]
 
 
 def test_units_and_ids(tmp_path: Path) -> None:
@@ -246,8 +250,6 @@ def test_units_and_ids(tmp_path: Path) -> None:
 
 def test_parquet_gives_what_the_same_rows_as_ndjson_give(tmp_path: Path) -> None:
     """The columns may be text or timestamps; a timestamp of any unit and zone is the same instant."""
-    pyarrow = pytest.importorskip("pyarrow")
-    parquet = pytest.importorskip("pyarrow.parquet")
     rows = [(second, second - second % 4, f"gw-{second % 3}") for second in range(50)]
     received = [(BEGIN_S + each[0]) * 1_000_000 for each in rows]
     observed = [(BEGIN_S + each[1]) * SECOND_NS for each in rows]

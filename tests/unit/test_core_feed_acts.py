@@ -1,4 +1,4 @@
-"""Acts that leave nothing to write: they are answered all the same, and at once, for no sync follows that could do it."""
+"""Acts that leave nothing to write are answered all the same, and at once: no sync follows that could do it."""
 
 from __future__ import annotations
 

@@ -105,6 +105,25 @@ async def test_an_unforeseen_error_in_a_tick_is_final_too(tmp_path: Path) -> Non
         assert "the books do not balance" in (service.service.failure or "")
 
 
+async def test_a_configuration_that_could_not_be_written_down_is_not_taken_over(
+    tmp_path: Path, caplog: pytest.LogCaptureFixture
+) -> None:
+    """Settings are records; without room for them the journal would tell another story than the service lived."""
+    disk, file = FaultyDisk(tmp_path / "data"), tmp_path / "strandline.toml"
+    async with running(small_journal(tmp_path, "1MiB"), disk=disk) as service:
+        runtime = service.runtime
+        await service.send([1])
+        file.write_text(small_journal(tmp_path, "1MiB", slack="7s"))
+        disk.fail("create", errno.ENOSPC)
+        while runtime.has_headroom():
+            runtime.carry_out(runtime.feed.promise("gw-1", 0, runtime.clock.now_ns(), 0))
+        assert service.service.reload(file, {}) is False and "no room" in caplog.text
+        assert runtime.config.slack_ns == runtime.feed.state.settings.slack_ns == 0
+        disk.heal()
+        assert service.service.reload(file, {}) is True
+        assert runtime.config.slack_ns == runtime.feed.state.settings.slack_ns == 7 * 10**9
+
+
 # ---- sinks ----------------------------------------------------------------------------------------------------------
 
 

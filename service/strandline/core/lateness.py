@@ -1,10 +1,10 @@
 """How late a feed's events have been, of late: the memory from which "what would another slack give?" is answered.
 
-One sketch a feed, whatever its slack is, filled by the fold, so a replay remembers the same. Lateness here is how far an
-event stood behind what the watermark follows (its basis), before the slack: with slack S it is late where that exceeds
-S. Older events fade: at each full hour of the arrival clock all that is remembered weighs half, while it weighs more
-than KEPT_EVENTS. So a busy feed remembers some two hours, a quiet one at least its last 100,000 events. Nothing is
-chosen here; a steered slack has a sketch of its own, whose memory fits its target.
+One sketch a feed, whatever its slack is, filled by the fold, so a replay remembers the same. Lateness here is how far
+an event stood behind what the watermark follows (its basis), before the slack: with slack S it is late where that
+exceeds S. Older events fade: at the first arrival of an hour of the arrival clock all that is remembered weighs half,
+if it weighs more than KEPT_EVENTS. So a busy feed remembers some two hours, a quiet one its last 50,000 events or more.
+Nothing is chosen here; a steered slack has a sketch of its own, whose memory fits its target.
 """
 
 from __future__ import annotations

@@ -131,8 +131,10 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
         state.lateness.restore(header["lateness"])
     newest, heard = columns.get(np.int64), columns.get(np.int64)
     active, excused = columns.get(np.bool_), columns.get(np.bool_)
-    words = [columns.get(np.int64) for _ in range(3)]
-    state.sources.restore(header["names"], newest, heard, active, excused, *words, header["newest_ns"])
+    vouched, promised, broken = (columns.get(np.int64) for _ in range(3))
+    state.sources.restore(
+        header["names"], newest, heard, active, excused, vouched, promised, broken, header["newest_ns"]
+    )
     state.arrivals.restore(columns.get(np.int64), columns.get(np.int64), columns.get(np.int64))
     state.seen.restore(columns.get(np.uint64), columns.get(np.uint64))
     for key, fingerprint, outcome, arrived_ns, end_lsn in header["keys"]:

@@ -91,16 +91,21 @@ def bytes_of(part: Buffer) -> int:
     return part.nbytes if isinstance(part, memoryview) else len(part)
 
 
-def decode_frame(view: memoryview, flat: Octets, offset: int, limit: int, lsn: int) -> Frame | None:
+def decode_frame(
+    view: memoryview, flat: Octets, offset: int, limit: int, lsn: int, *, checked: bool = False
+) -> Frame | None:
     """The frame at `offset` of a segment's view, or None where no intact frame for position `lsn` ends by `limit`.
 
-    `flat` is `octets(view)`, made once per segment by the caller.
+    `flat` is `octets(view)`, made once per segment by the caller. `checked`: it was found intact a moment ago, so its
+    CRC is not computed again.
     """
     if offset + FRAME_HEADER_BYTES > limit:
         return None
     crc, body_bytes, kind, version, zero, low = _HEADER.unpack_from(view, offset)
     end = offset + frame_bytes(body_bytes)
-    if zero or low != lsn & _LOW or end > limit or google_crc32c.value(flat[offset + 4 : end]) != crc:
+    if zero or low != lsn & _LOW or end > limit:
+        return None
+    if not checked and google_crc32c.value(flat[offset + 4 : end]) != crc:
         return None
     start = offset + FRAME_HEADER_BYTES
     return Frame(lsn, kind, version, view[start : start + body_bytes], lsn + end - offset)

@@ -40,12 +40,15 @@ class Readable:
         """Everything before this position is synced."""
         return self._durable_lsn
 
-    def frames(self, from_lsn: int | None = None, *, known: bool = False) -> Iterator[Frame]:
+    def frames(
+        self, from_lsn: int | None = None, *, known: bool = False, just_read: bool = False
+    ) -> Iterator[Frame]:
         """The frames from a position (None: from the oldest) up to what is durable now, each CRC checked, no copies.
 
         A position inside a frame begins with the next one; frames can only be found from the front, so the segment is
-        read from its start, unless it is `known` that a frame starts at the position. Raises JournalError where the
-        position is no longer kept, or where a frame is not intact.
+        read from its start, unless it is `known` that a frame starts at the position. `just_read`: the journal was opened
+        a moment ago, so what was checked then is not checked again. Raises JournalError where the position is no longer
+        kept, or where a frame is not intact.
         """
         segments, end_lsn = self._segments, self._durable_lsn
         start = from_lsn if from_lsn is not None else self.first_lsn
@@ -56,17 +59,17 @@ class Readable:
         for index in range(max(0, self._index(segments, start)), len(segments)):
             until = min(end_lsn, segments[index + 1].first_lsn) if index + 1 < len(segments) else end_lsn
             begin = max(start, segments[index].first_lsn) if known else segments[index].first_lsn
-            yield from self._frames_of(segments[index], begin, start, until)
+            yield from self._frames_of(segments[index], begin, start, until, just_read)
 
-    def _frames_of(self, segment: Segment, begin: int, start: int, until: int) -> Iterator[Frame]:
+    def _frames_of(self, segment: Segment, begin: int, start: int, until: int, just_read: bool) -> Iterator[Frame]:
         lsn = begin
         if lsn >= until:
             return
         view = self._maps.view(segment.path)
         flat = octets(view)
-        limit = segment.offset(until)
+        limit, checked = segment.offset(until), just_read and not segment.unread
         while lsn < until:
-            frame = decode_frame(view, flat, segment.offset(lsn), limit, lsn)
+            frame = decode_frame(view, flat, segment.offset(lsn), limit, lsn, checked=checked)
             if frame is None:
                 raise _changed(segment, lsn)
             if lsn >= start:

@@ -5,9 +5,11 @@ each event of the rest is judged by it, and the share found there has Wilson's i
 rest has a say in the choice. What each source costs is found by leaving it out and choosing again (`costs`).
 
 What is exact: late events of the second part (counted one by one), and whose they are. The choice lies within the
-sketch's relative error (0.1 %) above the least slack there is. Not followed: repeated events, promises, excuses and
+sketch's relative error (0.2 %) above the least slack there is. Not followed: repeated events, promises, excuses and
 `hold_at_most`; a watermark is taken to follow its basis at once (`slacks` says what that means). The interval presumes
 that events are late independently of each other; where they are late in bursts the tenths of the second part show it.
+It is the one of the second part's share with this slack; that the slack is a finding of chance too is not in it: of
+400 steady feeds of 30,000 events (target 1 %) 9 % and not 2.5 % were called missed.
 """
 
 from __future__ import annotations
@@ -37,7 +39,8 @@ TENTHS = 10
 VERDICTS: dict[Verdict, str] = {
     "shown": "the whole interval lies at or below the target: what was chosen on the first part holds on the second",
     "open": "the target lies within the interval: the second part agrees with it, but does not prove it",
-    "missed": "the whole interval lies above the target: the feed has changed, or its late events come in bursts",
+    "missed": "the whole interval lies above the target: the feed has changed, its late events come in bursts, or the "
+    "first part was short for the choice",
     "contradiction": "target and longest wait contradict each other: even the longest wait gives more late events",
     "too_short": "the capture is too short for this claim: capture for longer, or ask for a larger share",
 }
@@ -72,7 +75,7 @@ class Part:
     from_ns: int
     to_ns: int
     events: int = 0
-    late: int = 0  # with the slack chosen
+    late: int = 0  # with the slack chosen; of the first part at most so many, within a bucket of the sketch
 
 
 @dataclass(slots=True)

@@ -164,8 +164,9 @@ class _Taker:
 
     def _name(self, arrival: Arrival) -> None:
         if arrival.new_sources:
-            record = SourcesRecord(len(self._numbers), list(arrival.new_sources))
-            self._numbers.update((name, len(self._numbers) + n) for n, name in enumerate(arrival.new_sources))
+            first = len(self._numbers)
+            record = SourcesRecord(first, list(arrival.new_sources))
+            self._numbers.update((name, first + number) for number, name in enumerate(arrival.new_sources))
             kind, body = encode_small(record)
             self._put(kind, body)
 

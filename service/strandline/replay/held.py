@@ -175,9 +175,8 @@ class Held:
             if freed is not None:
                 self._bytes.integral[slack] -= float(steps.spans @ freed)
         let_go -= self._arrivals[gone]
-        places = self.buckets.places(let_go)
-        places *= was_held
-        self._counts[slack] += np.bincount(places, minlength=len(self.buckets))
+        # An event that was not held at all came when the basis had reached it: a hold of 0 and less, counted as 0.
+        self._counts[slack] += self.buckets.counts(let_go)
         self._counts[slack, 0] -= len(was_held) - int(released[-1])
 
     def _forget(self) -> None:

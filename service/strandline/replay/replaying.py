@@ -8,9 +8,11 @@ anything; a pass over a capture holds one block, the feed's state and the places
 
 from __future__ import annotations
 
+import struct
 from collections.abc import Callable, Iterator
 from dataclasses import asdict, replace
 
+import msgspec
 import numpy as np
 from numpy.typing import NDArray
 
@@ -40,6 +42,7 @@ from .figures import Figures, Holds, sum_up
 from .lines import CapturedLines
 
 TICK_NS = 250_000_000  # the service's own (app.TICK_S)
+NOT_FOLLOWING = (AssertionError, ValueError, LookupError, struct.error, msgspec.MsgspecError)
 Progress = Callable[[int], object]  # told the events done so far
 
 
@@ -107,11 +110,15 @@ def fold_into(state: State, block: Block, record: Record) -> list[Batch]:
             case small:
                 state.fold_small(decode_small(small, record.body))
                 return []
-    except (AssertionError, ValueError, LookupError) as error:
-        raise CaptureError(
-            f"the record at position {record.lsn} does not follow from those before it ({type(error).__name__}: "
-            f"{error}): the capture was put together by another program, or this is a fault of this one"
-        ) from error
+    except NOT_FOLLOWING as error:
+        raise _does_not_follow(record, error) from error
+
+
+def _does_not_follow(record: Record, error: Exception) -> CaptureError:
+    return CaptureError(
+        f"the record at position {record.lsn} does not follow from those before it ({type(error).__name__}: {error}): "
+        "the capture was put together by another program, or this is a fault of this one"
+    )
 
 
 def note_places(lines: CapturedLines, block: Block, record: Record, place: int) -> None:
@@ -154,11 +161,11 @@ class WhatIf:
         done = 0
         for block in self.capture.blocks():
             for record in block.records():
-                if record.kind == Kind.ARRIVAL:
-                    yield from self._pass(int(block.arrived[record.request]))
-                    yield from self._arrive(block, record)
-                else:
-                    yield from self._other(record)
+                try:
+                    batches = list(self._next(block, record))
+                except NOT_FOLLOWING as error:
+                    raise _does_not_follow(record, error) from error
+                yield from batches
             done += len(block.times)
             self.lines.forget_before(self.feed.state.arrivals.oldest_place)
             progress(done)
@@ -166,6 +173,13 @@ class WhatIf:
         sum_up(self.figures, self.feed.state, self.holds, {})
 
     # ---- inputs ---------------------------------------------------------------------------------------------------
+
+    def _next(self, block: Block, record: Record) -> Iterator[Batch]:
+        if record.kind == Kind.ARRIVAL:
+            yield from self._pass(int(block.arrived[record.request]))
+            yield from self._arrive(block, record)
+        else:
+            yield from self._other(record)
 
     def _arrive(self, block: Block, record: Record) -> list[Batch]:
         size = int(block.payload_bytes[record.request])

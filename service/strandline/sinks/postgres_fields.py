@@ -15,6 +15,7 @@ from typing import Annotated, Any, NamedTuple
 
 import msgspec
 
+from ..core.columns import Times
 from ..ingest.pointer import Tokens, parse_pointer
 from ..ingest.timestamps import TimestampError, parse_rfc3339_column
 from .postgres_columns import Column
@@ -58,9 +59,9 @@ def storable_column(texts: Sequence[str | None]) -> list[str | None]:
     return list(texts)
 
 
-def microseconds(times_ns: Any) -> list[tuple[int]]:
-    """Times in ns since 1970 UTC as asyncpg's tuple form of a timestamptz takes them; rounded down."""
-    return list(zip((times_ns // 1000 - EPOCH_US).tolist(), strict=True))
+def microseconds(times: Times) -> Times:
+    """Times in ns since 1970 UTC as a timestamptz holds them: us since 2000; rounded down."""
+    return times // 1000 - EPOCH_US
 
 
 # ---- one type of column ---------------------------------------------------------------------------------------------
@@ -100,7 +101,7 @@ def _instants(values: Values) -> Values:
     rows = [row for row, value in enumerate(values) if value is not None]
     times, errors = parse_rfc3339_column([values[row] for row in rows])
     done: Values = [None] * len(values)
-    for row, instant in zip(rows, microseconds(times), strict=True):
+    for row, instant in zip(rows, microseconds(times).tolist(), strict=True):
         done[row] = instant
     for index in errors:
         done[rows[index]] = UNFIT

@@ -8,7 +8,7 @@ from __future__ import annotations
 import os
 from collections.abc import Collection, Sequence
 from dataclasses import dataclass
-from typing import Any, TypeAlias
+from typing import TypeAlias
 from urllib.parse import parse_qs, unquote, urlsplit
 
 import asyncpg
@@ -66,17 +66,10 @@ async def connect(dsn: str, timeout_s: float) -> Connection:
         encoding = await connection.fetchval("SHOW server_encoding")
         if encoding != "UTF8":
             raise StrandlineError(f"the database's encoding is {encoding}, which cannot hold every event: make it UTF8")
-        await connection.set_type_codec(  # microseconds as they are: datetime objects would cost twice as much
-            "timestamptz", schema="pg_catalog", encoder=_same, decoder=_same, format="tuple"
-        )
         return connection
     except BaseException:
         connection.terminate()
         raise
-
-
-def _same(value: Any) -> Any:
-    return value
 
 
 # ---- tables ---------------------------------------------------------------------------------------------------------

@@ -14,12 +14,13 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from ..core.columns import Batch
+from ..core.columns import Batch, Times
 from ..errors import StrandlineError
 from ..ports import Lines
 from .event_fields import EventFields
 from .remote_write_series import LABEL_BYTES_AT_MOST, Pairs, SeriesRule
 from .remote_write_wire import labels_bytes
+from .repairs import Repair
 
 SERIES_KNOWN_AT_MOST = 200_000  # some 0.5 KiB each; beyond it they are forgotten, and met again as new ones
 MS_NS = 1_000_000
@@ -113,17 +114,26 @@ class SampleMaker:
         group = Group([batch.number for batch in batches], ends)
         for batch, end in zip(batches, ends, strict=True):
             if len(batch):
-                self._add(group, batch, end - len(batch), lines)
+                self._add(group, end - len(batch), batch.times, lines.ndjson(batch))
+        return self._sorted(group)
+
+    def repair(self, repair: Repair) -> Group:
+        """The samples of a repair batch."""
+        group = Group([repair.number], [len(repair.rows)])
+        times = np.array([row.time_ns for row in repair.rows], dtype=np.int64)
+        self._add(group, 0, times, b"".join(row.event + b"\n" for row in repair.rows))
+        return self._sorted(group)
+
+    def _sorted(self, group: Group) -> Group:
         if len(self._rules) > 1:
             group.samples.sort(key=itemgetter(0))
         return group
 
-    def _add(self, group: Group, batch: Batch, first_row: int, lines: Lines) -> None:
-        rows = len(batch)
-        found = self._fields.columns(lines.ndjson(batch), rows)
-        if len(found[0]) != rows:
-            raise StrandlineError(f"batch {batch.number} has {rows} events, but the journal gave {len(found[0])} lines")
-        times_ms = (batch.times // MS_NS).tolist()  # rounded down, before 1970 too
+    def _add(self, group: Group, first_row: int, times: Times, block: bytes) -> None:
+        found = self._fields.columns(block, len(times))
+        if len(found[0]) != len(times):
+            raise StrandlineError(f"{len(times)} events were asked for, but the journal gave {len(found[0])} lines")
+        times_ms = (times // MS_NS).tolist()  # rounded down, before 1970 too
         for number in range(len(self._rules)):
             self._add_rule(group, number, first_row, times_ms, found)
 
