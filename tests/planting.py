@@ -6,7 +6,6 @@ A piece that is not there, or not only once, is an error: then the code has chan
 from __future__ import annotations
 
 import __future__
-
 import inspect
 import textwrap
 from collections.abc import Iterator
@@ -36,7 +35,8 @@ class Change:
         times = source.count(self.old)
         assert times == 1, f"{self.old!r} stands {times} times in {function.__qualname__}: plant it anew"
         text = source.replace(self.old, self.new)
-        code = compile(text, f"<planted in {function.__qualname__}>", "exec", __future__.annotations.compiler_flag, True)
+        flags = __future__.annotations.compiler_flag
+        code = compile(text, f"<planted in {function.__qualname__}>", "exec", flags, dont_inherit=True)
         names: dict[str, Any] = {}
         exec(code, function.__globals__, names)
         return names[function.__name__]

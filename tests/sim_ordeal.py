@@ -63,6 +63,11 @@ class Told(Story):
     def _weather(self) -> Weather:
         return Ordeal(self._at, self.met)
 
+    def note_durable(self) -> None:
+        """What the journal says is durable now must stay."""
+        if self.process is not None:
+            self.history.durable(self.process.runtime.journal.durable_lsn)
+
     def tell(self) -> None:
         """From the first start to the end, with a stop in the middle; starts again where it has ended."""
         for requests in (4, 4, 4):
@@ -119,6 +124,44 @@ def holds(disk: SimDisk, story: Told) -> None:
 
 
 def crashed(disk: SimDisk, choose: Choose) -> SimDisk:
+    """The disk as one of the many power failures now would leave it."""
     return disk.crash(
         choose, torn_sectors=bool(choose(2)), any_order=bool(choose(2)), flipped_bits=bool(choose(2))
     )
+
+
+# ---- what is done to the story at its operations --------------------------------------------------------------------
+
+
+def each_fails_once(folder: Path, kind: str) -> None:
+    """Each operation of a kind fails in a story of its own. Raises AssertionError where a promise is broken."""
+    for number in numbers_of(kind, operations(folder)):
+
+        def at(now: int, name: str, number: int = number) -> None:
+            if now == number:
+                raise OSError(errno.EIO, "simulated")
+
+        with told(folder, f"once-{number}", at) as story:
+            story.tell()
+            assert story.counted > number, "the story never came to it"
+
+
+def the_power_fails_before_each(folder: Path, chance: random.Random) -> int:
+    """At each operation several power failures, each followed by a start; how many. Only what was not synced is lost."""
+    looked = 0
+
+    def at(number: int, name: str) -> None:
+        nonlocal looked
+        story.note_durable()
+        for _ in range(VARIANTS):
+            holds(crashed(story.disk, chance.randrange), story)
+            looked += 1
+
+    with told(folder, "power", at) as story:
+        story.tell()
+    return looked
+
+
+def numbers_of(kind: str, names: tuple[str, ...]) -> list[int]:
+    """Numbers of the operations of a kind."""
+    return [number for number, name in enumerate(names) if name == kind]

@@ -15,7 +15,18 @@ from pathlib import Path
 
 import pytest
 from sim_loop import PowerCut
-from sim_ordeal import KINDS, VARIANTS, Told, crashed, holds, operations, recovered, told
+from sim_ordeal import (
+    KINDS,
+    VARIANTS,
+    crashed,
+    each_fails_once,
+    holds,
+    numbers_of,
+    operations,
+    recovered,
+    the_power_fails_before_each,
+    told,
+)
 from strandline.errors import JournalError, JournalFailed
 
 
@@ -29,15 +40,7 @@ def test_the_story_meets_every_kind_of_operation(tmp_path: Path) -> None:
 
 @pytest.mark.parametrize("kind", KINDS)
 def test_an_operation_that_fails_once_costs_nothing_that_was_answered(kind: str, tmp_path: Path) -> None:
-    for number in numbers_of(kind, operations(tmp_path)):
-
-        def at(now: int, name: str, number: int = number) -> None:
-            if now == number:
-                raise OSError(errno.EIO, "simulated")
-
-        with told(tmp_path, f"once-{number}", at) as story:
-            story.tell()
-            assert story.counted > number, "the story never came to it"
+    each_fails_once(tmp_path, kind)
 
 
 @pytest.mark.parametrize("kind", KINDS)
@@ -57,33 +60,13 @@ def test_an_operation_that_fails_from_then_on_costs_nothing_that_was_answered(ki
             assert lives
 
 
-def numbers_of(kind: str, names: tuple[str, ...]) -> list[int]:
-    return [number for number, name in enumerate(names) if name == kind]
-
-
 # ---- the power fails ------------------------------------------------------------------------------------------------
 
 
 def test_the_power_may_fail_before_any_operation(tmp_path: Path) -> None:
     """All or nothing: only what was not synced is damaged, in several ways at each operation."""
-    chance = random.Random(20_260_301)
-    looked = 0
-
-    def at(number: int, name: str) -> None:
-        nonlocal looked
-        story.history.durable(journal_of(story))
-        for _ in range(VARIANTS):
-            holds(crashed(story.disk, chance.randrange), story)
-            looked += 1
-
-    with told(tmp_path, "snapshots", at) as story:
-        story.tell()
-    assert looked >= VARIANTS * len(operations(tmp_path)) // 2
-
-
-def journal_of(story: Told) -> int:
-    """How far the journal says it is durable now."""
-    return 0 if story.process is None else story.process.runtime.journal.durable_lsn
+    looked = the_power_fails_before_each(tmp_path, random.Random(20_260_301))
+    assert looked >= VARIANTS * len(operations(tmp_path))
 
 
 def test_the_process_may_die_at_any_operation_and_the_story_goes_on(tmp_path: Path) -> None:
@@ -106,7 +89,7 @@ def test_a_start_may_fail_or_die_at_any_operation_of_its_own(tmp_path: Path) -> 
     def at(number: int, name: str) -> None:
         if number % 5:
             return
-        story.history.durable(journal_of(story))
+        story.note_durable()
         found = crashed(story.disk, chance.randrange)
         left, step = True, 0
         while left:

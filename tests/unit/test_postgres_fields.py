@@ -1,7 +1,8 @@
-"""Values out of events for PostgreSQL's columns: what fits and what does not, and that the server agrees."""
+"""Values out of events for PostgreSQL's columns, and their binary form: what fits, and that the server agrees."""
 
 from __future__ import annotations
 
+import io
 import math
 from typing import Any
 
@@ -12,6 +13,7 @@ from helpers_postgres import shared, wait_for
 from hypothesis import example, given, settings
 from hypothesis import strategies as st
 from strandline.sinks.postgres_columns import TYPES, Column
+from strandline.sinks.postgres_copy import HEAD, OF_TYPE, TAIL, rows_of
 from strandline.sinks.postgres_fields import EPOCH_US, Fields, microseconds, storable, storable_column
 from strandline.sinks.postgres_server import connect
 
@@ -46,9 +48,9 @@ def read_one(raw: bytes, kind: str) -> tuple[Any, bool]:
         ("double precision", b"-1.5e-3", -0.0015),
         ("double precision", b"1e-400", 0.0),
         ("boolean", b"false", False),
-        ("timestamptz", b'"2000-01-01T00:00:00.0000019Z"', (1,)),
-        ("timestamptz", b'"1999-12-31T23:59:59.9999999Z"', (-1,)),
-        ("timestamptz", b'"2000-01-01t01:00:00+01:00"', (0,)),
+        ("timestamptz", b'"2000-01-01T00:00:00.0000019Z"', 1),
+        ("timestamptz", b'"1999-12-31T23:59:59.9999999Z"', -1),
+        ("timestamptz", b'"2000-01-01t01:00:00+01:00"', 0),
         ("jsonb", b'{"a" : 1}', '{"a" : 1}'),
         ("jsonb", b'"a \\\\u0000 b"', '"a \\\\u0000 b"'),
         ("jsonb", b'"12e99999"', '"12e99999"'),
@@ -129,7 +131,7 @@ def test_one_wrong_line_spoils_no_other() -> None:
     fields = Fields([Column("level", at="/level", type="double precision"), Column("at", at="/at", type="timestamptz")])
     lines = [b'{"level":1.5,"at":"2000-01-01T00:00:01Z"}', b'{"level":"high","at":"yesterday"}', b'{"level":2}']
     values, unfit = fields.read(b"".join(line + b"\n" for line in lines), 3)
-    assert values == [[1.5, None, 2.0], [(1_000_000,), None, None]]
+    assert values == [[1.5, None, 2.0], [1_000_000, None, None]]
     assert unfit == {1: [0, 1]}
 
 
@@ -141,7 +143,7 @@ def test_an_object_in_the_way_may_be_anything() -> None:
 
 def test_microseconds_are_rounded_down_over_all_of_int64() -> None:
     times = [-(2**63), -1, 0, 999, 1000, 2**63 - 1]
-    assert microseconds(np.array(times, dtype=np.int64)) == [(time // 1000 - EPOCH_US,) for time in times]
+    assert microseconds(np.array(times, dtype=np.int64)).tolist() == [time // 1000 - EPOCH_US for time in times]
 
 
 # ---- laws -----------------------------------------------------------------------------------------------------------
@@ -189,7 +191,7 @@ def test_the_server_takes_whatever_is_said_to_fit(raws: list[bytes]) -> None:
     """All columns of all types, by COPY; what comes back is what was found, and only what cannot be held is NULL."""
     block = b"".join(b'{"v":%b}\n' % raw for raw in raws)
     values, unfit = Fields(COLUMNS).read(block, len(raws))
-    back = wait_for(through_the_server(list(zip(*values, strict=True))))
+    back = wait_for(through_the_server(values, len(raws)))
     for row, (raw, stored) in enumerate(zip(raws, back, strict=True)):
         alone = [read_one(raw, kind) for kind in TYPES]
         assert [column[row] for column in values] == [value for value, _ in alone], "a line alone and among others"
@@ -214,14 +216,18 @@ def agree(kind: str, raw: bytes, value: Any, found: Any) -> None:
         assert math.isfinite(found) and float(raw) == found
 
 
-async def through_the_server(rows: list[tuple[Any, ...]]) -> list[tuple[Any, ...]]:
-    """What a temporary table of all types gives back."""
+async def through_the_server(values: list[list[Any]], count: int) -> list[tuple[Any, ...]]:
+    """What a temporary table of all types gives back; times as us since 2000."""
     connection = await connect(shared(), 30.0)
     try:
         columns = ", ".join(f'"{kind}" {kind}' for kind in TYPES)
         await connection.execute(f"CREATE TEMP TABLE held (number serial, {columns})")
-        await connection.copy_records_to_table("held", columns=list(TYPES), records=rows)
-        names = ", ".join(f'"{kind}"' for kind in TYPES)
+        block = rows_of([OF_TYPE[kind](column) for kind, column in zip(TYPES, values, strict=True)], count)
+        await connection.copy_to_table(
+            "held", source=io.BytesIO(HEAD + block + TAIL), columns=list(TYPES), format="binary"
+        )
+        since_2000 = f"""(extract(epoch FROM timestamptz) * 1000000)::bigint - {EPOCH_US} AS timestamptz"""
+        names = ", ".join(since_2000 if kind == "timestamptz" else f'"{kind}"' for kind in TYPES)
         return [tuple(row) for row in await connection.fetch(f"SELECT {names} FROM held ORDER BY number")]
     finally:
         await connection.close()

@@ -83,7 +83,7 @@ def _numbers_or_null(kind: str) -> Callable[[Sequence[Any]], Column]:
         filled = list(values)
         for row in nulls:
             filled[row] = 0
-        pieces = _cut(np.concatenate(numbers(np.array(filled, dtype=kind), kind), axis=1))  # type: ignore[arg-type]
+        pieces = _cut(np.concatenate(numbers(np.array(filled, dtype=kind), kind), axis=1))
         for row in nulls:
             pieces[row] = NULL
         return [pieces]
