@@ -28,7 +28,7 @@ from .replay.reorder_figures import reorder_figures
 from .replay.requests import CapturedRequests
 
 GOOD = ("shown", "open")
-REORDER_EVENTS_AT_MOST = 10_000_000  # the first ones of a longer capture; some 100 bytes each
+REORDER_EVENTS_AT_MOST = 2_000_000  # the first ones of a longer capture; some 300 bytes each
 REORDER_THRESHOLD = 10_000  # of RFC 5236: what is displaced by more counts as lost there
 SECOND_NS = 1_000_000_000
 HEADINGS = ("slack", "late, first part", "late, second part", "hold mean", "hold p99", "held mean", "held peak", "")
@@ -119,7 +119,8 @@ def _reordering(told: _Told) -> dict[str, Any]:
         events += len(block.times)
         if events >= REORDER_EVENTS_AT_MOST:
             break
-    return reorder_figures(np.concatenate(times), np.concatenate(arrivals), min(REORDER_THRESHOLD, events))
+    first = slice(REORDER_EVENTS_AT_MOST)
+    return reorder_figures(np.concatenate(times)[first], np.concatenate(arrivals)[first], REORDER_THRESHOLD)
 
 
 # ---- how it looks ---------------------------------------------------------------------------------------------------

@@ -195,7 +195,8 @@ def texts(noun: str, bytes_at_most: int) -> Kind:
             raise ValueError(f"is too long: at most {LIST_ITEMS_AT_MOST:,} can be named")
         for item in raw:
             if not isinstance(item, str) or not 1 <= len(item.encode()) <= bytes_at_most or "\0" in item:
-                raise ValueError(f"holds {shown(item)}, which is no {noun} of 1 to {bytes_at_most} bytes, none of them 0")
+                wanted = f"{noun} of 1 to {bytes_at_most} bytes, none of them 0"
+                raise ValueError(f"holds {shown(item)}, which is no {wanted}")
         if len(set(raw)) < len(raw):
             raise ValueError(f"names {shown(Counter(raw).most_common(1)[0][0])} twice")
         return tuple(raw)

@@ -12,8 +12,8 @@ from typing import Any
 import msgspec
 
 from .config_model import Config
-from .config_read import Declared, Key, declared, tables_of
-from .config_sinks import SinkConfig
+from .config_read import Declared, Key, Tables, declared, tables_of
+from .config_sinks import SINK_KINDS, SinkConfig
 
 BEGIN, END = "<!-- keys: begin -->", "<!-- keys: end -->"
 
@@ -44,7 +44,8 @@ def _heading(title: str, struct: type[msgspec.Struct]) -> str:
     name, _, below = title.partition(" ")
     if below and not issubclass(struct, SinkConfig):
         kind, _, key = below.partition(".")
-        return f'`{key} = [ {{ ... }} ]` of a sink with `kind = "{kind}"`'
+        several = isinstance(declared(SINK_KINDS[kind])[key].mark, Tables)
+        return f'`{key} = {"[ { ... } ]" if several else "{ ... }"}` of a sink with `kind = "{kind}"`'
     if issubclass(struct, SinkConfig):
         return f'`[[{name}]]` with `kind = "{struct.kind}"`'
     last = name.rsplit(".", maxsplit=1)[-1]

@@ -23,6 +23,7 @@ from helpers_service import FEED, Process, config_of, eventually
 from simdisk import SimDisk
 from strandline.app import Service
 from strandline.runtime import FeedRuntime
+from strandline.sinks.lanes import refused_rows
 
 SAMPLES = 20_000
 BEHIND = 14_831  # of them arrive behind a later one of their own series
@@ -240,6 +241,26 @@ async def test_late_is_what_the_rule_says_and_the_rest_is_stored(
         assert refused_by(runtime) == 0
         in_time = [sample for sample in feed if sample not in ours]
         assert store.stored() == by_series(in_time, base_ms)
+
+
+async def test_what_the_store_never_takes_is_kept_and_all_else_is_stored(
+    tmp_path: Path, store: Receiver, feed: list[Arriving], base_ms: int
+) -> None:
+    """The store has a later sample of one series already, of before: what lies in front of it is out of order."""
+    before = Arriving(0.0, 5_000, 7, -1.0)
+    assert store.write(body_of([before], base_ms)) == (204, "")
+    behind = [sample for sample in feed if sample.series == 7 and sample.time_ms < 5_000]
+    equal = [sample for sample in feed if sample.series == 7 and sample.time_ms == 5_000]
+    rest = [sample for sample in feed if sample not in behind and sample not in equal]
+    async with played(configuration(tmp_path, store, "30s"), feed, base_ms) as runtime:
+        counts = runtime.deliveries["remote_write"].state().counts
+        assert (counts["out_of_order"], counts["duplicate_timestamp"]) == (len(behind), 1) == (50, len(equal))
+        assert sum(counts.values()) == 51
+        kept = refused_rows(runtime.folder / "lanes.db", limit=100, sink="remote_write")
+        lines = [line_of(sample, base_ms).rstrip() for sample in sorted(behind, key=lambda each: each.time_ms) + equal]
+        assert [row.event for row in kept] == lines
+        assert all("out_of_order" in row.detail for row in kept)
+        assert store.stored() == by_series([*rest, before], base_ms)
 
 
 async def test_late_events_go_apart_into_a_store_with_a_window(

@@ -118,7 +118,7 @@ def test_a_running_service_is_recorded(tmp_path: Path) -> None:
 
 @pytest.mark.parametrize("slack", [15, 60])
 def test_januarys_flights_come_late_as_the_rule_says(slack: int, tmp_path: Path) -> None:
-    """Outside opinion: the rule in numpy. Flights that leave in one minute are one request: none is late for another."""
+    """Outside opinion: the rule in numpy. Flights that leave in one minute are one request, none late for another."""
     trace = flights("origin", "january")
     assert len(trace) == EVENTS
     file, path, config = tmp_path / "january.ndjson", tmp_path / "january.capture", tmp_path / "new.toml"

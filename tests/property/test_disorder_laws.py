@@ -223,7 +223,7 @@ def kept_back(arrivals: list[int], limit: int, expected: int) -> list[int]:
     return found
 
 
-# -3 is in sight when its index comes, but 4 away when it is taken: all that follow are displaced by one more, to the end.
+# -3 is in sight when its index comes, but 4 away when taken: all that follow are displaced by one more, to the end.
 @example(arrivals=[0, 1, -3, 3, 4, 5, 6, 7, 2, 9, 10, 11], threshold=3)
 # 8 is discarded as too early, and comes again after 10.
 @example(arrivals=[0, 0, 5, 2, 8, 3, 6, 10, 8, 12, 10, 6, 12, 13, 14, 14], threshold=2)

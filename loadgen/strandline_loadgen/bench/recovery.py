@@ -1,8 +1,8 @@
 """Rows on starting again: folding a journal against having taken it in, and the start of a feed with much behind it.
 
-The journal is made through the decoder and the core as the service does it, on a real disk; what is measured is what
-`runtime` does between its making and the first request: opening the journal, taking over the newest snapshot, folding
-what came behind, starting. Files come from the page cache, as after the crash of a process.
+What is measured is what `runtime` does between its making and the first request: opening the journal, taking over the
+newest snapshot, folding what came behind, starting. Files come from the page cache, as after the crash of a process.
+Taking in is the whole service's, over HTTP, from the first body to the last answer.
 """
 
 from __future__ import annotations
@@ -28,6 +28,7 @@ from strandline_loadgen.shapes import shape
 
 from .harness import Measure, Row, Sample, Scale
 from .path import MEDIA_TYPE
+from .service import course_of, events_per_s_service
 
 LARGE_EVENTS = 10_000_000
 EVENTS_PER_S = 10_000.0
@@ -40,7 +41,7 @@ SPEEDUP_AT_LEAST = 5.0
 
 
 class Made:
-    """A folder with a journal of so many events; `ingest_s` is what taking them in took."""
+    """A folder with a journal of so many events."""
 
     def __init__(self, events: int, scale: Scale, *, snapshot_at: float | None) -> None:
         """`snapshot_at`: the share of the events after which a snapshot is written; None: without any."""
@@ -49,33 +50,27 @@ class Made:
         self.path, self.events = Path(self._folder.name), events
         self._journal = Journal.open(LocalDisk(self.path), "feeds/bench", journal_bytes_at_most=AT_MOST_BYTES)
         self._feed = Feed(SETTINGS)
-        self.ingest_cpu_s = 0.0
-        self.ingest_s = self._ingest(scale, None if snapshot_at is None else int(snapshot_at * events))
+        self._ingest(scale, None if snapshot_at is None else int(snapshot_at * events))
         self.held, self.bytes = self._feed.state.runs.held, self._feed.next_lsn
         self._journal.close()
 
-    def _ingest(self, scale: Scale, snapshot_at: int | None) -> float:
+    def _ingest(self, scale: Scale, snapshot_at: int | None) -> None:
         trace = shape("exponential", self.events, scale.seed, events_per_s=EVENTS_PER_S, mean_s=2.0)
         decoder = Decoder("bench", "/observed_at", "ns", "/station")
         self._do(self._feed.start(int(trace.arrivals[0]), {}))
-        taken, ticked, busy_s = 0, int(trace.arrivals[0]), 0.0
+        taken, ticked = 0, int(trace.arrivals[0])
         for body in bodies(trace, cut_by_count(trace, scale.body_events), Style("ns")):
-            begin, begin_cpu = time.perf_counter(), time.process_time()
             arrival = decoder.decode(body.payload, MEDIA_TYPE, self._feed.state.sources.numbers)
             while ticked + TICK_NS < body.due_ns:
                 ticked += TICK_NS
                 self._do(self._feed.tick(ticked))
             self._do(self._feed.arrive(arrival, body.due_ns, 0))
-            busy_s += time.perf_counter() - begin
-            self.ingest_cpu_s += time.process_time() - begin_cpu
             taken += len(body)
             if snapshot_at is not None and taken >= snapshot_at:
                 self._settle()
                 self._journal.write_snapshot(self._feed.next_lsn, self._feed.save())
                 snapshot_at = None
-        begin = time.perf_counter()
         self._settle()
-        return busy_s + time.perf_counter() - begin
 
     def _do(self, effects: list[Effect]) -> None:
         for effect in effects:
@@ -88,18 +83,19 @@ class Made:
         self._feed.synced(self._journal.flush())
         self._journal.replenish()
 
-    def start(self) -> tuple[float, int]:
-        """Seconds until the feed could take its first request, and how many records were folded."""
-        begin = time.perf_counter()
-        journal = Journal.open(LocalDisk(self.path), "feeds/bench", journal_bytes_at_most=AT_MOST_BYTES)
-        feed = Feed(SETTINGS)
-        folded = _recovered(journal, feed)
-        feed.start(feed.state.now_ns, {})
-        seconds = time.perf_counter() - begin
-        journal.close()
-        if (feed.next_lsn < self.bytes) or feed.state.runs.held != self.held:
-            raise RuntimeError("the feed is not what it was: no figure would mean anything")
-        return seconds, folded
+
+def started(path: Path, received: int) -> tuple[float, int]:
+    """Seconds until a feed that took in so many events could take its first request; how many records it folded."""
+    begin = time.perf_counter()
+    journal = Journal.open(LocalDisk(path), "feeds/bench", journal_bytes_at_most=AT_MOST_BYTES)
+    feed = Feed(SETTINGS)
+    folded = _recovered(journal, feed)
+    feed.start(feed.state.now_ns, {})
+    seconds = time.perf_counter() - begin
+    journal.close()
+    if feed.state.ledger.received != received or feed.state.ledger.balance():
+        raise RuntimeError("the feed is not what it was: no figure would mean anything")
+    return seconds, folded
 
 
 class _Stopped:
@@ -121,17 +117,23 @@ def _recovered(journal: Journal, feed: Feed) -> int:
 
 
 def _without_snapshot(scale: Scale) -> Measure:
+    course = course_of(scale.body_events, scale)
+
     def measure() -> Sample:
-        made = Made(scale.events, scale, snapshot_at=None)  # anew each time: both are measured in one visit
-        begin_cpu = time.process_time()
-        seconds, folded = made.start()
-        beside = {
-            "ratio of processor time": made.ingest_cpu_s / (time.process_time() - begin_cpu),
-            "events/s folded": made.events / seconds,
-            "events/s taken in": made.events / made.ingest_s,
-            "records": float(folded),
-        }
-        return Sample(made.ingest_s / seconds, beside)
+        with tempfile.TemporaryDirectory(prefix="strandline-bench-") as name, asyncio.Runner() as runner:
+            folder = Path(name)
+            rate, _ = runner.run(events_per_s_service(course, folder, 'journal = { retain = "1h" }'))
+            for snapshot in (folder / "data" / "feeds" / "bench").glob("snapshot-*.snap"):
+                snapshot.unlink()
+            begin_cpu = time.process_time()
+            seconds, folded = started(folder / "data", len(course.trace))
+            beside = {
+                "events/s folded": len(course.trace) / seconds,
+                "events/s taken in": rate,
+                "records": float(folded),
+                "s of the processor": time.process_time() - begin_cpu,
+            }
+            return Sample(len(course.trace) / rate / seconds, beside)
 
     return measure
 
@@ -140,7 +142,7 @@ def _with_snapshot(events: int, scale: Scale) -> Measure:
     made = Made(events, scale, snapshot_at=0.99)
 
     def measure() -> Sample:
-        seconds, folded = made.start()
+        seconds, folded = started(made.path, made.events)
         return Sample(seconds, {"held": float(made.held), "records folded": float(folded), "journal bytes": made.bytes})
 
     return measure

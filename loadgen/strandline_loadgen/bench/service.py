@@ -44,6 +44,7 @@ slack = "20s"
 idle_after = "1h"
 hold_at_most = "1h"
 ahead_limit = "1h"
+{more}
 [[feed.sink]]
 kind = "ndjson"
 directory = "{folder}/out"
@@ -79,10 +80,13 @@ async def events_per_s_bare(course: Course, folder: Path) -> float:
     return len(course.trace) / done.seconds
 
 
-async def events_per_s_service(course: Course, folder: Path) -> tuple[float, float]:
-    """The service's rate, and the seconds from the last answer until all was delivered and the service had stopped."""
+async def events_per_s_service(course: Course, folder: Path, more: str = "") -> tuple[float, float]:
+    """The service's rate, and the seconds from the last answer until all was delivered and the service had stopped.
+
+    `more` are further keys of the feed.
+    """
     port, file = free_port(), folder / "strandline.toml"
-    file.write_text(CONFIGURATION.format(port=port, folder=folder.as_posix()))
+    file.write_text(CONFIGURATION.format(port=port, folder=folder.as_posix(), more=more))
     async with ChildServer(serve(file), port, folder / "service.log") as server:
         done = await _sent(server, course)
         answered = time.monotonic()

@@ -46,9 +46,9 @@ class Readable:
         """The frames from a position (None: from the oldest) up to what is durable now, each CRC checked, no copies.
 
         A position inside a frame begins with the next one; frames can only be found from the front, so the segment is
-        read from its start, unless it is `known` that a frame starts at the position. `just_read`: the journal was opened
-        a moment ago, so what was checked then is not checked again. Raises JournalError where the position is no longer
-        kept, or where a frame is not intact.
+        read from its start, unless it is `known` that a frame starts at the position. `just_read`: the journal was
+        opened a moment ago, so what was checked then is not checked again. Raises JournalError where the position is no
+        longer kept, or where a frame is not intact.
         """
         segments, end_lsn = self._segments, self._durable_lsn
         start = from_lsn if from_lsn is not None else self.first_lsn

@@ -1,9 +1,9 @@
 """A block of a capture: some tens of thousands of records as columns, so that a pass over them decodes no record.
 
 Here lives how records become columns and back. No file, no lines (only where they stand), no order. What ascends
-(clocks and positions) is written as differences, and every column byte by byte of its items (all lowest bytes first, then the
-next ones): like bytes beside each other are what compression is for. River gauges with exponential delays, bytes an
-event in the file: columns as they are 5.7, byte by byte 4.7, with differences of the event times as well 5.2.
+(clocks and positions) is written as differences, and every column byte by byte of its items (all lowest bytes first,
+then the next ones): like bytes beside each other are what compression is for. River gauges with exponential delays,
+bytes an event in the file: columns as they are 5.7, byte by byte 4.7, with differences of event times as well 5.2.
 """
 
 from __future__ import annotations

@@ -149,10 +149,10 @@ class Digests:
             for entry in batch.entries:
                 found.update(f"{entry.line} {entry.reason} {entry.place} {entry.length} ".encode())
             return found.digest()
-        found.update(np.ascontiguousarray(batch.times))
-        found.update(np.ascontiguousarray(batch.refs["source"]))
+        found.update(batch.times.tobytes())
+        found.update(batch.refs["source"].tobytes())
         if self._lines is None:
-            found.update(np.ascontiguousarray(batch.refs["length"]))
+            found.update(batch.refs["length"].tobytes())
         else:
             found.update(self._lines.ndjson(batch))
         return found.digest()

@@ -61,15 +61,19 @@ def send(
 ) -> Sent:
     """Send every request of a capture to a feed. `speed`: so many times as fast as recorded; None: at full pace.
 
-    Raises CaptureError where it was captured without events or the service refuses a request for good, OSError where
-    the service cannot be reached.
+    Raises CaptureError where it was captured without events, or the service refuses a request for good or cannot be
+    reached.
     """
     if not capture.meta.lines:
         raise CaptureError(f"{capture.path}: it was made --without-events: there is nothing to send")
     sent = Sent()
-    asyncio.run(_Sender(f"{url.rstrip('/')}/v1/feeds/{feed}/events", sent, progress).run(
-        _bodies(capture, speed, sent), connections
-    ))  # fmt: skip
+    sender = _Sender(f"{url.rstrip('/')}/v1/feeds/{feed}/events", sent, progress)
+    try:
+        asyncio.run(sender.run(_bodies(capture, speed, sent), connections))
+    except* CaptureError as errors:
+        raise errors.exceptions[0] from None
+    except* (aiohttp.ClientError, TimeoutError) as errors:
+        raise CaptureError(f"{url} cannot be reached: {errors.exceptions[0] or 'no answer in time'}") from errors
     return sent
 
 

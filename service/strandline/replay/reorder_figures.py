@@ -1,7 +1,7 @@
 """The figures of RFC 4737 and RFC 5236 of a feed, by event time, summed up as plain values.
 
 How each is worked out is in `reordering` and `density`; here is only the choice of what is told. Needs the whole
-sequence in memory (some 100 bytes an event at the peak), so callers bound it.
+sequence in memory (some 300 bytes an event at the peak), so callers bound it.
 """
 
 from __future__ import annotations
