@@ -4,8 +4,8 @@ A piece that is not there, or not only once, is an error: then the code has chan
 """
 
 from __future__ import annotations
-
 import __future__
+
 import inspect
 import textwrap
 from collections.abc import Iterator

@@ -15,6 +15,7 @@ from pathlib import Path
 from helpers_feed import saved_bytes
 from sim_loop import PowerCut
 from sim_process import SimClock, seams
+from sim_stores import a_folder
 from sim_story import Story
 from sim_weather import Weather
 from simdisk import Choose, SimDisk
@@ -86,20 +87,20 @@ class Told(Story):
 
 
 @contextmanager
-def told(tmp_path: Path, name: str, at: Callable[[int, str], None] = lambda number, name: None) -> Iterator[Told]:
-    folder = tmp_path / name
-    folder.mkdir()
-    story = Told(folder, at)
-    with seams("story"), story.stores.watched():
-        try:
-            yield story
-        finally:
-            story.abandon()
+def told(at: Callable[[int, str], None] = lambda number, name: None) -> Iterator[Told]:
+    """A story that can be told; nothing is left open behind it."""
+    with a_folder() as folder, seams("story"):
+        story = Told(folder, at)
+        with story.stores.watched():
+            try:
+                yield story
+            finally:
+                story.abandon()
 
 
-def operations(tmp_path: Path) -> tuple[str, ...]:
+def operations() -> tuple[str, ...]:
     """The operations of the story on a disk that never fails."""
-    with told(tmp_path, "plain") as story:
+    with told() as story:
         story.tell()
         return tuple(story.met[: story.counted])
 
@@ -133,21 +134,21 @@ def crashed(disk: SimDisk, choose: Choose) -> SimDisk:
 # ---- what is done to the story at its operations --------------------------------------------------------------------
 
 
-def each_fails_once(folder: Path, kind: str) -> None:
+def each_fails_once(kind: str) -> None:
     """Each operation of a kind fails in a story of its own. Raises AssertionError where a promise is broken."""
-    for number in numbers_of(kind, operations(folder)):
+    for number in numbers_of(kind, operations()):
 
         def at(now: int, name: str, number: int = number) -> None:
             if now == number:
                 raise OSError(errno.EIO, "simulated")
 
-        with told(folder, f"once-{number}", at) as story:
+        with told(at) as story:
             story.tell()
             assert story.counted > number, "the story never came to it"
 
 
-def the_power_fails_before_each(folder: Path, chance: random.Random) -> int:
-    """At each operation several power failures, each followed by a start; how many. Only what was not synced is lost."""
+def the_power_fails_before_each(chance: random.Random) -> int:
+    """At each operation several power failures, each followed by a start; how many. Only the unsynced is damaged."""
     looked = 0
 
     def at(number: int, name: str) -> None:
@@ -157,7 +158,7 @@ def the_power_fails_before_each(folder: Path, chance: random.Random) -> int:
             holds(crashed(story.disk, chance.randrange), story)
             looked += 1
 
-    with told(folder, "power", at) as story:
+    with told(at) as story:
         story.tell()
     return looked
 

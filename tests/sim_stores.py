@@ -9,6 +9,7 @@ from __future__ import annotations
 import asyncio
 import os
 import sqlite3
+import tempfile
 from collections.abc import Awaitable, Callable, Iterator, Sequence
 from contextlib import ExitStack, contextmanager, suppress
 from dataclasses import dataclass, field
@@ -26,6 +27,14 @@ from strandline.sinks import database, make_sink, ndjson
 Result = TypeVar("Result")
 MOODS = ("well", "refuses", "refuses for good", "hangs", "hangs late", "loses answers", "fails within")
 Taken = tuple[list[bytes], list[int], list[str]]  # lines, event times, source names of one batch
+
+
+@contextmanager
+def a_folder() -> Iterator[Path]:
+    """A folder for stores: in memory where there is such a place, for it need not outlive anything."""
+    memory = Path("/dev/shm")
+    with tempfile.TemporaryDirectory(prefix="strandline-sim", dir=memory if memory.is_dir() else None) as name:
+        yield Path(name)
 
 
 class ReceiverConfig(SinkConfig, frozen=True):

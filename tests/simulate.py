@@ -8,16 +8,13 @@ from __future__ import annotations
 
 import argparse
 import sys
-import tempfile
 import time
 import traceback
-from pathlib import Path
 
 from sim_process import seams
 from sim_scenario import PATTERNS, scenario_of
+from sim_stores import a_folder
 from sim_world import Tally, World
-
-SHARED_MEMORY = Path("/dev/shm")  # files of stores lie here where there is such a place: they need not outlive anything
 
 
 class Violation(AssertionError):
@@ -32,9 +29,8 @@ def command(seed: int, pattern: str | None) -> str:
 def play(seed: int, pattern: str | None = None) -> Tally:
     """One world from beginning to end. Raises Violation."""
     scenario = scenario_of(seed, pattern)
-    place = str(SHARED_MEMORY) if SHARED_MEMORY.is_dir() else None
-    with tempfile.TemporaryDirectory(prefix="strandline-sim", dir=place) as folder, seams(f"{seed}"):
-        world = World(scenario, Path(folder))
+    with a_folder() as folder, seams(f"{seed}"):
+        world = World(scenario, folder)
         try:
             return world.run()
         except Exception as error:

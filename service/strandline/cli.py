@@ -168,12 +168,13 @@ def _add_capture(commands: Any) -> None:
 
 def _add_replay(commands: Any) -> None:
     about = (
-        "Plays a capture again: what the feed did; with --config what it would have done with other settings;\n"
-        "with --into URL sends it to a service. Bars (--expect-...) make it a test: exit code 1 where one is missed."
+        "Plays a capture again: what the feed did; with --config what other settings would have done;\n"
+        "with --into URL sends it to a service. Bars (--expect-...) make it a test: exit code 1 where one\n"
+        "is missed."
     )
     example = (
         "  strandline replay yesterday.capture --verify\n"
-        "  strandline replay yesterday.capture --config new.toml --expect-late-share 0.001 --expect-hold-p99 5s\n"
+        "  strandline replay yesterday.capture --config new.toml --expect-late-share 0.001\n"
         "  strandline replay yesterday.capture --into http://127.0.0.1:8600 --pace 10x"
     )
     replay = _add(commands, "replay", "play a capture again", about, example, _replay)
@@ -244,7 +245,7 @@ def _add_again(acts: Any, lane: str, things: str, narrow: str) -> None:
     example = f"  strandline {lane} {act} --feed river-gauges --through 120"
     if act == "resend":
         short = "have a sink take them once more"
-        about = f"Asks the running service to send {things}\nto one sink once more, in repair batches. They stay listed."
+        about = f"Asks the running service to send {things}\nto one sink once more, as repairs. They stay listed."
         example += " --sink archive"
     else:
         short = "take them in once more, after a fix"

@@ -1,4 +1,4 @@
-"""`strandline late resend`, `refused resend`, `quarantine redrive`: ask a running service to send or take rows again."""
+"""`strandline late resend`, `refused resend`, `quarantine redrive`: have a running service do it again."""
 
 from __future__ import annotations
 

@@ -52,7 +52,7 @@ class LateConfig(msgspec.Struct, frozen=True):
     every_ns: Annotated[int, Key(duration("1s"), "how often repairs are sent")] = field(
         default=3600 * SECOND_NS, name="every"
     )
-    partition_ns: Annotated[int, Key(duration("1s"), "the store's partition: no repair batch crosses its edge")] = field(
+    partition_ns: Annotated[int, Key(duration("1s"), "the store's partition: no repair crosses its edge")] = field(
         default=86_400 * SECOND_NS, name="partition"
     )
 

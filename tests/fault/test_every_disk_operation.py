@@ -11,7 +11,6 @@ import errno
 import random
 from collections import Counter
 from collections.abc import Callable
-from pathlib import Path
 
 import pytest
 from sim_loop import PowerCut
@@ -30,8 +29,8 @@ from sim_ordeal import (
 from strandline.errors import JournalError, JournalFailed
 
 
-def test_the_story_meets_every_kind_of_operation(tmp_path: Path) -> None:
-    met = Counter(operations(tmp_path))
+def test_the_story_meets_every_kind_of_operation() -> None:
+    met = Counter(operations())
     assert set(met) == set(KINDS) and all(met[kind] >= 4 for kind in KINDS), met
 
 
@@ -39,14 +38,14 @@ def test_the_story_meets_every_kind_of_operation(tmp_path: Path) -> None:
 
 
 @pytest.mark.parametrize("kind", KINDS)
-def test_an_operation_that_fails_once_costs_nothing_that_was_answered(kind: str, tmp_path: Path) -> None:
-    each_fails_once(tmp_path, kind)
+def test_an_operation_that_fails_once_costs_nothing_that_was_answered(kind: str) -> None:
+    each_fails_once(kind)
 
 
 @pytest.mark.parametrize("kind", KINDS)
-def test_an_operation_that_fails_from_then_on_costs_nothing_that_was_answered(kind: str, tmp_path: Path) -> None:
+def test_an_operation_that_fails_from_then_on_costs_nothing_that_was_answered(kind: str) -> None:
     """Every operation of that kind, until somebody mends the disk: the third start from then on finds it mended."""
-    for number in numbers_of(kind, operations(tmp_path)):
+    for number in numbers_of(kind, operations()):
         lives: set[int] = set()
 
         def at(now: int, name: str, number: int = number, lives: set[int] = lives) -> None:
@@ -55,7 +54,7 @@ def test_an_operation_that_fails_from_then_on_costs_nothing_that_was_answered(ki
                 if len(lives) <= 2:
                     raise OSError(errno.EIO, "simulated")
 
-        with told(tmp_path, f"for-ever-{number}", at) as story:
+        with told(at) as story:
             story.tell()
             assert lives
 
@@ -63,25 +62,25 @@ def test_an_operation_that_fails_from_then_on_costs_nothing_that_was_answered(ki
 # ---- the power fails ------------------------------------------------------------------------------------------------
 
 
-def test_the_power_may_fail_before_any_operation(tmp_path: Path) -> None:
+def test_the_power_may_fail_before_any_operation() -> None:
     """All or nothing: only what was not synced is damaged, in several ways at each operation."""
-    looked = the_power_fails_before_each(tmp_path, random.Random(20_260_301))
-    assert looked >= VARIANTS * len(operations(tmp_path))
+    looked = the_power_fails_before_each(random.Random(20_260_301))
+    assert looked >= VARIANTS * len(operations())
 
 
-def test_the_process_may_die_at_any_operation_and_the_story_goes_on(tmp_path: Path) -> None:
-    for number in range(len(operations(tmp_path))):
+def test_the_process_may_die_at_any_operation_and_the_story_goes_on() -> None:
+    for number in range(len(operations())):
 
         def at(now: int, name: str, number: int = number) -> None:
             if now == number:
                 raise PowerCut(name)
 
-        with told(tmp_path, f"death-{number}", at) as story:
+        with told(at) as story:
             story.tell()
             assert story.tally.crashes == 1
 
 
-def test_a_start_may_fail_or_die_at_any_operation_of_its_own(tmp_path: Path) -> None:
+def test_a_start_may_fail_or_die_at_any_operation_of_its_own() -> None:
     """A crash, then an error or another crash in each operation of the recovery, then a recovery that comes through."""
     chance = random.Random(7)
     tried = Counter[str]()
@@ -105,6 +104,6 @@ def test_a_start_may_fail_or_die_at_any_operation_of_its_own(tmp_path: Path) -> 
             holds(disk.restarted(), story)
             step += 1
 
-    with told(tmp_path, "recovery", at) as story:
+    with told(at) as story:
         story.tell()
     assert all(tried[kind] for kind in ("write", "sync", "sync_directory", "open", "view", "names")), tried

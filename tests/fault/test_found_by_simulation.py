@@ -3,32 +3,35 @@
 from __future__ import annotations
 
 import errno
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
-from pathlib import Path
+from typing import Any
 
 from sim_process import seams
 from sim_scenario import SECOND_NS
+from sim_stores import a_folder
 from sim_story import Story
 from simdisk import Faults
 from strandline.config_model import Journal
 
 
 @contextmanager
-def told(story: Story) -> Iterator[Story]:
+def told(events: Sequence[tuple[int, float]], **given: Any) -> Iterator[Story]:
     """A story under way; nothing is left open behind it."""
-    with seams("story"), story.stores.watched():
-        try:
-            yield story
-        finally:
-            story.abandon()
+    with a_folder() as folder, seams("story"):
+        story = Story(folder, events, **given)
+        with story.stores.watched():
+            try:
+                yield story
+            finally:
+                story.abandon()
 
 
-def test_a_store_that_answers_before_the_start_lets_nothing_be_released(tmp_path: Path) -> None:
+def test_a_store_that_answers_before_the_start_lets_nothing_be_released() -> None:
     """P1: a mark between recovery and start would number a batch before the older ones were delivered again, and a
     store that was offered the newer one first never takes the older one."""
     events = [(0, 0.0), (1, 1.0), (0, 60.0)]
-    with told(Story(tmp_path, events, sinks=("receiver", "store"), idle_after_ns=SECOND_NS)) as story:
+    with told(events, sinks=("receiver", "store"), idle_after_ns=SECOND_NS) as story:
         story.start()
         story.stores.moods["store"] = "refuses"
         story.send(2)
@@ -44,16 +47,16 @@ def test_a_store_that_answers_before_the_start_lets_nothing_be_released(tmp_path
         story.finish()
 
 
-def test_files_that_were_fetched_before_a_crash_are_not_repeated_in_part(tmp_path: Path) -> None:
+def test_files_that_were_fetched_before_a_crash_are_not_repeated_in_part() -> None:
     """P5: whoever fetches files tells a repeat by the numbers in the names, so no file may hold new batches behind
     ones that an earlier file may have held."""
     events = [(0, float(second)) for second in range(6)]
-    with told(Story(tmp_path, events, sinks=("files",), batch_events_at_most=1)) as story:
+    with told(events, sinks=("files",), batch_events_at_most=1) as story:
         story.start()
         story.send(2)
         story.work_only(seconds=2)  # without a tick: that the files are complete is told, and not synced yet
         story.work_only()
-        assert len(list((tmp_path / "files").glob("*ordered*.ndjson"))) == 1
+        assert len(list((story.folder / "files").glob("*ordered*.ndjson"))) == 1
         story.stores.collect()
         story.die()
         story.start()
@@ -62,21 +65,21 @@ def test_files_that_were_fetched_before_a_crash_are_not_repeated_in_part(tmp_pat
         story.finish()
 
 
-def test_a_request_larger_than_the_spare_segment_is_taken_once_room_was_made(tmp_path: Path) -> None:
+def test_a_request_larger_than_the_spare_segment_is_taken_once_room_was_made() -> None:
     """P7: room is short where somebody was refused for want of it, also while a spare segment lies ready: it may be
     too small. And spares that are too small must not take the room of the one that is needed."""
     events = [(0, second / 10) for second in range(200)]
     journal = Journal(264, 6400)
-    with told(Story(tmp_path, events, journal=journal, events_a_request=5)) as story:
+    with told(events, journal=journal, events_a_request=5) as story:
         story.start()
         story.finish()
 
 
-def test_a_journal_that_fails_while_room_is_reserved_ends_the_service(tmp_path: Path) -> None:
+def test_a_journal_that_fails_while_room_is_reserved_ends_the_service() -> None:
     """P7: nothing is written after it, so no write would ever tell; the service must not stand there as if it did well.
     """
     events = [(0, second / 10) for second in range(40)]
-    with told(Story(tmp_path, events, journal=Journal(400, 100_000), slack_ns=10 * SECOND_NS)) as story:
+    with told(events, journal=Journal(400, 100_000), slack_ns=10 * SECOND_NS) as story:
         story.start()
         story.send(2)
         assert story.process is not None and story.process.up

@@ -78,6 +78,7 @@ def _course(commit_events: int, scale: Scale) -> tuple[list[Batch], Blocks]:
     for body in bodies(trace, cut_by_count(trace, commit_events), Style("rfc3339")):
         number, start = body.number + 1, body.number * commit_events
         refs = np.zeros(commit_events, dtype=REF)
+        refs["length"] = [len(line) for line in bytes(body.payload).split(b"\n")[:-1]]
         refs["source"] = trace.sources[start : start + commit_events]
         times = trace.times[start : start + commit_events]
         lines.blocks[number] = bytes(body.payload)

@@ -104,7 +104,7 @@ class LatenessSketch:
 
     Every count is exact for a slack at the upper bound of a bucket; between two bounds it is known within one bucket,
     that is: the late share stated is that of some slack within 2 a / (1 - a) of the one asked for. Measured on
-    columns of 10^5: 4 to 5 ns an event.
+    columns of 10^4 and more: 4 to 12 ns an event (100 at a time 60, one at a time 700).
     """
 
     def __init__(self, relative_error: float = RELATIVE_ERROR) -> None:
