@@ -328,23 +328,24 @@ class FeedMachine(RuleBasedStateMachine):
         # After a crash what is durable and had not left yet leaves once the start's own record is durable.
         settled = shell.feed.durable_lsn >= self.started_lsn
         for lane, expected in says.items():
-            assert lines[lane] == (expected if settled else expected[: len(lines[lane])]), lane
+            assert lines[lane] == (expected if settled else expected[: len(lines[lane])]), f"lane {lane}"
 
     @invariant()
     def the_state_is_what_the_records_say(self) -> None:
         state, reading = self.shell.feed.state, self.all.on()
         assert reading.end_lsn == self.shell.feed.next_lsn
-        assert state.watermark_ns == reading.model.stands
+        assert state.watermark_ns == reading.model.stands, "another watermark than the records say"
         ledger = state.ledger
-        assert state.runs.held == len(reading.model.held) == ledger.buffered and not ledger.balance()
+        held = len(reading.model.held)
+        assert state.runs.held == held == ledger.buffered and not ledger.balance(), f"{held} must be held: {ledger}"
         counts = (len(reading.model.out), len(reading.model.late), len(reading.quarantine))
-        assert (ledger.released, ledger.late, ledger.quarantined) == counts
+        assert (ledger.released, ledger.late, ledger.quarantined) == counts, f"the records say {counts}: {ledger}"
 
     @invariant()
     def nothing_is_answered_before_it_is_durable(self) -> None:
         shell, durable = self.shell, self.durably()
         outcomes = [shell.answers[token] for token in shell.requests if shell.answers.get(token) is not None]
-        assert len(outcomes) <= durable.arrivals
-        assert sum(each.late for each in outcomes if each) <= len(durable.model.late)
+        assert len(outcomes) <= durable.arrivals, "answered before it was durable"
+        assert sum(each.late for each in outcomes if each) <= len(durable.model.late), "more answered as late"
         accepted = len(durable.model.out) + len(durable.model.held)
-        assert sum(each.accepted for each in outcomes if each) <= accepted
+        assert sum(each.accepted for each in outcomes if each) <= accepted, "more answered as accepted"

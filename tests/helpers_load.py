@@ -27,6 +27,7 @@ from strandline_loadgen.stores import Reading, digests_of, read_sqlite, with_dig
 from strandline_loadgen.trace import Int64s, Trace
 
 CONNECTIONS = 4
+SECONDS_A_BODY = 0.5  # at most, restarts included
 
 
 @dataclass(slots=True)
@@ -114,7 +115,7 @@ class Stubborn:
         self._process, self._load = process, load
         self._bodies = load.bodies()
         self._lock = threading.Lock()
-        self._stop_at = time.monotonic() + 2 * DEADLINE_S
+        self._stop_at = time.monotonic() + 2 * DEADLINE_S + load.count * SECONDS_A_BODY
         self.tries = np.zeros(load.count, dtype=np.int64)
         self.answered = np.zeros(load.count, dtype=np.bool_)
         self._threads = [threading.Thread(target=self._work, name=f"sender-{n}") for n in range(CONNECTIONS)]
@@ -176,3 +177,44 @@ def stored_rows(load: Load, folder: Path, lane: str) -> Rows:
         return Rows(none, none, none.astype(np.uint32), none.astype(np.uint32))
     columns = ("ids", "times", "sources", "digests")
     return Rows(*(np.concatenate([getattr(piece, column) for piece in pieces]) for column in columns))
+
+
+@dataclass(frozen=True, slots=True)
+class Killed:
+    """What was found after kills under load: events `lost`, `surplus` copies beyond a body's tries, bodies `met`."""
+
+    events: int
+    lost: int
+    surplus: int
+    met: int
+    in_order: bool
+    balanced: bool
+
+
+def kill_rounds(folder: Path, kills: int, events: int) -> Killed:
+    """Send under SIGKILL after SIGKILL, spread over the load; then drain, stop and look into the store."""
+    load = Load.of("bursty_gateways", events, 100)
+    with Process(folder, configuration(folder, slack="30s")) as process:
+        with Stubborn(process, load) as senders:
+            for kill in range(1, kills + 1):
+                senders.until(kill / (kills + 1))
+                process.kill()
+                process.start()
+        assert senders.answered.all()
+        process.drain()
+        ledger = process.document()["ledger"]
+        assert process.terminate() == 0
+    ordered, late = stored_rows(load, folder, "ordered"), stored_rows(load, folder, "late")
+    tries = np.repeat(senders.tries, np.diff(load.bounds))
+    first = int(load.trace.ids.min())
+    copies = np.bincount(np.concatenate([ordered.ids, late.ids]) - first, minlength=len(tries))
+    order = np.argsort(load.trace.ids)
+    copies = copies[load.trace.ids[order] - first]
+    return Killed(
+        events=len(load.trace),
+        lost=int((copies < 1).sum()),
+        surplus=int(np.maximum(copies - tries[order], 0).sum()),
+        met=int((senders.tries > 1).sum()),
+        in_order=bool(np.all(np.diff(ordered.times) >= 0)),
+        balanced=ledger["balanced"] and ledger["received"] == len(ordered) + len(late) == int(copies.sum()),
+    )
