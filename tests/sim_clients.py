@@ -58,7 +58,7 @@ class Habits:
     events_a_request: int | None = None
 
 
-@dataclass(slots=True)
+@dataclass(slots=True, eq=False)
 class Request:
     """One body: its lines with their ids, event times and sources (0 and 0 for a faulty one)."""
 
@@ -196,13 +196,24 @@ class Crowd:
         attempt.state, attempt.reason, attempt.outcome = state, reason, outcome
         self.waiting.pop(attempt, None)
 
-    def leave(self) -> None:
-        """One sender leaves without waiting for its answer."""
-        if self.waiting:
-            attempt = self.chance.choice(list(self.waiting))
-            task = self.waiting[attempt]
-            self._lost(attempt)
-            task.cancel()
+    def leave(self) -> Request | None:
+        """One sender leaves without waiting for its answer; what it sends again at once, if it does."""
+        if not self.waiting:
+            return None
+        attempt = self.chance.choice(list(self.waiting))
+        task = self.waiting[attempt]
+        self._lost(attempt)
+        task.cancel()
+        if attempt.request in self.again and self.chance.random() < 0.5:
+            self.again.remove(attempt.request)
+            return attempt.request
+        return None
+
+    def check(self) -> None:
+        """Raise what a sender has met and did not expect."""
+        for task in self.waiting.values():
+            if task.done() and not task.cancelled():
+                task.result()
 
     def connections_lost(self) -> None:
         """The process is gone: nobody gets an answer any more."""

@@ -27,9 +27,9 @@ REQUEST_BYTES = 2300
 
 # What can happen in a step, and how often while all is usual.
 WEIGHTS: dict[str, float] = {
-    "send": 30, "tick": 14, "pass_time": 8, "run_job": 45, "tell_job": 45, "leave": 1, "promise": 1, "excuse": 0.6,
+    "send": 30, "tick": 14, "pass_time": 8, "run_job": 45, "tell_job": 45, "leave": 3, "promise": 1, "excuse": 0.6,
     "drain": 0.4, "reconfigure": 0.6, "mood": 4, "let_go": 6, "step_clock": 0.5, "kill": 1.5, "cut_power": 1.5,
-    "arm": 3.5, "arm_store": 1.0, "disk_trouble": 0.7, "disk_room": 1.0, "stop": 0.7, "collect": 1,
+    "arm": 3.5, "arm_store": 1.0, "disk_trouble": 0.7, "disk_room": 1.0, "stop": 0.7, "collect": 2,
 }  # fmt: skip
 
 
@@ -132,7 +132,7 @@ def _storm(scenario: Scenario) -> None:
     chance = scenario.chance
     scenario.trace = _trace(chance, "duplicates", share=0.5)
     scenario.habits = replace(scenario.habits, storm_share=0.6)
-    scenario.weights["leave"] = 6
+    scenario.weights["leave"] = 12
 
 
 def _outage(scenario: Scenario) -> None:

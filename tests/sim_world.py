@@ -121,6 +121,7 @@ class World:
         if self.process is None:
             return
         self.process.check()
+        self.crowd.check()
         if self.process.ended is not None and (self._calm or self.chance.random() < 0.3):
             self.tally.counts[self.process.ended.split(":")[0]] += 1
             if self.chance.random() < 0.5:
@@ -219,7 +220,9 @@ class World:
             self.crowd.send(request, process, self.loop.create_task)
 
     def _leave(self, process: Process) -> None:
-        self.crowd.leave()
+        request = self.crowd.leave()
+        if request is not None and self.loop is not None:
+            self.crowd.send(request, process, self.loop.create_task)
 
     def _tick(self, process: Process) -> None:
         assert self.loop is not None

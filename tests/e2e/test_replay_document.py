@@ -30,9 +30,7 @@ def run(script: str, folder: Path) -> subprocess.CompletedProcess[str]:
     environ = {name: value for name, value in os.environ.items() if not name.startswith("STRANDLINE_")}
     environ["PATH"] = f"{tools}:{environ['PATH']}"
     command = ["sh", "-c", script]
-    return subprocess.run(
-        command, check=False, cwd=folder, env=environ, capture_output=True, text=True, timeout=300
-    )
+    return subprocess.run(command, check=False, cwd=folder, env=environ, capture_output=True, text=True, timeout=300)
 
 
 def test_the_worked_example_answers_what_the_document_says(tmp_path: Path) -> None:

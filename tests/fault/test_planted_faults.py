@@ -239,7 +239,7 @@ FAULTS = [
         (
             Change(
                 Merger, "_interleave", 'order = np.argsort(strand.times, kind="stable")',
-                'order = rows - 1 - np.argsort(strand.times[::-1], kind="stable")[::-1]',
+                'order = rows - 1 - np.argsort(strand.times[::-1], kind="stable")',
             ),
         ),
         Worlds(0, "ties"),
@@ -249,8 +249,8 @@ FAULTS = [
         "mark journaled before the arrival that it follows",
         (
             Change(
-                Feed, "arrive", "        return self._done(effects, now, sync=True)",
-                "        __import__('planting').marks_first(effects)\n        return self._done(effects, now, sync=True)",
+                Feed, "arrive", "    return self._done(effects, now, sync=True)",
+                "    __import__('planting').marks_first(effects)\n    return self._done(effects, now, sync=True)",
             ),
         ),
         Worlds(0),
@@ -312,7 +312,10 @@ FAULTS = [
     ),
     Fault(
         "a reservation that fails is told to nobody",
-        (Change(FeedRuntime, "has_headroom", "self._failed(error)", "pass"),),
+        (
+            Change(FeedRuntime, "has_headroom", "self._failed(error)", "pass"),
+            Change(FeedRuntime, "_reserve", "self._failed(error)", "pass"),
+        ),
         Operations("create"),
         "not quiet",
     ),

@@ -99,8 +99,7 @@ def lived(chosen: Settings, history: list[tuple[Any, int]]) -> Shell:
 
 def same(found: list[tuple[Batch, list[bytes]]], expected: list[tuple[Batch, list[bytes]]]) -> bool:
     return len(found) == len(expected) and all(
-        same_batch(one, other) and lines == texts
-        for (one, lines), (other, texts) in zip(found, expected, strict=True)
+        same_batch(one, other) and lines == texts for (one, lines), (other, texts) in zip(found, expected, strict=True)
     )
 
 

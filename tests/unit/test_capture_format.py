@@ -123,13 +123,15 @@ def test_content_that_is_not_what_it_should_be_is_told(tmp_path: Path) -> None:
         Capture(sectioned(tmp_path, (Holds.META, b"\xc1")))
     with pytest.raises(CaptureError, match="records are of version 9"):
         Capture(sectioned(tmp_path, (Holds.META, meta[:-1] + b"\x09")))
-    with pytest.raises(CaptureError, match="shorter than it says"), Capture(
-        sectioned(tmp_path, (Holds.META, meta), (Holds.RECORDS, b"\xff" * 40))
-    ) as capture:
+    with (
+        pytest.raises(CaptureError, match="shorter than it says"),
+        Capture(sectioned(tmp_path, (Holds.META, meta), (Holds.RECORDS, b"\xff" * 40))) as capture,
+    ):
         list(capture.blocks())
-    with pytest.raises(CaptureError, match=r"state .* cannot be used .* another version"), Capture(
-        sectioned(tmp_path, (Holds.META, meta), (Holds.STATE, bytes(100)))
-    ) as capture:
+    with (
+        pytest.raises(CaptureError, match=r"state .* cannot be used .* another version"),
+        Capture(sectioned(tmp_path, (Holds.META, meta), (Holds.STATE, bytes(100)))) as capture,
+    ):
         capture.state()
 
 

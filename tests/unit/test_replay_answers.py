@@ -83,8 +83,9 @@ def test_records_that_do_not_follow_are_told(tmp_path: Path) -> None:
     shell.records[-1] = shell.records[-1].__class__(
         shell.records[-1].lsn, Kind.MARK, encode_mark(Mark(2, 5, 9, 1, 0, Cause.SOURCES))
     )
-    with Capture(kept(tmp_path / "a.capture", captured(shell))) as capture, pytest.raises(
-        CaptureError, match="does not follow from those before it"
+    with (
+        Capture(kept(tmp_path / "a.capture", captured(shell))) as capture,
+        pytest.raises(CaptureError, match="does not follow from those before it"),
     ):
         figures_of(Folding(capture))
 

@@ -86,8 +86,15 @@ class Gathered:
         self.kinds.append(Kind.ARRIVAL)
         self.lsns.append(lsn)
         self.requests.append(
-            (found.arrived_ns, len(found.times), len(found.faults), flags, raws - lines, table - raws,
-             len(view) - table)
+            (
+                found.arrived_ns,
+                len(found.times),
+                len(found.faults),
+                flags,
+                raws - lines,
+                table - raws,
+                len(view) - table,
+            )
         )
         self._keep("times", found.times)
         self._keep("lengths", found.lengths)

@@ -221,9 +221,7 @@ def parquet_pieces(path: Path, progress: Callable[[int, int], object]) -> Iterat
                 columns = [_plain_column(batch.column(index)) for index in range(batch.num_columns)]
                 names = batch.schema.names
                 encode = msgspec.json.Encoder(enc_hook=_as_json).encode
-                yield b"".join(
-                    encode(dict(zip(names, row, strict=True))) + b"\n" for row in zip(*columns, strict=True)
-                )
+                yield b"".join(encode(dict(zip(names, row, strict=True))) + b"\n" for row in zip(*columns, strict=True))
                 done += batch.num_rows
                 progress(done, rows)
     except pyarrow.ArrowException as error:

@@ -152,9 +152,7 @@ class SectionReader:
         if crc != extend_crc(0, head[:12]):
             raise CaptureError(f"{self.path}: the header at byte 0 is damaged; take the file from a copy")
         if version > FORMAT_VERSION:
-            raise CaptureError(
-                f"{self.path}: written in format {version}, this program reads up to {FORMAT_VERSION}"
-            )
+            raise CaptureError(f"{self.path}: written in format {version}, this program reads up to {FORMAT_VERSION}")
 
     def _read(self, offset: int, size: int) -> bytes:
         found = os.pread(self._descriptor, size, offset)

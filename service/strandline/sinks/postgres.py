@@ -22,11 +22,12 @@ from .postgres_server import (
     POSITION,
     Connection,
     Table,
+    begin_at,
     connect,
     lies_in_rows,
-    moving,
     place_of,
     prepare,
+    read_places,
     read_positions,
     trouble,
 )
@@ -74,7 +75,7 @@ class PostgresSink:
             Table(late_table, LATE, key_of(LATE)),
             *([Table(ASIDE_TABLE, ASIDE, ASIDE_KEY)] if self._rows.sets_aside else []),
         ]
-        self._moving = moving(schema)
+        self._places: dict[Lane, str] = {}
         self._own_keys: set[str] = set()
         self._thread = OwnThread(f"postgres {feed}")
         self._connection: Connection | None = None
@@ -141,9 +142,7 @@ class PostgresSink:
         reached = self._positions[lane]
         pieces = self._rows.pieces(batches, lines, ROWS_AT_ONCE)
         first = await self._piece(pieces)
-        await connection.execute("BEGIN")
-        place = (self._feed, lane, self._stored[lane])
-        if await connection.execute(self._moving, *place, number, reached) != "UPDATE 1":
+        if not await begin_at(connection, self._schema, self._places[lane], reached, number):
             raise self._moved(lane)
         beside: list[Rows] = []
         async with contextlib.aclosing(self._blocks(first, pieces, beside)) as blocks:
@@ -198,6 +197,7 @@ class PostgresSink:
     async def _learn(self, connection: Connection) -> None:
         """See that the tables can take the rows, and where the store stands."""
         self._own_keys = await prepare(connection, self._schema, self._tables)
+        self._places = await read_places(connection, self._feed, self._stored)
         found = await read_positions(connection, self._schema, self._feed, self._stored)
         for lane, possible in self._possible.items():
             if found[lane] not in possible:

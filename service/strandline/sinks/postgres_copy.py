@@ -64,6 +64,13 @@ def raw(values: Pieces, lengths: NDArray[Any] | None = None) -> Column:
     return [_bytes_of(sizes), values]
 
 
+def chosen(encoded: Pieces, places: NDArray[np.int64]) -> Column:
+    """Of a few values, encoded with their lengths, the one that each row's place names."""
+    if len({*map(len, encoded)}) == 1:  # then all are of one width, and numpy sets them beside their neighbours
+        return [np.frombuffer(b"".join(encoded), np.uint8).reshape(len(encoded), -1)[places]]
+    return [list(map(encoded.__getitem__, places.tolist()))]
+
+
 def numbers(values: NDArray[Any], kind: str) -> Column:
     """Numbers of one width, never NULL; `kind` is numpy's big-endian name of their type."""
     fixed = values.astype(kind)

@@ -15,7 +15,7 @@ from ..core.columns import NO_SOURCE, Batch
 from ..errors import StrandlineError
 from ..ports import Lines
 from .postgres_columns import ASIDE_TABLE, DEFAULT, Column, holds_events
-from .postgres_copy import NULL, OF_TYPE, constant, numbers, raw, rows_of, with_length
+from .postgres_copy import NULL, OF_TYPE, chosen, constant, numbers, raw, rows_of, with_length
 from .postgres_copy import Column as Encoded
 from .postgres_fields import Fields, Values, microseconds, storable
 from .rows import late_by_ns
@@ -146,6 +146,11 @@ class _Part:
         block = b"".join(events[row] + b"\n" for row in rows)
         return _Part(batch, self.positions[rows], block, self.lines)
 
+    def lengths(self) -> NDArray[np.uint32] | None:
+        """How long each line is; None where that must be counted, since the block is not as long as the refs say."""
+        lengths: NDArray[np.uint32] = self.batch.refs["length"]
+        return lengths if int(lengths.sum(dtype=np.int64)) + len(lengths) == len(self.block) else None
+
     def events(self) -> list[bytes]:
         """The lines, one each row. Raises StrandlineError where the journal gave another number of them."""
         events = self.block.split(b"\n")
@@ -186,7 +191,7 @@ class _Known:
             "time_ns": lambda: numbers(batch.times, ">i8"),
             "time": lambda: numbers(microseconds(batch.times), ">i8"),
             "source": lambda: _sources(batch, part.lines),
-            "event": lambda: raw(part.events()),
+            "event": lambda: raw(part.events(), part.lengths()),
             "arrived_ns": lambda: _repeated(batch.instant_ns, rows),
             "late_by_ns": lambda: numbers(np.array(late_by_ns(batch), dtype=np.int64), ">i8"),
         }
@@ -204,4 +209,4 @@ def _sources(batch: Batch, lines: Lines) -> Encoded:
     distinct, places = np.unique(batch.refs["source"], return_inverse=True)
     names = lines.source_names()
     encoded = [NULL if number == NO_SOURCE else with_length(storable(names[number]).encode()) for number in distinct]
-    return [list(map(encoded.__getitem__, places.tolist()))]
+    return chosen(encoded, places)

@@ -164,10 +164,24 @@ async def read_positions(connection: Connection, schema: str, feed: str, stored:
     return positions
 
 
-def moving(schema: str) -> str:
-    """The statement that moves a position from $5 to $4, if it stands there still, and locks its row."""
-    place = quoted(schema, POSITION_TABLE)
-    return f"UPDATE {place} SET batch = $4 WHERE feed = $1 AND lane = $2 AND table_name = $3 AND batch = $5"
+async def read_places(connection: Connection, feed: str, stored: dict[Lane, str]) -> dict[Lane, str]:
+    """For each lane the condition that names its row of the position table, as the server itself quotes it."""
+    query = "SELECT quote_literal($1::text), quote_literal($2::text), quote_literal($3::text)"
+    places: dict[Lane, str] = {}
+    for lane, table in stored.items():
+        literals = await connection.fetchrow(query, feed, lane, table)
+        assert literals is not None
+        places[lane] = " AND ".join(f"{name} = {value}" for name, value in zip(POSITION_KEY, literals, strict=True))
+    return places
+
+
+async def begin_at(connection: Connection, schema: str, place: str, reached: int, number: int) -> bool:
+    """Begin a transaction and move the position from `reached` to `number`, which locks its row, in one trip.
+
+    False where the position does not stand at `reached`.
+    """
+    update = f"UPDATE {quoted(schema, POSITION_TABLE)} SET batch = {number:d} WHERE batch = {reached:d} AND {place}"
+    return await connection.execute(f"BEGIN; {update}") == "UPDATE 1"
 
 
 # ---- errors ---------------------------------------------------------------------------------------------------------
