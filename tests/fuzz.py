@@ -17,7 +17,10 @@ import time
 import tracemalloc
 from collections import Counter
 from collections.abc import Iterator, Sequence
+from pathlib import Path
 from random import Random
+from tempfile import TemporaryDirectory
+from types import FunctionType
 
 import fuzz_targets
 import fuzz_targets_journal
@@ -25,6 +28,7 @@ from fuzz_targets import Target
 
 TARGETS: dict[str, Target] = {**fuzz_targets.TARGETS, **fuzz_targets_journal.TARGETS}
 CI_INPUTS = sum(target.inputs for target in TARGETS.values())
+SEEDS = 500
 GROWTH_BYTES_AT_MOST = 100_000  # left behind by some hundred inputs: caches of the standard library, at most
 
 
@@ -79,15 +83,25 @@ def _shares(inputs: int, name: str | None) -> Iterator[tuple[str, int]]:
 
 
 def _guided(target: Target) -> None:
-    """By coverage: bytes choose among the seeds and changes as a random generator would. Ends at a finding."""
+    """By coverage, beginning with inputs as they are drawn here. Ends at a finding, which atheris writes to a file."""
     import atheris  # noqa: PLC0415 - only this way of running needs it
 
-    def one(data: bytes) -> None:
-        target.run(target.make(Random(data)))
+    for function in _own_functions():
+        atheris.instrument_func(function)
+    with TemporaryDirectory() as folder:
+        for number in range(SEEDS):
+            Path(folder, str(number)).write_bytes(target.make(Random(number)))
+        atheris.Setup([sys.argv[0], folder], target.run)
+        atheris.Fuzz()
 
-    atheris.instrument_all()
-    atheris.Setup([sys.argv[0], "-max_len=64"], one)
-    atheris.Fuzz()
+
+def _own_functions() -> Iterator[FunctionType]:
+    """The functions and methods of the package, as far as it was imported."""
+    modules = [module for name, module in sys.modules.items() if name.startswith("strandline.")]
+    holders = [*modules, *(each for module in modules for each in vars(module).values() if isinstance(each, type))]
+    for holder in holders:
+        found = [each for each in vars(holder).values() if isinstance(each, FunctionType)]
+        yield from (each for each in found if each.__module__.startswith("strandline."))
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
@@ -99,7 +113,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser.add_argument("--guided", action="store_true", help="by coverage, without end; needs --target and atheris")
     given = parser.parse_args(arguments)
     if given.guided:
-        _guided(TARGETS[given.target or "bodies"])
+        target = TARGETS[given.target or "bodies"]
+        if not isinstance(drawn(target, 0), bytes):
+            parser.error("inputs of this target are no bytes")
+        _guided(target)
     for name, count in _shares(given.inputs, given.target):
         start = time.perf_counter()
         try:

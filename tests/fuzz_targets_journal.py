@@ -180,14 +180,15 @@ def _recover(files: Files) -> str:
 # --- bodies ------------------------------------------------------------------------------------------------------
 
 
-def _record(draw: Random) -> tuple[int, bytes]:
+def _record(draw: Random) -> bytes:
+    """The kind, and the body."""
     records = list(story().records.values())
     record = draw.choice(records)
-    return record.kind, mutated(draw, record.body, [other.body for other in records[:20]])
+    return bytes([record.kind]) + mutated(draw, record.body, [other.body for other in records[:20]])
 
 
-def _read_record(given: tuple[int, bytes]) -> str:
-    kind, body = given
+def _read_record(given: bytes) -> str:
+    kind, body = given[0] if given else 0, given[1:]
     try:
         if kind == Kind.ARRIVAL:
             decode_arrival(body, 0)
@@ -216,7 +217,7 @@ def _restore(body: bytes) -> str:
 
 TARGETS: dict[str, Target] = {
     "folders": Target(
-        3_000, _damaged, _recover, frozenset({"refused", "whole", "prefix", "needs its snapshot"}), 4 * 2**20
+        2_000, _damaged, _recover, frozenset({"refused", "whole", "prefix", "needs its snapshot"}), 4 * 2**20
     ),
     "records": Target(1_500, _record, _read_record, frozenset({"refused", "good"})),
     "snapshots": Target(500, _snapshot, _restore, frozenset({"refused", "good"}), 8 * 2**20),

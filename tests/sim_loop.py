@@ -92,7 +92,9 @@ class SimLoop(asyncio.SelectorEventLoop):
     def time(self) -> float:
         return self._seconds()
 
-    def run_in_executor(self, executor: Any, func: Callable[..., Any], *args: Any) -> asyncio.Future[Any]:  # type: ignore[override]
+    def run_in_executor(  # type: ignore[override]
+        self, executor: Any, func: Callable[..., Any], *args: Any
+    ) -> asyncio.Future[Any]:
         future: asyncio.Future[Any] = self.create_future()
         self.jobs.append(Job(executor, partial(func, *args), future))
         return future

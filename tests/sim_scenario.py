@@ -68,7 +68,8 @@ class Scenario:
         if before is not None:
             return msgspec.structs.replace(before, **chosen)
         event = EventTime("/observed_at", "ns")
-        return Feed(FEED, event, "/station", journal=self.journal(), sinks=self.sinks(folder), **chosen)  # type: ignore[arg-type]
+        journal, sinks = self.journal(), self.sinks(folder)
+        return Feed(FEED, event, "/station", journal=journal, sinks=sinks, **chosen)  # type: ignore[arg-type]
 
     def journal(self) -> Journal:
         """Segments from the least size on; the limit from the least that a request fits in."""

@@ -110,9 +110,8 @@ class Flaky:
         return await self._call(lambda: self._take(batches, lines))
 
     async def _take(self, batches: Sequence[Batch], lines: Lines) -> dict[Lane, int]:
-        answer = await self._inner.take(batches, lines)
         self._stores.has.update((self._name, batch.lane, batch.number) for batch in batches)
-        return answer
+        return await self._inner.take(batches, lines)
 
     async def flush(self, lines: Lines) -> dict[Lane, int]:
         return await self._call(lambda: self._inner.flush(lines))
@@ -147,6 +146,7 @@ class Stores:
     met: dict[str, int] = field(default_factory=dict)
     hanging: list[asyncio.Future[None]] = field(default_factory=list)
     has: set[tuple[str, Lane, int]] = field(default_factory=set)
+    fetched: dict[str, int] = field(default_factory=dict)
     never: set[tuple[str, Lane, int]] = field(default_factory=set)
     weather: Weather | None = None
     _connections: list[sqlite3.Connection] = field(default_factory=list)
@@ -180,11 +180,10 @@ class Stores:
             future.set_exception(ConnectionResetError("the connection broke off"))
 
     def refused_for_good(self, name: str, batches: Sequence[Batch]) -> list[int]:
-        """Numbers of those that a store will never take: it refuses always what it refused once, never what it has."""
+        """Numbers of those that a store will never take: it refuses always what it refused once, never what it may have."""
         for batch in batches if self.moods.get(name) == "refuses for good" else ():
             assert self.weather is not None
-            known = (name, batch.lane, batch.number) in self.has or batch.number in self.receiver.batches[batch.lane]
-            if not known and self.weather.chance.random() < 0.3:
+            if (name, batch.lane, batch.number) not in self.has and self.weather.chance.random() < 0.3:
                 self.never.add((name, batch.lane, batch.number))
         found = [batch.number for batch in batches if (name, batch.lane, batch.number) in self.never]
         self.met["refuses for good"] = self.met.get("refuses for good", 0) + bool(found)
@@ -198,10 +197,17 @@ class Stores:
         self.weather.store_error = lambda: kind("simulated")
 
     def collect(self) -> None:
-        """Somebody fetches the complete files, away from where the service sees them."""
+        """Somebody fetches the complete files, and throws away those whose batches were all fetched before."""
         fetched = self.folder / "fetched"
         fetched.mkdir(exist_ok=True)
         for path in sorted((self.folder / "files").glob("*.ndjson")):
+            lane, first, last = path.stem.rsplit("-", 2)
+            reached = self.fetched.get(lane, 0)
+            if int(last) <= reached:
+                path.unlink()
+                continue
+            assert int(first) > reached, f"{path.name} holds new batches and repeats: {lane} was fetched up to {reached}"
+            self.fetched[lane] = int(last)
             path.rename(fetched / path.name)
 
     def died(self) -> None:

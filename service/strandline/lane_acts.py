@@ -10,6 +10,7 @@ import asyncio
 import hashlib
 from collections.abc import Sequence
 from pathlib import Path
+from typing import Annotated
 
 import msgspec
 from aiohttp import web
@@ -19,25 +20,26 @@ from .errors import BodyError
 from .ingest.endpoint import read_act, runtime_of
 from .problems import NotThere
 from .repairing import Repairer
-from .runtime import FeedRuntime
+from .runtime import FeedRuntime, decoder_of
 from .sinks.lanes import ROWS_AT_MOST, QuarantineRow, forget_exactly, quarantine_rows
 
 LARGEST = 2**63 - 1
+RowNumber = Annotated[int, msgspec.Meta(ge=0, le=LARGEST)]
 
 
 class Resend(msgspec.Struct, forbid_unknown_fields=True):
     """Rows numbered above `after` up to `through` go to `sink` once more, in repair batches."""
 
     sink: str
-    after: int = 0
-    through: int = LARGEST
+    after: RowNumber = 0
+    through: RowNumber = LARGEST
 
 
 class Redrive(msgspec.Struct, forbid_unknown_fields=True):
     """Lines in quarantine numbered above `after` up to `through`, of one reason if given, come in once more."""
 
-    after: int = 0
-    through: int = LARGEST
+    after: RowNumber = 0
+    through: RowNumber = LARGEST
     reason: str | None = None
 
 
@@ -81,7 +83,9 @@ async def _drive_again(runtime: FeedRuntime, rows: Sequence[QuarantineRow], path
     body = b"".join(row.event.replace(b"\r", b" ").replace(b"\n", b" ") + b"\n" for row in rows)
     sources = runtime.feed.state.sources.numbers
     try:
-        arrival = runtime.decoder.decode(body, "application/x-ndjson", sources)
+        # As many faults as rows are allowed: a request is refused for too many, but these are kept already.
+        decoder = decoder_of(runtime.config, faults_at_most=len(rows))
+        arrival = decoder.decode(body, "application/x-ndjson", sources)
     except BodyError as error:
         raise BodyError(
             error.status, error.title, f"{error.detail} (rows {rows[0].number} to {rows[-1].number})"

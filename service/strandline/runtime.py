@@ -13,6 +13,8 @@ from collections.abc import Awaitable, Callable, Mapping, Sequence
 from functools import partial
 from pathlib import Path
 
+import msgspec
+
 from .config import Feed as FeedConfig
 from .core.columns import TIME_MIN, Arrival, Batch, Lane, RequestKey
 from .core.effects import Answer, Append, Deliver, Effect, Outcome, Refuse, Sync
@@ -40,9 +42,10 @@ log = logging.getLogger(__name__)
 SMALL_RECORD_BYTES = 4096  # more than any record that is not an arrival's
 
 
-def decoder_of(config: FeedConfig) -> Decoder:
-    """The decoder of a feed's bodies."""
-    return Decoder(config.name, config.time.at, config.time.unit, config.source, config.id, limits=config.body_limits())
+def decoder_of(config: FeedConfig, **changed: int) -> Decoder:
+    """The decoder of a feed's bodies; `changed` are limits that hold instead of the configured ones."""
+    limits = msgspec.structs.replace(config.body_limits(), **changed)
+    return Decoder(config.name, config.time.at, config.time.unit, config.source, config.id, limits=limits)
 
 
 class FeedRuntime:

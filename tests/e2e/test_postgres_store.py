@@ -73,7 +73,8 @@ def joined(sendings: Sequence[Sent]) -> Sent:
     """Several sendings, one after the other, as one."""
     offsets = np.cumsum([0, *(len(sent.begins) for sent in sendings)])  # type: ignore[arg-type]
     columns = [np.concatenate([getattr(sent.rows, name) for sent in sendings]) for name in ("ids", "times", "sources")]
-    requests = [sent.requests + offset for sent, offset in zip(sendings, offsets, strict=False)]  # type: ignore[operator]
+    pairs = zip(sendings, offsets, strict=False)
+    requests = [sent.requests + offset for sent, offset in pairs]  # type: ignore[operator]
     spans = [np.concatenate([getattr(sent, name) for sent in sendings]) for name in ("begins", "ends", "answered")]
     return Sent(Rows(*columns), np.concatenate(requests), *spans)
 

@@ -12,10 +12,12 @@ import json
 from pathlib import Path
 from random import Random
 
+import msgspec
 import pytest
 from fuzz import CI_INPUTS, GROWTH_BYTES_AT_MOST, TARGETS, Finding, fuzz, growth, main
 from fuzz_mutate import TOKENS, mutated
 from fuzz_targets import Target
+from fuzz_targets_journal import story
 from helpers_raw import LAST, Reply, chunked, exchange, post, replies
 from helpers_service import FEED, PROBLEM, body_of, configuration, event_line, running
 
@@ -56,6 +58,27 @@ def test_a_finding_names_the_input_and_how_to_try_it_again(
     assert main(["--target", "amounts", "--from", number, "--inputs", "1"]) == 1
     assert "a nine" in capsys.readouterr().err
     assert main(["--target", "amounts", "--from", str(int(number) - 1), "--inputs", "1"]) == 0
+
+
+# --- found before ------------------------------------------------------------------------------------------------
+
+
+def test_a_pointer_of_hundreds_of_steps() -> None:
+    """It recursed to death; no event is nested so deep that it could stand for anything."""
+    assert TARGETS["pointers"].run(("/a" * 201, "/x", b"{}")) == "refused"
+    assert TARGETS["pointers"].run(("/a" * 200, "/x", b"{}")) == "nothing there"
+
+
+@pytest.mark.parametrize("wrong", [None, "x", 5, [], {}, [[1]], {"a": 1}], ids=repr)
+def test_a_snapshot_with_anything_in_its_header(wrong: object) -> None:
+    """A text where numbers are expected got through as an AttributeError, which would have kept the service down."""
+    saved = story().saved
+    size = int.from_bytes(saved[:8], "little")
+    header = msgspec.msgpack.decode(saved[8 : 8 + size])
+    for name in header:
+        changed = msgspec.msgpack.encode({**header, name: wrong})
+        body = len(changed).to_bytes(8, "little") + changed + saved[8 + size :]
+        assert TARGETS["snapshots"].run(body) in ("refused", "good"), name
 
 
 # --- requests ----------------------------------------------------------------------------------------------------

@@ -100,7 +100,7 @@ def good_lines(draw, odds=True):
     elif odd == 1:
         event["note"] = json.loads("[" * (depth := draw(st.integers(4, 7))) + "]" * depth)
     elif odd == 2:
-        event["station"] = draw(st.sampled_from(["", "x" * 256, "x" * 257, "ö" * 129]))
+        event["station"] = draw(st.sampled_from(["", "x" * 256, "x" * 257, "ö" * 129, "a\0b"]))
     elif odd == 3:
         event["id"] = draw(st.sampled_from(["", 10**255, 10**256]))
     return json.dumps(event, ensure_ascii=draw(st.booleans()), separators=(",", ":"))

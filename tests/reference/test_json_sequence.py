@@ -59,6 +59,16 @@ def test_texts_are_numbered_without_the_empty_ones():
     assert [fault.line for fault in arrival.faults] == [2]
 
 
+def test_separators_and_line_feeds_that_only_agree_in_number():
+    """As many of one as of the other, and not in pairs: a text's end is the next separator, not the line's end."""
+    arrival = decoded(b"\x1e%b\n%b\x1e%b\n" % (A, A, B))
+    assert faults(arrival) == [(1, "malformed", A + b" " + A)]
+    assert (arrival.times.tolist(), line_numbers(arrival)) == ([2], [2])
+    arrival = decoded(b"\x1e%b\n\x1e\n\x1e \n\x1e %b \n" % (A, B))
+    assert (arrival.times.tolist(), line_numbers(arrival)) == ([1, 2], [1, 2])
+    assert arrival.payload == A + b"\n" + B + b"\n"
+
+
 def test_texts_of_several_lines_come_on_one_and_keep_their_bytes():
     arrival = decoded(b'\x1e\r\n {\r\n "ts" : 1,\t"x":"\\n"}\n \n\x1e' + B)
     assert arrival.payload == b'{   "ts" : 1,\t"x":"\\n"}\n' + B + b"\n"

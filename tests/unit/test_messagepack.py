@@ -8,7 +8,7 @@ import struct
 
 import pytest
 from helpers_arrival import check_arrival, line_numbers, plain
-from strandline.errors import BodyError
+from strandline.errors import BodyError, TooManyFaults
 from strandline.ingest.decode import Decoder
 from strandline.ingest.limits import BodyLimits
 
@@ -146,3 +146,11 @@ def test_limits():
     assert len(arrival.faults[0].raw) <= 40
     error = refused(b"\x94" + grows * 4, feed)
     assert (error.status, "as JSON" in error.detail) == (413, True)
+
+
+def test_items_that_are_none_count_as_faults_of_the_body():
+    limits = BodyLimits(faults_at_most=3)
+    feed = Decoder("river", "/ts", "ns", limits=limits)
+    assert len(decoded(b"\x94\x01\x02\x03\x81" + TS, feed).faults) == 3
+    with pytest.raises(TooManyFaults, match="line 1: malformed"):
+        feed.decode(b"\x95\x01\x02\x03\x04\x81" + TS, MSGPACK, {})

@@ -5,6 +5,7 @@ from __future__ import annotations
 import sys
 from collections.abc import Sequence
 from pathlib import Path
+from urllib.parse import urlsplit
 
 import msgspec
 import pytest
@@ -335,7 +336,7 @@ async def test_a_database_or_schema_that_is_not_there(schema: str) -> None:
     with pytest.raises(StrandlineError, match="there is no schema 'absent': create it"):
         await sink.open()
     await sink.close()
-    other = PostgresSink(shared().replace("/postgres?", "/absent?"), "river")
+    other = PostgresSink(urlsplit(shared())._replace(path="/absent").geturl(), "river")
     with pytest.raises(StrandlineError, match=r"absent: there is no such database: create it, or see `dsn`"):
         await other.open()
     await other.close()

@@ -1,8 +1,8 @@
 """Rows on the PostgreSQL sink against the driver's own bulk load (asyncpg's COPY of records), at equal commit size.
 
 The yardstick gets its records as tuples that were made beforehand, on a connection with the same settings, into a table
-of the same shape and keys, one commit each. The sink makes its rows from lines, moves its position in the same
-transaction, and reads nothing back. The server is one that the extra `test` brings; both write to its disk.
+of the same shape and keys, one commit each. The sink makes its rows from lines and moves its position in the same
+transaction. What both have stored must be equal. The server is one that the extra `test` brings.
 """
 
 from __future__ import annotations

@@ -8,6 +8,7 @@ What is decided here, where the specification leaves room:
 
 * Only specversion "1.0" is known, so events of one batch that are accepted have the same one, as a batch must.
 * `data` stands beside `data_base64` whenever both are members and `data_base64` is not null: `"data": null` is content.
+* A name is judged whatever stands there, null too, which otherwise counts as absent.
 * `dataschema` is a URI with a scheme; a fragment is let pass.
 """
 

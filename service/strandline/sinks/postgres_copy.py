@@ -1,9 +1,9 @@
 """PostgreSQL's binary COPY format, column by column: values of a piece of rows in, one block of bytes out.
 
 https://www.postgresql.org/docs/current/sql-copy.html, "Binary Format": a row is the number of its columns, and each
-column its length and its bytes, big-endian; -1 is NULL. Columns of one width are put side by side by numpy; bytes of an
-event go in as they came. Some 300 ns a row of 160 bytes, where the driver's own encoding of records takes 400 and as
-much again to make the records (measured, processor time); and it needs no loop to run on.
+column its length and its bytes, big-endian; -1 is NULL. Columns of one width are put side by side by numpy; an event's
+bytes go in as they came. A row of 160 bytes takes some 400 ns of processor time, 650 with its sending; as a record of
+Python values that the driver encodes it took 1,000 (measured). And it happens in the sink's thread, not on the loop.
 """
 
 from __future__ import annotations

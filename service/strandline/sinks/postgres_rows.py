@@ -15,7 +15,7 @@ from ..core.columns import NO_SOURCE, Batch
 from ..errors import StrandlineError
 from ..ports import Lines
 from .postgres_columns import ASIDE_TABLE, DEFAULT, Column, holds_events
-from .postgres_copy import NULL, OF_TYPE, chosen, constant, numbers, raw, rows_of, with_length
+from .postgres_copy import HEAD, NULL, OF_TYPE, TAIL, chosen, constant, numbers, raw, rows_of, with_length
 from .postgres_copy import Column as Encoded
 from .postgres_fields import Fields, Values, microseconds, storable
 from .rows import late_by_ns
@@ -48,6 +48,18 @@ class Rows:
     block: bytes
 
 
+@dataclass(frozen=True, slots=True)
+class Piece:
+    """Some rows of one lane. All blocks of a lane's `rows` together are the data of one COPY, with head and tail.
+
+    `aside`: the rows that do not fit, as the data of a COPY of their own.
+    """
+
+    rows: Rows
+    aside: Rows | None
+    last: bool
+
+
 class RowMaker:
     """Makes rows of one feed's batches. Columns must be settled (`postgres_columns.settled`)."""
 
@@ -61,22 +73,21 @@ class RowMaker:
         self._fields = Fields(self._looked_at)
         self.sets_aside = bool(self._looked_at) and not holds_events(columns)
 
-    def pieces(self, batches: Sequence[Batch], lines: Lines, rows_at_most: int) -> Iterator[list[Rows]]:
-        """Rows of batches of one lane, some `rows_at_most` at a time, each time for one or several tables.
+    def pieces(self, batches: Sequence[Batch], lines: Lines, rows_at_most: int) -> Iterator[Piece]:
+        """Rows of batches of one lane (at least one batch), some `rows_at_most` at a time.
 
         So memory is bounded by a piece, whatever a batch weighs, and the next one can be made while one is sent.
         """
         gathered: list[Rows] = []
-        rows = 0
+        rows, head = 0, HEAD
         for batch in batches:
             for part in _parts(batch, lines, rows_at_most):
                 if gathered and rows + len(part.batch) > rows_at_most:
-                    yield _joined(gathered)
-                    gathered, rows = [], 0
+                    yield _piece(gathered, head, b"")
+                    gathered, rows, head = [], 0, b""
                 gathered += self._late(part) if batch.lane == "late" else self._ordered(part)
                 rows += len(part.batch)
-        if gathered:
-            yield _joined(gathered)
+        yield _piece(gathered, head, TAIL)
 
     def _ordered(self, part: _Part) -> list[Rows]:
         """Rows of the table and, where some do not fit, those of the table beside it."""
@@ -119,12 +130,16 @@ class RowMaker:
         return [Rows(self._late_table, tuple(column.name for column in LATE), block)]
 
 
-def _joined(gathered: Sequence[Rows]) -> list[Rows]:
-    """The rows of each table as one block; the table that every part has comes first."""
-    blocks: dict[str, list[Rows]] = {}
-    for rows in gathered:
-        blocks.setdefault(rows.table, []).append(rows)
-    return [replace(same[0], block=b"".join(rows.block for rows in same)) for same in blocks.values()]
+def _piece(gathered: Sequence[Rows], head: bytes, tail: bytes) -> Piece:
+    """What was gathered, as one block a table."""
+    first, *others = gathered
+    aside = [rows for rows in others if rows.table == ASIDE_TABLE]
+    main = [first.block, *(rows.block for rows in others if rows.table != ASIDE_TABLE)]
+    return Piece(
+        replace(first, block=b"".join([head, *main, tail])),
+        replace(aside[0], block=b"".join([HEAD, *(rows.block for rows in aside), TAIL])) if aside else None,
+        last=bool(tail),
+    )
 
 
 # ---- batches in parts -----------------------------------------------------------------------------------------------
