@@ -180,7 +180,7 @@ class Stores:
             future.set_exception(ConnectionResetError("the connection broke off"))
 
     def refused_for_good(self, name: str, batches: Sequence[Batch]) -> list[int]:
-        """Numbers of those that a store will never take: it refuses always what it refused once, never what it may have."""
+        """Numbers of those that a store will never take: for ever what it refused once, never what it may have."""
         for batch in batches if self.moods.get(name) == "refuses for good" else ():
             assert self.weather is not None
             if (name, batch.lane, batch.number) not in self.has and self.weather.chance.random() < 0.3:
@@ -206,7 +206,7 @@ class Stores:
             if int(last) <= reached:
                 path.unlink()
                 continue
-            assert int(first) > reached, f"{path.name} holds new batches and repeats: {lane} was fetched up to {reached}"
+            assert int(first) > reached, f"{path.name} holds repeats and more: fetched up to {reached}"
             self.fetched[lane] = int(last)
             path.rename(fetched / path.name)
 

@@ -152,5 +152,6 @@ def test_items_that_are_none_count_as_faults_of_the_body():
     limits = BodyLimits(faults_at_most=3)
     feed = Decoder("river", "/ts", "ns", limits=limits)
     assert len(decoded(b"\x94\x01\x02\x03\x81" + TS, feed).faults) == 3
-    with pytest.raises(TooManyFaults, match="line 1: malformed"):
-        feed.decode(b"\x95\x01\x02\x03\x04\x81" + TS, MSGPACK, {})
+    for way in (feed.decode, feed.decode_line_by_line):
+        with pytest.raises(TooManyFaults, match="line 1: malformed"):
+            way(b"\x95\x01\x02\x03\x04\x81" + TS, MSGPACK, {})

@@ -1,4 +1,4 @@
-"""`faults_at_most` over real HTTP: a body with more faults is refused whole; what is kept already is not bound by it."""
+"""`faults_at_most` over real HTTP: a body with more faults is refused whole; what is kept already is not bound."""
 
 from __future__ import annotations
 

@@ -159,7 +159,7 @@ def _broken_time(text: str) -> str | None:
 def all_sound(payload: bytes, count: int) -> bool:
     """Whether each of `count` lines, one JSON object each, is a CloudEvent. Never True where `fault_of` finds a fault.
 
-    3 µs an event of 8 attributes; `fault_of` takes 8 (measured).
+    A quarter of the time that `fault_of` takes line by line (measured: 4 against 15 µs, on a busy machine).
     """
     try:
         events, members = _events.decode_lines(payload), _members.decode_lines(payload)

@@ -147,6 +147,7 @@ class Decoder:
         records: list[Any] = []
         kept: list[int] = []
         faults = list(lines.faults)
+        self._check_faults(faults)
         judge = _Judge(lines, self._fields, self._at, self._unit, self._limits)
         for index, line in enumerate(lines):
             try:

@@ -8,6 +8,8 @@ be cut short without a trace, and none of them is an event.
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import msgspec
 import numpy as np
 
@@ -61,7 +63,7 @@ def _one_by_one(body: bytes, limits: BodyLimits) -> Lines:
     lines = lines_of(kept, limits)
     if not faults:
         return lines
-    return Lines(lines.payload, lines.starts, lines.ends, np.array(numbers, np.int64), tuple(faults))
+    return replace(lines, numbers=np.array(numbers, np.int64), faults=tuple(faults))
 
 
 def _fault(number: int, text: bytes, limits: BodyLimits) -> Fault | None:

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import datetime
 from base64 import b64encode
+from dataclasses import replace
 from math import isfinite
 from typing import Any
 
@@ -56,7 +57,7 @@ def split_messagepack(body: bytes, limits: BodyLimits) -> Lines:
     lines = lines_of(texts, limits)
     if not faults:
         return lines
-    return Lines(lines.payload, lines.starts, lines.ends, np.array(numbers, np.int64), tuple(faults))
+    return replace(lines, numbers=np.array(numbers, np.int64), faults=tuple(faults))
 
 
 def _items(body: bytes, limits: BodyLimits) -> list[msgspec.Raw]:
