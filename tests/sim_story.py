@@ -139,4 +139,5 @@ def feed_of(folder: Path, sinks: Sequence[str], journal: Journal, **settings: ob
         **settings,
     }
     event = EventTime("/observed_at", "ns")
-    return Feed(FEED, event, "/station", journal=journal, sinks=tuple(kinds[name] for name in sinks), **chosen)  # type: ignore[arg-type]
+    made = tuple(kinds[name] for name in sinks)
+    return Feed(FEED, event, "/station", journal=journal, sinks=made, **chosen)  # type: ignore[arg-type]
