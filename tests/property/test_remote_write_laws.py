@@ -147,9 +147,13 @@ def stored(model: Model) -> dict[tuple[Labels, int], float]:
 # An answer is lost, and what is asked then, whether the last samples are there, is too large.
 TAILS_TOO_LARGE = [[(1, "a", False, True), (1, "b", False, True), (1, "a", False, True), (1, "b", False, True)]] * 2
 
+# Two pieces of one request are lost one after the other.
+TWO_PIECES = [[(1, "a", False, True), (1, "a", True, True), (1, "a", False, True)]]
+
 
 @settings(max_examples=80)
 @given(BATCHES, FAULTS)
+@example(TWO_PIECES, [(413, "large")] * 2 + ["lose", "ok", "ok", "lose", (413, "large")])
 @example(TAILS_TOO_LARGE, ["ok", "lose", "ok", (413, "large"), "lose"])
 @example(TAILS_TOO_LARGE, ["ok", "restart", "lose", "restart"])
 def test_whatever_goes_wrong_every_sample_is_stored_and_none_refused(

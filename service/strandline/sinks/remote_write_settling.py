@@ -56,7 +56,6 @@ class Settlement:
         self.samples = list(samples) if in_order else sorted(samples, key=lambda sample: sample.time_ms)
         self.fates: list[str | None] = [None] * len(self.samples)
         self._in_order = in_order
-        self._doubtful = [doubtful] * len(self.samples)
         self._finished = False
         for index, sample in enumerate(self.samples):
             if sample.time_ms > latest_ms:
@@ -64,6 +63,7 @@ class Settlement:
         self._resolve_equal_times()
         left = [index for index, fate in enumerate(self.fates) if fate is None]
         self._parts = [Part(left, doubtful)] if left else []
+        self._lost: list[Sequence[int]] = [left] if doubtful else []  # what went together without an answer
 
     def _resolve_equal_times(self) -> None:
         """One value for each time of a series: the last to come, unless another was sent before."""
@@ -119,9 +119,9 @@ class Settlement:
     def lost(self) -> None:
         """No answer came, or one that says nothing: the receiver may hold it."""
         part = self._parts[-1]
+        if not part.doubtful or part.tails_of is not None:
+            self._lost.append(part.indices)
         part.doubtful = True
-        for index in part.indices:
-            self._doubtful[index] = True
 
     def too_large(self) -> bool:
         """The receiver wants smaller requests. False if there is none that is smaller."""
@@ -169,16 +169,20 @@ class Settlement:
                     series.last_ms, series.last_value = time_ms, value
 
     def _judge_doubts(self) -> None:
-        """Samples in doubt that were taken the first time show one pattern: of each series all but the last are refused
-        as out of order, and the last, which the receiver holds with the same value, is taken again without effect."""
-        by_series: dict[Series, list[int]] = {}
-        for index, doubtful in enumerate(self._doubtful):
-            if doubtful and self.fates[index] in (OUT_OF_ORDER, STORED):
+        """A lost request that was taken shows one pattern: of each series all but the last sample are refused as out of
+        order, and the last, which the receiver holds with the same value, is taken again without effect.
+
+        Each lost request is judged by itself: pieces of one settlement may be lost one after the other, and that all
+        of the earlier piece was taken again says nothing about the later one.
+        """
+        taken = (OUT_OF_ORDER, ALREADY_THERE)
+        for lost in self._lost:
+            by_series: dict[Series, list[int]] = {}
+            for index in lost:
                 by_series.setdefault(self.samples[index].series, []).append(index)
-        for indices in by_series.values():
-            *before, last = indices
-            if self.fates[last] == STORED and all(self.fates[index] == OUT_OF_ORDER for index in before):
-                self._settle(before, ALREADY_THERE)
+            for *before, last in by_series.values():
+                if self.fates[last] == STORED and all(self.fates[index] in taken for index in before):
+                    self._settle(before, ALREADY_THERE)
 
     def counts(self) -> Counter[str]:
         """How many samples came to a fate that has a reason."""
