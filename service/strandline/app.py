@@ -186,7 +186,7 @@ class Service:
             config = load(path, environ)
             if fixed := fixed_changes(self.config, config):
                 raise StrandlineError(f"{', '.join(fixed)} can only change with a restart")
-            if full := [name for name, runtime in self.feeds.items() if not runtime.has_headroom()]:
+            if full := [feed.name for feed in config.feeds if not self.feeds[feed.name].has_headroom(feed)]:
                 raise StrandlineError(f"the disk has no room to note it in the journal of {', '.join(full)}")
         except (StrandlineError, OSError) as error:
             log.error("the configuration stays as it was: %s", error)

@@ -48,6 +48,12 @@ def decoder_of(config: FeedConfig, **changed: int) -> Decoder:
     return Decoder(config.name, config.time.at, config.time.unit, config.source, config.id, limits=limits)
 
 
+def settings_bytes(config: FeedConfig) -> list[int]:
+    """Sizes at most of the records that settings become; both name the sources that are expected."""
+    names = sum(len(name.encode()) + 8 for name in config.expect_sources)
+    return [SMALL_RECORD_BYTES + names] * 2
+
+
 class FeedRuntime:
     """The shell of one feed. Lives on one event loop; `open` first, then everything else, `close` last."""
 
@@ -108,7 +114,7 @@ class FeedRuntime:
         # A new journal has no records yet.
         positions = await self._positions.wait(set(sinks), for_all=self.feed.next_lsn == 0)
         served = {name: sink_object.lanes for name, sink_object in sinks.items()}
-        self.journal.reserve([SMALL_RECORD_BYTES] * 4, of_headroom=True)
+        self.journal.reserve([SMALL_RECORD_BYTES] * 2 + settings_bytes(self.config), of_headroom=True)
         self.carry_out(self.feed.start(self.clock.now_ns(), served, positions, self.config.settings()))
         self._started = self.accepting = True
         for repairer in self.repairers.values():
@@ -190,7 +196,7 @@ class FeedRuntime:
         self.config = config
         self.decoder = decoder_of(config)
         served = {name: delivery.lanes for name, delivery in self.deliveries.items()}
-        if self.has_headroom():
+        if self.has_headroom(config):
             self._do(lambda: self.feed.start(self.clock.now_ns(), served, settings=config.settings()))
 
     def tick(self) -> None:
@@ -271,10 +277,11 @@ class FeedRuntime:
             self._failed(error)
             raise Refused("failed", str(error), 10) from error
 
-    def has_headroom(self) -> bool:
-        """Whether the journal has room for a mark or another small record."""
+    def has_headroom(self, config: FeedConfig | None = None) -> bool:
+        """Whether the journal has room for a mark or another small record, or for these settings."""
         try:
-            self.journal.reserve([SMALL_RECORD_BYTES] * 2, of_headroom=True)
+            sizes = [SMALL_RECORD_BYTES] * 2 if config is None else settings_bytes(config)
+            self.journal.reserve(sizes, of_headroom=True)
         except JournalFull as error:
             log.debug("%s: no room for a mark now: %s", self.config.name, error)
             return False
