@@ -231,9 +231,12 @@ class FeedMachine(RuleBasedStateMachine):
 
     @rule(given=rows, bad=faults, passed=passing)
     def arrive(self, given: list[tuple[int, str]], bad: list[Fault], passed: int) -> None:
+        clock, records = self.clock, len(self.shell.records)
         now = self.pass_time(passed)
         with self.placed(arriving=True):
             self.shell.events([time for time, _ in given], now, [name for _, name in given], bad)
+        if len(self.shell.records) == records:
+            self.clock = clock  # refused, or nothing was in it: the feed has not looked at its clock
 
     @rule(passed=passing)
     def tick(self, passed: int) -> None:

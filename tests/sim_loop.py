@@ -129,12 +129,15 @@ class SimLoop(asyncio.SelectorEventLoop):
     def work_off(self) -> None:
         """Run all jobs in their order, and tell, until there is none left."""
         self.settle()
-        while self.jobs or self.done:
+        for _ in range(TURNS_AT_MOST):
+            if not self.jobs and not self.done:
+                return
             while self.done:
                 self.tell(self.done[0])
             if self.jobs:
                 self.run(self.runnable()[0])
             self.settle()
+        raise AssertionError("there is no end of jobs")
 
     def kill(self) -> None:
         """The process is gone. Its tasks are ended; what they do while ending must reach nothing that lasts."""

@@ -30,11 +30,17 @@ EVENTS = [(number % 3, number - 5.0 * (number % 7 == 6)) for number in range(12)
 
 
 class Ordeal(Weather):
-    """Counts the operations of a whole story, over all lives, and does something at each or at one of them."""
+    """Counts the operations of a whole story, over all lives, and does something at each or at one of them.
+
+    Steps of the stores' own work count as operations named "store".
+    """
 
     def __init__(self, at: Callable[[int, str], None], counted: list[str]) -> None:
         super().__init__(random.Random(0))
         self._at, self._counted = at, counted
+
+    def meet_store(self) -> None:
+        self.meet("store", "")
 
     def meet(self, name: str, path: str, partly: Callable[[], None] = lambda: None) -> None:
         if self.dead:
@@ -56,7 +62,7 @@ class Told(Story):
 
     def __init__(self, folder: Path, at: Callable[[int, str], None] = lambda number, name: None) -> None:
         journal = JournalConfig(700, 100_000)
-        super().__init__(folder, EVENTS, sinks=("store", "receiver"), journal=journal, slack_ns=10**9)
+        super().__init__(folder, EVENTS, sinks=("store", "files", "receiver"), journal=journal, slack_ns=10**9)
         self.met: list[str] = []
         self.counted = 0  # of those that were met before faults were over
         self._at = at
@@ -145,6 +151,19 @@ def each_fails_once(kind: str) -> None:
         with told(at) as story:
             story.tell()
             assert story.counted > number, "the story never came to it"
+
+
+def the_process_dies_at_each(kind: str) -> None:
+    """The process dies at each operation of a kind, in a story of its own, which then goes on."""
+    for number in numbers_of(kind, operations()):
+
+        def at(now: int, name: str, number: int = number) -> None:
+            if now == number:
+                raise PowerCut(name)
+
+        with told(at) as story:
+            story.tell()
+            assert story.tally.crashes == 1
 
 
 def the_power_fails_before_each(chance: random.Random) -> int:

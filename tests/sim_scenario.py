@@ -76,7 +76,7 @@ class Scenario:
         segment_bytes = self.chance.choice((200, 264, 400, 1000, 2504, 8192))
         at_most_bytes = segment_bytes * self.chance.choice((2, 3, 6, 100))
         if segment_bytes < REQUEST_BYTES:  # else two segments must do, as the configuration promises
-            at_most_bytes = max(at_most_bytes, 4 * REQUEST_BYTES)
+            at_most_bytes = max(at_most_bytes, 3 * REQUEST_BYTES)
         return Journal(segment_bytes, at_most_bytes, self.chance.choice((0, 0, 2 * SECOND_NS, 100 * SECOND_NS)))
 
     def sinks(self, folder: Path) -> tuple[SinkConfig, ...]:

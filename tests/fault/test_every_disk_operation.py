@@ -24,6 +24,7 @@ from sim_ordeal import (
     operations,
     recovered,
     the_power_fails_before_each,
+    the_process_dies_at_each,
     told,
 )
 from strandline.errors import JournalError, JournalFailed
@@ -31,7 +32,7 @@ from strandline.errors import JournalError, JournalFailed
 
 def test_the_story_meets_every_kind_of_operation() -> None:
     met = Counter(operations())
-    assert set(met) == set(KINDS) and all(met[kind] >= 4 for kind in KINDS), met
+    assert set(met) == {*KINDS, "store"} and all(number >= 4 for number in met.values()), met
 
 
 # ---- one operation fails --------------------------------------------------------------------------------------------
@@ -68,16 +69,10 @@ def test_the_power_may_fail_before_any_operation() -> None:
     assert looked >= VARIANTS * len(operations())
 
 
-def test_the_process_may_die_at_any_operation_and_the_story_goes_on() -> None:
-    for number in range(len(operations())):
-
-        def at(now: int, name: str, number: int = number) -> None:
-            if now == number:
-                raise PowerCut(name)
-
-        with told(at) as story:
-            story.tell()
-            assert story.tally.crashes == 1
+@pytest.mark.parametrize("kind", [*KINDS, "store"])
+def test_the_process_may_die_at_any_operation_and_the_story_goes_on(kind: str) -> None:
+    """At any step of a store's work too: what a store holds and how far it says it is must not fall apart."""
+    the_process_dies_at_each(kind)
 
 
 def test_a_start_may_fail_or_die_at_any_operation_of_its_own() -> None:
