@@ -209,8 +209,8 @@ FAULTS = [
         "ties reversed",
         (
             Change(
-                Merger, "_interleave", 'order = np.argsort(strand.times, kind="stable")',
-                'order = rows - 1 - np.argsort(strand.times[::-1], kind="stable")',
+                Merger, "_interleave", "times, order = sorted_stably(strand.times)",
+                "times, order = sorted_stably(strand.times[::-1])\n    order = rows - 1 - order",
             ),
         ),
         Worlds(0, "ties"),

@@ -14,6 +14,7 @@ import numpy as np
 from .columns import ROW, as_rows, empty_refs, empty_times
 from .gallop import gallop_left, gallop_right
 from .runs import Strand, joined
+from .sorting import sorted_stably
 
 GALLOP_WINS = 7
 GALLOP_WINS_AT_MOST = 4096
@@ -112,8 +113,8 @@ class Merger:
         rows = len(strand.times)
         self.counts.comparisons += rows * (len(heads) - 1).bit_length()
         self.counts.copies += rows
-        order = np.argsort(strand.times, kind="stable")
-        return Strand(strand.times[order], strand.refs[order])
+        times, order = sorted_stably(strand.times)
+        return Strand(times, strand.refs[order])
 
     def merge_two(self, older: Strand, newer: Strand) -> Strand:
         """Both as one ascending strand, the older first among equal times."""

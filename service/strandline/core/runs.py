@@ -14,6 +14,7 @@ import numpy as np
 
 from .columns import Refs, Times
 from .gallop import gallop_right
+from .sorting import sorted_stably
 
 # A run costs some 8 us of interpreter time to deal and to cut, a stable sort 26 to 47 ns an event: below about a
 # thousand events sorting a stretch together is cheaper than keeping its natural runs apart. The published minimum of 32
@@ -88,8 +89,8 @@ def runs_of(times: Times, refs: Refs, minimum: int | None = None) -> list[Strand
         if order == "descending":
             part, part_refs = part[::-1].copy(), part_refs[::-1].copy()
         elif order == "mixed":
-            places = np.argsort(part, kind="stable")
-            part, part_refs = part[places], part_refs[places]
+            part, places = sorted_stably(part)
+            part_refs = part_refs[places]
         result.append(Strand(part, part_refs))
     return result
 
