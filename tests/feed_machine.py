@@ -13,6 +13,7 @@ from contextlib import contextmanager
 from typing import Any
 
 from helpers_feed import FOR_EVER_NS, LANES, Shell, Written, same_batch, saved_bytes
+from helpers_strands import constants
 from hypothesis import event
 from hypothesis import strategies as st
 from hypothesis.stateful import RuleBasedStateMachine, initialize, invariant, precondition, rule
@@ -56,11 +57,24 @@ class Waited:
         self.active: set[str] = set()
         self.excused: set[str] = set()
         self.vouched: dict[str, int] = {}
+        self.promised: dict[str, int] = {}
+        self.slack_set: tuple[int, int] | None = None  # slack, until when
+        self.paused: set[str] = set()
         self.came: list[tuple[int, int]] = []  # when, event time
 
     def advance(self, now: int) -> None:
         self.now = max(self.now, now)
+        if self.slack_set and self.slack_set[1] <= self.now:
+            self.set_slack(None)
         self.active = {name for name in self.active if self.heard[name] > self.now - self.settings.idle_after_ns}
+
+    @property
+    def slack(self) -> int:
+        return self.slack_set[0] if self.slack_set else self.settings.slack_ns
+
+    def set_slack(self, chosen: tuple[int, int] | None) -> None:
+        self.slack_set = chosen
+        self.vouched = {name: time + self.slack for name, time in self.promised.items()}
 
     def speaks(self, name: str, now: int) -> None:
         self.heard[name] = now
@@ -77,7 +91,7 @@ class Waited:
             basis = self.now
         times_held = {time for time, _ in held}
         due = [time for came, time in self.came if came <= self.now - chosen.hold_at_most_ns and time in times_held]
-        return max([NEVER, basis - chosen.slack_ns, *due])
+        return max([NEVER, basis - self.slack, *due])
 
 
 class Reading:
@@ -145,6 +159,7 @@ class Reading:
             case "SettingsRecord":
                 before, waited.settings = waited.settings, record.settings
                 expected = set(record.settings.expect_sources)
+                waited.paused &= set(record.sinks)
                 if record.resumed:
                     waited.heard |= dict.fromkeys(waited.active, record.now_ns)
                 else:
@@ -155,13 +170,19 @@ class Reading:
             case "PromiseRecord":
                 waited.advance(record.now_ns)
                 name = waited.names[record.source]
-                waited.vouched[name] = max(
-                    waited.vouched.get(name, NEVER), record.time_ns + waited.settings.slack_ns
-                )
+                waited.promised[name] = max(waited.promised.get(name, NEVER), record.time_ns)
+                waited.vouched[name] = max(waited.vouched.get(name, NEVER), record.time_ns + waited.slack)
                 waited.speaks(name, record.now_ns)
             case "ExcuseRecord":
                 waited.excused.add(waited.names[record.source])
                 waited.advance(record.now_ns)
+            case "ActRecord":
+                waited.advance(record.now_ns)
+                if record.act == "slack":
+                    given = record.slack_ns is not None
+                    waited.set_slack((record.slack_ns, record.until_ns) if given else None)
+                waited.paused |= {record.subject} if record.act == "pause" else set()
+                waited.paused -= {record.subject} if record.act == "resume" else set()
             case _:
                 waited.advance(record.now_ns)
 
@@ -194,8 +215,10 @@ some_settings = st.builds(
 class FeedMachine(RuleBasedStateMachine):
     """One feed over several lives. A store's position outlives the process, as does what is durable."""
 
-    @initialize(chosen=some_settings)
-    def begin(self, chosen: Settings) -> None:
+    @initialize(chosen=some_settings, fresh=st.sampled_from((0, 3, 1 << 15)))
+    def begin(self, chosen: Settings, fresh: int) -> None:
+        self.fresh = constants(FRESH_EVENTS=fresh)
+        self.fresh.__enter__()
         self.shell = Shell(chosen, sinks=SINKS, synchronous=False)
         self.now = 0
         self.known: dict[tuple[Lane, int], Batch] = {}
@@ -205,6 +228,9 @@ class FeedMachine(RuleBasedStateMachine):
         self.all, self.durable = Reading(self.shell), Reading(self.shell)
         self.durable_lsn = 0
         self.started_lsn = self.shell.feed.next_lsn
+
+    def teardown(self) -> None:
+        self.fresh.__exit__(None, None, None)
 
     def pass_time(self, passed: int) -> int:
         self.now += passed
@@ -259,8 +285,20 @@ class FeedMachine(RuleBasedStateMachine):
 
     @rule(passed=passing)
     def drain(self, passed: int) -> None:
-        self.shell.act("drain", now_ns=self.pass_time(passed))
+        self.shell.act("drain", now_ns=self.pass_time(passed), who="night shift" if passed else "")
         assert not self.shell.feed.state.runs.held and not self.all.on().model.held
+
+    @rule(slack=st.sampled_from((None, 0, 2, 20)), lasts=st.sampled_from((1, 3, 10)), passed=passing)
+    def set_slack(self, slack: int | None, lasts: int, passed: int) -> None:
+        now = self.pass_time(passed)
+        with self.placed():
+            self.shell.act("set_slack", slack, lasts, "a storm", now_ns=now, who="night shift")
+
+    @rule(sink=st.sampled_from(sorted(SINKS)), on=st.booleans(), passed=passing)
+    def pause(self, sink: str, on: bool, passed: int) -> None:
+        now = self.pass_time(passed)
+        with self.placed():
+            self.shell.act("pause", sink, on, "its disk is changed", now_ns=now, who="day shift")
 
     @rule(sink=st.sampled_from(sorted(SINKS)), behind=st.integers(0, 2), passed=passing)
     def taken(self, sink: str, behind: int, passed: int) -> None:
@@ -289,6 +327,8 @@ class FeedMachine(RuleBasedStateMachine):
     @rule()
     def save(self) -> None:
         self.saved = (saved_bytes(self.shell.feed), self.shell.feed.next_lsn)
+        assert self.saved[0] == saved_bytes(self.shell.folded()), "the live state is not the folded one"
+        assert self.saved[0] == saved_bytes(self.shell.folded(*self.saved)), "the saved state is another one"
 
     @rule(kept=st.integers(0, 6), from_saved=st.booleans(), told=st.booleans(), passed=passing, chosen=some_settings)
     def crash(self, kept: int, from_saved: bool, told: bool, passed: int, chosen: Settings) -> None:
@@ -338,6 +378,8 @@ class FeedMachine(RuleBasedStateMachine):
         state, reading = self.shell.feed.state, self.all.on()
         assert reading.end_lsn == self.shell.feed.next_lsn
         assert state.watermark_ns == reading.model.stands, "another watermark than the records say"
+        waited = reading.waited
+        assert (state.slack_ns, set(state.acts.paused)) == (waited.slack, waited.paused), "other acts are in force"
         ledger = state.ledger
         held = len(reading.model.held)
         assert state.runs.held == held == ledger.buffered and not ledger.balance(), f"{held} must be held: {ledger}"

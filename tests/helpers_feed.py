@@ -9,12 +9,21 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from strandline.core.columns import Arrival, Batch, Fault, Lane, RequestKey
-from strandline.core.effects import Answer, Append, Deliver, Effect, Outcome, Refuse, Sync
+from strandline.core.effects import Answer, Append, Deliver, Effect, Outcome, Pause, Refuse, Sync
 from strandline.core.feed import Feed
-from strandline.core.records import FRAME_HEADER_BYTES, VERSION, Kind, decode_arrival, decode_mark, frame_bytes
+from strandline.core.records import (
+    FRAME_HEADER_BYTES,
+    VERSION,
+    Kind,
+    decode_arrival,
+    decode_mark,
+    decode_small,
+    frame_bytes,
+)
 from strandline.core.settings import Settings
 from strandline.core.state import State
 
@@ -124,10 +133,10 @@ class Shell:
         made = arrival(times, numbers, lines=lines, new_sources=new, faults=faults, identities=identities)
         return self.send(made, now_ns, key)
 
-    def act(self, name: str, *arguments: object, now_ns: int) -> int:
-        """promise(source, time_ns), excuse(source, reason) or drain(); its token."""
+    def act(self, name: str, *arguments: object, now_ns: int, **more: str) -> int:
+        """promise(source, time_ns), excuse(source, reason), drain(), set_slack(...) or pause(...); its token."""
         self.tokens += 1
-        self.do(getattr(self.feed, name)(*arguments, now_ns, self.tokens))
+        self.do(getattr(self.feed, name)(*arguments, now_ns, self.tokens, **more))
         return self.tokens
 
     def tick(self, now_ns: int) -> None:
@@ -159,9 +168,17 @@ class Shell:
                 case Deliver():
                     assert effect.batch.ready_lsn <= self.feed.durable_lsn, "left before it was durable"
                     self.batches[effect.batch.lane].append(effect.batch)
+                case Pause():
+                    assert self._has_act(effect), "a pause left before it was durable"
         self.feed.check()
         if self.synchronous and self.feed.durable_lsn < self.sync_asked:
             self.sync()
+
+    def _has_act(self, pause: Pause) -> bool:
+        """Whether an act of this kind on this sink is durable."""
+        durable = [record for record in self.records if record.kind == Kind.ACT and record.lsn < self.feed.durable_lsn]
+        acts: list[Any] = [decode_small(Kind.ACT, record.body) for record in durable]
+        return any((act.act == "pause", act.subject) == (pause.on, pause.sink) for act in acts)
 
     def _append(self, effect: Append) -> None:
         assert effect.lsn == len(self.journal), "the journal has no gaps"

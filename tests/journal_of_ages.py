@@ -98,6 +98,22 @@ def history(writer: Writer) -> None:
     writer.do(feed.arrive(arrival([(39.0, 2, 9002), (4.0, 1, 9003), (5.0, 2, 9004)]), at(41), 53))
     writer.do(feed.start(at(50), sinks))  # type: ignore[arg-type]
     writer.do(feed.drain(at(51), 54))
+    acts(writer)
+
+
+def acts(writer: Writer) -> None:
+    """What operators did (since fixture 2)."""
+    feed, at = writer.feed, lambda second: BEGIN_NS + round(second * SECOND_NS)
+    writer.do(feed.excuse("mill", "its link is down until noon", at(52), 60, "the night shift"))
+    writer.do(feed.set_slack(8 * SECOND_NS, 4 * SECOND_NS, "a storm", at(53), 61, "the night shift"))
+    writer.do(feed.arrive(arrival([(50.0, 1, 9100), (53.5, 1, 9101), (53.0, 2, 9102)]), at(54), 62))
+    writer.do(feed.pause("store", True, "its disk is changed", at(55), 63, "the day shift"))
+    writer.do(feed.tick(at(58)))
+    writer.do(feed.arrive(arrival([(58.0, 1, 9103), (57.0, 2, 9104), (52.0, 2, 9105)]), at(59), 64))
+    writer.do(feed.pause("store", False, "the disk is changed", at(60), 65, "the day shift"))
+    writer.do(feed.set_slack(SECOND_NS, 3600 * SECOND_NS, "a calm day", at(61), 66, "the day shift"))
+    writer.do(feed.pause("lanes", True, "a look at it", at(62), 67, "the day shift"))
+    writer.do(feed.drain(at(63), 68, "the day shift", "the shift ends"))
 
 
 def main(folder: Path) -> None:
@@ -112,6 +128,9 @@ def main(folder: Path) -> None:
         "next_number": state.outbox.next_number,
         "positions": state.outbox.positions,
         "digests": writer.digests,
+        "slack_ns": state.slack_ns,
+        "paused": sorted(state.acts.paused),
+        "acts": [[act.act, act.subject, act.who, act.reason] for act in state.acts.kept],
         "kinds": sorted({frame.kind for frame in writer.journal.frames()}),
     }
     writer.journal.close()

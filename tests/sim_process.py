@@ -133,15 +133,16 @@ class Process:
         self._opening.cancel()
 
     def act(self, name: str, *given: Any) -> None:
-        """promise(source, time_ns), excuse(source, reason) or drain(), as the endpoint does it."""
+        """promise(source, time_ns), excuse(source, reason), drain(), ... as the endpoint does it."""
         self._acts.append(self.loop.create_task(self._act(name, given)))
 
     async def _act(self, name: str, given: tuple[Any, ...]) -> None:
         feed = self.runtime.feed
         if name == "excuse" and given[0] not in feed.state.sources.numbers:
             return
+        who = {} if name == "promise" else {"who": "night shift"}
         with suppress(Refused):
-            await self.runtime.act(lambda now_ns, token: getattr(feed, name)(*given, now_ns, token))
+            await self.runtime.act(lambda now_ns, token: getattr(feed, name)(*given, now_ns, token, **who), 64)
 
     # ---- judging ----------------------------------------------------------------------------------------------------
 
@@ -167,6 +168,15 @@ class Process:
             runtime.journal.check()
             for delivery in runtime.deliveries.values():
                 delivery.check()
+            self._check_pauses()
+
+    def _check_pauses(self) -> None:
+        """What the records say once all of them are durable."""
+        feed = self.runtime.feed
+        if self.runtime.accepting and feed.durable_lsn == feed.next_lsn:
+            paused = {name for name, delivery in self.runtime.deliveries.items() if delivery.state().paused}
+            told = set(feed.state.acts.paused)
+            assert paused == told, f"paused are {paused}, by the records {told}"
 
     def _look_at_acts(self) -> None:
         for task in [task for task in self._acts if task.done()]:

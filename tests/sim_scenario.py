@@ -167,9 +167,9 @@ def _crash_loop(scenario: Scenario) -> None:
 
 
 def _rolling_stops(scenario: Scenario) -> None:
-    """Orderly stops and new settings, again and again, and long times away."""
+    """Orderly stops, new settings and acts of operators, again and again, and long times away."""
     _usual(scenario)
-    scenario.weights |= {"stop": 5, "reconfigure": 4, "promise": 3, "excuse": 3, "drain": 2}
+    scenario.weights |= {"stop": 5, "reconfigure": 4, "promise": 3, "excuse": 3, "drain": 2, "set_slack": 3, "pause": 3}
     scenario.slow_down_s = 60.0
 
 

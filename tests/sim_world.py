@@ -256,6 +256,16 @@ class World:
         if process.up:
             process.act("drain")
 
+    def _set_slack(self, process: Process) -> None:
+        if process.up:
+            slack_ns = self.chance.choice((None, 0, SECOND_NS, 20 * SECOND_NS))
+            process.act("set_slack", slack_ns, 1 + self.choose(5 * SECOND_NS), "a storm")
+
+    def _pause(self, process: Process) -> None:
+        if process.up:
+            sink = self.chance.choice([sink.name for sink in self.config.sinks])
+            process.act("pause", sink, self.chance.random() < 0.6, "its disk is changed")
+
     def _reconfigure(self, process: Process) -> None:
         if process.up:
             assert self.loop is not None
@@ -333,6 +343,8 @@ class World:
         assert self.loop is not None
         for _ in range(3):
             self._send(process)
+        for sink in list(process.runtime.feed.state.acts.paused) if process.up else ():
+            process.act("pause", sink, False, "the disk is changed")
         while self.stores.hanging:
             self.stores.let_go(self.choose)
         self.loop.work_off()

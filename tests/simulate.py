@@ -11,10 +11,13 @@ import sys
 import time
 import traceback
 
+from helpers_strands import constants
 from sim_process import seams
 from sim_scenario import PATTERNS, scenario_of
 from sim_stores import a_folder
 from sim_world import Tally, World
+
+FRESH_EVENTS = (0, 3, 1 << 15)  # dealt at once; a few gather first; in a small world nearly all do
 
 
 class Violation(AssertionError):
@@ -29,7 +32,8 @@ def command(seed: int, pattern: str | None) -> str:
 def play(seed: int, pattern: str | None = None) -> Tally:
     """One world from beginning to end. Raises Violation."""
     scenario = scenario_of(seed, pattern)
-    with a_folder() as folder, seams(f"{seed}"):
+    fresh = FRESH_EVENTS[seed % len(FRESH_EVENTS)]
+    with a_folder() as folder, seams(f"{seed}"), constants(FRESH_EVENTS=fresh):
         world = World(scenario, folder)
         try:
             return world.run()

@@ -9,6 +9,7 @@ from dataclasses import asdict
 from typing import Any
 
 from .core.columns import TIME_MIN
+from .core.records import ActRecord
 from .core.view import HOLD_WHYS, View
 from .ingest.timestamps import format_rfc3339
 from .runtime import FeedRuntime
@@ -41,6 +42,7 @@ def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
         "watermark_age_s": age_s(view.now_ns, view.watermark_ns),
         "newest": time_text(view.newest_ns),
         "slack_s": view.slack_ns / 1e9,
+        "slack_set": _slack_set(view),
         "steering": steering_document(view),
         "hold": _hold(view),
         "held": _held(view),
@@ -98,9 +100,23 @@ def _hold(view: View) -> dict[str, Any]:
         "why": view.hold.why,
         "explanation": HOLD_WHYS[view.hold.why],
         "source": view.hold_source,
+        "sink": view.hold.sink or None,
+        "idle_at": time_text(view.hold.idle_ns),
         "since": time_text(view.hold.since_ns),
         "for_s": age_s(view.now_ns, view.hold.since_ns),
     }
+
+
+def _slack_set(view: View) -> dict[str, Any] | None:
+    """The slack that an operator has set for a time, or None: then the configured one holds."""
+    act = view.slack_set
+    if act is None or act.slack_ns is None:
+        return None
+    return {"slack_s": act.slack_ns / 1e9, "until": time_text(act.until_ns), **_who(act)}
+
+
+def _who(act: ActRecord) -> dict[str, str | None]:
+    return {"who": act.who, "since": time_text(act.now_ns), "reason": act.reason}
 
 
 def _held(view: View) -> dict[str, Any]:
@@ -163,9 +179,15 @@ def stalls_of(runtime: FeedRuntime) -> list[str]:
             since = max(waiting.oldest_instant_ns or 0, waiting.advanced_at_ns or 0)
             waits_s = age_s(view.now_ns, since) if waiting.batches else None
             if waits_s is not None and waits_s > STALLED_AFTER_S + delivery.flush_after_s:
-                why = state.last_error or ("it is paused" if state.paused else "it does not answer")
+                why = paused_words(view, name) or state.last_error or "it does not answer"
                 found.append(f"sink {name} has taken nothing of lane {lane} for {waits_s:.0f} s: {why}")
     return found
+
+
+def paused_words(view: View, sink: str) -> str:
+    """Who has paused a sink, since when and why, in words; nothing if it is not paused."""
+    act = view.paused.get(sink)
+    return f"it is paused by {act.who} since {time_text(act.now_ns)}: {act.reason}" if act else ""
 
 
 def _sink(runtime: FeedRuntime, view: View, name: str) -> dict[str, Any]:
@@ -183,6 +205,7 @@ def _sink(runtime: FeedRuntime, view: View, name: str) -> dict[str, Any]:
         "lanes": lanes,
         "connected": state.opened,
         "paused": state.paused,
+        "pause": _who(view.paused[name]) if name in view.paused else None,
         "failing_since": time_text(state.failing_since_ns),
         "last_error": state.last_error,
         "retries": state.retries,

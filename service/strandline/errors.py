@@ -20,6 +20,7 @@ FAULT_REASONS: dict[str, str] = {
     "too_large": "the line is longer than `event_bytes_at_most`",
     "cloudevent_invalid": "the event breaks a rule of CloudEvents 1.0, which the detail names: mend the producer",
     "too_deep": "the value is nested deeper than `nesting_at_most`",
+    "body_refused": "a broker's message cannot be taken as a whole, which the detail explains: mend its producer",
     "ahead": "the event time lies further than `ahead_limit` beyond the arrival clock: check the sender's clock",
 }
 
@@ -34,6 +35,7 @@ REFUSALS: dict[str, tuple[int, str]] = {
     "lanes_full": (429, "The late lane or the quarantine has reached its limit"),
     "disk_full": (503, "The disk has no room for the journal"),
     "promise_ahead": (422, "The promise lies in the future"),
+    "sink_paused": (409, "The sink is paused"),
     "stopping": (503, "The service is stopping"),
     "failed": (503, "The feed has stopped after a failed write"),
 }

@@ -39,6 +39,11 @@ class Bodies:
         if advanced:
             self.advanced_ns = now_ns
 
+    @property
+    def ended(self) -> int:
+        """Bodies that wait no more, since the start."""
+        return self._count - len(self._since)
+
     def hop(self) -> Hop:
         """As an observer sees it."""
         return Hop(len(self._since), next(iter(self._since.values()), None), self.advanced_ns)

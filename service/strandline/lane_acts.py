@@ -18,7 +18,7 @@ from aiohttp import web
 from .core.columns import Arrival, RequestKey
 from .errors import BodyError
 from .ingest.endpoint import read_act, runtime_of
-from .problems import NotThere
+from .problems import NotThere, Refused
 from .repairing import Repairer
 from .runtime import FeedRuntime, decoder_of
 from .sinks.lanes import ROWS_AT_MOST, QuarantineRow, forget_exactly, quarantine_rows
@@ -48,6 +48,8 @@ def _repairer(runtime: FeedRuntime, sink: str) -> Repairer:
     if repairer is None:
         able = ", ".join(sorted(runtime.repairers)) or "none"
         raise NotThere(f"sink {sink[:100]!r} of feed {runtime.config.name} takes no repairs; those that do: {able}")
+    if sink in runtime.feed.state.acts.paused:
+        raise Refused("sink_paused", f"sink {sink} is paused: resume it, then send again", 60)
     return repairer
 
 

@@ -96,6 +96,8 @@ class Repairer:
         self._random, self._sleep = random_source, sleep
         self._task: asyncio.Task[None] | None = None
         self._one_at_a_time = asyncio.Lock()
+        self._going = asyncio.Event()
+        self._going.set()
         self._state = RepairState(0, 1, False, 0, None)
 
     def start(self) -> None:
@@ -109,6 +111,14 @@ class Repairer:
             self._task.cancel()
             with contextlib.suppress(asyncio.CancelledError):
                 await self._task
+
+    def pause(self) -> None:
+        """Send the sink nothing more, once it has answered what it works on."""
+        self._going.clear()
+
+    def resume(self) -> None:
+        """Go on from there."""
+        self._going.set()
 
     def state(self) -> RepairState:
         """What an observer sees now."""
@@ -162,6 +172,7 @@ class Repairer:
         for repair in repairs:
             attempts = 0
             while True:
+                await self._going.wait()
                 try:
                     await self._sink.repair(repair)
                     break

@@ -17,7 +17,7 @@ import msgspec
 
 from .config import Feed as FeedConfig
 from .core.columns import TIME_MIN, Arrival, Batch, Lane, RequestKey
-from .core.effects import Answer, Append, Deliver, Effect, Outcome, Refuse, Sync
+from .core.effects import Answer, Append, Deliver, Effect, Outcome, Pause, Refuse, Sync
 from .core.feed import Feed
 from .core.records import arrival_body_bytes
 from .core.view import View
@@ -97,6 +97,7 @@ class FeedRuntime:
         )  # fmt: skip
         self._housekeeping: asyncio.Task[None] | None = None
         self.recording = False  # whether a capture is being made of it
+        self.watchers: list[Callable[[Batch], None]] = []  # called with each batch that leaves; they may not fail
 
     # ---- start and stop -------------------------------------------------------------------------------------------
 
@@ -184,10 +185,10 @@ class FeedRuntime:
         assert outcome is not None
         return outcome
 
-    async def act(self, act: Callable[[int, int], list[Effect]]) -> None:
-        """Carry out an act of an operator or a source, `act(now_ns, token)`, and wait until it is durable."""
+    async def act(self, act: Callable[[int, int], list[Effect]], text_bytes: int = 0) -> None:
+        """Carry out an act, `act(now_ns, token)`, that keeps so many bytes of text; wait until it is durable."""
         self._check_open()
-        self._reserve([SMALL_RECORD_BYTES] * 3, of_headroom=True)
+        self._reserve([SMALL_RECORD_BYTES + text_bytes, SMALL_RECORD_BYTES, SMALL_RECORD_BYTES], of_headroom=True)
         now_ns = self.clock.now_ns()
         await self._ask(lambda token: act(now_ns, token), now_ns, 0)
 
@@ -307,11 +308,17 @@ class FeedRuntime:
                 case Refuse():
                     refusal = Refused(effect.reason, effect.detail, effect.retry_after_s)
                     self._waiters.refuse(effect.token, refusal)
+                case Pause():
+                    for sink in (self.deliveries.get(effect.sink), self.repairers.get(effect.sink)):
+                        if sink is not None:
+                            sink.pause() if effect.on else sink.resume()
 
     def _deliver(self, batch: Batch) -> None:
         self._delivered_ns = self.clock.now_ns()
         for delivery in self.deliveries.values():
             delivery.offer(batch)
+        for watch in self.watchers:
+            watch(batch)
         if batch.lane == "ordered":
             self.recent.add(batch)
 

@@ -1,7 +1,7 @@
 """The test of the tests: faults that somebody could make are planted in the real code, and each must be found.
 
-The table stands in `planted_faults`. Without the fault the same harness finds nothing there. A fault that no
-harness found would mean that a promise is not tested.
+The table stands in `planted_faults` and `planted_acts`. Without the fault the same harness finds nothing there. A fault
+that no harness found would mean that a promise is not tested.
 """
 
 from __future__ import annotations
@@ -12,8 +12,12 @@ from collections.abc import Callable
 from functools import cache, partial
 
 import pytest
-from planted_faults import FAULTS, SEEDS_AT_MOST, Fault, Worlds
+from planted_acts import ACT_FAULTS
+from planted_faults import FAULTS as OTHER_FAULTS
+from planted_faults import SEEDS_AT_MOST, Fault, Worlds
 from planting import planted
+
+FAULTS = [*OTHER_FAULTS, *ACT_FAULTS]
 
 
 def complaint(look: Callable[[], object]) -> str | None:

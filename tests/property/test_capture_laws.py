@@ -39,7 +39,9 @@ steps = st.one_of(
     st.tuples(st.just("tick")),
     st.tuples(st.just("promise"), st.sampled_from((*NAMES, "gw-9")), times),
     st.tuples(st.just("excuse"), st.sampled_from(NAMES)),
-    st.tuples(st.just("drain")),
+    st.tuples(st.just("drain"), st.sampled_from(("", "night shift"))),
+    st.tuples(st.just("set_slack"), st.sampled_from((None, 0, 2, 20)), st.sampled_from((1, 3, 10))),
+    st.tuples(st.just("pause"), st.sampled_from(("store", "lanes")), st.booleans()),
     st.tuples(st.just("taken"), st.sampled_from(("store", "lanes")), st.integers(0, 2)),
     st.tuples(st.just("restart")),
 )
@@ -75,9 +77,11 @@ def carry_out(shell: Shell, step: tuple[Any, ...], now_ns: int) -> None:
             shell.act("promise", name, time, now_ns=now_ns)
         case ("excuse", name):
             if name in shell.feed.state.sources.numbers:
-                shell.act("excuse", name, "why", now_ns=now_ns)
-        case ("drain",):
-            shell.act("drain", now_ns=now_ns)
+                shell.act("excuse", name, "why", now_ns=now_ns, who="night shift" if now_ns % 2 else "")
+        case ("drain", who):
+            shell.act("drain", now_ns=now_ns, who=who)
+        case ("set_slack" | "pause" as act, *given):
+            shell.act(act, *given, "why", now_ns=now_ns, who="night shift")
         case ("taken", sink, behind):
             for lane in SINKS[sink]:
                 shell.taken(sink, lane, max(0, shell.feed.state.outbox.next_number[lane] - 1 - behind), now_ns)

@@ -37,6 +37,8 @@ steps = st.one_of(
 # Mostly small steps of the clock, sometimes none, sometimes back (the feed's own clock then stands still).
 histories = st.lists(st.tuples(steps, st.sampled_from((0, 0, 1, 1, 2, 3, 7, -2))), max_size=25)
 
+fresh = st.sampled_from((0, 3, 1 << 15))  # how many rows gather before they are dealt
+
 
 def small_settings(**fixed: Any) -> st.SearchStrategy[Settings]:
     chosen: dict[str, Any] = {
@@ -168,11 +170,12 @@ def test_the_feed_follows_the_rule_of_the_watermark(
 
 
 @settings(max_examples=250)
-@given(small_settings(), histories)
+@given(small_settings(), histories, fresh)
 def test_the_books_balance_and_everything_comes_out_once_and_in_order(
-    chosen: Settings, history: list[tuple[tuple[Any, ...], int]]
+    chosen: Settings, history: list[tuple[tuple[Any, ...], int]], fresh_events: int
 ) -> None:
-    shell = played(chosen, history)
+    with constants(FRESH_EVENTS=fresh_events):
+        shell = played(chosen, history)
     ledger = shell.feed.state.ledger
     assert ledger.balance() == 0
     shell.act("drain", now_ns=10_000)
@@ -289,11 +292,11 @@ eventful = st.lists(st.tuples(st.one_of(steps, steps, steps, changes, keyed), pa
 
 
 @settings(max_examples=250)
-@given(small_settings() | steered, eventful, st.integers(0, 25), st.booleans())
+@given(small_settings() | steered, eventful, st.integers(0, 25), st.booleans(), fresh)
 def test_the_journal_folded_again_gives_the_same_state_and_the_same_batches(
-    chosen: Settings, history: list[tuple[tuple[Any, ...], int]], pause: int, synchronous: bool
+    chosen: Settings, history: list[tuple[tuple[Any, ...], int]], pause: int, synchronous: bool, fresh_events: int
 ) -> None:
-    with constants(WARM_UP_EVENTS=5):
+    with constants(WARM_UP_EVENTS=5, FRESH_EVENTS=fresh_events):
         folded_again(chosen, history, pause, synchronous)
 
 

@@ -15,6 +15,7 @@ from strandline.core.columns import NO_SOURCE, TIME_MAX, TIME_MIN, Arrival, Faul
 from strandline.core.feed import Feed
 from strandline.core.records import (
     FRAME_HEADER_BYTES,
+    ActRecord,
     Cause,
     ExcuseRecord,
     IdleRecord,
@@ -108,7 +109,8 @@ small_records = st.one_of(
     st.builds(SourcesRecord, st.integers(0, 2**32), st.lists(names)),
     st.builds(TakenRecord, int64, names, lanes, st.integers(0, 2**60)),
     st.builds(PromiseRecord, int64, st.integers(0, 2**32), int64),
-    st.builds(ExcuseRecord, int64, st.integers(0, 2**32), names),
+    st.builds(ExcuseRecord, int64, st.integers(0, 2**32), names, names),
+    st.builds(ActRecord, int64, st.sampled_from(("drain", "slack", "pause")), names, names, names, int64, int64),
     st.builds(NumbersRecord, int64, lanes, st.integers(1, 2**60)),
     st.builds(IdleRecord, int64),
 )
@@ -186,3 +188,22 @@ def test_a_steered_slack_is_restored_to_the_last_bit() -> None:
             restored.restore(steered.saved())
             assert restored.saved() == steered.saved()
             assert restored.sketch.total == steered.sketch.total
+
+
+def test_the_layout_of_a_saved_sketch_stays() -> None:
+    """Snapshots hold counts by place: 1,556 of them, of which these hold 1 ms, 1 s and 1 h."""
+    sketch = SteeredSlack(0.05, 10**12).sketch
+    assert len(sketch.counts) == 1556
+    assert [sketch.buckets.place(value) for value in (0, 999_999, 10**9, 3600 * 10**9)] == [0, 346, 692, 1101]
+
+
+def test_a_steered_slack_reads_a_snapshot_that_lacks_the_greatest_lateness() -> None:
+    steered, restored = SteeredSlack(0.05, 10**12), SteeredSlack(0.05, 10**12)
+    for second in range(100):
+        lateness = np.full(10, second * 10**8, dtype=np.int64)
+        steered.learn(second * 10**9, 10, 0, lateness)
+    *before, greatest_ns = steered.saved()
+    restored.restore(before)
+    restored.sketch.check()
+    assert greatest_ns <= restored.sketch.greatest_ns <= greatest_ns * restored.sketch.buckets.gamma
+    assert restored.saved()[:-1] == before

@@ -38,7 +38,7 @@ async def test_each_hop_shows_what_waits_there(tmp_path: Path) -> None:
         await eventually(lambda: hops()["journal"].waiting == 2)
         assert hops()["release"].waiting == 5 and hops()["journal"].oldest_ns is not None
         body = body_of(event_line(40))
-        head = "POST /v1/feeds/river-gauges/events HTTP/1.1\r\nHost: a\r\nContent-Type: application/x-ndjson\r\n"
+        head = "POST /v1/feeds/river-gauges/events HTTP/1.1\r\nHost: [::1]\r\nContent-Type: application/x-ndjson\r\n"
         _, writer = await asyncio.open_connection(service.service.address.host, service.service.address.port)
         writer.write(head.encode() + f"Content-Length: {len(body)}\r\n\r\n".encode() + body[:9])
         await eventually(lambda: hops()["ingest"].waiting == 1)

@@ -15,12 +15,13 @@ from journal_of_ages import DIRECTORY, digest
 from strandline.core.effects import Deliver
 from strandline.core.feed import Feed
 from strandline.core.records import Kind
-from strandline.core.settings import Settings
+from strandline.core.settings import SECOND_NS, Settings
 from strandline.journal.disk import LocalDisk
 from strandline.journal.journal import Journal
 from strandline.lines import JournalLines
 
 FIXTURES = Path(__file__).parents[1] / "fixtures"
+BEFORE_ACTS = (2 * SECOND_NS, [], [["excuse", "ford", "unknown", "the ford's radio is down"]])
 JOURNALS = sorted(path.name for path in FIXTURES.glob("journal-*"))
 
 
@@ -44,6 +45,11 @@ def test_it_folds_to_what_it_was(name: str, tmp_path: Path) -> None:
     assert state.outbox.next_number == expected["next_number"]
     assert state.outbox.positions == expected["positions"]
     assert sorted(kinds) == expected["kinds"]
+    acts = [[act.act, act.subject, act.who, act.reason] for act in state.acts.kept]
+    told = ("slack_ns", "paused", "acts")  # not in what was written before acts were kept
+    assert (state.slack_ns, sorted(state.acts.paused), acts) == tuple(
+        expected.get(name, before) for name, before in zip(told, BEFORE_ACTS, strict=True)
+    )
     lines = JournalLines(journal, feed)
     found = {f"{batch.lane} {batch.number}": digest(batch, lines) for lane in ("ordered", "late", "quarantine")
              for batch in state.outbox.undelivered(lane)}  # fmt: skip

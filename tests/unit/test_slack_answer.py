@@ -13,7 +13,7 @@ from hypothesis import strategies as st
 from strandline.core.columns import TIME_MAX
 from strandline.core.lateness import FADE_EVERY_NS, KEPT_EVENTS, Lateness
 from strandline.core.saved import restore
-from strandline.core.sketch import Buckets, Sketch
+from strandline.core.sketch import Sketch
 from strandline.core.slacks import slacks_of
 from strandline.slack_answer import GRID_NS
 
@@ -24,30 +24,18 @@ durations = st.one_of(st.integers(0, TIME_MAX), st.integers(0, 10**11), st.integ
 # ---- laws of the sketch and of the memory ---------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("accuracy", [0.002, 0.01, 0.05])
-def test_a_column_and_single_values_fall_into_the_same_buckets(accuracy: float) -> None:
-    """The look into the table against the plain search, at every bound and every cell's bound, and beside them."""
-    buckets = Buckets(accuracy)
-    cells = [m << (e - 7) if e >= 7 else m >> (7 - e) for e in range(63) for m in range(128, 256)]
-    around = [value + step for value in [*buckets.upper.tolist(), *cells] for step in (-2, -1, 0, 1, 2)]
-    values = np.array(sorted({value for value in around if 0 <= value <= TIME_MAX}), dtype=np.int64)
-    plain = np.minimum(np.searchsorted(buckets.upper, values), len(buckets) - 1)
-    assert buckets.places(values).tolist() == plain.tolist()
-    assert [buckets.place(value) for value in values.tolist()] == plain.tolist()
-
-
 @settings(max_examples=200)
 @given(st.lists(durations, min_size=1, max_size=60), durations)
 def test_the_two_bounds_hold_the_share_and_quantiles_keep_the_stated_error(values: list[int], slack: int) -> None:
     sketch = Sketch()
     sketch.add(np.array(values, dtype=np.int64))
-    low, high = sketch.bounds_above(slack)
+    bounds = sketch.late_share(slack)
     later = sum(value > slack for value in values) / len(values)
     if slack >= 1000:  # below 1 us all counts as none
-        assert low - 1e-12 <= later <= high + 1e-12
+        assert bounds.at_least - 1e-12 <= later <= bounds.at_most + 1e-12
     for edge in sketch.buckets.upper[1:-1:200].tolist():
-        one, other = sketch.bounds_above(edge)
-        assert one == other == pytest.approx(sum(value > edge for value in values) / len(values))
+        share = sketch.late_share(edge)
+        assert share.exact and share.at_least == pytest.approx(sum(value > edge for value in values) / len(values))
     median, found = sorted(values)[(len(values) - 1) // 2], sketch.quantile(0.5)
     if 1000 <= median <= 366 * 86400 * SECOND:
         assert found == pytest.approx(median, rel=0.0101)
@@ -81,7 +69,7 @@ def test_a_busy_feed_forgets_by_the_hour_and_a_quiet_one_does_not() -> None:
     assert (busy.fades, quiet.fades) == (4, 0)
     assert busy.sketch.total == 2 * KEPT_EVENTS * (1 + 1 / 2 + 1 / 4 + 1 / 8 + 1 / 16)
     assert quiet.sketch.total == 50
-    assert busy.sketch.bounds_above(4_500_000_000)[0] > 0.5 > quiet.sketch.bounds_above(4_500_000_000)[0]
+    assert busy.sketch.late_share(4_500_000_000).at_least > 0.5 > quiet.sketch.late_share(4_500_000_000).at_least
 
 
 # ---- the feed and the answer ----------------------------------------------------------------------------------------

@@ -75,4 +75,12 @@ class Deliver:
     batch: Batch
 
 
-Effect = Append | Sync | Answer | Refuse | Deliver
+@dataclass(frozen=True, slots=True)
+class Pause:
+    """Hand a sink nothing more (`on`), or go on (emitted only once the act is durable). Repeating it does nothing."""
+
+    sink: str
+    on: bool
+
+
+Effect = Append | Sync | Answer | Refuse | Deliver | Pause

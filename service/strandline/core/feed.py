@@ -10,12 +10,11 @@ from __future__ import annotations
 from collections import deque
 from collections.abc import Mapping, Sequence
 
-import numpy as np
-
-from .columns import NO_SOURCE, TIME_MIN, Arrival, Lane, RequestKey
-from .effects import Answer, Append, Buffer, Deliver, Effect, Outcome, Refuse, Sync
+from .columns import NO_SOURCE, TIME_MIN, Arrival, Lane, RequestKey, require_consistent
+from .effects import Answer, Append, Buffer, Deliver, Effect, Outcome, Pause, Refuse, Sync
 from .records import (
     VERSION,
+    ActRecord,
     Cause,
     ExcuseRecord,
     IdleRecord,
@@ -40,7 +39,7 @@ from .records import (
 from .saved import restore, save
 from .settings import Settings
 from .state import State
-from .view import Hold, View, hold_of, view_of
+from .view import View, hold_of, view_of
 from .watermark import Candidate, candidate
 
 RETRY_AFTER_S = 5
@@ -59,8 +58,7 @@ class Feed:
         self.durable_lsn = 0
         self._clock_ns = TIME_MIN  # never goes back while the feed lives; what it decides stands in records
         self._asked_lsn = 0  # a sync up to here was asked for
-        self._waiting: deque[tuple[int, Answer | Deliver]] = deque()
-        self._hold = Hold(NO_SOURCE, "nothing_held", 0)
+        self._waiting: deque[tuple[int, Answer | Deliver | Pause]] = deque()
         self.refusals: dict[str, int] = {}
         self._started = False
 
@@ -125,8 +123,9 @@ class Feed:
         again = {lane for name, lanes in served.items() for lane in lanes if lane not in before.get(name, {})}
         self._record(effects, SettingsRecord(now, chosen, served, not self._started, stand))
         self._started = True
+        self._waiting.extend((self.next_lsn, Pause(sink, True)) for sink in self.state.acts.paused)
         self._redeliver(again)
-        return self._done(effects, now, sync=True)
+        return self._done(effects, sync=True)
 
     def _redeliver(self, lanes: set[Lane]) -> None:
         """Deliver all that is undelivered in these lanes, for a sink is new to them; what else waits here waits on."""
@@ -135,7 +134,7 @@ class Feed:
         self._waiting = deque(
             (lsn, effect)
             for lsn, effect in self._waiting
-            if isinstance(effect, Answer) or (effect.batch.lane, effect.batch.number) not in again
+            if not isinstance(effect, Deliver) or (effect.batch.lane, effect.batch.number) not in again
         )
         self._waiting.extend((self.next_lsn, Deliver(batch)) for batch in batches)
 
@@ -146,7 +145,7 @@ class Feed:
 
         A request whose key came before is not taken again: it gets the first one's answer, or is refused.
         """
-        _require_consistent(arrival, self.state.sources.numbers)
+        require_consistent(arrival, self.state.sources.numbers)
         if key is not None and (known := self._known(key, self._now(now_ns), token)):
             return [known]
         refusal = self._refusal(arrival, token)
@@ -169,14 +168,14 @@ class Feed:
         self._waiting.append((self.next_lsn, Answer(token, outcome)))
         self._waiting.extend((self.next_lsn, Deliver(batch)) for batch in batches)
         self._mark(effects, now, only_releasing=False)
-        return self._done(effects, now, sync=True)
+        return self._done(effects, sync=True)
 
     def tick(self, now_ns: int) -> list[Effect]:
         """Time has gone on."""
         effects: list[Effect] = []
         now = self._now(now_ns)
         self._mark(effects, now, only_releasing=True)
-        return self._done(effects, now, sync=bool(effects) or self.next_lsn > self._asked_lsn)
+        return self._done(effects, sync=bool(effects) or self.next_lsn > self._asked_lsn)
 
     def synced(self, lsn: int) -> list[Effect]:
         """The journal is durable up to lsn: what waited for that may leave."""
@@ -194,7 +193,7 @@ class Feed:
             self._record(effects, TakenRecord(now, sink, lane, number))
         positions_only = len(effects)
         self._mark(effects, now, only_releasing=True)
-        return self._done(effects, now, sync=len(effects) > positions_only)
+        return self._done(effects, sync=len(effects) > positions_only)
 
     def promise(self, source: str, time_ns: int, now_ns: int, token: int) -> list[Effect]:
         """A source promises that nothing older than time_ns will come from it."""
@@ -214,20 +213,42 @@ class Feed:
         self._record(effects, PromiseRecord(now, number, time_ns))
         return self._act(effects, now, token)
 
-    def excuse(self, source: str, reason: str, now_ns: int, token: int) -> list[Effect]:
+    def excuse(self, source: str, reason: str, now_ns: int, token: int, who: str = "") -> list[Effect]:
         """An operator tells the feed not to wait for a source until it speaks again. Raises KeyError if unknown."""
         effects: list[Effect] = []
         now = self._now(now_ns)
-        self._record(effects, ExcuseRecord(now, self.state.sources.numbers[source], reason))
+        self._record(effects, ExcuseRecord(now, self.state.sources.numbers[source], reason, who))
         return self._act(effects, now, token)
 
-    def drain(self, now_ns: int, token: int) -> list[Effect]:
-        """An operator lets go everything that is held, in order."""
+    def drain(self, now_ns: int, token: int, who: str = "", reason: str = "") -> list[Effect]:
+        """Let go everything that is held, in order. Noted as an act where `who` names somebody."""
         effects: list[Effect] = []
         now = self._now(now_ns)
+        if who:
+            self._record(effects, ActRecord(now, "drain", "", who, reason))
         tail = self.state.runs.tail_ns
         if tail is not None:
             self._set(effects, Candidate(tail, Cause.DRAIN, NO_SOURCE), now)
+        return self._act(effects, now, token)
+
+    def set_slack(
+        self, slack_ns: int | None, for_ns: int, reason: str, now_ns: int, token: int, who: str
+    ) -> list[Effect]:
+        """An operator sets the slack for a time; None: the configured one holds again from now on."""
+        effects: list[Effect] = []
+        now = self._now(now_ns)
+        until_ns = None if slack_ns is None else now + for_ns
+        self._record(effects, ActRecord(now, "slack", "", who, reason, until_ns, slack_ns))
+        return self._act(effects, now, token)
+
+    def pause(self, sink: str, on: bool, reason: str, now_ns: int, token: int, who: str) -> list[Effect]:
+        """An operator has a sink handed nothing more (`on`), or go on. Raises KeyError if the sink is unknown."""
+        effects: list[Effect] = []
+        now = self._now(now_ns)
+        if sink not in self.state.outbox.positions:
+            raise KeyError(sink)
+        self._record(effects, ActRecord(now, "pause" if on else "resume", sink, who, reason))
+        self._waiting.append((self.next_lsn, Pause(sink, on)))
         return self._act(effects, now, token)
 
     # ---- decisions ------------------------------------------------------------------------------------------------
@@ -252,7 +273,7 @@ class Feed:
         if held > limit and len(arrival.times):
             detail = (
                 f"{state.runs.held} events are held and held_events_at_most is {limit}; "
-                f"the feed is held by: {self._hold.why}"
+                f"the feed is held by: {hold_of(state, max(self._clock_ns, state.now_ns)).why}"
             )
             return Refuse(token, "held_full", detail, RETRY_AFTER_S)
         aside, limit = state.outbox.aside_events, state.settings.undelivered_events_at_most
@@ -274,11 +295,11 @@ class Feed:
     def _mark(self, effects: list[Effect], now: int, *, only_releasing: bool) -> None:
         """Set a mark if the watermark may move (or only if that would release something)."""
         state = self.state
-        if state.sources.falls_idle(now - state.settings.idle_after_ns):
+        if state.sources.falls_idle(now - state.settings.idle_after_ns) or state.acts.slack_ended(now):
             self._record(effects, IdleRecord(now))
         if state.outbox.undelivered_events > state.settings.undelivered_events_at_most:
             return
-        best = candidate(state.settings, state.slack, state.sources, state.hold, now)
+        best = candidate(state.settings, state.slack_ns, state.sources, state.hold, now)
         head = state.runs.head_ns
         releasing = head is not None and head <= max(best.watermark_ns, state.watermark_ns)
         if releasing or (best.watermark_ns > state.watermark_ns and not only_releasing):
@@ -318,11 +339,10 @@ class Feed:
         """End of an operator's or a source's act: its consequences, then its answer once all is durable."""
         self._mark(effects, now, only_releasing=False)
         self._waiting.append((self.next_lsn, Answer(token, None)))
-        return self._done(effects, now, sync=True)
+        return self._done(effects, sync=True)
 
-    def _done(self, effects: list[Effect], now: int, *, sync: bool) -> list[Effect]:
+    def _done(self, effects: list[Effect], *, sync: bool) -> list[Effect]:
         self.state.ledger.check(self.state.runs.held)
-        self._hold = hold_of(self.state, self._hold, now)
         if sync:
             self._asked_lsn = self.next_lsn
             if self.next_lsn > self.durable_lsn:
@@ -335,7 +355,7 @@ class Feed:
 
     def snapshot(self, now_ns: int) -> View:
         """Everything that observers need, as plain values."""
-        return view_of(self.state, self._hold, max(now_ns, self._clock_ns, self.state.now_ns), dict(self.refusals))
+        return view_of(self.state, max(now_ns, self._clock_ns, self.state.now_ns), dict(self.refusals))
 
     def unsynced(self) -> tuple[int, int | None]:
         """Events in batches whose record is not durable yet, and the arrival clock of the oldest such batch."""
@@ -358,22 +378,3 @@ class Feed:
         assert self.durable_lsn <= self.next_lsn
         lsns = [lsn for lsn, _ in self._waiting]
         assert lsns == sorted(lsns) and (not lsns or lsns[-1] <= self.next_lsn)
-
-
-def _require_consistent(arrival: Arrival, known: Mapping[str, int]) -> None:
-    """Raise ValueError for what could not be folded: a record that is written stands for ever."""
-    rows, names = len(arrival.times), arrival.new_sources
-    optional = (arrival.identities, arrival.line_numbers)
-    columns = (arrival.sources, arrival.lengths, *(column for column in optional if column is not None))
-    if any(len(column) != rows for column in columns):
-        raise ValueError("an arrival's columns must have equal lengths")
-    if rows == 1:
-        greatest, length = int(arrival.sources[0]), int(arrival.lengths[0])
-    else:
-        greatest, length = int(arrival.sources.max(initial=0)), int(arrival.lengths.sum(dtype=np.int64))
-    if rows and greatest >= len(known) + len(names):
-        raise ValueError(f"an arrival names source {greatest}, {len(known) + len(names)} are known")
-    if len(arrival.payload) != length + rows:
-        raise ValueError(f"an arrival's payload of {len(arrival.payload)} bytes is not the sum of its lines")
-    if names and (len(set(names)) < len(names) or any(name in known for name in names)):
-        raise ValueError("an arrival's new sources have numbers already: decode it against the present table")

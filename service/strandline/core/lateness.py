@@ -31,7 +31,6 @@ class Lateness:
         self.sketch = Sketch()
         self.fades = 0
         self.since_ns = TIME_MIN  # arrival clock of the first event that was counted
-        self.greatest_ns = 0  # since then; it does not fade
         self._hour = 0  # full hours of the arrival clock since 1970 at the last look
 
     def note(self, now_ns: int, events: int, lateness_ns: NDArray[np.int64] | None) -> None:
@@ -45,33 +44,26 @@ class Lateness:
                 self.sketch.fade()
                 self.fades += 1
         if lateness_ns is None:
-            self.sketch.add_zeros(events)
-        elif events == 1:
-            one_ns = int(lateness_ns[0])
-            self.sketch.add_one(one_ns)
-            self.greatest_ns = max(self.greatest_ns, one_ns)
+            self.sketch.add_same(0, events)
         else:
             self.sketch.add(lateness_ns)
-            self.greatest_ns = max(self.greatest_ns, int(lateness_ns.max()))
 
     def saved(self) -> list[Any]:
         """All of it as plain values; of the counts only those that are not 0."""
         places = np.flatnonzero(self.sketch.counts)
         counts = self.sketch.counts[places].tolist()
         return [
-            *(self.fades, self.since_ns, self.greatest_ns, self._hour),
+            *(self.fades, self.since_ns, self.sketch.greatest_ns, self._hour),
             self.sketch.total,  # not the sum of the counts to the last bit, once they have faded often
             *(places.tolist(), counts),
         ]
 
     def restore(self, values: list[Any]) -> None:
         """Take over saved values. Raises LookupError, TypeError, ValueError where they are none."""
-        self.fades, self.since_ns, self.greatest_ns, self._hour, self.sketch.total, places, counts = values
+        self.fades, self.since_ns, greatest_ns, self._hour, self.sketch.total, places, counts = values
+        self.sketch.greatest_ns = greatest_ns
         self.sketch.counts[np.array(places, dtype=np.int64)] = counts
 
     def check(self) -> None:
         """Assert that the counts add up and none lies above the greatest."""
-        sketch = self.sketch
-        assert np.all(sketch.counts >= 0)
-        assert abs(float(sketch.counts.sum()) - sketch.total) <= 1e-9 * max(sketch.total, 1.0)
-        assert not sketch.counts[sketch.buckets.place(self.greatest_ns) + 1 :].any()
+        self.sketch.check()

@@ -10,7 +10,7 @@ import struct
 from collections.abc import Sequence
 from dataclasses import dataclass
 from enum import IntEnum
-from typing import Any
+from typing import Any, Literal
 
 import msgspec
 import numpy as np
@@ -50,6 +50,10 @@ class Kind(IntEnum):
     NUMBERS = 8
     IDLE = 9
     KEY = 10
+    ACT = 11
+
+
+ActName = Literal["excuse", "drain", "slack", "pause", "resume"]
 
 
 class Cause(IntEnum):
@@ -100,11 +104,15 @@ class PromiseRecord(msgspec.Struct, frozen=True, array_like=True):
 
 
 class ExcuseRecord(msgspec.Struct, frozen=True, array_like=True):
-    """An operator told the feed not to wait for a source until it speaks again."""
+    """An operator told the feed not to wait for a source until it speaks again.
+
+    `who` is left out where it is empty, as it was before it was kept, so that an old journal is decided as it stands.
+    """
 
     now_ns: int
     source: int
     reason: str
+    who: str = ""
 
 
 class NumbersRecord(msgspec.Struct, frozen=True, array_like=True):
@@ -116,7 +124,7 @@ class NumbersRecord(msgspec.Struct, frozen=True, array_like=True):
 
 
 class IdleRecord(msgspec.Struct, frozen=True, array_like=True):
-    """At this instant sources fell idle: those that had been silent for `idle_after` by then."""
+    """At this instant sources fell idle (silent for `idle_after` by then), or a slack set for a time ended."""
 
     now_ns: int
 
@@ -127,6 +135,22 @@ class KeyRecord(msgspec.Struct, frozen=True, array_like=True):
     now_ns: int
     key: str
     fingerprint: bytes
+
+
+class ActRecord(msgspec.Struct, frozen=True, array_like=True):
+    """An operator's act that no other record tells: what, on what, by whom and why.
+
+    `subject` is a sink for pause and resume, else empty. `slack_ns` with `until_ns`: this slack holds until that
+    instant; an act "slack" without them ends it.
+    """
+
+    now_ns: int
+    act: ActName
+    subject: str
+    who: str
+    reason: str
+    until_ns: int | None = None
+    slack_ns: int | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -175,6 +199,7 @@ SMALL_KINDS = {
     Kind.NUMBERS: NumbersRecord,
     Kind.IDLE: IdleRecord,
     Kind.KEY: KeyRecord,
+    Kind.ACT: ActRecord,
 }
 SmallRecord = (
     SettingsRecord
@@ -185,6 +210,7 @@ SmallRecord = (
     | NumbersRecord
     | IdleRecord
     | KeyRecord
+    | ActRecord
 )
 _KIND_OF = {struct_type: kind for kind, struct_type in SMALL_KINDS.items()}
 _pack = msgspec.msgpack.Encoder().encode
@@ -199,6 +225,8 @@ def decode_faults(table: Buffer) -> list[FaultRow]:
 
 def encode_small(record: SmallRecord) -> tuple[Kind, bytes]:
     """Kind and body of one of the rare records."""
+    if isinstance(record, ExcuseRecord) and not record.who:
+        return Kind.EXCUSE, _pack((record.now_ns, record.source, record.reason))
     return _KIND_OF[type(record)], _pack(record)
 
 

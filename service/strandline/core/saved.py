@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from .columns import REF, TIME_MIN, Batch, QuarantineEntry, as_rows, empty_refs, empty_times
 from .effects import Buffer, Outcome
+from .held import Held
 from .keys import Kept
 from .outbox import LANES
 from .records import Cause
@@ -69,8 +70,8 @@ def save(state: State) -> list[Buffer]:
         columns.put(column.copy())
     for identities in state.seen.columns():
         columns.put(identities)
-    for run in state.runs.runs:
-        strand = joined(list(run.chunks))
+    held = state.runs
+    for strand in (*(joined(list(run.chunks)) for run in held.open.runs), held.fresh.copied()):
         columns.put(strand.times)
         columns.put(strand.refs)
     batches = [_save_batch(batch, columns) for lane in LANES for batch in state.outbox.undelivered(lane)]
@@ -82,9 +83,12 @@ def save(state: State) -> list[Buffer]:
         "lateness": state.lateness.saved(),
         "names": state.sources.names,
         "newest_ns": state.sources.newest_ns,
-        "runs": len(state.runs.runs),
-        "opened": state.runs.opened,
+        "runs": len(held.open.runs),
+        "opened": held.open.opened,
+        "fresh_sorted": held.fresh.sorted,
         "hold": list(state.hold.pairs),
+        "holds": state.holds.saved(),
+        "acts": state.acts.saved(),
         "ledger": state.ledger,
         "next_number": state.outbox.next_number,
         "positions": state.outbox.positions,
@@ -129,6 +133,9 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
         state.slack.restore(header["slack"])
     if "lateness" in header:  # not in snapshots of before it was kept: the memory then begins anew
         state.lateness.restore(header["lateness"])
+    if "holds" in header:  # likewise, and the acts
+        state.holds.restore(header["holds"])
+        state.acts.restore(header["acts"])
     newest, heard = columns.get(np.int64), columns.get(np.int64)
     active, excused = columns.get(np.bool_), columns.get(np.bool_)
     vouched, promised, broken = (columns.get(np.int64) for _ in range(3))
@@ -140,9 +147,7 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
     for key, fingerprint, outcome, arrived_ns, end_lsn in header["keys"]:
         kept = Kept(fingerprint, msgspec.convert(outcome, Outcome), arrived_ns, end_lsn)
         state.keys.keep(key, kept, len(header["keys"]), TIME_MIN)
-    for _ in range(header["runs"]):
-        state.runs.reopen(Strand(columns.get(np.int64), as_rows(columns.get(REF))))
-    state.runs.opened = header["opened"]
+    _restore_held(state.runs, header, columns)
     state.hold.pairs.extend((arrived, newest) for arrived, newest in header["hold"])
     state.ledger = msgspec.convert(header["ledger"], type(state.ledger))
     _restore_outbox(state, header, columns)
@@ -153,6 +158,17 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
     state.figures.arrivals, state.figures.marks, state.figures.marks_by_cause = header["counts"]
     columns.require_end()
     return state
+
+
+def _restore_held(held: Held, header: dict[str, Any], columns: _Columns) -> None:
+    def strand() -> Strand:
+        return Strand(columns.get(np.int64), as_rows(columns.get(REF)))
+
+    for _ in range(header["runs"]):
+        held.open.reopen(strand())
+    held.open.opened = header["opened"]
+    if "fresh_sorted" in header:  # not in snapshots of before rows were fresh: all that is held stood in open runs
+        held.fresh.restore(strand(), header["fresh_sorted"])
 
 
 def _restore_outbox(state: State, header: dict[str, Any], columns: _Columns) -> None:

@@ -34,7 +34,9 @@ class FixedSlack:
     def __init__(self, slack_ns: int) -> None:
         self.slack_ns = slack_ns
 
-    def learn(self, now_ns: int, events: int, late: int, lateness_ns: NDArray[np.int64] | None) -> None:
+    def learn(
+        self, now_ns: int, events: int, late: int, lateness_ns: NDArray[np.int64] | None, *, set_aside: bool = False
+    ) -> None:
         """Nothing is learned."""
 
 
@@ -67,19 +69,24 @@ class SteeredSlack:
         """The slack in force."""
         return round(self.exact_ns)
 
-    def learn(self, now_ns: int, events: int, late: int, lateness_ns: NDArray[np.int64] | None) -> None:
+    def learn(
+        self, now_ns: int, events: int, late: int, lateness_ns: NDArray[np.int64] | None, *, set_aside: bool = False
+    ) -> None:
         """One arrival's events: how many, how many came late, and how far behind the watermark's basis each stood.
 
-        `lateness_ns` is None where none stood behind it at all.
+        `lateness_ns` is None where none stood behind it at all. `set_aside`: another slack is in force for a time; then
+        those count for the steering that this one would have made late, since it has no hand in which really are.
         """
         self.events += events
         self.late += late
         self._note_period(now_ns, events, late)
         if lateness_ns is None:
-            self.sketch.add_zeros(events)
+            self.sketch.add_same(0, events)
         else:
             self.sketch.add(lateness_ns)
         if self.stretch is not None:
+            if set_aside:
+                late = 0 if lateness_ns is None else int(np.count_nonzero(lateness_ns > self.slack_ns))
             self._step(self.stretch, events, late)
         if self.events >= self._tune_at:
             self._tune()
@@ -156,7 +163,7 @@ class SteeredSlack:
     @property
     def attainable(self) -> float:
         """The late share that the longest wait can give, from the lateness remembered."""
-        return self.sketch.share_above(self.at_most_ns)
+        return self.sketch.late_share(self.at_most_ns).at_least
 
     def saved(self) -> list[Any]:
         """All of it as plain values."""
@@ -171,15 +178,19 @@ class SteeredSlack:
             self._tune_at,
             self.sketch.counts.tolist(),
             self.sketch.total,  # not the sum of the counts to the last bit, once they have faded often
+            self.sketch.greatest_ns,
         ]
 
     def restore(self, values: list[Any]) -> None:
         """Take over saved values."""
-        self.exact_ns, self.events, self.late, stretch, self.stretches, periods, self._tune_at, counts, total = values
+        self.exact_ns, self.events, self.late, stretch, self.stretches, periods, self._tune_at, *sketch = values
         self.stretch = None if stretch is None else Stretch(*stretch)
         self.periods.extend(tuple(row) for row in periods)
-        self.sketch.counts[:] = counts
-        self.sketch.total = total
+        self.sketch.counts[:] = sketch[0]
+        self.sketch.total = sketch[1]
+        # Snapshots of before it was kept: the upper bound of the last bucket that is not empty stands for the greatest.
+        last = int(np.flatnonzero(self.sketch.counts)[-1]) if self.sketch.total else 0
+        self.sketch.greatest_ns = sketch[2] if len(sketch) > 2 else int(self.sketch.buckets.upper[last])
 
 
 Slack = FixedSlack | SteeredSlack

@@ -41,20 +41,20 @@ class SlacksView:
 def slacks_of(state: State, slacks_ns: Sequence[int]) -> SlacksView:
     """What each of these slacks (at least 0) would give, and the one in force."""
     memory, ledger = state.lateness, state.ledger
-    in_force = state.slack.slack_ns
+    in_force = state.slack_ns
     sketch = memory.sketch
     shares = []
     for slack_ns in sorted({*slacks_ns, in_force}):
-        low, high = (0.0, 0.0) if slack_ns >= memory.greatest_ns else sketch.bounds_above(slack_ns)
-        shares.append(SlackShare(slack_ns, low, high, slack_ns == in_force))
+        share = sketch.late_share(slack_ns)
+        shares.append(SlackShare(slack_ns, share.at_least, share.at_most, slack_ns == in_force))
     return SlacksView(
         slacks=shares,
-        lateness_quantiles_ns={q: min(sketch.quantile(q), float(memory.greatest_ns)) for q in QUANTILES},
-        greatest_ns=memory.greatest_ns,
+        lateness_quantiles_ns={q: sketch.quantile(q) for q in QUANTILES},
+        greatest_ns=sketch.greatest_ns,
         weight=sketch.total,
         since_ns=memory.since_ns,
         fades=memory.fades,
-        relative_error=sketch.accuracy,
+        relative_error=sketch.buckets.relative_error,
         judged=ledger.late + ledger.released + ledger.buffered,
         late=ledger.late,
     )

@@ -99,6 +99,15 @@ class Sources:
         self._promising = True
         self._word(source, NEVER, now_ns)
 
+    def vouch_again(self, slack_ns: int) -> None:
+        """Another slack will be taken off from now on: a promise lets the watermark go right up to it all the same."""
+        if not self._promising:
+            return
+        numbers = np.flatnonzero(self.promised[: len(self.names)] != NEVER)
+        promised = self.promised[numbers]
+        self.vouched[numbers] = np.minimum(promised, NONE - 1 - slack_ns) + slack_ns  # within int64, as in `promise`
+        self._refresh(numbers)
+
     def note_broken(self, sources: NDArray[np.uint32], times: Times) -> None:
         """Count events that are older than what their source had promised before they came."""
         if not self._promising:

@@ -13,6 +13,7 @@ from itertools import pairwise
 import numpy as np
 from numpy.typing import NDArray
 
+from .acts import UNKNOWN, Acts
 from .arrivals import Arrivals
 from .columns import (
     REF,
@@ -30,13 +31,16 @@ from .columns import (
     least_of,
 )
 from .effects import AnswerFault, Outcome
+from .held import Held
 from .histogram import POWERS, SECONDS_NS, Histogram
+from .holds import Holds, holder_of
 from .keys import Kept, Keys
 from .lateness import Lateness
 from .ledger import Ledger
 from .merge import Merger
 from .outbox import Outbox
 from .records import (
+    ActRecord,
     ArrivalBody,
     Cause,
     ExcuseRecord,
@@ -50,7 +54,6 @@ from .records import (
     SourcesRecord,
     TakenRecord,
 )
-from .runs import OpenRuns, runs_of
 from .seen import Seen
 from .settings import Settings
 from .slack import Slack, slack_of
@@ -82,16 +85,24 @@ class State:
         self.marked_ns = TIME_MIN  # when it last moved
         self.cause = Cause.SOURCES
         self.sources = Sources()
-        self.runs = OpenRuns()
         self.merger = Merger()
+        self.runs = Held(self.merger)
         self.arrivals = Arrivals()
         self.hold = HoldBound()
+        self.holds = Holds()
+        self.acts = Acts()
         self.outbox = Outbox()
         self.ledger = Ledger()
         self.seen = Seen(settings.id_window_events)
         self.keys = Keys()
         self._key: KeyRecord | None = None  # of the arrival record that must follow
         self.figures = Figures(Histogram(SECONDS_NS), Histogram(SECONDS_NS), Histogram(POWERS))
+
+    @property
+    def slack_ns(self) -> int:
+        """The slack in force: one that an operator set for a time, else the configured or steered one."""
+        chosen = self.acts.slack_set
+        return self.slack.slack_ns if chosen is None or chosen.slack_ns is None else chosen.slack_ns
 
     def fold_small(self, record: SmallRecord) -> None:
         """Take over one of the rare records."""
@@ -104,9 +115,13 @@ class State:
             case TakenRecord():
                 self.outbox.taken(record.sink, record.lane, record.number)
             case PromiseRecord():
-                self.sources.promise(record.source, record.time_ns, record.now_ns, self.slack.slack_ns)
-            case ExcuseRecord():
-                self.sources.excuse(record.source)
+                self._end_slack(record.now_ns)
+                self.sources.promise(record.source, record.time_ns, record.now_ns, self.slack_ns)
+            case ExcuseRecord(now_ns=now_ns, source=source, reason=reason, who=who):
+                self.sources.excuse(source)
+                self.acts.take(ActRecord(now_ns, "excuse", self.sources.names[source], who or UNKNOWN, reason))
+            case ActRecord():
+                self._fold_act(record)
             case NumbersRecord():
                 self.outbox.next_number[record.lane] = max(self.outbox.next_number[record.lane], record.next_number)
             case IdleRecord():
@@ -114,13 +129,29 @@ class State:
             case KeyRecord():
                 self._key = record
         self.advance(record.now_ns)
+        self.holds.note(self.now_ns, *holder_of(self))
+
+    def _fold_act(self, record: ActRecord) -> None:
+        self._end_slack(record.now_ns)
+        self.acts.take(record)
+        if record.act == "slack":
+            self.sources.vouch_again(self.slack_ns)
+
+    def _end_slack(self, now_ns: int) -> None:
+        """The configured slack holds again once the time of one that was set is over."""
+        if self.acts.slack_ended(now_ns):
+            self.acts.slack_set = None
+            self.sources.vouch_again(self.slack_ns)
 
     def _fold_settings(self, record: SettingsRecord) -> None:
         before, self.settings = self.settings, record.settings
+        if record.resumed:
+            self.holds.note_stopped(self.now_ns)
         self.slack = slack_of(record.settings, self.slack)
         self.seen.window = record.settings.id_window_events
         self._key = None  # a crash may have cut off the arrival that it announced
         self.outbox.serve(record.sinks, record.positions)
+        self.acts.serve(record.sinks)
         expected: Sequence[str] = record.settings.expect_sources
         if record.resumed:
             # Time in which this service did not listen is not silence of the sources.
@@ -134,6 +165,7 @@ class State:
     def advance(self, now_ns: int) -> None:
         """Let the arrival clock go on; it never goes back. Records alone move it: a tick without a record does not."""
         self.now_ns = max(self.now_ns, now_ns)
+        self._end_slack(self.now_ns)
         self.sources.expire(self.now_ns - self.settings.idle_after_ns)
 
     def fold_arrival(self, body: ArrivalBody, end_lsn: int) -> tuple[Outcome, list[Batch]]:
@@ -162,7 +194,7 @@ class State:
             batches.append(late_batch)
             late = len(late_batch)
         if events:
-            self.slack.learn(body.arrived_ns, events, late, behind)
+            self.slack.learn(body.arrived_ns, events, late, behind, set_aside=self.acts.slack_set is not None)
             self.lateness.note(body.arrived_ns, events, behind)
         if len(times):
             self._hold(times, refs, body)
@@ -180,6 +212,7 @@ class State:
         faults.sort(key=lambda fault: fault.line)
         outcome = Outcome(received, len(times), late, duplicate, len(entries), faults)
         self._keep_answer(outcome, body.arrived_ns, end_lsn)
+        self.holds.note(self.now_ns, *holder_of(self))
         return outcome, batches
 
     def _keep_answer(self, outcome: Outcome, arrived_ns: int, end_lsn: int) -> None:
@@ -238,10 +271,14 @@ class State:
     def _hold(self, times: Times, refs: Refs, body: ArrivalBody) -> None:
         self.arrivals.note(body.payload_place, body.arrived_ns, len(times))
         self.hold.note(body.arrived_ns, greatest_of(times))
-        runs = runs_of(times, as_rows(refs))
-        for run in runs:
-            self.runs.deal(run)
-        self.figures.run_length.add(np.array([len(run.times) for run in runs], dtype=np.int64))
+        self.runs.hold(times, as_rows(refs))
+        if len(times) == 1:
+            self.figures.run_length.add_same(1, 1)
+        else:
+            falls = np.flatnonzero(times[1:] < times[:-1])
+            edges = np.empty(len(falls) + 2, dtype=np.int64)
+            edges[0], edges[1:-1], edges[-1] = -1, falls, len(times) - 1
+            self.figures.run_length.add(edges[1:] - edges[:-1])  # np.diff, prepending and appending: 29 us, this 1
 
     def fold_mark(self, mark: Mark, end_lsn: int) -> list[Batch]:
         """Set the watermark and cut its release, in batches. It may stay where it is, so that equal times follow."""
@@ -252,10 +289,10 @@ class State:
         self.figures.marks += 1
         self.figures.marks_by_cause[mark.cause] += 1
         self.hold.passed(mark.watermark_ns)
-        heads = self.runs.cut(mark.watermark_ns)
-        if not heads:
+        strand = self.runs.release(mark.watermark_ns)
+        if not len(strand.times):
+            self.holds.note(self.now_ns, *holder_of(self))
             return []
-        strand = self.merger.merge(heads)
         rows, refs = len(strand.times), as_refs(strand.refs)
         came_ns, counts = self.arrivals.release(refs)
         self.figures.hold.add(np.maximum(mark.decided_ns - came_ns, 0), counts)
@@ -264,6 +301,7 @@ class State:
         batches = self._batches(strand.times, refs, mark, end_lsn)
         for batch in batches:
             self.outbox.add(batch)
+        self.holds.note(self.now_ns, *holder_of(self))
         return batches
 
     def _batches(self, times: Times, refs: Refs, mark: Mark, end_lsn: int) -> list[Batch]:
@@ -285,6 +323,8 @@ class State:
         self.seen.check()
         self.keys.check()
         self.lateness.check()
+        self.holds.check()
+        self.acts.check(self.now_ns)
         head = self.runs.head_ns
         assert head is None or head >= self.watermark_ns, "held behind the watermark"
 

@@ -10,26 +10,30 @@ from dataclasses import asdict, dataclass
 import numpy as np
 
 from .columns import NO_SOURCE, TIME_MIN, Lane
+from .holds import SILENT_PART
 from .outbox import LANES
-from .records import Cause
+from .records import ActRecord, Cause
 from .settings import SECOND_NS
 from .slack import Slack, SteeredSlack
-from .sources import NEVER
 from .state import State
 
-# Why a feed is held, in words for a person. The keys are stable.
+# Why a feed is held, in words for a person, with what to do where something can be done. The keys are stable.
 HOLD_WHYS: dict[str, str] = {
     "nothing_held": "nothing is held",
-    "slack": "waiting out the slack behind the newest event",
-    "slow_source": "this source is the one furthest behind",
-    "expected_source": "this expected source has not been heard yet",
-    "silent_source": "this source has fallen silent and is not idle yet",
-    "all_silent": "no source is waited for; what is held drains at hold_at_most",
-    "sink_full": "too much is released and not yet taken by a sink",
+    "slack": "waiting out the slack behind the newest event; a shorter slack would shorten it",
+    "slack_set": "waiting out the slack that an operator has set for a time; it can be ended early",
+    "slow_source": "this source is the one furthest behind; if its backlog may come late, excuse it",
+    "promised_source": "this source is furthest behind, by its promise; it holds until it promises more or sends",
+    "expected_source": "this expected source has not been heard yet; start it, or excuse it until it speaks",
+    "silent_source": "this source has fallen silent and is not idle yet; if it will not be back soon, excuse it",
+    "all_silent": "no source is waited for; what is held drains at hold_at_most, or at once if you release it now",
+    "hold_at_most": "this source is so far behind that hold_at_most goes past it: what it still sends comes late; mend "
+    "its link, or excuse it",
+    "sink_full": "too much is released and not yet taken by this sink; mend its store",
+    "sink_paused": "too much is released and not yet taken by this sink, which is paused; resume it",
+    "stopped": "the service was stopped or restarted in this time; what was held waited for it",
 }
-SILENT_SHARE = (
-    0.25  # a holder silent for this share of idle_after is called silent, not slow: common practice, no source
-)
+SILENT_SHARE = 1 / SILENT_PART  # of idle_after: a holder that has been silent so long is called silent, not slow
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,6 +43,8 @@ class Hold:
     source: int  # NO_SOURCE if no single one
     why: str  # a key of HOLD_WHYS
     since_ns: int  # arrival clock since when this source holds for this reason
+    sink: str = ""  # where a sink holds it
+    idle_ns: int | None = None  # arrival clock at which this source will be waited for no more, if it stays silent
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,7 +67,9 @@ class View:
     watermark_ns: int
     marked_ns: int
     cause: str
-    slack_ns: int
+    slack_ns: int  # in force
+    slack_set: ActRecord | None  # the act that set it, where an operator did for a time
+    paused: dict[str, ActRecord]  # by sink
     newest_ns: int
     hold: Hold
     hold_source: str | None
@@ -106,36 +114,18 @@ class Steering:
     attainable: float  # the share that the longest wait can give
 
 
-def hold_of(state: State, before: Hold, now_ns: int) -> Hold:
-    """Who holds the feed now, and since when if it is the same as before."""
-    source, why = _holder(state, now_ns)
-    if (source, why) == (before.source, before.why):
-        return before
-    return Hold(source, why, now_ns)
+def hold_of(state: State, now_ns: int) -> Hold:
+    """Who holds the feed at an instant not before the state's last record, and since when."""
+    (why, source, sink), since_ns = state.holds.at(now_ns)
+    idle_ns = None
+    if source != NO_SOURCE and state.sources.active[source]:
+        idle_ns = int(state.sources.heard[source]) + state.settings.idle_after_ns
+    return Hold(source, why, since_ns, sink, idle_ns)
 
 
-def _holder(state: State, now_ns: int) -> tuple[int, str]:
-    if state.outbox.undelivered_events > state.settings.undelivered_events_at_most:
-        return NO_SOURCE, "sink_full"
-    if not state.runs.held:
-        return NO_SOURCE, "nothing_held"
-    if state.settings.clock == "arrival":
-        return NO_SOURCE, "slack"
-    least = state.sources.least()
-    if least is None:
-        return NO_SOURCE, "all_silent"
-    newest, source = least
-    if newest == NEVER:
-        return source, "expected_source"
-    if newest >= state.sources.newest_ns:
-        return source, "slack"
-    silent_ns = now_ns - int(state.sources.heard[source])
-    return source, "silent_source" if silent_ns > SILENT_SHARE * state.settings.idle_after_ns else "slow_source"
-
-
-def view_of(state: State, hold: Hold, now_ns: int, refusals: dict[str, int]) -> View:
+def view_of(state: State, now_ns: int, refusals: dict[str, int]) -> View:
     """The feed at this moment."""
-    counts = state.merger.counts
+    counts, hold = state.merger.counts, hold_of(state, now_ns)
     return View(
         name=state.settings.name,
         now_ns=now_ns,
@@ -143,7 +133,9 @@ def view_of(state: State, hold: Hold, now_ns: int, refusals: dict[str, int]) -> 
         watermark_ns=state.watermark_ns,
         marked_ns=state.marked_ns,
         cause=state.cause.name.lower(),
-        slack_ns=state.slack.slack_ns,
+        slack_ns=state.slack_ns,
+        slack_set=state.acts.slack_set,
+        paused=dict(state.acts.paused),
         newest_ns=state.sources.newest_ns,
         hold=hold,
         hold_source=None if hold.source == NO_SOURCE else state.sources.names[hold.source],

@@ -14,7 +14,6 @@ from itertools import pairwise
 from .columns import NO_SOURCE, TIME_MIN
 from .records import Cause
 from .settings import Settings
-from .slack import Slack
 from .sources import Sources
 
 
@@ -61,16 +60,16 @@ class HoldBound:
         assert (self.pairs[-1][1] if self.pairs else None) == tail_ns
 
 
-def candidate(settings: Settings, slack: Slack, sources: Sources, hold: HoldBound, now_ns: int) -> Candidate:
+def candidate(settings: Settings, slack_ns: int, sources: Sources, hold: HoldBound, now_ns: int) -> Candidate:
     """Where the watermark may stand now. Sources that have fallen idle must have been expired before."""
     if settings.clock == "arrival":
-        best = Candidate(_behind(now_ns, slack.slack_ns), Cause.CLOCK, NO_SOURCE)
+        best = Candidate(_behind(now_ns, slack_ns), Cause.CLOCK, NO_SOURCE)
     else:
         least = sources.least()
         if least is None:  # nobody is waited for: the most advanced source leads
-            best = Candidate(_behind(sources.newest_ns, slack.slack_ns), Cause.SILENCE, NO_SOURCE)
+            best = Candidate(_behind(sources.newest_ns, slack_ns), Cause.SILENCE, NO_SOURCE)
         else:
-            best = Candidate(_behind(least[0], slack.slack_ns), Cause.SOURCES, least[1])
+            best = Candidate(_behind(least[0], slack_ns), Cause.SOURCES, least[1])
     due = hold.due(now_ns - settings.hold_at_most_ns)
     if due > best.watermark_ns:
         return Candidate(due, Cause.HOLD_AT_MOST, best.source)

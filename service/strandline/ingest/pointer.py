@@ -10,7 +10,7 @@ where an array stands and a name where an object stands; `-` names no item.
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from operator import attrgetter
 from typing import Any, NamedTuple
 
@@ -22,8 +22,7 @@ TOKENS_AT_MOST = 200  # the most that `nesting_at_most` can be
 
 _BAD_ESCAPE = re.compile("~(?![01])")
 _INDEX = re.compile("0|[1-9][0-9]*")
-# Names that msgspec cannot give to a Struct's field.
-_UNNAMEABLE = re.compile(r'["\\\x00-\x1f]')
+_UNNAMEABLE = re.compile(r'["\\\x00-\x1f]')  # what msgspec cannot give to a Struct's field as its name
 
 _OBJECT = msgspec.json.Decoder(dict[str, msgspec.Raw])
 _ARRAY = msgspec.json.Decoder(list[msgspec.Raw])
@@ -69,6 +68,40 @@ def parse_pointer(text: str) -> Tokens:
     return tuple(token.replace("~1", "/").replace("~0", "~") for token in text.split("/")[1:])
 
 
+def nameable(token: str) -> bool:
+    """Whether msgspec can give a Struct's field this name."""
+    return not _UNNAMEABLE.search(token)
+
+
+def fits_structs(tokens: Iterable[str]) -> bool:
+    """Whether Structs can hold what stands at pointers of these tokens: all are names, and such as a field can have."""
+    return all(nameable(token) and not _INDEX.fullmatch(token) for token in tokens)
+
+
+def decoded_lines(decoder: msgspec.json.Decoder[Any], block: bytes, count: int) -> list[Any] | None:
+    """The `count` lines of a block, decoded at once; None where one of them is not what the decoder asks for."""
+    try:
+        records: list[Any] = decoder.decode_lines(block)
+    except (msgspec.MsgspecError, RecursionError):
+        return None
+    return records if len(records) == count else None
+
+
+def raw_at(node: bytes | msgspec.Raw, tokens: Sequence[str]) -> bytes | msgspec.Raw | None:
+    """The JSON at the tokens of a JSON text; None where nothing stands. Raises msgspec.DecodeError, RecursionError."""
+    for token in tokens:
+        first, found = bytes(memoryview(node)[:1]), None
+        if first == b"{":
+            found = _OBJECT.decode(node).get(token)
+        elif first == b"[" and _INDEX.fullmatch(token):
+            items = _ARRAY.decode(node)
+            found = items[int(token)] if _within(token, items) else None
+        if found is None:
+            return None
+        node = found
+    return node
+
+
 class Fields:
     """Finds time, source and id of events: all of a body's at once through `decoder`, or one line's through `read`.
 
@@ -83,7 +116,7 @@ class Fields:
         _check_paths(paths)
         self.decoder: msgspec.json.Decoder[Any] | None = None
         self._paths = Values(*Values._fields)
-        if not any(_INDEX.fullmatch(token) or _UNNAMEABLE.search(token) for tokens in paths for token in tokens):
+        if fits_structs(token for tokens in paths for token in tokens):
             self._build(time_type)
 
     def _build(self, time_type: Any) -> None:
@@ -141,7 +174,7 @@ class Fields:
 
     def pick(self, document: dict[str, Any]) -> Values:
         """As `read`, of an object that was decoded already."""
-        return Values(*(None if tokens is None else _pick(document, tokens) for tokens in self._tokens))
+        return Values(*(None if tokens is None else pick(document, tokens) for tokens in self._tokens))
 
 
 def _check_paths(paths: set[Tokens]) -> None:
@@ -172,18 +205,8 @@ def _struct_of(tree: dict[str, Any]) -> type[msgspec.Struct]:
 
 
 def _find(members: dict[str, msgspec.Raw], tokens: Tokens) -> Any:
-    node: msgspec.Raw | None = members.get(tokens[0])
-    for token in tokens[1:]:
-        if node is None:
-            return MISSING
-        first = bytes(memoryview(node)[:1])
-        if first == b"{":
-            node = _OBJECT.decode(node).get(token)
-        elif first == b"[" and _INDEX.fullmatch(token):
-            items = _ARRAY.decode(node)
-            node = items[int(token)] if _within(token, items) else None
-        else:
-            node = None
+    first = members.get(tokens[0])
+    node = None if first is None else raw_at(first, tokens[1:])
     if node is None:
         return MISSING
     try:
@@ -192,7 +215,8 @@ def _find(members: dict[str, msgspec.Raw], tokens: Tokens) -> Any:
         return Unheld(bytes(node).decode())
 
 
-def _pick(node: Any, tokens: Tokens) -> Any:
+def pick(node: Any, tokens: Sequence[str]) -> Any:
+    """What stands at the tokens of a decoded value; MISSING where nothing does."""
     for token in tokens:
         if isinstance(node, dict) and token in node:
             node = node[token]

@@ -22,9 +22,11 @@ from typing import Literal, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from .basis import NO_BASIS, ArrivalClock, Basis, LeastOfSources, NewestOfAll, Requests
+from strandline.core.sketch import Sketch, buckets_of
+
+from .basis import ArrivalClock, Basis, LeastOfSources, NewestOfAll, Requests
 from .intervals import order_statistics, wilks, wilson
-from .sketch import LatenessSketch
+from .leaving_out import leave_out
 from .slacks import SLACK_NS_AT_MOST, BasisName, SlackFigure, SlackFigures
 
 Int64s = NDArray[np.int64]
@@ -112,21 +114,22 @@ def advise(blocks: Blocks, span_ns: tuple[int, int], rule: Rule, wanted: Wanted)
     first, second = Part(span_ns[0], cut_ns), Part(cut_ns, span_ns[1])
     tenths = _tenths(second)
     bounds = np.array([part.from_ns for part in tenths[1:]], dtype=np.int64)
-    sketch = LatenessSketch(RELATIVE_ERROR)
+    sketch = Sketch(buckets_of(RELATIVE_ERROR))
     chosen: int | None = None
     for block, lateness in judged(blocks(), rule):
-        row = row_of(block, cut_ns)
+        row = block.first_row(cut_ns)
         sketch.add(lateness[:row])
         if row == len(lateness):
             continue
         chosen = _cut(sketch, wanted) if chosen is None else chosen
         late = lateness[row:] > chosen
-        _count(tenths, bounds, _row_instants(block)[row:], late)
+        _count(tenths, bounds, block.by_row(block.instants)[row:], late)
         second.late += int(np.count_nonzero(late))
         second.events += len(late)
-    if chosen is None or not sketch.events or not second.events:
-        raise ValueError(f"{sketch.events:,} events to choose on and {second.events:,} to verify on: one part is empty")
-    first.events, first.late = sketch.events, round(sketch.late_share(chosen).at_most * sketch.events)
+    first.events = int(sketch.total)
+    if chosen is None or not first.events or not second.events:
+        raise ValueError(f"{first.events:,} events to choose on and {second.events:,} to verify on: one part is empty")
+    first.late = round(sketch.late_share(chosen).at_most * first.events)
     return _advice(rule, wanted, first, second, tenths, sketch, chosen)
 
 
@@ -135,19 +138,13 @@ def cut_of(span_ns: tuple[int, int], learn_part: float) -> int:
     return span_ns[0] + max(1, round((span_ns[1] - span_ns[0]) * learn_part))
 
 
-def row_of(block: Requests, cut_ns: int) -> int:
-    """The first row that arrived at this instant or later."""
-    request = int(np.searchsorted(block.instants, cut_ns))
-    return int(block.starts[request]) if request < len(block.starts) else len(block.times)
-
-
 def judged(blocks: Iterator[Requests], rule: Rule) -> Iterator[tuple[Requests, Int64s]]:
     """Each block and the lateness of its events, at least 0."""
     basis = rule.begin()
     for block in blocks:
         if len(block.times):
             moves = basis.add(block)
-            yield block, np.maximum(_by_row(block, moves.before) - block.times, 0)
+            yield block, np.maximum(block.by_row(moves.before) - block.times, 0)
 
 
 def rounded_up(ns: int) -> int:
@@ -156,7 +153,7 @@ def rounded_up(ns: int) -> int:
     return -(-ns // step) * step
 
 
-def _cut(sketch: LatenessSketch, wanted: Wanted) -> int:
+def _cut(sketch: Sketch, wanted: Wanted) -> int:
     chosen = rounded_up(sketch.slack_for(wanted.late_share))
     return chosen if wanted.at_most_ns is None else min(chosen, wanted.at_most_ns)
 
@@ -176,7 +173,7 @@ def _count(tenths: list[Part], bounds: Int64s, instants: Int64s, late: NDArray[n
 
 
 def _advice(
-    rule: Rule, wanted: Wanted, first: Part, second: Part, tenths: list[Part], sketch: LatenessSketch, chosen: int
+    rule: Rule, wanted: Wanted, first: Part, second: Part, tenths: list[Part], sketch: Sketch, chosen: int
 ) -> Advice:
     share, needed = wanted.late_share, wilks(1 - wanted.late_share, wanted.confidence)
     found = wilson(second.late, second.events, wanted.confidence)
@@ -186,7 +183,7 @@ def _advice(
         verdict = "too_short"
     if binds:
         verdict = "contradiction"
-    ranks = order_statistics(sketch.events, 1 - share, wanted.confidence)
+    ranks = order_statistics(first.events, 1 - share, wanted.confidence)
     return Advice(
         wanted=wanted,
         rule=rule,
@@ -204,19 +201,9 @@ def _advice(
     )
 
 
-def _of_rank(sketch: LatenessSketch, rank: int) -> int:
+def _of_rank(sketch: Sketch, rank: int) -> int:
     place = int(np.searchsorted(np.cumsum(sketch.counts), rank))
-    return min(int(sketch.buckets.upper[place]), sketch.lateness_ns_max)
-
-
-def _by_row(block: Requests, column: Int64s) -> Int64s:
-    if len(block.starts) == len(block.times):
-        return column
-    return np.repeat(column, np.diff(block.starts, append=len(block.times)))
-
-
-def _row_instants(block: Requests) -> Int64s:
-    return _by_row(block, block.instants)
+    return min(int(sketch.buckets.upper[place]), sketch.greatest_ns)
 
 
 # ---- other slacks, and what sources have to do with it --------------------------------------------------------------
@@ -259,28 +246,26 @@ def compare(blocks: Blocks, advice: Advice, slacks_ns: Sequence[int], sources_at
     """A second pass: what other slacks would give, and which sources are to be looked at; a third one for those."""
     cut_ns, rule = advice.second.from_ns, advice.rule
     grid = sorted({*slacks_ns, advice.slack_ns})
-    figures = SlackFigures(grid, rule.basis, idle_after_ns=rule.idle_after_ns if rule.basis == "sources" else None)
-    edges = np.array(grid, dtype=np.int64)
-    late = np.zeros((2, len(grid) + 1), dtype=np.int64)
+    idle_after_ns = rule.idle_after_ns if rule.basis == "sources" else None
+    figures = SlackFigures(grid, rule.basis, idle_after_ns=idle_after_ns, sketched=False)
+    late, events = np.zeros((2, len(grid)), dtype=np.int64), np.zeros((2, 1), dtype=np.int64)
     sums = _SourceSums()
     for block in blocks():
-        if not len(block.times):
-            continue
-        instants = _row_instants(block)
-        lateness = figures.add(block.times, instants, starts=block.starts, sources=block.sources)
-        row = row_of(block, cut_ns)
-        for part, rows in enumerate((lateness[:row], lateness[row:])):
-            late[part] += np.bincount(np.searchsorted(edges, rows), minlength=len(grid) + 1)
-        sums.add(block, instants, lateness > advice.slack_ns)
-    beyond = late[:, ::-1].cumsum(axis=1)[:, ::-1][:, 1:]  # later than each slack of the grid
-    shares = beyond / late.sum(axis=1, keepdims=True)
+        for part, piece in enumerate(block.parted(cut_ns)):
+            if len(piece.times):
+                before, instants = figures.late, piece.by_row(piece.instants)
+                lateness = figures.add(piece.times, instants, starts=piece.starts, sources=piece.sources)
+                late[part] += figures.late - before
+                events[part] += len(lateness)
+                sums.add(piece, instants, lateness > advice.slack_ns)
+    shares = late / events
     alternatives = [
         Alternative(figure.slack_ns, float(shares[0, place]), float(shares[1, place]), figure)
         for place, figure in enumerate(figures.figures())
     ]
     costs = sums.chosen(sources_at_most)
     if len(sums.events) > 1:
-        _leave_out(blocks, advice, costs)
+        _say_without(blocks, advice, costs)
     return Comparison(alternatives, costs, int(np.count_nonzero(sums.events)), figures.lag_ns_mean)
 
 
@@ -317,72 +302,13 @@ class _SourceSums:
         ]
 
 
-class _Without:
-    """The feed without one source: its lateness sketch on the first part, its lag, and the source's own lateness."""
-
-    def __init__(self, source: int, advice: Advice) -> None:
-        self.source, self.advice = source, advice
-        self.sketch = LatenessSketch(RELATIVE_ERROR)
-        self.late_if_excused = 0
-        self._basis = advice.rule.begin()
-        self._lag = self._span = 0.0
-        self._last: tuple[int, int] | None = None  # instant, and where the basis stood from then on
-
-    def add(self, block: Requests) -> None:
-        """The next block of the whole feed; it has events."""
-        assert block.sources is not None
-        own = block.sources == self.source
-        others, kept = _picked(block, ~own) if own.any() else (block, np.arange(len(block.starts)))
-        before = after = np.empty(0, dtype=np.int64)
-        if len(others.times):
-            moves = self._basis.add(others)
-            before, after = moves.before, moves.after
-            lateness = np.maximum(_by_row(others, before) - others.times, 0)
-            self.sketch.add(lateness[: row_of(others, self.advice.second.from_ns)])
-        if own.any():
-            stood = np.concatenate(([NO_BASIS if self._last is None else self._last[1]], after))
-            request = np.searchsorted(kept, np.arange(len(block.starts)))  # of the others', those before it
-            late = _by_row(block, stood[request])[own] - block.times[own] > self.advice.slack_ns
-            self.late_if_excused += int(np.count_nonzero(late))
-        if len(others.times):
-            self._measure_lag(others.instants, after)
-
-    def _measure_lag(self, instants: Int64s, after: Int64s) -> None:
-        """Add the area between the arrival clock and the basis; it is taken to stand still between two requests."""
-        if self._last is not None:
-            instants = np.concatenate(([self._last[0]], instants))
-            after = np.concatenate(([self._last[1]], after))
-        spans = np.diff(instants).astype(np.float64)
-        self._lag += float(spans @ ((instants - after)[:-1] + spans / 2))
-        self._span += float(spans.sum())
-        self._last = int(instants[-1]), int(after[-1])
-
-    @property
-    def lag_ns_mean(self) -> float | None:
-        """How far the basis lies behind the arrival clock, mean over time; None where no time has passed."""
-        return self._lag / self._span if self._span else None
-
-
-def _picked(block: Requests, rows: NDArray[np.bool_]) -> tuple[Requests, Int64s]:
-    """The block with these rows only, and which of its requests are left."""
-    counts = np.add.reduceat(rows.astype(np.int64), block.starts)
-    kept = np.flatnonzero(counts)
-    starts = (np.cumsum(counts) - counts)[kept]
-    sources = None if block.sources is None else block.sources[rows]
-    return Requests(block.times[rows], starts, block.instants[kept], sources), kept
-
-
-def _leave_out(blocks: Blocks, advice: Advice, costs: list[SourceCost]) -> None:
+def _say_without(blocks: Blocks, advice: Advice, costs: list[SourceCost]) -> None:
     """Choose again without each of these sources, all of them in one pass."""
-    whole = _Without(-1, advice)
-    without = [_Without(cost.source, advice) for cost in costs]
-    for block in blocks():
-        if len(block.times):
-            for each in (whole, *without):
-                each.add(block)
-    for cost, each in zip(costs, without, strict=True):
-        if each.sketch.events:
-            cost.slack_without_ns = rounded_up(each.sketch.slack_for(advice.wanted.late_share))
-        if each.lag_ns_mean is not None and whole.lag_ns_mean is not None:
-            cost.lag_saved_ns = whole.lag_ns_mean - each.lag_ns_mean
-            cost.late_if_excused = each.late_if_excused
+    numbers, buckets = [cost.source for cost in costs], buckets_of(RELATIVE_ERROR)
+    lag, found = leave_out(blocks(), numbers, advice.rule.begin, buckets, advice.second.from_ns, advice.slack_ns)
+    for cost, without in zip(costs, found, strict=True):
+        if without.sketch.total:
+            cost.slack_without_ns = rounded_up(without.sketch.slack_for(advice.wanted.late_share))
+        if without.lag.ns_mean is not None and lag.ns_mean is not None:
+            cost.lag_saved_ns = lag.ns_mean - without.lag.ns_mean
+            cost.late_if_excused = without.late_if_excused

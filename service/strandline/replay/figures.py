@@ -15,10 +15,10 @@ from numpy.typing import NDArray
 
 from strandline.core.columns import Batch
 from strandline.core.histogram import SECONDS_NS, Histogram
+from strandline.core.sketch import buckets_of
 from strandline.core.state import State
 
 from .lines import CapturedLines
-from .sketch import Buckets
 
 Int64s = NDArray[np.int64]
 
@@ -30,7 +30,7 @@ class Holds(Histogram):
 
     def __init__(self) -> None:
         super().__init__(SECONDS_NS)
-        self.buckets = Buckets(RELATIVE_ERROR)
+        self.buckets = buckets_of(RELATIVE_ERROR)
         self.fine: Int64s = np.zeros(len(self.buckets), dtype=np.int64)
         self.greatest_ns = 0
 
@@ -109,7 +109,7 @@ def sum_up(figures: Figures, state: State, holds: Holds, before: dict[str, int])
     figures.hold_mean_ns = holds.mean_ns()
     figures.hold_p50_ns, figures.hold_p99_ns = holds.quantile_ns(0.5), holds.quantile_ns(0.99)
     figures.hold_max_ns = float(holds.greatest_ns) if holds.events else None
-    figures.slack_at_end_ns = state.slack.slack_ns
+    figures.slack_at_end_ns = state.slack_ns
 
 
 @dataclass(frozen=True, slots=True)

@@ -17,8 +17,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from strandline.core.sketch import Buckets
+
 from .basis import NO_BASIS, Moves
-from .sketch import Buckets
 
 Int64s = NDArray[np.int64]
 Levels = NDArray[np.uint8]

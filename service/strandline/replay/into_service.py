@@ -15,6 +15,7 @@ from typing import Any
 import aiohttp
 import msgspec
 
+from strandline.client_access import Caller
 from strandline.core.records import Kind
 from strandline.errors import CaptureError
 from strandline.ingest.formats import NDJSON
@@ -57,7 +58,14 @@ class _Body:
 
 
 def send(
-    capture: Capture, url: str, feed: str, *, speed: float | None, connections: int, progress: Callable[[int], object]
+    capture: Capture,
+    url: str,
+    feed: str,
+    *,
+    speed: float | None,
+    connections: int,
+    progress: Callable[[int], object],
+    caller: Caller = Caller(),  # noqa: B008 - frozen
 ) -> Sent:
     """Send every request of a capture to a feed. `speed`: so many times as fast as recorded; None: at full pace.
 
@@ -67,7 +75,7 @@ def send(
     if not capture.meta.lines:
         raise CaptureError(f"{capture.path}: it was made --without-events: there is nothing to send")
     sent = Sent()
-    sender = _Sender(f"{url.rstrip('/')}/v1/feeds/{feed}/events", sent, progress)
+    sender = _Sender(f"{url.rstrip('/')}/v1/feeds/{feed}/events", sent, progress, caller)
     try:
         asyncio.run(sender.run(_bodies(capture, speed, sent), connections))
     except* CaptureError as errors:
@@ -101,17 +109,18 @@ def _bodies(capture: Capture, speed: float | None, sent: Sent) -> Iterator[_Body
 class _Sender:
     """Keeps to the schedule on some connections."""
 
-    def __init__(self, url: str, sent: Sent, progress: Callable[[int], object]) -> None:
-        self._url, self._sent, self._progress = url, sent, progress
+    def __init__(self, url: str, sent: Sent, progress: Callable[[int], object], caller: Caller) -> None:
+        self._url, self._sent, self._progress, self._caller = url, sent, progress, caller
         self._begin = 0.0
 
     async def run(self, bodies: Iterator[_Body], connections: int) -> None:
         """Send all of them. The first error ends it."""
         self._begin = time.monotonic()
         timeout = aiohttp.ClientTimeout(total=ANSWER_WITHIN_S)
-        connector = aiohttp.TCPConnector(limit=connections)
+        connector = aiohttp.TCPConnector(limit=connections, ssl=self._caller.context or True)
         queue = self._due(bodies)
-        async with aiohttp.ClientSession(timeout=timeout, connector=connector) as session:
+        headers = self._caller.headers
+        async with aiohttp.ClientSession(timeout=timeout, connector=connector, headers=headers) as session:
             turn = asyncio.Lock()
             async with asyncio.TaskGroup() as group:
                 for _ in range(connections):

@@ -17,10 +17,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from strandline.core.columns import Batch
-from strandline.core.effects import Append, Deliver, Refuse
+from strandline.core.effects import Append, Deliver, Effect, Refuse
 from strandline.core.feed import Feed
 from strandline.core.records import (
     VERSION,
+    ActRecord,
     Cause,
     ExcuseRecord,
     Kind,
@@ -121,6 +122,20 @@ def _does_not_follow(record: Record, error: Exception) -> CaptureError:
     )
 
 
+def act_again(feed: Feed, act: ActRecord) -> list[Effect]:
+    """Have a feed do again what an operator did, at the same instant."""
+    match act.act:
+        case "drain":
+            return feed.drain(act.now_ns, 0, act.who, act.reason)
+        case "slack":
+            for_ns = 0 if act.until_ns is None else act.until_ns - act.now_ns
+            return feed.set_slack(act.slack_ns, for_ns, act.reason, act.now_ns, 0, act.who)
+        case "pause" | "resume":
+            return feed.pause(act.subject, act.act == "pause", act.reason, act.now_ns, 0, act.who)
+        case "excuse":
+            raise ValueError("an excuse has a record of its own")
+
+
 def note_places(lines: CapturedLines, block: Block, record: Record, place: int) -> None:
     """The lines of a request stand at `place` for the feed that is replayed."""
     first = block.first_line[record.request : record.request + 1]
@@ -130,8 +145,9 @@ def note_places(lines: CapturedLines, block: Block, record: Record, place: int) 
 class WhatIf:
     """The same arrivals, decided with other settings, from an empty feed that knows the sources' names.
 
-    Sinks are taken to keep up. Acts of operators and promises of sources happen again; what a restart of the service
-    meant for silent sources, too. Decoding is not done again: time, source and id are what they were.
+    Sinks are taken to keep up, so pauses mean nothing. Acts of operators (a slack set for a time too) and promises of
+    sources happen again; what a restart of the service meant for silent sources, too. Decoding is not done again: time,
+    source and id are what they were.
     """
 
     def __init__(self, capture: Capture, settings: Settings) -> None:
@@ -219,9 +235,13 @@ class WhatIf:
                 yield from self._pass(now_ns)
                 self.feed.promise(self._source(source), time_ns, now_ns, 0)
                 yield from self._final()
-            case ExcuseRecord(now_ns=now_ns, source=source, reason=reason):
+            case ExcuseRecord(now_ns=now_ns, source=source, reason=reason, who=who):
                 yield from self._pass(now_ns)
-                self.feed.excuse(self._source(source), reason, now_ns, 0)
+                self.feed.excuse(self._source(source), reason, now_ns, 0, who)
+                yield from self._final()
+            case ActRecord(now_ns=now_ns, act="slack" | "drain") as act:
+                yield from self._pass(now_ns)
+                act_again(self.feed, act)
                 yield from self._final()
             case SettingsRecord(now_ns=now_ns, resumed=True):
                 self._take_over(Kind.SETTINGS, SettingsRecord(now_ns, self.feed.state.settings, {}, True))
@@ -265,7 +285,9 @@ class WhatIf:
         if idle is not None:
             due.append(idle[0] + settings.idle_after_ns)
         if settings.clock == "arrival":
-            due.append(head_ns + state.slack.slack_ns)
+            due.append(head_ns + state.slack_ns)
+        if state.acts.slack_set is not None and state.acts.slack_set.until_ns is not None:
+            due.append(state.acts.slack_set.until_ns)
         return min(due, default=None)
 
     def _final(self) -> list[Batch]:

@@ -16,6 +16,7 @@ from strandline.core.columns import Batch, RequestKey
 from strandline.core.effects import Append, Deliver, Effect
 from strandline.core.feed import Feed
 from strandline.core.records import (
+    ActRecord,
     Cause,
     ExcuseRecord,
     KeyRecord,
@@ -35,7 +36,7 @@ from strandline.core.state import State
 from .blocks import Block, Record
 from .capture import Capture
 from .figures import Digests
-from .replaying import Folding, Progress, _quiet, fold_into
+from .replaying import Folding, Progress, _quiet, act_again, fold_into
 
 # An input leaves at most 8 records (names, a key, the arrival, twice idle and mark, and what a start writes).
 LOOK_AHEAD = 16
@@ -211,8 +212,10 @@ class Verifying:
                 return self._feed.taken(sink, lane, number, now_ns)
             case PromiseRecord(now_ns=now_ns, source=number, time_ns=time_ns):
                 return self._feed.promise(source or names[number], time_ns, now_ns, 0)
-            case ExcuseRecord(now_ns=now_ns, source=number, reason=reason):
-                return self._feed.excuse(names[number], reason, now_ns, 0)
+            case ExcuseRecord(now_ns=now_ns, source=number, reason=reason, who=who):
+                return self._feed.excuse(names[number], reason, now_ns, 0, who)
+            case ActRecord():
+                return act_again(self._feed, record)
             case SettingsRecord():
                 raise AssertionError("starts are folded")
         return []

@@ -6,18 +6,15 @@ wanted members (some 0.3 us an event of 160 bytes, for two of them); where one o
 
 from __future__ import annotations
 
-import re
 from collections.abc import Callable, Sequence
 from operator import attrgetter
 from typing import Any
 
 import msgspec
 
-from ..ingest.pointer import parse_pointer
+from ..ingest.pointer import MISSING, decoded_lines, nameable, parse_pointer, pick
 
 _OBJECT = msgspec.json.Decoder(dict[str, msgspec.Raw])
-_INDEX = re.compile("0|[1-9][0-9]{0,17}")
-_UNNAMEABLE = re.compile(r'["\\\x00-\x1f]')  # what msgspec cannot give to a field as its name
 _FAULTS = (msgspec.MsgspecError, RecursionError)
 
 
@@ -37,14 +34,14 @@ class EventFields:
         members = list(dict.fromkeys(path[0] for path in self._paths))
         self._names = {member: f"member_{number}" for number, member in enumerate(members)}
         self._decoder: msgspec.json.Decoder[Any] | None = None
-        if not any(map(_UNNAMEABLE.search, members)):
+        if all(map(nameable, members)):
             fields = [(name, Any, None) for name in self._names.values()]
             rename = {name: member for member, name in self._names.items()}
             self._decoder = msgspec.json.Decoder(msgspec.defstruct("Wanted", fields, rename=rename, gc=False))
 
     def columns(self, block: bytes, count: int) -> list[list[Any]]:
         """For each pointer the values in the block's `count` lines: None for nothing or null, UNHELD, any JSON."""
-        records = self._decoded(block, count)
+        records = self._records(block, count)
         if records is None:
             lines = block.split(b"\n")[:-1]
             return [list(column) for column in zip(*map(self._line, lines), strict=True)] or [[] for _ in self._paths]
@@ -54,17 +51,11 @@ class EventFields:
             found.append([_walk(value, path[1:]) for value in values] if len(path) > 1 else values)
         return found
 
-    def _decoded(self, block: bytes, count: int) -> list[Any] | None:
-        if self._decoder is None:
-            return None
-        try:
-            records = self._decoder.decode_lines(block)
-        except _FAULTS:
-            return None
-        return records if len(records) == count else None
+    def _records(self, block: bytes, count: int) -> list[Any] | None:
+        return None if self._decoder is None else decoded_lines(self._decoder, block, count)
 
     def _line(self, line: bytes) -> list[Any]:
-        records = self._decoded(line + b"\n", 1)
+        records = self._records(line + b"\n", 1)
         if records is not None:
             return [_walk(getattr(records[0], self._names[path[0]]), path[1:]) for path in self._paths]
         try:
@@ -87,11 +78,5 @@ def _held(raw: msgspec.Raw | None) -> Any:
 
 def _walk(node: Any, tokens: Sequence[str]) -> Any:
     """What a value holds at the rest of a path."""
-    for token in tokens:
-        if isinstance(node, dict):
-            node = node.get(token)
-        elif isinstance(node, list) and _INDEX.fullmatch(token):
-            node = node[int(token)] if int(token) < len(node) else None
-        else:
-            return node if node is UNHELD else None
-    return node
+    found = UNHELD if node is UNHELD else pick(node, tokens)
+    return None if found is MISSING else found

@@ -16,7 +16,7 @@ from typing import Annotated, Any, NamedTuple
 import msgspec
 
 from ..core.columns import Times
-from ..ingest.pointer import Tokens, parse_pointer
+from ..ingest.pointer import decoded_lines, fits_structs, parse_pointer, raw_at
 from ..ingest.timestamps import TimestampError, parse_rfc3339_column
 from .postgres_columns import Column
 
@@ -24,10 +24,6 @@ EPOCH_US = 946_684_800_000_000  # 2000-01-01, from which PostgreSQL counts micro
 NUMBER_CHARACTERS_AT_MOST = 1000  # of a decimal number in jsonb, and its exponent: PostgreSQL's numeric ends at 16,383
 
 Values = list[Any]
-_OBJECT = msgspec.json.Decoder(dict[str, msgspec.Raw])
-_ARRAY = msgspec.json.Decoder(list[msgspec.Raw])
-_INDEX = re.compile("0|[1-9][0-9]{0,17}")
-_UNNAMEABLE = re.compile(r'["\\\x00-\x1f]')  # what msgspec cannot give to a field as its name
 _NUL = re.compile(rb"(?<!\\)(?:\\\\)*\\u0000")
 _LONG_NUMBER = re.compile(rb"[0-9][eE][+-]?[0-9]{4}|[0-9.]{1000}")
 _NULL = msgspec.Raw(b"null")
@@ -200,7 +196,7 @@ class Fields:
         through = any(path != other and other[: len(path)] == path for path in paths for other in paths)
         if through or () in paths or len(paths) < len(self._tokens):
             return None
-        if any(_INDEX.fullmatch(token) or _UNNAMEABLE.search(token) for path in paths for token in path):
+        if not fits_structs(token for path in paths for token in path):
             return None
         tree: dict[str, Any] = {}
         for index, tokens in enumerate(self._tokens):
@@ -223,13 +219,8 @@ class Fields:
         return msgspec.defstruct("Wanted", fields, rename=rename, gc=False)
 
     def _fast(self, block: bytes, count: int) -> list[Values] | None:
-        if self._decoder is None:
-            return None
-        try:
-            records = self._decoder.decode_lines(block)
-        except (msgspec.MsgspecError, RecursionError):
-            return None
-        if len(records) != count:
+        records = None if self._decoder is None else decoded_lines(self._decoder, block, count)
+        if records is None:
             return None
         return [self._along(records, self._paths[index]) for index in range(len(self.columns))]
 
@@ -252,8 +243,9 @@ class Fields:
 
     def _slow(self, line: bytes, index: int) -> Any:
         try:
-            raw = _find(line, self._tokens[index])
-            return None if raw is None or raw == b"null" else self._types[index].slow(raw)
+            found = raw_at(line, self._tokens[index])
+            raw = b"null" if found is None else bytes(found)
+            return None if raw == b"null" else self._types[index].slow(raw)
         except (msgspec.MsgspecError, RecursionError, TimestampError):
             return UNFIT
 
@@ -265,21 +257,3 @@ def _paths(tree: dict[str, Any], above: tuple[str, ...] = ()) -> dict[int, tuple
         here = (*above, f"field_{number}")
         paths |= _paths(leaf, here) if isinstance(leaf, dict) else {leaf: here}
     return paths
-
-
-def _find(line: bytes, tokens: Tokens) -> bytes | None:
-    """The JSON that stands at a pointer; None where nothing does. Raises msgspec.DecodeError, RecursionError."""
-    node: bytes = line
-    for token in tokens:
-        first = node[:1]
-        if first == b"{":
-            found = _OBJECT.decode(node).get(token)
-        elif first == b"[" and _INDEX.fullmatch(token):
-            items = _ARRAY.decode(node)
-            found = items[int(token)] if int(token) < len(items) else None
-        else:
-            found = None
-        if found is None:
-            return None
-        node = bytes(found)
-    return node

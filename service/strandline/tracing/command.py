@@ -1,0 +1,235 @@
+"""The work of `strandline trace`: ask the service, or read its folder where it is down, and say what was found."""
+
+from __future__ import annotations
+
+import argparse
+import http.client
+import json
+import os
+import sys
+import urllib.error
+import urllib.request
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any
+from urllib.parse import quote, urlencode
+
+from ..cli_answers import DEFAULT_FILE, FINE, NO, NOT_REACHED, WRONG_USE, complain, harmless
+from ..cli_lanes import lanes_path
+from ..cli_progress import bar
+from ..cli_trace import URL
+from ..client_access import caller_of
+from ..config import Config, load
+from ..errors import ConfigError, JournalError, StrandlineError
+from ..journal.disk import LocalDisk
+from ..journal.journal import Journal
+from .answer import document_of
+from .budget import Budget
+from .question import LineReader, Question, QuestionError, question_of
+from .trace import OFFLINE_BYTES_AT_MOST, OPENINGS, trace
+from .words import because
+
+WITHIN_S = 600.0
+ANSWER_BYTES_AT_MOST = 16 << 20
+ANY_HOST = ("0.0.0.0", "::", "")
+MEGABYTE = 1_000_000
+
+Json = dict[str, Any]
+
+
+class _Refused(Exception):
+    """The service answered, but not with a trace."""
+
+    def __init__(self, code: int, detail: str) -> None:
+        super().__init__(detail)
+        self.code = code
+
+
+class _Unreachable(Exception):
+    """Nothing answered."""
+
+
+def command(options: argparse.Namespace) -> int:
+    """Trace what was asked for: 0 found, 1 not found, 2 wrong use, 3 neither service nor folder could be reached."""
+    try:
+        document = _document(options)
+    except _Refused as refused:
+        complain(harmless(str(refused)))
+        return WRONG_USE if refused.code in (400, 404) else NOT_REACHED
+    except _Unreachable as error:
+        hint = "is the service running there? Name it with --url, or its folder with --data-dir"
+        complain(f"{harmless(str(error))}; {hint}")
+        return NOT_REACHED
+    if options.json:
+        sys.stdout.write(json.dumps(document) + "\n")
+    else:
+        sys.stdout.write("".join(f"{harmless(line)}\n" for line in told(document)))
+    return FINE if document["found"] else NO
+
+
+def _document(options: argparse.Namespace) -> Json:
+    if options.data_dir is not None:
+        return _offline(options, None)
+    file: Path | None = options.config
+    if file is None and options.url is None and DEFAULT_FILE.exists():
+        file = DEFAULT_FILE
+    config = None if file is None else load(file, os.environ)
+    url = options.url or (URL if config is None else url_of(config))
+    if url is None:  # the free port that it got is not written down
+        return _offline(options, config)
+    try:
+        return _asked(options, url)
+    except _Unreachable as error:
+        if config is None:
+            raise
+        complain(f"{harmless(str(error))}; reading {config.data_dir} instead")
+    options.config = file
+    return _offline(options, config)
+
+
+def url_of(config: Config) -> str | None:
+    """Where the service of a configuration listens; None where it takes any free port."""
+    listen = config.listen
+    if listen.port == 0:
+        return None
+    host = "127.0.0.1" if listen.host in ANY_HOST else listen.host
+    scheme = "http" if config.tls.certificate is None else "https"
+    return f"{scheme}://[{host}]:{listen.port}" if ":" in host else f"{scheme}://{host}:{listen.port}"
+
+
+def _asked(options: argparse.Namespace, url: str) -> Json:
+    """The service's answer. Raises _Refused, _Unreachable, ConfigError."""
+    given = {name: getattr(options, name) for name in ("id", "time", "source") if getattr(options, name) is not None}
+    try:
+        query = urlencode(given, errors="strict")
+        address = f"{url.rstrip('/')}/v1/feeds/{quote(options.feed, safe='')}/trace?{query}"
+    except UnicodeEncodeError as error:
+        raise ConfigError([f"{error.object!a} is not UTF-8"]) from None
+    shown = caller_of(options, url, os.environ)
+    try:
+        request = urllib.request.Request(address)
+        for name, value in shown.headers.items():
+            request.add_unredirected_header(name, value)  # a token goes nowhere else
+        with urllib.request.urlopen(request, timeout=WITHIN_S, context=shown.context) as answer:
+            document = json.loads(answer.read(ANSWER_BYTES_AT_MOST))
+        return dict(document)
+    except urllib.error.HTTPError as error:
+        raise _Refused(error.code, _detail(error)) from None
+    except (OSError, http.client.HTTPException, ValueError, TypeError) as error:
+        raise _Unreachable(f"{url} could not be reached: {error}") from None
+
+
+def _detail(error: urllib.error.HTTPError) -> str:
+    try:
+        return str(json.loads(error.read(ANSWER_BYTES_AT_MOST))["detail"])
+    except (ValueError, LookupError, TypeError):
+        return f"the service answered {error.code} {error.reason}"
+
+
+# ---- without a service ----------------------------------------------------------------------------------------------
+
+
+def _offline(options: argparse.Namespace, config: Config | None) -> Json:
+    """From the folder. Raises StrandlineError, OSError, ConfigError."""
+    reader = None
+    if config is not None:
+        options.data_dir = None
+        feed = config.feed(options.feed)
+        reader = None if feed is None else LineReader.of(feed)
+    lanes = lanes_path(options)
+    try:
+        question = question_of(options.feed, reader, options.id, options.time, options.source)
+    except QuestionError as error:
+        raise ConfigError([str(error)]) from None
+    for attempt in range(OPENINGS):
+        try:
+            return _read(question, lanes)
+        except FileNotFoundError:  # a service that runs after all deleted a segment meanwhile
+            if attempt == OPENINGS - 1:
+                raise
+    raise AssertionError("the last attempt returns or raises")
+
+
+def _read(question: Question, lanes: Path) -> Json:
+    journal = _opened(lanes.parent)
+    try:
+        size = max(1, (journal.durable_lsn - journal.first_lsn) // MEGABYTE)
+        with bar("journal read", "MB", size) as tell:
+            budget = Budget(OFFLINE_BYTES_AT_MOST, lambda: False, tell=lambda read: tell(min(read // MEGABYTE, size)))
+            found = trace(journal, question, lanes, budget)
+        return document_of(found)
+    finally:
+        journal.close()
+
+
+def _opened(folder: Path) -> Journal:
+    disk = LocalDisk(folder.parent, read_only=True)
+    for attempt in range(OPENINGS):  # a service that runs after all may begin or delete a segment meanwhile
+        try:
+            journal = Journal.open(disk, folder.name, read_only=True)
+        except JournalError:
+            if attempt == OPENINGS - 1:
+                raise
+            continue
+        if journal.durable_lsn == journal.first_lsn == 0:
+            raise StrandlineError(f"{folder}: there is no journal in it, or nothing in the journal yet")
+        return journal
+    raise AssertionError("the last attempt returns or raises")
+
+
+# ---- for a person ---------------------------------------------------------------------------------------------------
+
+
+def told(document: Json) -> Iterator[str]:
+    """The answer in lines."""
+    matches = document["matches"]
+    for number, match in enumerate(matches, 1):
+        if number > 1:
+            yield ""
+        count = "" if len(matches) == 1 else f"{number} of {len(matches)}: "
+        source = "" if match["source"] is None else f" from {match['source']}"
+        yield f"{count}{match['fate']}: event of {match['time'] or 'no readable time'}{source}"
+        yield f"  {match['explanation']}"
+        yield from (f"  {name:<10} {text}" for name, text in _rows(match))
+    if not matches:
+        yield f"no event of feed {document['feed']} with {_question(document['asked'])} was found"
+        yield f"  searched   {_searched(document['searched'])}"
+    yield from (f"note: {note}" for note in document["notes"])
+
+
+def _rows(match: Json) -> Iterator[tuple[str, str]]:
+    arrival = match["arrival"]
+    if arrival["position"] is None:
+        yield "arrived", f"{arrival['arrived']}; its request is no longer in the journal"
+    else:
+        key = "" if arrival["idempotency_key"] is None else f", Idempotency-Key {arrival['idempotency_key']}"
+        of = f"line {arrival['line']} of the request at position {arrival['position']} with {arrival['events']:,} lines"
+        yield "arrived", f"{arrival['arrived']}, {of}{key}"
+        stood = match["watermark"]
+        yield "watermark", (
+            "none stood then, as far as is known" if stood is None
+            else f"stood at {stood['at']} then, since {stood['since']}, because {because(stood)}"
+        )  # fmt: skip
+    if match["fate"] == "held":
+        held = match["held"]
+        behind = f"behind {held['before_it']:,} of its {held['run_events']:,} events"
+        yield "run", f"{held['run']} of {held['runs']}, {behind}"
+    for sink, each in match.get("sinks", {}).items():
+        detail = "" if each["detail"] is None else f": {each['detail']}"
+        yield "sink", f"{sink}: {each['state']} (has taken up to batch {each['taken_up_to_batch']:,}){detail}"
+    for sink, each in match.get("repairs", {}).items():
+        yield "repairs", f"{sink}: {'sent' if each['sent'] else 'not sent yet'}"
+    yield "event", match["event"]
+
+
+def _question(asked: Json) -> str:
+    what = f"id {asked['id']}" if asked["id"] is not None else f"time {asked['time']}"
+    return what if asked["source"] is None else f"{what} of source {asked['source']}"
+
+
+def _searched(searched: Json) -> str:
+    since = "" if searched["arrived_from"] is None else f", which arrived since {searched['arrived_from']}"
+    return (
+        f"the journal from position {searched['from_position']} to {searched['to_position']}{since}; "
+        f"{searched['bytes_read']:,} bytes were read"
+    )
