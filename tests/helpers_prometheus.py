@@ -119,7 +119,8 @@ async def _answer(reader: asyncio.StreamReader) -> tuple[int, str]:
     return int(head[0].split(" ")[1]), text.decode()
 
 
-def _free_port() -> int:
+def free_port() -> int:
+    """A port that nobody listens on now."""
     with socket.socket() as held:
         held.bind(("127.0.0.1", 0))
         return int(held.getsockname()[1])
@@ -154,13 +155,18 @@ def _ready(process: subprocess.Popen[bytes], port: int) -> bool:
 
 
 @contextmanager
-def prometheus(folder: Path, window: str | None = None, port: int | None = None) -> Iterator[Receiver]:
-    """A server over the store in `folder`; with its own `window` for samples out of order ("5s") if one is named."""
+def prometheus(
+    folder: Path, window: str | None = None, port: int | None = None, scrape: str = "scrape_configs: []\n"
+) -> Iterator[Receiver]:
+    """A server over the store in `folder`; with its own `window` for samples out of order ("5s") if one is named.
+
+    `scrape` is the rest of its configuration: what it scrapes, by which rules.
+    """
     folder.mkdir(parents=True, exist_ok=True)
     tsdb = f"storage: {{ tsdb: {{ out_of_order_time_window: {window} }} }}\n" if window else ""
-    (folder / "prometheus.yml").write_text(f"scrape_configs: []\n{tsdb}")
+    (folder / "prometheus.yml").write_text(f"{scrape}{tsdb}")
     for _ in range(STARTS_AT_MOST):
-        chosen = port or _free_port()
+        chosen = port or free_port()
         process = _begin(folder, chosen)
         try:
             if _ready(process, chosen):

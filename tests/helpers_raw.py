@@ -24,7 +24,7 @@ class Reply:
 
 def post(body: bytes, path: str = f"/v1/feeds/{FEED}/events", **headers: str) -> bytes:
     """A request with a body of stated length; `headers` with _ for -, an empty one left out."""
-    fields = {"host": "a", "content-type": NDJSON, "content-length": str(len(body))}
+    fields = {"host": "localhost", "content-type": NDJSON, "content-length": str(len(body))}
     fields |= {name.replace("_", "-"): value for name, value in headers.items()}
     lines = [f"{name}: {value}\r\n" for name, value in fields.items() if value]
     return f"POST {path} HTTP/1.1\r\n{''.join(lines)}\r\n".encode("latin-1") + body
@@ -36,7 +36,7 @@ def chunked(pieces: Iterable[bytes]) -> bytes:
 
 
 # Who answers this closes the connection.
-LAST = b"GET /health/live HTTP/1.1\r\nhost: a\r\nconnection: close\r\n\r\n"
+LAST = b"GET /health/live HTTP/1.1\r\nhost: localhost\r\nconnection: close\r\n\r\n"
 
 
 async def exchange(host: str, port: int, pieces: Sequence[bytes]) -> bytes:

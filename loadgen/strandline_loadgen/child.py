@@ -82,6 +82,12 @@ class ChildServer:
         except TimeoutError:
             raise ServiceTrouble(f"the service was not ready in {READY_S_AT_MOST:g} s:\n{self.last_words()}") from None
 
+    @property
+    def process_id(self) -> int:
+        """Of the child, while it runs."""
+        assert self._process is not None
+        return self._process.pid
+
     async def look(self, feed: str) -> dict[str, Any] | None:
         """What the service says of the feed; None while it does not answer."""
         return await self._get(f"/v1/feeds/{feed}")

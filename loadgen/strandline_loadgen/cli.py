@@ -12,6 +12,8 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
+from strandline.cli_values import add_access
+
 from .exits import FINE, INTERRUPTED, NO, NOT_REACHED, WRONG_USE
 
 
@@ -85,6 +87,7 @@ def _add_send(commands: Any) -> None:
     command.add_argument("--connections", type=int, default=4, help="at the same time (%(default)s)")
     command.add_argument("--encodings", default="identity", help="identity, gzip, zstd: one or several, taken in turn")
     command.add_argument("--seconds-at-most", type=float, default=600.0, help="stop after this (%(default)s)")
+    add_access(command)
     command.add_argument("--anywhere", action="store_true", help="allow a service on another machine")
     command.add_argument("--json", action="store_true", help="the result as JSON, for programs")
     command.set_defaults(command=_send)

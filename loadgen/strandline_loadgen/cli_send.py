@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import argparse
 import asyncio
+import os
 import sys
 import time
 from collections.abc import Sequence
@@ -11,6 +12,8 @@ from typing import Any
 
 import msgspec
 import numpy as np
+from strandline.client_access import Caller, caller_of
+from strandline.errors import ConfigError
 
 from .bodies import Style, bodies, cut_by_count, cut_by_window
 from .driver import Delivery, Schedule, Target, as_arrived, at_once, every, send
@@ -31,6 +34,7 @@ def send_shape(options: argparse.Namespace) -> int:
         seconds_at_most=options.seconds_at_most,
         keys=f"send-{time.time_ns()}",
         anywhere=options.anywhere,
+        caller=_caller(options),
     )
     trace = shape(options.shape, options.events, options.seed, **_parameters(options.shape, options.given))
     if len(trace):  # what leaves as it arrives begins now, what leaves otherwise has just arrived
@@ -45,6 +49,13 @@ def send_shape(options: argparse.Namespace) -> int:
     if result["answered"] == result["bodies"]:
         return FINE
     return NO if result["answered"] or not done.resent else NOT_REACHED
+
+
+def _caller(options: argparse.Namespace) -> Caller:
+    try:
+        return caller_of(options, options.url, os.environ)
+    except ConfigError as error:
+        raise ValueError(str(error)) from None
 
 
 def _parameters(name: str, given: Sequence[str]) -> dict[str, Any]:

@@ -24,6 +24,7 @@ import msgspec
 import numpy as np
 import zstandard
 from numpy.typing import NDArray
+from strandline.client_access import Caller
 from yarl import URL
 
 from .bodies import Body
@@ -92,6 +93,7 @@ class Target:
     wait_s_at_most: float = 10.0  # a longer Retry-After is cut to this
     keys: str = "load"  # Idempotency-Keys begin with this; two senders to one feed need two
     anywhere: bool = False
+    caller: Caller = Caller()  # noqa: RUF009 - frozen; a token, and whom to trust
 
     def __post_init__(self) -> None:
         unknown = [encoding for encoding in self.encodings if encoding not in COMPRESSIONS]
@@ -175,8 +177,12 @@ class _Sender:
 
     async def run(self, bodies: Iterable[Body]) -> Delivery:
         """Everything, from the first body to the last answer."""
-        limits = aiohttp.TCPConnector(limit=self._target.connections)
-        async with aiohttp.ClientSession(connector=limits) as session, asyncio.TaskGroup() as tasks:
+        caller = self._target.caller
+        limits = aiohttp.TCPConnector(limit=self._target.connections, ssl=caller.context or True)
+        async with (
+            aiohttp.ClientSession(connector=limits, headers=caller.headers) as session,
+            asyncio.TaskGroup() as tasks,
+        ):
             tasks.create_task(self._feed(bodies))
             for _ in range(self._target.connections):
                 tasks.create_task(self._work(session))

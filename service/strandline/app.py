@@ -1,7 +1,7 @@
 """The service: feeds, HTTP and signals put together, and the written order of a stop.
 
 Nothing is decided here about events. Start: read every journal, connect the sinks, then listen. Stop (SIGTERM, SIGINT):
-stop accepting; answer those who wait on a sync; deliver within `drain_at_most`; save and close. A second signal stops
+take nothing more from brokers; stop accepting; answer those who wait on a sync; deliver within `drain_at_most`; save and close. A second signal stops
 at once: the journal has everything that was answered. SIGHUP reads the whole configuration again, and swaps it or keeps
 the old one and says why.
 """
@@ -13,29 +13,38 @@ import contextlib
 import logging
 import os
 import signal
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
+from functools import partial
 from pathlib import Path
 
 import msgspec
 from aiohttp import web
 from prometheus_client.aiohttp import make_aiohttp_handler
 
-from . import lane_acts, observe, openapi
+from . import acting, lane_acts, notify, observe, openapi
+from .access_gate import Gate, prepare, reach
 from .clock import SystemClock
 from .config import Address, Config, load
 from .connections import Connections, make_room_for
+from .dashboard import live
 from .errors import StrandlineError
+from .hold_answer import get_acts, get_holds
 from .ingest import endpoint
 from .ingest.endpoint import ASIDE, BODIES, CONFIG, FEEDS
 from .ingest.offload import Aside
+from .intake.starting import Intakes
 from .journal.disk import LocalDisk
 from .metrics import make_registry
 from .ports import Clock, Disk
 from .problems import as_problems
+from .reporting.http import install as install_reports
+from .resting import Beats
 from .runtime import FeedRuntime
 from .sinks import make_sink
 from .sinks_of import MakeSink
 from .slack_answer import get_slack
+from .tls import TlsListener
+from .tracing.http import TRACES, Traces, close_traces, get_trace
 
 log = logging.getLogger("strandline")
 TICK_S = 0.25
@@ -46,19 +55,22 @@ EXIT_FAILED = 3
 EXIT_AT_ONCE = 130
 
 
-def make_app(config: Config, feeds: dict[str, FeedRuntime]) -> web.Application:
+def make_app(config: Config, feeds: dict[str, FeedRuntime], gate: Gate) -> web.Application:
     """The HTTP application over feeds that are open."""
-    app = web.Application(middlewares=[as_problems])
+    app = web.Application(middlewares=[as_problems, gate.let_in])
     app[FEEDS], app[CONFIG] = feeds, config
     app[BODIES] = asyncio.Semaphore(config.limits.bodies_at_most)
-    app[ASIDE] = Aside()
-    app.on_cleanup.append(_close_aside)
+    app[ASIDE], app[TRACES] = Aside(), Traces()
+    app.on_cleanup.extend([_close_aside, close_traces])
     app.add_routes(
         [
             web.post("/v1/feeds/{feed}/events", endpoint.post_events),
             web.post("/v1/feeds/{feed}/marks", endpoint.post_marks),
-            web.post("/v1/feeds/{feed}/excuse", endpoint.post_excuse),
-            web.post("/v1/feeds/{feed}/drain", endpoint.post_drain),
+            web.post("/v1/feeds/{feed}/excuse", acting.post_excuse),
+            web.post("/v1/feeds/{feed}/drain", acting.post_drain),
+            web.post("/v1/feeds/{feed}/slack", acting.post_slack),
+            web.post("/v1/feeds/{feed}/sinks/{sink}/pause", acting.post_pause),
+            web.post("/v1/feeds/{feed}/sinks/{sink}/resume", acting.post_resume),
             web.post("/v1/feeds/{feed}/late/resend", lane_acts.post_late_resend),
             web.post("/v1/feeds/{feed}/refused/resend", lane_acts.post_refused_resend),
             web.post("/v1/feeds/{feed}/quarantine/redrive", lane_acts.post_quarantine_redrive),
@@ -66,6 +78,9 @@ def make_app(config: Config, feeds: dict[str, FeedRuntime]) -> web.Application:
             web.get("/v1/feeds/{feed}", observe.get_feed),
             web.get("/v1/feeds/{feed}/sources", observe.get_sources),
             web.get("/v1/feeds/{feed}/slack", get_slack),
+            web.get("/v1/feeds/{feed}/holds", get_holds),
+            web.get("/v1/feeds/{feed}/acts", get_acts),
+            web.get("/v1/feeds/{feed}/trace", get_trace),
             web.get("/v1/feeds/{feed}/late", observe.get_late),
             web.get("/v1/feeds/{feed}/quarantine", observe.get_quarantine),
             web.get("/v1/feeds/{feed}/refused", observe.get_refused),
@@ -77,6 +92,8 @@ def make_app(config: Config, feeds: dict[str, FeedRuntime]) -> web.Application:
             web.get("/openapi.json", _get_openapi),
         ]
     )
+    live.install(app)
+    install_reports(app)
     return app
 
 
@@ -108,11 +125,15 @@ class Service:
         self.feeds: dict[str, FeedRuntime] = {}
         self.stopping = asyncio.Event()
         self.failure: str | None = None
+        self.on_ticked: Callable[[], None] | None = None  # called each time that every feed's tick has come back
         self.address = config.listen
         self._runner: web.AppRunner | None = None
-        self._listener: asyncio.Server | None = None
+        self._listener: asyncio.Server | TlsListener | None = None
+        self._gate: Gate | None = None
+        self._beyond: list[str] = []  # what `access_gate.reach` found
         self._ticker: asyncio.Task[None] | None = None
         self._stopped = False
+        self._intakes = Intakes()
 
     async def start(self) -> None:
         """Open every feed, then listen. What was begun is undone where that fails or is cancelled."""
@@ -122,7 +143,14 @@ class Service:
             await self.stop()
             raise
 
+    @property
+    def url(self) -> str:
+        """Where it listens."""
+        return f"{'http' if self.config.tls.certificate is None else 'https'}://{self.address}"
+
     async def _start(self) -> None:
+        self._beyond = await reach(self.config)
+        self._gate = Gate(prepare(self.config, self._beyond, self.clock.now_ns()), self.clock)
         self._folder.lock("lock")
         for feed in self.config.feeds:
             folder = self.config.feed_dir(feed)
@@ -130,26 +158,33 @@ class Service:
             self.feeds[feed.name] = runtime
             await runtime.open()
         self._ticker = asyncio.create_task(self._tick())
-        app = make_app(self.config, self.feeds)
+        app = make_app(self.config, self.feeds, self._gate)
         app.on_shutdown.append(self._hush)
-        await self._listen(app)
-        log.info("listening on http://%s", self.address)
+        await self._listen(app, self._gate)
+        self._intakes.start(self.feeds.values())
+        log.info("listening on %s", self.url)
 
-    async def _listen(self, app: web.Application) -> None:
+    async def _listen(self, app: web.Application, gate: Gate) -> None:
         limits, listen = self.config.limits, self.config.listen
         # A client that is gone ends its handler.
         self._runner = web.AppRunner(app, handler_cancellation=True, shutdown_timeout=SHUTDOWN_WITHIN_S)
         await self._runner.setup()
         server = self._runner.server
         assert server is not None
+        room = make_room_for(limits.connections_at_most)
         connections = Connections(
             server,
-            make_room_for(limits.connections_at_most),
+            room,
             access_log=None,
             auto_decompress=False,  # bodies are decompressed by our own code, within limits
             keepalive_timeout=limits.idle_connection_within_ns / 1e9,
             lingering_time=LINGER_S,
         )
+        if gate.standing.context is not None:
+            secured = TlsListener(connections, gate.context, lambda: len(server.connections), room)
+            self._listener = secured
+            self.address = Address(listen.host, await secured.start(listen.host, listen.port, BACKLOG))
+            return
         loop = asyncio.get_running_loop()
         self._listener = await loop.create_server(connections, listen.host, listen.port, backlog=BACKLOG)
         self.address = Address(listen.host, int(self._listener.sockets[0].getsockname()[1]))
@@ -169,17 +204,25 @@ class Service:
             self._ticker.cancel()
             with contextlib.suppress(asyncio.CancelledError):
                 await self._ticker
+        await self._intakes.stop(limit_s)
         await asyncio.gather(*(runtime.close(limit_s) for runtime in self.feeds.values()))
         if self._listener:
             self._listener.close()
+        if isinstance(self._listener, TlsListener):
+            await self._listener.wait_closed()
         if self._runner:
             await self._runner.cleanup()
         self._folder.close()
 
+    @property
+    def listening(self) -> bool:
+        """Whether it has started and was not told to stop."""
+        return self._listener is not None and not self.stopping.is_set()
+
     def reload(self, path: Path | None, environ: Mapping[str, str]) -> bool:
         """Read the configuration again; whether it was taken over. One fixed key keeps all as it was."""
         try:
-            if self._runner is None or self._stopped:
+            if self._runner is None or self._gate is None or self._stopped:
                 raise StrandlineError("the service is starting or stopping")
             if path is None:
                 raise StrandlineError("the service was started without a file")
@@ -188,12 +231,13 @@ class Service:
                 raise StrandlineError(f"{', '.join(fixed)} can only change with a restart")
             if full := [feed.name for feed in config.feeds if not self.feeds[feed.name].has_headroom(feed)]:
                 raise StrandlineError(f"the disk has no room to note it in the journal of {', '.join(full)}")
+            standing = prepare(config, self._beyond, self.clock.now_ns())
         except (StrandlineError, OSError) as error:
             log.error("the configuration stays as it was: %s", error)
             return False
         for feed in config.feeds:
             self.feeds[feed.name].reconfigure(feed)
-        self.config = config
+        self.config, self._gate.standing = config, standing
         log.info("the configuration was read again and is in force")
         return True
 
@@ -203,23 +247,28 @@ class Service:
         self.stopping.set()
 
     async def _tick(self) -> None:
+        beats = Beats()
         while True:
             await asyncio.sleep(TICK_S)
-            for name, runtime in self.feeds.items():
+            for name, runtime in beats.due(self.feeds.items()):
                 try:
                     runtime.tick()
                 except Exception as error:  # else the ticks of all feeds would end, and nobody would be told
                     log.exception("an unforeseen error in a tick")
                     self._failed(name, error)
+            if self.on_ticked is not None and self.failure is None:
+                self.on_ticked()
 
 
 def fixed_changes(old: Config, new: Config) -> list[str]:
     """Keys that differ and that a running service cannot change."""
     found = [key for key in ("listen", "data_dir", "limits") if getattr(old, key) != getattr(new, key)]
+    if (old.tls.certificate is None) != (new.tls.certificate is None):
+        found.append("whether there is TLS")
     if [feed.name for feed in old.feeds] != [feed.name for feed in new.feeds]:
         return [*found, "the list of feeds"]
     for before, after in zip(old.feeds, new.feeds, strict=True):
-        keys = ("time", "source", "id", "journal", "sinks")
+        keys = ("time", "source", "id", "journal", "sinks", "intakes")
         found += [f"{key} of feed {after.name}" for key in keys if getattr(before, key) != getattr(after, key)]
     return found
 
@@ -254,10 +303,14 @@ async def serve(service: Service, config_path: Path | None = None) -> int:
 
     for number in (signal.SIGTERM, signal.SIGINT):
         loop.add_signal_handler(number, on_signal)
-    loop.add_signal_handler(signal.SIGHUP, service.reload, config_path, os.environ)
+    reload = partial(service.reload, config_path, os.environ)
+    loop.add_signal_handler(signal.SIGHUP, lambda: notify.reloading(reload) if service.listening else reload())
+    service.on_ticked = notify.Watchdog().beat
     if await _started(service):
-        print(f"listening on http://{service.address}", flush=True)
+        print(f"listening on {service.url}", flush=True)
+        notify.tell("READY=1")
     await service.stopping.wait()
+    notify.tell("STOPPING=1")
     await service.stop()
     log.info("stopped")
     return EXIT_FAILED if service.failure else 0

@@ -14,8 +14,9 @@ from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any
 
+from . import cli_holds, cli_report, cli_token, cli_trace
 from .cli_answers import DEFAULT_FILE, FINE, INTERRUPTED, NOT_REACHED, WRONG_USE, chosen_file, complain
-from .cli_values import amount, connections, hold, pace, recorded_seconds
+from .cli_values import add_access, amount, connections, hold, pace, recorded_seconds
 from .errors import FAULT_REASONS, ConfigError, StrandlineError
 
 NARROW: dict[str, dict[str, Any]] = {
@@ -70,6 +71,10 @@ def parser() -> argparse.ArgumentParser:
     _add_lane(commands, "late", "events that came too late to be put in order", "late event", "source")
     _add_lane(commands, "quarantine", "lines that could not be events of their feed", "line in quarantine", "reason")
     _add_lane(commands, "refused", "events of batches that a sink refused for good", "refused event", "sink")
+    cli_holds.add(commands)
+    cli_report.add(commands)
+    cli_trace.add(commands)
+    cli_token.add(commands)
     return top
 
 
@@ -164,6 +169,7 @@ def _add_capture(commands: Any) -> None:
     capture.add_argument("--source", metavar="POINTER", help="where an event names its source")
     capture.add_argument("--id", metavar="POINTER", help="where an event carries its id")
     capture.add_argument("--json", action="store_true", help="the answer as one JSON object")
+    add_access(capture)
 
 
 def _add_replay(commands: Any) -> None:
@@ -190,6 +196,7 @@ def _add_replay(commands: Any) -> None:
     replay.add_argument("--expect-hold-p99", type=hold, metavar="TIME", help="99 in 100 are held so long at most: 5s")
     replay.add_argument("--expect-peak-held", type=amount, metavar="N", help="events held at one time at most: 2e6")
     replay.add_argument("--json", action="store_true", help="the answer as one JSON object")
+    add_access(replay)
 
 
 def _add_advise(commands: Any) -> None:
@@ -208,6 +215,8 @@ def _add_advise(commands: Any) -> None:
     advise.add_argument("--sources", type=count, default=4, metavar="N", help="sources to look at (default: 4)")
     advise.add_argument("--quick", action="store_true", help="only the choice: no other slacks, no sources")
     advise.add_argument("--reordering", action="store_true", help="figures of RFC 4737 and RFC 5236 as well")
+    advise.add_argument("--sequence", metavar="POINTER", help="where events are numbered: what was lost, and what late")
+    advise.add_argument("--report", type=Path, action="append", metavar="FILE", help="as FILE.html or FILE.png")
     advise.add_argument("--json", action="store_true", help="the answer as one JSON object")
 
 
@@ -256,6 +265,7 @@ def _add_again(acts: Any, lane: str, things: str, narrow: str) -> None:
     again.add_argument("--through", type=int, default=2**63 - 1, metavar="NUMBER", help="up to and including this one")
     again.add_argument("--url", default="http://127.0.0.1:8600", help="the service (default: http://127.0.0.1:8600)")
     again.add_argument("--json", action="store_true", help="the answer as JSON")
+    add_access(again)
     if act == "resend":
         again.add_argument("--sink", required=True, metavar="NAME", help="the sink, which must take repairs")
     else:

@@ -1,6 +1,7 @@
 """`strandline advise`: how long to wait, chosen on the first part of a capture and verified on the rest.
 
-The choice itself lives in `replay.advice`; here are what was asked for, and how the answer looks.
+The choice itself lives in `replay.advice`; here are what was asked for, and the answer as plain values. How it reads
+is in `cli_advice_text`, the report in `replay.report`.
 """
 
 from __future__ import annotations
@@ -9,44 +10,48 @@ import argparse
 import sys
 import time
 from collections.abc import Iterator, Sequence
-from dataclasses import asdict
+from dataclasses import asdict, dataclass, replace
+from pathlib import Path
 from typing import Any
 
 import msgspec
 import numpy as np
 
-from .cli_answers import FINE, NO, complain, harmless, write_table
+from .cli_advice_text import write_advice
+from .cli_answers import FINE, NO, complain
 from .cli_progress import bar
-from .config_units import duration_text
 from .core.settings import Settings
 from .errors import ConfigError
-from .ingest.timestamps import format_rfc3339
 from .replay.advice import LEARN_PART, VERDICTS, Advice, Comparison, Rule, Wanted, advise, compare, rounded_up
 from .replay.basis import Requests
 from .replay.capture import Capture
+from .replay.patterns import Patterns, patterns
+from .replay.pictures import pictures_of, png, require_matplotlib
 from .replay.reorder_figures import reorder_figures
 from .replay.requests import CapturedRequests
+from .replay.sequence import name_of, read_numbers, sequence_figures
+from .replay.slacks import SLACK_NS_AT_MOST
+from .replay.wording import spelled
 
 GOOD = ("shown", "open")
 REORDER_EVENTS_AT_MOST = 2_000_000  # the first ones of a longer capture; some 300 bytes each
 REORDER_THRESHOLD = 10_000  # of RFC 5236: what is displaced by more counts as lost there
 SECOND_NS = 1_000_000_000
-HEADINGS = ("slack", "late, first part", "late, second part", "hold mean", "hold p99", "held mean", "held peak", "")
-SOURCE_HEADINGS = (
-    *("source", "events", "late", "mean delay"),
-    *("slack without it", "watermark nearer without it", "late if excused"),
-)
+CURVE_STEPS = range(-16, 9)  # eighths of a power of ten around the slack chosen, for the report
+SOURCES_PICTURED = 64  # some 17 kB of counts each
+REPORTS = (".html", ".png")
 
 
 def advise_on(options: argparse.Namespace) -> int:
     """Say how long to wait. Exit code 1 where the target was missed, cannot be kept, or cannot be shown."""
+    wanted, reports = _wanted(options), _reports(options)
     begin = time.perf_counter()
     with Capture(options.capture_file) as capture:
         if capture.cut:
             complain(capture.cut)
         captured = CapturedRequests(capture)
-        wanted = _wanted(options)
-        passes = (1 if options.quick else 3) + options.reordering
+        disorder = options.reordering or options.sequence is not None
+        passes = (1 if options.quick else 3) + disorder + (options.sequence is not None) + bool(reports)
         with bar("read", "events", passes * capture.events) as tell:
             told = _Told(captured, tell)
             try:
@@ -54,20 +59,42 @@ def advise_on(options: argparse.Namespace) -> int:
             except ValueError as error:
                 complain(f"{options.capture_file}: the capture is too short for this claim: {error}")
                 return NO
-            found = None
+            found = _Found(advice, _others(advice, captured.settings))
             if not options.quick:
-                found = compare(told.blocks, advice, _others(advice, captured.settings), options.sources)
-            reordering = _reordering(told) if options.reordering else None
+                curve = _curve(advice.slack_ns) if reports else []
+                found.compared = compare(told.blocks, advice, [*found.slacks_ns, *curve], options.sources)
+            if disorder:
+                found.reordering = _reordering(told)
+            if options.sequence is not None:
+                found.sequence = _sequence(told, capture, options)
+            if found.compared is not None and reports:
+                numbers = [cost.source for cost in found.compared.sources[:SOURCES_PICTURED]]
+                span_ns = capture.first_ns, capture.last_ns
+                found.patterns = patterns(told.blocks, advice.rule, span_ns, advice.slack_ns, numbers)
         seconds = time.perf_counter() - begin
-    answer = _document(capture, captured, advice, found, reordering)
+    answer = _document(capture.meta.feed, captured, found)
+    for report in reports:
+        _write_report(report, answer)
     answer["seconds"], answer["events_per_s"] = seconds, capture.events / seconds
     if captured.settings_changed:
         complain("settings changed within the capture: those at its begin were taken for all of it")
     if options.json:
         sys.stdout.write(msgspec.json.encode(answer).decode() + "\n")
     else:
-        _write(capture, advice, found, answer)
+        write_advice(answer)
     return FINE if advice.verdict in GOOD else NO
+
+
+@dataclass(slots=True)
+class _Found:
+    """What was found out; None: it was not asked for. `slacks_ns`: the slacks that the text compares with."""
+
+    advice: Advice
+    slacks_ns: list[int]
+    compared: Comparison | None = None
+    reordering: dict[str, Any] | None = None
+    sequence: dict[str, Any] | None = None
+    patterns: Patterns | None = None
 
 
 class _Told:
@@ -81,10 +108,20 @@ class _Told:
         self._done = self._before + done
         self._tell(self._done)
 
+    @property
+    def names(self) -> Sequence[str]:
+        """Names of the sources by number: whole after one pass."""
+        return self._captured.names
+
     def blocks(self) -> Iterator[Requests]:
         """One pass."""
         self._before = self._done
         return self._captured.blocks()
+
+    def begin(self) -> Any:
+        """A pass of another kind, which says itself how far it is."""
+        self._before = self._done
+        return self._note
 
 
 def _wanted(options: argparse.Namespace) -> Wanted:
@@ -93,6 +130,23 @@ def _wanted(options: argparse.Namespace) -> Wanted:
     if not 0 < options.learn < 1:
         raise ConfigError([f"--learn {options.learn:g} must lie between 0 and 1; {LEARN_PART:.2g} is the default"])
     return Wanted(options.late_share, None if options.at_most is None else int(options.at_most), options.learn)
+
+
+def _reports(options: argparse.Namespace) -> list[Path]:
+    """The files to write, checked before anything is read. Raises ConfigError."""
+    reports: list[Path] = options.report or []
+    for file in reports:
+        if file.suffix.lower() not in REPORTS:
+            raise ConfigError([f"--report {file}: a report is a .html or a .png file"])
+        if not file.parent.is_dir():
+            raise ConfigError([f"--report {file}: there is no folder {file.parent}: make it first"])
+        if file.resolve() == options.capture_file.resolve():
+            raise ConfigError([f"--report {file}: that is the capture itself: name another file"])
+    if reports and options.quick:
+        raise ConfigError(["--report needs what --quick leaves out: give one of the two"])
+    if reports:
+        require_matplotlib()
+    return reports
 
 
 def _rule(options: argparse.Namespace, captured: CapturedRequests) -> Rule:
@@ -105,9 +159,15 @@ def _rule(options: argparse.Namespace, captured: CapturedRequests) -> Rule:
 
 def _others(advice: Advice, settings: Settings | None) -> list[int]:
     chosen = advice.slack_ns
-    others = [0, rounded_up(chosen // 2), min(2 * chosen, 2**61), advice.wanted.at_most_ns]
+    others = [0, rounded_up(chosen // 2), chosen, min(2 * chosen, SLACK_NS_AT_MOST), advice.wanted.at_most_ns]
     others.append(settings.slack_ns if settings is not None and settings.late_share is None else None)
     return [other for other in others if other is not None]
+
+
+def _curve(chosen_ns: int) -> list[int]:
+    """Slacks around the one chosen, or around a second where none is needed, evenly on a log axis."""
+    middle = chosen_ns or SECOND_NS
+    return [min(rounded_up(round(middle * 10 ** (step / 8))), SLACK_NS_AT_MOST) for step in CURVE_STEPS]
 
 
 def _reordering(told: _Told) -> dict[str, Any]:
@@ -123,34 +183,51 @@ def _reordering(told: _Told) -> dict[str, Any]:
     return reorder_figures(np.concatenate(times)[first], np.concatenate(arrivals)[first], REORDER_THRESHOLD)
 
 
-# ---- how it looks ---------------------------------------------------------------------------------------------------
+def _sequence(told: _Told, capture: Capture, options: argparse.Namespace) -> dict[str, Any]:
+    found = read_numbers(capture, options.sequence, told.begin())
+    return {"pointer": options.sequence, **sequence_figures(found, told.names, options.sources)}
 
 
-def _document(
-    capture: Capture,
-    captured: CapturedRequests,
-    advice: Advice,
-    found: Comparison | None,
-    reordering: dict[str, Any] | None,
-) -> dict[str, Any]:
-    compared: dict[str, Any] = {}
-    if found is not None:
-        compared = asdict(found)
-        compared["sources"] = [asdict(cost) | {"source": _name(captured.names, cost.source)} for cost in found.sources]
-    return {
-        "feed": capture.meta.feed,
+# ---- the answer -----------------------------------------------------------------------------------------------------
+
+
+def _document(feed: str, captured: CapturedRequests, found: _Found) -> dict[str, Any]:
+    advice, compared, names = found.advice, found.compared, captured.names
+    document = {
+        "feed": feed,
         **asdict(advice),
         "wanted": advice.wanted._asdict(),
         "rule": advice.rule._asdict(),
         "explanation": VERDICTS[advice.verdict],
-        **compared,
-        "reordering": reordering,
-        "configuration": configuration_lines(capture.meta.feed, advice),
     }
+    if compared is not None:
+        shown = [each for each in compared.alternatives if each.slack_ns in found.slacks_ns]
+        document |= asdict(replace(compared, alternatives=shown))
+        lateness = found.patterns.sources if found.patterns is not None else {}
+        document["sources"] = [
+            asdict(cost) | {"source": name_of(names, cost.source)}
+            | ({"lateness": lateness.get(cost.source)} if found.patterns is not None else {})
+            for cost in compared.sources
+        ]  # fmt: skip
+    document |= {
+        "reordering": found.reordering,
+        "sequence": found.sequence,
+        "configuration": configuration_lines(feed, advice),
+    }
+    if compared is not None and found.patterns is not None:
+        by_time = {"by_day": found.patterns.by_day, "steps": found.patterns.steps}
+        document["pictures"] = {"curve": compared.alternatives, **by_time}
+    plain: dict[str, Any] = msgspec.json.decode(msgspec.json.encode(document))  # as a program reads it
+    return plain
 
 
-def _name(names: Sequence[str], number: int) -> str:
-    return names[number] if number < len(names) else f"number {number}"
+def _write_report(file: Path, answer: dict[str, Any]) -> None:
+    if file.suffix.lower() == ".png":
+        file.write_bytes(png(answer, pictures_of(answer)))
+    else:
+        from .replay.report import report_html  # noqa: PLC0415 - 40 ms, only for who asks for one
+
+        file.write_text(report_html(answer), encoding="utf-8")
 
 
 def configuration_lines(feed: str, advice: Advice) -> list[str]:
@@ -165,96 +242,5 @@ def configuration_lines(feed: str, advice: Advice) -> list[str]:
     ]
 
 
-def spelled(ns: int) -> str:
-    """A duration as a configuration takes it, exactly: in seconds from one second up, such as 19.1s."""
-    if ns < SECOND_NS:
-        return duration_text(ns)
-    whole, rest = divmod(ns, SECOND_NS)
-    return f"{whole}.{rest:09d}".rstrip("0").rstrip(".") + "s"
-
-
 def _decimal(share: float) -> str:
     return np.format_float_positional(share, trim="0")
-
-
-def _write(capture: Capture, advice: Advice, found: Comparison | None, answer: dict[str, Any]) -> None:
-    sys.stdout.write("".join(f"{line}\n" for line in _lines(capture, advice, answer)) + "\n")
-    if found is not None:
-        write_table(HEADINGS, map(_alternative, found.alternatives, [advice.slack_ns] * len(found.alternatives)))
-    if found is not None and found.sources_known > 1:
-        sys.stdout.write(f"\nthe sources that cost most, {len(answer['sources'])} of {found.sources_known:,}\n")
-        write_table(SOURCE_HEADINGS, map(_source, answer["sources"]))
-    if answer["reordering"]:
-        sys.stdout.write("\nreordering by event time (RFC 4737, RFC 5236)\n")
-        write_table(("figure", "value"), [(name, _value(value)) for name, value in _flat(answer["reordering"])])
-    sys.stdout.write("\n" + "".join(f"{line}\n" for line in answer["configuration"]))
-
-
-def _lines(capture: Capture, advice: Advice, answer: dict[str, Any]) -> Iterator[str]:
-    first, second, wanted = advice.first, advice.second, advice.wanted
-    sure = f"{100 * wanted.confidence:g} %"
-    yield f"{harmless(capture.meta.feed)}, {format_rfc3339(capture.first_ns)} to {format_rfc3339(capture.last_ns)}"
-    longest = "" if wanted.at_most_ns is None else f", waiting at most {spelled(wanted.at_most_ns)}"
-    yield f"wanted    late share {wanted.late_share:g}{longest}"
-    between = ""
-    if advice.interval_ns is not None:
-        between = f" ({sure}: {_time(advice.interval_ns[0])} to {_time(advice.interval_ns[1])})"
-    yield f"chosen    slack {spelled(advice.slack_ns)}{between}"
-    yield f"          on {first.events:,} events, up to {format_rfc3339(first.to_ns)}"
-    low, high = advice.interval
-    yield f"verified  late share {advice.late_share:.3g} ({sure}: {low:.3g} to {high:.3g}), {second.late:,} late"
-    yield f"          of {second.events:,} events that had no say in the choice"
-    yield "tenths    " + " ".join("-" if not t.events else f"{t.late / t.events:.2g}" for t in advice.tenths)
-    yield f"verdict   {advice.verdict.replace('_', ' ')}: {VERDICTS[advice.verdict]}"
-    if advice.verdict == "too_short":
-        yield f"          {advice.events_needed:,} events are needed in each part for {sure}"
-    if advice.attainable is not None:
-        yield f"          the longest wait gives {advice.attainable:.3g}; the target needs {_time(advice.least_ns)}"
-    if "lag_ns_mean" in answer:
-        yield f"lag       what the watermark follows is {_time(answer['lag_ns_mean'])} behind the clock, on average"
-    yield f"read in   {answer['seconds']:.2f} s, {answer['events_per_s']:,.0f} events/s"
-
-
-def _alternative(each: Any, chosen_ns: int) -> Sequence[str]:
-    figure = each.figure
-    p99 = figure.hold_ns_quantiles[0.99] if figure.hold_ns_quantiles else None
-    return (
-        spelled(each.slack_ns),
-        f"{each.first_share:.3g}",
-        f"{each.second_share:.3g}",
-        _time(figure.hold_ns_mean),
-        _time(p99),
-        _value(figure.held_events_mean),
-        _value(figure.held_events_peak),
-        "chosen" if each.slack_ns == chosen_ns else "",
-    )
-
-
-def _source(cost: dict[str, Any]) -> Sequence[str]:
-    return (
-        cost["source"],
-        f"{cost['events']:,}",
-        f"{cost['late']:,}",
-        _time(cost["delay_ns_mean"]),
-        _time(cost["slack_without_ns"]),
-        _time(cost["lag_saved_ns"]),
-        _value(cost["late_if_excused"]),
-    )
-
-
-def _flat(figures: dict[str, Any]) -> Iterator[tuple[str, Any]]:
-    for name, value in figures.items():
-        if isinstance(value, dict):
-            yield from ((f"{name} {key}", each) for key, each in value.items())
-        else:
-            yield name, value
-
-
-def _value(value: float | None) -> str:
-    if value is None:
-        return "unknown"
-    return f"{value:,}" if isinstance(value, int) else f"{value:,.4g}" if value < 1000 else f"{value:,.0f}"
-
-
-def _time(ns: float | None) -> str:
-    return "unknown" if ns is None else f"{ns / 1e9:.3f}s"

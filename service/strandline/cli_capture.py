@@ -21,6 +21,7 @@ import msgspec
 from .cli_answers import FINE, complain
 from .cli_lanes import since_ns
 from .cli_progress import bar
+from .client_access import Caller, caller_of
 from .errors import CaptureError, ConfigError
 from .journal.disk import LocalDisk
 from .replay.capture import Capture, CaptureWriter
@@ -130,10 +131,11 @@ def _from_service(url: str, options: argparse.Namespace) -> None:
         raise ConfigError([f"{url}: --feed is missing: the name of the feed to record"])
     query = {"seconds": str(options.seconds), "events": "0" if options.without_events else "1"}
     address = f"{url.rstrip('/')}/v1/feeds/{options.feed}/capture"
+    shown = caller_of(options, url, os.environ)
     out: Path = options.out
     with out.open("xb") as file, bar("recorded", "s", options.seconds) as tell:
         try:
-            asyncio.run(_stream(address, query, file, tell))
+            asyncio.run(_stream(address, query, file, tell, shown))
         except BaseException:
             if not file.tell():
                 out.unlink(missing_ok=True)
@@ -144,11 +146,14 @@ def _from_service(url: str, options: argparse.Namespace) -> None:
         _tell(options, found.requests, found.events, out.stat().st_size)
 
 
-async def _stream(address: str, query: dict[str, str], file: BinaryIO, tell: object) -> None:
+async def _stream(address: str, query: dict[str, str], file: BinaryIO, tell: object, shown: Caller) -> None:
     begin = time.monotonic()
     timeout = aiohttp.ClientTimeout(total=None, sock_connect=10, sock_read=60)
     try:
-        async with aiohttp.ClientSession(timeout=timeout) as session, session.get(address, params=query) as answer:
+        async with (
+            aiohttp.ClientSession(timeout=timeout, headers=shown.headers) as session,
+            session.get(address, params=query, ssl=shown.context or True) as answer,
+        ):
             if answer.status != 200:
                 raise CaptureError(f"{address} answered {answer.status}: {(await answer.text())[:500]}")
             async for piece in answer.content.iter_chunked(PIECE_BYTES):

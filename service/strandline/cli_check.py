@@ -11,6 +11,7 @@ import msgspec
 
 from .cli_answers import FINE, WRONG_USE, write_table
 from .config import Config, Feed, load
+from .config_access import literal_beyond, needs_tokens
 from .config_units import duration_text
 from .errors import ConfigError
 
@@ -19,6 +20,7 @@ def check(options: argparse.Namespace) -> int:
     """Answer for one file. Without --json, faults are raised as ConfigError for the command line to tell."""
     try:
         config = load(options.file, os.environ)
+        _check_reach(str(options.file), config)
     except ConfigError as error:
         if not options.json:
             raise
@@ -29,6 +31,12 @@ def check(options: argparse.Namespace) -> int:
     else:
         _write(str(options.file), config)
     return FINE
+
+
+def _check_reach(file: str, config: Config) -> None:
+    """A host that is a name is looked up at the start only: here nothing is asked."""
+    if fault := needs_tokens(config.access, config.listen.host, literal_beyond(config.listen.host)):
+        raise ConfigError([f"{file}: {fault}"])
 
 
 def _write(file: str, config: Config) -> None:

@@ -19,6 +19,7 @@ import msgspec
 
 from .cli_answers import FINE, NO, complain
 from .cli_progress import bar
+from .client_access import caller_of
 from .config import load
 from .core.columns import Batch
 from .core.settings import Settings
@@ -127,7 +128,10 @@ def _into_service(options: argparse.Namespace, capture: Capture) -> int:
     speed = 1.0 if options.pace is None else options.pace or None
     feed = options.feed or capture.meta.feed
     with bar("sent", "events", capture.events) as tell:
-        sent = send(capture, options.into, feed, speed=speed, connections=options.connections, progress=tell)
+        sent = send(
+            capture, options.into, feed, speed=speed, connections=options.connections, progress=tell,
+            caller=caller_of(options, options.into, os.environ),
+        )  # fmt: skip
     if options.json:
         _write_json(asdict(sent))
     else:

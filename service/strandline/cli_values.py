@@ -3,8 +3,15 @@
 from __future__ import annotations
 
 import argparse
+from pathlib import Path
 
 from .config_units import duration_ns
+
+
+def add_access(command: argparse.ArgumentParser) -> None:
+    """Options of a command that calls a service which may ask for a token, or speak TLS."""
+    command.add_argument("--token-file", type=Path, metavar="FILE", help="the token for it (default: STRANDLINE_TOKEN)")
+    command.add_argument("--ca", type=Path, metavar="FILE", help="for https: the certificates to trust (PEM)")
 
 
 def hold(text: str) -> float:

@@ -12,6 +12,8 @@ from pathlib import Path
 
 import msgspec
 
+from .config_access import check_access
+from .config_intake_checks import check_intakes
 from .config_kinds import quoted
 from .config_model import Config, Feed, SteeredSlack
 from .config_read import Key, Place, Reading, declared
@@ -72,7 +74,7 @@ FEED_RULES = (
     ),
     Rule(
         ("expect_sources", "source"),
-        lambda feed: bool(feed.expect_sources) and feed.source is None,
+        lambda feed: bool(feed.expect_sources) and feed.one_source,
         "names sources, but the feed has no `source` pointer to recognise them by",
     ),
     Rule(
@@ -91,10 +93,12 @@ def check(config: Config, reading: Reading) -> None:
         for rule in FEED_RULES:
             _judge(rule, feed, ("feed", index), reading)
         _check_pointers(feed, ("feed", index), reading)
+    check_access(config.access, config.tls, reading)
     _check_names(config, reading)
     _check_sink_names(config, reading)
     _check_sink_paths(config, reading)
     check_sinks(_sinks(config, reading), reading)
+    check_intakes(config.feeds, reading)
 
 
 def _judge(rule: Rule, feed: Feed, place: Place, reading: Reading) -> None:

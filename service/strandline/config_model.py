@@ -14,6 +14,8 @@ from typing import Annotated, Literal
 import msgspec
 from msgspec import field
 
+from .config_access import Access, Tls
+from .config_intakes import INTAKE_KINDS, IntakeConfig
 from .config_kinds import Address, address, choice, count, duration, name, path, pointer, share, size, texts
 from .config_read import Key, Table, Tables
 from .config_sinks import SINK_KINDS, SINK_KINDS_LATER, NdjsonConfig, SinkConfig, SqliteConfig
@@ -128,6 +130,12 @@ class Feed(msgspec.Struct, frozen=True):
     ] = field(default=GIB, name="lanes_at_most")
     journal: Annotated[Journal, Table(Journal)] = Journal()
     sinks: Annotated[tuple[SinkConfig, ...], Tables(SINK_KINDS, SINK_KINDS_LATER)] = field(default=(), name="sink")
+    intakes: Annotated[tuple[IntakeConfig, ...], Tables(INTAKE_KINDS)] = field(default=(), name="intake")
+
+    @property
+    def one_source(self) -> bool:
+        """Whether all events count as of one source: neither they nor an intake's messages name one."""
+        return self.source is None and not any(getattr(intake, "source", None) for intake in self.intakes)
 
     @property
     def longest_slack_ns(self) -> int:
@@ -197,6 +205,8 @@ class Config(msgspec.Struct, frozen=True):
     drain_at_most_ns: Annotated[
         int, Key(duration("0s", "1h"), "how long a stop waits until the sinks have taken what was released")
     ] = field(default=20 * SECOND_NS, name="drain_at_most")
+    access: Annotated[Access, Table(Access)] = Access()
+    tls: Annotated[Tls, Table(Tls)] = Tls()
     limits: Annotated[Limits, Table(Limits)] = Limits()
     feeds: Annotated[tuple[Feed, ...], Tables({"": Feed})] = field(default=(), name="feed")
 

@@ -21,6 +21,7 @@ from typing import Any
 
 import msgspec
 
+from .config_intakes import INTAKE_KINDS
 from .config_kinds import Kind
 from .config_model import Config, Feed
 from .config_read import Key, Place, Reading, Table, declared
@@ -28,6 +29,7 @@ from .config_sinks import SINK_KINDS
 
 PREFIX = "STRANDLINE_"
 FIXED = ("name", "kind")
+TOKEN_VARIABLE = "STRANDLINE_TOKEN"  # what commands show to a service; no key of it
 
 # A Kubernetes cluster with a service called strandline (or strandline-...) gives every container such variables
 # (kubernetes.io, "Service: environment variables"); from memory. They are not ours to judge.
@@ -49,7 +51,7 @@ def override(raw: dict[str, Any], environ: Mapping[str, str], reading: Reading) 
         if name in known:
             place, kind = known[name]
             _put(raw, place, kind, environ[name], name, reading)
-        elif _CLUSTER.fullmatch(name) is None:
+        elif name != TOKEN_VARIABLE and _CLUSTER.fullmatch(name) is None:
             near = difflib.get_close_matches(name[:200], known, 1, 0.8)
             advice = f"; did you mean {near[0]}?" if near else "; the list of keys is in deploy/configuration.md"
             reading.faults.append(f"variable {name[:200]} overrides no key{advice}")
@@ -77,10 +79,12 @@ def _settable(raw: Mapping[str, Any]) -> Iterator[tuple[list[str], Place, Kind]]
     for index, feed in _named(raw.get("feed"), "name"):
         steps: list[str] = ["feed", feed["name"]]
         yield from _keys(Feed, steps, ("feed", index))
-        for sink_index, sink in _named(feed.get("sink"), "kind"):
-            name = sink.get("name", sink["kind"])
-            if sink["kind"] in SINK_KINDS and isinstance(name, str):
-                yield from _keys(SINK_KINDS[sink["kind"]], [*steps, "sink", name], ("feed", index, "sink", sink_index))
+        kinds: tuple[tuple[str, Mapping[str, type[msgspec.Struct]]], ...] = (("sink", SINK_KINDS), ("intake", INTAKE_KINDS))
+        for noun, known in kinds:
+            for number, table in _named(feed.get(noun), "kind"):
+                name = table.get("name", table["kind"])
+                if table["kind"] in known and isinstance(name, str):
+                    yield from _keys(known[table["kind"]], [*steps, noun, name], ("feed", index, noun, number))
 
 
 def _keys(struct: type[msgspec.Struct], steps: list[str], place: Place) -> Iterator[tuple[list[str], Place, Kind]]:

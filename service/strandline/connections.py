@@ -76,6 +76,9 @@ class _Handler(web.RequestHandler):
         message: str | None = None,
     ) -> web.StreamResponse:
         """The answer to a request that no handler saw. Raises ConnectionError where an answer has begun."""
+        if isinstance(exc, UnicodeEncodeError) and "Expect" in request.headers and not request.writer.output_size:
+            # It quotes an `Expect` that it does not know, and fails where that is no UTF-8.
+            return problem(417, HTTPStatus(417).phrase, "of Expect only 100-continue is understood")
         if status >= 500 or request.writer.output_size:
             return super().handle_error(request, status, exc, message)
         log.debug("what came from %s cannot be read: %s", request.remote, message)

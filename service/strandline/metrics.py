@@ -82,7 +82,7 @@ class _Sampler:
         self._hops()
 
     def _books(self) -> None:
-        ledger = self.view.ledger
+        view, ledger = self.view, self.view.ledger
         for column in ("received", "released", "late", "duplicate", "quarantined"):
             self.add(f"strandline_events_{column}", ledger[column])
         self.add("strandline_events_held", ledger["buffered"])
@@ -91,6 +91,10 @@ class _Sampler:
         for reason in REFUSALS:  # those that never happened too: a counter that begins at 1 shows no increase
             self.add("strandline_requests_refused", self.view.refusals.get(reason, 0), reason)
         self.add("strandline_lanes_bytes", self.runtime.lane_store.size.file_bytes)
+        self.add("strandline_lanes_limit_bytes", self.runtime.config.lanes_at_most_bytes)
+        self.add("strandline_held_limit_events", self.runtime.config.held_events_at_most)
+        if view.steering is not None:
+            self.add("strandline_late_target_ratio", view.steering.target)
 
     def _order(self) -> None:
         view, figures = self.view, self.runtime.feed.state.figures
@@ -98,6 +102,7 @@ class _Sampler:
         self.add("strandline_watermark_age_seconds", self.age_s(view.watermark_ns))
         self.add("strandline_watermark_advanced_seconds", self.age_s(view.marked_ns))
         self.add("strandline_slack_seconds", view.slack_ns / 1e9)
+        self.add("strandline_hold_limit_seconds", self.runtime.config.hold_at_most_ns / 1e9)
         for why in HOLD_WHYS:
             self.add("strandline_hold", float(why == view.hold.why), why)
         self.add("strandline_open_runs", len(view.open_runs))
@@ -122,6 +127,8 @@ class _Sampler:
         journal = self.runtime.journal
         counters = journal.counters
         self.add("strandline_journal_bytes", journal.bytes_used)
+        self.add("strandline_journal_needed_bytes", self.runtime.feed.next_lsn - self.runtime.feed.needed_place)
+        self.add("strandline_journal_limit_bytes", self.runtime.config.journal.at_most_bytes)
         self.add("strandline_journal_unsynced_bytes", journal.queued_bytes)
         self.add("strandline_journal_syncs", counters.syncs)
         bounds = [*map(repr, SYNC_BOUNDS_S), "+Inf"]

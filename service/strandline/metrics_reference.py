@@ -20,13 +20,17 @@ class Meaning(NamedTuple):
 
 METRICS: dict[str, Meaning] = {
     "strandline_events_received": Meaning(
-        "counter", "Events received, good and faulty.", "Falls to zero: the senders or the network in front are silent."
+        "counter",
+        "Events received, good and faulty.",
+        "Falls to zero: the senders or the network in front are silent; look at their links.",
     ),
     "strandline_events_released": Meaning(
         "counter", "Events released in order.", "Stands still while events are received: see who holds the feed."
     ),
     "strandline_events_late": Meaning(
-        "counter", "Events that came behind the watermark.", "Grows: lengthen the slack, or see which source is late."
+        "counter",
+        "Events that came behind the watermark.",
+        "Grows: `strandline late list` names the sources; mend their links, or lengthen the slack.",
     ),
     "strandline_events_duplicate": Meaning(
         "counter", "Events recognised as repeats.", "Grows: a sender retries; look at its link and its timeouts."
@@ -45,97 +49,150 @@ METRICS: dict[str, Meaning] = {
     "strandline_books_unbalanced_events": Meaning(
         "gauge",
         "Received minus all that became of it; 0 at every moment.",
-        "Not 0: a defect; save the data_dir, report it.",
+        "Not 0: a defect; save a copy of data_dir and report it. The service may go on.",
     ),
     "strandline_held_oldest_seconds": Meaning(
         "gauge",
         "Age of the oldest held event by the arrival clock.",
-        "Above hold_at_most: a sink is full or the disk stands.",
+        "Above hold_at_most: a sink takes nothing or the disk stands; see which hop waits longest.",
     ),
     "strandline_watermark_age_seconds": Meaning(
-        "gauge", "Arrival clock minus watermark.", "Grows: the output falls behind; the hold names the cause."
+        "gauge",
+        "Arrival clock minus watermark.",
+        "Grows: the output falls behind; `strandline_hold` names the cause, GET /v1/feeds/{feed} the source.",
     ),
     "strandline_watermark_advanced_seconds": Meaning(
         "gauge", "Time since the watermark last moved.", "Grows while events are held: see who holds the feed."
     ),
-    "strandline_slack_seconds": Meaning("gauge", "The slack in force.", "Changes only when the configuration does."),
+    "strandline_slack_seconds": Meaning(
+        "gauge",
+        "The slack in force.",
+        "A steered one stays at `at_most`: target and longest wait contradict each other; allow one of them more.",
+    ),
     "strandline_hold": Meaning(
         "gauge",
         "1 for the cause that holds the feed now, 0 for the others.",
-        "See the runbook's entry for the cause.",
+        "deploy/runbook.md has an entry for each cause, with what to do.",
         ("why",),
     ),
     "strandline_open_runs": Meaning(
-        "gauge", "Open runs.", "Grows with disorder: more sources interleave, or one sends its backlog."
+        "gauge",
+        "Open runs.",
+        "Grows: more sources interleave, or `source` is not set and many count as one; name them by `source`.",
     ),
-    "strandline_sources": Meaning("gauge", "Sources known.", "Near sources_at_most: new sources will be refused."),
-    "strandline_sources_active": Meaning("gauge", "Sources that are not idle.", "Falls: senders have gone silent."),
+    "strandline_sources": Meaning(
+        "gauge",
+        "Sources known.",
+        "Grows without end: the pointer `source` finds something that changes with each event; mend it.",
+    ),
+    "strandline_sources_active": Meaning(
+        "gauge",
+        "Sources that are not idle.",
+        "Falls: senders have gone silent; GET /v1/feeds/{feed}/sources says which and for how long.",
+    ),
     "strandline_marks": Meaning(
         "counter",
         "Steps of the watermark, by cause.",
-        "Many by hold_at_most: sources lag further than you allow.",
+        "Many by hold_at_most: a source lags further than you allow; the hold names it. Mend it, or excuse it.",
         ("cause",),
     ),
-    "strandline_comparisons": Meaning("counter", "Comparisons made by ordering.", "Per event, a measure of disorder."),
-    "strandline_copies": Meaning("counter", "Rows moved by merging.", "Per event, a measure of disorder."),
+    "strandline_comparisons": Meaning(
+        "counter",
+        "Comparisons made by ordering.",
+        "Grows per event: the feed is in more disorder than before; look for a source that sends its backlog.",
+    ),
+    "strandline_copies": Meaning(
+        "counter",
+        "Rows moved by merging.",
+        "Grows per event: the feed is in more disorder than before; look for a source that sends its backlog.",
+    ),
     "strandline_gallops": Meaning(
-        "counter", "Times that a merge began to gallop.", "Nothing to do; long streaks are good."
+        "counter",
+        "Times that a merge began to gallop.",
+        "Nothing to do: the merge found long streaks, which are cheap. For comparison with the copies.",
     ),
     "strandline_lateness_seconds": Meaning(
         "histogram",
         "Newest event time seen before an event minus its own, at least 0.",
-        "The quantile you need is the slack.",
+        "Its upper quantiles grow: links buffer longer. Lengthen the slack to the quantile you need.",
     ),
     "strandline_hold_seconds": Meaning(
         "histogram",
         "Time from an event's arrival to its release.",
-        "What ordering costs: shorten the slack to lower it.",
+        "Grows: ordering costs more time. See who holds the feed; shorten the slack if it holds.",
     ),
     "strandline_run_length_events": Meaning(
-        "histogram", "Length of the runs that arrivals brought.", "Short runs are disorder inside requests."
+        "histogram",
+        "Length of the runs that arrivals brought.",
+        "Falls to a few events: requests are small or in disorder inside; have the senders sort and bundle.",
     ),
     "strandline_requests_refused": Meaning(
         "counter",
         "Requests refused whole, by reason.",
-        "The reason names the limit; the runbook says what to do.",
+        "Grows: the reason names the limit; deploy/runbook.md has an entry for each, with what to do.",
         ("reason",),
     ),
     "strandline_hop_waiting": Meaning(
         "gauge",
         "What waits at a hop: bodies at ingest and decode, events behind them.",
-        "The hop with the most waiting is where the trouble sits.",
+        "Grows: the last hop in which it grows is where the trouble sits; at runs, see who holds the feed.",
         ("hop",),
     ),
     "strandline_hop_oldest_seconds": Meaning(
-        "gauge", "How long the oldest of them has waited.", "Grows: this hop, or the one behind it, stands.", ("hop",)
+        "gauge",
+        "How long the oldest that waits at a hop has waited.",
+        "Grows: this hop stands. journal: look at the disk; runs: who holds the feed; sinks: the store.",
+        ("hop",),
     ),
     "strandline_hop_advanced_seconds": Meaning(
-        "gauge", "Time since a hop last advanced.", "Grows while events wait: this hop stands.", ("hop",)
+        "gauge",
+        "Time since a hop last advanced.",
+        "Grows while events wait at it: this hop stands. journal: the disk; runs: the hold; sinks: the store.",
+        ("hop",),
     ),
     "strandline_journal_bytes": Meaning(
-        "gauge", "Bytes that the journal takes on disk.", "Near its limit: a sink does not take its batches."
+        "gauge",
+        "Bytes that the journal takes on disk, those kept for replay included.",
+        "Near its limit: look at `strandline_journal_needed_bytes`; the rest goes by itself when room is short.",
     ),
     "strandline_journal_unsynced_bytes": Meaning(
-        "gauge", "Bytes that wait for a sync.", "Grows: the disk is slower than the feed."
+        "gauge",
+        "Bytes that wait for a sync.",
+        "Grows: the disk is slower than the feed; find what else writes to it, or give the journal its own.",
     ),
-    "strandline_journal_syncs": Meaning("counter", "Syncs of the journal.", "Per request, how well syncs are shared."),
+    "strandline_journal_syncs": Meaning(
+        "counter",
+        "Syncs of the journal.",
+        "As many as requests: each waits for a sync of its own; send larger requests, or more at one time.",
+    ),
     "strandline_journal_sync_seconds": Meaning(
-        "histogram", "Duration of a sync.", "Grows: the disk is slow or shared; answers wait for it."
+        "histogram",
+        "Duration of a sync.",
+        "Grows: the disk is slow or shared, and answers wait for it; find what else writes to it.",
     ),
     "strandline_sink_waiting_events": Meaning(
-        "gauge", "Events that a sink has not durably taken.", "Grows: the store is slow or down.", ("sink", "lane")
+        "gauge",
+        "Events that a sink has not durably taken.",
+        "Grows: the store is slow or down; read the sink's `last_error` at /v1/feeds/{feed}, then look at the store.",
+        ("sink", "lane"),
     ),
     "strandline_sink_oldest_seconds": Meaning(
-        "gauge", "How long the oldest of them has waited.", "Grows: the store is slow or down.", ("sink", "lane")
+        "gauge",
+        "How long the oldest event that a sink has not taken has waited.",
+        "Grows: the store is slow or down; read the sink's `last_error` at /v1/feeds/{feed}, then look at the store.",
+        ("sink", "lane"),
     ),
     "strandline_sink_delivered_events": Meaning(
         "counter",
         "Events that a sink has durably taken since the start.",
-        "Stands still: the store is down.",
+        "Stands still while events wait: the store is down or out of reach; look at the store.",
         ("sink", "lane"),
     ),
     "strandline_sink_retries": Meaning(
-        "counter", "Calls to a sink that failed and are tried again.", "Grows: read the sink's last error.", ("sink",)
+        "counter",
+        "Calls to a sink that failed and are tried again.",
+        "Grows: read the sink's `last_error` at /v1/feeds/{feed}, and mend the store or the way to it.",
+        ("sink",),
     ),
     "strandline_sink_refused_samples": Meaning(
         "counter",
@@ -144,12 +201,45 @@ METRICS: dict[str, Meaning] = {
         ("sink", "reason"),
     ),
     "strandline_sink_failing": Meaning(
-        "gauge", "1 while a sink fails.", "1: read the sink's last error at /v1/feeds/{feed}.", ("sink",)
+        "gauge",
+        "1 while a sink fails.",
+        "1: read the sink's `last_error` at /v1/feeds/{feed}, and mend the store or the way to it.",
+        ("sink",),
     ),
     "strandline_lanes_bytes": Meaning(
         "gauge",
         "Bytes that the kept late lane and quarantine take.",
-        "Near lanes_at_most: export, then remove what is settled.",
+        "Near its limit: export, then `strandline late forget` and `strandline quarantine forget`.",
+    ),
+    "strandline_hold_limit_seconds": Meaning(
+        "gauge",
+        "The longest that an event may be held (hold_at_most).",
+        "Changes with the configuration only: compare `strandline_held_oldest_seconds` with it.",
+    ),
+    "strandline_held_limit_events": Meaning(
+        "gauge",
+        "The most events that may be held (held_events_at_most).",
+        "Changes with the configuration only: compare `strandline_events_held` with it.",
+    ),
+    "strandline_late_target_ratio": Meaning(
+        "gauge",
+        "The wanted share of late events; shown only where the slack is steered.",
+        "Changes with the configuration only: compare the share of late events with it.",
+    ),
+    "strandline_journal_needed_bytes": Meaning(
+        "gauge",
+        "Bytes of the journal that events still held or undelivered need.",
+        "Grows: a sink does not take its batches; look at the sink that waits longest.",
+    ),
+    "strandline_journal_limit_bytes": Meaning(
+        "gauge",
+        "The most that the journal may take on disk (journal.at_most).",
+        "Changes with the configuration only: compare `strandline_journal_needed_bytes` with it.",
+    ),
+    "strandline_lanes_limit_bytes": Meaning(
+        "gauge",
+        "The most that the late lane and the quarantine may take (lanes_at_most).",
+        "Changes with the configuration only: compare `strandline_lanes_bytes` with it.",
     ),
 }
 

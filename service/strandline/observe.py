@@ -13,6 +13,7 @@ import msgspec
 import numpy as np
 from aiohttp import web
 
+from .access_gate import may_read
 from .core.columns import Batch
 from .core.view import sources_of
 from .documents import age_s, feed_document, stalls_of, time_text
@@ -36,8 +37,8 @@ def _json(value: object, status: int = 200) -> web.Response:
 
 async def get_feeds(request: web.Request) -> web.Response:
     """Every feed, in short."""
-    feeds = request.app[FEEDS].values()
-    return _json({"feeds": [feed_document(runtime) for runtime in feeds]})
+    shown = [runtime for name, runtime in request.app[FEEDS].items() if may_read(request, name)]
+    return _json({"feeds": [feed_document(runtime) for runtime in shown]})
 
 
 async def get_feed(request: web.Request) -> web.Response:
@@ -232,13 +233,19 @@ async def get_live(request: web.Request) -> web.Response:
 
 async def get_ready(request: web.Request) -> web.Response:
     """Ready to take events; 503, with the causes, when a feed has failed, is stopping, or waits without advancing."""
-    causes = []
+    causes, untold = [], False
     for name, runtime in request.app[FEEDS].items():
+        found = [f"feed {name}: {sentence}" for sentence in stalls_of(runtime)]
         if runtime.failure is not None:
-            causes.append(f"feed {name} has stopped: {runtime.failure}")
+            found.insert(0, f"feed {name} has stopped: {runtime.failure}")
         elif not runtime.accepting:
-            causes.append(f"feed {name} is starting or stopping")
-        causes += [f"feed {name}: {sentence}" for sentence in stalls_of(runtime)]
-    if not causes:
+            found.insert(0, f"feed {name} is starting or stopping")
+        if may_read(request, name):
+            causes += found
+        else:
+            untold = untold or bool(found)
+    if not causes and not untold:
         return _json({"ready": True})
+    if untold:
+        causes.append("the causes are told to those who show a token that may read the feed")
     return problem(503, "Service Unavailable", "; ".join(causes), headers={"Retry-After": "5"})

@@ -10,11 +10,16 @@ from typing import Any
 
 import msgspec
 
+from .acting import Drain, Excuse, PauseSink, SetSlack
 from .core.effects import Outcome
 from .errors import FAULT_REASONS, REFUSALS
-from .ingest.endpoint import Excuse, Promise
+from .hold_answer import ActsAnswer, HoldsAnswer
+from .ingest.endpoint import Promise
 from .ingest.formats import FORMATS
 from .lane_acts import Redrive, Resend
+from .openapi_access import guarded, schemes
+from .reporting.described import report_path
+from .tracing.described import trace_path
 
 Json = dict[str, Any]
 # A schema describes JSON; an item that is no event is a fault in the answer, so it is no matter of these schemas.
@@ -32,6 +37,7 @@ _FEED: Json = {
 }
 
 
+_SINK: Json = _FEED | {"name": "sink", "description": "name of one of the feed's sinks", "schema": {"type": "string"}}
 _KEY: Json = {
     "name": "Idempotency-Key",
     "in": "header",
@@ -46,6 +52,7 @@ def _query(name: str, description: str, schema: Json) -> Json:
 
 
 _WHOLE: Json = {"type": "integer", "minimum": 0, "maximum": 10**18 - 1}
+_MS: Json = {"type": "integer", "minimum": 0, "maximum": 9_223_372_036_854}
 _DURATION = r"[0-9]{1,9}(\.[0-9]{1,9})?(ns|us|ms|s|m|h)"
 _SLACKS: Json = {"type": "string", "pattern": f"^{_DURATION}(,{_DURATION}){{0,99}}$"}
 _PAGE = [
@@ -59,7 +66,7 @@ def _problems(*statuses: int) -> Json:
         400: "a parameter or a header is not what it should be",
         404: "there is no such feed or source",
         408: "the body did not come in time",
-        409: "the first request with this key is not answered yet",
+        409: "the first request with this key is not answered yet, or the sink is paused",
         410: "the batch asked for is no longer at hand here",
         413: "the body, or what it decompresses to, is larger than the feed's limits",
         415: "media type or content coding is not supported (then Accept-Encoding says which are)",
@@ -79,7 +86,7 @@ def _get(summary: str, responses: Json, parameters: list[Json] | None = None) ->
     return {"get": {"summary": summary, "parameters": parameters or [], "responses": responses}}
 
 
-def _act(summary: str, schema: str | None) -> Json:
+def _act(summary: str, schema: str | None, *, required: bool = True) -> Json:
     operation: Json = {
         "summary": summary,
         "parameters": [_FEED],
@@ -90,7 +97,7 @@ def _act(summary: str, schema: str | None) -> Json:
     }
     if schema:
         content = {"application/json": {"schema": {"$ref": f"#/components/schemas/{schema}"}}}
-        operation["requestBody"] = {"required": True, "content": content}
+        operation["requestBody"] = {"required": required, "content": content}
     return {"post": operation}
 
 
@@ -120,9 +127,42 @@ def _again() -> Json:
     for path, (summary, schema) in acts.items():
         act = _act(summary, schema)
         del act["post"]["responses"]["204"]
-        act["post"]["responses"] |= _answer("what was done, in counts", {"type": "object"})
+        act["post"]["responses"] |= _answer("what was done, in counts", {"type": "object"}) | _problems(409)
         paths[f"/v1/feeds/{{feed}}/{path}"] = act
     return paths
+
+
+def _sink_acts() -> Json:
+    acts = {
+        "pause": "Hand this sink nothing more until it is resumed; others go on, limits hold",
+        "resume": "Hand this sink batches again, from where it stands",
+    }
+    paths = {f"/v1/feeds/{{feed}}/sinks/{{sink}}/{name}": _act(says, "PauseSink") for name, says in acts.items()}
+    for act in paths.values():
+        act["post"]["parameters"] = [_FEED, _SINK]
+    return paths
+
+
+def _history() -> Json:
+    schemas = "#/components/schemas"
+    return {
+        "/v1/feeds/{feed}/holds": _get(
+            "Who held the feed, from when to when and why; totals count what lies within the time asked about",
+            {**_answer("the newest first", {"$ref": f"{schemas}/HoldsAnswer"}), **_problems(400, 404)},
+            [
+                _FEED,
+                _query("from", "an RFC 3339 time: only holds that reach beyond it", {"type": "string"}),
+                _query("to", "an RFC 3339 time: only holds that began before it", {"type": "string"}),
+                _query("limit", "how many are listed (500), at most 2000", _WHOLE),
+            ],
+        ),
+        "/v1/feeds/{feed}/acts": _get(
+            "What operators did to the feed: the last 1000 acts",
+            {**_answer("the newest first", {"$ref": f"{schemas}/ActsAnswer"}), **_problems(400, 404)},
+            [_FEED, _query("limit", "how many are listed (100), at most 1000", _WHOLE)],
+        ),
+        "/v1/feeds/{feed}/report": report_path(_FEED, _query, _problems(400, 404)),
+    }
 
 
 def _streams() -> Json:
@@ -151,6 +191,33 @@ def _streams() -> Json:
     }
 
 
+def _dashboard() -> Json:
+    return {
+        "/v1/feeds/{feed}/live": _get(
+            "The feed as it stands, twice a second, without end: what the dashboard draws",
+            {
+                **_answer("server-sent events named moment", {"type": "string"}, "text/event-stream"),
+                **_problems(400, 404, 429),
+            },
+            [
+                _FEED,
+                _query("q", "sources whose name contains this come first", {"type": "string", "maxLength": 256}),
+                _query("lanes", "sources to show (20)", {"type": "integer", "minimum": 1, "maximum": 100}),
+            ],
+        ),
+        "/v1/feeds/{feed}/history": _get(
+            "The last hours of the feed as columns, at most a day, in coarser steps the older",
+            {**_answer("columns of equal length; times in milliseconds", {"type": "object"}), **_problems(400, 404)},
+            [
+                _FEED,
+                _query("from_ms", "milliseconds since 1970 (15 minutes before to_ms)", _MS),
+                _query("to_ms", "milliseconds since 1970 (now)", _MS),
+                _query("points", "steps at most (600)", {"type": "integer", "minimum": 2, "maximum": 2000}),
+            ],
+        ),
+    }
+
+
 def _paths() -> Json:
     document: Json = {"type": "object"}
     source = _query("source", "only this source", {"type": "string"})
@@ -158,7 +225,9 @@ def _paths() -> Json:
         "/v1/feeds/{feed}/events": _events(),
         "/v1/feeds/{feed}/marks": _act("Promise: nothing older will come from this source", "Promise"),
         "/v1/feeds/{feed}/excuse": _act("Do not wait for this source until it speaks again", "Excuse"),
-        "/v1/feeds/{feed}/drain": _act("Release all that is held, in order", None),
+        "/v1/feeds/{feed}/drain": _act("Release all that is held, in order", "Drain", required=False),
+        **_sink_acts(),
+        **_history(),
         **_again(),
         "/v1/feeds": _get("Every feed", _answer("feeds", document)),
         "/v1/feeds/{feed}": _get(
@@ -169,7 +238,10 @@ def _paths() -> Json:
         "/v1/feeds/{feed}/sources": _get(
             "Sources", {**_answer("sources", document), **_problems(400, 404)}, [_FEED, *_PAGE]
         ),
-        "/v1/feeds/{feed}/slack": _get(
+        "/v1/feeds/{feed}/slack": _act(
+            "Set the slack for a time, or end that early", "SetSlack"
+        )
+        | _get(
             "How long to wait: the late share that each slack would give, from the lateness remembered",
             {**_answer("slacks, lateness, steering; what of it is exact", document), **_problems(400, 404)},
             [_FEED, _query("at", "slacks to answer for, such as 3.2s,5s; else a grid", _SLACKS)],
@@ -185,7 +257,9 @@ def _paths() -> Json:
             {**_answer("events, with sink and reason", document), **_problems(400, 404, 503)},
             [_FEED, *_PAGE, _query("sink", "only what this sink refused", {"type": "string"})],
         ),
+        "/v1/feeds/{feed}/trace": trace_path(_FEED, _query, _problems(400, 404, 429, 503)),
         **_streams(),
+        **_dashboard(),
         "/metrics": _get("Metrics", _answer("exposition format", {"type": "string"}, "text/plain")),
         "/health/live": _get("The process is alive", _answer("alive", document)),
         "/health/ready": _get("Ready to take events", {**_answer("ready", document), **_problems(503)}),
@@ -196,8 +270,9 @@ def _paths() -> Json:
 @cache
 def document() -> Json:
     """The whole document."""
+    bodies = (Promise, Excuse, Drain, SetSlack, PauseSink, Resend, Redrive)
     _, components = msgspec.json.schema_components(
-        [Outcome, Promise, Excuse, Resend, Redrive], ref_template="#/components/schemas/{name}"
+        [Outcome, *bodies, HoldsAnswer, ActsAnswer], ref_template="#/components/schemas/{name}"
     )
     reasons = ", ".join(sorted(FAULT_REASONS))
     components["AnswerFault"]["description"] = f"One line that was not accepted; reason is one of: {reasons}."
@@ -219,6 +294,6 @@ def document() -> Json:
             "version": "1",
             "description": "Keeps timestamped event feeds in order although events arrive late.",
         },
-        "paths": _paths(),
-        "components": {"schemas": components},
+        "paths": guarded(_paths()),
+        "components": {"schemas": components, "securitySchemes": schemes()},
     }

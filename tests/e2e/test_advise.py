@@ -57,6 +57,22 @@ def test_the_documents_example_prints_what_the_document_says(example: tuple[Path
     assert words(example[1]) == words(told)
 
 
+def test_what_was_lost_and_the_report_are_as_the_document_says(example: tuple[Path, str]) -> None:
+    """Its excerpt is of the answer, line by line; what was lost is what the feed's maker left out."""
+    blocks = dict(FENCE.findall(DOCUMENT.read_text()))
+    command = shlex.split(blocks["bash"])[1:]
+    output = run(example[0], *command)
+    answered = words(output[output.index("lost upstream, and late") :])
+    places = [answered.index(line) for line in words(blocks["console"])]
+    assert places == sorted(places) and len(places) > 20
+    assert all(line in words(output) for line in words(example[1]))
+    found = asked(example[0], *command[1:])["sequence"]
+    sure = [each for each in found["lost_ranges"] if not each["may_fill_yet"]]
+    assert [(each["source"], each["first"], each["last"]) for each in sure] == [("gw-2", 5_000, 5_039)]
+    page = (example[0] / "advice.html").read_text()
+    assert page.startswith("<!DOCTYPE html>") and page.count("<svg") == 4 and "<script" not in page
+
+
 def test_the_pasted_lines_replayed_give_the_late_events_that_were_foretold(example: tuple[Path, str]) -> None:
     folder, output = example
     lines = output[output.index("[[feed]]") :]

@@ -30,7 +30,7 @@ def raw(process: Process, head: str, body: bytes) -> None:
     """Send this and hang up."""
     host, port = process.url.removeprefix("http://").split(":")
     with socket.create_connection((host, int(port)), timeout=10) as connection:
-        request = f"POST /v1/feeds/{FEED}/events HTTP/1.1\r\nHost: a\r\nContent-Type: {NDJSON}\r\n{head}\r\n\r\n"
+        request = f"POST /v1/feeds/{FEED}/events HTTP/1.1\r\nHost: [::1]\r\nContent-Type: {NDJSON}\r\n{head}\r\n\r\n"
         connection.sendall(request.encode() + body)
 
 

@@ -262,7 +262,7 @@ def connections_at_most(feed: One, process: Process) -> None:
         assert head.startswith(b"HTTP/1.1 503 ") and b"\r\nRetry-After: " in head
         assert "connections_at_most" in json.loads(body)["detail"]
         body = events([1])
-        head = f"POST /v1/feeds/{feed.name}/events HTTP/1.1\r\nHost: a\r\nContent-Type: {NDJSON}\r\n".encode()
+        head = f"POST /v1/feeds/{feed.name}/events HTTP/1.1\r\nHost: localhost\r\nContent-Type: {NDJSON}\r\n".encode()
         first.sendall(head + f"Content-Length: {len(body)}\r\n\r\n".encode() + body)
         assert first.recv(100).startswith(b"HTTP/1.1 200 ")
         feed.answered += 1
@@ -271,7 +271,7 @@ def connections_at_most(feed: One, process: Process) -> None:
 
 def refusal(connection: socket.socket) -> bytes:
     """What a new connection is told unasked; nothing where it may stay, which shows by its being asked for."""
-    connection.sendall(b"GET /health/live HTTP/1.1\r\nHost: a\r\n\r\n")
+    connection.sendall(b"GET /health/live HTTP/1.1\r\nHost: localhost\r\n\r\n")
     told = connection.recv(4096)
     return b"" if told.startswith(b"HTTP/1.1 200 ") else told
 

@@ -22,7 +22,7 @@ from helpers_raw import LAST, Reply, chunked, exchange, post, replies
 from helpers_service import FEED, PROBLEM, body_of, configuration, event_line, running
 
 # Statuses that the OpenAPI document has, 404 and 405 of addresses that it does not have, and the answers to Expect.
-STATUSES = {100, 417, 200, 204, 400, 404, 405, 408, 409, 410, 413, 415, 422, 429, 503}
+STATUSES = {100, 417, 200, 204, 400, 404, 405, 408, 409, 410, 413, 415, 421, 422, 429, 503}
 REQUESTS, AT_A_TIME = 2_000, 40
 
 
@@ -94,10 +94,10 @@ SEEDS = (
     post(json.dumps({"source": "gw-1", "time": "2023-01-01T00:00:00Z"}).encode(), FEED_PATH + "/marks"),
     post(json.dumps({"source": "gw-1", "reason": "x"}).encode(), FEED_PATH + "/excuse"),
     post(b"", FEED_PATH + "/drain"),
-    f"GET {FEED_PATH}/late?after=0&limit=5 HTTP/1.1\r\nhost: a\r\n\r\n".encode(),
-    f"GET {FEED_PATH}/sources?after=99 HTTP/1.1\r\nhost: a\r\n\r\n".encode(),
-    b"GET /metrics HTTP/1.1\r\nhost: a\r\naccept: application/openmetrics-text\r\n\r\n",
-    b"OPTIONS * HTTP/1.1\r\nhost: a\r\n\r\n",
+    f"GET {FEED_PATH}/late?after=0&limit=5 HTTP/1.1\r\nhost: localhost\r\n\r\n".encode(),
+    f"GET {FEED_PATH}/sources?after=99 HTTP/1.1\r\nhost: localhost\r\n\r\n".encode(),
+    b"GET /metrics HTTP/1.1\r\nhost: localhost\r\naccept: application/openmetrics-text\r\n\r\n",
+    b"OPTIONS * HTTP/1.1\r\nhost: localhost\r\n\r\n",
     b"GET /health/ready HTTP/1.0\r\n\r\n",
 )
 HTTP_TOKENS = (

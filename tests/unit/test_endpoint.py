@@ -110,7 +110,7 @@ async def test_a_repeated_key_is_answered_again_and_takes_nothing_twice(tmp_path
 # ---- what is not there ----------------------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("path", ["/", "/v1", "/v1/feeds/", "/v2/feeds", f"/v1/feeds/{FEED}/nothing", "/metrics/"])
+@pytest.mark.parametrize("path", ["/nothing", "/v1", "/v1/feeds/", "/v2/feeds", f"/v1/feeds/{FEED}/nothing", "/metrics/"])
 async def test_an_address_that_does_not_exist(tmp_path: Path, path: str) -> None:
     async with running(configuration(tmp_path)) as service:
         assert "openapi.json" in problem_of(await service.get(path), 404)
@@ -219,7 +219,7 @@ async def test_a_client_that_goes_away_leaves_nothing_behind(tmp_path: Path, cap
     async with running(configuration(tmp_path)) as service:
         for broken in (b"5\r\n{", b"zz\r\n", b"5\r\n{}{}{}{}{}\r\n"):
             reader, writer = await asyncio.open_connection(service.service.address.host, service.service.address.port)
-            head = f"POST /v1/feeds/{FEED}/events HTTP/1.1\r\nHost: a\r\nContent-Type: {NDJSON}\r\n"
+            head = f"POST /v1/feeds/{FEED}/events HTTP/1.1\r\nHost: localhost\r\nContent-Type: {NDJSON}\r\n"
             writer.write(head.encode() + b"Transfer-Encoding: chunked\r\n\r\n" + broken)
             await writer.drain()
             writer.write_eof()

@@ -21,7 +21,10 @@ from strandline.metrics_reference import METRICS
 
 HOSTILE = 'gw "1"\\\n}# HELP'
 LIMITED = {"held_events_at_most": 100, "events_at_most": 100}
-OF_SOME_SINKS = {"strandline_sink_refused_samples"}  # only sinks that send samples have it
+OF_SOME = {  # only sinks that send samples have the one, only feeds with a steered slack the other
+    "strandline_sink_refused_samples",
+    "strandline_late_target_ratio",
+}
 KNOWN = {  # what may stand in a label: names of the configuration and closed lists, nothing that an event brings
     "feed": {FEED},
     "sink": {"lanes", "a"},
@@ -68,7 +71,7 @@ async def test_every_metric_of_the_reference_is_there_and_none_else(tmp_path: Pa
         for name, meaning in METRICS.items():
             family = found[name]
             assert (family.type, family.documentation) == (meaning.kind, meaning.help), name
-            if name not in OF_SOME_SINKS:
+            if name not in OF_SOME:
                 assert family.samples, f"{name} has no sample in a service that has done nothing yet"
 
 
@@ -112,6 +115,24 @@ async def test_values_are_those_of_the_document(tmp_path: Path) -> None:
         assert delivered == ledger["released"] > 0
         assert value(found, "strandline_journal_bytes") == document["journal"]["bytes"]
         assert value(found, "strandline_journal_syncs", "_total") >= 20
+
+
+async def test_limits_are_those_of_the_configuration(tmp_path: Path) -> None:
+    """What an alert compares with: "nearly full" and "held too long" need no number of their own in a rule."""
+    more = 'slack = { late_share = 0.002, at_most = "3s" }\njournal = { segment_bytes = "64MiB", at_most = "2GiB" }'
+    text = configuration(tmp_path, more=more, hold_at_most="90s", held_events_at_most=500_000, lanes_at_most="2MiB")
+    async with running(text.replace('slack = "0s"\n', "")) as service:
+        found = families(await scraped(service))
+        assert value(found, "strandline_late_target_ratio") == 0.002
+        assert value(found, "strandline_hold_limit_seconds") == 90
+        assert value(found, "strandline_held_limit_events") == 500_000
+        assert value(found, "strandline_lanes_limit_bytes") == 2 * 2**20
+        assert value(found, "strandline_journal_limit_bytes") == 2 * 2**30
+        assert value(found, "strandline_journal_needed_bytes") == 0
+        await service.send([10])
+        found = families(await scraped(service))
+        held = value(found, "strandline_journal_needed_bytes")
+        assert 0 < held < value(found, "strandline_journal_bytes")
 
 
 async def test_histograms_count_what_the_books_count(tmp_path: Path) -> None:

@@ -1,0 +1,73 @@
+"""What a command shows to a service that asks: a token from a file or STRANDLINE_TOKEN, and whom it trusts (`--ca`).
+
+For every command that calls a service, the load generator's too. What a service makes of it is `access_gate`.
+"""
+
+from __future__ import annotations
+
+import argparse
+import re
+import ssl
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+from urllib.parse import urlsplit
+
+from .cli_answers import complain
+from .config_overrides import TOKEN_VARIABLE
+from .errors import ConfigError
+from .private_files import read_private
+
+_TOKEN = re.compile(r"[A-Za-z0-9._~+/-]{1,4096}=*", re.ASCII)  # b64token of RFC 6750, 2.1
+_THIS_MACHINE = ("localhost", "127.0.0.1", "::1")
+
+
+@dataclass(frozen=True, slots=True)
+class Caller:
+    """Headers for each request, and the context for https (None: the system's own certificates)."""
+
+    headers: Mapping[str, str] = field(default_factory=dict)
+    context: ssl.SSLContext | None = None
+
+
+def caller_of(options: argparse.Namespace, url: str, environ: Mapping[str, str]) -> Caller:
+    """What --token-file (or STRANDLINE_TOKEN) and --ca say, for this address. Raises ConfigError."""
+    return caller(url, options.token_file, options.ca, environ)
+
+
+def caller(url: str, token_file: Path | None, ca: Path | None, environ: Mapping[str, str]) -> Caller:
+    """See `caller_of`."""
+    try:
+        parts = urlsplit(url)
+        host = parts.hostname
+    except ValueError as error:
+        raise ConfigError([f"{url}: is no address: {error}"]) from None
+    token = ""
+    if token_file is not None:
+        token = _token(read_private(token_file, by_group=False), str(token_file))
+    elif environ.get(TOKEN_VARIABLE):
+        token = _token(environ[TOKEN_VARIABLE], f"variable {TOKEN_VARIABLE}")
+    if ca is not None and parts.scheme != "https":
+        raise ConfigError([f"--ca {ca}: only for https://..., not for {url}"])
+    if token and parts.scheme != "https" and host not in _THIS_MACHINE:
+        complain(f"warning: the token goes to {host} unencrypted, and whoever sees it can use it; use https://...")
+    headers = {"Authorization": f"Bearer {token}"} if token else {}
+    return Caller(headers, _trusting(ca) if ca is not None else None)
+
+
+def _token(text: str, place: str) -> str:
+    """The token in a text, which is never shown. Raises ConfigError."""
+    token = text.strip(" \t\r\n")
+    if _TOKEN.fullmatch(token) is None:
+        raise ConfigError([f"{place}: holds no token: one line is expected, as `strandline token make` printed it"])
+    return token
+
+
+def _trusting(ca: Path) -> ssl.SSLContext:
+    try:
+        context = ssl.create_default_context(cafile=ca)
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or str(error)
+        raise ConfigError([f"--ca {ca}: is no file of certificates (PEM): {reason}"]) from None
+    context.minimum_version = ssl.TLSVersion.TLSv1_2
+    return context

@@ -1,0 +1,321 @@
+// The page: its view, the feed it follows, and what is shown when. Data comes in by the stream and by the history;
+// words go to the panels, pictures to their canvases. A tab in the background keeps only the newest moment.
+
+import { Acts, askToken } from "./acts.js";
+import { readView, writeView } from "./address.js";
+import { Api, LiveStream, Problem } from "./api.js";
+import { Controls } from "./controls.js";
+import { byId, setAttribute, setSentence, setText } from "./dom.js";
+import { age, clean, instant } from "./format.js";
+import { laneSentence } from "./lanes.js";
+import { showBooks, showHappened, showHops, showSentence, showSinks, showWords, Speaker } from "./panels.js";
+import { Pictures } from "./pictures.js";
+import { Record } from "./record.js";
+import { behind_s } from "./reading.js";
+import { speak } from "./sentence.js";
+import { showTable } from "./table.js";
+
+const POINTS = 600,
+  FEEDS_AGAIN_MS = 2000,
+  HISTORY_AFTER_MS = 200,
+  HISTORY_AGAIN_MS = 2000;
+const TABLE_SEEN_MS = 900,
+  TABLE_HIDDEN_MS = 5000,
+  BOOKS_EVERY_MS = 900,
+  FROZEN_EVERY_MS = 1500;
+const LINKS = { connecting: "○ connecting", live: "● live", lost: "▲ lost" };
+
+class Page {
+  view = readView(location.search);
+  record = new Record();
+  live = null;
+  raw = null;
+  link = { state: "connecting", why: "", since_ms: Date.now() };
+  drawn = 0;
+  shownAt = {};
+
+  constructor() {
+    this.api = new Api(askToken);
+    this.acts = new Acts(
+      this.api,
+      () => this.view.feed,
+      (slack_s) => this.pictures.slackWords(slack_s),
+    );
+    this.openAct = (act, subject, given) => this.acts.open(act, subject, given);
+    this.pictures = new Pictures(() => this.want());
+    this.controls = new Controls(this);
+    this.speaker = new Speaker();
+    this.stream = new LiveStream(
+      this.api,
+      (data) => this.#moment(data),
+      (state, why) => this.#linked(state, why),
+    );
+    this.#listen();
+    this.controls.show(this.view, null);
+    this.start();
+  }
+
+  #listen() {
+    byId("set-slack").addEventListener("click", () => this.#setSlack());
+    byId("end-slack").addEventListener("click", () => this.openAct("slack_end", this.view.feed));
+    byId("drain").addEventListener("click", () => this.openAct("drain", this.view.feed));
+    byId("chosen-excuse").addEventListener("click", () => this.excuseChosen());
+    addEventListener("popstate", () => {
+      const view = readView(location.search);
+      this.change({ ...view, feed: view.feed ?? this.view.feed }, false);
+    });
+    document.addEventListener("visibilitychange", () => this.#seen());
+    setInterval(() => this.#tick(), 1000);
+  }
+
+  /** Learn the feeds, then follow one. Tries until the service answers. */
+  async start() {
+    for (;;) {
+      try {
+        const answer = await this.api.json("/v1/feeds");
+        const names = (answer.feeds ?? answer).map((each) =>
+          typeof each === "string" ? each : (each.name ?? each.feed),
+        );
+        if (!names.length)
+          throw new Problem(
+            0,
+            "There is no feed to see",
+            "The configuration names none, or the token may read none.",
+          );
+        if (!names.includes(this.view.feed)) this.view.feed = names[0];
+        this.controls.feeds(names, this.view.feed);
+        history.replaceState(null, "", location.pathname + writeView(this.view));
+        this.follow();
+        return;
+      } catch (error) {
+        this.#linked("lost", error instanceof Problem ? `${error.title}. ${error.detail ?? ""}` : String(error));
+        await new Promise((done) => setTimeout(done, FEEDS_AGAIN_MS));
+      }
+    }
+  }
+
+  /** Follow the feed of the view from the beginning. */
+  follow() {
+    this.record.clear();
+    this.live = null;
+    this.#open();
+    this.#history(0);
+  }
+
+  #open() {
+    const query = new URLSearchParams({ lanes: String(this.view.lanes) });
+    if (this.view.search) query.set("q", this.view.search);
+    this.stream.open(`/v1/feeds/${encodeURIComponent(this.view.feed)}/live?${query}`);
+  }
+
+  /** Another view; what depends on what changed is fetched again. */
+  change(changes, write = true) {
+    const before = { ...this.view };
+    Object.assign(this.view, changes);
+    const differs = (name) => before[name] !== this.view[name];
+    if (write)
+      history[differs("feed") ? "pushState" : "replaceState"](null, "", location.pathname + writeView(this.view));
+    if (differs("feed")) this.follow();
+    else {
+      if (differs("search") || differs("lanes")) this.#open();
+      if (differs("at_ms") || differs("window_s")) this.#history(HISTORY_AFTER_MS);
+    }
+    this.controls.show(this.view, this.nowMs());
+    this.pictures.stale = true;
+    this.shownAt = {};
+    this.want();
+  }
+
+  nowMs() {
+    return this.live?.now_ms ?? null;
+  }
+
+  /** The window in which a person moves, in seconds: the chosen one, else that of the lanes. */
+  window_s() {
+    const moment = this.#shown();
+    return this.view.window_s ?? (moment ? this.pictures.windows(moment, this.view).lanes_s : 60);
+  }
+
+  /** Fetch the past that the pictures need, after a moment in which more may change. */
+  #history(after_ms) {
+    clearTimeout(this.waiting);
+    this.waiting = setTimeout(async () => {
+      const feed = this.view.feed,
+        to_ms = Math.round(this.view.at_ms ?? this.nowMs() ?? Date.now());
+      const clock_s = this.live
+        ? this.pictures.windows(this.live, this.view).clock_s
+        : Math.max(300, this.view.window_s ?? 0);
+      const query = new URLSearchParams({
+        from_ms: String(Math.floor(to_ms - (clock_s + 60) * 1000)),
+        to_ms: String(to_ms + 1000),
+        points: String(POINTS),
+      });
+      try {
+        const found = await this.api.json(`/v1/feeds/${encodeURIComponent(feed)}/history?${query}`);
+        if (feed !== this.view.feed) return;
+        this.record.load(found);
+        this.historyOf_s = clock_s;
+        this.pictures.stale = true;
+        this.want();
+      } catch (error) {
+        if (!(error instanceof Problem)) throw error;
+        if (error.status === 0) this.#history(HISTORY_AGAIN_MS);
+      }
+    }, after_ms);
+  }
+
+  #moment(data) {
+    this.raw = data;
+    if (document.hidden) return;
+    this.#take();
+  }
+
+  /** Take the newest moment over and ask for a frame. */
+  #take() {
+    if (this.raw === null) return;
+    this.live = JSON.parse(this.raw);
+    this.raw = null;
+    this.live.lanes ??= [];
+    this.record.append(this.live);
+    const { clock_s } = this.pictures.windows(this.live, this.view);
+    if (this.view.at_ms === null && this.historyOf_s && clock_s > this.historyOf_s) {
+      this.historyOf_s = clock_s;
+      this.#history(HISTORY_AFTER_MS);
+    }
+    if (this.view.at_ms === null || this.#due("frozen", FROZEN_EVERY_MS)) this.want();
+  }
+
+  #linked(state, why) {
+    if (state === "live" && this.link.state !== "live" && this.record.t_ms.length) this.#history(HISTORY_AGAIN_MS);
+    if (state === this.link.state && why === this.link.why) return;
+    const lost = state === "connecting" && this.link.state === "lost"; // trying again does not make it less lost
+    if (lost) return;
+    this.link = { state, why, since_ms: this.link.state === state ? this.link.since_ms : Date.now() };
+    this.#showLink();
+  }
+
+  #showLink() {
+    const { state, why, since_ms } = this.link,
+      place = byId("link");
+    setText(place, LINKS[state]);
+    setAttribute(document.body, "data-link", state);
+    if (state !== "lost") return;
+    setAttribute(byId("now"), "data-level", "bad");
+    const last = this.live ? ` What stands here is from ${instant(this.live.now_ms, this.view.zone)}.` : "";
+    setSentence(byId("says"), [`No word from the service for ${age((Date.now() - since_ms) / 1000)}.${last}`]);
+    setSentence(byId("next"), [`${why} This page tries again by itself.`]);
+    byId("offers").replaceChildren();
+    byId("offers").keyedNow = undefined;
+    setText(byId("spoken"), "No word from the service. This page tries again by itself.");
+  }
+
+  #seen() {
+    if (document.hidden) return;
+    this.#take();
+    if (this.record.t_ms.length) this.#history(0);
+    this.pictures.stale = true;
+    this.want();
+  }
+
+  #tick() {
+    if (!document.hidden && this.link.state === "lost") this.#showLink();
+  }
+
+  /** Ask for one frame, however often. */
+  want() {
+    if (this.drawn || document.hidden) return;
+    this.drawn = requestAnimationFrame(() => {
+      this.drawn = 0;
+      this.#draw();
+    });
+  }
+
+  /** What is shown: the live moment, or the feed as it was at the frozen time. */
+  #shown() {
+    if (this.view.at_ms === null || !this.live) return this.live;
+    return this.record.momentAt(this.view.at_ms, this.live);
+  }
+
+  #due(what, every_ms) {
+    const now_ms = performance.now();
+    if (now_ms - (this.shownAt[what] ?? -Infinity) < every_ms) return false;
+    this.shownAt[what] = now_ms;
+    return true;
+  }
+
+  #draw() {
+    const moment = this.#shown();
+    document.body.classList.toggle("unknown", !moment && this.live !== null);
+    if (!moment) {
+      if (this.live) this.#nothingKept();
+      return;
+    }
+    const { zone, table } = this.view;
+    setText(byId("clock"), `${instant(moment.now_ms, zone)} ${zone === "utc" ? "UTC" : "local"}`);
+    const spoken = speak(moment, zone);
+    if (this.link.state !== "lost") {
+      showSentence(spoken, moment, this.openAct);
+      if (this.view.at_ms === null) this.speaker.say(spoken, performance.now());
+    }
+    this.#title(spoken, moment);
+    if (this.#due("hops", BOOKS_EVERY_MS)) showHops(moment, spoken);
+    this.pictures.draw(moment, this.record, this.view);
+    this.#chosen(moment);
+    if (this.#due("table", table ? TABLE_SEEN_MS : TABLE_HIDDEN_MS)) showTable(moment, zone, this.openAct, table);
+    if (this.#due("books", BOOKS_EVERY_MS)) this.#slower(moment, zone);
+    const pointed = this.pictures.pointed(this.record, zone);
+    if (pointed) setText(byId("behind-says"), pointed);
+  }
+
+  /** The frozen time lies before everything that is known. */
+  #nothingKept() {
+    setAttribute(byId("now"), "data-level", "watch");
+    setSentence(byId("says"), [`Nothing is kept of ${instant(this.view.at_ms, this.view.zone)}.`]);
+    setSentence(byId("next"), [
+      "Go to a later time, or back to live. A day is kept, since the last start of the service.",
+    ]);
+  }
+
+  /** What need not move twice a second. */
+  #slower(moment, zone) {
+    showBooks(moment);
+    showSinks(moment, zone, this.openAct);
+    showWords(moment, this.record);
+    showHappened(this.record, moment.now_ms, zone);
+    const set = this.record.acts.findLast((act) => act.act === "slack");
+    byId("end-slack").hidden = !set || set.slack_s === null || !(Date.parse(set.until ?? "") > moment.now_ms);
+    this.controls.show(this.view, this.nowMs());
+  }
+
+  #title(spoken, moment) {
+    const sign = { fine: "", watch: "△ ", bad: "▲ " }[spoken.level],
+      behind = behind_s(moment);
+    const how = behind === null ? "" : ` ${age(Math.round(behind))} behind`;
+    const title = `${sign}${clean(moment.feed)}${how} – Strandline`;
+    if (document.title !== title) document.title = title;
+  }
+
+  #chosen(moment) {
+    const lane = moment.lanes.find((each) => each.source === this.pictures.selected);
+    const words = lane
+      ? [{ name: lane.source }, laneSentence(moment, lane, this.view.zone)]
+      : ["Choose a lane to see it in words."];
+    setSentence(byId("chosen-says"), words);
+    byId("chosen-excuse").hidden = !lane || lane.excused || Boolean(moment.past);
+  }
+
+  /** Excuse the source of the chosen lane, after a confirmation. */
+  excuseChosen() {
+    const lane = this.live?.lanes.find((each) => each.source === this.pictures.selected);
+    if (lane && !lane.excused) this.openAct("excuse", lane.source);
+  }
+
+  #setSlack() {
+    const slack_s = this.pictures.chosenSlack_s ?? this.live?.slack_s ?? 5;
+    this.openAct("slack", this.view.feed, {
+      slack: slack_s < 1 ? `${Number((slack_s * 1000).toPrecision(2))}ms` : `${Number(slack_s.toPrecision(2))}s`,
+    });
+  }
+}
+
+new Page();

@@ -1,0 +1,30 @@
+// What follows at once from a moment: how far behind it is, whether that is as set, a source's lane. Pure: no words.
+
+export const CURRENT_WITHIN_S = 2; // an output no further behind than its slack and this is called current
+// Of idle_after: a source that is behind the others by less is not called silent by the service either.
+const APART_SHARE = 0.25;
+
+/** How many seconds the output is behind the clock; null before there is any. */
+export function behind_s(moment) {
+  return moment.watermark_ms === null ? null : Math.max(0, (moment.now_ms - moment.watermark_ms) / 1000);
+}
+
+/** Is the output as current as the slack allows? */
+export function isCurrent(moment) {
+  const behind = behind_s(moment);
+  const apart_s = Math.max(CURRENT_WITHIN_S, (moment.idle_after_s ?? 0) * APART_SHARE);
+  return behind !== null && behind - moment.slack_s <= apart_s;
+}
+
+/** The lane of a source among those that the moment shows; null where it is not among them. */
+export function laneOf(moment, source) {
+  return (moment.lanes ?? []).find((lane) => lane.source === source) ?? null;
+}
+
+/** When anything was heard last, as far as the lanes tell; else the newest event time. */
+export function lastHeard(moment) {
+  const heard = (moment.lanes ?? [])
+    .map((lane) => lane.heard_ms)
+    .filter((each) => each !== null && each !== undefined);
+  return heard.length ? Math.max(...heard) : moment.newest_ms;
+}
