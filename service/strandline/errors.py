@@ -35,9 +35,19 @@ REFUSALS: dict[str, tuple[int, str]] = {
     "lanes_full": (429, "The late lane or the quarantine has reached its limit"),
     "disk_full": (503, "The disk has no room for the journal"),
     "promise_ahead": (422, "The promise lies in the future"),
+    "header_unreadable": (400, "Bad Request"),
+    "body_slow": (408, "Request Timeout"),
+    "body_too_large": (413, "Content Too Large"),
+    "body_unsupported": (415, "Unsupported Media Type"),
+    "body_unreadable": (422, "Unprocessable Content"),
     "sink_paused": (409, "The sink is paused"),
     "stopping": (503, "The service is stopping"),
     "failed": (503, "The feed has stopped after a failed write"),
+}
+
+# A body that is refused before its events are looked at is counted under the reason of its status.
+BODY_REASONS: dict[int, str] = {
+    status: reason for reason, (status, _) in REFUSALS.items() if reason.startswith(("body_", "header_"))
 }
 
 

@@ -12,6 +12,7 @@ from pathlib import Path
 import aiohttp
 from helpers_faulty import FaultyDisk, planted, scripted
 from helpers_service import NDJSON, body_of, configuration, events, eventually, problem_of, retry_after, running
+from strandline.errors import REFUSALS
 from strandline.sinks.lanes import forget_rows  # what `strandline quarantine forget` calls
 
 
@@ -152,3 +153,20 @@ async def test_one_connection_serves_many_requests(tmp_path: Path) -> None:
             url = f"{service.feed_url}/events"
             async with session.post(url, data=events([second]), headers={"Content-Type": NDJSON}) as answer:
                 assert answer.status == 200
+
+
+async def test_bodies_that_are_refused_unread_are_counted_by_reason(tmp_path: Path) -> None:
+    """RFC 9110: 400, 413, 415, 422; a sender that is refused must be seen by who looks at the metrics."""
+    cases = {
+        "header_unreadable": {"Idempotency-Key": "no quotes"},
+        "body_too_large": {},
+        "body_unsupported": {"Content-Type": "text/html"},
+        "body_unreadable": {"Content-Encoding": "gzip"},
+    }
+    async with running(configuration(tmp_path, body_bytes_at_most="64KiB", events_at_most=10)) as service:
+        for reason, headers in cases.items():
+            body = events(range(11 if reason == "body_too_large" else 1))
+            answer = await service.post("events", body, headers=headers)
+            assert (answer.status, service.runtime.feed.refusals) == (REFUSALS[reason][0], {reason: 1})
+            service.runtime.feed.refusals.clear()
+        assert (await service.send([1]))["accepted"] == 1

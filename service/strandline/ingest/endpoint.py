@@ -17,7 +17,7 @@ from aiohttp import web
 
 from ..config import Config
 from ..core.columns import Arrival, RequestKey
-from ..errors import BodyError, TooManyFaults
+from ..errors import BODY_REASONS, BodyError, TooManyFaults
 from ..hops import Bodies
 from ..problems import NotThere
 from ..runtime import FeedRuntime
@@ -55,6 +55,14 @@ def runtime_of(request: web.Request) -> FeedRuntime:
 async def post_events(request: web.Request) -> web.Response:
     """Take events; answer what became of each once all of it is durable."""
     runtime = runtime_of(request)
+    try:
+        return await _posted(request, runtime)
+    except BodyError as error:
+        runtime.feed.note_refusal(BODY_REASONS[error.status])
+        raise
+
+
+async def _posted(request: web.Request, runtime: FeedRuntime) -> web.Response:
     media_type = media_type_of(request.headers.get("Content-Type", ""), request.headers)
     async with request.app[BODIES]:
         with _at(runtime.reading, runtime):
