@@ -113,7 +113,7 @@ class FeedMemory:
 
     def _failing(self) -> list[bool]:
         """Which sinks fail, in their order; the last place stands for all further ones."""
-        failing = [delivery.state().failing_since_ns is not None for delivery in self.runtime.deliveries.values()]
+        failing = [delivery.failing for delivery in self.runtime.deliveries.values()]
         return [*failing[: SINKS - 1], any(failing[SINKS - 1 :])]
 
     def _fill_feed(self, row: Rows) -> None:
