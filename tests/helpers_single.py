@@ -11,7 +11,9 @@ from dataclasses import dataclass
 from multiprocessing import get_context
 
 import numpy as np
+from helpers_strands import constants
 from numpy.typing import NDArray
+from strandline.core import held as held_rows
 from strandline.core.columns import Arrival
 from strandline.core.effects import Deliver, Effect
 from strandline.core.feed import Feed
@@ -72,7 +74,7 @@ def one_by_one(
         feed.arrive(given, now_ns, row)
         found.take(feed.synced(feed.next_lsn), row)
         held[row] = state.runs.held
-        open_runs_peak = max(open_runs_peak, len(state.runs.runs))
+        open_runs_peak = max(open_runs_peak, len(state.runs.open.runs))
     feed.check()
     drained = state.runs.held
     feed.drain(int(arrivals[-1]), rows)
@@ -88,12 +90,15 @@ def one_by_one(
 # ---- work for processes (module level, so that it can be sent there) ------------------------------------------------
 
 
-def pass_flights(part: str, by_origin: bool, settings: Settings) -> Passed:
-    """The flights through a feed, one flight an arrival, from one source or from the three origins."""
+def pass_flights(part: str, by_origin: bool, settings: Settings, *, gathering: bool = True) -> Passed:
+    """The flights through a feed, one flight an arrival, from one source or from the three origins.
+
+    Without gathering each flight is dealt over the open runs at once, so that these are counted as published.
+    """
     trace = flights(part=part)
-    if by_origin:
-        return one_by_one(trace.times, trace.arrivals, settings, trace.sources, trace.source_names)
-    return one_by_one(trace.times, trace.arrivals, settings)
+    origins = (trace.sources, trace.source_names) if by_origin else ()
+    with constants(FRESH_EVENTS=held_rows.FRESH_EVENTS if gathering else 0):
+        return one_by_one(trace.times, trace.arrivals, settings, *origins)
 
 
 def poisson(rate: float, mean_s: float, events: int, seed: int) -> Trace:
