@@ -23,10 +23,11 @@ from tempfile import TemporaryDirectory
 from types import FunctionType
 
 import fuzz_targets
+import fuzz_targets_arrow
 import fuzz_targets_journal
 from fuzz_targets import Target
 
-TARGETS: dict[str, Target] = {**fuzz_targets.TARGETS, **fuzz_targets_journal.TARGETS}
+TARGETS: dict[str, Target] = {**fuzz_targets.TARGETS, **fuzz_targets_arrow.TARGETS, **fuzz_targets_journal.TARGETS}
 CI_INPUTS = sum(target.inputs for target in TARGETS.values())
 SEEDS = 500
 GROWTH_BYTES_AT_MOST = 100_000  # left behind by some hundred inputs: caches of the standard library, at most

@@ -19,6 +19,8 @@ import msgspec
 import zstandard
 from fuzz_mutate import mutated
 from helpers_arrival import check_arrival, plain
+from helpers_arrow import ARROW
+from helpers_arrow import body_of as arrow_body_of
 from strandline.config import parse
 from strandline.config_units import duration_ns, size_bytes
 from strandline.core.columns import Arrival
@@ -79,7 +81,9 @@ def _body(draw: Random) -> bytes:
     number = draw.randrange(len(DECODERS))
     events = [_event(draw, number) for _ in range(draw.choice((0, 1, 2, 3, 8, 40)))]
     media_type = draw.choice(MEDIA_TYPES)
-    if "msgpack" in media_type:
+    if media_type == ARROW:
+        body = arrow_body_of(events) or b""
+    elif "msgpack" in media_type:
         body = msgspec.msgpack.encode(events[0] if len(events) == 1 and draw.random() < 0.5 else events)
     else:
         texts = [json.dumps(event, ensure_ascii=draw.random() < 0.5).encode() for event in events]

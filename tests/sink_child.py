@@ -22,6 +22,7 @@ from strandline.core.columns import Batch, Lane
 from strandline.ports import Sink
 from strandline.sinks.lanes import LaneStore
 from strandline.sinks.ndjson import NdjsonSink
+from strandline.sinks.parquet import ParquetSink
 from strandline.sinks.sqlite import SqliteSink
 
 BATCHES = 24
@@ -40,6 +41,8 @@ def make(kind: str, place: Path) -> Sink:
         return SqliteSink(place / "river.db", "river")
     if kind == "ndjson":
         return NdjsonSink(place / "files", "river", VirtualTime(), roll_bytes=20_000)
+    if kind == "parquet":
+        return ParquetSink(place / "files", "river", VirtualTime(), roll_bytes=12_000, rows_per_group=200)
     return LaneStore(place / "lanes" / "lanes.db")
 
 

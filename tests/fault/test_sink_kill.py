@@ -17,6 +17,7 @@ from collections.abc import Iterator
 from contextlib import closing
 from pathlib import Path
 
+import pyarrow.parquet as pq
 import pytest
 from helpers_sinks import HeldLines
 from sink_child import BATCHES, everything, make
@@ -64,6 +65,16 @@ POINTS = {
         ("os.rename", 3),
         ("open", 6),
     ],
+    "parquet": [
+        ("lines", 1),
+        ("open", 1),
+        ("os.rename", 1),
+        ("lines", 7),
+        ("os.rename", 2),
+        ("os.remove", 1),
+        ("open", 4),
+        ("os.rename", 3),
+    ],
 }
 
 
@@ -108,6 +119,10 @@ def finished(kind: str, place: Path, told: dict[str, int]) -> None:
 
 def stored(kind: str, place: Path, lane: str) -> list[bytes]:
     """A lane's events as the store has them, in its order."""
+    if kind == "parquet":
+        paths = sorted(place.glob(f"files/river-{lane}-*"))
+        assert all(path.suffix == ".parquet" for path in paths)
+        return [text.encode() for path in paths for text in pq.read_table(path)["event"].to_pylist()]
     if kind == "ndjson":
         paths = sorted(place.glob(f"files/river-{lane}-*"))
         assert all(path.suffix == ".ndjson" for path in paths)

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Mapping, Sequence
+from copy import copy
 from typing import Annotated, Any, NamedTuple
 
 import msgspec
@@ -18,12 +19,13 @@ from numpy.typing import NDArray
 from ..core.columns import Arrival, Fault, Times
 from ..errors import TooManyFaults
 from . import cloudevents
-from .formats import split_body
+from .arrow import ARROW, arrow_rows
+from .formats import check_size, split_body
 from .json_items import json_fault
 from .limits import BodyLimits
 from .lines import Lines, is_utf8, utf8_fault
 from .nesting import deep_suspects, deepest
-from .pointer import Fields, Values
+from .pointer import Fields, Values, parse_pointer
 from .timestamps import unit_bounds
 from .values import (
     LineFault,
@@ -69,12 +71,20 @@ class Decoder:
         self._at = Values(time_at, source, id)
         self._fields = Fields(time_at, _time_type(time_unit), source, id)
 
+    def of_source(self, name: str) -> Decoder:
+        """The same, for bodies whose events all are of this source, whatever they hold."""
+        other = copy(self)
+        other._feed_name = name
+        return other
+
     def decode(self, body: bytes, media_type: str, source_numbers: Mapping[str, int]) -> Arrival:
         """The body, decoded; `media_type` is one of formats.MEDIA_TYPES.
 
         `source_numbers` is the feed's table of sources, numbered from 0 without gaps. Raises BodyError (413, 415, 422)
         and TooManyFaults; a line that is no event is a fault of the arrival and hinders no other.
         """
+        if media_type == ARROW:
+            return self._by_rows(self._rows(body), source_numbers)
         lines = self.split(body, media_type)
         return self.at_once(lines, source_numbers) or self.line_by_line(lines, source_numbers)
 
@@ -86,6 +96,9 @@ class Decoder:
 
     def split(self, body: bytes, media_type: str) -> Lines:
         """The body as lines. Raises BodyError (413, 415, 422)."""
+        if media_type == ARROW:
+            lines: Lines = self._rows(body).as_lines()
+            return lines
         return split_body(body, media_type, self._limits)
 
     # --- the fast way ---
@@ -139,6 +152,49 @@ class Decoder:
         names = [self._feed_name] * count if self._at.source is None else fields.sources(records)
         identities, bad_ids = identity_column(names, fields.ids(records))
         return _Columns(times, sources, new, identities, [*bad_times, *bad_sources, *bad_ids])
+
+    # --- rows of columns (Arrow): the lines are made here, and only those of doubtful rows are read again ---
+
+    def _rows(self, body: bytes) -> Any:
+        """The arrow_rows.Rows of a body. Raises BodyError."""
+        check_size(body, self._limits)
+        module, at = arrow_rows(), self._at
+        source, id = (None if text is None else parse_pointer(text) for text in (at.source, at.id))
+        return module.read_rows(body, module.Pointed(parse_pointer(at.time), self._unit, source, id), self._limits)
+
+    def _by_rows(self, rows: Any, source_numbers: Mapping[str, int]) -> Arrival:
+        lines: Lines = rows.lines
+        if not len(lines.ends):
+            return self.line_by_line(rows.as_lines(), source_numbers)
+        faults = lines.faults
+        columns, bad = self._row_columns(rows, source_numbers)
+        bad |= lines.ends - lines.starts > self._limits.event_bytes_at_most
+        if bad.any():
+            judged = self.line_by_line(lines.select(bad), source_numbers)
+            if len(judged.times):  # the columns were too careful
+                return self.line_by_line(rows.as_lines(), source_numbers)
+            faults, rows = tuple(judged.faults), rows.select(~bad)
+            lines = rows.lines
+            columns, _ = self._row_columns(rows, source_numbers)
+        self._check_faults(faults)
+        return _arrival(lines, columns, faults)
+
+    def _row_columns(self, rows: Any, source_numbers: Mapping[str, int]) -> tuple[_Columns, NDArray[np.bool_]]:
+        """The columns, and which rows are no events or may be none."""
+        module = arrow_rows()
+        times, bad = module.times_of(rows.time, self._unit)
+        if self._at.source is None:
+            number = source_numbers.get(self._feed_name, len(source_numbers))
+            sources = np.full(len(times), number, np.uint32)
+            new = [self._feed_name] if len(times) and number == len(source_numbers) else []
+        else:
+            sources, new, bad_sources = module.sources_of(rows.source, source_numbers)
+            bad = bad | bad_sources
+        if self._at.id is None:
+            return _Columns(times, sources, new, None, ()), bad
+        ids, bad_ids = module.texts_of(rows.id)
+        names = [self._feed_name] * len(ids) if self._at.source is None else module.texts_of(rows.source)[0]
+        return _Columns(times, sources, new, identity_column(names, ids)[0], ()), bad | bad_ids
 
     # --- the slow way ---
 

@@ -11,6 +11,7 @@ from functools import partial
 from typing import NamedTuple
 
 from ..errors import BodyError
+from .arrow import ARROW
 from .json_items import ARRAY, EITHER, OBJECT, split_json
 from .json_sequence import split_sequence
 from .limits import MEBIBYTE, BodyLimits
@@ -21,9 +22,12 @@ NDJSON = "application/x-ndjson"
 
 
 class Format(NamedTuple):
-    """How a body of one media type is read. `split` takes the body and the limits and raises BodyError (413, 422)."""
+    """How a body of one media type is read. `split` takes the body and the limits and raises BodyError (413, 422).
 
-    split: Callable[[bytes, BodyLimits], Lines]
+    None: by columns, in which the decoder looks for what the feed names.
+    """
+
+    split: Callable[[bytes, BodyLimits], Lines] | None
     what: str  # for people
     are_cloudevents: bool = False  # whether its events must keep the rules of CloudEvents
     loop_bytes: int = 4 * MEBIBYTE  # larger bodies hold the loop up for longer than some 100 ms, if they are hostile
@@ -40,18 +44,25 @@ FORMATS: dict[str, Format] = {
     "application/vnd.msgpack": Format(
         split_messagepack, "one MessagePack map, or an array of maps", loop_bytes=MEBIBYTE // 4
     ),
+    # A few bytes can stand for many rows, and the first body imports a large library: never on the loop.
+    ARROW: Format(None, "one Arrow IPC stream (columns)", loop_bytes=0),
 }
 MEDIA_TYPES = tuple(FORMATS)
 
 
 def split_body(body: bytes, media_type: str, limits: BodyLimits) -> Lines:
-    """The lines of a body of one of MEDIA_TYPES. Raises BodyError (413, 415, 422)."""
-    if len(body) > limits.decoded_bytes_at_most:
-        detail = f"the body has {len(body)} bytes, {limits.decoded_bytes_at_most} are allowed: send less at once"
-        raise BodyError(413, "Content Too Large", detail)
-    if media_type not in FORMATS:
+    """The lines of a body of one of MEDIA_TYPES that has them. Raises BodyError (413, 415, 422)."""
+    check_size(body, limits)
+    form = FORMATS.get(media_type)
+    if form is None or form.split is None:
         raise BodyError(415, "Unsupported Media Type", f"bodies may be {', '.join(MEDIA_TYPES)}")
-    form = FORMATS[media_type]
     lines = form.split(body, limits)
     check_count(len(lines.ends) + len(lines.faults), limits)
     return replace(lines, are_cloudevents=True) if form.are_cloudevents else lines
+
+
+def check_size(body: bytes, limits: BodyLimits) -> None:
+    """Raise BodyError 413 for a body beyond the limit on decoded bytes."""
+    if len(body) > limits.decoded_bytes_at_most:
+        detail = f"the body has {len(body)} bytes, {limits.decoded_bytes_at_most} are allowed: send less at once"
+        raise BodyError(413, "Content Too Large", detail)

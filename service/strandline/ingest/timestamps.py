@@ -212,6 +212,19 @@ def parse_rfc3339_column(texts: Texts) -> tuple[Times, dict[int, TimestampError]
     return times, errors
 
 
+def parse_rfc3339_fixed(table: NDArray[np.uint8]) -> tuple[Times, NDArray[np.bool_]]:
+    """`parse_rfc3339` for texts of one length, one a row, with a column more than they are long (its bytes count for
+    nothing): int64[n], and which rows are no times (their time is 0)."""
+    length = table.shape[1] - 1
+    times, bad = np.zeros(len(table), np.int64), np.zeros(len(table), np.bool_)
+    for row in _parse_group(np.arange(len(table)), length, np.ascontiguousarray(table).tobytes(), times).tolist():
+        try:
+            times[row] = parse_rfc3339(table[row, :length].tobytes())
+        except TimestampError:
+            bad[row] = True
+    return times, bad
+
+
 _Group = tuple[NDArray[np.int64], int, bytes | None]
 
 

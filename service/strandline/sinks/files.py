@@ -26,6 +26,13 @@ def sync_directory(directory: Path) -> None:
         os.close(descriptor)
 
 
+def write_all(descriptor: int, block: bytes | memoryview) -> None:
+    """Write a block to its end. Raises OSError."""
+    rest = memoryview(block)
+    while rest:
+        rest = rest[os.write(descriptor, rest) :]
+
+
 def make_directory(directory: Path) -> None:
     """Make a folder and those above it that are absent, durably. Raises OSError (a file in its place too)."""
     absent = [each for each in (directory, *directory.parents) if not each.exists()]

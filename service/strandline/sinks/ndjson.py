@@ -17,6 +17,7 @@ import re
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 from urllib.parse import quote
 
 import msgspec
@@ -24,7 +25,7 @@ import msgspec
 from ..core.columns import Batch, Lane
 from ..errors import SinkRetry, StrandlineError
 from ..ports import Clock, Lines
-from .files import make_directory, sync_data, sync_directory
+from .files import make_directory, sync_data, sync_directory, write_all
 from .repairs import Repair
 from .rows import late_by_ns, one_lane, source_column
 from .worker import OwnThread
@@ -57,8 +58,11 @@ class NdjsonSink:
     null where the feed has none). `take` buffers in a file named `.part`; a file is completed once it has `roll_bytes`
     or, looked at after each `take`, is older than `roll_every_s`; `flush` completes what there is. Complete files are
     the collector's: this sink never touches them again. While at least one of a lane is left the newest one tells the
-    position; where none is left the lane's position is unknown here.
+    position; where none is left the lane's position is unknown here. A format that other files share this with says
+    what their names end with, what a batch becomes (`_block`), and how that is written and finished.
     """
+
+    _ending = "ndjson"
 
     def __init__(
         self,
@@ -74,7 +78,7 @@ class NdjsonSink:
         self._clock = clock
         self._roll_bytes = roll_bytes
         self._roll_every_s = roll_every_s
-        self._thread = OwnThread(f"ndjson {self._prefix}")
+        self._thread = OwnThread(f"{self._ending} {self._prefix}")
         self._parts: dict[Lane, _Part] = {}
         self._reached: dict[Lane, int] = {}
         self._bounds: dict[Lane, tuple[int, int]] = {}  # batches behind which a file must end
@@ -111,14 +115,14 @@ class NdjsonSink:
 
     def _repair(self, repair: Repair) -> None:
         number = f"{repair.number:0{_DIGITS}}"
-        path = self._directory / f"{self._prefix}-repair-{number}-{number}.ndjson"
+        path = self._directory / f"{self._prefix}-repair-{number}-{number}.{self._ending}"
         beside = path.with_name(f"{path.name}.part")
         if path.exists():
             return
         try:
             descriptor = os.open(beside, os.O_WRONLY | os.O_CREAT | os.O_TRUNC | os.O_CLOEXEC, 0o644)
             with os.fdopen(descriptor, "wb") as file:
-                file.write(repair.ndjson())
+                file.write(self._repair_block(repair))
                 file.flush()
                 sync_data(file.fileno())
             beside.rename(path)
@@ -139,9 +143,9 @@ class NdjsonSink:
             names = [entry.name for entry in self._directory.iterdir()]
             self._reached = {}
             for lane in LANES:
-                for name in filter(re.compile(_part_pattern(self._prefix, lane)).fullmatch, names):
+                for name in filter(self._pattern(lane, r"\.part").fullmatch, names):
                     (self._directory / name).unlink()
-                complete = filter(None, map(re.compile(_file_pattern(self._prefix, lane)).fullmatch, names))
+                complete = filter(None, map(self._pattern(lane, "").fullmatch, names))
                 last = max((int(match[2]) for match in complete), default=0)
                 if last:
                     self._reached[lane] = last
@@ -159,7 +163,7 @@ class NdjsonSink:
             part = self._parts.get(batch.lane)
             if batch.number <= (part.last if part else self._reached.get(batch.lane, 0)):
                 continue
-            block = lines.ndjson(batch) if batch.lane == "ordered" else late_lines(batch, lines)
+            block = self._block(batch, lines)
             try:
                 if part and any(part.last <= bound < batch.number for bound in self._bounds[batch.lane]):
                     self._roll(batch.lane)
@@ -172,19 +176,30 @@ class NdjsonSink:
         self._roll_aged()
         return dict(self._reached)
 
-    def _append(self, batch: Batch, block: bytes) -> _Part:
+    def _block(self, batch: Batch, lines: Lines) -> Any:
+        return lines.ndjson(batch) if batch.lane == "ordered" else late_lines(batch, lines)
+
+    def _repair_block(self, repair: Repair) -> bytes:
+        return repair.ndjson()
+
+    def _append(self, batch: Batch, block: Any) -> _Part:
         part = self._parts.get(batch.lane)
         if part is None:
-            path = self._directory / f"{self._prefix}-{batch.lane}-{batch.number:0{_DIGITS}}.ndjson.part"
+            path = self._directory / f"{self._prefix}-{batch.lane}-{batch.number:0{_DIGITS}}.{self._ending}.part"
             descriptor = os.open(path, os.O_WRONLY | os.O_CREAT | os.O_TRUNC | os.O_CLOEXEC, 0o644)
             part = _Part(descriptor, path, batch.number, batch.number, 0, self._clock.now_ns())
             self._parts[batch.lane] = part
-        rest = memoryview(block)
-        while rest:
-            rest = rest[os.write(part.descriptor, rest) :]
+        part.size = self._write(batch.lane, part, block)
         part.last = batch.number
-        part.size += len(block)
         return part
+
+    def _write(self, lane: Lane, part: _Part, block: Any) -> int:
+        """Write what a batch became; the size of the file with it. Raises OSError."""
+        write_all(part.descriptor, block)
+        return part.size + len(block)
+
+    def _finish(self, lane: Lane, part: _Part) -> None:
+        """Write what a complete file ends with. Raises OSError."""
 
     def _roll_aged(self) -> None:
         now = self._clock.now_ns()
@@ -207,9 +222,10 @@ class NdjsonSink:
     def _roll(self, lane: Lane) -> None:
         """Complete a lane's file. After a sync that failed nothing of it can be trusted: the caller throws it away."""
         part = self._parts[lane]
+        self._finish(lane, part)
         sync_data(part.descriptor)
         self._note(lane, part)
-        name = f"{self._prefix}-{lane}-{part.first:0{_DIGITS}}-{part.last:0{_DIGITS}}.ndjson"
+        name = f"{self._prefix}-{lane}-{part.first:0{_DIGITS}}-{part.last:0{_DIGITS}}.{self._ending}"
         part.path.rename(self._directory / name)
         part.path = self._directory / name  # until the folder is synced it may still vanish
         sync_directory(self._directory)
@@ -237,7 +253,13 @@ class NdjsonSink:
         return 0, 0
 
     def _note_path(self, lane: Lane) -> Path:
-        return self._directory / f".{self._prefix}-{lane}.completing"
+        ending = "" if self._ending == "ndjson" else f".{self._ending}"
+        return self._directory / f".{self._prefix}-{lane}{ending}.completing"
+
+    def _pattern(self, lane: Lane, part: str) -> re.Pattern[str]:
+        """The names of a lane's files: complete ones (`part` is empty), or those that never were."""
+        last = "" if part else rf"-([0-9]{{{_DIGITS}}})"
+        return re.compile(rf"{re.escape(self._prefix)}-{lane}-([0-9]{{{_DIGITS}}}){last}\.{self._ending}{part}")
 
     def _discard(self, lane: Lane) -> None:
         part = self._parts.pop(lane, None)
@@ -292,11 +314,3 @@ def late_lines(batch: Batch, lines: Lines) -> bytes:
     return b"".join(
         form % (time_ns, encoded[source], batch.instant_ns, late_by, event) for time_ns, source, late_by, event in facts
     )
-
-
-def _file_pattern(prefix: str, lane: Lane) -> str:
-    return rf"{re.escape(prefix)}-{lane}-([0-9]{{{_DIGITS}}})-([0-9]{{{_DIGITS}}})\.ndjson"
-
-
-def _part_pattern(prefix: str, lane: Lane) -> str:
-    return rf"{re.escape(prefix)}-{lane}-[0-9]{{{_DIGITS}}}\.ndjson\.part"
