@@ -52,6 +52,11 @@ export class Api {
     sessionStorage.setItem(TOKEN_KEY, await this.#asking);
   }
 
+  /** Does this tab have a token? */
+  hasToken() {
+    return sessionStorage.getItem(TOKEN_KEY) !== null;
+  }
+
   async json(path, options) {
     return (await this.fetch(path, options)).json();
   }

@@ -165,6 +165,7 @@ export class Controls {
     byId("later").disabled = byId("live").disabled = view.at_ms === null;
     byId("window").value = view.window_s ? String(view.window_s) : "";
     byId("lanes-many").value = String(view.lanes);
+    if (view.feed) byId("feed").value = view.feed; // Back leads to another feed too
     if (document.activeElement !== byId("search")) byId("search").value = view.search;
     setAttribute(byId("as-table"), "aria-pressed", String(view.table));
     setText(byId("as-table"), view.table ? "Picture" : "Table");

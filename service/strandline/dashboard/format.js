@@ -6,6 +6,7 @@ const SECOND = 1,
   DAY = 86400;
 const CONTROLS = /[\u0000-\u001f\u007f-\u009f\u200b\u200e\u200f\u2028-\u202e\u2060-\u2069\ufeff\ufff9-\ufffb]/g;
 const GRAPHEMES_AT_MOST = 64; // a longer name is cut where it is shown; the whole of it stands in the table's title
+const KEPT = "\u00a0"; // between a number and its unit, so that no line breaks there
 const FSI = "\u2068",
   PDI = "\u2069";
 const segmenter = new Intl.Segmenter("en", { granularity: "grapheme" });
@@ -20,9 +21,10 @@ export function age(seconds) {
   if (seconds === null || seconds === undefined || !Number.isFinite(seconds)) return "–";
   const sign = seconds < 0 ? "−" : "";
   const size = Math.abs(seconds);
-  if (size < 0.0005) return "0 s";
-  if (size < 0.95) return `${sign}${size < 0.0995 ? Math.round(size * 1000) + " ms" : size.toFixed(1) + " s"}`;
-  if (size < 9.95) return `${sign}${size.toFixed(1).replace(/\.0$/, "")} s`;
+  if (size < 0.0005) return `0${KEPT}s`;
+  if (size < 0.0995) return `${sign}${Math.round(size * 1000)}${KEPT}ms`;
+  if (size < 0.95) return `${sign}${size.toFixed(1)}${KEPT}s`;
+  if (size < 9.95) return `${sign}${size.toFixed(1).replace(/\.0$/, "")}${KEPT}s`;
   const whole = Math.round(size);
   for (const [unit, name, below, part] of [
     [DAY, "d", HOUR, "h"],
@@ -31,9 +33,9 @@ export function age(seconds) {
   ]) {
     if (whole < unit) continue;
     const rest = Math.floor((whole % unit) / below);
-    return `${sign}${Math.floor(whole / unit)} ${name}${rest ? ` ${rest} ${part}` : ""}`;
+    return `${sign}${Math.floor(whole / unit)}${KEPT}${name}${rest ? ` ${rest}${KEPT}${part}` : ""}`;
   }
-  return `${sign}${whole} s`;
+  return `${sign}${whole}${KEPT}s`;
 }
 
 /** The parts of an instant in UTC or in the browser's own zone. */
@@ -101,9 +103,9 @@ export function counted(number, noun) {
 export function share(value) {
   if (value === null || value === undefined || !Number.isFinite(value)) return "–";
   const percent = value * 100;
-  if (percent === 0) return "0 %";
-  if (percent < 0.001) return "< 0.001 %";
-  return `${Number(percent.toPrecision(percent >= 10 ? 3 : 2))} %`;
+  if (percent === 0) return `0${KEPT}%`;
+  if (percent < 0.001) return `<${KEPT}0.001${KEPT}%`;
+  return `${Number(percent.toPrecision(percent >= 10 ? 3 : 2))}${KEPT}%`;
 }
 
 /** A name without characters that could steer the text around it; each is shown as a replacement mark. */

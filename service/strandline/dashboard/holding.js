@@ -1,8 +1,10 @@
 // Who holds the output, since when, why, and what to do about it, in words: a function for each of the reasons.
 // Pure: a moment in; out comes { level, place, says, next, offers }, as `sentence` puts it together.
 
-import { age, counted, near } from "./format.js";
-import { behind_s, CURRENT_WITHIN_S, isCurrent, laneOf } from "./reading.js";
+import { age, counted, near, shown } from "./format.js";
+import { behind_s, CURRENT_WITHIN_S, isCurrent, laneOf, pauseOf } from "./reading.js";
+
+const REASON_AT_MOST = 80; // graphemes of what somebody gave as a reason
 
 /** Who holds the output, since when, and why. */
 export function holdTrouble(moment, zone) {
@@ -107,6 +109,23 @@ function expectedSource(moment, source) {
   };
 }
 
+/** Sources that are expected, have never been heard, and are no longer waited for. */
+export function missingTrouble(moment) {
+  const missing = (moment.lanes ?? []).filter((lane) => lane.role === "expected" && !lane.active);
+  if (!missing.length) return [];
+  const [{ source }] = missing,
+    many = missing.length > 1 ? [` and ${counted(missing.length - 1, "other")}`] : [];
+  return [
+    {
+      level: "watch",
+      place: "upstream",
+      says: [{ name: source }, ...many, " never came though expected; the output goes on without. "],
+      next: ["Start ", { name: source }, ", or excuse it if it will not come."],
+      offers: [{ act: "excuse", subject: source }],
+    },
+  ];
+}
+
 function allSilent(moment) {
   return {
     level: "watch",
@@ -165,11 +184,30 @@ function wasStopped(moment) {
   };
 }
 
-function sinkPaused(moment) {
+/** "1 event waits", "3 events wait". */
+export function waitWords(events) {
+  return `${counted(events, "event")} wait${events === 1 ? "s" : ""}`;
+}
+
+/** By whom a sink was paused, since when and why, as far as that is known. */
+export function pauseWords(moment, sink, zone) {
+  const act = pauseOf(moment, sink);
+  if (act === null) return [];
+  const why = act.reason ? `, “${shown(act.reason.trim().replace(/[.]+$/, ""), REASON_AT_MOST)}”` : "";
+  return [" by ", { name: act.who || "somebody" }, ` since ${near(act.at_ms, moment.now_ms, zone)}${why}`];
+}
+
+function sinkPaused(moment, _source, zone) {
   return {
     level: "watch",
     place: "downstream",
-    says: ["Sink ", { name: moment.hold.sink ?? "" }, " holds it: it is paused, and as much waits for it as may. "],
+    says: [
+      "Sink ",
+      { name: moment.hold.sink ?? "" },
+      " holds it: it is paused",
+      ...pauseWords(moment, moment.hold.sink, zone),
+      ". As much waits for it as may. ",
+    ],
     next: ["Resume it as soon as its store is well."],
     offers: moment.hold.sink ? [{ act: "resume", subject: moment.hold.sink }] : [],
   };

@@ -98,12 +98,19 @@ function drawTimes(surface, context, place, moment, { zone, past }, colour) {
     context.fillStyle = colour.quiet;
     context.fillText(words, x, HEAD - 16);
   }
-  context.fillStyle = colour.ink;
-  context.textAlign = "right";
-  surface.font(0.9, 600);
-  context.fillText(past ? "then" : "now", place.plot, HEAD - 16);
+  drawNow(surface, context, place, pole, past, colour);
   context.strokeStyle = colour.quiet;
   line(context, crisp(place.plot), HEAD - 8, crisp(place.plot), place.height - FOOT);
+}
+
+/** The word at the end of the axis; beside it where the watermark stands so near that its pole would cross the word. */
+function drawNow(surface, context, place, pole, past, colour) {
+  const word = past ? "then" : "now";
+  surface.font(0.9, 600);
+  const crossed = pole > place.plot - surface.measure(word) - 5;
+  context.fillStyle = colour.ink;
+  context.textAlign = crossed ? "left" : "right";
+  if (!crossed || !place.narrow) context.fillText(word, crossed ? place.plot + 5 : place.plot, HEAD - 16);
 }
 
 /** A band behind the lane that holds the output. */

@@ -35,7 +35,7 @@ class Part:
         newest, heard = sources.newest[:count], sources.heard[:count]
         unheard = (newest == NEVER) & (sources.promised[:count] == NEVER)
         self._excused = sources.excused[:count]
-        self._expected = sources.active[:count] & unheard & ~self._excused
+        self._expected = unheard & ~self._excused  # idle or not: whoever never came must not drop out of sight
         silent_since_ns = now_ns - idle_after_ns // SILENT_PART
         self._silent = (heard < silent_since_ns) & ~unheard & ~self._excused
         self._ahead = newest > now_ns + AHEAD_NS

@@ -27,6 +27,7 @@ _EDGES, _SLACKS = _places(3), _places(5)
 EDGES_NS: tuple[int, ...] = (0, *_BUCKETS.upper[_EDGES].tolist())
 EDGES_S = tuple(edge_ns / 1e9 for edge_ns in EDGES_NS)
 COUNTS = len(EDGES_NS) + 1  # counts[i] lie above edge i-1 and at or below edge i; counts[0] are not late at all
+_TICK_NS = int(_BUCKETS.upper[0])  # what is late by no more than that (1 us) and what is not late share a bucket
 _STARTS = np.concatenate(([0, 1], _EDGES + 1))
 
 
@@ -62,7 +63,7 @@ def every_slack(memory: Lateness, slack_ns: int, hold_ns: float | None) -> list[
     mean_ns = (np.cumsum(sketch.counts * sketch.buckets.values) / np.maximum(below, 1e-300)).tolist()
     present = sketch.buckets.place(slack_ns)
     waits_ns = None if hold_ns is None else hold_ns - (slack_ns - mean_ns[present])
-    rows = [(slack_ns, present, sketch.late_share(slack_ns).at_most)]
+    rows = [(slack_ns, present, sketch.late_share(max(slack_ns, _TICK_NS)).at_most)]
     for place in _SLACKS.tolist():
         share = max(0.0, float(1 - below[place] / below[-1])) if below[-1] else 0.0
         rows.append((int(sketch.buckets.upper[place]), place, share))

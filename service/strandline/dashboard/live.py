@@ -40,6 +40,7 @@ from .strands import Look, held_of, look_into
 log = logging.getLogger(__name__)
 EVERY_S = 0.5
 SAMPLE_EVERY_S = 1.0
+TURN_S = 0.001  # so long at a time; a turn of the loop after each feed would cost as much as sampling one that rests
 STREAMS_AT_MOST = 16  # of a feed
 WRITE_WITHIN_S = 15.0  # a browser that takes nothing for so long is let go
 SEND_BUFFER_BYTES = 64 * 1024  # of the system for one stream: what waits there is old when the browser reads it
@@ -319,11 +320,14 @@ async def _sampling(app: web.Application) -> AsyncIterator[None]:
 async def _sample(watches: dict[str, Watch]) -> None:
     loop = asyncio.get_running_loop()
     while True:
-        due = loop.time() + SAMPLE_EVERY_S
+        begun = loop.time()
+        due = begun + SAMPLE_EVERY_S
         for watch in watches.values():
             try:
                 watch.memory.sample()
             except Exception:  # what is seen must not stop what is done
                 log.exception("%s: an unforeseen error in a sample", watch.runtime.config.name)
-            await asyncio.sleep(0)  # others have their turn between two feeds
+            if loop.time() - begun > TURN_S:
+                await asyncio.sleep(0)  # others have their turn
+                begun = loop.time()
         await asyncio.sleep(due - loop.time())

@@ -5,13 +5,14 @@ import { Acts, askToken } from "./acts.js";
 import { readView, writeView } from "./address.js";
 import { Api, LiveStream, Problem } from "./api.js";
 import { Controls } from "./controls.js";
-import { byId, setAttribute, setSentence, setText } from "./dom.js";
+import { byId, keyed, setAttribute, setSentence, setText } from "./dom.js";
 import { age, clean, instant } from "./format.js";
 import { laneSentence } from "./lanes.js";
 import { showBooks, showHappened, showHops, showSentence, showSinks, showWords, Speaker } from "./panels.js";
 import { Pictures } from "./pictures.js";
 import { Record } from "./record.js";
 import { behind_s } from "./reading.js";
+import { followReport, reportAddress } from "./report.js";
 import { speak } from "./sentence.js";
 import { showTable } from "./table.js";
 
@@ -60,6 +61,7 @@ class Page {
     byId("end-slack").addEventListener("click", () => this.openAct("slack_end", this.view.feed));
     byId("drain").addEventListener("click", () => this.openAct("drain", this.view.feed));
     byId("chosen-excuse").addEventListener("click", () => this.excuseChosen());
+    byId("report").addEventListener("click", (event) => followReport(event, this.api, this.view.feed));
     addEventListener("popstate", () => {
       const view = readView(location.search);
       this.change({ ...view, feed: view.feed ?? this.view.feed }, false);
@@ -105,6 +107,7 @@ class Page {
   #open() {
     const query = new URLSearchParams({ lanes: String(this.view.lanes) });
     if (this.view.search) query.set("q", this.view.search);
+    this.fresh = true; // what comes next may be of other lanes: it is shown at once
     this.stream.open(`/v1/feeds/${encodeURIComponent(this.view.feed)}/live?${query}`);
   }
 
@@ -156,6 +159,7 @@ class Page {
         this.record.load(found);
         this.historyOf_s = clock_s;
         this.pictures.stale = true;
+        this.shownAt = {};
         this.want();
       } catch (error) {
         if (!(error instanceof Problem)) throw error;
@@ -176,6 +180,8 @@ class Page {
     this.live = JSON.parse(this.raw);
     this.raw = null;
     this.live.lanes ??= [];
+    if (this.fresh) this.shownAt = {};
+    this.fresh = false;
     this.record.append(this.live);
     const { clock_s } = this.pictures.windows(this.live, this.view);
     if (this.view.at_ms === null && this.historyOf_s && clock_s > this.historyOf_s) {
@@ -202,10 +208,10 @@ class Page {
     if (state !== "lost") return;
     setAttribute(byId("now"), "data-level", "bad");
     const last = this.live ? ` What stands here is from ${instant(this.live.now_ms, this.view.zone)}.` : "";
-    setSentence(byId("says"), [`No word from the service for ${age((Date.now() - since_ms) / 1000)}.${last}`]);
+    const lost_s = Math.floor((Date.now() - since_ms) / 1000);
+    setSentence(byId("says"), [`No word from the service${lost_s ? ` for ${age(lost_s)}` : ""}.${last}`]);
     setSentence(byId("next"), [`${why} This page tries again by itself.`]);
-    byId("offers").replaceChildren();
-    byId("offers").keyedNow = undefined;
+    keyed(byId("offers"), [], String);
     setText(byId("spoken"), "No word from the service. This page tries again by itself.");
   }
 
@@ -274,6 +280,8 @@ class Page {
     setSentence(byId("next"), [
       "Go to a later time, or back to live. A day is kept, since the last start of the service.",
     ]);
+    keyed(byId("offers"), [], String);
+    keyed(byId("stalls"), [], String);
   }
 
   /** What need not move twice a second. */
@@ -281,9 +289,14 @@ class Page {
     showBooks(moment);
     showSinks(moment, zone, this.openAct);
     showWords(moment, this.record);
-    showHappened(this.record, moment.now_ms, zone);
-    const set = this.record.acts.findLast((act) => act.act === "slack");
-    byId("end-slack").hidden = !set || set.slack_s === null || !(Date.parse(set.until ?? "") > moment.now_ms);
+    showHappened(this.record, moment, zone);
+    byId("drain").disabled = byId("set-slack").disabled = Boolean(moment.past); // acts are for the present
+    const set = this.record.acts.findLast((act) => act.act === "slack"),
+      inForce = set && set.slack_s !== null && Date.parse(set.until ?? "") > moment.now_ms;
+    byId("end-slack").hidden = !inForce || Boolean(moment.past);
+    const { clock_s } = this.pictures.windows(moment, this.view),
+      to_ms = moment.now_ms;
+    setAttribute(byId("report"), "href", reportAddress(this.view.feed, to_ms - clock_s * 1000, to_ms));
     this.controls.show(this.view, this.nowMs());
   }
 

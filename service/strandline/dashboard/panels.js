@@ -3,16 +3,21 @@
 
 import { offerButton } from "./acts.js";
 import { byId, keyed, make, nameElement, setAttribute, setSentence, setText } from "./dom.js";
-import { age, brief, count, counted, near, share } from "./format.js";
+import { age, brief, clean, count, counted, near, share } from "./format.js";
+import { pauseWords, waitWords } from "./holding.js";
 import { lastAtOrBelow } from "./scales.js";
-import { behind_s } from "./reading.js";
+import { apart, behind_s } from "./reading.js";
 import { spokenText } from "./sentence.js";
 import { HOLDS } from "./tide.js";
 
 const SPOKEN_EVERY_MS = 15000,
   SPOKEN_CHANGE_MS = 3000; // a screen reader is told of a change soon, of ages seldom
+const QUIET_HOLDS = ["nothing_held", "slack", "slack_set"],
+  SLOW_HOLDS = ["slow_source", "promised_source"];
 const HAPPENED_AT_MOST = 40,
-  SPELL_AT_LEAST_MS = 3000;
+  SPELL_AT_LEAST_MS = 3000,
+  GAP_MS = 2000, // between two holds: longer, and they are two stories
+  CATCHES_UP_WITHIN_MS = 2000; // at first the output is as far behind as the hold before it left it
 
 /** The sentence on top, what to do next, and the acts that are offered for it. */
 export function showSentence(spoken, moment, openAct) {
@@ -182,13 +187,15 @@ export function showSinks(moment, zone, openAct) {
       setText(
         item.waits,
         sink.waiting_events
-          ? `${counted(sink.waiting_events, "event")} wait, the oldest ${age(sink.oldest_s)}`
+          ? `${waitWords(sink.waiting_events)}, the oldest ${age(sink.oldest_s)}`
           : "nothing waits",
       );
       const since = sink.failing_since_ms
         ? `failing since ${near(sink.failing_since_ms, moment.now_ms, zone)}: `
         : "";
-      setText(item.error, sink.last_error && state !== "fine" ? `${since}${sink.last_error}` : "");
+      const error = sink.last_error && state !== "fine" ? [`${since}${clean(sink.last_error)}`] : [];
+      const paused = state === "paused" ? ["Paused", ...pauseWords(moment, sink.name, zone), ". "] : [];
+      setSentence(item.error, [...paused, ...error]);
       setText(item.button, sink.paused ? "Resume…" : "Pause…");
       item.button.act = sink.paused ? "resume" : "pause";
     },
@@ -205,9 +212,9 @@ function makeSink(sink, openAct) {
   item.button.setAttribute("aria-label", `Pause or resume sink ${sink.name}`);
   item.button.addEventListener("click", () => openAct(item.button.act, sink.name));
   const head = make("div", "sink-head");
-  const own = sink.name === LANE_STORE ? "keeps the late lane and the quarantine" : "";
-  head.append(nameElement(sink.name), make("span", "sink-waits", own), item.state, item.button);
+  head.append(nameElement(sink.name), item.state, item.button);
   item.append(head, item.waits, item.error);
+  if (sink.name === LANE_STORE) item.append(make("span", "sink-waits", "keeps the late lane and the quarantine"));
   return item;
 }
 
@@ -219,9 +226,11 @@ function sinkState(sink) {
 }
 
 /** Acts and holds, the newest first. */
-export function showHappened(record, now_ms, zone) {
-  const spells = record.holds
-    .filter((hold) => !["nothing_held", "slack"].includes(hold.why) && hold.to_ms - hold.from_ms >= SPELL_AT_LEAST_MS)
+export function showHappened(record, moment, zone) {
+  const now_ms = moment.now_ms,
+    apart_s = apart(moment);
+  const spells = whole(record.holds)
+    .filter((hold) => hold.to_ms - hold.from_ms >= SPELL_AT_LEAST_MS && wasFelt(record, hold, apart_s))
     .map((hold) => ({ at_ms: hold.from_ms, hold }));
   const acts = record.acts.map((act) => ({ at_ms: act.at_ms, act }));
   const all = [...spells, ...acts]
@@ -235,6 +244,30 @@ export function showHappened(record, now_ms, zone) {
     (each) => make("li", each.act ? "happened-act" : "happened-hold"),
     (element, each) => setSentence(element, happeningWords(each, now_ms, zone)),
   );
+}
+
+/** Holds, oldest first; one by a source that is slow and then silent is one of a silent source from its beginning. */
+function whole(holds) {
+  const found = [];
+  for (const hold of holds) {
+    const last = found[found.length - 1];
+    const silent = last?.why === "slow_source" && hold.why === "silent_source" && last.source === hold.source;
+    if (silent && hold.from_ms - last.to_ms < GAP_MS) found[found.length - 1] = { ...hold, from_ms: last.from_ms };
+    else found.push(hold);
+  }
+  return found;
+}
+
+/** Did a hold keep the output further behind than the slack does? Somebody is the slowest at any time. */
+function wasFelt(record, hold, apart_s) {
+  if (QUIET_HOLDS.includes(hold.why)) return false;
+  if (!SLOW_HOLDS.includes(hold.why)) return true;
+  let index = lastAtOrBelow(record.t_ms, hold.to_ms);
+  const from_ms = hold.from_ms + CATCHES_UP_WITHIN_MS;
+  for (; index >= 0 && record.t_ms[index] >= from_ms; index -= 1) {
+    if (record.behind_s[index] - record.slack_s[index] > apart_s) return true;
+  }
+  return false;
 }
 
 function keyOfHappening(each) {
@@ -263,7 +296,7 @@ function happeningWords({ none, at_ms, act, hold }, now_ms, zone) {
     act.subject ? { name: act.subject } : "",
     `${how}${until}${act.subject || how ? " " : ""}by `,
     { name: act.who || "somebody" },
-    act.reason ? `: ${act.reason}` : "",
+    act.reason ? `: ${clean(act.reason)}` : "",
   ];
 }
 
@@ -284,13 +317,9 @@ export function showWords(moment, record) {
           `${counted(rest.held_events, "event")} held.`
         : "These are all sources.",
   );
-  const sought = moment.lanes.some((lane) => lane.found !== undefined);
-  setText(
-    byId("found"),
-    sought
-      ? `${counted(moment.lanes.filter((lane) => lane.found).length, "lane")} found; the holder is shown too.`
-      : "",
-  );
+  const sought = moment.lanes.some((lane) => lane.found !== undefined),
+    found = moment.lanes.filter((lane) => lane.found).length;
+  setText(byId("found"), sought ? `${counted(found, "source")} found; the holder and grey ones beside them.` : "");
   setText(
     byId("runs-says"),
     `${counted(moment.held.open_runs, "open run")}, ${counted(moment.held.events, "event")} held` +
@@ -312,7 +341,8 @@ function shareWords(moment, record) {
   const steering = moment.steering;
   if (!steering) {
     const now = record.late_share[lastAtOrBelow(record.t_ms, moment.now_ms)];
-    return `${share(now)} in the minute before${moment.past ? "" : "; the slack is fixed, so there is no target"}`;
+    const known = now === null || now === undefined ? "nothing came" : share(now);
+    return `${known} in the minute before${moment.past ? "" : "; the slack is fixed, so there is no target"}`;
   }
   const bound = steering.bound_this_stretch === null ? "" : ` ± ${share(steering.bound_this_stretch)} at the most`;
   return (

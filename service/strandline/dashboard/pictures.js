@@ -146,7 +146,7 @@ export class Pictures {
 
   #drawRest(moment, force) {
     const target = moment.steering?.late_share_target ?? null,
-      rows = (moment.slacks ?? []).filter((row) => row[0] >= SLACK_LEAST_S);
+      rows = (moment.slacks ?? []).filter((row) => row[0] >= SLACK_LEAST_S || row[0] === moment.slack_s);
     const key = `${moment.slack_s.toPrecision(2)}|${target}|${rows.map((row) => row[1]?.toPrecision(2)).join()}`;
     if (force || key !== this.keys.slacks) {
       this.keys.slacks = key;
@@ -188,7 +188,7 @@ export class Pictures {
   }
 }
 
-/** Another slack worth a word where nobody points at one: half of the present one. */
+/** Another slack worth a word where nobody points at one: half of the present one; a second where there is none. */
 function suggestion(rows, slack_s) {
-  return rowNear(rows, slack_s / 2);
+  return rowNear(rows, slack_s > 0 ? slack_s / 2 : 1);
 }

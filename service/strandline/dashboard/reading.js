@@ -9,16 +9,26 @@ export function behind_s(moment) {
   return moment.watermark_ms === null ? null : Math.max(0, (moment.now_ms - moment.watermark_ms) / 1000);
 }
 
+/** How many seconds more than the slack an output may be behind and still be called current. */
+export function apart(moment) {
+  return Math.max(CURRENT_WITHIN_S, (moment.idle_after_s ?? 0) * APART_SHARE);
+}
+
 /** Is the output as current as the slack allows? */
 export function isCurrent(moment) {
   const behind = behind_s(moment);
-  const apart_s = Math.max(CURRENT_WITHIN_S, (moment.idle_after_s ?? 0) * APART_SHARE);
-  return behind !== null && behind - moment.slack_s <= apart_s;
+  return behind !== null && behind - moment.slack_s <= apart(moment);
 }
 
 /** The lane of a source among those that the moment shows; null where it is not among them. */
 export function laneOf(moment, source) {
   return (moment.lanes ?? []).find((lane) => lane.source === source) ?? null;
+}
+
+/** The act that paused a sink: who, why and when; null where it is not among the last acts. */
+export function pauseOf(moment, sink) {
+  const acts = (moment.acts ?? []).filter((act) => act.act === "pause" && act.subject === sink);
+  return acts.reduce((newest, act) => (newest === null || act.at_ms > newest.at_ms ? act : newest), null);
 }
 
 /** When anything was heard last, as far as the lanes tell; else the newest event time. */

@@ -23,6 +23,7 @@ WHYS = tuple(HOLD_WHYS)
 RATES_OVER_NS = 5 * SECOND_NS
 COUNTERS_APART_NS = 400_000_000
 LATE_KEPT_NS = 900 * SECOND_NS
+OWED_AT_MOST = 20  # rows entered at a time where nothing happens: 12 us each, one at a time 18 (what they need is cold)
 STILL_NS = 60 * SECOND_NS  # after that a row is made anew: which sources are silent depends on time alone
 BOOKS = ("received", "released", "late", "duplicate", "quarantined")
 
@@ -58,12 +59,14 @@ class FeedMemory:
 
     def __init__(self, runtime: FeedRuntime) -> None:
         self.runtime = runtime
-        self.history, self.late = History(), RecentLate()
+        self.late = RecentLate()
+        self._history = History()
         self._lateness = SinceLast(runtime.feed.state.lateness)
         self._books, self._refusals = _books(runtime.feed.state.ledger), 0
         self._counters: deque[Counters] = deque(maxlen=16)
         self._lanes: list[int] = []
         self._still: Still | None = None
+        self._owed: list[int] = []  # instants of samples that are the still row again and not in the history yet
         runtime.watchers.append(self.late.note)
 
     @property
@@ -77,12 +80,27 @@ class FeedMemory:
         self.late.forget_before(now_ns - LATE_KEPT_NS)
         still = self._still
         if still is not None and still.traces == self._traces() and now_ns < still.until_ns:
-            row = still.row.copy()
-            row["t_ns"] = now_ns
+            self._owed.append(now_ns)
             self._counters.append(self._counters[-1]._replace(now_ns=now_ns))
+            if len(self._owed) >= OWED_AT_MOST:
+                self._enter_owed()
         else:
-            row = self._row(now_ns)
-        self.history.add(row)
+            self._enter_owed()
+            self._history.add(self._row(now_ns))
+
+    @property
+    def history(self) -> History:
+        """The history up to the last sample."""
+        self._enter_owed()
+        return self._history
+
+    def _enter_owed(self) -> None:
+        for now_ns in self._owed:
+            assert self._still is not None
+            row = self._still.row.copy()
+            row["t_ns"] = now_ns
+            self._history.add(row)
+        self._owed.clear()
 
     def _row(self, now_ns: int) -> Rows:
         traces, hops = self._traces(), self.runtime.hops()

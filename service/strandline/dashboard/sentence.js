@@ -1,14 +1,16 @@
 // What stands on top of the page: one plain sentence on the state of a feed, where the trouble sits, and what to do.
 // Pure: a moment in, words out. A sentence is a list of texts and of { name }, so that names can be isolated.
 
-import { age, counted, near, share } from "./format.js";
-import { holdTrouble } from "./holding.js";
+import { age, near, share } from "./format.js";
+import { holdTrouble, missingTrouble, pauseWords, waitWords } from "./holding.js";
 import { behind_s, lastHeard } from "./reading.js";
 
 const WAITS_TOO_LONG_S = 5; // at ingest, decode and journal: an answer takes milliseconds, so this is trouble
 const SINK_TOO_LONG_S = 15; // a sink that gathers for some seconds before it writes is still well
 const LATE_FACTOR = 1.5; // the late share of the last minute, against its target
+const LATE_WITHOUT_TARGET = 0.05; // the late share of the last seconds that is worth a word where none is wanted
 const QUIET_AFTER_S = 30; // nothing received for so long is worth a word
+const PAST = { is: "was", "has been": "had been", "it waits": "it waited" };
 const LEVELS = ["fine", "watch", "bad"];
 
 /** Everything that is to be said of a moment: { level, place, says, next, offers, key }. */
@@ -17,6 +19,7 @@ export function speak(moment, zone = "utc") {
     ...hereTrouble(moment),
     ...sinkTrouble(moment, zone),
     ...holdTrouble(moment, zone),
+    ...missingTrouble(moment),
     ...lateTrouble(moment),
   ];
   found.sort((one, other) => LEVELS.indexOf(other.level) - LEVELS.indexOf(one.level));
@@ -27,9 +30,9 @@ export function speak(moment, zone = "utc") {
   return {
     level: worst.level,
     place: worst.place,
-    says,
-    next: worst.next,
-    offers: worst.offers ?? [],
+    says: moment.past ? says.map(inThePast) : says,
+    next: moment.past ? ["This is how it was. To act, go back to live."] : worst.next,
+    offers: moment.past ? [] : (worst.offers ?? []),
     places: [...new Set(found.filter((each) => each.level !== "fine").map((each) => each.place))],
     key: [
       moment.feed,
@@ -39,6 +42,17 @@ export function speak(moment, zone = "utc") {
       ...(worst.level === "fine" ? [] : [moment.hold.why, moment.hold.source]),
     ].join("|"),
   };
+}
+
+/** A part of a sentence on what stands, as one on what stood. */
+function inThePast(part) {
+  if (typeof part !== "string") return part;
+  return part
+    .replace(" holds it", " held it")
+    .replace("; it falls idle", "; it fell idle")
+    .replace(/ (is|has been|it waits) /g, (_, words) => ` ${PAST[words]} `)
+    .replace(" are ", " were ")
+    .replace(" wait ", " waited ");
 }
 
 /** Is the output current? The first thing that is said. */
@@ -105,12 +119,18 @@ function sinkTrouble(moment, zone) {
   const found = [];
   for (const sink of moment.sinks ?? []) {
     const many = sink.waiting_events,
-      waits = many ? `${counted(many, "event")} wait${many === 1 ? "s" : ""} for it` : "nothing waits for it yet";
+      waits = many ? `${waitWords(many)} for it` : "nothing waits for it yet";
     if (sink.paused) {
       found.push({
         level: "watch",
         place: "downstream",
-        says: ["Sink ", { name: sink.name }, ` is paused; ${waits}. `],
+        says: [
+          "Sink ",
+          { name: sink.name },
+          " is paused",
+          ...pauseWords(moment, sink.name, zone),
+          `. ${capitalised(waits)}. `,
+        ],
         next: ["Resume it when its store is well again: the journal keeps what waits until it is full."],
         offers: [{ act: "resume", subject: sink.name }],
       });
@@ -140,7 +160,7 @@ function sinkTrouble(moment, zone) {
 /** More late events than wanted, or a target and a longest wait that contradict each other. */
 function lateTrouble(moment) {
   const steering = moment.steering;
-  if (!steering) return [];
+  if (!steering) return lateWithoutTarget(moment);
   if (steering.contradiction) {
     return [
       {
@@ -168,6 +188,25 @@ function lateTrouble(moment) {
       next: ["The slack is being raised by itself. Look at the lanes with late marks: who sends late?"],
     },
   ];
+}
+
+/** A fixed slack names no share that is wanted; but so much late is said, and what to do about it. */
+function lateWithoutTarget(moment) {
+  const { received_per_s: received, late_per_s: late } = moment.rates ?? {};
+  if (!(received > 0) || !(late > received * LATE_WITHOUT_TARGET)) return [];
+  return [
+    {
+      level: "watch",
+      place: "upstream",
+      says: [`${share(Math.min(1, late / received))} of what came just now was late. `],
+      next: ["Look at the lanes with late marks: who sends late? Every slack at once tells what a longer one gives."],
+      offers: [{ act: "slack", subject: moment.feed }],
+    },
+  ];
+}
+
+function capitalised(text) {
+  return text.slice(0, 1).toUpperCase() + text.slice(1);
 }
 
 /** Words for a feed without trouble. */

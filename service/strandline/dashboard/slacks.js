@@ -77,7 +77,7 @@ export function drawSlacks(surface, rows, look) {
     index ? context.lineTo(x(row[0]), y(row[1])) : context.moveTo(x(row[0]), y(row[1])),
   );
   context.stroke();
-  drawPresent(surface, context, known, look, x, y, { left, right, top, bottom }, colour);
+  drawPresent(surface, context, known, rows, look, x, y, { left, right, top, bottom }, colour);
   return { x, rows: known };
 }
 
@@ -102,15 +102,15 @@ function drawAxes(surface, context, box, x, y, [least_s, most_s], colour) {
   context.fillText("slack →", (box.left + box.right) / 2, box.bottom + box.em * 2.4);
 }
 
-function drawPresent(surface, context, rows, look, x, y, box, colour) {
-  const now = rowNear(rows, look.slack_s),
-    at = Math.max(box.left, Math.min(box.right, x(Math.max(look.slack_s, rows[0][0]))));
+function drawPresent(surface, context, known, rows, look, x, y, box, colour) {
+  const now = rowNear(rows, look.slack_s), // a slack of 0 has a row, but no place on a logarithmic axis: at its edge
+    at = Math.max(box.left, Math.min(box.right, x(Math.max(look.slack_s, known[0][0]))));
   context.strokeStyle = colour.hold;
   context.lineWidth = 2;
   line(context, at, box.top, at, box.bottom);
   context.fillStyle = colour.hold;
   context.beginPath();
-  context.arc(at, y(now[1]), 5, 0, 2 * Math.PI);
+  context.arc(at, y(Math.max(SHARE_LEAST, now[1] ?? 0)), 5, 0, 2 * Math.PI);
   context.fill();
   surface.font(0.95, 600);
   const words = `now ${age(look.slack_s)}`,

@@ -113,6 +113,19 @@ function drawCursor(context, place, look, top, bottom, colour) {
   line(context, crisp(place.x(look.cursor_ms)), top, crisp(place.x(look.cursor_ms)), bottom);
 }
 
+/** Time before the first thing that is known: tinted, so that nobody takes it for a time without trouble. */
+function drawUnknown(surface, context, place, record, top, bottom, colour) {
+  const x = record.t_ms.length ? Math.min(place.right, place.x(record.t_ms[0])) : place.right;
+  if (x - place.left < 2) return;
+  context.fillStyle = colour.panel;
+  context.fillRect(place.left, top, x - place.left, bottom - top);
+  surface.font(0.9);
+  context.textAlign = "center";
+  context.fillStyle = colour.quiet;
+  if (x - place.left > surface.measure("not known") + 12)
+    context.fillText("not known", (place.left + x) / 2, (top + bottom) / 2);
+}
+
 function inside(context, place, top, bottom, draw) {
   context.save();
   context.beginPath();
@@ -139,6 +152,7 @@ export function drawBehind(surface, record, look) {
     y = linear(0, ticks[ticks.length - 1], bottom, top);
   drawLevels(surface, context, place, y, ticks, (tick) => age(tick), colour);
   drawClock(surface, context, place, height - em, look.zone, colour, top);
+  drawUnknown(surface, context, place, record, top, bottom, colour);
   inside(context, place, top - 4, bottom + 1, () => {
     trace(context, record, place, first, last, y, (index) => record.behind_s[index]);
     context.strokeStyle = colour.hold;
@@ -257,6 +271,7 @@ export function drawLateness(surface, record, look) {
   const y = logarithmic(least, most, bottom - ON_TIME, top);
   inside(context, place, top, bottom, () => drawCells(context, place, record, y, bottom, top, colour));
   drawLevels(surface, context, place, y, secondTicks(least, most), (tick) => age(tick), colour);
+  drawUnknown(surface, context, place, record, top, bottom, colour);
   const [first, last] = span(record, place);
   inside(context, place, top, bottom, () => {
     trace(context, record, place, first, last, y, (index) => record.slack_s[index]);
@@ -323,6 +338,7 @@ export function drawShare(surface, record, look) {
     y = logarithmic(least, Math.min(1, most * 1.5), bottom, top);
   drawClock(surface, context, place, height - em, look.zone, colour, top);
   drawLevels(surface, context, place, y, powerTicks(least, Math.min(1, most * 1.5)), share, colour);
+  drawUnknown(surface, context, place, record, top, bottom, colour);
   inside(context, place, top, bottom + 1, () => {
     if (target !== null && bound !== null) {
       context.fillStyle = colour.released;
