@@ -1,9 +1,9 @@
 """The service: feeds, HTTP and signals put together, and the written order of a stop.
 
 Nothing is decided here about events. Start: read every journal, connect the sinks, then listen. Stop (SIGTERM, SIGINT):
-take nothing more from brokers; stop accepting; answer those who wait on a sync; deliver within `drain_at_most`; save and close. A second signal stops
-at once: the journal has everything that was answered. SIGHUP reads the whole configuration again, and swaps it or keeps
-the old one and says why.
+take nothing more from brokers; stop accepting; answer those who wait on a sync; deliver within `drain_at_most`; save
+and close. A second signal stops at once: the journal has everything that was answered. SIGHUP reads the whole
+configuration again, and swaps it or keeps the old one and says why.
 """
 
 from __future__ import annotations

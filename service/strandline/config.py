@@ -11,11 +11,12 @@ from __future__ import annotations
 import tomllib
 from collections.abc import Iterator, Mapping
 from pathlib import Path
-from typing import Any
+from typing import Any, TypeVar
 
 import msgspec
 
 from .config_checks import check
+from .config_intakes import IntakeConfig
 from .config_kinds import Address
 from .config_model import Config, EventTime, Feed, Journal, Limits
 from .config_overrides import override
@@ -40,6 +41,7 @@ __all__ = [
 ]
 
 FILE_BYTES_AT_MOST = 2**20
+Described = TypeVar("Described", SinkConfig, IntakeConfig)
 
 
 def load(path: Path, environ: Mapping[str, str]) -> Config:
@@ -107,11 +109,12 @@ def _settled(config: Config) -> Config:
     feeds = []
     for feed in config.feeds:
         sinks = tuple(_settled_sink(sink, feed.name, config.data_dir) for sink in feed.sinks)
-        feeds.append(msgspec.structs.replace(feed, sinks=sinks))
+        intakes = tuple(_settled_sink(intake, feed.name, config.data_dir) for intake in feed.intakes)
+        feeds.append(msgspec.structs.replace(feed, sinks=sinks, intakes=intakes))
     return msgspec.structs.replace(config, feeds=tuple(feeds))
 
 
-def _settled_sink(sink: SinkConfig, feed_name: str, data_dir: Path) -> SinkConfig:
+def _settled_sink(sink: Described, feed_name: str, data_dir: Path) -> Described:
     changes: dict[str, Any] = {}
     for item in declared(type(sink)).values():
         value = getattr(sink, item.attribute)

@@ -29,6 +29,7 @@ from .config_sinks import SINK_KINDS
 
 PREFIX = "STRANDLINE_"
 FIXED = ("name", "kind")
+_KINDS: dict[str, Mapping[str, type[msgspec.Struct]]] = {"sink": SINK_KINDS, "intake": INTAKE_KINDS}
 TOKEN_VARIABLE = "STRANDLINE_TOKEN"  # what commands show to a service; no key of it
 
 # A Kubernetes cluster with a service called strandline (or strandline-...) gives every container such variables
@@ -79,8 +80,7 @@ def _settable(raw: Mapping[str, Any]) -> Iterator[tuple[list[str], Place, Kind]]
     for index, feed in _named(raw.get("feed"), "name"):
         steps: list[str] = ["feed", feed["name"]]
         yield from _keys(Feed, steps, ("feed", index))
-        kinds: tuple[tuple[str, Mapping[str, type[msgspec.Struct]]], ...] = (("sink", SINK_KINDS), ("intake", INTAKE_KINDS))
-        for noun, known in kinds:
+        for noun, known in _KINDS.items():
             for number, table in _named(feed.get(noun), "kind"):
                 name = table.get("name", table["kind"])
                 if table["kind"] in known and isinstance(name, str):

@@ -7,9 +7,11 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
 
+from .config_intake_checks import check_secrets
 from .config_kinds import quoted
 from .config_read import Place, Reading
-from .config_sinks import HttpConfig, PostgresConfig, RemoteWriteConfig, SinkConfig
+from .config_sinks import HttpConfig, JetstreamSink, ParquetConfig, PostgresConfig, RemoteWriteConfig, SinkConfig
+from .sinks.parquet_columns import OWN, fault_of
 from .sinks.postgres_columns import OWN_TABLES, settled
 
 SERIES_AT_MOST = 100  # series names that one event feeds
@@ -19,11 +21,16 @@ def check_sinks(sinks: Iterable[tuple[int, Place, SinkConfig]], reading: Reading
     """Judge sinks that could be read, each with the index of its feed and its place; what is wrong becomes a fault."""
     seen: dict[tuple[object, ...], Place] = {}
     for index, place, sink in sinks:
-        if isinstance(sink, PostgresConfig):
+        if isinstance(sink, PostgresConfig | ParquetConfig):
             _check_columns(sink, place, reading)
+        if isinstance(sink, ParquetConfig):
+            _check_parquet(sink, place, reading)
+        if isinstance(sink, PostgresConfig):
             _check_tables(sink, place, reading)
         if isinstance(sink, HttpConfig | RemoteWriteConfig):
             _check_secrets(sink, place, reading)
+        if isinstance(sink, JetstreamSink):
+            check_secrets(sink, place, reading)
         if isinstance(sink, RemoteWriteConfig):
             _check_series(sink, place, reading)
         for key, target in _targets(sink):
@@ -41,13 +48,15 @@ def _targets(sink: SinkConfig) -> Iterator[tuple[str, tuple[str, ...]]]:
     if isinstance(sink, PostgresConfig):
         yield "table", (sink.dsn, sink.schema, sink.table)
         yield "late_table", (sink.dsn, sink.schema, sink.late_table)
+    if isinstance(sink, JetstreamSink):
+        yield from (("subject", (url, sink.subject)) for url in sink.urls)
     if isinstance(sink, HttpConfig):
         yield "url", (sink.url,)
         if sink.late_url:
             yield "late_url", (sink.late_url,)
 
 
-def _check_columns(sink: PostgresConfig, place: Place, reading: Reading) -> None:
+def _check_columns(sink: PostgresConfig | ParquetConfig, place: Place, reading: Reading) -> None:
     names: dict[str, int] = {}
     for number, column in enumerate(sink.columns):
         here = (*place, "columns", number)
@@ -61,6 +70,16 @@ def _check_columns(sink: PostgresConfig, place: Place, reading: Reading) -> None
             reading.fault(
                 (*here, "name"), f"is the name of columns[{names[column.name] + 1}] already", quoted(column.name)
             )
+
+
+def _check_parquet(sink: ParquetConfig, place: Place, reading: Reading) -> None:
+    for number, column in enumerate(sink.columns):
+        if column.name in OWN:
+            sentence = "is a column that the sink keeps for itself: name another"
+            reading.fault((*place, "columns", number, "name"), sentence, quoted(column.name))
+    why = fault_of([column.column() for column in sink.columns])
+    if why and not any(reading.is_faulty((*place, "columns", number)) for number in range(len(sink.columns))):
+        reading.fault((*place, "columns"), why)
 
 
 def _check_tables(sink: PostgresConfig, place: Place, reading: Reading) -> None:

@@ -6,11 +6,13 @@ Rules that compare keys, of one sink or of several, are `config_sink_checks`.
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Annotated, ClassVar, Literal
+from typing import Annotated, Any, ClassVar, Literal
 
 import msgspec
 from msgspec import field
 
+from .broker_access import BrokerAccess
+from .config_broker_kinds import broker_addresses, broker_name, subject_prefix, user
 from .config_kinds import (
     choice,
     count,
@@ -144,6 +146,41 @@ class PostgresConfig(SinkConfig, frozen=True):
         return super().options() | {"columns": tuple(column.column() for column in self.columns)}
 
 
+class ParquetColumn(PostgresColumn, frozen=True):
+    """One column of the files, by the rules of the columns of a table of PostgreSQL.
+
+    A value that does not fit its type is null. Where no column of type text holds `event`, files have one column more,
+    `event_aside`, with the whole event of such rows and null in all others: nothing is lost.
+    """
+
+
+class ParquetConfig(SinkConfig, frozen=True):
+    """Parquet files in one folder. Needs the extra `arrow`."""
+
+    kind: ClassVar[str] = "parquet"
+    directory: Annotated[Path, Key(path(), "the folder, which feeds may share; relative to `data_dir`")] = Path(
+        "{feed}-parquet"
+    )
+    roll_bytes: Annotated[
+        int, Key(size("1KiB"), "a new file is begun beyond this size, rows not packed yet counted as they are")
+    ] = 64 * MIB
+    roll_every_ns: Annotated[int, Key(duration("1s"), "a new file is begun after this time")] = field(
+        default=60 * SECOND_NS, name="roll_every"
+    )
+    rows_per_group: Annotated[int, Key(count(1, 10_000_000), "rows in a row group; at 16 MiB it is written anyway")] = (
+        100_000
+    )
+    compression: Annotated[
+        Literal["zstd", "snappy", "none"], Key(choice("zstd", "snappy", "none"), "of the columns in the files")
+    ] = "zstd"
+    columns: Annotated[tuple[ParquetColumn, ...], Tables({"": ParquetColumn})] = ()
+    late: Annotated[LateConfig, Table(LateConfig)] = LateConfig()
+
+    def options(self) -> dict[str, object]:
+        """As for every sink."""
+        return super().options() | {"columns": tuple(column.column() for column in self.columns)}
+
+
 class HttpConfig(SinkConfig, frozen=True, kw_only=True):
     """One POST of NDJSON for each batch, with its number as Idempotency-Key."""
 
@@ -226,11 +263,55 @@ class RemoteWriteConfig(SinkConfig, frozen=True, kw_only=True):
         return super().options() | {"series": tuple(series.rule() for series in self.series)}
 
 
+class JetstreamSink(SinkConfig, frozen=True, kw_only=True):
+    """Messages of NDJSON in a JetStream stream, in order, whose numbers tell a repeat. Needs the extra `nats`."""
+
+    kind: ClassVar[str] = "jetstream"
+    urls: Annotated[tuple[str, ...], Key(broker_addresses("nats", "tls"), "the servers; one that answers is used")]
+    stream: Annotated[str, Key(broker_name("stream"), "the stream; it must be there and take the subjects")]
+    subject: Annotated[
+        str, Key(subject_prefix(), "what the subjects begin with: `SUBJECT.FEED.ordered` and `SUBJECT.FEED.late`")
+    ] = "strandline"
+    late: Annotated[LateConfig, Table(LateConfig)] = LateConfig()
+    message_bytes_at_most: Annotated[
+        int, Key(size("1KiB", "64MiB"), "bytes of one message, if the server and the stream let it be so large")
+    ] = MIB
+    timeout_ns: Annotated[int, Key(duration("100ms", "1h"), "the longest wait for the stream's answer")] = field(
+        default=10 * SECOND_NS, name="timeout"
+    )
+    user: Annotated[str | None, Key(user(), "who to be at the server")] = None
+    password: Annotated[
+        str | None, Key(secret("password", 4096), "its password; better in its variable than in the file")
+    ] = None
+    password_file: Annotated[
+        str | None, Key(secret("path", 4096, hidden=False), "a file that holds the password, read at each connection")
+    ] = None
+    token: Annotated[str | None, Key(secret("token", 4096), "a token in the place of user and password")] = None
+    token_file: Annotated[
+        str | None, Key(secret("path", 4096, hidden=False), "a file that holds the token, read at each connection")
+    ] = None
+    creds_file: Annotated[
+        str | None, Key(secret("path", 4096, hidden=False), "a file with a user's JWT and seed, as NATS tools write it")
+    ] = None
+    ca_file: Annotated[
+        str | None, Key(secret("path", 4096, hidden=False), "certificates (PEM) to trust instead of the system's")
+    ] = None
+
+    def options(self) -> dict[str, object]:
+        """As for every sink; who to be there is one option."""
+        keys = ("user", "password", "password_file", "token", "token_file", "creds_file", "ca_file")
+        options = super().options()
+        given: dict[str, Any] = {key: options.pop(key) for key in keys}
+        return options | {"access": BrokerAccess(**given)}
+
+
 SINK_KINDS: dict[str, type[SinkConfig]] = {
     "sqlite": SqliteConfig,
     "ndjson": NdjsonConfig,
     "postgres": PostgresConfig,
     "http": HttpConfig,
     "remote_write": RemoteWriteConfig,
+    "jetstream": JetstreamSink,
+    "parquet": ParquetConfig,
 }
 SINK_KINDS_LATER: tuple[str, ...] = ()  # kinds that are promised; named in the fault, so that nobody hunts a typo

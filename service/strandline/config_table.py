@@ -11,6 +11,7 @@ from typing import Any
 
 import msgspec
 
+from .config_intakes import INTAKE_KINDS, IntakeConfig
 from .config_model import Config
 from .config_read import Declared, Key, Tables, declared, tables_of
 from .config_sinks import SINK_KINDS, SinkConfig
@@ -29,8 +30,9 @@ def _section(title: str, struct: type[msgspec.Struct]) -> Iterator[str]:
     yield f"{about}\n"
     yield "| key | default | value | what it is for |"
     yield "|---|---|---|---|"
-    if issubclass(struct, SinkConfig):
-        yield f'| `kind` | (required) | `"{struct.kind}"` | the kind of sink |'
+    if issubclass(struct, SinkConfig | IntakeConfig):
+        noun = "sink" if issubclass(struct, SinkConfig) else "intake"
+        yield f'| `kind` | (required) | `"{struct.kind}"` | the kind of {noun} |'
     for item in declared(struct).values():
         if isinstance(item.mark, Key):
             about = item.mark.about.replace("|", "\\|")
@@ -42,11 +44,13 @@ def _heading(title: str, struct: type[msgspec.Struct]) -> str:
     if not title:
         return "At the top of the file"
     name, _, below = title.partition(" ")
-    if below and not issubclass(struct, SinkConfig):
+    if below and not issubclass(struct, SinkConfig | IntakeConfig):
         kind, _, key = below.partition(".")
-        several = isinstance(declared(SINK_KINDS[kind])[key].mark, Tables)
-        return f'`{key} = {"[ { ... } ]" if several else "{ ... }"}` of a sink with `kind = "{kind}"`'
-    if issubclass(struct, SinkConfig):
+        is_sink = name.endswith("sink")
+        several = isinstance(declared((SINK_KINDS if is_sink else INTAKE_KINDS)[kind])[key].mark, Tables)
+        owner = "a sink" if is_sink else "an intake"
+        return f'`{key} = {"[ { ... } ]" if several else "{ ... }"}` of {owner} with `kind = "{kind}"`'
+    if issubclass(struct, SinkConfig | IntakeConfig):
         return f'`[[{name}]]` with `kind = "{struct.kind}"`'
     last = name.rsplit(".", maxsplit=1)[-1]
     return f"`[[{name}]]`" if name == "feed" else f"`{last} = {{ ... }}`{' of a feed' if '.' in name else ''}"

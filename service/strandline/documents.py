@@ -12,6 +12,7 @@ from .core.columns import TIME_MIN
 from .core.records import ActRecord
 from .core.view import HOLD_WHYS, View
 from .ingest.timestamps import format_rfc3339
+from .intake.starting import intake_documents, intake_stalls
 from .runtime import FeedRuntime
 from .sinks.delivery import DeliveryState
 
@@ -63,6 +64,7 @@ def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
             for name, hop in runtime.hops().items()
         },
         "repairs": {name: asdict(repairer.state()) for name, repairer in runtime.repairers.items()},
+        "intake": intake_documents(runtime),
         "sinks": {name: _sink(runtime, view, name) for name in runtime.deliveries},
     }
 
@@ -164,7 +166,7 @@ def state_of(runtime: FeedRuntime) -> str:
 
 def stalls_of(runtime: FeedRuntime) -> list[str]:
     """Sentences about work that waits while nothing advances; empty when all is well."""
-    view, found = runtime.view(), []
+    view, found = runtime.view(), intake_stalls(runtime, STALLED_AFTER_S)
     bound_s = STALLED_AFTER_S + runtime.config.hold_at_most_ns / 1e9
     held_s = age_s(view.now_ns, view.held_oldest_ns)
     if held_s is not None and held_s > bound_s:

@@ -16,6 +16,7 @@ from .core.columns import TIME_MIN
 from .core.histogram import Histogram
 from .core.view import HOLD_WHYS, View
 from .errors import REFUSALS
+from .intake.counts import DELAY_BOUNDS_S
 from .journal.counters import SYNC_BOUNDS_S
 from .metrics_reference import METRICS
 from .runtime import FeedRuntime
@@ -80,6 +81,7 @@ class _Sampler:
         self._journal()
         self._sinks()
         self._hops()
+        self._intakes()
 
     def _books(self) -> None:
         view, ledger = self.view, self.view.ledger
@@ -148,6 +150,23 @@ class _Sampler:
                 self.add("strandline_sink_waiting_events", waiting.events, name, lane)
                 self.add("strandline_sink_oldest_seconds", self.age_s(waiting.oldest_instant_ns), name, lane)
                 self.add("strandline_sink_delivered_events", waiting.delivered_events, name, lane)
+
+    def _intakes(self) -> None:
+        for counts in self.runtime.intakes:
+            name = counts.name
+            self.add("strandline_intake_connected", float(counts.connected), name)
+            for outcome, count in counts.outcomes.items():
+                self.add("strandline_intake_messages", count, name, outcome)
+            self.add("strandline_intake_redelivered", counts.repeats, name)
+            self.add("strandline_intake_in_flight", counts.in_flight, name)
+            self.add("strandline_intake_lost", counts.losses, name)
+            if counts.waiting is not None:
+                self.add("strandline_intake_waiting_messages", counts.waiting, name)
+            bounds = [*map(repr, DELAY_BOUNDS_S), "+Inf"]
+            buckets = list(zip(bounds, accumulate(counts.delays.counts), strict=True))
+            self.families["strandline_intake_broker_seconds"].add_metric(  # type: ignore[attr-defined]
+                (self.feed, name), buckets, counts.delays.total_s
+            )
 
     def _hops(self) -> None:
         for name, hop in self.runtime.hops().items():

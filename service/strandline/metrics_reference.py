@@ -206,6 +206,48 @@ METRICS: dict[str, Meaning] = {
         "1: read the sink's `last_error` at /v1/feeds/{feed}, and mend the store or the way to it.",
         ("sink",),
     ),
+    "strandline_intake_connected": Meaning(
+        "gauge",
+        "1 while an intake has its broker.",
+        "0: read the intake's `words` at /v1/feeds/{feed}, and mend the broker or the way to it.",
+        ("intake",),
+    ),
+    "strandline_intake_messages": Meaning(
+        "counter",
+        "Messages of a broker by what became of them: taken, quarantined whole, or put back to come again.",
+        "`quarantined` grows: read the quarantine, mend the producer. `put_back` grows: the feed refuses; see why.",
+        ("intake", "outcome"),
+    ),
+    "strandline_intake_redelivered": Meaning(
+        "counter",
+        "Messages that the broker says it had sent before.",
+        "Grows: acknowledgements get lost, or syncs take longer than `ack_wait`; look at the network and the disk.",
+        ("intake",),
+    ),
+    "strandline_intake_in_flight": Meaning(
+        "gauge",
+        "Messages taken from a broker and not settled yet.",
+        "Stays at in_flight_at_most: the journal's disk is slower than the broker, or the feed refuses; see which.",
+        ("intake",),
+    ),
+    "strandline_intake_waiting_messages": Meaning(
+        "gauge",
+        "Messages that a broker holds and has not sent yet; only where it can tell.",
+        "Grows: more is published than is taken; see `words` of the intake, then the disk and who holds the feed.",
+        ("intake",),
+    ),
+    "strandline_intake_lost": Meaning(
+        "counter",
+        "Times that an intake's connection was lost.",
+        "Grows: look at the broker's log and at the network between.",
+        ("intake",),
+    ),
+    "strandline_intake_broker_seconds": Meaning(
+        "histogram",
+        "Time from a broker's clock to the arrival of a message; only where the broker tells it.",
+        "Its upper quantiles grow: messages wait in the broker. Lateness that grows without this arose before it.",
+        ("intake",),
+    ),
     "strandline_lanes_bytes": Meaning(
         "gauge",
         "Bytes that the kept late lane and quarantine take.",

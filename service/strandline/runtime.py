@@ -25,6 +25,7 @@ from .errors import JournalFailed, JournalFull, StrandlineError
 from .hops import Bodies, Hop
 from .housekeeping import Housekeeper
 from .ingest.decode import Decoder
+from .intake.counts import Counts
 from .journal.commit import GroupCommit
 from .journal.journal import Journal
 from .lines import JournalLines
@@ -97,6 +98,7 @@ class FeedRuntime:
         )  # fmt: skip
         self._housekeeping: asyncio.Task[None] | None = None
         self.recording = False  # whether a capture is being made of it
+        self.intakes: list[Counts] = []  # what is known of each, for observers
         self.watchers: list[Callable[[Batch], None]] = []  # called with each batch that leaves; they may not fail
 
     # ---- start and stop -------------------------------------------------------------------------------------------

@@ -191,7 +191,7 @@ def test_every_value_reaches_settings_and_limits() -> None:
             'feed[1].sink[1].kind of "river-gauges" is missing: one of sqlite, ndjson',
         ),
         (FEED + "[[feed.sink]]\nkind = 'sqlite'\nname = 'lanes'", "is a name that the service uses itself"),
-        (FEED + "[[feed.sink]]\nkind = 'sqllite'", "remote_write; did you mean sqlite?"),
+        (FEED + "[[feed.sink]]\nkind = 'sqllite'", "remote_write, jetstream, parquet; did you mean sqlite?"),
         (FEED + "[[feed.sink]]\nkind = 'parchment'", '= "parchment" is none of sqlite, ndjson, postgres, http, rem'),
         (
             FEED + "[[feed.sink]]\nkind = 'sqlite'\n[[feed.sink]]\nkind = 'sqlite'\npath = 'b.db'",
@@ -317,6 +317,7 @@ def test_each_kind_of_sink_can_be_made() -> None:
     assert config_model.SINK_KINDS.keys() == sinks.SINK_KINDS.keys()
     needed = {
         "http": "url = 'http://localhost/'",
+        "jetstream": "urls = ['nats://localhost']\nstream = 'ORDERED'",
         "remote_write": "url = 'http://localhost/'\nseries = [ { name = 'level', value = '/level' } ]",
     }
     text = "".join(f"[[feed.sink]]\nkind = '{kind}'\n{needed.get(kind, '')}\n" for kind in config_model.SINK_KINDS)

@@ -21,7 +21,12 @@ SINK_KINDS: dict[str, tuple[str, str]] = {
     "postgres": ("postgres", "PostgresSink"),
     "http": ("http", "HttpSink"),
     "remote_write": ("remote_write", "RemoteWriteSink"),
+    "jetstream": ("jetstream", "JetstreamSink"),
+    "parquet": ("parquet", "ParquetSink"),
 }
+
+
+EXTRAS = {"parquet": "arrow", "jetstream": "nats"}  # extras of the installation that are not named after their kind
 
 
 def make_sink(kind: str, feed: str, clock: Clock, **options: object) -> Sink:
@@ -36,7 +41,8 @@ def make_sink(kind: str, feed: str, clock: Clock, **options: object) -> Sink:
     try:
         maker = getattr(importlib.import_module(f".{module}", __name__), name)
     except ModuleNotFoundError as error:
-        advice = f"install strandline with its extra: pip install 'strandline[{kind}]'"
+        extra = EXTRAS.get(kind, kind.replace("_", "-"))
+        advice = f"install strandline with its extra: pip install 'strandline[{extra}]'"
         raise StrandlineError(f"a sink of kind {kind} needs the package {error.name}: {advice}") from error
     given: dict[str, object] = {"feed": feed, **options}
     parameters = inspect.signature(maker).parameters

