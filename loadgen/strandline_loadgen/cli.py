@@ -84,10 +84,18 @@ def _add_send(commands: Any) -> None:
     pace = command.add_mutually_exclusive_group()
     pace.add_argument("--speed", type=float, help="as the shape's events arrive, so many times as fast")
     pace.add_argument("--interval-ms", type=float, help="a request each so many ms")
+    pace.add_argument("--rate", type=float, metavar="EVENTS", help="so many events a second")
     command.add_argument("--connections", type=int, default=4, help="at the same time (%(default)s)")
+    command.add_argument(
+        "--format", default="ndjson", help="ndjson, jsonl, json, json-seq, cloudevents, msgpack (%(default)s)"
+    )
     command.add_argument("--encodings", default="identity", help="identity, gzip, zstd: one or several, taken in turn")
     command.add_argument("--seconds-at-most", type=float, default=600.0, help="stop after this (%(default)s)")
     add_access(command)
+    command.add_argument(
+        "--check", type=Path, metavar="STORE",
+        help="then drain the feed and judge what its SQLite file or NDJSON folder holds (nothing else of this feed)",
+    )  # fmt: skip
     command.add_argument("--anywhere", action="store_true", help="allow a service on another machine")
     command.add_argument("--json", action="store_true", help="the result as JSON, for programs")
     command.set_defaults(command=_send)
@@ -99,9 +107,16 @@ def _add_bench(commands: Any) -> None:
     )
     command.add_argument("--only", action="append", default=[], metavar="WORD", help="rows with this in their name")
     command.add_argument("--rounds", type=int, default=5, help="how often each row is visited (%(default)s)")
-    command.add_argument("--quick", action="store_true", help="a tenth of the events, 3 rounds; goals are not judged")
+    size = command.add_mutually_exclusive_group()
+    size.add_argument("--quick", action="store_true", help="a tenth of the events, 3 rounds; goals are not judged")
+    size.add_argument("--full", action="store_true", help="also 10^7 held and the slow peers: some 30 min, 8 GiB")
     command.add_argument("--list", action="store_true", help="name the rows and stop")
     command.add_argument("--json", type=Path, metavar="FILE", help="write everything there too")
+    command.add_argument("--page", type=Path, metavar="FILE", help="measure nothing: write the page of kept results")
+    command.add_argument(
+        "--results", type=Path, metavar="FOLDER", default=Path("tests/bench/results"),
+        help="where the results for --page are (%(default)s)",
+    )  # fmt: skip
     command.set_defaults(command=_bench)
 
 
@@ -136,7 +151,12 @@ def _bench(options: argparse.Namespace) -> int:
     from .bench.harness import Scale, main_table  # noqa: PLC0415
     from .bench.rows import all_rows  # noqa: PLC0415
 
-    scale = Scale.quick() if options.quick else Scale()
+    if options.page:
+        from .bench.page import write_page  # noqa: PLC0415
+
+        write_page(options.results, options.page)
+        return FINE
+    scale = Scale.quick() if options.quick else Scale.whole() if options.full else Scale()
     rows = all_rows(scale)
     if options.list:
         print("\n".join(row.name for row in rows))

@@ -8,6 +8,7 @@ import os
 import sys
 import time
 from collections.abc import Sequence
+from pathlib import Path
 from typing import Any
 
 import msgspec
@@ -16,12 +17,16 @@ from strandline.client_access import Caller, caller_of
 from strandline.errors import ConfigError
 
 from .bodies import Style, bodies, cut_by_count, cut_by_window
-from .driver import Delivery, Schedule, Target, as_arrived, at_once, every, send
+from .driver import Delivery, Schedule, Target, as_arrived, at_once, at_rate, every, send
+from .evidence import Verdict
 from .exits import FINE, NO, NOT_REACHED
+from .progress import Shown
 from .shapes import parameters, shape
 from .trace import Int64s, Trace
+from .verdict import judged, settle
 
 FAILURES_SHOWN = 20
+QUANTILES = {"p50": 0.5, "p90": 0.9, "p99": 0.99, "p99.9": 0.999, "max": 1.0}
 
 
 def send_shape(options: argparse.Namespace) -> int:
@@ -31,6 +36,7 @@ def send_shape(options: argparse.Namespace) -> int:
         options.feed,
         connections=options.connections,
         encodings=tuple(options.encodings.split(",")),
+        format=options.format,
         seconds_at_most=options.seconds_at_most,
         keys=f"send-{time.time_ns()}",
         anywhere=options.anywhere,
@@ -41,14 +47,30 @@ def send_shape(options: argparse.Namespace) -> int:
         trace = trace.shifted(time.time_ns() - int(trace.arrivals[0 if options.speed else -1]))
     bounds = _cut(trace, options)
     style = Style(options.time_unit, options.event_bytes)
-    done = asyncio.run(send(bodies(trace, bounds, style), target, _schedule(trace, options)))
+    store: Path | None = options.check
+    if store and not store.exists():
+        raise ValueError(f"--check {store}: there is no such file or folder; name the sink's own")
+    if store and options.format == "cloudevents":
+        raise ValueError("--check reads events as they were rendered: use another --format than cloudevents")
+    with Shown(len(bounds) - 1) as shown:
+        done = asyncio.run(send(bodies(trace, bounds, style), target, _schedule(trace, options), shown.show))
     result = summary(done, len(bounds) - 1)
+    verdict = _verdict(store, target, trace, bounds, done) if store else None
+    if verdict:
+        result["verdict"] = {"ok": verdict.ok, "text": str(verdict)}
     print(msgspec.json.encode(result).decode() if options.json else spoken(result))
     for failure in done.failures[:FAILURES_SHOWN]:
         print(failure, file=sys.stderr)
+    if verdict and not verdict.ok:
+        return NO
     if result["answered"] == result["bodies"]:
         return FINE
     return NO if result["answered"] or not done.resent else NOT_REACHED
+
+
+def _verdict(store: Path, target: Target, trace: Trace, bounds: Int64s, done: Delivery) -> Verdict:
+    asyncio.run(settle(target))
+    return judged(store, target.feed, trace, bounds, done)
 
 
 def _caller(options: argparse.Namespace) -> Caller:
@@ -82,13 +104,15 @@ def _cut(trace: Trace, options: argparse.Namespace) -> Int64s:
 def _schedule(trace: Trace, options: argparse.Namespace) -> Schedule:
     if options.speed:
         return as_arrived(trace, options.speed)
+    if options.rate:
+        return at_rate(options.rate)
     return at_once if options.interval_ms is None else every(options.interval_ms / 1000)
 
 
 def summary(done: Delivery, bodies_in_all: int) -> dict[str, Any]:
     """What became of a sending, as plain values; latencies in seconds from due to answered."""
     some = done.latencies_s[done.answered]
-    quantiles = np.quantile(some, (0.5, 0.99, 1)).tolist() if len(some) else []
+    quantiles = np.quantile(some, tuple(QUANTILES.values())).tolist() if len(some) else []
     return {
         "bodies": bodies_in_all,
         "answered": len(some),
@@ -97,7 +121,7 @@ def summary(done: Delivery, bodies_in_all: int) -> dict[str, Any]:
         "resent": done.resent,
         "seconds": round(done.seconds, 3),
         "events_per_s": round(done.sums["received"] / max(done.seconds, 1e-9)),
-        "latency_s": {key: round(value, 6) for key, value in zip(("p50", "p99", "max"), quantiles, strict=False)},
+        "latency_s": {key: round(value, 6) for key, value in zip(QUANTILES, quantiles, strict=False)},
         "failures": done.failures[:FAILURES_SHOWN],
     }
 
@@ -111,4 +135,5 @@ def spoken(result: dict[str, Any]) -> str:
         f"received {result['received']:,}: accepted {result['accepted']:,}, late {result['late']:,}, "
         f"duplicate {result['duplicate']:,}, quarantined {result['quarantined']:,}\n"
         f"from due to answered: {latencies or 'none was answered'}"
+        + (f"\n{result['verdict']['text']}" if "verdict" in result else "")
     )

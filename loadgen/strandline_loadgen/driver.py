@@ -29,9 +29,13 @@ from yarl import URL
 
 from .bodies import Body
 from .evidence import Rows, Sent
+from .formats import FORMATS
+from .progress import Standing
 from .trace import Int64s, Trace
 
 Schedule = Callable[[Body], float]  # seconds after the start at which a body is due
+Watch = Callable[[Standing], None]
+WATCH_EVERY_S = 0.25
 
 SUMS = ("received", "accepted", "late", "duplicate", "quarantined")
 NEVER_NS = 2**63 - 1
@@ -66,6 +70,11 @@ def every(interval_s: float) -> Schedule:
     return lambda body: body.number * interval_s
 
 
+def at_rate(events_per_s: float) -> Schedule:
+    """So many events a second, however the bodies are cut."""
+    return lambda body: body.start / events_per_s
+
+
 def as_arrived(trace: Trace, speed: float = 1.0, begin_ns: int | None = None) -> Schedule:
     """Each body when its last event arrived in the trace, `speed` times as fast.
 
@@ -86,6 +95,7 @@ class Target:
     feed: str
     connections: int = 4
     encodings: tuple[str, ...] = ("identity",)
+    format: str = "ndjson"  # one of `formats.FORMATS`
     bodies_at_most: int = 1_000_000
     seconds_at_most: float = 600.0
     tries_at_most: int = 50
@@ -99,6 +109,8 @@ class Target:
         unknown = [encoding for encoding in self.encodings if encoding not in COMPRESSIONS]
         if unknown or not self.encodings:
             raise ValueError(f"encodings are {', '.join(COMPRESSIONS)}; {', '.join(unknown) or 'none'} was given")
+        if self.format not in FORMATS:
+            raise ValueError(f"formats are {', '.join(FORMATS)}; {self.format} was given")
         if min(self.connections, self.bodies_at_most, self.tries_at_most) < 1 or self.connections > 1000:
             raise ValueError("bodies and tries must be at least 1, connections 1 to 1,000")
         if not (self.anywhere or is_loopback(self.url)):
@@ -155,10 +167,15 @@ class Delivery:
         return Sent(rows, requests, self.begins_ns, self.ends_ns, self.answered)
 
 
-async def send(bodies: Iterable[Body], target: Target, schedule: Schedule = at_once) -> Delivery:
-    """Send the bodies and wait for all answers, within the target's bounds. Bodies are rendered as they fall due."""
+async def send(
+    bodies: Iterable[Body], target: Target, schedule: Schedule = at_once, watch: Watch | None = None
+) -> Delivery:
+    """Send the bodies and wait for all answers, within the target's bounds. Bodies are rendered as they fall due.
+
+    `watch` is told a few times a second how it stands.
+    """
     sender = _Sender(target, schedule)
-    return await sender.run(islice(bodies, target.bodies_at_most))
+    return await sender.run(islice(bodies, target.bodies_at_most), watch)
 
 
 class _Sender:
@@ -174,8 +191,9 @@ class _Sender:
         self._due: asyncio.Queue[tuple[Body, float] | None] = asyncio.Queue(target.connections)
         self._start = time.monotonic()
         self._stop = self._start + target.seconds_at_most
+        self._behind_s = self._longest_s = 0.0
 
-    async def run(self, bodies: Iterable[Body]) -> Delivery:
+    async def run(self, bodies: Iterable[Body], watch: Watch | None = None) -> Delivery:
         """Everything, from the first body to the last answer."""
         caller = self._target.caller
         limits = aiohttp.TCPConnector(limit=self._target.connections, ssl=caller.context or True)
@@ -183,9 +201,12 @@ class _Sender:
             aiohttp.ClientSession(connector=limits, headers=caller.headers) as session,
             asyncio.TaskGroup() as tasks,
         ):
-            tasks.create_task(self._feed(bodies))
-            for _ in range(self._target.connections):
-                tasks.create_task(self._work(session))
+            watching = tasks.create_task(self._tell(watch)) if watch else None
+            work = [tasks.create_task(self._work(session)) for _ in range(self._target.connections)]
+            await self._feed(bodies)
+            await asyncio.wait(work)
+            if watching:
+                watching.cancel()
         done = self._delivery
         begun = max(self._begins, default=-1) + 1
         done.begins_ns = np.array([self._begins[body] for body in range(begun)], dtype=np.int64)
@@ -205,10 +226,19 @@ class _Sender:
         for _ in range(self._target.connections):
             await self._due.put(None)
 
+    async def _tell(self, watch: Watch) -> None:
+        while True:
+            await asyncio.sleep(WATCH_EVERY_S)
+            done, (longest, self._longest_s) = self._delivery, (self._longest_s, 0.0)
+            seconds = time.monotonic() - self._start
+            counts = len(self._begins), len(self._ends), done.sums["received"], done.refused, done.resent
+            watch(Standing(*counts, self._behind_s, seconds, longest))
+
     async def _work(self, session: aiohttp.ClientSession) -> None:
         while (job := await self._due.get()) is not None:
             body, due = job
             self._begins[body.number] = time.monotonic_ns()
+            self._behind_s = time.monotonic() - due
             failure = await self._deliver(session, body, due)
             if failure and len(self._delivery.failures) < KEPT_AT_MOST:
                 self._delivery.failures.append(f"body {body.number}: {failure}")
@@ -216,10 +246,12 @@ class _Sender:
     async def _deliver(self, session: aiohttp.ClientSession, body: Body, due: float) -> str:
         """Send one body until it is answered for good. Returns why it got no success, or nothing."""
         encoding = self._target.encodings[body.number % len(self._target.encodings)]
-        payload = body.payload
+        form, payload = FORMATS[self._target.format], body.payload
+        if self._target.format != "ndjson":
+            payload = await asyncio.to_thread(form.encode, payload)
         if encoding != "identity":
             payload = await asyncio.to_thread(COMPRESSIONS[encoding], payload)
-        headers = {"Content-Type": "application/x-ndjson", "Idempotency-Key": f'"{self._target.keys}-{body.number}"'}
+        headers = {"Content-Type": form.media_type, "Idempotency-Key": f'"{self._target.keys}-{body.number}"'}
         if encoding != "identity":
             headers["Content-Encoding"] = encoding
         wait, failure = BACK_OFF_S, "there was no time left to send it"
@@ -255,6 +287,7 @@ class _Sender:
         except msgspec.MsgspecError as error:
             return f"the answer cannot be read ({error}): {content[:300].decode(errors='replace')}"
         self._ends[body.number] = time.monotonic_ns(), time.monotonic() - due
+        self._longest_s = max(self._longest_s, time.monotonic() - due)
         for name in SUMS:
             self._delivery.sums[name] += getattr(answered, name)
         for fault in answered.faults[: KEPT_AT_MOST - len(self._delivery.faults)]:

@@ -9,8 +9,8 @@ from pathlib import Path
 import numpy as np
 import pytest
 from rich.console import Console
-from strandline_loadgen.bench import heap, path, peers, rows
-from strandline_loadgen.bench.harness import Measure, Row, Sample, Scale, main_table, run
+from strandline_loadgen.bench import heap, path, rows
+from strandline_loadgen.bench.harness import Also, Measure, Row, Sample, Scale, main_table, run
 
 TINY = Scale(events=4_000, held=(2_000,), body_events=500)
 
@@ -57,6 +57,20 @@ def test_median_spread_and_goal() -> None:
     assert run([least], TINY, 1, lambda text: None)[0].met is True
 
 
+def test_a_row_can_have_a_second_figure_fewer_rounds_and_no_warm_up() -> None:
+    visits: list[float] = []
+
+    def measure() -> Sample:
+        visits.append(1.0)
+        return Sample(2.0, also={"other": float(len(visits))}, note="so it went")
+
+    row = Row("one", "x", lambda scale: measure, 1.0, "at least", False, 2, (Also("other", 3.0),), {"held": 5})
+    one, other = run([row], TINY, 9, lambda text: None)
+    assert len(visits) == one.rounds == other.rounds == 2
+    assert (one.median, one.met, one.note, one.place) == (2.0, True, "so it went", {"held": 5})
+    assert (other.name, other.median, other.goal, other.met) == ("other", 1.5, 3.0, False)
+
+
 def test_the_table_and_the_file_show_machine_goal_and_miss(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     paper, file = io.StringIO(), tmp_path / "bench.json"
     console = Console(file=paper, width=200)
@@ -94,27 +108,6 @@ def test_a_path_that_loses_an_event_is_found_out(monkeypatch: pytest.MonkeyPatch
         path.check(course, path.MemoryJournal(course.journal_bytes))
 
 
-@pytest.mark.parametrize("peer", peers.PEERS)
-def test_the_peers_release_what_the_runs_release(peer: str) -> None:
-    course = peers.course_of(2_000, TINY)
-    peers.check_alike(course, [peers.Runs, peers.PEERS[peer]])
-    assert peers.ns_per_event(peers.PEERS[peer], course) > 0
-
-
-def test_a_course_holds_what_it_says() -> None:
-    """Four fifths of what comes in the slack are held: the closed form of check-values, section 9 (1), for G(K)."""
-    assert len(peers.course_of(20_000, Scale(body_events=500)).held()) == pytest.approx(20_000, rel=0.03)
-
-
-def test_a_peer_that_does_not_agree_is_found_out() -> None:
-    class Hasty(peers.ListSort):
-        def turn(self, course: peers.Course, batch: int) -> list[peers.Pair]:
-            return super().turn(course, batch)[1:]
-
-    with pytest.raises(RuntimeError, match="do not agree"):
-        peers.check_alike(peers.course_of(2_000, TINY), [peers.Runs, Hasty])
-
-
 def test_heap_bytes_are_those_of_two_columns_and_little_more() -> None:
     """24 bytes are the two columns (core/columns.py); a wrong count would show the lines' own bytes, 2,000 each."""
     scale = Scale(events=0, held=(50_000,), body_events=5_000)
@@ -124,4 +117,9 @@ def test_heap_bytes_are_those_of_two_columns_and_little_more() -> None:
 def test_rows_are_named_once() -> None:
     names = [row.name for row in rows.all_rows(Scale())]
     assert len(set(names)) == len(names)
-    assert {row.goal for row in rows.all_rows(Scale()) if "body to ordered" in row.name} == {2.2, 4.0, 11.0}
+
+
+def test_every_scale_has_its_rows() -> None:
+    default, full = ({row.name for row in rows.all_rows(scale)} for scale in (Scale(), Scale.whole()))
+    assert not [name for name in default if "10,000,000 held" in name]
+    assert len([name for name in full if name.startswith("ordering alone") and " 10,000,000 held" in name]) == 6

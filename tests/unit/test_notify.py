@@ -116,7 +116,8 @@ def test_a_beat_is_told(supervisor: socket.socket) -> None:
 
 async def test_a_beat_needs_the_tick_of_every_feed(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     beats: list[int] = []
-    async with running(configuration(tmp_path)) as service:
+    async with running(configuration(tmp_path, slack="1h")) as service:
+        await service.send([1])  # one that holds nothing would not be ticked at each beat
         ticks, tick = [0], service.runtime.tick
 
         def counted() -> None:

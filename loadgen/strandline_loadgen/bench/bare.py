@@ -2,7 +2,8 @@
 
 It reads a body, decodes the two members that a feed names, writes the body with its CRC to a file, answers once that is
 synced (one sync for all who wait), and keeps nothing. So it does what any durable ingest must do, and no ordering, no
-books, no sinks. Run as `python -m strandline_loadgen.bench.bare PORT FOLDER`.
+books, no sinks. Run as `python -m strandline_loadgen.bench.bare PORT FOLDER`; with `discard` behind it, bodies are read
+and nothing else is done: the limit that aiohttp sets.
 """
 
 from __future__ import annotations
@@ -65,7 +66,7 @@ class RoundFile:
         self._at += len(block)
 
 
-def make_app(folder: Path) -> web.Application:
+def make_app(folder: Path, *, discard: bool = False) -> web.Application:
     """The handler, at the address where the service takes events."""
     journal = RoundFile(folder / "bare.journal")
     decode_lines = msgspec.json.Decoder(TwoMembers).decode_lines
@@ -77,19 +78,25 @@ def make_app(folder: Path) -> web.Application:
         counts = {"received": received, "accepted": received, "late": 0, "duplicate": 0, "quarantined": 0}
         return web.Response(body=msgspec.json.encode(counts), content_type="application/json")
 
+    async def drop(request: web.Request) -> web.Response:
+        received = (await request.read()).count(b"\n")
+        counts = {"received": received, "accepted": received, "late": 0, "duplicate": 0, "quarantined": 0}
+        return web.Response(body=msgspec.json.encode(counts), content_type="application/json")
+
     async def ready(request: web.Request) -> web.Response:
         return web.Response(body=b'{"ready":true}', content_type="application/json")
 
     app = web.Application(client_max_size=BODY_BYTES_AT_MOST)
-    app.add_routes([web.post("/v1/feeds/{feed}/events", take), web.get("/health/ready", ready)])
+    app.add_routes([web.post("/v1/feeds/{feed}/events", drop if discard else take), web.get("/health/ready", ready)])
     return app
 
 
-def main(port: int, folder: Path) -> None:
+def main(port: int, folder: Path, what: str = "") -> None:
     """Serve until SIGTERM."""
     loop = uvloop.new_event_loop()
-    web.run_app(make_app(folder), host="127.0.0.1", port=port, loop=loop, print=None, access_log=None)
+    app = make_app(folder, discard=what == "discard")
+    web.run_app(app, host="127.0.0.1", port=port, loop=loop, print=None, access_log=None)
 
 
 if __name__ == "__main__":
-    main(int(sys.argv[1]), Path(sys.argv[2]))
+    main(int(sys.argv[1]), Path(sys.argv[2]), *sys.argv[3:])

@@ -8,62 +8,89 @@ after the other. Nothing is judged here: goals stand beside what was measured.
 from __future__ import annotations
 
 import gc
-import os
-import platform
 import statistics
 import sys
+import time
 from collections.abc import Callable, Sequence
 from dataclasses import asdict, dataclass, field
-from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import Any, Literal
 
+import msgspec
 from rich.console import Console
 from rich.table import Table
 
-PACKAGES = ("strandline", "numpy", "msgspec", "aiohttp", "uvloop", "google-crc32c", "sortedcontainers", "zstandard")
+from .machine import load, machine
+
+Sense = Literal["at most", "at least"]
 
 
 @dataclass(frozen=True, slots=True)
 class Scale:
-    """How much is measured: events a row, events held in rows about holding, bodies of so many events."""
+    """How much is measured: events a row, events held in rows about holding, bodies of so many events.
+
+    `full`: also what takes minutes or gigabytes (10^7 held, the slow peers). `is_quick`: for trying things out.
+    """
 
     events: int = 1_000_000
-    held: tuple[int, ...] = (10_000, 100_000, 1_000_000)
+    held: tuple[int, ...] = (10_000, 1_000_000)
     body_events: int = 5_000
     seed: int = 1
+    full: bool = False
+    is_quick: bool = False
 
     @classmethod
     def quick(cls) -> Scale:
         """A tenth of it: for trying things out, not for quoting."""
-        return cls(events=100_000, held=(10_000, 100_000))
+        return cls(events=100_000, held=(10_000, 100_000), is_quick=True)
+
+    @classmethod
+    def whole(cls) -> Scale:
+        """With what only `--full` measures."""
+        return cls(held=(10_000, 1_000_000, 10_000_000), full=True)
 
 
 @dataclass(frozen=True, slots=True)
 class Sample:
-    """One visit: the row's value, and what else was measured on the way (ns per event and the like)."""
+    """One visit: the row's value, what else was measured on the way (ns per event and the like), a word on it.
+
+    `also`: values of the row's further goals, by their names.
+    """
 
     value: float
     beside: dict[str, float] = field(default_factory=dict)
+    also: dict[str, float] = field(default_factory=dict)
+    note: str = ""
 
 
 Measure = Callable[[], Sample]
 
 
 @dataclass(frozen=True, slots=True)
+class Also:
+    """A second figure from a row's visits, with a goal of its own."""
+
+    name: str
+    goal: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
 class Row:
     """One line of the table. `prepare` makes the data, checks once that the subject is right, and returns the measure.
 
-    `goal`: what the value should be, at most or at least (None: shown without a goal). `on_demand`: it takes minutes or
-    gigabytes, so it runs only where `--only` names it.
+    `goal`: what the value should be, at most or at least (None: shown without a goal). `place`: what the row varies,
+    for tables and pictures. `warm`: visit it once beforehand, unmeasured. `rounds_at_most`: it is slow and steady.
     """
 
     name: str
     unit: str  # "x" for ratios
     prepare: Callable[[Scale], Measure]
     goal: float | None = None
-    sense: Literal["at most", "at least"] = "at most"
-    on_demand: bool = False
+    sense: Sense = "at most"
+    warm: bool = True
+    rounds_at_most: int = 1000
+    also: tuple[Also, ...] = ()
+    place: dict[str, str | int] = field(default_factory=dict)
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,67 +107,48 @@ class Figure:
     met: bool | None
     rounds: int
     beside: dict[str, float]  # medians
+    note: str = ""
+    place: dict[str, str | int] = field(default_factory=dict)
 
 
 def run(rows: Sequence[Row], scale: Scale, rounds: int, say: Callable[[str], None]) -> list[Figure]:
-    """Prepare every row, then visit all of them in each round, in turn. One unmeasured visit warms each row up."""
+    """Prepare every row, then visit all of them in each round, in turn."""
     measures: list[Measure] = []
     for row in rows:
         say(f"preparing {row.name}")
         measures.append(row.prepare(scale))
-        measures[-1]()
+        if row.warm:
+            measures[-1]()
     samples: list[list[Sample]] = [[] for _ in rows]
     for number in range(rounds):
         for row, measure, found in zip(rows, measures, samples, strict=True):
-            say(f"round {number + 1} of {rounds}: {row.name}")
-            gc.collect()
-            found.append(measure())
-    return [_figure(row, found) for row, found in zip(rows, samples, strict=True)]
+            if number < row.rounds_at_most:
+                say(f"round {number + 1} of {rounds}: {row.name}")
+                gc.collect()
+                found.append(measure())
+    return [figure for row, found in zip(rows, samples, strict=True) for figure in _figures(row, found)]
 
 
-def _figure(row: Row, samples: Sequence[Sample]) -> Figure:
-    values = [sample.value for sample in samples]
+def _figures(row: Row, samples: Sequence[Sample]) -> list[Figure]:
+    beside = {key: statistics.median(sample.beside[key] for sample in samples) for key in samples[0].beside}
+    found = [_figure(row, row.name, row.goal, [sample.value for sample in samples], beside, samples[-1].note)]
+    for also in row.also:
+        values = [sample.also[also.name] for sample in samples]
+        found.append(_figure(row, also.name, also.goal, values, {}, ""))
+    return found
+
+
+def _figure(
+    row: Row, name: str, goal: float | None, values: Sequence[float], beside: dict[str, float], note: str
+) -> Figure:
     median = statistics.median(values)
     met = None
-    if row.goal is not None:
-        met = median <= row.goal if row.sense == "at most" else median >= row.goal
-    beside = {key: statistics.median(sample.beside[key] for sample in samples) for key in samples[0].beside}
-    return Figure(row.name, row.unit, median, min(values), max(values), row.goal, row.sense, met, len(values), beside)
-
-
-def machine() -> dict[str, Any]:
-    """What this ran on: processor, cores, memory, system, interpreter and the versions that matter."""
-    return {
-        "processor": _processor(),
-        "cores": len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count(),
-        "memory_gib": _memory_gib(),
-        "system": f"{platform.system()} {platform.release()} {platform.machine()}",
-        "python": f"{platform.python_implementation()} {platform.python_version()}",
-        "packages": {name: _version(name) for name in PACKAGES},
-    }
-
-
-def _processor() -> str:
-    cpuinfo = Path("/proc/cpuinfo")
-    if cpuinfo.exists():
-        for line in cpuinfo.read_text(errors="replace").splitlines():
-            if line.startswith("model name"):
-                return line.partition(":")[2].strip()
-    return platform.processor() or platform.machine()
-
-
-def _memory_gib() -> float | None:
-    try:
-        return round(os.sysconf("SC_PAGE_SIZE") * os.sysconf("SC_PHYS_PAGES") / 2**30, 1)
-    except (ValueError, OSError, AttributeError):
-        return None
-
-
-def _version(name: str) -> str:
-    try:
-        return version(name)
-    except PackageNotFoundError:
-        return "absent"
+    if goal is not None:
+        met = median <= goal if row.sense == "at most" else median >= goal
+    extremes = min(values), max(values)
+    return Figure(
+        name, row.unit, median, *extremes, goal, row.sense, met, len(values), beside, note, {**row.place}
+    )  # fmt: skip
 
 
 def as_plain(figures: Sequence[Figure], scale: Scale, facts: dict[str, Any]) -> dict[str, Any]:
@@ -159,22 +167,31 @@ def show(figures: Sequence[Figure], facts: dict[str, Any], console: Console) -> 
     )
     table = Table(box=None, pad_edge=False)
     for name in ("row", "median", "spread", "goal", "beside (medians)"):
-        table.add_column(
-            name, justify="left" if name in ("row", "beside (medians)") else "right", no_wrap=name != "row"
-        )
+        left = name in ("row", "beside (medians)")
+        table.add_column(name, justify="left" if left else "right", no_wrap=not left)
     for figure in figures:
-        unit = "" if figure.unit == "x" else f" {figure.unit}"
-        ratio = "x" if figure.unit == "x" else ""
-        goal = "" if figure.goal is None else f"{figure.sense} {figure.goal:g}{ratio}"
-        mark = {True: " met", False: " MISSED", None: ""}[figure.met]
+        beside = ", ".join(f"{key} {short(value)}" for key, value in figure.beside.items())
         table.add_row(
             figure.name,
-            f"{short(figure.median)}{ratio}{unit}",
+            with_unit(figure.median, figure.unit),
             f"{short(figure.least)} to {short(figure.greatest)}",
-            goal + mark,
-            ", ".join(f"{key} {short(value)}" for key, value in figure.beside.items()),
+            goal_of(figure),
+            "; ".join(filter(None, (beside, figure.note))),
         )
     console.print(table)
+
+
+def goal_of(figure: Figure) -> str:
+    """The goal, and whether it was met."""
+    if figure.goal is None:
+        return ""
+    ratio = "x" if figure.unit == "x" else ""
+    return f"{figure.sense} {figure.goal:g}{ratio} {'met' if figure.met else 'MISSED'}"
+
+
+def with_unit(value: float, unit: str) -> str:
+    """A value as the table shows it."""
+    return f"{short(value)}x" if unit == "x" else f"{short(value)} {unit}"
 
 
 def short(value: float) -> str:
@@ -184,14 +201,21 @@ def short(value: float) -> str:
     return f"{value:.3g}"
 
 
-def main_table(
-    rows: Sequence[Row], *, scale: Scale, rounds: int, only: Sequence[str], json_path: Path | None, console: Console
-) -> list[Figure]:
-    """Run the rows whose name holds one of `only` (all without), show the table, write the file. Raises ValueError."""
-    chosen = [row for row in rows if any(word in row.name for word in only) or not (only or row.on_demand)]
+def chosen_rows(rows: Sequence[Row], only: Sequence[str]) -> list[Row]:
+    """The rows whose name holds one of `only` (all without). Raises ValueError, which names those that there are."""
+    chosen = [row for row in rows if not only or any(word in row.name for word in only)]
     if not chosen:
         names = "\n  ".join(row.name for row in rows)
         raise ValueError(f"no row has {' or '.join(map(repr, only))} in its name; there are:\n  {names}")
+    return chosen
+
+
+def main_table(
+    rows: Sequence[Row], *, scale: Scale, rounds: int, only: Sequence[str], json_path: Path | None, console: Console
+) -> list[Figure]:
+    """Run the chosen rows, show the table, write the file. Raises ValueError."""
+    chosen = chosen_rows(rows, only)
+    facts, begin = machine() | {"load_before": load()}, time.monotonic()
     progress = Console(stderr=True)
     live = progress.status("") if progress.is_terminal else None
     if live:
@@ -201,11 +225,10 @@ def main_table(
     finally:
         if live:
             live.stop()
-    facts = machine()
+    facts |= {"when": time.strftime("%Y-%m-%d", time.gmtime()), "seconds": round(time.monotonic() - begin)}
     show(figures, facts, console)
+    console.print(f"{len(figures)} figures in {facts['seconds']} s; load before: {facts['load_before']}")
     if json_path:
-        import msgspec  # noqa: PLC0415 - only where a file is asked for
-
         json_path.write_bytes(
             msgspec.json.format(msgspec.json.encode(as_plain(figures, scale, facts)), indent=2) + b"\n"
         )

@@ -18,40 +18,16 @@ from functools import cache, partial
 from importlib.util import find_spec
 from pathlib import Path
 
-import numpy as np
 import uvloop
-from strandline.core.columns import REF, Batch
+from strandline.core.columns import Batch
 
-from strandline_loadgen.bodies import Style, bodies, cut_by_count
-from strandline_loadgen.shapes import shape
-
+from .commits import FEED, Blocks, course_of
 from .harness import Measure, Row, Sample, Scale
 
 GOAL = 0.8
 COMMIT_EVENTS = (1_000, 5_000, 50_000)
-EVENTS_SHARE = 0.2  # of the scale's events
-SCHEMA, FEED = "public", "bench"
+SCHEMA = "public"
 EPOCH_US = 946_684_800_000_000  # 2000-01-01, from which PostgreSQL counts
-
-
-class Blocks:
-    """`ports.Lines` over blocks in memory, by number of the batch."""
-
-    def __init__(self, names: Sequence[str]) -> None:
-        self._names = names
-        self.blocks: dict[int, bytes] = {}
-
-    def ndjson(self, batch: Batch) -> bytes:
-        """The batch's lines."""
-        return self.blocks[batch.number]
-
-    def lines(self, batch: Batch) -> list[bytes]:
-        """The same, one by one."""
-        return self.blocks[batch.number].split(b"\n")[:-1]
-
-    def source_names(self) -> Sequence[str]:
-        """Names of the sources by number."""
-        return self._names
 
 
 @cache
@@ -67,23 +43,6 @@ def address() -> str:
     atexit.register(server.cleanup)  # runs first: what was registered last does
     dsn: str = server.get_uri()
     return dsn
-
-
-def _course(commit_events: int, scale: Scale) -> tuple[list[Batch], Blocks]:
-    """Batches in order of time, each of one commit's size."""
-    events = max(2 * commit_events, int(scale.events * EVENTS_SHARE) // commit_events * commit_events)
-    trace = shape("in_order", events, scale.seed)
-    lines = Blocks(trace.source_names)
-    batches = []
-    for body in bodies(trace, cut_by_count(trace, commit_events), Style("rfc3339")):
-        number, start = body.number + 1, body.number * commit_events
-        refs = np.zeros(commit_events, dtype=REF)
-        refs["length"] = [len(line) for line in bytes(body.payload).split(b"\n")[:-1]]
-        refs["source"] = trace.sources[start : start + commit_events]
-        times = trace.times[start : start + commit_events]
-        lines.blocks[number] = bytes(body.payload)
-        batches.append(Batch("ordered", number, times, refs, 0, number))
-    return batches, lines
 
 
 def _records(batch: Batch, lines: Blocks) -> list[tuple[object, ...]]:
@@ -132,7 +91,7 @@ async def _visit(batches: Sequence[Batch], lines: Blocks) -> Sample:
 
 
 def _prepare(commit_events: int, scale: Scale) -> Measure:
-    batches, lines = _course(commit_events, scale)
+    batches, lines = course_of(commit_events, scale)
 
     def measure() -> Sample:
         with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:

@@ -149,12 +149,14 @@ def _with_snapshot(events: int, scale: Scale) -> Measure:
 
 
 def rows(scale: Scale) -> list[Row]:
-    """Folding without a snapshot against ingest; start to ready with a snapshot, also at 10^7 events (`--only`)."""
+    """Folding without a snapshot against ingest; start to ready with a snapshot, also at 10^7 events (`--full`)."""
     name = "recovery, start to ready with {:,} events in the journal"
+    large = Row(name.format(LARGE_EVENTS), "s", partial(_with_snapshot, LARGE_EVENTS), rounds_at_most=3)
     return [
         Row(
             "recovery without a snapshot against ingest", "x", _without_snapshot, SPEEDUP_AT_LEAST, "at least",
+            rounds_at_most=3, warm=False,
         ),
         Row(name.format(scale.events), "s", partial(_with_snapshot, scale.events)),
-        Row(name.format(LARGE_EVENTS), "s", partial(_with_snapshot, LARGE_EVENTS), on_demand=True),
+        *([large] if scale.full else []),
     ]  # fmt: skip

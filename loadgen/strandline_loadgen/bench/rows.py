@@ -2,11 +2,42 @@
 
 from __future__ import annotations
 
-from . import heap, path, peers, postgres, recovery, service
+from . import (
+    arrow,
+    brokers,
+    durable,
+    growth,
+    heap,
+    idle,
+    latency,
+    limits,
+    ordering,
+    path,
+    postgres,
+    recovery,
+    service,
+    sqlite,
+)
 from .harness import Row, Scale
+
+ROOMS = (
+    path,
+    arrow,
+    ordering,
+    growth,
+    heap,
+    durable,
+    service,
+    brokers,
+    latency,
+    idle,
+    sqlite,
+    postgres,
+    recovery,
+    limits,
+)
 
 
 def all_rows(scale: Scale) -> list[Row]:
     """The rows at this scale."""
-    rooms = (path, peers, heap, recovery, service, postgres)
-    return [row for room in rooms for row in room.rows(scale)]
+    return [row for room in ROOMS for row in room.rows(scale)]

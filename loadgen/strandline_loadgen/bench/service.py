@@ -4,6 +4,12 @@ Both run in a process of their own and get the same bodies over the same number 
 The value is the share of the bare handler's rate that the service reaches, counted from the first body to the last
 answer. After each run the service is drained and stopped, and the judge reads its files: a run that is not well has no
 figure. Sender and server share the machine's cores, which flatters neither and narrows the difference.
+
+What ordering costs is the same service (delays of 0.5 s, slack 5 s: so nearly all leaves while it is measured, as in
+the other run) against passing everything through as it arrives. A feed has no setting for that, so the second run gets
+the same bodies but for one thing: every event has the same time, and the slack is 0. Equal times keep their order of
+arrival and are never late, so nothing is held, and each body leaves with the mark behind it; the judge checks that.
+Books, journal, marks and sink do their work in both.
 """
 
 from __future__ import annotations
@@ -12,7 +18,7 @@ import asyncio
 import sys
 import tempfile
 import time
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import partial
 from pathlib import Path
 
@@ -30,7 +36,7 @@ from strandline_loadgen.trace import Int64s, Trace
 from .harness import Measure, Row, Sample, Scale
 
 FEED = "bench"
-GOAL = 0.5
+GOAL, ORDERING_GOAL = 0.75, 0.9
 CONNECTIONS = {500: 16, 5_000: 8}
 EVENTS_SHARE = {500: 0.3, 5_000: 1.0}  # of the scale's events: smaller bodies take longer
 CONFIGURATION = """listen = "127.0.0.1:{port}"
@@ -40,7 +46,7 @@ drain_at_most = "5m"
 name = "bench"
 time = {{ at = "/observed_at", unit = "ns" }}
 source = "/station"
-slack = "20s"
+slack = "{slack}"
 idle_after = "1h"
 hold_at_most = "1h"
 ahead_limit = "1h"
@@ -59,15 +65,24 @@ class Course:
     bounds: Int64s
     bodies: list[Body]
     connections: int
+    slack: str = "20s"
 
 
-def course_of(body_events: int, scale: Scale) -> Course:
-    """Exponential delays (mean 2 s) at 10,000 events a second, the last one just arrived."""
+def course_of(body_events: int, scale: Scale, *, mean_s: float = 2.0, slack: str = "20s") -> Course:
+    """Exponential delays at 10,000 events a second, the last one just arrived."""
     events = int(scale.events * EVENTS_SHARE[body_events])
-    trace = shape("exponential", events, scale.seed, events_per_s=10_000.0, mean_s=2.0)
+    trace = shape("exponential", events, scale.seed, events_per_s=10_000.0, mean_s=mean_s)
     trace = trace.shifted(time.time_ns() - int(trace.arrivals[-1]))
     bounds = cut_by_count(trace, body_events)
-    return Course(trace, bounds, list(bodies(trace, bounds, Style("ns"))), CONNECTIONS[body_events])
+    return Course(trace, bounds, list(bodies(trace, bounds, Style("ns"))), CONNECTIONS[body_events], slack)
+
+
+def passing_through(course: Course) -> Course:
+    """The same bodies, but every event has the time of the last one, and the slack is 0."""
+    times = np.full(len(course.trace), course.trace.times[-1])
+    trace = replace(course.trace, times=times)
+    cut = list(bodies(trace, course.bounds, Style("ns")))
+    return replace(course, trace=trace, bodies=cut, slack="0s")
 
 
 async def events_per_s_bare(course: Course, folder: Path) -> float:
@@ -75,7 +90,7 @@ async def events_per_s_bare(course: Course, folder: Path) -> float:
     port = free_port()
     command = [sys.executable, "-m", "strandline_loadgen.bench.bare", str(port), str(folder)]
     async with ChildServer(command, port, folder / "bare.log") as server:
-        done = await _sent(server, course)
+        done = await sent_all(server, course)
         await server.stop()
     return len(course.trace) / done.seconds
 
@@ -86,9 +101,9 @@ async def events_per_s_service(course: Course, folder: Path, more: str = "") -> 
     `more` are further keys of the feed.
     """
     port, file = free_port(), folder / "strandline.toml"
-    file.write_text(CONFIGURATION.format(port=port, folder=folder.as_posix(), more=more))
+    file.write_text(CONFIGURATION.format(port=port, folder=folder.as_posix(), more=more, slack=course.slack))
     async with ChildServer(serve(file), port, folder / "service.log") as server:
-        done = await _sent(server, course)
+        done = await sent_all(server, course)
         answered = time.monotonic()
         await server.drain(FEED)
         code = await server.stop()
@@ -99,7 +114,7 @@ async def events_per_s_service(course: Course, folder: Path, more: str = "") -> 
     return len(course.trace) / done.seconds, rest_s
 
 
-async def _sent(server: ChildServer, course: Course) -> Delivery:
+async def sent_all(server: ChildServer, course: Course) -> Delivery:
     done = await send(course.bodies, Target(server.url, FEED, connections=course.connections, keys="bench"))
     if not done.answered.all() or done.refused or done.resent:
         raise RuntimeError(
@@ -118,26 +133,41 @@ def _check(course: Course, done: Delivery, folder: Path) -> None:
         raise RuntimeError(f"what the service delivered is not right, no figure would mean anything:\n{verdict}")
 
 
-async def _visit(course: Course) -> Sample:
+async def _against_bare(course: Course) -> Sample:
     with tempfile.TemporaryDirectory(prefix="strandline-bench-") as name:
         bare = await events_per_s_bare(course, Path(name))
         service, rest_s = await events_per_s_service(course, Path(name))
     return Sample(service / bare, {"events/s": service, "bare events/s": bare, "s to deliver the rest": rest_s})
 
 
-def _prepare(body_events: int, scale: Scale) -> Measure:
-    course = course_of(body_events, scale)
+async def _against_passing_through(course: Course, unordered: Course) -> Sample:
+    rates = []
+    for each in (unordered, course):
+        with tempfile.TemporaryDirectory(prefix="strandline-bench-") as name:
+            rates.append((await events_per_s_service(each, Path(name)))[0])
+    return Sample(rates[1] / rates[0], {"events/s": rates[1], "passing through events/s": rates[0]})
+
+
+def _prepare(body_events: int, scale: Scale, *, bare: bool) -> Measure:
+    course = course_of(body_events, scale) if bare else course_of(body_events, scale, mean_s=0.5, slack="5s")
+    unordered = course if bare else passing_through(course)
 
     def measure() -> Sample:
         with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
-            return runner.run(_visit(course))
+            if bare:
+                return runner.run(_against_bare(course))
+            return runner.run(_against_passing_through(course, unordered))
 
     return measure
 
 
 def rows(scale: Scale) -> list[Row]:
-    """A row for each size of body."""
+    """For each size of body: against a bare handler, and with ordering against without."""
+    del scale
+    bare = "service over HTTP, bodies of {:,} events"
+    through = "service over HTTP, ordering on against off, bodies of {:,} events"
     return [
-        Row(f"service over HTTP, bodies of {size:,} events", "x", partial(_prepare, size), GOAL, "at least")
+        Row(name.format(size), "x", partial(_prepare, size, bare=against_bare), goal, "at least")
+        for name, goal, against_bare in ((bare, GOAL, True), (through, ORDERING_GOAL, False))
         for size in EVENTS_SHARE
     ]

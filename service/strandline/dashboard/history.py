@@ -208,6 +208,10 @@ class History:
         row["t_ns"] = begin_ns
         return row
 
+    def newest(self, count: int) -> Rows:
+        """The newest rows of the finest level, at most so many, oldest first."""
+        return self._rings[0].last(count)
+
     def rows(self, level: int) -> Rows:
         """All rows of a level, oldest first; the last one is of the step that is not over yet."""
         rows = self._rings[level].last(self._rings[level].count)

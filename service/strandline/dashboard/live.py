@@ -35,6 +35,7 @@ from .moments import LATE_AT_MOST, STRANDS_AT_MOST, Json, feed_part, lanes_part,
 from .sampling import FeedMemory
 from .serving import FILES, read_files
 from .serving import routes as file_routes
+from .silence import silence_of
 from .strands import Look, held_of, look_into
 
 log = logging.getLogger(__name__)
@@ -163,6 +164,8 @@ class Watch:
             "lateness": {"edges_s": EDGES_S, "counts": lateness.take().tolist()},
             "slacks": every_slack(state.lateness, view.slack_ns, rates.hold_mean_ns),
             "acts": [act_row(act) for act in state.acts.newest(ACTS_AT_MOST)],
+            "silence": silence_of(state.sources, view.now_ns),
+            "minute": memory.minute(view.now_ns),
         }
         idle_after_ns = state.settings.idle_after_ns
         part = Part(state.sources, view.hold.source, memory.late.sources(), view.now_ns, idle_after_ns)

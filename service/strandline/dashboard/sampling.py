@@ -21,6 +21,7 @@ from .lateness import SinceLast
 
 WHYS = tuple(HOLD_WHYS)
 RATES_OVER_NS = 5 * SECOND_NS
+MINUTE_S = 60
 COUNTERS_APART_NS = 400_000_000
 LATE_KEPT_NS = 900 * SECOND_NS
 OWED_AT_MOST = 20  # rows entered at a time where nothing happens: 12 us each, one at a time 18 (what they need is cold)
@@ -93,6 +94,13 @@ class FeedMemory:
         """The history up to the last sample."""
         self._enter_owed()
         return self._history
+
+    def minute(self, now_ns: int) -> dict[str, int]:
+        """Events by what became of them (names as BOOKS) in the last minute, to a second. Rows owed are of nothing."""
+        rows = self._history.newest(MINUTE_S)
+        rows = rows[rows["t_ns"] > now_ns - MINUTE_S * SECOND_NS]
+        since = zip(BOOKS, _books(self.runtime.feed.state.ledger), self._books, strict=True)
+        return {name: int(rows[name].sum()) + now - then for name, now, then in since}
 
     def _enter_owed(self) -> None:
         for now_ns in self._owed:
