@@ -7,7 +7,7 @@ from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager
 
 import numpy as np
-from strandline.core import held, merge, runs, slack
+from strandline.core import held, held_by_source, merge, runs, slack
 from strandline.core.columns import REF, as_refs, as_rows
 from strandline.core.merge import Merger
 from strandline.core.runs import OpenRuns, Strand
@@ -72,7 +72,7 @@ def constants(**values: int) -> Iterator[None]:
     before = []
     try:
         for name, value in values.items():
-            module = next(module for module in (held, merge, runs, slack) if hasattr(module, name))
+            module = next(module for module in (held, held_by_source, merge, runs, slack) if hasattr(module, name))
             before.append((module, name, getattr(module, name)))
             setattr(module, name, value)
         yield

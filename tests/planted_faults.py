@@ -18,6 +18,7 @@ from planting import Change
 from sim_ordeal import the_power_fails_before_each, the_process_dies_at_each
 from simulate import play
 from strandline.core import saved
+from strandline.core import state as state_module
 from strandline.core.feed import Feed
 from strandline.core.held import Held
 from strandline.core.merge import Merger
@@ -170,9 +171,10 @@ FAULTS = [
         "< for <=: an event at the watermark is judged late",
         (
             Change(
-                State, "fold_arrival", "least_of(times) < self.watermark_ns", "least_of(times) <= self.watermark_ns"
+                state_module, "late_rows",
+                "return times < state.watermark_ns if least_of(times) < state.watermark_ns else None",
+                "return times <= state.watermark_ns if least_of(times) <= state.watermark_ns else None",
             ),
-            Change(State, "_without_late", "late = times < self.watermark_ns", "late = times <= self.watermark_ns"),
         ),
         machine,
         "must be held|the records say",

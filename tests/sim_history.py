@@ -9,8 +9,9 @@ from __future__ import annotations
 
 import hashlib
 
+import numpy as np
 from helpers_feed import saved_bytes
-from strandline.core.columns import Batch, Lane
+from strandline.core.columns import Batch, Lane, Times
 from strandline.core.effects import Buffer
 from strandline.core.feed import Feed
 from strandline.core.records import VERSION, Kind, Mark, decode_mark, frame_bytes
@@ -28,6 +29,7 @@ def digest_of(batch: Batch) -> bytes:
     digest.update(repr(head).encode())
     digest.update(batch.times.tobytes())
     digest.update(batch.refs.tobytes())
+    digest.update(batch.behind.tobytes())
     return digest.digest()
 
 
@@ -56,7 +58,9 @@ class History:
         self.left: dict[Name, bytes] = {}
         self.again = 0  # batches that left more than once
         self.cut_records = 0
-        self._marks: dict[int, tuple[Mark, int | None]] = {}  # end of its record -> mark, the watermark before it
+        # End of its record -> mark, the watermark before it; where each source has its own, these as a column.
+        self._marks: dict[int, tuple[Mark, int | Times]] = {}
+        self._stands: dict[int, Times] = {}  # and the watermarks after it
         self._folded = Feed(settings)
         state = _Watched(settings)
         state.left = []
@@ -87,8 +91,14 @@ class History:
         assert self._determined.get(name) == digest, f"{name} is not what the journal's records determine"
         if batch.lane == "ordered":
             mark, stood = self._marks[batch.ready_lsn]
-            assert int(batch.times[-1]) <= mark.watermark_ns
-            assert stood is None or int(batch.times[0]) >= stood, "an event from before a watermark that stood earlier"
+            if isinstance(stood, int):
+                assert int(batch.times[-1]) <= mark.watermark_ns
+                assert int(batch.times[0]) >= stood, "an event from before a watermark that stood earlier"
+            else:
+                numbers = batch.refs["source"]
+                assert np.all(batch.times >= stood[numbers]), "an event from before its source's watermark"
+                passed = batch.times <= self._stands[batch.ready_lsn][numbers]
+                assert np.all(passed), "an event that its source has not passed"
 
     def recovered(self, journal: Journal, feed: Feed) -> None:
         """A new process has read the journal back: what was durable is there as it was, what else is there was next."""
@@ -127,12 +137,16 @@ class History:
         assert isinstance(state, _Watched)
         while feed.next_lsn < durable_lsn:
             lsn, before = feed.next_lsn, state.watermark_ns
+            own = None if state.own is None else state.own.at.copy()
             kind, body = self.records[lsn]
             feed.fold(kind, VERSION, body, lsn)
             if kind == Kind.MARK:
                 mark = decode_mark(body)
                 assert mark.watermark_ns >= before
-                self._marks[feed.next_lsn] = (mark, before)
+                self._marks[feed.next_lsn] = (mark, before if own is None else own)
+                if own is not None and state.own is not None:
+                    assert np.all(state.own.at >= own), "a source's watermark goes back"
+                    self._stands[feed.next_lsn] = state.own.at.copy()
             for batch in state.left:
                 self._determined[batch.lane, batch.number] = digest_of(batch)
             state.left.clear()

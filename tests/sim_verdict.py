@@ -37,6 +37,7 @@ def judge_stores(
             [late, elsewhere],
             quarantined=np.array(quarantined, dtype=np.int64),
             duplicates=None if repeats else 0,  # None: an event that is there may be there less often than it was sent
+            by_source=config.order == "source",
             told={key: told[key] for key in ("accepted", "late")} if exact and not len(elsewhere) else None,
         )
         assert verdict.ok, f"{name}: {verdict}"

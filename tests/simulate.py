@@ -33,7 +33,7 @@ def play(seed: int, pattern: str | None = None) -> Tally:
     """One world from beginning to end. Raises Violation."""
     scenario = scenario_of(seed, pattern)
     fresh = FRESH_EVENTS[seed % len(FRESH_EVENTS)]
-    with a_folder() as folder, seams(f"{seed}"), constants(FRESH_EVENTS=fresh):
+    with a_folder() as folder, seams(f"{seed}"), constants(FRESH_EVENTS=fresh, LOT_EVENTS=fresh):
         world = World(scenario, folder)
         try:
             return world.run()

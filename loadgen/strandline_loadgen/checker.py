@@ -32,24 +32,27 @@ def judge(
     quarantined: Int64s | int = 0,
     duplicates: Int64s | int | None = None,
     told: Mapping[str, int] | None = None,
+    by_source: bool = False,
 ) -> Verdict:
     """Compare what was sent with what the lanes hold, in the order in which the store holds it.
 
     `quarantined`: ids, or only how many the service says (then as many absent events are excused). `duplicates`: ids of
     the copies that were left out as repeats, or how many the service says, or None: any absent copy of an event that is
     there is taken for a recognised repeat. `told`: the service's own sums {"accepted", "late"}, compared with the rows
-    found. Raises AssertionError when `sent` contradicts itself.
+    found. `by_source`: order was promised within each source only. Raises AssertionError when `sent` contradicts
+    itself.
     """
     sent.check()
     case = _Case(sent)
     counts = {"ordered": 0, "late": 0}
-    order = _Order(case)
+    order = _OrderBySource(case) if by_source else _Order(case)
     for name, lane in (("ordered", ordered), ("late", late)):
         for piece in _pieces(lane):
             slots = case.admit(name, piece)
             counts[name] += len(piece)
             if name == "ordered":
                 order.follow(piece, slots)
+    order.settle()
     case.settle(quarantined, duplicates)
     for key, number in (told or {}).items():
         held = {"accepted": counts["ordered"], "late": counts["late"]}[key]
@@ -255,6 +258,35 @@ class _Order:
         np.minimum.at(begins, case.slots, requests if sent.begins is None else sent.begins[requests])
         np.maximum.at(ends, case.slots, requests if sent.ends is None else sent.ends[requests])
         return begins, ends, requests[case.row], case.row
+
+    def settle(self) -> None:
+        """All rows were told: everything was judged on the way."""
+
+
+class _OrderBySource:
+    """The same within each source: pieces are gathered, and judged source by source at the end."""
+
+    def __init__(self, case: _Case) -> None:
+        self._case = case
+        self._pieces: list[Rows] = []
+        self._slots: list[Int64s] = []
+
+    def follow(self, rows: Rows, slots: Int64s) -> None:
+        """The next rows of the ordered output, with their slots (-1: not what was sent)."""
+        self._pieces.append(rows)
+        self._slots.append(slots)
+
+    def settle(self) -> None:
+        """All rows were told: each source's rows as an output of their own, one source after the other."""
+        if not self._pieces:
+            return
+        columns = (np.concatenate([getattr(piece, c) for piece in self._pieces]) for c in ("ids", "times", "sources"))
+        rows, slots = Rows(*columns), np.concatenate(self._slots)
+        order = np.argsort(rows.sources, kind="stable")
+        ends = np.flatnonzero(np.diff(rows.sources[order])) + 1
+        for part in np.split(order, ends):
+            own = Rows(rows.ids[part], rows.times[part], rows.sources[part])
+            _Order(self._case).follow(own, slots[part])
 
 
 def _below_running_max(group: Int64s, values: Int64s, limits: Int64s) -> Flags:

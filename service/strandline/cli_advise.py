@@ -18,7 +18,7 @@ import msgspec
 import numpy as np
 
 from .cli_advice_text import write_advice
-from .cli_answers import FINE, NO, complain
+from .cli_answers import FINE, NO, WRONG_USE, complain
 from .cli_progress import bar
 from .core.settings import Settings
 from .errors import ConfigError
@@ -33,7 +33,6 @@ from .replay.sequence import name_of, read_numbers, sequence_figures
 from .replay.slacks import SLACK_NS_AT_MOST
 from .replay.wording import spelled
 
-GOOD = ("shown", "open")
 REORDER_EVENTS_AT_MOST = 2_000_000  # the first ones of a longer capture; some 300 bytes each
 REORDER_THRESHOLD = 10_000  # of RFC 5236: what is displaced by more counts as lost there
 SECOND_NS = 1_000_000_000
@@ -43,8 +42,12 @@ REPORTS = (".html", ".png")
 
 
 def advise_on(options: argparse.Namespace) -> int:
-    """Say how long to wait. Exit code 1 where the target was missed, cannot be kept, or cannot be shown."""
-    wanted, reports = _wanted(options), _reports(options)
+    """Say how long to wait. Exit code 1 where the target was missed, cannot be kept, or cannot be shown.
+
+    Exit code 2, after the answer, where the report cannot be drawn.
+    """
+    wanted = _wanted(options)
+    reports, lacking = _drawable(_reports(options))
     begin = time.perf_counter()
     with Capture(options.capture_file) as capture:
         if capture.cut:
@@ -82,7 +85,10 @@ def advise_on(options: argparse.Namespace) -> int:
         sys.stdout.write(msgspec.json.encode(answer).decode() + "\n")
     else:
         write_advice(answer)
-    return FINE if advice.verdict in GOOD else NO
+    if lacking is not None:  # the answer comes first: nobody should have to ask again for it
+        complain(*lacking.faults, "no report was written; the answer above is whole without it")
+        return WRONG_USE
+    return FINE if advice.supported else NO
 
 
 @dataclass(slots=True)
@@ -144,14 +150,26 @@ def _reports(options: argparse.Namespace) -> list[Path]:
             raise ConfigError([f"--report {file}: that is the capture itself: name another file"])
     if reports and options.quick:
         raise ConfigError(["--report needs what --quick leaves out: give one of the two"])
-    if reports:
-        require_matplotlib()
     return reports
+
+
+def _drawable(reports: list[Path]) -> tuple[list[Path], ConfigError | None]:
+    """The reports that can be drawn here: all of them, or none and why."""
+    try:
+        if reports:
+            require_matplotlib()
+    except ConfigError as error:
+        return [], error
+    return reports, None
 
 
 def _rule(options: argparse.Namespace, captured: CapturedRequests) -> Rule:
     """What the watermark follows: as asked for, else as the capture's settings say, else as is the default."""
     settings = captured.settings or Settings("")
+    if settings.order == "source" and options.clock is None:
+        reason = "this feed keeps order within each source, and what is advised on is one watermark for all of them"
+        remedy = "try single slacks with `strandline replay CAPTURE --config FILE`"
+        raise ConfigError([f"{options.capture_file}: {reason}: {remedy}"])
     if (options.clock or settings.clock) == "arrival":
         return Rule("arrival")
     return Rule("sources", settings.idle_after_ns if options.idle_after is None else int(options.idle_after))
@@ -198,6 +216,7 @@ def _document(feed: str, captured: CapturedRequests, found: _Found) -> dict[str,
         **asdict(advice),
         "wanted": advice.wanted._asdict(),
         "rule": advice.rule._asdict(),
+        "nearly_empty": advice.nearly_empty,
         "explanation": VERDICTS[advice.verdict],
     }
     if compared is not None:
@@ -212,7 +231,7 @@ def _document(feed: str, captured: CapturedRequests, found: _Found) -> dict[str,
     document |= {
         "reordering": found.reordering,
         "sequence": found.sequence,
-        "configuration": configuration_lines(feed, advice),
+        "configuration": configuration_lines(feed, advice) if advice.supported else [],
     }
     if compared is not None and found.patterns is not None:
         by_time = {"by_day": found.patterns.by_day, "steps": found.patterns.steps}

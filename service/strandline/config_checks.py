@@ -18,7 +18,7 @@ from .config_kinds import quoted
 from .config_model import Config, Feed, SteeredSlack
 from .config_read import Key, Place, Reading, declared
 from .config_sink_checks import check_sinks
-from .config_sinks import SINK_KINDS, SinkConfig
+from .config_sinks import SINK_KINDS, RemoteWriteConfig, SinkConfig
 from .ingest.pointer import Fields, PointerError
 
 
@@ -41,6 +41,27 @@ FEED_RULES = (
         ("hold_at_most", "slack"),
         lambda feed: feed.hold_at_most_ns < feed.longest_slack_ns,
         "is shorter than slack = {}: no event could wait for all of its slack",
+    ),
+    Rule(
+        ("order", "source"),
+        lambda feed: feed.order == "source" and feed.source is None,
+        "needs a `source` pointer, so that events can be told apart by their source",
+    ),
+    Rule(
+        ("order", "clock"),
+        lambda feed: feed.order == "source" and feed.clock == "arrival",
+        "contradicts clock = {}: by the arrival clock no source waits for another, so leave `order` out",
+    ),
+    Rule(
+        ("order", "slack"),
+        lambda feed: feed.order == "source" and isinstance(feed.slack_ns, SteeredSlack),
+        'contradicts slack = {}: a slack is steered for the feed as a whole; give a fixed one, such as slack = "5s"',
+    ),
+    Rule(
+        ("idle_after", "slack"),
+        lambda feed: feed.order == "source" and feed.idle_after_ns < feed.longest_slack_ns,
+        'is shorter than slack = {}: with order = "source" what is held of an idle source is let go, so no event could '
+        "wait for all of its slack",
     ),
     Rule(
         ("body_bytes_at_most", "decoded_bytes_at_most"),
@@ -98,6 +119,7 @@ def check(config: Config, reading: Reading) -> None:
     _check_sink_names(config, reading)
     _check_sink_paths(config, reading)
     check_sinks(_sinks(config, reading), reading)
+    _check_series_of_sources(config, reading)
     check_intakes(config.feeds, reading)
 
 
@@ -130,6 +152,19 @@ def _check_pointers(feed: Feed, place: Place, reading: Reading) -> None:
     except PointerError as error:
         last = [each for each in places if each in reading.written][-1]
         reading.fault(last, f"contradicts another pointer: {error}", _value(feed, last[2:], True))
+
+
+def _check_series_of_sources(config: Config, reading: Reading) -> None:
+    """Where order is kept within each source, samples of two sources in one series would not be in order."""
+    for index, place, sink in _sinks(config, reading):
+        feed = config.feeds[index]
+        if feed.order != "source" or not isinstance(sink, RemoteWriteConfig) or reading.is_faulty(place):
+            continue
+        for number, series in enumerate(sink.series):
+            here = (*place, "series", number)
+            if not reading.is_faulty(here) and feed.source not in dict(series.labels).values():
+                sentence = f'has no label at {feed.source}: with order = "source" each series must be of one source'
+                reading.fault((*here, "labels"), sentence)
 
 
 def _check_names(config: Config, reading: Reading) -> None:

@@ -77,7 +77,7 @@ class Feed(msgspec.Struct, frozen=True):
     name: Annotated[str, Key(FEED_NAME, "the feed's name in addresses, metrics and on the dashboard")]
     time: Annotated[EventTime, Table(EventTime)] = EventTime()
     source: Annotated[str | None, Key(pointer(), "where an event names its source; without it: one source")] = None
-    id: Annotated[str | None, Key(pointer(), "where an event carries its id; with it a repeat is recognised")] = None
+    id: Annotated[str | None, Key(pointer(), "where an event carries its id; a repeat is told by source and id alone, see Ids")] = None
     slack_ns: Annotated[
         int | SteeredSlack,
         Key(duration(), "how far the watermark stays behind: lateness up to it is put in order", SteeredSlack),
@@ -95,6 +95,10 @@ class Feed(msgspec.Struct, frozen=True):
         Literal["event", "arrival"],
         Key(choice("event", "arrival"), "what the watermark follows: the newest event times, or the arrival clock"),
     ] = "event"
+    order: Annotated[
+        Literal["feed", "source"],
+        Key(choice("feed", "source"), "order over the whole feed, or within each source: then none waits for another"),
+    ] = "feed"
     expect_sources: Annotated[
         tuple[str, ...], Key(texts("source", 256), "sources that hold the feed before they were heard")
     ] = ()
@@ -153,6 +157,7 @@ class Feed(msgspec.Struct, frozen=True):
             hold_at_most_ns=self.hold_at_most_ns,
             ahead_limit_ns=self.ahead_limit_ns,
             clock=self.clock,
+            order="source" if self.order == "source" else msgspec.UNSET,
             expect_sources=self.expect_sources,
             held_events_at_most=self.held_events_at_most,
             undelivered_events_at_most=self.undelivered_events_at_most,

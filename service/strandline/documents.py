@@ -38,6 +38,7 @@ def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
         "state": state_of(runtime),
         "failure": runtime.failure,
         "clock": view.clock,
+        "order": view.order,
         "watermark": time_text(view.watermark_ns),
         "watermark_ns": None if view.watermark_ns == TIME_MIN else view.watermark_ns,
         "watermark_age_s": age_s(view.now_ns, view.watermark_ns),

@@ -50,7 +50,7 @@ async def get_sources(request: web.Request) -> web.Response:
     """Sources by number, a page at a time."""
     runtime = runtime_of(request)
     after, limit = _number(request, "after", 0), _limit(request)
-    now_ns = runtime.clock.now_ns()
+    now_ns, own = runtime.clock.now_ns(), runtime.feed.state.own is not None
     rows = [
         {
             "source": source.name,
@@ -61,6 +61,7 @@ async def get_sources(request: web.Request) -> web.Response:
             "excused": source.excused,
             "promised": time_text(source.promised_ns),
             "promises_broken": source.promises_broken,
+            **({"watermark": time_text(source.watermark_ns)} if own else {}),
         }
         for source in sources_of(runtime.feed.state, after, limit)
     ]
@@ -79,7 +80,12 @@ async def get_late(request: web.Request) -> web.Response:
         limit=_limit(request),
         source=request.query.get("source"),
     )
-    return _json({"late": [asdict(row) for row in rows], "next_after": rows[-1].number if rows else None})
+    shown = [
+        asdict(row)
+        | {"time": time_text(row.time_ns), "arrived": time_text(row.arrived_ns), "late_by_s": row.late_by_ns / 1e9}
+        for row in rows
+    ]
+    return _json({"late": shown, "next_after": rows[-1].number if rows else None})
 
 
 async def get_quarantine(request: web.Request) -> web.Response:
@@ -88,7 +94,10 @@ async def get_quarantine(request: web.Request) -> web.Response:
     rows = await asyncio.to_thread(
         quarantine_rows, runtime.folder / "lanes.db", after=_number(request, "after", 0), limit=_limit(request)
     )
-    shown = [{**asdict(row), "event": row.event.decode(errors="replace")} for row in rows]
+    shown = [
+        {**asdict(row), "arrived": time_text(row.arrived_ns), "event": row.event.decode(errors="replace")}
+        for row in rows
+    ]
     return _json({"quarantine": shown, "next_after": rows[-1].number if rows else None})
 
 

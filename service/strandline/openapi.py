@@ -11,6 +11,7 @@ from typing import Any
 import msgspec
 
 from .acting import Drain, Excuse, PauseSink, SetSlack
+from .caution import CAUTION
 from .core.effects import Outcome
 from .errors import FAULT_REASONS, REFUSALS
 from .hold_answer import ActsAnswer, HoldsAnswer
@@ -154,6 +155,7 @@ def _history() -> Json:
                 _query("from", "an RFC 3339 time: only holds that reach beyond it", {"type": "string"}),
                 _query("to", "an RFC 3339 time: only holds that began before it", {"type": "string"}),
                 _query("limit", "how many are listed (500), at most 2000", _WHOLE),
+                _query("at_least", "only list holds that lasted so long (0s), such as 10s", {"type": "string"}),
             ],
         ),
         "/v1/feeds/{feed}/acts": _get(
@@ -231,12 +233,14 @@ def _paths() -> Json:
         **_again(),
         "/v1/feeds": _get("Every feed", _answer("feeds", document)),
         "/v1/feeds/{feed}": _get(
-            "Watermark, slack, hold, open runs, books, hops, sinks",
+            "Order, watermark (with order source: of the source furthest behind), slack, hold, books, hops, sinks",
             {**_answer("the feed", document), **_problems(404)},
             [_FEED],
         ),
         "/v1/feeds/{feed}/sources": _get(
-            "Sources", {**_answer("sources", document), **_problems(400, 404)}, [_FEED, *_PAGE]
+            "Sources; with order source each with its own watermark",
+            {**_answer("sources", document), **_problems(400, 404)},
+            [_FEED, *_PAGE],
         ),
         "/v1/feeds/{feed}/slack": _act(
             "Set the slack for a time, or end that early", "SetSlack"
@@ -247,10 +251,14 @@ def _paths() -> Json:
             [_FEED, _query("at", "slacks to answer for, such as 3.2s,5s; else a grid", _SLACKS)],
         ),
         "/v1/feeds/{feed}/late": _get(
-            "Late events", {**_answer("late events", document), **_problems(400, 404, 503)}, [_FEED, *_PAGE, source]
+            "Late events",
+            {**_answer("by number; times and `late_by_s` to read, `*_ns` exact", document), **_problems(400, 404, 503)},
+            [_FEED, *_PAGE, source],
         ),
         "/v1/feeds/{feed}/quarantine": _get(
-            "Lines in quarantine", {**_answer("lines", document), **_problems(400, 404, 503)}, [_FEED, *_PAGE]
+            "Lines in quarantine",
+            {**_answer("by number, those of one request in order of `line`", document), **_problems(400, 404, 503)},
+            [_FEED, *_PAGE],
         ),
         "/v1/feeds/{feed}/refused": _get(
             "Events of batches that sinks refused for good",
@@ -292,7 +300,7 @@ def document() -> Json:
         "info": {
             "title": "Strandline",
             "version": "1",
-            "description": "Keeps timestamped event feeds in order although events arrive late.",
+            "description": f"Keeps timestamped event feeds in order although events arrive late. {CAUTION}",
         },
         "paths": guarded(_paths()),
         "components": {"schemas": components, "securitySchemes": schemes()},

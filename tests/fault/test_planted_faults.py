@@ -15,9 +15,10 @@ import pytest
 from planted_acts import ACT_FAULTS
 from planted_faults import FAULTS as OTHER_FAULTS
 from planted_faults import SEEDS_AT_MOST, Fault, Worlds
+from planted_orders import ORDER_FAULTS
 from planting import planted
 
-FAULTS = [*OTHER_FAULTS, *ACT_FAULTS]
+FAULTS = [*OTHER_FAULTS, *ACT_FAULTS, *ORDER_FAULTS]
 
 
 def complaint(look: Callable[[], object]) -> str | None:

@@ -110,7 +110,9 @@ async def test_a_repeated_key_is_answered_again_and_takes_nothing_twice(tmp_path
 # ---- what is not there ----------------------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("path", ["/nothing", "/v1", "/v1/feeds/", "/v2/feeds", f"/v1/feeds/{FEED}/nothing", "/metrics/"])
+@pytest.mark.parametrize(
+    "path", ["/nothing", "/v1", "/v1/feeds/", "/v2/feeds", f"/v1/feeds/{FEED}/nothing", "/metrics/"]
+)
 async def test_an_address_that_does_not_exist(tmp_path: Path, path: str) -> None:
     async with running(configuration(tmp_path)) as service:
         assert "openapi.json" in problem_of(await service.get(path), 404)

@@ -120,6 +120,11 @@ class Path:
         """Let everything go."""
         self._carry_out(self._feed.drain(now_ns, -1))
 
+    @property
+    def held(self) -> int:
+        """Events held now."""
+        return self._feed.state.runs.held
+
     def _carry_out(self, effects: list[Effect]) -> None:
         for effect in effects:
             match effect:

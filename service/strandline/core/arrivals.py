@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import Refs
+from .columns import TIME_MAX, Refs
 
 
 class Arrivals:
@@ -64,6 +64,12 @@ class Arrivals:
             if len(holding):
                 break
         return came, counts
+
+    def place_after(self, arrived_ns: int) -> int:
+        """A place behind all lines that came up to this instant, and before those that came later."""
+        part = slice(self._start, self._stop)
+        later = int(self._arrived[part].searchsorted(arrived_ns, side="right"))
+        return int(self._places[part][later]) if later < self._stop - self._start else TIME_MAX
 
     @property
     def oldest_place(self) -> int | None:

@@ -92,7 +92,8 @@ class Batch:
     """A piece of output with a number; numbers count from 1 within a lane and never repeat.
 
     lane "ordered": a release or a part of one, times ascending. lane "late": the late events of one arrival, in order
-    of arrival, `behind_ns` is the watermark that they came behind. lane "quarantine": `entries` instead of rows.
+    of arrival, `behind_ns` is the watermark that they came behind (where each source has its own: the greatest of
+    them, and `own_behind` has each row's). lane "quarantine": `entries` instead of rows.
     `ready_lsn` is the end of the record that justifies the batch: it may leave when the journal is synced up to there.
     `instant_ns` is the arrival clock of that record.
     """
@@ -105,6 +106,12 @@ class Batch:
     ready_lsn: int
     behind_ns: int = TIME_MIN
     entries: Sequence[QuarantineEntry] = field(default=())
+    own_behind: Times | None = None
+
+    @property
+    def behind(self) -> Times:
+        """The watermark that each row came behind."""
+        return np.full(len(self.times), self.behind_ns) if self.own_behind is None else self.own_behind
 
     def __len__(self) -> int:
         return len(self.entries) if self.lane == "quarantine" else len(self.times)

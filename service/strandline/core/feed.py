@@ -10,12 +10,11 @@ from __future__ import annotations
 from collections import deque
 from collections.abc import Mapping, Sequence
 
-from .columns import NO_SOURCE, TIME_MIN, Arrival, Lane, RequestKey, require_consistent
+from .columns import TIME_MIN, Arrival, Lane, RequestKey, require_consistent
 from .effects import Answer, Append, Buffer, Deliver, Effect, Outcome, Pause, Refuse, Sync
 from .records import (
     VERSION,
     ActRecord,
-    Cause,
     ExcuseRecord,
     IdleRecord,
     KeyRecord,
@@ -41,6 +40,7 @@ from .settings import Settings
 from .state import State
 from .view import View, hold_of, view_of
 from .watermark import Candidate, candidate
+from .within import drained
 
 RETRY_AFTER_S = 5
 
@@ -226,9 +226,8 @@ class Feed:
         now = self._now(now_ns)
         if who:
             self._record(effects, ActRecord(now, "drain", "", who, reason))
-        tail = self.state.runs.tail_ns
-        if tail is not None:
-            self._set(effects, Candidate(tail, Cause.DRAIN, NO_SOURCE), now)
+        if self.state.runs.held:
+            self._set(effects, drained(self.state), now)
         return self._act(effects, now, token)
 
     def set_slack(
@@ -298,6 +297,11 @@ class Feed:
         if state.sources.falls_idle(now - state.settings.idle_after_ns) or state.acts.slack_ended(now):
             self._record(effects, IdleRecord(now))
         if state.outbox.undelivered_events > state.settings.undelivered_events_at_most:
+            return
+        if state.own is not None:
+            moved = state.own.candidate(state, now)
+            if moved is not None:
+                self._set(effects, moved, now)
             return
         best = candidate(state.settings, state.slack_ns, state.sources, state.hold, now)
         head = state.runs.head_ns

@@ -54,7 +54,7 @@ def holder_of(state: State) -> tuple[Holder, int | None]:
     if not state.runs.held:
         return NOTHING, None
     slack = "slack" if state.acts.slack_set is None else "slack_set"
-    if state.settings.clock == "arrival":
+    if state.settings.clock == "arrival" or state.own is not None:  # nobody waits for another source
         return (slack, NO_SOURCE, ""), None
     least = state.sources.least()
     if least is None:

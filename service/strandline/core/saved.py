@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from .columns import REF, TIME_MIN, Batch, QuarantineEntry, as_rows, empty_refs, empty_times
 from .effects import Buffer, Outcome
-from .held import Held
+from .held_by_source import HeldBySource
 from .keys import Kept
 from .outbox import LANES
 from .records import Cause
@@ -22,6 +22,7 @@ from .runs import Strand, joined
 from .settings import Settings
 from .slack import SteeredSlack
 from .state import State
+from .within import is_reordered
 
 SAVED_VERSION = 1
 _FIGURES = ("lateness", "hold", "run_length")
@@ -70,10 +71,7 @@ def save(state: State) -> list[Buffer]:
         columns.put(column.copy())
     for identities in state.seen.columns():
         columns.put(identities)
-    held = state.runs
-    for strand in (*(joined(list(run.chunks)) for run in held.open.runs), held.fresh.copied()):
-        columns.put(strand.times)
-        columns.put(strand.refs)
+    held = _held_strands(state, columns)
     batches = [_save_batch(batch, columns) for lane in LANES for batch in state.outbox.undelivered(lane)]
     header = {
         "version": SAVED_VERSION,
@@ -83,9 +81,7 @@ def save(state: State) -> list[Buffer]:
         "lateness": state.lateness.saved(),
         "names": state.sources.names,
         "newest_ns": state.sources.newest_ns,
-        "runs": len(held.open.runs),
-        "opened": held.open.opened,
-        "fresh_sorted": held.fresh.sorted,
+        **held,
         "hold": list(state.hold.pairs),
         "holds": state.holds.saved(),
         "acts": state.acts.saved(),
@@ -104,11 +100,31 @@ def save(state: State) -> list[Buffer]:
     return [len(packed).to_bytes(8, "little"), packed, *columns.parts]
 
 
+def _held_strands(state: State, columns: _Columns) -> dict[str, Any]:
+    """Put what is held, and where order is kept within sources their watermarks; what the header says of it."""
+    held = state.runs
+    if isinstance(held, HeldBySource):
+        assert state.own is not None
+        strands, said = [held.copied()], dict[str, Any](own=True)
+        columns.put(state.own.at.copy())
+    else:
+        strands = [*(joined(list(run.chunks)) for run in held.open.runs), held.fresh.copied()]
+        said = {"runs": len(held.open.runs), "opened": held.open.opened, "fresh_sorted": held.fresh.sorted}
+    for strand in strands:
+        columns.put(strand.times)
+        columns.put(strand.refs)
+    return said
+
+
 def _save_batch(batch: Batch, columns: _Columns) -> list[Any]:
     columns.put(batch.times)
     columns.put(batch.refs)
     entries = [[e.line, e.reason, e.detail, e.place, e.length] for e in batch.entries]
-    return [batch.lane, batch.number, batch.instant_ns, batch.ready_lsn, batch.behind_ns, entries]
+    saved = [batch.lane, batch.number, batch.instant_ns, batch.ready_lsn, batch.behind_ns, entries]
+    if batch.own_behind is None:
+        return saved
+    columns.put(batch.own_behind)
+    return [*saved, True]
 
 
 def restore(body: Buffer) -> State:
@@ -147,7 +163,7 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
     for key, fingerprint, outcome, arrived_ns, end_lsn in header["keys"]:
         kept = Kept(fingerprint, msgspec.convert(outcome, Outcome), arrived_ns, end_lsn)
         state.keys.keep(key, kept, len(header["keys"]), TIME_MIN)
-    _restore_held(state.runs, header, columns)
+    _restore_held(state, header, columns)
     state.hold.pairs.extend((arrived, newest) for arrived, newest in header["hold"])
     state.ledger = msgspec.convert(header["ledger"], type(state.ledger))
     _restore_outbox(state, header, columns)
@@ -160,25 +176,35 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
     return state
 
 
-def _restore_held(held: Held, header: dict[str, Any], columns: _Columns) -> None:
+def _restore_held(state: State, header: dict[str, Any], columns: _Columns) -> None:
     def strand() -> Strand:
         return Strand(columns.get(np.int64), as_rows(columns.get(REF)))
 
+    held = state.runs
+    if isinstance(held, HeldBySource):
+        assert state.own is not None and header["own"]
+        at = columns.get(np.int64)
+        if len((rows := strand()).times):
+            held.hold(*rows)
+        state.own.restore(at, held)
+        return
     for _ in range(header["runs"]):
         held.open.reopen(strand())
     held.open.opened = header["opened"]
     if "fresh_sorted" in header:  # not in snapshots of before rows were fresh: all that is held stood in open runs
         held.fresh.restore(strand(), header["fresh_sorted"])
+    state.reordered = is_reordered(state)
 
 
 def _restore_outbox(state: State, header: dict[str, Any], columns: _Columns) -> None:
     outbox = state.outbox
     outbox.positions = header["positions"]
-    for lane, number, instant_ns, ready_lsn, behind_ns, entries in header["batches"]:
+    for lane, number, instant_ns, ready_lsn, behind_ns, entries, *own in header["batches"]:
         times, refs = columns.get(np.int64), columns.get(REF)
         outbox.next_number[lane] = number
         rows = [QuarantineEntry(*entry) for entry in entries]
         if lane == "quarantine":
             times, refs = empty_times(), empty_refs()
-        outbox.add(Batch(lane, number, times, refs, instant_ns, ready_lsn, behind_ns, rows))
+        own_behind = columns.get(np.int64) if own else None
+        outbox.add(Batch(lane, number, times, refs, instant_ns, ready_lsn, behind_ns, rows, own_behind))
     outbox.next_number.update(header["next_number"])

@@ -8,6 +8,7 @@ from __future__ import annotations
 from typing import Literal
 
 import msgspec
+from msgspec import UNSET, UnsetType
 
 SECOND_NS = 1_000_000_000
 
@@ -32,3 +33,10 @@ class Settings(msgspec.Struct, frozen=True, forbid_unknown_fields=True):
     id_window_events: int = 1_000_000  # with an id: a repeat among at least so many last events is recognised
     keys_at_most: int = 10_000  # idempotency keys whose answers are kept
     keys_kept_for_ns: int = 24 * 3600 * SECOND_NS
+    # Within what order is kept; left out: the feed as a whole, as in journals of before it could be chosen.
+    order: Literal["source"] | UnsetType = UNSET
+
+    def __post_init__(self) -> None:
+        """Raises ValueError for settings that contradict each other."""
+        if self.order == "source" and (self.clock == "arrival" or self.late_share is not None):
+            raise ValueError('order = "source" goes with clock = "event" and a fixed slack only')

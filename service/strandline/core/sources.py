@@ -19,6 +19,38 @@ from .least import NONE, Least
 NEVER = TIME_MIN  # newest event time of a source that was never heard
 
 
+class Touched:
+    """Which sources something was said of, or by, since it was last asked; costs at most what all of them do."""
+
+    def __init__(self) -> None:
+        self.pieces: list[NDArray[np.intp]] = []  # numbers; a number may stand in it more than once
+        self.everyone = False
+        self.notes = 0
+        self._count = 0
+
+    def note(self, numbers: NDArray[np.intp], sources: int) -> None:
+        """These were touched, of so many sources that there are."""
+        self.notes += 1
+        self._count += len(numbers)
+        if self.everyone or (self._count > sources and len(numbers) > 1):
+            self.touch_all()
+        else:
+            self.pieces.append(numbers)
+
+    def touch_all(self) -> None:
+        """All of them were touched."""
+        self.notes += 1
+        self.everyone, self.pieces = True, []
+
+    def forget(self) -> None:
+        """Begin anew: nobody was touched."""
+        self.pieces, self.everyone, self._count = [], False, 0
+        self.notes += 1
+
+    def __bool__(self) -> bool:
+        return self.everyone or bool(self.pieces)
+
+
 class Sources:
     """State of every source of one feed."""
 
@@ -35,6 +67,7 @@ class Sources:
         self.broken: NDArray[np.int64] = np.empty(0, dtype=np.int64)  # events that came older than promised
         self.newest_ns = NEVER  # newest event time over all sources
         self.broken_events = 0
+        self.touched: Touched | None = None  # kept where each source has its own watermark
         self._promising = False
         self._by_newest = Least()  # active and not excused ones
         self._by_heard = Least()  # active ones
@@ -101,6 +134,8 @@ class Sources:
 
     def vouch_again(self, slack_ns: int) -> None:
         """Another slack will be taken off from now on: a promise lets the watermark go right up to it all the same."""
+        if self.touched is not None:
+            self.touched.touch_all()
         if not self._promising:
             return
         numbers = np.flatnonzero(self.promised[: len(self.names)] != NEVER)
@@ -118,7 +153,14 @@ class Sources:
             np.add.at(self.broken, sources[broken], 1)
             self.broken_events += count
 
+    @property
+    def promising(self) -> bool:
+        """Whether any source ever promised anything."""
+        return self._promising
+
     def _word(self, source: int, time_ns: int, now_ns: int) -> None:
+        if self.touched is not None:
+            self.touched.note(np.array([source], dtype=np.intp), len(self.names))
         newest = max(int(self.newest[source]), time_ns)
         self.newest[source] = newest
         self.heard[source] = now_ns
@@ -164,7 +206,14 @@ class Sources:
         """Active sources (for observers: costs all sources)."""
         return int(np.count_nonzero(self.active[: len(self.names)]))
 
+    def idle_count(self) -> int:
+        """Sources that fell silent and are no longer waited for by themselves (for observers: costs all sources)."""
+        count = len(self.names)
+        return int(np.count_nonzero(~(self.active[:count] | self.excused[:count])))
+
     def _refresh(self, numbers: NDArray[np.intp]) -> None:
+        if self.touched is not None:
+            self.touched.note(numbers, len(self.names))
         active = self.active[numbers]
         self._by_heard.update(numbers, np.where(active, self.heard[numbers], NONE))
         self._by_newest.update(numbers, self._waited_for(numbers))

@@ -32,6 +32,7 @@ from .columns import (
 )
 from .effects import AnswerFault, Outcome
 from .held import Held
+from .held_by_source import HeldBySource
 from .histogram import POWERS, SECONDS_NS, Histogram
 from .holds import Holds, holder_of
 from .keys import Kept, Keys
@@ -39,6 +40,7 @@ from .lateness import Lateness
 from .ledger import Ledger
 from .merge import Merger
 from .outbox import Outbox
+from .own import OwnWatermarks
 from .records import (
     ActRecord,
     ArrivalBody,
@@ -59,6 +61,7 @@ from .settings import Settings
 from .slack import Slack, slack_of
 from .sources import Sources
 from .watermark import HoldBound, basis_of
+from .within import check_order, keep_order, late_rows, release, stood
 
 
 @dataclass(slots=True)
@@ -86,7 +89,8 @@ class State:
         self.cause = Cause.SOURCES
         self.sources = Sources()
         self.merger = Merger()
-        self.runs = Held(self.merger)
+        self.runs: Held | HeldBySource = Held(self.merger)
+        self.own: OwnWatermarks | None = None  # where order is kept within each source only
         self.arrivals = Arrivals()
         self.hold = HoldBound()
         self.holds = Holds()
@@ -97,6 +101,8 @@ class State:
         self.keys = Keys()
         self._key: KeyRecord | None = None  # of the arrival record that must follow
         self.figures = Figures(Histogram(SECONDS_NS), Histogram(SECONDS_NS), Histogram(POWERS))
+        self.reordered = False  # something is held before the watermark: order within sources has just ended
+        keep_order(self)
 
     @property
     def slack_ns(self) -> int:
@@ -148,6 +154,7 @@ class State:
         if record.resumed:
             self.holds.note_stopped(self.now_ns)
         self.slack = slack_of(record.settings, self.slack)
+        keep_order(self)
         self.seen.window = record.settings.id_window_events
         self._key = None  # a crash may have cut off the arrival that it announced
         self.outbox.serve(record.sinks, record.positions)
@@ -179,18 +186,20 @@ class State:
         duplicate = late = 0
         if len(times):
             times, refs, identities, ahead = self._without_ahead(body, times, refs)
-            entries += ahead
+            if ahead:
+                entries = sorted(entries + ahead, key=lambda entry: entry.line)
         words, word_refs = times, refs  # a repeat is a word of its source too
         if len(times) and identities is not None and self.seen.window:
             times, refs, duplicate = self._without_repeats(times, refs, identities)
         if len(times):
             self._note_lateness(times)
-        events, behind = len(times), self._behind(times, body.arrived_ns)
+        events, behind = len(times), self._behind(times, refs, body.arrived_ns)
         if len(words):
             self.sources.note_broken(word_refs["source"], words)
             self.sources.hear(word_refs["source"], words, body.arrived_ns)
-        if len(times) and least_of(times) < self.watermark_ns:
-            times, refs, late_batch = self._without_late(times, refs, body.arrived_ns, end_lsn)
+        which = late_rows(self, times, refs)
+        if which is not None:
+            times, refs, late_batch = self._without_late(which, times, refs, body.arrived_ns, end_lsn)
             batches.append(late_batch)
             late = len(late_batch)
         if events:
@@ -246,10 +255,12 @@ class State:
             found.append(QuarantineEntry(line, "ahead", detail, int(ref["place"]), int(ref["length"])))
         return *_pick(times, refs, ~ahead), None if identities is None else identities[~ahead], found
 
-    def _without_late(self, times: Times, refs: Refs, arrived_ns: int, end_lsn: int) -> tuple[Times, Refs, Batch]:
-        late = times < self.watermark_ns
-        number = self.outbox.next_number["late"]
-        batch = Batch("late", number, *_pick(times, refs, late), arrived_ns, end_lsn, behind_ns=self.watermark_ns)
+    def _without_late(
+        self, late: NDArray[np.bool_], times: Times, refs: Refs, arrived_ns: int, end_lsn: int
+    ) -> tuple[Times, Refs, Batch]:
+        taken, number = _pick(times, refs, late), self.outbox.next_number["late"]
+        behind_ns, own_behind = stood(self, taken[1])
+        batch = Batch("late", number, *taken, arrived_ns, end_lsn, behind_ns=behind_ns, own_behind=own_behind)
         return *_pick(times, refs, ~late), batch
 
     def _quarantine(self, entries: list[QuarantineEntry], arrived_ns: int, end_lsn: int) -> Batch:
@@ -263,14 +274,17 @@ class State:
         else:
             self.figures.lateness.add(_distances(newest, times))
 
-    def _behind(self, times: Times, arrived_ns: int) -> NDArray[np.int64] | None:
+    def _behind(self, times: Times, refs: Refs, arrived_ns: int) -> NDArray[np.int64] | None:
         """How far each event stands behind what the watermark follows, before the slack; None where none does."""
+        if self.own is not None:
+            return self.own.behind(refs["source"], times)
         basis = arrived_ns if self.settings.clock == "arrival" else basis_of(self.sources)
         return None if not len(times) or least_of(times) >= basis else _distances(basis, times)
 
     def _hold(self, times: Times, refs: Refs, body: ArrivalBody) -> None:
         self.arrivals.note(body.payload_place, body.arrived_ns, len(times))
-        self.hold.note(body.arrived_ns, greatest_of(times))
+        if self.own is None:
+            self.hold.note(body.arrived_ns, greatest_of(times))
         self.runs.hold(times, as_rows(refs))
         if len(times) == 1:
             self.figures.run_length.add_same(1, 1)
@@ -288,8 +302,7 @@ class State:
             self.watermark_ns, self.marked_ns, self.cause = mark.watermark_ns, mark.decided_ns, mark.cause
         self.figures.marks += 1
         self.figures.marks_by_cause[mark.cause] += 1
-        self.hold.passed(mark.watermark_ns)
-        strand = self.runs.release(mark.watermark_ns)
+        strand = release(self, mark)
         if not len(strand.times):
             self.holds.note(self.now_ns, *holder_of(self))
             return []
@@ -319,14 +332,12 @@ class State:
         self.sources.check()
         self.arrivals.check(self.runs.held)
         self.outbox.check()
-        self.hold.check(self.runs.tail_ns)
         self.seen.check()
         self.keys.check()
         self.lateness.check()
         self.holds.check()
         self.acts.check(self.now_ns)
-        head = self.runs.head_ns
-        assert head is None or head >= self.watermark_ns, "held behind the watermark"
+        check_order(self)
 
 
 def _refs(body: ArrivalBody) -> Refs:

@@ -181,7 +181,8 @@ class Follower:
             self._stood = step
         for followed in self.open:
             target = followed.target
-            if target.time_ns is None or target.time_ns > mark.watermark_ns:
+            # Where each source has its own watermark, the mark does not tell which rows it releases.
+            if target.time_ns is None or (target.time_ns > mark.watermark_ns and self.state.own is None):
                 continue
             for batch in batches:
                 if (row := _row_of(batch, target)) is not None:
@@ -221,7 +222,7 @@ def _fate_in(batch: Batch, target: Target) -> Released | Late | Quarantined | No
     if row is None:
         return None
     if batch.lane == "late":
-        return Late(batch.number, row, batch.behind_ns)
+        return Late(batch.number, row, int(batch.behind[row]))
     return Released(batch.number, row, len(batch), batch.instant_ns, None)
 
 

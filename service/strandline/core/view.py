@@ -64,6 +64,7 @@ class View:
     name: str
     now_ns: int
     clock: str
+    order: str  # "feed" or "source"; with "source" the watermark is that of the source furthest behind
     watermark_ns: int
     marked_ns: int
     cause: str
@@ -80,6 +81,7 @@ class View:
     balance: int
     sources: int
     sources_active: int
+    sources_idle: int
     next_number: dict[Lane, int]
     undelivered_events: int
     sinks: dict[str, dict[Lane, LaneView]]
@@ -130,6 +132,7 @@ def view_of(state: State, now_ns: int, refusals: dict[str, int]) -> View:
         name=state.settings.name,
         now_ns=now_ns,
         clock=state.settings.clock,
+        order="feed" if state.own is None else "source",
         watermark_ns=state.watermark_ns,
         marked_ns=state.marked_ns,
         cause=state.cause.name.lower(),
@@ -146,6 +149,7 @@ def view_of(state: State, now_ns: int, refusals: dict[str, int]) -> View:
         balance=state.ledger.balance(),
         sources=len(state.sources.names),
         sources_active=state.sources.active_count(),
+        sources_idle=state.sources.idle_count(),
         next_number=dict(state.outbox.next_number),
         undelivered_events=state.outbox.undelivered_events,
         sinks={name: _lanes(state, name) for name in state.outbox.positions},
@@ -211,6 +215,7 @@ class SourceView:
     excused: bool
     promised_ns: int | None
     promises_broken: int
+    watermark_ns: int | None  # its own, where it has one
 
 
 def sources_of(state: State, after: int, limit: int) -> list[SourceView]:
@@ -226,6 +231,7 @@ def sources_of(state: State, after: int, limit: int) -> list[SourceView]:
             bool(sources.excused[number]),
             _known(sources.promised[number]),
             int(sources.broken[number]),
+            None if state.own is None else _known(state.own.at[number]),
         )
         for number in range(after, stop)
     ]

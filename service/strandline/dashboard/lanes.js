@@ -143,6 +143,7 @@ function drawWithin(context, place, moment, lane, middle, colour) {
   drawWaiting(context, place, moment, lane, middle, colour);
   drawStrands(context, place, lane, middle, colour);
   drawLate(context, place, lane, middle, colour);
+  drawOwnWatermark(context, place, lane, middle, colour);
   drawNewest(context, place, moment, lane, middle, colour);
 }
 
@@ -187,6 +188,15 @@ function drawLate(context, place, lane, middle, colour) {
   }
 }
 
+/** Where order is kept within each source, each lane has a watermark of its own: a short pole. */
+function drawOwnWatermark(context, place, lane, middle, colour) {
+  if (lane.watermark_ms === null || lane.watermark_ms === undefined) return;
+  const x = Math.max(place.left, Math.min(place.plot, place.x(lane.watermark_ms)));
+  context.strokeStyle = colour.hold;
+  context.lineWidth = 2.5;
+  line(context, x, middle - 10, x, middle + 10);
+}
+
 function drawNewest(context, place, moment, lane, middle, colour) {
   if (lane.promised_ms !== null && lane.promised_ms !== undefined && lane.promised_ms > place.from_ms) {
     context.strokeStyle = colour.fine;
@@ -226,7 +236,7 @@ export function wordsOf(moment, lane, zone) {
     case "holding":
       return holdingWords(moment, zone);
     case "silent":
-      return `silent ${age(heard_s)}`;
+      return `silent ${age(heard_s)}${lane.active ? "" : ", idle"}`;
     case "late":
       return `${counted(lane.late.length, "late event")}`;
     case "ahead":
@@ -234,7 +244,7 @@ export function wordsOf(moment, lane, zone) {
     case "expected":
       return "not heard yet";
     case "excused":
-      return "excused";
+      return heard_s === null || lane.newest_ms === null ? "excused" : `excused, silent ${age(heard_s)}`;
     default:
       return lane.held_events ? `${counted(lane.held_events, "event")} held` : "";
   }

@@ -178,7 +178,8 @@ class Watch:
         chosen = choose(moment.part, holder, variant.lanes, found, self._shown.get(variant, ()))
         self._shown[variant] = chosen
         held = held_of(moment.look, chosen, len(sources.names), STRANDS_AT_MOST)
-        lanes = lanes_part(sources, moment.part, chosen, held, self.memory.late.rows(chosen, LATE_AT_MOST))
+        late = self.memory.late.rows(chosen, LATE_AT_MOST)
+        lanes = lanes_part(sources, moment.part, chosen, held, late, self.runtime.feed.state.own)
         if variant.search:
             matched = set(found)
             for lane, number in zip(lanes, chosen, strict=True):

@@ -10,6 +10,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 from ..core.columns import TIME_MIN
+from ..core.own import OwnWatermarks
 from ..core.sources import Sources
 from ..core.view import HOLD_WHYS, View
 from ..hops import Hop
@@ -39,6 +40,7 @@ def feed_part(view: View, rates: Rates, hops: Mapping[str, Hop], sinks: Iterable
         "feed": view.name,
         "now_ms": ms(view.now_ns),
         "clock": view.clock,
+        "order": view.order,
         "watermark_ms": ms(view.watermark_ns),
         "newest_ms": ms(view.newest_ns),
         "slack_s": view.slack_ns / 1e9,
@@ -95,6 +97,7 @@ def lanes_part(
     chosen: Sequence[int],
     held: Mapping[int, OfSource],
     late: Mapping[int, Sequence[tuple[int, int]]],
+    own: OwnWatermarks | None,
 ) -> list[Json]:
     """The lanes of the chosen sources, in that order."""
     return [
@@ -109,6 +112,7 @@ def lanes_part(
             "held_events": held[number].events,
             "strands": [[ms(head_ns), ms(tail_ns), events] for head_ns, tail_ns, events in held[number].strands],
             "late": [[ms(arrived_ns), ms(time_ns)] for arrived_ns, time_ns in late[number]],
+            **({} if own is None else {"watermark_ms": ms(int(own.at[number]))}),
         }
         for number in chosen
     ]

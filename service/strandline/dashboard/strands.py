@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from ..core.columns import as_refs
 from ..core.held import Held
+from ..core.held_by_source import HeldBySource
 from ..core.runs import Run, Strand
 
 PIECES_AT_MOST = 512  # chunks: some 1.5 us each
@@ -41,8 +42,10 @@ class OfSource:
     strands: list[Row] = field(default_factory=list)
 
 
-def look_into(events: Held) -> Look:
+def look_into(events: Held | HeldBySource) -> Look:
     """Rows of the runs that are held, within the bounds."""
+    if isinstance(events, HeldBySource):
+        return _look_by_source(events)
     runs, held = events.runs, events.held
     if not runs:
         empty = np.empty(0, dtype=np.int64)
@@ -70,6 +73,15 @@ def look_into(events: Held) -> Look:
         np.repeat(np.array(weights) * scale, counts),
         len(joined) < held,
     )
+
+
+def _look_by_source(events: HeldBySource) -> Look:
+    """There are no runs then: all rows are of one, in ascending time."""
+    strand, held = events.sample(ROWS_AT_MOST), events.held
+    rows = len(strand.times)
+    sources = as_refs(strand.refs)["source"].astype(np.int64)
+    weights = np.full(rows, held / rows if rows else 0.0)
+    return Look(strand.times, sources, np.zeros(rows, dtype=np.int64), weights, rows < held)
 
 
 def _spaced(count: int, at_most: int) -> list[int]:

@@ -277,14 +277,17 @@ class WhatIf:
     def _due_ns(self) -> int | None:
         """The first instant at which a tick can do something; None while nothing is held."""
         state, settings = self.feed.state, self.feed.state.settings
-        head_ns = state.runs.head_ns
-        if head_ns is None:
+        if not state.runs.held:
             return None
         due = [state.hold.pairs[0][0] + settings.hold_at_most_ns] if state.hold.pairs else []
+        if state.own is not None and state.arrivals.oldest_ns is not None:
+            due.append(state.arrivals.oldest_ns + settings.hold_at_most_ns)
         idle = state.sources.next_idle()
         if idle is not None:
             due.append(idle[0] + settings.idle_after_ns)
         if settings.clock == "arrival":
+            head_ns = state.runs.head_ns
+            assert head_ns is not None
             due.append(head_ns + state.slack_ns)
         if state.acts.slack_set is not None and state.acts.slack_set.until_ns is not None:
             due.append(state.acts.slack_set.until_ns)

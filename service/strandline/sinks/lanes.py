@@ -180,7 +180,7 @@ def _late_columns(batches: Sequence[Batch], lines: Lines) -> list[list[object]]:
         columns[3] += source_column(batch, lines)
         columns[4] += [batch.instant_ns] * rows
         columns[5] += late_by_ns(batch)
-        columns[6] += [batch.behind_ns] * rows
+        columns[6] += batch.behind.tolist()
         columns[7] += event_texts(batch, lines)
     return columns
 
@@ -266,7 +266,7 @@ def _refused_columns(sink: str, batch: Batch, detail: str, lines: Lines, first: 
         range(rows),
         [batch.instant_ns] * rows,
         batch.times.tolist() if placed else nothing,
-        [batch.behind_ns] * rows if batch.lane == "late" else nothing,
+        batch.behind.tolist() if batch.lane == "late" else nothing,
         source_column(batch, lines) if placed else nothing,
         [detail] * rows,
         lines.lines(batch),

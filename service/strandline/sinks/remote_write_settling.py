@@ -13,7 +13,6 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from itertools import pairwise
 
 from .remote_write_samples import Sample, Series
 from .remote_write_wire import request_body, series_bytes
@@ -194,9 +193,12 @@ class Settlement:
         return {sample.row: fate for sample, fate in pairs if fate is not None and fate in REFUSED}
 
     def check(self) -> None:
-        """Assert that each sample is either settled or in exactly one part, and parts stand in order of time."""
+        """Assert that each sample is either settled or in exactly one part, and each series in order of time."""
         waiting = [index for part in reversed(self._parts) for index in (part.tails_of or part).indices]
         assert len(set(waiting)) == len(waiting)
         assert all((fate is None) == (index in set(waiting)) for index, fate in enumerate(self.fates))
         assert waiting == sorted(waiting)
-        assert all(a.time_ms <= b.time_ms for a, b in pairwise(self.samples))
+        latest: dict[Series, int] = {}
+        for _, series, time_ms, _ in self.samples:
+            assert latest.setdefault(series, time_ms) <= time_ms
+            latest[series] = time_ms

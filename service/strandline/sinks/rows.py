@@ -53,9 +53,9 @@ def late_by_ns(batch: Batch) -> list[int]:
 
     The difference of two int64 may need 64 bits without a sign; what no int64 can hold is said as the greatest int64.
     """
-    behind = np.int64(batch.behind_ns).astype(np.uint64)
+    behind = batch.behind.astype(np.uint64)
     distance = behind - batch.times.astype(np.uint64)  # modulo 2**64, hence exact for every time before the watermark
-    late: list[int] = np.where(batch.times < batch.behind_ns, np.minimum(distance, TIME_MAX), 0).tolist()
+    late: list[int] = np.where(batch.times < batch.behind, np.minimum(distance, TIME_MAX), 0).tolist()
     return late
 
 
@@ -66,7 +66,8 @@ def rows_of(batch: Batch, rows: Sequence[int] | None) -> Batch:
     chosen = list(rows)
     if batch.lane == "quarantine":
         return replace(batch, entries=[batch.entries[row] for row in chosen])
-    return replace(batch, times=batch.times[chosen], refs=batch.refs[chosen])
+    own = None if batch.own_behind is None else batch.own_behind[chosen]
+    return replace(batch, times=batch.times[chosen], refs=batch.refs[chosen], own_behind=own)
 
 
 def one_lane(batches: Sequence[Batch]) -> None:

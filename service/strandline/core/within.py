@@ -1,0 +1,120 @@
+"""Within what a feed keeps order: as a whole, or within each source only, and the change from one to the other.
+
+The feed as a whole has one watermark, `State.watermark_ns`. Within sources each has its own (`own.py`), and
+`State.watermark_ns` only tells observers where the source furthest behind stands. This is the one place that chooses.
+"""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .columns import NO_SOURCE, Refs, Times, least_of
+from .held import Held
+from .held_by_source import HeldBySource
+from .own import OwnWatermarks
+from .records import Cause, Mark
+from .runs import Strand
+from .watermark import Candidate
+
+if TYPE_CHECKING:
+    from .state import State
+
+
+def keep_order(state: State) -> None:
+    """Keep order as the settings in force say; what is held goes on being held."""
+    by_source = state.settings.order == "source"
+    if by_source == (state.own is not None):
+        if state.own is not None:
+            state.own.touch_all()
+        return
+    if by_source:
+        _order_by_source(state)
+    else:
+        _order_the_feed(state)
+
+
+def _order_by_source(state: State) -> None:
+    """From now on each source has its own watermark; all that are known begin at the feed's."""
+    assert isinstance(state.runs, Held)
+    held = HeldBySource()
+    strands = [chunk for run in state.runs.runs for chunk in run.chunks]
+    if strands:
+        held.take_over(strands)
+    state.own = OwnWatermarks(state.sources)
+    state.own.begin_at(state.watermark_ns, held)
+    state.hold.pairs.clear()
+    state.runs = held
+
+
+def _order_the_feed(state: State) -> None:
+    """From now on there is one watermark. It stands where the most advanced source's did: none of them goes back.
+
+    What is held before it is not late: the next mark lets it go, in one release.
+    """
+    assert isinstance(state.runs, HeldBySource) and state.own is not None
+    held, strand = Held(state.merger), state.runs.copied()
+    if len(strand.times):
+        held.hold(*strand)
+        assert state.arrivals.oldest_ns is not None
+        # All of it goes with the oldest, so that none waits longer than it may.
+        state.hold.note(state.arrivals.oldest_ns, int(strand.times.max()))
+    state.watermark_ns = max(state.watermark_ns, state.own.greatest_ns)
+    state.own = state.sources.touched = None
+    state.runs = held
+    state.reordered = is_reordered(state)
+
+
+def is_reordered(state: State) -> bool:
+    """Whether something is held before the feed's watermark."""
+    head = state.runs.head_ns
+    return state.own is None and head is not None and head < state.watermark_ns
+
+
+def late_rows(state: State, times: Times, refs: Refs) -> NDArray[np.bool_] | None:
+    """Which rows came behind the watermark, their source's own where it has one; None where none did."""
+    if not len(times):
+        return None
+    if state.own is not None:
+        return state.own.late(refs["source"], times)
+    return times < state.watermark_ns if least_of(times) < state.watermark_ns else None
+
+
+def stood(state: State, late: Refs) -> tuple[int, Times | None]:
+    """The watermark that late rows came behind; where sources have their own, the greatest of these, and each."""
+    if state.own is None:
+        return state.watermark_ns, None
+    each = state.own.at[late["source"]]
+    return int(each.max()), each
+
+
+def release(state: State, mark: Mark) -> Strand:
+    """Take out what a mark makes final, by time, then arrival."""
+    if isinstance(state.runs, HeldBySource):
+        assert state.own is not None
+        return state.own.release(state, state.runs, mark)
+    state.hold.passed(mark.watermark_ns)
+    state.reordered = False
+    return state.runs.release(mark.watermark_ns)
+
+
+def drained(state: State) -> Candidate:
+    """What the mark of a drain says; something is held."""
+    if state.own is not None:
+        return state.own.drained(state)
+    tail = state.runs.tail_ns
+    assert tail is not None
+    return Candidate(tail, Cause.DRAIN, NO_SOURCE)
+
+
+def check_order(state: State) -> None:
+    """Assert that nothing is held behind a watermark, and that the bound on holding is about what is held."""
+    if isinstance(state.runs, HeldBySource):
+        assert state.own is not None and state.settings.order == "source" and not state.hold.pairs
+        state.own.check(state.runs)
+        return
+    assert state.own is None and state.settings.order != "source"
+    state.hold.check(state.runs.tail_ns)
+    assert state.reordered == is_reordered(state), "held behind the watermark"
