@@ -13,7 +13,7 @@ from typing import Any
 
 import msgspec
 import numpy as np
-from strandline.client_access import Caller, caller_of
+from strandline.client_access import Caller, address_of, caller_of
 from strandline.errors import ConfigError
 
 from .bodies import Style, bodies, cut_by_count, cut_by_window
@@ -32,7 +32,7 @@ QUANTILES = {"p50": 0.5, "p90": 0.9, "p99": 0.99, "p99.9": 0.999, "max": 1.0}
 def send_shape(options: argparse.Namespace) -> int:
     """Carry the command out; its exit code. Raises ValueError on wrong use."""
     target = Target(
-        options.url,
+        _address(options.url),
         options.feed,
         connections=options.connections,
         encodings=tuple(options.encodings.split(",")),
@@ -75,7 +75,14 @@ def _verdict(store: Path, target: Target, trace: Trace, bounds: Int64s, done: De
 
 def _caller(options: argparse.Namespace) -> Caller:
     try:
-        return caller_of(options, options.url, os.environ)
+        return caller_of(options, _address(options.url), os.environ)
+    except ConfigError as error:
+        raise ValueError(str(error)) from None
+
+
+def _address(text: str) -> str:
+    try:
+        return address_of(text)
     except ConfigError as error:
         raise ValueError(str(error)) from None
 

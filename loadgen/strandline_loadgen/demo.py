@@ -20,6 +20,7 @@ import numpy as np
 from rich.console import Console
 from rich.live import Live
 from rich.text import Text
+from strandline.caution import CAUTION
 
 from .bodies import Body, bodies, cut_by_window
 from .checker import Verdict, judge
@@ -200,4 +201,5 @@ def _judge(trace: Trace, bounds: Int64s, done: Delivery, digests: Digests, folde
     say(screen, str(verdict))
     for failure in done.failures[:5]:
         say(screen, f"No answer for {failure}")
+    say(screen, f"\n{CAUTION}")
     return verdict

@@ -30,7 +30,7 @@ Reason = Annotated[str, msgspec.Meta(min_length=1, max_length=REASON_CHARACTERS_
 
 
 class Excuse(msgspec.Struct, forbid_unknown_fields=True):
-    """Do not wait for `source` until it speaks again; who and why are kept with the act."""
+    """Do not wait for `source` until it speaks again; who and why are kept with the act, where they are said."""
 
     source: str
     reason: str = ""
@@ -38,7 +38,7 @@ class Excuse(msgspec.Struct, forbid_unknown_fields=True):
 
 
 class Drain(msgspec.Struct, forbid_unknown_fields=True):
-    """Release all that is held; who and why are kept with the act."""
+    """Release all that is held; who and why are kept with the act, where they are said. A body is not required."""
 
     reason: str = ""
     who: Who = ""

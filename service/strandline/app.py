@@ -34,6 +34,7 @@ from .ingest.endpoint import ASIDE, BODIES, CONFIG, FEEDS
 from .ingest.offload import Aside
 from .intake.starting import Intakes
 from .journal.disk import LocalDisk
+from .listening import check_free, not_free
 from .metrics import make_registry
 from .ports import Clock, Disk
 from .problems import as_problems
@@ -151,6 +152,7 @@ class Service:
     async def _start(self) -> None:
         self._beyond = await reach(self.config)
         self._gate = Gate(prepare(self.config, self._beyond, self.clock.now_ns()), self.clock)
+        await asyncio.to_thread(check_free, self.config.listen)  # before a folder is made, and a long journal read
         self._folder.lock("lock")
         for feed in self.config.feeds:
             folder = self.config.feed_dir(feed)
@@ -160,9 +162,11 @@ class Service:
         self._ticker = asyncio.create_task(self._tick())
         app = make_app(self.config, self.feeds, self._gate)
         app.on_shutdown.append(self._hush)
-        await self._listen(app, self._gate)
+        try:
+            await self._listen(app, self._gate)
+        except OSError as error:
+            raise not_free(self.config.listen, error) from error
         self._intakes.start(self.feeds.values())
-        log.info("listening on %s", self.url)
 
     async def _listen(self, app: web.Application, gate: Gate) -> None:
         limits, listen = self.config.limits, self.config.listen

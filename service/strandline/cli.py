@@ -10,11 +10,13 @@ from __future__ import annotations
 import argparse
 import os
 import sys
+import textwrap
 from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any
 
-from . import cli_holds, cli_report, cli_token, cli_trace
+from . import cli_holds, cli_operate, cli_report, cli_token, cli_trace
+from .caution import CAUTION
 from .cli_answers import DEFAULT_FILE, FINE, INTERRUPTED, NOT_REACHED, WRONG_USE, chosen_file, complain
 from .cli_values import add_access, amount, connections, hold, pace, recorded_seconds
 from .errors import FAULT_REASONS, ConfigError, StrandlineError
@@ -57,7 +59,7 @@ def parser() -> argparse.ArgumentParser:
         prog="strandline",
         description="Keeps timestamped event feeds in order although events arrive late.",
         epilog="New here? `strandline demo` shows it at work, with nothing to set up.\n"
-        "`strandline COMMAND --help` explains a command and gives an example.",
+        "`strandline COMMAND --help` explains a command and gives an example.\n\n" + textwrap.fill(CAUTION, 98),
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )
     top.add_argument("--version", action=_Version, help="print the version and stop")
@@ -72,6 +74,7 @@ def parser() -> argparse.ArgumentParser:
     _add_lane(commands, "quarantine", "lines that could not be events of their feed", "line in quarantine", "reason")
     _add_lane(commands, "refused", "events of batches that a sink refused for good", "refused event", "sink")
     cli_holds.add(commands)
+    cli_operate.add(commands)
     cli_report.add(commands)
     cli_trace.add(commands)
     cli_token.add(commands)
@@ -258,7 +261,11 @@ def _add_again(acts: Any, lane: str, things: str, narrow: str) -> None:
         example += " --sink archive"
     else:
         short = "take them in once more, after a fix"
-        about = "Asks the running service to decode the lines once more.\nThose that are events now are taken, and go."
+        about = (
+            "Asks the running service to decode the lines once more, each once. Those that are events now are\n"
+            "taken, and go: the ledger counts them as received anew. The others, also those still too far\n"
+            "ahead, stay as they were and are not counted again (`still faulty`)."
+        )
     again = _add(acts, act, short, about, example, _again(lane, act))
     again.add_argument("--feed", required=True, metavar="NAME", help="the feed")
     again.add_argument("--after", type=int, default=0, metavar="NUMBER", help="only those after this number")

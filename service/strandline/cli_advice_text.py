@@ -3,12 +3,24 @@
 from __future__ import annotations
 
 import sys
+import textwrap
 from collections.abc import Iterator, Mapping, Sequence
 from typing import Any
 
+from .caution import CAUTION
 from .cli_answers import harmless, write_table
 from .ingest.timestamps import format_rfc3339
-from .replay.wording import REORDERING, SEQUENCE, range_text, rows_of, spelled, time_text, value_text
+from .replay.wording import (
+    NO_LINES,
+    REORDERING,
+    SEQUENCE,
+    gap_text,
+    range_text,
+    rows_of,
+    spelled,
+    time_text,
+    value_text,
+)
 
 HEADINGS = ("slack", "late, first part", "late, second part", "hold mean", "hold p99", "held mean", "held peak", "")
 SOURCE_HEADINGS = (
@@ -30,7 +42,8 @@ def write_advice(answer: Mapping[str, Any]) -> None:
     if "alternatives" in answer:
         sys.stdout.write("\n")
         chosen_ns = answer["slack_ns"]
-        write_table(HEADINGS, [_alternative(each, chosen_ns) for each in answer["alternatives"]])
+        remark = "tried" if answer["verdict"] == "too_short" else "chosen"
+        write_table(HEADINGS, [_alternative(each, chosen_ns, remark) for each in answer["alternatives"]])
         if answer["sources_known"] > 1:
             sys.stdout.write(f"\nthe sources that cost most, {len(answer['sources'])} of {answer['sources_known']:,}\n")
             write_table(SOURCE_HEADINGS, map(_source, answer["sources"]))
@@ -39,7 +52,8 @@ def write_advice(answer: Mapping[str, Any]) -> None:
         _write_figures(answer["reordering"], REORDERING)
     if answer["sequence"]:
         _write_sequence(answer["sequence"])
-    sys.stdout.write("\n" + "".join(f"{line}\n" for line in answer["configuration"]))
+    sys.stdout.write("\n" + textwrap.fill(CAUTION, 98) + "\n")
+    sys.stdout.write("\n" + "".join(f"{line}\n" for line in answer["configuration"] or [NO_LINES]))
 
 
 def _lines(answer: Mapping[str, Any]) -> Iterator[str]:
@@ -52,7 +66,8 @@ def _lines(answer: Mapping[str, Any]) -> Iterator[str]:
     between = ""
     if answer["interval_ns"] is not None:
         between = f" ({sure}: {' to '.join(map(time_text, answer['interval_ns']))})"
-    yield f"chosen    slack {spelled(answer['slack_ns'])}{between}"
+    tried = "tried " if answer["verdict"] == "too_short" else "chosen"
+    yield f"{tried}    slack {spelled(answer['slack_ns'])}{between}"
     yield f"          on {first['events']:,} events, up to {format_rfc3339(first['to_ns'])}"
     low, high = answer["interval"]
     yield f"verified  late share {answer['late_share']:.3g} ({sure}: {low:.3g} to {high:.3g}), {second['late']:,} late"
@@ -62,6 +77,9 @@ def _lines(answer: Mapping[str, Any]) -> Iterator[str]:
     yield f"verdict   {answer['verdict'].replace('_', ' ')}: {answer['explanation']}"
     if answer["verdict"] == "too_short":
         yield f"          {answer['events_needed']:,} events are needed in each part for {sure}"
+    gap = gap_text(answer)
+    if gap is not None:
+        yield f"          {gap}"
     if answer["attainable"] is not None:
         least = time_text(answer["least_ns"])
         yield f"          the longest wait gives {answer['attainable']:.3g}; the target needs {least}"
@@ -70,7 +88,7 @@ def _lines(answer: Mapping[str, Any]) -> Iterator[str]:
     yield f"read in   {answer['seconds']:.2f} s, {answer['events_per_s']:,.0f} events/s"
 
 
-def _alternative(each: Mapping[str, Any], chosen_ns: int) -> Sequence[str]:
+def _alternative(each: Mapping[str, Any], chosen_ns: int, remark: str) -> Sequence[str]:
     figure = each["figure"]
     return (
         spelled(each["slack_ns"]),
@@ -80,7 +98,7 @@ def _alternative(each: Mapping[str, Any], chosen_ns: int) -> Sequence[str]:
         time_text((figure["hold_ns_quantiles"] or {}).get("0.99")),
         value_text(figure["held_events_mean"]),
         value_text(figure["held_events_peak"]),
-        "chosen" if each["slack_ns"] == chosen_ns else "",
+        remark if each["slack_ns"] == chosen_ns else "",
     )
 
 

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import shutil
 import sys
+import textwrap
 from collections.abc import Iterable, Sequence
 from pathlib import Path
 
@@ -17,6 +18,7 @@ FINE, NO, WRONG_USE, NOT_REACHED, INTERRUPTED = 0, 1, 2, 3, 130
 DEFAULT_FILE = Path("strandline.toml")
 GAP = "  "
 LAST_COLUMN_AT_LEAST = 20
+WRAPPED_AT_LEAST = 30  # with less room beside the other columns a sentence stands below them
 
 
 def chosen_file(file: Path | None) -> Path:
@@ -37,11 +39,15 @@ def harmless(text: str) -> str:
     return text if text.isprintable() else "".join(c if c.isprintable() else ascii(c)[1:-1] for c in text)
 
 
-def write_table(headings: Sequence[str], rows: Iterable[Sequence[str]]) -> None:
-    """A table on a terminal; elsewhere the same cells with tabs between them, whole, for other programs."""
+def write_table(headings: Sequence[str], rows: Iterable[Sequence[str]], *, wrap: bool = False) -> None:
+    """A table on a terminal; elsewhere the same cells with tabs between them, whole, for other programs.
+
+    `wrap`: the last column is a sentence to be read whole, so it goes on in further lines instead of being cut.
+    """
     cells = [[harmless(cell) for cell in row] for row in (headings, *rows)]
     if sys.stdout.isatty():
-        sys.stdout.write("".join(line + "\n" for line in table_lines(cells, shutil.get_terminal_size().columns)))
+        lines = (wrapped_lines if wrap else table_lines)(cells, shutil.get_terminal_size().columns)
+        sys.stdout.write("".join(line + "\n" for line in lines))
     else:
         sys.stdout.write("".join("\t".join(row) + "\n" for row in cells))
 
@@ -55,4 +61,24 @@ def table_lines(rows: Sequence[Sequence[str]], columns: int) -> list[str]:
         last = row[-1] if len(row[-1]) <= room else row[-1][: room - 1] + "…"
         padded = [cell.ljust(width) for cell, width in zip(row, widths, strict=False)]
         lines.append(GAP.join([*padded, last]))
+    return lines
+
+
+def wrapped_lines(rows: Sequence[Sequence[str]], columns: int) -> list[str]:
+    """Rows of a table whose last column is never cut: it goes on below itself, or below the row where that is full."""
+    widths = [max(map(len, cells)) for cells in zip(*rows, strict=True)][:-1]
+    indent = sum(widths) + len(GAP) * len(widths)
+    beside = columns - indent >= WRAPPED_AT_LEAST
+    room = columns - indent if beside else max(columns - 2 * len(GAP), LAST_COLUMN_AT_LEAST)
+    margin = " " * (indent if beside else 2 * len(GAP))
+    lines = []
+    for row in rows:
+        first = GAP.join(cell.ljust(width) for cell, width in zip(row, widths, strict=False))
+        sentence = textwrap.wrap(row[-1], room)
+        if beside:
+            lines.append((first + GAP + "".join(sentence[:1])).rstrip())
+            sentence = sentence[1:]
+        else:
+            lines.append(first.rstrip())
+        lines += [margin + line for line in sentence]
     return lines

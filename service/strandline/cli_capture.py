@@ -18,10 +18,10 @@ from typing import BinaryIO
 import aiohttp
 import msgspec
 
-from .cli_answers import FINE, complain
+from .cli_answers import FINE, WRONG_USE, complain
 from .cli_lanes import since_ns
 from .cli_progress import bar
-from .client_access import Caller, caller_of
+from .client_access import Caller, address_of, caller_of, is_address, refusal
 from .errors import CaptureError, ConfigError
 from .journal.disk import LocalDisk
 from .replay.capture import Capture, CaptureWriter
@@ -38,10 +38,10 @@ def capture(options: argparse.Namespace) -> int:
     if out.exists():
         raise CaptureError(f"{out} exists already: remove it or name another file")
     source: str = options.capture_source
-    if source.startswith(("http://", "https://")):
+    if is_address(source) and not Path(source).exists():
         _forbid(options, FILE_OPTIONS, "a file of events")
         _forbid(options, ("from_time", "to_time"), "a folder of a journal")
-        _from_service(source, options)
+        _from_service(address_of(source, "SOURCE"), options)
     elif Path(source).is_dir():
         _forbid(options, FILE_OPTIONS, "a file of events")
         _from_folder(Path(source), options)
@@ -155,7 +155,9 @@ async def _stream(address: str, query: dict[str, str], file: BinaryIO, tell: obj
             session.get(address, params=query, ssl=shown.context or True) as answer,
         ):
             if answer.status != 200:
-                raise CaptureError(f"{address} answered {answer.status}: {(await answer.text())[:500]}")
+                code, why = refusal(answer.status, _detail(await answer.text()), shown)
+                told = f"{address} answered {answer.status}: {why}"
+                raise ConfigError([told]) if code == WRONG_USE else CaptureError(told)
             async for piece in answer.content.iter_chunked(PIECE_BYTES):
                 file.write(piece)
                 if callable(tell):
@@ -164,6 +166,13 @@ async def _stream(address: str, query: dict[str, str], file: BinaryIO, tell: obj
         raise CaptureError(f"{address}: the recording ended early ({error}); what came is in the file") from error
     except (aiohttp.ClientError, TimeoutError) as error:
         raise CaptureError(f"{address} cannot be reached: {error}") from error
+
+
+def _detail(text: str) -> str:
+    try:
+        return str(msgspec.json.decode(text)["detail"])
+    except (msgspec.DecodeError, LookupError, TypeError):
+        return text[:500]
 
 
 def _say(options: argparse.Namespace, writer: CaptureWriter) -> None:

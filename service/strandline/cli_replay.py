@@ -19,7 +19,7 @@ import msgspec
 
 from .cli_answers import FINE, NO, complain
 from .cli_progress import bar
-from .client_access import caller_of
+from .client_access import address_of, caller_of, is_address
 from .config import load
 from .core.columns import Batch
 from .core.settings import Settings
@@ -67,7 +67,7 @@ def _check(options: argparse.Namespace, bars: list[Bar]) -> None:
 
 
 def _is_url(into: str | None) -> bool:
-    return into is not None and into.startswith(("http://", "https://"))
+    return into is not None and is_address(into)
 
 
 def _bars(options: argparse.Namespace) -> list[Bar]:
@@ -126,11 +126,11 @@ def _digested(batches: Iterator[Batch], digests: Digests, figures: Figures) -> I
 
 def _into_service(options: argparse.Namespace, capture: Capture) -> int:
     speed = 1.0 if options.pace is None else options.pace or None
-    feed = options.feed or capture.meta.feed
+    feed, url = options.feed or capture.meta.feed, address_of(options.into, "--into")
     with bar("sent", "events", capture.events) as tell:
         sent = send(
-            capture, options.into, feed, speed=speed, connections=options.connections, progress=tell,
-            caller=caller_of(options, options.into, os.environ),
+            capture, url, feed, speed=speed, connections=options.connections, progress=tell,
+            caller=caller_of(options, url, os.environ),
         )  # fmt: skip
     if options.json:
         _write_json(asdict(sent))
@@ -164,6 +164,8 @@ def _lines(figures: Figures) -> Iterator[str]:
     yield f"{figures.feed}, {format_rfc3339(figures.from_ns)} to {format_rfc3339(figures.to_ns)}"
     yield f"requests      {figures.requests:,}"
     yield f"received      {figures.received:,}"
+    if figures.held_at_start:
+        yield f"held at start {figures.held_at_start:,} (came before, so not in received)"
     yield f"released      {figures.released:,} in {figures.batches:,} batches"
     yield f"late          {figures.late:,}, late share {_share(figures.late_share)}"
     yield f"duplicate     {figures.duplicate:,}"

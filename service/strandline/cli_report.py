@@ -30,7 +30,9 @@ def add(commands: Any) -> None:
         "Tells what happened to a feed from one time to another, in sentences to be pasted into a ticket:\n"
         "who held it and why, what came late and whose it was, whether the books balance, what was done by\n"
         "whom, and how far the output was behind. Asks the running service. Without --out the report goes\n"
-        "to stdout, as Markdown; --out FILE.html or FILE.md writes one file, --out DIR both."
+        "to stdout, as Markdown; --out FILE.html or FILE.md writes one file, --out DIR both.\n"
+        "Exit codes: 0 fine; 2 wrong use: no such feed, no such time, no token or one that may\n"
+        "not; 3 not reached, or it could not answer now."
     )
     example = (
         "example:\n"

@@ -27,8 +27,9 @@ def add(commands: Any) -> None:
     )
     make.add_argument("--name", required=True, metavar="NAME", help="who it is for; acts are noted under this name")
     make.add_argument(
-        "--role", required=True, action="append", choices=ROLE_NAMES, metavar="ROLE", help="ingest, read or operate"
-    )
+        "--role", required=True, action="append", choices=ROLE_NAMES, metavar="ROLE",
+        help="ingest, read or operate; give it again for more than one",
+    )  # fmt: skip
     make.add_argument("--feed", action="append", metavar="NAME", help="only for this feed (default: every feed)")
     make.add_argument("--expires", metavar="TIME", help="from when on it is not taken, RFC 3339: 2027-01-01T00:00:00Z")
     make.add_argument("--json", action="store_true", help="the answer as one JSON object")

@@ -18,8 +18,10 @@ def add(commands: Any) -> None:
         "Tells where an event is now and why: when it came and in which request; whether it is held, and for\n"
         "what; released, in which batch and by which mark; late, behind which watermark; in quarantine or a\n"
         "repeat; and which sinks durably have it. Asks the running service, and where that is down reads its\n"
-        "folder. "
-        "Exit code 1 where no such event is found; then it says what was searched."
+        "folder.\n"
+        "Exit codes: 0 found; 1 no such event, then it says what was searched; 2 wrong use: no such\n"
+        "feed, no such time, no token or one that may not; 3 neither service nor folder reached, or it\n"
+        "could not answer now."
     )
     example = (
         "example:\n"

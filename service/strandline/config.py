@@ -9,7 +9,7 @@ created or connected here, except that `load` reads the file.
 from __future__ import annotations
 
 import tomllib
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -41,11 +41,15 @@ __all__ = [
 ]
 
 FILE_BYTES_AT_MOST = 2**20
+Rules = Callable[[Config, Reading], None]
 Described = TypeVar("Described", SinkConfig, IntakeConfig)
 
 
-def load(path: Path, environ: Mapping[str, str]) -> Config:
-    """The configuration of a file and the environment. Raises ConfigError with every fault."""
+def load(path: Path, environ: Mapping[str, str], also: Rules | None = None) -> Config:
+    """The configuration of a file and the environment. Raises ConfigError with every fault.
+
+    `also` are further rules, judged with the others.
+    """
     try:
         with path.open("rb") as file:
             data = file.read(FILE_BYTES_AT_MOST + 1)
@@ -53,12 +57,14 @@ def load(path: Path, environ: Mapping[str, str]) -> Config:
         reason = getattr(error, "strerror", None) or str(error)
         raise ConfigError([f"{path}: the configuration cannot be read: {reason}"]) from None
     try:
-        return parse(data.decode(), environ, str(path))
+        return parse(data.decode(), environ, str(path), also)
     except UnicodeDecodeError as error:
         raise ConfigError([f"{path}: is not UTF-8 at byte {error.start}"]) from None
 
 
-def parse(text: str, environ: Mapping[str, str], place: str = "configuration") -> Config:
+def parse(
+    text: str, environ: Mapping[str, str], place: str = "configuration", also: Rules | None = None
+) -> Config:
     """The configuration that a file with this text gives. `place` names the file in faults. Raises ConfigError."""
     raw = _toml(text, place)
     for feed in _dicts(raw.get("feed")):
@@ -68,6 +74,8 @@ def parse(text: str, environ: Mapping[str, str], place: str = "configuration") -
     override(raw, environ, reading)
     config = _settled(reading.table(Config, raw))
     check(config, reading)
+    if also is not None:
+        also(config, reading)
     if reading.faults:
         raise ConfigError(reading.faults)
     return config

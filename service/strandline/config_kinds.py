@@ -6,15 +6,16 @@ A kind judges one value by itself and knows no other key. Which key has which ki
 
 from __future__ import annotations
 
+import difflib
 import re
 from collections import Counter
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, NamedTuple
 from urllib.parse import urlsplit
 
-from .config_units import duration_ns, duration_text, size_bytes, size_text
+from .config_units import CUSTOMARY, duration_ns, duration_text, size_bytes, size_text
 from .sinks.remote_write_series import LABEL_BYTES_AT_MOST, LABEL_NAME, LABELS_AT_MOST, METRIC_NAME, Pairs
 
 TEXT_CHARACTERS_AT_MOST = 1024
@@ -137,10 +138,18 @@ def choice(*names: str) -> Kind:
 
     def read(raw: object) -> str:
         if raw not in names:
-            raise ValueError(f"is none of {', '.join(names)}")
+            near = _near(raw, names) if isinstance(raw, str) else []
+            raise ValueError(f"is none of {', '.join(names)}{f'; did you mean {near[0]}?' if near else ''}")
         return str(raw)
 
     return Kind("one of " + ", ".join(f"`{name}`" for name in names), read, quoted)
+
+
+def _near(text: str, names: Sequence[str]) -> list[str]:
+    """What was likely meant. Words of three letters and less are near too much to guess by their letters."""
+    spelled = text[:64].strip().lower()
+    found = [name for name in names if name == spelled or spelled in CUSTOMARY.get(name, ())]
+    return found or (difflib.get_close_matches(spelled, names, 1) if len(spelled) > 3 else [])
 
 
 def name(characters: str, about: str, reserved: str = "") -> Kind:

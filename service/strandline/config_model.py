@@ -77,7 +77,7 @@ class Feed(msgspec.Struct, frozen=True):
     name: Annotated[str, Key(FEED_NAME, "the feed's name in addresses, metrics and on the dashboard")]
     time: Annotated[EventTime, Table(EventTime)] = EventTime()
     source: Annotated[str | None, Key(pointer(), "where an event names its source; without it: one source")] = None
-    id: Annotated[str | None, Key(pointer(), "where an event carries its id; a repeat is told by source and id alone, see Ids")] = None
+    id: Annotated[str | None, Key(pointer(), "where an event carries its id; a repeat is told by it, see Ids")] = None
     slack_ns: Annotated[
         int | SteeredSlack,
         Key(duration(), "how far the watermark stays behind: lateness up to it is put in order", SteeredSlack),

@@ -34,7 +34,7 @@ SIZE_UNITS: dict[str, int] = {
 }
 
 # Other spellings of a unit, to suggest the right one; they are not accepted.
-_CUSTOMARY: dict[str, tuple[str, ...]] = {
+CUSTOMARY: dict[str, tuple[str, ...]] = {
     "ns": ("nsec", "nanos", "nanosecond", "nanoseconds"),
     "us": ("\u00b5s", "\u03bcs", "usec", "micros", "microsecond", "microseconds"),
     "ms": ("msec", "millis", "millisecond", "milliseconds"),
@@ -72,7 +72,10 @@ def _whole(text: str, units: Mapping[str, int], noun: str, sample: str, smallest
     """The amount in the smallest unit."""
     match = _AMOUNT.fullmatch(text)
     if match is None:
-        raise ValueError(f'is no {noun}: write one number and one unit, such as "{sample}"')
+        parts = text[:100].split()
+        closed = "".join(parts) if parts[1:] and parts[1] in units else ""
+        meant = f'; did you mean "{closed}"?' if _AMOUNT.fullmatch(closed) else ""
+        raise ValueError(f'is no {noun}: write one number and one unit, such as "{sample}"{meant}')
     whole, fraction, unit = match[1], match[2] or "", match[3]
     if unit not in units:
         raise ValueError(_unit_fault(unit, units, noun, sample))
@@ -91,7 +94,7 @@ def _unit_fault(unit: str, units: Mapping[str, int], noun: str, sample: str) -> 
     if not unit:
         return f'has no unit: write text such as "{sample}" (units: {known})'
     spelled = unit.lower()
-    meant = [name for name in units if name.lower() == spelled or spelled in _CUSTOMARY.get(name, ())]
+    meant = [name for name in units if name.lower() == spelled or spelled in CUSTOMARY.get(name, ())]
     # Near misses by letters alone would turn "min" into "ms": only spellings that can mean one thing are suggested.
     meant = meant or [name for name in units if name[0].lower() == spelled and name.endswith("B")]
     question = f"; did you mean {' or '.join(meant)}?" if meant else ""

@@ -11,6 +11,7 @@ from typing import Annotated, Literal
 import msgspec
 from aiohttp import web
 
+from .config_units import duration_ns
 from .core.acts import ACTS_AT_MOST
 from .core.columns import NO_SOURCE, TIME_MAX, TIME_MIN
 from .core.holds import Held
@@ -49,15 +50,24 @@ class HoldTotal(msgspec.Struct):
     count: int
 
 
+class ShorterHolds(msgspec.Struct):
+    """Holds too short to be listed: how many, and seconds of the time asked about. The totals count them too."""
+
+    count: int
+    for_s: float
+
+
 class HoldsAnswer(msgspec.Struct):
     """Holds that reach into the time asked about, the newest first, and totals over all of them, the longest first.
 
     `known_since` is the first instant that the history tells of. Times in which nothing was held are left out.
+    `shorter`: those not listed since they lasted less than ?at_least=.
     """
 
     holds: list[HoldRow]
     summary: list[HoldTotal]
     known_since: str | None
+    shorter: ShorterHolds
 
 
 class ActRow(msgspec.Struct):
@@ -80,12 +90,13 @@ class ActsAnswer(msgspec.Struct):
 
 
 async def get_holds(request: web.Request) -> web.Response:
-    """Who held the feed: `?from=` and `?to=` (RFC 3339) name a time, `?limit=` how many are listed."""
+    """Who held the feed: `?from=` and `?to=` (RFC 3339) name a time, `?limit=` and `?at_least=` what is listed."""
     runtime = runtime_of(request)
     from_ns, to_ns = _instant(request, "from", TIME_MIN), _instant(request, "to", TIME_MAX)
     if from_ns > to_ns:
         raise web.HTTPBadRequest(text="?from= must not be later than ?to=")
-    answer = holds_answer(runtime, from_ns, to_ns, _limit(request, LIMIT, HOLDS_AT_MOST))
+    limit, at_least_ns = _limit(request, LIMIT, HOLDS_AT_MOST), _at_least(request)
+    answer = holds_answer(runtime, from_ns, to_ns, limit, at_least_ns)
     return web.Response(body=msgspec.json.encode(answer), content_type="application/json")
 
 
@@ -96,8 +107,8 @@ async def get_acts(request: web.Request) -> web.Response:
     return web.Response(body=msgspec.json.encode(answer), content_type="application/json")
 
 
-def holds_answer(runtime: FeedRuntime, from_ns: int, to_ns: int, limit: int) -> HoldsAnswer:
-    """The answer for a time."""
+def holds_answer(runtime: FeedRuntime, from_ns: int, to_ns: int, limit: int, at_least_ns: int = 0) -> HoldsAnswer:
+    """The answer for a time; of holds that lasted less than `at_least_ns`, within that time or not, only sums."""
     state, now_ns = runtime.feed.state, runtime.view().now_ns
     known = list(state.holds.history(now_ns))
     asked = [
@@ -105,12 +116,24 @@ def holds_answer(runtime: FeedRuntime, from_ns: int, to_ns: int, limit: int) -> 
         for held in known
         if held.why != "nothing_held" and held.from_ns < to_ns and (held.to_ns is None or held.to_ns > from_ns)
     ]
-    names = state.sources.names
+    names, window = state.sources.names, (from_ns, min(to_ns, now_ns))
+    listed = [held for held in asked if _end(held, now_ns) - held.from_ns >= at_least_ns]
+    shorter = [held for held in asked if _end(held, now_ns) - held.from_ns < at_least_ns]
     return HoldsAnswer(
-        [_row(held, names, now_ns) for held in reversed(asked[-limit:])],
-        _summary(asked, names, (from_ns, min(to_ns, now_ns))),
+        [_row(held, names, now_ns) for held in reversed(listed[-limit:])],
+        _summary(asked, names, window),
         format_rfc3339(known[0].from_ns) if known else None,
+        ShorterHolds(len(shorter), sum(_within(held, window) for held in shorter) / 1e9),
     )
+
+
+def _end(held: Held, now_ns: int) -> int:
+    return now_ns if held.to_ns is None else held.to_ns
+
+
+def _within(held: Held, window: tuple[int, int]) -> int:
+    """How long it lasted within a time, whose end is not later than now."""
+    return max(0, min(_end(held, window[1]), window[1]) - max(held.from_ns, window[0]))
 
 
 def _row(held: Held, names: list[str], now_ns: int) -> HoldRow:
@@ -123,16 +146,15 @@ def _row(held: Held, names: list[str], now_ns: int) -> HoldRow:
         from_ms=held.from_ns / 1e6,
         to=None if held.to_ns is None else format_rfc3339(held.to_ns),
         to_ms=None if held.to_ns is None else held.to_ns / 1e6,
-        for_s=((now_ns if held.to_ns is None else held.to_ns) - held.from_ns) / 1e9,
+        for_s=(_end(held, now_ns) - held.from_ns) / 1e9,
     )
 
 
 def _summary(asked: Iterable[Held], names: list[str], window: tuple[int, int]) -> list[HoldTotal]:
     totals: dict[tuple[str, int, str], tuple[int, int]] = {}
     for held in asked:
-        end_ns = window[1] if held.to_ns is None else min(held.to_ns, window[1])
         lasted_ns, count = totals.get(held[:3], (0, 0))
-        totals[held[:3]] = lasted_ns + max(0, end_ns - max(held.from_ns, window[0])), count + 1
+        totals[held[:3]] = lasted_ns + _within(held, window), count + 1
     rows = [
         HoldTotal(why, None if source == NO_SOURCE else names[source], sink or None, lasted_ns / 1e9, count)
         for (why, source, sink), (lasted_ns, count) in totals.items()
@@ -163,6 +185,14 @@ def _instant(request: web.Request, name: Literal["from", "to"], default: int) ->
     except ValueError as error:
         detail = f"?{name}= must be a time of RFC 3339 such as 2026-05-01T03:00:00Z (a + is written %2B): {error}"
         raise web.HTTPBadRequest(text=detail[:300]) from None
+
+
+def _at_least(request: web.Request) -> int:
+    text = request.query.get("at_least", "0s")
+    try:
+        return duration_ns(text)
+    except ValueError as error:
+        raise web.HTTPBadRequest(text=f"?at_least={text[:50]!r} {error}"[:300]) from None
 
 
 def _limit(request: web.Request, default: int, at_most: int) -> int:

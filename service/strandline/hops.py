@@ -7,6 +7,9 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from .core.columns import TIME_MIN
+from .ingest.timestamps import format_rfc3339
+
 HOPS = ("ingest", "decode", "journal", "runs", "release", "sinks")
 
 
@@ -17,6 +20,11 @@ class Hop:
     waiting: int = 0
     oldest_ns: int | None = None
     advanced_ns: int | None = None
+
+
+def watermark_words(watermark_ns: int) -> str:
+    """Where a watermark stands, for a log."""
+    return "no watermark yet" if watermark_ns == TIME_MIN else f"watermark {format_rfc3339(watermark_ns)}"
 
 
 class Bodies:

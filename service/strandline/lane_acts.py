@@ -21,6 +21,7 @@ from .ingest.endpoint import read_act, runtime_of
 from .problems import NotThere, Refused
 from .repairing import Repairer
 from .runtime import FeedRuntime, decoder_of
+from .sinks.lane_reading import last_number
 from .sinks.lanes import ROWS_AT_MOST, QuarantineRow, forget_exactly, quarantine_rows
 
 LARGEST = 2**63 - 1
@@ -68,13 +69,17 @@ async def post_refused_resend(request: web.Request) -> web.Response:
 
 
 async def post_quarantine_redrive(request: web.Request) -> web.Response:
-    """Decode lines in quarantine once more, after a fix, and take those that are events now."""
+    """Decode lines in quarantine once more, after a fix, and take those that are events now.
+
+    Each line is driven once: what comes into quarantine meanwhile is left for the next run.
+    """
     runtime, act = runtime_of(request), await read_act(request, Redrive)
     totals = {"driven": 0, "accepted": 0, "late": 0, "duplicate": 0, "quarantined": 0, "still_faulty": 0}
     after, path = act.after, runtime.folder / "lanes.db"
+    through = min(act.through, await asyncio.to_thread(last_number, path, "quarantine"))
     while True:
         rows = await asyncio.to_thread(quarantine_rows, path, after, ROWS_AT_MOST, act.reason)
-        rows = [row for row in rows if row.number <= act.through]
+        rows = [row for row in rows if row.number <= through]
         if not rows:
             return web.json_response(totals)
         after = rows[-1].number
@@ -82,33 +87,42 @@ async def post_quarantine_redrive(request: web.Request) -> web.Response:
 
 
 async def _drive_again(runtime: FeedRuntime, rows: Sequence[QuarantineRow], path: Path, totals: dict[str, int]) -> None:
-    body = b"".join(row.event.replace(b"\r", b" ").replace(b"\n", b" ") + b"\n" for row in rows)
+    """Take the rows that are events now, as one request. The others stay as they are, and no book counts them again."""
+    good = _events_now(runtime, rows)
+    totals["driven"] += len(rows)
+    totals["still_faulty"] += len(rows) - len(good)
+    if not good:
+        return
+    # Decoded again by themselves, so that a source whose lines all stay does not become known.
+    arrival, settled = _decoded(runtime, good), [row.number for row in good]
+    # A crash between taking the lines and forgetting their rows must not take them twice: the key tells.
+    fingerprint = hashlib.blake2b(_body(good), digest_size=16).digest()
+    outcome = await runtime.arrive(arrival, RequestKey(f"redrive {settled[0]} {settled[-1]}", fingerprint))
+    for name in ("accepted", "late", "duplicate", "quarantined"):
+        totals[name] += getattr(outcome, name)
+    await asyncio.to_thread(forget_exactly, path, "quarantine", settled)
+
+
+def _events_now(runtime: FeedRuntime, rows: Sequence[QuarantineRow]) -> list[QuarantineRow]:
+    """The rows that the decoder takes and that are not `ahead`. The feed's clock is never behind the one asked here."""
+    arrival, settings = _decoded(runtime, rows), runtime.feed.state.settings
+    still = {fault.line for fault in arrival.faults}
+    taken = [row for line, row in enumerate(rows, start=1) if line not in still]
+    ahead = arrival.times > runtime.clock.now_ns() + settings.ahead_limit_ns
+    return [row for row, is_ahead in zip(taken, ahead.tolist(), strict=True) if not is_ahead]
+
+
+def _body(rows: Sequence[QuarantineRow]) -> bytes:
+    return b"".join(row.event.replace(b"\r", b" ").replace(b"\n", b" ") + b"\n" for row in rows)
+
+
+def _decoded(runtime: FeedRuntime, rows: Sequence[QuarantineRow]) -> Arrival:
     sources = runtime.feed.state.sources.numbers
     try:
         # As many faults as rows are allowed: a request is refused for too many, but these are kept already.
         decoder = decoder_of(runtime.config, faults_at_most=len(rows))
-        arrival = decoder.decode(body, "application/x-ndjson", sources)
+        return decoder.decode(_body(rows), "application/x-ndjson", sources)
     except BodyError as error:
         raise BodyError(
             error.status, error.title, f"{error.detail} (rows {rows[0].number} to {rows[-1].number})"
         ) from error
-    still = {fault.line for fault in arrival.faults}
-    settled = [row.number for index, row in enumerate(rows, start=1) if index not in still]
-    totals["driven"] += len(rows)
-    totals["still_faulty"] += len(still)
-    if not settled:
-        return
-    good = Arrival(
-        times=arrival.times,
-        sources=arrival.sources,
-        lengths=arrival.lengths,
-        payload=arrival.payload,
-        new_sources=arrival.new_sources,
-        identities=arrival.identities,
-    )
-    # A crash between taking the lines and forgetting their rows must not take them twice: the key tells.
-    fingerprint = hashlib.blake2b(body, digest_size=16).digest()
-    outcome = await runtime.arrive(good, RequestKey(f"redrive {settled[0]} {settled[-1]}", fingerprint))
-    for name in ("accepted", "late", "duplicate", "quarantined"):
-        totals[name] += getattr(outcome, name)
-    await asyncio.to_thread(forget_exactly, path, "quarantine", settled)

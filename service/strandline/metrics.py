@@ -110,6 +110,7 @@ class _Sampler:
         self.add("strandline_open_runs", len(view.open_runs))
         self.add("strandline_sources", view.sources)
         self.add("strandline_sources_active", view.sources_active)
+        self.add("strandline_sources_idle", view.sources_idle)
         for cause, count in view.marks.items():
             self.add("strandline_marks", count, cause)
         self.add("strandline_comparisons", view.comparisons)

@@ -33,7 +33,10 @@ METRICS: dict[str, Meaning] = {
         "Grows: `strandline late list` names the sources; mend their links, or lengthen the slack.",
     ),
     "strandline_events_duplicate": Meaning(
-        "counter", "Events recognised as repeats.", "Grows: a sender retries; look at its link and its timeouts."
+        "counter",
+        "Events recognised as repeats.",
+        "Grows: a sender retries; look at its link and its timeouts. As many as received: a sender gives ids anew; "
+        "see StrandlineOnlyRepeats in the runbook.",
     ),
     "strandline_events_quarantined": Meaning(
         "counter", "Lines that cannot be events of the feed.", "Grows: read the quarantine; mend the sender's encoding."
@@ -90,9 +93,16 @@ METRICS: dict[str, Meaning] = {
         "Sources that are not idle.",
         "Falls: senders have gone silent; GET /v1/feeds/{feed}/sources says which and for how long.",
     ),
+    "strandline_sources_idle": Meaning(
+        "gauge",
+        "Sources that were heard, or are expected, and are silent for longer than idle_after; excused ones apart.",
+        "Grows: the feed no longer waits for them, and what they still send may be late; "
+        "GET /v1/feeds/{feed}/sources says which they are.",
+    ),
     "strandline_marks": Meaning(
         "counter",
-        "Steps of the watermark, by cause.",
+        "Steps of the watermark, by cause. `silence` counts steps made while every source was silent or excused; "
+        "that one source fell silent shows in `strandline_sources_idle`.",
         "Many by hold_at_most: a source lags further than you allow; the hold names it. Mend it, or excuse it.",
         ("cause",),
     ),

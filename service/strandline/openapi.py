@@ -220,9 +220,30 @@ def _dashboard() -> Json:
     }
 
 
-def _paths() -> Json:
+def _lanes() -> Json:
     document: Json = {"type": "object"}
     source = _query("source", "only this source", {"type": "string"})
+    return {
+        "/v1/feeds/{feed}/late": _get(
+            "Late events",
+            {**_answer("by number; times and `late_by_s` to read, `*_ns` exact", document), **_problems(400, 404, 503)},
+            [_FEED, *_PAGE, source],
+        ),
+        "/v1/feeds/{feed}/quarantine": _get(
+            "Lines in quarantine",
+            {**_answer("by number, those of one request in order of `line`", document), **_problems(400, 404, 503)},
+            [_FEED, *_PAGE],
+        ),
+        "/v1/feeds/{feed}/refused": _get(
+            "Events of batches that sinks refused for good",
+            {**_answer("events, with sink and reason", document), **_problems(400, 404, 503)},
+            [_FEED, *_PAGE, _query("sink", "only what this sink refused", {"type": "string"})],
+        ),
+    }
+
+
+def _paths() -> Json:
+    document: Json = {"type": "object"}
     return {
         "/v1/feeds/{feed}/events": _events(),
         "/v1/feeds/{feed}/marks": _act("Promise: nothing older will come from this source", "Promise"),
@@ -250,21 +271,7 @@ def _paths() -> Json:
             {**_answer("slacks, lateness, steering; what of it is exact", document), **_problems(400, 404)},
             [_FEED, _query("at", "slacks to answer for, such as 3.2s,5s; else a grid", _SLACKS)],
         ),
-        "/v1/feeds/{feed}/late": _get(
-            "Late events",
-            {**_answer("by number; times and `late_by_s` to read, `*_ns` exact", document), **_problems(400, 404, 503)},
-            [_FEED, *_PAGE, source],
-        ),
-        "/v1/feeds/{feed}/quarantine": _get(
-            "Lines in quarantine",
-            {**_answer("by number, those of one request in order of `line`", document), **_problems(400, 404, 503)},
-            [_FEED, *_PAGE],
-        ),
-        "/v1/feeds/{feed}/refused": _get(
-            "Events of batches that sinks refused for good",
-            {**_answer("events, with sink and reason", document), **_problems(400, 404, 503)},
-            [_FEED, *_PAGE, _query("sink", "only what this sink refused", {"type": "string"})],
-        ),
+        **_lanes(),
         "/v1/feeds/{feed}/trace": trace_path(_FEED, _query, _problems(400, 404, 429, 503)),
         **_streams(),
         **_dashboard(),

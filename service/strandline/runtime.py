@@ -22,7 +22,7 @@ from .core.feed import Feed
 from .core.records import arrival_body_bytes
 from .core.view import View
 from .errors import JournalFailed, JournalFull, StrandlineError
-from .hops import Bodies, Hop
+from .hops import Bodies, Hop, watermark_words
 from .housekeeping import Housekeeper
 from .ingest.decode import Decoder
 from .intake.counts import Counts
@@ -122,10 +122,8 @@ class FeedRuntime:
         self._started = self.accepting = True
         for repairer in self.repairers.values():
             repairer.start()
-        log.info(
-            "%s: %d records folded, %d events held, watermark %d",
-            self.config.name, folded, self.feed.state.runs.held, self.feed.state.watermark_ns,
-        )  # fmt: skip
+        held, told = self.feed.state.runs.held, watermark_words(self.feed.state.watermark_ns)
+        log.info("%s: %d records folded, %d events held, %s", self.config.name, folded, held, told)
 
     def _delivery(self, name: str, sink: Sink, remembered: Mapping[Lane, int]) -> Delivery:
         return Delivery(

@@ -131,6 +131,19 @@ def test_the_answer_is_no_where_it_was_missed_is_too_short_or_contradicts_itself
     run(tmp_path, "advise", file, "--late-share", "0.01", code=1)
 
 
+def test_no_lines_to_paste_where_the_verdict_does_not_support_them(tmp_path: Path) -> None:
+    columns = exponential(50, 1.0, 3_000, 4)
+    later = (np.arange(2_849) >= 50) * 3_600 * 10**9  # one request, an hour of quiet, the rest
+    kept = columns.times[:2_849] + later, columns.arrivals[:2_849] + later, columns.sources[:2_849]
+    file = written(tmp_path, Columns(*kept))
+    told = run(tmp_path, "advise", file, "--late-share", "0.01", "--report", "out.html", code=1)
+    assert "verdict   too short" in told and "50 of 2,849 events" in told and "--learn" in told
+    assert "tried" in told and "[[feed]]" not in told and "no lines to paste" in told and "chosen  " not in told
+    page = (tmp_path / "out.html").read_text()
+    assert "No lines to paste" in page and "[[feed]]" not in page and "50 of 2,849 events" in page
+    assert asked(tmp_path, file, "--late-share", "0.01", code=1)["configuration"] == []
+
+
 WRONG = [("--late-share", "0"), ("--late-share", "1.5"), ("--late-share", "0.1", "--learn", "1")]
 
 

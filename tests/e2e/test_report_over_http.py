@@ -266,7 +266,7 @@ def _command_line(service: Process, folder: Path) -> None:
     ]
     assert main([*asked, "--out", str(folder / "night.pdf")]) == 2
     assert main([*asked, "--from", "long ago"]) == 2
-    assert main(["report", "--feed", "none", "--url", service.url]) == 1
+    assert main(["report", "--feed", "none", "--url", service.url]) == 2
     assert main(["report", "--feed", FEED, "--url", "http://127.0.0.1:9"]) == 3
 
 

@@ -21,6 +21,7 @@ from strandline.openapi import document
 
 EXAMPLES = 120  # of each address, beside schemathesis' own list of cases at the edges; some 25 s in all (measured)
 TEXTS = ("application/x-ndjson", "application/jsonl", "application/json-seq", "application/vnd.msgpack")
+TEXTS += ("application/vnd.apache.arrow.stream",)
 
 
 EVENT = {"observed_at": {"type": "string"}, "station": {"type": ["string", "integer"]}, "id": {"type": "string"}}

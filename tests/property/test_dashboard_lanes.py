@@ -15,10 +15,11 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from strandline.core.columns import NO_SOURCE, as_refs
 from strandline.core.held import Held
-from strandline.core.sources import Sources
+from strandline.core.sources import NEVER, Sources
 from strandline.core.state import State
 from strandline.dashboard import strands
 from strandline.dashboard.lanes import AHEAD_NS, ROLES, Part, Search, choose
+from strandline.dashboard.silence import silence_of
 from strandline.dashboard.strands import held_of, look_into
 
 NOW_NS, IDLE_NS = 10**12, 10**11
@@ -162,3 +163,31 @@ def test_runs_that_were_not_looked_at_are_stood_for() -> None:
     assert look.sampled and set(look.runs.tolist()) >= {0, 39} and len(set(look.runs.tolist())) == 10
     held = held_of(look, [0, 1], 2, 8)
     assert {number: one.events for number, one in held.items()} == pytest.approx({0: 40, 1: 40})
+
+
+# ---- silent sources, counted ----------------------------------------------------------------------------------------
+
+
+@given(many_sources(), st.sampled_from([0, 3599, 3600, 86_399, 86_400]), st.lists(st.integers(0, 59), max_size=3))
+def test_the_silent_ones_are_counted(sources: Sources, later_s: int, excused: list[int]) -> None:
+    """Judged one by one: idle after it was heard, or excused; how long; and who was heard last."""
+    for number in excused:
+        if number < len(sources.names):
+            sources.excuse(number)
+    now_ns = NOW_NS + later_s * 10**9
+    known = range(len(sources.names))
+    came = [number for number in known if sources.newest[number] != NEVER or sources.promised[number] != NEVER]
+    silent = [n for n in known if sources.excused[n] or (n in came and not sources.active[n])]
+    since_ns = {number: int(sources.heard[number]) for number in silent if number in came}
+    lasting_s = [(now_ns - heard_ns) / 1e9 for heard_ns in since_ns.values()]
+    found = silence_of(sources, now_ns)
+    assert (found["known"], found["sources"]) == (len(sources.names), len(silent))
+    assert found["active"] == sum(bool(sources.active[n] and not sources.excused[n]) for n in known)
+    assert found["recent"] == sum(each < 86_400 for each in lasting_s)
+    assert found["hour"] == sum(each >= 3_600 for each in lasting_s)
+    if since_ns:
+        number = sources.numbers[found["source"]]
+        assert since_ns[number] == max(since_ns.values())
+        assert found["heard_ms"] == since_ns[number] // 10**6 and found["excused"] == bool(sources.excused[number])
+    else:
+        assert found["heard_ms"] is None and (found["source"] is None) == (not silent)

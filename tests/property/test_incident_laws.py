@@ -81,6 +81,27 @@ def test_holds_and_totals_are_the_whole_time_that_is_known(known: list[Hold]) ->
 
 
 @given(histories())
+def test_listed_holds_are_joined_in_order_and_none_is_brief(known: list[Hold]) -> None:
+    listed = facts_of(known).holds.listed
+    assert all(hold.lasted_ns >= holding.BRIEF_NS or hold.why == "stopped" for hold in listed)
+    for one, other in pairwise(listed):
+        assert one.to_ns <= other.from_ns
+        touching = one.to_ns == other.from_ns
+        assert not touching or (one.why, one.source, one.sink) != (other.why, other.source, other.sink)
+
+
+def test_neighbours_are_one_row_and_brief_ones_one_line() -> None:
+    spans = [("gw-1", 0, 30), ("gw-1", 30, 31), ("gw-2", 31, 31.4), ("gw-1", 31.4, 40), ("gw-2", 40, 40.9)]
+    known = [
+        Hold(why="slow_source", source=source, sink=None, from_ns=at(begin), to_ns=at(end))
+        for source, begin, end in spans
+    ]
+    rows = [[plain(cell) for cell in row] for row in tables.holds(facts_of(known)).rows]
+    assert [row[2:4] for row in rows[:2]] == [["31 s", "gw-1"], ["8.6 s", "gw-1"]]
+    assert rows[2:] == [["2 shorter", "", "1.3 s", "", "each below 1 s, left out here"]]
+
+
+@given(histories())
 def test_stalls_lie_in_the_time_apart_and_their_phases_add_up(known: list[Hold]) -> None:
     facts = facts_of(known)
     stalls = facts.holds.stalls
@@ -90,8 +111,8 @@ def test_stalls_lie_in_the_time_apart_and_their_phases_add_up(known: list[Hold])
         assert all(one.to_ns == other.from_ns for one, other in pairwise(stall.phases))
         assert {(phase.source, phase.sink) for phase in stall.phases} == {(stall.source, stall.sink)}
     assert all(one.to_ns <= other.from_ns for one, other in pairwise(stalls))
-    held = [hold for hold in facts.holds.listed if hold.why not in holding.USUAL]
-    assert facts.holds.besides_ns + facts.holds.stalls_ns == sum(hold.lasted_ns for hold in held)
+    held = [total for total in facts.holds.totals if total.why not in holding.USUAL]
+    assert facts.holds.besides_ns + facts.holds.stalls_ns == sum(total.lasted_ns for total in held)
     assert facts.holds.besides_ns >= 0
 
 

@@ -129,6 +129,29 @@ def test_a_short_capture_is_called_short() -> None:
     assert advice.interval_ns is None  # no two of so few events hold that quantile between them
 
 
+def with_a_gap() -> Columns:
+    """Nine events, an hour of quiet, then 2,840: the first two thirds of the time hold nine."""
+    columns = exponential(50, 1.0, 3_000, 4)
+    later = (np.arange(2_849) >= 9) * 3_600 * SECOND
+    return Columns(columns.times[:2_849] + later, columns.arrivals[:2_849] + later, columns.sources[:2_849])
+
+
+@pytest.mark.parametrize("at_most_ns", [None, 1_000_000])
+def test_of_nine_events_no_verdict_is_drawn_and_the_gap_is_named(at_most_ns: int | None) -> None:
+    columns = with_a_gap()
+    advice = advice_of(columns, 0.01, Rule("arrival"), at_most_ns=at_most_ns)
+    assert (advice.first.events, advice.second.events) == (9, 2_840)
+    assert (advice.verdict, advice.events_needed, advice.nearly_empty) == ("too_short", 299, "first")
+    assert not advice.supported
+    coarse = advice_of(columns, 0.3, Rule("arrival"))  # nine are enough for so coarse a claim (0.7^9 < 0.05)
+    assert coarse.verdict != "too_short" and coarse.nearly_empty == "first"
+
+
+def test_a_steady_feed_has_no_part_that_is_nearly_empty() -> None:
+    advice = advice_of(exponential(50, 1.0, 3_000, 4), 0.01, Rule("arrival"))
+    assert advice.nearly_empty is None
+
+
 @pytest.mark.parametrize("wanted", [Wanted(0.0), Wanted(1.0), Wanted(0.1, -1), Wanted(0.1, None, 1.0)])
 def test_what_cannot_be_asked_for(wanted: Wanted) -> None:
     columns = exponential(50, 1.0, 100, 4)

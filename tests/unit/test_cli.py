@@ -14,7 +14,7 @@ from pathlib import Path
 import pytest
 from helpers_sinks import START_NS, HeldLines
 from strandline.cli import main, parser
-from strandline.cli_answers import harmless, table_lines
+from strandline.cli_answers import harmless, table_lines, wrapped_lines
 from strandline.cli_lanes import since_ns
 from strandline.errors import ConfigError
 from strandline.sinks.lanes import LaneStore
@@ -295,6 +295,24 @@ def test_a_table_keeps_all_but_its_last_column_whole() -> None:
     assert table_lines(rows, 30) == ["number   event", "1        " + "x" * 20 + "…", "1234567  " + "y" * 21]
     assert table_lines(rows, 10)[1] == "1        " + "x" * 19 + "…"
     assert table_lines([["only"]], 80) == ["only"]
+
+
+def test_a_sentence_in_the_last_column_is_wrapped_and_never_cut() -> None:
+    sentence = "look at the device, or excuse it so that the others need not wait"
+    rows = [["who", "what it means"], ["gw-east", sentence], ["gw-west", ""]]
+    beside = wrapped_lines(rows, 40)
+    assert beside == [
+        "who      what it means",
+        "gw-east  look at the device, or excuse",
+        "         it so that the others need not",
+        "         wait",
+        "gw-west",
+    ]
+    below = wrapped_lines(rows, 36)  # too little room beside the name: below it, with the width that there is
+    assert below[2:5] == ["gw-east", "    look at the device, or excuse it", "    so that the others need not wait"]
+    for columns in (20, 36, 40, 80, 200):
+        assert sentence in " ".join(" ".join(wrapped_lines(rows, columns)).split())
+        assert all(len(line) <= max(columns, 24) for line in wrapped_lines(rows, columns))
 
 
 def test_since_is_exact() -> None:

@@ -41,11 +41,40 @@ async def test_it_shows_who_held_the_feed(tmp_path: Path, capsys: pytest.Capture
         assert "slow_source" not in capsys.readouterr().out
 
 
+async def test_short_holds_are_left_out_and_counted(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    clock = VirtualTime()
+    clock.now = BEGIN_S * SECOND
+    async with running(configuration(tmp_path, idle_after="4m"), clock=clock) as service:
+        await service.send([0], "gw-1")
+        await service.send([2], "gw-2")  # gw-1 is behind for 2 s, then gw-2 for 3 s, then gw-1 for 12 s
+        for second, source, seconds in ((4, "gw-1", 2), (6, "gw-2", 3)):
+            clock.now += seconds * SECOND
+            await service.send([second], source)
+        clock.now += 12 * SECOND
+        whole = (await service.get("holds")).json
+        lasted = [round(row["for_s"]) for row in whole["holds"]]
+        assert sorted(lasted) == [2, 3, 12] and whole["shorter"] == {"count": 0, "for_s": 0}
+        part = (await service.get("holds?at_least=3s")).json
+        assert [round(row["for_s"]) for row in part["holds"]] == [12, 3]
+        assert (part["shorter"]["count"], round(part["shorter"]["for_s"])) == (1, 2)
+        assert part["summary"] == whole["summary"]
+        within = (await service.get("holds?at_least=3s&to=2023-11-14T22:13:21Z")).json
+        assert (within["holds"], within["shorter"]) == ([], {"count": 1, "for_s": 1.0}), "of the time asked about"
+        assert await told(service) == 0
+        shown = capsys.readouterr()
+        assert len(shown.out.splitlines()) == 2 and "gw-1\tslow_source" in shown.out
+        assert "2 holds shorter than 10s left out, 5.0s in all; --at-least 0s shows them" in shown.err
+        assert await told(service, "--at-least", "0s") == 0
+        shown = capsys.readouterr()
+        assert len(shown.out.splitlines()) == 4 and "left out" not in shown.err
+        assert (await service.get("holds?at_least=10")).status == 400
+
+
 async def test_what_is_wrong_is_said(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     async with running(configuration(tmp_path)) as service:
         assert await told(service, "--from", "yesterday") == 2
         assert "--from 'yesterday' is neither" in capsys.readouterr().err
-        assert await told(service, "--from", "2026-05-01T00:00:00Z", "--to", "2026-04-01T00:00:00Z") == 1
+        assert await told(service, "--from", "2026-05-01T00:00:00Z", "--to", "2026-04-01T00:00:00Z") == 2
         assert "must not be later" in capsys.readouterr().err
     assert main(["holds", "--feed", FEED, "--url", "http://127.0.0.1:1"]) == 3
     assert "could not be reached" in capsys.readouterr().err

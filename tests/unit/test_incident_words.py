@@ -101,4 +101,4 @@ def test_many_holders_share_a_line_and_every_reason_has_a_look() -> None:
 
 def test_the_caution_is_the_last_word() -> None:
     last = report_of(incident(made_ns=at(9))).sections[-1]
-    assert last.title == "Caution" and "no alarm path that protects people" in plain(last.sentences[0])
+    assert last.title == "Caution" and "No alarm path that protects people" in plain(last.sentences[0])

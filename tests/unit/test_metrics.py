@@ -9,7 +9,8 @@ from pathlib import Path
 
 import pytest
 from helpers_faulty import planted, scripted
-from helpers_service import FEED, Running, body_of, configuration, event_line, events, eventually, running
+from helpers_service import BEGIN_S, FEED, Running, body_of, configuration, event_line, events, eventually, running
+from helpers_sinks import VirtualTime
 from prometheus_client import Metric
 from prometheus_client.openmetrics.parser import text_string_to_metric_families as open_metrics
 from prometheus_client.parser import text_string_to_metric_families as plain_text
@@ -116,6 +117,24 @@ async def test_values_are_those_of_the_document(tmp_path: Path) -> None:
         assert delivered == ledger["released"] > 0
         assert value(found, "strandline_journal_bytes") == document["journal"]["bytes"]
         assert value(found, "strandline_journal_syncs", "_total") >= 20
+
+
+async def test_sources_that_fell_silent_are_counted_and_excused_ones_are_not(tmp_path: Path) -> None:
+    clock = VirtualTime()
+    clock.now = BEGIN_S * 10**9
+    async with running(configuration(tmp_path, idle_after="30s"), clock=clock) as service:
+        for source in ("gw-1", "gw-2", "gw-3"):
+            await service.send([1], source)
+        assert value(families(await scraped(service)), "strandline_sources_idle") == 0
+        clock.now += 31 * 10**9
+        await service.send([32], "gw-3")
+        found = families(await scraped(service))
+        assert (value(found, "strandline_sources_idle"), value(found, "strandline_sources_active")) == (2, 1)
+        assert value(found, "strandline_marks", "_total", cause="silence") == 0, "one is still there"
+        assert (await service.post("excuse", {"source": "gw-1"})).status == 204
+        assert value(families(await scraped(service)), "strandline_sources_idle") == 1
+        await service.send([33], "gw-1")
+        assert value(families(await scraped(service)), "strandline_sources_idle") == 1
 
 
 async def test_limits_are_those_of_the_configuration(tmp_path: Path) -> None:

@@ -82,6 +82,9 @@ async def test_late_events_and_quarantine_page_by_page(tmp_path: Path) -> None:
         late = [*first["late"], *rest["late"]]
         assert [row["event"].encode() for row in late[:3]] == [event_line(second, "gw-2") for second in (5, 4, 3)]
         assert [row["late_by_ns"] for row in late] == [n * SECOND_NS for n in (95, 96, 97, 50)]
+        assert all(row["late_by_s"] == row["late_by_ns"] / 1e9 for row in late)
+        assert [row["time"] for row in late[:2]] == ["2023-11-14T22:13:25Z", "2023-11-14T22:13:24Z"]
+        assert all(parse_rfc3339(row["arrived"]) == row["arrived_ns"] for row in late)
         only = (await service.get("late?source=gw-1")).json["late"]
         assert [row["event"].encode() for row in only] == [event_line(50)]
         found = (await service.get("quarantine")).json["quarantine"]
@@ -89,7 +92,20 @@ async def test_late_events_and_quarantine_page_by_page(tmp_path: Path) -> None:
             (1, "malformed", "\ufffd\ufffd"),
             (2, "malformed", "{"),
         ]
+        assert all(parse_rfc3339(row["arrived"]) == row["arrived_ns"] for row in found)
         assert (await service.get("quarantine?after=2")).json == {"quarantine": [], "next_after": None}
+
+
+async def test_lines_of_one_request_are_quarantined_in_their_order(tmp_path: Path) -> None:
+    async with running(configuration(tmp_path)) as service:
+        ahead = event_line(2_000_000_000)
+        answer = await service.post("events", body_of(ahead, b"{", ahead, event_line(1), b"x"))
+        assert answer.json["quarantined"] == 4
+        await eventually(lambda: service.runtime.feed.state.outbox.aside_events == 0)
+        found = (await service.get("quarantine")).json["quarantine"]
+        reasons = [(1, 1, "ahead"), (2, 2, "malformed"), (3, 3, "ahead"), (4, 5, "malformed")]
+        assert [(row["number"], row["line"], row["reason"]) for row in found] == reasons
+        assert [row["event"].encode() for row in found] == [ahead, b"{", ahead, b"x"]
 
 
 async def test_numbers_that_are_none(tmp_path: Path) -> None:

@@ -12,7 +12,7 @@ from helpers_feed import Shell, arrival, patient
 from helpers_service import FEED, configuration, running
 from strandline import cli
 from strandline.core.records import Cause, Kind, Mark, encode_mark
-from strandline.errors import CaptureError
+from strandline.errors import CaptureError, ConfigError
 from strandline.replay.capture import Capture
 from strandline.replay.figures import RELATIVE_ERROR, Bar, Figures, Holds, judge
 from strandline.replay.into_service import send
@@ -159,9 +159,32 @@ async def test_a_service_that_refuses_is_asked_again_and_one_that_cannot_is_told
             sent = await sending
             assert sent.answers == {"received": 3, "accepted": 3, "late": 0, "duplicate": 0, "quarantined": 0}
             assert sent.retried >= 1 and sent.requests == 3
-            absent, nobody = (service.url, "absent", "answered 404"), ("http://127.0.0.1:1", FEED, "reached")
-            for url, feed, sentence in (absent, nobody):
-                with pytest.raises(CaptureError, match=sentence):
+            absent = service.url, "absent", "answered 404", ConfigError
+            nobody = "http://127.0.0.1:1", FEED, "reached", CaptureError
+            for url, feed, sentence, kind in (absent, nobody):
+                with pytest.raises(kind, match=sentence):
                     await asyncio.to_thread(
                         send, capture, url, feed, speed=None, connections=2, progress=lambda done: None
                     )
+
+
+def test_what_was_held_at_the_start_is_named_and_the_books_add_up(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """Six events come at 0 to 5 s with a slack of 3 s; the capture begins when three of them are held."""
+    shell = Shell(patient(slack_ns=3 * SECOND_NS))
+    for second in range(5):
+        shell.events([second * SECOND_NS], second * SECOND_NS)
+    begin = len(shell.records)
+    shell.events([5 * SECOND_NS], 5 * SECOND_NS)
+    path = kept(tmp_path / "now.capture", captured(shell, begin))
+    with Capture(path) as capture:
+        found = figures_of(Folding(capture))
+    assert found.held_at_start == 3 and found.received == 1 < found.released + found.held_at_end
+    gone = found.released + found.late + found.duplicate + found.quarantined
+    assert found.received + found.held_at_start == gone + found.held_at_end
+    assert called("replay", str(path)) == 0
+    assert "held at start 3 " in capsys.readouterr().out
+    whole = kept(tmp_path / "whole.capture", captured(shell))
+    assert called("replay", str(whole)) == 0
+    assert "held at start" not in capsys.readouterr().out

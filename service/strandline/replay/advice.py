@@ -38,6 +38,8 @@ LEARN_PART = 2 / 3
 CONFIDENCE = 0.95
 DIGITS = 3
 TENTHS = 10
+NEARLY_EMPTY = 0.1
+SUPPORTED: tuple[Verdict, ...] = ("shown", "open")
 VERDICTS: dict[Verdict, str] = {
     "shown": "the whole interval lies at or below the target: what was chosen on the first part holds on the second",
     "open": "the target lies within the interval: the second part agrees with it, but does not prove it",
@@ -97,6 +99,19 @@ class Advice:
     events_needed: int  # in each part, for a claim to be possible at all (Wilks)
     attainable: float | None  # late share of the first part with the longest wait, where it binds
     tenths: list[Part]
+
+    @property
+    def supported(self) -> bool:
+        """Whether the second part supports the slack chosen: only then is it one to go by."""
+        return self.verdict in SUPPORTED
+
+    @property
+    def nearly_empty(self) -> Literal["first", "second"] | None:
+        """The part with less than a tenth of the events that its share of the time would have: a gap in the traffic."""
+        events, learn = self.first.events + self.second.events, self.wanted.learn_part
+        if self.first.events < NEARLY_EMPTY * learn * events:
+            return "first"
+        return "second" if self.second.events < NEARLY_EMPTY * (1 - learn) * events else None
 
 
 def advise(blocks: Blocks, span_ns: tuple[int, int], rule: Rule, wanted: Wanted) -> Advice:
@@ -179,10 +194,10 @@ def _advice(
     found = wilson(second.late, second.events, wanted.confidence)
     binds = wanted.at_most_ns is not None and sketch.late_share(wanted.at_most_ns).at_least > share
     verdict: Verdict = "shown" if found[1] <= share else "open" if found[0] <= share else "missed"
-    if min(first.events, second.events) < needed:
-        verdict = "too_short"
     if binds:
         verdict = "contradiction"
+    if min(first.events, second.events) < needed:  # of too few events not even a contradiction is shown
+        verdict = "too_short"
     ranks = order_statistics(first.events, 1 - share, wanted.confidence)
     return Advice(
         wanted=wanted,

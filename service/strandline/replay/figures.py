@@ -76,6 +76,7 @@ class Figures:
     late: int = 0
     duplicate: int = 0
     quarantined: int = 0
+    held_at_start: int = 0  # came before `from_ns`: not in `received`, but released (or held on) like the others
     held_at_end: int = 0
     refused: int = 0  # events of requests that this configuration would have refused, to be sent again later
     late_share: float | None = None
@@ -103,7 +104,7 @@ def sum_up(figures: Figures, state: State, holds: Holds, before: dict[str, int])
     books = {name: value - before.get(name, 0) for name, value in asdict(state.ledger).items()}
     figures.received, figures.released, figures.late = books["received"], books["released"], books["late"]
     figures.duplicate, figures.quarantined = books["duplicate"], books["quarantined"]
-    figures.held_at_end = state.runs.held
+    figures.held_at_start, figures.held_at_end = before.get("buffered", 0), state.runs.held
     judged = figures.late + books["released"] + books["buffered"]
     figures.late_share = figures.late / judged if judged else None
     figures.hold_mean_ns = holds.mean_ns()

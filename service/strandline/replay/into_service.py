@@ -15,9 +15,10 @@ from typing import Any
 import aiohttp
 import msgspec
 
-from strandline.client_access import Caller
+from strandline.cli_answers import WRONG_USE
+from strandline.client_access import Caller, refusal
 from strandline.core.records import Kind
-from strandline.errors import CaptureError
+from strandline.errors import CaptureError, ConfigError
 from strandline.ingest.formats import NDJSON
 
 from .capture import Capture
@@ -78,7 +79,7 @@ def send(
     sender = _Sender(f"{url.rstrip('/')}/v1/feeds/{feed}/events", sent, progress, caller)
     try:
         asyncio.run(sender.run(_bodies(capture, speed, sent), connections))
-    except* CaptureError as errors:
+    except* (CaptureError, ConfigError) as errors:
         raise errors.exceptions[0] from None
     except* (aiohttp.ClientError, TimeoutError) as errors:
         raise CaptureError(f"{url} cannot be reached: {errors.exceptions[0] or 'no answer in time'}") from errors
@@ -154,7 +155,9 @@ class _Sender:
                     found: dict[str, Any] = msgspec.json.decode(content)
                     return found
                 if answer.status not in BUSY:
-                    raise CaptureError(f"{self._url} answered {answer.status}: {_detail(content)}")
+                    code, why = refusal(answer.status, _detail(content), self._caller)
+                    told = f"{self._url} answered {answer.status}: {why}"
+                    raise ConfigError([told]) if code == WRONG_USE else CaptureError(told)
                 self._sent.retried += 1
                 wait = answer.headers.get("Retry-After", "1")
             await asyncio.sleep(min(float(wait) if wait.isdecimal() else 1.0, RETRY_S_AT_MOST))

@@ -12,16 +12,18 @@ from collections.abc import Iterable, Iterator, Mapping, Sequence
 from html import escape
 from typing import Any
 
+from strandline.caution import CAUTION
 from strandline.cli_answers import harmless
 from strandline.ingest.timestamps import format_rfc3339
 
 from .pictures import OKABE_ITO, PLAIN, Colours, Picture, pictures_of, svg
 from .report_style import DARK, LIGHT, POLICY, STYLE
 from .wording import (
-    CAUTION,
+    NO_LINES,
     REORDERING,
     SEQUENCE,
     UNKNOWN,
+    gap_text,
     range_text,
     rows_of,
     share_text,
@@ -67,7 +69,8 @@ def _head(answer: Mapping[str, Any], title: str) -> Iterator[str]:
     )
     yield _facts(list(_answer(answer)))
     yield "<h2>Lines for the configuration</h2>"
-    yield f"<pre>{escape(chr(10).join(answer['configuration']))}</pre>"
+    lines = escape(chr(10).join(answer["configuration"]))
+    yield f"<pre>{lines}</pre>" if lines else f"<p>{escape(NO_LINES.capitalize())}.</p>"
     yield f'<p class="caution"><strong>Caution.</strong> {escape(CAUTION)}</p>'
 
 
@@ -84,7 +87,7 @@ def _answer(answer: Mapping[str, Any]) -> Iterator[tuple[str, str]]:
         between = " to ".join(_data(each, time_text) for each in answer["interval_ns"])
         between = f" ({sure}: {between})"
     yield (
-        "Chosen",
+        "Tried" if answer["verdict"] == "too_short" else "Chosen",
         f"slack <strong>{_data(answer['slack_ns'], spelled)}</strong>{between}, on {_data(first['events'], value_text)}"
         f" events, up to {_instant(first['to_ns'])}",
     )
@@ -99,6 +102,9 @@ def _answer(answer: Mapping[str, Any]) -> Iterator[tuple[str, str]]:
     yield "Verdict", f"<strong>{escape(verdict.replace('_', ' '))}</strong>: {escape(answer['explanation'])}"
     if verdict == "too_short":
         yield "Needed", f"{_data(answer['events_needed'], value_text)} events in each part for {sure}"
+    gap = gap_text(answer)
+    if gap is not None:
+        yield "Gap", escape(gap)
     if answer["attainable"] is not None:
         least = _data(answer["least_ns"], time_text)
         yield "Attainable", f"{_data(answer['attainable'], share_text)} with the longest wait; the target needs {least}"

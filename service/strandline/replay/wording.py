@@ -15,11 +15,7 @@ from strandline.config_units import duration_text
 
 SECOND_NS = 1_000_000_000
 UNKNOWN = "unknown"
-CAUTION = (
-    "Ordering delays data by the slack: no alarm path that protects people may depend on the ordered output alone. "
-    "Take such alarms from the raw feed, and follow local rules and the judgement of licensed people where the data "
-    "guards life."
-)
+NO_LINES = "no lines to paste: the verdict does not support this slack"
 # In the order of the answers; the text, and the section of the RFC that says how it is counted ("": of our own).
 REORDERING = {
     "events": ("events looked at", ""),
@@ -117,6 +113,18 @@ def rows_of(figures: Mapping[str, Any], names: Mapping[str, tuple[str, str]]) ->
         for part, each in value.items() if isinstance(value, dict) else (("", value),):
             text = time_text(each) if "_ns" in key else value_text(each)
             yield Row(f"{name} {part}".strip(), each, text, defined_in)
+
+
+def gap_text(answer: Mapping[str, Any]) -> str | None:
+    """A sentence where one part of an advice is nearly empty, from the answer as plain values; else None."""
+    part = answer["nearly_empty"]
+    if part is None:
+        return None
+    events, both = answer[part]["events"], answer["first"]["events"] + answer["second"]["events"]
+    return (
+        f"the {part} part of the time is nearly empty: it holds {events:,} of {both:,} events. Look for a gap in the "
+        "capture; choose another part with --learn, or capture a stretch without the gap"
+    )
 
 
 def range_text(first: int, last: int) -> str:

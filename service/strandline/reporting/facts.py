@@ -74,12 +74,18 @@ class Stall(Fact, frozen=True, kw_only=True):
 
 
 class Holds(Fact, frozen=True, kw_only=True):
-    """All holds of the time. `listed`: the longest, in order; with the `unlisted` they cover what is known of it."""
+    """All holds of the time, neighbours of one holder and reason as one.
+
+    `listed`: the longest, in order; with the `brief` (below a second, no stop) and the `unlisted` they cover what is
+    known of it.
+    """
 
     known_since_ns: int | None
     listed: list[Hold]
     unlisted: int
     unlisted_ns: int
+    brief: int
+    brief_ns: int
     totals: list[Total]
     unlisted_totals: int
     unlisted_totals_ns: int
@@ -93,7 +99,8 @@ class Series(Fact, frozen=True, kw_only=True):
     """How the feed stood, in steps: columns of equal length, one entry each step. The process keeps it in memory.
 
     `behind_ns`: newest event time minus watermark (None: there was none yet). `waited_ns`: age of the event that had
-    been held longest. `unsynced_ns`, `undelivered_ns`: the same before the journal's sync and before the sinks.
+    been held longest. `unsynced_ns`, `undelivered_ns`: the same before the journal's sync and before the sinks; of
+    the latter what is beyond the longest time for which a sink is configured to collect (a file's `roll_every`).
     """
 
     step_ns: int

@@ -70,6 +70,7 @@ class Look:
     recognises_repeats: bool
     failure: str | None
     lanes_file: Path
+    flush_after_ns: int  # the longest that a sink of the feed keeps what it took before it completes it, as configured
 
 
 def look(memory: FeedMemory, from_ns: int, to_ns: int) -> Look:
@@ -94,6 +95,7 @@ def look(memory: FeedMemory, from_ns: int, to_ns: int) -> Look:
         recognises_repeats=runtime.config.id is not None,
         failure=runtime.failure,
         lanes_file=runtime.folder / "lanes.db",
+        flush_after_ns=round(max((each.flush_after_s for each in runtime.deliveries.values()), default=0.0) * 1e9),
     )
 
 
@@ -163,7 +165,7 @@ def _series(seen: Look) -> Series:
         late=rows["late"].tolist(),
         refused=rows["refused"].tolist(),
         unsynced_ns=oldest["journal"],
-        undelivered_ns=oldest["sinks"],
+        undelivered_ns=[max(0, waited_ns - seen.flush_after_ns) for waited_ns in oldest["sinks"]],
         balanced=bool(rows["balanced"].all()),
     )
 

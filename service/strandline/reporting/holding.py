@@ -23,6 +23,7 @@ USUAL = frozenset({"nothing_held", "slack", "slack_set"})
 FURTHEST_BEHIND = frozenset({"slow_source", "promised_source"})
 # A source that reports every few seconds is now and then the one furthest behind: that is no incident. A stop is.
 STALL_AT_LEAST_NS = 10_000_000_000
+BRIEF_NS = 1_000_000_000  # shorter holds are not listed one by one
 Kind = TypeVar("Kind")
 LISTED_AT_MOST, TOTALS_AT_MOST, STALLS_AT_MOST, PHASES_AT_MOST = 300, 50, 40, 12
 
@@ -50,15 +51,20 @@ def holds_of(
     holds = [_within(hold, from_ns, to_ns) for hold in known if hold.from_ns < to_ns and hold.to_ns > from_ns]
     stalls = _stalls(_since_heard(holds, known, rules), _since_heard(known, known, rules), (from_ns, to_ns), judge)
     chosen = _longest(stalls, [stall.lasted_ns for stall in stalls], STALLS_AT_MOST)
-    listed = _longest(holds, [hold.lasted_ns for hold in holds], LISTED_AT_MOST)
+    joined = _joined(holds)
+    brief = [hold for hold in joined if _is_brief(hold)]
+    lasting = [hold for hold in joined if not _is_brief(hold)]
+    listed = _longest(lasting, [hold.lasted_ns for hold in lasting], LISTED_AT_MOST)
     totals = _totals(holds)
     held_ns = _sum(hold for hold in holds if hold.why not in USUAL)
     stalls_ns = sum(stall.lasted_ns for stall in stalls)
     return Holds(
         known_since_ns=known_since_ns,
         listed=listed,
-        unlisted=len(holds) - len(listed),
-        unlisted_ns=_sum(holds) - _sum(listed),
+        unlisted=len(lasting) - len(listed),
+        unlisted_ns=_sum(lasting) - _sum(listed),
+        brief=len(brief),
+        brief_ns=_sum(brief),
         totals=totals[:TOTALS_AT_MOST],
         unlisted_totals=len(totals[TOTALS_AT_MOST:]),
         unlisted_totals_ns=sum(total.lasted_ns for total in totals[TOTALS_AT_MOST:]),
@@ -156,14 +162,23 @@ def _groups(parts: Sequence[Part]) -> list[list[Part]]:
 
 
 def _joined(holds: Sequence[Hold]) -> list[Hold]:
-    """Neighbours of the same reason as one."""
+    """Neighbours of the same holder and reason that touch, as one."""
     phases: list[Hold] = []
     for hold in holds:
-        if phases and phases[-1].why == hold.why:
+        if phases and _same(phases[-1], hold) and phases[-1].to_ns == hold.from_ns:
             phases[-1] = structs.replace(phases[-1], to_ns=hold.to_ns)
         else:
             phases.append(hold)
     return phases
+
+
+def _is_brief(hold: Hold) -> bool:
+    """Too short to be listed; but that the service was stopped is told however short it was."""
+    return hold.lasted_ns < BRIEF_NS and hold.why != "stopped"
+
+
+def _same(one: Hold, other: Hold) -> bool:
+    return (one.why, one.source, one.sink) == (other.why, other.source, other.sink)
 
 
 def _shortened(stall: Stall) -> Stall:

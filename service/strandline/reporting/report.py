@@ -4,19 +4,13 @@ from __future__ import annotations
 
 from typing import NamedTuple
 
+from ..caution import CAUTION
 from . import tables
 from .facts import Facts
 from .limits import limits
 from .sentences import besides, summary
 from .tables import Table
 from .words import Foreign, Words, full, say, span
-
-# As every document of this project carries it.
-CAUTION = (
-    "Ordering delays data by the slack: no alarm path that protects people may depend on the ordered output alone. "
-    "Take such alarms from the raw feed, and follow local rules and the judgement of licensed people where the data "
-    "guards life."
-)
 
 
 class Section(NamedTuple):

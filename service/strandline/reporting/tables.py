@@ -83,7 +83,7 @@ def totals(facts: Facts) -> Table:
 
 
 def holds(facts: Facts) -> Table:
-    """Each hold, those of waiting out the slack too: together they are the whole time."""
+    """Each hold of a second or longer, those of waiting out the slack too; with the last rows the whole time."""
     clock, known = Clock(facts.from_ns, facts.to_ns), facts.holds
     rows: list[tuple[Words, ...]] = [
         (
@@ -96,6 +96,9 @@ def holds(facts: Facts) -> Table:
         for each in known.listed
     ]
     rows += _more(known.unlisted, lasted(known.unlisted_ns), 5, 2)
+    if known.brief:
+        text = (f"{known.brief:,} shorter",)
+        rows.append((text, NOTHING, (lasted(known.brief_ns),), NOTHING, ("each below 1 s, left out here",)))
     return Table("Every hold, one after the other", ("from", "to", "for", "who", "why"), rows, (2,), "Not known.")
 
 

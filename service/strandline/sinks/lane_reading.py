@@ -78,6 +78,15 @@ def lanes_size(path: str | os.PathLike[str]) -> LanesSize:
         return LanesSize() if connection is None else measured(connection, Path(path))
 
 
+def last_number(path: str | os.PathLike[str], lane: KeptLane) -> int:
+    """The highest number that a lane has given to a row, forgotten ones too; 0 where there is none. StrandlineError."""
+    with _reading(Path(path)) as connection:
+        if connection is None:
+            return 0
+        found = connection.execute("SELECT number FROM kept WHERE lane = ?", (lane,)).fetchone()
+        return int(found[0]) if found else 0
+
+
 def forget_rows(path: str | os.PathLike[str], lane: KeptLane, through: int) -> int:
     """Delete a lane's rows up to and including number `through`, and give their room back to the disk.
 

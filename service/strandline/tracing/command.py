@@ -14,11 +14,11 @@ from pathlib import Path
 from typing import Any
 from urllib.parse import quote, urlencode
 
-from ..cli_answers import DEFAULT_FILE, FINE, NO, NOT_REACHED, WRONG_USE, complain, harmless
+from ..cli_answers import DEFAULT_FILE, FINE, NO, NOT_REACHED, complain, harmless
 from ..cli_lanes import lanes_path
 from ..cli_progress import bar
 from ..cli_trace import URL
-from ..client_access import caller_of
+from ..client_access import address_of, caller_of, refusal
 from ..config import Config, load
 from ..errors import ConfigError, JournalError, StrandlineError
 from ..journal.disk import LocalDisk
@@ -38,7 +38,7 @@ Json = dict[str, Any]
 
 
 class _Refused(Exception):
-    """The service answered, but not with a trace."""
+    """The service answered, but not with a trace. `code` is the exit code."""
 
     def __init__(self, code: int, detail: str) -> None:
         super().__init__(detail)
@@ -55,7 +55,7 @@ def command(options: argparse.Namespace) -> int:
         document = _document(options)
     except _Refused as refused:
         complain(harmless(str(refused)))
-        return WRONG_USE if refused.code in (400, 404) else NOT_REACHED
+        return refused.code
     except _Unreachable as error:
         hint = "is the service running there? Name it with --url, or its folder with --data-dir"
         complain(f"{harmless(str(error))}; {hint}")
@@ -74,7 +74,7 @@ def _document(options: argparse.Namespace) -> Json:
     if file is None and options.url is None and DEFAULT_FILE.exists():
         file = DEFAULT_FILE
     config = None if file is None else load(file, os.environ)
-    url = options.url or (URL if config is None else url_of(config))
+    url = address_of(options.url) if options.url else URL if config is None else url_of(config)
     if url is None:  # the free port that it got is not written down
         return _offline(options, config)
     try:
@@ -114,7 +114,7 @@ def _asked(options: argparse.Namespace, url: str) -> Json:
             document = json.loads(answer.read(ANSWER_BYTES_AT_MOST))
         return dict(document)
     except urllib.error.HTTPError as error:
-        raise _Refused(error.code, _detail(error)) from None
+        raise _Refused(*refusal(error.code, _detail(error), shown)) from None
     except (OSError, http.client.HTTPException, ValueError, TypeError) as error:
         raise _Unreachable(f"{url} could not be reached: {error}") from None
 

@@ -1,0 +1,88 @@
+"""What commands make of an address and of a refusal: the same for each of them."""
+
+from __future__ import annotations
+
+import asyncio
+import json
+import stat
+from pathlib import Path
+
+import pytest
+from helpers_service import FEED, configuration, running
+from strandline.cli import main
+from strandline.client_access import Caller, address_of, is_address, refusal
+from strandline.errors import ConfigError
+
+
+@pytest.mark.parametrize(
+    ("written", "address"),
+    [
+        ("localhost:8690", "http://localhost:8690"),
+        ("127.0.0.1:8690/", "http://127.0.0.1:8690/"),
+        ("[::1]:8690", "http://[::1]:8690"),
+        ("gauges.example", "http://gauges.example"),
+        ("https://gauges.example:8600", "https://gauges.example:8600"),
+    ],
+)
+def test_host_and_port_are_an_address(written: str, address: str) -> None:
+    assert address_of(written) == address
+    assert is_address(written) == (written != "gauges.example")
+
+
+@pytest.mark.parametrize("written", ["ftp://a:1", "localhost:", "localhost:port", "//localhost", "a b:1", ""])
+def test_what_is_no_address_says_how_to_write_one(written: str) -> None:
+    with pytest.raises(ConfigError, match="write http://HOST:PORT"):
+        address_of(written)
+    assert not is_address(written)
+
+
+@pytest.mark.parametrize("name", ["out.db", "now.capture", "strandline-data", "data/old.parquet"])
+def test_files_are_no_addresses(name: str) -> None:
+    assert not is_address(name)
+
+
+def test_a_refusal_has_one_exit_code_and_names_what_was_not_given() -> None:
+    bare, shown = Caller(), Caller({"Authorization": "Bearer x"})
+    code, why = refusal(401, "detail", bare)
+    assert code == 2 and "--token-file" in why and "STRANDLINE_TOKEN" in why
+    assert refusal(401, "it was mistyped", shown) == (2, "it was mistyped")
+    codes = {status: refusal(status, "", shown)[0] for status in (400, 403, 404, 422, 409, 429, 503)}
+    assert codes == {400: 2, 403: 2, 404: 2, 422: 2, 409: 1, 429: 3, 503: 3}
+
+
+async def asked(capsys: pytest.CaptureFixture[str], *arguments: str) -> tuple[int, str]:
+    code = await asyncio.to_thread(main, list(arguments))
+    return code, capsys.readouterr().err
+
+
+async def test_commands_take_host_and_port_and_agree_on_exit_codes(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.delenv("STRANDLINE_TOKEN", raising=False)
+    assert main(["token", "make", "--name", "a", "--role", "operate", "--role", "read", "--json"]) == 0
+    made = json.loads(capsys.readouterr().out)
+    tokens, own = tmp_path / "tokens.toml", tmp_path / "own.token"
+    for file, text in ((tokens, made["entry"]), (own, made["token"])):
+        file.write_text(text)
+        file.chmod(stat.S_IRUSR | stat.S_IWUSR)
+    questions = [["holds"], ["report"], ["trace", "--time", "2026-01-01T00:00:00Z"]]
+    # `more` stands behind the keys of the feed: a table of its own may not, so the access table comes first.
+    text = f"{configuration(tmp_path)}\n[access]\ntokens = {json.dumps(str(tokens))}\n"
+    async with running(text) as service:
+        place = service.url.removeprefix("http://")
+        for question in [*questions, ["quarantine", "redrive"]]:
+            code, err = await asked(capsys, *question, "--feed", FEED, "--url", place)
+            assert code == 2 and "--token-file" in err, question
+        capture = ["capture", place, "--seconds", "1", "--out", str(tmp_path / "now.capture")]
+        code, err = await asked(capsys, *capture, "--feed", FEED)
+        assert code == 2 and "--token-file" in err and "Bearer" not in err
+        monkeypatch.setenv("STRANDLINE_TOKEN", made["token"])
+        for question in questions:
+            code, err = await asked(capsys, *question, "--feed", "none", "--url", place)
+            assert code == 2, (question, err)
+            code, err = await asked(capsys, *question, "--feed", FEED, "--url", place)
+            assert code == (1 if question[0] == "trace" else 0), (question, err)
+    for question in questions:
+        assert (await asked(capsys, *question, "--feed", FEED, "--url", "localhost:1"))[0] == 3
+        code, err = await asked(capsys, *question, "--feed", FEED, "--url", "ftp://localhost")
+        assert code == 2 and "write http://HOST:PORT" in err
