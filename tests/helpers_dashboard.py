@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import asyncio
 import json
+import os
 import re
 import time
 from collections.abc import AsyncIterator, Iterable, Iterator, Mapping
@@ -122,18 +123,21 @@ def says(page: Page) -> Locator:
 
 
 async def shoot(page: Page, folder: Path, name: str, *, whole: bool = True) -> None:
-    """A picture of the page, for people to look at."""
+    """Everything on the page is drawn; with $STRANDLINE_SHOTS (0.4 s each) a picture is kept for people to look at."""
     if whole:  # what is out of sight is not drawn
         await page.evaluate("""async () => {
           const frame = () => new Promise((done) => requestAnimationFrame(() => requestAnimationFrame(done)));
-          document.styleSheets[0].insertRule(".panel { content-visibility: visible !important }", 0);
+          const sheet = new CSSStyleSheet(); // of its own: one that is changed heeds no change of the window's size
+          sheet.replaceSync(".panel { content-visibility: visible !important }");
+          document.adoptedStyleSheets = [sheet];
           for (let y = 0; y < document.body.scrollHeight; y += 800) { scrollTo(0, y); await frame(); }
           scrollTo(0, 0);
           await frame();
         }""")
-    await page.screenshot(path=folder / f"{name}.png", full_page=whole)
+    if os.environ.get("STRANDLINE_SHOTS"):
+        await page.screenshot(path=folder / f"{name}.png", full_page=whole)
     if whole:
-        await page.evaluate("() => document.styleSheets[0].deleteRule(0)")
+        await page.evaluate("() => { document.adoptedStyleSheets = []; }")
 
 
 async def carry_out(page: Page, done: str | re.Pattern[str], reason: str = "The radio link is down.") -> None:

@@ -6,13 +6,14 @@ Time is the test's own: samples are taken when a test says so.
 from __future__ import annotations
 
 from pathlib import Path
+from statistics import fmean as mean
 from typing import Any
 
 import numpy as np
 import pytest
 from helpers_feed import Shell, patient
-from helpers_service import FEED, Running, body_of, configuration, eventually, running
-from hypothesis import given, settings
+from helpers_service import FEED, Running, body_of, configuration, event_line, eventually, running
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 from strandline.core.columns import REF, Batch
 from strandline.core.lateness import Lateness
@@ -174,6 +175,23 @@ async def test_rates_are_those_of_the_last_seconds(tmp_path: Path) -> None:
         assert rates().books["received"] == 0
 
 
+async def test_the_last_minute_is_counted_up_to_now(tmp_path: Path) -> None:
+    """Two events a second of which one is a repeat, sampled once a second; the last body came after the last sample."""
+    clock = SetClock()
+    async with running(configuration(tmp_path, slack="0s", id="/id"), clock=clock) as service:
+        memory = memory_of(service)
+        for second in range(1, 91):
+            clock.at_ns = START_NS + second * SECOND_NS
+            line = event_line(second, "gw-1", id=f"e{second}")
+            await service.post("events", body_of(line, line))
+            if second < 90:
+                memory.sample()
+        found = memory.minute(clock.at_ns)
+        assert (found["received"], found["duplicate"], found["late"]) == (120, 60, 0)
+        clock.at_ns += 30 * SECOND_NS
+        assert memory.minute(clock.at_ns)["duplicate"] == 30
+
+
 async def test_a_sample_that_fails_stops_nothing(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, caplog: pytest.LogCaptureFixture
 ) -> None:
@@ -262,6 +280,7 @@ def test_a_fade_in_between_takes_nothing_from_what_came_after_it() -> None:
 
 
 @given(st.lists(st.integers(0, 60_000), min_size=1, max_size=60), st.sampled_from([0, 500, 5_000, 20_000]))
+@example([0, 5_001], 5_000)  # one just above the slack shares its bucket, and was not kept
 def test_every_slack_is_told_as_if_it_had_been_set(lateness_ms: list[int], slack_ms: int) -> None:
     """Judged one by one: with slack S the events that are later are late, and the others wait S less their lateness."""
     memory, slack_ns = Lateness(), slack_ms * 10**6
@@ -281,6 +300,38 @@ def test_every_slack_is_told_as_if_it_had_been_set(lateness_ms: list[int], slack
             expected_s = sum(other_ns - late for late in kept) / len(kept) / 1e9
             # What the sketch answers with is within 1 % of a lateness, here and at the present slack.
             assert hold_s == pytest.approx(expected_s, abs=0.01 * (max(kept) + max(lateness_ns)) / 1e9 + 1e-5)
+
+
+@given(
+    st.lists(st.integers(0, 60_000), min_size=1, max_size=60),
+    st.sampled_from([500, 5_000, 20_000]),
+    st.integers(0, 10_000),
+)
+@example([0, 5_001], 5_000, 700)  # one event just above the slack shares its bucket
+@example([4_990, 4_999, 5_001], 5_000, 0)
+def test_what_is_held_beyond_the_slack_is_the_same_with_every_slack(
+    lateness_ms: list[int], slack_ms: int, beyond_ms: int
+) -> None:
+    """Every event waits so much longer than the slack asks. The bound is the contract's: the present slack's bucket."""
+    memory, slack_ns, beyond_ns = Lateness(), slack_ms * 10**6, beyond_ms * 10**6
+    late_ns = [late * 10**6 for late in lateness_ms]
+    memory.note(0, len(late_ns), np.array(late_ns))
+    place = memory.sketch.buckets.place
+    below = [late for late in late_ns if place(late) < place(slack_ns)]
+    within = [late for late in late_ns if place(late) == place(slack_ns)]
+    kept = [late for late in late_ns if late <= slack_ns]
+    hold_ns = slack_ns + beyond_ns - mean(kept) if kept else 0.0
+    bound_ns = mean(below + within) - mean(below) if below and within else 0.0
+    for slack_s, _, hold_s in every_slack(memory, slack_ns, hold_ns):
+        assert slack_s is not None
+        other_ns = slack_s * 1e9
+        judged = [late for late in late_ns if late <= other_ns + 0.5]
+        if kept and other_ns == slack_ns:
+            assert hold_s == pytest.approx(hold_ns / 1e9, abs=1e-6)  # as it was measured
+        elif kept and judged:
+            expected_s = (other_ns + beyond_ns - mean(judged)) / 1e9
+            sketched_s = 0.01 * (max(judged) + max(late_ns)) / 1e9
+            assert hold_s == pytest.approx(expected_s, abs=bound_ns / 1e9 + sketched_s + 1e-5)
 
 
 def test_nothing_is_claimed_where_nothing_was_seen() -> None:

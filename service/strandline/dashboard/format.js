@@ -38,6 +38,24 @@ export function age(seconds) {
   return `${sign}${whole}${KEPT}s`;
 }
 
+/** Seconds on a round step of an axis, in one unit: the greatest that gives a whole number: "90 s", "36 h". */
+export function oneUnit(seconds) {
+  if (seconds === 0) return `0${KEPT}s`;
+  const fits = ([unit]) => Math.abs(seconds / unit - Math.round(seconds / unit)) < 1e-9;
+  const [unit, name] = [
+    [DAY, "d"],
+    [HOUR, "h"],
+    [MINUTE, "min"],
+    [SECOND, "s"],
+  ].find(fits) ?? [seconds < 0.1 ? 0.001 : SECOND, seconds < 0.1 ? "ms" : "s"];
+  return `${undusted(seconds / unit)}${KEPT}${name}`;
+}
+
+/** A number without the dust of binary fractions, thousands set apart. */
+function undusted(number) {
+  return Number(number.toPrecision(12)).toLocaleString("en-GB");
+}
+
 /** The parts of an instant in UTC or in the browser's own zone. */
 function parts(ms, zone) {
   const date = new Date(ms);

@@ -1,7 +1,7 @@
 // Who holds the output, since when, why, and what to do about it, in words: a function for each of the reasons.
 // Pure: a moment in; out comes { level, place, says, next, offers }, as `sentence` puts it together.
 
-import { age, counted, near, shown } from "./format.js";
+import { age, count, counted, near, shown } from "./format.js";
 import { behind_s, CURRENT_WITHIN_S, isCurrent, laneOf, pauseOf } from "./reading.js";
 
 const REASON_AT_MOST = 80; // graphemes of what somebody gave as a reason
@@ -123,6 +123,69 @@ export function missingTrouble(moment) {
       next: ["Start ", { name: source }, ", or excuse it if it will not come."],
       offers: [{ act: "excuse", subject: source }],
     },
+  ];
+}
+
+/**
+ * Does a silence need a person? Yes while a source that was heard, and is no longer waited for (idle, or excused), has
+ * been silent for less than a day: until then somebody may bring it back. Told calmly, without a colour, is:
+ * who has been silent for a day or longer, for that is known by then; who was excused before it ever came; and every
+ * silence where more than half of the sources have been silent for an hour or longer, for then they come and go.
+ */
+export function needsSomebody(silence) {
+  return silence.recent > 0 && 2 * silence.hour <= silence.known;
+}
+
+/** Sources that were known and are silent, and that nothing waits for: what is late or lost there no hold tells. */
+export function silenceTrouble(moment) {
+  const silence = moment.silence;
+  if (!silence?.sources || !silence.active) return []; // where nobody speaks, that is said of the feed
+  const pressing = needsSomebody(silence),
+    [says, next] = silence.sources === 1 ? oneSilent(moment, silence) : severalSilent(moment, silence);
+  return [
+    {
+      level: pressing ? "watch" : "fine",
+      place: pressing ? "upstream" : "none",
+      says,
+      next,
+      aside: !pressing, // said after the state of the feed, not instead of it
+      but: true,
+      about: ["silence", silence.source],
+      sign: `${count(silence.sources)} silent`,
+    },
+  ];
+}
+
+function silentFor(moment, silence) {
+  return age((moment.now_ms - silence.heard_ms) / 1000);
+}
+
+function oneSilent(moment, silence) {
+  const who = { name: silence.source };
+  if (silence.heard_ms === null) return [[who, " is excused and never came. "], ["Nothing to do."]];
+  const lasting = silentFor(moment, silence);
+  return [
+    silence.excused
+      ? [who, ` is excused and has been silent for ${lasting}. `]
+      : [who, ` has been silent for ${lasting} and is not waited for. `],
+    [
+      "Look at ",
+      who,
+      " or its link. Once it speaks again it is waited for; what it held back of this time comes late.",
+    ],
+  ];
+}
+
+function severalSilent(moment, silence) {
+  const many = `${count(silence.sources)} of ${counted(silence.known, "source")} are silent and not waited for`;
+  if (!silence.recent) return [[`${many}, all for a day or longer. `], ["Nothing to do."]];
+  const last = ["; ", { name: silence.source }, ` fell silent last, ${silentFor(moment, silence)} ago. `];
+  return [
+    [many, ...last],
+    [
+      "Look at the grey lanes: what do they have in common? ",
+      "If they only send seldom, a longer idle_after waits for them.",
+    ],
   ];
 }
 

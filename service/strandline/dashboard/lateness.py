@@ -6,6 +6,8 @@ so an event above the slack is a late one. Every edge is the upper bound of a bu
 
 from __future__ import annotations
 
+from operator import itemgetter
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -57,22 +59,37 @@ def every_slack(memory: Lateness, slack_ns: int, hold_ns: float | None) -> list[
     The late share is exact but for the present slack, where it is the greater of two bounds within one bucket (2 %).
     `hold_ns` is the mean hold measured with the present slack: another slack would hold an event that much longer or
     shorter, and other ones. None where none was measured; shares are None before anything was seen.
+
+    What it is held beyond that (until others speak, say) is taken to be the same with every slack. It is known within
+    one bucket: of the events in the present slack's bucket, which of them were kept is not known. Of the values that
+    this leaves open the one nearest to nothing is taken, so a mean hold is at most as wrong as the mean lateness of
+    what was kept would move by those events (and by the sketch's 1 %).
     """
     sketch = memory.sketch
     below = np.cumsum(sketch.counts)
     mean_ns = (np.cumsum(sketch.counts * sketch.buckets.values) / np.maximum(below, 1e-300)).tolist()
     present = sketch.buckets.place(slack_ns)
-    waits_ns = None if hold_ns is None else hold_ns - (slack_ns - mean_ns[present])
-    rows = [(slack_ns, present, sketch.late_share(max(slack_ns, _TICK_NS)).at_most)]
+    kept_ns = mean_ns[present] if hold_ns is None else _kept_mean_ns(slack_ns - hold_ns, below, mean_ns, present)
+    beyond_ns = None if hold_ns is None else hold_ns - slack_ns + kept_ns
+    rows = [(slack_ns, kept_ns, sketch.late_share(max(slack_ns, _TICK_NS)).at_most)]
     for place in _SLACKS.tolist():
         share = max(0.0, float(1 - below[place] / below[-1])) if below[-1] else 0.0
-        rows.append((int(sketch.buckets.upper[place]), place, share))
+        rows.append((int(sketch.buckets.upper[place]), mean_ns[place], share))
     known = sketch.total > 0
     return [
         [
             slack / 1e9,
             round(share, 9) if known else None,
-            None if waits_ns is None or not known else round(max(0.0, waits_ns + slack - mean_ns[place]) / 1e9, 6),
+            None if beyond_ns is None or not known else round(max(0.0, beyond_ns + slack - late_ns) / 1e9, 6),
         ]
-        for slack, place, share in sorted(rows)
+        for slack, late_ns, share in sorted(rows, key=itemgetter(0))
     ]
+
+
+def _kept_mean_ns(likely_ns: float, below: NDArray[np.float64], mean_ns: list[float], present: int) -> float:
+    """The mean lateness of what was kept: with, without or with some of the present slack's bucket, so that it is as
+    near as can be to `likely_ns` (slack less mean hold: what it was if nothing was held beyond slack less lateness).
+    """
+    most_ns = mean_ns[present]
+    least_ns = mean_ns[present - 1] if present and below[present - 1] else most_ns
+    return min(max(likely_ns, least_ns), most_ns)

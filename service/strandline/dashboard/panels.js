@@ -6,7 +6,7 @@ import { byId, keyed, make, nameElement, setAttribute, setSentence, setText } fr
 import { age, brief, clean, count, counted, near, share } from "./format.js";
 import { pauseWords, waitWords } from "./holding.js";
 import { lastAtOrBelow } from "./scales.js";
-import { apart, behind_s } from "./reading.js";
+import { apart, behind_s, SILENT_SHARE } from "./reading.js";
 import { spokenText } from "./sentence.js";
 import { HOLDS } from "./tide.js";
 
@@ -81,7 +81,8 @@ export function showHops(moment, spoken) {
     (element, [key, , names]) => {
       const trouble = places.includes(key);
       setAttribute(element, "data-trouble", trouble ? (spoken.place === key ? spoken.level : "watch") : null);
-      setText(element.verdict, trouble ? "▲ trouble" : "✓ clear");
+      const sign = (key === "upstream" && spoken.upstream) || "trouble";
+      setText(element.verdict, trouble ? `▲ ${sign}` : "✓ clear");
       for (const name of names) showHop(element.hops.get(name), name, hops.get(name), moment, held);
     },
   );
@@ -112,9 +113,12 @@ function showHop(item, name, hop, moment) {
   if (name === "sources") {
     const rest = moment.rest,
       known = rest ? rest.sources + moment.lanes.length : moment.lanes.length;
-    const active = rest ? rest.active + moment.lanes.filter((lane) => lane.active).length : null;
+    const { active, sources: silent } = moment.silence ?? {};
     setText(item.waits, moment.past ? "–" : counted(known, "source"));
-    setText(item.rate, moment.past || active === null ? "" : `${count(active)} active`);
+    setText(
+      item.rate,
+      moment.past || !moment.silence ? "" : `${count(active)} active${silent ? `, ${count(silent)} silent` : ""}`,
+    );
     return;
   }
   if (!hop) {
@@ -229,7 +233,7 @@ function sinkState(sink) {
 export function showHappened(record, moment, zone) {
   const now_ms = moment.now_ms,
     apart_s = apart(moment);
-  const spells = whole(record.holds)
+  const spells = whole(record.holds, moment.idle_after_s)
     .filter((hold) => hold.to_ms - hold.from_ms >= SPELL_AT_LEAST_MS && wasFelt(record, hold, apart_s))
     .map((hold) => ({ at_ms: hold.from_ms, hold }));
   const acts = record.acts.map((act) => ({ at_ms: act.at_ms, act }));
@@ -246,14 +250,23 @@ export function showHappened(record, moment, zone) {
   );
 }
 
-/** Holds, oldest first; one by a source that is slow and then silent is one of a silent source from its beginning. */
-function whole(holds) {
+/**
+ * Holds, oldest first. A source that falls silent is called slow at first, for a quarter of idle_after: its hold begins
+ * with its last word, as the sentence on top says ("silent since"), and what it held before that as a slow one stays.
+ */
+export function whole(holds, idle_after_s) {
   const found = [];
   for (const hold of holds) {
     const last = found[found.length - 1];
     const silent = last?.why === "slow_source" && hold.why === "silent_source" && last.source === hold.source;
-    if (silent && hold.from_ms - last.to_ms < GAP_MS) found[found.length - 1] = { ...hold, from_ms: last.from_ms };
-    else found.push(hold);
+    if (!silent || hold.from_ms - last.to_ms >= GAP_MS) {
+      found.push(hold);
+      continue;
+    }
+    const heard_ms = hold.heard_ms ?? hold.from_ms - idle_after_s * SILENT_SHARE * 1000;
+    if (last.from_ms < heard_ms) found[found.length - 1] = { ...last, to_ms: heard_ms };
+    else found.pop();
+    found.push({ ...hold, from_ms: heard_ms });
   }
   return found;
 }
@@ -341,7 +354,8 @@ function shareWords(moment, record) {
   const steering = moment.steering;
   if (!steering) {
     const now = record.late_share[lastAtOrBelow(record.t_ms, moment.now_ms)];
-    const known = now === null || now === undefined ? "nothing came" : share(now);
+    const nothing = moment.minute?.duplicate ? "nothing new came" : "nothing came";
+    const known = now === null || now === undefined ? nothing : share(now);
     return `${known} in the minute before${moment.past ? "" : "; the slack is fixed, so there is no target"}`;
   }
   const bound = steering.bound_this_stretch === null ? "" : ` ± ${share(steering.bound_this_stretch)} at the most`;

@@ -1,8 +1,8 @@
 // What follows at once from a moment: how far behind it is, whether that is as set, a source's lane. Pure: no words.
 
 export const CURRENT_WITHIN_S = 2; // an output no further behind than its slack and this is called current
-// Of idle_after: a source that is behind the others by less is not called silent by the service either.
-const APART_SHARE = 0.25;
+// Of idle_after: who has been silent for so long is called silent by the service, before that slow.
+export const SILENT_SHARE = 0.25;
 
 /** How many seconds the output is behind the clock; null before there is any. */
 export function behind_s(moment) {
@@ -11,7 +11,7 @@ export function behind_s(moment) {
 
 /** How many seconds more than the slack an output may be behind and still be called current. */
 export function apart(moment) {
-  return Math.max(CURRENT_WITHIN_S, (moment.idle_after_s ?? 0) * APART_SHARE);
+  return Math.max(CURRENT_WITHIN_S, (moment.idle_after_s ?? 0) * SILENT_SHARE);
 }
 
 /** Is the output as current as the slack allows? */

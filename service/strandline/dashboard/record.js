@@ -1,6 +1,7 @@
 // What is known of a feed's past, as columns: filled from the service's history, lengthened by each live moment, and
 // asked what the feed looked like at an instant. Pure: no DOM, no requests, no clock.
 
+import { laneOf } from "./reading.js";
 import { lastAtOrBelow } from "./scales.js";
 
 const POINTS_AT_MOST = 4000; // twice a second: half an hour; older points are dropped and fetched again when looked at
@@ -74,16 +75,23 @@ export class Record {
     this.rows.push(moment.lateness.counts);
     this.edges_s = moment.lateness.edges_s;
     const since_ms = last_ms > moment.now_ms - GAP_MS ? last_ms : moment.now_ms;
-    this.#hold(since_ms, moment.now_ms, moment.hold.why, moment.hold.source);
+    this.#hold(since_ms, moment.now_ms, moment.hold.why, moment.hold.source, moment.hold.since_ms);
+    if (moment.hold.why === "silent_source")
+      this.holds[this.holds.length - 1].heard_ms = laneOf(moment, moment.hold.source)?.heard_ms ?? null;
     this.acts = mergedActs(this.acts, moment.acts ?? []);
     if (this.t_ms.length > POINTS_AT_MOST) this.#trim();
   }
 
-  #hold(from_ms, to_ms, why, source) {
+  /** `begun_ms`: when the hold began as the service says, between two moments as a rule. */
+  #hold(from_ms, to_ms, why, source, begun_ms = from_ms) {
     const last = this.holds[this.holds.length - 1];
     if (last && last.why === why && last.source === (source ?? null) && from_ms - last.to_ms < GAP_MS)
       last.to_ms = to_ms;
-    else this.holds.push({ from_ms, to_ms, why, source: source ?? null });
+    else {
+      const begin_ms = Math.max(from_ms, Math.min(to_ms, begun_ms ?? from_ms));
+      if (last && last.to_ms === from_ms) last.to_ms = begin_ms; // no gap between the two
+      this.holds.push({ from_ms: begin_ms, to_ms, why, source: source ?? null });
+    }
   }
 
   #trim() {
@@ -182,6 +190,8 @@ function pastOf(history, index) {
     hops,
     sinks: [],
     slacks: [],
+    silence: null,
+    minute: null,
     rates: {
       received_per_s: at("received") / step_s,
       released_per_s: at("released") / step_s,

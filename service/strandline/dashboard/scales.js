@@ -27,6 +27,8 @@ const TIME_STEPS_S = [
   DAY_S,
   7 * DAY_S,
 ];
+const DURATION_STEPS_S = [...TIME_STEPS_S.filter((step) => step >= 1), 2 * DAY_S, 14 * DAY_S, 30 * DAY_S, 100 * DAY_S]
+  .sort((one, other) => one - other);
 /** The windows that a person can choose, in seconds. */
 export const WINDOWS_S = [15, 30, 60, 120, 300, 900, 3600, 6 * 3600, DAY_S];
 
@@ -59,19 +61,29 @@ export function timeTicks(from_ms, to_ms, at_most, offset_ms = 0) {
   return { step_s, at };
 }
 
-/** Ticks from 0 up to a value, on steps of 1, 2 or 5; the last one is at or above the value. */
-export function linearTicks(to, at_most) {
-  const raw = Math.max(to, 1e-9) / at_most;
-  const power = 10 ** Math.floor(Math.log10(raw));
-  const step = power * ([1, 2, 5, 10].find((each) => each * power >= raw) ?? 10);
+/**
+ * Ticks of an axis of durations from 0 up to a number of seconds, at most `at_most` steps; the last one is at or above
+ * it. Steps that people count in: below a second and above 100 days 1, 2, 5 of a power of ten.
+ */
+export function durationTicks(to_s, at_most) {
+  const raw_s = Math.max(to_s, 1e-6) / at_most;
+  const decimal = raw_s < 1 || raw_s > 100 * DAY_S,
+    step_s = decimal ? decimalStep(raw_s) : DURATION_STEPS_S.find((step) => step >= raw_s);
   const ticks = [];
-  for (let index = 0; index <= Math.ceil(to / step - 1e-9); index += 1) ticks.push(index * step);
-  return ticks.length > 1 ? ticks : [0, step];
+  for (let index = 0; index <= Math.ceil(to_s / step_s - 1e-9); index += 1) ticks.push(index * step_s);
+  return ticks.length > 1 ? ticks : [0, step_s];
+}
+
+function decimalStep(raw_s) {
+  const unit = raw_s < 1 ? 1 : DAY_S,
+    power = 10 ** Math.floor(Math.log10(raw_s / unit) + 1e-9);
+  return unit * power * [1, 2, 5, 10].find((each) => each * power >= (raw_s / unit) * (1 - 1e-9));
 }
 
 /** Seconds at which a logarithmic axis of time is labelled. */
 export function secondTicks(from, to) {
-  return [0.001, 0.01, 0.1, 1, 10, 60, 600, 3600, 36000, 86400, 604800].filter((tick) => tick >= from && tick <= to);
+  const all = [0.001, 0.01, 0.1, 1, 10, 60, 600, 3600, 36000, DAY_S, 10 * DAY_S, 100 * DAY_S];
+  return all.filter((tick) => tick >= from && tick <= to);
 }
 
 /** Powers of ten within a stretch, ends included. */

@@ -1,15 +1,17 @@
 // What stands on top of the page: one plain sentence on the state of a feed, where the trouble sits, and what to do.
 // Pure: a moment in, words out. A sentence is a list of texts and of { name }, so that names can be isolated.
 
-import { age, near, share } from "./format.js";
-import { holdTrouble, missingTrouble, pauseWords, waitWords } from "./holding.js";
-import { behind_s, lastHeard } from "./reading.js";
+import { age, count, near, share } from "./format.js";
+import { holdTrouble, missingTrouble, pauseWords, silenceTrouble, waitWords } from "./holding.js";
+import { behind_s, isCurrent, lastHeard } from "./reading.js";
 
 const WAITS_TOO_LONG_S = 5; // at ingest, decode and journal: an answer takes milliseconds, so this is trouble
 const SINK_TOO_LONG_S = 15; // a sink that gathers for some seconds before it writes is still well
 const LATE_FACTOR = 1.5; // the late share of the last minute, against its target
 const LATE_WITHOUT_TARGET = 0.05; // the late share of the last seconds that is worth a word where none is wanted
 const QUIET_AFTER_S = 30; // nothing received for so long is worth a word
+const REPEATS_AT_LEAST = 10; // in the last minute: a single body that is sent again is what ids are for
+const REPEATS_SHARE = 0.95; // of all that came in the last minute
 const PAST = { is: "was", "has been": "had been", "it waits": "it waited" };
 const LEVELS = ["fine", "watch", "bad"];
 
@@ -20,12 +22,15 @@ export function speak(moment, zone = "utc") {
     ...sinkTrouble(moment, zone),
     ...holdTrouble(moment, zone),
     ...missingTrouble(moment),
+    ...repeatTrouble(moment),
+    ...silenceTrouble(moment),
     ...lateTrouble(moment),
   ];
   found.sort((one, other) => LEVELS.indexOf(other.level) - LEVELS.indexOf(one.level));
-  const worst = found[0] ?? wellWords(moment);
-  const says = [...currency(moment, zone), ...worst.says];
-  const others = found.slice(1).filter((each) => each.level !== "fine");
+  const worst = found.find((each) => !each.aside) ?? wellWords(moment);
+  if (worst.quiet) found.push(worst);
+  const says = worst.but ? currentBut(moment, zone, worst) : [...currency(moment, zone), ...worst.says];
+  const others = found.filter((each) => each !== worst && (each.level !== "fine" || each.aside));
   for (const other of others.slice(0, 2)) says.push(...other.says);
   return {
     level: worst.level,
@@ -33,13 +38,14 @@ export function speak(moment, zone = "utc") {
     says: moment.past ? says.map(inThePast) : says,
     next: moment.past ? ["This is how it was. To act, go back to live."] : worst.next,
     offers: moment.past ? [] : (worst.offers ?? []),
+    upstream: found.find((each) => each.level !== "fine" && each.sign)?.sign ?? null, // in a word, for the strip
     places: [...new Set(found.filter((each) => each.level !== "fine").map((each) => each.place))],
     key: [
       moment.feed,
       moment.state,
       worst.level,
       worst.place,
-      ...(worst.level === "fine" ? [] : [moment.hold.why, moment.hold.source]),
+      ...(worst.level === "fine" ? [] : (worst.about ?? [moment.hold.why, moment.hold.source])),
     ].join("|"),
   };
 }
@@ -66,6 +72,14 @@ function currency(moment, zone) {
   }
   if (moment.past) return [`At ${near(moment.now_ms, moment.now_ms, zone)} the output was ${age(behind)} behind. `];
   return [moment.watermark_ms > moment.now_ms ? "Output is current. " : `Output is ${age(behind)} behind now. `];
+}
+
+/** An output without trouble of its own, and what is amiss all the same. */
+function currentBut(moment, zone, worst) {
+  const out = moment.hold?.why === "nothing_held" && moment.held.events === 0;
+  if (moment.past || moment.state === "failed" || !(out || isCurrent(moment)))
+    return [...currency(moment, zone), ...worst.says];
+  return [out ? "All that came is out, but " : "Output is current, but ", ...worst.says];
 }
 
 /** Trouble in this process: a failed feed, books that do not balance, a journal that does not answer. */
@@ -205,6 +219,28 @@ function lateWithoutTarget(moment) {
   ];
 }
 
+/** Nearly all that comes has come before: the books are right, and yet nothing new comes out. */
+function repeatTrouble(moment) {
+  const { received, duplicate } = moment.minute ?? {};
+  if (!(duplicate >= REPEATS_AT_LEAST) || duplicate < received * REPEATS_SHARE) return [];
+  return [
+    {
+      level: "watch",
+      place: "upstream",
+      says: [
+        `Nearly all that comes is a repeat (${count(duplicate)} in the last minute): `,
+        "does a sender use its ids again? ",
+      ],
+      next: [
+        "Look at who sends: a counter that began anew after a restart gives new events old ids, and they are dropped. ",
+        "If a sender only sends again what it was not sure of, wait: repeats do no harm.",
+      ],
+      about: ["repeats"],
+      sign: "repeats",
+    },
+  ];
+}
+
 function capitalised(text) {
   return text.slice(0, 1).toUpperCase() + text.slice(1);
 }
@@ -220,8 +256,11 @@ function wellWords(moment) {
       next: [`Send events to /v1/feeds/${moment.feed}/events.`],
     };
   }
-  if (quiet_s !== null && quiet_s > QUIET_AFTER_S && (moment.rates?.received_per_s ?? 0) === 0) {
+  const nobody = moment.silence && moment.silence.known > 0 && moment.silence.active === 0;
+  if (quiet_s > QUIET_AFTER_S ? (moment.rates?.received_per_s ?? 0) === 0 : nobody) {
     return {
+      quiet: true,
+      sign: nobody ? `${count(moment.silence.sources)} silent` : null,
       level: "watch",
       place: "upstream",
       says: [`Nothing has come for ${age(quiet_s)}. `],

@@ -1,6 +1,6 @@
 // Two pictures without an axis of time: what every slack would give, and how long the open runs are. Draws only.
 
-import { age, brief, share } from "./format.js";
+import { age, brief, oneUnit, share } from "./format.js";
 import { logarithmic, powerTicks, secondTicks } from "./scales.js";
 import { crisp, line, palette } from "./surface.js";
 
@@ -45,7 +45,7 @@ export function drawSlacks(surface, rows, look) {
   const context = surface.begin(height);
   if (context === null) return null;
   const colour = palette(),
-    left = Math.round(em * 4.8),
+    left = gutter(surface, 0.9, powerTicks(SHARE_LEAST, 1).map(share)),
     right = surface.width - 14;
   const known = within(
     (rows ?? []).filter((row) => row[0] > 0 && row[1] !== null),
@@ -81,6 +81,12 @@ export function drawSlacks(surface, rows, look) {
   return { x, rows: known };
 }
 
+/** Where a picture begins, right of its labels. */
+function gutter(surface, size, labels) {
+  surface.font(size);
+  return Math.ceil(Math.max(28, ...labels.map((label) => surface.measure(label) + 9)));
+}
+
 function drawAxes(surface, context, box, x, y, [least_s, most_s], colour) {
   surface.font(0.9);
   context.lineWidth = 1;
@@ -95,9 +101,11 @@ function drawAxes(surface, context, box, x, y, [least_s, most_s], colour) {
   let free = -Infinity;
   for (const tick of secondTicks(least_s, most_s)) {
     if (x(tick) < free) continue;
+    const half = surface.measure(oneUnit(tick)) / 2;
     free = x(tick) + box.em * 3.6;
     line(context, crisp(x(tick)), box.top, crisp(x(tick)), box.bottom);
-    context.fillText(age(tick), Math.max(box.left + 8, Math.min(box.right - 14, x(tick))), box.bottom + box.em);
+    const middle = Math.max(half, Math.min(surface.width - half - 1, x(tick)));
+    context.fillText(oneUnit(tick), middle, box.bottom + box.em);
   }
   context.fillText("slack →", (box.left + box.right) / 2, box.bottom + box.em * 2.4);
 }
@@ -134,7 +142,7 @@ export function drawRuns(surface, lengths, past) {
   if (context === null) return;
   const colour = palette(),
     most = Math.max(10, ...lengths),
-    left = Math.round(em * 3.6);
+    left = gutter(surface, 0.95, lengths.map(brief));
   const x = logarithmic(0.8, most, left, surface.width - 10);
   surface.font(0.95);
   context.textAlign = "right";

@@ -1,13 +1,16 @@
 // The pictures on the arrival clock, one below the other on one axis: how far behind the output is and who held it, the
 // lateness of what came, and the share that came late. Draws only; what is drawn comes from a record's columns.
 
-import { age, isolated, share, shown, timeOfDay } from "./format.js";
+import { isolated, oneUnit, share, shown, timeOfDay } from "./format.js";
 import { flag } from "./glyphs.js";
-import { lastAtOrBelow, linear, linearTicks, logarithmic, powerTicks, secondTicks, timeTicks } from "./scales.js";
+import { durationTicks, lastAtOrBelow, linear, logarithmic, powerTicks, secondTicks, timeTicks } from "./scales.js";
 import { crisp, hatch, line, palette } from "./surface.js";
 
-const LEFT = 62,
+const LEFT_AT_LEAST = 40,
+  LABEL_GAP = 7,
   RIGHT = 12,
+  LABEL_SIZE = 0.9, // of the page's small text
+  SHARE_LEAST = 1e-5, // the foot of the axis of the late share
   STRIP = 22,
   ON_TIME = 9,
   BRIEF_PX = 8,
@@ -29,9 +32,34 @@ export const HOLDS = {
   stopped: ["stopped", "gap"],
 };
 
-/** The frame that all three share: the axis of the arrival clock. */
-export function frame(width, look, em) {
-  const left = Math.round(Math.max(LEFT, em * 4.6));
+/** The labels of the levels: of how far behind, of the lateness, of the share; in the order of the pictures. */
+function levelsOf(record, look) {
+  const [first, last] = span(record, look),
+    target = look.steering?.late_share_target ?? null;
+  let behind_s = 1,
+    late = Math.max(target ? target * 4 : 0, 0.001);
+  for (let index = first; index <= last; index += 1) {
+    behind_s = Math.max(behind_s, record.behind_s[index] ?? 0);
+    late = Math.max(late, record.late_share[index] ?? 0);
+  }
+  const edges = record.edges_s,
+    least_s = edges.length < 2 ? null : edges.find((edge) => edge > 0) / 2,
+    most_s = least_s === null ? null : greatestLateness(record, look) * 2,
+    share_most = Math.min(1, late * 1.5);
+  return {
+    behind: { ticks: durationTicks(behind_s, 4), words: oneUnit },
+    lateness: { least_s, most_s, ticks: least_s === null ? [] : secondTicks(least_s, most_s), words: oneUnit },
+    share: { most: share_most, ticks: powerTicks(SHARE_LEAST, share_most), words: share },
+  };
+}
+
+/** The frame that all three share: the axis of the arrival clock, right of the widest label of any of them. */
+function frame(surface, record, look) {
+  const levels = levelsOf(record, look),
+    width = surface.width;
+  surface.font(LABEL_SIZE);
+  const labels = Object.values(levels).flatMap(({ ticks, words }) => ticks.map((tick) => surface.measure(words(tick))));
+  const left = Math.ceil(Math.max(LEFT_AT_LEAST, ...labels.map((label) => label + LABEL_GAP + 2)));
   return {
     left,
     right: width - RIGHT,
@@ -39,6 +67,7 @@ export function frame(width, look, em) {
     x: linear(look.from_ms, look.to_ms, left, width - RIGHT),
     from_ms: look.from_ms,
     to_ms: look.to_ms,
+    levels,
   };
 }
 
@@ -63,8 +92,8 @@ function drawClock(surface, context, place, y, zone, colour, top) {
   }
 }
 
-function drawLevels(surface, context, place, y, ticks, words, colour) {
-  surface.font(0.9);
+function drawLevels(surface, context, place, y, { ticks, words }, colour) {
+  surface.font(LABEL_SIZE);
   context.textAlign = "right";
   context.lineWidth = 1;
   let free = Infinity; // labels go up the axis; one that would touch the last is left out
@@ -74,7 +103,7 @@ function drawLevels(surface, context, place, y, ticks, words, colour) {
     free = y(tick) - surface.em * 1.15;
     line(context, place.left, crisp(y(tick)), place.right, crisp(y(tick)));
     context.fillStyle = colour.quiet;
-    context.fillText(words(tick), place.left - 7, y(tick));
+    context.fillText(words(tick), place.left - LABEL_GAP, y(tick));
   }
 }
 
@@ -144,13 +173,11 @@ export function drawBehind(surface, record, look) {
   const context = surface.begin(height);
   if (context === null) return null;
   const colour = palette(),
-    place = frame(surface.width, look, em),
-    [first, last] = span(record, place);
-  let most = 1;
-  for (let index = first; index <= last; index += 1) most = Math.max(most, record.behind_s[index] ?? 0);
-  const ticks = linearTicks(most, 4),
-    y = linear(0, ticks[ticks.length - 1], bottom, top);
-  drawLevels(surface, context, place, y, ticks, (tick) => age(tick), colour);
+    place = frame(surface, record, look),
+    [first, last] = span(record, place),
+    levels = place.levels.behind,
+    y = linear(0, levels.ticks[levels.ticks.length - 1], bottom, top);
+  drawLevels(surface, context, place, y, levels, colour);
   drawClock(surface, context, place, height - em, look.zone, colour, top);
   drawUnknown(surface, context, place, record, top, bottom, colour);
   inside(context, place, top - 4, bottom + 1, () => {
@@ -262,15 +289,13 @@ export function drawLateness(surface, record, look) {
   const context = surface.begin(height);
   if (context === null) return null;
   const colour = palette(),
-    place = frame(surface.width, look, em),
-    edges = record.edges_s;
+    place = frame(surface, record, look),
+    levels = place.levels.lateness;
   drawClock(surface, context, place, height - em, look.zone, colour, top);
-  if (edges.length < 2) return place;
-  const least = edges.find((edge) => edge > 0) / 2,
-    most = greatestLateness(record, place) * 2;
-  const y = logarithmic(least, most, bottom - ON_TIME, top);
+  if (levels.least_s === null) return place;
+  const y = logarithmic(levels.least_s, levels.most_s, bottom - ON_TIME, top);
   inside(context, place, top, bottom, () => drawCells(context, place, record, y, bottom, top, colour));
-  drawLevels(surface, context, place, y, secondTicks(least, most), (tick) => age(tick), colour);
+  drawLevels(surface, context, place, y, levels, colour);
   drawUnknown(surface, context, place, record, top, bottom, colour);
   const [first, last] = span(record, place);
   inside(context, place, top, bottom, () => {
@@ -328,16 +353,14 @@ export function drawShare(surface, record, look) {
   const context = surface.begin(height);
   if (context === null) return null;
   const colour = palette(),
-    place = frame(surface.width, look, em),
-    [first, last] = span(record, place);
+    place = frame(surface, record, look),
+    [first, last] = span(record, place),
+    levels = place.levels.share;
   const target = look.steering?.late_share_target ?? null,
     bound = look.steering?.bound_this_stretch ?? null;
-  let most = Math.max(target ? target * 4 : 0, 0.001);
-  for (let index = first; index <= last; index += 1) most = Math.max(most, record.late_share[index] ?? 0);
-  const least = 1e-5,
-    y = logarithmic(least, Math.min(1, most * 1.5), bottom, top);
+  const y = logarithmic(SHARE_LEAST, levels.most, bottom, top);
   drawClock(surface, context, place, height - em, look.zone, colour, top);
-  drawLevels(surface, context, place, y, powerTicks(least, Math.min(1, most * 1.5)), share, colour);
+  drawLevels(surface, context, place, y, levels, colour);
   drawUnknown(surface, context, place, record, top, bottom, colour);
   inside(context, place, top, bottom + 1, () => {
     if (target !== null && bound !== null) {
@@ -346,7 +369,7 @@ export function drawShare(surface, record, look) {
         place.left,
         y(target + bound),
         place.right - place.left,
-        y(Math.max(least, target - bound)) - y(target + bound),
+        y(Math.max(SHARE_LEAST, target - bound)) - y(target + bound),
       );
     }
     if (target !== null) {
