@@ -85,13 +85,15 @@ def test_it_works_on_a_root_that_cannot_be_written_to_and_without_rights(contain
 
 
 def test_the_acts_of_the_runbook_are_acts(tmp_path: Path) -> None:
-    """Each line that the runbook tells the reader to type is taken by the service."""
-    lines = re.findall(r"^    act (\S+) ('.*?')", RUNBOOK.read_text(), re.MULTILINE)
-    assert [path for path, _ in lines] == ["excuse", "drain", "slack", "sinks/sqlite/pause"]
-    lines += [("sinks/sqlite/resume", lines[-1][1])]
+    """Each line that the runbook tells the reader to type is taken by the service, and answered with a sentence."""
+    lines = re.findall(r"^    strandline (act \w+) \$U (.*)$", RUNBOOK.read_text(), re.MULTILINE)
+    acts = ["act excuse", "act drain", "act slack", "act slack", "act pause", "act resume"]
+    assert [act for act, _ in lines] == acts
     with Process(tmp_path, configuration(tmp_path)) as process:
         assert process.ask(PATH, events([1], "gw-1")).status == 200
-        for path, quoted in lines:
-            (body,) = shlex.split(quoted)
-            answer = process.ask(f"/v1/feeds/{FEED}/{path}", body.encode(), {"Content-Type": "application/json"})
-            assert answer.status == 204, (path, answer.content)
+        for act, rest in lines:
+            where = ["--feed", FEED, "--url", process.url]
+            command = [*act.split(), *where, *shlex.split(rest, comments=True)]
+            program = [sys.executable, "-m", "strandline.cli"]
+            done = subprocess.run([*program, *command], check=False, capture_output=True, text=True)
+            assert (done.returncode, done.stderr) == (0, "") and done.stdout.endswith(".\n"), (command, done)
