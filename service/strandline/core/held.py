@@ -36,8 +36,9 @@ class Fresh:
         """Put rows behind those that are there."""
         stop = self.rows + len(times)
         if stop > len(self._times):
-            self._times = np.concatenate((self._times[: self.rows], np.empty(2 * stop - self.rows, np.int64)))
-            self._refs = np.concatenate((self._refs[: self.rows], np.empty(2 * stop - self.rows, ROW)))
+            more = max(stop, min(2 * stop, FRESH_EVENTS)) - self.rows
+            self._times = np.concatenate((self._times[: self.rows], np.empty(more, np.int64)))
+            self._refs = np.concatenate((self._refs[: self.rows], np.empty(more, ROW)))
         self._times[self.rows : stop], self._refs[self.rows : stop] = times, refs
         if len(times) == 1:
             least = greatest = int(times[0])
