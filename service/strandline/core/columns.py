@@ -137,6 +137,13 @@ def empty_refs() -> Refs:
     return np.empty(0, dtype=REF)
 
 
+def distances(newest: int | Times, times: Times) -> Times:
+    """newest minus each time, at least 0 and at most TIME_MAX: int64 times can lie further apart than int64 holds."""
+    above = np.asarray(newest, dtype=np.int64)
+    result = (above.view(np.uint64) - np.minimum(times, above).view(np.uint64)).view(np.int64)
+    return np.where(result < 0, TIME_MAX, result)
+
+
 def as_rows(refs: Refs) -> Refs:
     """The same column without its fields (no copy)."""
     return refs.view(ROW)

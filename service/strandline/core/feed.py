@@ -13,7 +13,6 @@ from collections.abc import Mapping, Sequence
 from .columns import TIME_MIN, Arrival, Lane, RequestKey, require_consistent
 from .effects import Answer, Append, Buffer, Deliver, Effect, Outcome, Pause, Refuse, Sync
 from .records import (
-    VERSION,
     ActRecord,
     ExcuseRecord,
     IdleRecord,
@@ -34,13 +33,14 @@ from .records import (
     encode_mark,
     encode_small,
     frame_bytes,
+    require_readable,
 )
 from .saved import restore, save
 from .settings import Settings
 from .state import State
 from .view import View, hold_of, view_of
-from .watermark import Candidate, candidate
-from .within import drained
+from .watermark import Candidate
+from .within import drained, step
 
 RETRY_AFTER_S = 5
 
@@ -78,8 +78,7 @@ class Feed:
 
         Raises ValueError for a gap, or for a kind or version that this code cannot read.
         """
-        if version != VERSION:
-            raise ValueError(f"record version {version} at {lsn} is newer than this program (it reads {VERSION})")
+        require_readable(version, lsn)
         if lsn != self.next_lsn and self.next_lsn:
             raise ValueError(f"a record at position {lsn}, but what was folded ends at position {self.next_lsn}")
         end = lsn + frame_bytes(len(body))
@@ -199,8 +198,7 @@ class Feed:
         """A source promises that nothing older than time_ns will come from it."""
         effects: list[Effect] = []
         now = self._now(now_ns)
-        bound = now + self.state.settings.ahead_limit_ns
-        if time_ns > bound:
+        if time_ns > self.state.settings.newest_at_most_ns(now):
             detail = f"the promised time lies {(time_ns - now) / 1e9:.3f} s beyond the arrival clock"
             return [Refuse(token, "promise_ahead", detail, RETRY_AFTER_S)]
         number = self.state.sources.numbers.get(source)
@@ -298,15 +296,8 @@ class Feed:
             self._record(effects, IdleRecord(now))
         if state.outbox.undelivered_events > state.settings.undelivered_events_at_most:
             return
-        if state.own is not None:
-            moved = state.own.candidate(state, now)
-            if moved is not None:
-                self._set(effects, moved, now)
-            return
-        best = candidate(state.settings, state.slack_ns, state.sources, state.hold, now)
-        head = state.runs.head_ns
-        releasing = head is not None and head <= max(best.watermark_ns, state.watermark_ns)
-        if releasing or (best.watermark_ns > state.watermark_ns and not only_releasing):
+        best = step(state, now, only_releasing=only_releasing)
+        if best is not None:
             self._set(effects, best, now)
 
     def _set(self, effects: list[Effect], best: Candidate, now: int) -> None:

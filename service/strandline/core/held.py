@@ -11,7 +11,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from .columns import ROW, TIME_MAX, Refs, Times
+from .columns import TIME_MAX, Refs, Times
+from .gathered import Gathered
 from .merge import Merger
 from .runs import OpenRuns, Run, Strand, runs_of
 from .sorting import sorted_stably
@@ -20,47 +21,37 @@ FRESH_EVENTS = 1 << 15  # 24 bytes each, once the feed is that busy
 # All that is fresh is sorted for one mark while it is at most so many times what came since it was last sorted: a row
 # costs 6 ns to sort and a piece that is dealt 3 us.
 SORTED_TIMES = 16
-_FIRST_EVENTS = 256
 
 
-class Fresh:
-    """Rows in the order in which they came; the first `sorted` of them are in ascending time (and came before)."""
+class Fresh(Gathered):
+    """Gathered rows; the first `sorted` of them are in ascending time (and came before)."""
 
-    def __init__(self) -> None:
-        self.rows = self.sorted = 0
+    def __init__(self, room_at_most: int) -> None:
+        super().__init__(room_at_most)
+        self.sorted = 0
         self.least = TIME_MAX
         self.greatest = 0  # of no meaning without rows
-        self._times, self._refs = np.empty(_FIRST_EVENTS, np.int64), np.empty(_FIRST_EVENTS, ROW)
 
     def add(self, times: Times, refs: Refs) -> None:
         """Put rows behind those that are there."""
-        stop = self.rows + len(times)
-        if stop > len(self._times):
-            more = max(stop, min(2 * stop, FRESH_EVENTS)) - self.rows
-            self._times = np.concatenate((self._times[: self.rows], np.empty(more, np.int64)))
-            self._refs = np.concatenate((self._refs[: self.rows], np.empty(more, ROW)))
-        self._times[self.rows : stop], self._refs[self.rows : stop] = times, refs
         if len(times) == 1:
             least = greatest = int(times[0])
         else:
             least, greatest = int(times.min()), int(times.max())
         self.greatest = max(self.greatest, greatest) if self.rows else greatest
         self.least = min(self.least, least)
-        self.rows = stop
-
-    def copied(self) -> Strand:
-        """The rows as they came, as a copy."""
-        return Strand(self._times[: self.rows].copy(), self._refs[: self.rows].copy())
+        super().add(times, refs)
 
     def in_order(self) -> Strand:
         """The rows in ascending time, as a copy."""
-        times, order = sorted_stably(self._times[: self.rows])
-        return Strand(times, self._refs[: self.rows][order])
+        times, refs = self.strand
+        times, order = sorted_stably(times)
+        return Strand(times, refs[order])
 
     def take(self) -> Strand:
         """All rows as they came; none is left."""
         taken = self.copied()
-        self._forget()
+        self.forget()
         return taken
 
     def cut(self, watermark: int) -> Strand:
@@ -68,7 +59,7 @@ class Fresh:
         strand = self.in_order()
         place = int(strand.times.searchsorted(watermark, side="right"))
         rest = Strand(strand.times[place:], strand.refs[place:])
-        self._forget()
+        self.forget()
         if len(rest.times):
             self.add(*rest)
             self.sorted = self.rows
@@ -80,14 +71,17 @@ class Fresh:
             self.add(*strand)
         self.sorted = rows_sorted
 
-    def _forget(self) -> None:
-        self.rows = self.sorted = 0
+    def forget(self) -> None:
+        """No row is left."""
+        super().forget()
+        self.sorted = 0
         self.least = TIME_MAX
 
     def check(self) -> None:
         """Assert that bounds and the sorted part are what they are said to be."""
-        times = self._times[: self.rows]
-        assert 0 <= self.sorted <= self.rows <= len(self._times) == len(self._refs)
+        super().check()
+        times = self.strand.times
+        assert 0 <= self.sorted <= self.rows
         assert self.least == min(times.tolist(), default=TIME_MAX)
         assert not self.rows or self.greatest == int(times.max())
         first = times[: self.sorted]
@@ -99,8 +93,8 @@ class Held:
 
     def __init__(self, merger: Merger, *, fresh_events: int | None = None) -> None:
         """At most so many rows (else FRESH_EVENTS) gather before they are dealt; with 0 each arrival is, at once."""
-        self.open, self.fresh, self._merger = OpenRuns(), Fresh(), merger
         self._fresh_events = FRESH_EVENTS if fresh_events is None else fresh_events
+        self.open, self.fresh, self._merger = OpenRuns(), Fresh(self._fresh_events), merger
 
     def hold(self, times: Times, refs: Refs) -> None:
         """Hold an arrival's rows (refs as ROWs)."""

@@ -2,8 +2,9 @@
 
 Fresh rows gather as they came. When there are many they become a *lot*: rows by source, then time, then arrival, with
 columns by source number that say where a source's rows begin and how many of them are gone. A mark looks at those
-sources only that it moves, at all of them at once: nothing here takes a step of Python for a source or an event, and
-nothing costs what is held. No mark is decided here; what is released does not depend on how rows lie.
+sources only that it moves, at all of them at once, and through what is fresh: nothing here takes a step of Python for
+a source or an event, and no mark looks through the lots, save for what `hold_at_most` asks for. No mark is decided
+here; what is released does not depend on how rows lie.
 """
 
 from __future__ import annotations
@@ -15,6 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .columns import ROW, Refs, Times, as_refs, as_rows
+from .gathered import ROWS_FIRST, Gathered
 from .runs import Run, Strand, joined
 from .sorting import sorted_stably
 
@@ -119,28 +121,16 @@ class HeldBySource:
         """At least so many rows (else LOT_EVENTS) gather before they become a lot."""
         self.lots: list[Lot] = []
         self._fresh_events = LOT_EVENTS if fresh_events is None else fresh_events
-        self._times, self._refs = np.empty(256, np.int64), np.empty(256, ROW)
-        self._rows = 0
-
-    @property
-    def _fresh(self) -> Strand:
-        """The fresh rows, as they came (views)."""
-        return Strand(self._times[: self._rows], self._refs[: self._rows])
+        self.fresh = Gathered()
 
     # ---- in -------------------------------------------------------------------------------------------------------
 
     def hold(self, times: Times, refs: Refs) -> None:
         """Hold an arrival's rows (refs as ROWs)."""
-        if self._rows and self._rows + len(times) > max(self._fresh_events, self.held // FRESH_PART):
+        rows = self.fresh.rows
+        if rows and rows + len(times) > max(self._fresh_events, self.held // FRESH_PART):
             self._seal()
-        stop = self._rows + len(times)
-        if stop > len(self._times):
-            size = 2 * stop
-            for name, column in (("_times", np.empty(size, np.int64)), ("_refs", np.empty(size, ROW))):
-                column[: self._rows] = getattr(self, name)[: self._rows]
-                setattr(self, name, column)
-        self._times[self._rows : stop], self._refs[self._rows : stop] = times, refs
-        self._rows = stop
+        self.fresh.add(times, refs)
 
     def take_over(self, strands: Sequence[Strand]) -> None:
         """Hold what was held otherwise, in whatever order."""
@@ -148,10 +138,10 @@ class HeldBySource:
 
     def _seal(self) -> None:
         """What is fresh becomes a lot; a lot that holds less than the next one is joined with it."""
-        self.lots.append(Lot(*self._fresh))
-        self._rows = 0
-        if len(self._times) > 8 * self._fresh_events + 256:
-            self._times, self._refs = np.empty(256, np.int64), np.empty(256, ROW)
+        self.lots.append(Lot(*self.fresh.strand))
+        if self.fresh.room > 8 * self._fresh_events + ROWS_FIRST:
+            self.fresh = Gathered()  # room of a time when far more was held is given back
+        self.fresh.forget()
         index = len(self.lots) - 2
         while index >= 0:
             one, other = self.lots[index : index + 2]
@@ -180,7 +170,7 @@ class HeldBySource:
         return _in_order(*joined(strands))
 
     def _cut_fresh(self, at: Times, bound: int) -> Strand | None:
-        times, refs = self._fresh
+        times, refs = self.fresh.strand
         rows = np.flatnonzero(times <= bound)
         rows = rows[times[rows] <= at[as_refs(refs[rows])["source"]]] if len(rows) else rows
         if not len(rows):
@@ -188,9 +178,7 @@ class HeldBySource:
         strand = Strand(times[rows], refs[rows])
         stays = np.ones(len(times), dtype=np.bool_)
         stays[rows] = False
-        kept = np.flatnonzero(stays)
-        self._times[: len(kept)], self._refs[: len(kept)] = times[kept], refs[kept]
-        self._rows = len(kept)
+        self.fresh.keep(np.flatnonzero(stays))
         return strand
 
     @staticmethod
@@ -204,7 +192,7 @@ class HeldBySource:
     @property
     def held(self) -> int:
         """Events held."""
-        return self._rows + sum(lot.live for lot in self.lots)
+        return self.fresh.rows + sum(lot.live for lot in self.lots)
 
     @property
     def head_ns(self) -> int | None:
@@ -225,8 +213,9 @@ class HeldBySource:
 
     def sample(self, rows_at_most: int) -> Strand:
         """Rows spread evenly over all that is held, in ascending time: no more than so many, save for a few a lot."""
-        step = -(-(self._rows + sum(len(lot.times) for lot in self.lots)) // rows_at_most) or 1
-        strands = [Strand(self._fresh.times[::step], self._fresh.refs[::step])]
+        step = -(-(self.fresh.rows + sum(len(lot.times) for lot in self.lots)) // rows_at_most) or 1
+        times, refs = self.fresh.strand
+        strands = [Strand(times[::step], refs[::step])]
         for lot in self.lots:
             rows = np.arange(0, len(lot.times), step)
             rows = rows[rows >= lot.heads[as_refs(lot.refs[rows])["source"]]]
@@ -236,7 +225,7 @@ class HeldBySource:
     def rows_before(self, place: int) -> tuple[Times, NDArray[np.uint32]]:
         """Times and source numbers of what is held of lines before this place in the journal."""
         strands = [lot.strand() for lot in self.lots if lot.place_least < place]
-        times, refs = joined([*strands, self._fresh])
+        times, refs = joined([*strands, self.fresh.strand])
         found = np.flatnonzero(as_refs(refs)["place"] < place)
         return times[found], as_refs(refs[found])["source"]
 
@@ -245,8 +234,9 @@ class HeldBySource:
         return _by_arrival(*self._all())
 
     def _all(self) -> Strand:
-        strand = joined([*(lot.strand() for lot in self.lots), self._fresh])
-        return strand if self.lots else Strand(strand.times.copy(), strand.refs.copy())
+        if not self.lots:
+            return self.fresh.copied()
+        return joined([*(lot.strand() for lot in self.lots), self.fresh.strand])
 
     @property
     def runs(self) -> list[Run]:
@@ -260,7 +250,7 @@ class HeldBySource:
 
     def lengths(self) -> list[int]:
         """Events in each lot, and those that are fresh."""
-        return [*(lot.live for lot in self.lots), *([self._rows] if self._rows else [])]
+        return [*(lot.live for lot in self.lots), *([self.fresh.rows] if self.fresh.rows else [])]
 
     @property
     def comparisons(self) -> int:
@@ -269,15 +259,16 @@ class HeldBySource:
 
     def check(self) -> None:
         """Assert the invariants of lots and fresh rows: what is in a later one came later."""
-        assert self._rows <= len(self._times) == len(self._refs) and len(self.lots) <= LOTS_AT_MOST + 1
+        self.fresh.check()
+        assert len(self.lots) <= LOTS_AT_MOST + 1
         last = -1
         for lot in self.lots:
             lot.check()
             places = as_refs(lot.refs)["place"]
             assert lot.place_least > last
             last = int(places.max())
-        places = as_refs(self._refs[: self._rows])["place"]
-        assert not self._rows or (int(places[0]) > last and np.all(places[1:] > places[:-1]))
+        places = as_refs(self.fresh.strand.refs)["place"]
+        assert not len(places) or (int(places[0]) > last and np.all(places[1:] > places[:-1]))
 
 
 def _in_order(times: Times, refs: Refs) -> Strand:

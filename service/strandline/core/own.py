@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import NO_SOURCE, TIME_MAX, TIME_MIN, Times
+from .columns import NO_SOURCE, TIME_MIN, Times, distances
 from .held_by_source import HeldBySource
 from .records import Cause, Mark
 from .runs import Strand
@@ -87,10 +87,7 @@ class OwnWatermarks:
     def behind(self, sources: NDArray[np.uint32], times: Times) -> Times:
         """How far each row stands behind the newest event (or promise) of its own source, at least 0."""
         known = self._sources
-        newest = np.maximum(known.newest[sources], known.vouched[sources])
-        below = np.minimum(times, newest)
-        distances = (newest.view(np.uint64) - below.view(np.uint64)).view(np.int64)
-        return np.where(distances < 0, TIME_MAX, distances)
+        return distances(np.maximum(known.newest[sources], known.vouched[sources]), times)
 
     # ---- marks ----------------------------------------------------------------------------------------------------
 

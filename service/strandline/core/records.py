@@ -32,6 +32,12 @@ _HAS_IDENTITIES = 1
 _HAS_LINE_NUMBERS = 2
 
 
+def require_readable(version: int, lsn: int) -> None:
+    """Raise ValueError for a record that a newer program wrote."""
+    if version != VERSION:
+        raise ValueError(f"record version {version} at {lsn} is newer than this program (it reads {VERSION})")
+
+
 def frame_bytes(body_bytes: int) -> int:
     """Journal bytes that a record with a body of this size takes: header, body, zeros up to a multiple of 8."""
     return FRAME_HEADER_BYTES + ((body_bytes + 7) & ~7)
@@ -189,6 +195,14 @@ class ArrivalBody:
     payload_place: int
     faults_place: int
 
+    def line_of(self, row: int) -> int:
+        """The number from 1 of the request's line that an event came on."""
+        return row + 1 if self.line_numbers is None else int(self.line_numbers[row])
+
+    def place_of(self, row: int) -> int:
+        """Where in the journal an event's line starts."""
+        return self.payload_place + int(self.lengths[:row].sum(dtype=np.int64)) + row
+
 
 SMALL_KINDS = {
     Kind.SETTINGS: SettingsRecord,
@@ -302,6 +316,18 @@ def arrival_body(arrival: Arrival, arrived_ns: int, lsn: int) -> ArrivalBody:
         payload_place=place,
         faults_place=place + len(arrival.payload),
     )
+
+
+def arrival_column(body: Buffer, name: Literal["times", "identities"]) -> tuple[memoryview | None, int]:
+    """One column of an arrival record as its bytes, 8 an event, and how many faulty lines there are; None: no such one.
+
+    For a search: nothing else is looked at. Raises struct.error.
+    """
+    _, events, faults, flags, _, _ = _ARRIVAL.unpack_from(body)
+    if name == "identities" and events and not flags & _HAS_IDENTITIES:
+        return None, faults
+    begin = _ARRIVAL.size + (8 * events if name == "identities" else 0)
+    return memoryview(body)[begin : begin + 8 * events], faults
 
 
 def decode_arrival(body: Buffer, lsn: int) -> ArrivalBody:

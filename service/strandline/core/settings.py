@@ -36,6 +36,10 @@ class Settings(msgspec.Struct, frozen=True, forbid_unknown_fields=True):
     # Within what order is kept; left out: the feed as a whole, as in journals of before it could be chosen.
     order: Literal["source"] | UnsetType = UNSET
 
+    def newest_at_most_ns(self, now_ns: int) -> int:
+        """What lies beyond this time at an instant of the arrival clock is `ahead`: no event of this feed then."""
+        return now_ns + self.ahead_limit_ns
+
     def __post_init__(self) -> None:
         """Raises ValueError for settings that contradict each other."""
         if self.order == "source" and (self.clock == "arrival" or self.late_share is not None):

@@ -32,7 +32,7 @@ class Touched:
         """These were touched, of so many sources that there are."""
         self.notes += 1
         self._count += len(numbers)
-        if self.everyone or (self._count > sources and len(numbers) > 1):
+        if self.everyone or self._count > sources:
             self.touch_all()
         else:
             self.pieces.append(numbers)
@@ -49,6 +49,10 @@ class Touched:
 
     def __bool__(self) -> bool:
         return self.everyone or bool(self.pieces)
+
+    def check(self, sources: int) -> None:
+        """Assert that no more is kept than there are sources, however long nobody asks."""
+        assert sum(map(len, self.pieces)) <= sources and not (self.everyone and self.pieces)
 
 
 class Sources:
@@ -258,6 +262,8 @@ class Sources:
         assert np.array_equal(self._by_newest.values()[:count], self._waited_for(np.arange(count)))
         assert self.broken_events == int(self.broken[:count].sum())
         assert self._promising == bool(np.any(self.promised[:count] != NEVER))
+        if self.touched is not None:
+            self.touched.check(count)
 
 
 def _grown(column: NDArray[Any], size: int, fill: int | bool) -> NDArray[Any]:

@@ -25,6 +25,7 @@ from .columns import (
     Times,
     as_refs,
     as_rows,
+    distances,
     empty_refs,
     empty_times,
     greatest_of,
@@ -60,8 +61,8 @@ from .seen import Seen
 from .settings import Settings
 from .slack import Slack, slack_of
 from .sources import Sources
-from .watermark import HoldBound, basis_of
-from .within import check_order, keep_order, late_rows, release, stood
+from .watermark import HoldBound
+from .within import behind_of, check_order, keep_order, late_rows, note_held, release, stood
 
 
 @dataclass(slots=True)
@@ -193,7 +194,7 @@ class State:
             times, refs, duplicate = self._without_repeats(times, refs, identities)
         if len(times):
             self._note_lateness(times)
-        events, behind = len(times), self._behind(times, refs, body.arrived_ns)
+        events, behind = len(times), behind_of(self, times, refs, body.arrived_ns)
         if len(words):
             self.sources.note_broken(word_refs["source"], words)
             self.sources.hear(word_refs["source"], words, body.arrived_ns)
@@ -242,17 +243,16 @@ class State:
         self, body: ArrivalBody, times: Times, refs: Refs
     ) -> tuple[Times, Refs, NDArray[np.uint64] | None, list[QuarantineEntry]]:
         identities = body.identities
-        bound = body.arrived_ns + self.settings.ahead_limit_ns
+        bound = self.settings.newest_at_most_ns(body.arrived_ns)
         if greatest_of(times) <= bound:
             return times, refs, identities, []
         ahead = times > bound
         found = []
         for index in np.flatnonzero(ahead).tolist():
-            line = index + 1 if body.line_numbers is None else int(body.line_numbers[index])
             seconds = (int(times[index]) - body.arrived_ns) / 1e9
             detail = f"the event time lies {seconds:.3f} s beyond the arrival clock"
             ref = refs[index]
-            found.append(QuarantineEntry(line, "ahead", detail, int(ref["place"]), int(ref["length"])))
+            found.append(QuarantineEntry(body.line_of(index), "ahead", detail, int(ref["place"]), int(ref["length"])))
         return *_pick(times, refs, ~ahead), None if identities is None else identities[~ahead], found
 
     def _without_late(
@@ -272,19 +272,11 @@ class State:
         if oldest >= newest or len(times) == 1:
             self.figures.lateness.add_same(min(max(newest - oldest, 0), TIME_MAX), len(times))
         else:
-            self.figures.lateness.add(_distances(newest, times))
-
-    def _behind(self, times: Times, refs: Refs, arrived_ns: int) -> NDArray[np.int64] | None:
-        """How far each event stands behind what the watermark follows, before the slack; None where none does."""
-        if self.own is not None:
-            return self.own.behind(refs["source"], times)
-        basis = arrived_ns if self.settings.clock == "arrival" else basis_of(self.sources)
-        return None if not len(times) or least_of(times) >= basis else _distances(basis, times)
+            self.figures.lateness.add(distances(newest, times))
 
     def _hold(self, times: Times, refs: Refs, body: ArrivalBody) -> None:
         self.arrivals.note(body.payload_place, body.arrived_ns, len(times))
-        if self.own is None:
-            self.hold.note(body.arrived_ns, greatest_of(times))
+        note_held(self, times, body.arrived_ns)
         self.runs.hold(times, as_rows(refs))
         if len(times) == 1:
             self.figures.run_length.add_same(1, 1)
@@ -365,12 +357,6 @@ def _faulty(body: ArrivalBody) -> list[QuarantineEntry]:
         entries.append(QuarantineEntry(row.line, row.reason, row.detail, place, row.length))
         place += row.length
     return entries
-
-
-def _distances(newest: int, times: Times) -> NDArray[np.int64]:
-    """newest minus each time, at least 0 and at most TIME_MAX: int64 times can lie further apart than int64 holds."""
-    distances = (np.uint64(newest % 2**64) - np.minimum(times, newest).view(np.uint64)).view(np.int64)
-    return np.where(distances < 0, TIME_MAX, distances)
 
 
 def _bounds(lengths: NDArray[np.uint32], events_at_most: int, bytes_at_most: int) -> list[int]:

@@ -6,9 +6,9 @@ fold is that of `state`, so what is said here is what the feed decided; nothing 
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,18 +17,17 @@ from .columns import NO_SOURCE, Batch, as_refs
 from .effects import Buffer
 from .outbox import LANES
 from .records import (
-    _ARRIVAL,
-    _HAS_IDENTITIES,
-    VERSION,
     Cause,
     KeyRecord,
     Kind,
     Mark,
     SettingsRecord,
+    arrival_column,
     decode_arrival,
     decode_mark,
     decode_small,
     frame_bytes,
+    require_readable,
 )
 from .runs import Run
 from .state import State
@@ -67,7 +66,7 @@ class Stood:
 
 @dataclass(frozen=True, slots=True)
 class Held:
-    """In an open run: its number from 1 in order of opening, of how many, events before it in the run, run's length."""
+    """In a run of `state.runs.runs`: its number from 1, the oldest first, of how many; events before it; its length."""
 
     run: int
     runs: int
@@ -140,8 +139,7 @@ class Follower:
         self, kind: int, version: int, body: Buffer, lsn: int, targets: Sequence[Target] = ()
     ) -> Sequence[Followed]:
         """Take over the next record, and the targets in it. Raises ValueError for one that this code cannot read."""
-        if version != VERSION:
-            raise ValueError(f"record version {version} at {lsn} is newer than this program (it reads {VERSION})")
+        require_readable(version, lsn)
         end_lsn = lsn + frame_bytes(len(body))
         match Kind(kind):
             case Kind.ARRIVAL:
@@ -161,17 +159,22 @@ class Follower:
         decoded = decode_arrival(body, lsn)
         _, batches = self.state.fold_arrival(decoded, end_lsn)
         key, self._key = self._key, None
-        found = [Followed(target, self._stood, key, self._taken_for(target, batches)) for target in targets]
+        fates = self._taken_for(targets, batches)
+        found = [Followed(target, self._stood, key, fate) for target, fate in zip(targets, fates, strict=True)]
         self.open += [each for each in found if each.fate is None and not each.target.passing]
         return found
 
-    def _taken_for(self, target: Target, batches: Sequence[Batch]) -> Fate | None:
-        """What it was at its arrival; None where it is held now."""
-        for batch in batches:
-            if (fate := _fate_in(batch, target)) is not None:
-                return fate
-        assert target.time_ns is not None, "a line that is no event is in quarantine"
-        return None if held_at(self.state.runs.runs, target.time_ns, target.place) is not None else Duplicate()
+    def _taken_for(self, targets: Sequence[Target], batches: Sequence[Batch]) -> list[Fate | None]:
+        """What each was at its arrival; None where it is held now."""
+        fates: list[Fate | None] = [_fate_among(batches, target) for target in targets]
+        inside = [row for row, fate in enumerate(fates) if fate is None]
+        runs = self.state.runs.runs if inside else []  # made for who looks, at the cost of a sort: once for all
+        for row in inside:
+            time_ns = targets[row].time_ns
+            assert time_ns is not None, "a line that is no event is in quarantine"
+            if held_at(runs, time_ns, targets[row].place) is None:
+                fates[row] = Duplicate()
+        return fates
 
     def _mark(self, mark: Mark, lsn: int, end_lsn: int) -> None:
         stands_ns = self.state.watermark_ns
@@ -191,10 +194,8 @@ class Follower:
 
     def adopt(self, target: Target) -> Followed | None:
         """Follow a line from before the state was saved, if it still is there: held, or in a batch not delivered."""
-        outbox, fate = self.state.outbox, None
-        for lane in LANES:
-            for batch in outbox.undelivered(lane):
-                fate = fate or _fate_in(batch, target)
+        outbox = self.state.outbox
+        fate = _fate_among((batch for lane in LANES for batch in outbox.undelivered(lane)), target)
         found = Followed(target, None, None, fate)
         if fate is not None:
             return found
@@ -205,10 +206,16 @@ class Follower:
 
     def still_held(self) -> None:
         """Nothing more will be folded: say where those stand that are held."""
+        runs = self.state.runs.runs if self.open else []
         for followed in self.open:
             assert followed.target.time_ns is not None
-            followed.fate = held_at(self.state.runs.runs, followed.target.time_ns, followed.target.place)
+            followed.fate = held_at(runs, followed.target.time_ns, followed.target.place)
         self.open = []
+
+
+def _fate_among(batches: Iterable[Batch], target: Target) -> Released | Late | Quarantined | None:
+    """What the first batch that a line is in says of it."""
+    return next((fate for batch in batches if (fate := _fate_in(batch, target)) is not None), None)
 
 
 def _fate_in(batch: Batch, target: Target) -> Released | Late | Quarantined | None:
@@ -255,7 +262,8 @@ class Finder:
     def __init__(
         self, *, time_ns: int | None = None, identities: Sequence[int] = (), source: int | None = None
     ) -> None:
-        self._by_time, self._source = time_ns is not None, source
+        self._column: Literal["times", "identities"] = "identities" if time_ns is None else "times"
+        self._source = source
         self._wanted: Values = (
             np.array([time_ns], np.int64) if time_ns is not None else np.array(sorted(set(identities)), np.uint64)
         )
@@ -268,15 +276,12 @@ class Finder:
         Most records hold nothing that is wanted: for one value a search through the column's bytes tells so in 0.5 us,
         a comparison of columns in 2 us, decoding the record in 6 us.
         """
-        _, events, faults, flags, _, _ = _ARRIVAL.unpack_from(body)
-        has_identities = bool(flags & _HAS_IDENTITIES)
-        if events and not self._by_time and not has_identities:
+        column, faults = arrival_column(body, self._column)
+        if column is None:
             self.without_identities += 1
             return [], faults > 0
-        if not events or not len(self._wanted):
+        if not len(column) or not len(self._wanted):
             return [], faults > 0
-        begin = _ARRIVAL.size + (0 if self._by_time else 8 * events)
-        column = memoryview(body)[begin : begin + 8 * events]
         if self._only is not None and self._only not in bytes(column):
             return [], faults > 0
         values: Values = np.frombuffer(column, self._wanted.dtype)

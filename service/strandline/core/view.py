@@ -10,7 +10,6 @@ from dataclasses import asdict, dataclass
 import numpy as np
 
 from .columns import NO_SOURCE, TIME_MIN, Lane
-from .holds import SILENT_PART
 from .outbox import LANES
 from .records import ActRecord, Cause
 from .settings import SECOND_NS
@@ -33,7 +32,6 @@ HOLD_WHYS: dict[str, str] = {
     "sink_paused": "too much is released and not yet taken by this sink, which is paused; resume it",
     "stopped": "the service was stopped or restarted in this time; what was held waited for it",
 }
-SILENT_SHARE = 1 / SILENT_PART  # of idle_after: a holder that has been silent so long is called silent, not slow
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,7 +1,8 @@
 """Within what a feed keeps order: as a whole, or within each source only, and the change from one to the other.
 
 The feed as a whole has one watermark, `State.watermark_ns`. Within sources each has its own (`own.py`), and
-`State.watermark_ns` only tells observers where the source furthest behind stands. This is the one place that chooses.
+`State.watermark_ns` only tells observers where the source furthest behind stands. Whatever is decided differently is
+chosen here; observers and snapshots ask whether there is a `State.own`.
 """
 
 from __future__ import annotations
@@ -11,13 +12,13 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import NO_SOURCE, Refs, Times, least_of
+from .columns import NO_SOURCE, Refs, Times, distances, greatest_of, least_of
 from .held import Held
 from .held_by_source import HeldBySource
 from .own import OwnWatermarks
 from .records import Cause, Mark
 from .runs import Strand
-from .watermark import Candidate
+from .watermark import Candidate, basis_of, candidate
 
 if TYPE_CHECKING:
     from .state import State
@@ -82,12 +83,39 @@ def late_rows(state: State, times: Times, refs: Refs) -> NDArray[np.bool_] | Non
     return times < state.watermark_ns if least_of(times) < state.watermark_ns else None
 
 
+def behind_of(state: State, times: Times, refs: Refs, arrived_ns: int) -> Times | None:
+    """How far each event stands behind what its watermark follows, before the slack; None where none does."""
+    if state.own is not None:
+        return state.own.behind(refs["source"], times)
+    basis = arrived_ns if state.settings.clock == "arrival" else basis_of(state.sources)
+    return None if not len(times) or least_of(times) >= basis else distances(basis, times)
+
+
+def note_held(state: State, times: Times, arrived_ns: int) -> None:
+    """Rows of an arrival (at least one) are held from now on: `hold_at_most` will ask for them."""
+    if state.own is None:  # else the arrivals alone tell what is due
+        state.hold.note(arrived_ns, greatest_of(times))
+
+
 def stood(state: State, late: Refs) -> tuple[int, Times | None]:
     """The watermark that late rows came behind; where sources have their own, the greatest of these, and each."""
     if state.own is None:
         return state.watermark_ns, None
     each = state.own.at[late["source"]]
     return int(each.max()), each
+
+
+def step(state: State, now_ns: int, *, only_releasing: bool) -> Candidate | None:
+    """What the next mark says; None where it would move nothing, or `only_releasing`: where it would release nothing.
+
+    Where sources have their own watermarks, what a mark releases is known once it is folded: any that moves sets one.
+    """
+    if state.own is not None:
+        return state.own.candidate(state, now_ns)
+    best = candidate(state.settings, state.slack_ns, state.sources, state.hold, now_ns)
+    head = state.runs.head_ns
+    releasing = head is not None and head <= max(best.watermark_ns, state.watermark_ns)
+    return best if releasing or (best.watermark_ns > state.watermark_ns and not only_releasing) else None
 
 
 def release(state: State, mark: Mark) -> Strand:
