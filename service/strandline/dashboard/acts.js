@@ -78,7 +78,7 @@ function tidy(id) {
 }
 
 /** The words on a button that opens an act's dialog. */
-export function offerWords(act, subject) {
+function offerWords(act, subject) {
   const words = {
     excuse: "Excuse ",
     drain: "Drain ",
@@ -213,7 +213,7 @@ export function askToken(why) {
   byId("token-value").value = "";
   const dialog = byId("token");
   if (!dialog.open) dialog.showModal();
-  dialog.addEventListener("cancel", (event) => event.preventDefault());
+  dialog.oncancel = (event) => event.preventDefault(); // one handler, however often it is asked
   return new Promise((resolve) => {
     byId("token-form").addEventListener(
       "submit",

@@ -6,7 +6,7 @@ export const LANES_AT_ONCE = [8, 20, 50, 100];
 const SEARCH_AT_MOST = 256;
 
 /** What a page shows when its address says nothing. `window_s` null: as far as the output is behind. */
-export function plainView() {
+function plainView() {
   return { feed: null, window_s: null, at_ms: null, search: "", lanes: 20, table: false, zone: "utc" };
 }
 

@@ -14,6 +14,11 @@ export class Problem extends Error {
     this.title = title;
     this.detail = detail;
   }
+
+  /** Whether the same question may be answered a little later: unreachable, too many requests, or a server's fault. */
+  get mayPass() {
+    return this.status === 0 || this.status === 429 || this.status >= 500;
+  }
 }
 
 /** Requests with the token of this tab. `askToken(why)` resolves to a token once a person has given one. */
@@ -58,7 +63,12 @@ export class Api {
   }
 
   async json(path, options) {
-    return (await this.fetch(path, options)).json();
+    const response = await this.fetch(path, options);
+    try {
+      return await response.json();
+    } catch {
+      throw new Problem(0, "The answer broke off", "The service may be restarting.");
+    }
   }
 
   /** An act: a POST with a JSON body; its answer says nothing but that it is durable. */
@@ -82,7 +92,7 @@ async function problemOf(response) {
 }
 
 /** Cuts a text/event-stream into events. Pure; feed it text as it comes. */
-export class EventReader {
+class EventReader {
   #rest = "";
 
   /** The events that are whole now: [{ event, data }]. */

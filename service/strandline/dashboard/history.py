@@ -103,20 +103,20 @@ def _merge_lanes(rows: Rows, group: NDArray[np.intp], result: Rows) -> None:
     keys = (np.repeat(group, LANES)[used].astype(np.int64) << 32) | sources[used]
     order = np.argsort(keys, kind="stable")
     keys, newest = keys[order], rows["lane_newest_ns"].ravel()[used][order]
-    first = _starts(keys)
+    first = starts_of(keys)
     counts = np.diff(np.concatenate((first, [len(keys)])))
     keys, greatest = keys[first], np.maximum.reduceat(newest, first)
     groups = keys >> 32
     best = np.lexsort((keys, -counts, groups))
     groups = groups[best]
-    begins = _starts(groups)
+    begins = starts_of(groups)
     rank = np.arange(len(best)) - np.repeat(begins, np.diff(np.concatenate((begins, [len(best)]))))
     kept = rank < LANES
     result["lane_source"][groups[kept], rank[kept]] = (keys[best] & NO_SOURCE)[kept]
     result["lane_newest_ns"][groups[kept], rank[kept]] = greatest[best][kept]
 
 
-def _starts(groups: NDArray[np.int64]) -> NDArray[np.intp]:
+def starts_of(groups: NDArray[np.int64]) -> NDArray[np.intp]:
     """Where a group of equal neighbours begins."""
     return np.flatnonzero(np.concatenate(([True], groups[1:] != groups[:-1])))
 
@@ -142,6 +142,11 @@ class Ring:
     def is_full(self) -> bool:
         """Whether older rows have gone."""
         return self.count == len(self._rows)
+
+    @property
+    def begins_ns(self) -> int:
+        """When the oldest row begins; there must be one."""
+        return int(self._rows["t_ns"][self._next - self.count])
 
     def last(self, count: int) -> Rows:
         """The newest rows, at most so many, oldest first (a copy)."""
@@ -227,33 +232,32 @@ class History:
 
         The finest level is taken that goes back so far; its rows are merged as far as needed.
         """
-        level = next((level for level, ring in enumerate(self._rings) if self._reaches(ring, from_ns)), -1)
-        level %= len(self._rings)
+        level = self._level(from_ns)
         step_ns, rows = self._steps_ns[level], self.rows(level)
         t_ns = rows["t_ns"]
         rows = rows[(t_ns >= from_ns // step_ns * step_ns) & (t_ns <= to_ns)]
         if not len(rows):
             return step_ns // SECOND_NS, rows
         factor, groups = 1, rows["t_ns"] // step_ns
-        starts = _starts(groups)
+        starts = starts_of(groups)
         while len(starts) > points:  # more than once where steps are missing, or cut by the window's ends
             factor += 1 + factor // 8 + (len(starts) - points) * factor // (2 * points)
             groups = rows["t_ns"] // (step_ns * factor)
-            starts = _starts(groups)
+            starts = starts_of(groups)
         result = rows if factor == 1 else merged(rows, starts)
         result["t_ns"] = groups[starts] * (step_ns * factor)
         return step_ns * factor // SECOND_NS, result
 
     def tail(self, from_ns: int) -> tuple[int, Rows]:
         """The step in ns, and all rows from the step of `from_ns` on, of the finest level that goes back so far."""
-        level = next((level for level, ring in enumerate(self._rings) if self._reaches(ring, from_ns)), -1)
-        level %= len(self._rings)
+        level = self._level(from_ns)
         step_ns, rows = self._steps_ns[level], self.rows(level)
         return step_ns, rows[rows["t_ns"] >= from_ns // step_ns * step_ns]
 
-    @staticmethod
-    def _reaches(ring: Ring, from_ns: int) -> bool:
-        return not ring.is_full or int(ring.last(ring.count)["t_ns"][0]) <= from_ns
+    def _level(self, from_ns: int) -> int:
+        """The finest level that goes back so far, else the coarsest."""
+        reaching = (level for level, ring in enumerate(self._rings) if not ring.is_full or ring.begins_ns <= from_ns)
+        return next(reaching, len(self._rings) - 1)
 
     @property
     def bytes_at_most(self) -> int:
@@ -265,3 +269,4 @@ class History:
         for step_ns, ring in zip(self._steps_ns, self._rings, strict=True):
             t_ns: NDArray[Any] = ring.last(ring.count)["t_ns"]
             assert np.all(t_ns[1:] > t_ns[:-1]) and not np.any(t_ns % step_ns)
+            assert not ring.count or ring.begins_ns == t_ns[0]

@@ -132,7 +132,7 @@ export function missingTrouble(moment) {
  * who has been silent for a day or longer, for that is known by then; who was excused before it ever came; and every
  * silence where more than half of the sources have been silent for an hour or longer, for then they come and go.
  */
-export function needsSomebody(silence) {
+function needsSomebody(silence) {
   return silence.recent > 0 && 2 * silence.hour <= silence.known;
 }
 

@@ -22,8 +22,9 @@ from typing import NamedTuple
 import msgspec
 from aiohttp import web
 
+from ..bell import Bell
 from ..core.view import View
-from ..documents import stalls_of, steering_document
+from ..documents import stalls_of, state_of, steering_document
 from ..hold_answer import act_row, holds_answer
 from ..ingest.endpoint import FEEDS, runtime_of
 from ..problems import problem
@@ -78,7 +79,7 @@ class Watch:
         self._frames: dict[Variant, bytes] = {}
         self._searches: dict[Variant, Search] = {}
         self._shown: dict[Variant, list[int]] = {}
-        self._bell = asyncio.Event()
+        self._bell = Bell()
         self._task: asyncio.Task[None] | None = None
 
     # ---- who watches ------------------------------------------------------------------------------------------------
@@ -109,7 +110,7 @@ class Watch:
 
     def bell(self) -> asyncio.Event:
         """Set when the next moment is there, or none will come. Take it before looking, wait on it after."""
-        return self._bell
+        return self._bell.next
 
     def frame(self, variant: Variant) -> bytes | None:
         """The newest moment for a variant; None before its first."""
@@ -118,11 +119,7 @@ class Watch:
     def close(self) -> None:
         """Let everyone who watches go home."""
         self.closed = True
-        self._ring()
-
-    def _ring(self) -> None:
-        bell, self._bell = self._bell, asyncio.Event()
-        bell.set()
+        self._bell.ring()
 
     # ---- moments ----------------------------------------------------------------------------------------------------
 
@@ -135,7 +132,7 @@ class Watch:
                 self.compute(lateness)
             except Exception:  # the feed goes on, and so do the streams: the next moment may be well
                 log.exception("%s: an unforeseen error while computing a moment", self.runtime.config.name)
-            self._ring()
+            self._bell.ring()
             await asyncio.sleep(due - loop.time())
 
     def compute(self, lateness: SinceLast) -> None:
@@ -152,10 +149,10 @@ class Watch:
         view, hops, state = runtime.view(), runtime.hops(), runtime.feed.state
         memory.note_counters(view.now_ns, hops)
         rates = memory.rates(view.now_ns, hops)
-        stalls = stalls_of(runtime)
+        stalls = stalls_of(runtime, view, hops)
         document = feed_part(view, rates, hops, [delivery.state() for delivery in runtime.deliveries.values()])
         document |= {
-            "state": _state(runtime, stalls),
+            "state": state_of(runtime, stalls),
             "stalls": stalls,
             "failure": runtime.failure,
             "idle_after_s": state.settings.idle_after_ns / 1e9,
@@ -185,15 +182,6 @@ class Watch:
             for lane, number in zip(lanes, chosen, strict=True):
                 lane["found"] = number in matched
         return {"lanes": lanes, "rest": rest_part(moment.view, moment.part, lanes), "sampled": moment.look.sampled}
-
-
-def _state(runtime: FeedRuntime, stalls: list[str]) -> str:
-    """As `documents.state_of`, without looking for stalls again."""
-    if runtime.failure is not None:
-        return "failed"
-    if not runtime.accepting:
-        return "stopping"
-    return "stalled" if stalls else "running"
 
 
 WATCHES = web.AppKey("dashboard_watches", dict[str, Watch])

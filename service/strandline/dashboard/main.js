@@ -30,6 +30,7 @@ class Page {
   view = readView(location.search);
   record = new Record();
   live = null;
+  past = null; // what the last question for the past has come to: { at_ms, problem }
   raw = null;
   link = { state: "connecting", why: "", since_ms: Date.now() };
   drawn = 0;
@@ -99,7 +100,7 @@ class Page {
   /** Follow the feed of the view from the beginning. */
   follow() {
     this.record.clear();
-    this.live = null;
+    this.live = this.past = null;
     this.#open();
     this.#history(0);
   }
@@ -142,30 +143,38 @@ class Page {
   /** Fetch the past that the pictures need, after a moment in which more may change. */
   #history(after_ms) {
     clearTimeout(this.waiting);
-    this.waiting = setTimeout(async () => {
-      const feed = this.view.feed,
-        to_ms = Math.round(this.view.at_ms ?? this.nowMs() ?? Date.now());
-      const clock_s = this.live
-        ? this.pictures.windows(this.live, this.view).clock_s
-        : Math.max(300, this.view.window_s ?? 0);
-      const query = new URLSearchParams({
-        from_ms: String(Math.floor(to_ms - (clock_s + 60) * 1000)),
-        to_ms: String(to_ms + 1000),
-        points: String(POINTS),
-      });
-      try {
-        const found = await this.api.json(`/v1/feeds/${encodeURIComponent(feed)}/history?${query}`);
-        if (feed !== this.view.feed) return;
-        this.record.load(found);
-        this.historyOf_s = clock_s;
-        this.pictures.stale = true;
-        this.shownAt = {};
-        this.want();
-      } catch (error) {
-        if (!(error instanceof Problem)) throw error;
-        if (error.status === 0) this.#history(HISTORY_AGAIN_MS);
-      }
-    }, after_ms);
+    this.waiting = setTimeout(() => this.#fetchHistory(), after_ms);
+  }
+
+  /** An answer that another question has overtaken is of another time, or of another feed: it is passed over. */
+  async #fetchHistory() {
+    const { feed, at_ms, window_s } = this.view,
+      asked = (this.asked = Symbol());
+    const to_ms = Math.round(at_ms ?? this.nowMs() ?? Date.now());
+    const clock_s = this.live ? this.pictures.windows(this.live, this.view).clock_s : Math.max(300, window_s ?? 0);
+    const query = new URLSearchParams({
+      from_ms: String(Math.floor(to_ms - (clock_s + 60) * 1000)),
+      to_ms: String(to_ms + 1000),
+      points: String(POINTS),
+    });
+    let found = null,
+      problem = null;
+    try {
+      found = await this.api.json(`/v1/feeds/${encodeURIComponent(feed)}/history?${query}`);
+    } catch (error) {
+      if (!(error instanceof Problem)) throw error;
+      problem = error;
+    }
+    if (asked !== this.asked || feed !== this.view.feed) return;
+    this.past = { at_ms, problem };
+    if (problem?.mayPass) this.#history(HISTORY_AGAIN_MS);
+    if (found) {
+      this.record.load(found);
+      this.historyOf_s = clock_s;
+      this.pictures.stale = true;
+      this.shownAt = {};
+    }
+    this.want();
   }
 
   #moment(data) {
@@ -257,7 +266,7 @@ class Page {
       return;
     }
     const { zone, table } = this.view;
-    setText(byId("clock"), `${instant(moment.now_ms, zone)} ${zone === "utc" ? "UTC" : "local"}`);
+    setText(byId("clock"), `${instant(moment.now_ms, zone)} ${zoneWord(zone)}`);
     const spoken = speak(moment, zone);
     if (this.link.state !== "lost") {
       showSentence(spoken, moment, this.openAct);
@@ -273,13 +282,26 @@ class Page {
     if (pointed) setText(byId("behind-says"), pointed);
   }
 
-  /** The frozen time lies before everything that is known. */
+  /** Nothing is known of the frozen time: nothing is kept of it, or it has not come yet. */
   #nothingKept() {
+    const when = instant(this.view.at_ms, this.view.zone),
+      problem = this.past?.problem;
+    const [says, next] =
+      this.past?.at_ms !== this.view.at_ms
+        ? [`What is kept of ${when} is being fetched.`, ""]
+        : problem
+          ? [
+              `What is kept of ${when} was not given.`,
+              `${problem.title}. ${problem.detail ?? ""}${problem.mayPass ? " This page tries again by itself." : ""}`,
+            ]
+          : [
+              `Nothing is kept of ${when}.`,
+              "Go to a later time, or back to live. A day is kept, since the last start of the service.",
+            ];
+    setText(byId("clock"), `${when} ${zoneWord(this.view.zone)}`);
     setAttribute(byId("now"), "data-level", "watch");
-    setSentence(byId("says"), [`Nothing is kept of ${instant(this.view.at_ms, this.view.zone)}.`]);
-    setSentence(byId("next"), [
-      "Go to a later time, or back to live. A day is kept, since the last start of the service.",
-    ]);
+    setSentence(byId("says"), [says]);
+    setSentence(byId("next"), [next]);
     keyed(byId("offers"), [], String);
     keyed(byId("stalls"), [], String);
   }
@@ -329,6 +351,10 @@ class Page {
       slack: slack_s < 1 ? `${Number((slack_s * 1000).toPrecision(2))}ms` : `${Number(slack_s.toPrecision(2))}s`,
     });
   }
+}
+
+function zoneWord(zone) {
+  return zone === "utc" ? "UTC" : "local";
 }
 
 new Page();

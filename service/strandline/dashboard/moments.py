@@ -13,6 +13,7 @@ from ..core.columns import TIME_MIN
 from ..core.own import OwnWatermarks
 from ..core.sources import Sources
 from ..core.view import HOLD_WHYS, View
+from ..documents import age_s
 from ..hops import Hop
 from ..sinks.delivery import DeliveryState
 from .lanes import Part
@@ -27,11 +28,6 @@ Json = dict[str, Any]
 def ms(time_ns: int | None) -> int | None:
     """An instant in milliseconds; None for one that has not come."""
     return None if time_ns is None or time_ns == TIME_MIN else time_ns // 1_000_000
-
-
-def age_s(now_ns: int, then_ns: int | None) -> float | None:
-    """Seconds since an instant; None for one that has not come."""
-    return None if then_ns is None or then_ns == TIME_MIN else round((now_ns - then_ns) / 1e9, 3)
 
 
 def feed_part(view: View, rates: Rates, hops: Mapping[str, Hop], sinks: Iterable[DeliveryState]) -> Json:

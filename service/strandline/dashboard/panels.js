@@ -70,8 +70,7 @@ const REACHES = [
 
 /** The strip of hops from the sources to the stores; the reach where the trouble sits says so. */
 export function showHops(moment, spoken) {
-  const hops = new Map((moment.hops ?? []).map((hop) => [hop.name, hop]));
-  const held = moment.hold?.why,
+  const hops = new Map((moment.hops ?? []).map((hop) => [hop.name, hop])),
     places = spoken.places;
   keyed(
     byId("hops"),
@@ -83,7 +82,7 @@ export function showHops(moment, spoken) {
       setAttribute(element, "data-trouble", trouble ? (spoken.place === key ? spoken.level : "watch") : null);
       const sign = (key === "upstream" && spoken.upstream) || "trouble";
       setText(element.verdict, trouble ? `▲ ${sign}` : "✓ clear");
-      for (const name of names) showHop(element.hops.get(name), name, hops.get(name), moment, held);
+      for (const name of names) showHop(element.hops.get(name), name, hops.get(name), moment);
     },
   );
 }

@@ -15,7 +15,7 @@ const CLOCK_EVERY_MS = 900,
 const LANES_FITS_AT_MOST = 8;
 const SLACK_LEAST_S = 0.001; // below it an event is late for a clock's tick: no slack that anybody chooses
 
-/** All pictures of the page. `onWanted` is called when one must be drawn again; `onLane` when a lane is chosen. */
+/** All pictures of the page. `onWanted` is called when one must be drawn again. */
 export class Pictures {
   constructor(onWanted) {
     const wanted = () => {

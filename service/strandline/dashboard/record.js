@@ -57,10 +57,11 @@ export class Record {
 
   /** One live moment. */
   append(moment) {
-    const last_ms = this.t_ms[this.t_ms.length - 1] ?? -Infinity;
-    if (moment.now_ms <= last_ms) return;
+    if (moment.now_ms <= (this.moments[this.moments.length - 1]?.now_ms ?? -Infinity)) return;
     this.moments.push(moment);
     if (this.moments.length > MOMENTS_AT_MOST) this.moments.splice(0, MOMENTS_AT_MOST / 6);
+    const last_ms = this.t_ms[this.t_ms.length - 1] ?? -Infinity;
+    if (moment.now_ms <= last_ms) return; // within a step of the history that is not over: 3 min, where a day is seen
     const ledger = moment.ledger,
       before = this.ledger && this.ledger.received <= ledger.received ? this.ledger : ledger;
     const judged = (each) => each.received - each.duplicate - each.quarantined;
@@ -124,8 +125,9 @@ export class Record {
       ms,
     );
     if (kept >= 0 && ms - this.moments[kept].now_ms < GAP_MS) return { ...this.moments[kept], past: true };
-    const history = this.history,
-      index = history ? lastAtOrBelow(history.ends_ms, ms) : -1;
+    const history = this.history;
+    let index = history ? lastAtOrBelow(history.ends_ms, ms) : -1;
+    if (index < 0 && history?.t_ms[0] <= ms) index = 0; // within the first step: its end is the nearest that is known
     if (index < 0 || ms - history.ends_ms[index] > Math.max(GAP_MS, 2 * history.step_ms)) return null;
     return {
       ...present,

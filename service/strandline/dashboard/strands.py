@@ -16,6 +16,7 @@ from ..core.columns import as_refs
 from ..core.held import Held
 from ..core.held_by_source import HeldBySource
 from ..core.runs import Run, Strand
+from .history import starts_of
 
 PIECES_AT_MOST = 512  # chunks: some 1.5 us each
 ROWS_AT_MOST = 16_384
@@ -115,7 +116,7 @@ def held_of(look: Look, wanted: Sequence[int], sources: int, strands_at_most: in
     keys = lanes[kept] * (int(look.runs[-1]) + 1) + look.runs[kept]
     kept = kept[np.argsort(keys, kind="stable")]  # within a run times ascend already
     keys.sort()
-    starts = np.flatnonzero(np.concatenate(([True], keys[1:] != keys[:-1])))
+    starts = starts_of(keys)
     stops = np.concatenate((starts[1:], [len(keys)]))
     events = np.rint(np.add.reduceat(look.weights[kept], starts)).astype(np.int64)
     heads, tails = look.times[kept[starts]], look.times[kept[stops - 1]]

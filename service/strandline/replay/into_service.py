@@ -16,7 +16,7 @@ import aiohttp
 import msgspec
 
 from strandline.cli_answers import WRONG_USE
-from strandline.client_access import Caller, refusal
+from strandline.client_access import Caller, detail_of, feed_address, refusal
 from strandline.core.records import Kind
 from strandline.errors import CaptureError, ConfigError
 from strandline.ingest.formats import NDJSON
@@ -76,7 +76,7 @@ def send(
     if not capture.meta.lines:
         raise CaptureError(f"{capture.path}: it was made --without-events: there is nothing to send")
     sent = Sent()
-    sender = _Sender(f"{url.rstrip('/')}/v1/feeds/{feed}/events", sent, progress, caller)
+    sender = _Sender(feed_address(url, feed, "events"), sent, progress, caller)
     try:
         asyncio.run(sender.run(_bodies(capture, speed, sent), connections))
     except* (CaptureError, ConfigError) as errors:
@@ -165,7 +165,4 @@ class _Sender:
 
 
 def _detail(content: bytes) -> str:
-    try:
-        return str(msgspec.json.decode(content)["detail"])
-    except (msgspec.DecodeError, LookupError, TypeError):
-        return content[:200].decode(errors="replace")
+    return detail_of(content) or content[:200].decode(errors="replace")

@@ -22,20 +22,11 @@ from typing import TYPE_CHECKING, Any
 
 from strandline.cli_answers import harmless
 from strandline.errors import ConfigError
+from strandline.page_style import OKABE_ITO
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
 
-OKABE_ITO = {
-    "black": "#000000",
-    "orange": "#E69F00",
-    "sky blue": "#56B4E9",
-    "bluish green": "#009E73",
-    "yellow": "#F0E442",
-    "blue": "#0072B2",
-    "vermillion": "#D55E00",
-    "reddish purple": "#CC79A7",
-}
 PLAIN = "{http://www.w3.org/2000/svg}"
 NEEDS = "a report needs matplotlib: pip install 'strandline[report]'"
 WIDE, HIGH = 7.6, 3.9  # inches of one picture

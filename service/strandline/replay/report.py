@@ -15,9 +15,10 @@ from typing import Any
 from strandline.caution import CAUTION
 from strandline.cli_answers import harmless
 from strandline.ingest.timestamps import format_rfc3339
+from strandline.page_style import OKABE_ITO, POLICY
 
-from .pictures import OKABE_ITO, PLAIN, Colours, Picture, pictures_of, svg
-from .report_style import DARK, LIGHT, POLICY, STYLE
+from .pictures import PLAIN, Colours, Picture, pictures_of, svg
+from .report_style import DARK, LIGHT, STYLE
 from .wording import (
     NO_LINES,
     REORDERING,

@@ -3,26 +3,15 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
-from typing import NamedTuple
 
+from ..sinks.lane_summary import LateSecond
 from .facts import Burst, Late, LateSource
 
 APART_NS = 60_000_000_000
 SOURCES_AT_MOST, BURSTS_AT_MOST = 50, 100
 
 
-class Second(NamedTuple):
-    """Late events of one source that came within one second, or longer where there are very many seconds."""
-
-    source: str | None
-    events: int
-    from_ns: int
-    to_ns: int
-    late_by_least_ns: int
-    late_by_most_ns: int
-
-
-def late_of(totals: Iterable[LateSource], seconds: Iterable[Second], *, complete: bool) -> Late:
+def late_of(totals: Iterable[LateSource], seconds: Iterable[LateSecond], *, complete: bool) -> Late:
     """`totals`: of every source; `seconds`: by source, of each in order of time."""
     sources = sorted(totals, key=lambda each: (-each.events, each.source or ""))
     bursts = _bursts(seconds)
@@ -39,14 +28,14 @@ def late_of(totals: Iterable[LateSource], seconds: Iterable[Second], *, complete
     )
 
 
-def _bursts(seconds: Iterable[Second]) -> list[Burst]:
-    joined: list[Second] = []
+def _bursts(seconds: Iterable[LateSecond]) -> list[Burst]:
+    joined: list[LateSecond] = []
     for each in seconds:
         last = joined[-1] if joined else None
         if last is None or last.source != each.source or each.from_ns - last.to_ns > APART_NS:
             joined.append(each)
             continue
-        joined[-1] = Second(
+        joined[-1] = LateSecond(
             each.source,
             last.events + each.events,
             last.from_ns,

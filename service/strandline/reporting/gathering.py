@@ -18,14 +18,14 @@ from ..core.columns import NO_SOURCE, TIME_MIN
 from ..core.holds import Held
 from ..core.records import ActRecord
 from ..core.view import View
-from ..dashboard.history import SINKS, Rows, merged
+from ..dashboard.history import SINKS, Rows, merged, starts_of
 from ..dashboard.sampling import BOOKS, FeedMemory
 from ..errors import StrandlineError
 from ..hops import HOPS
 from ..sinks.delivery import DeliveryState
 from ..sinks.lane_summary import late_sums, refused_sums
 from ..sinks_of import LANE_STORE
-from .bursts import Second, late_of
+from .bursts import late_of
 from .delays import Behind
 from .facts import (
     Act,
@@ -94,7 +94,7 @@ def look(memory: FeedMemory, from_ns: int, to_ns: int) -> Look:
         sampled=memory.books,
         recognises_repeats=runtime.config.id is not None,
         failure=runtime.failure,
-        lanes_file=runtime.folder / "lanes.db",
+        lanes_file=runtime.lanes_file,
         flush_after_ns=round(max((each.flush_after_s for each in runtime.deliveries.values()), default=0.0) * 1e9),
     )
 
@@ -148,7 +148,7 @@ def _series(seen: Look) -> Series:
     factor = 1 + (len(rows) - 1) // POINTS_AT_MOST if len(rows) else 1
     if factor > 1:
         groups = rows["t_ns"] // (step_ns * factor)
-        starts = np.flatnonzero(np.concatenate(([True], groups[1:] != groups[:-1])))
+        starts = starts_of(groups)
         rows, step_ns = merged(rows, starts), step_ns * factor
     oldest = {name: rows["oldest_ns"][:, place].tolist() for place, name in enumerate(HOPS)}
     behind = [
@@ -197,7 +197,7 @@ def _late(seen: Look) -> Late | None:
         log.warning("%s: a report is made without late events: %s", seen.view.name, error)
         return None
     totals = (LateSource(**each._asdict()) for each in sums.totals)
-    return late_of(totals, (Second(*each) for each in sums.seconds), complete=sums.complete)
+    return late_of(totals, sums.seconds, complete=sums.complete)
 
 
 def _trouble(seen: Look) -> Trouble:

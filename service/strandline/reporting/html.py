@@ -8,10 +8,11 @@ from __future__ import annotations
 from collections.abc import Iterator
 from html import escape
 
+from ..page_style import POLICY
 from .facts import Facts
 from .picture import picture
 from .report import Section, report_of
-from .style import POLICY, STYLE
+from .style import STYLE
 from .tables import Table
 from .words import Foreign, Words, plain
 

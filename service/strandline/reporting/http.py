@@ -3,19 +3,18 @@
 from __future__ import annotations
 
 import asyncio
-from typing import Any
 
 import msgspec
 from aiohttp import web
 
 from ..dashboard.live import WATCHES
+from ..hold_answer import instant
 from ..ingest.endpoint import runtime_of
-from ..ingest.timestamps import parse_rfc3339
+from ..page_style import POLICY
 from .facts import Facts
 from .gathering import facts_of, look
 from .html import report_html
 from .markdown import report_markdown
-from .style import POLICY
 
 DAY_NS = 86_400 * 1_000_000_000
 SPAN_NS_AT_MOST = 31 * DAY_NS
@@ -62,21 +61,10 @@ def written(facts: Facts, form: str) -> tuple[bytes, str]:
 
 
 def _time(request: web.Request, now_ns: int) -> tuple[int, int]:
-    to_ns = min(_instant(request, "to", now_ns), now_ns)
-    from_ns = _instant(request, "from", to_ns - SPAN_NS)
+    to_ns = min(instant(request, "to", now_ns), now_ns)
+    from_ns = instant(request, "from", to_ns - SPAN_NS)
     if from_ns >= to_ns:
         raise web.HTTPBadRequest(text="?from= must be earlier than ?to= and than now: there is nothing to report yet")
     if to_ns - from_ns > SPAN_NS_AT_MOST:
         raise web.HTTPBadRequest(text="a report is of 31 days at most: ask for a shorter time with ?from= and ?to=")
     return from_ns, to_ns
-
-
-def _instant(request: web.Request, name: str, default: int) -> int:
-    text: Any = request.query.get(name)
-    if text is None:
-        return default
-    try:
-        return parse_rfc3339(text)
-    except ValueError as error:
-        detail = f"?{name}= must be a time of RFC 3339 such as 2026-05-01T03:00:00Z (a + is written %2B): {error}"
-        raise web.HTTPBadRequest(text=detail[:300]) from None

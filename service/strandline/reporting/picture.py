@@ -10,10 +10,10 @@ from collections.abc import Iterator
 from html import escape
 from typing import NamedTuple
 
+from ..page_style import OKABE_ITO
 from .facts import Facts, Hold
 from .holding import USUAL
 from .sentences import burst_words
-from .style import BLUE, GREEN, ORANGE, PURPLE, SKY, VERMILLION, YELLOW
 from .tables import WHYS
 from .words import DAY_NS, SECOND_NS, Clock, Foreign, full, lasted
 
@@ -22,13 +22,13 @@ LANE, BAR, LANES_AT_MOST = 22, 14, 10
 BEHIND, LATE = 110, 46
 NAME_CHARACTERS = 22
 COLOURS = {
-    "slow_source": YELLOW,
-    "promised_source": SKY,
-    "expected_source": GREEN,
-    "silent_source": ORANGE,
-    "hold_at_most": VERMILLION,
-    "all_silent": PURPLE,
-    "sink_full": BLUE,
+    "slow_source": OKABE_ITO["yellow"],
+    "promised_source": OKABE_ITO["sky blue"],
+    "expected_source": OKABE_ITO["bluish green"],
+    "silent_source": OKABE_ITO["orange"],
+    "hold_at_most": OKABE_ITO["vermillion"],
+    "all_silent": OKABE_ITO["reddish purple"],
+    "sink_full": OKABE_ITO["blue"],
     "sink_paused": "url(#paused)",
 }
 TICKS_S = (
@@ -38,7 +38,7 @@ TICKS_S = (
 TICKS_AT_MOST = 8
 _PAUSED = (
     '<defs><pattern id="paused" width="6" height="6" patternUnits="userSpaceOnUse" patternTransform="rotate(45)">'
-    f'<rect width="3" height="6" fill="{BLUE}"/></pattern></defs>'
+    f'<rect width="3" height="6" fill="{OKABE_ITO["blue"]}"/></pattern></defs>'
 )
 
 
@@ -246,7 +246,7 @@ def _late(facts: Facts, scale: Scale, top: float) -> Iterator[str]:
         height = max(2, round(burst.events / most * LATE, 1))
         title = f"{burst_words(burst)}, {clock.at(burst.from_ns)} to {clock.at(burst.to_ns)}"
         box = (x, bottom - height, max(3, scale.x(burst.to_ns) - x), height)
-        yield _rect(box, f'fill="{VERMILLION}" fill-opacity="0.8"', title)
+        yield _rect(box, f'fill="{OKABE_ITO["vermillion"]}" fill-opacity="0.8"', title)
 
 
 def _acts(facts: Facts, scale: Scale, top: float, bottom: float) -> Iterator[str]:
