@@ -21,7 +21,7 @@ from typing import Any, Self
 
 import nats
 import pytest
-from helpers_service import DEADLINE_S, POLL_S
+from helpers_service import DEADLINE_S, POLL_S, Running
 from nats.aio.client import Client
 from nats.js import api
 from nats.js.errors import NotFoundError
@@ -30,10 +30,12 @@ from paho.mqtt.client import MQTTMessageInfo
 from paho.mqtt.enums import CallbackAPIVersion, MQTTProtocolVersion
 from paho.mqtt.packettypes import PacketTypes
 from paho.mqtt.properties import Properties
+from strandline.intake.counts import Counts
 from strandline_loadgen.child import free_port
 
 STREAM = "RIVER"
 SUBJECT = "river.north"
+STARTS_AT_MOST = 3
 
 
 class Server:
@@ -71,7 +73,15 @@ class Server:
         return (self.folder / "server.log").read_bytes()[-2000:].decode(errors="replace")
 
     def __enter__(self) -> Self:
-        self.start()
+        for tries_left in reversed(range(STARTS_AT_MOST)):
+            try:
+                self.start()
+                break
+            except BaseException as error:
+                self.__exit__(type(error), error, None)
+                if not tries_left or "in use" not in self.last_words():
+                    raise
+                self.port = free_port()  # somebody took it between being chosen and being bound
         return self
 
     def __exit__(
@@ -135,7 +145,9 @@ class Nats(Server):
             stream, given = client.jetstream(), list(headers)
             for number, body in enumerate(bodies):
                 own = given[number] if number < len(given) else None
+                deadline = time.monotonic() + DEADLINE_S
                 while (await stream.publish(subject, body, headers=dict(own) if own else None)).duplicate:
+                    assert time.monotonic() < deadline, f"the broker takes message {number} for a repeat"
                     await asyncio.sleep(POLL_S)
         finally:
             await client.close()
@@ -158,6 +170,7 @@ class Nats(Server):
             return await client.jetstream().consumer_info(STREAM, durable)
         finally:
             await client.close()
+
 
 class Mosquitto(Server):
     """An MQTT broker whose sessions and queues outlive it (written to disk as it ends, and at each change)."""
@@ -230,6 +243,18 @@ def jetstream_intake(server: Nats, **keys: object) -> str:
 def mqtt_intake(server: Mosquitto, **keys: object) -> str:
     """An intake from topics below river/, as TOML."""
     return _table("mqtt", {"url": server.url, "topics": ["river/+/level"], "keepalive": "5s", **keys})
+
+
+def counts_of(service: Running) -> Counts:
+    """What the service counts of its only intake."""
+    (counts,) = service.runtime.intakes
+    counts.check()
+    return counts
+
+
+def received(service: Running) -> int:
+    """How many events the feed has received."""
+    return int(service.runtime.view().ledger["received"])
 
 
 def _table(kind: str, keys: Mapping[str, object]) -> str:

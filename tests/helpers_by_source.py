@@ -9,11 +9,11 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from helpers_feed import FOR_EVER_NS, Shell
+from helpers_model import NEVER, Known
 from hypothesis import strategies as st
 from strandline.core.columns import Lane
 from strandline.core.settings import Settings
 
-NEVER = -(2**63)
 NAMES = ("gw-0", "gw-1", "gw-2", "gw-3")
 SINKS: dict[str, list[Lane]] = {"store": ["ordered"], "lanes": ["late", "quarantine"]}
 
@@ -56,15 +56,6 @@ def carry_out(shell: Shell, step: tuple[Any, ...], now_ns: int) -> None:
         case ("events" | "identified", rows):
             identities = [row[2] for row in rows] if step[0] == "identified" else None
             shell.events([row[0] for row in rows], now_ns, [row[1] for row in rows], identities=identities)
-        case ("tick",):
-            shell.tick(now_ns)
-        case ("promise", name, time):
-            shell.act("promise", name, time, now_ns=now_ns)
-        case ("excuse", name):
-            if name in shell.feed.state.sources.numbers:
-                shell.act("excuse", name, "why", now_ns=now_ns)
-        case ("drain",):
-            shell.act("drain", now_ns=now_ns)
         case ("slack", slack):
             shell.tokens += 1
             shell.do(shell.feed.set_slack(slack, SLACK_HOLDS_NS, "why", now_ns, shell.tokens, "somebody"))
@@ -74,18 +65,14 @@ def carry_out(shell: Shell, step: tuple[Any, ...], now_ns: int) -> None:
         case ("settings", chosen):
             shell.do(shell.feed.start(now_ns, SINKS, {}, chosen))
         case _:
-            raise AssertionError(step)
+            shell.step(step, now_ns)
 
 
 @dataclass(slots=True)
-class Source:
+class Source(Known):
     """What the rule knows of one source. `stands` is its watermark."""
 
-    newest: int = NEVER
     promised: int = NEVER
-    heard: int = NEVER
-    active: bool = False
-    excused: bool = False
     stands: int = NEVER
 
 

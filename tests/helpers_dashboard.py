@@ -17,9 +17,9 @@ from pathlib import Path
 from typing import Any
 
 import aiohttp
-from helpers_browser import DEADLINE_MS
+from helpers_browser import DEADLINE_MS, page_of
 from helpers_service import NDJSON, Process
-from playwright.async_api import Locator, Page, expect
+from playwright.async_api import Browser, Locator, Page, expect
 
 expect.set_options(timeout=DEADLINE_MS)
 EVERY_S = 0.2
@@ -115,6 +115,16 @@ async def live(page: Page) -> None:
     """Wait until the page follows its feed and has drawn it."""
     await expect(page.locator("#link")).to_have_text("● live")
     await until(page, "() => document.getElementById('clock').textContent !== ''")
+
+
+@asynccontextmanager
+async def followed(
+    launched: Browser, process: Process, feed: str, lag_s: Mapping[str, float]
+) -> AsyncIterator[tuple[Gateway, Page]]:
+    """Stations that send to a feed, and a page that follows it."""
+    async with feeding(process, feed, lag_s) as gateways, page_of(launched, f"{process.url}/?feed={feed}") as page:
+        await live(page)
+        yield gateways, page
 
 
 def says(page: Page) -> Locator:

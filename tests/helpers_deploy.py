@@ -24,6 +24,7 @@ RUNBOOK = DEPLOY / "runbook.md"
 DASHBOARD = DEPLOY / "grafana" / "strandline.json"
 _SUFFIXES = {"counter": ("_total",), "gauge": ("",), "histogram": ("_bucket", "_sum", "_count")}
 SHOWN = {name + suffix: name for name, meaning in METRICS.items() for suffix in _SUFFIXES[meaning.kind]}
+TOOL_S_AT_MOST = 120  # long, because it decides nothing
 TARGET_LABELS = {"job", "instance", "feed", "le", "__name__"}
 
 
@@ -38,7 +39,7 @@ def tool(name: str, where: str) -> str:
 def promtool(*arguments: str | Path, cwd: Path = ROOT) -> subprocess.CompletedProcess[str]:
     """Run Prometheus' own checker."""
     command = [tool("promtool", "Debian: apt-get install prometheus"), *map(str, arguments)]
-    return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False)
+    return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=TOOL_S_AT_MOST)
 
 
 def alerts() -> list[dict[str, Any]]:

@@ -7,7 +7,7 @@ read: a place that points to the wrong line is seen.
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -139,6 +139,21 @@ class Shell:
         self.do(getattr(self.feed, name)(*arguments, now_ns, self.tokens, **more))
         return self.tokens
 
+    def step(self, step: tuple[Any, ...], now_ns: int, **more: str) -> None:
+        """A step that every history has: a tick, a promise, an excuse (of a source that is known) or a drain."""
+        match step:
+            case ("tick",):
+                self.tick(now_ns)
+            case ("promise", name, time_ns):
+                self.act("promise", name, time_ns, now_ns=now_ns)
+            case ("excuse", name):
+                if name in self.feed.state.sources.numbers:
+                    self.act("excuse", name, "why", now_ns=now_ns, **more)
+            case ("drain",):
+                self.act("drain", now_ns=now_ns, **more)
+            case _:
+                raise AssertionError(step)
+
     def tick(self, now_ns: int) -> None:
         self.do(self.feed.tick(now_ns))
 
@@ -224,6 +239,23 @@ class Shell:
                 feed.fold(record.kind, VERSION, record.body, record.lsn)
         feed.check()
         return feed
+
+
+def held_no_longer(
+    shell: Shell,
+    history: Sequence[tuple[tuple[Any, ...], int]],
+    carry_out: Callable[[Shell, tuple[Any, ...], int], None],
+    hold_at_most_ns: int,
+) -> None:
+    """Assert that, with a tick at every instant of a history of (step, time since the last), nothing is held longer."""
+    now_ns = 0
+    for step, passed in history:
+        for _ in range(max(1, passed)):
+            now_ns += passed > 0
+            shell.tick(now_ns)
+            oldest = shell.feed.state.arrivals.oldest_ns
+            assert oldest is None or oldest > now_ns - hold_at_most_ns
+        carry_out(shell, step, now_ns)
 
 
 def saved_bytes(feed: Feed) -> bytes:

@@ -5,10 +5,11 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from typing import Any
 
-from strandline.reporting.bursts import Second, late_of
+from strandline.reporting.bursts import late_of
 from strandline.reporting.delays import Behind
 from strandline.reporting.facts import Act, Acts, Books, Count, Facts, Hold, Late, LateSource, Series, Trouble
 from strandline.reporting.holding import Rules, holds_of
+from strandline.sinks.lane_summary import LateSecond
 
 SECOND = 1_000_000_000
 BEGIN_NS = 1_777_604_400 * SECOND  # 2026-05-01 03:00:00 UTC
@@ -72,7 +73,7 @@ def no_trouble(**more: Any) -> Trouble:
 def late_events(*bursts: tuple[str | None, int, float, float, float]) -> Late:
     """Bursts of (source, events, from, to, late by at most, in seconds), one of each source."""
     seconds = [
-        Second(source, events, at(begin), at(end), SECOND, round(by * SECOND))
+        LateSecond(source, events, at(begin), at(end), SECOND, round(by * SECOND))
         for source, events, begin, end, by in sorted(bursts, key=lambda burst: burst[0] or "")
     ]
     totals = [

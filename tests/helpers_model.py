@@ -11,14 +11,20 @@ NEVER = -(2**63)
 
 
 @dataclass(slots=True)
-class ModelSource:
-    """What the rule knows of one source."""
+class Known:
+    """What every rule knows of one source."""
 
     newest: int = NEVER
-    vouched: int = NEVER
     heard: int = NEVER
     active: bool = False
     excused: bool = False
+
+
+@dataclass(slots=True)
+class ModelSource(Known):
+    """What the rule knows of one source."""
+
+    vouched: int = NEVER
 
 
 @dataclass(slots=True)

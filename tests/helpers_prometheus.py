@@ -10,7 +10,6 @@ import asyncio
 import json
 import math
 import shutil
-import socket
 import subprocess
 import time
 import urllib.error
@@ -23,6 +22,7 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+from strandline_loadgen.child import free_port
 
 DEADLINE_S = 30.0
 POLL_S = 0.02
@@ -117,13 +117,6 @@ async def _answer(reader: asyncio.StreamReader) -> tuple[int, str]:
     lengths = [int(line.split(":")[1]) for line in head if line.lower().startswith("content-length:")]
     text = await reader.readexactly(lengths[0]) if lengths else b""
     return int(head[0].split(" ")[1]), text.decode()
-
-
-def free_port() -> int:
-    """A port that nobody listens on now."""
-    with socket.socket() as held:
-        held.bind(("127.0.0.1", 0))
-        return int(held.getsockname()[1])
 
 
 def _begin(folder: Path, port: int) -> subprocess.Popen[bytes]:

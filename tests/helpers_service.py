@@ -220,6 +220,8 @@ class Process:
     is shown when the block ends with an error.
     """
 
+    scheme = "http"
+
     def __init__(self, folder: Path, text: str, environ: Mapping[str, str] | None = None) -> None:
         self.folder, self.file, self.log = folder, folder / "strandline.toml", folder / "service.log"
         self.file.write_text(text)
@@ -271,7 +273,7 @@ class Process:
         assert self.process is not None and self.process.stdout is not None
         told, _, _ = select.select([self.process.stdout], [], [], DEADLINE_S)
         line = self.process.stdout.readline().decode() if told else ""
-        found = re.fullmatch(r"listening on (http://127\.0\.0\.1:[0-9]+)\n", line)
+        found = re.fullmatch(rf"listening on ({self.scheme}://127\.0\.0\.1:[0-9]+)\n", line)
         assert found, f"it did not say where it listens, but {line!r}"
         return found[1]
 

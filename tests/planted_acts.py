@@ -81,7 +81,7 @@ ACT_FAULTS = [
     ),
     Fault(
         "a resumed sink stays paused",
-        (Change(FeedRuntime, "carry_out", "sink.pause() if effect.on else sink.resume()", "sink.pause()"),),
+        (Change(FeedRuntime, "_pause", "worker.pause if effect.on else worker.resume", "worker.pause"),),
         Worlds(0, "rolling_stops"),
         "paused are .* by the records",
     ),

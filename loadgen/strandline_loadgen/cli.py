@@ -12,7 +12,7 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
-from strandline.cli_values import add_access
+from strandline.cli_options import add_command, add_service
 
 from .exits import FINE, INTERRUPTED, NO, NOT_REACHED, WRONG_USE
 
@@ -46,14 +46,7 @@ def _parser() -> argparse.ArgumentParser:
 
 
 def _add(commands: Any, name: str, about: str, example: str) -> argparse.ArgumentParser:
-    added: argparse.ArgumentParser = commands.add_parser(
-        name,
-        help=about,
-        description=f"{about[0].upper()}{about[1:]}.",
-        epilog=f"example:\n  {example}",
-        formatter_class=argparse.RawDescriptionHelpFormatter,
-    )
-    return added
+    return add_command(commands, name, about, f"{about[0].upper()}{about[1:]}.", f"  {example}")
 
 
 def _add_shapes(commands: Any) -> None:
@@ -69,7 +62,6 @@ def _add_send(commands: Any) -> None:
     command = _add(commands, "send", "send a shape to a service, on a fixed schedule", example)
     command.add_argument("shape", help="one of those that `shapes` lists")
     command.add_argument("--feed", required=True, help="the feed's name")
-    command.add_argument("--url", default="http://127.0.0.1:8600", help="the service (%(default)s)")
     command.add_argument("--events", type=int, default=10_000, help="how many (%(default)s)")
     command.add_argument("--seed", type=int, default=1, help="the same seed, the same events (%(default)s)")
     command.add_argument(
@@ -91,7 +83,7 @@ def _add_send(commands: Any) -> None:
     )
     command.add_argument("--encodings", default="identity", help="identity, gzip, zstd: one or several, taken in turn")
     command.add_argument("--seconds-at-most", type=float, default=600.0, help="stop after this (%(default)s)")
-    add_access(command)
+    add_service(command)
     command.add_argument(
         "--check", type=Path, metavar="STORE",
         help="then drain the feed and judge what its SQLite file or NDJSON folder holds (nothing else of this feed)",

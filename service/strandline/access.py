@@ -71,7 +71,7 @@ RULES: dict[tuple[str, str], Rule] = {
     ("POST", f"{_FEED}/sinks/{{sink}}/resume"): Rule("operate"),
     ("POST", f"{_FEED}/late/resend"): Rule("operate"),
     ("POST", f"{_FEED}/refused/resend"): Rule("operate"),
-    ("POST", f"{_FEED}/quarantine/redrive"): Rule("operate"),
+    ("POST", f"{_FEED}/quarantine/readmit"): Rule("operate"),
     ("GET", "/v1/feeds"): Rule("read", "some"),  # shows those that the token may read
     ("GET", _FEED): Rule("read"),
     ("GET", f"{_FEED}/sources"): Rule("read"),

@@ -25,7 +25,7 @@ import msgspec
 from msgspec import field
 
 from .access import EVERY, PREFIX, ROLES, Token, digest_of
-from .config_kinds import Kind, name, quoted, shown
+from .config_kinds import Kind, list_text, name, quoted, shown
 from .config_read import Key, Reading, Tables
 from .errors import ConfigError
 from .private_files import read_private
@@ -58,7 +58,7 @@ def _feeds() -> Kind:
                 raise ValueError(f'holds {shown(item)}, which is no feed\'s name and not "*"')
         return frozenset(raw)
 
-    return Kind('list of feeds, or `["*"]`', read, lambda feeds: f"[{', '.join(map(quoted, sorted(feeds)))}]")
+    return Kind('list of feeds, or `["*"]`', read, lambda feeds: list_text(sorted(feeds)))
 
 
 def _instant() -> Kind:
@@ -151,6 +151,6 @@ def entry_lines(token_name: str, token: str, grants: dict[str, list[str]], expir
     yield f"name = {quoted(token_name)}"
     yield f'hash = "sha256:{digest_of(token).hex()}"'
     for role, feeds in grants.items():
-        yield f"{role} = [{', '.join(map(quoted, feeds))}]"
+        yield f"{role} = {list_text(feeds)}"
     if expires is not None:
         yield f"expires = {expires}"

@@ -74,7 +74,7 @@ def make_app(config: Config, feeds: dict[str, FeedRuntime], gate: Gate) -> web.A
             web.post("/v1/feeds/{feed}/sinks/{sink}/resume", acting.post_resume),
             web.post("/v1/feeds/{feed}/late/resend", lane_acts.post_late_resend),
             web.post("/v1/feeds/{feed}/refused/resend", lane_acts.post_refused_resend),
-            web.post("/v1/feeds/{feed}/quarantine/redrive", lane_acts.post_quarantine_redrive),
+            web.post("/v1/feeds/{feed}/quarantine/readmit", lane_acts.post_quarantine_readmit),
             web.get("/v1/feeds", observe.get_feeds),
             web.get("/v1/feeds/{feed}", observe.get_feed),
             web.get("/v1/feeds/{feed}/sources", observe.get_sources),
@@ -126,7 +126,7 @@ class Service:
         self.feeds: dict[str, FeedRuntime] = {}
         self.stopping = asyncio.Event()
         self.failure: str | None = None
-        self.on_ticked: Callable[[], None] | None = None  # called each time that every feed's tick has come back
+        self.on_ticked: Callable[[], None] | None = None  # called after each beat, once its ticks have come back
         self.address = config.listen
         self._runner: web.AppRunner | None = None
         self._listener: asyncio.Server | TlsListener | None = None

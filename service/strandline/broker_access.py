@@ -11,6 +11,7 @@ from pathlib import Path
 
 from .errors import ConfigError, StrandlineError
 from .private_files import read_private
+from .tls import trusting
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,24 +39,24 @@ class BrokerAccess:
         """Read what lies in files. Blocking. Raises StrandlineError, which names the file and never its content."""
         password = self.password if self.password_file is None else _one_line(self.password_file)
         token = self.token if self.token_file is None else _one_line(self.token_file)
+        if self.creds_file is not None:
+            _private(self.creds_file)  # the client reads it by itself, whoever else may
         return Secrets(self.user, password, token)
 
     def context(self) -> ssl.SSLContext:
         """For TLS: the system's certificates, or those of `ca_file`; 1.2 at least. Blocking. Raises StrandlineError."""
-        try:
-            context = ssl.create_default_context(cafile=self.ca_file)
-        except (OSError, ValueError) as error:
-            reason = getattr(error, "strerror", None) or str(error)
-            raise StrandlineError(f"ca_file {self.ca_file} is no file of certificates (PEM): {reason}") from None
-        context.minimum_version = ssl.TLSVersion.TLSv1_2
-        return context
+        return trusting(None if self.ca_file is None else Path(self.ca_file), "ca_file")
+
+
+def _private(file: str) -> str:
+    try:
+        return read_private(Path(file), by_group=True)
+    except ConfigError as error:
+        raise StrandlineError(str(error)) from None
 
 
 def _one_line(file: str) -> str:
-    try:
-        text = read_private(Path(file), by_group=True).strip("\r\n")
-    except ConfigError as error:
-        raise StrandlineError(str(error)) from None
+    text = _private(file).strip("\r\n")
     if not text or not text.isprintable():
         raise StrandlineError(f"{file}: holds no secret: one line is expected")
     return text

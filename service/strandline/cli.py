@@ -18,7 +18,8 @@ from typing import Any
 from . import cli_holds, cli_operate, cli_report, cli_token, cli_trace
 from .caution import CAUTION
 from .cli_answers import DEFAULT_FILE, FINE, INTERRUPTED, NOT_REACHED, WRONG_USE, chosen_file, complain
-from .cli_values import add_access, amount, connections, hold, pace, recorded_seconds
+from .cli_options import add_access, add_command, add_service
+from .cli_values import amount, connections, demo_seconds, hold, pace, recorded_seconds, rows
 from .errors import FAULT_REASONS, ConfigError, StrandlineError
 
 NARROW: dict[str, dict[str, Any]] = {
@@ -99,13 +100,7 @@ class _Version(argparse.Action):
 
 def _add(commands: Any, name: str, help: str, about: str, example: str, command: Command) -> argparse.ArgumentParser:
     """One command with its explanation and its examples."""
-    added: argparse.ArgumentParser = commands.add_parser(
-        name,
-        help=help,
-        description=about,
-        epilog=f"example:\n{example}",
-        formatter_class=argparse.RawDescriptionHelpFormatter,
-    )
+    added = add_command(commands, name, help, about, example)
     added.set_defaults(command=command)
     return added
 
@@ -131,7 +126,7 @@ def _add_demo(commands: Any) -> None:
     )
     example = "  strandline demo --seconds 20"
     demo = _add(commands, "demo", "see it at work on an invented feed", about, example, _demo)
-    demo.add_argument("--seconds", type=seconds, default=60, metavar="N", help="how long it runs (default: 60)")
+    demo.add_argument("--seconds", type=demo_seconds, default=60, metavar="N", help="how long it runs (default: 60)")
 
 
 def _add_check(commands: Any) -> None:
@@ -215,7 +210,7 @@ def _add_advise(commands: Any) -> None:
     advise.add_argument("--learn", type=amount, default=2 / 3, metavar="PART", help="to choose on (default: 0.667)")
     advise.add_argument("--clock", choices=("event", "arrival"), help="(default: the captured feed's, else event)")
     advise.add_argument("--idle-after", type=hold, metavar="TIME", help="(default: the captured feed's, else 30s)")
-    advise.add_argument("--sources", type=count, default=4, metavar="N", help="sources to look at (default: 4)")
+    advise.add_argument("--sources", type=rows, default=4, metavar="N", help="sources to look at (default: 4)")
     advise.add_argument("--quick", action="store_true", help="only the choice: no other slacks, no sources")
     advise.add_argument("--reordering", action="store_true", help="figures of RFC 4737 and RFC 5236 as well")
     advise.add_argument("--sequence", metavar="POINTER", help="where events are numbered: what was lost, and what late")
@@ -230,7 +225,7 @@ def _add_lane(commands: Any, lane: str, things: str, thing: str, narrow: str) ->
     example = f"  strandline {lane} list --feed river-gauges --since 1h"
     about = f"Shows {things}, the oldest first.\nThe service may run meanwhile; it is not held up."
     listing = _add(acts, "list", f"show each {thing}", about, example, _on_lane("list_rows", lane))
-    listing.add_argument("--limit", type=count, default=100, metavar="N", help="rows at most (default: 100)")
+    listing.add_argument("--limit", type=rows, default=100, metavar="N", help="rows at most (default: 100)")
     example = f"  strandline {lane} export --feed river-gauges > {lane}.ndjson"
     about = f"Writes {things} to stdout,\neach as the line that came; with --json what is known of it as well."
     export = _add(acts, "export", "write them out, one per line", about, example, _on_lane("export_rows", lane))
@@ -252,8 +247,8 @@ def _add_lane(commands: Any, lane: str, things: str, thing: str, narrow: str) ->
 
 
 def _add_again(acts: Any, lane: str, things: str, narrow: str) -> None:
-    """`late resend`, `refused resend`, `quarantine redrive`: acts of the running service."""
-    act = "redrive" if lane == "quarantine" else "resend"
+    """`late resend`, `refused resend`, `quarantine readmit`: acts of the running service."""
+    act = "readmit" if lane == "quarantine" else "resend"
     example = f"  strandline {lane} {act} --feed river-gauges --through 120"
     if act == "resend":
         short = "have a sink take them once more"
@@ -270,9 +265,8 @@ def _add_again(acts: Any, lane: str, things: str, narrow: str) -> None:
     again.add_argument("--feed", required=True, metavar="NAME", help="the feed")
     again.add_argument("--after", type=int, default=0, metavar="NUMBER", help="only those after this number")
     again.add_argument("--through", type=int, default=2**63 - 1, metavar="NUMBER", help="up to and including this one")
-    again.add_argument("--url", default="http://127.0.0.1:8600", help="the service (default: http://127.0.0.1:8600)")
     again.add_argument("--json", action="store_true", help="the answer as JSON")
-    add_access(again)
+    add_service(again)
     if act == "resend":
         again.add_argument("--sink", required=True, metavar="NAME", help="the sink, which must take repairs")
     else:
@@ -286,22 +280,6 @@ def _again(lane: str, act: str) -> Command:
         return again(options, lane, act)
 
     return command
-
-
-def seconds(text: str) -> int:
-    """A number of seconds, for argparse."""
-    given = int(text)
-    if not 8 <= given <= 3_600:
-        raise argparse.ArgumentTypeError(f"{text} is outside of 8 to 3600 seconds")
-    return given
-
-
-def count(text: str) -> int:
-    """A number of rows, for argparse."""
-    given = int(text)
-    if not 1 <= given <= 10_000:
-        raise argparse.ArgumentTypeError(f"{text} is outside of 1 to 10000")
-    return given
 
 
 def _serve(options: argparse.Namespace) -> int:

@@ -19,9 +19,9 @@ import aiohttp
 import msgspec
 
 from .cli_answers import FINE, WRONG_USE, complain
-from .cli_lanes import since_ns
 from .cli_progress import bar
-from .client_access import Caller, address_of, caller_of, is_address, refusal
+from .cli_values import instant_ns
+from .client_access import Caller, address_of, caller_of, detail_of, feed_address, is_address, refusal
 from .errors import CaptureError, ConfigError
 from .journal.disk import LocalDisk
 from .replay.capture import Capture, CaptureWriter
@@ -96,10 +96,7 @@ def _from_folder(folder: Path, options: argparse.Namespace) -> None:
 
 
 def _instant(option: str, text: str | None, now_ns: int) -> int | None:
-    try:
-        return since_ns(text, now_ns)
-    except ConfigError as error:
-        raise ConfigError([fault.replace("--since", option) for fault in error.faults]) from None
+    return None if text is None else instant_ns(option, text, now_ns)
 
 
 def _from_file(path: Path, options: argparse.Namespace) -> None:
@@ -130,7 +127,7 @@ def _from_service(url: str, options: argparse.Namespace) -> None:
     if not options.feed:
         raise ConfigError([f"{url}: --feed is missing: the name of the feed to record"])
     query = {"seconds": str(options.seconds), "events": "0" if options.without_events else "1"}
-    address = f"{url.rstrip('/')}/v1/feeds/{options.feed}/capture"
+    address = feed_address(url, options.feed, "capture")
     shown = caller_of(options, url, os.environ)
     out: Path = options.out
     with out.open("xb") as file, bar("recorded", "s", options.seconds) as tell:
@@ -155,7 +152,9 @@ async def _stream(address: str, query: dict[str, str], file: BinaryIO, tell: obj
             session.get(address, params=query, ssl=shown.context or True) as answer,
         ):
             if answer.status != 200:
-                code, why = refusal(answer.status, _detail(await answer.text()), shown)
+                content = await answer.read()
+                told = detail_of(content) or content[:500].decode(errors="replace")
+                code, why = refusal(answer.status, told, shown)
                 told = f"{address} answered {answer.status}: {why}"
                 raise ConfigError([told]) if code == WRONG_USE else CaptureError(told)
             async for piece in answer.content.iter_chunked(PIECE_BYTES):
@@ -166,13 +165,6 @@ async def _stream(address: str, query: dict[str, str], file: BinaryIO, tell: obj
         raise CaptureError(f"{address}: the recording ended early ({error}); what came is in the file") from error
     except (aiohttp.ClientError, TimeoutError) as error:
         raise CaptureError(f"{address} cannot be reached: {error}") from error
-
-
-def _detail(text: str) -> str:
-    try:
-        return str(msgspec.json.decode(text)["detail"])
-    except (msgspec.DecodeError, LookupError, TypeError):
-        return text[:500]
 
 
 def _say(options: argparse.Namespace, writer: CaptureWriter) -> None:

@@ -8,15 +8,13 @@ from __future__ import annotations
 import argparse
 import json
 import sys
-import time
 from typing import Any
 from urllib.parse import urlencode
 
 from .cli_answers import FINE, complain, write_table
-from .cli_values import add_access
+from .cli_options import add_command, add_service
+from .cli_values import duration, holds, stretch
 
-URL = "http://127.0.0.1:8600"
-HOLDS_AT_MOST = 2_000  # as the service
 # Of several sources one is always furthest behind, a second or two at a time: ten healthy minutes gave 280 such rows.
 AT_LEAST = "10s"
 
@@ -32,37 +30,26 @@ def add(commands: Any) -> None:
         "not; 3 not reached, or it could not answer now."
     )
     example = (
-        "example:\n"
         "  strandline holds --feed river-gauges --from 8h --totals\n"
         "  strandline holds --feed river-gauges --from 2026-05-01T02:00:00Z --to 2026-05-01T04:00:00Z"
     )
-    holds = commands.add_parser(
-        "holds",
-        help="who held a feed, when, and why",
-        description=about,
-        epilog=example,
-        formatter_class=argparse.RawDescriptionHelpFormatter,
-    )
-    holds.add_argument("--feed", required=True, metavar="NAME", help="the feed")
-    holds.add_argument("--from", dest="from_time", metavar="TIME", help="since: 8h ago, or an RFC 3339 time")
-    holds.add_argument("--to", dest="to_time", metavar="TIME", help="until: 1h ago, or an RFC 3339 time")
-    holds.add_argument("--limit", type=_count, default=500, metavar="N", help="holds at most (default: 500)")
+    asked = add_command(commands, "holds", "who held a feed, when, and why", about, example)
+    asked.add_argument("--feed", required=True, metavar="NAME", help="the feed")
+    asked.add_argument("--from", dest="from_time", metavar="TIME", help="since: 8h ago, or an RFC 3339 time")
+    asked.add_argument("--to", dest="to_time", metavar="TIME", help="until: 1h ago, or an RFC 3339 time")
+    asked.add_argument("--limit", type=holds, default=500, metavar="N", help="holds at most (default: 500)")
     shortest = "only holds that lasted so long (default: 10s); 0s: all"
-    holds.add_argument("--at-least", type=_duration, default=AT_LEAST, metavar="TIME", help=shortest)
-    holds.add_argument("--totals", action="store_true", help="how long each held it, instead of each hold")
-    holds.add_argument("--url", default=URL, help=f"the service (default: {URL})")
-    holds.add_argument("--json", action="store_true", help="the whole answer as one JSON object")
-    add_access(holds)
-    holds.set_defaults(command=_holds)
+    asked.add_argument("--at-least", type=duration, default=AT_LEAST, metavar="TIME", help=shortest)
+    asked.add_argument("--totals", action="store_true", help="how long each held it, instead of each hold")
+    asked.add_argument("--json", action="store_true", help="the whole answer as one JSON object")
+    add_service(asked)
+    asked.set_defaults(command=_holds)
 
 
 def _holds(options: argparse.Namespace) -> int:
     from .cli_acts import ask  # noqa: PLC0415 - --help needs none of it
 
-    query = {"limit": str(options.limit), "at_least": options.at_least}
-    for name, text in (("from", options.from_time), ("to", options.to_time)):
-        if text is not None:
-            query[name] = _instant(f"--{name}", text)
+    query = {"limit": str(options.limit), "at_least": options.at_least} | stretch(options)
     answer = ask(options, f"holds?{urlencode(query)}")
     if isinstance(answer, int):
         return answer
@@ -103,38 +90,3 @@ def _who(row: dict[str, Any]) -> str:
 
 def _for(seconds: float) -> str:
     return f"{seconds:.1f}s" if seconds < 600 else f"{seconds / 60:.0f}m"
-
-
-def _instant(option: str, text: str) -> str:
-    """A time as the service takes it: so long ago, or one that is given. Raises ConfigError."""
-    from .config_units import duration_ns  # noqa: PLC0415
-    from .errors import ConfigError  # noqa: PLC0415
-    from .ingest.timestamps import format_rfc3339, parse_rfc3339  # noqa: PLC0415
-
-    try:
-        return format_rfc3339(time.time_ns() - duration_ns(text))
-    except ValueError:
-        pass
-    try:
-        return format_rfc3339(parse_rfc3339(text))
-    except ValueError:
-        says = f"{option} {text!a} is neither a duration such as 8h nor a time such as 2026-01-31T03:00:00Z"
-        raise ConfigError([says]) from None
-
-
-def _duration(text: str) -> str:
-    """A duration, as it was written: the service reads it. For argparse."""
-    from .config_units import duration_ns  # noqa: PLC0415
-
-    try:
-        duration_ns(text)
-    except ValueError as error:
-        raise argparse.ArgumentTypeError(f"{text!a} {error}") from None
-    return text
-
-
-def _count(text: str) -> int:
-    given = int(text) if text.isascii() and text.isdecimal() and len(text) < 10 else 0
-    if not 1 <= given <= HOLDS_AT_MOST:
-        raise argparse.ArgumentTypeError(f"{text!a} is outside of 1 to {HOLDS_AT_MOST:,}")
-    return given

@@ -18,10 +18,10 @@ from typing import Any
 import msgspec
 
 from .cli_answers import FINE, chosen_file, complain, write_table
+from .cli_values import instant_ns
 from .config import load
-from .config_units import duration_ns
 from .errors import ConfigError, StrandlineError
-from .ingest.timestamps import format_rfc3339, parse_rfc3339
+from .ingest.timestamps import format_rfc3339
 from .sinks.lanes import (
     ROWS_AT_MOST,
     KeptLane,
@@ -97,13 +97,7 @@ def lanes_path(options: argparse.Namespace) -> Path:
 
 def since_ns(text: str | None, now_ns: int) -> int | None:
     """The instant that --since means: so long ago, or an RFC 3339 time. Raises ConfigError."""
-    if text is None:
-        return None
-    with contextlib.suppress(ValueError):
-        return now_ns - duration_ns(text)
-    with contextlib.suppress(ValueError):
-        return parse_rfc3339(text)
-    raise ConfigError([f"--since {text!a} is neither a duration such as 1h nor a time such as 2026-01-31T03:00:00Z"])
+    return None if text is None else instant_ns("--since", text, now_ns)
 
 
 def _reader(options: argparse.Namespace, lane: KeptLane) -> Callable[[int, int], Sequence[Row]]:

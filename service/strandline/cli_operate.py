@@ -14,8 +14,8 @@ from typing import Any
 from urllib.parse import quote
 
 from .cli_answers import FINE, harmless
-from .cli_holds import URL, _duration
-from .cli_values import add_access
+from .cli_options import add_command, add_service
+from .cli_values import duration
 from .errors import ConfigError
 
 Told = tuple[str, dict[str, Any], str]  # where to send it, the body, and what is true once it is done
@@ -42,8 +42,8 @@ def add(commands: Any) -> None:
     excuse.add_argument("--source", required=True, metavar="NAME", help="the source")
     _add(acts, "drain", "release all that is held, in order", "--reason 'the feed has ended'", _drain)
     slack = _add(acts, "slack", "another slack for a time", f"--slack 8s --for 30m {why}", _slack)
-    slack.add_argument("--slack", type=_duration, metavar="TIME", help="the slack, such as 8s; at most hold_at_most")
-    slack.add_argument("--for", dest="for_time", type=_duration, metavar="TIME", help="for how long: 30m; at most 24h")
+    slack.add_argument("--slack", type=duration, metavar="TIME", help="the slack, such as 8s; at most hold_at_most")
+    slack.add_argument("--for", dest="for_time", type=duration, metavar="TIME", help="for how long: 30m; at most 24h")
     slack.add_argument("--end", action="store_true", help="end it now: the configured slack holds again")
     pause = _add(acts, "pause", "hand a sink nothing more until it is resumed", f"--sink sqlite {why}", _pause)
     resume = _add(acts, "resume", "hand a sink batches again", "--sink sqlite --reason 'it is mended'", _resume)
@@ -52,18 +52,12 @@ def add(commands: Any) -> None:
 
 
 def _add(acts: Any, name: str, help: str, example: str, told: Act) -> argparse.ArgumentParser:
-    added: argparse.ArgumentParser = acts.add_parser(
-        name,
-        help=help,
-        description=f"{help[0].upper()}{help[1:]}.",
-        epilog=f"example:\n  strandline act {name} --feed river-gauges {example}",
-        formatter_class=argparse.RawDescriptionHelpFormatter,
-    )
+    whole = f"  strandline act {name} --feed river-gauges {example}"
+    added = add_command(acts, name, help, f"{help[0].upper()}{help[1:]}.", whole)
     added.add_argument("--feed", required=True, metavar="NAME", help="the feed")
     added.add_argument("--reason", required=True, type=_reason, metavar="WHY", help="why; it is kept with the act")
     added.add_argument("--who", default="", metavar="WHO", help="who does it (with a token: the token's name)")
-    added.add_argument("--url", default=URL, help=f"the service (default: {URL})")
-    add_access(added)
+    add_service(added)
     added.set_defaults(command=_command(told))
     return added
 

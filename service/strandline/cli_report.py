@@ -14,8 +14,8 @@ from typing import TYPE_CHECKING, Any
 from urllib.parse import urlencode
 
 from .cli_answers import FINE, NOT_REACHED, complain
-from .cli_holds import URL, _instant
-from .cli_values import add_access
+from .cli_options import add_command, add_service
+from .cli_values import stretch
 from .errors import ConfigError
 
 if TYPE_CHECKING:
@@ -35,26 +35,18 @@ def add(commands: Any) -> None:
         "not; 3 not reached, or it could not answer now."
     )
     example = (
-        "example:\n"
         "  strandline report --feed river-gauges --from 2h\n"
         "  strandline report --feed river-gauges --from 2h --out .\n"
         "  strandline report --feed river-gauges --from 2026-05-01T02:00:00Z --to 2026-05-01T04:00:00Z"
     )
-    report = commands.add_parser(
-        "report",
-        help="what happened to a feed, for an incident's ticket",
-        description=about,
-        epilog=example,
-        formatter_class=argparse.RawDescriptionHelpFormatter,
-    )
+    report = add_command(commands, "report", "what happened to a feed, for an incident's ticket", about, example)
     report.add_argument("--feed", required=True, metavar="NAME", help="the feed")
     since, until = "since: 2h ago, or an RFC 3339 time (default: 1h)", "until, likewise (default: now)"
     report.add_argument("--from", dest="from_time", metavar="TIME", help=since)
     report.add_argument("--to", dest="to_time", metavar="TIME", help=until)
     report.add_argument("--out", type=Path, metavar="DIR|FILE", help="a folder, FILE.html or FILE.md")
-    report.add_argument("--url", default=URL, help=f"the service (default: {URL})")
     report.add_argument("--json", action="store_true", help="the facts and the summary as one JSON object")
-    add_access(report)
+    add_service(report)
     report.set_defaults(command=_report)
 
 
@@ -62,10 +54,7 @@ def _report(options: argparse.Namespace) -> int:
     from .cli_acts import ask  # noqa: PLC0415 - --help needs none of it
 
     _check(options.out)
-    query = {"format": "json"}
-    for name, text in (("from", options.from_time), ("to", options.to_time)):
-        if text is not None:
-            query[name] = _instant(f"--{name}", text)
+    query = {"format": "json"} | stretch(options)
     answer = ask(options, f"report?{urlencode(query)}")
     if isinstance(answer, int):
         return answer

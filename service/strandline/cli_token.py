@@ -6,6 +6,8 @@ import argparse
 import sys
 from typing import Any
 
+from .cli_options import add_command
+
 ROLE_NAMES = ("ingest", "read", "operate")
 
 
@@ -18,13 +20,7 @@ def add(commands: Any) -> None:
         "Those hold only its hash. Have the service read them with SIGHUP. Touches no file and no service."
     )
     example = "  strandline token make --name gateway-north --role ingest --feed river-gauges"
-    make = acts.add_parser(
-        "make",
-        help="print a new token and its entry",
-        description=about,
-        epilog=f"example:\n{example}",
-        formatter_class=argparse.RawDescriptionHelpFormatter,
-    )
+    make = add_command(acts, "make", "print a new token and its entry", about, example)
     make.add_argument("--name", required=True, metavar="NAME", help="who it is for; acts are noted under this name")
     make.add_argument(
         "--role", required=True, action="append", choices=ROLE_NAMES, metavar="ROLE",

@@ -7,9 +7,7 @@ from pathlib import Path
 from typing import Any
 
 from .cli_answers import DEFAULT_FILE
-from .cli_values import add_access
-
-URL = "http://127.0.0.1:8600"
+from .cli_options import URL, add_access, add_command
 
 
 def add(commands: Any) -> None:
@@ -24,18 +22,11 @@ def add(commands: Any) -> None:
         "could not answer now."
     )
     example = (
-        "example:\n"
         "  strandline trace --feed river-gauges --id 8e03978e\n"
         "  strandline trace --feed river-gauges --time 2026-05-01T10:00:04Z --source weir-3\n"
         "  strandline trace --feed river-gauges --id 8e03978e --data-dir strandline-data"
     )
-    trace = commands.add_parser(
-        "trace",
-        help="where an event is now, and why",
-        description=about,
-        epilog=example,
-        formatter_class=argparse.RawDescriptionHelpFormatter,
-    )
+    trace = add_command(commands, "trace", "where an event is now, and why", about, example)
     trace.add_argument("--feed", required=True, metavar="NAME", help="the feed")
     what = trace.add_mutually_exclusive_group(required=True)
     what.add_argument("--id", metavar="ID", help="the event's id, for a feed with an `id`")

@@ -3,15 +3,13 @@
 from __future__ import annotations
 
 import argparse
-from pathlib import Path
+import contextlib
+import time
 
 from .config_units import duration_ns
+from .errors import ConfigError
 
-
-def add_access(command: argparse.ArgumentParser) -> None:
-    """Options of a command that calls a service which may ask for a token, or speak TLS."""
-    command.add_argument("--token-file", type=Path, metavar="FILE", help="the token for it (default: STRANDLINE_TOKEN)")
-    command.add_argument("--ca", type=Path, metavar="FILE", help="for https: the certificates to trust (PEM)")
+HOLDS_AT_MOST = 2_000  # as the service
 
 
 def hold(text: str) -> float:
@@ -20,6 +18,33 @@ def hold(text: str) -> float:
         return float(duration_ns(text))
     except ValueError as error:
         raise argparse.ArgumentTypeError(f"{text!a} {error}") from None
+
+
+def duration(text: str) -> str:
+    """A duration, as it was written: the service reads it."""
+    hold(text)
+    return text
+
+
+def instant_ns(option: str, text: str, now_ns: int) -> int:
+    """The instant that an option names: so long ago, or an RFC 3339 time. Raises ConfigError."""
+    from .ingest.timestamps import parse_rfc3339  # noqa: PLC0415 - --help needs none of it
+
+    with contextlib.suppress(ValueError):
+        return now_ns - duration_ns(text)
+    with contextlib.suppress(ValueError):
+        return parse_rfc3339(text)
+    says = f"{option} {text!a} is neither a duration such as 1h nor a time such as 2026-01-31T03:00:00Z"
+    raise ConfigError([says])
+
+
+def stretch(options: argparse.Namespace) -> dict[str, str]:
+    """What --from and --to say, as a service takes it. Raises ConfigError."""
+    from .ingest.timestamps import format_rfc3339  # noqa: PLC0415
+
+    given = (("from", options.from_time), ("to", options.to_time))
+    now_ns = time.time_ns()
+    return {name: format_rfc3339(instant_ns(f"--{name}", text, now_ns)) for name, text in given if text is not None}
 
 
 def amount(text: str) -> float:
@@ -44,6 +69,21 @@ def pace(text: str) -> float:
     if not 0.001 <= speed <= 1_000_000:
         raise argparse.ArgumentTypeError(f"{text!a} is none of recorded, max, or 0.001x to 1000000x")
     return speed
+
+
+def demo_seconds(text: str) -> int:
+    """How long the demonstration runs."""
+    return _whole(text, 8, 3_600)
+
+
+def rows(text: str) -> int:
+    """How many rows."""
+    return _whole(text, 1, 10_000)
+
+
+def holds(text: str) -> int:
+    """How many holds."""
+    return _whole(text, 1, HOLDS_AT_MOST)
 
 
 def connections(text: str) -> int:

@@ -12,12 +12,15 @@ import ssl
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
-from urllib.parse import urlsplit
+from urllib.parse import quote, urlsplit
+
+import msgspec
 
 from .cli_answers import NO, NOT_REACHED, WRONG_USE, complain
 from .config_overrides import TOKEN_VARIABLE
 from .errors import ConfigError
 from .private_files import read_private
+from .tls import trusting
 
 _TOKEN = re.compile(r"[A-Za-z0-9._~+/-]{1,4096}=*", re.ASCII)  # b64token of RFC 6750, 2.1
 _HOST_AND_PORT = re.compile(r"(\[[0-9A-Fa-f:.]+\]|[A-Za-z0-9._-]+)(:[0-9]{1,5})?/?", re.ASCII)
@@ -49,6 +52,22 @@ def is_address(text: str) -> bool:
     """Whether a text that may also name a file is an address: http://..., https://..., or HOST:PORT with its port."""
     found = _HOST_AND_PORT.fullmatch(text)
     return text.startswith(("http://", "https://")) or (found is not None and found[2] is not None)
+
+
+def feed_address(url: str, feed: str, path: str) -> str:
+    """Where a service has something about a feed, whose name never becomes a part of the path. Raises ConfigError."""
+    try:
+        return f"{url.rstrip('/')}/v1/feeds/{quote(feed, safe='')}/{path}"
+    except UnicodeEncodeError:
+        raise ConfigError([f"--feed {feed!a} is not UTF-8"]) from None
+
+
+def detail_of(content: bytes) -> str:
+    """The sentence in an answer that is no success; nothing where it holds none."""
+    try:
+        return str(msgspec.json.decode(content)["detail"])
+    except (msgspec.DecodeError, LookupError, TypeError):
+        return ""
 
 
 def refusal(status: int, detail: str, shown: Caller) -> tuple[int, str]:
@@ -83,7 +102,7 @@ def caller(url: str, token_file: Path | None, ca: Path | None, environ: Mapping[
     if token and parts.scheme != "https" and host not in _THIS_MACHINE:
         complain(f"warning: the token goes to {host} unencrypted, and whoever sees it can use it; use https://...")
     headers = {"Authorization": f"Bearer {token}"} if token else {}
-    return Caller(headers, _trusting(ca) if ca is not None else None)
+    return Caller(headers, trusting(ca, "--ca") if ca is not None else None)
 
 
 def _token(text: str, place: str) -> str:
@@ -92,13 +111,3 @@ def _token(text: str, place: str) -> str:
     if _TOKEN.fullmatch(token) is None:
         raise ConfigError([f"{place}: holds no token: one line is expected, as `strandline token make` printed it"])
     return token
-
-
-def _trusting(ca: Path) -> ssl.SSLContext:
-    try:
-        context = ssl.create_default_context(cafile=ca)
-    except (OSError, ValueError) as error:
-        reason = getattr(error, "strerror", None) or str(error)
-        raise ConfigError([f"--ca {ca}: is no file of certificates (PEM): {reason}"]) from None
-    context.minimum_version = ssl.TLSVersion.TLSv1_2
-    return context

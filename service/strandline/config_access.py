@@ -14,7 +14,7 @@ from typing import Annotated
 import msgspec
 from msgspec import field
 
-from .config_kinds import Kind, path, quoted, shown
+from .config_kinds import Kind, list_from_text, list_text, path, quoted, shown
 from .config_read import Key, Reading
 
 NAMES_AT_MOST = 100
@@ -49,10 +49,7 @@ def _names(about: str, pattern: re.Pattern[str], example: str) -> Kind:
                 raise ValueError(f"holds {shown(item)}: write {quoted(example)}")
         return tuple(item.lower() for item in raw)
 
-    def from_text(text: str) -> object:
-        return [item.strip() for item in text.split(",")] if text.strip() else []
-
-    return Kind(about, read, lambda items: f"[{', '.join(map(quoted, items))}]", from_text)
+    return Kind(about, read, list_text, list_from_text)
 
 
 class Access(msgspec.Struct, frozen=True):

@@ -9,7 +9,7 @@ import re
 from collections import Counter
 from urllib.parse import urlsplit
 
-from .config_kinds import Kind, quoted, shown
+from .config_kinds import Kind, list_from_text, list_text, quoted, shown
 
 ITEMS_AT_MOST = 100
 CHARACTERS_AT_MOST = 1024
@@ -60,7 +60,7 @@ def broker_addresses(*schemes: str) -> Kind:
         return items
 
     about = f"list of {' or '.join(f'`{scheme}://host:port`' for scheme in schemes)}"
-    return Kind(about, read, _list, _from_text, secret=True)
+    return Kind(about, read, list_text, list_from_text, secret=True)
 
 
 def broker_name(noun: str) -> Kind:
@@ -84,7 +84,7 @@ def subjects() -> Kind:
                 raise ValueError(f'holds {shown(item)}, which is no subject: such as "river.north" or "river.>"')
         return items
 
-    return Kind("list of subjects, `*` and a last `>` allowed", read, _list, _from_text)
+    return Kind("list of subjects, `*` and a last `>` allowed", read, list_text, list_from_text)
 
 
 def subject_prefix() -> Kind:
@@ -108,7 +108,7 @@ def topics() -> Kind:
                 raise ValueError(f"holds {shown(item)}, {fault}")
         return items
 
-    return Kind("list of topic filters, `+` and a last `#` allowed", read, _list, _from_text)
+    return Kind("list of topic filters, `+` and a last `#` allowed", read, list_text, list_from_text)
 
 
 def _topic_fault(item: str) -> str:
@@ -141,11 +141,3 @@ def _items(raw: object, example: str, *, none: bool = False) -> tuple[str, ...]:
     if len(set(raw)) < len(raw):
         raise ValueError(f"names {shown(Counter(raw).most_common(1)[0][0])} twice")
     return tuple(raw)
-
-
-def _list(items: tuple[str, ...]) -> str:
-    return f"[{', '.join(map(quoted, items))}]"
-
-
-def _from_text(text: str) -> object:
-    return [item.strip() for item in text.split(",")] if text.strip() else []

@@ -9,7 +9,7 @@ from __future__ import annotations
 import difflib
 import re
 from collections import Counter
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, NamedTuple
@@ -210,7 +210,7 @@ def texts(noun: str, bytes_at_most: int) -> Kind:
             raise ValueError(f"names {shown(Counter(raw).most_common(1)[0][0])} twice")
         return tuple(raw)
 
-    return Kind(f"list of {noun}s", read, lambda items: f"[{', '.join(map(quoted, items))}]", _list_from_text)
+    return Kind(f"list of {noun}s", read, list_text, list_from_text)
 
 
 def identifier() -> Kind:
@@ -362,5 +362,11 @@ def _number_from_text(text: str) -> object:
     return float(text) if re.fullmatch(r"[0-9]{1,10}\.[0-9]{1,30}", text, re.ASCII) else text
 
 
-def _list_from_text(text: str) -> object:
+def list_text(items: Iterable[str]) -> str:
+    """A list of texts as TOML has it."""
+    return f"[{', '.join(map(quoted, items))}]"
+
+
+def list_from_text(text: str) -> object:
+    """The list in a variable: its texts stand between commas."""
     return [item.strip() for item in text.split(",")] if text.strip() else []

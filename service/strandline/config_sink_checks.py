@@ -10,7 +10,7 @@ from collections.abc import Iterable, Iterator
 from .config_intake_checks import check_secrets
 from .config_kinds import quoted
 from .config_read import Place, Reading
-from .config_sinks import HttpConfig, JetstreamSink, ParquetConfig, PostgresConfig, RemoteWriteConfig, SinkConfig
+from .config_sinks import HttpConfig, JetstreamConfig, ParquetConfig, PostgresConfig, RemoteWriteConfig, SinkConfig
 from .sinks.parquet_columns import OWN, fault_of
 from .sinks.postgres_columns import OWN_TABLES, settled
 
@@ -29,7 +29,7 @@ def check_sinks(sinks: Iterable[tuple[int, Place, SinkConfig]], reading: Reading
             _check_tables(sink, place, reading)
         if isinstance(sink, HttpConfig | RemoteWriteConfig):
             _check_secrets(sink, place, reading)
-        if isinstance(sink, JetstreamSink):
+        if isinstance(sink, JetstreamConfig):
             check_secrets(sink, place, reading)
         if isinstance(sink, RemoteWriteConfig):
             _check_series(sink, place, reading)
@@ -48,7 +48,7 @@ def _targets(sink: SinkConfig) -> Iterator[tuple[str, tuple[str, ...]]]:
     if isinstance(sink, PostgresConfig):
         yield "table", (sink.dsn, sink.schema, sink.table)
         yield "late_table", (sink.dsn, sink.schema, sink.late_table)
-    if isinstance(sink, JetstreamSink):
+    if isinstance(sink, JetstreamConfig):
         yield from (("subject", (url, sink.subject)) for url in sink.urls)
     if isinstance(sink, HttpConfig):
         yield "url", (sink.url,)

@@ -233,7 +233,7 @@ class RemoteLateConfig(LateConfig, frozen=True):
 
 
 class RemoteWriteConfig(SinkConfig, frozen=True, kw_only=True):
-    """Samples of series to a receiver of remote writes 1.0, in order. Needs the extra `remote_write`."""
+    """Samples of series to a receiver of remote writes 1.0, in order. Needs the extra `remote-write`."""
 
     kind: ClassVar[str] = "remote_write"
     url: Annotated[str, Key(url(), "the receiver's address for writes, such as `http://127.0.0.1:9090/api/v1/write`")]
@@ -263,7 +263,7 @@ class RemoteWriteConfig(SinkConfig, frozen=True, kw_only=True):
         return super().options() | {"series": tuple(series.rule() for series in self.series)}
 
 
-class JetstreamSink(SinkConfig, frozen=True, kw_only=True):
+class JetstreamConfig(SinkConfig, frozen=True, kw_only=True):
     """Messages of NDJSON in a JetStream stream, in order, whose numbers tell a repeat. Needs the extra `nats`."""
 
     kind: ClassVar[str] = "jetstream"
@@ -311,7 +311,7 @@ SINK_KINDS: dict[str, type[SinkConfig]] = {
     "postgres": PostgresConfig,
     "http": HttpConfig,
     "remote_write": RemoteWriteConfig,
-    "jetstream": JetstreamSink,
+    "jetstream": JetstreamConfig,
     "parquet": ParquetConfig,
 }
 SINK_KINDS_LATER: tuple[str, ...] = ()  # kinds that are promised; named in the fault, so that nobody hunts a typo

@@ -5,12 +5,14 @@ Times leave as RFC 3339 text, ages in seconds, for people; `*_ns` for programs. 
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict
 from typing import Any
 
 from .core.columns import TIME_MIN
 from .core.records import ActRecord
 from .core.view import HOLD_WHYS, View
+from .hops import Hop
 from .ingest.timestamps import format_rfc3339
 from .intake.starting import intake_documents, intake_stalls
 from .runtime import FeedRuntime
@@ -31,11 +33,11 @@ def age_s(now_ns: int, then_ns: int | None) -> float | None:
 
 def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
     """One feed, as GET /v1/feeds/{feed} answers it."""
-    view = runtime.view()
+    view, hops = runtime.view(), runtime.hops()
     return {
         "name": view.name,
         "now": time_text(view.now_ns),
-        "state": state_of(runtime),
+        "state": state_of(runtime, stalls_of(runtime, view, hops)),
         "failure": runtime.failure,
         "clock": view.clock,
         "order": view.order,
@@ -62,7 +64,7 @@ def feed_document(runtime: FeedRuntime) -> dict[str, Any]:
                 "oldest_age_s": age_s(view.now_ns, hop.oldest_ns),
                 "last_advanced": time_text(hop.advanced_ns),
             }
-            for name, hop in runtime.hops().items()
+            for name, hop in hops.items()
         },
         "repairs": {name: asdict(repairer.state()) for name, repairer in runtime.repairers.items()},
         "intake": intake_documents(runtime),
@@ -156,24 +158,23 @@ def _journal(runtime: FeedRuntime) -> dict[str, Any]:
     }
 
 
-def state_of(runtime: FeedRuntime) -> str:
-    """In a word: "failed", "stopping", "stalled" or "running"."""
+def state_of(runtime: FeedRuntime, stalls: Sequence[str]) -> str:
+    """In a word: "failed", "stopping", "stalled" or "running"; `stalls` as `stalls_of` found them."""
     if runtime.failure is not None:
         return "failed"
     if not runtime.accepting:
         return "stopping"
-    return "stalled" if stalls_of(runtime) else "running"
+    return "stalled" if stalls else "running"
 
 
-def stalls_of(runtime: FeedRuntime) -> list[str]:
-    """Sentences about work that waits while nothing advances; empty when all is well."""
-    view, found = runtime.view(), intake_stalls(runtime, STALLED_AFTER_S)
+def stalls_of(runtime: FeedRuntime, view: View, hops: Mapping[str, Hop]) -> list[str]:
+    """Sentences about work that waits while nothing advances; empty when all is well. View and hops as they are now."""
+    found = intake_stalls(runtime, STALLED_AFTER_S)
     bound_s = STALLED_AFTER_S + runtime.config.hold_at_most_ns / 1e9
     held_s = age_s(view.now_ns, view.held_oldest_ns)
     if held_s is not None and held_s > bound_s:
         found.append(f"an event has been held for {held_s:.0f} s, hold_at_most is {bound_s - STALLED_AFTER_S:.0f} s")
-    journal = runtime.hops()["journal"]
-    waits_s = age_s(view.now_ns, journal.oldest_ns)
+    waits_s = age_s(view.now_ns, hops["journal"].oldest_ns)
     if waits_s is not None and waits_s > STALLED_AFTER_S:
         found.append(f"a request has waited for a sync of the journal for {waits_s:.0f} s: the disk does not answer")
     for name, delivery in runtime.deliveries.items():

@@ -6,7 +6,7 @@ Reads only. The history is told by `core.holds`; here are the question's grammar
 from __future__ import annotations
 
 from collections.abc import Iterable
-from typing import Annotated, Literal
+from typing import Annotated
 
 import msgspec
 from aiohttp import web
@@ -92,7 +92,7 @@ class ActsAnswer(msgspec.Struct):
 async def get_holds(request: web.Request) -> web.Response:
     """Who held the feed: `?from=` and `?to=` (RFC 3339) name a time, `?limit=` and `?at_least=` what is listed."""
     runtime = runtime_of(request)
-    from_ns, to_ns = _instant(request, "from", TIME_MIN), _instant(request, "to", TIME_MAX)
+    from_ns, to_ns = instant(request, "from", TIME_MIN), instant(request, "to", TIME_MAX)
     if from_ns > to_ns:
         raise web.HTTPBadRequest(text="?from= must not be later than ?to=")
     limit, at_least_ns = _limit(request, LIMIT, HOLDS_AT_MOST), _at_least(request)
@@ -176,7 +176,8 @@ def act_row(act: ActRecord) -> ActRow:
     )
 
 
-def _instant(request: web.Request, name: Literal["from", "to"], default: int) -> int:
+def instant(request: web.Request, name: str, default: int) -> int:
+    """An instant of the query, RFC 3339, in ns. Raises HTTPBadRequest where it is none."""
     text = request.query.get(name)
     if text is None:
         return default

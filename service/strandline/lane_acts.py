@@ -1,4 +1,4 @@
-"""What an operator does with the kept lanes: late events and refused ones sent again, lines in quarantine driven again.
+"""What an operator does with the kept lanes: late events and refused ones sent again, lines in quarantine readmitted.
 
 Over HTTP; each act answers when it is done. Rows stay listed until they are forgotten, except lines of the quarantine
 that were taken this time: those are settled, and go.
@@ -18,6 +18,7 @@ from aiohttp import web
 from .core.columns import Arrival, RequestKey
 from .errors import BodyError
 from .ingest.endpoint import read_act, runtime_of
+from .ingest.formats import NDJSON
 from .problems import NotThere, Refused
 from .repairing import Repairer
 from .runtime import FeedRuntime, decoder_of
@@ -36,7 +37,7 @@ class Resend(msgspec.Struct, forbid_unknown_fields=True):
     through: RowNumber = LARGEST
 
 
-class Redrive(msgspec.Struct, forbid_unknown_fields=True):
+class Readmit(msgspec.Struct, forbid_unknown_fields=True):
     """Lines in quarantine numbered above `after` up to `through`, of one reason if given, come in once more."""
 
     after: RowNumber = 0
@@ -68,14 +69,14 @@ async def post_refused_resend(request: web.Request) -> web.Response:
     return web.json_response({"sent": sent})
 
 
-async def post_quarantine_redrive(request: web.Request) -> web.Response:
+async def post_quarantine_readmit(request: web.Request) -> web.Response:
     """Decode lines in quarantine once more, after a fix, and take those that are events now.
 
-    Each line is driven once: what comes into quarantine meanwhile is left for the next run.
+    Each line is tried once: what comes into quarantine meanwhile is left for the next run.
     """
-    runtime, act = runtime_of(request), await read_act(request, Redrive)
-    totals = {"driven": 0, "accepted": 0, "late": 0, "duplicate": 0, "quarantined": 0, "still_faulty": 0}
-    after, path = act.after, runtime.folder / "lanes.db"
+    runtime, act = runtime_of(request), await read_act(request, Readmit)
+    totals = {"tried": 0, "accepted": 0, "late": 0, "duplicate": 0, "quarantined": 0, "still_faulty": 0}
+    after, path = act.after, runtime.lanes_file
     through = min(act.through, await asyncio.to_thread(last_number, path, "quarantine"))
     while True:
         rows = await asyncio.to_thread(quarantine_rows, path, after, ROWS_AT_MOST, act.reason)
@@ -83,13 +84,13 @@ async def post_quarantine_redrive(request: web.Request) -> web.Response:
         if not rows:
             return web.json_response(totals)
         after = rows[-1].number
-        await _drive_again(runtime, rows, path, totals)
+        await _try_again(runtime, rows, path, totals)
 
 
-async def _drive_again(runtime: FeedRuntime, rows: Sequence[QuarantineRow], path: Path, totals: dict[str, int]) -> None:
+async def _try_again(runtime: FeedRuntime, rows: Sequence[QuarantineRow], path: Path, totals: dict[str, int]) -> None:
     """Take the rows that are events now, as one request. The others stay as they are, and no book counts them again."""
     good = _events_now(runtime, rows)
-    totals["driven"] += len(rows)
+    totals["tried"] += len(rows)
     totals["still_faulty"] += len(rows) - len(good)
     if not good:
         return
@@ -97,7 +98,7 @@ async def _drive_again(runtime: FeedRuntime, rows: Sequence[QuarantineRow], path
     arrival, settled = _decoded(runtime, good), [row.number for row in good]
     # A crash between taking the lines and forgetting their rows must not take them twice: the key tells.
     fingerprint = hashlib.blake2b(_body(good), digest_size=16).digest()
-    outcome = await runtime.arrive(arrival, RequestKey(f"redrive {settled[0]} {settled[-1]}", fingerprint))
+    outcome = await runtime.arrive(arrival, RequestKey(f"readmit {settled[0]} {settled[-1]}", fingerprint))
     for name in ("accepted", "late", "duplicate", "quarantined"):
         totals[name] += getattr(outcome, name)
     await asyncio.to_thread(forget_exactly, path, "quarantine", settled)
@@ -105,10 +106,10 @@ async def _drive_again(runtime: FeedRuntime, rows: Sequence[QuarantineRow], path
 
 def _events_now(runtime: FeedRuntime, rows: Sequence[QuarantineRow]) -> list[QuarantineRow]:
     """The rows that the decoder takes and that are not `ahead`. The feed's clock is never behind the one asked here."""
-    arrival, settings = _decoded(runtime, rows), runtime.feed.state.settings
+    arrival = _decoded(runtime, rows)
     still = {fault.line for fault in arrival.faults}
     taken = [row for line, row in enumerate(rows, start=1) if line not in still]
-    ahead = arrival.times > runtime.clock.now_ns() + settings.ahead_limit_ns
+    ahead = arrival.times > runtime.feed.state.settings.newest_at_most_ns(runtime.clock.now_ns())
     return [row for row, is_ahead in zip(taken, ahead.tolist(), strict=True) if not is_ahead]
 
 
@@ -121,7 +122,7 @@ def _decoded(runtime: FeedRuntime, rows: Sequence[QuarantineRow]) -> Arrival:
     try:
         # As many faults as rows are allowed: a request is refused for too many, but these are kept already.
         decoder = decoder_of(runtime.config, faults_at_most=len(rows))
-        return decoder.decode(_body(rows), "application/x-ndjson", sources)
+        return decoder.decode(_body(rows), NDJSON, sources)
     except BodyError as error:
         raise BodyError(
             error.status, error.title, f"{error.detail} (rows {rows[0].number} to {rows[-1].number})"

@@ -19,6 +19,7 @@ from .core.view import sources_of
 from .documents import age_s, feed_document, stalls_of, time_text
 from .errors import JournalError
 from .ingest.endpoint import FEEDS, runtime_of
+from .ingest.formats import NDJSON
 from .problems import problem
 from .replay.recording import SECONDS_AT_MOST, Recording
 from .runtime import FeedRuntime
@@ -75,7 +76,7 @@ async def get_late(request: web.Request) -> web.Response:
     runtime = runtime_of(request)
     rows = await asyncio.to_thread(
         late_rows,
-        runtime.folder / "lanes.db",
+        runtime.lanes_file,
         after=_number(request, "after", 0),
         limit=_limit(request),
         source=request.query.get("source"),
@@ -92,7 +93,7 @@ async def get_quarantine(request: web.Request) -> web.Response:
     """Lines in quarantine, oldest first, a page at a time; bytes that are no UTF-8 are shown with replacements."""
     runtime = runtime_of(request)
     rows = await asyncio.to_thread(
-        quarantine_rows, runtime.folder / "lanes.db", after=_number(request, "after", 0), limit=_limit(request)
+        quarantine_rows, runtime.lanes_file, after=_number(request, "after", 0), limit=_limit(request)
     )
     shown = [
         {**asdict(row), "arrived": time_text(row.arrived_ns), "event": row.event.decode(errors="replace")}
@@ -106,7 +107,7 @@ async def get_refused(request: web.Request) -> web.Response:
     runtime = runtime_of(request)
     rows = await asyncio.to_thread(
         refused_rows,
-        runtime.folder / "lanes.db",
+        runtime.lanes_file,
         after=_number(request, "after", 0),
         limit=_limit(request),
         sink=request.query.get("sink"),
@@ -125,7 +126,7 @@ async def get_ordered(request: web.Request) -> web.StreamResponse:
     if not recent.holds_all_after(number):
         detail = f"batches from {recent.first_number} on are still at hand here; older ones are in the feed's sinks"
         return problem(410, "Gone", detail)
-    response = web.StreamResponse(headers={"Content-Type": "application/x-ndjson", "Cache-Control": "no-store"})
+    response = web.StreamResponse(headers={"Content-Type": NDJSON, "Cache-Control": "no-store"})
     await response.prepare(request)
     try:
         await _listen(runtime, response, number)
@@ -244,7 +245,7 @@ async def get_ready(request: web.Request) -> web.Response:
     """Ready to take events; 503, with the causes, when a feed has failed, is stopping, or waits without advancing."""
     causes, untold = [], False
     for name, runtime in request.app[FEEDS].items():
-        found = [f"feed {name}: {sentence}" for sentence in stalls_of(runtime)]
+        found = [f"feed {name}: {sentence}" for sentence in stalls_of(runtime, runtime.view(), runtime.hops())]
         if runtime.failure is not None:
             found.insert(0, f"feed {name} has stopped: {runtime.failure}")
         elif not runtime.accepting:

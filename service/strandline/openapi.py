@@ -16,8 +16,8 @@ from .core.effects import Outcome
 from .errors import FAULT_REASONS, REFUSALS
 from .hold_answer import ActsAnswer, HoldsAnswer
 from .ingest.endpoint import Promise
-from .ingest.formats import FORMATS
-from .lane_acts import Redrive, Resend
+from .ingest.formats import FORMATS, NDJSON
+from .lane_acts import Readmit, Resend
 from .openapi_access import guarded, schemes
 from .reporting.described import report_path
 from .tracing.described import trace_path
@@ -122,7 +122,7 @@ def _again() -> Json:
     acts = {
         "late/resend": ("Send late events to a sink once more, in repair batches", "Resend"),
         "refused/resend": ("Send what a sink refused once more, in repair batches", "Resend"),
-        "quarantine/redrive": ("Take lines in quarantine in once more, after a fix", "Redrive"),
+        "quarantine/readmit": ("Take lines in quarantine in once more, after a fix", "Readmit"),
     }
     paths = {}
     for path, (summary, schema) in acts.items():
@@ -173,7 +173,7 @@ def _streams() -> Json:
         "/v1/feeds/{feed}/ordered": _get(
             "The ordered output as it is released, without end",
             {
-                **_answer("one JSON line an event", {"type": "string"}, "application/x-ndjson"),
+                **_answer("one JSON line an event", {"type": "string"}, NDJSON),
                 **_problems(400, 404, 410),
             },
             [_FEED, ordered],
@@ -285,7 +285,7 @@ def _paths() -> Json:
 @cache
 def document() -> Json:
     """The whole document."""
-    bodies = (Promise, Excuse, Drain, SetSlack, PauseSink, Resend, Redrive)
+    bodies = (Promise, Excuse, Drain, SetSlack, PauseSink, Resend, Readmit)
     _, components = msgspec.json.schema_components(
         [Outcome, *bodies, HoldsAnswer, ActsAnswer], ref_template="#/components/schemas/{name}"
     )

@@ -9,6 +9,7 @@ import asyncio
 from collections import deque
 from itertools import pairwise
 
+from .bell import Bell
 from .core.columns import Batch
 
 EVENTS_AT_MOST = 500_000
@@ -21,7 +22,7 @@ class Recent:
         self._batches: deque[tuple[Batch, int]] = deque()
         self._events = 0
         self._gone = 0  # batches up to this number are in the window no more
-        self._bell = asyncio.Event()
+        self._bell = Bell()
         self.reached = 0  # number of the last batch that has left
         self.closed = False
 
@@ -38,7 +39,7 @@ class Recent:
         self.reached = max(self.reached, batch.number)
         while self._events > EVENTS_AT_MOST and len(self._batches) > 1:
             self._forget_oldest()
-        self._ring()
+        self._bell.ring()
 
     def forget_before(self, place: int) -> None:
         """The journal no longer holds what lies before this place; batches that need it go, and all before them."""
@@ -69,15 +70,11 @@ class Recent:
     def close(self) -> None:
         """Let everyone who waits go home."""
         self.closed = True
-        self._ring()
-
-    def _ring(self) -> None:
-        bell, self._bell = self._bell, asyncio.Event()
-        bell.set()
+        self._bell.ring()
 
     def bell(self) -> asyncio.Event:
         """Set when the next batch has come. Take it before looking, wait on it after."""
-        return self._bell
+        return self._bell.next
 
     def check(self) -> None:
         """Assert that numbers ascend from what is gone to what was reached, and that the count is right."""

@@ -15,6 +15,7 @@ from collections.abc import Awaitable, Callable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
+from .backoff import backoff_s
 from .core.columns import Batch, Lane
 from .errors import SinkRefused, SinkRetry, StrandlineError
 from .ports import Counting, Lines, Sink
@@ -22,8 +23,6 @@ from .sinks.lanes import ROWS_AT_MOST, LaneStore, late_rows, refused_rows
 from .sinks.repairs import Repair, RepairRow, TakesRepairs, cut
 
 log = logging.getLogger(__name__)
-BACKOFF_BASE_S = 0.1
-BACKOFF_AT_MOST_S = 30.0
 RUNS_AT_MOST = 1000  # of ROWS_AT_MOST rows each, in one resend
 
 
@@ -182,10 +181,9 @@ class Repairer:
                     self._note(refused_batches=self._state.refused_batches + 1, last_error=str(error))
                     break
                 except SinkRetry as error:
-                    bound = min(BACKOFF_AT_MOST_S, BACKOFF_BASE_S * 2.0 ** min(attempts, 30))
-                    attempts += 1
                     self._note(last_error=str(error))
-                    await self._sleep(max(self._random.uniform(0.0, bound), error.retry_after_s or 0.0))
+                    await self._sleep(backoff_s(self._random, attempts, error.retry_after_s))
+                    attempts += 1
 
     def _note(self, **changes: object) -> None:
         fields = {name: getattr(self._state, name) for name in RepairState.__slots__}

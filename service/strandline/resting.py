@@ -1,8 +1,9 @@
 """Which feeds a beat of the service's ticker visits: all that hold or deliver anything, of those that rest a share.
 
 What a tick does is the core's to decide; here is only how often a feed is asked for which nothing can become due but
-that its sources fall idle (which its next arrival would find as well). With 100 such feeds a tick costs 5 us
-each in a row and 24 when the processor has other work between: 0.2 to 0.9 % of a core at every beat, an eighth so.
+that its sources fall idle or a slack set for a time ends (which its next arrival would find as well). With 100 such
+feeds a tick costs 5 us each in a row and 24 when the processor has other work between: 0.2 to 0.9 % of a core at every
+beat, an eighth so.
 """
 
 from __future__ import annotations

@@ -67,7 +67,7 @@ class FeedRuntime:
         on_failed: Callable[[str, Exception], None],
         make: MakeSink = make_sink,
     ) -> None:
-        self.config, self.folder, self.clock, self._make = config, folder, clock, make
+        self.config, self.clock, self._make = config, clock, make
         self.journal = Journal.open(
             disk,
             f"feeds/{config.name}",
@@ -79,7 +79,8 @@ class FeedRuntime:
         self.lines = JournalLines(self.journal, self.feed)
         self.commit = GroupCommit(self.journal, self._durable, self._failed)
         self.decoder = decoder_of(config)
-        self.lane_store = LaneStore(folder / "lanes.db")
+        self.lanes_file = folder / "lanes.db"
+        self.lane_store = LaneStore(self.lanes_file)
         self.deliveries: dict[str, Delivery] = {}
         self.accepting = self._started = False
         self.failure: str | None = None
@@ -108,7 +109,7 @@ class FeedRuntime:
         folded = await asyncio.to_thread(self._house.recover)
         self.lines.watch(self.feed)
         self.recent.begin(self.feed.state.outbox.next_number["ordered"] - 1)
-        made = FeedSinks.made(self.config, self.lane_store, self.folder / "lanes.db", self.clock, self._make)
+        made = FeedSinks.made(self.config, self.lane_store, self.lanes_file, self.clock, self._make)
         sinks, self.repairers = made.sinks, made.repairers
         remembered = self.feed.state.outbox.positions
         for name, sink_object in sinks.items():
@@ -309,9 +310,12 @@ class FeedRuntime:
                     refusal = Refused(effect.reason, effect.detail, effect.retry_after_s)
                     self._waiters.refuse(effect.token, refusal)
                 case Pause():
-                    for sink in (self.deliveries.get(effect.sink), self.repairers.get(effect.sink)):
-                        if sink is not None:
-                            sink.pause() if effect.on else sink.resume()
+                    self._pause(effect)
+
+    def _pause(self, effect: Pause) -> None:
+        for worker in (self.deliveries.get(effect.sink), self.repairers.get(effect.sink)):
+            if worker is not None:
+                (worker.pause if effect.on else worker.resume)()
 
     def _deliver(self, batch: Batch) -> None:
         self._delivered_ns = self.clock.now_ns()

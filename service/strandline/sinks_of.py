@@ -13,6 +13,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Protocol
 
+from .bell import Bell
 from .config import Feed as FeedConfig
 from .core.columns import Lane
 from .errors import StrandlineError
@@ -68,7 +69,7 @@ class Positions:
     def __init__(self, feed: str) -> None:
         self._feed = feed
         self._found: dict[str, dict[Lane, int]] = {}
-        self._bell = asyncio.Event()
+        self._bell = Bell()
 
     def told(self, name: str, positions: Mapping[Lane, int], ahead_of: Mapping[Lane, int] | None) -> None:
         """A store has answered. Raises StrandlineError if it stands at or beyond `ahead_of`, the next numbers."""
@@ -79,13 +80,12 @@ class Positions:
                     "replaced by an older one; restart the service, so that it numbers on from there"
                 )
         self._found[name] = dict(positions)
-        bell, self._bell = self._bell, asyncio.Event()
-        bell.set()
+        self._bell.ring()
 
     async def wait(self, names: set[str], *, for_all: bool) -> dict[str, dict[Lane, int]]:
         """Positions by sink. A new journal waits for all of them: it must not use a number twice."""
         while names - self._found.keys():
-            bell = self._bell
+            bell = self._bell.next
             try:
                 async with asyncio.timeout(OPEN_WITHIN_S):
                     await bell.wait()

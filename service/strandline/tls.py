@@ -1,4 +1,4 @@
-"""TLS in front of the service: reading a certificate and its key, and taking connections in by them.
+"""TLS: reading a certificate and its key, taking connections in by them, and whom to trust when connecting elsewhere.
 
 Which files is `config_access`; what is said over a connection is `connections` and aiohttp. Plain HTTP does not come
 here. A handshake is unpaid work for a stranger, so those under way count among the connections, and have little time.
@@ -44,6 +44,20 @@ def read_context(tls: Tls) -> ssl.SSLContext | None:
             faults = [f"tls: {tls.certificate} with key {tls.key}: {_why(error)}"]
     if faults:
         raise ConfigError(faults)
+    return context
+
+
+def trusting(ca_file: Path | None, key: str) -> ssl.SSLContext:
+    """For whoever connects: the system's certificates, or those of a file (PEM), which `key` names; TLS 1.2 at least.
+
+    Blocking. Raises ConfigError.
+    """
+    try:
+        context = ssl.create_default_context(cafile=ca_file)
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or str(error)
+        raise ConfigError([f"{key} {ca_file}: is no file of certificates (PEM): {reason}"]) from None
+    context.minimum_version = ssl.TLSVersion.TLSv1_2
     return context
 
 

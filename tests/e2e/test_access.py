@@ -51,7 +51,9 @@ async def guarded(folder: Path) -> AsyncIterator[tuple[Running, dict[str, str]]]
 
 def paths(service: Running) -> list[tuple[str, str]]:
     assert service.service._runner is not None
-    return [(method, path) for method, path in routes_of(service.service._runner.app) if method != "HEAD"]
+    found = [(method, path) for method, path in routes_of(service.service._runner.app) if method != "HEAD"]
+    assert ("POST", "/v1/feeds/{feed}/events") in found and len(found) > 20
+    return found
 
 
 def filled(path: str) -> str:

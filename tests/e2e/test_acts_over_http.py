@@ -136,7 +136,7 @@ async def test_no_repair_goes_to_a_paused_sink(tmp_path: Path) -> None:
             await service.send([100])
             await act(service, "sinks/archive/pause", WHY)
             await service.send([1, 2])
-            await eventually(lambda: len(late_rows(service.runtime.folder / "lanes.db")) == 2)
+            await eventually(lambda: len(late_rows(service.runtime.lanes_file)) == 2)
             detail = problem_of(await service.post("late/resend", {"sink": "archive"}), 409, "sink_paused")
             assert "resume it" in detail
             repairing = asyncio.create_task(service.runtime.repairers["archive"].run())

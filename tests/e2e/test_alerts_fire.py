@@ -19,8 +19,9 @@ from typing import Any
 import pytest
 import yaml
 from helpers_deploy import PROMETHEUS, alerts, expressions
-from helpers_prometheus import Receiver, free_port, prometheus
+from helpers_prometheus import Receiver, prometheus
 from helpers_service import BEGIN_S, FEED, NDJSON, Process, configuration, events, store_in
+from strandline_loadgen.child import free_port
 
 PATH = f"/v1/feeds/{FEED}/events"
 DEADLINE_S = 45.0

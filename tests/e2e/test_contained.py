@@ -16,7 +16,7 @@ from pathlib import Path
 
 import pytest
 from helpers_deploy import DEPLOY, RUNBOOK, tool
-from helpers_service import FEED, Process, configuration, events, stored
+from helpers_service import DEADLINE_S, FEED, Process, configuration, events, stored
 
 PATH = f"/v1/feeds/{FEED}/events"
 UTIL_LINUX = "Debian: apt-get install util-linux"
@@ -66,7 +66,8 @@ def health_check(url: str) -> int:
     command = json.loads(found)
     script = command[2].replace("http://127.0.0.1:8600", url)
     assert script != command[2]
-    return subprocess.run([sys.executable, command[1], script], capture_output=True, check=False).returncode
+    asked = [sys.executable, command[1], script]
+    return subprocess.run(asked, capture_output=True, check=False, timeout=DEADLINE_S).returncode
 
 
 def test_it_works_on_a_root_that_cannot_be_written_to_and_without_rights(contained: Contained) -> None:
@@ -95,5 +96,5 @@ def test_the_acts_of_the_runbook_are_acts(tmp_path: Path) -> None:
             where = ["--feed", FEED, "--url", process.url]
             command = [*act.split(), *where, *shlex.split(rest, comments=True)]
             program = [sys.executable, "-m", "strandline.cli"]
-            done = subprocess.run([*program, *command], check=False, capture_output=True, text=True)
+            done = subprocess.run([*program, *command], check=False, capture_output=True, text=True, timeout=DEADLINE_S)
             assert (done.returncode, done.stderr) == (0, "") and done.stdout.endswith(".\n"), (command, done)

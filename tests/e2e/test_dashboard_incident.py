@@ -8,7 +8,7 @@ from pathlib import Path
 
 import pytest
 from helpers_browser import page_of
-from helpers_dashboard import asked, carry_out, feeding, inked, live, says, service_with, shoot, until
+from helpers_dashboard import asked, carry_out, feeding, followed, inked, live, says, service_with, shoot, until
 from helpers_service import Process
 from playwright.async_api import Browser, expect
 
@@ -60,11 +60,7 @@ async def test_the_holder_is_named_and_stands_out(launched: Browser, process: Pr
 
 
 async def test_a_silent_source_is_named_and_excused(launched: Browser, process: Process, shots: Path) -> None:
-    async with (
-        feeding(process, "silent", GATEWAYS) as gateways,
-        page_of(launched, f"{process.url}/?feed=silent") as page,
-    ):
-        await live(page)
+    async with followed(launched, process, "silent", GATEWAYS) as (gateways, page):
         del gateways.lag_s["gw-3"]
         await expect(says(page)).to_contain_text(re.compile(r"gw-3 holds it: silent since \d\d:\d\d:\d\d \(\d+"))
         await expect(page.locator("#happened .happened-hold", has_text="gw-3: silent source")).to_be_visible()

@@ -13,7 +13,7 @@ from typing import Any
 import pytest
 import pytest_asyncio
 from helpers_browser import page_of
-from helpers_dashboard import asked, carry_out, feeding, live, says, service_with, shoot, until
+from helpers_dashboard import asked, carry_out, feeding, followed, live, says, service_with, shoot, until
 from helpers_service import Process
 from playwright.async_api import Browser, Page, expect
 
@@ -207,11 +207,7 @@ async def test_an_idle_gateway_stays_in_sight(launched: Browser, process: Proces
 
 
 async def test_an_excused_gateway_stays_in_sight(launched: Browser, process: Process, shots: Path) -> None:
-    async with (
-        feeding(process, "excused", GATEWAYS) as gateways,
-        page_of(launched, f"{process.url}/?feed=excused") as page,
-    ):
-        await live(page)
+    async with followed(launched, process, "excused", GATEWAYS) as (gateways, page):
         del gateways.lag_s["gw-2"]
         await until(page, "() => Number.parseFloat(document.querySelector('#behind-says').textContent) > 3")
         await page.locator("#lanes-rows tr", has_text="gw-2").get_by_role("button").evaluate("(one) => one.click()")

@@ -6,13 +6,12 @@ import asyncio
 import gzip
 import json
 import signal
-from collections.abc import AsyncIterator
-from contextlib import asynccontextmanager
+from contextlib import AbstractAsyncContextManager
 from pathlib import Path
 from typing import Any
 
 import pytest
-from helpers_brokers import STREAM, Nats, jetstream_intake
+from helpers_brokers import STREAM, Nats, counts_of, jetstream_intake, received
 from helpers_service import (
     FEED,
     NDJSON,
@@ -24,7 +23,6 @@ from helpers_service import (
     running,
     stored,
 )
-from strandline.intake.counts import Counts
 
 DURABLE = f"strandline-{FEED}"
 
@@ -33,22 +31,10 @@ def with_intake(folder: Path, server: Nats, intake: dict[str, object] | None = N
     return configuration(folder, more=jetstream_intake(server, **(intake or {})), **keys)
 
 
-def counts_of(service: Running) -> Counts:
-    (counts,) = service.runtime.intakes
-    counts.check()
-    return counts
-
-
-def received(service: Running) -> int:
-    return int(service.runtime.view().ledger["received"])
-
-
-@asynccontextmanager
-async def taking(
+def taking(
     folder: Path, server: Nats, intake: dict[str, object] | None = None, **keys: Any
-) -> AsyncIterator[Running]:
-    async with running(with_intake(folder, server, intake, **keys)) as service:
-        yield service
+) -> AbstractAsyncContextManager[Running]:
+    return running(with_intake(folder, server, intake, **keys))
 
 
 async def acknowledged(server: Nats, number: int) -> None:

@@ -8,17 +8,15 @@ from __future__ import annotations
 
 import gzip
 import signal
-from collections.abc import AsyncIterator
-from contextlib import asynccontextmanager
+from contextlib import AbstractAsyncContextManager
 from pathlib import Path
 from typing import Any
 
 import pytest
 import trustme
-from helpers_brokers import Mosquitto, mqtt_intake
+from helpers_brokers import Mosquitto, counts_of, mqtt_intake, received
 from helpers_service import Running, configuration, event_line, events, eventually, running, stored
 from strandline.intake.broker import Message
-from strandline.intake.counts import Counts
 from strandline.intake.mqtt import MqttBroker
 
 VERSIONS = ["5", "3.1.1"]
@@ -30,22 +28,10 @@ def with_intake(folder: Path, server: Mosquitto, intake: dict[str, object], **ke
     return text.replace('source = "/station"\n', "", 1) if "source" in intake else text
 
 
-def counts_of(service: Running) -> Counts:
-    (counts,) = service.runtime.intakes
-    counts.check()
-    return counts
-
-
-def received(service: Running) -> int:
-    return int(service.runtime.view().ledger["received"])
-
-
-@asynccontextmanager
-async def taking(
+def taking(
     folder: Path, server: Mosquitto, intake: dict[str, object] | None = None, **keys: Any
-) -> AsyncIterator[Running]:
-    async with running(with_intake(folder, server, intake or {}, **keys)) as service:
-        yield service
+) -> AbstractAsyncContextManager[Running]:
+    return running(with_intake(folder, server, intake or {}, **keys))
 
 
 async def subscribed(service: Running) -> None:

@@ -48,7 +48,7 @@ async def test_repairs_come_sorted_by_source_and_cut_by_partition(tmp_path: Path
         seconds = [(DAY_S + 5, "weir"), (7, "weir"), (DAY_S + 3, "mill"), (9, "mill"), (8, "mill")]
         answer = await service.post("events", body_of(*(event_line(*each) for each in seconds)))
         assert answer.json["late"] == 5
-        await eventually(lambda: len(late_rows(service.runtime.folder / "lanes.db")) == 5)
+        await eventually(lambda: len(late_rows(service.runtime.lanes_file)) == 5)
         repairer = service.runtime.repairers["archive"]
         await repairer.run()
         rows = repaired(receiver)
@@ -71,7 +71,7 @@ async def test_a_repair_whose_answer_was_lost_comes_again_under_its_number(tmp_p
     async with running(text) as service:
         await service.send([100])
         await service.send([1, 2])
-        await eventually(lambda: len(late_rows(service.runtime.folder / "lanes.db")) == 2)
+        await eventually(lambda: len(late_rows(service.runtime.lanes_file)) == 2)
         await eventually(lambda: len(receiver.requests) == 1)
         receiver.script.append(LOSE)
         await service.runtime.repairers["archive"].run()
@@ -85,10 +85,10 @@ async def test_a_plan_survives_a_crash_and_sends_the_same_again(tmp_path: Path, 
         await service.send([100])
         await service.send([1, 2])
         runtime = service.runtime
-        await eventually(lambda: len(late_rows(runtime.folder / "lanes.db")) == 2)
+        await eventually(lambda: len(late_rows(runtime.lanes_file)) == 2)
         first = await runtime.lane_store.plan_repair("archive", 10)
         await service.send([3])
-        await eventually(lambda: len(late_rows(runtime.folder / "lanes.db")) == 3)
+        await eventually(lambda: len(late_rows(runtime.lanes_file)) == 3)
         assert await runtime.lane_store.plan_repair("archive", 10) == first, "until it has ended"
         await runtime.repairers["archive"].run()
         assert [len(request.content.splitlines()) for request in receiver.requests if request.path == "/late"] == [2, 1]
@@ -100,7 +100,7 @@ async def test_late_events_are_sent_once_more_on_request(tmp_path: Path, receive
     async with running(configuration(tmp_path, sinks=http_sink(receiver, '{ deliver = "keep" }'))) as service:
         await service.send([100])
         await service.send([1, 2, 3])
-        await eventually(lambda: len(late_rows(service.runtime.folder / "lanes.db")) == 3)
+        await eventually(lambda: len(late_rows(service.runtime.lanes_file)) == 3)
         answer = await service.post("late/resend", {"sink": "archive", "after": 1})
         assert (answer.status, answer.json) == (200, {"sent": 2})
         answer = await service.post("late/resend", {"sink": "archive"})
@@ -133,15 +133,15 @@ async def test_the_quarantine_is_driven_again_after_a_fix(tmp_path: Path) -> Non
         answer = await service.post("events", body_of(*faulty))
         assert (answer.json["accepted"], answer.json["quarantined"]) == (1, 2)
         await eventually(lambda: service.runtime.lane_store.size.quarantine_rows == 2)
-        nothing = await service.post("quarantine/redrive", {})
+        nothing = await service.post("quarantine/readmit", {})
         assert nothing.json["still_faulty"] == 2 and nothing.json["accepted"] == 0
     mended = text.replace("/observed_at", "/at")
     async with running(mended) as service:
-        answer = await service.post("quarantine/redrive", {})
+        answer = await service.post("quarantine/readmit", {})
         assert answer.json == {
-            "driven": 2, "accepted": 1, "late": 0, "duplicate": 0, "quarantined": 0, "still_faulty": 1
+            "tried": 2, "accepted": 1, "late": 0, "duplicate": 0, "quarantined": 0, "still_faulty": 1
         }  # fmt: skip
-        assert (await service.post("quarantine/redrive", {})).json["driven"] == 1, "what was taken is settled"
+        assert (await service.post("quarantine/readmit", {})).json["tried"] == 1, "what was taken is settled"
         document = await service.document()
         assert document["ledger"]["balanced"] and document["ledger"]["buffered"] + document["ledger"]["released"] == 2
         rows = (await service.get("quarantine")).json["quarantine"]
@@ -156,13 +156,13 @@ async def test_a_schedule_repairs_by_itself_and_survives_an_unwilling_store(
         await service.send([100])
         await service.send([1])
         runtime = service.runtime
-        await eventually(lambda: len(late_rows(runtime.folder / "lanes.db")) == 1)
+        await eventually(lambda: len(late_rows(runtime.lanes_file)) == 1)
         turns = asyncio.Semaphore(0)
 
         async def sleep(seconds: float) -> None:
             await turns.acquire()
 
-        path = runtime.folder / "lanes.db"
+        path = runtime.lanes_file
         sink = runtime.repairers["archive"]._sink
         repairer = Repairer(
             "other", sink, runtime.lane_store, path,
@@ -188,10 +188,35 @@ async def test_ndjson_repairs_are_files_of_their_own(tmp_path: Path) -> None:
     async with running(configuration(tmp_path, sinks=sinks)) as service:
         await service.send([100])
         await service.send([2, 1])
-        await eventually(lambda: len(late_rows(service.runtime.folder / "lanes.db")) == 2)
+        await eventually(lambda: len(late_rows(service.runtime.lanes_file)) == 2)
         await service.runtime.repairers["ndjson"].run()
         names = [path.name for path in folder.iterdir() if "repair" in path.name]
         assert names == [f"river-gauges-repair-{1:020d}-{1:020d}.ndjson"]
         lines = [json.loads(line) for line in (folder / names[0]).read_text().splitlines()]
         assert [line["time_ns"] // 10**9 - BEGIN_S for line in lines] == [1, 2]
         assert not any("late" in path.name for path in folder.iterdir())
+
+
+async def test_repairs_wait_no_longer_than_an_hour_whatever_a_store_asks_for(
+    tmp_path: Path, receiver: Receiver
+) -> None:
+    """A Retry-After that names a day of another century would else end repairs until somebody restarts the service."""
+    sinks = http_sink(receiver, '{ deliver = "repair", every = "1h" }')
+    async with running(configuration(tmp_path, sinks=sinks)) as service:
+        await service.send([100])
+        await service.send([1])
+        runtime, asked = service.runtime, list[float]()
+        path = runtime.lanes_file
+        await eventually(lambda: len(late_rows(path)) == 1)
+
+        async def sleep(seconds: float) -> None:
+            asked.append(seconds)
+
+        sink = runtime.repairers["archive"]._sink
+        repairer = Repairer(
+            "other", sink, runtime.lane_store, path,
+            every_s=None, partition_ns=10**9, random_source=random.Random(1), sleep=sleep,
+        )  # fmt: skip
+        receiver.script.append(refuse(503, Retry_After="999999999999"))
+        assert await repairer.run() == 1
+        assert asked == [3600.0]

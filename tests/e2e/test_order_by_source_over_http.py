@@ -41,8 +41,8 @@ async def test_a_gateway_behind_holds_nobody_and_a_restart_forgets_no_watermark(
         answer = await service.post("events", body_of(*(event_line(*each) for each in [*late, (120, "gw-2")])))
         assert (answer.json["accepted"], answer.json["late"]) == (1, 2)
         sent.append((120, "gw-2"))
-        await eventually(lambda: len(late_rows(service.runtime.folder / "lanes.db")) == 2)
-        rows = late_rows(service.runtime.folder / "lanes.db")
+        await eventually(lambda: len(late_rows(service.runtime.lanes_file)) == 2)
+        rows = late_rows(service.runtime.lanes_file)
         watermarks = {source["source"]: source for source in (await service.get("sources")).json["sources"]}
         # 1019 - 5 - 1001 s, and 119 - 5 - 110 s: each behind the watermark of its own source, as it stood.
         assert [row.late_by_ns for row in rows] == [13 * 10**9, 4 * 10**9]

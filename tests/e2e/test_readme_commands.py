@@ -9,6 +9,7 @@ import signal
 import subprocess
 import sys
 from collections.abc import Iterator
+from contextlib import suppress
 from pathlib import Path
 
 import pytest
@@ -40,7 +41,7 @@ def printed(tmp_path_factory: pytest.TempPathFactory) -> Iterator[list[str]]:
         try:
             out, _ = shell.communicate(timeout=DEADLINE_S)
         finally:
-            if shell.poll() is None:
+            with suppress(ProcessLookupError):  # else the service may live on where the shell has ended before it
                 os.killpg(shell.pid, signal.SIGKILL)
     yield out.splitlines()
 

@@ -19,9 +19,9 @@ async def test_lines_that_are_still_ahead_or_faulty_stay_as_they_were(tmp_path: 
         before, ledger = (await service.get("quarantine")).json, (await service.document())["ledger"]
         sources = [each["source"] for each in (await service.get("sources")).json["sources"]]
         for _ in range(3):
-            answer = await service.post("quarantine/redrive", {})
+            answer = await service.post("quarantine/readmit", {})
             assert answer.json == {
-                "driven": 3, "accepted": 0, "late": 0, "duplicate": 0, "quarantined": 0, "still_faulty": 3
+                "tried": 3, "accepted": 0, "late": 0, "duplicate": 0, "quarantined": 0, "still_faulty": 3
             }  # fmt: skip
         assert (await service.get("quarantine")).json == before, "numbers, batches and arrival times too"
         assert (await service.document())["ledger"] == ledger
@@ -36,8 +36,8 @@ async def test_a_line_that_is_no_longer_ahead_is_taken_and_the_books_balance(tmp
         await eventually(lambda: service.runtime.lane_store.size.quarantine_rows == 2)
         kept = (await service.get("quarantine")).json["quarantine"]
     async with running(text.replace('ahead_limit = "1h"', 'ahead_limit = "30d"')) as service:
-        answer = (await service.post("quarantine/redrive", {})).json
-        assert (answer["driven"], answer["accepted"], answer["still_faulty"]) == (2, 1, 1)
+        answer = (await service.post("quarantine/readmit", {})).json
+        assert (answer["tried"], answer["accepted"], answer["still_faulty"]) == (2, 1, 1)
         rows = (await service.get("quarantine")).json["quarantine"]
         assert rows == [row for row in kept if row["reason"] != "ahead"]
         ledger = (await service.document())["ledger"]
@@ -46,11 +46,11 @@ async def test_a_line_that_is_no_longer_ahead_is_taken_and_the_books_balance(tmp
 
 async def test_a_run_ends_at_the_highest_number_at_its_start(tmp_path: Path) -> None:
     async with running(configuration(tmp_path)) as service:
-        path = service.runtime.folder / "lanes.db"
+        path = service.runtime.lanes_file
         await service.post("events", body_of(b"x", b"y"))
         await eventually(lambda: service.runtime.lane_store.size.quarantine_rows == 2)
         assert (last_number(path, "quarantine"), last_number(path, "late")) == (2, 0)
         forget_rows(path, "quarantine", 2)
         assert last_number(path, "quarantine") == 2, "numbers are never given again"
-        assert (await service.post("quarantine/redrive", {})).json["driven"] == 0
+        assert (await service.post("quarantine/readmit", {})).json["tried"] == 0
     assert last_number(tmp_path / "nothing.db", "quarantine") == 0

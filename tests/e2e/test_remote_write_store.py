@@ -256,7 +256,7 @@ async def test_what_the_store_never_takes_is_kept_and_all_else_is_stored(
         counts = runtime.deliveries["remote_write"].state().counts
         assert (counts["out_of_order"], counts["duplicate_timestamp"]) == (len(behind), 1) == (50, len(equal))
         assert sum(counts.values()) == 51
-        kept = refused_rows(runtime.folder / "lanes.db", limit=100, sink="remote_write")
+        kept = refused_rows(runtime.lanes_file, limit=100, sink="remote_write")
         lines = [line_of(sample, base_ms).rstrip() for sample in sorted(behind, key=lambda each: each.time_ms) + equal]
         assert [row.event for row in kept] == lines
         assert all("out_of_order" in row.detail for row in kept)

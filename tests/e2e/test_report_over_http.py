@@ -5,6 +5,7 @@ from __future__ import annotations
 import asyncio
 import json
 import re
+import threading
 import time
 from pathlib import Path
 from typing import Any
@@ -12,11 +13,23 @@ from typing import Any
 import msgspec
 import pytest
 from helpers_faulty import planted, scripted
-from helpers_service import BEGIN_S, FEED, Process, Running, configuration, events, eventually, problem_of, running
+from helpers_service import (
+    BEGIN_S,
+    DEADLINE_S,
+    FEED,
+    Process,
+    Running,
+    configuration,
+    events,
+    eventually,
+    problem_of,
+    running,
+)
 from helpers_sinks import VirtualTime
 from strandline.cli import main
 from strandline.dashboard.live import WATCHES
 from strandline.errors import SinkRetry
+from strandline.reporting import http
 from strandline.reporting.facts import Facts
 from strandline.reporting.html import report_html
 from strandline.reporting.http import written
@@ -79,7 +92,7 @@ async def an_incident(service: Running, clock: VirtualTime) -> None:
     answer = await service.post("events", events(range(21, 51), "gw-2"))
     assert answer.json["late"] == 30
     await stage.to(100, "gw-1", "gw-2")
-    await eventually(lambda: len(late_rows(service.runtime.folder / "lanes.db")) == 30)
+    await eventually(lambda: len(late_rows(service.runtime.lanes_file)) == 30)
     await eventually(lambda: not service.runtime.hops()["sinks"].waiting)
     clock.now += SECOND // 2
 
@@ -208,22 +221,34 @@ async def test_a_file_of_late_events_that_cannot_be_read_is_said(tmp_path: Path)
     async with running(configuration(tmp_path, **SETTINGS), clock=clock) as service:
         await Clocked(service, clock).to(5, "gw-1")
         await service.service.feeds[FEED].lane_store.close()
-        for file in (service.runtime.folder).glob("lanes.db*"):
+        for file in service.runtime.lanes_file.parent.glob("lanes.db*"):
             file.unlink()
-        (service.runtime.folder / "lanes.db").write_bytes(b"no database" * 1000)
+        service.runtime.lanes_file.write_bytes(b"no database" * 1000)
         facts = await facts_of(service)
     assert facts.late is None and facts.trouble.refused_rows is None
     assert "The late lane could not be read" in said(facts)
 
 
-async def test_reports_do_not_hold_the_loop_up(tmp_path: Path) -> None:
+async def test_reports_do_not_hold_the_loop_up(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """While several are asked for at once the service goes on answering, and all say the same."""
-    clock = at_the_beginning()
+    clock, begun, answered = at_the_beginning(), list[str](), threading.Event()
+
+    def waits(facts: Facts, form: str) -> tuple[bytes, str]:
+        begun.append(form)
+        meanwhile = answered.wait(DEADLINE_S)
+        answered.set()  # the others need not wait as long
+        assert meanwhile, "nothing else was answered meanwhile"
+        return written(facts, form)
+
+    monkeypatch.setattr(http, "written", waits)
     async with running(configuration(tmp_path, **SETTINGS), clock=clock) as service:
         await an_incident(service, clock)
-        asked = [report(service, "html", **{"from": instant(0)}) for _ in range(8)]
-        answers = await asyncio.gather(*asked, service.send([100], "gw-1"))
-        bodies = {re.sub(rb"22:1\d:\d\d(\.\d)?", b"", answer.content) for answer in answers[:8]}
+        asked = [asyncio.create_task(report(service, "html", **{"from": instant(0)})) for _ in range(8)]
+        await eventually(lambda: len(begun) == http.AT_ONE_TIME)
+        await service.send([100], "gw-1")
+        answered.set()
+        answers = await asyncio.gather(*asked)
+        bodies = {re.sub(rb"22:1\d:\d\d(\.\d)?", b"", answer.content) for answer in answers}
         assert len(bodies) <= 2, "before and after the event that came meanwhile"
 
 

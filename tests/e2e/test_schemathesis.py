@@ -89,9 +89,9 @@ def test_answers_are_as_documented(case: schemathesis.Case, service: Process, se
 
 @pytest.mark.parametrize("name", ["after", "through"])
 @pytest.mark.parametrize("number", [-1, 2**63, 10**30])
-@pytest.mark.parametrize("path", ["late/resend", "refused/resend", "quarantine/redrive"])
+@pytest.mark.parametrize("path", ["late/resend", "refused/resend", "quarantine/readmit"])
 def test_row_numbers_that_no_store_can_hold(service: Process, path: str, name: str, number: int) -> None:
     """Found by hand where schemathesis did not look, because the document had no bounds: SQLite holds 64 bits."""
-    sink = {} if path == "quarantine/redrive" else {"sink": "sqlite"}
+    sink = {} if path == "quarantine/readmit" else {"sink": "sqlite"}
     answer = requests.post(f"{service.url}/v1/feeds/{FEED}/{path}", json={**sink, name: number}, timeout=30)
     assert (answer.status_code, answer.json()["status"]) == (422, 422)

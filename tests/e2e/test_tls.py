@@ -11,7 +11,7 @@ import json
 import socket
 import ssl
 from collections.abc import AsyncIterator
-from contextlib import asynccontextmanager
+from contextlib import asynccontextmanager, suppress
 from pathlib import Path
 
 import aiohttp
@@ -63,6 +63,26 @@ async def shaken(service: Service, context: ssl.SSLContext) -> tuple[str, str, s
         await writer.wait_closed()
 
 
+def lax(folder: Path) -> ssl.SSLContext:
+    """A server's context that speaks every version, with the service's certificate."""
+    context = ssl.SSLContext(ssl.PROTOCOL_TLS_SERVER)
+    context.set_ciphers("ALL:@SECLEVEL=0")
+    context.minimum_version = ssl.TLSVersion.TLSv1
+    context.load_cert_chain(folder / "service.pem", folder / "service.key")
+    return context
+
+
+def agreed(client: ssl.SSLContext, server: ssl.SSLContext) -> str | None:
+    """The version that the two agree on, in memory. Raises ssl.SSLError where there is none."""
+    up, down = ssl.MemoryBIO(), ssl.MemoryBIO()
+    ends = client.wrap_bio(down, up, server_hostname="localhost"), server.wrap_bio(up, down, server_side=True)
+    for _ in range(4):  # each has its say at most twice in a handshake
+        for end in ends:
+            with suppress(ssl.SSLWantReadError):
+                end.do_handshake()
+    return ends[0].version()
+
+
 async def test_events_go_in_over_https_and_only_to_who_trusts_the_certificate(tmp_path: Path) -> None:
     async with secured(tmp_path) as service:
         assert service.url.startswith("https://127.0.0.1:")
@@ -95,6 +115,9 @@ async def test_versions_before_1_2_are_refused_and_http_1_1_is_spoken(tmp_path: 
         old = trusting(AUTHORITY)
         old.set_ciphers("ALL:@SECLEVEL=0")  # so that it is the service that refuses, not this client
         old.minimum_version, old.maximum_version = ssl.TLSVersion.TLSv1, ssl.TLSVersion.TLSv1_1
+        assert agreed(old, lax(tmp_path)) == "TLSv1.1", "this client would speak it"
+        with pytest.raises(ssl.SSLError, match="UNSUPPORTED_PROTOCOL"):
+            agreed(old, tls.read_context(config_of(configuration(tmp_path, top=pair_of(tmp_path))).tls))
         with pytest.raises((ssl.SSLError, ConnectionError)):
             await shaken(service, old)
 
@@ -142,6 +165,7 @@ async def test_a_reload_brings_a_new_certificate_and_keeps_connections(
                 assert answer.status == 204
             line = b""
             while not line.strip():
+                assert not stream.content.at_eof(), "the stream has ended"
                 line = await stream.content.readline()
             assert json.loads(line)["batch"] == 1
 
@@ -224,11 +248,7 @@ async def test_what_is_no_tls_breaks_nothing(tmp_path: Path, name: str, caplog: 
 class _Secured(Process):
     """The real process, with uvloop, which says that it listens on https."""
 
-    def listens(self) -> str:
-        assert self.process is not None and self.process.stdout is not None
-        line = self.process.stdout.readline().decode()
-        assert line.startswith("listening on https://127.0.0.1:"), line
-        return line.split()[-1]
+    scheme = "https"
 
     def start(self) -> None:
         self.begin()
@@ -249,13 +269,13 @@ def test_commands_show_a_token_and_trust_a_file(
         send = ["send", "in_order", "--feed", FEED, "--url", process.url, "--events", "50", "--json"]
         assert loadgen([*send, "--ca", str(ca), "--token-file", str(token)]) == 0
         assert json.loads(capsys.readouterr().out)["answered"] >= 1
-        redrive = ["quarantine", "redrive", "--feed", FEED, "--url", process.url, "--ca", str(ca)]
-        assert main(redrive) == 2 and "set STRANDLINE_TOKEN" in capsys.readouterr().err
+        readmit = ["quarantine", "readmit", "--feed", FEED, "--url", process.url, "--ca", str(ca)]
+        assert main(readmit) == 2 and "set STRANDLINE_TOKEN" in capsys.readouterr().err
         monkeypatch.setenv("STRANDLINE_TOKEN", made["none"])
-        assert main(redrive) == 2 and "has not the role operate" in capsys.readouterr().err
+        assert main(readmit) == 2 and "has not the role operate" in capsys.readouterr().err
         monkeypatch.setenv("STRANDLINE_TOKEN", made["all"])
-        assert main(redrive) == 0
-        assert main(redrive[:-2]) == 3  # its certificate is nobody's whom the system trusts
+        assert main(readmit) == 0
+        assert main(readmit[:-2]) == 3  # its certificate is nobody's whom the system trusts
         capture = ["capture", process.url, "--feed", FEED, "--seconds", "1", "--out", str(tmp_path / "c")]
         assert main([*capture, "--ca", str(ca)]) == 0
         folder = ["capture", str(tmp_path / "data"), "--feed", FEED, "--out", str(tmp_path / "d")]
@@ -265,7 +285,7 @@ def test_commands_show_a_token_and_trust_a_file(
         monkeypatch.delenv("STRANDLINE_TOKEN")
         assert main([*replay, "--ca", str(ca)]) == 2
         token.chmod(0o644)
-        assert main([*redrive, "--token-file", str(token)]) == 2
+        assert main([*readmit, "--token-file", str(token)]) == 2
         assert "so others can read or change it: chmod 600" in capsys.readouterr().err
         assert process.terminate() == 0
         assert bearer(made["all"])["Authorization"] not in process.log.read_text()

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import asyncio
 import json
+import threading
 from pathlib import Path
 from typing import Any
 
 import pytest
 from helpers_service import (
     BEGIN_S,
+    DEADLINE_S,
     FEED,
     NDJSON,
     Process,
@@ -56,7 +58,7 @@ async def fill(service: Running) -> None:
     faulty = b'{"station":"gw-1","id":"f"}', b'{"id":"g"', event_line(AHEAD, id="h")
     answer = await service.post("events", body_of(event_line(3, id="e"), event_line(10, id="a"), *faulty))
     assert answer.json["late"] == 1 and answer.json["duplicate"] == 1 and answer.json["quarantined"] == 3
-    path = service.runtime.folder / "lanes.db"
+    path = service.runtime.lanes_file
     await eventually(lambda: len(late_rows(path)) == 1 and not service.runtime.feed.state.outbox.undelivered_events)
 
 
@@ -144,8 +146,8 @@ async def test_one_trace_of_a_feed_at_a_time_and_none_for_a_client_that_left(tmp
         await service.send([1])
         assert service.service._runner is not None
         traces = service.service._runner.app[TRACES]
-        release = asyncio.Event()
-        blocked = traces._thread.submit(asyncio.run, _until(release))
+        release = threading.Event()
+        blocked = traces._thread.submit(release.wait, DEADLINE_S)
         first = asyncio.create_task(service.get("trace", params={"id": "a"}))
         await eventually(lambda: FEED in traces.busy)
         second_one = await service.get("trace", params={"id": "a"})
@@ -154,13 +156,8 @@ async def test_one_trace_of_a_feed_at_a_time_and_none_for_a_client_that_left(tmp
         first.cancel()  # it never began, since the thread is busy
         await eventually(lambda: not traces.busy)
         release.set()
-        await asyncio.wrap_future(blocked)
+        assert await asyncio.wrap_future(blocked)
         assert (await traced(service, id="a"))["found"] == 0
-
-
-async def _until(event: asyncio.Event) -> None:
-    while not event.is_set():
-        await asyncio.sleep(0.01)
 
 
 async def test_a_limit_is_kept_and_said(tmp_path: Path) -> None:

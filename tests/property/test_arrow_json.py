@@ -131,7 +131,9 @@ def lines(table: Any, cuts: list[int], compression: str | None) -> list[bytes]:
     arrival = FEED.decode(stream(table, cuts, compression), ARROW, {})
     check_arrival(arrival, {})
     assert not arrival.faults
-    return bytes(arrival.payload).split(b"\n")[:-1]
+    found = bytes(arrival.payload).split(b"\n")[:-1]
+    assert len(found) == len(table), "a line for each row"
+    return found
 
 
 @st.composite

@@ -71,15 +71,10 @@ def carry_out(shell: Shell, step: tuple[Any, ...], now_ns: int) -> None:
             shell.events([time for time, _ in rows], now_ns, [name for _, name in rows], identities=numbers)
         case ("keyed", text, time):
             shell.events([time], now_ns, key=RequestKey(text, b"%d" % time))
-        case ("tick",):
-            shell.tick(now_ns)
-        case ("promise", name, time):
-            shell.act("promise", name, time, now_ns=now_ns)
-        case ("excuse", name):
-            if name in shell.feed.state.sources.numbers:
-                shell.act("excuse", name, "why", now_ns=now_ns, who="night shift" if now_ns % 2 else "")
+        case ("excuse", _):
+            shell.step(step, now_ns, who="night shift" if now_ns % 2 else "")
         case ("drain", who):
-            shell.act("drain", now_ns=now_ns, who=who)
+            shell.step(("drain",), now_ns, who=who)
         case ("set_slack" | "pause" as act, *given):
             shell.act(act, *given, "why", now_ns=now_ns, who="night shift")
         case ("taken", sink, behind):
@@ -88,6 +83,8 @@ def carry_out(shell: Shell, step: tuple[Any, ...], now_ns: int) -> None:
         case ("restart",):
             shell.feed = continued(shell.feed)
             shell.do(shell.feed.start(now_ns, SINKS))
+        case _:
+            shell.step(step, now_ns)
 
 
 def lived(chosen: Settings, history: list[tuple[Any, int]]) -> Shell:

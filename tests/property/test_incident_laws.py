@@ -14,12 +14,13 @@ from hypothesis import given
 from hypothesis import strategies as st
 from strandline.core.view import HOLD_WHYS
 from strandline.reporting import holding, tables
-from strandline.reporting.bursts import APART_NS, Second, late_of
+from strandline.reporting.bursts import APART_NS, late_of
 from strandline.reporting.facts import TENTH_NS, Books, Count, Facts, Hold, Stall
 from strandline.reporting.html import report_html
 from strandline.reporting.markdown import report_markdown
 from strandline.reporting.sentences import summary
 from strandline.reporting.words import Words, lasted, plain
+from strandline.sinks.lane_summary import LateSecond
 
 END_NS = BEGIN_NS + HOUR_NS
 WHYS = sorted(HOLD_WHYS)
@@ -161,12 +162,14 @@ def test_numbers_in_text_and_table_are_the_books(given_counts: list[int]) -> Non
     assert (table["buffered"][0], table["buffered"][1]) == (held, held_later)
     if end.received >= begin.received:
         text = next(plain(words) for words in summary(facts) if " received" in plain(words))
-        said = {number.replace(",", ""): what for number, what in re.findall(r"([\d,]+) (?:was|were) (\w+)", text)}
-        expected = {str(number) for number in (*more.values(), held_later) if number}
-        assert expected <= said.keys()
+        found = re.findall(r"([\d,]+) (?:was|were) (\w+)", text)
+        said = [(int(number.replace(",", "")), what) for number, what in found]
+        words = ("released", "named", "recognised", "put", "held")
+        counted = zip((*more.values(), held_later), words, strict=True)
+        assert said == [(number, what) for number, what in counted if number]
 
 
-def words_of(late: list[Second]) -> tuple[int, int, int]:
+def words_of(late: list[LateSecond]) -> tuple[int, int, int]:
     found = late_of((), late, complete=True)
     shown = sum(burst.events for burst in found.bursts)
     return shown, len(found.bursts), found.unlisted_bursts
@@ -176,7 +179,8 @@ def words_of(late: list[Second]) -> tuple[int, int, int]:
 def test_bursts_have_all_events_and_are_apart(came: list[tuple[str, int, int]]) -> None:
     by_second = {(source, second): events for source, second, events in came}
     seconds = [
-        Second(source, events, at(second), at(second), 1, 2) for (source, second), events in sorted(by_second.items())
+        LateSecond(source, events, at(second), at(second), 1, 2)
+        for (source, second), events in sorted(by_second.items())
     ]
     shown, bursts, unlisted = words_of(seconds)
     assert shown == sum(each.events for each in seconds) and unlisted == 0

@@ -10,7 +10,7 @@ import itertools
 from typing import Any
 
 from helpers_by_source import NAMES, SINKS, Model, carry_out, histories, one_event, small_settings, steps
-from helpers_feed import Shell, batches_of, saved_bytes
+from helpers_feed import Shell, batches_of, held_no_longer, saved_bytes
 from helpers_strands import constants
 from hypothesis import event, given, settings
 from hypothesis import strategies as st
@@ -204,14 +204,7 @@ def test_a_restart_goes_on_with_the_same_numbers_and_loses_nothing(
 @settings(max_examples=100)
 @given(small_settings(hold_at_most_ns=5, undelivered_events_at_most=1_000_000), histories)
 def test_no_event_is_held_longer_than_the_limit(chosen: Settings, history: History) -> None:
-    shell, now_ns = Shell(chosen, sinks=SINKS), 0
-    for step, passed in history:
-        for _ in range(max(1, passed)):  # a tick at every instant
-            now_ns += passed > 0
-            shell.tick(now_ns)
-            oldest = shell.feed.state.arrivals.oldest_ns
-            assert oldest is None or oldest > now_ns - 5
-        carry_out(shell, step, now_ns)
+    held_no_longer(Shell(chosen, sinks=SINKS), history, carry_out, 5)
 
 
 # ---- what the order is for ------------------------------------------------------------------------------------------

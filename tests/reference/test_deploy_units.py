@@ -17,7 +17,7 @@ from typing import Any
 
 import pytest
 import yaml
-from helpers_deploy import DEPLOY, ROOT, tool
+from helpers_deploy import DEPLOY, ROOT, TOOL_S_AT_MOST, tool
 from strandline.config import load, parse
 
 UNIT = DEPLOY / "systemd" / "strandline.service"
@@ -30,7 +30,7 @@ MEBI, GIBI = 2**20, 2**30
 
 def run(name: str, where: str, *arguments: str | Path) -> subprocess.CompletedProcess[str]:
     command = [tool(name, where), *map(str, arguments)]
-    return subprocess.run(command, capture_output=True, text=True, check=False)
+    return subprocess.run(command, capture_output=True, text=True, check=False, timeout=TOOL_S_AT_MOST)
 
 
 # ---- systemd -------------------------------------------------------------------------------------------------------
@@ -154,7 +154,8 @@ def test_the_health_check_is_one(tmp_path: Path) -> None:
     command = json.loads(last("HEALTHCHECK").partition("CMD ")[2])
     assert command[0] == "python" and "/health/live" in command[2]
     command[2] = command[2].replace(":8600", ":1")
-    assert subprocess.run([sys.executable, *command[1:]], capture_output=True, check=False).returncode != 0
+    asked = subprocess.run([sys.executable, *command[1:]], capture_output=True, check=False, timeout=TOOL_S_AT_MOST)
+    assert asked.returncode != 0
 
 
 # ---- Kubernetes ----------------------------------------------------------------------------------------------------

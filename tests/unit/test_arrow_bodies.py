@@ -264,10 +264,12 @@ def test_without_pyarrow_the_answer_says_what_to_install() -> None:
         f"try: feed.decode(b'x', '{ARROW}', {{}})\n"
         "except BodyError as error: print(error.status, error.detail)\n"
     )
-    said = subprocess.run([sys.executable, "-c", program], capture_output=True, text=True, check=True).stdout
+    said = subprocess.run(
+        [sys.executable, "-c", program], capture_output=True, text=True, check=True, timeout=60
+    ).stdout
     assert said.startswith("415 ") and "pip install 'strandline[arrow]'" in said
 
 
 def test_pyarrow_is_imported_only_with_the_first_body() -> None:
     program = "import sys, strandline.app; assert 'pyarrow' not in sys.modules"
-    subprocess.run([sys.executable, "-c", program], check=True)
+    subprocess.run([sys.executable, "-c", program], check=True, timeout=60)

@@ -38,7 +38,8 @@ def test_growth_takes_in_every_event(case: growth.Case, monkeypatch: pytest.Monk
     monkeypatch.setattr(growth, "MEASURED_EVENTS", 5_000)
     cost, held = growth.ns_per_event(case, TINY)
     assert cost > 0
-    assert held > 0
+    # An event waits for what is left of the slack when it comes: its mean times the rate (Little's law).
+    assert held == pytest.approx(growth.EVENTS_PER_S * (case.slack_s - case.mean_s), rel=0.1)
 
 
 def test_the_sqlite_row_compares_what_both_have_stored(tmp_path: Path) -> None:

@@ -70,7 +70,7 @@ async def test_commands_take_host_and_port_and_agree_on_exit_codes(
     text = f"{configuration(tmp_path)}\n[access]\ntokens = {json.dumps(str(tokens))}\n"
     async with running(text) as service:
         place = service.url.removeprefix("http://")
-        for question in [*questions, ["quarantine", "redrive"]]:
+        for question in [*questions, ["quarantine", "readmit"]]:
             code, err = await asked(capsys, *question, "--feed", FEED, "--url", place)
             assert code == 2 and "--token-file" in err, question
         capture = ["capture", place, "--seconds", "1", "--out", str(tmp_path / "now.capture")]
@@ -86,3 +86,28 @@ async def test_commands_take_host_and_port_and_agree_on_exit_codes(
         assert (await asked(capsys, *question, "--feed", FEED, "--url", "localhost:1"))[0] == 3
         code, err = await asked(capsys, *question, "--feed", FEED, "--url", "ftp://localhost")
         assert code == 2 and "write http://HOST:PORT" in err
+
+
+@pytest.mark.parametrize("feed", ["river-gauges?", "river-gauges/sources?", "river-gauges#", "no/such", "bytes-\udcff"])
+async def test_a_feeds_name_never_changes_what_is_asked_for(
+    feed: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    out, made = tmp_path / "now.capture", tmp_path / "made.capture"
+    async with running(configuration(tmp_path)) as service:
+        await service.send([1])
+        taken = ["capture", str(tmp_path / "data"), "--feed", FEED, "--out", str(made)]
+        commands = [
+            ["holds", "--url", service.url],
+            ["report", "--url", service.url],
+            ["trace", "--time", "2026-01-01T00:00:00Z", "--url", service.url],
+            ["act", "drain", "--reason", "why", "--url", service.url],
+            ["quarantine", "readmit", "--url", service.url],
+            ["capture", service.url, "--seconds", "1", "--out", str(out)],
+            ["replay", str(made), "--into", service.url],
+        ]
+        code, err = await asked(capsys, *taken)
+        assert code == 0, err
+        for command in commands:
+            code, err = await asked(capsys, *command, "--feed", feed)
+            assert code == 2 and ("no feed" in err or "not UTF-8" in err), (command, err)
+        assert not out.exists()

@@ -23,14 +23,13 @@ def sink_of(text: str) -> Any:
 def test_what_it_becomes() -> None:
     options = sink_of(PARQUET).options()
     assert options == {
-        "directory": Path("strandline-data").absolute() / "river-gauges-parquet",
+        "directory": Path("strandline-data/river-gauges-parquet"),
         "roll_bytes": 64 * 2**20,
         "roll_every_s": 60.0,
         "rows_per_group": 100_000,
         "compression": "zstd",
         "columns": (),
-    } | {"directory": options["directory"]}
-    assert options["directory"].name == "river-gauges-parquet"
+    }
     text = 'roll_every = "5m"\nroll_bytes = "1GiB"\nrows_per_group = 1000\ncompression = "snappy"\n'
     text += 'columns = [ { name = "time" }, { name = "level", at = "/level", type = "double precision" } ]\n'
     options = sink_of(PARQUET + text + 'late = { deliver = "repair", every = "1h" }').options()

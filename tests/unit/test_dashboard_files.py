@@ -45,6 +45,7 @@ def test_the_policy_lets_nothing_in_from_elsewhere() -> None:
 
 def test_the_page_keeps_to_the_policy() -> None:
     """No inline script, style or handler, and every address is the service's own."""
+    named: set[str] = set()
     for name, file in read_files().items():
         text = file.content.decode()
         if name.endswith(".html"):
@@ -57,6 +58,10 @@ def test_the_page_keeps_to_the_policy() -> None:
         if name.endswith(".js"):
             for module in re.findall(r"""^(?:import|export)\b[^;]*?\bfrom\s+["']([^"']+)["']""", text, re.M):
                 assert module.removeprefix("./") in read_files(), (name, module)
+                named.add(module)
+            continue
+        named |= set(re.findall(r"/dashboard/[\w.-]+", text)) if name.endswith(".html") else set()
+    assert len(named) >= 5, "addresses and modules were found"
 
 
 async def test_a_file_that_is_known_is_not_sent_again(tmp_path: Path) -> None:

@@ -25,7 +25,7 @@ from helpers_service import (
     running,
 )
 from strandline.dashboard import live
-from strandline.dashboard.live import WATCHES, Watch
+from strandline.dashboard.live import WATCHES, Moment, Variant, Watch
 from strandline.ingest.timestamps import parse_rfc3339
 
 HOSTILE = [
@@ -64,7 +64,9 @@ class Moments:
         event, data = "message", []
         while True:
             async with asyncio.timeout(DEADLINE_S):
-                line = (await self.answer.content.readuntil(b"\n"))[:-1].decode()
+                whole = await self.answer.content.readuntil(b"\n")
+            assert whole.endswith(b"\n"), "the stream has ended"
+            line = whole[:-1].decode()
             if line.startswith("event: "):
                 event = line[7:]
             elif line.startswith("data: "):
@@ -184,9 +186,10 @@ async def test_lateness_is_counted_from_one_moment_to_the_next(tmp_path: Path) -
         sums = [0] * (len(edges) + 1)
         await service.send([100])
         await service.send([98, 93])
-        while sum(sums) < 3:
-            moment = await moments.next()
-            sums = [a + b for a, b in zip(sums, moment["lateness"]["counts"], strict=True)]
+        async with asyncio.timeout(DEADLINE_S):
+            while sum(sums) < 3:
+                moment = await moments.next()
+                sums = [a + b for a, b in zip(sums, moment["lateness"]["counts"], strict=True)]
         expected = [0] * (len(edges) + 1)
         for lateness_s in (0, 2, 7):
             expected[next(index for index, edge in enumerate(edges) if lateness_s <= edge)] += 1
@@ -227,16 +230,26 @@ async def test_hostile_names_come_through_unchanged(tmp_path: Path) -> None:
 # ---- who watches ----------------------------------------------------------------------------------------------------
 
 
-async def test_a_moment_is_computed_once_however_many_watch_and_never_while_nobody_does(tmp_path: Path) -> None:
+async def test_a_moment_is_computed_once_however_many_watch_and_never_while_nobody_does(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     async with running(configuration(tmp_path)) as service:
         watch = watch_of(service)
         assert (watch.computed, watch._task) == (0, None)
+        real, made = watch._lanes, list[tuple[int, Variant]]()
+
+        def noted(moment: Moment, variant: Variant) -> Any:
+            made.append((moment.view.now_ns, variant))
+            return real(moment, variant)
+
+        monkeypatch.setattr(watch, "_lanes", noted)
         async with watching(service) as one, watching(service) as other, watching(service, "?lanes=3") as third:
             for _ in range(5):
                 await asyncio.gather(one.next(), other.next(), third.next())
             assert len(watch.variants) == 2 and watch.streams == 3
             task = watch._task
-            assert watch.computed < 40  # three each would have taken at least 15 for every 5 of one
+            assert len(made) == len(set(made)) and len({variant for _, variant in made}) == 2
+            assert watch.computed == len({now_ns for now_ns, _ in made}) >= 5
         await eventually(lambda: watch.streams == 0)
         assert watch._task is None and not watch._frames
         assert task is not None

@@ -78,7 +78,8 @@ async def test_a_slow_browser_skips_moments_and_no_more_than_one_waits_for_it(tm
             text = b""
             async with asyncio.timeout(DEADLINE_S):
                 while len(re.findall(rb"id: \d+", text)) < 8 or not text.endswith(b"\n\n\r\n"):
-                    text += await reader.read(2**16)
+                    text += (more := await reader.read(2**16))
+                    assert more, "the stream has ended"
             instants = [int(number) for number in re.findall(rb"\nid: (\d+)", text)]
             assert instants == sorted(set(instants)), "moments come in order, and none twice"
             # Those that were computed while it was stuck were skipped but for what was on its way.

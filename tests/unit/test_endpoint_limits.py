@@ -72,7 +72,7 @@ async def test_lanes_full_and_then_forgotten(tmp_path: Path) -> None:
         assert answer is not None
         assert "quarantine forget" in problem_of(answer, 429, "lanes_full") and retry_after(answer) > 0
         problem_of(await service.post("events", events([1])), 429, "lanes_full")
-        await asyncio.to_thread(forget_rows, service.runtime.folder / "lanes.db", "quarantine", 10**6)
+        await asyncio.to_thread(forget_rows, service.runtime.lanes_file, "quarantine", 10**6)
         await eventually(lambda: service.runtime.lane_store.size.file_bytes < 2**20, "the service looks again")
         assert (await service.send([1]))["accepted"] == 1
 

@@ -116,8 +116,8 @@ async def test_numbers_that_are_none(tmp_path: Path) -> None:
 
 async def test_a_lane_that_cannot_be_read_now(tmp_path: Path) -> None:
     async with running(configuration(tmp_path)) as service:
-        service.runtime.folder = tmp_path
-        (tmp_path / "lanes.db").write_bytes(b"this is no database" * 100)
+        service.runtime.lanes_file = tmp_path / "lanes.db"
+        service.runtime.lanes_file.write_bytes(b"this is no database" * 100)
         answer = await service.get("late")
         assert "lanes.db" in problem_of(answer, 503) and retry_after(answer) > 0
 

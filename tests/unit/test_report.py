@@ -22,8 +22,9 @@ from hypothesis import given
 from hypothesis import strategies as st
 from strandline import cli
 from strandline.caution import CAUTION
+from strandline.page_style import OKABE_ITO
 from strandline.replay import report
-from strandline.replay.pictures import OKABE_ITO, PAPER, log_ticks, pictures_of, svg
+from strandline.replay.pictures import PAPER, log_ticks, pictures_of, svg
 from strandline.replay.report_style import DARK, LIGHT
 from strandline.replay.wording import share_text, spelled
 

@@ -104,7 +104,7 @@ async def test_row_groups_ascend_in_time_and_their_statistics_say_so(tmp_path: P
         assert group.column(0).path_in_schema == "time_ns"
         assert (statistics.min, statistics.max) == (min(times), max(times))
         assert times == sorted(times) and last <= statistics.min
-        assert [(each.column_index, each.descending) for each in group.sorting_columns] == [(0, False)]
+        assert not group.sorting_columns
         last = statistics.max
     read.close()
 
@@ -237,7 +237,6 @@ async def test_columns_by_mapping(tmp_path: Path) -> None:
     assert table["event_aside"].to_pylist() == [None, None, EVENTS[2].decode()]
     (late,) = rows(tmp_path, "river-gauges", "late")
     assert (late["arrived_ns"], late["late_by_ns"], late["level"]) == (START_NS, 10**9 - 1000, 1.5)
-    assert pq.read_metadata(path).row_group(0).sorting_columns[0].column_index == 0
 
 
 async def test_with_the_event_in_a_column_nothing_is_kept_beside_it(tmp_path: Path) -> None:
@@ -250,7 +249,6 @@ async def test_with_the_event_in_a_column_nothing_is_kept_beside_it(tmp_path: Pa
     table = pq.read_table(path)
     assert table.column_names == ["event", "level", "time_ns"]
     assert [each.encode() for each in table["event"].to_pylist()] == EVENTS
-    assert pq.read_metadata(path).row_group(0).sorting_columns[0].column_index == 2
 
 
 async def test_repairs_are_files_of_their_own(tmp_path: Path) -> None:

@@ -33,6 +33,6 @@ async def test_lines_in_quarantine_are_driven_again_however_many_are_faulty(tmp_
         for _ in range(3):
             assert (await service.post("events", body_of(*FAULTS[:2]))).status == 200
         await eventually(lambda: service.runtime.feed.state.outbox.aside_events == 0)
-        answer = await service.post("quarantine/redrive", {})
+        answer = await service.post("quarantine/readmit", {})
         assert answer.status == 200, answer.content
-        assert (answer.json["driven"], answer.json["still_faulty"]) == (6, 6)
+        assert (answer.json["tried"], answer.json["still_faulty"]) == (6, 6)

@@ -29,15 +29,13 @@ import uvloop
 from strandline.app import Service
 from strandline.config import parse
 
-from strandline_loadgen.checker import judge
 from strandline_loadgen.child import free_port
 from strandline_loadgen.evidence import Sent
-from strandline_loadgen.stores import Reading, read_ndjson
 
 from .bare import RoundFile
 from .harness import Also, Measure, Row, Sample, Scale
 from .path import TwoMembers
-from .service import CONFIGURATION, FEED, Course, course_of
+from .service import CONFIGURATION, FEED, Course, check_files, course_of
 
 if TYPE_CHECKING:
     from nats.aio.client import Client
@@ -162,11 +160,7 @@ async def service_s(url: str, course: Course, folder: Path) -> float:
 
 
 def _check(course: Course, folder: Path) -> None:
-    reading = Reading(course.trace.source_names)
-    lanes = [read_ndjson(folder / "out", FEED, lane, reading) for lane in ("ordered", "late")]
-    verdict = judge(Sent.of(course.trace, course.bounds), *lanes, duplicates=0)
-    if not verdict.ok:
-        raise RuntimeError(f"what the service delivered is not right, no figure would mean anything:\n{verdict}")
+    check_files(course, Sent.of(course.trace, course.bounds), folder)
 
 
 async def _visit(course: Course, program: str) -> Sample:
@@ -188,8 +182,7 @@ def _prepare(program: str, scale: Scale) -> Measure:
     course = course_of(BODY_EVENTS, scale)
 
     def measure() -> Sample:
-        with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
-            return runner.run(_visit(course, program))
+        return uvloop.run(_visit(course, program))
 
     return measure
 

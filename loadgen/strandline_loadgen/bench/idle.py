@@ -84,8 +84,7 @@ def _prepare(scale: Scale) -> Measure:
     watch_s = WATCH_S_QUICK if scale.is_quick else WATCH_S
 
     def measure() -> Sample:
-        with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
-            return runner.run(_visit(watch_s))
+        return uvloop.run(_visit(watch_s))
 
     return measure
 

@@ -17,52 +17,36 @@ from pathlib import Path
 import msgspec
 import uvloop
 
-from strandline_loadgen.bodies import Body, Style, bodies, cut_by_count
 from strandline_loadgen.child import ChildServer, free_port
 from strandline_loadgen.driver import Target, at_once, every, send
-from strandline_loadgen.shapes import shape
 
 from .harness import Measure, Row, Sample, Scale
+from .service import FEED, WITHOUT_SINK, Course, course_of
 
-FEED = "bench"
 BODY_EVENTS = 500
-CONNECTIONS = 16
 EVENTS_SHARE, EVENTS_AT_LEAST = 0.5, 200_000  # of the scale's events; 10,000 a second: less is shorter than the slack
 GOAL = 1.0  # times (two syncs and one commit)
-CONFIGURATION = """listen = "127.0.0.1:{port}"
-data_dir = "{folder}/data"
-drain_at_most = "5m"
-[[feed]]
-name = "bench"
-time = {{ at = "/observed_at", unit = "ns" }}
-source = "/station"
-slack = "5s"
-idle_after = "1h"
-hold_at_most = "1h"
-ahead_limit = "1h"
-[[feed.sink]]
-kind = "sqlite"
-path = "{folder}/store.db"
-"""
+CONFIGURATION = WITHOUT_SINK + 'kind = "sqlite"\npath = "{folder}/store.db"\n'
 
 
-async def _run(cut: list[Body], events: int, rate: float | None, folder: Path) -> tuple[float, dict[str, float]]:
+async def _run(course: Course, rate: float | None, folder: Path) -> tuple[float, dict[str, float]]:
     """Events a second up to the last one delivered, and what the child timed. `rate`: events a second; None: at once"""
     port, file, result = free_port(), folder / "strandline.toml", folder / "timings.json"
-    file.write_text(CONFIGURATION.format(port=port, folder=folder.as_posix()))
+    file.write_text(CONFIGURATION.format(port=port, folder=folder.as_posix(), more="", slack=course.slack))
     command = [sys.executable, "-m", "strandline_loadgen.bench.latency_child", str(file), str(result)]
     async with ChildServer(command, port, folder / "service.log") as server:
         begin = time.monotonic()
         schedule = at_once if rate is None else every(BODY_EVENTS / rate)
-        done = await send(cut, Target(server.url, FEED, connections=CONNECTIONS, keys="bench"), schedule)
-        if not done.answered.all() or done.sums["accepted"] + done.sums["late"] != events:
+        target = Target(server.url, FEED, connections=course.connections, keys="bench")
+        done = await send(course.bodies, target, schedule)
+        if not done.answered.all() or done.sums["accepted"] + done.sums["late"] != len(course.trace):
             raise RuntimeError(f"not all was answered: no figure would mean anything\n{done.failures[:3]}")
         await server.drain(FEED)
         await _until_delivered(server)
         seconds = time.monotonic() - begin
         if code := await server.stop():
             raise RuntimeError(f"the service ended with {code}:\n{server.last_words()}")
-    return events / seconds, msgspec.json.decode(result.read_bytes(), type=dict[str, float])
+    return len(course.trace) / seconds, msgspec.json.decode(result.read_bytes(), type=dict[str, float])
 
 
 async def _until_delivered(server: ChildServer) -> None:
@@ -75,11 +59,11 @@ async def _until_delivered(server: ChildServer) -> None:
         await asyncio.sleep(0.02)
 
 
-async def _visit(cut: list[Body], events: int) -> Sample:
+async def _visit(course: Course) -> Sample:
     with tempfile.TemporaryDirectory(prefix="strandline-bench-") as name:
-        highest, _ = await _run(cut, events, None, Path(name))
+        highest, _ = await _run(course, None, Path(name))
     with tempfile.TemporaryDirectory(prefix="strandline-bench-") as name:
-        _, timed = await _run(cut, events, highest / 2, Path(name))
+        _, timed = await _run(course, highest / 2, Path(name))
     if not timed["releases"]:
         raise RuntimeError("nothing was released while it was timed: no figure would mean anything")
     allowed = 2 * timed["sync p99"] + timed["commit p99"]
@@ -96,13 +80,10 @@ async def _visit(cut: list[Body], events: int) -> Sample:
 
 def _prepare(scale: Scale) -> Measure:
     events = max(EVENTS_AT_LEAST, int(scale.events * EVENTS_SHARE)) // BODY_EVENTS * BODY_EVENTS
-    trace = shape("exponential", events, scale.seed, events_per_s=10_000.0, mean_s=0.5)
-    trace = trace.shifted(time.time_ns() - int(trace.arrivals[-1]))
-    cut = list(bodies(trace, cut_by_count(trace, BODY_EVENTS), Style("ns")))
+    course = course_of(BODY_EVENTS, scale, mean_s=0.5, slack="5s", events=events)
 
     def measure() -> Sample:
-        with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
-            return runner.run(_visit(cut, events))
+        return uvloop.run(_visit(course))
 
     return measure
 

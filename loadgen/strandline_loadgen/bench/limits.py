@@ -6,7 +6,6 @@ rates stand in the rows of `service`.
 
 from __future__ import annotations
 
-import asyncio
 import sys
 import tempfile
 import time
@@ -41,8 +40,7 @@ def _discarding(body_events: int, scale: Scale) -> Measure:
             return await events_per_s_discarding(course, Path(name))
 
     def measure() -> Sample:
-        with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
-            rate = runner.run(visit())
+        rate = uvloop.run(visit())
         return Sample(rate, {"MB/s": rate * sum(len(b.payload) for b in course.bodies) / len(course.trace) / 1e6})
 
     return measure

@@ -74,11 +74,13 @@ def _where(kept: Kept, source: str) -> str:
     facts = kept.machine
     packages = ", ".join(f"{name} {number}" for name, number in facts["packages"].items())
     scale = kept.scale
+    rounds = " or ".join(map(str, sorted({each.rounds for each in kept.figures})))
     return (
         f"Measured on {facts.get('when', 'an unknown day')}: {facts['processor']}, {facts['cores']} cores, "
         f"{facts['memory_gib']} GiB; {facts['system']}; {facts['python']}; {packages}. Load before the run: "
         f"{facts.get('load_before')}. {scale['events']:,} events a row, bodies of {scale['body_events']:,} where "
-        f"nothing else is said, seed {scale['seed']}; {facts.get('seconds', 0) / 60:.0f} minutes. From `{source}`."
+        f"nothing else is said, seed {scale['seed']}; {facts.get('seconds', 0) / 60:.0f} minutes, {rounds} rounds. "
+        f"From `{source}`."
     )
 
 

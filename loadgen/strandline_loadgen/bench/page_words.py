@@ -17,7 +17,8 @@ ABOUT = """# What Strandline costs
 
 This page is made by `python -m strandline_loadgen bench --page deploy/benchmark.md` from a kept result; do not edit it.
 A new result: `python -m strandline_loadgen bench --full --json tests/bench/results/DATE.json`, on a machine that does
-nothing else. Without `--full` it takes some ten minutes and measures up to a million events held.
+nothing else. Without `--full` it measures up to a million events held. How long a run took, and in how many rounds, is
+told with it below.
 
 Each row sets Strandline against a yardstick that is measured in the same visit, one after the other, and all rows are
 visited in turn, round after round. So read the ratios: they carry over to other machines, the times beside them do not.
@@ -44,10 +45,10 @@ measured (else 20), and `bisect.insort` from 500,000 held on over one."""
 
 LOSES = """## Where it loses
 
-* **Little is held.** Up to some tens of thousands of events, one sort of everything at each request is as fast, and
+* **Little is held.** With some 10,000 events held, one sort of everything at each request is as fast, and
   where the feed is nearly in order faster: there `numpy.argsort` has two runs to merge, and finds them in compiled
   code. Who holds that little and takes large requests needs no runs.
-* **A heap at a million and more.** `heapq` costs some microseconds an event whatever the shape, as long as the caches
+* **A heap at a million and more.** `heapq` costs about a microsecond an event whatever the shape, as long as the caches
   bear it. Runs are ahead of it by the factor shown, but not by two orders: what is merged out of many open runs has to
   be compared, however it is done, and each event that leaves has to be fetched from memory that no cache holds.
 * **Delays that grow with the slack.** With the same delays and more slack the cost stays what it was. Where the delays

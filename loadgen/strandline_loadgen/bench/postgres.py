@@ -7,7 +7,6 @@ transaction. What both have stored must be equal. The server is one that the ext
 
 from __future__ import annotations
 
-import asyncio
 import atexit
 import shutil
 import tempfile
@@ -94,8 +93,7 @@ def _prepare(commit_events: int, scale: Scale) -> Measure:
     batches, lines = course_of(commit_events, scale)
 
     def measure() -> Sample:
-        with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
-            return runner.run(_visit(batches, lines))
+        return uvloop.run(_visit(batches, lines))
 
     return measure
 

@@ -14,10 +14,10 @@ Books, journal, marks and sink do their work in both.
 
 from __future__ import annotations
 
-import asyncio
 import sys
 import tempfile
 import time
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from functools import partial
 from pathlib import Path
@@ -29,6 +29,7 @@ from strandline_loadgen.bodies import Body, Style, bodies, cut_by_count
 from strandline_loadgen.checker import judge
 from strandline_loadgen.child import ChildServer, free_port, serve
 from strandline_loadgen.driver import Delivery, Target, send
+from strandline_loadgen.evidence import Sent
 from strandline_loadgen.shapes import shape
 from strandline_loadgen.stores import Reading, read_ndjson
 from strandline_loadgen.trace import Int64s, Trace
@@ -39,7 +40,7 @@ FEED = "bench"
 GOAL, ORDERING_GOAL = 0.75, 0.9
 CONNECTIONS = {500: 16, 5_000: 8}
 EVENTS_SHARE = {500: 0.3, 5_000: 1.0}  # of the scale's events: smaller bodies take longer
-CONFIGURATION = """listen = "127.0.0.1:{port}"
+WITHOUT_SINK = """listen = "127.0.0.1:{port}"
 data_dir = "{folder}/data"
 drain_at_most = "5m"
 [[feed]]
@@ -52,9 +53,8 @@ hold_at_most = "1h"
 ahead_limit = "1h"
 {more}
 [[feed.sink]]
-kind = "ndjson"
-directory = "{folder}/out"
 """
+CONFIGURATION = WITHOUT_SINK + 'kind = "ndjson"\ndirectory = "{folder}/out"\n'
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,9 +68,11 @@ class Course:
     slack: str = "20s"
 
 
-def course_of(body_events: int, scale: Scale, *, mean_s: float = 2.0, slack: str = "20s") -> Course:
-    """Exponential delays at 10,000 events a second, the last one just arrived."""
-    events = int(scale.events * EVENTS_SHARE[body_events])
+def course_of(
+    body_events: int, scale: Scale, *, mean_s: float = 2.0, slack: str = "20s", events: int | None = None
+) -> Course:
+    """Exponential delays at 10,000 events a second, the last one just arrived. `events` None: as the scale says."""
+    events = int(scale.events * EVENTS_SHARE[body_events]) if events is None else events
     trace = shape("exponential", events, scale.seed, events_per_s=10_000.0, mean_s=mean_s)
     trace = trace.shifted(time.time_ns() - int(trace.arrivals[-1]))
     bounds = cut_by_count(trace, body_events)
@@ -110,7 +112,8 @@ async def events_per_s_service(course: Course, folder: Path, more: str = "") -> 
         rest_s = time.monotonic() - answered
         if code != 0:
             raise RuntimeError(f"the service ended with {code}, no figure would mean anything:\n{server.last_words()}")
-    _check(course, done, folder)
+    told = {name: done.sums[name] for name in ("accepted", "late")}
+    check_files(course, done.evidence(course.trace, course.bounds), folder, told)
     return len(course.trace) / done.seconds, rest_s
 
 
@@ -124,11 +127,11 @@ async def sent_all(server: ChildServer, course: Course) -> Delivery:
     return done
 
 
-def _check(course: Course, done: Delivery, folder: Path) -> None:
+def check_files(course: Course, sent: Sent, folder: Path, told: Mapping[str, int] | None = None) -> None:
+    """Raise RuntimeError unless the judge finds the service's files right."""
     reading = Reading(course.trace.source_names)
     lanes = [read_ndjson(folder / "out", FEED, lane, reading) for lane in ("ordered", "late")]
-    told = {"accepted": done.sums["accepted"], "late": done.sums["late"]}
-    verdict = judge(done.evidence(course.trace, course.bounds), *lanes, duplicates=0, told=told)
+    verdict = judge(sent, *lanes, duplicates=0, told=told)
     if not verdict.ok:
         raise RuntimeError(f"what the service delivered is not right, no figure would mean anything:\n{verdict}")
 
@@ -153,10 +156,7 @@ def _prepare(body_events: int, scale: Scale, *, bare: bool) -> Measure:
     unordered = course if bare else passing_through(course)
 
     def measure() -> Sample:
-        with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
-            if bare:
-                return runner.run(_against_bare(course))
-            return runner.run(_against_passing_through(course, unordered))
+        return uvloop.run(_against_bare(course) if bare else _against_passing_through(course, unordered))
 
     return measure
 

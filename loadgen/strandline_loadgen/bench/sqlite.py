@@ -8,7 +8,6 @@ log into the file) count for both.
 
 from __future__ import annotations
 
-import asyncio
 import sqlite3
 import tempfile
 import time
@@ -83,8 +82,7 @@ def _prepare(commit_events: int, scale: Scale) -> Measure:
         with tempfile.TemporaryDirectory(prefix="strandline-bench-") as name:
             bare_path, our_path = Path(name) / "bare.db", Path(name) / "sink.db"
             bare = events / _bulk_load(bare_path, commits)
-            with asyncio.Runner(loop_factory=uvloop.new_event_loop) as runner:
-                ours = events / runner.run(_sink_load(our_path, batches, lines))
+            ours = events / uvloop.run(_sink_load(our_path, batches, lines))
             if not checked:
                 _require_equal(our_path, bare_path)
                 checked = True

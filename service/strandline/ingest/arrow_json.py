@@ -23,13 +23,14 @@ from numpy.typing import NDArray
 
 from .arrow_texts import Array, Piece, Room, Words, characters_of, joined, offsets_of, text_array, text_bytes
 from .arrow_types import is_binary, is_text, values_of
+from .timestamps import UNIT_NS
 from .values import shown
 
 Bools = NDArray[np.bool_]
 Path = tuple[str, ...]
 
-_YEARS = {unit: (-62_167_219_200 * part, 253_402_300_800 * part - 1) for unit, part in
-          (("s", 1), ("ms", 10**3), ("us", 10**6), ("ns", 10**9))}  # fmt: skip
+_A_SECOND = {unit: UNIT_NS["s"] // length_ns for unit, length_ns in UNIT_NS.items()}  # how many of a unit it has
+_YEARS = {unit: (-62_167_219_200 * parts, 253_402_300_800 * parts - 1) for unit, parts in _A_SECOND.items()}
 _DAYS = (-719_528, 2_932_896)  # 0000-01-01 and 9999-12-31, in days since 1970
 _DAY_S = 86_400
 _ESCAPES = {0x22: '\\"', 0x5C: "\\\\", 0x08: "\\b", 0x09: "\\t", 0x0A: "\\n", 0x0C: "\\f", 0x0D: "\\r"}
@@ -155,7 +156,7 @@ class Writer:
         if pa.types.is_date64(kind):
             least, greatest = _DAYS[0] * _DAY_S * 1000, (_DAYS[1] + 1) * _DAY_S * 1000 - 1
         elif pa.types.is_time(kind):
-            least, greatest = 0, _DAY_S * {"s": 1, "ms": 10**3, "us": 10**6, "ns": 10**9}[kind.unit] - 1
+            least, greatest = 0, _DAY_S * _A_SECOND[kind.unit] - 1
         outside = valid & ((integers < least) | (integers > greatest))
         if not outside.any():
             return pc.cast(column, pa.string())

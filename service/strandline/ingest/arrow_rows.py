@@ -20,7 +20,7 @@ from ..core.columns import Fault, Times
 from ..errors import BodyError
 from .arrow_frames import PARTS_AT_MOST, Sums, refused, walk
 from .arrow_json import Path, Unheld, Writer, each_type, instants, plain_text
-from .arrow_texts import Room
+from .arrow_texts import Room, characters_of, offsets_of
 from .arrow_types import TAKEN, is_name, is_taken, is_text, values_of
 from .limits import BodyLimits
 from .lines import Lines, no_lines
@@ -125,22 +125,21 @@ def _column(chunks: list[Any]) -> Any:
 
 def _check_schema(schema: Any, pointed: Pointed, limits: BodyLimits, sums: Sums) -> None:
     """Refuse columns that cannot be written or read here, by name. Raises BodyError."""
-    seen: set[Path] = set()
+    kinds: dict[Path, Any] = {}
     for path, kind in each_type(schema):
-        if len(seen) >= COLUMNS_AT_MOST:
+        if len(kinds) >= COLUMNS_AT_MOST:
             _refuse_column(path, f"is one of more than {COLUMNS_AT_MOST:,} columns")
-        if path in seen:
+        if path in kinds:
             _refuse_column(path, "stands there twice")
         if not is_taken(kind):
             _refuse_column(path, f"is {_named(kind)}, which is not taken here: send {TAKEN}")
         if len(path) + bool(pa.types.is_struct(kind)) > limits.nesting_at_most:
             _refuse_column(path, f"is nested deeper than {limits.nesting_at_most} levels")
-        seen.add(path)
+        kinds[path] = kind
     # A schema alone claims nothing; with batches its columns count for each of them.
-    if len(seen) * max(1, sums.batches) > PARTS_AT_MOST:
-        raise BodyError(413, "Content Too Large", f"it has {sums.batches:,} record batches of {len(seen)} columns: "
+    if len(kinds) * max(1, sums.batches) > PARTS_AT_MOST:
+        raise BodyError(413, "Content Too Large", f"it has {sums.batches:,} record batches of {len(kinds)} columns: "
                         "send fewer and larger ones")  # fmt: skip
-    kinds = dict(each_type(schema))
     for role, tokens in _roles(pointed).items():
         kind = kinds.get(tokens)
         if kind is None:
@@ -194,9 +193,9 @@ def _plain(column: Any, room: Room) -> Any:
 
 def _lines_of(text: Any) -> Lines:
     """The lines of a string array, without a copy."""
-    offsets = np.frombuffer(text.buffers()[1], np.int32, len(text) + 1, text.offset * 4).astype(np.int64)
-    payload: Any = memoryview(text.buffers()[2])[offsets[0] : offsets[-1]]
+    offsets = offsets_of(text).astype(np.int64)
     offsets -= offsets[0]
+    payload: Any = characters_of(text).data
     return Lines(payload, offsets[:-1], offsets[1:] - 1, is_regular=True)
 
 
@@ -264,8 +263,8 @@ def times_of(column: Any, unit: Unit) -> tuple[Times, Bools]:
 def _parsed(column: Any) -> tuple[Times, Bools]:
     """RFC 3339 texts, those of one length together."""
     text = pc.fill_null(column, "")
-    offsets = np.frombuffer(text.buffers()[1], np.int32, len(text) + 1, text.offset * 4)
-    characters = np.frombuffer(text.buffers()[2] or b"", np.uint8)
+    offsets, characters = offsets_of(text), characters_of(text)
+    offsets = offsets - offsets[0]
     lengths = np.diff(offsets)
     times, bad = np.zeros(len(text), np.int64), np.ones(len(text), np.bool_)
     for length in np.unique(lengths).tolist():

@@ -25,7 +25,7 @@ from .json_items import json_fault
 from .limits import BodyLimits
 from .lines import Lines, is_utf8, utf8_fault
 from .nesting import deep_suspects, deepest
-from .pointer import Fields, Values, parse_pointer
+from .pointer import Fields, Values, decoded_lines, parse_pointer
 from .timestamps import unit_bounds
 from .values import (
     LineFault,
@@ -111,11 +111,8 @@ class Decoder:
         lengths = lines.ends - lines.starts
         if lengths.max() > self._limits.event_bytes_at_most:
             return None
-        try:
-            records = decoder.decode_lines(lines.payload)
-        except (msgspec.DecodeError, RecursionError):
-            return None
-        if len(records) != count or self._is_deep(lines):
+        records = decoded_lines(decoder, lines.payload, count)
+        if records is None or self._is_deep(lines):
             return None
         columns = self._columns(records, source_numbers)
         if columns.bad or (lines.are_cloudevents and not cloudevents.all_sound(lines.payload, count)):
@@ -139,9 +136,7 @@ class Decoder:
         new: Sequence[str] = ()
         bad_sources: Rows = ()
         if self._at.source is None:
-            number = source_numbers.get(self._feed_name, len(source_numbers))
-            sources = np.full(count, number, np.uint32)
-            new = [self._feed_name] if count and number == len(source_numbers) else []
+            sources, new = self._one_source(count, source_numbers)
         else:
             try:
                 sources = number_column(fields.source_numbers(records, source_numbers))
@@ -152,6 +147,12 @@ class Decoder:
         names = [self._feed_name] * count if self._at.source is None else fields.sources(records)
         identities, bad_ids = identity_column(names, fields.ids(records))
         return _Columns(times, sources, new, identities, [*bad_times, *bad_sources, *bad_ids])
+
+    def _one_source(self, count: int, source_numbers: Mapping[str, int]) -> tuple[NDArray[np.uint32], Sequence[str]]:
+        """The source column of a feed without a pointer to sources, and its name where it is new."""
+        number = source_numbers.get(self._feed_name, len(source_numbers))
+        new = [self._feed_name] if count and number == len(source_numbers) else []
+        return np.full(count, number, np.uint32), new
 
     # --- rows of columns (Arrow): the lines are made here, and only those of doubtful rows are read again ---
 
@@ -184,9 +185,7 @@ class Decoder:
         module = arrow_rows()
         times, bad = module.times_of(rows.time, self._unit)
         if self._at.source is None:
-            number = source_numbers.get(self._feed_name, len(source_numbers))
-            sources = np.full(len(times), number, np.uint32)
-            new = [self._feed_name] if len(times) and number == len(source_numbers) else []
+            sources, new = self._one_source(len(times), source_numbers)
         else:
             sources, new, bad_sources = module.sources_of(rows.source, source_numbers)
             bad = bad | bad_sources

@@ -16,12 +16,14 @@ import random
 from collections.abc import Callable, Coroutine
 from typing import Any
 
+from ..backoff import backoff_s
 from ..config_intakes import IntakeConfig
 from ..core.columns import Arrival, RequestKey
 from ..errors import REFUSALS, BodyError, StrandlineError, TooManyFaults
 from ..ingest.offload import Aside
 from ..problems import Refused
 from ..runtime import FeedRuntime
+from ..tasks import ended, first_of
 from .broker import Broker, BrokerLost, Message
 from .counts import Counts
 from .reading import Reader, key_in_quarantine
@@ -80,7 +82,7 @@ class Intake:
         if self._in_flight:
             await asyncio.wait([*self._in_flight.values()], timeout=within_s)
         for task in (*self._tasks, *self._in_flight.values()):
-            await _ended(task)
+            await ended(task)
         with contextlib.suppress(TimeoutError):
             async with asyncio.timeout(CLOSE_WITHIN_S):
                 await self._broker.close()
@@ -102,7 +104,7 @@ class Intake:
             except StrandlineError as error:
                 await self._lost(str(error))
             except Exception as error:
-                log.exception("%s: an unforeseen error in intake %s", self._runtime.config.name, self._config.name)
+                self._unforeseen()
                 await self._lost(f"an unforeseen error: {error or type(error).__name__}")
 
     async def _step(self) -> None:
@@ -126,13 +128,7 @@ class Intake:
 
     async def _idle(self, seconds: float) -> None:
         """Wait so long, or until it is to stop."""
-        stopping = asyncio.ensure_future(self._stopping.wait())
-        sleeping = asyncio.ensure_future(self._sleep(seconds))
-        try:
-            await asyncio.wait([stopping, sleeping], return_when=asyncio.FIRST_COMPLETED)
-        finally:
-            stopping.cancel()
-            sleeping.cancel()
+        await first_of(self._stopping.wait(), self._sleep(seconds))
 
     async def _lost(self, why: str) -> None:
         if self.counts.connected or self.counts.last_error != why:
@@ -143,9 +139,9 @@ class Intake:
         with contextlib.suppress(TimeoutError, StrandlineError):
             async with asyncio.timeout(CLOSE_WITHIN_S):
                 await self._broker.close()
-        longest = min(BACKOFF_AT_MOST_S, BACKOFF_BASE_S * 2**self._attempts)
-        self._attempts = min(self._attempts + 1, 16)
-        await self._idle(self._random.uniform(longest / 2, longest))
+        wait_s = backoff_s(self._random, self._attempts, base_s=BACKOFF_BASE_S, at_most_s=BACKOFF_AT_MOST_S)
+        self._attempts += 1
+        await self._idle(wait_s)
 
     def _connected(self, now: bool, words: str) -> None:
         self.counts.words = words
@@ -159,6 +155,8 @@ class Intake:
                 self.counts.waiting = await self._broker.waiting() if self.counts.connected else None
             except StrandlineError as error:  # the worker finds out too, and says so
                 log.debug("intake %s: %s", self._config.name, error)
+            except Exception:
+                self._unforeseen()
             await self._sleep(WAITING_EVERY_S)
 
     async def _remind(self, every_s: float) -> None:
@@ -167,8 +165,15 @@ class Intake:
         while True:
             await self._sleep(every_s)
             for message in before & self._in_flight.keys():
-                await self._broker.remind(message)
+                try:
+                    await self._broker.remind(message)
+                except Exception:
+                    self._unforeseen()
             before = set(self._in_flight)
+
+    def _unforeseen(self) -> None:
+        """Log the error that is being handled."""
+        log.exception("%s: an unforeseen error in intake %s", self._runtime.config.name, self._config.name)
 
     # ---- one message ------------------------------------------------------------------------------------------------
 
@@ -262,9 +267,3 @@ class Intake:
         self.counts.check()
         assert self.counts.in_flight == len(self._in_flight) <= self._config.in_flight_at_most
         assert self.counts.in_flight_bytes == sum(len(message.body) for message in self._in_flight)
-
-
-async def _ended(task: asyncio.Task[None]) -> None:
-    task.cancel()
-    with contextlib.suppress(asyncio.CancelledError):
-        await task

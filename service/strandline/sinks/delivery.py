@@ -13,9 +13,11 @@ from collections.abc import Awaitable, Callable, Coroutine, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, TypeVar
 
+from ..backoff import backoff_s
 from ..core.columns import Batch, Lane
 from ..errors import SinkRefused, SinkRetry
 from ..ports import Clock, Counting, Lines, Sink
+from ..tasks import ended, first_of
 from .rows import rows_of
 from .waiting import LaneState, Waiting
 
@@ -27,9 +29,6 @@ Sleep = Callable[[float], Coroutine[Any, Any, None]]
 
 GROUP_EVENTS_AT_MOST = 50_000
 GROUP_BYTES_AT_MOST = 32 * 1024 * 1024
-BACKOFF_BASE_S = 0.1
-BACKOFF_AT_MOST_S = 30.0
-RETRY_AFTER_AT_MOST_S = 3600.0  # a store that asks for more is asked again after this
 CLOSE_AT_MOST_S = 5.0
 
 logger = logging.getLogger(__name__)
@@ -143,7 +142,7 @@ class Delivery:
         try:
             if self.state().running and not self._paused and not self._waiting.empty:
                 self._emptied.clear()
-                await self._first(self._emptied.wait(), self._sleep(deadline_s))
+                await first_of(self._emptied.wait(), self._sleep(deadline_s))
         finally:
             self._draining = False
         return {lane: state for lane, state in self._waiting.state().items() if state.batches}
@@ -157,9 +156,9 @@ class Delivery:
         """Stop at once and release the sink; what is not durable is offered again after the next start."""
         for task in (self._worker, self._flush_timer):
             if task is not None:
-                await _ended(task)
+                await ended(task)
         closing = asyncio.ensure_future(self._sink.close())
-        await self._first(asyncio.shield(closing), self._sleep(CLOSE_AT_MOST_S))
+        await first_of(asyncio.shield(closing), self._sleep(CLOSE_AT_MOST_S))
         if not closing.done():
             logger.warning("sink %s does not close within %s s; it is left as it is", self.name, CLOSE_AT_MOST_S)
             closing.cancel()
@@ -310,14 +309,11 @@ class Delivery:
     # ---- waiting --------------------------------------------------------------------------------------------------
 
     async def _back_off(self, error: Exception) -> None:
-        """Wait with full jitter: a uniform draw below a bound that doubles (M. Brooker, "Exponential Backoff And
-        Jitter", 2015); where the store names a time, at least that long."""
+        """Wait before the next try; where the store names a time, at least that long."""
         self._waiting.again()
         self._set_flush_timer(anew=True)
-        bound = min(BACKOFF_AT_MOST_S, BACKOFF_BASE_S * 2.0 ** min(self._attempts, 30))
-        delay_s = self._random.uniform(0.0, bound)
-        if isinstance(error, SinkRetry) and error.retry_after_s is not None:
-            delay_s = max(delay_s, min(error.retry_after_s, RETRY_AFTER_AT_MOST_S))
+        asked_s = error.retry_after_s if isinstance(error, SinkRetry) else None
+        delay_s = backoff_s(self._random, self._attempts, asked_s)
         self._attempts += 1
         self._retries += 1
         self._last_error = str(error) or type(error).__name__
@@ -340,7 +336,7 @@ class Delivery:
         if at_most_s is None:
             await self._wake.wait()
         else:
-            await self._first(self._wake.wait(), self._sleep(at_most_s))
+            await first_of(self._wake.wait(), self._sleep(at_most_s))
 
     def _set_flush_timer(self, *, anew: bool) -> None:
         """A timer runs while the sink holds something that is not durable, and begins anew when something became so."""
@@ -355,21 +351,3 @@ class Delivery:
         await self._sleep(self._sink.flush_after_s)
         self._flush_due = True
         self._wake.set()
-
-    @staticmethod
-    async def _first(*calls: Awaitable[Any]) -> None:
-        """Wait for the first of these to end; the others are cancelled, and their ends awaited."""
-        tasks = [asyncio.ensure_future(call) for call in calls]
-        try:
-            await asyncio.wait(tasks, return_when=asyncio.FIRST_COMPLETED)
-        finally:
-            for task in tasks:
-                await _ended(task)
-
-
-async def _ended(task: asyncio.Future[Any]) -> None:
-    """Cancel it and wait for its end; awaiting it itself would swallow a cancelling of the one who waits."""
-    task.cancel()
-    await asyncio.wait([task])
-    if not task.cancelled():
-        task.exception()  # looked at, so that asyncio does not report it as forgotten

@@ -19,14 +19,13 @@ from nats.js.errors import APIError, NoStreamResponseError, NotFoundError
 from ..broker_access import BrokerAccess
 from ..core.columns import Batch, Lane
 from ..errors import SinkRefused, SinkRetry, StrandlineError
+from ..ingest.formats import NDJSON
 from ..nats_client import NOT_THERE, Client, connect, disconnect, words_of
 from ..ports import Lines
-from .ndjson import late_lines
-from .rows import one_lane
+from .ndjson import lane_lines
+from .rows import LANES, one_lane
 from .worker import OwnThread
 
-LANES: tuple[Lane, ...] = ("ordered", "late")
-MEDIA_TYPE = "application/x-ndjson"
 HEADER_BYTES = 1024  # of a message, which count among what a server lets be: more than any of ours
 _SAFE = re.compile(r"[A-Za-z0-9-]{1,63}", re.ASCII)
 
@@ -113,7 +112,7 @@ class JetstreamSink:
             place = places[batch.lane]
             if batch.number > place.reached:
                 held = place.events if batch.number == place.number else 0
-                await self._send(batch, held, await self._thread.run(partial(_lines_of, batch, lines)))
+                await self._send(batch, held, await self._thread.run(partial(lane_lines, batch, lines)))
                 places[batch.lane] = Place(batch.number, len(batch))
         self._places = places
         return {lane: place.reached for lane, place in places.items()}
@@ -199,7 +198,7 @@ class JetstreamSink:
     async def _publish(self, batch: Batch, part: Part) -> None:
         name = f"{self._prefix}/{self._feed}/{batch.lane}/{batch.number}"
         headers = {
-            "Content-Type": MEDIA_TYPE,
+            "Content-Type": NDJSON,
             "Nats-Msg-Id": name if part.first == 0 else f"{name}/{part.first}",
             "Strandline-Feed": self._feed,
             "Strandline-Lane": batch.lane,
@@ -216,10 +215,6 @@ class JetstreamSink:
             raise SinkRetry(told) from error
         except (APIError, *NOT_THERE) as error:
             raise SinkRetry(f"stream {self._stream} did not store batch {batch.number}: {words_of(error)}") from error
-
-
-def _lines_of(batch: Batch, lines: Lines) -> bytes:
-    return lines.ndjson(batch) if batch.lane == "ordered" else late_lines(batch, lines)
 
 
 def _parts(block: bytes, held: int, room: int) -> tuple[list[Part], list[int]]:

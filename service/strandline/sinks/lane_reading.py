@@ -7,7 +7,7 @@ import os
 import sqlite3
 from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 from ..errors import StrandlineError
 from .database import BUSY_WAIT_S, Table, connect, trouble
@@ -74,13 +74,13 @@ def refused_rows(
 
 def lanes_size(path: str | os.PathLike[str]) -> LanesSize:
     """What a file keeps; all 0 where there is none yet. Raises StrandlineError."""
-    with _reading(Path(path)) as connection:
+    with read_only(Path(path)) as connection:
         return LanesSize() if connection is None else measured(connection, Path(path))
 
 
 def last_number(path: str | os.PathLike[str], lane: KeptLane) -> int:
     """The highest number that a lane has given to a row, forgotten ones too; 0 where there is none. StrandlineError."""
-    with _reading(Path(path)) as connection:
+    with read_only(Path(path)) as connection:
         if connection is None:
             return 0
         found = connection.execute("SELECT number FROM kept WHERE lane = ?", (lane,)).fetchone()
@@ -132,7 +132,7 @@ def _rows(path: Path, table: Table, wanted: Mapping[str, object], limit: int) ->
     query = f"SELECT * FROM {table.name} WHERE {' AND '.join(conditions)} ORDER BY number LIMIT ?"
     rows: list[tuple[Any, ...]] = []
     room = ROW_BYTES_AT_MOST
-    with _reading(path, table.name) as connection:
+    with read_only(path, table.name) as connection:
         for row in [] if connection is None else connection.execute(query, (*conditions.values(), limit)):
             room -= len(row[-1])
             if rows and room < 0:
@@ -141,8 +141,21 @@ def _rows(path: Path, table: Table, wanted: Mapping[str, object], limit: int) ->
     return rows
 
 
+def first_number(connection: sqlite3.Connection, column: Literal["arrived_ns", "batch"], wanted: int) -> int:
+    """The number of the first late event with so much or more there: both ascend, so halving needs no index."""
+    # Each by itself: SQLite looks at the ends of the tree for one of them, and reads all for both at once.
+    ((low,),) = connection.execute("SELECT coalesce(min(number), 1) FROM late")
+    ((high,),) = connection.execute("SELECT coalesce(max(number), 0) + 1 FROM late")
+    query = f"SELECT number, {column} FROM late WHERE number >= ? ORDER BY number LIMIT 1"
+    while low < high:
+        middle = (low + high) // 2
+        row = connection.execute(query, (middle,)).fetchone()  # None: forgotten meanwhile
+        low, high = (row[0] + 1, high) if row is not None and row[1] < wanted else (low, middle)
+    return int(low)
+
+
 @contextlib.contextmanager
-def _reading(path: Path, table: str = "late") -> Iterator[sqlite3.Connection | None]:
+def read_only(path: Path, table: str = "late") -> Iterator[sqlite3.Connection | None]:
     """A connection that cannot write; None where there is no file, or none with this table yet."""
     with _sentences(path):
         if not path.exists():

@@ -15,7 +15,7 @@ from pathlib import Path
 from typing import Any, NamedTuple
 
 from ..errors import StrandlineError
-from .lane_reading import _reading
+from .lane_reading import first_number, read_only
 from .lane_tables import LATE, REFUSED
 
 SECOND_NS = 1_000_000_000
@@ -56,12 +56,12 @@ class LateSums(NamedTuple):
 
 def late_sums(path: str | os.PathLike[str], from_ns: int, to_ns: int) -> LateSums:
     """Late events that arrived from `from_ns` up to before `to_ns`. Raises StrandlineError. Blocking."""
-    with _reading(Path(path), LATE.name) as connection:
+    with read_only(Path(path), LATE.name) as connection:
         if connection is None:
             return LateSums([], [], True)
         _limit(connection)
         try:
-            span = _place(connection, from_ns), _place(connection, to_ns)
+            span = tuple(first_number(connection, "arrived_ns", each) for each in (from_ns, to_ns))
             where = "FROM late WHERE number >= ? AND number < ? GROUP BY source"
             several = "count(*), min(arrived_ns), max(arrived_ns)"
             totals = connection.execute(f"SELECT source, {several}, max(late_by_ns) {where}", span).fetchall()
@@ -78,7 +78,7 @@ def late_sums(path: str | os.PathLike[str], from_ns: int, to_ns: int) -> LateSum
 
 def refused_sums(path: str | os.PathLike[str], from_ns: int, to_ns: int) -> list[tuple[str, int, str]]:
     """(sink, events, one of the reasons) of batches made in that time. Raises StrandlineError. Blocking."""
-    with _reading(Path(path), REFUSED.name) as connection:
+    with read_only(Path(path), REFUSED.name) as connection:
         if connection is None:
             return []
         _limit(connection)
@@ -91,23 +91,6 @@ def refused_sums(path: str | os.PathLike[str], from_ns: int, to_ns: int) -> list
         except sqlite3.OperationalError as error:
             raise _too_long(error) from error
     return found
-
-
-def _place(connection: sqlite3.Connection, time_ns: int) -> int:
-    """The number of the first late event that arrived then or later: numbers ascend with arrivals."""
-    # Each by itself: SQLite looks at the ends of the tree for one of them, and reads all for both at once.
-    ((low,),) = connection.execute("SELECT coalesce(min(number), 1) FROM late")
-    ((high,),) = connection.execute("SELECT coalesce(max(number), 0) + 1 FROM late")
-    while low < high:
-        middle = (low + high) // 2
-        number, arrived_ns = connection.execute(
-            "SELECT number, arrived_ns FROM late WHERE number >= ? ORDER BY number LIMIT 1", (middle,)
-        ).fetchone()
-        if arrived_ns < time_ns:
-            low = number + 1
-        else:
-            high = middle
-    return int(low)
 
 
 def _limit(connection: sqlite3.Connection) -> None:

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from .lane_reading import _reading
+from .lane_reading import first_number, read_only
 from .lane_tables import LATE, QUARANTINE, REFUSED, LateRow, QuarantineRow
 
 STEPS_BETWEEN_QUESTIONS = 100_000  # of SQLite's machine; some 1 ms
@@ -31,7 +31,7 @@ def refusals(
 ) -> dict[str, str]:
     """Why each of these sinks refused one event for good; those that did not are missing. Raises StrandlineError."""
     found: dict[str, str] = {}
-    with _reading(Path(path), REFUSED.name) as connection:
+    with read_only(Path(path), REFUSED.name) as connection:
         if connection is None:
             return found
         query = "SELECT detail FROM refused WHERE sink = ? AND lane = ? AND batch = ? AND position = ?"  # by its index
@@ -44,10 +44,10 @@ def refusals(
 
 def late_record(path: str | os.PathLike[str], batch: int, time_ns: int, event: bytes) -> LateRecord:
     """What the store knows of a batch's late event of this time whose line begins so. Raises StrandlineError."""
-    with _reading(Path(path), LATE.name) as connection:
+    with read_only(Path(path), LATE.name) as connection:
         if connection is None:
             return LateRecord(None, {})
-        numbers = _numbers_of(connection, batch)
+        numbers = (first_number(connection, "batch", each) for each in (batch, batch + 1))
         query = (
             "SELECT number FROM late WHERE number >= ? AND number < ? AND time_ns = ? "
             "AND substr(CAST(event AS BLOB), 1, ?) = ? LIMIT 1"
@@ -58,26 +58,6 @@ def late_record(path: str | os.PathLike[str], batch: int, time_ns: int, event: b
         except sqlite3.OperationalError:  # an older file, without that table
             through = {}
     return LateRecord(None if row is None else row[0], through)
-
-
-def _numbers_of(connection: sqlite3.Connection, batch: int) -> tuple[int, int]:
-    """First number of a batch's rows and of the next one's: both ascend, so halving finds them without an index."""
-    last = connection.execute("SELECT coalesce(max(number), 0) FROM late").fetchone()[0]
-
-    def first_of(wanted: int) -> int:
-        low, high = 1, last + 1
-        while low < high:
-            middle = (low + high) // 2
-            row = connection.execute(
-                "SELECT number, batch FROM late WHERE number >= ? ORDER BY number LIMIT 1", (middle,)
-            ).fetchone()
-            if row is None or row[1] >= wanted:
-                high = middle
-            else:
-                low = row[0] + 1
-        return low
-
-    return first_of(batch), first_of(batch + 1)
 
 
 def kept_late(
@@ -109,7 +89,7 @@ def _kept(
     abandoned: Callable[[], bool],
 ) -> list[tuple[Any, ...]]:  # fmt: skip
     query = f"SELECT * FROM {table} WHERE arrived_ns < ? AND {where} ORDER BY number DESC LIMIT ?"
-    with _reading(Path(path), table) as connection:
+    with read_only(Path(path), table) as connection:
         if connection is None:
             return []
         connection.set_progress_handler(abandoned, STEPS_BETWEEN_QUESTIONS)

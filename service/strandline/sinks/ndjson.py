@@ -27,10 +27,9 @@ from ..errors import SinkRetry, StrandlineError
 from ..ports import Clock, Lines
 from .files import make_directory, sync_data, sync_directory, write_all
 from .repairs import Repair
-from .rows import late_by_ns, one_lane, source_column
+from .rows import LANES, late_by_ns, one_lane, source_column
 from .worker import OwnThread
 
-LANES: tuple[Lane, ...] = ("ordered", "late")
 ROLL_BYTES = 64 * 1024 * 1024
 ROLL_EVERY_S = 10.0
 # A name holds 255 bytes on every common file system, and lane, numbers and endings take 63 of them.
@@ -39,7 +38,7 @@ _DIGITS = 20  # the greatest uint64 has as many
 
 
 @dataclass(slots=True)
-class _Part:
+class Part:
     """The file of a lane that is being written: complete up to `last`, or thrown away."""
 
     descriptor: int
@@ -63,6 +62,7 @@ class NdjsonSink:
     """
 
     _ending = "ndjson"
+    _note_ending = ""
 
     def __init__(
         self,
@@ -79,7 +79,7 @@ class NdjsonSink:
         self._roll_bytes = roll_bytes
         self._roll_every_s = roll_every_s
         self._thread = OwnThread(f"{self._ending} {self._prefix}")
-        self._parts: dict[Lane, _Part] = {}
+        self._parts: dict[Lane, Part] = {}
         self._reached: dict[Lane, int] = {}
         self._bounds: dict[Lane, tuple[int, int]] = {}  # batches behind which a file must end
 
@@ -177,28 +177,28 @@ class NdjsonSink:
         return dict(self._reached)
 
     def _block(self, batch: Batch, lines: Lines) -> Any:
-        return lines.ndjson(batch) if batch.lane == "ordered" else late_lines(batch, lines)
+        return lane_lines(batch, lines)
 
     def _repair_block(self, repair: Repair) -> bytes:
         return repair.ndjson()
 
-    def _append(self, batch: Batch, block: Any) -> _Part:
+    def _append(self, batch: Batch, block: Any) -> Part:
         part = self._parts.get(batch.lane)
         if part is None:
             path = self._directory / f"{self._prefix}-{batch.lane}-{batch.number:0{_DIGITS}}.{self._ending}.part"
             descriptor = os.open(path, os.O_WRONLY | os.O_CREAT | os.O_TRUNC | os.O_CLOEXEC, 0o644)
-            part = _Part(descriptor, path, batch.number, batch.number, 0, self._clock.now_ns())
+            part = Part(descriptor, path, batch.number, batch.number, 0, self._clock.now_ns())
             self._parts[batch.lane] = part
         part.size = self._write(batch.lane, part, block)
         part.last = batch.number
         return part
 
-    def _write(self, lane: Lane, part: _Part, block: Any) -> int:
+    def _write(self, lane: Lane, part: Part, block: Any) -> int:
         """Write what a batch became; the size of the file with it. Raises OSError."""
         write_all(part.descriptor, block)
         return part.size + len(block)
 
-    def _finish(self, lane: Lane, part: _Part) -> None:
+    def _finish(self, lane: Lane, part: Part) -> None:
         """Write what a complete file ends with. Raises OSError."""
 
     def _roll_aged(self) -> None:
@@ -233,7 +233,7 @@ class NdjsonSink:
         self._reached[lane] = part.last
         os.close(part.descriptor)
 
-    def _note(self, lane: Lane, part: _Part) -> None:
+    def _note(self, lane: Lane, part: Part) -> None:
         """Say which batches the next complete file holds, before there is one."""
         path = self._note_path(lane)
         beside = path.with_name(f"{path.name}.part")
@@ -253,8 +253,7 @@ class NdjsonSink:
         return 0, 0
 
     def _note_path(self, lane: Lane) -> Path:
-        ending = "" if self._ending == "ndjson" else f".{self._ending}"
-        return self._directory / f".{self._prefix}-{lane}{ending}.completing"
+        return self._directory / f".{self._prefix}-{lane}{self._note_ending}.completing"
 
     def _pattern(self, lane: Lane, part: str) -> re.Pattern[str]:
         """The names of a lane's files: complete ones (`part` is empty), or those that never were."""
@@ -303,6 +302,11 @@ def feed_part(feed: str) -> str:
         digest = hashlib.sha256(feed.encode()).hexdigest()[:32]
         escaped = f"{escaped[: FEED_PART_AT_MOST - 33]}~{digest}"  # an unabridged name holds no `~`
     return escaped
+
+
+def lane_lines(batch: Batch, lines: Lines) -> bytes:
+    """An ordered or a late batch as NDJSON: events as they came, late ones wrapped."""
+    return lines.ndjson(batch) if batch.lane == "ordered" else late_lines(batch, lines)
 
 
 def late_lines(batch: Batch, lines: Lines) -> bytes:

@@ -22,7 +22,7 @@ import pyarrow.parquet as pq
 from ..core.columns import Batch, Lane
 from ..ports import Clock, Lines
 from .files import write_all
-from .ndjson import ROLL_BYTES, ROLL_EVERY_S, NdjsonSink, _Part
+from .ndjson import ROLL_BYTES, ROLL_EVERY_S, NdjsonSink, Part
 from .parquet_rows import Rows, repair_table
 from .postgres_columns import Column
 from .repairs import Repair
@@ -65,10 +65,12 @@ class ParquetSink(NdjsonSink):
     """Takes the ordered and the late lane of one feed into Parquet files that roll by size or age.
 
     Without `columns` a file has time_ns, source, batch, position and event; late files arrived_ns and late_by_ns too.
-    Rows of ordered files ascend in time, which their metadata says; late ones stand in the order of arrival.
+    Rows stand in the order of release, late ones in that of arrival. No metadata says that a column ascends: with
+    order = "source" time does so within a batch only, and each row group has its least and greatest time anyway.
     """
 
     _ending = "parquet"
+    _note_ending = ".parquet"
 
     def __init__(
         self,
@@ -93,7 +95,7 @@ class ParquetSink(NdjsonSink):
     def _block(self, batch: Batch, lines: Lines) -> Any:
         return self._rows.table(batch, lines)
 
-    def _write(self, lane: Lane, part: _Part, block: Any) -> int:
+    def _write(self, lane: Lane, part: Part, block: Any) -> int:
         file = self._open_files.get(lane)
         if file is None:
             file = self._begun(lane, part)
@@ -107,15 +109,12 @@ class ParquetSink(NdjsonSink):
             self._write_groups(file, file.rows // self._rows_per_group * self._rows_per_group)
         return file.output.size + file.nbytes
 
-    def _begun(self, lane: Lane, part: _Part) -> _Open:
+    def _begun(self, lane: Lane, part: Part) -> _Open:
         output = _Output(part.descriptor)
-        index = self._rows.sorted_by(lane)
-        ordering = None if index is None else [pq.SortingColumn(index)]
         writer = pq.ParquetWriter(
             output,
             self._rows.schema(lane),
             compression=self._compression,
-            sorting_columns=ordering,
             **self._rows.layout(lane),
             **FORMAT,
         )
@@ -129,7 +128,7 @@ class ParquetSink(NdjsonSink):
             rest = table.slice(count)
             file.waiting, file.rows, file.nbytes = rest.to_batches(), len(rest), rest.nbytes
 
-    def _finish(self, lane: Lane, part: _Part) -> None:
+    def _finish(self, lane: Lane, part: Part) -> None:
         file = self._open_files[lane]
         self._write_groups(file, file.rows)
         file.writer.close()

@@ -52,12 +52,6 @@ class Rows:
         fields += [pa.field(name, pa.int64()) for name in (LATE_ONLY if lane == "late" else ())]
         return pa.schema([*fields, pa.field(ASIDE, pa.string())] if self._aside else fields)
 
-    def sorted_by(self, lane: Lane) -> int | None:
-        """The column that the rows of a lane's files ascend by; None: late rows stand in the order of arrival."""
-        if lane != "ordered":
-            return None
-        return next((index for index, each in enumerate(self.columns) if each.value in ("time_ns", "time")), None)
-
     def layout(self, lane: Lane) -> dict[str, Any]:
         """How the writer lays out a lane's columns.
 

@@ -14,6 +14,7 @@ from typing import Any
 from ..core.columns import Batch, Lane
 from ..errors import SinkRefused, SinkRetry, StrandlineError
 from ..ports import Lines
+from ..tasks import ended
 from .postgres_columns import ASIDE_TABLE, DEFAULT, Column, key_of, settled
 from .postgres_fields import storable
 from .postgres_rows import ASIDE, ASIDE_KEY, LATE, Piece, RowMaker, Rows
@@ -30,10 +31,9 @@ from .postgres_server import (
     read_positions,
     trouble,
 )
-from .rows import one_lane
+from .rows import LANES, one_lane
 from .worker import OwnThread
 
-LANES: tuple[Lane, ...] = ("ordered", "late")
 ROWS_AT_ONCE = 5_000  # of a piece: 1 MB of events of 160 bytes
 CLOSE_WITHIN_S = 2.0
 
@@ -166,7 +166,7 @@ class PostgresSink:
                 piece = await ahead
                 aside += [piece.aside] if piece.aside else []
             finally:
-                await _ended(ahead)
+                await ended(ahead)
         yield piece.rows.block
 
     async def _copy(self, connection: Connection, rows: Rows, data: Any) -> None:
@@ -239,14 +239,6 @@ class PostgresSink:
         if not batches or not lies_in_rows(error, self._own_keys):
             return None
         return SinkRefused(f"{self._place} refuses the rows: {error}", [batch.number for batch in batches])
-
-
-async def _ended(task: asyncio.Task[Any]) -> None:
-    """Give it up, unless it has ended; an error of its own is told by whoever awaits it, or by nobody."""
-    task.cancel()
-    await asyncio.wait([task])
-    if not task.cancelled():
-        task.exception()
 
 
 def _settled(columns: Sequence[Column]) -> list[Column]:

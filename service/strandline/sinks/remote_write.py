@@ -23,10 +23,9 @@ from .remote_write_settling import PERMANENT, Settlement
 from .remote_write_wire import CONTENT_HEADERS, request_body
 from .repairs import Repair
 from .retry_after import SECOND_NS, http_date_ns, retry_after_s
-from .rows import one_lane
+from .rows import LANES, one_lane
 from .worker import OwnThread
 
-LANES: tuple[Lane, ...] = ("ordered", "late")
 SAMPLES_AT_MOST = 2_000
 AHEAD_AT_MOST_S = 300.0
 TIMEOUT_S = 30.0

@@ -12,9 +12,11 @@ from itertools import pairwise
 
 import numpy as np
 
-from ..core.columns import NO_SOURCE, TIME_MAX, Batch
+from ..core.columns import NO_SOURCE, TIME_MAX, Batch, Lane
 from ..errors import SinkRefused, StrandlineError
 from ..ports import Lines
+
+LANES: tuple[Lane, ...] = ("ordered", "late")  # that a sink of the user's takes
 
 
 def event_texts(batch: Batch, lines: Lines) -> list[str]:

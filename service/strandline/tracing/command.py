@@ -3,22 +3,20 @@
 from __future__ import annotations
 
 import argparse
-import http.client
 import json
 import os
 import sys
-import urllib.error
-import urllib.request
 from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
-from urllib.parse import quote, urlencode
+from urllib.parse import urlencode
 
 from ..cli_answers import DEFAULT_FILE, FINE, NO, NOT_REACHED, complain, harmless
 from ..cli_lanes import lanes_path
+from ..cli_options import URL
 from ..cli_progress import bar
-from ..cli_trace import URL
-from ..client_access import address_of, caller_of, refusal
+from ..client_access import address_of
+from ..client_asking import Refusal, Unreachable, answer_of
 from ..config import Config, load
 from ..errors import ConfigError, JournalError, StrandlineError
 from ..journal.disk import LocalDisk
@@ -29,34 +27,20 @@ from .question import LineReader, Question, QuestionError, question_of
 from .trace import OFFLINE_BYTES_AT_MOST, OPENINGS, trace
 from .words import because
 
-WITHIN_S = 600.0
-ANSWER_BYTES_AT_MOST = 16 << 20
 ANY_HOST = ("0.0.0.0", "::", "")
 MEGABYTE = 1_000_000
 
 Json = dict[str, Any]
 
 
-class _Refused(Exception):
-    """The service answered, but not with a trace. `code` is the exit code."""
-
-    def __init__(self, code: int, detail: str) -> None:
-        super().__init__(detail)
-        self.code = code
-
-
-class _Unreachable(Exception):
-    """Nothing answered."""
-
-
 def command(options: argparse.Namespace) -> int:
     """Trace what was asked for: 0 found, 1 not found, 2 wrong use, 3 neither service nor folder could be reached."""
     try:
         document = _document(options)
-    except _Refused as refused:
+    except Refusal as refused:
         complain(harmless(str(refused)))
         return refused.code
-    except _Unreachable as error:
+    except Unreachable as error:
         hint = "is the service running there? Name it with --url, or its folder with --data-dir"
         complain(f"{harmless(str(error))}; {hint}")
         return NOT_REACHED
@@ -79,7 +63,7 @@ def _document(options: argparse.Namespace) -> Json:
         return _offline(options, config)
     try:
         return _asked(options, url)
-    except _Unreachable as error:
+    except Unreachable as error:
         if config is None:
             raise
         complain(f"{harmless(str(error))}; reading {config.data_dir} instead")
@@ -98,32 +82,16 @@ def url_of(config: Config) -> str | None:
 
 
 def _asked(options: argparse.Namespace, url: str) -> Json:
-    """The service's answer. Raises _Refused, _Unreachable, ConfigError."""
+    """The service's answer. Raises Refusal, Unreachable, ConfigError."""
     given = {name: getattr(options, name) for name in ("id", "time", "source") if getattr(options, name) is not None}
     try:
         query = urlencode(given, errors="strict")
-        address = f"{url.rstrip('/')}/v1/feeds/{quote(options.feed, safe='')}/trace?{query}"
     except UnicodeEncodeError as error:
         raise ConfigError([f"{error.object!a} is not UTF-8"]) from None
-    shown = caller_of(options, url, os.environ)
     try:
-        request = urllib.request.Request(address)
-        for name, value in shown.headers.items():
-            request.add_unredirected_header(name, value)  # a token goes nowhere else
-        with urllib.request.urlopen(request, timeout=WITHIN_S, context=shown.context) as answer:
-            document = json.loads(answer.read(ANSWER_BYTES_AT_MOST))
-        return dict(document)
-    except urllib.error.HTTPError as error:
-        raise _Refused(*refusal(error.code, _detail(error), shown)) from None
-    except (OSError, http.client.HTTPException, ValueError, TypeError) as error:
-        raise _Unreachable(f"{url} could not be reached: {error}") from None
-
-
-def _detail(error: urllib.error.HTTPError) -> str:
-    try:
-        return str(json.loads(error.read(ANSWER_BYTES_AT_MOST))["detail"])
-    except (ValueError, LookupError, TypeError):
-        return f"the service answered {error.code} {error.reason}"
+        return dict(json.loads(answer_of(options, url, f"trace?{query}")))
+    except (ValueError, TypeError) as error:
+        raise Unreachable(f"{url} could not be reached: {error}") from None
 
 
 # ---- without a service ----------------------------------------------------------------------------------------------

@@ -101,5 +101,5 @@ def _standing(runtime: FeedRuntime) -> Standing:
 
 
 def _answered(runtime: FeedRuntime, question: Question, budget: Budget, standing: Standing) -> bytes:
-    found = trace(runtime.journal, question, runtime.folder / "lanes.db", budget, standing)
+    found = trace(runtime.journal, question, runtime.lanes_file, budget, standing)
     return msgspec.json.encode(document_of(found))

@@ -100,11 +100,6 @@ class Question:
             return False
         return read.id == self.id if self.id is not None else read.time_ns == self.time_ns
 
-    def in_words(self) -> str:
-        """The question, for a person."""
-        what = f"id {self.id!a}" if self.id is not None else f"time {self.time_ns} ns"
-        return what if self.source is None else f"{what} of source {self.source!a}"
-
 
 def question_of(
     feed: str, reader: LineReader | None, id: str | None, time: str | None, source: str | None

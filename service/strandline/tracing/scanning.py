@@ -14,7 +14,6 @@ from itertools import pairwise
 from typing import Any, TypeVar
 
 import msgspec
-import numpy as np
 
 from ..core.records import FRAME_HEADER_BYTES, ArrivalBody, Kind, decode_arrival, instant_of
 from ..core.tracing import Finder, Target
@@ -147,7 +146,7 @@ class _Look:
         source, length = int(body.sources[row]), int(body.lengths[row])
         if not self.finder.is_source(source):
             return None
-        place = body.payload_place + int(body.lengths[:row].sum(dtype=np.int64)) + row
+        place = body.place_of(row)
         line = _bytes(frame, place, length)
         reader = self._question.reader
         by_id = self._question.id is not None
@@ -155,9 +154,8 @@ class _Look:
             read = reader.read(line)
             if read is not None and not self._question.is_met(read):
                 return None  # another id with the same digest
-        number = row + 1 if body.line_numbers is None else int(body.line_numbers[row])
         identity = None if body.identities is None else int(body.identities[row])
-        target = Target(frame.lsn, place, number, int(body.times[row]))
+        target = Target(frame.lsn, place, body.line_of(row), int(body.times[row]))
         by, verified = ("id", reader is not None) if by_id else ("time", True)
         return Match(
             target, body.arrived_ns, len(body.times) + len(body.faults), length, source, identity,
@@ -233,10 +231,8 @@ def _occurrences_in(frame: Frame, finder: Finder) -> list[Occurrence]:
         return []
     body: ArrivalBody = understood(frame, decode_arrival, frame.body, frame.lsn)
     assert body.identities is not None
-    starts = np.cumsum(body.lengths.astype(np.int64) + 1) - body.lengths - 1 + body.payload_place
     found = []
     for row in rows:
-        number = row + 1 if body.line_numbers is None else int(body.line_numbers[row])
-        target = Target(frame.lsn, int(starts[row]), number, int(body.times[row]), passing=True)
+        target = Target(frame.lsn, body.place_of(row), body.line_of(row), int(body.times[row]), passing=True)
         found.append(Occurrence(target, int(body.identities[row]), body.arrived_ns))
     return found

@@ -1,0 +1,55 @@
+"""How a command asks a running service, or tells it something: one request, the answer's bytes, or why there is none.
+
+What to ask for, and what is said about the answer, is each command's own. Whom to show a token: `client_access`.
+"""
+
+from __future__ import annotations
+
+import argparse
+import http.client
+import os
+import urllib.error
+import urllib.request
+
+from .client_access import caller_of, detail_of, feed_address, refusal
+
+WITHIN_S = 600.0
+ANSWER_BYTES_AT_MOST = 16 << 20
+
+
+class Refusal(Exception):
+    """The service answered, but with no success. `code` is the exit code; the text says why."""
+
+    def __init__(self, code: int, detail: str) -> None:
+        super().__init__(detail)
+        self.code = code
+
+
+class Unreachable(Exception):
+    """Nothing answered, or nothing that is a service; the text names the address."""
+
+
+def answer_of(options: argparse.Namespace, url: str, path: str, body: bytes | None = None) -> bytes:
+    """What the service at `url` says about --feed (a POST of JSON where there is a body).
+
+    Raises Refusal, Unreachable, ConfigError.
+    """
+    address, shown = feed_address(url, options.feed, path), caller_of(options, url, os.environ)
+    headers = {"Content-Type": "application/json"} if body is not None else {}
+    try:
+        request = urllib.request.Request(address, body, headers)
+        for name, value in shown.headers.items():
+            request.add_unredirected_header(name, value)  # a token goes nowhere else
+        with urllib.request.urlopen(request, timeout=WITHIN_S, context=shown.context) as answer:
+            content: bytes = answer.read(ANSWER_BYTES_AT_MOST)
+            return content
+    except urllib.error.HTTPError as error:
+        told = detail_of(error.read(ANSWER_BYTES_AT_MOST)) or f"the service answered {error.code} {error.reason}"
+        raise Refusal(*refusal(error.code, told, shown)) from None
+    except (OSError, http.client.HTTPException, ValueError) as error:
+        raise unreachable(address, error) from None
+
+
+def unreachable(address: str, error: Exception) -> Unreachable:
+    """For an answer that cannot be a service's, too."""
+    return Unreachable(f"{address} could not be reached: {error}")
