@@ -356,8 +356,8 @@ FAULTS = [
     Fault(
         "a reservation that fails is told to nobody",
         (
-            Change(FeedRuntime, "has_headroom", "self._failed(error)", "pass"),
-            Change(FeedRuntime, "_reserve", "self._failed(error)", "pass"),
+            Change(FeedRuntime, "has_headroom", "self.fail(error)", "pass"),
+            Change(FeedRuntime, "_reserve", "self.fail(error)", "pass"),
         ),
         sim_cases.a_journal_that_fails_while_room_is_reserved_ends_the_service,
         r'assert story\.process is None and story\.tally\.counts\["failed"\] == 1',

@@ -14,8 +14,8 @@ import hashlib
 import hmac
 import re
 import secrets
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from collections.abc import Collection, Mapping, Sequence
+from dataclasses import dataclass, field, replace
 from typing import NamedTuple
 
 ROLES = {
@@ -46,6 +46,11 @@ class Token:
         named = self.feeds.get(role, frozenset())
         return EVERY in named or feed in named
 
+    def with_partitions(self, partitions: Mapping[str, Collection[str]]) -> Token:
+        """With each role for a feed held for its partitions too; `partitions` are their names by feed."""
+        feeds = {role: named.union(*(partitions.get(feed, ()) for feed in named)) for role, named in self.feeds.items()}
+        return replace(self, feeds=feeds)
+
     def may_some(self, role: str) -> bool:
         """Whether it has the role for any feed at all."""
         return bool(self.feeds.get(role))
@@ -73,6 +78,7 @@ RULES: dict[tuple[str, str], Rule] = {
     ("POST", f"{_FEED}/refused/resend"): Rule("operate"),
     ("POST", f"{_FEED}/quarantine/readmit"): Rule("operate"),
     ("GET", "/v1/feeds"): Rule("read", "some"),  # shows those that the token may read
+    ("GET", "/v1/cluster"): Rule("read", "some"),  # likewise
     ("GET", _FEED): Rule("read"),
     ("GET", f"{_FEED}/sources"): Rule("read"),
     ("GET", f"{_FEED}/slack"): Rule("read"),

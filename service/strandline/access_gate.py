@@ -66,7 +66,8 @@ def prepare(config: Config, beyond: list[str], now_ns: int) -> Standing:
     context: ssl.SSLContext | None = None
     try:
         if access.tokens is not None:
-            tokens = load_tokens(access.tokens, [feed.name for feed in config.feeds])
+            partitions = {feed.name: [each.name for each in feed.partition_feeds()] for feed in config.feeds}
+            tokens = tuple(token.with_partitions(partitions) for token in load_tokens(access.tokens, partitions))
     except ConfigError as error:
         faults += error.faults
     try:

@@ -16,6 +16,7 @@ import signal
 from collections.abc import Callable, Mapping
 from functools import partial
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import msgspec
 from aiohttp import web
@@ -24,6 +25,7 @@ from prometheus_client.aiohttp import make_aiohttp_handler
 from . import acting, lane_acts, notify, observe, openapi
 from .access_gate import Gate, prepare, reach
 from .clock import SystemClock
+from .cluster.http import CLUSTER, get_cluster
 from .config import Address, Config, load
 from .connections import Connections, make_room_for
 from .dashboard import live
@@ -46,6 +48,9 @@ from .sinks_of import MakeSink
 from .slack_answer import get_slack
 from .tls import TlsListener
 from .tracing.http import TRACES, Traces, close_traces, get_trace
+
+if TYPE_CHECKING:
+    from .cluster.running import Cluster
 
 log = logging.getLogger("strandline")
 TICK_S = 0.25
@@ -75,6 +80,7 @@ def make_app(config: Config, feeds: dict[str, FeedRuntime], gate: Gate) -> web.A
             web.post("/v1/feeds/{feed}/late/resend", lane_acts.post_late_resend),
             web.post("/v1/feeds/{feed}/refused/resend", lane_acts.post_refused_resend),
             web.post("/v1/feeds/{feed}/quarantine/readmit", lane_acts.post_quarantine_readmit),
+            web.get("/v1/cluster", get_cluster),
             web.get("/v1/feeds", observe.get_feeds),
             web.get("/v1/feeds/{feed}", observe.get_feed),
             web.get("/v1/feeds/{feed}/sources", observe.get_sources),
@@ -135,6 +141,7 @@ class Service:
         self._ticker: asyncio.Task[None] | None = None
         self._stopped = False
         self._intakes = Intakes()
+        self._cluster: Cluster | None = None
 
     async def start(self) -> None:
         """Open every feed, then listen. What was begun is undone where that fails or is cancelled."""
@@ -155,18 +162,28 @@ class Service:
         await asyncio.to_thread(check_free, self.config.listen)  # before a folder is made, and a long journal read
         self._folder.lock("lock")
         for feed in self.config.feeds:
+            if feed.partitions is not None:
+                continue  # its partitions are feeds while this instance owns them
             folder = self.config.feed_dir(feed)
             runtime = FeedRuntime(feed, folder, self._disk, self.clock, self._failed, self._make)
             self.feeds[feed.name] = runtime
             await runtime.open()
         self._ticker = asyncio.create_task(self._tick())
         app = make_app(self.config, self.feeds, self._gate)
+        if self.config.cluster is not None:
+            from .cluster.running import Cluster  # noqa: PLC0415 - needs the broker's client, which is an extra
+
+            self._cluster = app[CLUSTER] = Cluster(
+                self.config, self.feeds, self.clock, self._make, str(self.config.listen)
+            )
         app.on_shutdown.append(self._hush)
         try:
             await self._listen(app, self._gate)
         except OSError as error:
             raise not_free(self.config.listen, error) from error
         self._intakes.start(self.feeds.values())
+        if self._cluster is not None:
+            self._cluster.begin()
 
     async def _listen(self, app: web.Application, gate: Gate) -> None:
         limits, listen = self.config.limits, self.config.listen
@@ -209,6 +226,8 @@ class Service:
             with contextlib.suppress(asyncio.CancelledError):
                 await self._ticker
         await self._intakes.stop(limit_s)
+        if self._cluster is not None:
+            await self._cluster.stop(limit_s)
         await asyncio.gather(*(runtime.close(limit_s) for runtime in self.feeds.values()))
         if self._listener:
             self._listener.close()
@@ -233,14 +252,17 @@ class Service:
             config = load(path, environ)
             if fixed := fixed_changes(self.config, config):
                 raise StrandlineError(f"{', '.join(fixed)} can only change with a restart")
-            if full := [feed.name for feed in config.feeds if not self.feeds[feed.name].has_headroom(feed)]:
+            own = [feed for feed in config.feeds if feed.partitions is None]
+            if full := [feed.name for feed in own if not self.feeds[feed.name].has_headroom(feed)]:
                 raise StrandlineError(f"the disk has no room to note it in the journal of {', '.join(full)}")
             standing = prepare(config, self._beyond, self.clock.now_ns())
         except (StrandlineError, OSError) as error:
             log.error("the configuration stays as it was: %s", error)
             return False
-        for feed in config.feeds:
+        for feed in own:
             self.feeds[feed.name].reconfigure(feed)
+        if self._cluster is not None:
+            self._cluster.reconfigure(config)
         self.config, self._gate.standing = config, standing
         log.info("the configuration was read again and is in force")
         return True
@@ -258,21 +280,21 @@ class Service:
                 try:
                     runtime.tick()
                 except Exception as error:  # else the ticks of all feeds would end, and nobody would be told
-                    log.exception("an unforeseen error in a tick")
-                    self._failed(name, error)
+                    log.exception("%s: an unforeseen error in a tick", name)
+                    runtime.fail(error)
             if self.on_ticked is not None and self.failure is None:
                 self.on_ticked()
 
 
 def fixed_changes(old: Config, new: Config) -> list[str]:
     """Keys that differ and that a running service cannot change."""
-    found = [key for key in ("listen", "data_dir", "limits") if getattr(old, key) != getattr(new, key)]
+    found = [key for key in ("listen", "data_dir", "limits", "cluster") if getattr(old, key) != getattr(new, key)]
     if (old.tls.certificate is None) != (new.tls.certificate is None):
         found.append("whether there is TLS")
     if [feed.name for feed in old.feeds] != [feed.name for feed in new.feeds]:
         return [*found, "the list of feeds"]
     for before, after in zip(old.feeds, new.feeds, strict=True):
-        keys = ("time", "source", "id", "journal", "sinks", "intakes")
+        keys = ("time", "source", "id", "journal", "sinks", "intakes", "partitions")
         found += [f"{key} of feed {after.name}" for key in keys if getattr(before, key) != getattr(after, key)]
     return found
 

@@ -43,6 +43,9 @@ def _check_reach(config: Config, reading: Reading) -> None:
 
 def _write(file: str, config: Config) -> None:
     sys.stdout.write(f"{file} has no fault. Listens on {config.listen}, keeps its data in {config.data_dir}.\n")
+    if (cluster := config.cluster) is not None:
+        parts = sum(feed.partitions.count for feed in config.feeds if feed.partitions is not None)
+        sys.stdout.write(f"Is instance {cluster.instance} of cluster {cluster.name}: {parts} partitions to share.\n")
     headings = ("feed", "slack", "idle after", "hold at most", "sinks")
     write_table(headings, ((feed.name, *_waits(feed), ", ".join(_sinks(feed))) for feed in config.feeds))
 

@@ -84,7 +84,7 @@ def lanes_path(options: argparse.Namespace) -> Path:
         file = chosen_file(options.config)
         config = load(file, os.environ)
         if config.feed(options.feed) is None:
-            names = ", ".join(feed.name for feed in config.feeds)
+            names = ", ".join(feed.name for feed in config.runtime_feeds())
             raise ConfigError([f"{file} has no feed {options.feed!a}: there is {names}"])
         data_dir = config.data_dir
     folder = data_dir / "feeds"

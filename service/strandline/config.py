@@ -1,9 +1,9 @@
 """The configuration: one TOML file and `STRANDLINE_...` variables in, frozen structs out, or every fault at once.
 
-This is the door: other rooms import from here only. Behind it `config_model` and `config_sinks` declare the keys,
-`config_kinds` and `config_units` read single values, `config_read` walks the tables, `config_overrides` knows the
-variables, `config_checks` and `config_sink_checks` compare keys, `config_table` documents them. Nothing is opened,
-created or connected here, except that `load` reads the file.
+This is the door: other rooms import from here only. Behind it `config_model`, `config_sinks` and `config_cluster`
+declare the keys, `config_kinds` and `config_units` read single values, `config_read` walks the tables,
+`config_overrides` knows the variables, `config_checks` and its like compare keys, `config_table` documents them.
+Nothing is opened, created or connected here, except that `load` reads the file.
 """
 
 from __future__ import annotations
@@ -16,6 +16,7 @@ from typing import Any, TypeVar
 import msgspec
 
 from .config_checks import check
+from .config_cluster import ClusterConfig, Partitions, settled_cluster
 from .config_intakes import IntakeConfig
 from .config_kinds import Address
 from .config_model import Config, EventTime, Feed, Journal, Limits
@@ -26,6 +27,7 @@ from .errors import ConfigError
 
 __all__ = [
     "Address",
+    "ClusterConfig",
     "Config",
     "EventTime",
     "Feed",
@@ -33,6 +35,7 @@ __all__ = [
     "Journal",
     "Limits",
     "NdjsonConfig",
+    "Partitions",
     "PostgresConfig",
     "SinkConfig",
     "SqliteConfig",
@@ -119,7 +122,7 @@ def _settled(config: Config) -> Config:
         sinks = tuple(_settled_sink(sink, feed.name, config.data_dir) for sink in feed.sinks)
         intakes = tuple(_settled_sink(intake, feed.name, config.data_dir) for intake in feed.intakes)
         feeds.append(msgspec.structs.replace(feed, sinks=sinks, intakes=intakes))
-    return msgspec.structs.replace(config, feeds=tuple(feeds))
+    return msgspec.structs.replace(config, feeds=tuple(feeds), cluster=settled_cluster(config.cluster))
 
 
 def _settled_sink(sink: Described, feed_name: str, data_dir: Path) -> Described:

@@ -17,6 +17,7 @@ _NAME = re.compile(r"[A-Za-z0-9_-]{1,128}", re.ASCII)
 # A subject is tokens between dots; a token * stands for any one token, a last token > for any number of them
 # (the NATS documentation, "Subject-Based Messaging"; from memory).
 _SUBJECT = re.compile(r"(?:\*|[^\s.*>]+)(?:\.(?:\*|[^\s.*>]+))*(?:\.>)?|>")
+PARTITION = "{partition}"
 _SUBJECT_PREFIX = re.compile(r"[A-Za-z0-9_-]{1,64}(?:\.[A-Za-z0-9_-]{1,64}){0,7}", re.ASCII)
 
 
@@ -85,6 +86,21 @@ def subjects() -> Kind:
         return items
 
     return Kind("list of subjects, `*` and a last `>` allowed", read, list_text, list_from_text)
+
+
+def partitioned_subject() -> Kind:
+    """Subjects of a stream, in which one token is the number of a partition."""
+
+    def read(raw: object) -> str:
+        if not isinstance(raw, str) or len(raw) > CHARACTERS_AT_MOST or not raw.isprintable():
+            raise ValueError('is no text: write "part.{partition}.>"')
+        if _SUBJECT.fullmatch(raw) is None:
+            raise ValueError('is no subject, such as "part.{partition}.>": no token is empty, and > only stands last')
+        if raw.split(".").count(PARTITION) != 1 or raw.count(PARTITION) != 1:
+            raise ValueError('needs {partition} once, as a whole token: write such as "part.{partition}.>"')
+        return raw
+
+    return Kind("subject with one token `{partition}`, `*` and a last `>` allowed", read, quoted)
 
 
 def subject_prefix() -> Kind:

@@ -13,6 +13,7 @@ from pathlib import Path
 import msgspec
 
 from .config_access import check_access
+from .config_cluster_checks import check_cluster
 from .config_intake_checks import check_intakes
 from .config_kinds import quoted
 from .config_model import Config, Feed, SteeredSlack
@@ -51,11 +52,6 @@ FEED_RULES = (
         ("order", "clock"),
         lambda feed: feed.order == "source" and feed.clock == "arrival",
         "contradicts clock = {}: by the arrival clock no source waits for another, so leave `order` out",
-    ),
-    Rule(
-        ("order", "slack"),
-        lambda feed: feed.order == "source" and isinstance(feed.slack_ns, SteeredSlack),
-        'contradicts slack = {}: a slack is steered for the feed as a whole; give a fixed one, such as slack = "5s"',
     ),
     Rule(
         ("idle_after", "slack"),
@@ -121,6 +117,7 @@ def check(config: Config, reading: Reading) -> None:
     check_sinks(_sinks(config, reading), reading)
     _check_series_of_sources(config, reading)
     check_intakes(config.feeds, reading)
+    check_cluster(config, reading)
 
 
 def _judge(rule: Rule, feed: Feed, place: Place, reading: Reading) -> None:

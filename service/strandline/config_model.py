@@ -15,6 +15,7 @@ import msgspec
 from msgspec import field
 
 from .config_access import Access, Tls
+from .config_cluster import ClusterConfig, Partitions, base_of, partition_feeds
 from .config_intakes import INTAKE_KINDS, IntakeConfig
 from .config_kinds import Address, address, choice, count, duration, name, path, pointer, share, size, texts
 from .config_read import Key, Table, Tables
@@ -135,16 +136,22 @@ class Feed(msgspec.Struct, frozen=True):
     journal: Annotated[Journal, Table(Journal)] = Journal()
     sinks: Annotated[tuple[SinkConfig, ...], Tables(SINK_KINDS, SINK_KINDS_LATER)] = field(default=(), name="sink")
     intakes: Annotated[tuple[IntakeConfig, ...], Tables(INTAKE_KINDS)] = field(default=(), name="intake")
+    partitions: Annotated[Partitions | None, Table(Partitions)] = None
 
     @property
     def one_source(self) -> bool:
-        """Whether all events count as of one source: neither they nor an intake's messages name one."""
-        return self.source is None and not any(getattr(intake, "source", None) for intake in self.intakes)
+        """Whether all events count as of one source: neither they nor a broker's messages name one."""
+        takers = (*self.intakes, self.partitions)
+        return self.source is None and not any(getattr(taker, "source", None) for taker in takers)
 
     @property
     def longest_slack_ns(self) -> int:
         """The slack, or the longest that it may grow to."""
         return self.slack_ns.at_most_ns if isinstance(self.slack_ns, SteeredSlack) else self.slack_ns
+
+    def partition_feeds(self) -> tuple[Feed, ...]:
+        """The feeds that its partitions are, in order, each as `name-0` and so on; none where it has no partitions."""
+        return partition_feeds(self)
 
     def settings(self) -> Settings:
         """What the core must know of this feed; it is journaled with the feed."""
@@ -213,11 +220,24 @@ class Config(msgspec.Struct, frozen=True):
     access: Annotated[Access, Table(Access)] = Access()
     tls: Annotated[Tls, Table(Tls)] = Tls()
     limits: Annotated[Limits, Table(Limits)] = Limits()
+    cluster: Annotated[ClusterConfig | None, Table(ClusterConfig)] = None
     feeds: Annotated[tuple[Feed, ...], Tables({"": Feed})] = field(default=(), name="feed")
 
     def feed(self, wanted: str) -> Feed | None:
-        """The feed of this name, if there is one."""
-        return next((feed for feed in self.feeds if feed.name == wanted), None)
+        """The feed of this name, or that of a partition, if there is one."""
+        base = self.base_of(wanted)
+        found = next((feed for feed in self.feeds if feed.name == base), None)
+        if found is None or base == wanted:
+            return found
+        return next(feed for feed in found.partition_feeds() if feed.name == wanted)
+
+    def runtime_feeds(self) -> tuple[Feed, ...]:
+        """Every feed that is run by itself: in the place of one with partitions those of its partitions."""
+        return tuple(each for feed in self.feeds for each in (feed.partition_feeds() or (feed,)))
+
+    def base_of(self, runtime_name: str) -> str:
+        """The configured feed that a runtime belongs to: for a partition its feed, else the name itself."""
+        return base_of(self.feeds, runtime_name)
 
     def feed_dir(self, feed: Feed) -> Path:
         """The folder of one feed's journal and lanes."""

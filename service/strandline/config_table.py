@@ -5,6 +5,7 @@ deploy/configuration.md holds the result between its two marker lines; a test co
 
 from __future__ import annotations
 
+import re
 import sys
 from collections.abc import Iterator
 from typing import Any
@@ -52,8 +53,9 @@ def _heading(title: str, struct: type[msgspec.Struct]) -> str:
         return f'`{key} = {"[ { ... } ]" if several else "{ ... }"}` of {owner} with `kind = "{kind}"`'
     if issubclass(struct, SinkConfig | IntakeConfig):
         return f'`[[{name}]]` with `kind = "{struct.kind}"`'
-    last = name.rsplit(".", maxsplit=1)[-1]
-    return f"`[[{name}]]`" if name == "feed" else f"`{last} = {{ ... }}`{' of a feed' if '.' in name else ''}"
+    *above, last = name.split(".")
+    owner = f" of {'a feed' if above == ['feed'] else f'`{above[-1]}`'}" if above else ""
+    return f"`[[{name}]]`" if name == "feed" else f"`{last} = {{ ... }}`{owner}"
 
 
 def _default(item: Declared, key: Key) -> str:
@@ -66,8 +68,7 @@ def _default(item: Declared, key: Key) -> str:
 
 def _spelled(default: Any) -> Any:
     """A default with its placeholders as a reader would say them."""
-    text = str(default)
-    return text.replace("{feed}", "<feed>").replace("{kind}", "<kind>") if "{" in text else default
+    return re.sub(r"\{(feed|kind|host)\}", r"<\1>", str(default)) if "{" in str(default) else default
 
 
 if __name__ == "__main__":

@@ -35,6 +35,7 @@ REFUSALS: dict[str, tuple[int, str]] = {
     "lanes_full": (429, "The late lane or the quarantine has reached its limit"),
     "disk_full": (503, "The disk has no room for the journal"),
     "promise_ahead": (422, "The promise lies in the future"),
+    "stream_only": (422, "The feed takes its events from a stream"),
     "header_unreadable": (400, "Bad Request"),
     "body_slow": (408, "Request Timeout"),
     "body_too_large": (413, "Content Too Large"),

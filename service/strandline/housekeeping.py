@@ -108,6 +108,7 @@ class Housekeeper:
         if lsn > self._saved_lsn:
             await self._settle()
             await asyncio.to_thread(self._journal.write_snapshot, lsn, parts)
+            await self._commit.keep_snapshot(lsn, parts, needed)
             self._older_lsn, self._saved_lsn = self._saved_lsn, lsn
             self._saved_bytes = sum(len(part) for part in parts)
         # The older of the two kept snapshots stays usable, in case the newer one turns out damaged; where room is

@@ -16,12 +16,13 @@ import msgspec
 from aiohttp import web
 
 from .core.columns import Arrival, RequestKey
+from .decoding import decoder_of
 from .errors import BodyError
 from .ingest.endpoint import read_act, runtime_of
 from .ingest.formats import NDJSON
 from .problems import NotThere, Refused
 from .repairing import Repairer
-from .runtime import FeedRuntime, decoder_of
+from .runtime import FeedRuntime
 from .sinks.lane_reading import last_number
 from .sinks.lanes import ROWS_AT_MOST, QuarantineRow, forget_exactly, quarantine_rows
 

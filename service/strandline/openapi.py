@@ -253,13 +253,17 @@ def _paths() -> Json:
         **_history(),
         **_again(),
         "/v1/feeds": _get("Every feed", _answer("feeds", document)),
+        "/v1/cluster": _get(
+            "Who owns which partition, since when, how far behind",
+            {**_answer("the cluster", document), **_problems(404)},
+        ),
         "/v1/feeds/{feed}": _get(
             "Order, watermark (with order source: of the source furthest behind), slack, hold, books, hops, sinks",
             {**_answer("the feed", document), **_problems(404)},
             [_FEED],
         ),
         "/v1/feeds/{feed}/sources": _get(
-            "Sources; with order source each with its own watermark",
+            "Sources; with order source each with its own watermark, and its own slack and late share if steered",
             {**_answer("sources", document), **_problems(400, 404)},
             [_FEED, *_PAGE],
         ),

@@ -13,18 +13,17 @@ from collections.abc import Awaitable, Callable, Mapping, Sequence
 from functools import partial
 from pathlib import Path
 
-import msgspec
-
+from .bell import Bell
 from .config import Feed as FeedConfig
 from .core.columns import TIME_MIN, Arrival, Batch, Lane, RequestKey
 from .core.effects import Answer, Append, Deliver, Effect, Outcome, Pause, Refuse, Sync
 from .core.feed import Feed
 from .core.records import arrival_body_bytes
 from .core.view import View
+from .decoding import decoder_of
 from .errors import JournalFailed, JournalFull, StrandlineError
 from .hops import Bodies, Hop, watermark_words
 from .housekeeping import Housekeeper
-from .ingest.decode import Decoder
 from .intake.counts import Counts
 from .journal.commit import GroupCommit
 from .journal.journal import Journal
@@ -37,16 +36,11 @@ from .sinks import make_sink
 from .sinks.delivery import Delivery
 from .sinks.lanes import LaneStore
 from .sinks_of import FeedSinks, MakeSink, Positions
-from .waiters import Waiters
+from .waiters import Told, Waiters
 
 log = logging.getLogger(__name__)
+MakeCommit = Callable[[Journal, Callable[[int], None], Callable[[Exception], None]], GroupCommit]
 SMALL_RECORD_BYTES = 4096  # more than any record that is not an arrival's
-
-
-def decoder_of(config: FeedConfig, **changed: int) -> Decoder:
-    """The decoder of a feed's bodies; `changed` are limits that hold instead of the configured ones."""
-    limits = msgspec.structs.replace(config.body_limits(), **changed)
-    return Decoder(config.name, config.time.at, config.time.unit, config.source, config.id, limits=limits)
 
 
 def settings_bytes(config: FeedConfig) -> list[int]:
@@ -66,6 +60,7 @@ class FeedRuntime:
         clock: Clock,
         on_failed: Callable[[str, Exception], None],
         make: MakeSink = make_sink,
+        make_commit: MakeCommit = GroupCommit,
     ) -> None:
         self.config, self.clock, self._make = config, clock, make
         self.journal = Journal.open(
@@ -77,7 +72,7 @@ class FeedRuntime:
         self.feed = Feed(config.settings())
         self.recent = Recent()
         self.lines = JournalLines(self.journal, self.feed)
-        self.commit = GroupCommit(self.journal, self._durable, self._failed)
+        self.commit = make_commit(self.journal, self._durable, self.fail)
         self.decoder = decoder_of(config)
         self.lanes_file = folder / "lanes.db"
         self.lane_store = LaneStore(self.lanes_file)
@@ -88,15 +83,13 @@ class FeedRuntime:
         self.repairers: dict[str, Repairer] = {}
         self._on_failed = on_failed
         self.reading, self.decoding = Bodies(), Bodies()
-        self._synced = asyncio.Event()  # rung and replaced at each sync, and at a failure
+        self._synced = Bell()  # rung at each sync, and at a failure
         self._synced_ns: int | None = None
         self._delivered_ns: int | None = None
         self._taken_ns: int | None = None
         self._waiters = Waiters()
         self._untold: dict[tuple[str, Lane], int] = {}  # positions of sinks that the core was not told yet
-        self._house = Housekeeper(
-            self.journal, self.feed, self.commit, self._settle, clock, config.journal.retain_ns
-        )  # fmt: skip
+        self._house = Housekeeper(self.journal, self.feed, self.commit, self._settle, clock, config.journal.retain_ns)
         self._housekeeping: asyncio.Task[None] | None = None
         self.recording = False  # whether a capture is being made of it
         self.intakes: list[Counts] = []  # what is known of each, for observers
@@ -115,8 +108,8 @@ class FeedRuntime:
         for name, sink_object in sinks.items():
             self.deliveries[name] = self._delivery(name, sink_object, remembered.get(name, {}))
             self.deliveries[name].start()
-        # A new journal has no records yet.
-        positions = await self._positions.wait(set(sinks), for_all=self.feed.next_lsn == 0)
+        # A new journal remembers no sink yet.
+        positions = await self._positions.wait(set(sinks), for_all=not remembered)
         served = {name: sink_object.lanes for name, sink_object in sinks.items()}
         self.journal.reserve([SMALL_RECORD_BYTES] * 2 + settings_bytes(self.config), of_headroom=True)
         self.carry_out(self.feed.start(self.clock.now_ns(), served, positions, self.config.settings()))
@@ -161,7 +154,7 @@ class FeedRuntime:
         try:
             self.journal.close()
         except JournalFailed as error:
-            self._failed(error)
+            self.fail(error)
 
     async def _at_last(self, work: Callable[[], Awaitable[None]]) -> None:
         if not self._started or self.failure is not None:
@@ -171,20 +164,28 @@ class FeedRuntime:
         except JournalFull as error:
             log.warning("%s: no snapshot was written at the stop: %s", self.config.name, error)
         except JournalFailed as error:
-            self._failed(error)
+            self.fail(error)
 
     # ---- inputs ---------------------------------------------------------------------------------------------------
 
     async def arrive(self, arrival: Arrival, key: RequestKey | None = None) -> Outcome:
         """Hand one request to the core and wait until it is durable. Raises Refused."""
-        self._check_open()
-        self._check_lanes()
-        names = sum(len(name.encode()) + 8 for name in arrival.new_sources)
-        self._reserve([arrival_body_bytes(arrival), SMALL_RECORD_BYTES, SMALL_RECORD_BYTES, names])
-        now_ns = self.clock.now_ns()
-        outcome = await self._ask(lambda token: self.feed.arrive(arrival, now_ns, token, key), now_ns, arrival.received)
+        outcome = await self.begin(arrival, key)
         assert outcome is not None
         return outcome
+
+    def begin(self, arrival: Arrival, key: RequestKey | None = None, *, more: bool = False) -> Told:
+        """Hand one request to the core, now; it waits until that is durable. `more`: others follow, then `mark`."""
+        self._check_open()
+        self._check_lanes()
+        names, now_ns = sum(len(name.encode()) + 8 for name in arrival.new_sources), self.clock.now_ns()
+        self._reserve([arrival_body_bytes(arrival), SMALL_RECORD_BYTES, SMALL_RECORD_BYTES, names])
+        return self._ask(partial(self.feed.arrive, arrival, now_ns, key=key, more=more), now_ns, arrival.received)
+
+    def mark(self) -> None:
+        """The last of some requests that were begun with `more` has come."""
+        if self.failure is None and self.has_headroom():
+            self._do(lambda: self.feed.mark(self.clock.now_ns()))
 
     async def act(self, act: Callable[[int, int], list[Effect]], text_bytes: int = 0) -> None:
         """Carry out an act, `act(now_ns, token)`, that keeps so many bytes of text; wait until it is durable."""
@@ -227,14 +228,14 @@ class FeedRuntime:
     async def _refused(self, sink: str, batches: Sequence[Batch], detail: str) -> None:
         await self.lane_store.keep_refused(sink, batches, detail, self.lines, self.config.lanes_at_most_bytes)
 
-    async def _ask(self, ask: Callable[[int], list[Effect]], now_ns: int, events: int) -> Outcome | None:
+    def _ask(self, ask: Callable[[int], list[Effect]], now_ns: int, events: int) -> Told:
         token, future = self._waiters.begin(now_ns, events)
         try:
             self._do(partial(ask, token))
         except (ValueError, LookupError):
             self._waiters.forget(token)
             raise
-        return await future
+        return future
 
     def _do(self, ask: Callable[[], list[Effect]]) -> None:
         """Let the core decide, and carry it out. An error on the way is final: state and journal may differ by then.
@@ -248,7 +249,7 @@ class FeedRuntime:
             if isinstance(error, (ValueError, LookupError)) and self.feed.next_lsn == before == self.journal.next_lsn:
                 raise
             log.exception("%s: an unforeseen error", self.config.name)
-            self._failed(error)
+            self.fail(error)
 
     def _check_open(self) -> None:
         if self.failure is not None:
@@ -276,7 +277,7 @@ class FeedRuntime:
             self.feed.note_refusal(error.reason)
             raise Refused(error.reason, str(error), 5) from error
         except JournalFailed as error:
-            self._failed(error)
+            self.fail(error)
             raise Refused("failed", str(error), 10) from error
 
     def has_headroom(self, config: FeedConfig | None = None) -> bool:
@@ -288,7 +289,7 @@ class FeedRuntime:
             log.debug("%s: no room for a mark now: %s", self.config.name, error)
             return False
         except JournalFailed as error:
-            self._failed(error)  # a reservation failed, here or in the journal's thread: nobody else would say so
+            self.fail(error)  # a reservation failed, here or in the journal's thread: nobody else would say so
             return False
         return True
 
@@ -299,7 +300,7 @@ class FeedRuntime:
         for effect in effects:
             match effect:
                 case Append():
-                    self.journal.append(effect.lsn, effect.kind, effect.parts)
+                    self.commit.append(effect.lsn, effect.kind, effect.parts)
                 case Sync():
                     self.commit.kick()
                 case Deliver():
@@ -332,21 +333,21 @@ class FeedRuntime:
         while self.journal.durable_lsn < lsn:
             if self.failure is not None:
                 raise JournalFailed(self.failure)
-            bell = self._synced
+            bell = self._synced.next
             self.commit.kick()
             await bell.wait()
 
     def _durable(self, lsn: int) -> None:
-        bell, self._synced = self._synced, asyncio.Event()
-        bell.set()
+        self._synced.ring()
         self._synced_ns = self.clock.now_ns()
         self._do(partial(self.feed.synced, lsn))
 
-    def _failed(self, error: Exception) -> None:
+    def fail(self, error: Exception) -> None:
+        """Take nothing more, for good: state and journal may differ, or somebody else goes on with them."""
         if self.failure is not None:
             return
         self.failure = str(error) or type(error).__name__
-        self._synced.set()
+        self._synced.ring()
         self._waiters.refuse_all("failed", f"nothing more is accepted until a restart: {self.failure}")
         self._on_failed(self.config.name, error)
 
@@ -355,28 +356,29 @@ class FeedRuntime:
     def _keep_house(self) -> None:
         if self._housekeeping and self._housekeeping.done():
             self._housekeeping = None
-        if self._housekeeping is None and (self._house.due(self._segment_bytes) or self._lanes_full()):
+        if self._housekeeping is None and (self._house.due(self.config.journal.segment_bytes) or self._lanes_full()):
             self._housekeeping = asyncio.create_task(self._keep_house_now())
 
     async def _keep_house_now(self) -> None:
         try:
-            await self._house.run(self._segment_bytes)
+            await self._house.run(self.config.journal.segment_bytes)
             self.recent.forget_before(self.journal.first_lsn)
             if self._lanes_full():
                 await self.lane_store.measure()  # somebody may have removed what is settled
         except JournalFailed as error:
-            self._failed(error)
+            self.fail(error)
         except StrandlineError as error:
             log.warning("%s: %s", self.config.name, error)
         except Exception as error:
             log.exception("%s: an unforeseen error while keeping house", self.config.name)
-            self._failed(error)
-
-    @property
-    def _segment_bytes(self) -> int:
-        return self.config.journal.segment_bytes
+            self.fail(error)
 
     # ---- observers ------------------------------------------------------------------------------------------------
+
+    @property
+    def source_numbers(self) -> Mapping[str, int]:
+        """The numbers of the sources that are known so far."""
+        return self.feed.state.sources.numbers
 
     def view(self) -> View:
         """The feed as observers see it."""
@@ -384,8 +386,7 @@ class FeedRuntime:
 
     def hops(self) -> dict[str, Hop]:
         """The six hops, by name, in the order in which events pass them."""
-        state = self.feed.state
-        unsynced, unsynced_ns = self.feed.unsynced()
+        state, (unsynced, unsynced_ns) = self.feed.state, self.feed.unsynced()
         lanes = [lane for delivery in self.deliveries.values() for lane in delivery.state().lanes.values()]
         waiting = [lane.oldest_instant_ns for lane in lanes if lane.oldest_instant_ns is not None]
         marked_ns = None if state.marked_ns == TIME_MIN else state.marked_ns

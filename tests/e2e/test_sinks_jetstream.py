@@ -16,7 +16,7 @@ from helpers_sinks import HeldLines
 from nats.js import api
 from nats.js.errors import NotFoundError
 from sink_conformance import SinkConformance
-from strandline.core.columns import Lane
+from strandline.core.columns import Batch, Lane
 from strandline.errors import SinkRefused, SinkRetry, StrandlineError
 from strandline.ports import Sink
 from strandline.sinks.jetstream import JetstreamSink
@@ -207,3 +207,84 @@ async def test_a_server_that_restarts(tmp_path: Path) -> None:
         assert (await sink.take(batches, lines))["ordered"] == 3
         await sink.close()
         assert len(await messages(server, "out.river.ordered")) == 3
+
+
+# ---- two sinks for one feed -----------------------------------------------------------------------------------------
+
+
+async def forgotten(server: Nats, place: Path) -> None:
+    """Wait until the stream's window has passed over all that was published until now."""
+    client = await server.client()
+    stream, repeat = client.jetstream(), True
+    await stream.publish(f"{prefix_of(place)}.beside", b"", headers={"Nats-Msg-Id": str(place)})
+    while repeat:
+        again = await stream.publish(f"{prefix_of(place)}.beside", b"", headers={"Nats-Msg-Id": str(place)})
+        repeat = bool(again.duplicate)
+    await client.close()
+
+
+async def until_taken(sink: JetstreamSink, batches: list[Batch], lines: HeldLines) -> int:
+    while True:
+        try:
+            return (await sink.take(batches, lines))["ordered"]
+        except SinkRetry:
+            await asyncio.sleep(0)
+
+
+@pytest.mark.parametrize("in_window", [True, False])
+async def test_one_that_wakes_late_publishes_nothing_twice(server: Nats, tmp_path: Path, in_window: bool) -> None:
+    """Whether the server still knows the messages' ids or not."""
+    lines = HeldLines()
+    batches = lines.batches("ordered", range(1, 7))
+    earlier, later = (JetstreamSink([server.url], STREAM, "river", subject=prefix_of(tmp_path)) for _ in range(2))
+    await earlier.open()
+    await earlier.take(batches[:2], lines)
+    assert (await later.open())["ordered"] == 2
+    await later.take(batches[2:5], lines)
+    if not in_window:
+        await forgotten(server, tmp_path)
+    with pytest.raises(SinkRetry, match="wrong last sequence"):
+        await earlier.take(batches[2:4], lines)
+    assert (await earlier.take(batches[2:], lines))["ordered"] == 6
+    assert await until_taken(later, batches[5:], lines) == 6
+    await earlier.close()
+    await later.close()
+    found = await messages(server, f"{prefix_of(tmp_path)}.river.ordered")
+    assert [body for _, body in found] == [lines.ndjson(batch) for batch in batches]
+
+
+@pytest.mark.parametrize("sizes", [(150, 150), (150, 250)])
+async def test_two_at_the_same_moment_do_not_mix(server: Nats, tmp_path: Path, sizes: tuple[int, int]) -> None:
+    """Part by part, cut alike or not, whoever of them is ahead."""
+    lines = HeldLines()
+    batches = lines.batches("ordered", range(1, 13), 9)
+    sinks = [
+        JetstreamSink([server.url], STREAM, "river", subject=prefix_of(tmp_path), message_bytes_at_most=size)
+        for size in sizes
+    ]
+    await asyncio.gather(*(sink.open() for sink in sinks))
+    for start in range(0, len(batches), 3):
+        await asyncio.gather(*(until_taken(sink, batches[start : start + 3], lines) for sink in sinks))
+    await asyncio.gather(*(sink.close() for sink in sinks))
+    found = await messages(server, f"{prefix_of(tmp_path)}.river.ordered")
+    assert b"".join(body for _, body in found) == b"".join(lines.ndjson(batch) for batch in batches)
+
+
+async def test_what_was_deleted_is_there_again_once_the_server_has_forgotten_it(server: Nats) -> None:
+    """What the server drops for a repeat does not count as stored unless it still stands there."""
+    lines = HeldLines()
+    batches = lines.batches("ordered", [1, 2])
+    client = await server.client()
+    stream = client.jetstream()
+    await stream.add_stream(api.StreamConfig(name="DELETED", subjects=["deleted.>"], duplicate_window=1))
+    sink = JetstreamSink([server.url], "DELETED", "river", subject="deleted")
+    await sink.open()
+    await sink.take(batches, lines)
+    await stream.purge_stream("DELETED")
+    await sink.open()
+    with pytest.raises(SinkRetry, match="does so no more"):
+        await sink.take(batches, lines)
+    assert await until_taken(sink, batches, lines) == 2
+    assert (await stream.stream_info("DELETED")).state.messages == 2
+    await sink.close()
+    await client.close()

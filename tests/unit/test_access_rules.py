@@ -40,7 +40,7 @@ def expected(method: str, path: str) -> Rule:
     """The law, in words of its own: what an address needs by what it looks like."""
     if not path.startswith(("/v1/", "/metrics")):
         return Rule(None)
-    scope = "feed" if "{feed}" in path else "some" if path == "/v1/feeds" else "every"
+    scope = "feed" if "{feed}" in path else "some" if path in ("/v1/feeds", "/v1/cluster") else "every"
     if method in ("GET", "HEAD"):
         return Rule("read", scope)
     return Rule("ingest" if path.endswith(("/events", "/marks")) else "operate", scope)
@@ -75,6 +75,25 @@ def test_the_law_of_roles_and_feeds(role: str, granted: str) -> None:
             # RFC 6750, 3.1: insufficient_scope is 403, and may say which scope is needed.
             assert denied.status == 403
             assert 'error="insufficient_scope"' in denied.challenge and f'scope="{needed.role}"' in denied.challenge
+
+
+@pytest.mark.parametrize("role", ROLES)
+def test_a_role_for_a_feed_holds_for_its_partitions_and_for_no_others(role: str) -> None:
+    partitions = {"river": ["river-0", "river-1"], "river-1x": ["river-1x-0"], "sea": []}
+    _, granted = token_of(**{role: ["river"]})
+    token = granted.with_partitions(partitions)
+    allowed = {
+        (each, name)
+        for each in ROLES
+        for name in ("river", "river-0", "river-1", "river-2", "river-1x", "river-1x-0", "sea", "sea-0", EVERY)
+        if token.may(each, name)
+    }
+    assert allowed == {(role, name) for name in ("river", "river-0", "river-1")}
+    assert token.may_some(role) and (token.name, token.digest) == (granted.name, granted.digest)
+    _, every = token_of(**{role: [EVERY]})
+    assert every.with_partitions(partitions).may(role, EVERY)
+    _, none = token_of()
+    assert not none.with_partitions(partitions).may_some(role)
 
 
 def test_what_has_no_rule_is_for_nobody() -> None:

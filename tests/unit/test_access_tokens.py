@@ -7,12 +7,14 @@ import os
 from pathlib import Path
 
 import pytest
-from helpers_access import write_tokens
+from helpers_access import asking, write_tokens
 from hypothesis import given
 from hypothesis import strategies as st
 from strandline.access import Token, identify
+from strandline.access_gate import prepare
 from strandline.access_tokens import load_tokens, parse_tokens
 from strandline.cli import main
+from strandline.config import parse
 from strandline.errors import ConfigError
 
 FEEDS = ("river-gauges", "sea-gauges")
@@ -80,6 +82,23 @@ def test_whatever_stands_there_is_read_or_refused(value: object) -> None:
             assert all(isinstance(each, Token) for each in parse_tokens(f"{text}{key} = {body}\n", FEEDS, "t"))
         except ConfigError as error:
             assert all(fault.startswith("t: ") for fault in error.faults)
+
+
+def test_a_role_for_a_feed_is_one_for_its_partitions_once_the_file_is_in_force(tmp_path: Path) -> None:
+    text = (
+        asking(tmp_path / "t")
+        + '\n[cluster]\nname = "c"\nurls = ["nats://h:1"]\n[[feed]]\nname = "river"\n'
+        + 'partitions = { stream = "R", subject = "{partition}", count = 2 }\n'
+    )
+    write_tokens(tmp_path / "t", {"gw": {"read": ["river-0"]}})
+    with pytest.raises(ConfigError, match="names feed river-0, which is not configured; did you mean river"):
+        prepare(parse(text, {}), [], 0)
+    write_tokens(tmp_path / "t", {"gw": {"read": ["river"]}})
+    tokens = prepare(parse(text, {}), [], 0).tokens
+    assert tokens is not None
+    assert [name for name in ("river", "river-0", "river-1", "river-2") if tokens[0].may("read", name)] == [
+        "river", "river-0", "river-1",
+    ]  # fmt: skip
 
 
 # --- the file itself ---------------------------------------------------------------------------------------------

@@ -46,6 +46,13 @@ class TestConformance(SinkConformance):
         return [(row[0], plain(row[1]), *row[2:4], row[4].encode()) for row in ask(shared(), query, storable(feed))]
 
 
+class TestConformanceOfOneAmongOwners(TestConformance):
+    examples = 10
+
+    def make(self, place: Path, feed: str) -> Sink:
+        return PostgresSink(shared(), feed, schema=make_schema(shared(), place), shared=True)
+
+
 @pytest.fixture
 def schema(tmp_path: Path) -> str:
     return make_schema(shared(), tmp_path)

@@ -19,7 +19,7 @@ from ..config import Config
 from ..core.columns import Arrival, RequestKey
 from ..errors import BODY_REASONS, BodyError, TooManyFaults
 from ..hops import Bodies
-from ..problems import NotThere
+from ..problems import NotThere, Refused
 from ..runtime import FeedRuntime
 from .encodings import decompress, media_type_of
 from .offload import Aside, decoded
@@ -52,8 +52,26 @@ def runtime_of(request: web.Request) -> FeedRuntime:
     return runtime
 
 
+def refuse_partitions(request: web.Request) -> None:
+    """Events of a feed with partitions come by its stream only, whoever owns them now. Raises Refused."""
+    config, name = request.app[CONFIG], request.match_info["feed"]
+    base = config.base_of(name)
+    feed = config.feed(base)
+    if feed is None or feed.partitions is None:
+        return
+    if name in request.app[FEEDS]:
+        request.app[FEEDS][name].feed.note_refusal("stream_only")
+    stream, subject, last = feed.partitions.stream, feed.partitions.subject, feed.partitions.count - 1
+    detail = (
+        f"feed {base} takes no events by HTTP: publish them to stream {stream}, under {subject} with a partition "
+        f"of 0 to {last} that follows from the source; deploy/cluster.md says how"
+    )
+    raise Refused("stream_only", detail, 0)
+
+
 async def post_events(request: web.Request) -> web.Response:
     """Take events; answer what became of each once all of it is durable."""
+    refuse_partitions(request)
     runtime = runtime_of(request)
     try:
         return await _posted(request, runtime)

@@ -74,7 +74,7 @@ class JetstreamBroker:
             return []
         except (APIError, *NOT_THERE) as error:
             raise BrokerLost(f"consumer {self._config.durable}: {words_of(error)}") from error
-        return [_message(each) for each in found]
+        return [message_of(each) for each in found]
 
     async def settle(self, message: Message) -> None:
         """Acknowledge it."""
@@ -173,8 +173,8 @@ def _unfit(found: api.ConsumerConfig, subjects: tuple[str, ...]) -> str:
     return ""
 
 
-def _message(given: Msg) -> Message:
-    """The reply subject tells stream, sequence, deliveries and time (the server's own clock, ns)."""
+def message_of(given: Msg) -> Message:
+    """A message of a pull consumer. Its reply subject tells sequence, deliveries and time (the server's clock, ns)."""
     data, headers = given.metadata, given.headers or {}
     tokens = given.reply.split(".")
     sent_ns = int(tokens[7] if len(tokens) == 9 else tokens[9])

@@ -6,26 +6,40 @@ No broker and no settling here. What is accepted, late or refused is decided by 
 from __future__ import annotations
 
 import hashlib
+from collections.abc import Mapping
+from typing import Protocol
 
 import numpy as np
 
+from ..config import Feed as FeedConfig
 from ..config_intakes import IntakeConfig, JetstreamIntake, MqttIntake
 from ..core.columns import Arrival, Fault, RequestKey, empty_times
 from ..errors import BodyError
+from ..ingest.decode import Decoder
 from ..ingest.encodings import decompress, media_type_of
 from ..ingest.offload import Aside, decoded, numbered
 from ..ingest.values import SOURCE_BYTES_AT_MOST, is_source
-from ..runtime import FeedRuntime
 from .broker import Message
 
 KEY_CHARACTERS_AT_MOST = 1024
 DETAIL_CHARACTERS_AT_MOST = 400
 
 
+class Target(Protocol):
+    """For whom messages are read: a feed at work, or one whose journal is made again."""
+
+    config: FeedConfig
+    decoder: Decoder
+
+    @property
+    def source_numbers(self) -> Mapping[str, int]:
+        """The numbers of the sources that are known so far."""
+
+
 class Reader:
     """Reads the messages of one intake."""
 
-    def __init__(self, config: IntakeConfig, runtime: FeedRuntime, aside: Aside) -> None:
+    def __init__(self, config: IntakeConfig, runtime: Target, aside: Aside) -> None:
         self._config, self._runtime, self._aside = config, runtime, aside
         source = config.source if isinstance(config, JetstreamIntake | MqttIntake) else None
         self._level: int | None = None if source is None else getattr(source, source.__struct_fields__[0])
@@ -42,7 +56,7 @@ class Reader:
             raise BodyError(413, "Content Too Large", detail)
         body = decompress(message.body, message.content_encoding, limits.decoded_bytes_at_most)
         source = self._source(message)
-        decoder, table = self._runtime.decoder, self._runtime.feed.state.sources.numbers
+        decoder, table = self._runtime.decoder, self._runtime.source_numbers
         if source is None:
             arrival = await decoded(decoder, body, media_type, table, self._aside)
         else:

@@ -7,10 +7,11 @@ appended, and what follows from durability, is decided elsewhere.
 from __future__ import annotations
 
 import asyncio
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from typing import TypeVar
 
+from ..core.effects import Buffer
 from .counters import Counters
 from .journal import Journal
 
@@ -39,6 +40,13 @@ class GroupCommit:
     def counters(self) -> Counters:
         """Syncs, frames, bytes and how long the syncs took."""
         return self._journal.counters
+
+    def append(self, lsn: int, kind: int, parts: Sequence[Buffer]) -> None:
+        """Queue one record; see Journal.append."""
+        self._journal.append(lsn, kind, parts)
+
+    async def keep_snapshot(self, lsn: int, parts: Sequence[Buffer], needed_lsn: int) -> None:
+        """A snapshot was written beside the journal: nothing more is to be done where the journal is all there is."""
 
     @property
     def busy(self) -> bool:

@@ -28,9 +28,10 @@ CANNOT_RESERVE = frozenset({errno.EOPNOTSUPP, errno.ENOSYS, errno.EINVAL})
 class LocalFile:
     """One open file of fixed size. Not thread-safe: one thread writes; views may be read by any."""
 
-    def __init__(self, descriptor: int, size: int) -> None:
+    def __init__(self, descriptor: int, size: int, *, synced: bool = True) -> None:
         self._descriptor = descriptor
         self._size = size
+        self._synced = synced
 
     @property
     def size(self) -> int:
@@ -47,7 +48,8 @@ class LocalFile:
 
     def sync(self) -> None:
         """Make all that was written durable. Raises OSError; then the file must not be trusted any more."""
-        os.fdatasync(self._descriptor)
+        if self._synced:
+            os.fdatasync(self._descriptor)
 
     def view(self) -> memoryview:
         """The whole file, read-only; it shows what is written later too, and outlives `close`."""
@@ -89,11 +91,14 @@ def _plain(buffer: Buffer) -> memoryview:
 
 
 class LocalDisk:
-    """The directory tree below `root`. Paths are relative, with `/` between names; `..` and the like are refused."""
+    """The directory tree below `root`. Paths are relative, with `/` between names; `..` and the like are refused.
 
-    def __init__(self, root: str | os.PathLike[str], *, read_only: bool = False) -> None:
+    Not `synced`: for files that no other process will read, and that need not outlive this one; a sync does nothing.
+    """
+
+    def __init__(self, root: str | os.PathLike[str], *, read_only: bool = False, synced: bool = True) -> None:
         self._root = Path(root)
-        self._read_only = read_only
+        self._read_only, self._synced = read_only, synced
         self._locks: list[int] = []
 
     def names(self, directory: str) -> list[str]:
@@ -116,20 +121,21 @@ class LocalDisk:
         descriptor = os.open(target, os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC, 0o640)
         try:
             reserve(descriptor, size)
-            os.fsync(descriptor)
+            if self._synced:
+                os.fsync(descriptor)
         except BaseException:
             os.close(descriptor)
             with contextlib.suppress(OSError):
                 target.unlink()
             raise
-        return LocalFile(descriptor, size)
+        return LocalFile(descriptor, size, synced=self._synced)
 
     def open(self, path: str) -> LocalFile:
         """An existing file, for reading and writing (for reading only where the disk is read-only)."""
         mode = os.O_RDONLY if self._read_only else os.O_RDWR
         descriptor = os.open(self._at(path), mode | os.O_CLOEXEC)
         try:
-            return LocalFile(descriptor, os.fstat(descriptor).st_size)
+            return LocalFile(descriptor, os.fstat(descriptor).st_size, synced=self._synced)
         except BaseException:
             os.close(descriptor)
             raise
@@ -144,7 +150,8 @@ class LocalDisk:
 
     def sync_directory(self, directory: str) -> None:
         """Make creations, renames and removals in it durable."""
-        _sync_directory(self._at(directory))
+        if self._synced:
+            _sync_directory(self._at(directory))
 
     def lock(self, path: str) -> None:
         """Take the file at `path` as a lock that lasts until `close` or the end of the process, however it ends.

@@ -74,13 +74,14 @@ class Journal(Readable):
     def open(
         cls, disk: Disk, directory: str, *, segment_bytes: int = SEGMENT_BYTES,
         journal_bytes_at_most: int = JOURNAL_BYTES_AT_MOST, queued_bytes_at_most: int = QUEUED_BYTES_AT_MOST,
-        read_only: bool = False, clock: Callable[[], float] = time.perf_counter,
+        read_only: bool = False, begin_lsn: int = 0, clock: Callable[[], float] = time.perf_counter,
     ) -> Journal:  # fmt: skip
         """Read the directory back to its longest valid prefix (see `recovery`) and make that durable.
 
         The directory's last name is the feed's. `read_only` changes nothing on the disk, takes the segments of any one
         feed and refuses to append: for captures, and for looking on while another process writes. `clock` (seconds)
-        times syncs. Raises JournalError where something durable is missing or the disk does not answer.
+        times syncs. An empty directory begins at `begin_lsn`. Raises JournalError where something durable is missing or
+        the disk does not answer.
         """
         if segment_bytes < SEGMENT_BYTES_AT_LEAST or journal_bytes_at_most < 2 * segment_bytes:
             raise ValueError(f"{segment_bytes=} must be {SEGMENT_BYTES_AT_LEAST} or more, and the limit two segments")
@@ -90,7 +91,7 @@ class Journal(Readable):
             queued_bytes_at_most=queued_bytes_at_most, clock=clock, read_only=read_only,
         )  # fmt: skip
         try:
-            journal._take_over()
+            journal._take_over(begin_lsn)
         except (OSError, JournalFailed) as error:
             raise JournalError(
                 f"{directory}: the journal could not be opened ({error}); check the disk and the rights on data_dir"
@@ -100,7 +101,7 @@ class Journal(Readable):
                 journal._give_back()
         return journal
 
-    def _take_over(self) -> None:
+    def _take_over(self, begin_lsn: int) -> None:
         """Read what is on the disk, and make it certain and ready for appending unless it is only read."""
         found = recover(self._disk, self._directory, self._maps, own=not self._read_only)
         self._segments = tuple(found.segments)
@@ -110,7 +111,7 @@ class Journal(Readable):
             self.cut_bytes = make_certain(self._disk, found, self._maps)
             snapshots.remove_unfinished(self._disk, self._directory)
             self._spares.adopt()
-        self._next_lsn = self._durable_lsn = found.next_lsn
+        self._next_lsn = self._durable_lsn = found.next_lsn if found.segments else begin_lsn
         if not self._read_only:
             self.replenish()
         self._opened = True

@@ -1,8 +1,10 @@
 """The JetStream sink: one message of NDJSON for each batch, or several where a batch is larger than a message may be.
 
 The stream itself tells how far it is: each message names its batch and how many of the batch's events came before it,
-so the last message of a lane's subject is the position, whatever was lost on the way. A repeat that the server takes
-for one (`Nats-Msg-Id`, within the stream's window) is dropped there besides. When to try again is decided by delivery.
+so the last message of a lane's subject is the position, whatever was lost on the way. Each message is taken only right
+behind the one that this sink knows to be its subject's last (`Nats-Expected-Last-Subject-Sequence`), so two sinks that
+publish the same batches, one of them late, cannot mix. A repeat that the server takes for one (`Nats-Msg-Id`, within
+the stream's window) is dropped there besides. When to try again is decided by delivery.
 """
 
 from __future__ import annotations
@@ -14,6 +16,7 @@ from functools import partial
 
 import numpy as np
 from nats.js import JetStreamContext
+from nats.js.api import Header
 from nats.js.errors import APIError, NoStreamResponseError, NotFoundError
 
 from ..broker_access import BrokerAccess
@@ -82,6 +85,7 @@ class JetstreamSink:
         self._thread = OwnThread(f"jetstream {feed}")
         self._client: Client | None = None
         self._places: dict[Lane, Place] | None = None  # None: to be asked for again
+        self._last_sequence: dict[Lane, int] = {}  # of the last message of the lane's subject; 0: there is none
         self._room = message_bytes_at_most  # of one message, as server and stream let it be
 
     @property
@@ -137,7 +141,7 @@ class JetstreamSink:
             await self._connect()
         if self._places is None:
             try:
-                self._places = {lane: await self._last(subject) for lane, subject in self._subjects.items()}
+                self._places = {lane: await self._last(lane) for lane in LANES}
             except (APIError, *NOT_THERE) as error:
                 raise SinkRetry(f"stream {self._stream} does not tell how far it is: {words_of(error)}") from error
         return dict(self._places)
@@ -165,12 +169,15 @@ class JetstreamSink:
         assert self._client is not None
         return self._client.jetstream(timeout=self._timeout_s)
 
-    async def _last(self, subject: str) -> Place:
-        """What the last message of a subject says. Raises StrandlineError where it is none of a sink's."""
+    async def _last(self, lane: Lane) -> Place:
+        """What the last message of a lane's subject says. Raises StrandlineError where it is none of a sink's."""
+        subject = self._subjects[lane]
         try:
             found = await self._jetstream.get_last_msg(self._stream, subject)
         except NotFoundError:
+            self._last_sequence[lane] = 0
             return Place()
+        self._last_sequence[lane] = found.seq or 0
         headers: Mapping[str, str] = found.headers or {}
         try:
             number, first = int(headers["Strandline-Batch"]), int(headers["Strandline-First"])
@@ -205,9 +212,10 @@ class JetstreamSink:
             "Strandline-Batch": str(batch.number),
             "Strandline-First": str(part.first),
             "Strandline-Last": str(int(part.is_last)),
+            Header.EXPECTED_LAST_SUBJECT_SEQUENCE: str(self._last_sequence[batch.lane]),
         }
         try:
-            await self._jetstream.publish(
+            stored = await self._jetstream.publish(
                 self._subjects[batch.lane], part.block, timeout=self._timeout_s, stream=self._stream, headers=headers
             )
         except NoStreamResponseError as error:
@@ -215,6 +223,10 @@ class JetstreamSink:
             raise SinkRetry(told) from error
         except (APIError, *NOT_THERE) as error:
             raise SinkRetry(f"stream {self._stream} did not store batch {batch.number}: {words_of(error)}") from error
+        if stored.duplicate:  # it was stored before, but stands no longer at the end: messages were deleted since
+            told = f"stream {self._stream} held batch {batch.number}, does so no more, and takes it for a repeat"
+            raise SinkRetry(f"{told} until its `duplicate_window` has passed")
+        self._last_sequence[batch.lane] = stored.seq
 
 
 def _parts(block: bytes, held: int, room: int) -> tuple[list[Part], list[int]]:

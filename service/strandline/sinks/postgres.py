@@ -24,6 +24,7 @@ from .postgres_server import (
     Table,
     begin_at,
     connect,
+    end_what_stands_still,
     lies_in_rows,
     place_of,
     prepare,
@@ -45,6 +46,10 @@ class PostgresSink:
     stand, and copies the rows. The row of the position is locked by that, so a second process that writes for the same
     feed is noticed before it can do harm, and so is a server that was restored to an older state.
 
+    Where `shared`, a second process is no fault: a feed's owners follow one another, and an earlier one may be at work
+    still. Whoever delivers batch n delivers the same rows, so a position that another has moved forward is taken as
+    one's own, what is there is skipped, and an earlier owner's transaction that stands still is ended.
+
     What a table cannot hold is never lost. U+0000, which no text in PostgreSQL holds, makes a text its JSON literal. A
     value that does not fit its column is NULL where the row carries its event; else the row goes to the table
     `strandline_aside`, whole. What a table refuses for reasons of its own (a constraint, a trigger) makes its batch
@@ -61,9 +66,11 @@ class PostgresSink:
         late_table: str = "late",
         columns: Sequence[Column] = (),
         timeout_s: float = 60.0,
+        shared: bool = False,
     ) -> None:
         """`columns`: those of `table`, () for all of `postgres_columns.VALUES`. Raises StrandlineError."""
         self._dsn, self._place, self._schema, self._timeout_s = dsn, place_of(dsn), schema, timeout_s
+        self._shared = shared
         chosen = _settled(columns) or DEFAULT
         self._feed = storable(feed)
         self._rows = RowMaker(feed, table, late_table, chosen)
@@ -131,17 +138,24 @@ class PostgresSink:
     async def _take(self, batches: Sequence[Batch], lines: Lines) -> None:
         with self._troubles(batches):
             connection = await self._connected()
-            fresh = [batch for batch in batches if batch.number > self._positions[batch.lane]]
-            if fresh:
-                await self._write(connection, fresh, lines)
+            while fresh := [batch for batch in batches if batch.number > self._positions[batch.lane]]:
+                if await self._write(connection, fresh, lines):
+                    break
+                await connection.execute("ROLLBACK")
+                await self._find_positions(connection)
 
-    async def _write(self, connection: Connection, batches: Sequence[Batch], lines: Lines) -> None:
-        """One transaction: the position first, which locks it, then the rows, made in the thread a piece ahead."""
+    async def _write(self, connection: Connection, batches: Sequence[Batch], lines: Lines) -> bool:
+        """One transaction: the position first, which locks it, then the rows, made in the thread a piece ahead.
+
+        False where another owner has moved the position; then nothing was written.
+        """
         lane, number = batches[0].lane, batches[-1].number
         reached = self._positions[lane]
         pieces = self._rows.pieces(batches, lines, ROWS_AT_ONCE)
         first = await self._thread.run(partial(next, pieces))
         if not await begin_at(connection, self._schema, self._places[lane], reached, number):
+            if self._shared:
+                return False
             raise self._moved(lane)
         aside = [first.aside] if first.aside else []
         if first.last:
@@ -156,6 +170,7 @@ class PostgresSink:
             raise SinkRetry(f"{self._place}: the server undid the transaction")
         self._positions[lane] = number
         self._possible[lane] = {number}
+        return True
 
     async def _blocks(self, piece: Piece, pieces: Iterator[Piece], aside: list[Rows]) -> AsyncGenerator[bytes, None]:
         """The data of one COPY, piece by piece, the next one being made meanwhile; collects what goes aside."""
@@ -183,7 +198,7 @@ class PostgresSink:
             self._drop()
         if self._connection is None:
             try:
-                self._connection = await connect(self._dsn, self._timeout_s)
+                self._connection = await connect(self._dsn, self._timeout_s, in_turn=self._shared)
                 await self._learn(self._connection)
             except StrandlineError as error:
                 raise StrandlineError(f"{self._place}: {error}") from error
@@ -193,9 +208,16 @@ class PostgresSink:
         """See that the tables can take the rows, and where the store stands."""
         self._own_keys = await prepare(connection, self._schema, self._tables)
         self._places = await read_places(connection, self._feed, self._stored)
+        if self._shared:
+            for place in self._places.values():
+                await end_what_stands_still(connection, self._schema, place)
+        await self._find_positions(connection)
+
+    async def _find_positions(self, connection: Connection) -> None:
+        """Where the store stands. Raises StrandlineError where this sink cannot go on from there."""
         found = await read_positions(connection, self._schema, self._feed, self._stored)
         for lane, possible in self._possible.items():
-            if found[lane] not in possible:
+            if found[lane] not in possible and not (self._shared and found[lane] > min(possible)):
                 raise self._moved(lane)
         self._positions = found
         self._possible = {lane: {number} for lane, number in found.items()}

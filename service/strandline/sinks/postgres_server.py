@@ -21,6 +21,9 @@ from .postgres_rows import POSITION_KEY, POSITIONS
 Connection: TypeAlias = "asyncpg.Connection[asyncpg.Record]"
 CONNECT_WITHIN_S = 10.0
 LOCK_SHARE = 0.8  # of the time for an answer: then it is the server that says what it waited for
+# What an earlier owner's transaction may hold up the next one: it is waited for so long, and ended at the next try if
+# it has waited as long for its client. A commit takes milliseconds; a client that is stopped or gone may take hours.
+LOCK_IN_TURN_S = 2.0
 MAKING_LOCK = 0x5374726E646C696E  # of pg_advisory_xact_lock: two feeds that start together make their tables in turn
 
 
@@ -46,10 +49,11 @@ def place_of(dsn: str) -> str:
     return f"PostgreSQL at {hosts}{', database ' + database if database else ''}"
 
 
-async def connect(dsn: str, timeout_s: float) -> Connection:
+async def connect(dsn: str, timeout_s: float, *, in_turn: bool = False) -> Connection:
     """A connection whose commits are on the server's disk when they are answered. Raises what the driver raises.
 
     Locks are not waited for longer than `timeout_s`, nor is the transaction of a process that stands still kept open.
+    `in_turn`: owners follow one another, and none waits long for one before it (see `end_what_stands_still`).
     """
     connection = await asyncpg.connect(
         dsn,
@@ -58,7 +62,8 @@ async def connect(dsn: str, timeout_s: float) -> Connection:
         server_settings={"application_name": "strandline"},
     )
     try:
-        timeout = f"{max(1, round(timeout_s * LOCK_SHARE * 1000))}ms"
+        patience_s = min(timeout_s * LOCK_SHARE, LOCK_IN_TURN_S if in_turn else timeout_s)
+        timeout = f"{max(1, round(patience_s * 1000))}ms"
         for setting in ("lock_timeout", "idle_in_transaction_session_timeout"):
             await connection.execute("SELECT set_config($1, $2, false)", setting, timeout)
         if await connection.fetchval("SHOW synchronous_commit") == "off":  # else a crash loses what was answered
@@ -173,6 +178,22 @@ async def read_places(connection: Connection, feed: str, stored: dict[Lane, str]
         assert literals is not None
         places[lane] = " AND ".join(f"{name} = {value}" for name, value in zip(POSITION_KEY, literals, strict=True))
     return places
+
+
+async def end_what_stands_still(connection: Connection, schema: str, place: str) -> None:
+    """End the session of an earlier owner whose transaction holds this position while it waits for its client.
+
+    In the middle of a COPY no time limit of the server ends it, be its process stopped or its machine gone. Nothing is
+    lost: what it had not committed comes again. Only sessions of this user and of this program are touched.
+    """
+    query = f"""SELECT pg_terminate_backend(held.pid) FROM {quoted(schema, POSITION_TABLE)} AS position
+        JOIN pg_locks AS held ON held.locktype = 'transactionid' AND held.granted
+            AND held.transactionid = position.xmax
+        JOIN pg_stat_activity AS session ON session.pid = held.pid
+        WHERE {place} AND session.usename = current_user AND session.wait_event = 'ClientRead'
+            AND session.application_name = current_setting('application_name')
+            AND session.state_change < clock_timestamp() - make_interval(secs => $1)"""
+    await connection.execute(query, LOCK_IN_TURN_S)
 
 
 async def begin_at(connection: Connection, schema: str, place: str, reached: int, number: int) -> bool:
