@@ -45,7 +45,7 @@ BODY_EVENTS = 500
 GOAL = 0.7
 DURABLE = "taking from JetStream, against a loop that decodes and syncs"
 IN_FLIGHT = 256
-STREAM, SUBJECT, FETCH = "BENCH", "bench.events", 100
+STREAM, SUBJECT, FETCH = "BENCH", "bench.0.events", 100
 PUBLISHED_AT_ONCE = 50
 UP_WITHIN_S, DONE_WITHIN_S = 20.0, 300.0
 INTAKE = """[[feed.intake]]
@@ -87,10 +87,10 @@ async def _until_up(port: int) -> None:
             await asyncio.sleep(0.02)
 
 
-async def publish(client: Client, course: Course) -> None:
+async def publish(client: Client, course: Course, replicas: int = 1) -> None:
     """All bodies, in order, each a message."""
     stream = client.jetstream(timeout=30.0)
-    await stream.add_stream(name=STREAM, subjects=[SUBJECT])
+    await stream.add_stream(name=STREAM, subjects=[SUBJECT], num_replicas=replicas)
     for start in range(0, len(course.bodies), PUBLISHED_AT_ONCE):
         some = course.bodies[start : start + PUBLISHED_AT_ONCE]
         acknowledged = [await stream.publish_async(SUBJECT, body.payload) for body in some]

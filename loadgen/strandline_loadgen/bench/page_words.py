@@ -88,6 +88,12 @@ SECTIONS = (
     ),
     Section("Brokers", ("taking from",), "Events taken from a broker's messages, up to the acknowledgement."),
     Section(
+        "A partition of a cluster",
+        ("a partition",),
+        "Share of the rate of an intake with a journal of its own; the rate with a log on three brokers, which here "
+        "take the cores from it; and the time in which another instance takes over, everything being held.",
+    ),
+    Section(
         "Release latency",
         ("release latency",),
         "From the arrival that let the watermark pass an event to the SQLite commit that holds it, at half the highest "

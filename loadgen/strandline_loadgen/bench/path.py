@@ -14,6 +14,7 @@ import time
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 from functools import partial
+from importlib.util import find_spec
 
 import msgspec
 import numpy as np
@@ -96,6 +97,7 @@ class Lap:
     """One run of the subject over a course: bytes released by lane, and the bytes themselves where they are wanted."""
 
     keep: bool = False
+    is_compiled: bool = False  # how it is decoded
     released_bytes: int = 0
     ordered: list[bytes] = field(default_factory=list)
     late: list[bytes] = field(default_factory=list)
@@ -108,7 +110,7 @@ class Path:
     def __init__(self, course: Course, journal: MemoryJournal, lap: Lap) -> None:
         self._journal, self._lap = journal, lap
         self._feed = Feed(course.settings)
-        self._decoder = Decoder("bench", "/observed_at", "ns", "/station", None)
+        self._decoder = Decoder("bench", "/observed_at", "ns", "/station", is_compiled=lap.is_compiled)
         self._carry_out(self._feed.start(course.arrivals_ns[0], {}))
 
     def take(self, payload: bytes, now_ns: int, token: int) -> None:
@@ -167,9 +169,9 @@ def run_yardstick(course: Course) -> int:
     return time.process_time_ns() - begin
 
 
-def check(course: Course, journal: MemoryJournal) -> None:
+def check(course: Course, journal: MemoryJournal, is_compiled: bool = False) -> None:
     """Raise RuntimeError unless the judge finds all well, byte for byte."""
-    lap = Lap(keep=True)
+    lap = Lap(True, is_compiled)
     run(course, journal, lap)
     reading = Reading(course.trace.source_names, digests=True)
     sent = with_digests(Sent.of(course.trace, course.bounds), digests_of(b"".join(course.payloads)))
@@ -197,15 +199,15 @@ def course_of(name: str, scale: Scale) -> Course:
     return Course.of(trace, scale.body_events, slack, Style("ns"))
 
 
-def _prepare(name: str, journals: list[MemoryJournal], scale: Scale) -> Measure:
+def _prepare(name: str, is_compiled: bool, journals: list[MemoryJournal], scale: Scale) -> Measure:
     course = course_of(name, scale)
     if not journals or journals[-1].size < course.journal_bytes:
         journals.append(MemoryJournal(course.journal_bytes * 5 // 4))
     journal = journals[-1]
-    check(course, journal)
+    check(course, journal, is_compiled)
 
     def measure() -> Sample:
-        ours, yardstick = run(course, journal, Lap()), run_yardstick(course)
+        ours, yardstick = run(course, journal, Lap(is_compiled=is_compiled)), run_yardstick(course)
         events = len(course.trace)
         return Sample(ours / yardstick, {"ns/event": ours / events, "decode_lines ns/event": yardstick / events})
 
@@ -223,12 +225,14 @@ GOALS = {
 
 
 def rows(scale: Scale) -> list[Row]:
-    """A row for each shape: how many times the yardstick's time the whole path takes."""
+    """A row for each shape: how many times the yardstick's time the whole path takes; compiled too, where it can be."""
     journals: list[MemoryJournal] = []  # shared by the rows, which run one at a time; its pages are warm then
     return [
         Row(
-            f"body to ordered bytes, {name}", "x", partial(_prepare, name, journals), goal, "at most",
-            place={"shape": name},
+            f"body to ordered bytes, {name}{', compiled' * is_compiled}", "x",
+            partial(_prepare, name, is_compiled, journals), goal, "at most",
+            place={"shape": name, "decoding": "compiled" if is_compiled else "plain"},
         )
+        for is_compiled in ((False, True) if find_spec("numba") else (False,))
         for name, goal in GOALS.items()
     ]  # fmt: skip

@@ -5,6 +5,7 @@ from __future__ import annotations
 from . import (
     arrow,
     brokers,
+    cluster,
     durable,
     growth,
     heap,
@@ -29,6 +30,7 @@ ROOMS = (
     durable,
     service,
     brokers,
+    cluster,
     latency,
     idle,
     sqlite,

@@ -127,10 +127,12 @@ async def sent_all(server: ChildServer, course: Course) -> Delivery:
     return done
 
 
-def check_files(course: Course, sent: Sent, folder: Path, told: Mapping[str, int] | None = None) -> None:
+def check_files(
+    course: Course, sent: Sent, folder: Path, told: Mapping[str, int] | None = None, feed: str = FEED
+) -> None:
     """Raise RuntimeError unless the judge finds the service's files right."""
     reading = Reading(course.trace.source_names)
-    lanes = [read_ndjson(folder / "out", FEED, lane, reading) for lane in ("ordered", "late")]
+    lanes = [read_ndjson(folder / "out", feed, lane, reading) for lane in ("ordered", "late")]
     verdict = judge(sent, *lanes, duplicates=0, told=told)
     if not verdict.ok:
         raise RuntimeError(f"what the service delivered is not right, no figure would mean anything:\n{verdict}")
