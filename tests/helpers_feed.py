@@ -87,6 +87,7 @@ class Shell:
     sinks: Mapping[str, Sequence[Lane]] = field(default_factory=dict)
     start_ns: int = 0
     synchronous: bool = True
+    more: bool = False  # whether requests are said to be followed by others at once: then `mark` sets what they put off
     feed: Feed = field(init=False)
     records: list[Written] = field(default_factory=list)
     journal: bytearray = field(default_factory=bytearray)
@@ -107,7 +108,7 @@ class Shell:
         """One request; its answer's counts if it was answered at once, None if it waits or was refused."""
         self.tokens += 1
         before = len(self.records)
-        effects = self.feed.arrive(given, now_ns, self.tokens, key)
+        effects = self.feed.arrive(given, now_ns, self.tokens, key, more=self.more)
         self.do(effects)
         # Without a record it was refused, or answered from memory.
         if any(record.kind == Kind.ARRIVAL for record in self.records[before:]):

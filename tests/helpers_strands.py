@@ -7,7 +7,7 @@ from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager
 
 import numpy as np
-from strandline.core import held, held_by_source, merge, runs, slack
+from strandline.core import held, held_by_source, merge, runs, slack, tails
 from strandline.core.columns import REF, as_refs, as_rows
 from strandline.core.merge import Merger
 from strandline.core.runs import OpenRuns, Strand
@@ -66,13 +66,16 @@ class Costing(Merger):
         return result
 
 
+MODULES = (held, held_by_source, merge, runs, slack, tails)
+
+
 @contextmanager
 def constants(**values: int) -> Iterator[None]:
     """Constants of the ordering and the slack at other values: what is rare in small tests happens often."""
     before = []
     try:
         for name, value in values.items():
-            module = next(module for module in (held, held_by_source, merge, runs, slack) if hasattr(module, name))
+            module = next(module for module in MODULES if hasattr(module, name))
             before.append((module, name, getattr(module, name)))
             setattr(module, name, value)
         yield

@@ -25,7 +25,7 @@ ACT_FAULTS = [
     ),
     Fault(
         "a promise is worth more once a shorter slack is set",
-        (Change(State, "_fold_act", "self.sources.vouch_again(self.slack_ns)", "pass"),),
+        (Change(State, "_fold_act", "self.sources.vouch_again(self.slacks_ns)", "pass"),),
         machine,
         "the watermark stands elsewhere",
     ),

@@ -66,9 +66,8 @@ class Scenario:
             "batch_bytes_at_most": choice((200, 2**25)),
             **self.fixed,
         }
-        if self.order == "source":  # which goes with neither of the others
-            slack_ns = 2 * SECOND_NS if chosen["slack_ns"] is STEERED else chosen["slack_ns"]
-            chosen |= {"order": "source", "clock": "event", "slack_ns": slack_ns}
+        if self.order == "source":  # which goes with no other clock
+            chosen |= {"order": "source", "clock": "event"}
         if before is not None:
             return msgspec.structs.replace(before, **chosen)
         event = EventTime("/observed_at", "ns")

@@ -33,7 +33,8 @@ def play(seed: int, pattern: str | None = None) -> Tally:
     """One world from beginning to end. Raises Violation."""
     scenario = scenario_of(seed, pattern)
     fresh = FRESH_EVENTS[seed % len(FRESH_EVENTS)]
-    with a_folder() as folder, seams(f"{seed}"), constants(FRESH_EVENTS=fresh, LOT_EVENTS=fresh):
+    small = constants(FRESH_EVENTS=fresh, LOT_EVENTS=fresh, WARM_UP_EVENTS=20)
+    with a_folder() as folder, seams(f"{seed}"), small:
         world = World(scenario, folder)
         try:
             return world.run()

@@ -64,7 +64,7 @@ CONTRADICTIONS = [
     ({"clock": "arrival"}, "", "contradicts clock"),
     ({"slack": "1m", "idle_after": "30s"}, "", "is shorter than slack"),
     ({}, 'source = "/station"\n', "needs a `source` pointer"),
-    ({"slack": {}}, "slack = {}", "give a fixed one"),
+    ({"slack": {}, "idle_after": "4s"}, "slack = {}", "is shorter than slack"),
 ]
 
 

@@ -101,7 +101,7 @@ def test_sources_do_what_a_dictionary_of_them_would(history: list[tuple[object, 
                     one = plain[number]
                     plain[number] = Plain(max(one.newest, time), now_ns, True, False)
             case ("promise", int(number), int(time)):
-                sources.promise(number, time, now_ns, slack_ns=3)
+                sources.promise(number, time, now_ns, 3)
                 plain[number] = Plain(max(plain[number].newest, min(time + 3, NONE - 1)), now_ns, True, False)
             case ("excuse", int(number)):
                 sources.excuse(number)

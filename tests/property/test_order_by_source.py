@@ -9,15 +9,15 @@ from __future__ import annotations
 import itertools
 from typing import Any
 
-from helpers_by_source import NAMES, SINKS, Model, carry_out, histories, one_event, small_settings, steps
+from helpers_by_source import NAMES, SINKS, Model, carry_out, histories, one_event, small, small_settings, steps
 from helpers_feed import Shell, batches_of, held_no_longer, saved_bytes
-from helpers_strands import constants
 from hypothesis import event, given, settings
 from hypothesis import strategies as st
 from strandline.core.columns import Batch
 from strandline.core.settings import Settings
 
 History = list[tuple[tuple[Any, ...], int]]
+steered = small_settings(late_share=0.3, slack_ns=10, idle_after_ns=10**9, hold_at_most_ns=10**9)
 fresh = st.sampled_from((0, 3, 1 << 14))
 
 
@@ -45,10 +45,11 @@ def sources_of(shell: Shell) -> dict[bytes, str]:
 
 
 @settings(max_examples=400)
-@given(small_settings(undelivered_events_at_most=1_000_000) | small_settings(), histories, fresh)
+@given(small_settings(undelivered_events_at_most=1_000_000) | small_settings() | steered, histories, fresh)
 def test_each_source_follows_the_rule(chosen: Settings, history: History, fresh_events: int) -> None:
-    with constants(LOT_EVENTS=fresh_events):
-        shell, model = Shell(chosen, sinks={"store": ["ordered"]}), Model.of(chosen)
+    with small(fresh_events):
+        shell = Shell(chosen, sinks={"store": ["ordered"]})
+        model = Model.of(chosen, shell)
         numbers: dict[bytes, int] = {}
         now_ns = 0
         for drawn, passed in history:
@@ -67,6 +68,9 @@ def test_each_source_follows_the_rule(chosen: Settings, history: History, fresh_
             assert state.own is not None
             stands = dict(zip(state.sources.names, state.own.at.tolist(), strict=True))
             assert stands == {name: source.stands for name, source in model.sources.items()}
+            slacks = state.slacks_ns if isinstance(state.slacks_ns, int) else state.slacks_ns.tolist()
+            in_force = [model.slack_of(name) for name in state.sources.names]
+            assert in_force == ([slacks] * len(in_force) if isinstance(slacks, int) else slacks)
             assert [numbers[line] for line in shell.out("ordered")] == [number for _, number in model.released]
             late = [(numbers[line], stood) for batch in shell.batches["late"]
                     for line, stood in zip(shell.lines(batch), batch.behind.tolist(), strict=True)]  # fmt: skip
@@ -74,6 +78,7 @@ def test_each_source_follows_the_rule(chosen: Settings, history: History, fresh_
             assert [numbers[line] for line in shell.out("quarantine")] == model.ahead
             assert state.runs.held == len(model.held) and state.ledger.duplicate == len(model.repeats)
     event("something was late" if model.late else "nothing was late")
+    event(f"stretches: {max((source.begun for source in model.sources.values()), default=0)}")
 
 
 @settings(max_examples=250)
@@ -81,7 +86,7 @@ def test_each_source_follows_the_rule(chosen: Settings, history: History, fresh_
 def test_the_books_balance_and_each_source_comes_out_once_and_in_order(
     chosen: Settings, history: History, fresh_events: int
 ) -> None:
-    with constants(LOT_EVENTS=fresh_events):
+    with small(fresh_events):
         shell = played(chosen, history)
         shell.act("drain", now_ns=10_000)
     ledger = shell.feed.state.ledger
@@ -141,7 +146,7 @@ eventful = st.lists(
 def test_the_journal_folded_again_gives_the_same_state_and_the_same_batches(
     chosen: Settings, history: History, pause: int, fresh_events: int
 ) -> None:
-    with constants(LOT_EVENTS=fresh_events):
+    with small(fresh_events):
         shell, now_ns = Shell(chosen, sinks=SINKS), 0
         saved, lsn = saved_bytes(shell.feed), shell.feed.next_lsn
         for index, (step, passed) in enumerate(history):

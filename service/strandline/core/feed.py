@@ -40,7 +40,7 @@ from .settings import Settings
 from .state import State
 from .view import View, hold_of, view_of
 from .watermark import Candidate
-from .within import drained, step
+from .within import drained, further, leaves_be, step
 
 RETRY_AFTER_S = 5
 
@@ -59,6 +59,9 @@ class Feed:
         self._clock_ns = TIME_MIN  # never goes back while the feed lives; what it decides stands in records
         self._asked_lsn = 0  # a sync up to here was asked for
         self._waiting: deque[tuple[int, Answer | Deliver | Pause]] = deque()
+        # A mark that waits for the last of some arrivals, and whether that one is still to come.
+        self._put_off: Candidate | None = None
+        self._is_open = False
         self.refusals: dict[str, int] = {}
         self._started = False
 
@@ -139,15 +142,20 @@ class Feed:
 
     # ---- inputs ---------------------------------------------------------------------------------------------------
 
-    def arrive(self, arrival: Arrival, now_ns: int, token: int, key: RequestKey | None = None) -> list[Effect]:
+    def arrive(
+        self, arrival: Arrival, now_ns: int, token: int, key: RequestKey | None = None, *, more: bool = False
+    ) -> list[Effect]:
         """One request came. Answered, or refused whole, under its token. Raises ValueError if it contradicts itself.
 
-        A request whose key came before is not taken again: it gets the first one's answer, or is refused.
+        A request whose key came before is not taken again: it gets the first one's answer, or is refused. `more`:
+        others follow at once, so the marks between them may wait for `mark`, as far as nothing is judged otherwise.
         """
         require_consistent(arrival, self.state.sources.numbers)
         if key is not None and (known := self._known(key, self._now(now_ns), token)):
             return [known]
         refusal = self._refusal(arrival, token)
+        if refusal and self._is_open:  # the mark that was put off may make room
+            return self.mark(now_ns) + self.arrive(arrival, now_ns, token, key, more=more)
         if refusal:
             self.note_refusal(refusal.reason)
             return [refusal]
@@ -155,7 +163,7 @@ class Feed:
             return [Answer(token, Outcome(0, 0, 0, 0, 0))]
         effects: list[Effect] = []
         now = self._now(now_ns)
-        self._mark(effects, now, only_releasing=False)
+        self._mark(effects, now, only_releasing=False, following=arrival if more else None)
         if arrival.new_sources:
             names = list(arrival.new_sources)
             self._record(effects, SourcesRecord(len(self.state.sources.names), names))
@@ -166,8 +174,17 @@ class Feed:
         outcome, batches = self.state.fold_arrival(arrival_body(arrival, now, lsn), self.next_lsn)
         self._waiting.append((self.next_lsn, Answer(token, outcome)))
         self._waiting.extend((self.next_lsn, Deliver(batch)) for batch in batches)
-        self._mark(effects, now, only_releasing=False)
+        self._is_open = more
+        if not more:
+            self._mark(effects, now, only_releasing=False)
         return self._done(effects, sync=True)
+
+    def mark(self, now_ns: int) -> list[Effect]:
+        """The last of some requests has arrived: set the mark that waited for it."""
+        effects: list[Effect] = []
+        if self._is_open:
+            self._mark(effects, self._now(now_ns), only_releasing=False)
+        return self._done(effects, sync=bool(effects))
 
     def tick(self, now_ns: int) -> list[Effect]:
         """Time has gone on."""
@@ -254,7 +271,7 @@ class Feed:
         kept = self.state.keys.find(key.text, now - self.state.settings.keys_kept_for_ns)
         if kept is None:
             return None
-        if kept.fingerprint != key.fingerprint:
+        if len(kept.fingerprint) == len(key.fingerprint) and kept.fingerprint != key.fingerprint:  # else: other kinds
             detail = f"the key {key.text[:100]!r} came before with another body: use a new key for a new body"
             self.note_refusal("key_reused")
             return Refuse(token, "key_reused", detail, 0)
@@ -289,15 +306,22 @@ class Feed:
         detail = f"{known} sources are known, the request names {more} new ones and sources_at_most is {limit}"
         return Refuse(token, "sources_full", detail, 60)
 
-    def _mark(self, effects: list[Effect], now: int, *, only_releasing: bool) -> None:
-        """Set a mark if the watermark may move (or only if that would release something)."""
+    def _mark(self, effects: list[Effect], now: int, *, only_releasing: bool, following: Arrival | None = None) -> None:
+        """Set a mark if the watermark may move (or only if that would release something).
+
+        Before an arrival that is `following` it is put off, if that changes nothing for what the arrival brings.
+        """
         state = self.state
         if state.sources.falls_idle(now - state.settings.idle_after_ns) or state.acts.slack_ended(now):
             self._record(effects, IdleRecord(now))
         if state.outbox.undelivered_events > state.settings.undelivered_events_at_most:
+            self._put_off, self._is_open = None, False
             return
-        best = step(state, now, only_releasing=only_releasing)
-        if best is not None:
+        best = further(state, step(state, now, only_releasing=only_releasing), self._put_off)
+        self._put_off, self._is_open = None, following is not None
+        if best is not None and following is not None and leaves_be(state, best, following.times):
+            self._put_off = best
+        elif best is not None:
             self._set(effects, best, now)
 
     def _set(self, effects: list[Effect], best: Candidate, now: int) -> None:
@@ -370,6 +394,7 @@ class Feed:
     def check(self) -> None:
         """Assert every invariant."""
         self.state.check()
+        assert self._put_off is None or self._is_open
         assert self.durable_lsn <= self.next_lsn
         lsns = [lsn for lsn, _ in self._waiting]
         assert lsns == sorted(lsns) and (not lsns or lsns[-1] <= self.next_lsn)

@@ -11,7 +11,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from .columns import TIME_MAX, Refs, Times
+from .columns import TIME_MAX, Refs, Times, greatest_of, least_of
 from .gathered import Gathered
 from .merge import Merger
 from .runs import OpenRuns, Run, Strand, runs_of
@@ -34,12 +34,9 @@ class Fresh(Gathered):
 
     def add(self, times: Times, refs: Refs) -> None:
         """Put rows behind those that are there."""
-        if len(times) == 1:
-            least = greatest = int(times[0])
-        else:
-            least, greatest = int(times.min()), int(times.max())
+        greatest = greatest_of(times)
         self.greatest = max(self.greatest, greatest) if self.rows else greatest
-        self.least = min(self.least, least)
+        self.least = min(self.least, least_of(times))
         super().add(times, refs)
 
     def in_order(self) -> Strand:

@@ -9,16 +9,24 @@ Nothing is chosen here; a steered slack has a sketch of its own, whose memory fi
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import TIME_MIN
+from .columns import TIME_MIN, Times
 from .sketch import Sketch
+from .tallies import behind
 
 FADE_EVERY_NS = 3600 * 1_000_000_000
 KEPT_EVENTS = 100_000
+
+
+class Behind(NamedTuple):
+    """Lateness that is not reckoned yet: how far times stand behind a basis."""
+
+    basis_ns: int
+    times: Times
 
 
 class Lateness:
@@ -28,13 +36,32 @@ class Lateness:
     """
 
     def __init__(self) -> None:
-        self.sketch = Sketch()
+        self._sketch = Sketch()
+        self._waiting = behind(self._sketch.add)
         self.fades = 0
         self.since_ns = TIME_MIN  # arrival clock of the first event that was counted
         self._hour = 0  # full hours of the arrival clock since 1970 at the last look
 
-    def note(self, now_ns: int, events: int, lateness_ns: NDArray[np.int64] | None) -> None:
-        """One arrival's events. `lateness_ns` is None where none stood behind the basis at all; else at or above 0."""
+    @property
+    def sketch(self) -> Sketch:
+        """All that was counted."""
+        self._waiting.settle()
+        return self._sketch
+
+    def note(self, now_ns: int, events: int, lateness_ns: NDArray[np.int64] | Behind | None) -> None:
+        """One arrival's events. `lateness_ns` is None where none stood behind the basis at all; else at or above 0.
+
+        What was not reckoned yet is counted when somebody looks.
+        """
+        self._fade(now_ns)
+        if lateness_ns is None:
+            self._sketch.add_same(0, events)
+        elif isinstance(lateness_ns, Behind):
+            self._waiting.add(*lateness_ns)
+        else:
+            self._sketch.add(lateness_ns)
+
+    def _fade(self, now_ns: int) -> None:
         if self.since_ns == TIME_MIN:
             self.since_ns = now_ns
         hour = now_ns // FADE_EVERY_NS
@@ -43,10 +70,6 @@ class Lateness:
             if self.sketch.total > KEPT_EVENTS:
                 self.sketch.fade()
                 self.fades += 1
-        if lateness_ns is None:
-            self.sketch.add_same(0, events)
-        else:
-            self.sketch.add(lateness_ns)
 
     def saved(self) -> list[Any]:
         """All of it as plain values; of the counts only those that are not 0."""

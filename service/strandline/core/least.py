@@ -41,8 +41,8 @@ class Least:
         while len(self._levels[-1]) > WIDTH:
             self._levels.append(_padded(self._levels[-1].reshape(-1, WIDTH).min(axis=1)))
 
-    def update(self, places: NDArray[np.intp], values: NDArray[np.int64]) -> None:
-        """Set values; where a place is named twice, both times with the same value."""
+    def update(self, places: NDArray[np.intp], values: NDArray[np.int64] | int) -> None:
+        """Set values, or one for all; where a place is named twice, both times with the same value."""
         self._least = None
         self._levels[0][places] = values
         for below, above in itertools.pairwise(self._levels):

@@ -147,7 +147,8 @@ class OwnWatermarks:
             values = newest
         else:
             waited_for = sources.active[numbers] & ~sources.excused[numbers]
-            slack_ns = np.where(waited_for, state.slack_ns, 0)
+            slacks_ns = state.slacks_ns
+            slack_ns = np.where(waited_for, slacks_ns if isinstance(slacks_ns, int) else slacks_ns[numbers], 0)
             values = np.maximum(newest, TIME_MIN + slack_ns) - slack_ns
         if sources.promising:
             values = np.maximum(values, sources.promised[numbers])

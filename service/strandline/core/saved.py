@@ -21,6 +21,7 @@ from .records import Cause
 from .runs import Strand, joined
 from .settings import Settings
 from .slack import SteeredSlack
+from .slack_by_source import SteeredBySource
 from .state import State
 from .within import is_reordered
 
@@ -73,11 +74,14 @@ def save(state: State) -> list[Buffer]:
         columns.put(identities)
     held = _held_strands(state, columns)
     batches = [_save_batch(batch, columns) for lane in LANES for batch in state.outbox.undelivered(lane)]
+    if isinstance(state.slack, SteeredBySource):
+        for column in state.slack.columns(count):
+            columns.put(column)
     header = {
         "version": SAVED_VERSION,
         "settings": state.settings,
         "clock": [state.now_ns, state.watermark_ns, state.marked_ns, int(state.cause)],
-        "slack": state.slack.saved() if isinstance(state.slack, SteeredSlack) else None,
+        "slack": state.slack.saved() if isinstance(state.slack, SteeredSlack | SteeredBySource) else None,
         "lateness": state.lateness.saved(),
         "names": state.sources.names,
         "newest_ns": state.sources.newest_ns,
@@ -172,6 +176,9 @@ def _restored(header: dict[str, Any], columns: _Columns) -> State:
         figure.counts[:] = counts
         figure.total = total
     state.figures.arrivals, state.figures.marks, state.figures.marks_by_cause = header["counts"]
+    if isinstance(state.slack, SteeredBySource):
+        own = [columns.get(dtype) for dtype in (np.float64, np.float64, np.int64, np.float32)]
+        state.slack.restore(header["slack"], own)
     columns.require_end()
     return state
 

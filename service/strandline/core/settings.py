@@ -42,5 +42,5 @@ class Settings(msgspec.Struct, frozen=True, forbid_unknown_fields=True):
 
     def __post_init__(self) -> None:
         """Raises ValueError for settings that contradict each other."""
-        if self.order == "source" and (self.clock == "arrival" or self.late_share is not None):
-            raise ValueError('order = "source" goes with clock = "event" and a fixed slack only')
+        if self.order == "source" and self.clock == "arrival":
+            raise ValueError('order = "source" goes with clock = "event" only')

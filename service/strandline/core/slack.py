@@ -3,15 +3,17 @@
 Method: online quantile tracking, S(t+1) = S(t) + eta (late(t) - target), summed over each arrival's events (Gibbs &
 Candes, NeurIPS 2021; Angelopoulos, Candes & Tibshirani, NeurIPS 2023). For constant eta the share of late over T
 events differs from the target by exactly (S(T+1) - S(1) - clipped) / (eta T), on any feed. `slack.md` tells how
-eta is chosen, what that costs and where the method loses. Pure; fed by the fold, so a replay steers the same way.
+eta is chosen, what that costs and where the method loses. Pure; fed by the fold, so a replay steers the same way. A
+slack for each source is `slack_by_source.py`.
 """
 
 from __future__ import annotations
 
 import math
 from collections import deque
+from collections.abc import Iterable
 from dataclasses import astuple, dataclass
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -28,6 +30,31 @@ PERIOD_NS = 10_000_000_000
 PERIODS = 360  # an hour
 
 
+class Rows(NamedTuple):
+    """The events of an arrival by themselves."""
+
+    sources: NDArray[np.uint32]  # number of each one's source
+    late: NDArray[np.bool_] | None  # which came late; None: none
+    known: int  # sources there are
+
+
+def note_period(periods: deque[tuple[int, int, int]], now_ns: int, events: int, late: int) -> None:
+    """Add an arrival's events to the period that holds this instant."""
+    start = now_ns - now_ns % PERIOD_NS
+    if periods and periods[-1][0] >= start:
+        last = periods[-1]
+        periods[-1] = (last[0], last[1] + events, last[2] + late)
+    else:
+        periods.append((start, events, late))
+
+
+def share_since(periods: Iterable[tuple[int, int, int]], since_ns: int) -> float | None:
+    """Share of late events from the period on that holds this instant; None without events."""
+    rows = [row for row in periods if row[0] + PERIOD_NS > since_ns]
+    events = sum(row[1] for row in rows)
+    return sum(row[2] for row in rows) / events if events else None
+
+
 class FixedSlack:
     """A slack that stays as it was configured."""
 
@@ -35,7 +62,14 @@ class FixedSlack:
         self.slack_ns = slack_ns
 
     def learn(
-        self, now_ns: int, events: int, late: int, lateness_ns: NDArray[np.int64] | None, *, set_aside: bool = False
+        self,
+        now_ns: int,
+        events: int,
+        late: int,
+        lateness_ns: NDArray[np.int64] | None,
+        *,
+        set_aside: bool = False,
+        rows: Rows | None = None,
     ) -> None:
         """Nothing is learned."""
 
@@ -70,16 +104,24 @@ class SteeredSlack:
         return round(self.exact_ns)
 
     def learn(
-        self, now_ns: int, events: int, late: int, lateness_ns: NDArray[np.int64] | None, *, set_aside: bool = False
+        self,
+        now_ns: int,
+        events: int,
+        late: int,
+        lateness_ns: NDArray[np.int64] | None,
+        *,
+        set_aside: bool = False,
+        rows: Rows | None = None,
     ) -> None:
         """One arrival's events: how many, how many came late, and how far behind the watermark's basis each stood.
 
         `lateness_ns` is None where none stood behind it at all. `set_aside`: another slack is in force for a time; then
         those count for the steering that this one would have made late, since it has no hand in which really are.
+        `rows` are for a slack of each source (`slack_by_source.py`).
         """
         self.events += events
         self.late += late
-        self._note_period(now_ns, events, late)
+        note_period(self.periods, now_ns, events, late)
         if lateness_ns is None:
             self.sketch.add_same(0, events)
         else:
@@ -90,14 +132,6 @@ class SteeredSlack:
             self._step(self.stretch, events, late)
         if self.events >= self._tune_at:
             self._tune()
-
-    def _note_period(self, now_ns: int, events: int, late: int) -> None:
-        start = now_ns - now_ns % PERIOD_NS
-        if self.periods and self.periods[-1][0] >= start:
-            last = self.periods[-1]
-            self.periods[-1] = (last[0], last[1] + events, last[2] + late)
-        else:
-            self.periods.append((start, events, late))
 
     def _step(self, stretch: Stretch, events: int, late: int) -> None:
         wanted = self.exact_ns + stretch.eta_ns * (late - self.target * events)
@@ -142,9 +176,7 @@ class SteeredSlack:
 
     def share_since(self, since_ns: int) -> float | None:
         """Share of late events from the period on that holds this instant; None without events."""
-        rows = [row for row in self.periods if row[0] + PERIOD_NS > since_ns]
-        events = sum(row[1] for row in rows)
-        return sum(row[2] for row in rows) / events if events else None
+        return share_since(self.periods, since_ns)
 
     @property
     def bound(self) -> float | None:

@@ -13,10 +13,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import NO_SOURCE, TIME_MIN, Times
+from .columns import NO_SOURCE, TIME_MIN, Times, greatest_of
 from .least import NONE, Least
 
 NEVER = TIME_MIN  # newest event time of a source that was never heard
+EACH_ONCE_FROM = 2  # an arrival with more than so many events for each source that there is has its sources told apart
 
 
 class Touched:
@@ -118,32 +119,40 @@ class Sources:
             return
         numbers = sources.astype(np.intp)
         np.maximum.at(self.newest, numbers, times)
-        self.newest_ns = max(self.newest_ns, int(times.max()))
-        if len(numbers) > 1 and numbers[0] == numbers[-1] and np.all(numbers == numbers[0]):
-            numbers = numbers[:1]
+        self.newest_ns = max(self.newest_ns, greatest_of(times))
+        if len(numbers) > EACH_ONCE_FROM * len(self.names):  # each once: what follows costs some 10 ns a number
+            numbers = np.bincount(numbers).nonzero()[0]
         self.heard[numbers] = now_ns
         self.active[numbers] = True
         self.excused[numbers] = False
-        self._refresh(numbers)
+        if self.touched is not None:
+            self.touched.note(numbers, len(self.names))
+        self._by_heard.update(numbers, now_ns)
+        known = self.newest[numbers]
+        if self._promising:
+            known = np.maximum(known, self.vouched[numbers])
+        self._by_newest.update(numbers, np.minimum(known, NONE - 1))
 
-    def promise(self, source: int, time_ns: int, now_ns: int, slack_ns: int) -> None:
+    def promise(self, source: int, time_ns: int, now_ns: int, slacks_ns: int | Times) -> None:
         """Nothing older than time_ns will come from this source; it counts as a word of the source.
 
-        No slack is needed behind a promise, so the watermark may go right up to it: the slack is added here.
+        No slack is needed behind a promise, so the watermark may go right up to it: the slack (one for all sources, or
+        a column by source) is added here.
         """
+        slack_ns = slacks_ns if isinstance(slacks_ns, int) else int(slacks_ns[source])
         self.promised[source] = max(int(self.promised[source]), time_ns)
         self.vouched[source] = max(int(self.vouched[source]), min(time_ns + slack_ns, NONE - 1))
         self._promising = True
         self._word(source, NEVER, now_ns)
 
-    def vouch_again(self, slack_ns: int) -> None:
+    def vouch_again(self, slacks_ns: int | Times) -> None:
         """Another slack will be taken off from now on: a promise lets the watermark go right up to it all the same."""
         if self.touched is not None:
             self.touched.touch_all()
         if not self._promising:
             return
         numbers = np.flatnonzero(self.promised[: len(self.names)] != NEVER)
-        promised = self.promised[numbers]
+        promised, slack_ns = self.promised[numbers], slacks_ns if isinstance(slacks_ns, int) else slacks_ns[numbers]
         self.vouched[numbers] = np.minimum(promised, NONE - 1 - slack_ns) + slack_ns  # within int64, as in `promise`
         self._refresh(numbers)
 

@@ -25,11 +25,9 @@ from .columns import (
     Times,
     as_refs,
     as_rows,
-    distances,
     empty_refs,
     empty_times,
     greatest_of,
-    least_of,
 )
 from .effects import AnswerFault, Outcome
 from .held import Held
@@ -37,7 +35,7 @@ from .held_by_source import HeldBySource
 from .histogram import POWERS, SECONDS_NS, Histogram
 from .holds import Holds, holder_of
 from .keys import Kept, Keys
-from .lateness import Lateness
+from .lateness import Behind, Lateness
 from .ledger import Ledger
 from .merge import Merger
 from .outbox import Outbox
@@ -59,7 +57,8 @@ from .records import (
 )
 from .seen import Seen
 from .settings import Settings
-from .slack import Slack, slack_of
+from .slack import Rows
+from .slack_by_source import Slack, SteeredBySource, slack_for
 from .sources import Sources
 from .watermark import HoldBound
 from .within import behind_of, check_order, keep_order, late_rows, note_held, release, stood
@@ -82,7 +81,7 @@ class State:
 
     def __init__(self, settings: Settings) -> None:
         self.settings = settings
-        self.slack: Slack = slack_of(settings)
+        self.slack: Slack = slack_for(settings)
         self.lateness = Lateness()
         self.now_ns = TIME_MIN  # arrival clock of the last record
         self.watermark_ns = TIME_MIN
@@ -107,9 +106,19 @@ class State:
 
     @property
     def slack_ns(self) -> int:
-        """The slack in force: one that an operator set for a time, else the configured or steered one."""
+        """The slack in force: one that an operator set for a time, else the configured or steered one.
+
+        Where each source has its own, the longest of these: for observers, and it costs all sources.
+        """
         chosen = self.acts.slack_set
         return self.slack.slack_ns if chosen is None or chosen.slack_ns is None else chosen.slack_ns
+
+    @property
+    def slacks_ns(self) -> int | Times:
+        """The slack in force: one for all sources, or a column by source where each is steered by itself."""
+        if isinstance(self.slack, SteeredBySource) and self.acts.slack_set is None:
+            return self.slack.each(len(self.sources.names))
+        return self.slack_ns
 
     def fold_small(self, record: SmallRecord) -> None:
         """Take over one of the rare records."""
@@ -123,7 +132,7 @@ class State:
                 self.outbox.taken(record.sink, record.lane, record.number)
             case PromiseRecord():
                 self._end_slack(record.now_ns)
-                self.sources.promise(record.source, record.time_ns, record.now_ns, self.slack_ns)
+                self.sources.promise(record.source, record.time_ns, record.now_ns, self.slacks_ns)
             case ExcuseRecord(now_ns=now_ns, source=source, reason=reason, who=who):
                 self.sources.excuse(source)
                 self.acts.take(ActRecord(now_ns, "excuse", self.sources.names[source], who or UNKNOWN, reason))
@@ -133,8 +142,9 @@ class State:
                 self.outbox.next_number[record.lane] = max(self.outbox.next_number[record.lane], record.next_number)
             case IdleRecord():
                 pass  # what it says is what `advance` does
-            case KeyRecord():
+            case KeyRecord():  # the arrival behind it stands at the same instant, and tells all that follows from it
                 self._key = record
+                return
         self.advance(record.now_ns)
         self.holds.note(self.now_ns, *holder_of(self))
 
@@ -142,19 +152,19 @@ class State:
         self._end_slack(record.now_ns)
         self.acts.take(record)
         if record.act == "slack":
-            self.sources.vouch_again(self.slack_ns)
+            self.sources.vouch_again(self.slacks_ns)
 
     def _end_slack(self, now_ns: int) -> None:
         """The configured slack holds again once the time of one that was set is over."""
         if self.acts.slack_ended(now_ns):
             self.acts.slack_set = None
-            self.sources.vouch_again(self.slack_ns)
+            self.sources.vouch_again(self.slacks_ns)
 
     def _fold_settings(self, record: SettingsRecord) -> None:
         before, self.settings = self.settings, record.settings
         if record.resumed:
             self.holds.note_stopped(self.now_ns)
-        self.slack = slack_of(record.settings, self.slack)
+        self.slack = slack_for(record.settings, self.slack)
         keep_order(self)
         self.seen.window = record.settings.id_window_events
         self._key = None  # a crash may have cut off the arrival that it announced
@@ -198,13 +208,15 @@ class State:
         if len(words):
             self.sources.note_broken(word_refs["source"], words)
             self.sources.hear(word_refs["source"], words, body.arrived_ns)
-        which = late_rows(self, times, refs)
+        which, came = late_rows(self, times, refs), refs
         if which is not None:
             times, refs, late_batch = self._without_late(which, times, refs, body.arrived_ns, end_lsn)
             batches.append(late_batch)
             late = len(late_batch)
         if events:
-            self.slack.learn(body.arrived_ns, events, late, behind, set_aside=self.acts.slack_set is not None)
+            rows, set_aside = Rows(came["source"], which, len(self.sources.names)), self.acts.slack_set is not None
+            seen = None if isinstance(behind, Behind) else behind  # a fixed slack learns nothing
+            self.slack.learn(body.arrived_ns, events, late, seen, set_aside=set_aside, rows=rows)
             self.lateness.note(body.arrived_ns, events, behind)
         if len(times):
             self._hold(times, refs, body)
@@ -268,23 +280,16 @@ class State:
         return Batch("quarantine", number, empty_times(), empty_refs(), arrived_ns, end_lsn, entries=entries)
 
     def _note_lateness(self, times: Times) -> None:
-        newest, oldest = self.sources.newest_ns, least_of(times)
-        if oldest >= newest or len(times) == 1:
-            self.figures.lateness.add_same(min(max(newest - oldest, 0), TIME_MAX), len(times))
+        if len(times) == 1:
+            self.figures.lateness.add_same(min(max(self.sources.newest_ns - int(times[0]), 0), TIME_MAX), 1)
         else:
-            self.figures.lateness.add(distances(newest, times))
+            self.figures.lateness.add_behind(self.sources.newest_ns, times)
 
     def _hold(self, times: Times, refs: Refs, body: ArrivalBody) -> None:
         self.arrivals.note(body.payload_place, body.arrived_ns, len(times))
         note_held(self, times, body.arrived_ns)
         self.runs.hold(times, as_rows(refs))
-        if len(times) == 1:
-            self.figures.run_length.add_same(1, 1)
-        else:
-            falls = np.flatnonzero(times[1:] < times[:-1])
-            edges = np.empty(len(falls) + 2, dtype=np.int64)
-            edges[0], edges[1:-1], edges[-1] = -1, falls, len(times) - 1
-            self.figures.run_length.add(edges[1:] - edges[:-1])  # np.diff, prepending and appending: 29 us, this 1
+        self.figures.run_length.add_stretches(times)
 
     def fold_mark(self, mark: Mark, end_lsn: int) -> list[Batch]:
         """Set the watermark and cut its release, in batches. It may stay where it is, so that equal times follow."""
@@ -327,6 +332,8 @@ class State:
         self.seen.check()
         self.keys.check()
         self.lateness.check()
+        if isinstance(self.slack, SteeredBySource):
+            self.slack.check(len(self.sources.names))
         self.holds.check()
         self.acts.check(self.now_ns)
         check_order(self)
@@ -338,7 +345,7 @@ def _refs(body: ArrivalBody) -> Refs:
     refs = np.empty(len(body.times), dtype=REF)
     steps = body.lengths.astype(np.int64)
     steps += 1  # the line feed
-    ends = np.cumsum(steps)
+    ends = steps.cumsum()
     refs["place"] = ends - steps + body.payload_place
     refs["length"] = body.lengths
     refs["source"] = body.sources

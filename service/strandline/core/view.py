@@ -13,7 +13,8 @@ from .columns import NO_SOURCE, TIME_MIN, Lane
 from .outbox import LANES
 from .records import ActRecord, Cause
 from .settings import SECOND_NS
-from .slack import Slack, SteeredSlack
+from .slack import SteeredSlack
+from .slack_by_source import OwnSteering, SteeredBySource, SteeredSources
 from .state import State
 
 # Why a feed is held, in words for a person, with what to do where something can be done. The keys are stable.
@@ -112,6 +113,8 @@ class Steering:
     warming_up: bool
     binding: bool  # target and longest wait contradict each other
     attainable: float  # the share that the longest wait can give
+    by_source: SteeredSources | None = None  # where each source has a slack of its own: then no bound for all of them
+    binding_most: str | None = None  # then the source that the longest wait suits least
 
 
 def hold_of(state: State, now_ns: int) -> Hold:
@@ -160,7 +163,7 @@ def view_of(state: State, now_ns: int, refusals: dict[str, int]) -> View:
         refusals=refusals,
         identities_known=state.seen.known,
         keys_kept=len(state.keys.kept),
-        steering=_steering(state.slack, now_ns),
+        steering=_steering(state, now_ns),
         promises_broken=state.sources.broken_events,
         promises_broken_by=_breaker(state),
     )
@@ -172,7 +175,10 @@ def _breaker(state: State) -> str | None:
     return state.sources.names[int(state.sources.broken.argmax())]
 
 
-def _steering(slack: Slack, now_ns: int) -> Steering | None:
+def _steering(state: State, now_ns: int) -> Steering | None:
+    slack = state.slack
+    if isinstance(slack, SteeredBySource):
+        return _steering_by_source(state, slack, now_ns)
     if not isinstance(slack, SteeredSlack):
         return None
     stretch = slack.stretch
@@ -188,6 +194,27 @@ def _steering(slack: Slack, now_ns: int) -> Steering | None:
         warming_up=stretch is None,
         binding=slack.binding,
         attainable=slack.attainable,
+    )
+
+
+def _steering_by_source(state: State, slack: SteeredBySource, now_ns: int) -> Steering:
+    """All sources together; attainable is what the one gets that the longest wait suits least, if there is one."""
+    seen = slack.together(len(state.sources.names))
+    of_all = state.lateness.sketch.late_share(slack.at_most_ns).at_least
+    return Steering(
+        target=slack.target,
+        at_most_ns=slack.at_most_ns,
+        at_least_ns=slack.at_least_ns,
+        share_minute=slack.share_since(now_ns - 60 * SECOND_NS),
+        share_hour=slack.share_since(now_ns - 3600 * SECOND_NS),
+        share_begun=slack.late / slack.events if slack.events else None,
+        share_stretch=None,
+        bound=None,
+        warming_up=seen.warming_up == len(state.sources.names),
+        binding=bool(seen.binding),
+        attainable=of_all if seen.attainable is None else seen.attainable,
+        by_source=seen,
+        binding_most=None if seen.binding_source is None else state.sources.names[seen.binding_source],
     )
 
 
@@ -214,12 +241,15 @@ class SourceView:
     promised_ns: int | None
     promises_broken: int
     watermark_ns: int | None  # its own, where it has one
+    slack_ns: int | None = None  # in force, and how it is steered: where each source has a slack of its own
+    steering: OwnSteering | None = None
 
 
 def sources_of(state: State, after: int, limit: int) -> list[SourceView]:
     """Sources by number, from `after` on, at most `limit`."""
     stop = min(len(state.sources.names), after + limit)
-    sources = state.sources
+    sources, slack = state.sources, state.slack
+    own = slack.seen(after, stop) if isinstance(slack, SteeredBySource) and after < stop else None
     return [
         SourceView(
             sources.names[number],
@@ -230,9 +260,15 @@ def sources_of(state: State, after: int, limit: int) -> list[SourceView]:
             _known(sources.promised[number]),
             int(sources.broken[number]),
             None if state.own is None else _known(state.own.at[number]),
+            None if own is None else _in_force(state, own[number - after]),
+            None if own is None else own[number - after],
         )
         for number in range(after, stop)
     ]
+
+
+def _in_force(state: State, own: OwnSteering) -> int:
+    return own.slack_ns if state.acts.slack_set is None else state.slack_ns
 
 
 def _known(value: np.int64) -> int | None:

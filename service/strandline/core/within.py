@@ -12,12 +12,14 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import NO_SOURCE, Refs, Times, distances, greatest_of, least_of
+from .columns import NO_SOURCE, TIME_MIN, Refs, Times, distances, greatest_of, least_of
 from .held import Held
 from .held_by_source import HeldBySource
+from .lateness import Behind
 from .own import OwnWatermarks
 from .records import Cause, Mark
 from .runs import Strand
+from .slack import FixedSlack
 from .watermark import Candidate, basis_of, candidate
 
 if TYPE_CHECKING:
@@ -83,11 +85,16 @@ def late_rows(state: State, times: Times, refs: Refs) -> NDArray[np.bool_] | Non
     return times < state.watermark_ns if least_of(times) < state.watermark_ns else None
 
 
-def behind_of(state: State, times: Times, refs: Refs, arrived_ns: int) -> Times | None:
-    """How far each event stands behind what its watermark follows, before the slack; None where none does."""
+def behind_of(state: State, times: Times, refs: Refs, arrived_ns: int) -> Times | Behind | None:
+    """How far each event stands behind what its watermark follows, before the slack; None where none does.
+
+    Where the slack learns nothing from it, it is not reckoned yet.
+    """
     if state.own is not None:
         return state.own.behind(refs["source"], times)
     basis = arrived_ns if state.settings.clock == "arrival" else basis_of(state.sources)
+    if len(times) and isinstance(state.slack, FixedSlack):
+        return Behind(basis, times)
     return None if not len(times) or least_of(times) >= basis else distances(basis, times)
 
 
@@ -116,6 +123,18 @@ def step(state: State, now_ns: int, *, only_releasing: bool) -> Candidate | None
     head = state.runs.head_ns
     releasing = head is not None and head <= max(best.watermark_ns, state.watermark_ns)
     return best if releasing or (best.watermark_ns > state.watermark_ns and not only_releasing) else None
+
+
+def further(state: State, one: Candidate | None, other: Candidate | None) -> Candidate | None:
+    """What takes the feed's watermark further; where `other` was put off it may stand behind: then it says nothing."""
+    if other is None or state.own is not None:  # order within sources has just begun: they stand where the feed's did
+        return one
+    return other if other.watermark_ns > max(state.watermark_ns, one.watermark_ns if one else TIME_MIN) else one
+
+
+def leaves_be(state: State, mark: Candidate, times: Times) -> bool:
+    """Whether an arrival's events are judged the same before this mark as behind it: none of them is late for it."""
+    return state.own is None and (not len(times) or least_of(times) >= mark.watermark_ns)
 
 
 def release(state: State, mark: Mark) -> Strand:
