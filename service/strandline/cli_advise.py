@@ -17,12 +17,14 @@ from typing import Any
 import msgspec
 import numpy as np
 
+from . import cli_advise_by_source as by_source
 from .cli_advice_text import write_advice
 from .cli_answers import FINE, NO, WRONG_USE, complain
 from .cli_progress import bar
 from .core.settings import Settings
 from .errors import ConfigError
 from .replay.advice import LEARN_PART, VERDICTS, Advice, Comparison, Rule, Wanted, advise, compare, rounded_up
+from .replay.advice_by_source import advise_by_source
 from .replay.basis import Requests
 from .replay.capture import Capture
 from .replay.patterns import Patterns, patterns
@@ -47,6 +49,9 @@ def advise_on(options: argparse.Namespace) -> int:
     Exit code 2, after the answer, where the report cannot be drawn.
     """
     wanted = _wanted(options)
+    with Capture(options.capture_file) as capture:
+        if _by_source(options, CapturedRequests(capture).settings):
+            return _advise_by_source(options, capture, wanted)
     reports, lacking = _drawable(_reports(options))
     begin = time.perf_counter()
     with Capture(options.capture_file) as capture:
@@ -89,6 +94,37 @@ def advise_on(options: argparse.Namespace) -> int:
         complain(*lacking.faults, "no report was written; the answer above is whole without it")
         return WRONG_USE
     return FINE if advice.supported else NO
+
+
+def _advise_by_source(options: argparse.Namespace, capture: Capture, wanted: Wanted) -> int:
+    """Say which source needs how long. Exit codes as `advise_on` has them."""
+    for name in ("report", "reordering", "sequence"):
+        if getattr(options, name):
+            reason = "is about one watermark for all sources, and this feed has one for each"
+            raise ConfigError([f"--{name} {reason}: leave it out, or give --order feed"])
+    begin, settings = time.perf_counter(), CapturedRequests(capture).settings or Settings("")
+    if capture.cut:
+        complain(capture.cut)
+    idle_after_ns = settings.idle_after_ns if options.idle_after is None else int(options.idle_after)
+    with bar("read", "events", (1 if options.quick else 2) * capture.events) as tell:
+        captured = CapturedRequests(capture)
+        told, span_ns = _Told(captured, tell), (capture.first_ns, capture.last_ns)
+        try:
+            advice = advise_by_source(told.blocks, span_ns, idle_after_ns, wanted, holding=not options.quick)
+        except ValueError as error:
+            complain(f"{options.capture_file}: no advice can be given: {error}")
+            return NO
+    shown = by_source.SOURCES_IN_JSON if options.json else options.sources
+    answer = by_source.document(capture.meta.feed, captured.names, advice, shown, options.quick)
+    answer["seconds"] = time.perf_counter() - begin
+    answer["events_per_s"] = capture.events / answer["seconds"]
+    if captured.settings_changed:
+        complain("settings changed within the capture: those at its begin were taken for all of it")
+    if options.json:
+        sys.stdout.write(msgspec.json.encode(answer).decode() + "\n")
+    else:
+        by_source.write(answer)
+    return FINE if answer["configuration"] else NO
 
 
 @dataclass(slots=True)
@@ -163,13 +199,17 @@ def _drawable(reports: list[Path]) -> tuple[list[Path], ConfigError | None]:
     return reports, None
 
 
+def _by_source(options: argparse.Namespace, settings: Settings | None) -> bool:
+    """Whether each source is to be judged by itself: as asked for, else as the captured feed was."""
+    if options.order == "source" and options.clock == "arrival":
+        raise ConfigError(["--order source contradicts --clock arrival: by that clock no source waits for another"])
+    asked = options.order or ("feed" if options.clock else None)
+    return asked == "source" or (asked is None and settings is not None and settings.order == "source")
+
+
 def _rule(options: argparse.Namespace, captured: CapturedRequests) -> Rule:
     """What the watermark follows: as asked for, else as the capture's settings say, else as is the default."""
     settings = captured.settings or Settings("")
-    if settings.order == "source" and options.clock is None:
-        reason = "this feed keeps order within each source, and what is advised on is one watermark for all of them"
-        remedy = "try single slacks with `strandline replay CAPTURE --config FILE`"
-        raise ConfigError([f"{options.capture_file}: {reason}: {remedy}"])
     if (options.clock or settings.clock) == "arrival":
         return Rule("arrival")
     return Rule("sources", settings.idle_after_ns if options.idle_after is None else int(options.idle_after))

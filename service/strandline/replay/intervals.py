@@ -10,6 +10,7 @@ import math
 from statistics import NormalDist
 
 import numpy as np
+from numpy.typing import NDArray
 
 EVENTS_AT_MOST = 10**12  # beyond it sums over the tail of a binomial take seconds
 
@@ -37,6 +38,18 @@ def wilson(successes: int, trials: int, confidence: float = 0.95, *, corrected: 
         0.0 if successes == 0 else max(0.0, low),
         1.0 if successes == trials else min(1.0, high),
     )
+
+
+def wilson_columns(
+    successes: NDArray[np.int64], trials: NDArray[np.int64], confidence: float
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """`wilson` for columns."""
+    z = _two_sided(confidence)
+    shares = successes / np.maximum(trials, 1)
+    half = z * np.sqrt(z * z + 4 * successes * (1 - shares))
+    middle, width = 2 * successes + z * z, 2 * (trials + z * z)
+    low = np.where(successes == 0, 0.0, np.maximum(0.0, (middle - half) / width))
+    return low, np.where(successes == trials, 1.0, np.minimum(1.0, (middle + half) / width))
 
 
 def wilks(coverage: float, confidence: float, rank: int = 1) -> int:
