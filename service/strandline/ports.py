@@ -36,6 +36,9 @@ class File(Protocol):
     def view(self) -> memoryview:
         """The whole file, read-only, mapped: it shows what is written later too."""
 
+    def data_end(self, start: int) -> int:
+        """From where on, at or behind `start`, the file is known to hold nothing but zeros. Raises OSError."""
+
     def close(self) -> None:
         """Release the handle; views that are still held stay valid."""
 

@@ -36,6 +36,7 @@ from .sinks import make_sink
 from .sinks.delivery import Delivery
 from .sinks.lanes import LaneStore
 from .sinks_of import FeedSinks, MakeSink, Positions
+from .tasks import in_thread
 from .waiters import Told, Waiters
 
 log = logging.getLogger(__name__)
@@ -99,7 +100,7 @@ class FeedRuntime:
 
     async def open(self) -> None:
         """Recover, connect the sinks and begin to work."""
-        folded = await asyncio.to_thread(self._house.recover)
+        folded = await in_thread(self._house.recover)
         self.lines.watch(self.feed)
         self.recent.begin(self.feed.state.outbox.next_number["ordered"] - 1)
         made = FeedSinks.made(self.config, self.lane_store, self.lanes_file, self.clock, self._make)
@@ -124,13 +125,13 @@ class FeedRuntime:
             name,
             sink,
             self.lines,
-            clock=self.clock,
-            random_source=random.Random(),
+            clock=self.clock, random_source=random.Random(),
             on_taken=self._taken,
             on_refused=self._refused,
             on_opened=self._opened,
             remembered=remembered,
-        )
+            moves=self.config.partitions is not None,
+        )  # fmt: skip
 
     def _opened(self, name: str, positions: Mapping[Lane, int]) -> None:
         self._positions.told(name, positions, self.feed.state.outbox.next_number if self._started else None)
@@ -308,8 +309,7 @@ class FeedRuntime:
                 case Answer():
                     self._waiters.answer(effect.token, effect.outcome)
                 case Refuse():
-                    refusal = Refused(effect.reason, effect.detail, effect.retry_after_s)
-                    self._waiters.refuse(effect.token, refusal)
+                    self._waiters.refuse(effect.token, Refused(effect.reason, effect.detail, effect.retry_after_s))
                 case Pause():
                     self._pause(effect)
 
@@ -330,7 +330,7 @@ class FeedRuntime:
     async def _settle(self) -> None:
         """Wait until everything that was appended so far is durable. Raises JournalFailed."""
         lsn = self.feed.next_lsn
-        while self.journal.durable_lsn < lsn:
+        while self.commit.durable_lsn < lsn:
             if self.failure is not None:
                 raise JournalFailed(self.failure)
             bell = self._synced.next

@@ -11,11 +11,13 @@ from typing import NamedTuple
 from .core.effects import Outcome
 from .problems import Refused
 
+Told = asyncio.Future[Outcome | None]  # what came of a request or an act, or Refused
+
 
 class _Waiter(NamedTuple):
     """Since when (arrival clock, ns), and for how many events."""
 
-    future: asyncio.Future[Outcome | None]
+    future: Told
     since_ns: int
     events: int
 
@@ -27,10 +29,10 @@ class Waiters:
         self._waiters: dict[int, _Waiter] = {}
         self._tokens = 0
 
-    def begin(self, since_ns: int, events: int) -> tuple[int, asyncio.Future[Outcome | None]]:
+    def begin(self, since_ns: int, events: int) -> tuple[int, Told]:
         """Somebody waits from now on: a token, and what will have the outcome or raise Refused."""
         self._tokens += 1
-        future: asyncio.Future[Outcome | None] = asyncio.get_running_loop().create_future()
+        future: Told = asyncio.get_running_loop().create_future()
         self._waiters[self._tokens] = _Waiter(future, since_ns, events)
         return self._tokens, future
 

@@ -19,15 +19,17 @@ class BrokerLost(StrandlineError):
 class Message:
     """One message that is not settled yet: one arrival.
 
-    `key` tells a repeat of it (None where the broker gives nothing of the kind). `place` names it for a person,
-    `address` is its subject or topic in levels. `sent_ns` is the broker's clock when it took the message, ns since 1970
-    UTC. `handle` is the broker's own.
+    `key` tells a repeat of it (None where the broker gives nothing of the kind); `is_numbered` says that it is the
+    broker's own number and time of it, which no other message has, and not a sender's word. `place` names it for a
+    person, `address` is its subject or topic in levels. `sent_ns` is the broker's clock when it took the message, ns
+    since 1970 UTC. `handle` is the broker's own.
     """
 
     body: bytes
     place: str
     address: list[str]
     key: str | None = None
+    is_numbered: bool = False
     content_type: str | None = None
     content_encoding: str | None = None
     is_repeat: bool = False  # the broker says that it has sent it before

@@ -186,6 +186,7 @@ def message_of(given: Msg) -> Message:
         place=f"message {sequence} of stream {data.stream}",
         address=given.subject.split("."),
         key=f"jetstream:{data.stream}:{told}",
+        is_numbered=not named,
         content_type=_header(headers, "content-type"),
         content_encoding=_header(headers, "content-encoding"),
         is_repeat=data.num_delivered > 1,

@@ -3,8 +3,10 @@
 It decides when to connect, how many messages may be in flight, and what is said to the broker of each. Order, lateness
 and refusals are the core's; bodies are read by `reading`; what a broker can do is its own module's.
 
-Many messages are in flight at one time, so that one sync serves many. Each has a task of its own that decodes and hands
-over in its first step; tasks begin in the order in which they are made, so messages arrive in the broker's order.
+Many messages are in flight at one time, so that one sync serves many. They are handed over in portions, a task for each
+portion: it decodes one message after the other and hands each over as an arrival of its own, waits for all of them and
+settles them. Portions take turns in the order in which they came, so messages arrive in the broker's order. What is not
+taken at once goes its own way from there.
 """
 
 from __future__ import annotations
@@ -13,20 +15,20 @@ import asyncio
 import contextlib
 import logging
 import random
-from collections.abc import Callable, Coroutine
+from collections.abc import Callable, Coroutine, Sequence
 from typing import Any
 
 from ..backoff import backoff_s
 from ..config_intakes import IntakeConfig
-from ..core.columns import Arrival, RequestKey
-from ..errors import REFUSALS, BodyError, StrandlineError, TooManyFaults
+from ..errors import REFUSALS, StrandlineError
 from ..ingest.offload import Aside
 from ..problems import Refused
 from ..runtime import FeedRuntime
 from ..tasks import ended, first_of
 from .broker import Broker, BrokerLost, Message
 from .counts import Counts
-from .reading import Reader, key_in_quarantine
+from .handing import Begun, Handed, Handing, forget, is_in_the_feed, portions
+from .reading import Read, Reader
 
 log = logging.getLogger(__name__)
 BACKOFF_BASE_S = 0.2
@@ -55,9 +57,10 @@ class Intake:
     ) -> None:
         self._config, self._runtime, self._broker = config, runtime, broker
         self._random, self._sleep = random_source, sleep
-        self._reader = Reader(config, runtime, aside)
         self.counts = Counts(config.name, config.kind, runtime.clock.now_ns())
+        self._handing = Handing(Reader(config, runtime, aside), runtime, self.counts)
         self._in_flight: dict[Message, asyncio.Task[None]] = {}
+        self._turn = asyncio.Lock()  # to hand messages over
         self._room = asyncio.Event()
         self._stopping = asyncio.Event()
         self._tasks: list[asyncio.Task[None]] = []
@@ -80,8 +83,8 @@ class Intake:
         if self._tasks:
             await asyncio.wait(self._tasks[:1], timeout=min(within_s, FETCH_WITHIN_S))
         if self._in_flight:
-            await asyncio.wait([*self._in_flight.values()], timeout=within_s)
-        for task in (*self._tasks, *self._in_flight.values()):
+            await asyncio.wait({*self._in_flight.values()}, timeout=within_s)
+        for task in (*self._tasks, *dict.fromkeys(self._in_flight.values())):
             await ended(task)
         with contextlib.suppress(TimeoutError):
             async with asyncio.timeout(CLOSE_WITHIN_S):
@@ -123,8 +126,8 @@ class Intake:
                 async with asyncio.timeout(CHECK_EVERY_S):
                     await self._room.wait()
             return
-        for message in await self._broker.fetch(messages, size):
-            self._begin(message)
+        for portion in portions(await self._broker.fetch(messages, size)):
+            self._begin(portion)
 
     async def _idle(self, seconds: float) -> None:
         """Wait so long, or until it is to stop."""
@@ -175,36 +178,91 @@ class Intake:
         """Log the error that is being handled."""
         log.exception("%s: an unforeseen error in intake %s", self._runtime.config.name, self._config.name)
 
+    # ---- a portion of messages --------------------------------------------------------------------------------------
+
+    def _begin(self, portion: Sequence[Message]) -> None:
+        self.counts.in_flight += len(portion)
+        self.counts.in_flight_bytes += sum(len(message.body) for message in portion)
+        self.counts.repeats += sum(message.is_repeat for message in portion)
+        task = asyncio.create_task(self._all(portion), name=f"messages of {self._config.name}")
+        self._in_flight.update(dict.fromkeys(portion, task))
+
+    async def _all(self, portion: Sequence[Message]) -> None:
+        """Hand all of them over, settle those that are taken, and take the others one by one."""
+        begun: list[Begun] = []
+        try:
+            async with self._turn:
+                await asyncio.sleep(0)  # what else waits has its turn too, the sync of the portion before first
+                for message, read in zip(portion, self._handing.read(portion), strict=True):
+                    begun.append(await self._begun(message, read))
+                self._runtime.mark()
+            others = [
+                self._one(message, each)
+                for message, each in zip(portion, begun, strict=True)
+                if not await self._is_settled(message, each)
+            ]
+            if others:
+                await asyncio.gather(*others)
+        finally:
+            for message in portion:
+                self._leave(message)
+            forget(begun)
+
+    async def _begun(self, message: Message, read: Read | None) -> Begun:
+        """What becomes of a message that is not handed over here is said where it is taken by itself."""
+        if not self._broker.holds(message) or (self._stopping.is_set() and self._broker.takes_back):
+            return None
+        try:
+            return await self._handing.over(message, read, more=True)
+        except Exception as error:
+            return error
+
+    async def _is_settled(self, message: Message, begun: Begun) -> bool:
+        if not await is_in_the_feed(begun):
+            return False
+        assert isinstance(begun, Handed)
+        try:
+            await self._settle(message, begun)
+        except Exception:  # it is tried again, and told, where the message is taken by itself
+            return False
+        self._leave(message)
+        return True
+
+    async def _settle(self, message: Message, handed: Handed) -> None:
+        if handed.detail:
+            log.warning("%s: to quarantine: %s: %s", self._runtime.config.name, message.place, handed.detail)
+        await self._broker.settle(message)
+        self.counts.outcomes[handed.outcome] += 1
+
+    def _leave(self, message: Message) -> None:
+        """It is in flight no longer. A second call does nothing."""
+        if self._in_flight.pop(message, None) is not None:
+            self.counts.in_flight -= 1
+            self.counts.in_flight_bytes -= len(message.body)
+            self._room.set()
+
     # ---- one message ------------------------------------------------------------------------------------------------
 
-    def _begin(self, message: Message) -> None:
-        self.counts.in_flight += 1
-        self.counts.in_flight_bytes += len(message.body)
-        self.counts.repeats += message.is_repeat
-        self._in_flight[message] = asyncio.create_task(self._one(message), name=f"message of {self._config.name}")
-
-    async def _one(self, message: Message) -> None:
+    async def _one(self, message: Message, begun: Begun) -> None:
         """Take it, or put it back; nothing that happens to one message ends the others."""
         try:
-            await self._take(message)
+            await self._take(message, begun)
         except Exception:
             log.exception("%s: an unforeseen error with %s", self._runtime.config.name, message.place)
             self.counts.last_error = f"an unforeseen error with {message.place}; the log has the details"
             await self._put_back(message, 10.0)
         finally:
-            del self._in_flight[message]
-            self.counts.in_flight -= 1
-            self.counts.in_flight_bytes -= len(message.body)
-            self._room.set()
+            self._leave(message)
 
-    async def _take(self, message: Message) -> None:
+    async def _take(self, message: Message, begun: Begun) -> None:
         while self._broker.holds(message):
             if self._stopping.is_set() and self._broker.takes_back:
                 await self._put_back(message, 0.0)
                 return
-            refusal = await self._try(message)
+            refusal = await self._try(message, begun)
             if refusal is None:
                 return
+            begun = None
             self._refused(refusal)
             if self._broker.takes_back:
                 await self._put_back(message, refusal.retry_after_s)
@@ -213,39 +271,16 @@ class Intake:
             if self._stopping.is_set():
                 return
 
-    async def _try(self, message: Message) -> Refused | None:
-        """Hand it to the feed and settle it; or why it was not taken now."""
-        outcome = "taken"
+    async def _try(self, message: Message, begun: Begun) -> Refused | None:
+        """Hand it to the feed, unless that is begun, and settle it; or why it was not taken now."""
         try:
-            # Nothing awaits between reading and the core: the numbers of new sources are still right.
-            arrival, key = await self._reader.arrival(message)
-            await self._arrive(message, arrival, key)
-        except (BodyError, TooManyFaults) as error:
-            outcome, refusal = "quarantined", await self._quarantine(message, str(error))
-            if refusal is not None:
-                return refusal
-        except Refused as refusal:
-            if refusal.reason != "key_reused":
-                return refusal
-            outcome = "quarantined"
-            if again := await self._quarantine(message, str(refusal)):
-                return again
-        await self._broker.settle(message)
-        self.counts.outcomes[outcome] += 1
-        return None
-
-    async def _arrive(self, message: Message, arrival: Arrival, key: RequestKey | None) -> None:
-        if message.sent_ns is not None:
-            self.counts.delays.note((self._runtime.clock.now_ns() - message.sent_ns) / 1e9)
-        await self._runtime.arrive(arrival, key)
-
-    async def _quarantine(self, message: Message, detail: str) -> Refused | None:
-        """Keep what can never be taken, with the reason; or why that cannot be done now."""
-        try:
-            await self._runtime.arrive(self._reader.refused(message, detail), key_in_quarantine(message))
+            if isinstance(begun, Exception):
+                raise begun
+            handed = begun or await self._handing.over(message)
+            await handed.told
         except Refused as refusal:
             return refusal
-        log.warning("%s: to quarantine: %s: %s", self._runtime.config.name, message.place, detail)
+        await self._settle(message, handed)
         return None
 
     def _refused(self, refusal: Refused) -> None:
