@@ -61,6 +61,8 @@ DECODERS = (
     Decoder("river", "/ts", "ns", "/from/station", None, LIMITS),
     Decoder("river", "/list/0", "ms", None, "/id", LIMITS),
     Decoder("river", '/a"b', "s", "/a~1b", None, LIMITS),
+    Decoder("river", "/ts", "ns", "/station", None, LIMITS, is_compiled=True),
+    Decoder("river", "/time", "rfc3339", "/source", None, LIMITS, is_compiled=True),
 )
 TABLE = {"/gauge/1": 0, "gauge-2": 1}
 _CLOUDEVENT = {"specversion": "1.0", "type": "level", "source": "/gauge/1", "id": "1", "time": "2026-01-31T12:34:56Z"}
@@ -72,6 +74,8 @@ _EVENTS: tuple[tuple[dict[str, Any], ...], ...] = (
     ),
     ({"list": [2**53, "x"], "id": 5}, {"list": [1], "id": "ö", "deep": [[[[[[1]]]]]]}),
     ({'a"b': 9_223_372_036, "a/b": "gauge-2"}, {'a"b': 0, "a/b": 10**18}),
+    ({"ts": 1_700_000_000_000_000_000, "station": "gauge-2", "v": 1.5}, {"ts": -1, "station": "neu", "v": [{}, None]}),
+    ({**_CLOUDEVENT, "level": 12345678.5}, {**_CLOUDEVENT, "source": "/gauge/2", "note": 'a "gate"\n'}),
 )
 _VALUES = (None, True, 0, -1, 2**63, 2**64 - 1, 1e300, "", "a\0b", "\ufdd0", "x" * 257, [], {}, [1, {"b": []}])
 

@@ -9,6 +9,10 @@ from .ingest.decode import Decoder
 
 
 def decoder_of(config: FeedConfig, **changed: int) -> Decoder:
-    """The decoder of a feed's bodies; `changed` are limits that hold instead of the configured ones."""
+    """The decoder of a feed's bodies; `changed` are limits that hold instead of the configured ones.
+
+    Raises StrandlineError where the feed wants compiled decoding and this machine has none.
+    """
     limits = msgspec.structs.replace(config.body_limits(), **changed)
-    return Decoder(config.name, config.time.at, config.time.unit, config.source, config.id, limits=limits)
+    is_compiled = config.decoding == "compiled"
+    return Decoder(config.name, config.time.at, config.time.unit, config.source, config.id, limits, is_compiled)

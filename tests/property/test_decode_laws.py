@@ -31,6 +31,8 @@ FEEDS = {
     "array": Decoder("river", "/readings/0/ts", "ns", "/station", None, LIMITS),
     "quoted": Decoder("river", '/a"b', "ns", "/a~1b", None, LIMITS),
     "same": Decoder("river", "/ts", "ns", "/ts", "/ts", LIMITS),
+    "compiled": Decoder("river", "/ts", "ns", "/station", None, LIMITS, is_compiled=True),
+    "compiled text": Decoder("river", "/at", "rfc3339", None, None, LIMITS, is_compiled=True),
 }
 POINTERS = {
     "flat": ("/ts", "ns", "/station", "/id"),
@@ -41,6 +43,8 @@ POINTERS = {
     "array": ("/readings/0/ts", "ns", "/station", None),
     "quoted": ('/a"b', "ns", "/a~1b", None),
     "same": ("/ts", "ns", "/ts", "/ts"),
+    "compiled": ("/ts", "ns", "/station", None),
+    "compiled text": ("/at", "rfc3339", None, None),
 }
 
 # --- bodies ------------------------------------------------------------------------------------------------------

@@ -2,7 +2,9 @@
 
 Here live the decoder of a feed and the two ways it goes. The fast way decodes the whole payload at once and takes its
 columns; it gives up at the first irregularity. The slow way judges every line, keeps the good ones and names the
-others. Both give the same arrival (a property test holds them together). No HTTP, no clock, no ordering.
+others. Both give the same arrival (a property test holds them together). Where a feed asks for it, compiled code is
+asked before the fast way (`compiled`; compiled.md says what it is worth, and what else was tried). No HTTP, no clock,
+no ordering.
 """
 
 from __future__ import annotations
@@ -20,6 +22,7 @@ from ..core.columns import Arrival, Fault, Times
 from ..errors import TooManyFaults
 from . import cloudevents
 from .arrow import ARROW, arrow_rows
+from .compiled import Scanner, serves
 from .formats import check_size, split_body
 from .json_items import json_fault
 from .limits import BodyLimits
@@ -62,14 +65,24 @@ class Decoder:
         source: str | None = None,
         id: str | None = None,
         limits: BodyLimits | None = None,
+        is_compiled: bool = False,
     ) -> None:
         """`time_at`, `source` and `id` are JSON Pointers. Raises pointer.PointerError.
 
         Without `source` every event's source is the feed's name; without `id` arrivals have no identities.
+        `is_compiled`: JSON lines are read by `compiled` where it serves these pointers. Raises StrandlineError.
         """
         self._feed_name, self._unit, self._limits = feed_name, time_unit, limits or BodyLimits()
         self._at = Values(time_at, source, id)
         self._fields = Fields(time_at, _time_type(time_unit), source, id)
+        self._scanner: Scanner | None = None
+        if is_compiled and serves(time_at, source, id):
+            self._scanner = Scanner(time_at, time_unit, source, self._limits.nesting_at_most)
+
+    @property
+    def is_compiled(self) -> bool:
+        """Whether compiled code has the first look at bodies."""
+        return self._scanner is not None
 
     def of_source(self, name: str) -> Decoder:
         """The same, for bodies whose events all are of this source, whatever they hold."""
@@ -111,14 +124,25 @@ class Decoder:
         lengths = lines.ends - lines.starts
         if lengths.max() > self._limits.event_bytes_at_most:
             return None
-        records = decoded_lines(decoder, lines.payload, count)
-        if records is None or self._is_deep(lines):
-            return None
-        columns = self._columns(records, source_numbers)
+        columns = None if self._scanner is None else self._scanned(self._scanner, lines, source_numbers)
+        if columns is None:
+            records = decoded_lines(decoder, lines.payload, count)
+            if records is None or self._is_deep(lines):
+                return None
+            columns = self._columns(records, source_numbers)
         if columns.bad or (lines.are_cloudevents and not cloudevents.all_sound(lines.payload, count)):
             return None
         self._check_faults(lines.faults)
         return _arrival(lines, columns, lines.faults)
+
+    def _scanned(self, scanner: Scanner, lines: Lines, source_numbers: Mapping[str, int]) -> _Columns | None:
+        """The columns by compiled code; None where it does not prove the lines to be events."""
+        found = scanner.columns(lines, source_numbers)
+        if found is None:
+            return None
+        if self._at.source is None:
+            return _Columns(found.times, *self._one_source(len(found.times), source_numbers), None, ())
+        return _Columns(found.times, found.sources, found.new_sources, None, ())
 
     def _is_deep(self, lines: Lines) -> bool:
         limit = self._limits.nesting_at_most

@@ -1,0 +1,133 @@
+"""Columns of JSON lines by code that is compiled for this machine: the door to `compiled_lines`, which needs numba.
+
+Here live which feeds it can serve, and what surrounds the scan: room for the columns, times out of texts, numbers of
+sources. It answers either what the other way (`decode`) would answer, or None; faults are found by the other way only.
+"""
+
+from __future__ import annotations
+
+import importlib
+from collections.abc import Mapping
+from functools import cache
+from typing import TYPE_CHECKING, NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ..core.columns import Times
+from ..errors import StrandlineError
+from .limits import BodyLimits
+from .lines import Lines, split_lines
+from .pointer import fits_structs, parse_pointer
+from .timestamps import from_unit_column, parse_rfc3339_fixed
+from .values import Unit
+
+if TYPE_CHECKING:
+    from types import ModuleType
+
+_NAMES_AT_MOST = 65_536  # in one body; their table then has 512 KiB
+_WARM = b'{"t":0,"s":"a"}\n'
+
+
+class Scanned(NamedTuple):
+    """Columns as an arrival has them."""
+
+    times: Times
+    sources: NDArray[np.uint32]
+    new_sources: list[str]
+
+
+def serves(time_at: str, source: str | None, id: str | None) -> bool:
+    """Whether events of these pointers can be scanned: two members of the event itself, and no id.
+
+    Raises pointer.PointerError.
+    """
+    paths = [parse_pointer(text) for text in (time_at, source) if text is not None]
+    return id is None and len(set(paths)) == len(paths) and all(len(path) == 1 and fits_structs(path) for path in paths)
+
+
+@cache
+def compiled_lines() -> ModuleType:
+    """The module, its scan compiled. Raises StrandlineError where that cannot be."""
+    advice = 'or write decoding = "plain"'
+    try:
+        module = importlib.import_module(".compiled_lines", __package__)
+        lines = split_lines(_WARM, BodyLimits())
+        Scanner("/t", "s", "/s", 1, module).columns(lines, {})
+    except ModuleNotFoundError as error:
+        extra = f"pip install 'strandline[compiled]', {advice}"
+        raise StrandlineError(f'decoding = "compiled" needs the package {error.name}: {extra}') from error
+    except OSError as error:  # memory cannot be made executable
+        extra = f"let it (systemd: MemoryDenyWriteExecute=no), {advice}"
+        raise StrandlineError(f'decoding = "compiled" needs to make code while it runs: {extra} ({error})') from error
+    return module
+
+
+class Scanner:
+    """Scans bodies of one feed. Holds no state between bodies; may be shared between threads."""
+
+    def __init__(
+        self, time_at: str, unit: Unit, source: str | None, nesting_at_most: int, module: ModuleType | None = None
+    ) -> None:
+        """For pointers that it `serves`. Raises StrandlineError."""
+        self._module = module or compiled_lines()
+        self._unit, self._has_source = unit, source is not None
+        self._levels = min(nesting_at_most - 1, self._module.LEVELS_AT_MOST)
+        names = [parse_pointer(text)[0].encode() for text in (time_at, source) if text is not None]
+        self._names = [np.frombuffer(name + b"\0", np.uint8) for name in names]  # kept: the scan has their addresses
+        keys = [(_address(array), len(array) - 1) for array in self._names]
+        self.keys = sum(keys if self._has_source else [*keys, (0, -1)], ())
+
+    def columns(self, lines: Lines, source_numbers: Mapping[str, int]) -> Scanned | None:
+        """The columns of lines that are regular and UTF-8; None where they are not proven to be events."""
+        assert lines.is_regular, "the scan begins behind the first byte of a line"
+        count, payload, module = len(lines.ends), lines.payload, self._module
+        begin = _address(np.frombuffer(payload, np.uint8))
+        times, sources = np.empty(count, np.int64), np.zeros(count, np.int32)
+        room = 1 << min(count, _NAMES_AT_MOST).bit_length()  # more than names
+        names, table = np.empty((min(count, _NAMES_AT_MOST), 2), np.int64), np.full(2 * room, -1, np.int32)
+        found = module.scan(
+            begin, lines.starts, lines.ends, self.keys, self._unit == "rfc3339", self._levels,
+            times, sources, names, table,
+        )  # fmt: skip
+        if found < 0:
+            return None
+        ready = self._times(payload, times, begin)
+        if ready is None:
+            return None
+        numbers, new = _numbers(payload, (names[:found] - (begin, 0)).tolist(), source_numbers)
+        return Scanned(ready, np.array(numbers, np.uint32).take(sources) if numbers else sources.view(np.uint32), new)
+
+    def _times(self, payload: bytes, times: Times, begin: int) -> Times | None:
+        if self._unit != "rfc3339":
+            ready, outside = from_unit_column(times, self._unit)
+            return ready if outside is None else None
+        bits = self._module.TEXT_BITS
+        lengths, places = times & (1 << bits) - 1, (times >> bits) - begin
+        ready = np.empty_like(times)
+        for length in np.unique(lengths).tolist():
+            rows = lengths == length
+            # The texts as items of one unaligned view: 2 ns each, where a table of indices takes 30 (measured).
+            items = np.ndarray((len(payload) - length,), f"V{length + 1}", payload, 0, (1,))[places[rows]]
+            ready[rows], bad = parse_rfc3339_fixed(items.view(np.uint8).reshape(-1, length + 1))
+            if bad.any():
+                return None
+        return ready
+
+
+def _address(array: NDArray[np.uint8]) -> int:
+    return int(array.__array_interface__["data"][0])
+
+
+def _numbers(payload: bytes, names: list[list[int]], source_numbers: Mapping[str, int]) -> tuple[list[int], list[str]]:
+    """The numbers of names (place and length each), and those that the table lacks in order of first appearance."""
+    numbers: list[int] = []
+    new: list[str] = []
+    for place, length in names:
+        text = payload[place : place + length].decode()
+        number = source_numbers.get(text)
+        if number is None:
+            number = len(source_numbers) + len(new)
+            new.append(text)
+        numbers.append(number)
+    return numbers, new

@@ -1,0 +1,77 @@
+"""Child processes of `unit/test_compiled_start.py`: what can end a process, or must be so before any import."""
+
+from __future__ import annotations
+
+import ctypes
+import mmap
+import sys
+from random import Random
+
+PR_SET_MDWE, REFUSE_EXEC_GAIN = 65, 1  # linux/prctl.h
+BODIES = 30_000
+LINES = (
+    b'{"ts":1772344800013797817,"station":"gauge-02","id":1000000170,"level":6.95,"on":true,"x":null}',
+    b'{"ts":-5,"station":"ford","a":{"b":[1,2,{"c":"d"}]},"note":"\\u00f6 \\"x\\"","off":false}',
+    b'{"station":"weir","v":-1.5e-3,"ts":0}',
+    b'{"ts":1,"station":"a"}',
+    b'{"ts":1,"s":1}',
+    b'{"ts":1,}',
+)
+
+
+def refused() -> None:
+    """Print why there is no compiled decoding."""
+    from strandline.errors import StrandlineError  # noqa: PLC0415 - after what the caller has set up
+    from strandline.ingest.decode import Decoder  # noqa: PLC0415
+
+    Decoder("river", "/ts", "ns")
+    try:
+        Decoder("river", "/ts", "ns", is_compiled=True)
+    except StrandlineError as error:
+        print(error)
+
+
+def without_executable_memory() -> None:
+    """As systemd's MemoryDenyWriteExecute has it."""
+    if ctypes.CDLL(None, use_errno=True).prctl(PR_SET_MDWE, REFUSE_EXEC_GAIN, 0, 0, 0):
+        raise OSError(ctypes.get_errno(), "prctl")
+    refused()
+
+
+def without_numba() -> None:
+    """As where the extra was not installed."""
+    sys.modules["numba"] = sys.modules["llvmlite"] = None  # type: ignore[assignment]
+    refused()
+
+
+def at_the_end_of_memory() -> None:
+    """Scan damaged bodies that end where a page ends that cannot be read behind; a byte too far ends the process."""
+    import numpy as np  # noqa: PLC0415
+    from fuzz_mutate import mutated  # noqa: PLC0415
+    from strandline.ingest.compiled import Scanner, compiled_lines  # noqa: PLC0415
+    from strandline.ingest.limits import BodyLimits  # noqa: PLC0415
+    from strandline.ingest.lines import split_lines  # noqa: PLC0415
+
+    pages = mmap.mmap(-1, 3 * mmap.PAGESIZE)
+    begin = ctypes.addressof(ctypes.c_char.from_buffer(pages))
+    guard = begin + 2 * mmap.PAGESIZE
+    if ctypes.CDLL(None, use_errno=True).mprotect(ctypes.c_void_p(guard), mmap.PAGESIZE, 0):
+        raise OSError(ctypes.get_errno(), "mprotect")
+    scanner, scan, draw = Scanner("/ts", "ns", "/station", 9), compiled_lines().scan, Random(7)
+    taken = scanned = 0
+    for _ in range(BODIES):
+        seed = b"".join(draw.choice(LINES) + b"\n" for _ in range(draw.choice((1, 1, 2, 3))))
+        lines = split_lines(mutated(draw, seed)[: 2 * mmap.PAGESIZE - 1], BodyLimits())
+        if not lines.is_regular:
+            continue
+        count, size = len(lines.ends), len(lines.payload)
+        pages[2 * mmap.PAGESIZE - size : 2 * mmap.PAGESIZE] = lines.payload
+        columns = np.empty(count, np.int64), np.empty(count, np.int32), np.empty((count, 2), np.int64)
+        table = np.full(64, -1, np.int32)
+        found = scan(guard - size, lines.starts, lines.ends, scanner.keys, False, 8, *columns, table)
+        scanned, taken = scanned + 1, taken + (found >= 0)
+    print(scanned, taken)
+
+
+if __name__ == "__main__":
+    {"guard": at_the_end_of_memory, "mdwe": without_executable_memory, "bare": without_numba}[sys.argv[1]]()
