@@ -82,6 +82,9 @@ class _FaultyFile:
     def view(self) -> memoryview:
         return self._file.view()
 
+    def data_end(self, start: int) -> int:
+        return self._file.data_end(start)
+
     def close(self) -> None:
         self._file.close()
 

@@ -160,6 +160,10 @@ class SimFile:
         self._disk.faults.meet("view", self._path)
         return memoryview(self.inode.live).toreadonly()
 
+    def data_end(self, start: int) -> int:
+        self._must_be_open()
+        return max(start, -(-len(self.inode.live.rstrip(b"\0")) // SECTOR_BYTES) * SECTOR_BYTES)  # by whole ones
+
     def close(self) -> None:
         if self._open:
             self._open = False

@@ -48,6 +48,11 @@ class Bodies:
             self.advanced_ns = now_ns
 
     @property
+    def waiting(self) -> int:
+        """Bodies that wait now."""
+        return len(self._since)
+
+    @property
     def ended(self) -> int:
         """Bodies that wait no more, since the start."""
         return self._count - len(self._since)

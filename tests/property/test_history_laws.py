@@ -164,3 +164,27 @@ def test_the_memory_of_a_day_is_bounded() -> None:
     step_s, rows = history.window(end_ns - 24 * 3600 * SECOND_NS, end_ns, 2000)
     assert step_s == 60 and len(rows) >= 1439
     assert set(rows["received"][1:-1].tolist()) == {6}
+
+
+@given(samples(60), st.lists(st.sampled_from([0.3, 0.9, 1.0, 1.0, 1.1, 5.0, 30.0]), max_size=80), samples(20))
+@settings(max_examples=150, deadline=None)
+def test_a_row_told_by_repetition_is_the_row_at_each_instant(before: Rows, steps: list[float], behind: Rows) -> None:
+    """Whatever came before and comes behind: `add_again` leaves every level as `add` one by one does."""
+    plain, quick = History(SMALL), History(SMALL)
+    for row in np.split(before, len(before)):
+        plain.add(row.copy())
+        quick.add(row.copy())
+    still = before[-1:].copy()
+    instants = (int(still["t_ns"][0]) + (np.cumsum(steps) * SECOND_NS).astype(np.int64)).tolist()
+    for instant in instants:
+        row = still.copy()
+        row["t_ns"] = instant
+        plain.add(row)
+    quick.add_again(still, instants)
+    behind["t_ns"] += (instants[-1] if instants else int(still["t_ns"][0])) - behind["t_ns"][0] + SECOND_NS
+    for row in np.split(behind, len(behind)):
+        for level in range(len(SMALL)):
+            assert plain.rows(level).tobytes() == quick.rows(level).tobytes()
+        plain.add(row.copy())
+        quick.add(row.copy())
+    quick.check()

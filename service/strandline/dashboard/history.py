@@ -7,6 +7,7 @@ Memory: 3,780 rows of 542 bytes, 2.0 MB a feed once a day has passed; the pages 
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -134,6 +135,18 @@ class Ring:
         self._next = (self._next + 1) % len(self._rows)
         self.count = min(self.count + 1, len(self._rows))
 
+    def add_again(self, row: Rows, t_ns: NDArray[np.int64]) -> None:
+        """Keep one row (rows[1]) as often as there are instants, each with its own."""
+        if not len(t_ns):
+            return
+        kept = t_ns[-len(self._rows) :]
+        self._next = (self._next + len(t_ns) - len(kept)) % len(self._rows)
+        places = np.arange(self._next, self._next + len(kept)) % len(self._rows)
+        self._rows[places] = row
+        self._rows["t_ns"][places] = kept
+        self._next = (self._next + len(kept)) % len(self._rows)
+        self.count = min(self.count + len(t_ns), len(self._rows))
+
     def replace_last(self, row: Rows) -> None:
         """Put a row in the place of the newest."""
         self._rows[self._next - 1] = row[0]
@@ -183,6 +196,31 @@ class History:
         row["t_ns"] = t_ns
         self._rings[0].add(row)
         self._last_ns = t_ns
+
+    def add_again(self, row: Rows, instants: Sequence[int]) -> None:
+        """As `add` of the same row at each of these instants, a step of the next level at a time."""
+        if not instants:
+            return
+        step_ns = self._steps_ns[0]
+        t_ns = np.array(instants, dtype=np.int64) // step_ns * step_ns
+        if self._last_ns is not None:
+            t_ns = np.concatenate(([self._last_ns], t_ns))
+        if np.any(t_ns[1:] <= t_ns[:-1]):  # two in one step are merged, and a clock may have stepped back
+            for instant in instants:
+                self._add_at(row, instant)
+            return
+        t_ns = t_ns[len(t_ns) - len(instants) :]
+        coarse_ns = self._steps_ns[1] if len(self._steps_ns) > 1 else step_ns
+        starts = starts_of(t_ns // coarse_ns).tolist()
+        for start, stop in zip(starts, [*starts[1:], len(t_ns)], strict=True):
+            self._add_at(row, int(t_ns[start]))  # makes coarse rows of what is over by then; behind it nothing is
+            self._rings[0].add_again(row, t_ns[start + 1 : stop])
+            self._last_ns = int(t_ns[stop - 1])
+
+    def _add_at(self, row: Rows, instant: int) -> None:
+        row = row.copy()
+        row["t_ns"] = instant
+        self.add(row)
 
     def _roll(self, t_ns: int, before_ns: int) -> None:
         """Make coarse rows of the steps that are over."""

@@ -12,7 +12,7 @@ from itertools import islice
 import numpy as np
 from numpy.typing import NDArray
 
-from ..core.columns import NO_SOURCE
+from ..core.columns import NO_SOURCE, TIME_MAX
 from ..core.holds import SILENT_PART
 from ..core.sources import NEVER, Sources
 
@@ -73,6 +73,16 @@ class Part:
                 return _least(~heard, np.flatnonzero(self._excused), at_most)
         active = self._sources.active[: self._count] & ~self._silent & ~self._expected
         return _least(newest, np.flatnonzero(active), at_most)
+
+
+def parts_turn_ns(sources: Sources, now_ns: int, idle_after_ns: int) -> int:
+    """When a source's part changes next although nothing is heard or done; TIME_MAX where none does."""
+    count = len(sources.names)
+    heard, newest = sources.heard[:count], sources.newest[:count]
+    silent_since_ns = now_ns - idle_after_ns // SILENT_PART
+    silent = heard[heard >= silent_since_ns] + (now_ns - silent_since_ns + 1)
+    ahead = newest[newest > now_ns + AHEAD_NS] - AHEAD_NS
+    return min(int(silent.min(initial=TIME_MAX)), int(ahead.min(initial=TIME_MAX)))
 
 
 def _least(values: NDArray[np.int64], numbers: Numbers, at_most: int) -> list[int]:

@@ -43,6 +43,11 @@ class RecentLate:
         while self._batches and self._batches[0].arrived_ns < arrived_ns:
             self._events -= len(self._batches.popleft().times)
 
+    @property
+    def oldest_ns(self) -> int | None:
+        """When the oldest that is remembered came; None: there is none."""
+        return self._batches[0].arrived_ns if self._batches else None
+
     def sources(self) -> list[int]:
         """Numbers of the sources that were late, those that were so last first."""
         if not self._batches:

@@ -15,6 +15,7 @@ from ..core.sources import Sources
 from ..core.view import HOLD_WHYS, View
 from ..documents import age_s
 from ..hops import Hop
+from ..intake.counts import Counts
 from ..sinks.delivery import DeliveryState
 from .lanes import Part
 from .sampling import Rates
@@ -84,6 +85,22 @@ def _sink(state: DeliveryState, now_ns: int) -> Json:
         "paused": state.paused,
         "last_error": state.last_error,
         "failing_since_ms": ms(state.failing_since_ns),
+    }
+
+
+def intake_part(counts: Counts, now_ns: int) -> Json:
+    """One intake: its broker, and what waits there or is under way."""
+    paused_ns = counts.paused_until_ns or 0
+    return {
+        "name": counts.name,
+        "kind": counts.kind,
+        "connected": counts.connected,
+        "since_ms": ms(counts.since_ns),
+        "words": counts.words,
+        "paused_until_ms": ms(paused_ns) if paused_ns > now_ns else None,
+        "waiting_messages": counts.waiting,
+        "in_flight_messages": counts.in_flight,
+        "last_error": counts.last_error,
     }
 
 

@@ -15,7 +15,7 @@ from ..core.view import HOLD_WHYS, hold_of
 from ..hops import HOPS, Hop
 from ..runtime import FeedRuntime
 from .history import LANES, SECOND_NS, SINKS, SUMS, History, Rows, empty_row
-from .lanes import Part, choose
+from .lanes import Part, choose, parts_turn_ns
 from .late import RecentLate
 from .lateness import SinceLast
 
@@ -23,9 +23,11 @@ WHYS = tuple(HOLD_WHYS)
 RATES_OVER_NS = 5 * SECOND_NS
 MINUTE_S = 60
 COUNTERS_APART_NS = 400_000_000
+COUNTERS_AT_MOST = 16
 LATE_KEPT_NS = 900 * SECOND_NS
-OWED_AT_MOST = 20  # rows entered at a time where nothing happens: 12 us each, one at a time 18 (what they need is cold)
-STILL_NS = 60 * SECOND_NS  # after that a row is made anew: which sources are silent depends on time alone
+OWED_AT_MOST = 300  # rows entered at a time where nothing happens: 11 us each; twenty at a time 27, one by one 39
+STILL_NS = 60 * SECOND_NS  # after that a row is made anew
+STILL_LONG_NS = 900 * SECOND_NS  # likewise where it came out the same, and nothing in it depends on time alone
 BOOKS = ("received", "released", "late", "duplicate", "quarantined")
 
 
@@ -60,14 +62,16 @@ class FeedMemory:
 
     def __init__(self, runtime: FeedRuntime) -> None:
         self.runtime = runtime
+        self.since_ns = runtime.clock.now_ns()  # nothing is remembered of what was before
         self.late = RecentLate()
         self._history = History()
         self._lateness = SinceLast(runtime.feed.state.lateness)
         self._books, self._refusals = _books(runtime.feed.state.ledger), 0
-        self._counters: deque[Counters] = deque(maxlen=16)
+        self._counters: deque[Counters] = deque(maxlen=COUNTERS_AT_MOST)
         self._lanes: list[int] = []
         self._still: Still | None = None
         self._owed: list[int] = []  # instants of samples that are the still row again and not in the history yet
+        self._owed_counted = 0  # those of them that the counters have
         runtime.watchers.append(self.late.note)
 
     @property
@@ -82,7 +86,6 @@ class FeedMemory:
         still = self._still
         if still is not None and still.traces == self._traces() and now_ns < still.until_ns:
             self._owed.append(now_ns)
-            self._counters.append(self._counters[-1]._replace(now_ns=now_ns))
             if len(self._owed) >= OWED_AT_MOST:
                 self._enter_owed()
         else:
@@ -103,12 +106,17 @@ class FeedMemory:
         return {name: int(rows[name].sum()) + now - then for name, now, then in since}
 
     def _enter_owed(self) -> None:
-        for now_ns in self._owed:
+        if self._owed:
             assert self._still is not None
-            row = self._still.row.copy()
-            row["t_ns"] = now_ns
-            self._history.add(row)
-        self._owed.clear()
+            self._count_owed()
+            self._history.add_again(self._still.row, self._owed)
+            self._owed, self._owed_counted = [], 0
+
+    def _count_owed(self) -> None:
+        fresh = self._owed[self._owed_counted :]
+        self._owed_counted = len(self._owed)
+        for now_ns in fresh[-COUNTERS_AT_MOST:]:
+            self._counters.append(self._counters[-1]._replace(now_ns=now_ns))
 
     def _row(self, now_ns: int) -> Rows:
         traces, hops = self._traces(), self.runtime.hops()
@@ -118,24 +126,37 @@ class FeedMemory:
         self._fill_feed(row)
         self._fill_hops(row, hops, now_ns)
         self._fill_lanes(row, now_ns)
-        self._still = None
+        before, self._still = self._still, None
         if traces is not None and not row["held"] and not row["waiting"].any():
             still = row.copy()
             for name in SUMS:
                 still[name] = 0
-            self._still = Still(traces, still, now_ns + STILL_NS)
+            self._still = Still(traces, still, self._still_until(before, traces, still, now_ns))
         return row
+
+    def _still_until(self, before: Still | None, traces: tuple[int, ...], row: Rows, now_ns: int) -> int:
+        """When the row must be made anew although nothing happens, since its lanes depend on time as well."""
+        if before is None or before.traces != traces:
+            return now_ns + STILL_NS
+        before.row["t_ns"] = now_ns
+        if before.row.tobytes() != row.tobytes():
+            return now_ns + STILL_NS
+        state = self.runtime.feed.state
+        turns = parts_turn_ns(state.sources, now_ns, state.settings.idle_after_ns)
+        forgotten = self.late.oldest_ns
+        if forgotten is not None:
+            turns = min(turns, forgotten + LATE_KEPT_NS + 1)
+        return min(now_ns + STILL_LONG_NS, turns)
 
     def _traces(self) -> tuple[int, ...] | None:
         """What nothing can happen to the feed without changing; None while a body is on its way in."""
         runtime = self.runtime
-        if runtime.reading.hop().waiting:
+        if runtime.reading.waiting:
             return None
-        refusals, failing = sum(runtime.feed.refusals.values()), tuple(self._failing())
-        return (
-            *(runtime.feed.next_lsn, runtime.feed.durable_lsn, runtime.reading.ended, runtime.decoding.ended, refusals),
-            *failing,
-        )
+        feed, sinks = runtime.feed, runtime.deliveries.values()
+        refusals = sum(feed.refusals.values()) if feed.refusals else 0
+        counts = (feed.next_lsn, feed.durable_lsn, runtime.reading.ended, runtime.decoding.ended, refusals)
+        return (*counts, *[sink.failing for sink in sinks]) if sinks else counts
 
     def _failing(self) -> list[bool]:
         """Which sinks fail, in their order; the last place stands for all further ones."""
@@ -176,11 +197,13 @@ class FeedMemory:
 
     def note_counters(self, now_ns: int, hops: dict[str, Hop]) -> None:
         """Remember the counters, unless that was done just now."""
+        self._count_owed()
         if not self._counters or now_ns - self._counters[-1].now_ns >= COUNTERS_APART_NS:
             self._counters.append(self._read(now_ns, hops))
 
     def rates(self, now_ns: int, hops: dict[str, Hop]) -> Rates:
         """Rates up to now."""
+        self._count_owed()
         now = self._read(now_ns, hops)
         earlier = [counters for counters in self._counters if counters.now_ns < now_ns]
         then = next((one for one in earlier if now_ns - one.now_ns <= RATES_OVER_NS), earlier[-1] if earlier else now)

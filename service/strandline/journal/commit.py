@@ -21,9 +21,13 @@ Result = TypeVar("Result")
 class GroupCommit:
     """Flushes one journal. All methods belong to the loop's thread; the callbacks run there too.
 
+    `saves_every_ns`: a snapshot is due so often at the latest while anything changes; None: the size decides alone.
+
     `on_durable(lsn)` is called after each flush that moved it; `on_failed(error)` once, for whatever ended it: a
     JournalFailed, or an error that `on_durable` raised. After that nothing is flushed any more.
     """
+
+    saves_every_ns: int | None = None
 
     def __init__(
         self, journal: Journal, on_durable: Callable[[int], None], on_failed: Callable[[Exception], None]
@@ -47,6 +51,11 @@ class GroupCommit:
 
     async def keep_snapshot(self, lsn: int, parts: Sequence[Buffer], needed_lsn: int) -> None:
         """A snapshot was written beside the journal: nothing more is to be done where the journal is all there is."""
+
+    @property
+    def durable_lsn(self) -> int:
+        """What was told to `on_durable` at most: everything before it outlives a crash."""
+        return self._journal.durable_lsn
 
     @property
     def busy(self) -> bool:

@@ -57,6 +57,25 @@ class LocalFile:
             return memoryview(b"")
         return memoryview(mmap.mmap(self._descriptor, self._size, flags=mmap.MAP_SHARED, prot=mmap.PROT_READ))
 
+    def data_end(self, start: int) -> int:
+        """From where on, at or behind `start`, it holds nothing but zeros, as far as the system knows. Raises OSError.
+
+        By the holes that lseek(2) tells of, which read as zeros: room that was reserved and never written nor read. So
+        64 MiB of it take some us, where mapping and looking through them takes 12 ms and as much page cache.
+        """
+        end = offset = min(start, self._size)
+        try:
+            while offset < self._size:
+                offset = os.lseek(self._descriptor, offset, os.SEEK_DATA)
+                end = offset = os.lseek(self._descriptor, offset, os.SEEK_HOLE)
+        except OSError as error:
+            if error.errno == errno.ENXIO:  # no data follows
+                return end
+            if error.errno not in CANNOT_RESERVE:
+                raise
+            return self._size
+        return end
+
     def close(self) -> None:
         """Release the handle. A second call does nothing."""
         descriptor, self._descriptor = self._descriptor, -1

@@ -76,6 +76,10 @@ class Readable:
                 yield frame
             lsn = frame.end_lsn
 
+    def unmap(self) -> None:
+        """Let the mappings go, which would keep removed files on the disk; who reads again maps them anew."""
+        self._maps.forget_all()
+
     def line_bytes(self, places: ArrayLike, lengths: ArrayLike) -> list[bytes]:
         """The lines at these positions, one bytes object each, without line feeds. Arguments as for `gather`."""
         return lines(*self._located(places, lengths))

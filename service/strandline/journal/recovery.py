@@ -165,8 +165,8 @@ def make_certain(disk: Disk, found: Recovered, maps: Maps) -> int:
     view = maps.view(last.path)
     floor = last.offset(max(found.floor_lsn, last.first_lsn))
     end = last.offset(found.next_lsn)
-    torn_end = last_set(view, end)
     last.file = disk.open(last.path)
+    torn_end = last_set(view[: last.file.data_end(end)], end)
     for offset, piece in _pieces(view, floor, end, torn_end):
         last.file.write(offset, [piece])
     last.file.sync()

@@ -190,6 +190,11 @@ class Maps:
         with self._lock:
             self._views.pop(path, None)
 
+    def forget_all(self) -> None:
+        """Hold no mapping any longer."""
+        with self._lock:
+            self._views.clear()
+
     def __len__(self) -> int:
         return len(self._views)
 
