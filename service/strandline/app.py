@@ -33,6 +33,7 @@ from .errors import StrandlineError
 from .hold_answer import get_acts, get_holds
 from .ingest import endpoint
 from .ingest.endpoint import ASIDE, BODIES, CONFIG, FEEDS
+from .ingest.limits import BodyLimits
 from .ingest.offload import Aside
 from .intake.starting import Intakes
 from .journal.disk import LocalDisk
@@ -57,6 +58,7 @@ TICK_S = 0.25
 LINGER_S = 2.0  # what still comes after a request was refused is read so long: else its sender might miss the answer
 BACKLOG = 1024  # connections that the kernel may keep until they are taken
 SHUTDOWN_WITHIN_S = 2.0  # for requests and streams that do not end by themselves once the feeds are closed
+READS_BY = tuple(BodyLimits.__struct_fields__)
 EXIT_FAILED = 3
 EXIT_AT_ONCE = 130
 
@@ -93,7 +95,7 @@ def make_app(config: Config, feeds: dict[str, FeedRuntime], gate: Gate) -> web.A
             web.get("/v1/feeds/{feed}/refused", observe.get_refused),
             web.get("/v1/feeds/{feed}/ordered", observe.get_ordered, allow_head=False),
             web.get("/v1/feeds/{feed}/capture", observe.get_capture, allow_head=False),
-            web.get("/metrics", make_aiohttp_handler(make_registry(feeds))),
+            web.get("/metrics", make_aiohttp_handler(make_registry(feeds, lambda: app.get(CLUSTER)))),
             web.get("/health/live", observe.get_live),
             web.get("/health/ready", observe.get_ready),
             web.get("/openapi.json", _get_openapi),
@@ -183,7 +185,7 @@ class Service:
             raise not_free(self.config.listen, error) from error
         self._intakes.start(self.feeds.values())
         if self._cluster is not None:
-            self._cluster.begin()
+            self._cluster.begin(str(self.address))
 
     async def _listen(self, app: web.Application, gate: Gate) -> None:
         limits, listen = self.config.limits, self.config.listen
@@ -273,7 +275,7 @@ class Service:
         self.stopping.set()
 
     async def _tick(self) -> None:
-        beats = Beats()
+        beats = Beats(self.clock)
         while True:
             await asyncio.sleep(TICK_S)
             for name, runtime in beats.due(self.feeds.items()):
@@ -294,7 +296,9 @@ def fixed_changes(old: Config, new: Config) -> list[str]:
     if [feed.name for feed in old.feeds] != [feed.name for feed in new.feeds]:
         return [*found, "the list of feeds"]
     for before, after in zip(old.feeds, new.feeds, strict=True):
-        keys = ("time", "source", "id", "journal", "sinks", "intakes", "partitions")
+        keys: tuple[str, ...] = ("time", "source", "id", "decoding", "journal", "sinks", "intakes", "partitions")
+        if after.partitions is not None:
+            keys += READS_BY  # whoever takes a partition over must read its messages as they were read
         found += [f"{key} of feed {after.name}" for key in keys if getattr(before, key) != getattr(after, key)]
     return found
 

@@ -12,6 +12,7 @@ import msgspec
 from .cli_answers import FINE, WRONG_USE, write_table
 from .config import Config, Feed, load
 from .config_access import literal_beyond, needs_tokens
+from .config_notes import notes
 from .config_read import Reading
 from .config_units import duration_text
 from .errors import ConfigError
@@ -27,7 +28,8 @@ def check(options: argparse.Namespace) -> int:
         _write_json({"file": str(options.file), "ok": False, "faults": error.faults})
         return WRONG_USE
     if options.json:
-        _write_json({"file": str(options.file), "ok": True, "faults": [], "feeds": [_feed(f) for f in config.feeds]})
+        feeds = [_feed(feed) for feed in config.feeds]
+        _write_json({"file": str(options.file), "ok": True, "faults": [], "notes": notes(config), "feeds": feeds})
     else:
         _write(str(options.file), config)
     return FINE
@@ -48,6 +50,8 @@ def _write(file: str, config: Config) -> None:
         sys.stdout.write(f"Is instance {cluster.instance} of cluster {cluster.name}: {parts} partitions to share.\n")
     headings = ("feed", "slack", "idle after", "hold at most", "sinks")
     write_table(headings, ((feed.name, *_waits(feed), ", ".join(_sinks(feed))) for feed in config.feeds))
+    for note in notes(config):
+        sys.stdout.write(f"note: {note}.\n")
 
 
 def _waits(feed: Feed) -> list[str]:

@@ -20,6 +20,7 @@ from .config_model import Config, Feed, SteeredSlack
 from .config_read import Key, Place, Reading, declared
 from .config_sink_checks import check_sinks
 from .config_sinks import SINK_KINDS, RemoteWriteConfig, SinkConfig
+from .ingest.compiled import serves
 from .ingest.pointer import Fields, PointerError
 
 
@@ -58,6 +59,12 @@ FEED_RULES = (
         lambda feed: feed.order == "source" and feed.idle_after_ns < feed.longest_slack_ns,
         'is shorter than slack = {}: with order = "source" what is held of an idle source is let go, so no event could '
         "wait for all of its slack",
+    ),
+    Rule(
+        ("decoding", "id"),
+        lambda feed: feed.decoding == "compiled" and not serves(feed.time.at, feed.source, feed.id),
+        "reads events whose time and source are two members of the event itself (such as /time), and which have no id "
+        'pointer: leave it out, or write decoding = "plain"',
     ),
     Rule(
         ("body_bytes_at_most", "decoded_bytes_at_most"),

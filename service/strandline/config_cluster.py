@@ -10,7 +10,7 @@ import re
 import socket
 from collections.abc import Iterable
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import TYPE_CHECKING, Annotated
 
 import msgspec
 from msgspec import field
@@ -18,13 +18,14 @@ from msgspec import field
 from .broker_access import BrokerAccess
 from .config_broker_kinds import PARTITION, broker_addresses, broker_name, partitioned_subject, user
 from .config_intakes import PASSWORD, SECRET_FILE, SubjectToken
-from .config_kinds import Kind, choice, count, duration, name, secret, size
+from .config_kinds import Address, Kind, address, choice, count, duration, name, secret, size
 from .config_read import Key, Table, declared
 from .core.settings import SECOND_NS
 from .ingest.formats import MEDIA_TYPES, NDJSON
 
 if TYPE_CHECKING:
     from .config_model import Feed
+    from .config_sinks import SinkConfig
 
 GIB = 2**30
 PARTITIONS_AT_MOST = 1024
@@ -53,6 +54,10 @@ class ClusterConfig(msgspec.Struct, frozen=True, kw_only=True):
     instance: Annotated[
         str, Key(MEMBER_NAME, "this instance's name, which no other may have; whatever else the host's name holds is -")
     ] = HOST
+    address: Annotated[
+        Address | None,
+        Key(address(), "where this instance is reached, for people who look at another; without it: where it listens"),
+    ] = None
     urls: Annotated[
         tuple[str, ...],
         Key(broker_addresses("nats", "tls"), "the servers of the log, the leases and the feeds' streams"),
@@ -65,7 +70,7 @@ class ClusterConfig(msgspec.Struct, frozen=True, kw_only=True):
         Key(duration("2s", "1h"), "how long an instance that is gone keeps its partitions; with 3 brokers 15s or more"),
     ] = field(default=15 * SECOND_NS, name="lease")
     log_at_most_bytes: Annotated[
-        int, Key(size("1MiB"), "room for the log of all partitions at each broker that keeps it")
+        int, Key(size("1MiB"), "room for the log of all partitions, reserved at each broker that keeps it")
     ] = field(default=GIB, name="log_at_most")
     user: Annotated[str | None, Key(user(), "who to be at the broker")] = None
     password: Annotated[str | None, Key(PASSWORD, "its password; better in its variable than in the file")] = None
@@ -102,7 +107,11 @@ class Partitions(msgspec.Struct, frozen=True, kw_only=True):
     stream: Annotated[str, Key(broker_name("stream"), "the stream that producers publish to; it must be there")]
     subject: Annotated[str, Key(partitioned_subject(), "which of its subjects; `{partition}` is 0 up to `count` - 1")]
     count: Annotated[
-        int, Key(count(1, PARTITIONS_AT_MOST), "how many partitions there are; fixed once events have come")
+        int,
+        Key(
+            count(1, PARTITIONS_AT_MOST),
+            "how many partitions there are, the number in the brokers' mapping; fixed once events have come",
+        ),
     ]
     source: Annotated[SubjectToken | None, Table(SubjectToken)] = None
     content_type: Annotated[str, Key(choice(*MEDIA_TYPES), "the format of a message that does not name one itself")] = (
@@ -161,7 +170,7 @@ def partition_feeds(feed: Feed) -> tuple[Feed, ...]:
     )
 
 
-def _renamed(sink: Any, feed_name: str, name: str) -> Any:
+def _renamed(sink: SinkConfig, feed_name: str, name: str) -> SinkConfig:
     changes: dict[str, Path] = {}
     for item in declared(type(sink)).values():
         value = getattr(sink, item.attribute)

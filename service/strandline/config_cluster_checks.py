@@ -11,7 +11,7 @@ from collections.abc import Iterator
 from typing import TYPE_CHECKING
 
 from .config_broker_kinds import PARTITION
-from .config_cluster import NAME_CHARACTERS_AT_MOST, Partitions, partition_name
+from .config_cluster import NAME_CHARACTERS_AT_MOST, PARTITIONS_AT_MOST, Partitions, partition_name
 from .config_intake_checks import check_secrets
 from .config_kinds import quoted
 from .config_read import Place, Reading
@@ -42,8 +42,21 @@ def check_cluster(config: Config, reading: Reading) -> None:
         if own and not reading.is_faulty(stream) and not reading.is_faulty(("cluster", "name")):
             sentence = "is the cluster's own log: name the stream that producers publish to, or rename the cluster"
             reading.fault(stream, sentence, quoted(partitions.stream))
+    _check_total(config, reading)
     _check_names(config, reading)
     _check_subjects(config, reading)
+
+
+def _check_total(config: Config, reading: Reading) -> None:
+    """One look at the bucket of leases reads them all, and no more than PARTITIONS_AT_MOST."""
+    total = 0
+    for index, _, partitions in _partitioned(config, reading):
+        if reading.is_faulty(("feed", index, "partitions", "count")):
+            continue
+        total += partitions.count
+        if total > PARTITIONS_AT_MOST >= total - partitions.count:
+            sentence = f"makes {total:,} partitions of all feeds together: {PARTITIONS_AT_MOST:,} is the most"
+            reading.fault(("feed", index, "partitions", "count"), sentence, str(partitions.count))
 
 
 def _partitioned(config: Config, reading: Reading) -> Iterator[tuple[int, Feed, Partitions]]:

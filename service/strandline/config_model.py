@@ -130,6 +130,10 @@ class Feed(msgspec.Struct, frozen=True):
         int, Key(count(0, 1_000_000), "lines of one request that are no events; with more the whole request is refused")
     ] = 10_000
     nesting_at_most: Annotated[int, Key(count(1, 200), "levels of nesting in one event")] = 64
+    decoding: Annotated[
+        Literal["plain", "compiled"],
+        Key(choice("plain", "compiled"), "how bodies are read: as always, or first by compiled code, see Compiled"),
+    ] = "plain"
     lanes_at_most_bytes: Annotated[
         int, Key(size("1MiB"), "room for the late lane and the quarantine together, as they are kept for you to read")
     ] = field(default=GIB, name="lanes_at_most")

@@ -33,6 +33,7 @@ class Housekeeper:
         self._saved_lsn = 0  # of the newest snapshot
         self._older_lsn = 0  # of the one before it: the journal goes back to it, should the newest turn out damaged
         self._saved_bytes = 0
+        self._saved_ns = 0  # when; before the first one of this process it was long ago
         self._retention = Retention(retain_ns)
         journal.keeps_snapshots = retain_ns > 0
 
@@ -83,6 +84,9 @@ class Housekeeper:
         # When the journal has grown by a segment and by four times the snapshot's own size, so that snapshots stay
         # below a quarter of what is written; or when room is short and a snapshot would free some.
         grown = self._feed.next_lsn - self._saved_lsn
+        every_ns = self._commit.saves_every_ns
+        if grown and every_ns is not None and self._clock.now_ns() >= self._saved_ns + every_ns:
+            return True
         if grown >= max(segment_bytes, 4 * self._saved_bytes):
             return True
         return self._journal.short_of_room and self._journal.frees(self._feed.needed_place)
@@ -109,7 +113,7 @@ class Housekeeper:
             await self._settle()
             await asyncio.to_thread(self._journal.write_snapshot, lsn, parts)
             await self._commit.keep_snapshot(lsn, parts, needed)
-            self._older_lsn, self._saved_lsn = self._saved_lsn, lsn
+            self._older_lsn, self._saved_lsn, self._saved_ns = self._saved_lsn, lsn, self._clock.now_ns()
             self._saved_bytes = sum(len(part) for part in parts)
         # The older of the two kept snapshots stays usable, in case the newer one turns out damaged; where room is
         # short there is no such choice.

@@ -18,7 +18,7 @@ from aiohttp import web
 from .core.columns import Arrival, RequestKey
 from .decoding import decoder_of
 from .errors import BodyError
-from .ingest.endpoint import read_act, runtime_of
+from .ingest.endpoint import read_act, refuse_partitions, runtime_of
 from .ingest.formats import NDJSON
 from .problems import NotThere, Refused
 from .repairing import Repairer
@@ -27,6 +27,10 @@ from .sinks.lane_reading import last_number
 from .sinks.lanes import ROWS_AT_MOST, QuarantineRow, forget_exactly, quarantine_rows
 
 LARGEST = 2**63 - 1
+NOT_READMITTED = (
+    "feed {feed} readmits nothing, for all its events come by stream {stream}: mend, export (`strandline quarantine "
+    "export`), and publish again (deploy/cluster.md)"
+)
 RowNumber = Annotated[int, msgspec.Meta(ge=0, le=LARGEST)]
 
 
@@ -73,8 +77,10 @@ async def post_refused_resend(request: web.Request) -> web.Response:
 async def post_quarantine_readmit(request: web.Request) -> web.Response:
     """Decode lines in quarantine once more, after a fix, and take those that are events now.
 
-    Each line is tried once: what comes into quarantine meanwhile is left for the next run.
+    Each line is tried once: what comes into quarantine meanwhile is left for the next run. Not in a partition, whose
+    events all come from its stream, where whoever takes it over reads them again.
     """
+    refuse_partitions(request, NOT_READMITTED)
     runtime, act = runtime_of(request), await read_act(request, Readmit)
     totals = {"tried": 0, "accepted": 0, "late": 0, "duplicate": 0, "quarantined": 0, "still_faulty": 0}
     after, path = act.after, runtime.lanes_file

@@ -7,16 +7,28 @@ from __future__ import annotations
 
 import asyncio
 import contextlib
+import errno
+import re
 from collections.abc import Sequence
 
 from nats.aio.client import Client
 from nats.errors import Error
+from nats.js.errors import APIError, ServerError, ServiceUnavailableError
+from nats.js.errors import Error as JetStreamError
 
 from .broker_access import BrokerAccess
 from .errors import StrandlineError
 
 CONNECT_WITHIN_S = 5
 PING_EVERY_S = 10  # a peer that is gone without a word is noticed after two of these
+_REFUSED = re.compile(rf"\[Errno {errno.ECONNREFUSED}\] Connect call failed \('([^']*)', (\d+)[^)]*\)")
+_ERRNO = re.compile(r"\[Errno -?\d+\] ")
+_PLAIN: dict[type[BaseException], str] = {
+    TimeoutError: "no answer in time",
+    APIError: "the server refuses it without a word",
+    ServerError: "an error of the server, which it does not name",
+    ServiceUnavailableError: "JetStream is not available there now",
+}
 NOT_THERE = (Error, OSError, TimeoutError, asyncio.TimeoutError)
 
 
@@ -67,9 +79,23 @@ async def disconnect(client: Client) -> None:
 
 
 def words_of(error: BaseException) -> str:
-    """An error of the client as part of a sentence."""
-    text = " ".join(str(error).split()).removeprefix("nats: ")
-    return text or type(error).__name__
+    """An error of the client as part of a sentence: what the server says of it, else what the client does."""
+    kind = type(error)
+    if isinstance(error, JetStreamError):
+        said = " ".join((getattr(error, "description", None) or "").split())
+        if said or isinstance(error, APIError):
+            return said or _PLAIN.get(kind) or _plain(kind.__name__)
+    text = " ".join(str(error).split()).removeprefix("nats: ").removeprefix("Multiple exceptions: ")
+    text = _ERRNO.sub("", _REFUSED.sub(r"nobody listens at \1, port \2", text))
+    if "authorization violation" in text.lower():
+        return "it refuses this user, password or token (Authorization Violation)"
+    return text or _PLAIN.get(kind) or _plain(kind.__name__)
+
+
+def _plain(name: str) -> str:
+    """A class's name as words: `SlowConsumerError` is a slow consumer."""
+    words = re.sub(r"(?<=[a-z])(?=[A-Z])", " ", name.removesuffix("Error")).lower()
+    return words or name
 
 
 __all__ = ["NOT_THERE", "Client", "connect", "disconnect", "words_of"]

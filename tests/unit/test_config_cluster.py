@@ -280,3 +280,17 @@ def test_a_running_service_changes_neither() -> None:
     more = read(CLUSTER + FEED + PARTITIONS.replace("= 4", "= 5"))
     assert fixed_changes(before, more) == ["partitions of feed river-gauges"]
     assert fixed_changes(before, read(FEED)) == ["cluster", "partitions of feed river-gauges"]
+    smaller = 'event_bytes_at_most = "2KiB"\n'
+    assert fixed_changes(before, read(CLUSTER + FEED + smaller + PARTITIONS)) == [
+        "event_bytes_at_most of feed river-gauges"
+    ], "the next owner would read messages otherwise"
+    assert fixed_changes(read(FEED), read(FEED + smaller)) == [], "elsewhere it may change"
+
+
+def test_the_partitions_of_all_feeds_together_have_a_limit() -> None:
+    keys = 'stream = "{name}", subject = "p.{{partition}}.>", count = {count}'
+    half = '[[feed]]\nname = "{name}"\npartitions = {{ ' + keys + " }}\n"
+    both = CLUSTER + half.format(name="gauges", count=512)
+    assert len(read(both + half.format(name="radio", count=512)).runtime_feeds()) == 1024
+    (fault,) = faults(both + half.format(name="radio", count=513) + half.format(name="rain", count=1))
+    assert "radio" in fault and "513" in fault and "1,025 partitions of all feeds together: 1,024 is the most" in fault

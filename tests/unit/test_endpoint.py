@@ -206,8 +206,8 @@ async def test_a_media_type_that_is_not_taken(tmp_path: Path, media_type: str) -
         ("application/json", "", b"[{]"),
         ("application/json", "", b"17"),
         (NDJSON, "gzip", b"no gzip"),
-        (NDJSON, "gzip", gzip.compress(events([1]))[:-9]),
-        (NDJSON, "zstd", zstandard.compress(events([1]))[:-1]),
+        pytest.param(NDJSON, "gzip", gzip.compress(events([1]), mtime=0)[:-9], id="gzip cut short"),
+        pytest.param(NDJSON, "zstd", zstandard.compress(events([1]))[:-1], id="zstd cut short"),
     ],
 )
 async def test_a_body_that_is_not_what_it_says(tmp_path: Path, media_type: str, coding: str, body: bytes) -> None:

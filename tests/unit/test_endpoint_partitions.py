@@ -43,10 +43,23 @@ async def test_events_are_refused_wherever_the_partition_is(name: str) -> None:
         members = json.loads(await answer.read())
         assert members["type"] == "urn:strandline:problem:stream_only"
         assert members["detail"] == (
-            "feed river-gauges takes no events by HTTP: publish them to stream RIVER, under part.{partition}.> with a "
-            "partition of 0 to 3 that follows from the source; deploy/cluster.md says how"
+            "feed river-gauges takes no events by HTTP: publish them by way of stream RIVER (as its producers do: "
+            "deploy/cluster.md), not here"
         )
         assert "Retry-After" not in answer.headers, "coming again never helps"
+
+
+async def test_what_is_in_quarantine_is_published_again_and_not_readmitted(tmp_path: Path) -> None:
+    """An arrival that came from no message could not be read again by whoever takes the partition over."""
+    async with running(configuration(tmp_path)) as service, serving({"river-gauges-2": service.runtime}) as client:
+        async with client.post("/v1/feeds/river-gauges-2/quarantine/readmit", json={}) as answer:
+            assert answer.status == 422
+            members = json.loads(await answer.read())
+        assert members["type"] == "urn:strandline:problem:stream_only"
+        assert members["detail"] == (
+            "feed river-gauges readmits nothing, for all its events come by stream RIVER: mend, export (`strandline "
+            "quarantine export`), and publish again (deploy/cluster.md)"
+        )
 
 
 @pytest.mark.parametrize("name", ["river-gauges-4", "river-gauges-00", "radio-5", "radio"])

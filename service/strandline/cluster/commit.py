@@ -8,7 +8,8 @@ from __future__ import annotations
 
 import asyncio
 import logging
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Coroutine, Sequence
+from typing import Any, TypeVar
 
 import msgspec
 
@@ -22,6 +23,7 @@ from .link import Away
 from .log import PartitionLog, TakenOver
 
 log = logging.getLogger(__name__)
+Result = TypeVar("Result")
 
 
 class GivenUp(StrandlineError):
@@ -30,6 +32,10 @@ class GivenUp(StrandlineError):
 
 class ReplicatedCommit(GroupCommit):
     """Makes one partition's journal durable. All methods belong to the loop's thread."""
+
+    # Whoever takes over reads again every message that came since the snapshot, although its events may be delivered:
+    # the stream must keep them so long.
+    saves_every_ns = 30 * 10**9
 
     def __init__(
         self,
@@ -44,6 +50,8 @@ class ReplicatedCommit(GroupCommit):
         self._next_lsn = self._replicated_lsn = journal.next_lsn
         self._writing = asyncio.Lock()
         self._bell = Bell()
+        self._stop = asyncio.Event()  # set once it has ended
+        self._left: set[asyncio.Future[Any]] = set()  # what was under way at the end, until it notices
         self.origin: Origin | None = None  # of the arrival that is being appended
         self.next_message = 1  # all of the stream's messages before it are in the log
 
@@ -53,7 +61,7 @@ class ReplicatedCommit(GroupCommit):
         self._entries.append(entry_of(kind, parts, self.origin))
 
     @property
-    def replicated_lsn(self) -> int:
+    def durable_lsn(self) -> int:
         """Everything before this position is in the log."""
         return self._replicated_lsn
 
@@ -63,7 +71,7 @@ class ReplicatedCommit(GroupCommit):
         Without the log, or once it was taken over, the snapshot is left out: the log goes back further then.
         """
         try:
-            saved = await self._replica.store_snapshot(lsn, parts, needed_lsn)
+            saved = await self._unless_ended(self._replica.store_snapshot(lsn, parts, needed_lsn))
             while self._replicated_lsn < lsn:
                 self._require_going_on()
                 bell = self._bell.next
@@ -72,8 +80,9 @@ class ReplicatedCommit(GroupCommit):
             async with self._writing:
                 self._require_going_on()
                 saved = msgspec.structs.replace(saved, next_message=self.next_message)
-                await self._replica.append(self._replicated_lsn, [saved])
-                await self._replica.let_go(saved)
+                await self._unless_ended(self._replica.append(self._replicated_lsn, [saved]))
+                named = self._replica.last
+            await self._unless_ended(self._replica.let_go(saved, named))
         except (TakenOver, GivenUp, Away) as error:
             log.warning("a snapshot at position %d is not in the log: %s", lsn, error)
 
@@ -81,8 +90,6 @@ class ReplicatedCommit(GroupCommit):
         """Replicate nothing more, not even what is on its way. `close` still must be called."""
         if not self._ended:  # as it is once it was closed
             self._end(GivenUp(why))
-            if self._task is not None:
-                self._task.cancel()
 
     async def close(self) -> None:
         """As in GroupCommit; after `give_up` what is queued goes to the local journal only, which nobody reads."""
@@ -99,12 +106,32 @@ class ReplicatedCommit(GroupCommit):
 
     async def _until_idle(self) -> None:
         while (task := self._task) is not None:
-            if self._ended:
-                task.cancel()  # again: the client passes over a cancelling that meets it at certain places
-            await asyncio.wait([task], timeout=1.0)
+            await asyncio.wait([task])
+
+    async def _unless_ended(self, call: Coroutine[Any, Any, Result]) -> Result:
+        """What it returns. Once this ends it is left alone: the client passes over some cancellings. Raises GivenUp."""
+        task, stop = asyncio.ensure_future(call), asyncio.ensure_future(self._stop.wait())
+        try:
+            await asyncio.wait([task, stop], return_when=asyncio.FIRST_COMPLETED)
+        finally:
+            stop.cancel()
+            if not task.done():
+                self._left.add(task)
+                task.add_done_callback(self._forget)
+                task.cancel()
+        if task in self._left:
+            raise GivenUp("the owner stops")
+        return task.result()
+
+    def _forget(self, task: asyncio.Future[Any]) -> None:
+        self._left.discard(task)
+        if not task.cancelled():
+            task.exception()  # looked at, so that asyncio does not report it as forgotten
 
     def _end(self, error: Exception) -> None:
         self._ended = True
+        self._stop.set()
+        self._replica.give_up()
         self._bell.ring()
         self._on_failed(error)
 
@@ -115,14 +142,18 @@ class ReplicatedCommit(GroupCommit):
     async def _run(self) -> None:
         loop = asyncio.get_running_loop()
         try:
-            while self._wanted:
+            while self._wanted and not self._ended:
                 self._wanted = False
                 async with self._writing:
                     begin_lsn, self._next_lsn = self._next_lsn, self._journal.next_lsn
                     entries, self._entries = self._entries, []
-                    await loop.run_in_executor(self._worker, self._journal.flush)
+                    flushing = loop.run_in_executor(self._worker, self._journal.flush)
+                    try:
+                        if entries:
+                            await self._unless_ended(self._replica.append(begin_lsn, entries))
+                    finally:
+                        await flushing
                     if entries:
-                        await self._replica.append(begin_lsn, entries)
                         self._replicated_lsn = self._next_lsn
                         self._note_messages(entries)
                 if entries:
@@ -130,10 +161,8 @@ class ReplicatedCommit(GroupCommit):
                     self._on_durable(self._replicated_lsn)
                 if self._journal.lacks_spare:
                     self._worker.submit(self._journal.replenish)
-        except asyncio.CancelledError:
-            if not self._ended:
-                raise
         except Exception as error:
-            self._end(error)
+            if not self._ended:
+                self._end(error)
         finally:
             self._task = None

@@ -84,6 +84,10 @@ class Group(msgspec.Struct, frozen=True, array_like=True):
         return self.lsn + sum(frame_bytes(e.body_bytes) for e in self.entries if e.body_bytes is not None)
 
 
+class _Head(msgspec.Struct, frozen=True, array_like=True):
+    format: int
+
+
 class Origin(NamedTuple):
     """Where an arrival comes from: the message, and why it goes to quarantine as a whole if it does."""
 
@@ -101,6 +105,7 @@ class Placed:
 
 _pack = msgspec.msgpack.Encoder().encode
 _unpack = msgspec.msgpack.Decoder(Group).decode
+_unpack_head = msgspec.msgpack.Decoder(_Head).decode  # of any format: the rest is passed over
 
 
 def entry_of(kind: int, parts: Sequence[Buffer], origin: Origin | None) -> Whole | Taken:
@@ -127,11 +132,12 @@ def encode(group: Group) -> bytes:
 def decode(data: Buffer) -> Group:
     """The group in a message of the log. Raises ValueError where it is none, or of a newer program."""
     try:
-        group = _unpack(data)
-    except msgspec.DecodeError as error:
+        found = _unpack_head(data).format
+        group = _unpack(data) if found <= FORMAT else None
+    except (msgspec.DecodeError, UnicodeDecodeError) as error:
         raise ValueError(f"not a group of a partition's log: {error}") from error
-    if group.format != FORMAT:
-        raise ValueError(f"format {group.format} of the log is newer than this program (it reads {FORMAT})")
+    if group is None:
+        raise ValueError(f"format {found} of the log is newer than this program (it reads {FORMAT})")
     return group
 
 

@@ -20,14 +20,15 @@ from .link import Away
 from .status import GIVING_BACK, OWNED, TAKING_OVER, PartitionStatus, Progress, progress_of
 
 log = logging.getLogger(__name__)
-RENEW_SHARE = 1 / 3  # of the lease, between two renewals
-RETRY_SHARE = 1 / 15  # of the lease, after a renewal that was not answered: 1 s of 15
+RENEW_SHARE = 1 / 5  # of the lease, between two renewals; see leases.MARGIN_SHARE
+RETRY_SHARE = 1 / 30  # of the lease, after a renewal that was not answered: 0.5 s of 15
 
 
 class Owner(Protocol):
     """What runs a partition while this instance owns it."""
 
     ended: asyncio.Event  # set once it ended by itself, for example because its log was taken over
+    why: str  # what happened then
 
     async def stop(self, *, drain: bool) -> None:
         """End it: with `drain` after what it has begun is durable and delivered, else at once, leaving all as it is.
@@ -36,7 +37,10 @@ class Owner(Protocol):
         """
 
     def status(self) -> dict[str, object]:
-        """behind_messages (int or None), watermark (RFC 3339 or None), watermark_age_s (float or None)."""
+        """behind_messages (int or None), watermark (RFC 3339 or None), watermark_age_s (float or None).
+
+        And words: what hinders it now, nothing where all is well.
+        """
 
 
 Start = Callable[[Partition, Held], Awaitable[Owner]]
@@ -64,6 +68,7 @@ class Holding:
         self._value, self._start, self._leases, self._lease_s = value, start, leases, lease_s
         self.state = TAKING_OVER
         self.failure = self.lost = ""
+        self.is_passing = False  # it failed for want of an answer of the brokers
         self.owned_s: float | None = None  # since when it is owned, on the monotonic clock
         self.asked = asyncio.Event()  # to give it back, drained
         self.hurry = asyncio.Event()  # to drain no longer
@@ -112,7 +117,7 @@ class Holding:
         error = starting.exception()
         if error is None:
             return starting.result()
-        self.failure = str(error) or type(error).__name__
+        self.failure, self.is_passing = str(error) or type(error).__name__, isinstance(error, Away)
         if not isinstance(error, StrandlineError):
             self.failure = f"an unforeseen error: {self.failure}"
             log.error("%s-%d: it could not be taken over", *self.partition, exc_info=error)
@@ -128,7 +133,7 @@ class Holding:
             finally:
                 await ended(gone)
             if owner.ended.is_set():
-                self.failure = "it ended by itself"
+                self.failure = f"it ended by itself: {owner.why}" if owner.why else "it ended by itself"
         self.state = GIVING_BACK
         drained = False
         if self.owned_s is not None and not keeping.done() and not owner.ended.is_set():
@@ -170,16 +175,29 @@ class Holding:
             except LeaseLost as error:
                 self.lost = str(error)
                 return
-            except (StrandlineError, TimeoutError):
+            except StrandlineError:
                 pause_s = self._lease_s * RETRY_SHARE
         self.lost = "its lease could not be renewed in time"
 
     async def _renew(self) -> None:
+        """Not a moment longer than the lease is valid.
+
+        nats-py swallows a cancelling that comes while it flushes, so a request that hangs is left to its own timeout.
+        """
         leases = self._leases()
         if leases is None:
             raise Away("there is no connection")
-        async with asyncio.timeout(max(0.0, self.held.valid_until_s - time.monotonic())):
-            await leases.renew(self.held, self._value)
+        renewing = asyncio.ensure_future(leases.renew(self.held, self._value))
+        try:
+            await asyncio.wait({renewing}, timeout=max(0.0, self.held.valid_until_s - time.monotonic()))
+        except asyncio.CancelledError:
+            await ended(renewing)  # nothing else is asked about the lease meanwhile
+            raise
+        if renewing.done():
+            return renewing.result()
+        renewing.add_done_callback(lambda done: done.cancelled() or done.exception())
+        renewing.cancel()
+        raise LeaseLost("its lease could not be renewed in time")
 
     async def _give_back(self) -> None:
         leases = self._leases()

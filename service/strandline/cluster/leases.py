@@ -26,19 +26,25 @@ from ..nats_client import NOT_THERE, Client, words_of
 from .balance import Partition
 from .link import Away
 
-# Validity ends a fifth of the lease before the entry can: in this time an owner that learns nothing any more must have
-# stopped. 3 s of 15: a loop that lags, a processor that is taken away, two clocks that run at different rates (500 ppm
-# at most, 8 ms of 15 s). Renewing at a third leaves 7 s to try again, as long as a change of leader takes (5-7 s).
-MARGIN_SHARE = 0.2
-# An answer is waited for so long: 2.5 s of 15, so that one that is lost leaves time for two more tries.
-ANSWER_SHARE = 1 / 6
+# Validity ends a tenth of the lease before the entry can: in this time an owner that learns nothing any more must have
+# stopped. 1.5 s of 15: a loop that lags, a processor that is taken away, clocks that run at different rates (500 ppm at
+# most, 8 ms of 15 s). Renewing at a fifth leaves 10.5 s to try again: of three brokers the leader was killed, and after
+# 4 to 8 s all leases were renewed.
+MARGIN_SHARE = 0.1
+# An answer is waited for so long: 1.5 s of 15. What is asked while there is no leader is lost, and must be asked again.
+ANSWER_SHARE = 0.1
 ANSWER_AT_LEAST_S, ANSWER_AT_MOST_S = 0.3, 2.5
 MAKE_WITHIN_S = 5.0  # a bucket of three replicas must elect a leader first
 VALUE_BYTES_AT_MOST = 512 * 1024  # of an entry: the status of an instance with some 2,000 partitions
-TRIES = 2  # of one call, where the entry turns out to be ours at another revision than we knew
+NO_STREAM = 10059  # the server's error code
+TRIES = 2  # of one call, where the entry turns out to be ours still; compare-and-set makes the second one safe
 _INSTANCE, _OWNER = "instance.", "owner."
 _KEY = re.compile(r"[A-Za-z0-9_=/-]+(?:\.[A-Za-z0-9_=/-]+)*", re.ASCII)
 _TROUBLE = (APIError, *NOT_THERE)
+
+
+class BucketGone(Away):
+    """There is no bucket any more: `open` makes it anew."""
 
 
 class LeaseLost(StrandlineError):
@@ -91,29 +97,34 @@ def owner_key(partition: Partition) -> str:
 class Leases:
     """The bucket `{name}-leases`. Lives on one event loop, as long as its connection."""
 
-    def __init__(self, client: Client, bucket: KeyValue, name: str, lease_s: float, clock: Callable[[], float]) -> None:
-        """Use `open`."""
-        self._client, self._bucket, self.lease_s, self._clock = client, bucket, lease_s, clock
+    def __init__(
+        self, client: Client, name: str, lease_s: float, *, clock: Callable[[], float] = time.monotonic
+    ) -> None:
+        """Over a bucket that is there and was looked at before; nothing is asked. `clock` gives monotonic seconds.
+
+        After a leader is lost, questions about the bucket are answered last of all, and leases must be renewed first.
+        """
+        self._client, self.lease_s, self._clock = client, lease_s, clock
         self._stream, self._prefix = f"KV_{name}-leases", f"$KV.{name}-leases."
         self._jetstream = client.jetstream(timeout=answer_within_s(lease_s))
+        self._bucket = KeyValue(f"{name}-leases", self._stream, self._prefix, self._jetstream, direct=True)
         self._seen: dict[str, tuple[int, float]] = {}  # key -> revision, and when it was seen first
 
     @classmethod
     async def open(
         cls, client: Client, name: str, lease_s: float, replicas: int, *, clock: Callable[[], float] = time.monotonic
     ) -> Self:
-        """Find the bucket or make it. `clock` gives monotonic seconds.
+        """Find the bucket or make it.
 
         Raises Away; StrandlineError where the bucket is there and made otherwise, or cannot be made.
         """
         try:
             await _see_to_bucket(client.jetstream(timeout=MAKE_WITHIN_S), f"{name}-leases", lease_s, replicas)
-            bucket = await client.jetstream(timeout=answer_within_s(lease_s)).key_value(f"{name}-leases")
         except NOT_THERE as error:
             if isinstance(error, APIError) and error.code not in (None, 503):
                 raise StrandlineError(f"the lease bucket {name}-leases cannot be made: {words_of(error)}") from error
             raise Away(f"the brokers do not answer for the lease bucket {name}-leases: {words_of(error)}") from error
-        return cls(client, bucket, name, lease_s, clock)
+        return cls(client, name, lease_s, clock=clock)
 
     async def take(self, key: str, value: bytes) -> Held | None:
         """Take it, or None where somebody has it. `value` must be of this taking alone: by it ours is told from others.
@@ -203,16 +214,17 @@ class Leases:
         if found is None or found[0] not in held.sent:
             held.valid_until_s = -math.inf
             raise LeaseLost(f"lease {held.key} is {'nobody' if found is None else 'somebody else'}'s") from error
-        if found[1] == held.revision or not again:
-            held.revision = found[1]
-            raise Away(f"lease {held.key} was not renewed: {words_of(error)}") from error
         held.revision = found[1]
+        if not again:
+            raise Away(f"lease {held.key} was not renewed: {words_of(error)}") from error
 
     async def _read(self, key: str) -> tuple[bytes, int] | None:
         """Value and revision, from the leader (a replica may lag behind it); None where nobody has it. Raises Away."""
         try:
             message = await self._jetstream.get_msg(self._stream, subject=self._prefix + key, direct=False)
-        except NotFoundError:
+        except NotFoundError as error:
+            if error.err_code == NO_STREAM:
+                raise BucketGone(f"the lease bucket is gone: {words_of(error)}") from error
             return None
         except _TROUBLE as error:
             raise Away(f"lease {key} cannot be read: {words_of(error)}") from error

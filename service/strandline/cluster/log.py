@@ -8,30 +8,38 @@ that is the fence. It does not rest on clocks or leases.
 from __future__ import annotations
 
 import asyncio
-from collections.abc import Sequence
+import contextlib
+import itertools
+from collections.abc import Awaitable, Callable, Sequence
 from dataclasses import dataclass, field
-from typing import Any
+from functools import partial
+from typing import Any, TypeVar
 
 from nats.js import api
 from nats.js.errors import APIError, NotFoundError
 
 from ..core.effects import Buffer
-from ..core.records import IdleRecord, encode_small
+from ..core.records import SourcesRecord, encode_small
 from ..errors import StrandlineError
 from ..nats_client import NOT_THERE, words_of
 from .entries import Entry, Group, Saved, Taken, decode, encode, entry_of, groups_of, newest_saved
 from .link import Away, Link, Reader, everything
 
+Result = TypeVar("Result")
 LOG_MESSAGE_BYTES = 512 * 1024  # of one message of the log, and of a part of a snapshot
 WRONG_LAST = frozenset({10071, 10164})  # error codes of the server for an expected last sequence that is not the last
 FULL = frozenset({10077})  # the stream has its maximum of bytes
-SNAPSHOT_HEADER = "Strandline-Snapshot"  # owner and position: parts of two owners may lie among each other
+SNAPSHOT_HEADER = "Strandline-Snapshot"  # owner, position, try and number of the part: those of several may be mixed
 TRY_AGAIN_S = 0.2
-FENCE_TRIES = 20
+TRIES = 20
 
 
 class TakenOver(StrandlineError):
     """Another instance has written to the partition's log: this one owns it no more."""
+
+
+class _Shifted(StrandlineError):
+    """What was read does not fit together: it was shortened meanwhile, or a broker that lags behind gave it."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -91,10 +99,23 @@ async def make_stream(link: Link, cluster: str, replicas: int, bytes_at_most: in
         except NotFoundError:
             await stream.add_stream(wanted)
             return
+        if fault := _unfit(found, wanted):
+            raise StrandlineError(f"stream {name} is there already but {fault}: mend it, or name the cluster otherwise")
         if found.num_replicas != replicas or found.max_bytes != bytes_at_most:
             await stream.update_stream(found.evolve(num_replicas=replicas, max_bytes=bytes_at_most))
     except (APIError, *NOT_THERE) as error:
-        raise Away(f"stream {name} could not be made with {replicas} replicas: {words_of(error)}") from error
+        raise link.away(f"stream {name} could not be made with {replicas} replicas", error) from error
+
+
+def _unfit(found: api.StreamConfig, wanted: api.StreamConfig) -> str:
+    """Why a stream must not hold logs; nothing where it may."""
+    if found.subjects != wanted.subjects:
+        return f"takes the subjects {found.subjects}, not {wanted.subjects}"
+    if found.retention != wanted.retention or found.discard != wanted.discard:
+        return f"has retention {found.retention} and discards {found.discard} messages: both lose parts of a log"
+    if any((limit or 0) > 0 for limit in (found.max_age, found.max_msgs, found.max_msgs_per_subject)):
+        return "deletes messages by age or number, which loses parts of a log"
+    return ""
 
 
 class PartitionLog:
@@ -105,61 +126,115 @@ class PartitionLog:
         self._last = 0  # sequence of the subject's last message
         self._sequences: list[tuple[int, int]] = []  # of each message: its sequence, and where its group ends
         self.words = ""  # what hinders it now
+        self._given_up = False
 
     # ---- reading, and taking it over -----------------------------------------------------------------------------
 
     async def take_over(self) -> Contents:
-        """Read the log and put this owner's first group there, so that no former owner can write any more.
+        """Put this owner's first group behind the last, so that no former owner can write any more; read what is there.
 
-        Raises Away, StrandlineError.
+        In this order, so that a former owner that still writes is overtaken by one short step, not by a long read.
+        Raises Away, TakenOver, StrandlineError.
         """
-        for _ in range(FENCE_TRIES):
-            contents = await self._read()
-            kind, body = encode_small(IdleRecord(0))  # changes nothing; a record, so that the journal has one
-            group = groups_of(self._fence, contents.end_lsn, [entry_of(kind, [body], None)], LOG_MESSAGE_BYTES)[0]
+        for _ in range(TRIES):
+            if await self._put_fence():
+                break
+            await asyncio.sleep(TRY_AGAIN_S)
+        else:
+            raise Away(f"the log {self._place.groups} does not stand still: another instance writes to it")
+        told = ""
+        for _ in range(TRIES):
             try:
-                await self._store(group)
-            except TakenOver:
-                continue  # the former owner still writes, or what was read was not the last
-            contents.groups.append(group)
-            contents.sequences.append(self._last)
-            return contents
-        raise Away(f"the log {self._place.groups} does not stand still: another instance writes to it")
+                return await self._read()
+            except _Shifted as error:
+                told = str(error)
+                await asyncio.sleep(TRY_AGAIN_S)
+        raise StrandlineError(told)
+
+    async def _put_fence(self) -> bool:
+        """Store a group of one's own behind the last one; whether that was still the last one then."""
+        last = await self._last_message()
+        self._last = end_lsn = 0
+        if last is not None:
+            self._last, end_lsn = last.seq or 0, self._decoded(last.seq or 0, last.data or b"").end_lsn
+        kind, body = encode_small(SourcesRecord(0, []))  # changes nothing; a record, so that the journal has one
+        group = groups_of(self._fence, end_lsn, [entry_of(kind, [body], None)], LOG_MESSAGE_BYTES)[0]
+        try:
+            await self._store(group)
+        except TakenOver:
+            return False
+        return True
+
+    async def _last_message(self) -> api.RawStreamMsg | None:
+        try:
+            stream = await self._link.jetstream()
+            return await stream.get_last_msg(self._place.stream, self._place.groups)
+        except NotFoundError:
+            return None
+        except (APIError, *NOT_THERE) as error:
+            raise self._link.away(f"the log {self._place.groups} does not answer", error) from error
+
+    def _decoded(self, sequence: int, data: bytes) -> Group:
+        try:
+            return decode(data)
+        except ValueError as error:
+            raise StrandlineError(
+                f"message {sequence} of stream {self._place.stream}, subject {self._place.groups}: {error}. If "
+                "something else than Strandline wrote it, remove it from the stream; nothing else may write there"
+            ) from error
 
     async def _read(self) -> Contents:
-        contents = Contents()
-        async for message in everything(Reader(self._link, self._place.stream, self._place.groups), 1):
-            try:
-                contents.groups.append(decode(message.data))
-            except ValueError as error:
-                raise StrandlineError(
-                    f"message {message.metadata.sequence.stream} of stream {self._place.stream}: {error}"
-                ) from error
-            contents.sequences.append(message.metadata.sequence.stream)
+        """All groups up to this owner's own. Raises _Shifted where some were deleted meanwhile or are not there yet."""
+        contents, expected = Contents(), None
+        reader = Reader(self._link, self._place.stream, self._place.groups)
+        async with contextlib.aclosing(everything(reader, 1)) as messages:
+            async for message in messages:
+                sequence = message.metadata.sequence.stream
+                if sequence > self._last:
+                    raise TakenOver(f"the log {self._place.groups} was taken over by another instance")
+                group = self._decoded(sequence, message.data)
+                if expected not in (None, group.lsn):
+                    raise _Shifted(
+                        f"the log {self._place.groups} goes on at position {group.lsn} with message {sequence}, but "
+                        f"what was read before ends at {expected}: messages of stream {self._place.stream} are missing"
+                    )
+                expected = group.end_lsn
+                contents.groups.append(group)
+                contents.sequences.append(sequence)
+        if not contents.sequences or contents.sequences[-1] != self._last:
+            raise _Shifted(f"the log {self._place.groups} was read without message {self._last}, which is its last")
+        await self._find_snapshot(contents)
         ends = [group.end_lsn for group in contents.groups]
         self._sequences = list(zip(contents.sequences, ends, strict=True))
-        self._last = contents.sequences[-1] if contents.sequences else 0
-        contents.saved = newest_saved(contents.groups)
-        if contents.saved is not None:
-            contents.snapshot = await self._read_snapshot(contents.saved)
-        elif contents.groups and contents.groups[0].lsn > 0:
-            raise StrandlineError(f"the log {self._place.groups} begins in the middle and names no snapshot")
         return contents
+
+    async def _find_snapshot(self, contents: Contents) -> None:
+        saved, begin_lsn = newest_saved(contents.groups), contents.groups[0].lsn
+        needed_lsn = 0 if saved is None else min(saved.lsn, saved.needed_lsn)
+        if begin_lsn > needed_lsn:
+            raise _Shifted(
+                f"the log {self._place.groups} begins at position {begin_lsn}, but {needed_lsn} is needed: messages of "
+                f"stream {self._place.stream} are missing"
+            )
+        if saved is not None:
+            contents.saved, contents.snapshot = saved, await self._read_snapshot(saved)
 
     async def _read_snapshot(self, saved: Saved) -> bytes:
         parts: list[bytes] = []
         name = ""
-        async for message in everything(Reader(self._link, self._place.stream, self._place.snapshots), saved.sequence):
-            told = (message.headers or {}).get(SNAPSHOT_HEADER, "")
-            name = name or told
-            if told != name:
-                continue  # of a former owner that did not know yet that it was one
-            parts.append(message.data)
-            if len(parts) == saved.parts:
-                return b"".join(parts)
-        raise StrandlineError(
+        reader = Reader(self._link, self._place.stream, self._place.snapshots)
+        async with contextlib.aclosing(everything(reader, saved.sequence)) as messages:
+            async for message in messages:
+                told, _, number = (message.headers or {}).get(SNAPSHOT_HEADER, "").rpartition(" ")
+                name = name or told
+                if told != name or number != str(len(parts)):
+                    continue  # of a former owner that did not know yet that it was one, or of another try
+                parts.append(message.data)
+                if len(parts) == saved.parts:
+                    return b"".join(parts)
+        raise _Shifted(
             f"the snapshot at position {saved.lsn} of the log {self._place.groups} has only {len(parts)} of its "
-            f"{saved.parts} parts"
+            f"{saved.parts} parts: messages of stream {self._place.stream} are missing"
         )
 
     # ---- writing -------------------------------------------------------------------------------------------------
@@ -167,35 +242,46 @@ class PartitionLog:
     async def append(self, lsn: int, entries: Sequence[Entry]) -> None:
         """Store entries behind what is there, the first one's record being at `lsn`; returns once they are replicated.
 
-        Tried until it succeeds: cancel it to give up. Raises TakenOver; ValueError for a record that is too large.
+        Tried until it succeeds or is given up. Raises TakenOver; Away once it was given up; ValueError for a record
+        that is too large.
         """
         for group in groups_of(self._fence, lsn, entries, LOG_MESSAGE_BYTES):
-            while True:
-                try:
-                    await self._store(group)
-                    self.words = ""
-                    break
-                except Away as error:
-                    self.words = str(error)
-                    await asyncio.sleep(TRY_AGAIN_S)
+            await self._until_done(partial(self._store, group))
+
+    async def _until_done(self, work: Callable[[], Awaitable[Result]]) -> Result:
+        while not self._given_up:
+            try:
+                done = await work()
+                self.words = ""
+                return done
+            except Away as error:
+                self.words = str(error)
+                await asyncio.sleep(TRY_AGAIN_S)
+        raise Away(f"the log {self._place.groups} was given up")
+
+    def give_up(self) -> None:
+        """Store nothing more. What is under way may still arrive; a cancelling alone does not do: the client passes
+        over some.
+        """
+        self._given_up = True
+
+    @property
+    def last(self) -> int:
+        """Sequence of the message that was stored last."""
+        return self._last
 
     async def store_snapshot(self, lsn: int, parts: Sequence[Buffer], needed_lsn: int) -> Saved:
         """Store what stands for everything before `lsn`. It counts once the entry that is returned is appended.
 
-        Tried until it succeeds, beside appends. A part that a failed try left behind is never named by an entry.
+        Tried until it succeeds or is given up, beside appends. A part that a failed try left behind is never named by
+        an entry, and one that arrives late is told by its try. Raises Away once it was given up.
         """
-        body = b"".join(parts)
-        while True:
-            try:
-                first, count = await self._store_parts(body, f"{self._fence}/{lsn}")
-                return Saved(lsn, first, count, needed_lsn)
-            except Away as error:
-                self.words = str(error)
-                await asyncio.sleep(TRY_AGAIN_S)
+        body, tries = b"".join(parts), itertools.count()
+        first, count = await self._until_done(lambda: self._store_parts(body, f"{self._fence}/{lsn}/{next(tries)}"))
+        return Saved(lsn, first, count, needed_lsn)
 
-    async def let_go(self, saved: Saved) -> None:
-        """Delete what nobody needs once this entry is the last one that was appended. Raises Away: it can wait."""
-        named = self._last
+    async def let_go(self, saved: Saved, named: int) -> None:
+        """Delete what nobody needs once this entry stands in message `named`. Raises Away: it can wait."""
         needed_lsn = min(saved.lsn, saved.needed_lsn)
         kept = next((sequence for sequence, end_lsn in self._sequences if end_lsn > needed_lsn), named)
         keep = min(kept, named)
@@ -204,7 +290,7 @@ class PartitionLog:
             await stream.purge_stream(self._place.stream, subject=self._place.groups, seq=keep)
             await stream.purge_stream(self._place.stream, subject=self._place.snapshots, seq=saved.sequence)
         except (APIError, *NOT_THERE) as error:
-            raise Away(f"the log {self._place.groups} cannot be shortened: {words_of(error)}") from error
+            raise self._link.away(f"the log {self._place.groups} cannot be shortened", error) from error
         self._sequences = [each for each in self._sequences if each[0] >= keep]
 
     async def _store(self, group: Group) -> None:
@@ -221,7 +307,7 @@ class PartitionLog:
                 raise Away(f"the log {self._place.groups} takes nothing: {words_of(error)}{full}") from error
             sequence = await self._stored_before(data)
         except NOT_THERE as error:
-            raise Away(f"the log {self._place.groups} does not answer: {words_of(error)}") from error
+            raise self._link.away(f"the log {self._place.groups} does not answer", error) from error
         self._last = sequence
         self._sequences.append((sequence, group.end_lsn))
 
@@ -230,11 +316,12 @@ class PartitionLog:
 
         A group names its owner and its place in the journal, so no other message is equal to it.
         """
-        try:
-            stream = await self._link.jetstream()
-            last = await stream.get_last_msg(self._place.stream, self._place.groups)
-        except (APIError, *NOT_THERE) as error:
-            raise Away(f"the log {self._place.groups} does not answer: {words_of(error)}") from error
+        last = await self._last_message()
+        if last is None:
+            raise Away(
+                f"the log {self._place.groups} has lost its messages: somebody deleted them or the stream. Nothing is "
+                "stored any more, so that nothing goes out twice; stop the cluster and see the runbook"
+            )
         if last.data != data or last.seq is None:
             raise TakenOver(f"the log {self._place.groups} was taken over by another instance")
         return last.seq
@@ -247,9 +334,12 @@ class PartitionLog:
             for begin in range(0, len(body), LOG_MESSAGE_BYTES):
                 part = body[begin : begin + LOG_MESSAGE_BYTES]
                 answer = await stream.publish(
-                    self._place.snapshots, part, stream=self._place.stream, headers={SNAPSHOT_HEADER: name}
+                    self._place.snapshots,
+                    part,
+                    stream=self._place.stream,
+                    headers={SNAPSHOT_HEADER: f"{name} {count}"},
                 )
                 first, count = first or answer.seq, count + 1
         except (APIError, *NOT_THERE) as error:
-            raise Away(f"the log {self._place.snapshots} takes nothing: {words_of(error)}") from error
+            raise self._link.away(f"the log {self._place.snapshots} takes nothing", error) from error
         return first, count

@@ -10,6 +10,7 @@ import asyncio
 import contextlib
 import logging
 import random
+import re
 import time
 import uuid
 from collections.abc import Callable, Iterable
@@ -23,19 +24,22 @@ from ..errors import StrandlineError
 from ..nats_client import Client, connect, disconnect
 from ..tasks import ended, first_of
 from .balance import Decision, Partition, decide
+from .causes import AWAY, BARRED, NAME, Cause, of_leases, of_settings, of_takeovers
 from .holding import RENEW_SHARE, Holding, Owner, Start
-from .leases import Held, LeaseLost, Leases, Look, instance_key, owner_key
+from .leases import BucketGone, Held, LeaseLost, Leases, Look, instance_key, owner_key
+from .link import Away
+from .noticed import Noticed
 from .status import OWNED, Ownership, Status, cluster_document, encoded, feeds_of, owner_in, status_in
+from .troubles import Troubles
 
 log = logging.getLogger(__name__)
 LOOK_AT_MOST_S, LOOK_AT_LEAST_S, LOOK_SHARE = 1.0, 0.1, 1 / 15  # how often it looks: each second with a lease of 15 s
 TAKES_AT_A_LOOK = 64  # taken one after the other; the heartbeat must not wait for a thousand of them
 CONNECT_BASE_S, CONNECT_AT_MOST_S = 0.2, 5.0  # backoff; with a lease of 15 s there are 7 s to be connected again
-START_BASE_S, START_AT_MOST_S = 1.0, 300.0  # backoff after an owner that could not be started
-STEADY_S = 60.0  # an owner that ran so long is no repeat of an earlier failure
 STOP_WITHIN_S = 20.0
+MISSES_AT_MOST = 3  # turns that failed in a row, before another broker is tried
+CAUSES_AT_MOST = 16  # that are logged of one absence
 NAMESAKE_LEASES = 1.5  # a heartbeat that is still there after so many leases is being renewed
-WORDS_OF_TROUBLE_AT_MOST = 3  # partitions named in one sentence
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,15 +52,7 @@ class ClusterSettings:
     access: BrokerAccess
     replicas: int
     lease_s: float
-
-
-@dataclass(frozen=True, slots=True)
-class _Trouble:
-    """An owner that could not be started, or that ended by itself; `until_s` (monotonic) it is not tried again."""
-
-    attempts: int
-    until_s: float
-    words: str
+    digest: str = ""  # of what decides how messages are read, to be compared with the others'
 
 
 class Member:
@@ -82,51 +78,59 @@ class Member:
         self._look_every_s = min(LOOK_AT_MOST_S, max(LOOK_AT_LEAST_S, settings.lease_s * LOOK_SHARE))
         self._holdings: dict[Partition, Holding] = {}  # in the order in which they were taken
         self._holders: dict[Partition, asyncio.Task[None]] = {}
-        self._troubles: dict[Partition, _Trouble] = {}
-        self._failures = 0  # in a row, of whatever partition
+        self._troubles = Troubles(self._random)
         self._work: asyncio.Task[None] | None = None
         self._leaving, self._soon = asyncio.Event(), asyncio.Event()  # `soon`: look now
+        self._over = self._bucket_seen = False
+        self._misses = 0
         self._leases: Leases | None = None
         self._look: Look | None = None
         self._others: dict[str, Status] = {}  # as they were seen
         self._heartbeat: Held | None = None
         self._beaten: tuple[Any, ...] = ()  # what the last heartbeat said that others act on
         self._beat_due_s = 0.0
-        self._away = "it has not connected yet"
+        self._away, self._why = "it has not connected yet", AWAY
+        self._logged: set[str] = set()  # causes of this absence
         self._refused_s: float | None = None  # since when the heartbeat's name is somebody else's
         self._namesake = ""
-        self._parted = ""  # what was stopped because its lease could not be renewed
+        self._parted: list[str] = []  # what was stopped because its lease could not be renewed
+        self.digest = settings.digest
+        self.noticed = Noticed(self._partitions, settings.lease_s, time.monotonic())
 
     # ---- what observers see -----------------------------------------------------------------------------------------
 
     @property
     def connected(self) -> bool:
         """Whether the brokers answer."""
-        return self._leases is not None
+        return not self._away
 
     @property
     def words(self) -> str:
         """What is wrong and what comes of it; empty where nothing is."""
-        found = [self._words_away(), self._parted, self._namesake]
-        if trouble := self._words_of_trouble():
-            found.append(f"not taken over: {trouble}")
-        for name, status in sorted(self._others.items()):
-            if status.trouble:
-                found.append(f"{name} could not take over {status.trouble}")
-            if status.feeds != feeds_of(self._partitions):
-                found.append(f"{name} has other feeds or counts of partitions: give all instances one configuration")
-        return "; ".join(filter(None, found))
+        return "; ".join(cause.words for cause in self.causes())
+
+    def causes(self) -> list[Cause]:
+        """What is wrong, one by one. Of the others nothing while the brokers do not answer: what was seen is old."""
+        found = [Cause(NAME, self._namesake)] if self._namesake else []
+        if not self.connected:
+            ends_s = [holding.held.valid_until_s - time.monotonic() for holding in self._holdings.values()]
+            away, leases = Cause(self._why, self._away), of_leases(min(ends_s, default=None), self._parted)
+            return [away, *leases, *found]
+        takeovers = of_takeovers(self._settings.instance, self._words_of_trouble(), self._others)
+        return [*found, *takeovers, *of_settings(self._status(), self._others)]
 
     def document(self) -> dict[str, Any]:
         """GET /v1/cluster. Ages are counted on the monotonic clock, up to now."""
-        settings = self._settings
+        settings, now_s = self._settings, time.monotonic()
+        document = cluster_document(settings.instance, self._status(), self._look, self._partitions, now_s)
         return {
             "name": settings.name,
             "instance": settings.instance,
             "lease_s": settings.lease_s,
             "connected": self.connected,
             "words": self.words,
-            **cluster_document(settings.instance, self._status(), self._look, self._partitions, time.monotonic()),
+            "causes": [cause._asdict() for cause in self.causes()],
+            **self.noticed.added(document, now_s),
         }
 
     def check(self) -> None:
@@ -136,15 +140,17 @@ class Member:
         for partition, holding in self._holdings.items():
             assert holding.partition == partition
             holding.check()
-        assert all(trouble.attempts > 0 and trouble.words for trouble in self._troubles.values())
+        self.noticed.check()
+        self._troubles.check()
         assert self._heartbeat is None or self._heartbeat.key == self._key
         if self._leaving.is_set():
             assert all(holding.asked.is_set() for holding in self._holdings.values())
 
     # ---- beginning and ending ---------------------------------------------------------------------------------------
 
-    def begin(self) -> None:
-        """Begin to connect and to take; returns at once."""
+    def begin(self, listen: str = "") -> None:
+        """Begin to connect and to take; returns at once. `listen`: where this instance is reached, if known by now."""
+        self._listen = listen or self._listen
         self._work = asyncio.create_task(self._connections(), name=f"cluster {self._settings.instance}")
 
     async def stop(self, within_s: float = STOP_WITHIN_S) -> None:
@@ -165,6 +171,7 @@ class Member:
             if slow:
                 await asyncio.wait(slow)
         work, self._work = self._work, None
+        self._over = True  # nats-py swallows a cancelling that comes while it flushes
         await ended(work)
 
     # ---- the connection ---------------------------------------------------------------------------------------------
@@ -173,20 +180,24 @@ class Member:
         """Connect, look and act until that fails, and again. What is owned goes on meanwhile: see `holding`."""
         settings, attempts = self._settings, 0
         at_most_s = min(CONNECT_AT_MOST_S, settings.lease_s / 6)
-        while True:
+        while not self._over:
             client: Client | None = None
             try:
                 client = await connect(settings.urls, settings.access, f"strandline {settings.name}")
-                self._leases = await Leases.open(client, settings.name, settings.lease_s, settings.replicas)
-                while True:
-                    await self._turn(self._leases)
-                    attempts, self._parted = 0, ""
+                if not self._bucket_seen:
+                    await Leases.open(client, settings.name, settings.lease_s, settings.replicas)
+                    self._bucket_seen = True
+                self._leases = Leases(client, settings.name, settings.lease_s)
+                attempts += 1
+                while not self._over:
+                    if await self._answered(client, self._leases):
+                        attempts = 0
                     await first_of(self._soon.wait(), asyncio.sleep(self._look_every_s))
             except StrandlineError as error:
-                self._lost(str(error))
+                self._lost(error, BARRED if client is not None and not isinstance(error, Away) else AWAY)
             except Exception as error:
                 log.exception("cluster %s: an unforeseen error", settings.name)
-                self._lost(f"an unforeseen error: {error or type(error).__name__}")
+                self._lost(error)
             finally:
                 leases, self._leases = self._leases, None
                 if client is not None:
@@ -194,10 +205,38 @@ class Member:
             await asyncio.sleep(backoff_s(self._random, attempts, base_s=CONNECT_BASE_S, at_most_s=at_most_s))
             attempts += 1
 
-    def _lost(self, why: str) -> None:
-        if why != self._away:
-            log.warning("cluster %s: %s", self._settings.name, why)
-        self._away = why
+    async def _answered(self, client: Client, leases: Leases) -> bool:
+        """Whether one turn went well. One or two that did not leave the connection as it is.
+
+        Leases are being renewed over it, and it need not be at fault: a leader may be missing. Raises StrandlineError.
+        """
+        try:
+            await self._turn(leases)
+        except Away as error:
+            self._lost(error)
+            self._misses += 1
+            if not client.is_connected or self._misses >= MISSES_AT_MOST or isinstance(error, BucketGone):
+                self._misses = 0
+                raise
+            return False
+        self._misses, self._away, self._parted = 0, "", []
+        self._logged.clear()
+        return True
+
+    def _lost(self, error: Exception, about: str = AWAY) -> None:
+        why = str(error) if isinstance(error, StrandlineError) else f"an unforeseen error: {error!r}"
+        cause = re.sub(r"\d+", "#", why)
+        if cause not in self._logged and len(self._logged) < CAUSES_AT_MOST:
+            self._logged.add(cause)
+            log.warning("cluster %s: %s: %s. %s", self._settings.name, self._settings.instance, why, self._advice())
+        self._away, self._why = why, about
+        if isinstance(error, BucketGone):
+            self._bucket_seen = False
+
+    def _advice(self) -> str:
+        if self.noticed.ever_joined:
+            return "It tries again by itself; look at the brokers and the way to them"
+        return "It joins by itself once that is mended: look at urls and secrets of [cluster], and at the brokers"
 
     async def _let_go(self, client: Client, leases: Leases | None) -> None:
         """At a stop, the heartbeat is given back last of all."""
@@ -211,14 +250,17 @@ class Member:
 
     async def _turn(self, leases: Leases) -> None:
         self._soon.clear()
+        was_there = self._heartbeat is not None
         await self._beat(leases)
         look = await leases.look()
         me = self._settings.instance
         statuses = {name: status_in(seen) for name, seen in look.instances.items() if name != me}
         self._look, self._others = look, {name: status for name, status in statuses.items() if status is not None}
+        starting = [each for each, holding in self._holdings.items() if holding.owned_s is None]
+        self.noticed.look(look, statuses, self._holdings, me if self._heartbeat is not None else None, starting)
         self._forget_troubles()
-        if self._heartbeat is None or self._leaving.is_set():
-            return
+        if not was_there or self._heartbeat is None or self._leaving.is_set():
+            return  # who has just come waits for one look, so that those who come together see each other first
         unable = {name for name, status in self._others.items() if status.unable}
         decision = decide(
             me,
@@ -265,7 +307,7 @@ class Member:
         for partition in decision.take:
             if taken >= min(decision.take_at_most, TAKES_AT_A_LOOK) or self._leaving.is_set():
                 break
-            if self._rests(partition):
+            if self._troubles.rests(partition, time.monotonic()):
                 continue
             since_ns = self._now_ns()
             value = encoded(Ownership(me, since_ns))
@@ -303,38 +345,21 @@ class Member:
         if holding.lost:
             log.warning("%s: stopped: %s", name, holding.lost)
             if not self.connected:
-                self._parted = ", ".join(filter(None, (self._parted or "stopped, for want of a renewed lease:", name)))
+                self._parted.append(name)
         if holding.failure:
-            self._note(holding)
-
-    def _note(self, holding: Holding) -> None:
-        """Try it again later, and later still if it fails again, or others do."""
-        now_s, before = time.monotonic(), self._troubles.get(holding.partition)
-        attempts = max(before.attempts if before else 0, self._failures) + 1
-        if holding.owned_s is not None and now_s > holding.owned_s + STEADY_S:
-            attempts = 1
-        self._failures = attempts
-        wait_s = backoff_s(self._random, attempts, base_s=START_BASE_S, at_most_s=START_AT_MOST_S)
-        self._troubles[holding.partition] = _Trouble(attempts, now_s + wait_s, holding.failure)
-        log.warning("%s: %s; next try in %.1f s", partition_name(*holding.partition), holding.failure, wait_s)
+            wait_s = self._troubles.note(
+                holding.partition, holding.failure, holding.owned_s, time.monotonic(), is_passing=holding.is_passing
+            )
+            log.warning("%s: %s; not tried again for %.1f s", name, holding.failure, wait_s)
 
     def _forget_troubles(self) -> None:
-        """Of what has run for a while here, and of what others took over once it may be tried here again."""
-        now_s = time.monotonic()
+        now_s, here = time.monotonic(), (None, self._settings.instance)
         for partition, holding in self._holdings.items():
-            if holding.owned_s is not None and now_s > holding.owned_s + STEADY_S:
-                self._troubles.pop(partition, None)
-                self._failures = 0 if not self._troubles else self._failures
-        for partition in list(self._troubles):
-            if not self._rests(partition) and self._owner_of(partition) not in (None, self._settings.instance):
-                del self._troubles[partition]
-
-    def _rests(self, partition: Partition) -> bool:
-        trouble = self._troubles.get(partition)
-        return trouble is not None and time.monotonic() < trouble.until_s
+            self._troubles.steady(partition, holding.owned_s, now_s)
+        self._troubles.elsewhere(lambda partition: self._owner_of(partition) not in here, now_s)
 
     def _unable(self) -> bool:
-        return any(map(self._rests, self._troubles))
+        return self._troubles.unable(time.monotonic())
 
     # ---- what is said -----------------------------------------------------------------------------------------------
 
@@ -347,27 +372,18 @@ class Member:
             self._unable(),
             self._leaving.is_set(),
             self._words_of_trouble(),
+            self.digest,
             tuple(holding.status() for holding in self._holdings.values()),
         )
 
     def _words_of_trouble(self) -> str:
-        """Partitions that nobody owns, or that start here once more, with what went wrong the last time."""
-        found = [
-            f"{partition_name(*partition)}: {trouble.words}"
-            for partition, trouble in self._troubles.items()
-            if self._owner_of(partition) in (None, self._settings.instance)
-            and ((holding := self._holdings.get(partition)) is None or holding.state != OWNED)
-        ]
-        more = len(found) - WORDS_OF_TROUBLE_AT_MOST
-        return ", ".join(found[:WORDS_OF_TROUBLE_AT_MOST]) + (f" and {more} more" if more > 0 else "")
+        return self._troubles.words(self._not_running)
 
-    def _words_away(self) -> str:
-        if self.connected:
-            return ""
-        ends_s = [holding.held.valid_until_s - time.monotonic() for holding in self._holdings.values()]
-        if not ends_s:
-            return self._away
-        return f"{self._away}; what runs here is stopped unless that ends within {max(0.0, min(ends_s)):.0f} s"
+    def _not_running(self, partition: Partition) -> bool:
+        """Whether nobody owns it, or it is being started here."""
+        if (holding := self._holdings.get(partition)) is not None:
+            return holding.state != OWNED
+        return self._owner_of(partition) in (None, self._settings.instance)
 
 
 __all__ = ["ClusterSettings", "Member", "Owner", "Start"]

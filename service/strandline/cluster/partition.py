@@ -28,6 +28,7 @@ from ..journal.journal import Journal
 from ..ports import Clock
 from ..runtime import FeedRuntime
 from ..sinks_of import MakeSink
+from ..tasks import ended_at_last, in_thread, through
 from .commit import ReplicatedCommit
 from .link import Link, Reader
 from .log import PartitionLog, Place, make_stream
@@ -35,6 +36,7 @@ from .rebuilding import Rebuilding
 from .taking import Taking
 
 log = logging.getLogger(__name__)
+FAILING_NS = 5 * 10**9
 STOP_GRACE_S = 5.0  # beyond the time for draining: then what is not in the log is left to the next owner
 
 
@@ -82,10 +84,13 @@ class Partition:
         cluster = ground.cluster
         link = Link(cluster.urls, cluster.access(), f"strandline {cluster.instance} {part.own.name}")
         partition = cls(ground, part, link)
+        taking_over = asyncio.ensure_future(partition._take_over())
         try:
-            await partition._take_over()
+            await asyncio.shield(taking_over)
         except BaseException:
-            await partition.stop(drain=False)
+            # A cancelling may have been passed over on the way: then it was taken over all the same.
+            await ended_at_last(taking_over)
+            await through(asyncio.ensure_future(partition.stop(drain=False)))
             raise
         return partition
 
@@ -96,16 +101,13 @@ class Partition:
         contents = await self._log.take_over()
         disk = LocalDisk(ground.data_dir / "scratch", synced=False)
         folder = ground.data_dir / "feeds" / own.name
-        await asyncio.to_thread(_prepare, ground.data_dir / "scratch" / "feeds" / own.name, folder)
+        await in_thread(lambda: _prepare(self._scratch, folder))
         rebuilding = Rebuilding(own, self._intake, self._link, ground.aside)
         await rebuilding.run(contents, disk)
-        make_commit = partial(self._made_commit, contents.next_message)
         # Opening reads the journal back, which may take a while.
-        self._runtime = await asyncio.to_thread(
-            FeedRuntime, own, folder, disk, ground.clock, self._failed, ground.make, make_commit
-        )
+        await in_thread(lambda: self._make_runtime(folder, disk, contents.next_message))
+        assert self._runtime is not None and self._commit is not None
         await self._runtime.open()
-        assert self._commit is not None
         reader = Reader(self._link, self._intake.stream, self._intake.subjects[0])
         self._taking = Taking(
             self._runtime, self._commit, reader, self._intake, ground.aside, contents.next_message
@@ -120,6 +122,12 @@ class Partition:
             rebuilding.payload_bytes,
         )  # fmt: skip
 
+    def _make_runtime(self, folder: Path, disk: LocalDisk, next_message: int) -> None:
+        make_commit, ground = partial(self._made_commit, next_message), self._ground
+        self._runtime = FeedRuntime(
+            self._part.own, folder, disk, ground.clock, self._failed, ground.make, make_commit
+        )  # fmt: skip
+
     def _made_commit(
         self, next_message: int, journal: Journal, on_durable: Callable[[int], None],
         on_failed: Callable[[Exception], None],
@@ -127,6 +135,10 @@ class Partition:
         self._commit = ReplicatedCommit(journal, on_durable, on_failed, self._log)
         self._commit.next_message = next_message
         return self._commit
+
+    @property
+    def _scratch(self) -> Path:
+        return self._ground.data_dir / "scratch" / "feeds" / self._part.own.name
 
     @property
     def _intake(self) -> JetstreamIntake:
@@ -146,7 +158,8 @@ class Partition:
 
     def _failed(self, name: str, error: Exception) -> None:
         self.why = str(error) or type(error).__name__
-        log.warning("%s: is no longer owned: %s", name, self.why)
+        if not self.stopped:
+            log.warning("%s: is no longer owned: %s", name, self.why)
         self.ended.set()
 
     async def stop(self, *, drain: bool) -> None:
@@ -170,13 +183,18 @@ class Partition:
     async def _close(self, runtime: FeedRuntime, commit: ReplicatedCommit, limit_s: float) -> None:
         if self._closing is None:
             self._closing = asyncio.create_task(runtime.close(limit_s))
-        await asyncio.wait([self._closing], timeout=limit_s + STOP_GRACE_S)
+        if limit_s > 0:
+            await asyncio.wait([self._closing], timeout=limit_s + STOP_GRACE_S)
         commit.give_up("the log did not answer while the partition was given back")  # does nothing once it is closed
+        for delivery in runtime.deliveries.values():
+            delivery.hurry()
         try:
             await asyncio.shield(self._closing)
         except StrandlineError as error:
             log.warning("%s: %s", self._part.own.name, error)
         runtime.recent.close()
+        runtime.journal.unmap()
+        await in_thread(lambda: shutil.rmtree(self._scratch, ignore_errors=True))  # what stays goes at the next start
 
     def reconfigure(self, feed: FeedConfig, own: FeedConfig) -> None:
         """Go on with other settings and limits; what a running feed cannot change must be the same."""
@@ -188,22 +206,54 @@ class Partition:
         """What the other instances are told of it."""
         runtime, taking = self._runtime, self._taking
         if runtime is None or taking is None:
-            return {"behind_messages": None, "watermark": None, "watermark_age_s": None}
+            return {"behind_messages": None, "watermark": None, "watermark_age_s": None, "words": self.words}
         watermark_ns = runtime.feed.state.watermark_ns
         known = watermark_ns != TIME_MIN
         return {
             "behind_messages": taking.counts.waiting,
             "watermark": format_rfc3339(watermark_ns) if known else None,
             "watermark_age_s": round((self._ground.clock.now_ns() - watermark_ns) / 1e9, 3) if known else None,
+            "words": self.words,
         }
+
+    @property
+    def name(self) -> str:
+        """As a feed."""
+        return self._part.own.name
+
+    @property
+    def log_words(self) -> str:
+        """What its log said last, while that hinders it; nothing while all is well."""
+        return self._log.words
 
     @property
     def words(self) -> str:
         """What hinders it now; nothing while all is well."""
-        return self._log.words or (self._taking.counts.words if self._taking is not None else "")
+        taking, runtime = self._taking, self._runtime
+        if self._log.words or taking is None or runtime is None:
+            return self._log.words
+        return taking.words or failing_words(runtime)
+
+
+def failing_words(runtime: FeedRuntime) -> str:
+    """The first sink that has been failing for longer than a retry or two takes; nothing where none has."""
+    for name, delivery in runtime.deliveries.items():
+        if delivery.failing:
+            state = delivery.state()
+            since_ns = state.failing_since_ns
+            if since_ns is not None and runtime.clock.now_ns() - since_ns > FAILING_NS:
+                return f"sink {name} fails: {state.last_error}"
+    return ""
 
 
 def _prepare(scratch: Path, folder: Path) -> None:
-    """Throw away what an earlier owner's process left of the journal; the lanes' folder is kept."""
-    shutil.rmtree(scratch, ignore_errors=True)
-    folder.mkdir(parents=True, exist_ok=True)
+    """Throw away what an earlier owner's process left of the journal; the lanes' folder is kept.
+
+    Raises StrandlineError.
+    """
+    try:
+        if scratch.exists():
+            shutil.rmtree(scratch)
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise StrandlineError(f"{error}: check the disk and the rights on data_dir") from error

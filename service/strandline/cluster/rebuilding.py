@@ -7,11 +7,11 @@ are never synced, and what lay there before is thrown away. Nothing is decided h
 
 from __future__ import annotations
 
-import asyncio
 import contextlib
 from collections.abc import AsyncGenerator, Mapping, Sequence
 
 from nats.aio.msg import Msg
+from nats.js.errors import APIError, NotFoundError
 
 from ..config import Feed as FeedConfig
 from ..config_intakes import JetstreamIntake
@@ -27,8 +27,10 @@ from ..intake.jetstream import message_of
 from ..intake.reading import Reader as MessageReader
 from ..journal.disk import LocalDisk
 from ..journal.journal import Journal
+from ..nats_client import NOT_THERE
+from ..tasks import in_thread
 from .entries import Origin, Placed, Taken, Whole, entry_of, placed
-from .link import Link, Reader, everything
+from .link import Away, Link, Reader, everything
 from .log import Contents
 
 FLUSHED_BYTES = 8 << 20  # so much is queued at most before it is written
@@ -52,6 +54,17 @@ class Sources:
             self.numbers.setdefault(name, number)
 
 
+def _names(snapshot: Buffer) -> list[str]:
+    """The sources that a snapshot knows. Raises StrandlineError where it cannot be read."""
+    try:
+        return restore(snapshot).sources.names
+    except (ValueError, LookupError, TypeError) as error:
+        raise StrandlineError(
+            f"the snapshot in the log cannot be read: {error}. If a newer version of Strandline wrote it, let an "
+            "instance of that version own the partition"
+        ) from error
+
+
 class Rebuilding:
     """Makes the journal of one partition again. `messages` and `payload_bytes` tell how far it is."""
 
@@ -59,31 +72,43 @@ class Rebuilding:
         self._config, self._intake, self._link = config, intake, link
         self._sources = Sources(config)
         self._reader = MessageReader(intake, self._sources, aside)
+        self._journal: Journal | None = None
         self.messages = self.payload_bytes = 0
 
     async def run(self, contents: Contents, disk: LocalDisk) -> None:
         """Write the journal to an empty folder of the disk. Raises Away, StrandlineError, JournalError."""
         saved = contents.saved
         if saved is not None:
-            state = await asyncio.to_thread(restore, contents.snapshot)
-            self._sources.learn(state.sources.names)
+            self._sources.learn(await in_thread(lambda: _names(contents.snapshot)))
         begin_lsn = 0 if saved is None else min(saved.lsn, saved.needed_lsn)
         needed = [
             each for each in placed(contents.groups) if each.lsn + frame_bytes(each.entry.body_bytes) > begin_lsn
         ]
-        journal = await asyncio.to_thread(self._open, disk, needed[0].lsn)
         try:
-            await self._fill(journal, needed)
-            await asyncio.to_thread(journal.flush)
+            await in_thread(lambda: self._open(disk, needed[0].lsn))
+            await self._fill(self._opened, needed)
+            await in_thread(self._opened.flush)
             if saved is not None:
-                await asyncio.to_thread(journal.write_snapshot, saved.lsn, [contents.snapshot])
+                await in_thread(lambda: self._opened.write_snapshot(saved.lsn, [contents.snapshot]))
         finally:
-            await asyncio.to_thread(journal.close)
+            await in_thread(self._close)
 
-    def _open(self, disk: LocalDisk, begin_lsn: int) -> Journal:
+    def _close(self) -> None:
+        """Give the files back, whatever is still queued where this did not come to its end."""
+        if self._journal is not None:
+            if self._journal.queued_bytes and not self._journal.failed:
+                self._journal.flush()
+            self._journal.close()
+
+    @property
+    def _opened(self) -> Journal:
+        assert self._journal is not None
+        return self._journal
+
+    def _open(self, disk: LocalDisk, begin_lsn: int) -> None:
         kept = self._config.journal
         directory = f"feeds/{self._config.name}"
-        return Journal.open(
+        self._journal = Journal.open(
             disk,
             directory,
             segment_bytes=kept.segment_bytes,
@@ -108,7 +133,7 @@ class Rebuilding:
                     self.messages += 1
                     self.payload_bytes += len(message.body)
                 if journal.queued_bytes > FLUSHED_BYTES:
-                    await asyncio.to_thread(journal.flush)
+                    await in_thread(journal.flush)
 
     def _learn(self, entry: Whole) -> None:
         if entry.kind == Kind.SOURCES:
@@ -124,10 +149,23 @@ class Rebuilding:
                 return message
             if found > sequence:
                 break
+        await self._require_gone(sequence)
         raise StrandlineError(
-            f"message {sequence} of stream {self._intake.stream} is gone, but events of it are still held: the stream "
-            "must keep its messages for longer than events are held and sinks are away (max_age, max_bytes, max_msgs)"
+            f"message {sequence} of stream {self._intake.stream} is gone, but the log needs it: its events are "
+            "held, undelivered, or came since the last snapshot. The stream must keep its messages for longer than "
+            "events are held and sinks are away, and a minute (max_age, max_bytes, max_msgs)"
         )
+
+    async def _require_gone(self, sequence: int) -> None:
+        """Raises Away where the message is there after all: a broker that lags behind did not give it."""
+        try:
+            stream = await self._link.jetstream()
+            await stream.get_msg(self._intake.stream, sequence)
+        except NotFoundError:
+            return
+        except (APIError, *NOT_THERE) as error:
+            raise self._link.away(f"stream {self._intake.stream} cannot be read", error) from error
+        raise Away(f"message {sequence} of stream {self._intake.stream} was not read, though it is there: once more")
 
     async def _made(self, message: Message, entry: Taken) -> Sequence[Buffer]:
         """The body of an arrival's record, which must come out as it was. Raises StrandlineError where it does not."""

@@ -5,8 +5,12 @@ Here the configuration meets `member` (which partitions) and `partition` (what o
 
 from __future__ import annotations
 
-from collections.abc import MutableMapping
+import hashlib
+import time
+from collections.abc import Iterable, MutableMapping
 from typing import Any
+
+import msgspec
 
 from ..config import Config
 from ..config import Feed as FeedConfig
@@ -17,6 +21,7 @@ from ..runtime import FeedRuntime
 from ..sinks import make_shared_sink, make_sink
 from ..sinks_of import MakeSink
 from .balance import Partition as Numbered
+from .counts import Figures, Takeovers
 from .leases import Held
 from .member import ClusterSettings, Member
 from .partition import Ground, Part, Partition
@@ -42,9 +47,16 @@ class Cluster:
             config.drain_at_most_ns / 1e9,
         )
         self._owned: dict[Numbered, Partition] = {}
+        self._takeovers = {feed.name: Takeovers() for feed in self._clustered}
         self.member = Member(
             ClusterSettings(
-                cluster.name, cluster.instance, cluster.urls, cluster.access(), cluster.replicas, cluster.lease_ns / 1e9
+                cluster.name,
+                cluster.instance,
+                cluster.urls,
+                cluster.access(),
+                cluster.replicas,
+                cluster.lease_ns / 1e9,
+                digest_of(config),
             ),
             [Numbered(feed.name, number) for feed in self._clustered for number in range(_count(feed))],
             self._start,
@@ -56,9 +68,9 @@ class Cluster:
     def _clustered(self) -> list[FeedConfig]:
         return [feed for feed in self._config.feeds if feed.partitions is not None]
 
-    def begin(self) -> None:
-        """Begin to take partitions; returns at once."""
-        self.member.begin()
+    def begin(self, listen: str = "") -> None:
+        """Begin to take partitions; returns at once. `listen`: where this instance listens, with its port."""
+        self.member.begin(str(self._ground.cluster.address or listen))
 
     async def stop(self, within_s: float) -> None:
         """Give all partitions back, drained as far as that is done in time."""
@@ -68,13 +80,20 @@ class Cluster:
     def reconfigure(self, config: Config) -> None:
         """Go on with other settings of feeds; what cannot change while it runs is the same."""
         self._config = config
+        self.member.digest = digest_of(config)
         self._forget_stopped()
         for numbered, partition in self._owned.items():
             partition.reconfigure(*self._configured(numbered))
 
     async def _start(self, numbered: Numbered, held: Held) -> Partition:
         feed, own = self._configured(numbered)
-        partition = await Partition.take_over(self._ground, Part(feed, own, numbered.number, held.fence))
+        takeovers = self._takeovers[feed.name]
+        try:
+            partition = await Partition.take_over(self._ground, Part(feed, own, numbered.number, held.fence))
+        except Exception:
+            takeovers.failed += 1
+            raise
+        takeovers.note(partition.took_s)
         self._forget_stopped()
         self._owned[numbered] = partition
         return partition
@@ -92,6 +111,49 @@ class Cluster:
     def document(self) -> dict[str, Any]:
         """GET /v1/cluster."""
         return self.member.document()
+
+    def figures(self) -> Figures:
+        """What metrics tell of it."""
+        feeds, noticed, now_s = [feed.name for feed in self._clustered], self.member.noticed, time.monotonic()
+        nobodys = noticed.nobodys(now_s)
+        self._forget_stopped()
+        return Figures(
+            noticed.away_s(now_s) is None,
+            noticed.instances(now_s),
+            _by_feed(feeds, self._owned),
+            None if nobodys is None else _by_feed(feeds, nobodys),
+            self._takeovers,
+            {partition.name: bool(partition.log_words) for partition in self._owned.values()},
+        )
+
+    def unready(self) -> str:
+        """Why it takes no part: it has not joined yet, or is away for longer than its lease; else nothing."""
+        member, cluster = self.member, self._ground.cluster
+        away_s, lease_s = member.noticed.away_s(time.monotonic()), cluster.lease_ns / 1e9
+        if away_s is None or (member.noticed.ever_joined and away_s <= lease_s):
+            return ""
+        why = f": {member.words}" if member.words else ""
+        if not member.noticed.ever_joined:
+            return f"cluster {cluster.name}: {cluster.instance} has not joined it yet{why}"
+        so = f"for {away_s:.0f} s, longer than its lease of {lease_s:g} s, so it owns nothing"
+        return f"cluster {cluster.name}: {cluster.instance} has been away {so}{why}"
+
+
+def digest_of(config: Config) -> str:
+    """Of all that decides how the messages of partitions are read: the same at all instances, or batches differ."""
+    read_by = [
+        (feed.name, feed.time, feed.source, feed.id, feed.partitions, feed.body_limits())
+        for feed in sorted(config.feeds, key=lambda feed: feed.name)
+        if feed.partitions is not None
+    ]
+    return hashlib.sha256(msgspec.json.encode(read_by)).hexdigest()[:16]
+
+
+def _by_feed(feeds: Iterable[str], partitions: Iterable[Numbered]) -> dict[str, int]:
+    counts = dict.fromkeys(feeds, 0)
+    for each in partitions:
+        counts[each.feed] += 1
+    return counts
 
 
 def _count(feed: FeedConfig) -> int:

@@ -15,6 +15,8 @@ from ..ingest.timestamps import format_rfc3339
 from .balance import Partition
 from .leases import Look, Seen
 
+# A heartbeat has room for 1,024 partitions, which is all that leases can be looked at: 230 bytes each, and their words.
+WORDS_BYTES_AT_MOST = 200
 OWNED, TAKING_OVER, GIVING_BACK, NOBODYS = "owned", "taking over", "giving back", "nobody's"
 
 
@@ -24,6 +26,7 @@ class Progress(msgspec.Struct, frozen=True, omit_defaults=True):
     behind_messages: int | None = None
     watermark: str | None = None
     watermark_age_s: float | None = None
+    words: str = ""  # what hinders it, within WORDS_BYTES_AT_MOST
 
 
 class PartitionStatus(msgspec.Struct, frozen=True, omit_defaults=True):
@@ -47,6 +50,7 @@ class Status(msgspec.Struct, frozen=True, omit_defaults=True):
     unable: bool = False  # it failed to start a partition a short while ago
     leaving: bool = False  # it is being stopped
     trouble: str = ""
+    digest: str = ""  # of the settings by which it reads messages; nothing from one that tells none
     partitions: tuple[PartitionStatus, ...] = ()
 
 
@@ -81,9 +85,20 @@ def owner_in(seen: Seen) -> Ownership:
 def progress_of(told: Mapping[str, object]) -> Progress:
     """What of an owner's status is shown; nothing where it is not as agreed."""
     try:
-        return msgspec.convert(dict(told), Progress)
+        found = msgspec.convert(dict(told), Progress)
     except msgspec.ValidationError:
         return Progress()
+    return msgspec.structs.replace(found, words=_shortened(found.words))
+
+
+def _shortened(words: str) -> str:
+    """Within its room as JSON, where a character may take six bytes; no lone surrogates, which that cannot hold."""
+    words = words.encode(errors="replace").decode()
+    found, kept = words, words[:WORDS_BYTES_AT_MOST]
+    while len(msgspec.json.encode(found)) > WORDS_BYTES_AT_MOST:
+        kept = kept[:-8]
+        found = f"{kept} ..."
+    return found
 
 
 def feeds_of(partitions: Iterable[Partition]) -> dict[str, int]:
@@ -155,5 +170,6 @@ def _partition_row(
         "behind_messages": progress.behind_messages,
         "watermark": progress.watermark,
         "watermark_age_s": None if age is None else round(age + age_s, 3),
+        "words": progress.words,
         "here": name == me,
     }

@@ -8,6 +8,7 @@ What is accepted, late or refused is decided by the core.
 from __future__ import annotations
 
 import asyncio
+import contextlib
 import logging
 import random
 from collections import deque
@@ -24,17 +25,19 @@ from ..errors import BodyError, StrandlineError, TooManyFaults
 from ..ingest.offload import Aside
 from ..intake.counts import Counts
 from ..intake.jetstream import message_of
+from ..intake.reading import DETAIL_CHARACTERS_AT_MOST, key_in_quarantine
 from ..intake.reading import Reader as MessageReader
-from ..intake.reading import key_in_quarantine
 from ..problems import Refused
 from ..runtime import FeedRuntime
-from ..tasks import ended, first_of
+from ..tasks import Turn, ended, first_of
 from .commit import ReplicatedCommit
 from .entries import Origin
 from .link import Away, Reader
 
 log = logging.getLogger(__name__)
 STOP_WITHIN_S = 3.0
+WAIT_AT_MOST_S = 1.0  # nobody else asks for this room, so a client's seconds would be idle ones
+NAMES_BYTES_AT_MOST = 256 * 1024  # of the sources that one message brings: their record stands in the log whole
 AWAY_BASE_S, AWAY_AT_MOST_S = 0.2, 5.0
 Sleep = Callable[[float], Coroutine[Any, Any, None]]
 
@@ -60,6 +63,7 @@ class Taking:
         self._in_flight: deque[tuple[asyncio.Future[Outcome | None], int]] = deque()
         self._task: asyncio.Task[None] | None = None
         self._stopping = asyncio.Event()
+        self._in_hand = 0  # messages that were fetched and not handed over
         self.counts = Counts(intake.name, intake.kind, runtime.clock.now_ns())
 
     def start(self) -> None:
@@ -120,12 +124,15 @@ class Taking:
         found = await self._reader.fetch(self._intake.fetch_at_most)
         if not found:
             await self._reader.waiting()
-        for given in found:
+        turn = Turn()
+        for self._in_hand, given in zip(range(len(found), 0, -1), found, strict=True):
             if given.metadata.sequence.stream >= self._next:
+                await turn.give()
                 await self._take(given)
                 if not self._going_on:
                     return
                 self._next = given.metadata.sequence.stream + 1
+        self._in_hand = 0
         self.counts.waiting = self._reader.pending
 
     # ---- one message ------------------------------------------------------------------------------------------------
@@ -144,13 +151,15 @@ class Taking:
                     arrival, key = self._bodies.refused(message, refused), key_in_quarantine(message)
                 else:
                     arrival, key = await self._bodies.arrival(message)
+                    _require_room(arrival)
                 self._hand_over(arrival, key if is_named else None, Origin(sequence, refused), len(given.data))
                 break
             except (BodyError, TooManyFaults) as error:
-                refused = str(error)
+                refused = _reason(error)
             except Refused as refusal:
                 if refusal.reason == "key_reused":
-                    refused = str(refusal)
+                    is_named = is_named and not refused  # another message's id is made to look like this refusal's
+                    refused = _reason(refusal)
                     continue
                 if self._going_on:
                     await self._wait(refusal)
@@ -185,14 +194,41 @@ class Taking:
             self.counts.in_flight -= 1
             self.counts.in_flight_bytes -= size
 
+    @property
+    def words(self) -> str:
+        """What hinders it now; nothing while all is well."""
+        if not self.counts.connected and self.counts.last_error is None:
+            return ""  # its first try is under way
+        paused = (self.counts.paused_until_ns or 0) > self._runtime.clock.now_ns()
+        return self.counts.words or (self.counts.last_error or "" if paused else "")
+
     async def _wait(self, refusal: Refused) -> None:
         now_ns = self._runtime.clock.now_ns()
         self.counts.last_error = f"the feed takes nothing now: {refusal.detail}"
         self.counts.paused_until_ns = now_ns + refusal.retry_after_s * 10**9
-        await self._idle(max(0.05, float(refusal.retry_after_s)))
+        await self._idle(min(max(0.05, float(refusal.retry_after_s)), WAIT_AT_MOST_S))
+        with contextlib.suppress(Away):  # what waits grows meanwhile, and nothing else would tell
+            self.counts.waiting = await self._reader.waiting() + self._in_hand
 
     def check(self) -> None:
         """Assert that what is in flight adds up."""
         self.counts.check()
         assert self.counts.in_flight == len(self._in_flight) <= self._intake.in_flight_at_most
         assert self.counts.in_flight_bytes == sum(size for _, size in self._in_flight)
+
+
+def _reason(error: Exception) -> str:
+    """Why a message goes to quarantine, as far as it is kept there; no lone surrogates, which the log cannot hold."""
+    return str(error)[:DETAIL_CHARACTERS_AT_MOST].encode(errors="replace").decode()
+
+
+def _require_room(arrival: Arrival) -> None:
+    """Raises BodyError where the names of new sources fit in no message of the log."""
+    names = sum(len(name.encode()) + 8 for name in arrival.new_sources)
+    if names > NAMES_BYTES_AT_MOST:
+        raise BodyError(
+            413,
+            "Content Too Large",
+            f"the message names {len(arrival.new_sources):,} new sources, {names:,} bytes; a partition takes "
+            f"{NAMES_BYTES_AT_MOST:,} in one message",
+        )

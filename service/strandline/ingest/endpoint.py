@@ -15,6 +15,7 @@ from typing import TypeVar
 import msgspec
 from aiohttp import web
 
+from ..cluster.whereabouts import parts, where
 from ..config import Config
 from ..core.columns import Arrival, RequestKey
 from ..errors import BODY_REASONS, BodyError, TooManyFaults
@@ -34,6 +35,11 @@ ACT_BYTES_AT_MOST = 16 * 1024
 KEY_CHARACTERS_AT_MOST = 1024
 _KEY = re.compile(r'"((?:[\x20-\x21\x23-\x5b\x5d-\x7e]|\\["\\])*)"')
 Act = TypeVar("Act", bound=msgspec.Struct)
+# Not by naming a partition: the brokers choose it by the source, and one that is guessed breaks a source in two.
+STREAM_ONLY = (
+    "feed {feed} takes no events by HTTP: publish them by way of stream {stream} (as its producers do: "
+    "deploy/cluster.md), not here"
+)
 
 
 class Promise(msgspec.Struct, forbid_unknown_fields=True):
@@ -48,12 +54,20 @@ def runtime_of(request: web.Request) -> FeedRuntime:
     feeds, name = request.app[FEEDS], request.match_info["feed"]
     runtime = feeds.get(name)
     if runtime is None:
+        config = request.app[CONFIG]
+        if config.base_of(name) != name:
+            raise NotThere(where(request.app, name))
+        if (feed := config.feed(name)) is not None and feed.partitions is not None:
+            raise NotThere(parts(name, feed.partitions.count))
         raise NotThere(f"there is no feed {name[:100]!r}; there are: {', '.join(sorted(feeds)) or 'none'}")
     return runtime
 
 
-def refuse_partitions(request: web.Request) -> None:
-    """Events of a feed with partitions come by its stream only, whoever owns them now. Raises Refused."""
+def refuse_partitions(request: web.Request, sentence: str = STREAM_ONLY) -> None:
+    """Events of a feed with partitions come by its stream only, whoever owns them now.
+
+    Raises Refused with the sentence, in which {feed} and {stream} are named.
+    """
     config, name = request.app[CONFIG], request.match_info["feed"]
     base = config.base_of(name)
     feed = config.feed(base)
@@ -61,12 +75,7 @@ def refuse_partitions(request: web.Request) -> None:
         return
     if name in request.app[FEEDS]:
         request.app[FEEDS][name].feed.note_refusal("stream_only")
-    stream, subject, last = feed.partitions.stream, feed.partitions.subject, feed.partitions.count - 1
-    detail = (
-        f"feed {base} takes no events by HTTP: publish them to stream {stream}, under {subject} with a partition "
-        f"of 0 to {last} that follows from the source; deploy/cluster.md says how"
-    )
-    raise Refused("stream_only", detail, 0)
+    raise Refused("stream_only", sentence.format(feed=base, stream=feed.partitions.stream), 0)
 
 
 async def post_events(request: web.Request) -> web.Response:

@@ -58,8 +58,9 @@ class Delivery:
     handed over. on_refused(sink, batches, detail) must keep the batches for a later resend; only when it returns are
     they settled (an error there is retried like one of the sink). Of a batch that the sink has in part it is given only
     the refused rows. After a crash a refused batch can be offered, and refused, again: its number tells. `remembered`
-    are the journal's positions, used for lanes that the store itself cannot know. `sleep` and `random_source` are
-    passed in, so that a test owns time and chance.
+    are the journal's positions, used for lanes that the store itself cannot know. `moves`: instances deliver
+    the feed in turn, and some stores are an instance's own. `sleep` and `random_source` are passed in, so that a test
+    owns time and chance.
     """
 
     def __init__(
@@ -74,6 +75,7 @@ class Delivery:
         on_refused: OnRefused,
         on_opened: OnOpened | None = None,
         remembered: Mapping[Lane, int] | None = None,
+        moves: bool = False,
         sleep: Sleep = asyncio.sleep,
         group_events_at_most: int = GROUP_EVENTS_AT_MOST,
         group_bytes_at_most: int = GROUP_BYTES_AT_MOST,
@@ -81,7 +83,7 @@ class Delivery:
         self.name = name
         self._sink, self._lines, self._clock, self._random, self._sleep = sink, lines, clock, random_source, sleep
         self._on_taken, self._on_refused, self._on_opened = on_taken, on_refused, on_opened
-        self._remembered = dict(remembered or {})
+        self._remembered, self._moves = dict(remembered or {}), moves
         self._group_events_at_most, self._group_bytes_at_most = group_events_at_most, group_bytes_at_most
         self._counting = sink if isinstance(sink, Counting) else None  # asked once: it takes 13 us
         self._waiting = Waiting(sink.lanes)
@@ -90,6 +92,7 @@ class Delivery:
         self._flush_timer: asyncio.Task[None] | None = None
         self._wake = asyncio.Event()
         self._emptied = asyncio.Event()
+        self._hurried = False
         self._opened = self._paused = self._draining = self._urged = self._flush_due = self._backing_off = False
         self._calling: tuple[str, int] | None = None
         self._attempts = self._retries = 0
@@ -140,12 +143,17 @@ class Delivery:
         self._draining = True
         self._urge()
         try:
-            if self.state().running and not self._paused and not self._waiting.empty:
+            if self.state().running and not self._paused and not self._waiting.empty and not self._hurried:
                 self._emptied.clear()
                 await first_of(self._emptied.wait(), self._sleep(deadline_s))
         finally:
             self._draining = False
         return {lane: state for lane, state in self._waiting.state().items() if state.batches}
+
+    def hurry(self) -> None:
+        """End a drain that is under way; one that comes later does not wait."""
+        self._hurried = True
+        self._emptied.set()
 
     def _urge(self) -> None:
         """Try at once: a rest after an error ends, and a call that fails now is followed by no rest."""
@@ -232,10 +240,12 @@ class Delivery:
             remembered = self._remembered.get(lane, 0)
             number = positions.get(lane, remembered)
             if number < remembered:
-                logger.warning(
-                    "sink %s stands at batch %d of lane %s, but had taken up to %d: its store was replaced or "
-                    "restored; what the journal still has is delivered again",
-                    *(self.name, number, lane, remembered),
+                why = "a former owner has a store of its own" if self._moves else "its store was replaced or restored"
+                logger.log(
+                    logging.INFO if self._moves else logging.WARNING,
+                    "sink %s stands at batch %d of lane %s, but had taken up to %d: %s; what the journal still has is "
+                    "delivered again",
+                    *(self.name, number, lane, remembered, why),
                 )
             self._waiting.advance(lane, number, self._clock.now_ns())
         self._opened = True

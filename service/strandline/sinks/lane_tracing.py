@@ -42,6 +42,22 @@ def refusals(
     return found
 
 
+def refusals_of(
+    path: str | os.PathLike[str], sinks: Sequence[str], lane: str, batch: int, event: bytes
+) -> dict[str, str]:
+    """The same for an event whose position in its batch is not known: by its bytes. Raises StrandlineError."""
+    found: dict[str, str] = {}
+    with read_only(Path(path), REFUSED.name) as connection:
+        if connection is None:
+            return found
+        query = "SELECT detail FROM refused WHERE sink = ? AND lane = ? AND batch = ? AND event = ? LIMIT 1"
+        for sink in sinks:
+            row = connection.execute(query, (sink, lane, batch, event)).fetchone()
+            if row is not None:
+                found[sink] = row[0]
+    return found
+
+
 def late_record(path: str | os.PathLike[str], batch: int, time_ns: int, event: bytes) -> LateRecord:
     """What the store knows of a batch's late event of this time whose line begins so. Raises StrandlineError."""
     with read_only(Path(path), LATE.name) as connection:
@@ -53,11 +69,20 @@ def late_record(path: str | os.PathLike[str], batch: int, time_ns: int, event: b
             "AND substr(CAST(event AS BLOB), 1, ?) = ? LIMIT 1"
         )
         row = connection.execute(query, (*numbers, time_ns, len(event), event)).fetchone()
-        try:
-            through = dict(connection.execute("SELECT sink, through FROM repairs").fetchall())
-        except sqlite3.OperationalError:  # an older file, without that table
-            through = {}
-    return LateRecord(None if row is None else row[0], through)
+        return LateRecord(None if row is None else row[0], _through(connection))
+
+
+def repaired_through(path: str | os.PathLike[str]) -> dict[str, int]:
+    """By sink the last number that repairs have sent. Raises StrandlineError."""
+    with read_only(Path(path), LATE.name) as connection:
+        return {} if connection is None else _through(connection)
+
+
+def _through(connection: sqlite3.Connection) -> dict[str, int]:
+    try:
+        return dict(connection.execute("SELECT sink, through FROM repairs").fetchall())
+    except sqlite3.OperationalError:  # an older file, without that table
+        return {}
 
 
 def kept_late(
