@@ -15,7 +15,7 @@ from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any
 
-from . import cli_holds, cli_operate, cli_report, cli_token, cli_trace
+from . import cli_cluster, cli_holds, cli_operate, cli_report, cli_token, cli_trace
 from .caution import CAUTION
 from .cli_answers import DEFAULT_FILE, FINE, INTERRUPTED, NOT_REACHED, WRONG_USE, chosen_file, complain
 from .cli_options import add_access, add_command, add_service
@@ -74,6 +74,7 @@ def parser() -> argparse.ArgumentParser:
     _add_lane(commands, "late", "events that came too late to be put in order", "late event", "source")
     _add_lane(commands, "quarantine", "lines that could not be events of their feed", "line in quarantine", "reason")
     _add_lane(commands, "refused", "events of batches that a sink refused for good", "refused event", "sink")
+    cli_cluster.add(commands)
     cli_holds.add(commands)
     cli_operate.add(commands)
     cli_report.add(commands)
@@ -209,6 +210,7 @@ def _add_advise(commands: Any) -> None:
     advise.add_argument("--at-most", type=hold, metavar="TIME", help="the longest wait, such as 30s")
     advise.add_argument("--learn", type=amount, default=2 / 3, metavar="PART", help="to choose on (default: 0.667)")
     advise.add_argument("--clock", choices=("event", "arrival"), help="(default: the captured feed's, else event)")
+    advise.add_argument("--order", choices=("feed", "source"), help="(default: the captured feed's, else feed)")
     advise.add_argument("--idle-after", type=hold, metavar="TIME", help="(default: the captured feed's, else 30s)")
     advise.add_argument("--sources", type=rows, default=4, metavar="N", help="sources to look at (default: 4)")
     advise.add_argument("--quick", action="store_true", help="only the choice: no other slacks, no sources")

@@ -10,7 +10,7 @@ from typing import Any, TypeVar
 
 from .cli_answers import FINE, NOT_REACHED, complain, harmless
 from .client_access import address_of, feed_address
-from .client_asking import Refusal, Unreachable, answer_of, unreachable
+from .client_asking import Refusal, Unreachable, answer_at, unreachable
 
 Answer = TypeVar("Answer")
 
@@ -42,14 +42,24 @@ def tell(options: argparse.Namespace, path: str, body: bytes) -> int | None:
     return _heard(options, path, body, _nothing)
 
 
+def ask_service(options: argparse.Namespace, path: str) -> dict[str, Any] | int:
+    """What the service at --url says at this path; else an exit code, and the reason is told."""
+    return _heard_at(options, f"{address_of(options.url).rstrip('/')}{path}", None, _read)
+
+
 def _heard(options: argparse.Namespace, path: str, body: bytes | None, read: Callable[[bytes], Answer]) -> Answer | int:
-    url = address_of(options.url)
+    return _heard_at(options, feed_address(address_of(options.url), options.feed, path), body, read)
+
+
+def _heard_at(
+    options: argparse.Namespace, address: str, body: bytes | None, read: Callable[[bytes], Answer]
+) -> Answer | int:
     try:
-        content = answer_of(options, url, path, body)
+        content = answer_at(options, address_of(options.url), address, body)
         try:
             return read(content)
         except ValueError as error:
-            raise unreachable(feed_address(url, options.feed, path), error) from None
+            raise unreachable(address, error) from None
     except Refusal as refused:
         complain(harmless(str(refused)))
         return refused.code

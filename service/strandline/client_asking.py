@@ -34,7 +34,12 @@ def answer_of(options: argparse.Namespace, url: str, path: str, body: bytes | No
 
     Raises Refusal, Unreachable, ConfigError.
     """
-    address, shown = feed_address(url, options.feed, path), caller_of(options, url, os.environ)
+    return answer_at(options, url, feed_address(url, options.feed, path), body)
+
+
+def answer_at(options: argparse.Namespace, url: str, address: str, body: bytes | None = None) -> bytes:
+    """What the service at `url` says at one of its addresses. Raises as `answer_of`."""
+    shown = caller_of(options, url, os.environ)
     headers = {"Content-Type": "application/json"} if body is not None else {}
     try:
         request = urllib.request.Request(address, body, headers)

@@ -11,7 +11,7 @@ from typing import Any
 
 from .core.columns import TIME_MIN
 from .core.records import ActRecord
-from .core.view import HOLD_WHYS, View
+from .core.view import HOLD_WHYS, SourceView, Steering, View
 from .hops import Hop
 from .ingest.timestamps import format_rfc3339
 from .intake.starting import intake_documents, intake_stalls
@@ -77,7 +77,7 @@ def steering_document(view: View) -> dict[str, Any] | None:
     steering = view.steering
     if steering is None:
         return None
-    words = "the slack is steered"
+    words = "the slack is steered" if steering.by_source is None else "each source has a slack of its own, steered"
     if steering.warming_up:
         words = "warming up: the longest wait holds until the first events have shown how late they come"
     elif steering.binding:
@@ -85,6 +85,8 @@ def steering_document(view: View) -> dict[str, Any] | None:
             f"target and longest wait contradict each other: a late share of {steering.target:g} needs more than "
             f"{steering.at_most_ns / 1e9:g} s; with that wait it is about {steering.attainable:.2g}"
         )
+        if steering.by_source is not None:
+            words += f", for {steering.binding_most}; so it is with {steering.by_source.binding} sources"
     return {
         "late_share_target": steering.target,
         "late_share_last_minute": steering.share_minute,
@@ -97,6 +99,44 @@ def steering_document(view: View) -> dict[str, Any] | None:
         "contradiction": steering.binding,
         "attainable_late_share": steering.attainable,
         "explanation": words,
+        **_of_sources(steering),
+    }
+
+
+def _of_sources(steering: Steering) -> dict[str, Any]:
+    """The slacks of sources that each have their own, in a few figures; each by itself is at .../sources."""
+    own = steering.by_source
+    if own is None:
+        return {}
+    return {
+        "by_source": {
+            "slack_median_s": None if own.median_ns is None else own.median_ns / 1e9,
+            "slack_longest_s": own.longest_ns / 1e9,
+            "warming_up": own.warming_up,
+            "contradiction": own.binding,
+            "contradiction_most_of": steering.binding_most,
+        }
+    }
+
+
+def own_slack(source: SourceView) -> dict[str, Any]:
+    """What GET /v1/feeds/{feed}/sources says of a source's own slack; nothing where sources have none."""
+    own = source.steering
+    if own is None or source.slack_ns is None:
+        return {}
+    return {
+        "slack_s": source.slack_ns / 1e9,
+        "late_share": own.late / own.events if own.events else None,
+        "steering": {
+            "slack_s": own.slack_ns / 1e9,  # as it is steered, also while another one is set for a time
+            "events": own.events,
+            "late_events": own.late,
+            "late_share_this_stretch": own.share_stretch,
+            "bound_this_stretch": own.bound,
+            "warming_up": own.warming_up,
+            "contradiction": own.binding,
+            "attainable_late_share": own.attainable,
+        },
     }
 
 

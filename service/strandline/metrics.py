@@ -7,11 +7,14 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping
 from itertools import accumulate
+from typing import Any
 
 from prometheus_client import CollectorRegistry
 from prometheus_client.core import CounterMetricFamily, GaugeMetricFamily, HistogramMetricFamily, Metric
 from prometheus_client.registry import Collector
 
+from .cluster.counts import TAKEOVER_BOUNDS_S, Figures
+from .cluster.http import Documented
 from .core.columns import TIME_MIN
 from .core.histogram import Histogram
 from .core.view import HOLD_WHYS, View
@@ -26,8 +29,8 @@ from .sinks.delivery import DeliveryState
 class FeedCollector(Collector):
     """Reads the feeds' plain counts at the moment of a scrape."""
 
-    def __init__(self, feeds: Mapping[str, FeedRuntime]) -> None:
-        self._feeds = feeds
+    def __init__(self, feeds: Mapping[str, FeedRuntime], cluster: Callable[[], Documented | None]) -> None:
+        self._feeds, self._cluster = feeds, cluster
 
     def describe(self) -> Iterator[Metric]:
         """Families without samples: registering must not read the feeds."""
@@ -38,13 +41,17 @@ class FeedCollector(Collector):
         families = _families()
         for name, runtime in self._feeds.items():
             _Sampler(families, name, runtime).fill()
+        if (cluster := self._cluster()) is not None:
+            _fill_cluster(families, cluster.figures())
         yield from families.values()
 
 
-def make_registry(feeds: Mapping[str, FeedRuntime]) -> CollectorRegistry:
-    """A registry that shows these feeds and nothing else."""
+def make_registry(
+    feeds: Mapping[str, FeedRuntime], cluster: Callable[[], Documented | None] = lambda: None
+) -> CollectorRegistry:
+    """A registry that shows these feeds, the cluster where there is one, and nothing else."""
     registry = CollectorRegistry(auto_describe=False)
-    registry.register(FeedCollector(feeds))
+    registry.register(FeedCollector(feeds, cluster))
     return registry
 
 
@@ -55,9 +62,25 @@ def _families() -> dict[str, Metric]:
         "histogram": HistogramMetricFamily,
     }
     return {
-        name: kinds[meaning.kind](name, meaning.help, labels=("feed", *meaning.labels))
+        name: kinds[meaning.kind](name, meaning.help, labels=meaning.all_labels)
         for name, meaning in METRICS.items()
     }
+
+
+def _fill_cluster(families: Mapping[str, Any], figures: Figures) -> None:
+    families["strandline_cluster_connected"].add_metric((), float(figures.connected))
+    if figures.instances is not None:
+        families["strandline_cluster_instances"].add_metric((), figures.instances)
+    for name, counts in (("owned", figures.owned), ("nobodys", figures.nobodys or {})):
+        for feed, count in counts.items():
+            families[f"strandline_cluster_partitions_{name}"].add_metric((feed,), count)
+    bounds = [*map(repr, TAKEOVER_BOUNDS_S), "+Inf"]
+    for feed, takeovers in figures.takeovers.items():
+        buckets = list(zip(bounds, accumulate(takeovers.counts), strict=True))
+        families["strandline_cluster_takeover_seconds"].add_metric((feed,), buckets, takeovers.total_s)
+        families["strandline_cluster_takeover_failures"].add_metric((feed,), takeovers.failed)
+    for partition, trouble in figures.log_trouble.items():
+        families["strandline_cluster_log_trouble"].add_metric((partition,), float(trouble))
 
 
 class _Sampler:

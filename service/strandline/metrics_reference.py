@@ -10,12 +10,21 @@ from typing import NamedTuple
 
 
 class Meaning(NamedTuple):
-    """One metric: "counter", "gauge" or "histogram", what it tells and what to do about it, labels beside `feed`."""
+    """One metric: "counter", "gauge" or "histogram", what it tells and what to do about it, labels beside `feed`.
+
+    `by_feed` is False for one that tells of the whole instance: it has no `feed`.
+    """
 
     kind: str
     help: str
     act: str
     labels: tuple[str, ...] = ()
+    by_feed: bool = True
+
+    @property
+    def all_labels(self) -> tuple[str, ...]:
+        """In their order."""
+        return ("feed", *self.labels) if self.by_feed else self.labels
 
 
 METRICS: dict[str, Meaning] = {
@@ -293,6 +302,43 @@ METRICS: dict[str, Meaning] = {
         "The most that the late lane and the quarantine may take (lanes_at_most).",
         "Changes with the configuration only: compare `strandline_lanes_bytes` with it.",
     ),
+    "strandline_cluster_connected": Meaning(
+        "gauge",
+        "1 while this instance is in its cluster: the brokers answer, and its name is its own. Only with [cluster].",
+        "0: read `words` at /v1/cluster, and mend the brokers or the way there; others that reach them own it then.",
+        by_feed=False,
+    ),
+    "strandline_cluster_instances": Meaning(
+        "gauge",
+        "Instances that are there, as this one sees them; nothing is shown while it sees none.",
+        "Falls: one is gone; /v1/cluster names it below `gone`. Start it again, or find out why it went.",
+        by_feed=False,
+    ),
+    "strandline_cluster_partitions_owned": Meaning(
+        "gauge",
+        "Partitions of a feed that this instance owns and works on.",
+        "0 at one instance while others have many: it cannot take them; read `words` at /v1/cluster.",
+    ),
+    "strandline_cluster_partitions_nobodys": Meaning(
+        "gauge",
+        "Partitions of a feed that nobody owns, as this instance sees it; nothing is shown while it sees none.",
+        "Stays above 0: their events wait in the stream; read `words` at /v1/cluster, then the instances' logs.",
+    ),
+    "strandline_cluster_takeover_seconds": Meaning(
+        "histogram",
+        "Time from a lease to a partition at work, of those that this instance took over; its count is of takeovers.",
+        "Its count grows all the time: leases are too short for these brokers. Its quantiles grow: more is held.",
+    ),
+    "strandline_cluster_takeover_failures": Meaning(
+        "counter",
+        "Takeovers that failed here and are tried again, here or by another instance.",
+        "Grows: read `words` at /v1/cluster; it names the partition and what is in the way.",
+    ),
+    "strandline_cluster_log_trouble": Meaning(
+        "gauge",
+        "1 while the log of a partition that runs here takes nothing: the partition stands. `feed` is the partition.",
+        "1: look at the brokers; the stream NAME-log needs a leader, two of three of them, and room on their disks.",
+    ),
 }
 
 
@@ -300,6 +346,6 @@ def metrics_table() -> str:
     """The reference of all metrics as Markdown."""
     rows = ["| metric | kind | labels | what it tells | what to do |", "| --- | --- | --- | --- | --- |"]
     for name, meaning in METRICS.items():
-        labels = ", ".join(("feed", *meaning.labels))
+        labels = ", ".join(meaning.all_labels)
         rows.append(f"| `{name}` | {meaning.kind} | {labels} | {meaning.help} | {meaning.act} |")
     return "\n".join(rows) + "\n"

@@ -14,9 +14,10 @@ import numpy as np
 from aiohttp import web
 
 from .access_gate import may_read
+from .cluster.http import CLUSTER, cluster_causes
 from .core.columns import Batch
 from .core.view import sources_of
-from .documents import age_s, feed_document, stalls_of, time_text
+from .documents import age_s, feed_document, own_slack, stalls_of, time_text
 from .errors import JournalError
 from .ingest.endpoint import FEEDS, runtime_of
 from .ingest.formats import NDJSON
@@ -37,9 +38,9 @@ def _json(value: object, status: int = 200) -> web.Response:
 
 
 async def get_feeds(request: web.Request) -> web.Response:
-    """Every feed, in short."""
+    """Every feed that is at work here, in short; and whether there is a cluster to ask for."""
     shown = [runtime for name, runtime in request.app[FEEDS].items() if may_read(request, name)]
-    return _json({"feeds": [feed_document(runtime) for runtime in shown]})
+    return _json({"feeds": [feed_document(runtime) for runtime in shown], "cluster": CLUSTER in request.app})
 
 
 async def get_feed(request: web.Request) -> web.Response:
@@ -63,6 +64,7 @@ async def get_sources(request: web.Request) -> web.Response:
             "promised": time_text(source.promised_ns),
             "promises_broken": source.promises_broken,
             **({"watermark": time_text(source.watermark_ns)} if own else {}),
+            **own_slack(source),
         }
         for source in sources_of(runtime.feed.state, after, limit)
     ]
@@ -154,7 +156,7 @@ async def get_capture(request: web.Request) -> web.StreamResponse:
         await response.prepare(request)
         async for piece in recording.pieces():
             await _write(response, piece)
-    except (ConnectionError, TimeoutError, JournalError):  # gone or too slow: the file ends without an index
+    except (OSError, JournalError):  # it, or the feed, is gone, or it is too slow: the file ends without an index
         if request.transport is not None:
             request.transport.abort()
     finally:
@@ -173,7 +175,7 @@ async def _listen(runtime: FeedRuntime, response: web.StreamResponse, number: in
             for piece in pieces_of(batch):
                 try:
                     block = await asyncio.to_thread(ordered_block, runtime, piece, first)
-                except JournalError:
+                except (JournalError, OSError):  # a partition that went may be read from a disk no more
                     return
                 await _write(response, block)
                 first += len(piece)
@@ -242,8 +244,11 @@ async def get_live(request: web.Request) -> web.Response:
 
 
 async def get_ready(request: web.Request) -> web.Response:
-    """Ready to take events; 503, with the causes, when a feed has failed, is stopping, or waits without advancing."""
-    causes, untold = [], False
+    """Ready to take events; 503, with the causes, when a feed has failed, is stopping, or waits without advancing.
+
+    In a cluster also while this instance has not joined it, or has been away for longer than its lease.
+    """
+    causes, untold = cluster_causes(request)
     for name, runtime in request.app[FEEDS].items():
         found = [f"feed {name}: {sentence}" for sentence in stalls_of(runtime, runtime.view(), runtime.hops())]
         if runtime.failure is not None:

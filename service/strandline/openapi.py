@@ -198,7 +198,7 @@ def _dashboard() -> Json:
         "/v1/feeds/{feed}/live": _get(
             "The feed as it stands, twice a second, without end: what the dashboard draws",
             {
-                **_answer("server-sent events named moment", {"type": "string"}, "text/event-stream"),
+                **_answer("events named moment; gone: a partition that moved", {"type": "string"}, "text/event-stream"),
                 **_problems(400, 404, 429),
             },
             [
@@ -252,9 +252,9 @@ def _paths() -> Json:
         **_sink_acts(),
         **_history(),
         **_again(),
-        "/v1/feeds": _get("Every feed", _answer("feeds", document)),
+        "/v1/feeds": _get("Every feed at work here; whether there is a cluster", _answer("feeds", document)),
         "/v1/cluster": _get(
-            "Who owns which partition, since when, how far behind",
+            "Who owns which partition, since when, how far behind; how it stands in a sentence",
             {**_answer("the cluster", document), **_problems(404)},
         ),
         "/v1/feeds/{feed}": _get(

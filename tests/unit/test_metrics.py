@@ -22,8 +22,8 @@ from strandline.metrics_reference import METRICS
 
 HOSTILE = 'gw "1"\\\n}# HELP'
 LIMITED = {"held_events_at_most": 100, "events_at_most": 100}
-OF_SOME = {  # only sinks that send samples, feeds with a steered slack, and feeds with an intake have these
-    *(name for name in METRICS if name.startswith("strandline_intake_")),
+OF_SOME = {  # of sinks that send samples, feeds with a steered slack or an intake, and members of a cluster only
+    *(name for name in METRICS if name.startswith(("strandline_intake_", "strandline_cluster_"))),
     "strandline_sink_refused_samples",
     "strandline_late_target_ratio",
 }

@@ -150,7 +150,8 @@ export class LiveStream {
         why = error instanceof Problem ? `${error.title}. ${error.detail ?? ""}` : "The connection broke.";
       }
       if (stop.signal.aborted) return;
-      this.onState("lost", why);
+      await this.onState("lost", why); // it may turn out that there is nothing to try again
+      if (stop.signal.aborted) return;
       await new Promise((done) => setTimeout(done, wait_ms));
       wait_ms = Math.min(wait_ms * 2, RETRY_AT_MOST_MS);
     }
@@ -175,7 +176,9 @@ export class LiveStream {
         const { value, done } = await reader.read();
         if (done || stop.signal.aborted) return;
         alive();
-        const moments = events.read(value).filter((each) => each.event === "moment");
+        const found = events.read(value);
+        if (found.some((each) => each.event === "gone")) return; // the feed is not at work there any more
+        const moments = found.filter((each) => each.event === "moment");
         if (!moments.length) continue;
         onFirst();
         this.onState("live", "");

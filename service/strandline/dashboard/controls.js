@@ -179,11 +179,14 @@ export class Controls {
   }
 
   /** The feeds there are. */
-  feeds(names, chosen) {
-    const select = byId("feed");
+  feeds(names, chosen, elsewhere = null) {
+    const select = byId("feed"),
+      key = JSON.stringify([names, elsewhere]);
+    if (select.listed === key) return; // one that is open would close
+    select.listed = key;
     select.replaceChildren(
       ...names.map((name) => {
-        const option = make("option", "", name);
+        const option = make("option", "", name === elsewhere ? `${name} (not here)` : name);
         option.value = name;
         return option;
       }),

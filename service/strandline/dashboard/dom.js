@@ -37,12 +37,23 @@ export function nameElement(name) {
   return element;
 }
 
-/** Show a sentence (texts and { name }) in an element; only where it differs from what stands there. */
+/** Show a sentence (texts, { name } and { name, href }) in an element; only where it differs from what stands there. */
 export function setSentence(element, says) {
   const key = JSON.stringify(says);
   if (element.saidNow === key) return;
   element.saidNow = key;
-  element.replaceChildren(...says.map((part) => (typeof part === "string" ? part : nameElement(part.name))));
+  element.replaceChildren(
+    ...says.map((part) =>
+      typeof part === "string" ? part : part.href ? linkElement(part) : nameElement(part.name),
+    ),
+  );
+}
+
+function linkElement({ name, href }) {
+  const element = make("a");
+  element.href = href;
+  element.append(nameElement(name));
+  return element;
 }
 
 /** Children kept by key: makes what is new, updates all, removes the rest, in order. */

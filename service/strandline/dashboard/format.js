@@ -85,6 +85,11 @@ export function instant(ms, zone = "utc") {
   return `${year}-${two(month + 1)}-${two(day)} ${timeOfDay(ms, zone)}`;
 }
 
+/** The zone in which times are shown, in a word. */
+export function zoneWord(zone) {
+  return zone === "utc" ? "UTC" : "local";
+}
+
 /** An instant beside `now`: the time of day, and its day too where that differs. */
 export function near(ms, now_ms, zone = "utc") {
   if (ms === null || ms === undefined) return "–";

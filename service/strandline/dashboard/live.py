@@ -16,7 +16,7 @@ import contextlib
 import logging
 import socket
 from collections import Counter
-from collections.abc import AsyncIterator
+from collections.abc import AsyncIterator, Mapping
 from typing import NamedTuple
 
 import msgspec
@@ -32,7 +32,7 @@ from ..runtime import FeedRuntime
 from .history_document import POINTS, POINTS_AT_MOST, history_document
 from .lanes import Part, Search, choose
 from .lateness import EDGES_S, SinceLast, every_slack
-from .moments import LATE_AT_MOST, STRANDS_AT_MOST, Json, feed_part, lanes_part, rest_part
+from .moments import LATE_AT_MOST, STRANDS_AT_MOST, Json, feed_part, intake_part, lanes_part, rest_part
 from .sampling import FeedMemory
 from .serving import FILES, read_files
 from .serving import routes as file_routes
@@ -76,6 +76,7 @@ class Watch:
         self.variants: Counter[Variant] = Counter()
         self.computed = 0  # moments since the start
         self.closed = False
+        self.gone = False  # the feed is not at work here any more: a partition that another instance owns, or nobody
         self._frames: dict[Variant, bytes] = {}
         self._searches: dict[Variant, Search] = {}
         self._shown: dict[Variant, list[int]] = {}
@@ -152,6 +153,7 @@ class Watch:
         stalls = stalls_of(runtime, view, hops)
         document = feed_part(view, rates, hops, [delivery.state() for delivery in runtime.deliveries.values()])
         document |= {
+            "intakes": [intake_part(counts, view.now_ns) for counts in runtime.intakes],
             "state": state_of(runtime, stalls),
             "stalls": stalls,
             "failure": runtime.failure,
@@ -184,7 +186,47 @@ class Watch:
         return {"lanes": lanes, "rest": rest_part(moment.view, moment.part, lanes), "sampled": moment.look.sampled}
 
 
-WATCHES = web.AppKey("dashboard_watches", dict[str, Watch])
+class Watches:
+    """The watch of each feed that is at work: partitions come and go while the service runs."""
+
+    def __init__(self, feeds: Mapping[str, FeedRuntime]) -> None:
+        self._feeds, self._watches = feeds, dict[str, Watch]()
+        self.follow()
+
+    def __getitem__(self, feed: str) -> Watch:
+        """By name. Raises KeyError where the feed is not at work."""
+        return self.of(self._feeds[feed])
+
+    def of(self, runtime: FeedRuntime) -> Watch:
+        """The watch of a feed that is at work now."""
+        watch = self._watches.get(runtime.config.name)
+        if watch is None or watch.runtime is not runtime:
+            if watch is not None:
+                watch.close()
+            watch = self._watches[runtime.config.name] = Watch(runtime)
+        return watch
+
+    def follow(self) -> None:
+        """Take up what has come. Let those go home who watch what is gone, and drop what was remembered of it."""
+        for name, watch in list(self._watches.items()):
+            if self._feeds.get(name) is not watch.runtime:
+                watch.gone = True
+                watch.close()
+                del self._watches[name]
+        for runtime in list(self._feeds.values()):
+            self.of(runtime)
+
+    def all(self) -> list[Watch]:
+        """As they are now."""
+        return list(self._watches.values())
+
+    def close(self) -> None:
+        """Let everyone go home."""
+        for watch in self._watches.values():
+            watch.close()
+
+
+WATCHES = web.AppKey("dashboard_watches", Watches)
 
 
 # ---- addresses -------------------------------------------------------------------------------------------------------
@@ -192,7 +234,7 @@ WATCHES = web.AppKey("dashboard_watches", dict[str, Watch])
 
 async def get_live(request: web.Request) -> web.StreamResponse:
     """Moments of a feed as they are computed, without end."""
-    watch = request.app[WATCHES][runtime_of(request).config.name]
+    watch = request.app[WATCHES].of(runtime_of(request))
     variant = Variant(_search(request), whole(request, "lanes", LANES, 1, LANES_AT_MOST))
     if watch.streams >= STREAMS_AT_MOST:
         detail = f"{STREAMS_AT_MOST} streams watch this feed already: close a page that is not looked at"
@@ -232,6 +274,8 @@ async def _follow(request: web.Request, response: web.StreamResponse, watch: Wat
                 await _write(response, frame)
                 sent = frame
         await bell.wait()
+    if watch.gone:
+        await _write(response, b"event: gone\ndata: {}\n\n")
 
 
 async def _write(response: web.StreamResponse, block: bytes) -> None:
@@ -241,8 +285,8 @@ async def _write(response: web.StreamResponse, block: bytes) -> None:
 
 async def get_history(request: web.Request) -> web.Response:
     """The last hours of a feed as columns."""
-    watch = request.app[WATCHES][runtime_of(request).config.name]
-    runtime = watch.runtime
+    runtime = runtime_of(request)
+    watch = request.app[WATCHES].of(runtime)
     now_ms = runtime.clock.now_ns() // 1_000_000
     to_ms = whole(request, "to_ms", now_ms, 0, MS_AT_MOST)
     from_ms = whole(request, "from_ms", max(0, to_ms - 900_000), 0, MS_AT_MOST)
@@ -283,8 +327,8 @@ def _search(request: web.Request) -> str:
 def install(app: web.Application) -> None:
     """Add the dashboard to an application whose feeds are known: its addresses, and what samples the feeds."""
     app[FILES] = read_files()
-    watches: dict[str, Watch] = {name: Watch(runtime) for name, runtime in app[FEEDS].items()}
-    app[WATCHES] = watches
+    feeds = app[FEEDS]
+    app[WATCHES] = Watches(feeds)
     app.add_routes(
         [
             web.get("/v1/feeds/{feed}/live", get_live, allow_head=False),
@@ -297,8 +341,7 @@ def install(app: web.Application) -> None:
 
 
 async def _close(app: web.Application) -> None:
-    for watch in app[WATCHES].values():
-        watch.close()
+    app[WATCHES].close()
 
 
 async def _sampling(app: web.Application) -> AsyncIterator[None]:
@@ -309,12 +352,16 @@ async def _sampling(app: web.Application) -> AsyncIterator[None]:
         await task
 
 
-async def _sample(watches: dict[str, Watch]) -> None:
+async def _sample(watches: Watches) -> None:
     loop = asyncio.get_running_loop()
     while True:
         begun = loop.time()
         due = begun + SAMPLE_EVERY_S
-        for watch in watches.values():
+        try:
+            watches.follow()
+        except Exception:  # likewise
+            log.exception("an unforeseen error while feeds came or went")
+        for watch in watches.all():
             try:
                 watch.memory.sample()
             except Exception:  # what is seen must not stop what is done

@@ -4,16 +4,18 @@
 import { Acts, askToken } from "./acts.js";
 import { readView, writeView } from "./address.js";
 import { Api, LiveStream, Problem } from "./api.js";
+import { ClusterView } from "./cluster_view.js";
 import { Controls } from "./controls.js";
 import { byId, keyed, setAttribute, setSentence, setText } from "./dom.js";
-import { age, clean, instant } from "./format.js";
+import { age, clean, instant, zoneWord } from "./format.js";
+import { showIntakes } from "./intakes_view.js";
 import { laneSentence } from "./lanes.js";
 import { showBooks, showHappened, showHops, showSentence, showSinks, showWords, Speaker } from "./panels.js";
 import { Pictures } from "./pictures.js";
 import { Record } from "./record.js";
 import { behind_s } from "./reading.js";
 import { followReport, reportAddress } from "./report.js";
-import { speak } from "./sentence.js";
+import { nothingKept, speak } from "./sentence.js";
 import { showTable } from "./table.js";
 
 const POINTS = 600,
@@ -24,7 +26,7 @@ const TABLE_SEEN_MS = 900,
   TABLE_HIDDEN_MS = 5000,
   BOOKS_EVERY_MS = 900,
   FROZEN_EVERY_MS = 1500;
-const LINKS = { connecting: "○ connecting", live: "● live", lost: "▲ lost" };
+const LINKS = { connecting: "○ connecting", live: "● live", lost: "▲ lost", elsewhere: "◇ not here" };
 
 class Page {
   view = readView(location.search);
@@ -32,6 +34,7 @@ class Page {
   live = null;
   past = null; // what the last question for the past has come to: { at_ms, problem }
   raw = null;
+  strayed = false; // the feed of the view is a partition that is not at work here
   link = { state: "connecting", why: "", since_ms: Date.now() };
   drawn = 0;
   shownAt = {};
@@ -47,6 +50,11 @@ class Page {
     this.pictures = new Pictures(() => this.want());
     this.controls = new Controls(this);
     this.speaker = new Speaker();
+    this.cluster = new ClusterView(
+      this.api,
+      (feed) => this.change({ feed, at_ms: null }),
+      () => this.#clustered(),
+    );
     this.stream = new LiveStream(
       this.api,
       (data) => this.#moment(data),
@@ -76,17 +84,17 @@ class Page {
     for (;;) {
       try {
         const answer = await this.api.json("/v1/feeds");
-        const names = (answer.feeds ?? answer).map((each) =>
-          typeof each === "string" ? each : (each.name ?? each.feed),
-        );
-        if (!names.length)
+        const names = answer.feeds.map((each) => each.name);
+        if (answer.cluster) await this.cluster.begin();
+        this.plain = names.filter((each) => !this.cluster.knows(each));
+        if (!names.length && !this.cluster.document)
           throw new Problem(
             0,
             "There is no feed to see",
             "The configuration names none, or the token may read none.",
           );
-        if (!names.includes(this.view.feed)) this.view.feed = names[0];
-        this.controls.feeds(names, this.view.feed);
+        if (!names.includes(this.view.feed) && !this.cluster.knows(this.view.feed)) this.view.feed = names[0] ?? null;
+        this.#list();
         history.replaceState(null, "", location.pathname + writeView(this.view));
         this.follow();
         return;
@@ -100,12 +108,47 @@ class Page {
   /** Follow the feed of the view from the beginning. */
   follow() {
     this.record.clear();
-    this.live = this.past = null;
+    this.live = this.past = this.raw = null;
+    this.#list();
+    this.strayed = this.cluster.isElsewhere(this.view.feed);
+    if (this.strayed) this.#stray();
     this.#open();
     this.#history(0);
   }
 
+  /** The feeds to choose from: partitions that are at work here, those that are none, and the one that is shown. */
+  #list() {
+    const { feed } = this.view,
+      elsewhere = this.cluster.isElsewhere(feed) ? feed : null;
+    const names = [...this.plain, ...this.cluster.here()];
+    this.controls.feeds(elsewhere === null ? names : [...names, elsewhere], feed, elsewhere);
+  }
+
+  /** The cluster was asked. A partition that is followed may have gone, or come. */
+  #clustered() {
+    if (this.plain === undefined) return; // it begins
+    const { feed } = this.view,
+      here = this.cluster.here();
+    if (this.cluster.failed !== null) {
+      if (this.strayed) this.#linkedAs("lost", this.cluster.failed);
+    } else if (feed === null && here.length) this.change({ feed: here[0] });
+    else if (this.cluster.isElsewhere(feed)) this.#stray();
+    else if (this.strayed) this.follow();
+    this.#list();
+    this.cluster.show(this.view.feed, this.view.zone);
+    this.want();
+  }
+
+  /** Say where the partition is; nothing is asked about it here until it is back. */
+  #stray() {
+    this.strayed = true;
+    this.stream.close();
+    this.#linkedAs("elsewhere", "");
+    this.cluster.showElsewhere(this.view.feed, this.live, this.view.zone, this.speaker);
+  }
+
   #open() {
+    if (this.strayed) return;
     const query = new URLSearchParams({ lanes: String(this.view.lanes) });
     if (this.view.search) query.set("q", this.view.search);
     this.fresh = true; // what comes next may be of other lanes: it is shown at once
@@ -148,6 +191,7 @@ class Page {
 
   /** An answer that another question has overtaken is of another time, or of another feed: it is passed over. */
   async #fetchHistory() {
+    if (this.strayed) return;
     const { feed, at_ms, window_s } = this.view,
       asked = (this.asked = Symbol());
     const to_ms = Math.round(at_ms ?? this.nowMs() ?? Date.now());
@@ -189,6 +233,7 @@ class Page {
     this.live = JSON.parse(this.raw);
     this.raw = null;
     this.live.lanes ??= [];
+    this.cluster.showHere();
     if (this.fresh) this.shownAt = {};
     this.fresh = false;
     this.record.append(this.live);
@@ -200,7 +245,13 @@ class Page {
     if (this.view.at_ms === null || this.#due("frozen", FROZEN_EVERY_MS)) this.want();
   }
 
-  #linked(state, why) {
+  /** A stream that ends in a cluster may be that of a partition that moved: that is found out before it is lost. */
+  async #linked(state, why) {
+    if (state === "lost") await this.cluster.poll();
+    if (!this.strayed) this.#linkedAs(state, why);
+  }
+
+  #linkedAs(state, why) {
     if (state === "live" && this.link.state !== "live" && this.record.t_ms.length) this.#history(HISTORY_AGAIN_MS);
     if (state === this.link.state && why === this.link.why) return;
     const lost = state === "connecting" && this.link.state === "lost"; // trying again does not make it less lost
@@ -233,7 +284,9 @@ class Page {
   }
 
   #tick() {
-    if (!document.hidden && this.link.state === "lost") this.#showLink();
+    if (document.hidden) return;
+    if (this.link.state === "lost") this.#showLink();
+    this.cluster.tick(performance.now());
   }
 
   /** Ask for one frame, however often. */
@@ -267,12 +320,12 @@ class Page {
     }
     const { zone, table } = this.view;
     setText(byId("clock"), `${instant(moment.now_ms, zone)} ${zoneWord(zone)}`);
-    const spoken = speak(moment, zone);
-    if (this.link.state !== "lost") {
+    const spoken = speak(moment, zone, this.cluster.troubles());
+    if (["live", "connecting"].includes(this.link.state)) {
       showSentence(spoken, moment, this.openAct);
       if (this.view.at_ms === null) this.speaker.say(spoken, performance.now());
     }
-    this.#title(spoken, moment);
+    if (!this.strayed) this.#title(spoken, moment);
     if (this.#due("hops", BOOKS_EVERY_MS)) showHops(moment, spoken);
     this.pictures.draw(moment, this.record, this.view);
     this.#chosen(moment);
@@ -285,19 +338,7 @@ class Page {
   /** Nothing is known of the frozen time: nothing is kept of it, or it has not come yet. */
   #nothingKept() {
     const when = instant(this.view.at_ms, this.view.zone),
-      problem = this.past?.problem;
-    const [says, next] =
-      this.past?.at_ms !== this.view.at_ms
-        ? [`What is kept of ${when} is being fetched.`, ""]
-        : problem
-          ? [
-              `What is kept of ${when} was not given.`,
-              `${problem.title}. ${problem.detail ?? ""}${problem.mayPass ? " This page tries again by itself." : ""}`,
-            ]
-          : [
-              `Nothing is kept of ${when}.`,
-              "Go to a later time, or back to live. A day is kept, since the last start of the service.",
-            ];
+      [says, next] = nothingKept(this.view.at_ms, when, this.past);
     setText(byId("clock"), `${when} ${zoneWord(this.view.zone)}`);
     setAttribute(byId("now"), "data-level", "watch");
     setSentence(byId("says"), [says]);
@@ -310,6 +351,8 @@ class Page {
   #slower(moment, zone) {
     showBooks(moment);
     showSinks(moment, zone, this.openAct);
+    showIntakes(moment, zone);
+    this.cluster.show(this.view.feed, zone);
     showWords(moment, this.record);
     showHappened(this.record, moment, zone);
     byId("drain").disabled = byId("set-slack").disabled = Boolean(moment.past); // acts are for the present
@@ -351,10 +394,6 @@ class Page {
       slack: slack_s < 1 ? `${Number((slack_s * 1000).toPrecision(2))}ms` : `${Number(slack_s.toPrecision(2))}s`,
     });
   }
-}
-
-function zoneWord(zone) {
-  return zone === "utc" ? "UTC" : "local";
 }
 
 new Page();

@@ -135,6 +135,7 @@ export class Record {
       now_ms: history.ends_ms[index],
       lanes: pastLanes(history, index),
       rest: null,
+      intakes: [],
       failure: null,
       state: "running",
       stalls: [],

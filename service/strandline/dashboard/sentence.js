@@ -2,6 +2,7 @@
 // Pure: a moment in, words out. A sentence is a list of texts and of { name }, so that names can be isolated.
 
 import { age, count, near, share } from "./format.js";
+import { firstWords, intakeTrouble } from "./intakes.js";
 import { holdTrouble, missingTrouble, pauseWords, silenceTrouble, waitWords } from "./holding.js";
 import { behind_s, isCurrent, lastHeard } from "./reading.js";
 
@@ -15,21 +16,29 @@ const REPEATS_SHARE = 0.95; // of all that came in the last minute
 const PAST = { is: "was", "has been": "had been", "it waits": "it waited" };
 const LEVELS = ["fine", "watch", "bad"];
 
-/** Everything that is to be said of a moment: { level, place, says, next, offers, key }. */
-export function speak(moment, zone = "utc") {
+/** All that is to be said of a moment: { level, place, says, next, offers, key }. `beside`: troubles around it. */
+export function speak(moment, zone = "utc", beside = []) {
+  const around = moment.past ? [] : beside;
   const found = [
+    ...around.filter((each) => each.level === "bad"),
     ...hereTrouble(moment),
+    ...intakeTrouble(moment, zone),
     ...sinkTrouble(moment, zone),
     ...holdTrouble(moment, zone),
     ...missingTrouble(moment),
     ...repeatTrouble(moment),
     ...silenceTrouble(moment),
     ...lateTrouble(moment),
+    ...around.filter((each) => each.level !== "bad"),
   ];
   found.sort((one, other) => LEVELS.indexOf(other.level) - LEVELS.indexOf(one.level));
   const worst = found.find((each) => !each.aside) ?? wellWords(moment);
   if (worst.quiet) found.push(worst);
-  const says = worst.but ? currentBut(moment, zone, worst) : [...currency(moment, zone), ...worst.says];
+  const says = worst.first
+    ? [...worst.says, { name: moment.feed }, ": ", ...currency(moment, zone).map(uncapitalised)]
+    : worst.but
+      ? currentBut(moment, zone, worst)
+      : [...currency(moment, zone), ...worst.says];
   const others = found.filter((each) => each !== worst && (each.level !== "fine" || each.aside));
   for (const other of others.slice(0, 2)) says.push(...other.says);
   return {
@@ -245,6 +254,10 @@ function capitalised(text) {
   return text.slice(0, 1).toUpperCase() + text.slice(1);
 }
 
+function uncapitalised(text) {
+  return text.slice(0, 1).toLowerCase() + text.slice(1);
+}
+
 /** Words for a feed without trouble. */
 function wellWords(moment) {
   const quiet_s = moment.newest_ms === null ? null : (moment.now_ms - lastHeard(moment)) / 1000;
@@ -253,7 +266,7 @@ function wellWords(moment) {
       level: "watch",
       place: "upstream",
       says: ["The feed waits for its first event. "],
-      next: [`Send events to /v1/feeds/${moment.feed}/events.`],
+      next: firstWords(moment),
     };
   }
   const nobody = moment.silence && moment.silence.known > 0 && moment.silence.active === 0;
@@ -273,6 +286,21 @@ function wellWords(moment) {
     says: [`The newest event is ${age((moment.now_ms - moment.newest_ms) / 1000)} old. `],
     next: ["Nothing to do."],
   };
+}
+
+/** What is said of a frozen time of which nothing is known, and what next; `past`: what the last question came to. */
+export function nothingKept(at_ms, when, past) {
+  if (past?.at_ms !== at_ms) return [`What is kept of ${when} is being fetched.`, ""];
+  const { problem } = past;
+  if (!problem)
+    return [
+      `Nothing is kept of ${when}.`,
+      "Go to a later time, or back to live. A day is kept, since the last start of the service.",
+    ];
+  return [
+    `What is kept of ${when} was not given.`,
+    `${problem.title}. ${problem.detail ?? ""}${problem.mayPass ? " This page tries again by itself." : ""}`,
+  ];
 }
 
 /** A sentence as plain text, for a title or for a screen reader. */
