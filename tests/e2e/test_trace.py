@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import asyncio
 import json
+import shutil
 import threading
 from pathlib import Path
 from typing import Any
@@ -190,6 +191,10 @@ def test_the_command_asks_the_service_and_reads_the_folder_while_it_is_down(
         body = body_of(event_line(10, id="a"), event_line(30, id="\x1b[31mb"))
         assert process.ask(f"/v1/feeds/{FEED}/events", body, {"Content-Type": NDJSON}).status == 200
         process.until(lambda: process.document()["ledger"]["released"] == 1, "a is released")
+        late = body_of(event_line(3, id="late"))
+        assert process.ask(f"/v1/feeds/{FEED}/events", late, {"Content-Type": NDJSON}).json["late"] == 1
+        path = f"/v1/feeds/{FEED}/late"
+        process.until(lambda: bool(process.ask(path).json["late"]), "the late event is kept")
         url = ("--url", process.url)
         assert _fates(capsys, "--id", "a", *url) == ["released"]
         assert _fates(capsys, "--time", second(30), "--source", "gw-1", *url) == ["held"]
@@ -211,8 +216,25 @@ def test_the_command_asks_the_service_and_reads_the_folder_while_it_is_down(
     assert called(capsys, "--id", "a", "--data-dir", str(tmp_path / "nowhere"))[0] == 3
     assert cli.main(["trace", "--feed", "../data", "--id", "a", *folder]) == 3
     assert called(capsys, "--time", "noon", *folder)[0] == 2
+    _without_a_journal(capsys, tmp_path)
     document = json.loads(called(capsys, "--id", "a", "--json", *folder)[1])
     assert not document["matches"][0]["verified"] and any("digest" in note for note in document["notes"])
+
+
+def _without_a_journal(capsys: pytest.CaptureFixture[str], folder: Path) -> None:
+    """As on the disk of a partition's former owner: the lane store alone, or not even that."""
+    place = folder / "former" / "feeds" / FEED
+    place.mkdir(parents=True)
+    former = ("--data-dir", str(folder / "former"))
+    code, out, err = called(capsys, "--id", "a", *former)
+    assert code == 3 and not out and "there is no journal in it" in err
+    shutil.copy(folder / "data" / "feeds" / FEED / "lanes.db", place)
+    code, out, _ = called(capsys, "--id", "late", *former)
+    assert code == 0 and out.startswith("late: ") and "Which sinks took it is not known any more." in out
+    assert "note: there is no journal in this folder" in out
+    code, out, _ = called(capsys, "--id", "a", *former)
+    assert code == 1 and "searched   the lane store; there is no journal in this folder" in out
+    assert [path.name for path in place.iterdir() if not path.name.startswith("lanes.db")] == [], "nothing is made"
 
 
 def _fates(capsys: pytest.CaptureFixture[str], *arguments: str) -> list[str]:

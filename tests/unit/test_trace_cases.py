@@ -5,6 +5,7 @@ And its limits: bytes read, matches shown, a client that left, records that cann
 
 from __future__ import annotations
 
+import dataclasses
 import json
 from pathlib import Path
 from typing import Any
@@ -13,7 +14,7 @@ import numpy as np
 import pytest
 from helpers_feed import patient
 from helpers_trace import FEED, Story, asked, budget, line_of, question, told
-from strandline.core.columns import Arrival, Batch
+from strandline.core.columns import Arrival, Batch, Lane
 from strandline.core.records import Kind, arrival_parts
 from strandline.core.tracing import Finder
 from strandline.errors import JournalError
@@ -22,9 +23,10 @@ from strandline.journal.journal import Journal
 from strandline.sinks.lanes import LaneStore
 from strandline.tracing.answer import document_of
 from strandline.tracing.budget import Abandoned, Budget
+from strandline.tracing.following import Standing
 from strandline.tracing.question import QuestionError, time_of
 from strandline.tracing.scanning import MATCHES_AT_MOST
-from strandline.tracing.trace import trace
+from strandline.tracing.trace import trace, trace_kept
 
 
 class StoryLines:
@@ -86,22 +88,81 @@ async def test_a_refusal_and_a_repair_are_told(tmp_path: Path) -> None:
 async def test_what_only_the_lane_store_still_has_is_found(tmp_path: Path) -> None:
     path, story = tmp_path / "lanes.db", late_story()
     await (await store_of(path, story)).close()
+    journal = short_of(story)
+    assert journal.first_lsn > max(sent.lsn for sent in story.sent if sent.id == "older")
+    for texts in ({"id": "old"}, {"time": "5"}, {"time": "5", "source": "gw-1"}):
+        match = asked(journal, lanes=path, **texts)["matches"][0]
+        assert (match["fate"], match["matched_by"], match["late"]["late_by_ns"]) == ("late", "kept", 95)
+        assert match["arrival"]["position"] is None and "95" not in match["event"]
+        assert {sink: each["state"] for sink, each in match["sinks"].items()} == {"lanes": "taken", "store": "taken"}
+        assert "handed to the late lane as batch 1, and the lane store keeps it" in match["explanation"]
+        assert "at or beyond that batch and so have it, unless one was added to the feed later: store." in (
+            match["explanation"]
+        )
+    cut = asked(journal, lanes=path, id="cut")
+    assert cut["matches"] == [], "the lane store's line does not hold the id in quotation marks"
+    assert asked(journal, lanes=path, time="5", source="gw-2")["found"] == 0
+    gone = asked(journal, lanes=path, id="new")
+    assert gone["found"] == 0 and any("is kept from position" in note for note in gone["notes"])
+
+
+def short_of(story: Story) -> Journal:
+    """The story's journal after it went on, without all that came before."""
     story.restart(10)
     story.send([line_of(200 + number, "gw-1", f"filler {number}") for number in range(20)], 11)
     story.save()
     story.send([line_of(300, "gw-1", "last")], 12)
     journal = story.journal(512)
     assert journal.drop_before(story.saved[-1][0])
-    assert journal.first_lsn > max(sent.lsn for sent in story.sent if sent.id == "older")
-    for texts in ({"id": "old"}, {"time": "5"}, {"time": "5", "source": "gw-1"}):
-        match = asked(journal, lanes=path, **texts)["matches"][0]
-        assert (match["fate"], match["matched_by"], match["late"]["late_by_ns"]) == ("late", "kept", 95)
-        assert match["arrival"]["position"] is None and "95" not in match["event"]
-    cut = asked(journal, lanes=path, id="cut")
-    assert cut["matches"] == [], "the lane store's line does not hold the id in quotation marks"
-    assert asked(journal, lanes=path, time="5", source="gw-2")["found"] == 0
-    gone = asked(journal, lanes=path, id="new")
-    assert gone["found"] == 0 and any("is kept from position" in note for note in gone["notes"])
+    return journal
+
+
+async def test_who_has_a_kept_event_is_told_by_position_refusal_and_repair(tmp_path: Path) -> None:
+    path, story = tmp_path / "lanes.db", late_story()
+    store, lines = await store_of(path, story), StoryLines(story)
+    late = story.shell.batches["late"]
+    await store.keep_refused("store", late, "no such series", lines, 1 << 30)  # type: ignore[arg-type]
+    await store.plan_repair("archive", 1)
+    await store.end_repair("archive", 1, 2)
+    await store.close()
+    journal = short_of(story)
+    stands: dict[str, dict[Lane, int]] = {
+        "lanes": {"late": 1, "quarantine": 2}, "store": {"late": 1}, "river": {"late": 0}, "files": {"ordered": 9},
+    }  # fmt: skip
+    found = trace(journal, question(id="old"), path, budget(), Standing(["gw-1"], stands))
+    match = document_of(found)["matches"][0]
+    assert {sink: each["state"] for sink, each in match["sinks"].items()} == {
+        "lanes": "taken", "store": "refused", "river": "behind"
+    }  # fmt: skip
+    assert match["sinks"]["store"]["detail"] == "no such series"
+    assert match["repairs"] == {"archive": {"sent": True, "through": 1}}
+    assert "these refused it: store; these are before that batch and so do not have it: river." in match["explanation"]
+    assert match["explanation"].endswith("Sent as a repair to archive.")
+    alone = trace(journal, question(id="old"), path, budget(), Standing(["gw-1"], {"lanes": {"late": 1}}))
+    assert "No other sink takes that lane now." in document_of(alone)["matches"][0]["explanation"]
+
+
+async def test_where_there_is_no_journal_the_lane_store_is_looked_through(tmp_path: Path) -> None:
+    path, story = tmp_path / "lanes.db", late_story()
+    await (await store_of(path, story)).close()
+    answer = document_of(trace_kept(question(id="old"), path, budget()))
+    match = answer["matches"][0]
+    assert (match["fate"], match["matched_by"], match["late"]["batch"], match["sinks"]) == ("late", "kept", 1, {})
+    assert match["explanation"].endswith("the lane store keeps it. Which sinks took it is not known any more.")
+    assert answer["searched"]["journal"] is False and "only the lane store was looked through" in answer["notes"][0]
+    gone = document_of(trace_kept(question(id="new"), path, budget()))
+    assert gone["found"] == 0 and len(gone["notes"]) == 1
+    absent = trace_kept(question(id="old"), tmp_path / "absent.db", budget())
+    assert not absent.found
+
+
+async def test_a_partition_is_not_told_to_keep_its_journal_for_longer(tmp_path: Path) -> None:
+    journal = short_of(late_story())
+    for partition in (False, True):
+        wanted = dataclasses.replace(question(id="new"), partition=partition)
+        (note,) = told(journal, wanted, tmp_path / "absent.db")["notes"]
+        assert ("journal.retain" in note) is not partition
+        assert ("the stream keeps the message, the stores keep the event" in note) is partition
 
 
 def test_an_event_whose_digest_collides_is_not_taken_for_the_one_that_is_meant() -> None:

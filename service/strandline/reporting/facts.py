@@ -260,3 +260,4 @@ class Facts(Fact, frozen=True, kw_only=True):
     late: Late | None
     trouble: Trouble
     acts: Acts
+    partition: bool = False  # of a cluster: other instances may have owned it in this time

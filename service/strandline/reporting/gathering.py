@@ -18,7 +18,7 @@ from ..core.columns import NO_SOURCE, TIME_MIN
 from ..core.holds import Held
 from ..core.records import ActRecord
 from ..core.view import View
-from ..dashboard.history import SINKS, Rows, merged, starts_of
+from ..dashboard.history import SECOND_NS, SINKS, Rows, merged, starts_of
 from ..dashboard.sampling import BOOKS, FeedMemory
 from ..errors import StrandlineError
 from ..hops import HOPS
@@ -70,6 +70,8 @@ class Look:
     recognises_repeats: bool
     failure: str | None
     lanes_file: Path
+    partition: bool
+    since_ns: int  # nothing is remembered of what was before
     flush_after_ns: int  # the longest that a sink of the feed keeps what it took before it completes it, as configured
 
 
@@ -95,6 +97,8 @@ def look(memory: FeedMemory, from_ns: int, to_ns: int) -> Look:
         recognises_repeats=runtime.config.id is not None,
         failure=runtime.failure,
         lanes_file=runtime.lanes_file,
+        partition=runtime.config.partitions is not None,
+        since_ns=memory.since_ns,
         flush_after_ns=round(max((each.flush_after_s for each in runtime.deliveries.values()), default=0.0) * 1e9),
     )
 
@@ -123,6 +127,7 @@ def facts_of(seen: Look) -> Facts:
         late=_late(seen),
         trouble=_trouble(seen),
         acts=_acts(seen),
+        partition=seen.partition,
     )
 
 
@@ -157,7 +162,7 @@ def _series(seen: Look) -> Series:
     ]
     return Series(
         step_ns=step_ns,
-        since_ns=int(rows["t_ns"][0]) if len(rows) else None,
+        since_ns=_since_ns(seen, int(rows["t_ns"][0])) if len(rows) else None,
         t_ns=rows["t_ns"].tolist(),
         behind_ns=behind,
         waited_ns=oldest["runs"],
@@ -168,6 +173,11 @@ def _series(seen: Look) -> Series:
         undelivered_ns=[max(0, waited_ns - seen.flush_after_ns) for waited_ns in oldest["sinks"]],
         balanced=bool(rows["balanced"].all()),
     )
+
+
+def _since_ns(seen: Look, first_ns: int) -> int:
+    """The first step's begin, or when the memory itself begins within it: a coarse step may lie before that."""
+    return max(first_ns, seen.since_ns // SECOND_NS * SECOND_NS)
 
 
 def _books(seen: Look) -> Books:

@@ -43,8 +43,9 @@ async def get_report(request: web.Request) -> web.Response:
     if form not in FORMATS:
         raise web.HTTPBadRequest(text=f"?format= must be one of {', '.join(FORMATS)}, it is {form[:50]!a}")
     from_ns, to_ns = _time(request, runtime.clock.now_ns())
+    memory = request.app[WATCHES].of(runtime).memory  # before waiting: a partition may go meanwhile
     async with request.app[TURNS]:
-        seen = look(request.app[WATCHES][runtime.config.name].memory, from_ns, to_ns)
+        seen = look(memory, from_ns, to_ns)
         body, media_type = await asyncio.to_thread(lambda: written(facts_of(seen), form))
     return web.Response(body=body, content_type=media_type, charset="utf-8", headers=HEADERS)
 

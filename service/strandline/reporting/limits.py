@@ -6,6 +6,7 @@ from collections.abc import Iterator
 
 from .facts import Facts
 from .holding import STALL_AT_LEAST_NS
+from .knowing import is_lane_whole
 from .words import Clock, Words, lasted
 
 
@@ -22,15 +23,25 @@ def _missing(facts: Facts, clock: Clock) -> Iterator[str]:
     elif known > facts.from_ns:
         yield f"Holds are known from {clock.at(known)} on; what was before it is not."
     if since is None or since >= facts.to_ns:
+        begun = "this instance took the partition over later, or was started later" if facts.partition else (
+            "it was started later"
+        )  # fmt: skip
         yield (
-            "The process keeps delays, failing sinks and counts in memory, and has none of this time: it was started "
-            "later, or the time lies more than a day back."
+            f"The process keeps delays, failing sinks and counts in memory, and has none of this time: {begun}, or the "
+            "time lies more than a day back."
         )
     elif since > facts.from_ns:
+        begun = "this instance took the partition over then, or" if facts.partition else "the process"
         yield (
-            f"Delays, failing sinks and counts are known from {clock.at(since)} on: the process was started then, or "
+            f"Delays, failing sinks and counts are known from {clock.at(since)} on: {begun} was started then, or "
             "keeps no more. What they were before it is not known, and no stall is told of it in which a source was "
             "merely furthest behind."
+        )
+    if not is_lane_whole(facts):
+        yield (
+            "Late events, and events that a sink refused for good, are told from this instance's late lane. What was "
+            "late or refused while another instance owned the partition is kept there: strandline late list, on that "
+            "instance's machine."
         )
     if facts.trouble.refused_rows is None or facts.late is None:
         yield "What the late lane keeps could not be read when this report was made."

@@ -13,6 +13,7 @@ from typing import NamedTuple
 from ..page_style import OKABE_ITO
 from .facts import Facts, Hold
 from .holding import USUAL
+from .knowing import why_words
 from .sentences import burst_words
 from .tables import WHYS
 from .words import DAY_NS, SECOND_NS, Clock, Foreign, full, lasted
@@ -67,7 +68,7 @@ def picture(facts: Facts) -> str:
     parts = [
         *_ticks(scale, lanes_top - 4, axis),
         *_unknown(facts, scale, lanes_top, behind_top - 26),
-        *_holds(lanes, scale, lanes_top, Clock(facts.from_ns, facts.to_ns)),
+        *_holds(facts, lanes, scale, lanes_top),
         *_stalls(facts, [name for name, _ in lanes], scale, lanes_top),
         *_behind(facts, scale, behind_top),
         *_late(facts, scale, late_top),
@@ -123,7 +124,7 @@ def _lanes(facts: Facts) -> list[tuple[str, list[Hold]]]:
         if hold.why in USUAL:
             usual += [] if hold.why == "nothing_held" else [hold]
             continue
-        by_name.setdefault(_name(hold), []).append(hold)
+        by_name.setdefault(_name(hold, facts), []).append(hold)
     order = sorted(by_name, key=lambda name: -sum(hold.lasted_ns for hold in by_name[name]))
     lanes = [(name, by_name[name]) for name in order[:LANES_AT_MOST]]
     others = [hold for name in order[LANES_AT_MOST:] for hold in by_name[name]]
@@ -131,19 +132,21 @@ def _lanes(facts: Facts) -> list[tuple[str, list[Hold]]]:
     return [*lanes, ("waiting out the slack", usual)]
 
 
-def _name(hold: Hold) -> str:
+def _name(hold: Hold, facts: Facts) -> str:
     if hold.source is not None:
         return Foreign(hold.source).shown
     if hold.sink is not None:
         return f"sink {Foreign(hold.sink).shown}"
-    return {"stopped": "service stopped", "all_silent": "all silent"}.get(hold.why, hold.why)
+    stopped = "taken over or started" if facts.partition else "service stopped"
+    return {"stopped": stopped, "all_silent": "all silent"}.get(hold.why, hold.why)
 
 
 def _short(name: str) -> str:
     return name if len(name) <= NAME_CHARACTERS else name[: NAME_CHARACTERS - 1] + "…"
 
 
-def _holds(lanes: list[tuple[str, list[Hold]]], scale: Scale, top: float, clock: Clock) -> Iterator[str]:
+def _holds(facts: Facts, lanes: list[tuple[str, list[Hold]]], scale: Scale, top: float) -> Iterator[str]:
+    clock = Clock(facts.from_ns, facts.to_ns)
     for place, (name, holds) in enumerate(lanes):
         y = top + place * LANE
         yield _text(LEFT - 10, y + BAR - 3, _short(name), ' text-anchor="end"')
@@ -151,7 +154,7 @@ def _holds(lanes: list[tuple[str, list[Hold]]], scale: Scale, top: float, clock:
         for hold in holds:
             x = scale.x(hold.from_ns)
             look = _look(hold.why)
-            title = f"{_name(hold)}: {WHYS.get(hold.why, hold.why)}, {clock.at(hold.from_ns)} to "
+            title = f"{_name(hold, facts)}: {why_words(hold.why, WHYS, facts)}, {clock.at(hold.from_ns)} to "
             title += f"{clock.at(hold.to_ns)}, {lasted(hold.lasted_ns)}"
             yield _rect((x, y, scale.x(hold.to_ns) - x, BAR), look, title)
 
@@ -159,7 +162,7 @@ def _holds(lanes: list[tuple[str, list[Hold]]], scale: Scale, top: float, clock:
 def _stalls(facts: Facts, names: list[str], scale: Scale, top: float) -> Iterator[str]:
     """A stroke below what is a stall."""
     for stall in facts.holds.stalls:
-        name = _name(stall.phases[0])
+        name = _name(stall.phases[0], facts)
         y = top + (names.index(name) if name in names else len(names) - 2) * LANE + BAR + 2
         x = scale.x(stall.from_ns)
         yield _rect((x, y, scale.x(stall.to_ns) - x, 3), 'class="dark"', f"stall: {name}, {lasted(stall.lasted_ns)}")
@@ -185,7 +188,7 @@ def _legend(facts: Facts, top: float) -> Iterator[str]:
     whys = [why for why in WHYS if why in found]
     for place, why in enumerate(whys):
         x, y = LEFT + place % 2 * 390, top + place // 2 * 20
-        label = _text(x + 18, y + 10, WHYS[why], ' class="dim"')
+        label = _text(x + 18, y + 10, why_words(why, WHYS, facts), ' class="dim"')
         yield f'<rect x="{x}" y="{y}" width="12" height="12" {_look(why)}/>{label}'
     if facts.holds.stalls:
         x, y = LEFT + len(whys) % 2 * 390, top + len(whys) // 2 * 20

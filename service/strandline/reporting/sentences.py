@@ -11,6 +11,7 @@ from collections.abc import Iterator
 from .delays import worst_of
 from .facts import Act, Burst, Count, Delay, Facts, Late, Stall
 from .holding import STALL_AT_LEAST_NS
+from .knowing import is_lane_whole, other_lanes, seen_since_ns, seer, stopped_words
 from .words import Clock, Foreign, Words, count, joined, lasted, plain, say, share, span
 
 PHASES = {
@@ -42,7 +43,7 @@ def paragraphs(facts: Facts) -> list[list[Words]]:
     clock = Clock(facts.from_ns, facts.to_ns)
     found = [list(_head(facts)), *_stalls(facts, clock), list(_delay(facts, clock)), list(_late(facts, clock))]
     found += [list(_books(facts, clock)), *([each] for each in _trouble(facts, clock))]
-    found += [*([each] for each in _acts(facts, clock)), list(_slack(facts))]
+    found += [*([each] for each in _acts(facts, clock)), list(_slack(facts, clock))]
     return [sentences for sentences in found if sentences]
 
 
@@ -90,7 +91,7 @@ def _stall(stall: Stall, delay: Delay, facts: Facts, clock: Clock) -> Iterator[W
         phases = joined([_phase(phase.why, phase.lasted_ns, len(stall.phases)) for phase in stall.phases], "; ", "; ")
         yield say(f"{when} {{who}} held the feed: it {{phases}}.", who=who, phases=phases)
     elif why == "stopped":
-        yield (f"{when} the service was stopped or starting; what was held waited for it.",)
+        yield (f"{when} {stopped_words(facts)}; what was held waited for it.",)
     elif why == "all_silent":
         yield (
             f"{when} no source was waited for, since all were silent or excused; what was held waited for "
@@ -163,16 +164,20 @@ def _behind(stall: Stall, delay: Delay, clock: Clock) -> Iterator[Words]:
 
 def _late(facts: Facts, clock: Clock) -> Iterator[Words]:
     late, begin, end = facts.late, facts.books.begin, facts.books.end
+    whole = is_lane_whole(facts)
     counted = end.late - begin.late if begin is not None and end is not None else None
     if late is None:
         yield ("The late lane could not be read, so which sources' events were late is not known.",)
-    elif not late.events:
-        if counted is None:
-            yield ("The late lane keeps no event of this time.",)
-        elif not counted:
-            yield ("No event was late.",)
-    else:
-        yield from _late_events(late, clock)
+    elif late.events:
+        yield from _late_events(late, clock, "" if whole else "As far as this instance's late lane goes, ")
+    elif counted is None or not whole:
+        yield (f"The late lane{'' if whole else ' of this instance'} keeps no event of this time.",)
+    elif not counted:
+        since_ns = seen_since_ns(facts)
+        since = "" if since_ns is None else f" since {clock.at(since_ns)}, and of before the late lane keeps none"
+        yield (f"No event was late{since}.",)
+    if not whole:
+        yield other_lanes(facts, clock)
     if counted and begin is not None and end is not None and counted != (late.events if late else None):
         kept = "" if late is None else f"; the late lane keeps {late.events:,} of this time"
         fewer = late is not None and late.events < counted
@@ -181,13 +186,13 @@ def _late(facts: Facts, clock: Clock) -> Iterator[Words]:
         yield (f"The books count {counted:,} late {span}{kept}{forgotten}.",)
 
 
-def _late_events(late: Late, clock: Clock) -> Iterator[Words]:
+def _late_events(late: Late, clock: Clock, begin: str) -> Iterator[Words]:
     events, they, them = count(late.events, "event"), *(("It", "it") if late.events == 1 else ("They", "them"))
     if late.unlisted_sources or len(late.sources) > 1:
-        text = f"{events} came too late to be put in order: {{sources}}. The late lane keeps {them}."
+        text = f"{begin}{events} came too late to be put in order: {{sources}}. The late lane keeps {them}."
         yield say(text, sources=_late_sources(late))
     else:
-        text = f"{events} of {{source}} came too late to be put in order. The late lane keeps {them}."
+        text = f"{begin}{events} of {{source}} came too late to be put in order. The late lane keeps {them}."
         yield say(text, source=source_name(late.sources[0].source))
     first = clock.at(min(each.from_ns for each in late.sources))
     last = clock.at(max(each.to_ns for each in late.sources))
@@ -275,8 +280,15 @@ def _trouble(facts: Facts, clock: Clock) -> Iterator[Words]:
         yield (f"{refused} refused whole{reasons}; nothing of that was taken, and the senders were told so.",)
     if trouble.failure is not None:
         yield say("The feed has failed and takes nothing more: {why}.", why=Foreign(trouble.failure.rstrip(".")))
-    if facts.series.t_ns and not (sinks or trouble.refused_rows or trouble.refused_requests or trouble.failure):
+    since_ns = seen_since_ns(facts)
+    nothing = not (sinks or trouble.refused_rows or trouble.refused_requests or trouble.failure)
+    if not facts.series.t_ns:
+        return
+    if since_ns is None and nothing:
         yield ("No sink was seen failing, and no request was refused.",)
+    elif since_ns is not None:
+        what = "no sink was failing, and no request was refused" if nothing else "nothing else of that kind is known"
+        yield (f"As far as {seer(facts)} saw, since {clock.at(since_ns)}, {what}.",)
 
 
 def _waiting(facts: Facts, sink: str) -> str:
@@ -317,8 +329,9 @@ def _delay(facts: Facts, clock: Clock) -> Iterator[Words]:
         yield ("How far the output was behind is not known for this time.",)
         return
     time = "At worst in this time"
-    if series.since_ns is not None and series.since_ns > facts.from_ns + series.step_ns:
-        time = f"At worst from {clock.at(series.since_ns)} on, since when it is known"
+    since_ns = seen_since_ns(facts)
+    if since_ns is not None:
+        time = f"At worst from {clock.at(since_ns)} on, since when it is known"
     text = f"{time}, the ordered output was {lasted(behind[0])} behind the newest event (at "
     text += clock.at(behind[1]) + ")"
     if waited[0]:
@@ -333,20 +346,21 @@ def _delay(facts: Facts, clock: Clock) -> Iterator[Words]:
         yield (text + ".",)
 
 
-def _slack(facts: Facts) -> Iterator[Words]:
+def _slack(facts: Facts, clock: Clock) -> Iterator[Words]:
     slack = facts.series.slack_ns
     if not slack:
         return
-    least, most = min(slack), max(slack)
+    least, most, since_ns = min(slack), max(slack), seen_since_ns(facts)
+    known = "" if since_ns is None else f" (known since {clock.at(since_ns)})"
     if facts.late_share_target is None:
         moved = f"was {lasted(most)}" if least == most else f"lay between {lasted(least)} and {lasted(most)}"
-        yield (f"The slack {moved}.",)
+        yield (f"The slack {moved}{known}.",)
         return
     target = f"{100 * facts.late_share_target:g} %"
     begin, end = lasted(slack[0]), lasted(slack[-1])
     yield (
         f"The slack is steered towards {target} late: it went from {begin} to {end}, and lay between {lasted(least)} "
-        f"and {lasted(most)}.",
+        f"and {lasted(most)}{known}.",
     )
 
 

@@ -6,6 +6,7 @@ from typing import NamedTuple
 
 from .delays import worst_of
 from .facts import Count, Facts, Stall
+from .knowing import is_lane_whole, seen_since_ns, why_words
 from .sentences import done, holder, source_name
 from .words import Clock, Foreign, Words, joined, lasted, say
 
@@ -59,7 +60,8 @@ def stalls(facts: Facts) -> Table:
     clock, holds = Clock(facts.from_ns, facts.to_ns), facts.holds
     rows: list[tuple[Words, ...]] = []
     for stall in holds.stalls:
-        why = joined([(f"{WHYS.get(one.why, one.why)}: {lasted(one.lasted_ns)}",) for one in stall.phases], "; ", "; ")
+        phases = [(f"{why_words(one.why, WHYS, facts)}: {lasted(one.lasted_ns)}",) for one in stall.phases]
+        why = joined(phases, "; ", "; ")
         who_held = holder(stall) if stall.source is not None or stall.sink is not None else NOTHING
         rows.append(((clock.at(stall.from_ns),), (_end(stall, clock),), (lasted(stall.lasted_ns),), who_held, why))
     listed_ns = sum(stall.lasted_ns for stall in holds.stalls)
@@ -75,7 +77,12 @@ def totals(facts: Facts) -> Table:
     """What each had of the time."""
     holds = facts.holds
     rows: list[tuple[Words, ...]] = [
-        ((WHYS.get(each.why, each.why),), who(each.source, each.sink), (lasted(each.lasted_ns),), (f"{each.holds:,}",))
+        (
+            (why_words(each.why, WHYS, facts),),
+            who(each.source, each.sink),
+            (lasted(each.lasted_ns),),
+            (f"{each.holds:,}",),
+        )
         for each in holds.totals
     ]
     rows += _more(holds.unlisted_totals, lasted(holds.unlisted_totals_ns), 4, 2)
@@ -91,7 +98,7 @@ def holds(facts: Facts) -> Table:
             (clock.at(each.to_ns),),
             (lasted(each.lasted_ns),),
             who(each.source, each.sink),
-            (WHYS.get(each.why, each.why),),
+            (why_words(each.why, WHYS, facts),),
         )
         for each in known.listed
     ]
@@ -119,7 +126,11 @@ def late_sources(facts: Facts) -> Table:
         for each in late.sources
     ]
     rows += _more(late.unlisted_sources, f"{late.unlisted_events:,}", 5, 1)
-    return Table("Late events by source", headings, rows, (1, 4), "None is kept.")
+    return Table(f"Late events by source{_of_lane(facts)}", headings, rows, (1, 4), "None is kept.")
+
+
+def _of_lane(facts: Facts) -> str:
+    return "" if is_lane_whole(facts) else ", as far as this instance's late lane goes"
 
 
 def bursts(facts: Facts) -> Table:
@@ -140,7 +151,12 @@ def bursts(facts: Facts) -> Table:
         for each in late.bursts
     ]
     rows += _more(late.unlisted_bursts, "", 6, 3)
-    return Table("Bursts of late events", headings, rows, (3, 4, 5), "None.")
+    return Table(f"Bursts of late events{_of_lane(facts)}", headings, rows, (3, 4, 5), "None.")
+
+
+def _since(facts: Facts, clock: Clock) -> str:
+    since_ns = seen_since_ns(facts)
+    return "" if since_ns is None else f" since {clock.at(since_ns)}"
 
 
 def failing(facts: Facts) -> Table:
@@ -156,7 +172,7 @@ def failing(facts: Facts) -> Table:
         for each in trouble.failing
     ]
     rows += _more(trouble.unlisted_failing, "", 4, 3)
-    empty = "None was seen failing." if facts.series.t_ns else "Not known."
+    empty = f"None was seen failing{_since(facts, clock)}." if facts.series.t_ns else "Not known."
     return Table("When sinks were failing", ("sink", "from", "to", "for"), rows, (3,), empty)
 
 
@@ -183,7 +199,8 @@ def refused(facts: Facts) -> Table:
         for one in facts.trouble.refused_rows or ()
     ]
     number = facts.trouble.refused_requests
-    rows.append((("requests in this time",), NOT_KNOWN if number is None else (f"{number:,}",), NOTHING))
+    when = _since(facts, Clock(facts.from_ns, facts.to_ns)) if number is not None else ""
+    rows.append(((f"requests{when or ' in this time'}",), NOT_KNOWN if number is None else (f"{number:,}",), NOTHING))
     for reason, times in sorted(facts.trouble.refusals_since_start.items()):
         rows.append((("requests since the process was started",), (f"{times:,}",), (reason,)))
     return Table("What was refused", ("what", "how many", "reason"), rows, (1,))

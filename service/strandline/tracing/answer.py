@@ -16,17 +16,26 @@ from ..documents import time_text
 from ..errors import FAULT_REASONS
 from ..sinks.lane_tables import LateRow, QuarantineRow
 from .scanning import EVENT_BYTES_AT_MOST, MATCHES_AT_MOST, Match
-from .trace import Traced, place_of
+from .trace import Traced, kept_event, kept_lane, place_of
 from .words import CAUSES, explained
 
 Json = dict[str, Any]
+WITHOUT_JOURNAL = (
+    "there is no journal in this folder, so only the lane store was looked through: late events, and by their id lines "
+    "in quarantine. What was held, released or a repeat cannot be found here: ask the running service, for a partition "
+    "its owner. A former owner of a partition keeps what was late or faulty while it owned it, nothing else"
+)
+ELSEWHERE = (
+    "the stream keeps the message, the stores keep the event; what was late or faulty while another instance owned "
+    "the partition is in that one's lane store: `strandline trace --data-dir` there"
+)
 
 
 def document_of(found: Traced) -> Json:
     """The whole answer."""
     matches = [_match(found, match) for match in found.scanned.matches]
     kept: list[LateRow | QuarantineRow] = [*found.kept_late, *found.kept_quarantine]
-    older = [_kept(row) for row in sorted(kept, key=lambda row: row.arrived_ns)]
+    older = [_kept(found, row) for row in sorted(kept, key=lambda row: row.arrived_ns)]
     for each in (every := [*older, *matches]):
         each["explanation"] = explained(each)
     return {
@@ -158,7 +167,7 @@ def _held(found: Traced, match: Match, held: Held, state: State) -> Json:
         "watermark": time_text(stands),
         "watermark_ns": stands,
         "lacks_s": None if stands is None else (match.target.time_ns - stands) / 1e9,
-        "slack_s": state.slack_ns / 1e9,
+        "slack_s": _slack_ns(state, match.source) / 1e9,
         "hold": {
             "why": hold.why,
             "explanation": HOLD_WHYS[hold.why],
@@ -171,6 +180,14 @@ def _held(found: Traced, match: Match, held: Held, state: State) -> Json:
         "held_for_s": (now_ns - match.arrived_ns) / 1e9,
         "at_the_latest": time_text(min(match.arrived_ns + state.settings.hold_at_most_ns, 2**63 - 1)),
     }
+
+
+def _slack_ns(state: State, source: int | None) -> int:
+    """The slack in force for a source."""
+    slacks_ns = state.slacks_ns
+    if isinstance(slacks_ns, int):
+        return slacks_ns
+    return state.slack_ns if source is None else int(slacks_ns[source])
 
 
 def _sinks(found: Traced, match: Match, followed: Followed) -> Json:
@@ -189,13 +206,16 @@ def _sinks(found: Traced, match: Match, followed: Followed) -> Json:
     document: Json = {"sinks": sinks}
     record = found.late.get(match.target)
     if record is not None:
-        number = record.number
-        document["kept_as"] = number
-        document["repairs"] = {
-            sink: {"sent": number is not None and number <= through, "through": through}
-            for sink, through in sorted(record.repaired_through.items())
-        }
+        document["kept_as"] = record.number
+        document["repairs"] = _repairs(record.number, record.repaired_through)
     return document
+
+
+def _repairs(number: int | None, repaired_through: dict[str, int]) -> Json:
+    return {
+        sink: {"sent": number is not None and number <= through, "through": through}
+        for sink, through in sorted(repaired_through.items())
+    }
 
 
 def _unknown(found: Traced, match: Match) -> Json:
@@ -207,9 +227,20 @@ def _unknown(found: Traced, match: Match) -> Json:
     }
 
 
-def _kept(row: LateRow | QuarantineRow) -> Json:
+def _kept_sinks(found: Traced, row: LateRow | QuarantineRow) -> Json:
+    """By sink that takes its lane now. What stands before its batch was not given it: the journal would be kept."""
+    lane, sinks = kept_lane(row), dict[str, Json]()
+    refused = found.kept_refused[lane, row.number]
+    for sink, lanes in sorted(found.standing.positions.items()):
+        if lane in lanes:
+            state = "refused" if sink in refused else "taken" if lanes[lane] >= row.batch else "behind"
+            sinks[sink] = {"state": state, "taken_up_to_batch": lanes[lane], "detail": refused.get(sink)}
+    return sinks
+
+
+def _kept(found: Traced, row: LateRow | QuarantineRow) -> Json:
     """A row of the lane store whose request is no longer in the journal."""
-    event = row.event.encode(errors="surrogatepass") if isinstance(row, LateRow) else row.event
+    event = kept_event(row)
     line = None if isinstance(row, LateRow) else row.line
     document: Json = {
         "event": event[:EVENT_BYTES_AT_MOST].decode(errors="replace"),
@@ -223,10 +254,10 @@ def _kept(row: LateRow | QuarantineRow) -> Json:
                     "line": line, "events": None, "idempotency_key": None},
         "watermark": None,
         "kept_as": row.number,
-        "sinks": {},
+        "sinks": _kept_sinks(found, row),
     }  # fmt: skip
     if isinstance(row, LateRow):
-        return document | {"fate": "late", "late": {
+        return document | {"fate": "late", "repairs": _repairs(row.number, found.repaired_through), "late": {
             "batch": row.batch, "position": None, "late_by_s": row.late_by_ns / 1e9, "late_by_ns": row.late_by_ns,
             "behind": time_text(row.watermark_ns),
         }}  # fmt: skip
@@ -244,6 +275,7 @@ def _searched(found: Traced) -> Json:
         "arrived_from": time_text(scanned.begin_ns),
         "journal_begins_at": found.first_lsn,
         "complete": scanned.complete,
+        "journal": not found.without_journal,
         "bytes_read": found.budget.read,
         "bytes_at_most": found.budget.bytes_at_most,
     }
@@ -251,6 +283,8 @@ def _searched(found: Traced) -> Json:
 
 def _notes(found: Traced) -> list[str]:
     scanned, notes = found.scanned, list[str]()
+    if found.without_journal:
+        notes.append(WITHOUT_JOURNAL)
     if scanned.more:
         notes.append(
             f"there are more: the newest {MATCHES_AT_MOST} are shown, and the search ended there; "
@@ -263,9 +297,11 @@ def _notes(found: Traced) -> list[str]:
         )
     if found.first_lsn > 0:
         since = f", which arrived at {time_text(scanned.begin_ns)}" if scanned.complete and scanned.begin_ns else ""
+        partition = found.question.partition
+        begins = f"the journal {'of a partition is short: it is here' if partition else 'is kept'} from position"
         notes.append(
-            f"the journal is kept from position {found.first_lsn} on{since}; what came before and was taken by every "
-            "sink is no longer in it: look in the stores, or keep it for longer with `journal.retain`"
+            f"{begins} {found.first_lsn} on{since}; what came before and was taken by every sink is no longer in it: "
+            + (ELSEWHERE if partition else "look in the stores, or keep it for longer with `journal.retain`")
         )
     if scanned.without_ids:
         notes.append(

@@ -24,7 +24,7 @@ from ..journal.journal import Journal
 from .answer import document_of
 from .budget import Budget
 from .question import LineReader, Question, QuestionError, question_of
-from .trace import OFFLINE_BYTES_AT_MOST, OPENINGS, trace
+from .trace import OFFLINE_BYTES_AT_MOST, OPENINGS, trace, trace_kept
 from .words import because
 
 ANY_HOST = ("0.0.0.0", "::", "")
@@ -99,14 +99,17 @@ def _asked(options: argparse.Namespace, url: str) -> Json:
 
 def _offline(options: argparse.Namespace, config: Config | None) -> Json:
     """From the folder. Raises StrandlineError, OSError, ConfigError."""
-    reader = None
+    reader, partition = None, False
     if config is not None:
         options.data_dir = None
         feed = config.feed(options.feed)
-        reader = None if feed is None else LineReader.of(feed)
+        if feed is not None:
+            reader, partition = LineReader.of(feed), feed.partitions is not None
     lanes = lanes_path(options)
     try:
-        question = question_of(options.feed, reader, options.id, options.time, options.source)
+        question = question_of(
+            options.feed, reader, options.id, options.time, options.source, partition=partition
+        )  # fmt: skip
     except QuestionError as error:
         raise ConfigError([str(error)]) from None
     for attempt in range(OPENINGS):
@@ -120,6 +123,10 @@ def _offline(options: argparse.Namespace, config: Config | None) -> Json:
 
 def _read(question: Question, lanes: Path) -> Json:
     journal = _opened(lanes.parent)
+    if journal is None:
+        if not lanes.exists():
+            raise StrandlineError(f"{lanes.parent}: there is no journal in it, or nothing in the journal yet")
+        return document_of(trace_kept(question, lanes, Budget(OFFLINE_BYTES_AT_MOST, lambda: False)))
     try:
         size = max(1, (journal.durable_lsn - journal.first_lsn) // MEGABYTE)
         with bar("journal read", "MB", size) as tell:
@@ -130,7 +137,8 @@ def _read(question: Question, lanes: Path) -> Json:
         journal.close()
 
 
-def _opened(folder: Path) -> Journal:
+def _opened(folder: Path) -> Journal | None:
+    """The journal of a feed's folder; None where there is none, or nothing in it yet."""
     disk = LocalDisk(folder.parent, read_only=True)
     for attempt in range(OPENINGS):  # a service that runs after all may begin or delete a segment meanwhile
         try:
@@ -140,7 +148,8 @@ def _opened(folder: Path) -> Journal:
                 raise
             continue
         if journal.durable_lsn == journal.first_lsn == 0:
-            raise StrandlineError(f"{folder}: there is no journal in it, or nothing in the journal yet")
+            journal.close()
+            return None
         return journal
     raise AssertionError("the last attempt returns or raises")
 
@@ -168,7 +177,7 @@ def told(document: Json) -> Iterator[str]:
 def _rows(match: Json) -> Iterator[tuple[str, str]]:
     arrival = match["arrival"]
     if arrival["position"] is None:
-        yield "arrived", f"{arrival['arrived']}; its request is no longer in the journal"
+        yield "arrived", f"{arrival['arrived']}; its request is in no journal here any more"
     else:
         key = "" if arrival["idempotency_key"] is None else f", Idempotency-Key {arrival['idempotency_key']}"
         of = f"line {arrival['line']} of the request at position {arrival['position']} with {arrival['events']:,} lines"
@@ -196,6 +205,8 @@ def _question(asked: Json) -> str:
 
 
 def _searched(searched: Json) -> str:
+    if not searched.get("journal", True):
+        return "the lane store; there is no journal in this folder"
     since = "" if searched["arrived_from"] is None else f", which arrived since {searched['arrived_from']}"
     return (
         f"the journal from position {searched['from_position']} to {searched['to_position']}{since}; "

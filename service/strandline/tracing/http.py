@@ -84,13 +84,20 @@ async def get_trace(request: web.Request) -> web.Response:
         body = await traces.answer(runtime, question)
     except Abandoned:
         return problem(503, "Service Unavailable", "the service is stopping", headers={"Retry-After": "5"})
+    except OSError:
+        if runtime.accepting:
+            raise
+        detail = f"feed {question.feed} has gone from this instance meanwhile, and its journal with it"
+        return problem(503, "Service Unavailable", detail, headers={"Retry-After": "5"})
     return web.Response(body=body, content_type="application/json")
 
 
 def _question(request: web.Request, runtime: FeedRuntime) -> Question:
     id, time, source = (request.query.get(name) for name in ASKED)
     try:
-        return question_of(runtime.config.name, LineReader.of(runtime.config), id, time, source)
+        config = runtime.config
+        partition = config.partitions is not None
+        return question_of(config.name, LineReader.of(config), id, time, source, partition=partition)
     except QuestionError as error:
         raise web.HTTPBadRequest(text=f"?id=, ?time= and ?source=: {error}") from None
 

@@ -78,6 +78,7 @@ class Question:
     """Which events are wanted: by `id`, or by `time_ns`; of one `source`, if named.
 
     `reader` None: the feed's pointers are not known, so that only the columns of the journal can be compared.
+    `partition`: the feed is known to be a partition of a cluster, whose journal is a short copy.
     """
 
     feed: str
@@ -85,6 +86,7 @@ class Question:
     time_ns: int | None = None
     source: str | None = None
     reader: LineReader | None = None
+    partition: bool = False
 
     def identities(self, names: Sequence[str]) -> list[int]:
         """The digests under which the journal knows the id, for each source that may have sent it."""
@@ -102,8 +104,9 @@ class Question:
 
 
 def question_of(
-    feed: str, reader: LineReader | None, id: str | None, time: str | None, source: str | None
-) -> Question:
+    feed: str, reader: LineReader | None, id: str | None, time: str | None, source: str | None, *,
+    partition: bool = False,
+) -> Question:  # fmt: skip
     """The question that texts ask. Raises QuestionError."""
     if (id is None) == (time is None):
         raise QuestionError("name either an id or a time of the event")
@@ -114,7 +117,7 @@ def question_of(
     if source is not None and not is_source(source):
         raise QuestionError(f"the source must be a text of 1 to {SOURCE_BYTES_AT_MOST} bytes without U+0000")
     time_ns = None if time is None else time_of(time, None if reader is None else reader.unit)
-    return Question(feed, id, time_ns, source, reader)
+    return Question(feed, id, time_ns, source, reader, partition)
 
 
 def _is_id(text: str) -> bool:

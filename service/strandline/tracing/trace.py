@@ -16,12 +16,20 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 from pathlib import Path
 
-from ..core.columns import NO_SOURCE, TIME_MIN
+from ..core.columns import NO_SOURCE, TIME_MAX, TIME_MIN, Lane
 from ..core.tracing import Followed, Late, Quarantined, Released, Stood, Target
 from ..errors import JournalError
 from ..journal.journal import Journal
 from ..sinks.lane_tables import LateRow, QuarantineRow
-from ..sinks.lane_tracing import LateRecord, kept_late, kept_quarantine, late_record, refusals
+from ..sinks.lane_tracing import (
+    LateRecord,
+    kept_late,
+    kept_quarantine,
+    late_record,
+    refusals,
+    refusals_of,
+    repaired_through,
+)
 from .budget import Budget, Spent
 from .following import Course, Standing, Starts, follow, mark_of, origins, standing_of
 from .question import Question
@@ -49,6 +57,9 @@ class Traced:
     late: dict[Target, LateRecord] = field(default_factory=dict)
     kept_late: list[LateRow] = field(default_factory=list)
     kept_quarantine: list[QuarantineRow] = field(default_factory=list)
+    kept_refused: dict[tuple[str, int], dict[str, str]] = field(default_factory=dict)  # by lane and number
+    repaired_through: dict[str, int] = field(default_factory=dict)  # by sink, where late events were kept
+    without_journal: bool = False  # only the lane store was looked through
 
     def source_name(self, number: int | None) -> str | None:
         """A source's name; None for none."""
@@ -79,6 +90,13 @@ def trace(
             if attempt == OPENINGS - 1 or journal.first_lsn == first_lsn:
                 raise
     raise AssertionError("the last attempt returns or raises")
+
+
+def trace_kept(question: Question, lanes: Path, budget: Budget) -> Traced:
+    """Answer from the lane store alone, where there is no journal. Raises StrandlineError."""
+    found = Traced(question, Scanned(), Standing((), {}), budget, 0, 0, without_journal=True)
+    _ask_kept(found, lanes, TIME_MAX)
+    return found
 
 
 def _trace(
@@ -124,8 +142,9 @@ def _ask_lanes(found: Traced, lanes: Path) -> None:
             found.refused[match.target] = refused
         if lane == "late" and match.target.time_ns is not None:
             found.late[match.target] = late_record(lanes, batch, match.target.time_ns, match.event)
-    if found.scanned.complete:
-        _ask_kept(found, lanes)
+    scanned = found.scanned
+    if scanned.complete and found.first_lsn > 0 and scanned.begin_ns is not None:
+        _ask_kept(found, lanes, scanned.begin_ns)
 
 
 def place_of(followed: Followed) -> tuple[str, int, int] | None:
@@ -141,11 +160,10 @@ def place_of(followed: Followed) -> tuple[str, int, int] | None:
             return None
 
 
-def _ask_kept(found: Traced, lanes: Path) -> None:
+def _ask_kept(found: Traced, lanes: Path, before_ns: int) -> None:
     """What the lane store still has of the time before the journal that is kept."""
     question, room = found.question, MATCHES_AT_MOST - len(found.scanned.matches)
-    before_ns = found.scanned.begin_ns
-    if found.first_lsn == 0 or before_ns is None or room <= 0:
+    if room <= 0:
         return
     text = None if question.id is None else question.id.encode()
     abandoned = found.budget.abandoned
@@ -154,6 +172,23 @@ def _ask_kept(found: Traced, lanes: Path) -> None:
     if text is not None:
         rows = kept_quarantine(lanes, text, before_ns, room - len(found.kept_late), abandoned)
         found.kept_quarantine = [row for row in rows if _is_meant(question, row.event, question.source)]
+    kept: list[LateRow | QuarantineRow] = [*found.kept_late, *found.kept_quarantine]
+    for row in kept:
+        sinks = [sink for sink, lanes_of in found.standing.positions.items() if kept_lane(row) in lanes_of]
+        refused = refusals_of(lanes, sinks, kept_lane(row), row.batch, kept_event(row))
+        found.kept_refused[kept_lane(row), row.number] = refused
+    if found.kept_late:
+        found.repaired_through = repaired_through(lanes)
+
+
+def kept_lane(row: LateRow | QuarantineRow) -> Lane:
+    """The lane of a row of the lane store."""
+    return "late" if isinstance(row, LateRow) else "quarantine"
+
+
+def kept_event(row: LateRow | QuarantineRow) -> bytes:
+    """The bytes of the event in a row of the lane store."""
+    return row.event.encode(errors="surrogatepass") if isinstance(row, LateRow) else row.event
 
 
 def _is_meant(question: Question, event: bytes, source: str | None) -> bool:

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import Any
 
+from ..sinks_of import LANE_STORE
+
 Json = dict[str, Any]
 
 # Why a mark was set, in words for a person; keys are the names of core.records.Cause.
@@ -60,6 +62,11 @@ def _released(match: Json) -> str:
 
 def _late(match: Json) -> str:
     late, stood = match["late"], match["watermark"]
+    if match["matched_by"] == "kept":
+        return (
+            f"It came {late['late_by_s']:.3f} s too late: the watermark stood at {late['behind']}. It was handed to "
+            f"the late lane as batch {late['batch']}, and the lane store keeps it. {_kept_sinks(match)}"
+        )
     since = "" if stood is None else f", where it stood since {stood['since']} because {because(stood)}"
     return (
         f"It came {late['late_by_s']:.3f} s too late: the watermark stood at {late['behind']}{since}. "
@@ -87,16 +94,36 @@ def _unknown(match: Json) -> str:
     return f"It came, but what became of it cannot be told: {match['unknown']['why']}."
 
 
+def _kept_sinks(match: Json) -> str:
+    """Who has it by the batch's number alone: who took the lane in those days is not known."""
+    if not match["sinks"]:
+        return f"Which sinks took it is not known any more.{_repaired(match)}"
+    sinks = {sink: each for sink, each in match["sinks"].items() if sink != LANE_STORE}
+    by_state = {state: [sink for sink, each in sinks.items() if each["state"] == state] for state in _KEPT}
+    told = [f"{_KEPT[state]}: {', '.join(names)}" for state, names in by_state.items() if names]
+    now = f"Of the sinks that take that lane now, {'; '.join(told)}." if told else "No other sink takes that lane now."
+    return f"{now} Which others took it then is not known any more.{_repaired(match)}"
+
+
+_KEPT = {
+    "taken": "these are at or beyond that batch and so have it, unless one was added to the feed later",
+    "refused": "these refused it",
+    "behind": "these are before that batch and so do not have it",
+}
+
+
+def _repaired(match: Json) -> str:
+    repaired = [sink for sink, each in match.get("repairs", {}).items() if each["sent"]]
+    return f" Sent as a repair to {', '.join(repaired)}." if repaired else ""
+
+
 def _sinks(match: Json) -> str:
     by_state: dict[str, list[str]] = {}
     for sink, each in match.get("sinks", {}).items():
         by_state.setdefault(each["state"], []).append(sink)
     words = {"taken": "Taken by", "waiting": "Not yet taken by", "refused": "Refused by"}
     told = [f"{words[state]} {', '.join(by_state[state])}." for state in words if state in by_state]
-    repaired = [sink for sink, each in match.get("repairs", {}).items() if each["sent"]]
-    if repaired:
-        told.append(f"Sent as a repair to {', '.join(repaired)}.")
-    return " ".join(told) or "No sink takes this lane."
+    return (" ".join(told) + _repaired(match)).strip() or "No sink takes this lane."
 
 
 _EXPLAIN = {
