@@ -42,12 +42,14 @@ def container() -> dict[str, Any]:
 def environ() -> dict[str, str]:
     """The container's variables, with what an instance would find in them."""
     found = {"metadata.name": "strandline-2", "dsn": "postgres://u:p@db.example/telemetry"}
-    return {
-        each["name"]: found[
-            each["valueFrom"].get("fieldRef", {}).get("fieldPath") or each["valueFrom"]["secretKeyRef"]["key"]
-        ]
-        for each in container()["env"]
-    }
+    known: dict[str, str] = {}
+    for each in container()["env"]:
+        if "value" in each:  # $(NAME) stands for a variable that was named before it
+            known[each["name"]] = re.sub(r"\$\((\w+)\)", lambda name: known[name[1]], each["value"])
+        else:
+            place = each["valueFrom"].get("fieldRef", {}).get("fieldPath") or each["valueFrom"]["secretKeyRef"]["key"]
+            known[each["name"]] = found[place]
+    return known
 
 
 def configuration() -> Config:
@@ -85,6 +87,7 @@ def test_the_manifest_is_sound(tmp_path: Path) -> None:
 def test_the_configuration_loads_and_its_places_are_there() -> None:
     config = configuration()
     assert config.cluster is not None and config.cluster.instance == "strandline-2", "named after the pod"
+    assert str(config.cluster.address) == "strandline-2.strandline:8600", "as the headless Service has it"
     mounts = {mount["mountPath"]: mount["name"] for mount in container()["volumeMounts"]}
     (claim,) = objects()["StatefulSet"]["spec"]["volumeClaimTemplates"]
     assert mounts[str(config.data_dir)] == claim["metadata"]["name"], "lanes.db comes back with the pod"
@@ -151,7 +154,7 @@ def test_the_image_brings_what_its_sinks_and_the_brokers_need() -> None:
 
 def mapping() -> str:
     """The servers' account as the document shows it."""
-    (accounts,) = re.findall(r"^```\n(accounts \{.*?)^```", DOCUMENT.read_text(), re.MULTILINE | re.DOTALL)
+    (accounts,) = re.findall(r"^(accounts \{.*?^\})$", DOCUMENT.read_text(), re.MULTILINE | re.DOTALL)
     return str(accounts)
 
 

@@ -54,6 +54,7 @@ class TimedFile:
     def __init__(self, file: File, timings: Timings) -> None:
         self._file, self._timings = file, timings
         self.write, self.view, self.close = file.write, file.view, file.close
+        self.data_end = file.data_end
 
     @property
     def size(self) -> int:
