@@ -190,7 +190,7 @@ async def everything(reader: Reader, sequence: int, at_once: int = 200) -> Async
     coming: asyncio.Future[list[Msg]] | None = None
     turn = Turn()
     try:
-        while reader.pending:
+        while coming is not None or reader.pending:  # a fetch that has ended may have found that nothing is left
             found = await (coming or reader.fetch(at_once))
             coming = None
             if not found:
