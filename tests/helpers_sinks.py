@@ -96,8 +96,8 @@ class HeldLines:
 class VirtualTime:
     """A clock and a sleep that stand still until the test calls `advance`."""
 
-    def __init__(self) -> None:
-        self.now = START_NS
+    def __init__(self, now_ns: int = START_NS) -> None:
+        self.now = now_ns
         self.asked: list[float] = []
         self._sleepers: list[tuple[int, int, asyncio.Future[None]]] = []
         self._order = itertools.count()

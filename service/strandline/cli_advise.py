@@ -9,7 +9,7 @@ from __future__ import annotations
 import argparse
 import sys
 import time
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -33,7 +33,7 @@ from .replay.reorder_figures import reorder_figures
 from .replay.requests import CapturedRequests
 from .replay.sequence import name_of, read_numbers, sequence_figures
 from .replay.slacks import SLACK_NS_AT_MOST
-from .replay.wording import spelled
+from .replay.wording import decimal, spelled
 
 REORDER_EVENTS_AT_MOST = 2_000_000  # the first ones of a longer capture; some 300 bytes each
 REORDER_THRESHOLD = 10_000  # of RFC 5236: what is displaced by more counts as lost there
@@ -49,15 +49,14 @@ def advise_on(options: argparse.Namespace) -> int:
     Exit code 2, after the answer, where the report cannot be drawn.
     """
     wanted = _wanted(options)
-    with Capture(options.capture_file) as capture:
-        if _by_source(options, CapturedRequests(capture).settings):
-            return _advise_by_source(options, capture, wanted)
     reports, lacking = _drawable(_reports(options))
     begin = time.perf_counter()
     with Capture(options.capture_file) as capture:
+        captured = CapturedRequests(capture)
+        if _by_source(options, captured.settings):
+            return _advise_by_source(options, capture, captured, wanted)
         if capture.cut:
             complain(capture.cut)
-        captured = CapturedRequests(capture)
         disorder = options.reordering or options.sequence is not None
         passes = (1 if options.quick else 3) + disorder + (options.sequence is not None) + bool(reports)
         with bar("read", "events", passes * capture.events) as tell:
@@ -83,31 +82,37 @@ def advise_on(options: argparse.Namespace) -> int:
     answer = _document(capture.meta.feed, captured, found)
     for report in reports:
         _write_report(report, answer)
-    answer["seconds"], answer["events_per_s"] = seconds, capture.events / seconds
-    if captured.settings_changed:
-        complain("settings changed within the capture: those at its begin were taken for all of it")
-    if options.json:
-        sys.stdout.write(msgspec.json.encode(answer).decode() + "\n")
-    else:
-        write_advice(answer)
+    _say(options, captured, answer, seconds, capture.events, write_advice)
     if lacking is not None:  # the answer comes first: nobody should have to ask again for it
         complain(*lacking.faults, "no report was written; the answer above is whole without it")
         return WRONG_USE
     return FINE if advice.supported else NO
 
 
-def _advise_by_source(options: argparse.Namespace, capture: Capture, wanted: Wanted) -> int:
+def _say(
+    options: argparse.Namespace, captured: CapturedRequests, answer: dict[str, Any], seconds: float, events: int,
+    write: Callable[[dict[str, Any]], None],
+) -> None:  # fmt: skip
+    """The answer, for a program or, by `write`, for a person, with how long it took."""
+    answer["seconds"], answer["events_per_s"] = seconds, events / seconds
+    if captured.settings_changed:
+        complain("settings changed within the capture: those at its begin were taken for all of it")
+    if options.json:
+        sys.stdout.write(msgspec.json.encode(answer).decode() + "\n")
+    else:
+        write(answer)
+
+
+def _advise_by_source(options: argparse.Namespace, capture: Capture, captured: CapturedRequests, wanted: Wanted) -> int:
     """Say which source needs how long. Exit codes as `advise_on` has them."""
     for name in ("report", "reordering", "sequence"):
         if getattr(options, name):
             reason = "is about one watermark for all sources, and this feed has one for each"
             raise ConfigError([f"--{name} {reason}: leave it out, or give --order feed"])
-    begin, settings = time.perf_counter(), CapturedRequests(capture).settings or Settings("")
+    begin, idle_after_ns = time.perf_counter(), _idle_after_ns(options, captured)
     if capture.cut:
         complain(capture.cut)
-    idle_after_ns = settings.idle_after_ns if options.idle_after is None else int(options.idle_after)
     with bar("read", "events", (1 if options.quick else 2) * capture.events) as tell:
-        captured = CapturedRequests(capture)
         told, span_ns = _Told(captured, tell), (capture.first_ns, capture.last_ns)
         try:
             advice = advise_by_source(told.blocks, span_ns, idle_after_ns, wanted, holding=not options.quick)
@@ -116,14 +121,7 @@ def _advise_by_source(options: argparse.Namespace, capture: Capture, wanted: Wan
             return NO
     shown = by_source.SOURCES_IN_JSON if options.json else options.sources
     answer = by_source.document(capture.meta.feed, captured.names, advice, shown, options.quick)
-    answer["seconds"] = time.perf_counter() - begin
-    answer["events_per_s"] = capture.events / answer["seconds"]
-    if captured.settings_changed:
-        complain("settings changed within the capture: those at its begin were taken for all of it")
-    if options.json:
-        sys.stdout.write(msgspec.json.encode(answer).decode() + "\n")
-    else:
-        by_source.write(answer)
+    _say(options, captured, answer, time.perf_counter() - begin, capture.events, by_source.write)
     return FINE if answer["configuration"] else NO
 
 
@@ -209,10 +207,15 @@ def _by_source(options: argparse.Namespace, settings: Settings | None) -> bool:
 
 def _rule(options: argparse.Namespace, captured: CapturedRequests) -> Rule:
     """What the watermark follows: as asked for, else as the capture's settings say, else as is the default."""
-    settings = captured.settings or Settings("")
-    if (options.clock or settings.clock) == "arrival":
+    if (options.clock or (captured.settings or Settings("")).clock) == "arrival":
         return Rule("arrival")
-    return Rule("sources", settings.idle_after_ns if options.idle_after is None else int(options.idle_after))
+    return Rule("sources", _idle_after_ns(options, captured))
+
+
+def _idle_after_ns(options: argparse.Namespace, captured: CapturedRequests) -> int:
+    """As asked for, else as the capture's settings say, else as is the default."""
+    settings = captured.settings or Settings("")
+    return settings.idle_after_ns if options.idle_after is None else int(options.idle_after)
 
 
 def _others(advice: Advice, settings: Settings | None) -> list[int]:
@@ -292,14 +295,10 @@ def _write_report(file: Path, answer: dict[str, Any]) -> None:
 def configuration_lines(feed: str, advice: Advice) -> list[str]:
     """Lines to paste: the slack chosen, and how the service would keep the share itself."""
     longest = advice.wanted.at_most_ns or max(2 * advice.slack_ns, SECOND_NS)
-    steered = f'{{ late_share = {_decimal(advice.wanted.late_share)}, at_most = "{spelled(longest)}" }}'
+    steered = f'{{ late_share = {decimal(advice.wanted.late_share)}, at_most = "{spelled(longest)}" }}'
     return [
         "[[feed]]",
         f"name = {msgspec.json.encode(feed).decode()}",
         f'slack = "{spelled(advice.slack_ns)}"',
         f"# or, kept by the service itself: slack = {steered}",
     ]
-
-
-def _decimal(share: float) -> str:
-    return np.format_float_positional(share, trim="0")

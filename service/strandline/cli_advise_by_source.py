@@ -21,7 +21,7 @@ from .ingest.timestamps import format_rfc3339
 from .replay.advice import SUPPORTED, VERDICTS, Part, rounded_up
 from .replay.advice_by_source import SHOWN_FIRST, AdviceBySource, SourceRow
 from .replay.sequence import name_of
-from .replay.wording import NO_LINES, spelled, time_text, value_text
+from .replay.wording import NO_LINES, decimal, spelled, time_text, value_text
 
 SOURCES_IN_JSON = 10_000
 WAYS = {
@@ -84,7 +84,7 @@ def _row(names: Sequence[str], row: SourceRow) -> dict[str, Any]:
 
 def configuration_lines(feed: str, advice: AdviceBySource) -> list[str]:
     """Lines to paste: what is recommended, and the other way as a remark."""
-    share = np.format_float_positional(advice.wanted.late_share, trim="0")
+    share = decimal(advice.wanted.late_share)
     longest = advice.wanted.at_most_ns or max(rounded_up(2 * advice.ways["steered"].slack_ns), SECOND_NS)
     fixed = f'slack = "{spelled(advice.ways["fixed"].slack_ns)}"'
     steered = f'slack = {{ late_share = {share}, at_most = "{spelled(longest)}" }}'

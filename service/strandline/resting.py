@@ -37,9 +37,9 @@ def rests(runtime: FeedRuntime) -> bool:
 
 
 def is_easy(runtime: FeedRuntime) -> bool:
-    """Whether its folder wants nothing: there is room, and the next segment is ready."""
+    """Whether its folder wants nothing: there is room, the next segment ready, no snapshot comes due by the clock."""
     journal, lanes = runtime.journal, runtime.lane_store.size.file_bytes
-    wants = journal.failed or journal.lacks_spare or journal.short_of_room
+    wants = journal.failed or journal.lacks_spare or journal.short_of_room or runtime.commit.saves_every_ns is not None
     return not wants and lanes <= runtime.config.lanes_at_most_bytes
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 
 import numpy as np
 import pytest
@@ -10,8 +11,9 @@ from helpers_advice_by_source import Feed, blocks_of, held, judged, least_slack
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from strandline.core.sketch import LEAST_NS, Buckets
-from strandline.replay.advice import SUPPORTED, Wanted, cut_of, rounded_up
-from strandline.replay.advice_by_source import SHOWN_FIRST, AdviceBySource, advise_by_source, rounded_up_column
+from strandline.replay.advice import SUPPORTED, Rule, Wanted, advise, cut_of, rounded_up
+from strandline.replay.advice_by_source import AdviceBySource, advise_by_source, rounded_up_column
+from strandline.replay.basis import Requests
 from strandline.replay.basis_by_source import NEVER_ON_TIME, NewestOfEach
 from strandline.replay.holds_by_source import Followed, Hold
 from strandline.replay.intervals import wilks, wilson, wilson_columns
@@ -106,12 +108,34 @@ def test_advice_is_what_each_source_needs_by_itself(
     check_rows(advice)
 
 
+@pytest.mark.parametrize(
+    ("wanted", "reason"),
+    [
+        (Wanted(0.0), "late share"),
+        (Wanted(1.0), "late share"),
+        (Wanted(0.1, learn_part=1.0), "part to choose on"),
+        (Wanted(0.1, -1), "longest wait"),
+        (Wanted(0.1, 2**61 + 1), "longest wait"),
+    ],
+)
+def test_what_cannot_be_wanted_is_refused_before_anything_is_read(wanted: Wanted, reason: str) -> None:
+    def unread() -> Iterator[Requests]:
+        raise AssertionError("read")
+
+    with pytest.raises(ValueError, match=reason):
+        advise_by_source(unread, (0, 1), None, wanted)
+    with pytest.raises(ValueError, match=reason):
+        advise(unread, (0, 1), Rule("event"), wanted)
+
+
 def check_rows(advice: AdviceBySource) -> None:
     """Shown and rest are all sources that were heard, whatever the limit; verdicts are those of the row."""
     whole, nothing = advice.rows(SOURCES)
     assert nothing.sources == 0 and len({row.source for row in whole}) == len(whole)
-    ranks = [min(SHOWN_FIRST.index(row.verdict), 3) for row in whole]
-    assert [rank for rank in ranks if rank < 2] == sorted(rank for rank in ranks if rank < 2)
+    # As advice.md says: contradictions, then those missed, then by slack, those with too few events last.
+    ranks = {"contradiction": 0, "missed": 1, "open": 2, "shown": 2, "too_short": 3}
+    places = [(ranks[row.verdict], -row.slack_ns, row.source) for row in whole]
+    assert places == sorted(places)
     for row in whole:
         low, high = row.interval
         if min(row.first_events, row.second_events) < advice.events_needed:

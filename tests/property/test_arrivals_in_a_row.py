@@ -21,19 +21,19 @@ times = st.integers(-5, 40)
 rows = st.lists(st.tuples(times, st.sampled_from(NAMES), st.integers(1, 30)), max_size=8)
 keys = st.sampled_from((None, None, "a", "b"))
 histories = st.lists(st.tuples(st.lists(st.tuples(rows, keys), max_size=6), st.sampled_from((0, 1, 2, 5))), max_size=8)
-chosen = st.builds(
-    Settings,
-    name=st.just("river-gauges"),
-    slack_ns=st.sampled_from((0, 1, 3, 10)),
-    idle_after_ns=st.sampled_from((3, FOR_EVER_NS)),
-    hold_at_most_ns=st.sampled_from((1, 5, FOR_EVER_NS)),
-    ahead_limit_ns=st.sampled_from((20, FOR_EVER_NS)),
-    clock=st.sampled_from(("event", "arrival")),
-    late_share=st.sampled_from((None, 0.2)),
-    expect_sources=st.sampled_from(((), ("gw-0",))),
-    batch_events_at_most=st.sampled_from((2, 50_000)),
-    held_events_at_most=st.sampled_from((5, 12, 10_000)),
-)
+limits = {
+    "name": st.just("river-gauges"),
+    "slack_ns": st.sampled_from((0, 1, 3, 10)),
+    "idle_after_ns": st.sampled_from((3, FOR_EVER_NS)),
+    "hold_at_most_ns": st.sampled_from((1, 5, FOR_EVER_NS)),
+    "ahead_limit_ns": st.sampled_from((20, FOR_EVER_NS)),
+    "late_share": st.sampled_from((None, 0.2)),
+    "expect_sources": st.sampled_from(((), ("gw-0",))),
+    "batch_events_at_most": st.sampled_from((2, 50_000)),
+    "held_events_at_most": st.sampled_from((5, 12, 10_000)),
+}
+chosen = st.builds(Settings, **limits, clock=st.sampled_from(("event", "arrival")))
+by_source = st.builds(Settings, **limits, order=st.just("source"))
 
 
 def run(given_settings: Settings, history: list[tuple[list[Any], int]], *, more: bool) -> Shell:
@@ -51,8 +51,8 @@ def run(given_settings: Settings, history: list[tuple[list[Any], int]], *, more:
     return shell
 
 
-@given(chosen, histories)
-@settings(max_examples=300)
+@given(chosen | by_source, histories)
+@settings(max_examples=400)
 def test_marks_that_are_put_off_change_no_judgement(given_settings: Settings, history: list[Any]) -> None:
     one, other = (run(given_settings, history, more=more) for more in (False, True))
     assert one.answers == other.answers
@@ -64,6 +64,8 @@ def test_marks_that_are_put_off_change_no_judgement(given_settings: Settings, hi
         assert one.out_times(lane) == other.out_times(lane)
     states = one.feed.state, other.feed.state
     assert states[0].ledger == states[1].ledger and states[0].watermark_ns == states[1].watermark_ns
+    stands = [None if state.own is None else state.own.at.tolist() for state in states]
+    assert stands[0] == stands[1]
     for figure in ("lateness", "hold", "run_length"):
         counts = [getattr(state.figures, figure) for state in states]
         assert counts[0].counts.tolist() == counts[1].counts.tolist() and counts[0].total == counts[1].total

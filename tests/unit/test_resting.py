@@ -6,22 +6,11 @@ from collections.abc import Iterable
 from pathlib import Path
 
 from helpers_service import configuration, eventually, running
+from helpers_sinks import START_NS, VirtualTime
 from msgspec.structs import replace
 from strandline.core.settings import SECOND_NS
 from strandline.resting import RESTING_TICKS, UNEASY_TICKS, Beats, is_easy, rests
 from strandline.runtime import FeedRuntime
-
-START_NS = 1_700_000_000 * SECOND_NS
-
-
-class SetClock:
-    """A clock that stands where it is set."""
-
-    def __init__(self) -> None:
-        self.at_ns = START_NS
-
-    def now_ns(self) -> int:
-        return self.at_ns
 
 
 def names_due(beats: Beats, feeds: Iterable[tuple[str, FeedRuntime]]) -> list[str]:
@@ -29,7 +18,7 @@ def names_due(beats: Beats, feeds: Iterable[tuple[str, FeedRuntime]]) -> list[st
 
 
 async def test_who_rests_and_how_often_it_is_ticked(tmp_path: Path) -> None:
-    clock = SetClock()
+    clock = VirtualTime()
     async with running(configuration(tmp_path, slack="1h"), clock=clock) as service:
         runtime, beats = service.runtime, Beats(clock)
         feeds = [("a", runtime), ("b", runtime)]
@@ -45,7 +34,7 @@ async def test_who_rests_and_how_often_it_is_ticked(tmp_path: Path) -> None:
 
 
 async def test_a_folder_that_wants_something_is_looked_after_sooner(tmp_path: Path) -> None:
-    clock = SetClock()
+    clock = VirtualTime()
     async with running(configuration(tmp_path), clock=clock) as service:
         runtime, beats = service.runtime, Beats(clock)
         await eventually(lambda: rests(runtime) and is_easy(runtime))
@@ -55,18 +44,28 @@ async def test_a_folder_that_wants_something_is_looked_after_sooner(tmp_path: Pa
         assert sum(map(len, ticked)) == 2
 
 
+async def test_a_folder_whose_snapshots_come_due_by_the_clock_is_looked_after_sooner(tmp_path: Path) -> None:
+    clock = VirtualTime()
+    async with running(configuration(tmp_path), clock=clock) as service:
+        runtime, beats = service.runtime, Beats(clock)
+        await eventually(lambda: rests(runtime) and is_easy(runtime))
+        runtime.commit.saves_every_ns = 30 * SECOND_NS  # as a partition's: a tick in ten seconds would make it forty
+        ticked = [names_due(beats, [("a", runtime)]) for _ in range(2 * UNEASY_TICKS)]
+        assert sum(map(len, ticked)) == 2
+
+
 async def test_a_resting_feed_is_ticked_at_the_beat_at_which_a_source_falls_idle(tmp_path: Path) -> None:
-    clock = SetClock()
+    clock = VirtualTime()
     async with running(configuration(tmp_path, idle_after="30s"), clock=clock) as service:
         runtime, beats = service.runtime, Beats(clock)
         await service.send([0])
         await eventually(lambda: rests(runtime) and is_easy(runtime))
         feeds, sources = [("a", runtime)], runtime.feed.state.sources
         names_due(beats, feeds)
-        clock.at_ns = START_NS + 30 * SECOND_NS - 1
+        clock.now = START_NS + 30 * SECOND_NS - 1
         ticked = [names_due(beats, feeds) for _ in range(RESTING_TICKS)]
         assert sum(map(len, ticked)) == 1, "not before it is time"
-        clock.at_ns += 1
+        clock.now += 1
         for _, due in beats.due(feeds):
             due.tick()
         assert sources.idle_count() == 1
@@ -75,7 +74,7 @@ async def test_a_resting_feed_is_ticked_at_the_beat_at_which_a_source_falls_idle
 
 
 async def test_a_feed_that_is_gone_is_not_remembered(tmp_path: Path) -> None:
-    clock = SetClock()
+    clock = VirtualTime()
     async with running(configuration(tmp_path), clock=clock) as service:
         runtime, beats = service.runtime, Beats(clock)
         await eventually(lambda: rests(runtime))

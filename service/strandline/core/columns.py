@@ -15,7 +15,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -135,6 +135,13 @@ def empty_times() -> Times:
 def empty_refs() -> Refs:
     """A ref column without rows."""
     return np.empty(0, dtype=REF)
+
+
+def grown(column: NDArray[Any], size: int, fill: int | bool) -> NDArray[Any]:
+    """A longer column that begins with these rows; `fill` in those behind them."""
+    result = np.full((size, *column.shape[1:]), fill, dtype=column.dtype)
+    result[: len(column)] = column
+    return result
 
 
 def distances(newest: int | Times, times: Times) -> Times:

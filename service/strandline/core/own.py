@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import NO_SOURCE, TIME_MIN, Times, distances
+from .columns import NO_SOURCE, TIME_MIN, Times, distances, grown
 from .held_by_source import HeldBySource
 from .records import Cause, Mark
 from .runs import Strand
@@ -43,9 +43,7 @@ class OwnWatermarks:
         """The watermarks by source number; TIME_MIN: none yet."""
         count = len(self._sources.names)
         if count > len(self._at):
-            grown = np.full(max(count, 2 * len(self._at)), TIME_MIN, dtype=np.int64)
-            grown[: len(self._at)] = self._at
-            self._at = grown
+            self._at = grown(self._at, max(count, 2 * len(self._at)), TIME_MIN)
         return self._at[:count]
 
     def touch_all(self) -> None:

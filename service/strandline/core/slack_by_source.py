@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from . import slack
-from .columns import Times
+from .columns import Times, grown
 from .settings import Settings
 from .slack import FixedSlack, SteeredSlack, note_period, share_since, slack_of
 from .tails import Floats, Numbers, Tails
@@ -100,10 +100,7 @@ class SteeredBySource:
             return
         size = max(64, 2 * known, count)
         for name, fill in (("_steps", 0), ("_beside", 0), ("_slacks", self.at_most_ns), ("_scratch", 0)):
-            column = getattr(self, name)
-            grown = np.full((size, *column.shape[1:]), fill, dtype=column.dtype)
-            grown[:known] = column
-            setattr(self, name, grown)
+            setattr(self, name, grown(getattr(self, name), size, fill))
         self._lines = self._steps.view(LINE)[:, 0]
         self._steps[known:, EXACT] = self._beside[known:, FIRST] = self.at_most_ns
         self._steps[known:, TUNE_AT] = slack.WARM_UP_EVENTS

@@ -8,12 +8,11 @@ for `idle_after`; an excused one takes no part until it speaks again.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import NO_SOURCE, TIME_MIN, Times, greatest_of
+from .columns import NO_SOURCE, TIME_MIN, Times, greatest_of, grown
 from .least import NONE, Least
 
 NEVER = TIME_MIN  # newest event time of a source that was never heard
@@ -86,13 +85,13 @@ class Sources:
             self.names.append(name)
         if len(self.names) > len(self.newest):
             size = max(64, 2 * len(self.newest), len(self.names))
-            self.newest = _grown(self.newest, size, NEVER)
-            self.heard = _grown(self.heard, size, NEVER)
-            self.active = _grown(self.active, size, False)
-            self.excused = _grown(self.excused, size, False)
-            self.vouched = _grown(self.vouched, size, NEVER)
-            self.promised = _grown(self.promised, size, NEVER)
-            self.broken = _grown(self.broken, size, 0)
+            self.newest = grown(self.newest, size, NEVER)
+            self.heard = grown(self.heard, size, NEVER)
+            self.active = grown(self.active, size, False)
+            self.excused = grown(self.excused, size, False)
+            self.vouched = grown(self.vouched, size, NEVER)
+            self.promised = grown(self.promised, size, NEVER)
+            self.broken = grown(self.broken, size, 0)
             self._by_newest.grow(size)
             self._by_heard.grow(size)
 
@@ -273,9 +272,3 @@ class Sources:
         assert self._promising == bool(np.any(self.promised[:count] != NEVER))
         if self.touched is not None:
             self.touched.check(count)
-
-
-def _grown(column: NDArray[Any], size: int, fill: int | bool) -> NDArray[Any]:
-    result = np.full(size, fill, dtype=column.dtype)
-    result[: len(column)] = column
-    return result

@@ -10,7 +10,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import Times
+from .columns import Times, grown
 from .sketch import buckets_of
 
 RELATIVE_ERROR = 0.25
@@ -38,9 +38,7 @@ class Tails:
     def reach(self, size: int) -> None:
         """Have rows for so many sources, more than before."""
         self.settle()
-        known, counts = len(self.greatest), np.zeros((size, self.counts.shape[1]), dtype=np.float32)
-        counts[:known] = self.counts
-        self.greatest, self.counts = np.append(self.greatest, np.zeros(size - known, dtype=np.int64)), counts
+        self.greatest, self.counts = grown(self.greatest, size, 0), grown(self.counts, size, 0)
 
     def add(self, numbers: Numbers, lateness_ns: Times) -> None:
         """Count a column of lateness (at least 0), each for the source of its row; neither column changes later.

@@ -6,6 +6,7 @@ Who holds the feed, and why, is judged here; HTTP, metrics and the dashboard onl
 from __future__ import annotations
 
 from dataclasses import asdict, dataclass
+from functools import partial
 
 import numpy as np
 
@@ -13,7 +14,7 @@ from .columns import NO_SOURCE, TIME_MIN, Lane
 from .outbox import LANES
 from .records import ActRecord, Cause
 from .settings import SECOND_NS
-from .slack import SteeredSlack
+from .slack import FixedSlack, SteeredSlack
 from .slack_by_source import OwnSteering, SteeredBySource, SteeredSources
 from .state import State
 
@@ -177,37 +178,30 @@ def _breaker(state: State) -> str | None:
 
 def _steering(state: State, now_ns: int) -> Steering | None:
     slack = state.slack
-    if isinstance(slack, SteeredBySource):
-        return _steering_by_source(state, slack, now_ns)
-    if not isinstance(slack, SteeredSlack):
+    if isinstance(slack, FixedSlack):
         return None
-    stretch = slack.stretch
-    return Steering(
+    steering = partial(
+        Steering,
         target=slack.target,
         at_most_ns=slack.at_most_ns,
         at_least_ns=slack.at_least_ns,
         share_minute=slack.share_since(now_ns - 60 * SECOND_NS),
         share_hour=slack.share_since(now_ns - 3600 * SECOND_NS),
         share_begun=slack.late / slack.events if slack.events else None,
-        share_stretch=stretch.late / stretch.events if stretch is not None and stretch.events else None,
-        bound=slack.bound,
-        warming_up=stretch is None,
-        binding=slack.binding,
-        attainable=slack.attainable,
     )
-
-
-def _steering_by_source(state: State, slack: SteeredBySource, now_ns: int) -> Steering:
-    """All sources together; attainable is what the one gets that the longest wait suits least, if there is one."""
+    if isinstance(slack, SteeredSlack):
+        stretch = slack.stretch
+        return steering(
+            share_stretch=stretch.late / stretch.events if stretch is not None and stretch.events else None,
+            bound=slack.bound,
+            warming_up=stretch is None,
+            binding=slack.binding,
+            attainable=slack.attainable,
+        )
+    # All sources together; attainable is what the one gets that the longest wait suits least, if there is one.
     seen = slack.together(len(state.sources.names))
     of_all = state.lateness.sketch.late_share(slack.at_most_ns).at_least
-    return Steering(
-        target=slack.target,
-        at_most_ns=slack.at_most_ns,
-        at_least_ns=slack.at_least_ns,
-        share_minute=slack.share_since(now_ns - 60 * SECOND_NS),
-        share_hour=slack.share_since(now_ns - 3600 * SECOND_NS),
-        share_begun=slack.late / slack.events if slack.events else None,
+    return steering(
         share_stretch=None,
         bound=None,
         warming_up=seen.warming_up == len(state.sources.names),

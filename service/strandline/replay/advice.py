@@ -117,14 +117,9 @@ class Advice:
 def advise(blocks: Blocks, span_ns: tuple[int, int], rule: Rule, wanted: Wanted) -> Advice:
     """Choose on the first part of the feed, verify on the rest, in one pass.
 
-    `span_ns`: the first and the last arrival. Raises ValueError for a share outside of 0 to 1 or a part without events.
+    `span_ns`: the first and the last arrival. Raises ValueError for what cannot be wanted or a part without events.
     """
-    if not 0 < wanted.late_share < 1:
-        raise ValueError(f"a late share lies between 0 and 1, not at {wanted.late_share}")
-    if not 0 < wanted.learn_part < 1:
-        raise ValueError(f"the part to choose on lies between 0 and 1, not at {wanted.learn_part}")
-    if wanted.at_most_ns is not None and not 0 <= wanted.at_most_ns <= SLACK_NS_AT_MOST:
-        raise ValueError("the longest wait lies between 0 and 73 years")
+    require_possible(wanted)
     cut_ns = cut_of(span_ns, wanted.learn_part)
     first, second = Part(span_ns[0], cut_ns), Part(cut_ns, span_ns[1])
     tenths = _tenths(second)
@@ -146,6 +141,22 @@ def advise(blocks: Blocks, span_ns: tuple[int, int], rule: Rule, wanted: Wanted)
         raise ValueError(f"{first.events:,} events to choose on and {second.events:,} to verify on: one part is empty")
     first.late = round(sketch.late_share(chosen).at_most * first.events)
     return _advice(rule, wanted, first, second, tenths, sketch, chosen)
+
+
+def require_possible(wanted: Wanted) -> None:
+    """Raise ValueError for what no feed could be asked for."""
+    if not 0 < wanted.late_share < 1:
+        raise ValueError(f"a late share lies between 0 and 1, not at {wanted.late_share}")
+    if not 0 < wanted.learn_part < 1:
+        raise ValueError(f"the part to choose on lies between 0 and 1, not at {wanted.learn_part}")
+    if wanted.at_most_ns is not None and not 0 <= wanted.at_most_ns <= SLACK_NS_AT_MOST:
+        raise ValueError("the longest wait lies between 0 and 73 years")
+
+
+def verdict_on(interval: tuple[float, float], late_share: float) -> Verdict:
+    """Of the interval of a share beside the share that was wanted, where there were events enough and time to wait."""
+    low, high = interval
+    return "shown" if high <= late_share else "open" if low <= late_share else "missed"
 
 
 def cut_of(span_ns: tuple[int, int], learn_part: float) -> int:
@@ -193,7 +204,7 @@ def _advice(
     share, needed = wanted.late_share, wilks(1 - wanted.late_share, wanted.confidence)
     found = wilson(second.late, second.events, wanted.confidence)
     binds = wanted.at_most_ns is not None and sketch.late_share(wanted.at_most_ns).at_least > share
-    verdict: Verdict = "shown" if found[1] <= share else "open" if found[0] <= share else "missed"
+    verdict = verdict_on(found, share)
     if binds:
         verdict = "contradiction"
     if min(first.events, second.events) < needed:  # of too few events not even a contradiction is shown

@@ -11,22 +11,22 @@ by step here). What is exact: late events of the second part. Slacks lie within 
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from typing import Literal, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from .advice import DIGITS, Part, Verdict, Wanted, cut_of, rounded_up
-from .basis import Int64s, Requests
+from strandline.core.columns import grown
+
+from .advice import DIGITS, Blocks, Part, Verdict, Wanted, cut_of, require_possible, rounded_up, verdict_on
+from .basis import Int64s
 from .basis_by_source import NewestOfEach
 from .holds_by_source import Followed, Hold
 from .intervals import wilks, wilson, wilson_columns
 from .sketch_by_source import SketchBySource
 from .slacks import SLACK_NS_AT_MOST
 
-Blocks = Callable[[], Iterator[Requests]]
 WayName = Literal["pooled", "fixed", "steered"]
 STEERING_PAYS = 0.8  # of the fixed slack's mean hold: less of a difference is not worth a slack that moves
 JUDGED_PART = 0.9  # of the second part's events must be of sources with enough events for a claim
@@ -121,9 +121,7 @@ class AdviceBySource:
         binds = self.binding & self.judged
         if int(self.second_events[binds].sum()) > (1 - JUDGED_PART) * events:
             return "contradiction"
-        low, high = wilson(late, events, self.wanted.confidence)
-        share = self.wanted.late_share
-        return "shown" if high <= share else "open" if low <= share else "missed"
+        return verdict_on(wilson(late, events, self.wanted.confidence), self.wanted.late_share)
 
     def verdicts(self) -> NDArray[np.int8]:
         """By source the place of its verdict in SHOWN_FIRST, with its own slack."""
@@ -164,10 +162,9 @@ def advise_by_source(
 ) -> AdviceBySource:
     """Choose for each source on the first part, verify on the rest, in one pass; `holding`: holds in a second one.
 
-    Raises ValueError for a share outside of 0 to 1, a part without events, or more sources than fit.
+    Raises ValueError for what cannot be wanted, a part without events, or more sources than fit.
     """
-    if not (0 < wanted.late_share < 1 and 0 < wanted.learn_part < 1):
-        raise ValueError("a late share and the part to choose on lie between 0 and 1")
+    require_possible(wanted)
     cut_ns = cut_of(span_ns, wanted.learn_part)
     basis, sketch, judging = NewestOfEach(idle_after_ns), SketchBySource(), _Judging()
     chosen: _Chosen | None = None
@@ -228,10 +225,8 @@ class _Chosen:
 
     def reach(self, count: int) -> None:
         """A source that is first heard in the second part, likewise."""
-        more = count - len(self.own)
-        if more > 0:
-            self.own = np.append(self.own, np.full(more, self.fixed))
-            self.binding = np.append(self.binding, np.zeros(more, dtype=np.bool_))
+        if count > len(self.own):
+            self.own, self.binding = grown(self.own, count, self.fixed), grown(self.binding, count, False)
 
 
 class _Judging:
@@ -244,10 +239,10 @@ class _Judging:
         """Costs some 10 ns an event."""
         count = max(len(self.events), int(sources.max()) + 1, len(chosen.own))
         chosen.reach(count)
-        more = np.zeros(count - len(self.events), dtype=np.int64)
-        self.events, self.own, self.fixed, self.pooled = (
-            np.append(column, more) for column in (self.events, self.own, self.fixed, self.pooled)
-        )
+        if count > len(self.events):
+            self.events, self.own, self.fixed, self.pooled = (
+                grown(column, count, 0) for column in (self.events, self.own, self.fixed, self.pooled)
+            )
         self.events += np.bincount(sources, minlength=count)
         behind = np.flatnonzero(lateness)
         numbers, values = sources[behind], lateness[behind]
@@ -277,7 +272,7 @@ def _found(
     sketch: SketchBySource, judging: _Judging, chosen: _Chosen, wanted: Wanted, parts: tuple[Part, Part]
 ) -> AdviceBySource:
     count = len(chosen.own)
-    first_events = np.append(sketch.events, np.zeros(max(0, count - len(sketch.events)), dtype=np.int64))[:count]
+    first_events = grown(sketch.events, count, 0)
     needed = wilks(1 - wanted.late_share, wanted.confidence)
     enough = np.minimum(first_events, judging.events) >= needed
     own = chosen.own[enough] if enough.any() else chosen.own[first_events + judging.events > 0]

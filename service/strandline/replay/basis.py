@@ -18,6 +18,8 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from strandline.core.columns import grown
+
 from .disorder import rows_by_group
 
 Int64s = NDArray[np.int64]
@@ -204,16 +206,10 @@ class LeastOfSources:
         First those of the sources that are active at the start of the block, which have no request; then one for each
         source and request, by source and then by request.
         """
-        if block.sources is None:
-            raise ValueError("the least over the sources needs a column of sources")
-        words = said(block)
-        assert words.sources is not None
-        rows = rows_by_group(words.sources)
-        by_source = words.sources[rows].astype(np.int64)
+        words, rows, by_source, request = said_by_source(block)
         self._grow(int(by_source[-1]) + 1)
         fresh = np.concatenate(([True], by_source[1:] != by_source[:-1]))
         newest = np.maximum(grouped_greatest(words.times[rows], fresh), self._newest[by_source])
-        request = np.searchsorted(words.starts, rows, side="right") - 1 if len(words.starts) < len(rows) else rows
         last = np.concatenate((fresh[1:] | (request[1:] != request[:-1]), [True]))
         known = np.flatnonzero(self._active)
         return (
@@ -223,12 +219,11 @@ class LeastOfSources:
         )
 
     def _grow(self, count: int) -> None:
-        more = count - len(self._newest)
-        if more > 0:
-            more = max(more, len(self._newest))
-            self._newest = np.concatenate((self._newest, np.full(more, NO_BASIS)))
-            self._expires = np.concatenate((self._expires, np.full(more, NONE)))
-            self._active = np.concatenate((self._active, np.zeros(more, dtype=np.bool_)))
+        if count > len(self._newest):
+            size = max(count, 2 * len(self._newest))
+            self._newest = grown(self._newest, size, NO_BASIS)
+            self._expires = grown(self._expires, size, NONE)
+            self._active = grown(self._active, size, False)
 
     def _ends(self, block: Requests, sources: Int64s, spoken: Int64s) -> tuple[Int64s, NDArray[np.bool_], Int64s]:
         """For each word the instant at which it would expire, whether it does so, and the request of the next word.
@@ -275,14 +270,33 @@ def said(block: Requests) -> Requests:
     rows, sources = len(block.times), block.sources
     if len(block.starts) == rows or sources is None:
         return block
-    begins = np.zeros(rows, dtype=np.bool_)
-    begins[block.starts] = True
-    begins[1:] |= sources[1:] != sources[:-1]
-    heads = np.flatnonzero(begins)
+    heads = heads_of(block)
     if len(heads) == rows:
         return block
     starts = np.arange(len(heads)) if len(heads) == len(block.starts) else np.searchsorted(heads, block.starts)
     return Requests(np.maximum.reduceat(block.times, heads), starts, block.instants, sources[heads])
+
+
+def heads_of(block: Requests) -> Int64s:
+    """The first row of each stretch of rows of one source in one request."""
+    assert block.sources is not None
+    begins = np.zeros(len(block.times), dtype=np.bool_)
+    begins[block.starts] = True
+    begins[1:] |= block.sources[1:] != block.sources[:-1]
+    return np.flatnonzero(begins)
+
+
+def said_by_source(block: Requests) -> tuple[Requests, Int64s, Int64s, Int64s]:
+    """What sources `said`, and its rows by source, then as they came; of each of these the source and the request.
+
+    Raises ValueError for a block without sources.
+    """
+    words = said(block)
+    if words.sources is None:
+        raise ValueError("what is followed source by source needs a column of sources")
+    rows = rows_by_group(words.sources)
+    request = np.searchsorted(words.starts, rows, side="right") - 1 if len(words.starts) < len(rows) else rows
+    return words, rows, words.sources[rows].astype(np.int64), request
 
 
 def grouped_greatest(values: Int64s, fresh: NDArray[np.bool_]) -> Int64s:

@@ -13,8 +13,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from .basis import NO_BASIS, TIME_GREATEST, Int64s, Requests, grouped_greatest, said
-from .disorder import rows_by_group
+from strandline.core.columns import grown
+
+from .basis import NO_BASIS, TIME_GREATEST, Int64s, Requests, grouped_greatest, heads_of, said_by_source
 
 NEVER_ON_TIME = 2**62
 
@@ -49,15 +50,8 @@ class NewestOfEach:
 
     def add(self, block: Requests) -> Words:
         """Take note of the next block (at least one row). Costs 30 to 100 ns an event."""
-        if block.sources is None:
-            raise ValueError("what is late behind its own source needs a column of sources")
-        stretches = said(block)
-        assert stretches.sources is not None
-        order = rows_by_group(stretches.sources)
-        numbers = stretches.sources[order].astype(np.int64)
+        stretches, order, numbers, request = said_by_source(block)
         self._reach(int(numbers[-1]) + 1)
-        shortened = len(stretches.starts) < len(order)
-        request = np.searchsorted(stretches.starts, order, side="right") - 1 if shortened else order
         begins = np.empty(len(order), dtype=np.bool_)
         begins[0] = True
         begins[1:] = (numbers[1:] != numbers[:-1]) | (request[1:] != request[:-1])
@@ -74,19 +68,19 @@ class NewestOfEach:
             column[sources[lasts]] = values[lasts]
         of = np.empty(len(order), dtype=np.int64)
         of[order] = np.cumsum(begins) - 1
-        of = _by_row(block, stretches, of)
+        if len(of) < len(block.times):  # a value for each stretch of rows: one for each row
+            of = np.repeat(of, np.diff(heads_of(block), append=len(block.times)))
         lateness = np.maximum(before[of] - block.times, 0)
         if self.idle_after_ns is not None:
             lateness[block.times < floor[of]] = NEVER_ON_TIME
         return Words(sources, instants, newest, heard, np.flatnonzero(fresh), lateness, of, self._heard)
 
     def _reach(self, count: int) -> None:
-        more = count - len(self._newest)
-        if more > 0:
-            more = max(more, len(self._newest))
-            self._newest = np.concatenate((self._newest, np.full(more, NO_BASIS)))
-            self._heard = np.concatenate((self._heard, np.full(more, TIME_GREATEST)))
-            self._floor = np.concatenate((self._floor, np.full(more, NO_BASIS)))
+        if count > len(self._newest):
+            size = max(count, 2 * len(self._newest))
+            self._newest = grown(self._newest, size, NO_BASIS)
+            self._heard = grown(self._heard, size, TIME_GREATEST)
+            self._floor = grown(self._floor, size, NO_BASIS)
 
     def _floors(
         self, sources: Int64s, instants: Int64s, heard: Int64s, before: Int64s, fresh: NDArray[np.bool_]
@@ -99,15 +93,3 @@ class NewestOfEach:
             return self._floor[sources]
         fallen = np.where(idle, before, NO_BASIS)
         return np.maximum(grouped_greatest(fallen, fresh), self._floor[sources])
-
-
-def _by_row(block: Requests, stretches: Requests, column: Int64s) -> Int64s:
-    """A column with a value for each stretch of rows (as `said` has them) as one with a value for each row."""
-    rows = len(block.times)
-    if len(column) == rows:
-        return column
-    assert block.sources is not None
-    begins = np.zeros(rows, dtype=np.bool_)
-    begins[block.starts] = True
-    begins[1:] |= block.sources[1:] != block.sources[:-1]
-    return np.repeat(column, np.diff(np.flatnonzero(begins), append=rows))

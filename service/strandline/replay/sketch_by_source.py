@@ -12,6 +12,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
+from strandline.core.columns import grown
 from strandline.core.sketch import GREATEST_NS, LEAST_NS, Buckets
 
 from .basis import Int64s
@@ -67,12 +68,9 @@ class SketchBySource:
         size = min(max(64, 2 * known, count), SOURCES_AT_MOST)
         while size * len(self.buckets) > self._cells and self._level < LEVELS - 1:
             self._fold()
-        counts = np.zeros((size, len(self.buckets)), dtype=np.uint32)
-        counts[:known] = self._counts
-        self._counts = counts
-        more = np.zeros(size - known, dtype=np.int64)
+        self._counts = grown(self._counts, size, 0)
         self.events, self.greatest, self.never = (
-            np.append(column, more) for column in (self.events, self.greatest, self.never)
+            grown(column, size, 0) for column in (self.events, self.greatest, self.never)
         )
 
     def _fold(self) -> None:

@@ -73,6 +73,11 @@ class Row(NamedTuple):
     defined_in: str
 
 
+def decimal(share: float) -> str:
+    """A share as a configuration takes it, without an exponent."""
+    return np.format_float_positional(share, trim="0")
+
+
 def spelled(ns: int) -> str:
     """A duration as a configuration takes it, exactly: in seconds from one second up, such as 19.1s."""
     if ns < SECOND_NS:
