@@ -9,6 +9,8 @@ import asyncio
 import contextlib
 from typing import Self
 
+from strandline.tasks import first_of
+
 CHUNK_BYTES = 1 << 20
 
 
@@ -55,14 +57,7 @@ class BrokerProxy:
             if self.away:
                 return
             answers, other = await asyncio.open_connection("127.0.0.1", self._port)
-            ways = [asyncio.create_task(self._pass(reader, other, False)),
-                    asyncio.create_task(self._pass(answers, writer, True))]  # fmt: skip
-            try:
-                await asyncio.wait(ways, return_when=asyncio.FIRST_COMPLETED)
-            finally:
-                for way in ways:
-                    way.cancel()
-                await asyncio.gather(*ways, return_exceptions=True)
+            await first_of(self._pass(reader, other, False), self._pass(answers, writer, True))
         finally:
             for each in (writer, *([other] if other else [])):
                 each.close()

@@ -125,11 +125,11 @@ class Nats(Server):
         """A connection of the test's own."""
         return await nats.connect(self.url, allow_reconnect=False, **options)
 
-    async def make_stream(self, **more: Any) -> None:
+    async def make_stream(self, name: str = STREAM, subject: str = "river.>", **more: Any) -> None:
         """The stream that tests publish to."""
         client = await self.client()
         try:
-            await client.jetstream().add_stream(api.StreamConfig(name=STREAM, subjects=["river.>"], **more))
+            await client.jetstream().add_stream(api.StreamConfig(name=name, subjects=[subject], **more))
         finally:
             await client.close()
 

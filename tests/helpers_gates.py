@@ -12,6 +12,8 @@ import threading
 from collections.abc import Sequence
 from typing import Self
 
+from strandline.tasks import first_of
+
 CHUNK_BYTES = 1 << 16
 START_S = 10.0
 
@@ -79,13 +81,7 @@ class Gates:
         try:
             await self._passing.wait()
             answers, other = await asyncio.open_connection("127.0.0.1", target)
-            ways = [asyncio.create_task(self._pass(reader, other)), asyncio.create_task(self._pass(answers, writer))]
-            try:
-                await asyncio.wait(ways, return_when=asyncio.FIRST_COMPLETED)
-            finally:
-                for way in ways:
-                    way.cancel()
-                await asyncio.gather(*ways, return_exceptions=True)
+            await first_of(self._pass(reader, other), self._pass(answers, writer))
         except OSError:
             pass  # the server is away: the client's connection ends too
         finally:

@@ -15,7 +15,6 @@ from typing import Any
 
 from helpers_brokers import STREAM, Nats
 from helpers_service import FEED, Running, configuration, event_line
-from nats.js import api
 
 SUBJECT = "part.{}.gw"
 
@@ -32,11 +31,7 @@ def member(folder: Path, url: str, number: int, *, partitions: int, lease: str =
 
 async def make_parted_stream(server: Nats) -> None:
     """The stream that the partitions are read from."""
-    client = await server.client()
-    try:
-        await client.jetstream().add_stream(api.StreamConfig(name=STREAM, subjects=["part.>"]))
-    finally:
-        await client.close()
+    await server.make_stream(subject="part.>")
 
 
 async def publish_to(server: Nats, partition: int, seconds: Sequence[float]) -> None:

@@ -9,13 +9,12 @@ import asyncio
 import contextlib
 import json
 import time
-from collections.abc import AsyncIterator, Awaitable, Callable, Iterable, Mapping
+from collections.abc import AsyncIterator, Awaitable, Callable, Iterable
 from pathlib import Path
 from typing import Any
 
 from helpers_brokers import Nats
 from helpers_service import DEADLINE_S, POLL_S
-from nats.js import api
 from strandline.broker_access import BrokerAccess
 from strandline.clock import SystemClock
 from strandline.cluster.link import Link
@@ -55,24 +54,12 @@ async def until(true: Callable[[], bool] | Callable[[], Awaitable[bool]], what: 
 
 async def make_river(server: Nats, **more: Any) -> None:
     """The stream that producers publish to."""
-    client = await server.client()
-    try:
-        await client.jetstream().add_stream(api.StreamConfig(name=RIVER, subjects=["part.>"], **more))
-    finally:
-        await client.close()
+    await server.make_stream(RIVER, "part.>", **more)
 
 
-async def publish(
-    server: Nats, bodies: Iterable[bytes], headers: Iterable[Mapping[str, str] | None] | None = None
-) -> None:
+async def publish(server: Nats, bodies: Iterable[bytes]) -> None:
     """Messages for partition 0, one after the other."""
-    client = await server.client()
-    try:
-        stream = client.jetstream()
-        for body, own in zip(bodies, headers or iter(lambda: None, 0), strict=False):
-            await stream.publish(SUBJECT, body, headers=dict(own) if own else None)
-    finally:
-        await client.close()
+    await server.publish(bodies, subject=SUBJECT)
 
 
 def line(number: int, time_ns: int, source: str, **more: object) -> bytes:

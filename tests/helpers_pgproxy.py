@@ -10,6 +10,8 @@ from dataclasses import dataclass, field
 from typing import Self
 from urllib.parse import parse_qs, urlsplit
 
+from strandline.tasks import first_of
+
 COMMIT = b"Q\x00\x00\x00\x0bCOMMIT\x00"  # PostgreSQL's protocol, version 3: a simple query
 
 
@@ -67,16 +69,9 @@ class Proxy:
     async def _connection(self, reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
         wire = _Wire()
         up_reader, up_writer = await self._upstream()
-        ways = [
-            asyncio.create_task(self._up(reader, up_writer, wire)),
-            asyncio.create_task(self._down(up_reader, writer, wire)),
-        ]
         try:
-            await asyncio.wait(ways, return_when=asyncio.FIRST_COMPLETED)
+            await first_of(self._up(reader, up_writer, wire), self._down(up_reader, writer, wire))
         finally:
-            for way in ways:
-                way.cancel()
-            await asyncio.gather(*ways, return_exceptions=True)
             for each in (writer, up_writer):
                 each.transport.abort()
 

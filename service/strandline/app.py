@@ -255,7 +255,8 @@ class Service:
             if fixed := fixed_changes(self.config, config):
                 raise StrandlineError(f"{', '.join(fixed)} can only change with a restart")
             own = [feed for feed in config.feeds if feed.partitions is None]
-            if full := [feed.name for feed in own if not self.feeds[feed.name].has_headroom(feed)]:
+            full = [feed.name for feed in own if not self.feeds[feed.name].has_headroom(feed)]
+            if full := full + (self._cluster.without_room(config) if self._cluster is not None else []):
                 raise StrandlineError(f"the disk has no room to note it in the journal of {', '.join(full)}")
             standing = prepare(config, self._beyond, self.clock.now_ns())
         except (StrandlineError, OSError) as error:

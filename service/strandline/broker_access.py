@@ -6,8 +6,9 @@ Files are read anew for each connection, so that whoever keeps a secret there ma
 from __future__ import annotations
 
 import ssl
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, fields
 from pathlib import Path
+from typing import Self
 
 from .errors import ConfigError, StrandlineError
 from .private_files import read_private
@@ -34,6 +35,11 @@ class BrokerAccess:
     token_file: str | None = None
     creds_file: str | None = None
     ca_file: str | None = None
+
+    @classmethod
+    def of(cls, table: object) -> Self:
+        """Of a table of the configuration: what it has of these keys."""
+        return cls(**{each.name: getattr(table, each.name, None) for each in fields(cls)})
 
     def secrets(self) -> Secrets:
         """Read what lies in files. Blocking. Raises StrandlineError, which names the file and never its content."""

@@ -16,9 +16,10 @@ import msgspec
 from msgspec import field
 
 from .broker_access import BrokerAccess
-from .config_broker_kinds import PARTITION, broker_addresses, broker_name, partitioned_subject, user
-from .config_intakes import PASSWORD, SECRET_FILE, SubjectToken
-from .config_kinds import Address, Kind, address, choice, count, duration, name, secret, size
+from .config_broker_access import CaFile, CredsFile, Password, PasswordFile, Token, TokenFile, User
+from .config_broker_kinds import PARTITION, broker_addresses, broker_name, partitioned_subject
+from .config_intakes import SubjectToken
+from .config_kinds import Address, Kind, address, choice, count, duration, name, size
 from .config_read import Key, Table, declared
 from .core.settings import SECOND_NS
 from .ingest.formats import MEDIA_TYPES, NDJSON
@@ -72,33 +73,17 @@ class ClusterConfig(msgspec.Struct, frozen=True, kw_only=True):
     log_at_most_bytes: Annotated[
         int, Key(size("1MiB"), "room for the log of all partitions, reserved at each broker that keeps it")
     ] = field(default=GIB, name="log_at_most")
-    user: Annotated[str | None, Key(user(), "who to be at the broker")] = None
-    password: Annotated[str | None, Key(PASSWORD, "its password; better in its variable than in the file")] = None
-    password_file: Annotated[
-        str | None, Key(SECRET_FILE, "a file that holds the password, read at each connection; mode 600")
-    ] = None
-    token: Annotated[str | None, Key(secret("token", 4096), "a token in the place of user and password")] = None
-    token_file: Annotated[
-        str | None, Key(SECRET_FILE, "a file that holds the token, read at each connection; mode 600")
-    ] = None
-    creds_file: Annotated[
-        str | None, Key(SECRET_FILE, "a file with a user's JWT and seed, as the broker's own tools write it")
-    ] = None
-    ca_file: Annotated[
-        str | None, Key(SECRET_FILE, "certificates (PEM) to trust instead of the system's, where TLS is spoken")
-    ] = None
+    user: User = None
+    password: Password = None
+    password_file: PasswordFile = None
+    token: Token = None
+    token_file: TokenFile = None
+    creds_file: CredsFile = None
+    ca_file: CaFile = None
 
     def access(self) -> BrokerAccess:
         """Who to be, and whom to trust."""
-        return BrokerAccess(
-            self.user,
-            self.password,
-            self.password_file,
-            token=self.token,
-            token_file=self.token_file,
-            creds_file=self.creds_file,
-            ca_file=self.ca_file,
-        )
+        return BrokerAccess.of(self)
 
 
 class Partitions(msgspec.Struct, frozen=True, kw_only=True):

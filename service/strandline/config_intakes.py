@@ -11,8 +11,9 @@ import msgspec
 from msgspec import field
 
 from .broker_access import BrokerAccess
-from .config_broker_kinds import broker_address, broker_addresses, broker_name, subjects, topics, user
-from .config_kinds import choice, count, duration, name, secret, size
+from .config_broker_access import CaFile, CredsFile, Password, PasswordFile, Token, TokenFile, User
+from .config_broker_kinds import broker_address, broker_addresses, broker_name, subjects, topics
+from .config_kinds import choice, count, duration, name, size
 from .config_read import Key, Table
 from .core.settings import SECOND_NS
 from .ingest.formats import MEDIA_TYPES, NDJSON
@@ -20,8 +21,6 @@ from .ingest.formats import MEDIA_TYPES, NDJSON
 MIB = 2**20
 
 INTAKE_NAME = name("a-z0-9_-", "1 to 63 of a-z, 0-9, - and _, the first a letter or digit")
-PASSWORD = secret("password", 4096)
-SECRET_FILE = secret("path", 4096, hidden=False)
 
 
 class IntakeConfig(msgspec.Struct, frozen=True, kw_only=True):
@@ -38,18 +37,14 @@ class IntakeConfig(msgspec.Struct, frozen=True, kw_only=True):
     in_flight_bytes_at_most: Annotated[
         int, Key(size("1MiB", "1GiB"), "their bytes together; a single larger message is still taken")
     ] = 64 * MIB
-    user: Annotated[str | None, Key(user(), "who to be at the broker")] = None
-    password: Annotated[str | None, Key(PASSWORD, "its password; better in its variable than in the file")] = None
-    password_file: Annotated[
-        str | None, Key(SECRET_FILE, "a file that holds the password, read at each connection; mode 600")
-    ] = None
-    ca_file: Annotated[
-        str | None, Key(SECRET_FILE, "certificates (PEM) to trust instead of the system's, where TLS is spoken")
-    ] = None
+    user: User = None
+    password: Password = None
+    password_file: PasswordFile = None
+    ca_file: CaFile = None
 
     def access(self) -> BrokerAccess:
         """Who to be, and whom to trust."""
-        return BrokerAccess(self.user, self.password, self.password_file, ca_file=self.ca_file)
+        return BrokerAccess.of(self)
 
 
 class SubjectToken(msgspec.Struct, frozen=True):
@@ -86,26 +81,10 @@ class JetstreamIntake(IntakeConfig, frozen=True, kw_only=True):
             "the broker sends a message again that was neither settled nor reported as in progress for so long",
         ),
     ] = field(default=10 * SECOND_NS, name="ack_wait")
-    token: Annotated[str | None, Key(secret("token", 4096), "a token in the place of user and password")] = None
-    token_file: Annotated[
-        str | None, Key(SECRET_FILE, "a file that holds the token, read at each connection; mode 600")
-    ] = None
-    creds_file: Annotated[
-        str | None, Key(SECRET_FILE, "a file with a user's JWT and seed, as the broker's own tools write it")
-    ] = None
+    token: Token = None
+    token_file: TokenFile = None
+    creds_file: CredsFile = None
     source: Annotated[SubjectToken | None, Table(SubjectToken)] = None
-
-    def access(self) -> BrokerAccess:
-        """As for every intake."""
-        return BrokerAccess(
-            self.user,
-            self.password,
-            self.password_file,
-            token=self.token,
-            token_file=self.token_file,
-            creds_file=self.creds_file,
-            ca_file=self.ca_file,
-        )
 
 
 class MqttIntake(IntakeConfig, frozen=True, kw_only=True):

@@ -5,14 +5,16 @@ Rules that compare keys, of one sink or of several, are `config_sink_checks`.
 
 from __future__ import annotations
 
+from dataclasses import fields
 from pathlib import Path
-from typing import Annotated, Any, ClassVar, Literal
+from typing import Annotated, ClassVar, Literal
 
 import msgspec
 from msgspec import field
 
 from .broker_access import BrokerAccess
-from .config_broker_kinds import broker_addresses, broker_name, subject_prefix, user
+from .config_broker_access import CaFile, CredsFile, Password, PasswordFile, Token, TokenFile, User
+from .config_broker_kinds import broker_addresses, broker_name, subject_prefix
 from .config_kinds import (
     choice,
     count,
@@ -279,30 +281,20 @@ class JetstreamConfig(SinkConfig, frozen=True, kw_only=True):
     timeout_ns: Annotated[int, Key(duration("100ms", "1h"), "the longest wait for the stream's answer")] = field(
         default=10 * SECOND_NS, name="timeout"
     )
-    user: Annotated[str | None, Key(user(), "who to be at the server")] = None
-    password: Annotated[
-        str | None, Key(secret("password", 4096), "its password; better in its variable than in the file")
-    ] = None
-    password_file: Annotated[
-        str | None, Key(secret("path", 4096, hidden=False), "a file that holds the password, read at each connection")
-    ] = None
-    token: Annotated[str | None, Key(secret("token", 4096), "a token in the place of user and password")] = None
-    token_file: Annotated[
-        str | None, Key(secret("path", 4096, hidden=False), "a file that holds the token, read at each connection")
-    ] = None
-    creds_file: Annotated[
-        str | None, Key(secret("path", 4096, hidden=False), "a file with a user's JWT and seed, as NATS tools write it")
-    ] = None
-    ca_file: Annotated[
-        str | None, Key(secret("path", 4096, hidden=False), "certificates (PEM) to trust instead of the system's")
-    ] = None
+    user: User = None
+    password: Password = None
+    password_file: PasswordFile = None
+    token: Token = None
+    token_file: TokenFile = None
+    creds_file: CredsFile = None
+    ca_file: CaFile = None
 
     def options(self) -> dict[str, object]:
         """As for every sink; who to be there is one option."""
-        keys = ("user", "password", "password_file", "token", "token_file", "creds_file", "ca_file")
-        options = super().options()
-        given: dict[str, Any] = {key: options.pop(key) for key in keys}
-        return options | {"access": BrokerAccess(**given)}
+        access = BrokerAccess.of(self)
+        keys = {each.name for each in fields(access)}
+        options = {key: value for key, value in super().options().items() if key not in keys}
+        return options | {"access": access}
 
 
 SINK_KINDS: dict[str, type[SinkConfig]] = {

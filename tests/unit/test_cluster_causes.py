@@ -13,6 +13,7 @@ from nats.errors import TimeoutError as NatsTimeout
 from nats.js.errors import APIError, NotFoundError, ServiceUnavailableError
 from strandline.cluster.balance import Partition
 from strandline.cluster.causes import Cause, of_leases, of_settings, of_takeovers
+from strandline.cluster.http import seen_by
 from strandline.cluster.leases import VALUE_BYTES_AT_MOST, Look, Seen
 from strandline.cluster.running import digest_of
 from strandline.cluster.status import (
@@ -60,6 +61,21 @@ def test_who_could_not_take_over_is_named() -> None:
         "a could not take over x-0: its disk is full",
         "b could not take over x-1: no way",
     ]
+
+
+def test_who_may_not_see_all_partitions_is_told_of_no_other() -> None:
+    causes = [*of_takeovers("a", "x-0: its disk is full", {}), *of_settings(status(), {"b": status("e")})]
+    document = {
+        "partitions": [{"runtime": name} for name in ("x-0", "y-0")],
+        "causes": [each._asdict() for each in causes],
+        "words": "; ".join(each.words for each in causes),
+        "connected": True,
+    }
+    assert seen_by(document, lambda name: True) == document
+    some = seen_by(document, lambda name: name == "y-0")
+    assert some["partitions"] == [{"runtime": "y-0"}] and some["connected"]
+    assert [each["about"] for each in some["causes"]] == ["settings"]
+    assert "x-0" not in str(some) and some["words"].startswith("b reads messages by other settings")
 
 
 TEXT = """

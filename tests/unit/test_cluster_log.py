@@ -19,7 +19,7 @@ from strandline.core.records import VERSION, Kind, frame_bytes
 from strandline.errors import StrandlineError
 
 MIB = 1 << 20
-PLACE = Place.of("river", "gauges", 0)
+PLACE, OTHER = (Place.of("river", "gauges", number) for number in range(2))
 
 
 @pytest.fixture
@@ -39,8 +39,8 @@ def record(number: int, size: int = 16) -> Whole:
 class Owner:
     """One that appends records and knows where its journal ends."""
 
-    def __init__(self, link: Link, fence: int) -> None:
-        self.log, self.lsn, self.contents = PartitionLog(link, PLACE, fence), 0, Contents()
+    def __init__(self, link: Link, fence: int, place: Place = PLACE) -> None:
+        self.log, self.lsn, self.contents = PartitionLog(link, place, fence), 0, Contents()
 
     async def begin(self) -> Owner:
         """Take the log over."""
@@ -282,15 +282,21 @@ async def test_a_missing_group_is_told(server: Nats, monkeypatch: pytest.MonkeyP
             await Owner(link_b, 2).begin()
 
 
+async def waiting_for_room(owner: Owner, stored: int) -> asyncio.Future[None]:
+    """An append that waits, behind so many of 300 kB that the stream had room for."""
+    for number in range(stored):
+        await owner.put([record(number, 300_000)])
+    waiting = asyncio.ensure_future(owner.put([record(stored, 300_000)]))
+    await until(lambda: "its room is log_at_most" in owner.log.words, "words about room")
+    assert not waiting.done()
+    return waiting
+
+
 async def test_a_full_stream_says_so_and_goes_on_once_there_is_room(server: Nats) -> None:
     async with linked(server, "a", "b") as (link_a, link_b):
         await make_stream(link_b, "river", 1, MIB)
         owner = await Owner(link_a, 1).begin()
-        for number in range(3):
-            await owner.put([record(number, 300_000)])
-        waiting = asyncio.ensure_future(owner.put([record(3, 300_000)]))
-        await until(lambda: "its room is log_at_most" in owner.log.words, "words about room")
-        assert not waiting.done()
+        waiting = await waiting_for_room(owner, 3)
         await make_stream(link_b, "river", 1, 2 * MIB)  # the limit was changed
         await waiting
         assert owner.log.words == ""
@@ -300,13 +306,15 @@ async def test_a_full_stream_says_so_and_goes_on_once_there_is_room(server: Nats
 async def test_a_full_stream_gets_room_by_a_snapshot_of_another_partition(server: Nats) -> None:
     async with linked(server, "a", "b") as (link_a, link_b):
         await make_stream(link_b, "river", 1, MIB)
-        owner = await Owner(link_a, 1).begin()
-        for number in range(3):
-            await owner.put([record(number, 300_000)])
-        waiting = asyncio.ensure_future(owner.put([record(3, 300_000)]))
-        await until(lambda: "its room" in owner.log.words, "words about room")
-        await (await link_b.jetstream()).purge_stream(PLACE.stream, subject=PLACE.groups, keep=1)
+        owner, other = await Owner(link_a, 1).begin(), await Owner(link_b, 1, OTHER).begin()
+        await other.put([record(0, 500_000)])
+        saved = await other.log.store_snapshot(other.lsn, [b"small"], other.lsn)
+        await other.put([saved])
+        waiting = await waiting_for_room(owner, 1)
+        await other.log.let_go(saved, other.log.last)
         await waiting
+        assert owner.log.words == ""
+        assert (await Owner(link_b, 2).begin()).found == [0, 1]
 
 
 async def test_a_message_that_is_no_group_says_where_and_what_to_do(server: Nats) -> None:

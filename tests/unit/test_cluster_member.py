@@ -62,7 +62,7 @@ async def test_what_a_killed_one_owned_is_taken_over_once_its_leases_end(server:
         began_s = time.monotonic()
         await made.kill("b")
         await made.becomes(lambda: lost & made.running.keys())
-        # It renewed a third of a lease before at the earliest, so no entry ends before two thirds.
+        # It renewed a fifth of a lease before at the earliest, so no entry ends before four fifths.
         assert time.monotonic() - began_s > SHORT_S / 2
         await made.until(2, 2)
         assert not made.stopped

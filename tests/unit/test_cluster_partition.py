@@ -204,7 +204,7 @@ async def test_the_log_is_shortened_and_a_take_over_reads_only_the_rest(server: 
             subject = f"river-log.groups.{FEED}.0"
             groups = (await stream.stream_info("river-log", subjects_filter=subject)).state.subjects
             # Of some thousand messages' groups those stay that came since a snapshot of 64 KiB and more.
-            assert sum((groups or {}).values()) < events // ROWS // 2
+            assert 0 < sum((groups or {}).values()) < events // ROWS // 2
         await partition.stop(drain=True)
         await b.own(2)
         await settled(b, events)
@@ -367,7 +367,6 @@ async def test_an_owner_that_is_overtaken_says_so(server: Nats, tmp_path: Path) 
         await asyncio.wait_for(partition.ended.wait(), 30)
         assert "taken over by another instance" in partition.why
         await partition.stop(drain=True)
-
 
 
 async def test_a_partition_that_is_new_has_no_past(server: Nats, tmp_path: Path) -> None:

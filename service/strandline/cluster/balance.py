@@ -75,13 +75,6 @@ def decide(
     )
 
 
-def balanced(live: Collection[str], owners: Mapping[Partition, str | None]) -> bool:
-    """Whether every partition has a live owner, and each of those between floor and ceil of the even share."""
-    held = list(owners.values())
-    counts = [held.count(name) for name in live]
-    return sum(counts) == len(held) and (not counts or max(counts) - min(counts) <= 1)
-
-
 def _wanted(partitions: int, owned: Mapping[str, int], unable: Collection[str]) -> dict[str, int]:
     """The share of each; where some are unable, what they do not hold is shared out over the others."""
     wanted = shares(partitions, owned)

@@ -12,6 +12,7 @@ from .status import Status
 
 AWAY, BARRED = "away", "barred"  # no broker answers; they do, and what is configured does not fit
 LEASE, NAME, TAKEOVER, SETTINGS = "lease", "name", "takeover", "settings"
+NAMING_PARTITIONS = frozenset({LEASE, TAKEOVER})  # not for who may not read all of them
 NAMES_AT_MOST = 3
 
 

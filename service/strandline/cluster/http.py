@@ -2,16 +2,20 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Mapping
+from typing import Any
+
 import msgspec
 from aiohttp import web
 
 from ..access_gate import may_read
 from ..ingest.endpoint import CONFIG
 from ..problems import NotThere
+from .causes import NAMING_PARTITIONS
 from .whereabouts import CLUSTER, Documented
 from .words import said
 
-__all__ = ["CLUSTER", "Documented", "cluster_causes", "get_cluster"]
+__all__ = ["CLUSTER", "Documented", "cluster_causes", "get_cluster", "seen_by"]
 
 
 async def get_cluster(request: web.Request) -> web.Response:
@@ -19,10 +23,19 @@ async def get_cluster(request: web.Request) -> web.Response:
     cluster = request.app.get(CLUSTER)
     if cluster is None:
         raise NotThere("this service is in no cluster: its configuration has no [cluster]")
-    document = cluster.document()
-    document["partitions"] = [each for each in document["partitions"] if may_read(request, each["runtime"])]
+    document = seen_by(cluster.document(), lambda name: may_read(request, name))
     document |= said(document)._asdict()
     return web.Response(body=msgspec.json.encode(document), content_type="application/json")
+
+
+def seen_by(document: Mapping[str, Any], may_see: Callable[[str], bool]) -> dict[str, Any]:
+    """The document for who may see these partitions: causes that name partitions are left out where some are hidden."""
+    rows = [each for each in document["partitions"] if may_see(each["runtime"])]
+    if len(rows) == len(document["partitions"]):
+        return dict(document)
+    causes = [each for each in document["causes"] if each["about"] not in NAMING_PARTITIONS]
+    words = "; ".join(each["words"] for each in causes)
+    return {**document, "partitions": rows, "causes": causes, "words": words}
 
 
 def cluster_causes(request: web.Request) -> tuple[list[str], bool]:

@@ -119,7 +119,10 @@ def _unfit(found: api.StreamConfig, wanted: api.StreamConfig) -> str:
 
 
 class PartitionLog:
-    """The log of one partition in the hands of one owner. Calls never overlap; lives on one event loop."""
+    """The log of one partition in the hands of one owner. Appends never overlap; a snapshot may be stored beside them.
+
+    Lives on one event loop.
+    """
 
     def __init__(self, link: Link, place: Place, fence: int) -> None:
         self._link, self._place, self._fence = link, place, fence

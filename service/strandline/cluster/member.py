@@ -35,7 +35,7 @@ from .troubles import Troubles
 log = logging.getLogger(__name__)
 LOOK_AT_MOST_S, LOOK_AT_LEAST_S, LOOK_SHARE = 1.0, 0.1, 1 / 15  # how often it looks: each second with a lease of 15 s
 TAKES_AT_A_LOOK = 64  # taken one after the other; the heartbeat must not wait for a thousand of them
-CONNECT_BASE_S, CONNECT_AT_MOST_S = 0.2, 5.0  # backoff; with a lease of 15 s there are 7 s to be connected again
+CONNECT_BASE_S, CONNECT_AT_MOST_S = 0.2, 5.0  # backoff; with a lease of 15 s there are 10.5 s to renew again
 STOP_WITHIN_S = 20.0
 MISSES_AT_MOST = 3  # turns that failed in a row, before another broker is tried
 CAUSES_AT_MOST = 16  # that are logged of one absence

@@ -1,7 +1,7 @@
 """One partition in the hands of this instance: taken over, at work, given back.
 
-The written order of taking over: read the log and put a group of one's own there (from then on no former owner can
-write); make the journal again; recover from it and open the sinks, as at any start; only then take further messages.
+The written order of taking over: put a group of one's own into the log (from then on no former owner can write) and
+read it; make the journal again; recover from it and open the sinks, as at any start; only then take further messages.
 Which partitions are taken is decided by `member` and `balance`.
 """
 
@@ -195,6 +195,10 @@ class Partition:
         runtime.recent.close()
         runtime.journal.unmap()
         await in_thread(lambda: shutil.rmtree(self._scratch, ignore_errors=True))  # what stays goes at the next start
+
+    def has_headroom(self, own: FeedConfig) -> bool:
+        """Whether these settings could be noted in its journal now."""
+        return self._runtime is None or self._runtime.has_headroom(own)
 
     def reconfigure(self, feed: FeedConfig, own: FeedConfig) -> None:
         """Go on with other settings and limits; what a running feed cannot change must be the same."""

@@ -77,6 +77,12 @@ class Cluster:
         await self.member.stop(within_s)
         self._aside.close()
 
+    def without_room(self, config: Config) -> list[str]:
+        """The partitions here that could not note this configuration in their journal now."""
+        self._forget_stopped()
+        owned = [(config.feed(partition.name), partition) for partition in self._owned.values()]
+        return [partition.name for own, partition in owned if own is not None and not partition.has_headroom(own)]
+
     def reconfigure(self, config: Config) -> None:
         """Go on with other settings of feeds; what cannot change while it runs is the same."""
         self._config = config
@@ -96,6 +102,8 @@ class Cluster:
         takeovers.note(partition.took_s)
         self._forget_stopped()
         self._owned[numbered] = partition
+        if (configured := self._configured(numbered)) != (feed, own):  # read again during the takeover
+            partition.reconfigure(*configured)
         return partition
 
     def _forget_stopped(self) -> None:

@@ -13,7 +13,7 @@ from .causes import AWAY, BARRED, LEASE, NAME, SETTINGS, TAKEOVER
 
 FINE, WATCH, BAD = "fine", "watch", "bad"
 NOBODYS_AFTER_S = 5.0  # what changes hands is nobody's for a moment: a look takes a second, and so does the taking
-QUIET_SHARE = 0.6  # of the lease: a heartbeat comes each third of it, so at least one is missing by then
+QUIET_SHARE = 0.6  # of the lease: a heartbeat comes each fifth of it, so at least two are missing by then
 FAR_BEHIND_MESSAGES = 1000  # of 50 to 500 events each; what is being caught up after a takeover is less, or soon gone
 _NUMBERS = re.compile(r"\d[\d,.:]*")
 _ORDER = (FINE, WATCH, BAD)
