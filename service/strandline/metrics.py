@@ -5,7 +5,7 @@ What each metric means is written down in `metrics_reference`.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from itertools import accumulate
 from typing import Any
 
@@ -62,8 +62,7 @@ def _families() -> dict[str, Metric]:
         "histogram": HistogramMetricFamily,
     }
     return {
-        name: kinds[meaning.kind](name, meaning.help, labels=meaning.all_labels)
-        for name, meaning in METRICS.items()
+        name: kinds[meaning.kind](name, meaning.help, labels=meaning.all_labels) for name, meaning in METRICS.items()
     }
 
 
@@ -74,13 +73,17 @@ def _fill_cluster(families: Mapping[str, Any], figures: Figures) -> None:
     for name, counts in (("owned", figures.owned), ("nobodys", figures.nobodys or {})):
         for feed, count in counts.items():
             families[f"strandline_cluster_partitions_{name}"].add_metric((feed,), count)
-    bounds = [*map(repr, TAKEOVER_BOUNDS_S), "+Inf"]
     for feed, takeovers in figures.takeovers.items():
-        buckets = list(zip(bounds, accumulate(takeovers.counts), strict=True))
+        buckets = _buckets(TAKEOVER_BOUNDS_S, takeovers.counts)
         families["strandline_cluster_takeover_seconds"].add_metric((feed,), buckets, takeovers.total_s)
         families["strandline_cluster_takeover_failures"].add_metric((feed,), takeovers.failed)
     for partition, trouble in figures.log_trouble.items():
         families["strandline_cluster_log_trouble"].add_metric((partition,), float(trouble))
+
+
+def _buckets(bounds: Iterable[float], counts: Iterable[int]) -> list[tuple[str, int]]:
+    """By its upper bound, how many lie at or below it; `counts` has one more, of what lies above all bounds."""
+    return list(zip([*map(repr, bounds), "+Inf"], accumulate(counts), strict=True))
 
 
 class _Sampler:
@@ -144,9 +147,7 @@ class _Sampler:
         self.histogram("strandline_run_length_events", figures.run_length, 1)
 
     def histogram(self, name: str, counts: Histogram, unit: float) -> None:
-        bounds = [*(repr(bound / unit) for bound in counts.bounds), "+Inf"]
-        cumulated = counts.counts.cumsum().tolist()
-        buckets = list(zip(bounds, cumulated, strict=True))
+        buckets = _buckets((bound / unit for bound in counts.bounds), counts.counts.tolist())
         self.families[name].add_metric((self.feed,), buckets, counts.total / unit)  # type: ignore[attr-defined]
 
     def _journal(self) -> None:
@@ -157,8 +158,7 @@ class _Sampler:
         self.add("strandline_journal_limit_bytes", self.runtime.config.journal.at_most_bytes)
         self.add("strandline_journal_unsynced_bytes", journal.queued_bytes)
         self.add("strandline_journal_syncs", counters.syncs)
-        bounds = [*map(repr, SYNC_BOUNDS_S), "+Inf"]
-        buckets = list(zip(bounds, accumulate(counters.sync_counts), strict=True))
+        buckets = _buckets(SYNC_BOUNDS_S, counters.sync_counts)
         self.families["strandline_journal_sync_seconds"].add_metric(  # type: ignore[attr-defined]
             (self.feed,), buckets, counters.sync_seconds_total
         )
@@ -186,8 +186,7 @@ class _Sampler:
             self.add("strandline_intake_lost", counts.losses, name)
             if counts.waiting is not None:
                 self.add("strandline_intake_waiting_messages", counts.waiting, name)
-            bounds = [*map(repr, DELAY_BOUNDS_S), "+Inf"]
-            buckets = list(zip(bounds, accumulate(counts.delays.counts), strict=True))
+            buckets = _buckets(DELAY_BOUNDS_S, counts.delays.counts)
             self.families["strandline_intake_broker_seconds"].add_metric(  # type: ignore[attr-defined]
                 (self.feed, name), buckets, counts.delays.total_s
             )

@@ -9,6 +9,7 @@ import asyncio
 import re
 import signal
 from collections.abc import AsyncIterator, Iterator
+from itertools import product
 from pathlib import Path
 from typing import Any
 
@@ -20,7 +21,8 @@ from helpers_cluster import Instance, settled
 from helpers_dashboard import feeding, live, says, service_with, shoot, until
 from helpers_in_cluster import gateways, make_parted_stream, member
 from helpers_service import FEED
-from playwright.async_api import Browser, Page, expect
+from playwright.async_api import Browser, Page, Route, expect
+from strandline.cluster.words import FAR_BEHIND_MESSAGES, QUIET_SHARE, eyes_first, is_far_behind
 
 pytestmark = pytest.mark.asyncio(loop_scope="module")
 PARTITIONS, LEASE = 4, "4s"
@@ -196,6 +198,26 @@ async def test_without_a_cluster_there_is_no_view_and_nothing_is_asked(launched:
             assert asked and not [url for url in asked if "cluster" in url and "/v1/" in url]
 
 
+async def test_a_cluster_that_is_heard_of_late_lists_no_partition_twice(
+    launched: Browser, pair: list[Instance]
+) -> None:
+    here, failing = owned(pair[0]), [True]
+
+    async def handler(route: Route) -> None:
+        if failing:
+            failing.clear()
+            await route.fulfill(status=503, body="{}", content_type="application/problem+json")
+        else:
+            await route.continue_()
+
+    async with page_of(launched, "about:blank", expected=("status of 503",)) as page:
+        await page.route("**/v1/cluster", handler)
+        await page.goto(f"{pair[0].url}/?feed={here[0]}")
+        await live(page)
+        await expect(page.locator("#cluster-says")).to_have_text("✓ 4 partitions owned, by 2 instances")
+        assert not failing and await page.locator("#feed option").all_text_contents() == here
+
+
 # ---- words, by calling the page's own modules ------------------------------------------------------------------------
 
 
@@ -221,6 +243,32 @@ async def test_only_an_address_that_can_be_reached_becomes_a_link(launched: Brow
                 [listen, {"protocol": protocol, "hostname": hostname}],
             )
             assert found == wanted, listen
+
+
+async def test_what_needs_eyes_is_what_the_service_itself_says(launched: Browser, pair: list[Instance]) -> None:
+    """The page and `cluster.words` have the same bounds and the same order; both are ours, so each checks the other."""
+    script = """async ([rows, cluster]) => {
+      const { eyesFirst, instancesOf, isFarBehind } = await import("/dashboard/cluster.js");
+      return [eyesFirst(rows).map((row) => row.runtime), rows.filter(isFarBehind).map((row) => row.runtime),
+        instancesOf(cluster).filter((one) => one.state === "quiet").map((one) => one.name)];
+    }"""
+    states = ["owned", "nobody's", "taking over"]
+    behind = [None, 0, FAR_BEHIND_MESSAGES - 1, FAR_BEHIND_MESSAGES, FAR_BEHIND_MESSAGES + 1]
+    rows = [
+        {"runtime": f"{number}", "state": state, "behind_messages": messages, "words": words}
+        for number, (words, messages, state) in enumerate(product(["", "slow"], behind, states))
+    ]
+    lease_s, edge_s = 10.0, QUIET_SHARE * 10.0
+    seen = {"at the edge": edge_s, "beyond": edge_s + 0.01}
+    cluster = {
+        "instance": "this one", "away_s": None, "lease_s": lease_s, "gone": [],
+        "instances": [{"instance": name, "seen_s": seen_s, "owns": 1, "listen": None} for name, seen_s in seen.items()],
+    }  # fmt: skip
+    async with page_of(launched, f"{pair[0].url}/") as page:
+        order, far, quiet = await page.evaluate(script, [rows, cluster])
+    assert order == [row["runtime"] for row in eyes_first(rows)]
+    assert far == [row["runtime"] for row in rows if is_far_behind(row)]
+    assert quiet == ["beyond"]
 
 
 async def test_the_worst_is_said_first_and_the_feed_after_it(launched: Browser, pair: list[Instance]) -> None:

@@ -7,9 +7,9 @@ from pathlib import Path
 
 import msgspec
 import pytest
-from helpers_service import BEGIN_S, FEED, configuration, eventually, running
+from helpers_service import BEGIN_S, configuration, eventually, running
 from helpers_sinks import VirtualTime
-from strandline.dashboard.live import WATCHES
+from helpers_watches import memory_of
 from strandline.reporting.facts import Facts
 from strandline.reporting.sentences import summary
 from strandline.reporting.words import plain
@@ -24,9 +24,7 @@ async def test_what_a_sink_collects_as_configured_is_no_waiting(tmp_path: Path, 
     folder = json.dumps(str(tmp_path / "out"))
     sinks = f'[[feed.sink]]\nkind = "ndjson"\ndirectory = {folder}\nroll_every = "10m"\n'
     async with running(configuration(tmp_path, sinks=sinks), clock=clock) as service:
-        runner = service.service._runner
-        assert runner is not None
-        memory = runner.app[WATCHES][FEED].memory
+        memory = memory_of(service)
         await service.send([0])
         delivery = service.runtime.deliveries["ndjson"]
         await eventually(lambda: delivery.state().lanes["ordered"].batches == 1)

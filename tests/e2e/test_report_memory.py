@@ -6,11 +6,10 @@ from pathlib import Path
 
 import msgspec
 import pytest
-from helpers_service import BEGIN_S, FEED, Running, configuration, running
+from helpers_service import BEGIN_S, Running, configuration, running
 from helpers_sinks import VirtualTime
+from helpers_watches import memory_of
 from strandline.config_cluster import Partitions
-from strandline.dashboard.live import WATCHES
-from strandline.dashboard.sampling import FeedMemory
 from strandline.reporting.gathering import facts_of, look
 from strandline.runtime import FeedRuntime
 from strandline.tracing.http import Traces
@@ -25,16 +24,10 @@ def as_partition(service: Running) -> None:
     service.runtime.config = msgspec.structs.replace(service.runtime.config, partitions=parts)
 
 
-def memory_of(service: Running) -> FeedMemory:
-    assert service.service._runner is not None
-    memory: FeedMemory = service.service._runner.app[WATCHES][FEED].memory
-    return memory
-
-
 async def test_a_coarse_step_does_not_make_the_memory_older_than_it_is(tmp_path: Path) -> None:
     """After 15 minutes steps are of 10 s: the first one begins before the service did."""
-    clock = VirtualTime()
-    begun_ns = clock.now = (BEGIN_S + 7) * SECOND
+    begun_ns = (BEGIN_S + 7) * SECOND
+    clock = VirtualTime(begun_ns)
     async with running(configuration(tmp_path), clock=clock) as service:
         memory = memory_of(service)
         for _ in range(1000):
@@ -45,6 +38,8 @@ async def test_a_coarse_step_does_not_make_the_memory_older_than_it_is(tmp_path:
         assert facts.series.since_ns == begun_ns
         later = facts_of(look(memory, begun_ns + 600 * SECOND, clock.now))
         assert later.series.since_ns is not None and later.series.since_ns <= later.from_ns
+        before = facts_of(look(memory, BEGIN_S * SECOND, begun_ns - SECOND))
+        assert before.series.since_ns is None and before.books.end is None, "that step's beginning was not seen"
 
 
 async def test_a_report_knows_that_the_feed_is_a_partition(tmp_path: Path) -> None:

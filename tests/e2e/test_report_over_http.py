@@ -26,8 +26,8 @@ from helpers_service import (
     running,
 )
 from helpers_sinks import VirtualTime
+from helpers_watches import memory_of
 from strandline.cli import main
-from strandline.dashboard.live import WATCHES
 from strandline.errors import SinkRetry
 from strandline.reporting import http
 from strandline.reporting.facts import Facts
@@ -66,9 +66,7 @@ class Clocked:
 
     def __init__(self, service: Running, clock: VirtualTime) -> None:
         self.service, self.clock = service, clock
-        runner = service.service._runner
-        assert runner is not None
-        self.memory = runner.app[WATCHES][FEED].memory
+        self.memory = memory_of(service)
 
     async def to(self, second: int, *sending: str) -> None:
         """Let seconds pass; in each the gateways send one event."""

@@ -14,7 +14,6 @@ import pytest
 from helpers_service import (
     BEGIN_S,
     DEADLINE_S,
-    FEED,
     Running,
     body_of,
     configuration,
@@ -24,8 +23,9 @@ from helpers_service import (
     retry_after,
     running,
 )
+from helpers_watches import watch_of
 from strandline.dashboard import live
-from strandline.dashboard.live import WATCHES, Moment, Variant, Watch
+from strandline.dashboard.live import Moment, Variant
 from strandline.ingest.timestamps import parse_rfc3339
 
 HOSTILE = [
@@ -44,13 +44,6 @@ HOSTILE = [
 def quick(monkeypatch: pytest.MonkeyPatch) -> None:
     """Moments follow each other at once, so that no test waits for half a second."""
     monkeypatch.setattr(live, "EVERY_S", 0.01)
-
-
-def watch_of(service: Running) -> Watch:
-    """The feed's watch."""
-    assert service.service._runner is not None
-    watch: Watch = service.service._runner.app[WATCHES][FEED]
-    return watch
 
 
 class Moments:

@@ -12,7 +12,9 @@ from typing import Any
 import numpy as np
 import pytest
 from helpers_feed import Shell, patient
-from helpers_service import FEED, Running, body_of, configuration, event_line, eventually, running
+from helpers_service import BEGIN_S, body_of, configuration, event_line, eventually, running
+from helpers_sinks import VirtualTime
+from helpers_watches import memory_of
 from hypothesis import example, given, settings
 from hypothesis import strategies as st
 from strandline.core.columns import REF, Batch
@@ -21,21 +23,10 @@ from strandline.dashboard import late as late_module
 from strandline.dashboard import live
 from strandline.dashboard.late import RecentLate
 from strandline.dashboard.lateness import COUNTS, EDGES_NS, SinceLast, every_slack
-from strandline.dashboard.live import WATCHES
 from strandline.dashboard.sampling import RATES_OVER_NS, FeedMemory
 
 SECOND_NS = 10**9
-START_NS = 1_700_000_000 * SECOND_NS
-
-
-class SetClock:
-    """A clock that stands where it is set."""
-
-    def __init__(self) -> None:
-        self.at_ns = START_NS
-
-    def now_ns(self) -> int:
-        return self.at_ns
+START_NS = BEGIN_S * SECOND_NS
 
 
 @pytest.fixture(autouse=True)
@@ -44,27 +35,21 @@ def by_hand(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(live, "SAMPLE_EVERY_S", 3600.0)
 
 
-def memory_of(service: Running) -> FeedMemory:
-    assert service.service._runner is not None
-    memory: FeedMemory = service.service._runner.app[WATCHES][FEED].memory
-    return memory
-
-
 # ---- samples and the history asked for ------------------------------------------------------------------------------
 
 
 async def test_the_history_is_what_the_books_say(tmp_path: Path) -> None:
     """Six seconds, a body in each; sums over the history are the ledger, and every column is as long as the steps."""
-    clock = SetClock()
+    clock = VirtualTime(START_NS)
     async with running(configuration(tmp_path, slack="2s", sinks=""), clock=clock) as service:
         memory = memory_of(service)
         for second in range(1, 7):
-            clock.at_ns = START_NS + second * SECOND_NS
+            clock.now = START_NS + second * SECOND_NS
             await service.send([second, second - 0.5], "gw-1")
             await service.send([second - 3.5], "gw-2")
             await service.post("events", body_of(b"{"))
             memory.sample()
-        found = (await service.get(f"history?from_ms={START_NS // 10**6}&to_ms={clock.at_ns // 10**6}")).json
+        found = (await service.get(f"history?from_ms={START_NS // 10**6}&to_ms={clock.now // 10**6}")).json
         document = await service.document()
         ledger = document["ledger"]
         for name in ("received", "released", "late", "duplicate", "quarantined"):
@@ -97,18 +82,18 @@ async def test_the_history_is_what_the_books_say(tmp_path: Path) -> None:
 
 
 async def test_a_history_without_anything_in_it(tmp_path: Path) -> None:
-    async with running(configuration(tmp_path), clock=SetClock()) as service:
+    async with running(configuration(tmp_path), clock=VirtualTime(START_NS)) as service:
         found = (await service.get("history?from_ms=0&to_ms=1")).json
         assert (found["t_ms"], found["lanes"], found["lateness"]["rows"]) == ([], {}, [])
         assert found["acts"] == found["holds"] == []
 
 
 async def test_acts_are_told_with_the_time_asked_for(tmp_path: Path) -> None:
-    clock = SetClock()
+    clock = VirtualTime(START_NS)
     async with running(configuration(tmp_path, slack="5s"), clock=clock) as service:
         await service.send([1])
         for second in (10, 20):
-            clock.at_ns = START_NS + second * SECOND_NS
+            clock.now = START_NS + second * SECOND_NS
             await service.post("excuse", {"source": "gw-1", "reason": f"link {second}"})
         found = (await service.get(f"history?from_ms={(START_NS + 15 * SECOND_NS) // 10**6}")).json
         assert [act["reason"] for act in found["acts"]] == ["link 20"]
@@ -118,7 +103,7 @@ async def test_a_still_feed_is_told_as_if_it_had_been_looked_at(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     """Two memories of one feed, one of which makes each row anew: the same rows in traffic, in silence and after it."""
-    clock = SetClock()
+    clock = VirtualTime(START_NS)
     async with running(configuration(tmp_path, slack="0s"), clock=clock) as service:
         runtime = service.runtime
         quick, slow = FeedMemory(runtime), FeedMemory(runtime)
@@ -133,7 +118,7 @@ async def test_a_still_feed_is_told_as_if_it_had_been_looked_at(
 
         monkeypatch.setattr(quick, "_row", counted)
         for second in range(1, 41):
-            clock.at_ns = START_NS + second * SECOND_NS
+            clock.now = START_NS + second * SECOND_NS
             if second in (1, 2, 20, 21):
                 await service.send([second, second - 30 * (second == 21)])
             if second == 30:
@@ -144,21 +129,21 @@ async def test_a_still_feed_is_told_as_if_it_had_been_looked_at(
             slow.sample()
         assert quick.history.rows(0).tobytes() == slow.history.rows(0).tobytes()
         assert made < 20
-        rates = [memory.rates(clock.at_ns + 1, runtime.hops()) for memory in (quick, slow)]
+        rates = [memory.rates(clock.now + 1, runtime.hops()) for memory in (quick, slow)]
         assert rates[0] == rates[1]
 
 
 async def test_rates_are_those_of_the_last_seconds(tmp_path: Path) -> None:
     """10 events a second for 8 s: the window of 5 s sees 10 a second; then none, and 0 once they have left it."""
-    clock = SetClock()
+    clock = VirtualTime(START_NS)
     async with running(configuration(tmp_path, slack="0s"), clock=clock) as service:
         memory, runtime = memory_of(service), service.runtime
 
         def rates() -> Any:
-            return memory.rates(clock.at_ns, runtime.hops())
+            return memory.rates(clock.now, runtime.hops())
 
         for second in range(1, 9):
-            clock.at_ns = START_NS + second * SECOND_NS
+            clock.now = START_NS + second * SECOND_NS
             await service.send([second + part / 100 for part in range(10)])
             await eventually(lambda: runtime.feed.state.outbox.undelivered_events == 0)
             memory.sample()
@@ -169,27 +154,27 @@ async def test_rates_are_those_of_the_last_seconds(tmp_path: Path) -> None:
         assert {name: found.passed[name] for name in ("journal", "runs", "release", "sinks")} == pytest.approx(
             dict.fromkeys(("journal", "runs", "release", "sinks"), 10)
         )
-        clock.at_ns += RATES_OVER_NS
+        clock.now += RATES_OVER_NS
         memory.sample()
-        clock.at_ns += SECOND_NS
+        clock.now += SECOND_NS
         assert rates().books["received"] == 0
 
 
 async def test_the_last_minute_is_counted_up_to_now(tmp_path: Path) -> None:
     """Two events a second of which one is a repeat, sampled once a second; the last body came after the last sample."""
-    clock = SetClock()
+    clock = VirtualTime(START_NS)
     async with running(configuration(tmp_path, slack="0s", id="/id"), clock=clock) as service:
         memory = memory_of(service)
         for second in range(1, 91):
-            clock.at_ns = START_NS + second * SECOND_NS
+            clock.now = START_NS + second * SECOND_NS
             line = event_line(second, "gw-1", id=f"e{second}")
             await service.post("events", body_of(line, line))
             if second < 90:
                 memory.sample()
-        found = memory.minute(clock.at_ns)
+        found = memory.minute(clock.now)
         assert (found["received"], found["duplicate"], found["late"]) == (120, 60, 0)
-        clock.at_ns += 30 * SECOND_NS
-        assert memory.minute(clock.at_ns)["duplicate"] == 30
+        clock.now += 30 * SECOND_NS
+        assert memory.minute(clock.now)["duplicate"] == 30
 
 
 async def test_a_sample_that_fails_stops_nothing(

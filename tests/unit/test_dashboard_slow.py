@@ -12,9 +12,10 @@ from itertools import pairwise
 from pathlib import Path
 
 import pytest
-from helpers_service import DEADLINE_S, FEED, Running, body_of, configuration, event_line, eventually, running
+from helpers_service import DEADLINE_S, Running, body_of, configuration, event_line, eventually, running
+from helpers_watches import watch_of
 from strandline.dashboard import live
-from strandline.dashboard.live import WATCHES, Watch
+from strandline.dashboard.live import Watch
 
 SOURCES = 100  # with names of 250 bytes: a moment is some 50 KB, so few of them fill the sockets in between
 
@@ -46,9 +47,7 @@ async def filled(service: Running) -> Watch:
     """The watch of a feed with many sources of long names."""
     lines = [event_line(100, f"{number:02}" + "x" * 248) for number in range(SOURCES)]
     assert (await service.post("events", body_of(*lines))).json["accepted"] == SOURCES
-    assert service.service._runner is not None
-    watch: Watch = service.service._runner.app[WATCHES][FEED]
-    return watch
+    return watch_of(service)
 
 
 def waiting_bytes(service: Running) -> int:

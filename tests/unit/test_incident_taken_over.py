@@ -104,5 +104,7 @@ def test_a_partition_of_which_this_instance_saw_nothing() -> None:
 def test_a_sample_missed_at_the_begin_is_no_later_begin() -> None:
     steps = series()
     for since_ns, known in ((at(0) + NEAR_NS, None), (at(0) + NEAR_NS + 1, at(0) + NEAR_NS + 1), (None, at(3600))):
-        assert seen_since_ns(incident(steps=msgspec.structs.replace(steps, since_ns=since_ns))) == known
+        facts = incident(steps=msgspec.structs.replace(steps, since_ns=since_ns))
+        assert seen_since_ns(facts) == known
+        assert any("keeps no more" in text or "has none" in text for (text,) in limits(facts)) is (known is not None)
     assert tables.failing(incident()).empty == "None was seen failing."

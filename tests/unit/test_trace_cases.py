@@ -67,14 +67,18 @@ async def store_of(path: Path, story: Story) -> LaneStore:
     return store
 
 
-async def test_a_refusal_and_a_repair_are_told(tmp_path: Path) -> None:
-    path, story = tmp_path / "lanes.db", late_story()
-    store, lines = await store_of(path, story), StoryLines(story)
-    ordered = story.shell.batches["ordered"]
-    await store.keep_refused("store", ordered, "no such series", lines, 1 << 30)  # type: ignore[arg-type]
+async def keep_refused_and_repaired(path: Path, story: Story, lane: Lane) -> None:
+    """As `store_of`; one sink refused what is in a lane, and the first late event was sent to another as a repair."""
+    store, batches = await store_of(path, story), story.shell.batches[lane]
+    await store.keep_refused("store", batches, "no such series", StoryLines(story), 1 << 30)  # type: ignore[arg-type]
     await store.plan_repair("archive", 1)
     await store.end_repair("archive", 1, 2)
     await store.close()
+
+
+async def test_a_refusal_and_a_repair_are_told(tmp_path: Path) -> None:
+    path, story = tmp_path / "lanes.db", late_story()
+    await keep_refused_and_repaired(path, story, "ordered")
     journal = story.journal()
     refused = asked(journal, lanes=path, id="new")["matches"][0]
     assert refused["sinks"]["store"] == {"state": "refused", "taken_up_to_batch": 1, "detail": "no such series"}
@@ -119,12 +123,7 @@ def short_of(story: Story) -> Journal:
 
 async def test_who_has_a_kept_event_is_told_by_position_refusal_and_repair(tmp_path: Path) -> None:
     path, story = tmp_path / "lanes.db", late_story()
-    store, lines = await store_of(path, story), StoryLines(story)
-    late = story.shell.batches["late"]
-    await store.keep_refused("store", late, "no such series", lines, 1 << 30)  # type: ignore[arg-type]
-    await store.plan_repair("archive", 1)
-    await store.end_repair("archive", 1, 2)
-    await store.close()
+    await keep_refused_and_repaired(path, story, "late")
     journal = short_of(story)
     stands: dict[str, dict[Lane, int]] = {
         "lanes": {"late": 1, "quarantine": 2}, "store": {"late": 1}, "river": {"late": 0}, "files": {"ordered": 9},

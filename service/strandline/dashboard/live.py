@@ -359,12 +359,12 @@ async def _sample(watches: Watches) -> None:
         due = begun + SAMPLE_EVERY_S
         try:
             watches.follow()
-        except Exception:  # likewise
+        except Exception:  # what is seen must not stop what is done
             log.exception("an unforeseen error while feeds came or went")
         for watch in watches.all():
             try:
                 watch.memory.sample()
-            except Exception:  # what is seen must not stop what is done
+            except Exception:  # likewise
                 log.exception("%s: an unforeseen error in a sample", watch.runtime.config.name)
             if loop.time() - begun > TURN_S:
                 await asyncio.sleep(0)  # others have their turn

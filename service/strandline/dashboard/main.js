@@ -86,7 +86,7 @@ class Page {
         const answer = await this.api.json("/v1/feeds");
         const names = answer.feeds.map((each) => each.name);
         if (answer.cluster) await this.cluster.begin();
-        this.plain = names.filter((each) => !this.cluster.knows(each));
+        this.names = names;
         if (!names.length && !this.cluster.document)
           throw new Problem(
             0,
@@ -120,13 +120,14 @@ class Page {
   #list() {
     const { feed } = this.view,
       elsewhere = this.cluster.isElsewhere(feed) ? feed : null;
-    const names = [...this.plain, ...this.cluster.here()];
+    const plain = this.names.filter((each) => !this.cluster.knows(each)); // the cluster may be heard of later
+    const names = [...plain, ...this.cluster.here()];
     this.controls.feeds(elsewhere === null ? names : [...names, elsewhere], feed, elsewhere);
   }
 
   /** The cluster was asked. A partition that is followed may have gone, or come. */
   #clustered() {
-    if (this.plain === undefined) return; // it begins
+    if (this.names === undefined) return; // it begins
     const { feed } = this.view,
       here = this.cluster.here();
     if (this.cluster.failed !== null) {

@@ -145,7 +145,8 @@ def _holds(seen: Look) -> list[Hold]:
 
 
 def _within(seen: Look) -> Rows:
-    return seen.rows[seen.rows["t_ns"] < seen.to_ns]
+    """Steps of the time that is asked for. A coarse one may begin in it, and the memory itself only after it."""
+    return seen.rows[(seen.rows["t_ns"] < seen.to_ns) & (seen.since_ns <= seen.to_ns)]
 
 
 def _series(seen: Look) -> Series:

@@ -32,8 +32,8 @@ def is_lane_whole(facts: Facts) -> bool:
 
 def other_lanes(facts: Facts, clock: Clock) -> Words:
     """What is not in a late lane that is not whole."""
-    since_ns = seen_since_ns(facts)
-    saw = "nothing of this time" if since_ns in (None, facts.to_ns) else f"this time since {clock.at(since_ns or 0)}"
+    since_ns = facts.series.since_ns
+    saw = "nothing of this time" if since_ns is None else f"this time since {clock.at(since_ns)}"
     end = facts.books.end
     count = "" if end is None else f" At {clock.at(end.at_ns)} the books count {end.late:,} late since the feed began."
     return (

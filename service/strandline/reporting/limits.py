@@ -6,7 +6,7 @@ from collections.abc import Iterator
 
 from .facts import Facts
 from .holding import STALL_AT_LEAST_NS
-from .knowing import is_lane_whole
+from .knowing import is_lane_whole, seen_since_ns
 from .words import Clock, Words, lasted
 
 
@@ -17,20 +17,19 @@ def limits(facts: Facts) -> list[Words]:
 
 
 def _missing(facts: Facts, clock: Clock) -> Iterator[str]:
-    known, since = facts.holds.known_since_ns, facts.series.since_ns
+    known, since = facts.holds.known_since_ns, seen_since_ns(facts)
     if known is None or known >= facts.to_ns:
         yield "Nothing is known of this time's holds: the feed's history begins later."
     elif known > facts.from_ns:
         yield f"Holds are known from {clock.at(known)} on; what was before it is not."
-    if since is None or since >= facts.to_ns:
-        begun = "this instance took the partition over later, or was started later" if facts.partition else (
-            "it was started later"
-        )  # fmt: skip
+    if since == facts.to_ns:
+        taken_over = "this instance took the partition over later, or was started later"
+        begun = taken_over if facts.partition else "it was started later"
         yield (
             f"The process keeps delays, failing sinks and counts in memory, and has none of this time: {begun}, or the "
             "time lies more than a day back."
         )
-    elif since > facts.from_ns:
+    elif since is not None:
         begun = "this instance took the partition over then, or" if facts.partition else "the process"
         yield (
             f"Delays, failing sinks and counts are known from {clock.at(since)} on: {begun} was started then, or "

@@ -30,29 +30,26 @@ def refusals(
     path: str | os.PathLike[str], sinks: Sequence[str], lane: str, batch: int, position: int
 ) -> dict[str, str]:
     """Why each of these sinks refused one event for good; those that did not are missing. Raises StrandlineError."""
-    found: dict[str, str] = {}
-    with read_only(Path(path), REFUSED.name) as connection:
-        if connection is None:
-            return found
-        query = "SELECT detail FROM refused WHERE sink = ? AND lane = ? AND batch = ? AND position = ?"  # by its index
-        for sink in sinks:
-            row = connection.execute(query, (sink, lane, batch, position)).fetchone()
-            if row is not None:
-                found[sink] = row[0]
-    return found
+    return _refusals(path, sinks, "lane = ? AND batch = ? AND position = ?", (lane, batch, position))
 
 
 def refusals_of(
     path: str | os.PathLike[str], sinks: Sequence[str], lane: str, batch: int, event: bytes
 ) -> dict[str, str]:
     """The same for an event whose position in its batch is not known: by its bytes. Raises StrandlineError."""
+    return _refusals(path, sinks, "lane = ? AND batch = ? AND event = ?", (lane, batch, event))
+
+
+def _refusals(
+    path: str | os.PathLike[str], sinks: Sequence[str], where: str, values: tuple[object, ...]
+) -> dict[str, str]:
     found: dict[str, str] = {}
     with read_only(Path(path), REFUSED.name) as connection:
         if connection is None:
             return found
-        query = "SELECT detail FROM refused WHERE sink = ? AND lane = ? AND batch = ? AND event = ? LIMIT 1"
+        query = f"SELECT detail FROM refused WHERE sink = ? AND {where} LIMIT 1"  # by its index: sink, lane, batch
         for sink in sinks:
-            row = connection.execute(query, (sink, lane, batch, event)).fetchone()
+            row = connection.execute(query, (sink, *values)).fetchone()
             if row is not None:
                 found[sink] = row[0]
     return found
