@@ -6,6 +6,7 @@ import ctypes
 import mmap
 import sys
 from random import Random
+from types import ModuleType
 
 PR_SET_MDWE, REFUSE_EXEC_GAIN = 65, 1  # linux/prctl.h
 BODIES = 30_000
@@ -44,6 +45,12 @@ def without_numba() -> None:
     refused()
 
 
+def with_unwilling_numba() -> None:
+    """As where a release of numba does not know the numpy that is there: it says so as it is imported."""
+    sys.modules["numba"] = ModuleType("numba")  # has nothing to import
+    refused()
+
+
 def at_the_end_of_memory() -> None:
     """Scan damaged bodies that end where a page ends that cannot be read behind; a byte too far ends the process."""
     import numpy as np  # noqa: PLC0415
@@ -74,4 +81,5 @@ def at_the_end_of_memory() -> None:
 
 
 if __name__ == "__main__":
-    {"guard": at_the_end_of_memory, "mdwe": without_executable_memory, "bare": without_numba}[sys.argv[1]]()
+    modes = {"guard": at_the_end_of_memory, "mdwe": without_executable_memory, "bare": without_numba}
+    (modes | {"unwilling": with_unwilling_numba})[sys.argv[1]]()

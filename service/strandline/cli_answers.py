@@ -39,6 +39,16 @@ def harmless(text: str) -> str:
     return text if text.isprintable() else "".join(c if c.isprintable() else ascii(c)[1:-1] for c in text)
 
 
+def lasting(seconds: float) -> str:
+    """How long something takes, for a table: seconds, from ten minutes on minutes."""
+    return f"{seconds:.1f}s" if seconds < 600 else f"{seconds / 60:.0f}m"
+
+
+def to_the_second(time_text: str) -> str:
+    """An RFC 3339 time in UTC without what is shorter, for a table; `--json` has it whole."""
+    return time_text.partition(".")[0].removesuffix("Z") + "Z"
+
+
 def write_table(headings: Sequence[str], rows: Iterable[Sequence[str]], *, wrap: bool = False) -> None:
     """A table on a terminal; elsewhere the same cells with tabs between them, whole, for other programs.
 

@@ -11,7 +11,7 @@ import sys
 from collections.abc import Iterator, Mapping
 from typing import Any
 
-from .cli_answers import FINE, NO, harmless, write_table
+from .cli_answers import FINE, NO, harmless, lasting, to_the_second, write_table
 from .cli_options import add_command, add_service
 
 
@@ -62,22 +62,18 @@ def _instances(answer: dict[str, Any]) -> Iterator[list[str]]:
     """Those that are gone come first."""
     for one in answer["gone"]:
         how = "stopped" if one["stopped"] else "gone, last seen"
-        yield [one["instance"], f"{how} {_age(one['seen_s'])} ago", f"had {one['owned']:,}", one["listen"] or ""]
+        yield [one["instance"], f"{how} {lasting(one['seen_s'])} ago", f"had {one['owned']:,}", one["listen"] or ""]
     for one in answer["instances"]:
-        seen = "asked" if one["instance"] == answer["instance"] else f"{_age(one['seen_s'])} ago"
+        seen = "asked" if one["instance"] == answer["instance"] else f"{lasting(one['seen_s'])} ago"
         yield [one["instance"], seen, f"{one['owns']:,}", one["listen"] or ""]
 
 
 def _partition(row: Mapping[str, Any], *, known: bool) -> list[str]:
     """`known`: what is seen of other instances is of now. Times to the second; `--json` has them whole."""
-    state = row["state"] if row["nobodys_s"] is None else f"{row['state']}, for {_age(row['nobodys_s'])}"
+    state = row["state"] if row["nobodys_s"] is None else f"{row['state']}, for {lasting(row['nobodys_s'])}"
     if not known and not row["here"]:
         state = "not known"
-    since = f"{row['since'].partition('.')[0].removesuffix('Z')}Z" if row["since"] else ""
+    since = to_the_second(row["since"]) if row["since"] else ""
     behind = "" if row["behind_messages"] is None else f"{row['behind_messages']:,}"
-    age = "" if row["watermark_age_s"] is None else _age(row["watermark_age_s"])
+    age = "" if row["watermark_age_s"] is None else lasting(row["watermark_age_s"])
     return [row["runtime"], state, row["owner"] or "", since, behind, age, row.get("words", "")]
-
-
-def _age(seconds: float) -> str:
-    return f"{seconds:.1f}s" if seconds < 600 else f"{seconds / 60:.0f}m"

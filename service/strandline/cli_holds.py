@@ -11,7 +11,7 @@ import sys
 from typing import Any
 from urllib.parse import urlencode
 
-from .cli_answers import FINE, complain, write_table
+from .cli_answers import FINE, complain, lasting, to_the_second, write_table
 from .cli_options import add_command, add_service
 from .cli_values import duration, holds, stretch
 
@@ -56,7 +56,7 @@ def _holds(options: argparse.Namespace) -> int:
     if options.json:
         sys.stdout.write(json.dumps(answer) + "\n")
     elif options.totals:
-        rows = ([_for(row["for_s"]), f"{row['count']:,}", _who(row), row["why"]] for row in answer["summary"])
+        rows = ([lasting(row["for_s"]), f"{row['count']:,}", _who(row), row["why"]] for row in answer["summary"])
         write_table(("for", "holds", "who", "why"), rows)
     else:
         write_table(("from", "to", "for", "who", "why", "what it means"), map(_cells, answer["holds"]), wrap=True)
@@ -70,23 +70,15 @@ def _tell_shorter(shorter: dict[str, Any] | None, at_least: str) -> None:
     """On stderr, so that stdout stays a table. An older service says nothing of it."""
     if shorter and shorter["count"]:
         holds = "hold" if shorter["count"] == 1 else "holds"
-        told = f"{shorter['count']:,} {holds} shorter than {at_least} left out, {_for(shorter['for_s'])} in all"
+        told = f"{shorter['count']:,} {holds} shorter than {at_least} left out, {lasting(shorter['for_s'])} in all"
         complain(f"{told}; --at-least 0s shows them")
 
 
 def _cells(row: dict[str, Any]) -> list[str]:
     """Times to the second, below which a hold is no hold; `--json` has them whole."""
-    until = _second(row["to"]) if row["to"] else "it lasts"
-    return [_second(row["from"]), until, _for(row["for_s"]), _who(row), row["why"], row["explanation"]]
-
-
-def _second(time_text: str) -> str:
-    return time_text.partition(".")[0].removesuffix("Z") + "Z"
+    until = to_the_second(row["to"]) if row["to"] else "it lasts"
+    return [to_the_second(row["from"]), until, lasting(row["for_s"]), _who(row), row["why"], row["explanation"]]
 
 
 def _who(row: dict[str, Any]) -> str:
     return row["source"] or (f"sink {row['sink']}" if row["sink"] else "")
-
-
-def _for(seconds: float) -> str:
-    return f"{seconds:.1f}s" if seconds < 600 else f"{seconds / 60:.0f}m"

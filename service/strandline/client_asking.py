@@ -11,7 +11,7 @@ import os
 import urllib.error
 import urllib.request
 
-from .client_access import caller_of, detail_of, feed_address, refusal
+from .client_access import Caller, caller_of, detail_of, feed_address, refusal
 
 WITHIN_S = 600.0
 ANSWER_BYTES_AT_MOST = 16 << 20
@@ -45,14 +45,21 @@ def answer_at(options: argparse.Namespace, url: str, address: str, body: bytes |
         request = urllib.request.Request(address, body, headers)
         for name, value in shown.headers.items():
             request.add_unredirected_header(name, value)  # a token goes nowhere else
+        return _content(request, shown)
+    except (OSError, http.client.HTTPException, ValueError) as error:
+        raise unreachable(address, error) from None
+
+
+def _content(request: urllib.request.Request, shown: Caller) -> bytes:
+    """Raises Refusal, and what the library raises, also where an answer that is no success breaks off."""
+    try:
         with urllib.request.urlopen(request, timeout=WITHIN_S, context=shown.context) as answer:
             content: bytes = answer.read(ANSWER_BYTES_AT_MOST)
             return content
     except urllib.error.HTTPError as error:
-        told = detail_of(error.read(ANSWER_BYTES_AT_MOST)) or f"the service answered {error.code} {error.reason}"
+        with error:
+            told = detail_of(error.read(ANSWER_BYTES_AT_MOST)) or f"the service answered {error.code} {error.reason}"
         raise Refusal(*refusal(error.code, told, shown)) from None
-    except (OSError, http.client.HTTPException, ValueError) as error:
-        raise unreachable(address, error) from None
 
 
 def unreachable(address: str, error: Exception) -> Unreachable:

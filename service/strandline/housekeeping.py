@@ -81,12 +81,12 @@ class Housekeeper:
         return bool(ends) and (self._journal.tight or self._retention.through(self._clock.now_ns()) > 0)
 
     def _snapshot_due(self, segment_bytes: int) -> bool:
-        # When the journal has grown by a segment and by four times the snapshot's own size, so that snapshots stay
-        # below a quarter of what is written; or when room is short and a snapshot would free some.
         grown = self._feed.next_lsn - self._saved_lsn
         every_ns = self._commit.saves_every_ns
         if grown and every_ns is not None and self._clock.now_ns() >= self._saved_ns + every_ns:
             return True
+        # When the journal has grown by a segment and by four times the snapshot's own size, so that snapshots stay
+        # below a quarter of what is written; or when room is short and a snapshot would free some.
         if grown >= max(segment_bytes, 4 * self._saved_bytes):
             return True
         return self._journal.short_of_room and self._journal.frees(self._feed.needed_place)

@@ -176,7 +176,7 @@ class FeedRuntime:
         return outcome
 
     def begin(self, arrival: Arrival, key: RequestKey | None = None, *, more: bool = False) -> Told:
-        """Hand one request to the core, now; it waits until that is durable. `more`: others follow, then `mark`."""
+        """Hand one request to the core, now; told once durable. `more`: others follow, then `mark`. Raises Refused."""
         self._check_open()
         self._check_lanes()
         names, now_ns = sum(len(name.encode()) + 8 for name in arrival.new_sources), self.clock.now_ns()

@@ -1,4 +1,7 @@
-"""Tasks of the loop: ending one, and waiting for the first of several. What they do is their owners' business."""
+"""Tasks of the loop: ending one, waiting for the first of several, and leaving room for others: turns, a thread.
+
+What they do is their owners' business.
+"""
 
 from __future__ import annotations
 
@@ -28,8 +31,7 @@ async def ended(task: asyncio.Future[Any]) -> None:
     """Cancel it and wait for its end; awaiting it itself would swallow a cancelling of the one who waits."""
     task.cancel()
     await asyncio.wait([task])
-    if not task.cancelled():
-        task.exception()  # looked at, so that asyncio does not report it as forgotten
+    _look_at(task)
 
 
 async def first_of(*calls: Awaitable[Any]) -> None:
@@ -62,8 +64,7 @@ async def through(task: asyncio.Future[Any]) -> None:
             await asyncio.wait([task])
         except asyncio.CancelledError:
             continue
-    if not task.cancelled():
-        task.exception()  # looked at, so that asyncio does not report it as forgotten
+    _look_at(task)
 
 
 async def ended_at_last(task: asyncio.Future[Any], every_s: float = 1.0) -> None:
@@ -74,5 +75,10 @@ async def ended_at_last(task: asyncio.Future[Any], every_s: float = 1.0) -> None
             await asyncio.wait([task], timeout=every_s)
         except asyncio.CancelledError:
             continue
+    _look_at(task)
+
+
+def _look_at(task: asyncio.Future[Any]) -> None:
+    """At the error of one that has ended, so that asyncio does not report it as forgotten."""
     if not task.cancelled():
         task.exception()

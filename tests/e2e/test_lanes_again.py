@@ -13,8 +13,9 @@ from pathlib import Path
 
 import pytest
 from helpers_receiver import LOSE, Receiver, refuse
-from helpers_service import BEGIN_S, body_of, configuration, event_line, eventually, problem_of, running
+from helpers_service import BEGIN_S, Running, body_of, configuration, event_line, eventually, problem_of, running
 from strandline.repairing import Repairer, late_repair_rows
+from strandline.sinks.delivery import Sleep
 from strandline.sinks.lanes import late_rows
 
 DAY_S = 86_400
@@ -39,6 +40,15 @@ late = {late}
 
 def repaired(receiver: Receiver) -> list[dict[str, object]]:
     return [json.loads(line) for line in receiver.lines("/late", "river-gauges-repair")]
+
+
+def another_repairer(service: Running, every_s: float | None, sleep: Sleep) -> Repairer:
+    """One of the test's own for the same sink, that sleeps as the test says."""
+    runtime = service.runtime
+    return Repairer(
+        "other", runtime.repairers["archive"]._sink, runtime.lane_store, runtime.lanes_file,
+        every_s=every_s, partition_ns=10**9, random_source=random.Random(1), sleep=sleep,
+    )  # fmt: skip
 
 
 async def test_repairs_come_sorted_by_source_and_cut_by_partition(tmp_path: Path, receiver: Receiver) -> None:
@@ -155,19 +165,14 @@ async def test_a_schedule_repairs_by_itself_and_survives_an_unwilling_store(
     async with running(configuration(tmp_path, sinks=sinks)) as service:
         await service.send([100])
         await service.send([1])
-        runtime = service.runtime
-        await eventually(lambda: len(late_rows(runtime.lanes_file)) == 1)
+        path = service.runtime.lanes_file
+        await eventually(lambda: len(late_rows(path)) == 1)
         turns = asyncio.Semaphore(0)
 
         async def sleep(seconds: float) -> None:
             await turns.acquire()
 
-        path = runtime.lanes_file
-        sink = runtime.repairers["archive"]._sink
-        repairer = Repairer(
-            "other", sink, runtime.lane_store, path,
-            every_s=60.0, partition_ns=10**9, random_source=random.Random(1), sleep=sleep,
-        )  # fmt: skip
+        repairer = another_repairer(service, 60.0, sleep)
         receiver.script.append(refuse(503))
         repairer.start()
         await eventually(lambda: repairer.state().last_error is not None)
@@ -205,18 +210,13 @@ async def test_repairs_wait_no_longer_than_an_hour_whatever_a_store_asks_for(
     async with running(configuration(tmp_path, sinks=sinks)) as service:
         await service.send([100])
         await service.send([1])
-        runtime, asked = service.runtime, list[float]()
-        path = runtime.lanes_file
+        path, asked = service.runtime.lanes_file, list[float]()
         await eventually(lambda: len(late_rows(path)) == 1)
 
         async def sleep(seconds: float) -> None:
             asked.append(seconds)
 
-        sink = runtime.repairers["archive"]._sink
-        repairer = Repairer(
-            "other", sink, runtime.lane_store, path,
-            every_s=None, partition_ns=10**9, random_source=random.Random(1), sleep=sleep,
-        )  # fmt: skip
+        repairer = another_repairer(service, None, sleep)
         receiver.script.append(refuse(503, Retry_After="999999999999"))
         assert await repairer.run() == 1
         assert asked == [3600.0]

@@ -111,3 +111,23 @@ async def test_a_feeds_name_never_changes_what_is_asked_for(
             code, err = await asked(capsys, *command, "--feed", feed)
             assert code == 2 and ("no feed" in err or "not UTF-8" in err), (command, err)
         assert not out.exists()
+
+
+@pytest.mark.parametrize("status", [200, 503])
+async def test_an_answer_that_breaks_off_is_told_and_no_traceback(
+    status: int, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """Whatever its status says: what came of it cannot be read."""
+
+    async def break_off(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
+        await reader.readuntil(b"\r\n\r\n")
+        writer.write(b"HTTP/1.1 %d -\r\nTransfer-Encoding: chunked\r\nConnection: close\r\n\r\nno number\r\n" % status)
+        await writer.drain()
+        writer.close()
+        await writer.wait_closed()
+
+    async with await asyncio.start_server(break_off, "127.0.0.1", 0) as server:
+        url = f"http://127.0.0.1:{server.sockets[0].getsockname()[1]}"
+        code, told = await asked(capsys, "holds", "--feed", FEED, "--url", url)
+    assert code == 3 and told.startswith(f"strandline: {url}/v1/feeds/{FEED}/holds?"), told
+    assert "could not be reached: " in told

@@ -45,6 +45,13 @@ def test_where_numba_is_not_installed_it_says_so() -> None:
     assert "pip install 'strandline[compiled]', or write decoding = \"plain\"" in run.stdout
 
 
+def test_where_numba_cannot_be_loaded_it_says_so() -> None:
+    run = child("unwilling")
+    assert run.returncode == 0, run.stderr
+    assert run.stdout.startswith('decoding = "compiled" cannot load numba: cannot import name ')
+    assert run.stdout.endswith('; mend that, or write decoding = "plain"\n')
+
+
 def test_what_was_made_is_kept_where_the_environment_says(tmp_path: Path) -> None:
     run = child("guard", NUMBA_CACHE_DIR=str(tmp_path))
     assert run.returncode == 0, run.stderr

@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import asyncio
+import gc
 import random
 from collections import Counter
 from collections.abc import AsyncIterator, Sequence
 from contextlib import asynccontextmanager
 from pathlib import Path
 
+import pytest
 from helpers_service import configuration, event_line, eventually, running
 from hypothesis import given
 from hypothesis import strategies as st
@@ -128,6 +130,32 @@ async def test_what_cannot_be_settled_is_put_back_and_hinders_no_other(tmp_path:
             await eventually(lambda: intake.counts.in_flight == 0)
             assert broker.back == made[3:5] and "unforeseen error" in str(intake.counts.last_error)
         assert len(arrivals(service.runtime)) == 100
+
+
+class Silent(Handed):
+    """Takes no word on its first message, and never answers the one on its second."""
+
+    def __init__(self, messages: Sequence[Message], runtime: FeedRuntime) -> None:
+        super().__init__(messages, runtime, failing=messages[:1])
+        self._second, self.asked = messages[1], asyncio.Event()
+
+    async def settle(self, message: Message) -> None:
+        if message is self._second:
+            self.asked.set()
+            await asyncio.Event().wait()
+        await super().settle(message)
+
+
+async def test_a_stop_leaves_no_message_begun(tmp_path: Path, recwarn: pytest.WarningsRecorder) -> None:
+    """One that is to be taken by itself waits for the others of its portion; the stop comes first."""
+    async with running(configuration(tmp_path)) as service:
+        broker = Silent([message(GOOD, number) for number in range(3)], service.runtime)
+        async with taking(service.runtime, broker) as intake:
+            await broker.asked.wait()
+            await intake.stop(0.0)
+            gc.collect()
+            assert (intake.counts.in_flight, broker.settled) == (0, [])
+        assert [str(each.message) for each in recwarn] == []
 
 
 async def test_repeats_in_one_portion_are_taken_once(tmp_path: Path) -> None:

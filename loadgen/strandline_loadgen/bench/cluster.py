@@ -34,9 +34,9 @@ from strandline.sinks import make_shared_sink
 from strandline_loadgen.child import free_port
 from strandline_loadgen.evidence import Sent
 
-from .brokers import BODY_EVENTS, FETCH, nats_server, publish, served, service_s
+from .brokers import BODY_EVENTS, FETCH, STREAM, nats_server, publish, served, service_s
 from .harness import Measure, Row, Sample, Scale
-from .service import Course, check_files, course_of
+from .service import PATIENT_FEED, TO_FILES, Course, check_files, course_of
 
 if TYPE_CHECKING:
     from strandline.cluster.partition import Partition
@@ -46,26 +46,19 @@ BROKERS = 3
 PARTITION = "bench-0"
 UP_WITHIN_S, DONE_WITHIN_S, DRAIN_S = 30.0, 300.0, 300.0
 Visit = Callable[[Course, str], Coroutine[Any, Any, Sample]]
-CONFIGURATION = """data_dir = "{folder}/data"
+HEAD = """data_dir = "{folder}/data"
 drain_at_most = "5m"
 [cluster]
 name = "bench"
 instance = "{instance}"
 urls = [{urls}]
 replicas = {replicas}
-[[feed]]
-name = "bench"
-time = {{ at = "/observed_at", unit = "ns" }}
-source = "/station"
-slack = "{slack}"
-idle_after = "1h"
-hold_at_most = "1h"
-ahead_limit = "1h"
-partitions = {{ stream = "BENCH", subject = "bench.{{partition}}.events", count = 1, fetch_at_most = {fetch} }}
-[[feed.sink]]
-kind = "ndjson"
-directory = "{folder}/out"
 """
+CONFIGURATION = HEAD + PATIENT_FEED + TO_FILES
+PARTITIONS = (
+    f'partitions = {{ stream = "{STREAM}", subject = "bench.{{partition}}.events", count = 1, '
+    f"fetch_at_most = {FETCH} }}"
+)
 
 
 @asynccontextmanager
@@ -113,7 +106,7 @@ async def _until_elected(urls: list[str]) -> None:
 def configuration(urls: list[str], folder: Path, instance: str, slack: str, replicas: int) -> Config:
     """Of one instance. Each has its own data_dir; the files that it delivers to are the same."""
     text = CONFIGURATION.format(
-        folder=folder.as_posix(), instance=instance, slack=slack, replicas=replicas, fetch=FETCH,
+        folder=folder.as_posix(), instance=instance, slack=slack, replicas=replicas, more=PARTITIONS,
         urls=", ".join(f'"{url}"' for url in urls),
     )  # fmt: skip
     return parse(text, {})

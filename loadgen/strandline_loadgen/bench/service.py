@@ -40,10 +40,7 @@ FEED = "bench"
 GOAL, ORDERING_GOAL = 0.75, 0.9
 CONNECTIONS = {500: 16, 5_000: 8}
 EVENTS_SHARE = {500: 0.3, 5_000: 1.0}  # of the scale's events: smaller bodies take longer
-WITHOUT_SINK = """listen = "127.0.0.1:{port}"
-data_dir = "{folder}/data"
-drain_at_most = "5m"
-[[feed]]
+PATIENT_FEED = """[[feed]]
 name = "bench"
 time = {{ at = "/observed_at", unit = "ns" }}
 source = "/station"
@@ -54,7 +51,9 @@ ahead_limit = "1h"
 {more}
 [[feed.sink]]
 """
-CONFIGURATION = WITHOUT_SINK + 'kind = "ndjson"\ndirectory = "{folder}/out"\n'
+WITHOUT_SINK = 'listen = "127.0.0.1:{port}"\ndata_dir = "{folder}/data"\ndrain_at_most = "5m"\n' + PATIENT_FEED
+TO_FILES = 'kind = "ndjson"\ndirectory = "{folder}/out"\n'
+CONFIGURATION = WITHOUT_SINK + TO_FILES
 
 
 @dataclass(frozen=True, slots=True)

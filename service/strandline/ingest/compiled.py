@@ -57,6 +57,8 @@ def compiled_lines() -> ModuleType:
     except ModuleNotFoundError as error:
         extra = f"pip install 'strandline[compiled]', {advice}"
         raise StrandlineError(f'decoding = "compiled" needs the package {error.name}: {extra}') from error
+    except ImportError as error:  # it is there, but refuses a numpy that it does not know
+        raise StrandlineError(f'decoding = "compiled" cannot load numba: {error}; mend that, {advice}') from error
     except OSError as error:  # memory cannot be made executable
         extra = f"let it (systemd: MemoryDenyWriteExecute=no), {advice}"
         raise StrandlineError(f'decoding = "compiled" needs to make code while it runs: {extra} ({error})') from error

@@ -1,7 +1,7 @@
 """The scan of JSON lines that numba compiles: it proves every byte of a body and fills the columns on the way.
 
 Here live the two values that the scan takes, the members of a line and the lines. It is a prover, not a judge: whatever
-it does not know (an escape in a key or a name, a repeated member, a fault of any kind) ends it with -1, and the body
+it does not know (an escape in a key or a name, two times or sources, a fault of any kind) ends it with -1, and the body
 goes the other way (`decode`), which names faults. So it may refuse what is sound, and must never take what the other
 way would not. `compiled` imports this module, which takes seconds and memory. Bounds: see `compiled_text`.
 """

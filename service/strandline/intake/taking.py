@@ -16,6 +16,7 @@ import contextlib
 import logging
 import random
 from collections.abc import Callable, Coroutine, Sequence
+from itertools import starmap
 from typing import Any
 
 from ..backoff import backoff_s
@@ -196,13 +197,9 @@ class Intake:
                 for message, read in zip(portion, self._handing.read(portion), strict=True):
                     begun.append(await self._begun(message, read))
                 self._runtime.mark()
-            others = [
-                self._one(message, each)
-                for message, each in zip(portion, begun, strict=True)
-                if not await self._is_settled(message, each)
-            ]
+            others = [each for each in zip(portion, begun, strict=True) if not await self._is_settled(*each)]
             if others:
-                await asyncio.gather(*others)
+                await asyncio.gather(*starmap(self._one, others))
         finally:
             for message in portion:
                 self._leave(message)
