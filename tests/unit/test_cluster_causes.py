@@ -14,7 +14,8 @@ from nats.js.errors import APIError, NotFoundError, ServiceUnavailableError
 from strandline.cluster.balance import Partition
 from strandline.cluster.causes import Cause, of_leases, of_settings, of_takeovers
 from strandline.cluster.http import seen_by
-from strandline.cluster.leases import VALUE_BYTES_AT_MOST, Look, Seen
+from strandline.cluster.leases import VALUE_BYTES_AT_MOST
+from strandline.cluster.looks import Look, Seen
 from strandline.cluster.running import digest_of
 from strandline.cluster.status import (
     WORDS_BYTES_AT_MOST,

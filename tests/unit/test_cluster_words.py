@@ -8,7 +8,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 from strandline.cluster.balance import Partition
-from strandline.cluster.leases import Look, Seen
+from strandline.cluster.looks import Look, Seen
 from strandline.cluster.noticed import OLD_SHARE, REMEMBERED_AT_MOST, REMEMBERED_S, Noticed
 from strandline.cluster.status import Ownership, PartitionStatus, Status, encoded
 from strandline.cluster.words import FAR_BEHIND_MESSAGES, eyes_first, said

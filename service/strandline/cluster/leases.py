@@ -12,7 +12,7 @@ from __future__ import annotations
 import math
 import re
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import Self
 
@@ -25,6 +25,7 @@ from ..errors import StrandlineError
 from ..nats_client import NOT_THERE, Client, words_of
 from .balance import Partition
 from .link import Away
+from .looks import Look, Seen
 
 # Validity ends a tenth of the lease before the entry can: in this time an owner that learns nothing any more must have
 # stopped. 1.5 s of 15: a loop that lags, a processor that is taken away, clocks that run at different rates (500 ppm at
@@ -64,24 +65,6 @@ class Held:
     def valid(self, now_monotonic_s: float) -> bool:
         """Whether nobody else can have it yet."""
         return now_monotonic_s < self.valid_until_s
-
-
-@dataclass(frozen=True, slots=True)
-class Seen:
-    """An entry as it was seen; `age_s` since this revision was seen first, so it is at least so old."""
-
-    value: bytes
-    revision: int
-    age_s: float
-
-
-@dataclass(frozen=True, slots=True)
-class Look:
-    """What stands in the bucket. It may be some milliseconds old, and from a broker that lags."""
-
-    at_s: float  # monotonic
-    instances: Mapping[str, Seen]
-    owners: Mapping[Partition, Seen]
 
 
 def instance_key(instance: str) -> str:

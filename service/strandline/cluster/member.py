@@ -26,8 +26,9 @@ from ..tasks import ended, first_of
 from .balance import Decision, Partition, decide
 from .causes import AWAY, BARRED, NAME, Cause, of_leases, of_settings, of_takeovers
 from .holding import RENEW_SHARE, Holding, Owner, Start
-from .leases import BucketGone, Held, LeaseLost, Leases, Look, instance_key, owner_key
+from .leases import BucketGone, Held, LeaseLost, Leases, instance_key, owner_key
 from .link import Away
+from .looks import Look
 from .noticed import Noticed
 from .status import OWNED, Ownership, Status, cluster_document, encoded, feeds_of, owner_in, status_in
 from .troubles import Troubles

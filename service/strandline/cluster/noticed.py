@@ -12,7 +12,7 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 from .balance import Partition
-from .leases import Look
+from .looks import Look
 from .status import OWNED, Status, owner_in
 
 OLD_SHARE = 0.5  # of the lease: there are some seven looks in it, so this is no hiccup, and the lease still holds

@@ -13,7 +13,7 @@ import msgspec
 from ..config_cluster import partition_name
 from ..ingest.timestamps import format_rfc3339
 from .balance import Partition
-from .leases import Look, Seen
+from .looks import Look, Seen
 
 # A heartbeat has room for 1,024 partitions, which is all that leases can be looked at: 230 bytes each, and their words.
 WORDS_BYTES_AT_MOST = 200
