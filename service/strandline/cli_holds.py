@@ -14,6 +14,7 @@ from urllib.parse import urlencode
 from .cli_answers import FINE, complain, lasting, to_the_second, write_table
 from .cli_options import add_command, add_service
 from .cli_values import duration, holds, stretch
+from .hold_limits import HOLDS_UNASKED
 
 # Of several sources one is always furthest behind, a second or two at a time: ten healthy minutes gave 280 such rows.
 AT_LEAST = "10s"
@@ -37,7 +38,8 @@ def add(commands: Any) -> None:
     asked.add_argument("--feed", required=True, metavar="NAME", help="the feed")
     asked.add_argument("--from", dest="from_time", metavar="TIME", help="since: 8h ago, or an RFC 3339 time")
     asked.add_argument("--to", dest="to_time", metavar="TIME", help="until: 1h ago, or an RFC 3339 time")
-    asked.add_argument("--limit", type=holds, default=500, metavar="N", help="holds at most (default: 500)")
+    most = f"holds at most (default: {HOLDS_UNASKED})"
+    asked.add_argument("--limit", type=holds, default=HOLDS_UNASKED, metavar="N", help=most)
     shortest = "only holds that lasted so long (default: 10s); 0s: all"
     asked.add_argument("--at-least", type=duration, default=AT_LEAST, metavar="TIME", help=shortest)
     asked.add_argument("--totals", action="store_true", help="how long each held it, instead of each hold")

@@ -8,8 +8,7 @@ import time
 
 from .config_units import duration_ns
 from .errors import ConfigError
-
-HOLDS_AT_MOST = 2_000  # as the service
+from .hold_limits import HOLDS_AT_MOST
 
 
 def hold(text: str) -> float:

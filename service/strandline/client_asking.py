@@ -11,14 +11,21 @@ import os
 import urllib.error
 import urllib.request
 
+from .cli_answers import WRONG_USE
 from .client_access import Caller, caller_of, detail_of, feed_address, refusal
 
 WITHIN_S = 600.0
 ANSWER_BYTES_AT_MOST = 16 << 20
+# What narrows a question, by an option that the command has.
+_NARROWER = {
+    "from_time": "bring --from and --to closer together",
+    "limit": "name a smaller --limit",
+    "time": "name --id, --time and --source together",
+}
 
 
 class Refusal(Exception):
-    """The service answered, but with no success. `code` is the exit code; the text says why."""
+    """The service answered, but with no success, or with too much. `code` is the exit code; the text says why."""
 
     def __init__(self, code: int, detail: str) -> None:
         super().__init__(detail)
@@ -45,16 +52,28 @@ def answer_at(options: argparse.Namespace, url: str, address: str, body: bytes |
         request = urllib.request.Request(address, body, headers)
         for name, value in shown.headers.items():
             request.add_unredirected_header(name, value)  # a token goes nowhere else
-        return _content(request, shown)
+        content = _content(request, shown)
     except (OSError, http.client.HTTPException, ValueError) as error:
         raise unreachable(address, error) from None
+    if len(content) > ANSWER_BYTES_AT_MOST:  # a part of it would be taken for the whole, or for a fault of the service
+        raise Refusal(WRONG_USE, _too_long(options, address))
+    return content
+
+
+def _too_long(options: argparse.Namespace, address: str) -> str:
+    ways = [way for name, way in _NARROWER.items() if hasattr(options, name)]
+    advice = f"ask for less: {', or '.join(ways)}" if ways else f"fetch {address} with another client"
+    return f"the answer has more than {ANSWER_BYTES_AT_MOST >> 20} MiB, which is more than is read; {advice}"
 
 
 def _content(request: urllib.request.Request, shown: Caller) -> bytes:
-    """Raises Refusal, and what the library raises, also where an answer that is no success breaks off."""
+    """The answer, or as much of it as tells that it is too long.
+
+    Raises Refusal, and what the library raises, also where an answer that is no success breaks off.
+    """
     try:
         with urllib.request.urlopen(request, timeout=WITHIN_S, context=shown.context) as answer:
-            content: bytes = answer.read(ANSWER_BYTES_AT_MOST)
+            content: bytes = answer.read(ANSWER_BYTES_AT_MOST + 1)
             return content
     except urllib.error.HTTPError as error:
         with error:

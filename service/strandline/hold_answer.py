@@ -17,12 +17,11 @@ from .core.columns import NO_SOURCE, TIME_MAX, TIME_MIN
 from .core.holds import Held
 from .core.records import ActName, ActRecord
 from .core.view import HOLD_WHYS
+from .hold_limits import HOLDS_AT_MOST, HOLDS_UNASKED
 from .ingest.endpoint import runtime_of
 from .ingest.timestamps import format_rfc3339, parse_rfc3339
 from .runtime import FeedRuntime
 
-HOLDS_AT_MOST = 2_000  # of one answer: some 10 ms
-LIMIT = 500
 Why = Annotated[str, msgspec.Meta(description=f"one of: {', '.join(HOLD_WHYS)}")]
 
 
@@ -95,7 +94,7 @@ async def get_holds(request: web.Request) -> web.Response:
     from_ns, to_ns = instant(request, "from", TIME_MIN), instant(request, "to", TIME_MAX)
     if from_ns > to_ns:
         raise web.HTTPBadRequest(text="?from= must not be later than ?to=")
-    limit, at_least_ns = _limit(request, LIMIT, HOLDS_AT_MOST), _at_least(request)
+    limit, at_least_ns = _limit(request, HOLDS_UNASKED, HOLDS_AT_MOST), _at_least(request)
     answer = holds_answer(runtime, from_ns, to_ns, limit, at_least_ns)
     return web.Response(body=msgspec.json.encode(answer), content_type="application/json")
 

@@ -9,6 +9,7 @@ from pathlib import Path
 
 import pytest
 from helpers_service import FEED, configuration, running
+from strandline import client_asking
 from strandline.cli import main
 from strandline.client_access import Caller, address_of, is_address, refusal
 from strandline.errors import ConfigError
@@ -131,3 +132,35 @@ async def test_an_answer_that_breaks_off_is_told_and_no_traceback(
         code, told = await asked(capsys, "holds", "--feed", FEED, "--url", url)
     assert code == 3 and told.startswith(f"strandline: {url}/v1/feeds/{FEED}/holds?"), told
     assert "could not be reached: " in told
+
+
+@pytest.mark.parametrize(
+    ("question", "advice"),
+    [
+        (["holds", "--feed", FEED], "ask for less: bring --from and --to closer together, or name a smaller --limit"),
+        (["report", "--feed", FEED], "ask for less: bring --from and --to closer together"),
+        (["trace", "--feed", FEED, "--id", "1"], "ask for less: name --id, --time and --source together"),
+        (["cluster"], "fetch {url}/v1/cluster with another client"),
+    ],
+)
+async def test_an_answer_that_is_too_long_is_refused_and_never_cut(
+    question: list[str], advice: str, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """One that just fits is read whole: then its content is judged, which here is no service's."""
+    monkeypatch.setattr(client_asking, "ANSWER_BYTES_AT_MOST", 1 << 20)
+    sizes = iter([1 << 20, (1 << 20) + 1])
+
+    async def much(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
+        await reader.readuntil(b"\r\n\r\n")
+        body = b"[" + b" " * (next(sizes) - 1)
+        writer.write(b"HTTP/1.1 200 -\r\nContent-Length: %d\r\nConnection: close\r\n\r\n%b" % (len(body), body))
+        await writer.drain()
+        writer.close()
+        await writer.wait_closed()
+
+    async with await asyncio.start_server(much, "127.0.0.1", 0) as server:
+        url = f"http://127.0.0.1:{server.sockets[0].getsockname()[1]}"
+        code, told = await asked(capsys, *question, "--url", url)
+        assert code == 3 and "line 1 column" in told, told
+        code, told = await asked(capsys, *question, "--url", url)
+    assert code == 2 and "more than 1 MiB" in told and told.rstrip().endswith(advice.format(url=url)), told

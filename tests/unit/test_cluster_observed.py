@@ -321,6 +321,7 @@ async def test_an_instance_is_ready_once_it_has_joined_and_not_when_it_is_away_f
         assert "strandline-0 has been away for 2 s, longer than its lease of 2 s, so it owns nothing: " in detail
         found = await cluster_samples(one)
         assert found["connected",] == 0 and not {name for name, *_ in found} & {"instances", "partitions_nobodys"}
+        await eventually(lambda: owner_at(one, 0) is None, "it is being stopped, and its lease is not kept beyond that")
         assert await told(one) == 1
         out = capsys.readouterr().out
         assert "strandline-0 has had no broker for " in out and f"{FEED}-0\tnot known\t" in out

@@ -22,12 +22,12 @@ from ..core.effects import Buffer
 from ..core.records import SourcesRecord, encode_small
 from ..errors import StrandlineError
 from ..nats_client import NOT_THERE, words_of
-from .entries import Entry, Group, Saved, Taken, decode, encode, entry_of, groups_of, newest_saved
+from .emptied import WRONG_LAST, Marks, mark_made
+from .entries import Entry, Group, Saved, Taken, Whole, decode, encode, entry_of, groups_of, newest_saved
 from .link import Away, Link, Reader, everything
 
 Result = TypeVar("Result")
 LOG_MESSAGE_BYTES = 512 * 1024  # of one message of the log, and of a part of a snapshot
-WRONG_LAST = frozenset({10071, 10164})  # error codes of the server for an expected last sequence that is not the last
 FULL = frozenset({10077})  # the stream has its maximum of bytes
 SNAPSHOT_HEADER = "Strandline-Snapshot"  # owner, position, try and number of the part: those of several may be mixed
 TRY_AGAIN_S = 0.2
@@ -44,18 +44,18 @@ class _Shifted(StrandlineError):
 
 @dataclass(frozen=True, slots=True)
 class Place:
-    """Where a partition's log lies: the stream, and the subjects of its groups and of its snapshots."""
+    """Where a partition's log lies: the stream, and the subjects of its groups, its snapshots and its mark."""
 
     stream: str
     groups: str
     snapshots: str
+    begun: str
 
     @classmethod
     def of(cls, cluster: str, feed: str, partition: int) -> Place:
         """Of one partition of a feed."""
-        return cls(
-            f"{cluster}-log", f"{cluster}-log.groups.{feed}.{partition}", f"{cluster}-log.snapshots.{feed}.{partition}"
-        )
+        stream, own = f"{cluster}-log", f"{feed}.{partition}"
+        return cls(stream, f"{stream}.groups.{own}", f"{stream}.snapshots.{own}", f"{stream}.begun.{own}")
 
 
 @dataclass(slots=True)
@@ -66,11 +66,18 @@ class Contents:
     sequences: list[int] = field(default_factory=list)  # of each group's message
     saved: Saved | None = None
     snapshot: bytes = b""
+    lost_ns: int | None = None  # when it was found empty although it had begun before, ns since 1970 UTC
 
     @property
     def end_lsn(self) -> int:
         """Where the journal goes on."""
         return self.groups[-1].end_lsn if self.groups else 0
+
+    @property
+    def is_new(self) -> bool:
+        """Whether no message of the partition's stream was ever taken into it."""
+        entries = [entry for group in self.groups for entry in group.entries]
+        return self.groups[0].lsn == 0 and all(isinstance(entry, Whole) for entry in entries)
 
     @property
     def next_message(self) -> int:
@@ -95,12 +102,14 @@ async def make_stream(link: Link, cluster: str, replicas: int, bytes_at_most: in
     try:
         stream = await link.jetstream()
         try:
-            found = (await stream.stream_info(name)).config
+            info = await stream.stream_info(name)
         except NotFoundError:
-            await stream.add_stream(wanted)
-            return
+            info = await stream.add_stream(wanted)
+        found = info.config
         if fault := _unfit(found, wanted):
             raise StrandlineError(f"stream {name} is there already but {fault}: mend it, or name the cluster otherwise")
+        if info.state.last_seq == 0:
+            await mark_made(stream, name)
         if found.num_replicas != replicas or found.max_bytes != bytes_at_most:
             await stream.update_stream(found.evolve(num_replicas=replicas, max_bytes=bytes_at_most))
     except (APIError, *NOT_THERE) as error:
@@ -126,6 +135,7 @@ class PartitionLog:
 
     def __init__(self, link: Link, place: Place, fence: int) -> None:
         self._link, self._place, self._fence = link, place, fence
+        self._marks = Marks(link, place.stream, place.begun)
         self._last = 0  # sequence of the subject's last message
         self._sequences: list[tuple[int, int]] = []  # of each message: its sequence, and where its group ends
         self.words = ""  # what hinders it now
@@ -148,7 +158,9 @@ class PartitionLog:
         told = ""
         for _ in range(TRIES):
             try:
-                return await self._read()
+                contents = await self._read()
+                contents.lost_ns = await self._marks.begin()
+                return contents
             except _Shifted as error:
                 told = str(error)
                 await asyncio.sleep(TRY_AGAIN_S)
@@ -157,6 +169,7 @@ class PartitionLog:
     async def _put_fence(self) -> bool:
         """Store a group of one's own behind the last one; whether that was still the last one then."""
         last = await self._last_message()
+        is_emptied = last is None and await self._marks.has_begun()  # counts if nobody has put one there meanwhile
         self._last = end_lsn = 0
         if last is not None:
             self._last, end_lsn = last.seq or 0, self._decoded(last.seq or 0, last.data or b"").end_lsn
@@ -166,7 +179,16 @@ class PartitionLog:
             await self._store(group)
         except TakenOver:
             return False
+        if is_emptied:
+            await self._marks.lose("it had messages before")
         return True
+
+    async def lose(self, evidence: str) -> int | None:
+        """What was taken over as a new log is none, by other evidence: tell it, now and to later owners. Raises Away.
+
+        When that was, ns since 1970 UTC.
+        """
+        return await self._marks.lose(evidence)
 
     async def _last_message(self) -> api.RawStreamMsg | None:
         try:

@@ -30,6 +30,7 @@ from ..runtime import FeedRuntime
 from ..sinks_of import MakeSink
 from ..tasks import ended_at_last, in_thread, through
 from .commit import ReplicatedCommit
+from .emptied import TOLD_FOR_NS, WORDS
 from .link import Link, Reader
 from .log import PartitionLog, Place, make_stream
 from .rebuilding import Rebuilding
@@ -77,6 +78,7 @@ class Partition:
         self.why = ""
         self.stopped = False
         self.took_s = 0.0
+        self._lost_ns: int | None = None  # when its log was found to have lost its messages
 
     @classmethod
     async def take_over(cls, ground: Ground, part: Part) -> Partition:
@@ -108,6 +110,9 @@ class Partition:
         await in_thread(lambda: self._make_runtime(folder, disk, contents.next_message))
         assert self._runtime is not None and self._commit is not None
         await self._runtime.open()
+        self._lost_ns = contents.lost_ns
+        if contents.is_new and self._lost_ns is None and (stands := _stands_at(self._runtime)):
+            self._lost_ns = await self._log.lose(f"a sink has batches of this partition up to {stands}")
         reader = Reader(self._link, self._intake.stream, self._intake.subjects[0])
         self._taking = Taking(
             self._runtime, self._commit, reader, self._intake, ground.aside, contents.next_message
@@ -166,9 +171,17 @@ class Partition:
         """Stop working on it. With `drain`: deliver within the limit and save, so that the next owner begins at once.
 
         Without: nothing more is written to the log; what was released goes on to the sinks no further. A call that was
-        cancelled may be followed by another.
+        cancelled may be followed by another. The connection is closed whatever goes wrong before that.
         """
         self.stopped = True
+        try:
+            await self._stop(drain=drain)
+        except Exception:
+            await self._link.close()
+            raise
+        await self._link.close()  # not where the call was cancelled: another follows, and what is under way needs it
+
+    async def _stop(self, *, drain: bool) -> None:
         runtime, commit = self._runtime, self._commit
         if runtime is not None and self._ground.feeds.get(self._part.own.name) is runtime:
             del self._ground.feeds[self._part.own.name]  # first: nobody ticks or asks what is being closed
@@ -178,7 +191,6 @@ class Partition:
             await self._taking.stop()
         if runtime is not None and commit is not None:
             await self._close(runtime, commit, self._ground.drain_at_most_s if drain else 0.0)
-        await self._link.close()
 
     async def _close(self, runtime: FeedRuntime, commit: ReplicatedCommit, limit_s: float) -> None:
         if self._closing is None:
@@ -236,6 +248,8 @@ class Partition:
         taking, runtime = self._taking, self._runtime
         if self._log.words or taking is None or runtime is None:
             return self._log.words
+        if self._lost_ns is not None and runtime.clock.now_ns() - self._lost_ns < TOLD_FOR_NS:
+            return WORDS
         return taking.words or failing_words(runtime)
 
 
@@ -248,6 +262,11 @@ def failing_words(runtime: FeedRuntime) -> str:
             if since_ns is not None and runtime.clock.now_ns() - since_ns > FAILING_NS:
                 return f"sink {name} fails: {state.last_error}"
     return ""
+
+
+def _stands_at(runtime: FeedRuntime) -> int:
+    """The last batch that sinks had when a feed with a new journal was opened (see NumbersRecord); 0: none."""
+    return max(runtime.feed.state.outbox.next_number.values()) - 1
 
 
 def _prepare(scratch: Path, folder: Path) -> None:
