@@ -5,19 +5,23 @@ from __future__ import annotations
 
 import asyncio
 import hashlib
+import threading
 from collections.abc import AsyncIterator, Sequence
 from contextlib import asynccontextmanager
 from pathlib import Path
+from typing import Any
 
 import asyncpg
 import pytest
 from helpers_pgproxy import Proxy
 from helpers_postgres import ask, make_schema, shared
+from helpers_service import DEADLINE_S
 from helpers_sinks import HeldLines
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from strandline.core.columns import Batch, Lane
 from strandline.errors import SinkRefused, SinkRetry, StrandlineError
+from strandline.sinks import postgres, postgres_server
 from strandline.sinks.postgres import PostgresSink
 
 
@@ -332,3 +336,39 @@ async def test_many_feeds_make_their_tables_at_the_same_moment(schema: str) -> N
     sinks = [PostgresSink(shared(), f"river-{number}", schema=schema) for number in range(12)]
     assert await asyncio.gather(*(sink.open() for sink in sinks)) == [{"ordered": 0, "late": 0}] * 12
     await asyncio.gather(*(sink.close() for sink in sinks))
+
+
+class MadeMeanwhile(HeldLines):
+    """Lines whose bytes are given once the server has moved the position, and not before."""
+
+    def __init__(self) -> None:
+        super().__init__()
+        self.moved = threading.Event()
+
+    def ndjson(self, batch: Batch) -> bytes:
+        assert self.moved.wait(DEADLINE_S), "rows are made before the position is asked for"
+        return super().ndjson(batch)
+
+
+async def test_rows_are_made_while_the_position_is_moved_and_nothing_is_left_where_it_is_not(
+    schema: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    lines, sink = MadeMeanwhile(), PostgresSink(shared(), "river", schema=schema)
+
+    async def begin_at(*given: Any) -> bool:
+        try:
+            return await postgres_server.begin_at(*given)
+        finally:
+            lines.moved.set()
+
+    monkeypatch.setattr(postgres, "begin_at", begin_at)
+    await sink.open()
+    before = asyncio.all_tasks()
+    await sink.take([lines.batch("ordered", 1, 9)], lines)
+    ask(shared(), f"UPDATE {schema}.strandline_position SET batch = 7 WHERE lane = 'ordered'")
+    lines.moved.clear()
+    with pytest.raises(StrandlineError, match="a second process writes for this feed"):
+        await sink.take([lines.batch("ordered", 2, 9)], lines)
+    assert asyncio.all_tasks() == before
+    await sink.close()
+    assert ask(shared(), f"SELECT DISTINCT batch FROM {schema}.events") == [(1,)]

