@@ -6,7 +6,7 @@ import asyncio
 import heapq
 import itertools
 import threading
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 
 import numpy as np
 from strandline.core.columns import NO_SOURCE, REF, Batch, Lane, QuarantineEntry
@@ -33,6 +33,9 @@ class HeldLines:
 
     def ndjson(self, batch: Batch) -> bytes:
         return b"".join(line + b"\n" for line in self.lines(batch))
+
+    def ndjson_each(self, batches: Sequence[Batch]) -> Iterator[bytes]:
+        return (self.ndjson(batch) for batch in batches)
 
     def source_names(self) -> Sequence[str]:
         return self.names

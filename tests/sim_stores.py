@@ -22,7 +22,7 @@ from strandline.config_model import SinkConfig
 from strandline.core.columns import Batch, Lane
 from strandline.errors import SinkRefused, SinkRetry
 from strandline.ports import Clock, Lines, Sink
-from strandline.sinks import database, make_sink, ndjson
+from strandline.sinks import database, make_sink, rolling
 
 Result = TypeVar("Result")
 MOODS = ("well", "refuses", "refuses for good", "hangs", "hangs late", "loses answers", "fails within")
@@ -150,7 +150,7 @@ class Stores:
     never: set[tuple[str, Lane, int]] = field(default_factory=set)
     weather: Weather | None = None
     _connections: list[sqlite3.Connection] = field(default_factory=list)
-    _file_sinks: list[ndjson.NdjsonSink] = field(default_factory=list)
+    _file_sinks: list[rolling.RollingSink] = field(default_factory=list)
 
     def make(self, kind: str, feed: str, clock: Clock, **options: Any) -> Sink:
         """What the service calls instead of `sinks.make_sink`."""
@@ -158,7 +158,7 @@ class Stores:
         if kind == "receiver":
             return Flaky(name, ReceiverSink(self.receiver, self._meet), self)
         sink = make_sink(kind, feed, clock, **options)
-        if isinstance(sink, ndjson.NdjsonSink):
+        if isinstance(sink, rolling.RollingSink):
             self._file_sinks.append(sink)
         return Flaky(name, sink, self)
 
@@ -252,6 +252,6 @@ class Stores:
 
         with ExitStack() as stack:
             stack.enter_context(swapped(database, "sqlite3", beside(sqlite3, connect=connect)))
-            stack.enter_context(swapped(ndjson, "sync_data", sync))
-            stack.enter_context(swapped(ndjson, "sync_directory", sync))
+            stack.enter_context(swapped(rolling, "sync_data", sync))
+            stack.enter_context(swapped(rolling, "sync_directory", sync))
             yield

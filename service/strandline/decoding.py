@@ -1,11 +1,16 @@
-"""From a feed's configuration to the decoder of its bodies, whether they come by request, message or once more."""
+"""From a feed's configuration to the decoder of its bodies, whether they come by request, message or once more.
+
+Also to what copies its lines out again: who has compiled code for the one has it for the other.
+"""
 
 from __future__ import annotations
 
 import msgspec
 
 from .config import Feed as FeedConfig
+from .ingest.compiled import compiled_lines
 from .ingest.decode import Decoder
+from .journal.gather import Copier
 
 
 def decoder_of(config: FeedConfig, **changed: int) -> Decoder:
@@ -16,3 +21,13 @@ def decoder_of(config: FeedConfig, **changed: int) -> Decoder:
     limits = msgspec.structs.replace(config.body_limits(), **changed)
     is_compiled = config.decoding == "compiled"
     return Decoder(config.name, config.time.at, config.time.unit, config.source, config.id, limits, is_compiled)
+
+
+def copier_of(config: FeedConfig) -> Copier | None:
+    """What copies a feed's lines out of its journal where compiled code does so. Raises StrandlineError as above."""
+    if config.decoding != "compiled":
+        return None
+    compiled_lines()  # says what is missing
+    from .journal.compiled_copies import copied  # noqa: PLC0415 - only where numba is asked for
+
+    return copied

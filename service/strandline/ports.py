@@ -6,7 +6,7 @@ a simulation calls it directly.
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from typing import Protocol, runtime_checkable
 
 from .core.columns import Batch, Lane
@@ -86,6 +86,14 @@ class Lines(Protocol):
 
     def source_names(self) -> Sequence[str]:
         """Names of the sources by number. It only grows: a number once given keeps its name."""
+
+
+@runtime_checkable
+class TogetherLines(Protocol):
+    """`Lines` that can read the lines of several batches at once, which costs less where batches are small."""
+
+    def ndjson_each(self, batches: Sequence[Batch]) -> Iterator[bytes | memoryview]:
+        """`Lines.ndjson` of each of these batches, in their order; they are of one lane, "ordered" or "late"."""
 
 
 class Sink(Protocol):

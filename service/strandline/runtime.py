@@ -20,7 +20,7 @@ from .core.effects import Answer, Append, Deliver, Effect, Outcome, Pause, Refus
 from .core.feed import Feed
 from .core.records import arrival_body_bytes
 from .core.view import View
-from .decoding import decoder_of
+from .decoding import copier_of, decoder_of
 from .errors import JournalFailed, JournalFull, StrandlineError
 from .hops import Bodies, Hop, watermark_words
 from .housekeeping import Housekeeper
@@ -72,7 +72,7 @@ class FeedRuntime:
         )
         self.feed = Feed(config.settings())
         self.recent = Recent()
-        self.lines = JournalLines(self.journal, self.feed)
+        self.lines = JournalLines(self.journal, self.feed, copier_of(config))
         self.commit = make_commit(self.journal, self._durable, self.fail)
         self.decoder = decoder_of(config)
         self.lanes_file = folder / "lanes.db"

@@ -9,6 +9,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from strandline.journal import gather
+from strandline.journal.compiled_copies import copied
 from strandline.journal.gather import Source
 
 
@@ -29,6 +30,7 @@ def equal(
     assert gather.lines(sources, given_owners, offsets, lengths) == expected
     joined = b"".join(line + b"\n" for line in expected)
     assert gather.block(sources, given_owners, offsets, lengths) == joined
+    assert not len(offsets) or copied(sources, given_owners, offsets, lengths) == joined
     if feeds:
         # Not only after falling back, as `block` does where a line feed is missing.
         assert gather._copied(sources, gather.stretches(given_owners, offsets, lengths)) == joined
@@ -122,3 +124,22 @@ def test_the_thresholds_are_met_by_the_tests_above() -> None:
     # 1,500 scattered lines of few lengths must be beyond every break-even, or the windows would go untested.
     assert gather.TWO_WINDOWS_FROM * 2 * 2 < 1500 and gather.SHARED_LENGTH_FROM * 33 < 1500
     assert gather.ONE_WINDOW_FROM < 150 and 300 < gather.LONG_STRETCH_BYTES < 2000
+
+
+@given(st.data())
+@settings(max_examples=200)
+def test_what_lies_outside_is_not_copied_by_compiled_code(data: st.DataObject) -> None:
+    """One line of some does not lie within its source: nothing is answered, the plain way may say why."""
+    source = Source(memoryview(bytes(range(200))), 0, data.draw(st.integers(1, 150)))
+    rows = data.draw(st.lists(st.tuples(st.integers(0, source.end), st.integers(0, 9)), max_size=12))
+    rows = [(offset, min(length, source.end - offset)) for offset, length in rows]
+    offset = data.draw(st.integers(-5, source.end + 5))
+    length = data.draw(st.one_of(st.integers(-5, -1), st.integers(max(0, source.end - offset + 1), 300)))
+    if offset < 0:
+        length = abs(length)
+    bad = np.array([*rows, (offset, length)], np.int64)[data.draw(st.permutations(range(len(rows) + 1)))]
+    assert copied([source], None, bad[:, 0], bad[:, 1]) is None
+    for owners in (None, np.zeros(len(rows), np.intp)):
+        good = np.array(rows, np.int64).reshape(-1, 2)
+        lines = b"".join(bytes(source.view[place : place + size]) + b"\n" for place, size in rows)
+        assert not rows or copied([source], owners, good[:, 0], good[:, 1]) == lines

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import errno
 import json
+import os
 import re
 import resource
 from collections.abc import Callable, Iterator
@@ -21,8 +22,9 @@ from strandline.core.columns import Lane
 from strandline.errors import SinkRetry, StrandlineError
 from strandline.ports import Sink
 from strandline.sinks import files as file_calls
-from strandline.sinks import make_sink, ndjson
-from strandline.sinks.ndjson import NdjsonSink, feed_part, late_lines
+from strandline.sinks import make_sink, ndjson, rolling
+from strandline.sinks.ndjson import NdjsonSink, late_lines
+from strandline.sinks.rolling import feed_part
 
 FILE = re.compile(r"(.*)-(ordered|late)-([0-9]{20})-([0-9]{20})\.ndjson", re.DOTALL)
 
@@ -209,13 +211,41 @@ async def test_a_rename_that_fails_leaves_nothing(tmp_path: Path) -> None:
     assert lines_of(tmp_path, "river-gauges", "ordered") == [row[0] for row in lines.expected(batches)]
 
 
+async def test_a_long_file_is_given_to_the_disk_on_the_way(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Piece by piece, none twice and none left out but the last one; a disk that fails at one costs nothing."""
+    begun: list[tuple[int, int]] = []
+    fails: list[int] = []
+
+    def begin(descriptor: int, offset: int, size: int) -> None:
+        assert os.fstat(descriptor).st_size == offset + size
+        begun.append((offset, size))
+        if fails:
+            raise OSError(fails.pop(), "Input/output error")
+
+    monkeypatch.setattr(ndjson, "begin_writing", begin)
+    monkeypatch.setattr(ndjson, "BEGUN_EVERY_BYTES", 1000)
+    sink, _, lines = await opened(tmp_path)
+    batches = lines.batches("ordered", range(1, 41), 5)
+    fails.append(errno.EIO)
+    with pytest.raises(SinkRetry, match="see whether its disk is failing"):
+        await sink.take(batches, lines)
+    assert names(tmp_path) == []
+    begun.clear()
+    await sink.take(batches, lines)
+    await sink.flush(lines)
+    await sink.close()
+    assert len(begun) > 5 and all(size >= 1000 for _, size in begun)
+    assert [offset for offset, _ in begun] == [0, *(offset + size for offset, size in begun)][:-1]
+    assert lines_of(tmp_path, "river-gauges", "ordered") == [row[0] for row in lines.expected(batches)]
+
+
 class Watched:
     """The calls that make files durable, each carried out and noted down; `fails` names one that fails instead."""
 
     def __init__(self, patch: pytest.MonkeyPatch) -> None:
         self.calls: list[str] = []
         self.fails = ""
-        for owner, name in ((ndjson, "sync_data"), (Path, "rename"), (ndjson, "sync_directory")):
+        for owner, name in ((rolling, "sync_data"), (Path, "rename"), (rolling, "sync_directory")):
             patch.setattr(owner, name, self._watching(name, getattr(owner, name)))
 
     def _watching(self, name: str, plain: Callable[..., Any]) -> Callable[..., Any]:

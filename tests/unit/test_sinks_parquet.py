@@ -19,11 +19,11 @@ from sink_conformance import SinkConformance
 from strandline.core.columns import NO_SOURCE, REF, Batch, Lane
 from strandline.errors import SinkRefused, SinkRetry, StrandlineError
 from strandline.ports import Sink
-from strandline.sinks import make_sink, ndjson, parquet
-from strandline.sinks.ndjson import feed_part
+from strandline.sinks import make_sink, parquet, rolling
 from strandline.sinks.parquet import ParquetSink
 from strandline.sinks.postgres_columns import Column
 from strandline.sinks.repairs import RepairRow, cut
+from strandline.sinks.rolling import feed_part
 
 FILE = re.compile(r"(.*)-(ordered|late)-([0-9]{20})-([0-9]{20})\.parquet", re.DOTALL)
 
@@ -176,7 +176,7 @@ async def test_a_disk_that_fails_costs_the_incomplete_file_only(
 ) -> None:
     sink, _, lines = await opened(tmp_path)
     batches = lines.batches("ordered", range(1, 5))
-    owner = parquet if step == "write_all" else ndjson
+    owner = parquet if step == "write_all" else rolling
     plain = getattr(owner, step)
 
     def fails(*given: Any) -> None:
@@ -192,6 +192,30 @@ async def test_a_disk_that_fails_costs_the_incomplete_file_only(
     assert await sink.flush(lines) == {"ordered": 4}
     await sink.close()
     assert [row["batch"] for row in rows(tmp_path, "river-gauges", "ordered")] == [1, 1, 1, 2, 2, 2, 3, 3, 3, 4, 4, 4]
+
+
+async def test_a_file_that_cannot_be_begun_leaves_nothing_open_and_nothing_behind(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """The writer writes the format's first bytes as soon as it is made."""
+    sink, _, lines = await opened(tmp_path)
+    batches = lines.batches("ordered", [1])
+    await sink.take(lines.batches("late", [1]), lines)  # the thread runs, and what pyarrow opens at first is open
+
+    def fails(*given: Any) -> None:
+        raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+
+    before = sum(1 for _ in Path("/proc/self/fd").iterdir())
+    with monkeypatch.context() as patch:
+        patch.setattr(parquet, "write_all", fails)
+        for _ in range(3):
+            with pytest.raises(SinkRetry, match="free some room"):
+                await sink.take(batches, lines)
+    assert sum(1 for _ in Path("/proc/self/fd").iterdir()) == before
+    assert [path.name for path in tmp_path.iterdir()] == [f"river-gauges-late-{1:020}.parquet.part"]
+    await sink.take(batches, lines)
+    assert await sink.flush(lines) == {"ordered": 1, "late": 1}
+    await sink.close()
 
 
 MAPPING = (

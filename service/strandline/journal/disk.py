@@ -18,6 +18,7 @@ from pathlib import Path
 
 from strandline.core.effects import Buffer
 from strandline.errors import JournalError
+from strandline.writeback import begin_writing
 
 BUFFERS_AT_MOST = 1024  # IOV_MAX on Linux: more in one pwritev is EINVAL
 ZEROS = bytes(1 << 20)
@@ -39,12 +40,17 @@ class LocalFile:
         return self._size
 
     def write(self, offset: int, buffers: Sequence[Buffer]) -> None:
-        """Write the buffers one after the other from `offset`. Raises OSError; ValueError beyond the file's size."""
+        """Write the buffers one after the other from `offset`; the disk begins with long ones at once.
+
+        Raises OSError; ValueError beyond the file's size.
+        """
         left = [buffer if type(buffer) is bytes else _plain(buffer) for buffer in buffers]
         total = sum(map(len, left))
         if offset < 0 or offset + total > self._size:
             raise ValueError(f"{total} bytes at {offset} do not fit a file of {self._size}")
         write_all(self._descriptor, left, offset)
+        if self._synced:
+            begin_writing(self._descriptor, offset, total)
 
     def sync(self) -> None:
         """Make all that was written durable. Raises OSError; then the file must not be trusted any more."""

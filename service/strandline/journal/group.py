@@ -9,7 +9,8 @@ from collections.abc import Callable, Sequence
 from typing import NamedTuple
 
 from strandline.core.effects import Buffer
-from strandline.ports import Disk
+from strandline.ports import Disk, File
+from strandline.writeback import BEGUN_FROM_BYTES
 
 from .counters import Counters
 from .frame import encode_frame
@@ -35,13 +36,8 @@ def write_group(
     Everything before the group is durable already: so a segment's name proves that. Raises OSError; what then is on
     the disk is open.
     """
-    header = segment.header()
-    buffers: list[Buffer] = [] if segment.named else [header, bytes(SEGMENT_HEADER_BYTES - len(header))]
-    offset = segment.offset(group[0].lsn) if segment.named else 0
-    for queued in group:
-        buffers += encode_frame(queued.lsn, queued.kind, queued.parts, queued.version)
     file = segment.writable()
-    file.write(offset, buffers)
+    _write_frames(file, segment, group)
     before = clock()
     file.sync()
     counters.synced(clock() - before)
@@ -53,3 +49,18 @@ def write_group(
         segment.path, segment.named = path, True
     counters.frames += len(group)
     counters.bytes_written += sum(queued.bytes for queued in group)
+
+
+def _write_frames(file: File, segment: Segment, group: Sequence[Queued]) -> None:
+    """In pieces: the disk works on one while the checksums of the next are reckoned (see `strandline.writeback`)."""
+    header = segment.header()
+    buffers: list[Buffer] = [] if segment.named else [header, bytes(SEGMENT_HEADER_BYTES - len(header))]
+    offset, size = (segment.offset(group[0].lsn), 0) if segment.named else (0, SEGMENT_HEADER_BYTES)
+    for queued in group:
+        buffers += encode_frame(queued.lsn, queued.kind, queued.parts, queued.version)
+        size += queued.bytes
+        if size >= BEGUN_FROM_BYTES:
+            file.write(offset, buffers)
+            buffers, offset, size = [], offset + size, 0
+    if buffers:
+        file.write(offset, buffers)

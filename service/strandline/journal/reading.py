@@ -16,7 +16,7 @@ from numpy.typing import ArrayLike, NDArray
 from strandline.errors import JournalError
 
 from .frame import Frame, decode_frame, intact_end, octets
-from .gather import Positions, Source, block, lines
+from .gather import Copier, Positions, Source, block, lines
 from .segments import SEGMENT_HEADER_BYTES, Maps, Segment
 
 
@@ -84,14 +84,15 @@ class Readable:
         """The lines at these positions, one bytes object each, without line feeds. Arguments as for `gather`."""
         return lines(*self._located(places, lengths))
 
-    def gather(self, places: ArrayLike, lengths: ArrayLike) -> bytes:
+    def gather(self, places: ArrayLike, lengths: ArrayLike, copier: Copier | None = None) -> bytes:
         """The lines one after the other, each followed by a line feed.
 
         `places` integer[n] are the positions of the lines' first bytes, `lengths` integer[n] bytes without the line
-        feed; in any order. Raises JournalError where one is not kept, or not durable yet. What is read was checked when
-        the journal was opened, or written by this process, or its segment is read through and checked here, once.
+        feed; in any order; `copier` as for `gather.block`. Raises JournalError where one is not kept, or not durable
+        yet. What is read was checked when the journal was opened, or written by this process, or its segment is read
+        through and checked here, once.
         """
-        return block(*self._located(places, lengths))
+        return block(*self._located(places, lengths), copier)
 
     def _located(
         self, places: ArrayLike, lengths: ArrayLike

@@ -1,10 +1,9 @@
 """The Parquet sink: files of columns in one folder, each complete or absent, with the least and greatest time of every
 row group in its footer. Needs pyarrow (the extra `arrow`).
 
-Names, rolling, positions and what a crash leaves are those of the NDJSON sink: written under a temporary name, synced,
-renamed, the folder synced; names tell the lane and the first and last batch. A file without its footer cannot be read
-at all, so one that was never completed is worthless, is removed, and its batches are taken again. Here lives only what
-a file holds: rows are gathered until they fill a row group, so no row group is small but a file's last.
+How files are named, rolled and completed is `rolling`'s. A file without its footer cannot be read at all, so one that
+was never completed is worthless, is removed, and its batches are taken again. Here lives only what a file holds: rows
+are gathered until they fill a row group, so no row group is small but a file's last.
 """
 
 from __future__ import annotations
@@ -13,7 +12,6 @@ import contextlib
 import io
 import os
 from collections.abc import Sequence
-from dataclasses import dataclass, field
 from typing import Any
 
 import pyarrow as pa
@@ -22,10 +20,10 @@ import pyarrow.parquet as pq
 from ..core.columns import Batch, Lane
 from ..ports import Clock, Lines
 from .files import write_all
-from .ndjson import ROLL_BYTES, ROLL_EVERY_S, NdjsonSink, Part
 from .parquet_rows import Rows, repair_table
 from .postgres_columns import Column
 from .repairs import Repair
+from .rolling import ROLL_BYTES, ROLL_EVERY_S, RollingSink
 
 ROWS_PER_GROUP = 100_000
 GROUP_BYTES = 16 * 1024 * 1024  # a row group is written out at this size too, so that little is held in memory
@@ -50,18 +48,44 @@ class _Output(io.RawIOBase):
         return len(view)
 
 
-@dataclass(slots=True)
-class _Open:
-    """The writer of a lane's file, and the rows that are not in a row group yet."""
+class _Groups:
+    """A file of row groups: rows wait until they fill one, and its footer makes it a file."""
 
-    output: _Output
-    writer: Any
-    waiting: list[Any] = field(default_factory=list)
-    rows: int = 0
-    nbytes: int = 0
+    def __init__(self, output: _Output, writer: Any, rows_per_group: int) -> None:
+        self._output, self._writer, self._rows_per_group = output, writer, rows_per_group
+        self._waiting: list[Any] = []
+        self._rows = self._nbytes = 0
+
+    def write(self, block: Any) -> int:
+        self._waiting.append(block)
+        self._rows += len(block)
+        self._nbytes += block.nbytes
+        if self._nbytes >= GROUP_BYTES:
+            self._write_groups(self._rows)
+        elif self._rows >= self._rows_per_group:
+            self._write_groups(self._rows // self._rows_per_group * self._rows_per_group)
+        return self._output.size + self._nbytes
+
+    def finish(self) -> None:
+        self._write_groups(self._rows)
+        self._writer.close()
+
+    def abandon(self) -> None:
+        # Else the writer would still end its file, whoever has the descriptor by then.
+        self._output.descriptor = None
+        with contextlib.suppress(OSError, pa.ArrowException):
+            self._writer.close()
+
+    def _write_groups(self, count: int) -> None:
+        """Write the first `count` of the rows that wait as row groups. Raises OSError."""
+        if count:
+            table = pa.Table.from_batches(self._waiting)
+            self._writer.write_table(table.slice(0, count), row_group_size=self._rows_per_group)
+            rest = table.slice(count)
+            self._waiting, self._rows, self._nbytes = rest.to_batches(), len(rest), rest.nbytes
 
 
-class ParquetSink(NdjsonSink):
+class ParquetSink(RollingSink):
     """Takes the ordered and the late lane of one feed into Parquet files that roll by size or age.
 
     Without `columns` a file has time_ns, source, batch, position and event; late files arrived_ns and late_by_ns too.
@@ -69,8 +93,8 @@ class ParquetSink(NdjsonSink):
     order = "source" time does so within a batch only, and each row group has its least and greatest time anyway.
     """
 
-    _ending = "parquet"
-    _note_ending = ".parquet"
+    ending = "parquet"
+    note_ending = ".parquet"
 
     def __init__(
         self,
@@ -88,29 +112,16 @@ class ParquetSink(NdjsonSink):
         super().__init__(directory, feed, clock, roll_bytes=roll_bytes, roll_every_s=roll_every_s)
         self._rows = Rows(feed, columns)
         self._rows_per_group, self._compression = rows_per_group, compression
-        self._open_files: dict[Lane, _Open] = {}
 
     # ---- in the thread ----------------------------------------------------------------------------------------------
 
-    def _block(self, batch: Batch, lines: Lines) -> Any:
+    def block(self, batch: Batch, lines: Lines) -> Any:
+        """The batch's rows."""
         return self._rows.table(batch, lines)
 
-    def _write(self, lane: Lane, part: Part, block: Any) -> int:
-        file = self._open_files.get(lane)
-        if file is None:
-            file = self._begun(lane, part)
-            self._open_files[lane] = file
-        file.waiting.append(block)
-        file.rows += len(block)
-        file.nbytes += block.nbytes
-        if file.nbytes >= GROUP_BYTES:
-            self._write_groups(file, file.rows)
-        elif file.rows >= self._rows_per_group:
-            self._write_groups(file, file.rows // self._rows_per_group * self._rows_per_group)
-        return file.output.size + file.nbytes
-
-    def _begun(self, lane: Lane, part: Part) -> _Open:
-        output = _Output(part.descriptor)
+    def begin(self, lane: Lane, descriptor: int) -> _Groups:
+        """Row groups with the lane's columns."""
+        output = _Output(descriptor)
         writer = pq.ParquetWriter(
             output,
             self._rows.schema(lane),
@@ -118,32 +129,10 @@ class ParquetSink(NdjsonSink):
             **self._rows.layout(lane),
             **FORMAT,
         )
-        return _Open(output, writer)
+        return _Groups(output, writer, self._rows_per_group)
 
-    def _write_groups(self, file: _Open, count: int) -> None:
-        """Write the first `count` of the rows that wait as row groups. Raises OSError."""
-        if count:
-            table = pa.Table.from_batches(file.waiting)
-            file.writer.write_table(table.slice(0, count), row_group_size=self._rows_per_group)
-            rest = table.slice(count)
-            file.waiting, file.rows, file.nbytes = rest.to_batches(), len(rest), rest.nbytes
-
-    def _finish(self, lane: Lane, part: Part) -> None:
-        file = self._open_files[lane]
-        self._write_groups(file, file.rows)
-        file.writer.close()
-        del self._open_files[lane]
-
-    def _discard(self, lane: Lane) -> None:
-        file = self._open_files.pop(lane, None)
-        if file is not None:
-            # Else the writer would still end its file, whoever has the descriptor by then.
-            file.output.descriptor = None
-            with contextlib.suppress(OSError, pa.ArrowException):
-                file.writer.close()
-        super()._discard(lane)
-
-    def _repair_block(self, repair: Repair) -> bytes:
+    def repair_block(self, repair: Repair) -> bytes:
+        """The repair's rows as a whole file."""
         out = io.BytesIO()
         table = repair_table(repair)
         pq.write_table(table, out, compression=self._compression, row_group_size=self._rows_per_group, **FORMAT)
