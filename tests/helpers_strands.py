@@ -7,7 +7,7 @@ from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager
 
 import numpy as np
-from strandline.core import held, held_by_source, merge, runs, slack, tails
+from strandline.core import fresh, held, held_by_source, merge, near, runs, slack, tails
 from strandline.core.columns import REF, as_refs, as_rows
 from strandline.core.merge import Merger
 from strandline.core.runs import OpenRuns, Strand
@@ -66,7 +66,7 @@ class Costing(Merger):
         return result
 
 
-MODULES = (held, held_by_source, merge, runs, slack, tails)
+MODULES = (fresh, held, held_by_source, merge, near, runs, slack, tails)
 
 
 @contextmanager

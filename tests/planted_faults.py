@@ -20,7 +20,7 @@ from simulate import play
 from strandline.core import saved
 from strandline.core import state as state_module
 from strandline.core.feed import Feed
-from strandline.core.held import Held
+from strandline.core.fresh import Fresh
 from strandline.core.merge import Merger
 from strandline.core.runs import OpenRuns
 from strandline.core.settings import Settings
@@ -32,7 +32,7 @@ from strandline.journal import reading, recovery
 from strandline.journal.journal import Journal
 from strandline.journal.spares import Spares
 from strandline.runtime import FeedRuntime
-from strandline.sinks.ndjson import NdjsonSink
+from strandline.sinks.rolling import RollingSink
 from strandline.sinks.sqlite import SqliteSink
 
 SEEDS_AT_MOST = 80  # from the first one that is named; each fault was found within 20 when this was written
@@ -222,23 +222,13 @@ FAULTS = [
     ),
     Fault(
         "ties reversed",
-        (
-            Change(
-                Merger, "_interleave", "times, order = sorted_stably(strand.times)",
-                "times, order = sorted_stably(strand.times[::-1])\n    order = rows - 1 - order",
-            ),
-        ),
+        (Change(Merger, "_interleave", "strand = joined(heads)", "strand = joined(heads[::-1])"),),
         Worlds(0, "ties"),
         "against the order of arrival",
     ),
     Fault(
-        "fresh rows are overtaken by a large arrival",
-        (
-            Change(
-                Held, "hold", "(large or self.fresh.rows + len(times) > self._fresh_events)",
-                "self.fresh.rows + len(times) > self._fresh_events",
-            ),
-        ),
+        "fresh rows overtake older ones once they are sorted",
+        (Change(Fresh, "take", "parts.append(self._small.strand)", "parts.insert(0, self._small.strand)"),),
         Worlds(0, "ties"),
         "against the order of arrival",
     ),
@@ -364,7 +354,7 @@ FAULTS = [
     ),
     Fault(
         "files end where they happen to end after a crash",
-        (Change(NdjsonSink, "_noted", "return first - 1, last", "return 0, 0"),),
+        (Change(RollingSink, "_noted", "return first - 1, last", "return 0, 0"),),
         sim_cases.files_that_were_fetched_before_a_crash_are_not_repeated_in_part,
         "holds repeats and more",
     ),

@@ -2,14 +2,18 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from helpers_strands import constants
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from numpy.typing import NDArray
 from strandline.core import held as held_module
 from strandline.core.columns import REF, TIME_MAX, TIME_MIN, as_refs, as_rows
 from strandline.core.held import Held
 from strandline.core.merge import Merger
+from strandline.core.runs import joined
 
 times = st.one_of(st.integers(-5, 40), st.sampled_from((TIME_MIN, TIME_MAX)))  # few values, so that ties are common
 steps = st.lists(st.one_of(st.lists(times, min_size=1, max_size=30), st.integers(-6, 41)), max_size=30)
@@ -59,22 +63,83 @@ class Told:
         assert sorted(seen, key=lambda row: row[0]) == sorted(self.model)
 
 
-@settings(max_examples=300)
-@given(steps, st.sampled_from((0, 1, 5, 64, 1 << 15)), st.sampled_from((0, 1, 16, 1 << 20)))
-def test_releases_are_those_of_a_stable_sort_whatever_gathers(
-    history: list[list[int] | int], fresh_events: int, sorted_times: int
-) -> None:
-    with constants(SORTED_TIMES=sorted_times):
-        told = Told(fresh_events)
-        for step in history:
-            if isinstance(step, list):
-                told.hold(step)
-            else:
-                told.release(step)
-            told.check()
-        told.release(TIME_MAX)
+shapes = st.sampled_from(("late", "delayed", "bursts", "back"))
+limits = st.sampled_from((0, 1, 5, 64, 1 << 17))  # rows near their release, and beyond the bound
+strands = st.sampled_from((1, 2, 6))
+parts = st.sampled_from((1, 4, 4096))
+
+
+def played(history: list[list[int] | int], fresh_events: int) -> Told:
+    """A history, each step checked, and all let go at its end."""
+    told = Told(fresh_events)
+    for step in history:
+        if isinstance(step, list):
+            told.hold(step)
+        else:
+            told.release(step)
         told.check()
-        assert sorted(told.released) == list(range(told.came))
+    told.release(TIME_MAX)
+    told.check()
+    return told
+
+
+@settings(max_examples=400)
+@given(steps, limits, strands, parts)
+def test_releases_are_those_of_a_stable_sort_whatever_gathers(
+    history: list[list[int] | int], fresh_events: int, strands_at_most: int, part_events: int
+) -> None:
+    with constants(STRANDS_AT_MOST=strands_at_most, PART_EVENTS=part_events):
+        told = played(history, fresh_events)
+    assert sorted(told.released) == list(range(told.came))
+
+
+@settings(max_examples=60, deadline=None)
+@given(st.integers(0, 2**32 - 1), st.sampled_from((0, 100, 3_000)), shapes)
+def test_the_same_with_rows_enough_for_each_way_of_sorting(seed: int, fresh_events: int, shape: str) -> None:
+    """Few falls, many, long stretches and descending ones; times are coarse, so that many are equal."""
+    random, told = np.random.default_rng(seed), Told(fresh_events)
+    for request in range(12):
+        rows = int(random.integers(1, 1_500))
+        column = request * 1_000 + np.sort(random.integers(0, 1_000, rows))
+        match shape:
+            case "late":
+                column -= np.where(random.random(rows) < 0.01, random.integers(0, 4_000, rows), 0)
+            case "delayed":
+                column -= random.exponential(1_000, rows).astype(np.int64)
+            case "bursts":
+                column = np.concatenate([part - 300 * k for k, part in enumerate(np.array_split(column, 4))])
+            case "back":
+                column = np.unique(column)[::-1]
+        told.hold(column.tolist())
+        if random.random() < 0.7:
+            told.release(request * 1_000 - int(random.integers(0, 5_000)))
+        told.check()
+    told.release(TIME_MAX)
+    assert sorted(told.released) == list(range(told.came))
+
+
+@settings(max_examples=200)
+@given(steps, limits, limits, st.integers(0, 30))
+def test_what_is_saved_and_restored_releases_the_same(
+    history: list[list[int] | int], before: int, after: int, pause: int
+) -> None:
+    """Also where less, or more, may be near afterwards than before."""
+    told = Told(before)
+    for index, step in enumerate(history):
+        if index == pause:
+            saved, told.held = told.held, Held(Merger(), fresh_events=after)
+            for run in saved.open.runs:
+                told.held.open.reopen(joined(list(run.chunks)))
+            told.held.restore(*saved.saved())
+            assert before != after or told.held.lengths() == saved.lengths()
+            told.check()
+        if isinstance(step, list):
+            told.hold(step)
+        else:
+            told.release(step)
+        told.check()
+    told.release(TIME_MAX)
+    assert sorted(told.released) == list(range(told.came))
 
 
 def test_few_rows_at_a_time_are_dealt_together() -> None:
@@ -89,3 +154,39 @@ def test_few_rows_at_a_time_are_dealt_together() -> None:
                 held.release(request * 8 - 3_000)
         comparisons[fresh_events] = held.comparisons
     assert comparisons[0] > 10 * comparisons[held_module.FRESH_EVENTS] > 0
+
+
+def test_a_mark_that_needs_open_runs_cuts_them_for_those_that_follow() -> None:
+    """Delays drawn evenly, 40,000 rows held, 1,000 of them leave at each mark: few marks touch the open runs."""
+    random, held, cuts, released = np.random.default_rng(5), Held(Merger(), fresh_events=1 << 13), 0, 0
+    for request in range(240):
+        column = np.sort(request * 1_000 + random.integers(0, 1_000, 1_000)) - random.integers(0, 80_000, 1_000)
+        held.hold(column, as_rows(np.zeros(1_000, REF)))
+        before = held.bound
+        released += len(held.release((request + 1) * 1_000 - 80_000).times)
+        if request >= 120:
+            cuts += held.bound != before
+        if request % 20 == 0:
+            held.check()
+    assert held.open.held > 20_000 and released > 100_000
+    assert 0 < cuts < 60
+
+
+def test_what_is_released_is_let_go() -> None:
+    """Columns that are held are no parts of far longer ones, so that what left does not stay in memory."""
+    random, held = np.random.default_rng(6), Held(Merger(), fresh_events=1 << 12)
+    for request in range(200):
+        column = request * 1_000 - random.exponential(8_000, 1_000).astype(np.int64)
+        held.hold(column, as_rows(np.zeros(1_000, REF)))
+        held.release(request * 1_000 - 30_000)
+        bases = {id(base): base.nbytes for base in map(base_of, columns_of(held))}
+        assert sum(bases.values()) <= 2 * 24 * held.held
+
+
+def columns_of(held: Held) -> list[NDArray[Any]]:
+    strands = [chunk for run in held.open.runs for chunk in run.chunks] + held.near.strands
+    return [column for strand in strands for column in strand]
+
+
+def base_of(column: NDArray[Any]) -> NDArray[Any]:
+    return column.base if isinstance(column.base, np.ndarray) else column

@@ -6,7 +6,7 @@ import numpy as np
 from hypothesis import example, given
 from hypothesis import strategies as st
 from strandline.core.columns import TIME_MAX, TIME_MIN
-from strandline.core.sorting import PACKED_EVENTS, sorted_stably
+from strandline.core.sorting import PACKED_EVENTS, sorted_runs, sorted_stably
 
 ROWS = st.one_of(st.integers(0, 40), st.integers(PACKED_EVENTS - 2, PACKED_EVENTS + 40))
 # How far the times lie apart: ties everywhere, the edge of what fits beside a row's number, all of int64.
@@ -39,3 +39,15 @@ def test_the_widest_span_that_is_packed_and_the_narrowest_that_is_not(more: int)
     agrees(times)
     agrees(times + TIME_MIN)
     agrees(times + (TIME_MAX - int(times[0])))
+
+
+@given(st.integers(1, 2_000), st.integers(0, 60), st.integers(1, 60), st.integers(0, 2**32))
+def test_with_few_falls_the_order_is_that_of_a_stable_sort_too(rows: int, late: int, runs: int, seed: int) -> None:
+    """Rows that come late one by one, and long runs that interleave: whichever way the falls make it go."""
+    random = np.random.default_rng(seed)
+    parts = np.array_split(np.sort(random.integers(0, 500, rows)), runs)
+    times = np.concatenate([part - 40 * number for number, part in enumerate(parts)])
+    times[random.integers(0, rows, late)] -= random.integers(0, 300, late)
+    found, order = sorted_runs(times, int(np.count_nonzero(times[1:] < times[:-1])))
+    expected = np.argsort(times, kind="stable")
+    assert np.array_equal(order, expected) and np.array_equal(found, times[expected])

@@ -21,9 +21,10 @@ from strandline_loadgen.trace import Int64s
 from .harness import Scale
 
 EVENTS_PER_S = 10_000.0
-MEASURED_BATCHES, MEASURED_BATCHES_LARGE = 20, 4
+# Open runs are cut once for a dozen batches: so many are measured that a run has its share of such batches.
+MEASURED_BATCHES, MEASURED_BATCHES_LARGE = 80, 40
 FILLING_SLACKS = 1.2
-LARGE_HELD = 5_000_000  # from here on only so few batches: each costs a peer that sorts anew half a second and more
+LARGE_HELD = 5_000_000  # from here on fewer batches
 Pair = tuple[int, int]
 
 
@@ -121,7 +122,7 @@ def _exponential(held: int, scale: Scale) -> Plan:
 def _bursty_gateways(held: int, scale: Scale) -> Plan:
     """Gateways that send what they gathered in bursts, each at its own period of a quarter to all of the slack.
 
-    There are 64, and 2,048 where few batches are measured: else all of them would lie within one burst.
+    There are 64, and 2,048 where much is held: else what is measured would lie within one burst.
     An event waits in its gateway half a period on average, 5/16 of the slack: the rest of the slack it is held.
     """
     slack_s = held / EVENTS_PER_S / (11 / 16)
@@ -144,8 +145,8 @@ def _reversed(held: int, scale: Scale) -> Plan:
     what is to be held and half a block.
     """
     body = scale.body_events
-    batches = min(max(held // (4 * body), 2), batches_measured(held))  # a whole number of blocks is measured
-    while batches_measured(held) % batches:
+    batches = min(max(held // (4 * body), 2), 20 if held < LARGE_HELD else 4)
+    while batches_measured(held) % batches:  # a whole number of blocks is measured
         batches -= 1
     block = batches * body
     slack_s = (held + block / 2) / EVENTS_PER_S

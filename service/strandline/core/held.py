@@ -1,166 +1,208 @@
-"""All events that are held: the fresh ones as they came, the others in open runs.
+"""All events that are held: those near their release, and beyond a bound the fresh ones and those in open runs.
 
-Fresh rows gather until there are enough to be dealt at once, or until a mark asks for one of them: pieces of a few rows
-cost microseconds of interpreter each to deal and to cut (`ordering.md`). What is fresh came after what the open runs
-hold, so equal times stay in order of arrival.
+    time ->        bound
+    [ near strands ] | [ open runs ]     older
+    [ near fresh   ] | [ far fresh ]     younger
 
-No mark is decided here and no batch is cut. What is released does not depend on the buffer (a test switches it off).
+A row belongs to one side of the bound by its time alone, so equal times are never on both sides, and each side keeps
+them in order of arrival for itself. Marks are served from the near side, which is small. Only a mark that reaches the
+bound touches the open runs: it cuts them for many marks at once, because each run costs microseconds of interpreter
+each time that it is cut, however few rows leave (`ordering.md`). While little is held there is no far side.
+
+No mark is decided here and no batch is cut. What is released does not depend on the bound (a test switches it off).
 """
 
 from __future__ import annotations
 
 import numpy as np
 
-from .columns import TIME_MAX, Refs, Times, greatest_of, least_of
-from .gathered import Gathered
+from .columns import TIME_MAX, TIME_MIN, Refs, Times
+from .fresh import Fresh
 from .merge import Merger
-from .runs import OpenRuns, Run, Strand, runs_of
-from .sorting import sorted_stably
+from .near import Near
+from .runs import OpenRuns, Run, Strand, joined, run_of, runs_of
 
-FRESH_EVENTS = 1 << 15  # 24 bytes each, once the feed is that busy
-# All that is fresh is sorted for one mark while it is at most so many times what came since it was last sorted: a row
-# costs 6 ns to sort and a piece that is dealt 3 us.
-SORTED_TIMES = 16
+# So many rows may lie on the near side, and as many may be fresh beyond it, before they are dealt to open runs. About
+# half as many come near at once: with arrivals of 5,000 each run is cut once for 13 marks (measured, ordering.md).
+FRESH_EVENTS = 1 << 17
+TRIES_AT_MOST = 4  # looks for a bound that has about half as many rows before it
+SPAN_STEP = 4  # by which such a look goes further, or less far
 
-
-class Fresh(Gathered):
-    """Gathered rows; the first `sorted` of them are in ascending time (and came before)."""
-
-    def __init__(self, room_at_most: int) -> None:
-        super().__init__(room_at_most)
-        self.sorted = 0
-        self.least = TIME_MAX
-        self.greatest = 0  # of no meaning without rows
-
-    def add(self, times: Times, refs: Refs) -> None:
-        """Put rows behind those that are there."""
-        greatest = greatest_of(times)
-        self.greatest = max(self.greatest, greatest) if self.rows else greatest
-        self.least = min(self.least, least_of(times))
-        super().add(times, refs)
-
-    def in_order(self) -> Strand:
-        """The rows in ascending time, as a copy."""
-        times, refs = self.strand
-        times, order = sorted_stably(times)
-        return Strand(times, refs[order])
-
-    def take(self) -> Strand:
-        """All rows as they came; none is left."""
-        taken = self.copied()
-        self.forget()
-        return taken
-
-    def cut(self, watermark: int) -> Strand:
-        """The rows at or before the watermark, in ascending time; the others stay, sorted."""
-        strand = self.in_order()
-        place = int(strand.times.searchsorted(watermark, side="right"))
-        rest = Strand(strand.times[place:], strand.refs[place:])
-        self.forget()
-        if len(rest.times):
-            self.add(*rest)
-            self.sorted = self.rows
-        return Strand(strand.times[:place], strand.refs[:place])
-
-    def restore(self, strand: Strand, rows_sorted: int) -> None:
-        """Take over saved rows."""
-        if len(strand.times):
-            self.add(*strand)
-        self.sorted = rows_sorted
-
-    def forget(self) -> None:
-        """No row is left."""
-        super().forget()
-        self.sorted = 0
-        self.least = TIME_MAX
-
-    def check(self) -> None:
-        """Assert that bounds and the sorted part are what they are said to be."""
-        super().check()
-        times = self.strand.times
-        assert 0 <= self.sorted <= self.rows
-        assert self.least == min(times.tolist(), default=TIME_MAX)
-        assert not self.rows or self.greatest == int(times.max())
-        first = times[: self.sorted]
-        assert np.all(first[1:] >= first[:-1])
+Said = tuple[int, int | None, int]  # strands that are near, the bound (None: before all times), the span
 
 
 class Held:
     """What a feed holds. `hold` takes an arrival's rows, `release` gives those at or before a mark's watermark."""
 
     def __init__(self, merger: Merger, *, fresh_events: int | None = None) -> None:
-        """At most so many rows (else FRESH_EVENTS) gather before they are dealt; with 0 each arrival is, at once."""
+        """At most so many rows (else FRESH_EVENTS) are near; with 0 none is, and each arrival is dealt."""
         self._fresh_events = FRESH_EVENTS if fresh_events is None else fresh_events
-        self.open, self.fresh, self._merger = OpenRuns(), Fresh(self._fresh_events), merger
+        self.near, self.open, self.far, self._merger = Near(merger), OpenRuns(), Fresh(), merger
+        self.bound = TIME_MAX if self._fresh_events else TIME_MIN - 1
+        self._span = 0  # from the last bound to the one before it; 0 before there was one
 
     def hold(self, times: Times, refs: Refs) -> None:
         """Hold an arrival's rows (refs as ROWs)."""
-        large = 2 * len(times) > self._fresh_events
-        if self.fresh.rows and (large or self.fresh.rows + len(times) > self._fresh_events):
-            self._deal(*self.fresh.take())
-        if large:
+        if not self._fresh_events:
             self._deal(times, refs)
+            return
+        if self.bound == TIME_MAX:
+            self.near.fresh.add(times, refs)
         else:
-            self.fresh.add(times, refs)
+            self._divide(times, refs)
+        if self.near.rows > self._fresh_events:
+            self._narrow()
+        if self.far.rows > self._fresh_events:
+            self._deal(*self.far.take())
+
+    def _divide(self, times: Times, refs: Refs) -> None:
+        """Each row to its side of the bound."""
+        within = times <= self.bound
+        rows = int(np.count_nonzero(within))
+        if rows == 0:
+            self.far.add(times, refs)
+        elif rows == len(times):
+            self.near.fresh.add(times, refs)
+        else:
+            which = np.flatnonzero(within)
+            self.near.fresh.add(times[which], refs[which])
+            which = np.flatnonzero(~within)
+            self.far.put(times[which], refs[which])
 
     def _deal(self, times: Times, refs: Refs) -> None:
         for run in runs_of(times, refs):
             self.open.deal(run)
 
+    def _narrow(self) -> None:
+        """Move the bound back, so that half as many rows are near as may be; the others are dealt."""
+        self.bound, beyond = self.near.cut_beyond(self._fresh_events // 2)
+        self.open.deal(beyond)
+
     def release(self, watermark: int) -> Strand:
         """Rows at or before the watermark as one ascending strand."""
-        last: list[Strand] = []
-        if self.fresh.rows and self.fresh.least <= watermark:
-            if self.fresh.rows <= SORTED_TIMES * (self.fresh.rows - self.fresh.sorted):
-                last = [self.fresh.cut(watermark)]
-            else:
-                self._deal(*self.fresh.take())
-        heads = [*self.open.cut(watermark), *last]
+        if not self._fresh_events:
+            return self._merged(self.open.cut(watermark))
+        strand = self._release(watermark)
+        self.near.fresh.own()
+        self.far.own()
+        return strand
+
+    def _release(self, watermark: int) -> Strand:
+        strand = self._merged(self.near.cut(watermark))
+        if watermark >= self.bound and (self.far.rows or self.open.held):
+            beyond = self._fetch(watermark)
+            if len(beyond.times):
+                return joined([strand, beyond]) if len(strand.times) else beyond
+        return strand
+
+    def _merged(self, heads: list[Strand]) -> Strand:
         return heads[0] if len(heads) == 1 else self._merger.merge(heads)
 
-    # ---- observers ------------------------------------------------------------------------------------------------
+    def _fetch(self, watermark: int) -> Strand:
+        """Move the bound on, at least to the watermark; nothing is near. The rows at or before the watermark."""
+        if min(self.far.least, TIME_MAX if self.open.head_ns is None else self.open.head_ns) > watermark:
+            self.bound = watermark
+            return self._merged([])
+        if self.far.rows:
+            self._deal(*self.far.take())
+        self.bound = self._next_bound(watermark)
+        strand = self._merged(self.open.cut(self.bound))
+        self.near.put(strand)
+        return self._merged(self.near.cut(watermark))
+
+    def _next_bound(self, watermark: int) -> int:
+        """A time at or beyond the watermark that has about half as many rows before it as may be near."""
+        wanted, head, tail = self._fresh_events // 2, self.open.head_ns, self.open.tail_ns
+        assert head is not None and tail is not None
+        if self.open.held <= wanted:
+            return TIME_MAX
+        start = max(watermark, head)
+        span = self._span or (tail - head) * wanted // self.open.held
+        for _ in range(TRIES_AT_MOST):
+            span = min(max(span, 1), TIME_MAX)
+            bound = min(start + span, TIME_MAX)
+            rows = self.open.count(bound)
+            if rows > self._fresh_events and span > 1:
+                span //= SPAN_STEP
+            elif SPAN_STEP * rows < wanted and bound < TIME_MAX:
+                span *= SPAN_STEP
+            else:
+                break
+        self._span = min(span * wanted // max(rows, 1), TIME_MAX)
+        return bound
+
+    # ---- observers and snapshots ------------------------------------------------------------------------------------
 
     @property
     def held(self) -> int:
         """Events held."""
-        return self.open.held + self.fresh.rows
+        return self.near.rows + self.open.held + self.far.rows
 
     @property
     def head_ns(self) -> int | None:
         """Least event time held."""
+        if self.near.rows:
+            return self.near.least
         head = self.open.head_ns
-        if not self.fresh.rows:
+        if not self.far.rows:
             return head
-        return self.fresh.least if head is None else min(head, self.fresh.least)
+        return self.far.least if head is None else min(head, self.far.least)
 
     @property
     def tail_ns(self) -> int | None:
         """Greatest event time held."""
         tail = self.open.tail_ns
-        if not self.fresh.rows:
-            return tail
-        return self.fresh.greatest if tail is None else max(tail, self.fresh.greatest)
+        if self.far.rows:
+            return self.far.greatest if tail is None else max(tail, self.far.greatest)
+        return self.near.greatest if tail is None and self.near.rows else tail
 
     @property
     def runs(self) -> list[Run]:
-        """All that is held as runs, the oldest first; the fresh rows as one, in order. For those who look only."""
-        if not self.fresh.rows:
-            return self.open.runs
-        run = Run()
-        run.append(self.fresh.in_order())
-        return [*self.open.runs, run]
+        """All that is held as runs, the oldest first: what is near as one, what is fresh too. For who looks only."""
+        near = [run_of(self.near.copied())] if self.near.rows else []
+        return [*near, *self.open.runs, *([run_of(self.far.copied())] if self.far.rows else [])]
 
     def lengths(self) -> list[int]:
         """Events held by each of `runs`."""
-        return [*self.open.lengths(), self.fresh.rows] if self.fresh.rows else self.open.lengths()
+        return [rows for rows in (self.near.rows, *self.open.lengths(), self.far.rows) if rows]
 
     @property
     def comparisons(self) -> int:
         """Comparisons made so far in dealing and cutting."""
-        return self.open.comparisons
+        return self.near.comparisons + self.open.comparisons
+
+    def saved(self) -> tuple[list[Strand], Said]:
+        """All that is not in open runs, and what must be known of it. None of it changes any more."""
+        bound = None if self.bound < TIME_MIN else self.bound
+        strands = [*self.near.strands, self.near.fresh.copied(), self.far.copied()]
+        return strands, (len(self.near.strands), bound, self._span)
+
+    def restore(self, strands: list[Strand], said: Said | None) -> None:
+        """Take over what was saved, once the open runs are. Without a word on it: it is younger than the open runs."""
+        if said is None or not self._fresh_events:
+            if self.open.held and self._fresh_events:
+                self.bound = TIME_MIN - 1
+            for strand in strands:
+                if len(strand.times):
+                    self.hold(*strand)
+            return
+        count, bound, self._span = said
+        self.bound = TIME_MIN - 1 if bound is None else bound
+        for strand in strands[:count]:
+            self.near.put(strand)
+        for fresh, strand in zip((self.near.fresh, self.far), strands[count:], strict=True):
+            if len(strand.times):
+                fresh.add(*strand)
 
     def check(self) -> None:
-        """Assert the invariants of the buffer and of the runs."""
+        """Assert the invariants of both sides, and that the bound divides them."""
+        self.near.check()
         self.open.check()
-        self.fresh.check()
-        assert self.fresh.rows <= self._fresh_events
+        self.far.check()
+        if self._fresh_events:
+            assert not self.near.rows or self.near.greatest <= self.bound
+            assert not self.far.rows or self.far.least > self.bound
+            assert self.open.head_ns is None or self.open.head_ns > self.bound
+            assert self.far.rows <= self._fresh_events
+        else:
+            assert not self.near.rows and not self.far.rows

@@ -11,10 +11,11 @@ from collections import deque
 from typing import NamedTuple
 
 import numpy as np
+from numpy.typing import NDArray
 
 from .columns import Refs, Times
 from .gallop import gallop_right
-from .sorting import sorted_stably
+from .sorting import ROWS_A_FALL, sorted_runs, sorted_stably
 
 # A run costs some 8 us of interpreter time to deal and to cut, a stable sort 26 to 47 ns an event: below about a
 # thousand events sorting a stretch together is cheaper than keeping its natural runs apart. The published minimum of 32
@@ -52,8 +53,7 @@ def stretches(times: Times, minimum: int) -> list[Stretch]:
     rows = len(times)
     if rows == 0:
         return []
-    down = times[1:] < times[:-1]
-    falls = int(np.count_nonzero(down))
+    down, falls = falls_of(times)
     if falls == 0:
         return [Stretch(0, rows, "ascending")]
     if falls == rows - 1:
@@ -78,13 +78,31 @@ def stretches(times: Times, minimum: int) -> list[Stretch]:
     return found
 
 
+def falls_of(times: Times) -> tuple[NDArray[np.bool_], int]:
+    """Where a time is below the one before it, and how often."""
+    down = times[1:] < times[:-1]
+    return down, int(np.count_nonzero(down))
+
+
 def runs_of(times: Times, refs: Refs, minimum: int | None = None) -> list[Strand]:
-    """The arrival's rows as runs; concatenated and stably sorted they equal the arrival stably sorted."""
-    if len(times) == 1:
-        return [Strand(times, refs)]
-    least = minimum_run(len(times), MINIMUM_RUN_BITS) if minimum is None else minimum
+    """The arrival's rows as runs; concatenated and stably sorted they equal the arrival stably sorted.
+
+    Without a `minimum`, rows that fall about as often as they rise are one run at once: looking for long stretches in
+    them costs as much as their sort.
+    """
+    rows = len(times)
+    if rows < 2:
+        return [Strand(times, refs)] if rows else []
+    if minimum is None:
+        falls = falls_of(times)[1]
+        if falls == 0:
+            return [Strand(times, refs)]
+        if ROWS_A_FALL * (rows - falls) > rows:
+            times, places = sorted_runs(times, falls)
+            return [Strand(times, refs[places])]
+        minimum = minimum_run(rows, MINIMUM_RUN_BITS)
     result = []
-    for start, stop, order in stretches(times, least):
+    for start, stop, order in stretches(times, minimum):
         part, part_refs = times[start:stop], refs[start:stop]
         if order == "descending":
             part, part_refs = part[::-1].copy(), part_refs[::-1].copy()
@@ -105,7 +123,7 @@ class Run:
         self.length = 0
 
     def append(self, piece: Strand) -> None:
-        """Add rows whose times are at or above the tail. Small pieces are copied, so that no view keeps an arrival."""
+        """Add rows whose times are at or above the tail; a part of longer columns is copied, so that it keeps none."""
         self.length += len(piece.times)
         if self.chunks:
             last = self.chunks[-1]
@@ -113,10 +131,7 @@ class Run:
                 joined = (np.concatenate((last.times, piece.times)), np.concatenate((last.refs, piece.refs)))
                 self.chunks[-1] = Strand(*joined)
                 return
-        base = piece.times.base
-        if isinstance(base, np.ndarray) and 2 * len(piece.times) < len(base):
-            piece = Strand(piece.times.copy(), piece.refs.copy())
-        self.chunks.append(piece)
+        self.chunks.append(owned(piece))
 
     def cut(self, watermark: int) -> tuple[list[Strand], int]:
         """Take the rows at or before the watermark off the head: their chunks, and the comparisons it took."""
@@ -132,19 +147,44 @@ class Run:
             comparisons += probes
             if place:
                 taken.append(Strand(chunk.times[:place], chunk.refs[:place]))
-                self.chunks[0] = self._rest(chunk, place)
+                self.chunks[0] = rest_of(chunk, place)
             break
         self.length -= sum(len(chunk.times) for chunk in taken)
         return taken, comparisons
 
-    @staticmethod
-    def _rest(chunk: Strand, place: int) -> Strand:
-        """What stays of a chunk; copied once less than half of what it is a view of is left, so that heap is freed."""
-        rest = Strand(chunk.times[place:], chunk.refs[place:])
-        base = rest.times.base
-        if isinstance(base, np.ndarray) and 2 * len(rest.times) < len(base):
-            return Strand(rest.times.copy(), rest.refs.copy())
-        return rest
+    def count(self, bound: int) -> int:
+        """How many rows lie at or before a bound."""
+        rows = 0
+        for chunk in self.chunks:
+            if chunk.times.item(-1) > bound:
+                return rows + int(chunk.times.searchsorted(bound, side="right"))
+            rows += len(chunk.times)
+        return rows
+
+
+def rest_of(strand: Strand, place: int) -> Strand:
+    """The rows from a place on; copied once less than half of what they are a view of is left, to free heap."""
+    rest = Strand(strand.times[place:], strand.refs[place:])
+    base = rest.times.base
+    if isinstance(base, np.ndarray) and 2 * len(rest.times) < len(base):
+        return Strand(rest.times.copy(), rest.refs.copy())
+    return rest
+
+
+def owned(strand: Strand) -> Strand:
+    """The same rows; copied if they are a part of longer columns."""
+    base = strand.times.base
+    if isinstance(base, np.ndarray) and len(strand.times) < len(base):
+        return Strand(strand.times.copy(), strand.refs.copy())
+    return strand
+
+
+def run_of(strand: Strand) -> Run:
+    """Rows in any order as one run."""
+    times, order = sorted_stably(strand.times)
+    run = Run()
+    run.append(Strand(times, strand.refs[order]))
+    return run
 
 
 class OpenRuns:
@@ -238,6 +278,11 @@ class OpenRuns:
             self._close(closed)
         self._head_ns = int(self._heads[: len(self.runs)].min()) if self.runs else None
         return heads
+
+    def count(self, bound: int) -> int:
+        """How many rows a cut there would take."""
+        count = len(self.runs)
+        return sum(self.runs[index].count(bound) for index in np.flatnonzero(self._heads[:count] <= bound).tolist())
 
     def _close(self, closed: list[int]) -> None:
         """Forget the runs at these indices (ascending)."""

@@ -112,8 +112,8 @@ def _held_strands(state: State, columns: _Columns) -> dict[str, Any]:
         strands, said = [held.copied()], dict[str, Any](own=True)
         columns.put(state.own.at.copy())
     else:
-        strands = [*(joined(list(run.chunks)) for run in held.open.runs), held.fresh.copied()]
-        said = {"runs": len(held.open.runs), "opened": held.open.opened, "fresh_sorted": held.fresh.sorted}
+        runs, (sides, near) = [joined(list(run.chunks)) for run in held.open.runs], held.saved()
+        strands, said = [*runs, *sides], {"runs": len(runs), "opened": held.open.opened, "near": near}
     for strand in strands:
         columns.put(strand.times)
         columns.put(strand.refs)
@@ -198,8 +198,12 @@ def _restore_held(state: State, header: dict[str, Any], columns: _Columns) -> No
     for _ in range(header["runs"]):
         held.open.reopen(strand())
     held.open.opened = header["opened"]
-    if "fresh_sorted" in header:  # not in snapshots of before rows were fresh: all that is held stood in open runs
-        held.fresh.restore(strand(), header["fresh_sorted"])
+    if "near" in header:
+        held.restore([strand() for _ in range(header["near"][0] + 2)], header["near"])
+    elif "fresh_sorted" in header:  # a snapshot of before there was a near side: what is fresh is younger than the runs
+        held.restore([strand()], None)
+    else:  # of before rows were fresh: all that is held stood in open runs
+        held.restore([], None)
     state.reordered = is_reordered(state)
 
 

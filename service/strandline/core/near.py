@@ -1,0 +1,154 @@
+"""The rows that leave next: all that is held at or before a bound, as a few sorted strands and what came since.
+
+Where the bound lies, and what is held beyond it, is said in `held.py`. No watermark is decided here.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from .columns import TIME_MAX, Times
+from .fresh import Fresh
+from .merge import Merger
+from .runs import Strand, joined, owned, rest_of, runs_of
+
+# More strands than this are joined: each costs a mark some 3 us if it has rows for it. A strand is joined with at least
+# as many rows as it has, so that each row is moved a few times however small the arrivals are.
+STRANDS_AT_MOST = 6
+# Up to so many rows in all are sorted anew together with what is fresh, while they are at most so many times as many.
+# So are a few rows with far more that are fresh.
+RESORTED_EVENTS, RESORTED_TIMES, RESORTED_SHARE = 2048, 16, 2
+SAMPLES = 64  # of each strand, to say which time divides the rows as wished
+
+
+class Near:
+    """Sorted strands in order of age; the rows of `fresh` came after all of theirs."""
+
+    def __init__(self, merger: Merger) -> None:
+        self.strands: list[Strand] = []
+        self.fresh = Fresh()
+        self.comparisons = 0
+        self._merger = merger
+        self._sorted_rows, self._sorted_least = 0, TIME_MAX  # of the strands
+
+    @property
+    def rows(self) -> int:
+        """Events held here."""
+        return self._sorted_rows + self.fresh.rows
+
+    @property
+    def least(self) -> int:
+        """Least event time; TIME_MAX without rows."""
+        return min(self.fresh.least, self._sorted_least)
+
+    @property
+    def greatest(self) -> int:
+        """Greatest event time; of no meaning without rows."""
+        greatest = [int(strand.times.item(-1)) for strand in self.strands]
+        return max([*greatest, self.fresh.greatest] if self.fresh.rows else greatest, default=TIME_MAX)
+
+    def put(self, strand: Strand) -> None:
+        """Hold a sorted strand; it is younger than all that is here, or has no time in common with it."""
+        if len(strand.times):
+            self.strands.append(strand)
+            self._sorted_rows += len(strand.times)
+            self._sorted_least = min(self._sorted_least, int(strand.times.item(0)))
+
+    def _forget(self) -> None:
+        self.strands, self._sorted_rows, self._sorted_least = [], 0, TIME_MAX
+
+    def settle(self) -> None:
+        """What is fresh becomes sorted strands, the youngest ones."""
+        fresh = self.fresh.rows
+        if not fresh:
+            return
+        if self.strands and self._is_sorted_anew(fresh):
+            rows = self.fresh.take(self.strands)
+            self._forget()
+        else:
+            rows = self.fresh.take()
+        for run in runs_of(*rows):
+            self.put(run)
+        while len(self.strands) > STRANDS_AT_MOST:
+            self._join_youngest()
+
+    def _is_sorted_anew(self, fresh: int) -> bool:
+        """Whether one sort of all rows costs less than one of so many fresh ones and a merge of what leaves then."""
+        return self.rows <= min(RESORTED_EVENTS, RESORTED_TIMES * fresh) or RESORTED_SHARE * self._sorted_rows <= fresh
+
+    def _join_youngest(self) -> None:
+        """Join the two youngest strands, and each older one that is no longer than what is joined with it."""
+        first = len(self.strands) - 2
+        rows = sum(len(strand.times) for strand in self.strands[first:])
+        while first and len(self.strands[first - 1].times) <= rows:
+            first -= 1
+            rows += len(self.strands[first].times)
+        self.strands[first:] = [self._merger.merge(self.strands[first:])]
+
+    def cut(self, watermark: int) -> list[Strand]:
+        """Take the rows at or before the watermark: sorted strands in order of age."""
+        if self.fresh.least <= watermark:
+            self.settle()
+        heads: list[Strand] = []
+        if self._sorted_least > watermark:
+            return heads
+        stay: list[Strand] = []
+        for strand in self.strands:
+            times, refs = strand
+            if times.item(0) > watermark:
+                stay.append(strand)
+                continue
+            place = int(times.searchsorted(watermark, side="right"))
+            rows = len(times)
+            self.comparisons += rows.bit_length()
+            self._sorted_rows -= place
+            if place == rows:
+                heads.append(strand)
+            else:
+                heads.append(Strand(times[:place], refs[:place]))
+                stay.append(rest_of(strand, place))
+        self.strands = stay
+        self._sorted_least = min([int(strand.times.item(0)) for strand in stay], default=TIME_MAX)
+        return heads
+
+    def cut_beyond(self, rows: int) -> tuple[int, Strand]:
+        """Keep about so many rows, the first in time: a bound that the others lie beyond, and these in ascending time.
+
+        Where equal times forbid that, all of them lie beyond.
+        """
+        self.settle()
+        bound, strands = self._divider(rows), self.strands
+        if bound >= self.greatest:
+            bound, within = self.least - 1, []
+        else:
+            within = self.cut(bound)
+            strands = self.strands
+        self._forget()
+        for strand in within:
+            self.put(owned(strand))
+        return bound, self._merger.merge(strands)
+
+    def _divider(self, rows: int) -> int:
+        """A time that has about so many of the rows at or before it. Nothing may be fresh."""
+        times: list[Times] = []
+        weights: list[int] = []
+        for strand in self.strands:
+            step = -(-len(strand.times) // SAMPLES)
+            times.append(strand.times[::step])
+            weights += [step] * len(times[-1])
+        every = np.concatenate(times)
+        order = np.argsort(every, kind="stable")
+        place = int(np.cumsum(np.array(weights)[order]).searchsorted(rows))
+        return int(every[order[min(place, len(order) - 1)]])
+
+    def copied(self) -> Strand:
+        """All rows; of equal times the one that came first is first. What becomes of them later does not change it."""
+        return joined([*self.strands, self.fresh.copied()])
+
+    def check(self) -> None:
+        """Assert that strands ascend and counts are right."""
+        self.fresh.check()
+        assert self._sorted_least == min((int(strand.times[0]) for strand in self.strands), default=TIME_MAX)
+        assert self._sorted_rows == sum(len(strand.times) for strand in self.strands)
+        for times, refs in self.strands:
+            assert len(times) == len(refs) > 0 and np.all(times[1:] >= times[:-1])
