@@ -51,6 +51,34 @@ def with_unwilling_numba() -> None:
     refused()
 
 
+def guarded() -> tuple[mmap.mmap, int]:
+    """Three pages, of which the last cannot be read, and the address where that begins."""
+    pages = mmap.mmap(-1, 3 * mmap.PAGESIZE)
+    guard = ctypes.addressof(ctypes.c_char.from_buffer(pages)) + 2 * mmap.PAGESIZE
+    if ctypes.CDLL(None, use_errno=True).mprotect(ctypes.c_void_p(guard), mmap.PAGESIZE, 0):
+        raise OSError(ctypes.get_errno(), "mprotect")
+    return pages, guard
+
+
+def copies_from_the_end_of_memory() -> None:
+    """Copy lines that end where a page ends that cannot be read behind."""
+    import numpy as np  # noqa: PLC0415
+    from strandline.journal.compiled_copies import copied  # noqa: PLC0415
+    from strandline.journal.gather import Source  # noqa: PLC0415
+
+    pages, _ = guarded()
+    end, rng = 2 * mmap.PAGESIZE, np.random.default_rng(7)
+    pages[:end] = rng.integers(10, 13, end, np.uint8).tobytes()
+    source = Source(memoryview(pages)[:end], 0, end)
+    for _ in range(3000):
+        lengths = rng.integers(0, 200, rng.integers(1, 9))
+        offsets = end - lengths - rng.integers(0, 3, len(lengths)) * rng.integers(0, 90, len(lengths))
+        found = copied([source], None, offsets, lengths)
+        rows = zip(offsets.tolist(), lengths.tolist(), strict=True)
+        assert found == b"".join(pages[offset : offset + length] + b"\n" for offset, length in rows)
+    print("all")
+
+
 def at_the_end_of_memory() -> None:
     """Scan damaged bodies that end where a page ends that cannot be read behind; a byte too far ends the process."""
     import numpy as np  # noqa: PLC0415
@@ -59,12 +87,9 @@ def at_the_end_of_memory() -> None:
     from strandline.ingest.limits import BodyLimits  # noqa: PLC0415
     from strandline.ingest.lines import split_lines  # noqa: PLC0415
 
-    pages = mmap.mmap(-1, 3 * mmap.PAGESIZE)
-    begin = ctypes.addressof(ctypes.c_char.from_buffer(pages))
-    guard = begin + 2 * mmap.PAGESIZE
-    if ctypes.CDLL(None, use_errno=True).mprotect(ctypes.c_void_p(guard), mmap.PAGESIZE, 0):
-        raise OSError(ctypes.get_errno(), "mprotect")
-    scanner, scan, draw = Scanner("/ts", "ns", "/station", 9), compiled_lines().scan, Random(7)
+    pages, guard = guarded()
+    scanner, module, draw = Scanner("/ts", "ns", "/station", 9), compiled_lines(), Random(7)
+    scan, survey, work = module.scan, module.survey, np.empty(module.WORK_ITEMS, np.int64)
     taken = scanned = 0
     for _ in range(BODIES):
         seed = b"".join(draw.choice(LINES) + b"\n" for _ in range(draw.choice((1, 1, 2, 3))))
@@ -73,13 +98,14 @@ def at_the_end_of_memory() -> None:
             continue
         count, size = len(lines.ends), len(lines.payload)
         pages[2 * mmap.PAGESIZE - size : 2 * mmap.PAGESIZE] = lines.payload
-        columns = np.empty(count, np.int64), np.empty(count, np.int32), np.empty((count, 2), np.int64)
-        table = np.full(64, -1, np.int32)
-        found = scan(guard - size, lines.starts, lines.ends, scanner.keys, False, 8, *columns, table)
+        assert survey(guard - size, guard) == (lines.payload.count(b"\n"), lines.payload.isascii())
+        columns = np.empty(count, np.int64), np.empty(count, np.uint32), np.empty(count, np.uint32)
+        names = np.empty((count, 2), np.int64), np.zeros(64, np.uint32)
+        found = scan(guard - size, guard, count, scanner.keys, False, 8, *columns, *names, work)
         scanned, taken = scanned + 1, taken + (found >= 0)
     print(scanned, taken)
 
 
 if __name__ == "__main__":
     modes = {"guard": at_the_end_of_memory, "mdwe": without_executable_memory, "bare": without_numba}
-    (modes | {"unwilling": with_unwilling_numba})[sys.argv[1]]()
+    (modes | {"unwilling": with_unwilling_numba, "copies": copies_from_the_end_of_memory})[sys.argv[1]]()

@@ -19,6 +19,7 @@ FEEDS = [
     Decoder("river", "/ts", "ns", "/station", None, LIMITS),
     Decoder("river", "/ts", "ns", "/station", "/id", LIMITS),
     Decoder("gauge-2", "/ts", "ns", None, None, LIMITS),
+    Decoder("river", "/ts", "ns", "/station", None, LIMITS, is_compiled=True),
 ]
 
 

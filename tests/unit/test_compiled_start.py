@@ -10,7 +10,7 @@ from pathlib import Path
 import pytest
 from strandline.app import fixed_changes
 from strandline.config import parse
-from strandline.decoding import decoder_of
+from strandline.decoding import copier_of, decoder_of
 from strandline.errors import ConfigError
 from strandline.ingest.formats import NDJSON
 
@@ -30,6 +30,12 @@ def test_no_byte_is_read_behind_a_payload() -> None:
     scanned, taken = map(int, run.stdout.split())
     assert scanned > 10_000
     assert 1_000 < taken < scanned - 1_000
+
+
+def test_no_byte_is_copied_from_behind_a_mapping() -> None:
+    run = child("copies")
+    assert run.returncode == 0, run.stderr
+    assert run.stdout == "all\n"
 
 
 def test_where_no_code_can_be_made_it_says_so() -> None:
@@ -63,8 +69,10 @@ def test_a_feed_that_asks_for_it_gets_it() -> None:
     arrival = decoder_of(feed).decode(b'{"ts":1,"station":"weir"}\n', NDJSON, {})
     assert (arrival.times.tolist(), arrival.new_sources) == ([1], ["weir"])
     assert decoder_of(feed).is_compiled
+    assert copier_of(feed) is not None
     (feed,) = parse('[[feed]]\nname = "river"\n', {}).feeds
     assert not decoder_of(feed).is_compiled
+    assert copier_of(feed) is None
 
 
 @pytest.mark.parametrize("more", ['id = "/id"', 'time = { at = "/data/time" }', 'source = "/time"', 'source = "/0"'])

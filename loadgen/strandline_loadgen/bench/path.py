@@ -24,7 +24,7 @@ from strandline.core.feed import Feed
 from strandline.core.records import FRAME_HEADER_BYTES
 from strandline.core.settings import Settings
 from strandline.ingest.decode import Decoder
-from strandline.journal.gather import Source, block
+from strandline.journal.gather import Copier, Source, block
 
 from strandline_loadgen.bodies import Style, bodies, cut_by_count
 from strandline_loadgen.checker import Sent, judge
@@ -54,6 +54,7 @@ class MemoryJournal:
         self._map = mmap.mmap(-1, size)
         self._view = memoryview(self._map)
         self.end = 0
+        self.copier: Copier | None = None  # what its lines are copied out with
 
     def append(self, lsn: int, parts: Sequence[Buffer]) -> None:
         """Lay down a frame. Raises ValueError when the mapping is full."""
@@ -67,7 +68,7 @@ class MemoryJournal:
     def ndjson(self, batch: Batch) -> bytes:
         """A batch's lines, each followed by a line feed."""
         places, lengths = batch.refs["place"].astype(np.int64), batch.refs["length"].astype(np.int64)
-        return block([Source(self._view, 0, self.end)], None, places, lengths)
+        return block([Source(self._view, 0, self.end)], None, places, lengths, self.copier)
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,11 +105,19 @@ class Lap:
     refusals: list[str] = field(default_factory=list)
 
 
+def compiled_copier() -> Copier:
+    """What the service copies lines with where a feed is decoded by compiled code. Raises ImportError without numba."""
+    from strandline.journal.compiled_copies import copied  # noqa: PLC0415 - an extra
+
+    return copied
+
+
 class Path:
     """Decoder, core and memory journal, joined as the service joins them."""
 
     def __init__(self, course: Course, journal: MemoryJournal, lap: Lap) -> None:
         self._journal, self._lap = journal, lap
+        journal.copier = compiled_copier() if lap.is_compiled else None
         self._feed = Feed(course.settings)
         self._decoder = Decoder("bench", "/observed_at", "ns", "/station", is_compiled=lap.is_compiled)
         self._carry_out(self._feed.start(course.arrivals_ns[0], {}))

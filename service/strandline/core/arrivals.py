@@ -41,9 +41,11 @@ class Arrivals:
         """Take released events off the books: arrival clocks, and how many events came at each.
 
         Places are sorted, and each arrival's begin is looked for among them: 4 to 5 ns an event, where looking for each
-        line's arrival takes 25 to 42.
+        line's arrival takes 25 to 42. In an ordered feed they are sorted already: to see that takes 0.4.
         """
-        places = np.sort(refs["place"])
+        places = refs["place"].copy()
+        if (places[1:] < places[:-1]).any():
+            places.sort()
         known = self._places[self._start : self._stop]
         low = int(known.searchsorted(places[0], side="right")) - 1
         high = int(known.searchsorted(places[-1], side="right"))

@@ -7,7 +7,7 @@ from bisect import bisect_left
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import Times
+from .columns import Times, least_of
 from .tallies import Gathering, behind, exact_sum, stretches
 
 SECONDS_NS = tuple(
@@ -52,7 +52,10 @@ class Histogram:
         self._total = total
 
     def add_behind(self, newest: int, times: Times) -> None:
-        """Count how far each time stands behind `newest`. Not together with `add_stretches`."""
+        """Count how far each time (at least one) stands behind `newest`. Not together with `add_stretches`."""
+        if least_of(times) >= newest:
+            self.add_same(0, len(times))
+            return
         if self._waiting is None:
             self._waiting = behind(self._add_exactly)
         self._waiting.add(newest, times)
@@ -72,7 +75,12 @@ class Histogram:
             self._counts += np.bincount(self._edges.searchsorted(values), minlength=len(self._counts))
         else:
             below = np.empty_like(self._counts)  # how many lie at or below each bound, and at last all
-            below[:-1], below[-1] = np.sort(values).searchsorted(self._edges, side="right"), len(values)
+            greatest = int(values.max())
+            if greatest <= 2 * len(values):  # such as lengths of stretches: 2 ns a value
+                below[:-1] = np.bincount(values).cumsum()[np.minimum(self._edges, greatest)]
+            else:
+                below[:-1] = np.sort(values).searchsorted(self._edges, side="right")
+            below[-1] = len(values)
             self._counts += below
             self._counts[1:] -= below[:-1]
         self._total += exact_sum(values)

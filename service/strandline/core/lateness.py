@@ -14,7 +14,7 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from .columns import TIME_MIN, Times
+from .columns import TIME_MIN, Times, least_of
 from .sketch import Sketch
 from .tallies import behind
 
@@ -26,7 +26,12 @@ class Behind(NamedTuple):
     """Lateness that is not reckoned yet: how far times stand behind a basis."""
 
     basis_ns: int
-    times: Times
+    times: Times  # at least one
+
+    @property
+    def is_none(self) -> bool:
+        """Whether none stands behind it at all."""
+        return least_of(self.times) >= self.basis_ns
 
 
 class Lateness:
@@ -54,7 +59,7 @@ class Lateness:
         What was not reckoned yet is counted when somebody looks.
         """
         self._fade(now_ns)
-        if lateness_ns is None:
+        if lateness_ns is None or (isinstance(lateness_ns, Behind) and lateness_ns.is_none):
             self._sketch.add_same(0, events)
         elif isinstance(lateness_ns, Behind):
             self._waiting.add(*lateness_ns)

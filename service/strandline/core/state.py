@@ -343,10 +343,10 @@ def _refs(body: ArrivalBody) -> Refs:
     if len(body.times) == 1:
         return np.array([(body.payload_place, body.lengths[0], body.sources[0])], dtype=REF)
     refs = np.empty(len(body.times), dtype=REF)
-    steps = body.lengths.astype(np.int64)
-    steps += 1  # the line feed
-    ends = steps.cumsum()
-    refs["place"] = ends - steps + body.payload_place
+    places = np.empty(len(refs) + 1, dtype=np.int64)
+    places[0] = body.payload_place
+    np.add(body.lengths, 1, out=places[1:], dtype=np.int64)  # the line feed
+    refs["place"] = places.cumsum(out=places)[:-1]
     refs["length"] = body.lengths
     refs["source"] = body.sources
     return refs

@@ -1,7 +1,8 @@
 """Columns of JSON lines by code that is compiled for this machine: the door to `compiled_lines`, which needs numba.
 
 Here live which feeds it can serve, and what surrounds the scan: room for the columns, times out of texts, numbers of
-sources. It answers either what the other way (`decode`) would answer, or None; faults are found by the other way only.
+sources. Lines need not be split before: the scan finds where they end. It answers either what the other way (`decode`)
+would answer, or None; faults are found by the other way only.
 """
 
 from __future__ import annotations
@@ -9,6 +10,7 @@ from __future__ import annotations
 import importlib
 from collections.abc import Mapping
 from functools import cache
+from itertools import count
 from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
@@ -16,8 +18,7 @@ from numpy.typing import NDArray
 
 from ..core.columns import Times
 from ..errors import StrandlineError
-from .limits import BodyLimits
-from .lines import Lines, split_lines
+from .lines import Lines, is_utf8
 from .pointer import fits_structs, parse_pointer
 from .timestamps import from_unit_column, parse_rfc3339_fixed
 from .values import Unit
@@ -25,7 +26,7 @@ from .values import Unit
 if TYPE_CHECKING:
     from types import ModuleType
 
-_NAMES_AT_MOST = 65_536  # in one body; their table then has 512 KiB
+_NAMES_AT_MOST = 65_536  # in one body; their table then has 1 MiB
 _WARM = b'{"t":0,"s":"a"}\n'
 
 
@@ -34,6 +35,7 @@ class Scanned(NamedTuple):
 
     times: Times
     sources: NDArray[np.uint32]
+    lengths: NDArray[np.uint32]
     new_sources: list[str]
 
 
@@ -52,8 +54,7 @@ def compiled_lines() -> ModuleType:
     advice = 'or write decoding = "plain"'
     try:
         module = importlib.import_module(".compiled_lines", __package__)
-        lines = split_lines(_WARM, BodyLimits())
-        Scanner("/t", "s", "/s", 1, module).columns(lines, {})
+        Scanner("/t", "s", "/s", 1, module).columns_of(_WARM, {}, 1)
     except ModuleNotFoundError as error:
         extra = f"pip install 'strandline[compiled]', {advice}"
         raise StrandlineError(f'decoding = "compiled" needs the package {error.name}: {extra}') from error
@@ -82,23 +83,39 @@ class Scanner:
 
     def columns(self, lines: Lines, source_numbers: Mapping[str, int]) -> Scanned | None:
         """The columns of lines that are regular and UTF-8; None where they are not proven to be events."""
-        assert lines.is_regular, "the scan begins behind the first byte of a line"
-        count, payload, module = len(lines.ends), lines.payload, self._module
+        assert lines.is_regular, "an empty line would not be proven"
+        payload = lines.payload
+        return self._scanned(payload, _address(np.frombuffer(payload, np.uint8)), len(lines.ends), source_numbers)
+
+    def columns_of(self, payload: bytes, source_numbers: Mapping[str, int], rows_at_most: int) -> Scanned | None:
+        """The same of a payload that ends with a line feed and was not looked at yet.
+
+        None also where there are too many lines, or what has to be taken out first (empty ones, carriage returns).
+        """
         begin = _address(np.frombuffer(payload, np.uint8))
-        times, sources = np.empty(count, np.int64), np.zeros(count, np.int32)
-        room = 1 << min(count, _NAMES_AT_MOST).bit_length()  # more than names
-        names, table = np.empty((min(count, _NAMES_AT_MOST), 2), np.int64), np.full(2 * room, -1, np.int32)
-        found = module.scan(
-            begin, lines.starts, lines.ends, self.keys, self._unit == "rfc3339", self._levels,
-            times, sources, names, table,
+        rows, is_ascii = self._module.survey(begin, begin + len(payload))
+        if rows > rows_at_most or not (is_ascii or is_utf8(payload)):
+            return None
+        return self._scanned(payload, begin, rows, source_numbers)
+
+    def _scanned(self, payload: bytes, begin: int, rows: int, source_numbers: Mapping[str, int]) -> Scanned | None:
+        times, lengths, sources = np.empty(rows, np.int64), np.empty(rows, np.uint32), np.zeros(rows, np.uint32)
+        room = min(rows, _NAMES_AT_MOST)
+        names, table = np.empty((room, 2), np.int64), np.zeros(2 << room.bit_length(), np.uint32)
+        found = self._module.scan(
+            begin, begin + len(payload), rows, self.keys, self._unit == "rfc3339", self._levels,
+            times, lengths, sources, names, table, np.empty(self._module.WORK_ITEMS, np.int64),
         )  # fmt: skip
         if found < 0:
             return None
         ready = self._times(payload, times, begin)
         if ready is None:
             return None
-        numbers, new = _numbers(payload, (names[:found] - (begin, 0)).tolist(), source_numbers)
-        return Scanned(ready, np.array(numbers, np.uint32).take(sources) if numbers else sources.view(np.uint32), new)
+        texts = [payload[at - begin : at - begin + length].decode() for at, length in names[:found].tolist()]
+        numbers, new = _numbers(texts, source_numbers)
+        if numbers:
+            sources = np.array(numbers, np.uint32).take(sources)
+        return Scanned(ready, sources, lengths, new)
 
     def _times(self, payload: bytes, times: Times, begin: int) -> Times | None:
         if self._unit != "rfc3339":
@@ -121,15 +138,9 @@ def _address(array: NDArray[np.uint8]) -> int:
     return int(array.__array_interface__["data"][0])
 
 
-def _numbers(payload: bytes, names: list[list[int]], source_numbers: Mapping[str, int]) -> tuple[list[int], list[str]]:
-    """The numbers of names (place and length each), and those that the table lacks in order of first appearance."""
-    numbers: list[int] = []
-    new: list[str] = []
-    for place, length in names:
-        text = payload[place : place + length].decode()
-        number = source_numbers.get(text)
-        if number is None:
-            number = len(source_numbers) + len(new)
-            new.append(text)
-        numbers.append(number)
-    return numbers, new
+def _numbers(names: list[str], source_numbers: Mapping[str, int]) -> tuple[list[int], list[str]]:
+    """The numbers of names, each there once, and those that the table lacks in order of first appearance."""
+    known = list(map(source_numbers.get, names))
+    new = [name for name, number in zip(names, known, strict=True) if number is None] if None in known else []
+    following = count(len(source_numbers))
+    return [next(following) if number is None else number for number in known], new

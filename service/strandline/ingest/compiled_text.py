@@ -2,15 +2,16 @@
 
 Here live the grammar, what it reads with, and how a function is compiled. Which members an event must have is not
 known here. Places are addresses: an array handed to a function is seven numbers and a count of its users, which cost
-20 ns a member (measured). Functions named `..._end` return the place behind what they took, or -1 where it is not what
-they take; `stop` is the place behind the payload's last byte.
+20 ns a member, and half of all time where a function is set into its caller (measured). Functions named `..._end`
+return the place behind what they took, or -1 where it is not what they take; `stop` is the place behind the payload's
+last byte.
 
 Nothing here checks bounds, so this holds it together: a payload ends with a line feed, and no rule takes a line feed.
 So a byte may be read wherever the byte before it was taken; several only after asking for room. A test scans payloads
 that end where memory ends.
 
 numba keeps compiled code by the contents of the file that holds the outermost function, and would not notice a change
-here: so `compiled_lines` holds the checksum of this file (a test compares them).
+here or in `compiled_marks`: so `compiled_lines` holds the checksum of both files (a test compares them).
 """
 
 from __future__ import annotations
@@ -25,9 +26,9 @@ from numba.extending import intrinsic
 
 _F = TypeVar("_F", bound=Callable[..., Any])
 
-QUOTE, COMMA, MINUS, ZERO, BRACE_END = 0x22, 0x2C, 0x2D, 0x30, 0x7D
+QUOTE, COMMA, MINUS, ZERO, BRACE, BRACE_END, LINE_FEED = 0x22, 0x2C, 0x2D, 0x30, 0x7B, 0x7D, 0x0A
 _BACKSLASH, _COLON, _PLUS, _DOT, _SLASH = 0x5C, 0x3A, 0x2B, 0x2E, 0x2F
-_BRACE, _BRACKET_END, _SPACE, _TAB = 0x7B, 0x5D, 0x20, 0x09
+_BRACKET_END, _SPACE, _TAB = 0x5D, 0x20, 0x09
 LEVELS_AT_MOST = 63  # as many as `_nested_end` has bits for; what is deeper goes the other way
 _U = np.uint64
 _ONES, _HIGHS = _U(0x0101010101010101), _U(0x8080808080808080)
@@ -59,14 +60,26 @@ def outermost(function: _F) -> _F:
 # --- what the processor can do and numba has no name for -----------------------------------------------------------
 
 
-def _loaded(bits: int) -> Callable[..., Any]:
+def _loaded(bits: int, kind: Any = None) -> Callable[..., Any]:
     def typed(_: Any, address: Any) -> Any:
         def generate(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:
             pointer = builder.inttoptr(arguments[0], ir.PointerType(ir.IntType(bits)))
             value = builder.load(pointer, align=1)
             return value if bits == 64 else builder.zext(value, ir.IntType(64))
 
-        return (types.uint64 if bits == 64 else types.int64)(types.int64), generate
+        return (kind or (types.uint64 if bits == 64 else types.int64))(types.int64), generate
+
+    return typed
+
+
+def _stored(bits: int) -> Callable[..., Any]:
+    def typed(_: Any, address: Any, value: Any) -> Any:
+        def generate(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:
+            value = arguments[1] if bits == 64 else builder.trunc(arguments[1], ir.IntType(bits))
+            builder.store(value, builder.inttoptr(arguments[0], ir.PointerType(ir.IntType(bits))), align=bits // 8)
+            return context.get_dummy_value()
+
+        return types.void(types.int64, types.int64), generate
 
     return typed
 
@@ -79,9 +92,14 @@ def _first_mark(_: Any, marks: Any) -> Any:
     return types.int64(types.uint64), generate
 
 
-# A byte, and a little-endian word of eight, at an address; the first byte of a word whose high bit is set.
+# A byte, a little-endian word of eight, half of one and a signed one, at an address; what stores the last two there;
+# the first byte of a word whose high bit is set.
 byte_at = cast(Callable[[int], int], intrinsic(_loaded(8)))
 word_at = cast(Callable[[int], _U], intrinsic(_loaded(64)))
+half_at = cast(Callable[[int], int], intrinsic(_loaded(32)))
+item_at = cast(Callable[[int], int], intrinsic(_loaded(64, types.int64)))
+put_item = cast(Callable[[int, Any], None], intrinsic(_stored(64)))
+put_half = cast(Callable[[int, int], None], intrinsic(_stored(32)))
 first_mark = cast(Callable[[_U], int], intrinsic(_first_mark))
 
 
@@ -276,7 +294,7 @@ def key_end(stop: int, at: int) -> int:
 @inlined
 def _opens(byte: int) -> bool:
     """Whether it is an opening bracket: they differ in one bit only."""
-    return byte | 0x20 == _BRACE
+    return byte | 0x20 == BRACE
 
 
 @compiled
@@ -295,7 +313,7 @@ def _nested_end(stop: int, at: int, levels: int) -> int:
             depth += 1
             if depth > levels:
                 return -1
-            kinds = kinds << _U(1) | _U(first == _BRACE)
+            kinds = kinds << _U(1) | _U(first == BRACE)
             at = blanks_end(at + 1)
             if byte_at(at) != first + 2:  # not its closing bracket
                 at = _item(stop, at, kinds)

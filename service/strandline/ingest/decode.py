@@ -22,12 +22,12 @@ from ..core.columns import Arrival, Fault, Times
 from ..errors import TooManyFaults
 from . import cloudevents
 from .arrow import ARROW, arrow_rows
-from .compiled import Scanner, serves
-from .formats import check_size, split_body
+from .compiled import Scanned, Scanner, serves
+from .formats import FORMATS, check_size, split_body
 from .json_items import json_fault
 from .limits import BodyLimits
-from .lines import Lines, is_utf8, utf8_fault
-from .nesting import deep_suspects, deepest
+from .lines import Lines, is_utf8, split_lines, utf8_fault
+from .nesting import deep_suspects, deepest, too_short_to_be_deep
 from .pointer import Fields, Values, decoded_lines, parse_pointer
 from .timestamps import unit_bounds
 from .values import (
@@ -98,8 +98,12 @@ class Decoder:
         """
         if media_type == ARROW:
             return self._by_rows(self._rows(body), source_numbers)
+        arrival = self.scanned(body, media_type, source_numbers)
+        if arrival is not None:
+            return arrival
         lines = self.split(body, media_type)
-        return self.at_once(lines, source_numbers) or self.line_by_line(lines, source_numbers)
+        arrival = self.at_once(lines, source_numbers, was_scanned=lines.payload is body)
+        return arrival or self.line_by_line(lines, source_numbers)
 
     def decode_line_by_line(self, body: bytes, media_type: str, source_numbers: Mapping[str, int]) -> Arrival:
         """What `decode` answers, always by the slow way: the reference that tests hold the fast way against."""
@@ -114,20 +118,43 @@ class Decoder:
             return lines
         return split_body(body, media_type, self._limits)
 
+    # --- the compiled way ---
+
+    def scanned(self, body: bytes, media_type: str, source_numbers: Mapping[str, int]) -> Arrival | None:
+        """The body by compiled code, before it is split; None where there is none, or it does not prove the body."""
+        scanner, limits, form = self._scanner, self._limits, FORMATS.get(media_type)
+        if scanner is None or form is None or form.split is not split_lines:
+            return None
+        if not 0 < len(body) <= limits.decoded_bytes_at_most:
+            return None
+        payload = body if body.endswith(b"\n") else body + b"\n"
+        found = scanner.columns_of(payload, source_numbers, limits.events_at_most)
+        if found is None or found.lengths.max() > limits.event_bytes_at_most:
+            return None
+        columns = self._scanned_columns(found, source_numbers)
+        return Arrival(columns.times, columns.sources, found.lengths, payload, columns.new_sources)
+
+    def _scanned_columns(self, found: Scanned, source_numbers: Mapping[str, int]) -> _Columns:
+        if self._at.source is None:
+            return _Columns(found.times, *self._one_source(len(found.times), source_numbers), None, ())
+        return _Columns(found.times, found.sources, found.new_sources, None, ())
+
     # --- the fast way ---
 
-    def at_once(self, lines: Lines, source_numbers: Mapping[str, int]) -> Arrival | None:
-        """The whole payload in one go, or None when any line needs a closer look."""
+    def at_once(self, lines: Lines, source_numbers: Mapping[str, int], *, was_scanned: bool = False) -> Arrival | None:
+        """The whole payload in one go, or None when any line needs a closer look (`was_scanned`: not by `scanned`)."""
         decoder, count = self._fields.decoder, len(lines.ends)
         if decoder is None or not count or not lines.is_regular or not is_utf8(lines.payload):
             return None
-        lengths = lines.ends - lines.starts
-        if lengths.max() > self._limits.event_bytes_at_most:
+        longest = int((lines.ends - lines.starts).max())
+        if longest > self._limits.event_bytes_at_most:
             return None
-        columns = None if self._scanner is None else self._scanned(self._scanner, lines, source_numbers)
-        if columns is None:
+        found = None if self._scanner is None or was_scanned else self._scanner.columns(lines, source_numbers)
+        if found is not None:
+            columns = self._scanned_columns(found, source_numbers)
+        else:
             records = decoded_lines(decoder, lines.payload, count)
-            if records is None or self._is_deep(lines):
+            if records is None or self._is_deep(lines, longest):
                 return None
             columns = self._columns(records, source_numbers)
         if columns.bad or (lines.are_cloudevents and not cloudevents.all_sound(lines.payload, count)):
@@ -135,18 +162,10 @@ class Decoder:
         self._check_faults(lines.faults)
         return _arrival(lines, columns, lines.faults)
 
-    def _scanned(self, scanner: Scanner, lines: Lines, source_numbers: Mapping[str, int]) -> _Columns | None:
-        """The columns by compiled code; None where it does not prove the lines to be events."""
-        found = scanner.columns(lines, source_numbers)
-        if found is None:
-            return None
-        if self._at.source is None:
-            return _Columns(found.times, *self._one_source(len(found.times), source_numbers), None, ())
-        return _Columns(found.times, found.sources, found.new_sources, None, ())
-
-    def _is_deep(self, lines: Lines) -> bool:
+    def _is_deep(self, lines: Lines, longest: int) -> bool:
         limit = self._limits.nesting_at_most
-        suspects = deep_suspects(lines.payload, lines.starts, limit)
+        is_short = too_short_to_be_deep(lines.payload, longest, limit)
+        suspects = () if is_short else deep_suspects(lines.payload, lines.starts, limit)
         if not len(suspects):
             return False
         keep = np.zeros(len(lines.ends), np.bool_)

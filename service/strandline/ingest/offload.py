@@ -62,8 +62,11 @@ async def decoded(decoder: Decoder, body: bytes, media_type: str, table: Mapping
     """What `decoder.decode` answers, without holding the loop up. `table` may grow meanwhile: it is read last."""
     if media_type in FORMATS and len(body) > FORMATS[media_type].loop_bytes:
         return numbered(await aside.run(partial(decoder.decode, body, media_type, {})), table)
+    arrival = decoder.scanned(body, media_type, table)
+    if arrival is not None:
+        return arrival
     lines = decoder.split(body, media_type)
-    arrival = decoder.at_once(lines, table)
+    arrival = decoder.at_once(lines, table, was_scanned=lines.payload is body)
     if arrival is not None:
         return arrival
     if len(lines.payload) <= JUDGED_BYTES and len(lines.ends) <= JUDGED_LINES:

@@ -27,15 +27,13 @@ def decoded_together(
         return None
     bodies = [body if body.endswith(b"\n") else body + b"\n" for body in bodies]
     payload = b"".join(bodies)
-    if b"\r" in payload or len(payload) > min(form.loop_bytes, limits.decoded_bytes_at_most):
+    if len(payload) > min(form.loop_bytes, limits.decoded_bytes_at_most):
         return None
-    lines = split_lines(payload, limits)
-    if not lines.is_regular or lines.numbers is not None or len(lines.ends) > limits.events_at_most:
-        return None
-    whole = decoder.at_once(lines, table)
+    whole = decoder.scanned(payload, media_type, table) or _at_once(decoder, payload, table, limits)
     if whole is None or whole.new_sources:
         return None
-    stops = (np.searchsorted(lines.ends, np.cumsum([len(body) for body in bodies]) - 1) + 1).tolist()
+    behind = np.cumsum(whole.lengths.astype(np.int64) + 1)
+    stops = (np.searchsorted(behind, np.cumsum([len(body) for body in bodies])) + 1).tolist()
     return [
         Arrival(
             times=whole.times[start:stop],
@@ -46,3 +44,12 @@ def decoded_together(
         )
         for start, stop, body in zip([0, *stops[:-1]], stops, bodies, strict=True)
     ]
+
+
+def _at_once(decoder: Decoder, payload: bytes, table: Mapping[str, int], limits: BodyLimits) -> Arrival | None:
+    if b"\r" in payload:
+        return None
+    lines = split_lines(payload, limits)
+    if not lines.is_regular or lines.numbers is not None or len(lines.ends) > limits.events_at_most:
+        return None
+    return decoder.at_once(lines, table, was_scanned=True)
