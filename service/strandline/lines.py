@@ -8,6 +8,7 @@ import numpy as np
 
 from .core.columns import Batch
 from .core.feed import Feed
+from .errors import JournalError
 from .journal.gather import Copier
 from .journal.journal import Journal
 
@@ -41,14 +42,18 @@ class JournalLines:
         return self._journal.gather(batch.refs["place"], batch.refs["length"], self._copier)
 
     def ndjson_each(self, batches: Sequence[Batch]) -> Iterator[bytes | memoryview]:
-        """`ndjson` of each batch of one lane, in turn; small ones are read together."""
+        """`ndjson` of each batch of one lane, in turn; small ones are read together. Raises as `ndjson` does."""
         for some in _portions(batches):
             if len(some) == 1:
                 yield self.ndjson(some[0])
                 continue
             lengths = [batch.refs["length"] for batch in some]
             places = np.concatenate([batch.refs["place"] for batch in some])
-            block, begin = memoryview(self._journal.gather(places, np.concatenate(lengths), self._copier)), 0
+            try:
+                block, begin = memoryview(self._journal.gather(places, np.concatenate(lengths), self._copier)), 0
+            except JournalError:  # one that cannot be read must not hold back those before it
+                yield from map(self.ndjson, some)
+                continue
             for each in lengths:
                 end = begin + int(each.sum()) + len(each)
                 yield block[begin:end]

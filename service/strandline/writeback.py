@@ -19,8 +19,11 @@ from collections.abc import Callable
 
 BEGUN_FROM_BYTES = 512 * 1024  # a smaller piece is written by the sync as fast
 _WRITE = 2  # SYNC_FILE_RANGE_WRITE of linux/fs.h
-# A file system, a kernel or a sandbox that does not know the call, or will not have it. Anything else is an error.
-_CANNOT = frozenset({errno.ENOSYS, errno.EOPNOTSUPP, errno.EINVAL, errno.ESPIPE, errno.EPERM, errno.EACCES})
+# A file system, a kernel or a sandbox that does not know the call, or will not have it; or a signal came in between.
+# Anything else is an error.
+_CANNOT = frozenset(
+    {errno.ENOSYS, errno.EOPNOTSUPP, errno.EINVAL, errno.ESPIPE, errno.EPERM, errno.EACCES, errno.EINTR}
+)
 Call = Callable[[int, int, int, int], int]
 
 

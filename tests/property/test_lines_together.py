@@ -6,6 +6,7 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 
 import numpy as np
+import pytest
 from helpers_journal import lines_body, opened, write
 from hypothesis import given
 from hypothesis import strategies as st
@@ -15,6 +16,7 @@ from strandline.core.columns import REF, Batch
 from strandline.core.feed import Feed
 from strandline.core.records import FRAME_HEADER_BYTES
 from strandline.core.settings import Settings
+from strandline.errors import JournalError
 from strandline.lines import JournalLines
 
 LINES = [b'{"station":"weir-%d","level":"%s"}' % (number % 7, b"=" * (number * 31 % 90)) for number in range(240)]
@@ -71,3 +73,18 @@ def test_the_same_as_one_by_one(order: list[int], sizes: list[int], events: int,
         total = sum(int(batch.refs["length"].sum()) for batch in some)
         assert len(some) == 1 or (sum(map(len, some)) <= events and total <= size)
     assert [batch for some in portions for batch in some] == batches
+
+
+@given(st.integers(1, 6), st.integers(0, 5))
+def test_one_that_cannot_be_read_holds_back_none_before_it(count: int, broken: int) -> None:
+    broken %= count
+    batches = [
+        Batch("ordered", number + 1, np.zeros(5, np.int64), REFS[number * 5 : number * 5 + 5].copy(), 0, 0)
+        for number in range(count)
+    ]
+    batches[broken].refs["place"][2] = 1 << 60
+    given = []
+    with pytest.raises(JournalError):
+        for block in READER.ndjson_each(batches):
+            given.append(bytes(block))
+    assert given == [READER.ndjson(batch) for batch in batches[:broken]]

@@ -266,7 +266,8 @@ async def test_a_file_is_synced_then_renamed_then_its_folder_is_synced(
     await sink.take(lines.batches("ordered", [1]), lines)
     assert watched.calls == []
     await sink.flush(lines)
-    assert watched.calls == ["sync_data", "sync_data", "rename", "sync_directory"]  # the second one is the note's
+    # The file's bytes, then the note's; a note is durable before a file is there that anybody could fetch.
+    assert watched.calls == ["sync_data", "sync_data", "sync_directory", "rename", "sync_directory"]
     await sink.close()
 
 

@@ -35,7 +35,9 @@ def test_only_long_pieces_are_begun_and_nothing_is_waited_for() -> None:
     begin_writing(7, 0, PIECE, None)  # a system without the call
 
 
-@pytest.mark.parametrize("reason", [errno.ENOSYS, errno.EOPNOTSUPP, errno.EINVAL, errno.ESPIPE, errno.EPERM])
+@pytest.mark.parametrize(
+    "reason", [errno.ENOSYS, errno.EOPNOTSUPP, errno.EINVAL, errno.ESPIPE, errno.EPERM, errno.EINTR]
+)
 def test_a_system_that_cannot_is_left_to_the_sync(reason: int) -> None:
     kernel = Kernel(reason)
     begin_writing(7, 0, PIECE, kernel)

@@ -25,7 +25,7 @@ from urllib.parse import quote
 from ..core.columns import Batch, Lane
 from ..errors import SinkRetry, StrandlineError
 from ..ports import Clock, Lines
-from .files import make_directory, sync_data, sync_directory
+from .files import make_directory, sync_data, sync_directory, write_all
 from .repairs import Repair
 from .rows import LANES, one_lane
 from .worker import OwnThread
@@ -35,6 +35,7 @@ ROLL_EVERY_S = 10.0
 # A name holds 255 bytes on every common file system, and lane, numbers and endings take 63 of them.
 FEED_PART_AT_MOST = 190
 _DIGITS = 20  # the greatest uint64 has as many
+_NUMBER = rf"([0-9]{{{_DIGITS}}})"
 
 
 class Contents(Protocol):
@@ -93,7 +94,7 @@ class RollingSink(ABC):
         self._thread = OwnThread(f"{self.ending} {self._prefix}")
         self._parts: dict[Lane, _Part] = {}
         self._reached: dict[Lane, int] = {}
-        self._bounds: dict[Lane, tuple[int, int]] = {}  # batches behind which a file must end
+        self._bounds: dict[Lane, tuple[int, ...]] = {}  # batches behind which a file must end, ascending
 
     @property
     def lanes(self) -> tuple[Lane, ...]:
@@ -113,7 +114,10 @@ class RollingSink(ABC):
         return await self._thread.run(self._open)
 
     async def take(self, batches: Sequence[Batch], lines: Lines) -> dict[Lane, int]:
-        """Write batches of one lane. Raises SinkRetry; then the lane's incomplete file is gone, its room free again."""
+        """Write batches of one lane. Raises SinkRetry; then the lane's incomplete file is gone, its room free again.
+
+        Where reading a batch fails, as `block` says, the file stays: it holds all up to the batch before.
+        """
         one_lane(batches)
         return await self._thread.run(lambda: self._take(batches, lines))
 
@@ -129,16 +133,15 @@ class RollingSink(ABC):
         number = f"{repair.number:0{_DIGITS}}"
         path = self._directory / f"{self._prefix}-repair-{number}-{number}.{self.ending}"
         beside = path.with_name(f"{path.name}.part")
-        if path.exists():
-            return
         try:
-            descriptor = os.open(beside, os.O_WRONLY | os.O_CREAT | os.O_TRUNC | os.O_CLOEXEC, 0o644)
-            with os.fdopen(descriptor, "wb") as file:
-                file.write(self.repair_block(repair))
-                file.flush()
-                sync_data(file.fileno())
-            beside.rename(path)
-            sync_directory(self._directory)
+            if not path.exists():
+                descriptor = os.open(beside, os.O_WRONLY | os.O_CREAT | os.O_TRUNC | os.O_CLOEXEC, 0o644)
+                with os.fdopen(descriptor, "wb") as file:
+                    file.write(self.repair_block(repair))
+                    file.flush()
+                    sync_data(file.fileno())
+                beside.rename(path)
+            sync_directory(self._directory)  # a repeat too: nobody knows whether the first one came as far as this
         except OSError as error:
             raise self._trouble(error) from error
 
@@ -172,14 +175,15 @@ class RollingSink(ABC):
             make_directory(self._directory)
             names = [entry.name for entry in self._directory.iterdir()]
             self._reached = {}
+            for name in filter(self._incomplete().fullmatch, names):
+                (self._directory / name).unlink()
             for lane in LANES:
-                for name in filter(self._pattern(lane, r"\.part").fullmatch, names):
-                    (self._directory / name).unlink()
-                complete = filter(None, map(self._pattern(lane, "").fullmatch, names))
+                complete = filter(None, map(self._complete(lane).fullmatch, names))
                 last = max((int(match[2]) for match in complete), default=0)
                 if last:
                     self._reached[lane] = last
                 self._bounds[lane] = self._noted(lane)
+            sync_directory(self._directory)  # who renamed the newest file may have died before this
         except (FileExistsError, NotADirectoryError, ValueError) as error:
             raise StrandlineError(
                 f"{self._directory} cannot be a folder: {error}. Name another for this sink"
@@ -192,14 +196,12 @@ class RollingSink(ABC):
         fresh = [batch for batch in batches if batch.number > self._last(batch.lane)]
         for batch, block in zip(fresh, self.blocks(fresh, lines), strict=True):
             part = self._parts.get(batch.lane)
-            try:
+            with self._or_discarded(batch.lane):
                 if part and any(part.last <= bound < batch.number for bound in self._bounds[batch.lane]):
                     self._roll(batch.lane)
                 part = self._append(batch, block)
                 if part.size >= self._roll_bytes:
                     self._roll(batch.lane)
-            except BaseException as error:
-                raise self._without(batch.lane, error) from error
         self._roll_aged()
         return dict(self._reached)
 
@@ -228,23 +230,25 @@ class RollingSink(ABC):
         now = self._clock.now_ns()
         for lane in list(self._parts):
             if now - self._parts[lane].begun_ns >= self._roll_every_s * 1e9:
-                self._roll_or_discard(lane)
+                with self._or_discarded(lane):
+                    self._roll(lane)
 
     def _roll_all(self) -> dict[Lane, int]:
         for lane in list(self._parts):
-            self._roll_or_discard(lane)
+            with self._or_discarded(lane):
+                self._roll(lane)
         return dict(self._reached)
 
-    def _roll_or_discard(self, lane: Lane) -> None:
+    @contextlib.contextmanager
+    def _or_discarded(self, lane: Lane) -> Iterator[None]:
+        """Throw a lane's file away after any error: nobody knows how far it got. An OSError becomes a SinkRetry."""
         try:
-            self._roll(lane)
+            yield
         except BaseException as error:
-            raise self._without(lane, error) from error
-
-    def _without(self, lane: Lane, error: BaseException) -> BaseException:
-        """What to raise once a lane's file is thrown away: after any error nobody knows how far it got."""
-        self._discard(lane)
-        return self._trouble(error) if isinstance(error, OSError) else error
+            self._discard(lane)
+            if isinstance(error, OSError):
+                raise self._trouble(error) from error
+            raise
 
     def _roll(self, lane: Lane) -> None:
         """Complete a lane's file. After a sync that failed nothing of it can be trusted: the caller throws it away."""
@@ -261,38 +265,53 @@ class RollingSink(ABC):
         os.close(part.descriptor)
 
     def _note(self, lane: Lane, part: _Part) -> None:
-        """Say which batches the next complete file holds, before there is one."""
+        """Say durably which batches the next complete file holds, before there is one: first and last.
+
+        Behind them stand the bounds further on that are known: a file that was fetched may have ended there.
+        """
+        ahead = [bound for bound in self._bounds[lane] if bound > part.last]
         path = self._note_path(lane)
         beside = path.with_name(f"{path.name}.part")
         descriptor = os.open(beside, os.O_WRONLY | os.O_CREAT | os.O_TRUNC | os.O_CLOEXEC, 0o644)
         try:
-            os.write(descriptor, f"{part.first} {part.last}\n".encode())
+            write_all(descriptor, (" ".join(map(str, (part.first, part.last, *ahead))) + "\n").encode())
             sync_data(descriptor)
         finally:
             os.close(descriptor)
         beside.replace(path)
-        self._bounds[lane] = part.first - 1, part.last  # it may be fetched before its folder is synced, or fails to be
+        self._bounds[lane] = (part.first - 1, part.last, *ahead)  # the file may be fetched before its folder is synced
+        sync_directory(self._directory)
 
-    def _noted(self, lane: Lane) -> tuple[int, int]:
-        """Where the last file that may be complete began and ended: the batch before its first, and its last."""
-        with contextlib.suppress(OSError, ValueError):
-            first, last = map(int, self._note_path(lane).read_text().split())
-            return first - 1, last
-        return 0, 0
+    def _noted(self, lane: Lane) -> tuple[int, ...]:
+        """Where the last file that may be complete began and ended: the batch before its first, and its last.
+
+        Then where earlier ones ended that went further. Raises OSError where the note is there and cannot be read.
+        """
+        with contextlib.suppress(FileNotFoundError, ValueError):
+            first, last, *ahead = map(int, self._note_path(lane).read_text().split())
+            return first - 1, last, *ahead
+        return ()
 
     def _note_path(self, lane: Lane) -> Path:
         return self._directory / f".{self._prefix}-{lane}{self.note_ending}.completing"
 
-    def _pattern(self, lane: Lane, part: str) -> re.Pattern[str]:
-        """The names of a lane's files: complete ones (`part` is empty), or those that never were."""
-        last = "" if part else rf"-([0-9]{{{_DIGITS}}})"
-        return re.compile(rf"{re.escape(self._prefix)}-{lane}-([0-9]{{{_DIGITS}}}){last}\.{self.ending}{part}")
+    def _complete(self, lane: Lane) -> re.Pattern[str]:
+        """The names of a lane's complete files."""
+        return re.compile(rf"{re.escape(self._prefix)}-{lane}-{_NUMBER}-{_NUMBER}\.{self.ending}")
+
+    def _incomplete(self) -> re.Pattern[str]:
+        """The names of what was never completed: files of lanes and of repairs, and notes."""
+        prefix, lanes = re.escape(self._prefix), "|".join(LANES)
+        files = rf"{prefix}-(({lanes})|repair-{_NUMBER})-{_NUMBER}\.{self.ending}\.part"
+        return re.compile(rf"{files}|\.{prefix}-({lanes}){re.escape(self.note_ending)}\.completing\.part")
 
     def _discard(self, lane: Lane) -> None:
         part = self._parts.pop(lane, None)
         if part is not None:
-            part.contents.abandon()
-            _remove(part.descriptor, part.path)
+            try:
+                part.contents.abandon()
+            finally:
+                _remove(part.descriptor, part.path)
 
     def _discard_all(self) -> None:
         for lane in list(self._parts):
