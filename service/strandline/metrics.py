@@ -77,8 +77,9 @@ def _fill_cluster(families: Mapping[str, Any], figures: Figures) -> None:
         buckets = _buckets(TAKEOVER_BOUNDS_S, takeovers.counts)
         families["strandline_cluster_takeover_seconds"].add_metric((feed,), buckets, takeovers.total_s)
         families["strandline_cluster_takeover_failures"].add_metric((feed,), takeovers.failed)
-    for partition, trouble in figures.log_trouble.items():
-        families["strandline_cluster_log_trouble"].add_metric((partition,), float(trouble))
+    for name, found in (("trouble", figures.log_trouble), ("lost", figures.log_lost)):
+        for partition, is_so in found.items():
+            families[f"strandline_cluster_log_{name}"].add_metric((partition,), float(is_so))
 
 
 def _buckets(bounds: Iterable[float], counts: Iterable[int]) -> list[tuple[str, int]]:

@@ -89,7 +89,7 @@ METRICS: dict[str, Meaning] = {
     ),
     "strandline_open_runs": Meaning(
         "gauge",
-        "Open runs.",
+        "Runs held apart; all that is near its release counts as one, what gathers beyond that as one more.",
         "Grows: more sources interleave, or `source` is not set and many count as one; name them by `source`.",
     ),
     "strandline_sources": Meaning(
@@ -338,6 +338,11 @@ METRICS: dict[str, Meaning] = {
         "gauge",
         "1 while the log of a partition that runs here takes nothing: the partition stands. `feed` is the partition.",
         "1: look at the brokers; the stream NAME-log needs a leader, two of three of them, and room on their disks.",
+    ),
+    "strandline_cluster_log_lost": Meaning(
+        "gauge",
+        "1 for a day after the log of a partition that runs here was found emptied. `feed` is the partition.",
+        "1: what was delivered comes again. Stop all instances; see deploy/cluster.md on a log that lost its messages.",
     ),
 }
 

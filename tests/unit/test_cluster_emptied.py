@@ -14,6 +14,7 @@ from helpers_in_cluster import at_work, cluster_of, make_parted_stream, member, 
 from helpers_partition import FEED, Instance, line, linked, make_river, publish, until
 from helpers_service import FEED as SERVED
 from helpers_service import eventually, running
+from strandline.cluster import emptied as emptied_module
 from strandline.cluster import partition as partition_module
 from strandline.cluster.emptied import WORDS
 from strandline.cluster.entries import Whole
@@ -95,6 +96,49 @@ async def test_a_log_that_was_emptied_is_told_by_every_owner_from_then_on(
     assert all("begins again with the first message" in each and "deploy/cluster.md" in each for each in found)
 
 
+@pytest.mark.parametrize("whole", [True, False])
+async def test_a_loss_is_told_although_who_found_it_crashed_first(
+    server: Nats, caplog: pytest.LogCaptureFixture, whole: bool
+) -> None:
+    async with linked(server, "a") as (link,):
+        await taken_over(link, 1)
+        await purge(server, None if whole else f"{LOG}.groups.{FEED}.0")
+        await make_stream(link, "river", 1, 64 << 20)
+        crashed = PartitionLog(link, Place.of("river", FEED, 0), 2)
+        await crashed.append(0, [Whole(Kind.ACT, VERSION, bytes(8))])  # it has the log now, and comes no further
+        told = [(await taken_over(link, fence))[1].lost_ns for fence in (3, 4)]
+    assert told[0] is not None and told[0] == told[1]
+    assert len(warnings(caplog)) == 1
+
+
+async def test_a_stream_older_than_marks_has_lost_nothing(server: Nats, caplog: pytest.LogCaptureFixture) -> None:
+    async with linked(server, "a") as (link,):
+        log, contents = await taken_over(link, 1)
+        saved = await log.store_snapshot(contents.end_lsn, [b"state"], contents.end_lsn)
+        await log.append(contents.end_lsn, [saved])
+        await log.let_go(saved, log.last)
+        for subject in ("made", "begun.>"):
+            await purge(server, f"{LOG}.{subject}")
+        for number in (1, 0):
+            _, contents = await taken_over(link, 2, number)
+            assert contents.lost_ns is None
+        await purge(server)
+        assert (await taken_over(link, 3, 1))[1].lost_ns is not None, "it has marks from then on"
+    assert len(warnings(caplog)) == 1
+
+
+async def test_a_partition_that_is_added_a_day_after_a_purge_is_new(
+    server: Nats, caplog: pytest.LogCaptureFixture, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    async with linked(server, "a") as (link,):
+        await taken_over(link, 1)
+        await purge(server)
+        assert (await taken_over(link, 2))[1].lost_ns is not None
+        monkeypatch.setattr(emptied_module, "TOLD_FOR_NS", 0)
+        assert (await taken_over(link, 1, 1))[1].lost_ns is None
+    assert len(warnings(caplog)) == 1
+
+
 async def test_of_two_that_race_for_a_new_log_none_takes_it_for_an_emptied_one(
     server: Nats, caplog: pytest.LogCaptureFixture
 ) -> None:
@@ -125,6 +169,19 @@ async def test_a_partition_says_for_a_day_that_its_log_was_emptied(
         assert third.status()["words"] == WORDS and len(warnings(caplog)) == 1
         monkeypatch.setattr(partition_module, "TOLD_FOR_NS", 0)
         assert third.words != WORDS
+
+
+async def test_a_log_that_was_emptied_hides_no_sink_that_fails(
+    server: Nats, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(partition_module, "FAILING_NS", 0)
+    async with Instance(tmp_path, server, "a", sink=HTTP_ONLY, feed='slack = "0s"') as a:
+        await (await a.own(1)).stop(drain=False)
+        await purge(server)
+        second = await a.own(2)
+        await publish(server, [line(n, time.time_ns(), "gw") for n in range(3)])
+        await until(lambda: second.words.startswith(f"{WORDS}; sink "), "both told")
+        assert second.is_lost
 
 
 async def test_of_a_stream_of_logs_that_was_deleted_the_sinks_tell(
@@ -164,5 +221,7 @@ async def test_every_instance_shows_it(tmp_path: Path, caplog: pytest.LogCapture
             assert [row["words"] for row in cluster["partitions"]] == [WORDS, WORDS]
             judged = said(cluster)
             assert judged.level == "watch" and "has lost its messages" in judged.says
+            shown = (await other.get("/metrics")).content.decode()
+            assert all(f'strandline_cluster_log_lost{{feed="{SERVED}-{n}"}} 1.0' in shown for n in range(2))
             assert SERVED in judged.says or "2 of 2 partitions" in judged.says
     assert len(warnings(caplog)) == 2

@@ -213,6 +213,7 @@ async def test_metrics_and_the_command_tell_what_the_document_says(
                 assert found["takeover_failures_total", FEED] == 0
                 trouble = {key[1]: value for key, value in found.items() if key[0] == "log_trouble"}
                 assert trouble == {f"{FEED}-{number}": 0 for number in here}
+                assert {key[1]: value for key, value in found.items() if key[0] == "log_lost"} == trouble
             capsys.readouterr()
             assert await told(other, "--json") == 0
             shown = json.loads(capsys.readouterr().out)

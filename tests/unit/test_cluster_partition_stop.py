@@ -1,12 +1,16 @@
-"""A partition that is stopped while something goes wrong that nobody foresaw; a real broker."""
+"""What a partition leaves behind and holds up: a stop that goes wrong, a decoder that takes long; a real broker."""
 
 from __future__ import annotations
 
+import threading
 from pathlib import Path
 
 import pytest
 from helpers_brokers import Nats
 from helpers_partition import Instance, make_river
+from strandline.cluster import rebuilding
+from strandline.config import Feed
+from strandline.ingest.decode import Decoder
 from strandline.runtime import FeedRuntime
 
 
@@ -30,3 +34,21 @@ async def test_a_stop_in_which_something_unforeseen_goes_wrong_lets_the_connecti
                         await partition.stop(drain=drain)
                     assert not partition._link.is_there
             a.owned.remove(partition)
+
+
+async def test_the_decoder_of_a_takeover_is_not_made_on_the_loop(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """It may compile for seconds, and leases wait for the loop."""
+    made, made_in = rebuilding.decoder_of, list[threading.Thread]()
+
+    def noted(config: Feed) -> Decoder:
+        made_in.append(threading.current_thread())
+        return made(config)
+
+    monkeypatch.setattr(rebuilding, "decoder_of", noted)
+    with Nats(tmp_path) as server:
+        await make_river(server)
+        async with Instance(tmp_path, server, "a") as a:
+            await a.own(1)
+    assert len(made_in) == 1 and made_in[0] is not threading.current_thread()

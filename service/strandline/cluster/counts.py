@@ -32,7 +32,8 @@ class Figures:
     """A cluster at one instant, as this instance sees it. Numbers by the name of the feed.
 
     `instances` and `nobodys` are None while there is no connection: what was seen last says nothing of now.
-    `log_trouble` tells of each partition that runs here, by its own name, whether its log hinders it.
+    `log_trouble` tells of each partition that runs here, by its own name, whether its log hinders it; `log_lost`
+    whether its log was found to have lost its messages, less than a day ago.
     """
 
     connected: bool
@@ -41,3 +42,4 @@ class Figures:
     nobodys: Mapping[str, int] | None
     takeovers: Mapping[str, Takeovers]
     log_trouble: Mapping[str, bool]
+    log_lost: Mapping[str, bool]

@@ -1,9 +1,14 @@
 """Whether a partition's log had messages once and lost them: marks in the stream of the logs, never deleted by us.
 
 A log without messages is a new one, or one that somebody emptied. Of the latter nothing else would tell: its partition
-begins again with the first message of its stream, and what was delivered comes again. So each log that has begun has a
-mark, and the stream's very first message is one too: where that is gone, somebody has purged the stream as a whole. Of
-a stream that was deleted and made again no mark is left: then the sinks tell, which `partition` asks.
+begins again with the first message of its stream, and what was delivered comes again. So each log has a mark, always
+put behind the log's first group: a log that begins behind its mark has lost what was before. That stays evidence until
+a mark behind the new first group says that it was told, whoever crashes meanwhile.
+
+The stream has a mark too, put before any log's first group. Where it is gone, and every group with it, somebody has
+purged the stream as a whole, the logs' marks included: then another takes its place, and a log without a mark that
+begins within a day of that one was emptied. Of a stream that was deleted and made again no mark is left: then the sinks
+tell, which `partition` asks.
 """
 
 from __future__ import annotations
@@ -24,16 +29,31 @@ WORDS = (
     "its log has lost its messages: it began again with the first message of its stream, so what was delivered comes "
     "again. Stop all instances; see the runbook"
 )
-_BEGUN, _LOST = b"begun", b"lost"
+_MADE, _PURGED = b"", b"purged"  # the stream
+_BEGUN, _LOST = b"begun", b"lost"  # a log
 
 
-async def mark_made(stream: JetStreamContext, name: str) -> None:
-    """Make a mark the first message of a stream that never had any. Raises what the client raises."""
+async def mark_made(stream: JetStreamContext, name: str, *, is_new: bool) -> None:
+    """Give the stream its mark, where it has none. Raises what the client raises.
+
+    `is_new`: it never had a message. A stream that has groups of logs but no mark is older than marks: nothing is lost.
+    """
+    if await _last_of(stream, name, f"{name}.made") is not None:
+        return
+    is_purged = not is_new and await _last_of(stream, name, f"{name}.groups.>") is None
+    headers = {api.Header.EXPECTED_LAST_SUBJECT_SEQUENCE.value: "0"}  # of several instances the first one's stays
     try:
-        await stream.publish(f"{name}.made", b"", stream=name, headers={api.Header.EXPECTED_LAST_SEQUENCE: "0"})
+        await stream.publish(f"{name}.made", _PURGED if is_purged else _MADE, stream=name, headers=headers)
     except APIError as error:
         if error.err_code not in WRONG_LAST:
             raise
+
+
+async def _last_of(stream: JetStreamContext, name: str, subject: str) -> api.RawStreamMsg | None:
+    try:
+        return await stream.get_last_msg(name, subject)
+    except NotFoundError:
+        return None
 
 
 class Marks:
@@ -42,23 +62,31 @@ class Marks:
     def __init__(self, link: Link, stream: str, subject: str) -> None:
         self._link, self._stream, self._subject = link, stream, subject
 
-    async def has_begun(self) -> bool:
-        """Whether it had messages once, as far as marks tell."""
-        if await self._last() is not None:
-            return True
-        try:
-            return (await (await self._link.jetstream()).stream_info(self._stream)).state.first_seq > 1
-        except (APIError, *NOT_THERE) as error:
-            raise self._link.away(f"stream {self._stream} does not answer", error) from error
+    async def begin(self, begins: int | None) -> int | None:
+        """Mark that it has messages. When it was found to have lost earlier ones, ns since 1970 UTC; None: never.
 
-    async def begin(self) -> int | None:
-        """Mark that it has messages. When it was found to have lost earlier ones, ns since 1970 UTC; None: never."""
-        last = await self._last()
+        `begins` is the sequence of the log's very first group; None where that was let go.
+        """
+        last = await self._last(self._subject)
+        if begins is not None and await self._is_emptied(last, begins):
+            return await self.lose("it had messages before")
         if last is None:
             await self._put(_BEGUN)
-        elif last.data == _LOST and last.time is not None:
-            return int(last.time.timestamp() * 1e9)
+        elif last.data == _LOST:
+            return _ns(last)
         return None
+
+    async def _is_emptied(self, last: api.RawStreamMsg | None, begins: int) -> bool:
+        if last is not None:
+            return (last.seq or 0) < begins
+        made = await self._last(f"{self._stream}.made")
+        if made is None or made.data != _PURGED:
+            return False
+        try:
+            first = await (await self._link.jetstream()).get_msg(self._stream, begins)
+        except (APIError, *NOT_THERE) as error:
+            raise self._link.away(f"stream {self._stream} does not answer", error) from error
+        return _ns(first) - _ns(made) < TOLD_FOR_NS  # both by the brokers' clock
 
     async def lose(self, evidence: str) -> int | None:
         """Tell that it has lost its messages, here and to every later owner. When that was; as for `begin`."""
@@ -69,13 +97,11 @@ class Marks:
             self._subject, evidence,
         )  # fmt: skip
         await self._put(_LOST)
-        return await self.begin()
+        return await self.begin(None)
 
-    async def _last(self) -> api.RawStreamMsg | None:
+    async def _last(self, subject: str) -> api.RawStreamMsg | None:
         try:
-            return await (await self._link.jetstream()).get_last_msg(self._stream, self._subject)
-        except NotFoundError:
-            return None
+            return await _last_of(await self._link.jetstream(), self._stream, subject)
         except (APIError, *NOT_THERE) as error:
             raise self._link.away(f"stream {self._stream} does not answer", error) from error
 
@@ -84,3 +110,9 @@ class Marks:
             await (await self._link.jetstream()).publish(self._subject, mark, stream=self._stream)
         except (APIError, *NOT_THERE) as error:
             raise self._link.away(f"stream {self._stream} takes nothing", error) from error
+
+
+def _ns(message: api.RawStreamMsg) -> int:
+    """When a broker stored it, ns since 1970 UTC."""
+    assert message.time is not None, "every broker tells it"
+    return int(message.time.timestamp() * 1e9)

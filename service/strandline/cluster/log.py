@@ -69,6 +69,11 @@ class Contents:
     lost_ns: int | None = None  # when it was found empty although it had begun before, ns since 1970 UTC
 
     @property
+    def begins(self) -> int | None:
+        """Sequence of the very first group's message; None where that was let go."""
+        return self.sequences[0] if self.groups[0].lsn == 0 else None
+
+    @property
     def end_lsn(self) -> int:
         """Where the journal goes on."""
         return self.groups[-1].end_lsn if self.groups else 0
@@ -108,8 +113,7 @@ async def make_stream(link: Link, cluster: str, replicas: int, bytes_at_most: in
         found = info.config
         if fault := _unfit(found, wanted):
             raise StrandlineError(f"stream {name} is there already but {fault}: mend it, or name the cluster otherwise")
-        if info.state.last_seq == 0:
-            await mark_made(stream, name)
+        await mark_made(stream, name, is_new=info.state.last_seq == 0)
         if found.num_replicas != replicas or found.max_bytes != bytes_at_most:
             await stream.update_stream(found.evolve(num_replicas=replicas, max_bytes=bytes_at_most))
     except (APIError, *NOT_THERE) as error:
@@ -159,7 +163,7 @@ class PartitionLog:
         for _ in range(TRIES):
             try:
                 contents = await self._read()
-                contents.lost_ns = await self._marks.begin()
+                contents.lost_ns = await self._marks.begin(contents.begins)
                 return contents
             except _Shifted as error:
                 told = str(error)
@@ -169,7 +173,6 @@ class PartitionLog:
     async def _put_fence(self) -> bool:
         """Store a group of one's own behind the last one; whether that was still the last one then."""
         last = await self._last_message()
-        is_emptied = last is None and await self._marks.has_begun()  # counts if nobody has put one there meanwhile
         self._last = end_lsn = 0
         if last is not None:
             self._last, end_lsn = last.seq or 0, self._decoded(last.seq or 0, last.data or b"").end_lsn
@@ -179,8 +182,6 @@ class PartitionLog:
             await self._store(group)
         except TakenOver:
             return False
-        if is_emptied:
-            await self._marks.lose("it had messages before")
         return True
 
     async def lose(self, evidence: str) -> int | None:

@@ -104,7 +104,8 @@ class Partition:
         disk = LocalDisk(ground.data_dir / "scratch", synced=False)
         folder = ground.data_dir / "feeds" / own.name
         await in_thread(lambda: _prepare(self._scratch, folder))
-        rebuilding = Rebuilding(own, self._intake, self._link, ground.aside)
+        # Compiled decoding is compiled with the first decoder, which takes seconds.
+        rebuilding = await in_thread(lambda: Rebuilding(own, self._intake, self._link, ground.aside))
         await rebuilding.run(contents, disk)
         # Opening reads the journal back, which may take a while.
         await in_thread(lambda: self._make_runtime(folder, disk, contents.next_message))
@@ -243,14 +244,18 @@ class Partition:
         return self._log.words
 
     @property
+    def is_lost(self) -> bool:
+        """Whether its log was found to have lost its messages, less than a day ago."""
+        return self._lost_ns is not None and self._ground.clock.now_ns() - self._lost_ns < TOLD_FOR_NS
+
+    @property
     def words(self) -> str:
         """What hinders it now; nothing while all is well."""
         taking, runtime = self._taking, self._runtime
         if self._log.words or taking is None or runtime is None:
             return self._log.words
-        if self._lost_ns is not None and runtime.clock.now_ns() - self._lost_ns < TOLD_FOR_NS:
-            return WORDS
-        return taking.words or failing_words(runtime)
+        others = taking.words or failing_words(runtime)
+        return "; ".join(filter(None, (WORDS if self.is_lost else "", others)))
 
 
 def failing_words(runtime: FeedRuntime) -> str:

@@ -132,6 +132,7 @@ class Cluster:
             None if nobodys is None else _by_feed(feeds, nobodys),
             self._takeovers,
             {partition.name: bool(partition.log_words) for partition in self._owned.values()},
+            {partition.name: partition.is_lost for partition in self._owned.values()},
         )
 
     def unready(self) -> str:
