@@ -13,7 +13,7 @@ from contextlib import contextmanager
 from typing import Any
 
 from helpers_feed import FOR_EVER_NS, LANES, Shell, Written, same_batch, saved_bytes
-from helpers_strands import constants
+from helpers_strands import NEAR, near_at_most
 from hypothesis import event
 from hypothesis import strategies as st
 from hypothesis.stateful import RuleBasedStateMachine, initialize, invariant, precondition, rule
@@ -215,10 +215,10 @@ some_settings = st.builds(
 class FeedMachine(RuleBasedStateMachine):
     """One feed over several lives. A store's position outlives the process, as does what is durable."""
 
-    @initialize(chosen=some_settings, fresh=st.sampled_from((0, 3, 1 << 15)))
-    def begin(self, chosen: Settings, fresh: int) -> None:
-        self.fresh = constants(FRESH_EVENTS=fresh)
-        self.fresh.__enter__()
+    @initialize(chosen=some_settings, near=st.sampled_from(NEAR))
+    def begin(self, chosen: Settings, near: int) -> None:
+        self.near = near_at_most(near)
+        self.near.__enter__()
         self.shell = Shell(chosen, sinks=SINKS, synchronous=False)
         self.now = 0
         self.known: dict[tuple[Lane, int], Batch] = {}
@@ -230,7 +230,7 @@ class FeedMachine(RuleBasedStateMachine):
         self.started_lsn = self.shell.feed.next_lsn
 
     def teardown(self) -> None:
-        self.fresh.__exit__(None, None, None)
+        self.near.__exit__(None, None, None)
 
     def pass_time(self, passed: int) -> int:
         self.now += passed

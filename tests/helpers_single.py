@@ -97,7 +97,7 @@ def pass_flights(part: str, by_origin: bool, settings: Settings, *, gathering: b
     """
     trace = flights(part=part)
     origins = (trace.sources, trace.source_names) if by_origin else ()
-    with constants(FRESH_EVENTS=held_rows.FRESH_EVENTS if gathering else 0):
+    with constants(NEAR_EVENTS=held_rows.NEAR_EVENTS if gathering else 0):
         return one_by_one(trace.times, trace.arrivals, settings, *origins)
 
 

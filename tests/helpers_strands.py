@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import itertools
 from collections.abc import Iterable, Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import AbstractContextManager, contextmanager
 
 import numpy as np
 from strandline.core import fresh, held, held_by_source, merge, near, runs, slack, tails
@@ -82,3 +82,12 @@ def constants(**values: int) -> Iterator[None]:
     finally:
         for module, name, value in reversed(before):
             setattr(module, name, value)
+
+
+NEAR = (0, 3, 1 << 17)  # rows that may be near their release: none, so that all are dealt; a few; in a small test all
+
+
+def near_at_most(rows: int, **values: int) -> AbstractContextManager[None]:
+    """So many rows may be near, in strands as short and as often joined as can be."""
+    small = {"PART_EVENTS": 4, "STRANDS_AT_MOST": 1, "RESORTED_EVENTS": 0, "RESORTED_FRESH": 1 << 30}
+    return constants(NEAR_EVENTS=rows, **small, **values)

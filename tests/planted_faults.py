@@ -21,7 +21,9 @@ from strandline.core import saved
 from strandline.core import state as state_module
 from strandline.core.feed import Feed
 from strandline.core.fresh import Fresh
+from strandline.core.held import Held
 from strandline.core.merge import Merger
+from strandline.core.near import Near
 from strandline.core.runs import OpenRuns
 from strandline.core.settings import Settings
 from strandline.core.sources import Sources
@@ -231,6 +233,18 @@ FAULTS = [
         (Change(Fresh, "take", "parts.append(self._small.strand)", "parts.insert(0, self._small.strand)"),),
         Worlds(0, "ties"),
         "against the order of arrival",
+    ),
+    Fault(
+        "strands near their release joined in the wrong order of age",
+        (Change(Near, "_join_youngest", "merge(self.strands[first:])", "merge(self.strands[first:][::-1])"),),
+        Worlds(1, "ties"),
+        "against the order of arrival",
+    ),
+    Fault(
+        "rows beyond the bound stay there when it moves on",
+        (Change(Held, "_fetch", "if self.far.rows:", "if False:"),),
+        Worlds(0, "ties"),
+        "AssertionError",
     ),
     Fault(
         "mark journaled before the arrival that it follows",

@@ -11,13 +11,11 @@ import sys
 import time
 import traceback
 
-from helpers_strands import constants
+from helpers_strands import NEAR, near_at_most
 from sim_process import seams
 from sim_scenario import PATTERNS, scenario_of
 from sim_stores import a_folder
 from sim_world import Tally, World
-
-FRESH_EVENTS = (0, 3, 1 << 15)  # dealt at once; a few gather first; in a small world nearly all do
 
 
 class Violation(AssertionError):
@@ -32,8 +30,8 @@ def command(seed: int, pattern: str | None) -> str:
 def play(seed: int, pattern: str | None = None) -> Tally:
     """One world from beginning to end. Raises Violation."""
     scenario = scenario_of(seed, pattern)
-    fresh = FRESH_EVENTS[seed % len(FRESH_EVENTS)]
-    small = constants(FRESH_EVENTS=fresh, LOT_EVENTS=fresh, WARM_UP_EVENTS=20)
+    near = NEAR[seed % len(NEAR)]
+    small = near_at_most(near, LOT_EVENTS=near, WARM_UP_EVENTS=20)
     with a_folder() as folder, seams(f"{seed}"), small:
         world = World(scenario, folder)
         try:

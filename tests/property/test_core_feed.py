@@ -12,7 +12,7 @@ from typing import Any
 
 from helpers_feed import FOR_EVER_NS, Shell, batches_of, held_no_longer, marks, same_batch, saved_bytes
 from helpers_model import Model
-from helpers_strands import constants
+from helpers_strands import NEAR, near_at_most
 from hypothesis import event, given, settings
 from hypothesis import strategies as st
 from strandline.core.columns import Fault, RequestKey
@@ -37,7 +37,7 @@ steps = st.one_of(
 # Mostly small steps of the clock, sometimes none, sometimes back (the feed's own clock then stands still).
 histories = st.lists(st.tuples(steps, st.sampled_from((0, 0, 1, 1, 2, 3, 7, -2))), max_size=25)
 
-fresh = st.sampled_from((0, 3, 1 << 15))  # how many rows gather before they are dealt
+near = st.sampled_from(NEAR)
 
 
 def small_settings(**fixed: Any) -> st.SearchStrategy[Settings]:
@@ -161,11 +161,11 @@ def test_the_feed_follows_the_rule_of_the_watermark(
 
 
 @settings(max_examples=250)
-@given(small_settings(), histories, fresh)
+@given(small_settings(), histories, near)
 def test_the_books_balance_and_everything_comes_out_once_and_in_order(
-    chosen: Settings, history: list[tuple[tuple[Any, ...], int]], fresh_events: int
+    chosen: Settings, history: list[tuple[tuple[Any, ...], int]], near_events: int
 ) -> None:
-    with constants(FRESH_EVENTS=fresh_events):
+    with near_at_most(near_events):
         shell = played(chosen, history)
     ledger = shell.feed.state.ledger
     assert ledger.balance() == 0
@@ -283,11 +283,11 @@ eventful = st.lists(st.tuples(st.one_of(steps, steps, steps, changes, keyed), pa
 
 
 @settings(max_examples=250)
-@given(small_settings() | steered, eventful, st.integers(0, 25), st.booleans(), fresh)
+@given(small_settings() | steered, eventful, st.integers(0, 25), st.booleans(), near)
 def test_the_journal_folded_again_gives_the_same_state_and_the_same_batches(
-    chosen: Settings, history: list[tuple[tuple[Any, ...], int]], pause: int, synchronous: bool, fresh_events: int
+    chosen: Settings, history: list[tuple[tuple[Any, ...], int]], pause: int, synchronous: bool, near_events: int
 ) -> None:
-    with constants(WARM_UP_EVENTS=5, FRESH_EVENTS=fresh_events):
+    with near_at_most(near_events, WARM_UP_EVENTS=5):
         folded_again(chosen, history, pause, synchronous)
 
 

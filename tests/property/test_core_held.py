@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from typing import Any
 
 import numpy as np
 from helpers_strands import constants
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 from numpy.typing import NDArray
 from strandline.core import held as held_module
@@ -22,8 +23,8 @@ steps = st.lists(st.one_of(st.lists(times, min_size=1, max_size=30), st.integers
 class Told:
     """One `Held` beside the model: a list of (time, number of the event), sorted when it is asked."""
 
-    def __init__(self, fresh_events: int) -> None:
-        self.held = Held(Merger(), fresh_events=fresh_events)
+    def __init__(self, near_events: int) -> None:
+        self.held = Held(Merger(), near_events=near_events)
         self.model: list[tuple[int, int]] = []
         self.came = 0
         self.least = TIME_MIN  # nothing before it comes any more: that would be late
@@ -65,39 +66,48 @@ class Told:
 
 shapes = st.sampled_from(("late", "delayed", "bursts", "back"))
 limits = st.sampled_from((0, 1, 5, 64, 1 << 17))  # rows near their release, and beyond the bound
-strands = st.sampled_from((1, 2, 6))
-parts = st.sampled_from((1, 4, 4096))
+constant = st.fixed_dictionaries(
+    {
+        "STRANDS_AT_MOST": st.sampled_from((1, 2, 6)),
+        "PART_EVENTS": st.sampled_from((1, 4, 4096)),
+        "RESORTED_EVENTS": st.sampled_from((0, 8, 2048)),
+        "RESORTED_FRESH": st.sampled_from((2, 1 << 30)),
+        "SAMPLES": st.sampled_from((1, 64)),
+        "TRIES_AT_MOST": st.sampled_from((1, 8)),
+    }
+)
 
 
-def played(history: list[list[int] | int], fresh_events: int) -> Told:
+def played(history: list[list[int] | int], near_events: int) -> Told:
     """A history, each step checked, and all let go at its end."""
-    told = Told(fresh_events)
+    told = Told(near_events)
     for step in history:
         if isinstance(step, list):
             told.hold(step)
         else:
             told.release(step)
         told.check()
+        assert told.held.near.rows <= near_events, "no more than may be near, however the times lie"
     told.release(TIME_MAX)
     told.check()
     return told
 
 
 @settings(max_examples=400)
-@given(steps, limits, strands, parts)
+@given(steps, limits, constant)
 def test_releases_are_those_of_a_stable_sort_whatever_gathers(
-    history: list[list[int] | int], fresh_events: int, strands_at_most: int, part_events: int
+    history: list[list[int] | int], near_events: int, chosen: dict[str, int]
 ) -> None:
-    with constants(STRANDS_AT_MOST=strands_at_most, PART_EVENTS=part_events):
-        told = played(history, fresh_events)
+    with constants(**chosen):
+        told = played(history, near_events)
     assert sorted(told.released) == list(range(told.came))
 
 
 @settings(max_examples=60, deadline=None)
 @given(st.integers(0, 2**32 - 1), st.sampled_from((0, 100, 3_000)), shapes)
-def test_the_same_with_rows_enough_for_each_way_of_sorting(seed: int, fresh_events: int, shape: str) -> None:
+def test_the_same_with_rows_enough_for_each_way_of_sorting(seed: int, near_events: int, shape: str) -> None:
     """Few falls, many, long stretches and descending ones; times are coarse, so that many are equal."""
-    random, told = np.random.default_rng(seed), Told(fresh_events)
+    random, told = np.random.default_rng(seed), Told(near_events)
     for request in range(12):
         rows = int(random.integers(1, 1_500))
         column = request * 1_000 + np.sort(random.integers(0, 1_000, rows))
@@ -119,15 +129,22 @@ def test_the_same_with_rows_enough_for_each_way_of_sorting(seed: int, fresh_even
 
 
 @settings(max_examples=200)
-@given(steps, limits, limits, st.integers(0, 30))
+@given(steps, limits, limits, st.integers(0, 30), constant)
+@example([[0, 1, 2, 3, 4, 5], [10, 11], [12]], 5, 1, 2, {})  # more beyond the bound than may gather afterwards
 def test_what_is_saved_and_restored_releases_the_same(
-    history: list[list[int] | int], before: int, after: int, pause: int
+    history: list[list[int] | int], before: int, after: int, pause: int, chosen: dict[str, int]
 ) -> None:
     """Also where less, or more, may be near afterwards than before."""
+    with constants(**chosen):
+        restored(history, before, after, pause)
+
+
+def restored(history: list[list[int] | int], before: int, after: int, pause: int) -> None:
+    """A history with a pause in it, each step checked."""
     told = Told(before)
     for index, step in enumerate(history):
         if index == pause:
-            saved, told.held = told.held, Held(Merger(), fresh_events=after)
+            saved, told.held = told.held, Held(Merger(), near_events=after)
             for run in saved.open.runs:
                 told.held.open.reopen(joined(list(run.chunks)))
             told.held.restore(*saved.saved())
@@ -145,20 +162,20 @@ def test_what_is_saved_and_restored_releases_the_same(
 def test_few_rows_at_a_time_are_dealt_together() -> None:
     """What the buffer is for: comparisons in dealing and cutting, for 1,000 requests of 8 events in disorder."""
     comparisons = {}
-    for fresh_events in (0, held_module.FRESH_EVENTS):
-        random, held = np.random.default_rng(1), Held(Merger(), fresh_events=fresh_events)
+    for near_events in (0, held_module.NEAR_EVENTS):
+        random, held = np.random.default_rng(1), Held(Merger(), near_events=near_events)
         for request in range(1_000):
             column = request * 8 - random.exponential(200, 8).astype(np.int64)
             held.hold(column, as_rows(np.zeros(8, REF)))
             if request % 10 == 9:
                 held.release(request * 8 - 3_000)
-        comparisons[fresh_events] = held.comparisons
-    assert comparisons[0] > 10 * comparisons[held_module.FRESH_EVENTS] > 0
+        comparisons[near_events] = held.comparisons
+    assert comparisons[0] > 10 * comparisons[held_module.NEAR_EVENTS] > 0
 
 
 def test_a_mark_that_needs_open_runs_cuts_them_for_those_that_follow() -> None:
     """Delays drawn evenly, 40,000 rows held, 1,000 of them leave at each mark: few marks touch the open runs."""
-    random, held, cuts, released = np.random.default_rng(5), Held(Merger(), fresh_events=1 << 13), 0, 0
+    random, held, cuts, released = np.random.default_rng(5), Held(Merger(), near_events=1 << 13), 0, 0
     for request in range(240):
         column = np.sort(request * 1_000 + random.integers(0, 1_000, 1_000)) - random.integers(0, 80_000, 1_000)
         held.hold(column, as_rows(np.zeros(1_000, REF)))
@@ -174,7 +191,7 @@ def test_a_mark_that_needs_open_runs_cuts_them_for_those_that_follow() -> None:
 
 def test_what_is_released_is_let_go() -> None:
     """Columns that are held are no parts of far longer ones, so that what left does not stay in memory."""
-    random, held = np.random.default_rng(6), Held(Merger(), fresh_events=1 << 12)
+    random, held = np.random.default_rng(6), Held(Merger(), near_events=1 << 12)
     for request in range(200):
         column = request * 1_000 - random.exponential(8_000, 1_000).astype(np.int64)
         held.hold(column, as_rows(np.zeros(1_000, REF)))
@@ -190,3 +207,34 @@ def columns_of(held: Held) -> list[NDArray[Any]]:
 
 def base_of(column: NDArray[Any]) -> NDArray[Any]:
     return column.base if isinstance(column.base, np.ndarray) else column
+
+
+def near_most(told: Held, marks: Iterable[tuple[int, NDArray[np.int64]]]) -> int:
+    """The most rows that were near after any of these marks, each with what came before it."""
+    most = 0
+    for mark, came in marks:
+        if len(came):
+            told.hold(came, as_rows(np.zeros(len(came), REF)))
+        told.release(mark)
+        most = max(most, told.near.rows)
+    return most
+
+
+def test_a_source_that_is_a_year_ahead_brings_no_more_near() -> None:
+    """100,000 events in 75 s and one a year ahead: how far the bound goes cannot be guessed from how far times lie."""
+    second, held = 1_000_000_000, Held(Merger(), near_events=1 << 12)
+    times = np.append(np.arange(100_000) * (75 * second // 100_000), 365 * 86_400 * second)
+    held.hold(times, as_rows(np.zeros(len(times), REF)))
+    marks = ((mark * second, np.empty(0, np.int64)) for mark in range(80))
+    assert near_most(held, marks) <= 1 << 12
+
+
+def test_many_equal_times_come_near_only_when_they_leave() -> None:
+    """Minute stamps of many, and a slow source between them whose events leave one by one."""
+    held, minute = Held(Merger(), near_events=1 << 12), 60_000
+    times = np.concatenate((np.repeat(np.arange(1, 6) * minute, 20_000), np.arange(0, 6 * minute, 100)))
+    np.random.default_rng(1).shuffle(times)
+    for part in np.array_split(times, 30):
+        held.hold(part, as_rows(np.zeros(len(part), REF)))
+    assert near_most(held, ((mark, np.empty(0, np.int64)) for mark in range(0, 6 * minute, 500))) <= 1 << 12
+    assert held.held == np.count_nonzero(times > 6 * minute - 500)

@@ -107,10 +107,10 @@ def held_in(state: State) -> Counter[int]:
     )
 
 
-def shell_of(bodies: Sequence[Sequence[tuple[int, int]]], fresh_events: int = 0) -> Shell:
+def shell_of(bodies: Sequence[Sequence[tuple[int, int]]], near_events: int = 0) -> Shell:
     """A feed that holds everything: bodies of (time, source). So many rows gather before they are dealt to runs."""
     shell = Shell(patient(slack_ns=10**15))
-    shell.feed.state.runs = Held(shell.feed.state.merger, fresh_events=fresh_events)
+    shell.feed.state.runs = Held(shell.feed.state.merger, near_events=near_events)
     for now, body in enumerate(bodies, 1):
         shell.events([time for time, _ in body], now, [f"gw-{source}" for _, source in body])
     return shell
@@ -121,8 +121,8 @@ BODIES = st.lists(st.lists(st.tuples(st.integers(0, 1000), st.integers(0, 7)), m
 
 @given(BODIES, st.sampled_from([0, 20, 1000]))
 @settings(max_examples=50, deadline=None)
-def test_what_is_held_is_what_the_runs_hold(bodies: list[list[tuple[int, int]]], fresh_events: int) -> None:
-    state = shell_of(bodies, fresh_events).feed.state
+def test_what_is_held_is_what_the_runs_hold(bodies: list[list[tuple[int, int]]], near_events: int) -> None:
+    state = shell_of(bodies, near_events).feed.state
     look = look_into(state.runs)
     wanted = list(range(len(state.sources.names)))
     held = held_of(look, wanted, len(wanted), 8)

@@ -38,7 +38,7 @@ class Contestant(Protocol):
 
 
 class Runs:
-    """Strandline's own: fresh rows and runs dealt over open runs, heads cut and merged."""
+    """Strandline's own: strands near their release; beyond a bound open runs, cut for many batches."""
 
     def __init__(self) -> None:
         self.held = Held(Merger())

@@ -25,10 +25,9 @@ class Fresh:
         self.rows, self.least, self.greatest = 0, TIME_MAX, 0
         self._parts: list[Strand] = []
         self._small = Gathered(PART_EVENTS)
-        self._borrows = False
 
     def add(self, times: Times, refs: Refs) -> None:
-        """Put rows (at least one) behind those that are there. Times are copied; refs are not to change any more."""
+        """Put rows (at least one) behind those that are there. Times are copied, refs are not to change any more."""
         rows = len(times)
         if rows >= PART_EVENTS:
             self.put(times.copy(), refs)
@@ -43,23 +42,9 @@ class Fresh:
         if len(times) < PART_EVENTS:
             self.add(times, refs)
             return
-        self.own()
         self._part()
         self._parts.append(Strand(times, refs))
-        self._borrows = True
         self._note(times)
-
-    def own(self) -> None:
-        """Copy refs that were lent and keep far more in memory than themselves.
-
-        Not done at once, because most arrivals are sorted by the mark that follows them, which copies them anyway.
-        """
-        if self._borrows:
-            times, refs = self._parts[-1]
-            base = refs.base
-            if isinstance(base, np.ndarray) and 2 * refs.nbytes < base.nbytes:
-                self._parts[-1] = Strand(times, refs.copy())
-            self._borrows = False
 
     def _note(self, times: Times) -> None:
         greatest = greatest_of(times)
@@ -70,7 +55,6 @@ class Fresh:
     def _part(self) -> None:
         """What is gathered becomes columns of its own."""
         if self._small.rows:
-            self.own()
             self._parts.append(self._small.copied())
             self._small.forget()
 
@@ -85,7 +69,7 @@ class Fresh:
         if parts and self._small.rows:
             parts.append(self._small.strand)  # joining copies it
         taken = joined(parts) if parts else self._small.copied()
-        self._parts, self._borrows = [], False
+        self._parts = []
         self._small.forget()
         self.rows, self.least = 0, TIME_MAX
         return taken

@@ -73,7 +73,7 @@ class Merger:
         self.counts = MergeCounts()
 
     def merge(self, heads: list[Strand]) -> Strand:
-        """One ascending strand of all heads; of equal times the one of the earlier head comes first."""
+        """One ascending strand of all heads (none is empty); of equal times that of the earlier head comes first."""
         parts = self._fused(heads) if self.fusing else heads
         if not parts:
             return Strand(empty_times(), as_rows(empty_refs()))

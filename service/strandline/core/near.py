@@ -12,12 +12,11 @@ from .fresh import Fresh
 from .merge import Merger
 from .runs import Strand, joined, owned, rest_of, runs_of
 
-# More strands than this are joined: each costs a mark some 3 us if it has rows for it. A strand is joined with at least
-# as many rows as it has, so that each row is moved a few times however small the arrivals are.
+# More strands than this are joined: each costs a mark some 3 us if it has rows for it. A strand, save for the last but
+# one, is joined with at least as many rows as it has, so each row is moved a few times however small the arrivals are.
 STRANDS_AT_MOST = 6
-# Up to so many rows in all are sorted anew together with what is fresh, while they are at most so many times as many.
-# So are a few rows with far more that are fresh.
-RESORTED_EVENTS, RESORTED_TIMES, RESORTED_SHARE = 2048, 16, 2
+RESORTED_EVENTS, RESORTED_TIMES = 2048, 16  # up to so many rows, at most so many times what is fresh, are sorted anew
+RESORTED_FRESH = 2  # and any number of them, if what is fresh is so many times as much
 SAMPLES = 64  # of each strand, to say which time divides the rows as wished
 
 
@@ -68,13 +67,13 @@ class Near:
         else:
             rows = self.fresh.take()
         for run in runs_of(*rows):
-            self.put(run)
+            self.put(owned(run))
         while len(self.strands) > STRANDS_AT_MOST:
             self._join_youngest()
 
     def _is_sorted_anew(self, fresh: int) -> bool:
         """Whether one sort of all rows costs less than one of so many fresh ones and a merge of what leaves then."""
-        return self.rows <= min(RESORTED_EVENTS, RESORTED_TIMES * fresh) or RESORTED_SHARE * self._sorted_rows <= fresh
+        return self.rows <= min(RESORTED_EVENTS, RESORTED_TIMES * fresh) or RESORTED_FRESH * self._sorted_rows <= fresh
 
     def _join_youngest(self) -> None:
         """Join the two youngest strands, and each older one that is no longer than what is joined with it."""
@@ -114,19 +113,21 @@ class Near:
     def cut_beyond(self, rows: int) -> tuple[int, Strand]:
         """Keep about so many rows, the first in time: a bound that the others lie beyond, and these in ascending time.
 
-        Where equal times forbid that, all of them lie beyond.
+        Never twice as many: where equal times forbid that, all of those lie beyond. Not all rows are kept.
         """
         self.settle()
-        bound, strands = self._divider(rows), self.strands
-        if bound >= self.greatest:
-            bound, within = self.least - 1, []
-        else:
-            within = self.cut(bound)
-            strands = self.strands
+        bound = min(self._divider(rows), self.greatest - 1)
+        if self.least <= bound and self._count(bound) > 2 * rows:
+            bound -= 1
+        within, strands = self.cut(bound), self.strands
         self._forget()
         for strand in within:
             self.put(owned(strand))
         return bound, self._merger.merge(strands)
+
+    def _count(self, bound: int) -> int:
+        """How many rows of the strands lie at or before a bound."""
+        return sum(int(strand.times.searchsorted(bound, side="right")) for strand in self.strands)
 
     def _divider(self, rows: int) -> int:
         """A time that has about so many of the rows at or before it. Nothing may be fresh."""

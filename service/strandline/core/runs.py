@@ -87,8 +87,8 @@ def falls_of(times: Times) -> tuple[NDArray[np.bool_], int]:
 def runs_of(times: Times, refs: Refs, minimum: int | None = None) -> list[Strand]:
     """The arrival's rows as runs; concatenated and stably sorted they equal the arrival stably sorted.
 
-    Without a `minimum`, rows that fall about as often as they rise are one run at once: looking for long stretches in
-    them costs as much as their sort.
+    Without a `minimum`, rows of which some fall and some rise are one run at once: looking for long stretches in them
+    costs as much as their sort. Rows that fall nearly throughout are looked at more closely.
     """
     rows = len(times)
     if rows < 2:
