@@ -10,6 +10,7 @@ from types import ModuleType
 
 PR_SET_MDWE, REFUSE_EXEC_GAIN = 65, 1  # linux/prctl.h
 BODIES = 30_000
+FEED = '[[feed]]\nname = "river"\ndecoding = "compiled"\n'
 LINES = (
     b'{"ts":1772344800013797817,"station":"gauge-02","id":1000000170,"level":6.95,"on":true,"x":null}',
     b'{"ts":-5,"station":"ford","a":{"b":[1,2,{"c":"d"}]},"note":"\\u00f6 \\"x\\"","off":false}',
@@ -21,15 +22,31 @@ LINES = (
 
 
 def refused() -> None:
-    """Print why there is no compiled decoding."""
-    from strandline.errors import StrandlineError  # noqa: PLC0415 - after what the caller has set up
+    """Print why there is no compiled decoding, and why there are no compiled copies."""
+    from strandline.config import parse  # noqa: PLC0415 - after what the caller has set up
+    from strandline.decoding import copier_of  # noqa: PLC0415
+    from strandline.errors import StrandlineError  # noqa: PLC0415
     from strandline.ingest.decode import Decoder  # noqa: PLC0415
 
     Decoder("river", "/ts", "ns")
-    try:
-        Decoder("river", "/ts", "ns", is_compiled=True)
-    except StrandlineError as error:
-        print(error)
+    (feed,) = parse(FEED, {}).feeds
+    for make in (lambda: Decoder("river", "/ts", "ns", is_compiled=True), lambda: copier_of(feed)):
+        try:
+            make()
+        except StrandlineError as error:
+            print(error)
+
+
+def warm() -> None:
+    """Print how many ways to copy are compiled once a feed has its copier, before it has copied anything."""
+    from strandline.config import parse  # noqa: PLC0415
+    from strandline.decoding import copier_of  # noqa: PLC0415
+
+    (feed,) = parse(FEED, {}).feeds
+    copier_of(feed)
+    from strandline.journal import compiled_copies  # noqa: PLC0415
+
+    print(len(compiled_copies._copy.signatures))
 
 
 def without_executable_memory() -> None:
@@ -108,4 +125,4 @@ def at_the_end_of_memory() -> None:
 
 if __name__ == "__main__":
     modes = {"guard": at_the_end_of_memory, "mdwe": without_executable_memory, "bare": without_numba}
-    (modes | {"unwilling": with_unwilling_numba, "copies": copies_from_the_end_of_memory})[sys.argv[1]]()
+    (modes | {"unwilling": with_unwilling_numba, "warm": warm, "copies": copies_from_the_end_of_memory})[sys.argv[1]]()

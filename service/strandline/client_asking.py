@@ -69,11 +69,14 @@ def _too_long(options: argparse.Namespace, address: str) -> str:
 def _content(request: urllib.request.Request, shown: Caller) -> bytes:
     """The answer, or as much of it as tells that it is too long.
 
-    Raises Refusal, and what the library raises, also where an answer that is no success breaks off.
+    Raises Refusal, and what the library raises; IncompleteRead where the answer breaks off.
     """
     try:
         with urllib.request.urlopen(request, timeout=WITHIN_S, context=shown.context) as answer:
             content: bytes = answer.read(ANSWER_BYTES_AT_MOST + 1)
+            # CPython 3.11 says nothing where a read of so many bytes finds the end too early.
+            if answer.length and len(content) <= ANSWER_BYTES_AT_MOST:
+                raise http.client.IncompleteRead(content, answer.length)
             return content
     except urllib.error.HTTPError as error:
         with error:
@@ -83,4 +86,7 @@ def _content(request: urllib.request.Request, shown: Caller) -> bytes:
 
 def unreachable(address: str, error: Exception) -> Unreachable:
     """For an answer that cannot be a service's, too."""
-    return Unreachable(f"{address} could not be reached: {error}")
+    why = str(error)
+    if isinstance(error, http.client.IncompleteRead):
+        why = f"its answer broke off after {len(error.partial)} bytes"
+    return Unreachable(f"{address} could not be reached: {why}")

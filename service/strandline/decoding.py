@@ -6,11 +6,12 @@ Also to what copies its lines out again: who has compiled code for the one has i
 from __future__ import annotations
 
 import msgspec
+import numpy as np
 
 from .config import Feed as FeedConfig
-from .ingest.compiled import compiled_lines
+from .ingest.compiled import compiling
 from .ingest.decode import Decoder
-from .journal.gather import Copier
+from .journal.gather import Copier, Source
 
 
 def decoder_of(config: FeedConfig, **changed: int) -> Decoder:
@@ -27,7 +28,9 @@ def copier_of(config: FeedConfig) -> Copier | None:
     """What copies a feed's lines out of its journal where compiled code does so. Raises StrandlineError as above."""
     if config.decoding != "compiled":
         return None
-    compiled_lines()  # says what is missing
-    from .journal.compiled_copies import copied  # noqa: PLC0415 - only where numba is asked for
+    with compiling():
+        from .journal.compiled_copies import copied  # noqa: PLC0415 - only where numba is asked for
 
+        # Compiled now: the first batch would wait for it, and its sink learn what is missing.
+        copied([Source(memoryview(b"x\n"), 0, 2)], None, np.zeros(1, np.int64), np.ones(1, np.int64))
     return copied

@@ -164,3 +164,23 @@ async def test_an_answer_that_is_too_long_is_refused_and_never_cut(
         assert code == 3 and "line 1 column" in told, told
         code, told = await asked(capsys, *question, "--url", url)
     assert code == 2 and "more than 1 MiB" in told and told.rstrip().endswith(advice.format(url=url)), told
+
+
+@pytest.mark.parametrize("sent", [b"", b'{"holds": []}'])
+async def test_a_success_that_sends_less_than_it_said_is_no_answer(
+    sent: bytes, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """What came may even read as a whole answer."""
+
+    async def too_little(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
+        await reader.readuntil(b"\r\n\r\n")
+        writer.write(b"HTTP/1.1 200 -\r\nContent-Length: 90\r\nConnection: close\r\n\r\n%b" % sent)
+        await writer.drain()
+        writer.close()
+        await writer.wait_closed()
+
+    async with await asyncio.start_server(too_little, "127.0.0.1", 0) as server:
+        url = f"http://127.0.0.1:{server.sockets[0].getsockname()[1]}"
+        code, told = await asked(capsys, "holds", "--feed", FEED, "--url", url)
+    assert code == 3 and told.startswith(f"strandline: {url}/v1/feeds/{FEED}/holds?"), told
+    assert f" could not be reached: its answer broke off after {len(sent)} bytes; " in told, told

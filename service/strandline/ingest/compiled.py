@@ -8,7 +8,8 @@ would answer, or None; faults are found by the other way only.
 from __future__ import annotations
 
 import importlib
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from functools import cache
 from itertools import count
 from typing import TYPE_CHECKING, NamedTuple
@@ -48,13 +49,12 @@ def serves(time_at: str, source: str | None, id: str | None) -> bool:
     return id is None and len(set(paths)) == len(paths) and all(len(path) == 1 and fits_structs(path) for path in paths)
 
 
-@cache
-def compiled_lines() -> ModuleType:
-    """The module, its scan compiled. Raises StrandlineError where that cannot be."""
+@contextmanager
+def compiling() -> Iterator[None]:
+    """While code is imported and compiled; where that cannot be, a StrandlineError says what is missing."""
     advice = 'or write decoding = "plain"'
     try:
-        module = importlib.import_module(".compiled_lines", __package__)
-        Scanner("/t", "s", "/s", 1, module).columns_of(_WARM, {}, 1)
+        yield
     except ModuleNotFoundError as error:
         extra = f"pip install 'strandline[compiled]', {advice}"
         raise StrandlineError(f'decoding = "compiled" needs the package {error.name}: {extra}') from error
@@ -63,6 +63,14 @@ def compiled_lines() -> ModuleType:
     except OSError as error:  # memory cannot be made executable
         extra = f"let it (systemd: MemoryDenyWriteExecute=no), {advice}"
         raise StrandlineError(f'decoding = "compiled" needs to make code while it runs: {extra} ({error})') from error
+
+
+@cache
+def compiled_lines() -> ModuleType:
+    """The module, its scan compiled. Raises StrandlineError where that cannot be."""
+    with compiling():
+        module = importlib.import_module(".compiled_lines", __package__)
+        Scanner("/t", "s", "/s", 1, module).columns_of(_WARM, {}, 1)
     return module
 
 

@@ -25,7 +25,7 @@ Columns = tuple[int, int, int]
 # there is room for; where it stands how many names there are (int64).
 Names = tuple[int, int, int, int, int]
 
-TEXT_CHECKSUM = 1310865199  # CRC-32 of compiled_text.py and compiled_marks.py: changes this file when those change
+TEXT_CHECKSUM = 2552056802  # CRC-32 of compiled_text.py and compiled_marks.py: changes this file when those change
 
 LEVELS_AT_MOST = text.LEVELS_AT_MOST
 # What the scan looks for, and in `seen` what a line has had.

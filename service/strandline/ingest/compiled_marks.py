@@ -29,7 +29,7 @@ _AT_ONCE = 6  # marks written whatever there is: spares the processor a guess at
 _NUMBER_BYTES = 16
 _BACKSLASH, _SPACE, _DOT = 0x5C, 0x20, 0x2E
 _U = np.uint64
-_NONE, _FIRST = _U(0), _U(1)
+_NONE, _BIT = _U(0), _U(1)
 
 # --- masks: a bit for each byte, the lowest for the first ------------------------------------------------------------
 
@@ -118,15 +118,15 @@ def marks_of(stop: int, at: int, marks: int) -> int:
     while at + (_BLOCK + BEHIND) <= stop and found < MARKS_AT_MOST - _BLOCK:
         feeds, commas, strange = _line_feeds(at), _commas(at), _backslashes(at) | _controls(at)
         strings = _parity(_quotes(at)) ^ inside
-        line = feeds ^ (feeds - _FIRST)  # the bits up to the line feed, which is among them; else all
+        line = feeds ^ (feeds - _BIT)  # the bits up to the line feed, which is among them; else all
         commas &= ~strings & line
         count = _bits(commas)
         for number in range(_AT_ONCE):
             put_item(marks + 8 * (found + number), at + _place(commas))
-            commas &= commas - _FIRST
+            commas &= commas - _BIT
         for number in range(_AT_ONCE, count):
             put_item(marks + 8 * (found + number), at + _place(commas))
-            commas &= commas - _FIRST
+            commas &= commas - _BIT
         found += count
         feed = feeds & (_NONE - feeds)
         if strange & line != feed or strings & feed != _NONE:
@@ -140,21 +140,21 @@ def marks_of(stop: int, at: int, marks: int) -> int:
 
 
 @inlined
-def _first(count: int) -> _U:
+def _bits_up_to(count: int) -> _U:
     """The bits of so many bytes, fewer than 64."""
-    return (_FIRST << _U(count)) - _FIRST
+    return (_BIT << _U(count)) - _BIT
 
 
 @inlined
 def starts_alike(one: int, other: int, length: int) -> bool:
     """Whether so many bytes, at most NEAR, are the same at two places."""
-    return bool(_differences(one, other) & _first(length) == _NONE)
+    return bool(_differences(one, other) & _bits_up_to(length) == _NONE)
 
 
 @inlined
 def are_digits(at: int, length: int) -> bool:
     """Whether so many bytes, at most NEAR, are digits."""
-    return bool(_near_no_digits(at) & _first(length) == _NONE)
+    return bool(_near_no_digits(at) & _bits_up_to(length) == _NONE)
 
 
 @inlined
@@ -173,12 +173,12 @@ def is_short_number(at: int, end: int) -> bool:
     if _U(length - 1) >= _U(_NUMBER_BYTES - 1):
         return False
     sign = int(byte_at(at) == MINUS)
-    others = (_no_digits(at) & _first(length) | (_FIRST << _U(length))) >> _U(sign)  # and the end
+    others = (_no_digits(at) & _bits_up_to(length) | (_BIT << _U(length))) >> _U(sign)  # and the end
     whole = _place(others)  # digits before the dot, or all
-    rest = others & (others - _FIRST)
+    rest = others & (others - _BIT)
     is_whole = (whole != 0) & ((whole == 1) | (byte_at(at + sign) != ZERO))
-    has_dot = (byte_at(at + sign + whole) == _DOT) & (rest & (rest - _FIRST) == _NONE)
-    has_digits = (rest >> _U(whole + 1)) & _FIRST == _NONE
+    has_dot = (byte_at(at + sign + whole) == _DOT) & (rest & (rest - _BIT) == _NONE)
+    has_digits = (rest >> _U(whole + 1)) & _BIT == _NONE
     return bool(is_whole & ((rest == _NONE) | (has_dot & has_digits)))
 
 

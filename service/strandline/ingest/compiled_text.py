@@ -10,8 +10,9 @@ Nothing here checks bounds, so this holds it together: a payload ends with a lin
 So a byte may be read wherever the byte before it was taken; several only after asking for room. A test scans payloads
 that end where memory ends.
 
-numba keeps compiled code by the contents of the file that holds the outermost function, and would not notice a change
-here or in `compiled_marks`: so `compiled_lines` holds the checksum of both files (a test compares them).
+numba keeps compiled code by the contents of the file that holds the outermost function (since 0.68; before by its time
+and size), and would not notice a change here or in `compiled_marks`: so `compiled_lines` holds the checksum of both
+files (a test compares them).
 """
 
 from __future__ import annotations

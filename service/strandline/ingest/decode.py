@@ -23,7 +23,7 @@ from ..errors import TooManyFaults
 from . import cloudevents
 from .arrow import ARROW, arrow_rows
 from .compiled import Scanned, Scanner, serves
-from .formats import FORMATS, check_size, split_body
+from .formats import FORMATS, are_as_sent, check_size, split_body
 from .json_items import json_fault
 from .limits import BodyLimits
 from .lines import Lines, is_utf8, split_lines, utf8_fault
@@ -102,7 +102,7 @@ class Decoder:
         if arrival is not None:
             return arrival
         lines = self.split(body, media_type)
-        arrival = self.at_once(lines, source_numbers, was_scanned=lines.payload is body)
+        arrival = self.at_once(lines, source_numbers, was_scanned=are_as_sent(lines, body, media_type))
         return arrival or self.line_by_line(lines, source_numbers)
 
     def decode_line_by_line(self, body: bytes, media_type: str, source_numbers: Mapping[str, int]) -> Arrival:

@@ -61,6 +61,11 @@ def split_body(body: bytes, media_type: str, limits: BodyLimits) -> Lines:
     return replace(lines, are_cloudevents=True) if form.are_cloudevents else lines
 
 
+def are_as_sent(lines: Lines, body: bytes, media_type: str) -> bool:
+    """Whether the lines of a body are its own, none rewritten and none left out; a last line feed may be added."""
+    return FORMATS[media_type].split is split_lines and len(lines.payload) == len(body) + (not body.endswith(b"\n"))
+
+
 def check_size(body: bytes, limits: BodyLimits) -> None:
     """Raise BodyError 413 for a body beyond the limit on decoded bytes."""
     if len(body) > limits.decoded_bytes_at_most:

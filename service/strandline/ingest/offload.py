@@ -19,7 +19,7 @@ import numpy as np
 
 from ..core.columns import Arrival
 from .decode import Decoder
-from .formats import FORMATS
+from .formats import FORMATS, are_as_sent
 
 # What is done on the loop: up to some 100 ms where everything is hostile, 1 to 12 ms where it is not (measured).
 JUDGED_BYTES, JUDGED_LINES = 256 * 1024, 2_000
@@ -66,7 +66,7 @@ async def decoded(decoder: Decoder, body: bytes, media_type: str, table: Mapping
     if arrival is not None:
         return arrival
     lines = decoder.split(body, media_type)
-    arrival = decoder.at_once(lines, table, was_scanned=lines.payload is body)
+    arrival = decoder.at_once(lines, table, was_scanned=are_as_sent(lines, body, media_type))
     if arrival is not None:
         return arrival
     if len(lines.payload) <= JUDGED_BYTES and len(lines.ends) <= JUDGED_LINES:
