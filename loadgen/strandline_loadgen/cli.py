@@ -101,7 +101,7 @@ def _add_bench(commands: Any) -> None:
     command.add_argument("--rounds", type=int, default=5, help="how often each row is visited (%(default)s)")
     size = command.add_mutually_exclusive_group()
     size.add_argument("--quick", action="store_true", help="a tenth of the events, 3 rounds; goals are not judged")
-    size.add_argument("--full", action="store_true", help="also 10^7 held and the slow peers: some 30 min, 8 GiB")
+    size.add_argument("--full", action="store_true", help="also 10^7 held and slow peers: 24 min in 2 rounds, 8 GiB")
     command.add_argument("--list", action="store_true", help="name the rows and stop")
     command.add_argument("--json", type=Path, metavar="FILE", help="write everything there too")
     command.add_argument("--page", type=Path, metavar="FILE", help="measure nothing: write the page of kept results")

@@ -45,12 +45,13 @@ measured over four, and `bisect.insort` from 500,000 held on over one."""
 
 LOSES = """## Where it loses
 
-* **Little is held.** With some 10,000 events held, one sort of everything at each request is as fast, and
-  where the feed is nearly in order faster: there `numpy.argsort` has two runs to merge, and finds them in compiled
-  code. Who holds that little and takes large requests needs no runs.
-* **A heap at a million and more.** `heapq` costs about a microsecond an event whatever the shape, as long as the caches
-  bear it. Runs are ahead of it by the factor shown, but not by two orders: what is merged out of many open runs has to
-  be compared, however it is done, and each event that leaves has to be fetched from memory that no cache holds.
+* **Little is held.** With some 10,000 events held, one sort of everything at each request takes no longer where much is
+  in disorder, and less where 1 % is late: there `numpy.argsort` has two runs to merge, and finds them in compiled code.
+  Who holds that little and takes large requests needs no runs.
+* **A heap at a million and more.** `heapq` costs one to two microseconds an event whatever the shape, as long as the
+  caches bear it. Runs are ahead of it by the factor shown, but by two orders only where the feed is in order: what is
+  merged out of many open runs has to be compared, however it is done, and each event that leaves has to be fetched from
+  memory that no cache holds.
 * **Delays that grow with the slack.** With the same delays and more slack the cost stays what it was. Where the delays
   grow as well, more runs are open, and the cost grows with their logarithm and with the memory that a merge walks.
 * **Small requests.** Each pays for its record, its answer and its part of a sync, in the interpreter.
