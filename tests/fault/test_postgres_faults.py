@@ -338,6 +338,14 @@ async def test_many_feeds_make_their_tables_at_the_same_moment(schema: str) -> N
     await asyncio.gather(*(sink.close() for sink in sinks))
 
 
+@pytest.mark.parametrize("error", [asyncpg.InternalClientError, asyncpg.InterfaceError])
+def test_what_the_driver_says_of_a_session_that_just_ended_is_tried_again(error: type[Exception]) -> None:
+    """asyncpg's words where it is asked while it learns that the server ended the session; seen on a busy machine."""
+    said = error("cannot switch to state 15; another operation (2) is in progress")
+    told = postgres_server.trouble("PostgreSQL at the weir", said)
+    assert isinstance(told, SinkRetry) and "PostgreSQL at the weir: the connection was lost" in str(told)
+
+
 class MadeMeanwhile(HeldLines):
     """Lines whose bytes are given once the server has moved the position, and not before."""
 

@@ -265,8 +265,10 @@ def trouble(place: str, error: Exception, own_keys: Collection[str] = ()) -> Exc
         return StrandlineError(f"{place}: {error} (SQLSTATE {state})")
     if isinstance(error, TimeoutError):
         return SinkRetry(f"{place} does not answer in time")
-    if isinstance(error, OSError | asyncpg.InternalClientError):
+    if isinstance(error, OSError):
         return SinkRetry(f"{place} cannot be reached: {error}")
-    if isinstance(error, asyncpg.InterfaceError) and not isinstance(error, asyncpg.DataError):
+    # The driver's own state is what it complains of where the server ends a session just before it is asked something.
+    is_ended = isinstance(error, asyncpg.InterfaceError) and not isinstance(error, asyncpg.DataError)
+    if is_ended or isinstance(error, asyncpg.InternalClientError):
         return SinkRetry(f"{place}: the connection was lost ({error})")
     return error
