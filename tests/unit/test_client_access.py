@@ -5,6 +5,8 @@ from __future__ import annotations
 import asyncio
 import json
 import stat
+from collections.abc import AsyncIterator
+from contextlib import asynccontextmanager
 from pathlib import Path
 
 import pytest
@@ -114,21 +116,29 @@ async def test_a_feeds_name_never_changes_what_is_asked_for(
         assert not out.exists()
 
 
+@asynccontextmanager
+async def answering(*answers: bytes) -> AsyncIterator[str]:
+    """The address of a server that gives these answers, one a connection, whatever it is asked, and then hangs up."""
+    left = iter(answers)
+
+    async def answer(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
+        await reader.readuntil(b"\r\n\r\n")
+        writer.write(next(left))
+        await writer.drain()
+        writer.close()
+        await writer.wait_closed()
+
+    async with await asyncio.start_server(answer, "127.0.0.1", 0) as server:
+        yield f"http://127.0.0.1:{server.sockets[0].getsockname()[1]}"
+
+
 @pytest.mark.parametrize("status", [200, 503])
 async def test_an_answer_that_breaks_off_is_told_and_no_traceback(
     status: int, capsys: pytest.CaptureFixture[str]
 ) -> None:
     """Whatever its status says: what came of it cannot be read."""
 
-    async def break_off(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
-        await reader.readuntil(b"\r\n\r\n")
-        writer.write(b"HTTP/1.1 %d -\r\nTransfer-Encoding: chunked\r\nConnection: close\r\n\r\nno number\r\n" % status)
-        await writer.drain()
-        writer.close()
-        await writer.wait_closed()
-
-    async with await asyncio.start_server(break_off, "127.0.0.1", 0) as server:
-        url = f"http://127.0.0.1:{server.sockets[0].getsockname()[1]}"
+    async with answering(b"HTTP/1.1 %d -\r\nTransfer-Encoding: chunked\r\n\r\nno number\r\n" % status) as url:
         code, told = await asked(capsys, "holds", "--feed", FEED, "--url", url)
     assert code == 3 and told.startswith(f"strandline: {url}/v1/feeds/{FEED}/holds?"), told
     assert "could not be reached: " in told
@@ -148,18 +158,9 @@ async def test_an_answer_that_is_too_long_is_refused_and_never_cut(
 ) -> None:
     """One that just fits is read whole: then its content is judged, which here is no service's."""
     monkeypatch.setattr(client_asking, "ANSWER_BYTES_AT_MOST", 1 << 20)
-    sizes = iter([1 << 20, (1 << 20) + 1])
-
-    async def much(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
-        await reader.readuntil(b"\r\n\r\n")
-        body = b"[" + b" " * (next(sizes) - 1)
-        writer.write(b"HTTP/1.1 200 -\r\nContent-Length: %d\r\nConnection: close\r\n\r\n%b" % (len(body), body))
-        await writer.drain()
-        writer.close()
-        await writer.wait_closed()
-
-    async with await asyncio.start_server(much, "127.0.0.1", 0) as server:
-        url = f"http://127.0.0.1:{server.sockets[0].getsockname()[1]}"
+    bodies = [b"[" + b" " * (size - 1) for size in (1 << 20, (1 << 20) + 1)]
+    head = b"HTTP/1.1 200 -\r\nContent-Length: %d\r\n\r\n%b"
+    async with answering(*(head % (len(body), body) for body in bodies)) as url:
         code, told = await asked(capsys, *question, "--url", url)
         assert code == 3 and "line 1 column" in told, told
         code, told = await asked(capsys, *question, "--url", url)
@@ -172,15 +173,7 @@ async def test_a_success_that_sends_less_than_it_said_is_no_answer(
 ) -> None:
     """What came may even read as a whole answer."""
 
-    async def too_little(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
-        await reader.readuntil(b"\r\n\r\n")
-        writer.write(b"HTTP/1.1 200 -\r\nContent-Length: 90\r\nConnection: close\r\n\r\n%b" % sent)
-        await writer.drain()
-        writer.close()
-        await writer.wait_closed()
-
-    async with await asyncio.start_server(too_little, "127.0.0.1", 0) as server:
-        url = f"http://127.0.0.1:{server.sockets[0].getsockname()[1]}"
+    async with answering(b"HTTP/1.1 200 -\r\nContent-Length: 90\r\n\r\n%b" % sent) as url:
         code, told = await asked(capsys, "holds", "--feed", FEED, "--url", url)
     assert code == 3 and told.startswith(f"strandline: {url}/v1/feeds/{FEED}/holds?"), told
     assert f" could not be reached: its answer broke off after {len(sent)} bytes; " in told, told

@@ -172,7 +172,6 @@ async def test_what_a_failure_left_beside_is_removed_at_the_start(
         patch.setattr(rolling, "sync_data", fails)
         with pytest.raises(SinkRetry):
             await sink.repair(REPAIR)
-        patch.setattr(NdjsonSink, "_note", lambda *_: fails())
     await sink.close()
     other = tmp_path / f"river-gauges-2-repair-{7:020}-{7:020}.ndjson.part"
     note = tmp_path / ".river-gauges-ordered.completing.part"
