@@ -83,28 +83,25 @@ class Held:
     def release(self, watermark: int) -> Strand:
         """Rows at or before the watermark as one ascending strand."""
         if not self._near_events:
-            return self._merged(self.open.cut(watermark))
-        strand = self._merged(self.near.cut(watermark))
+            return self._merger.merge(self.open.cut(watermark))
+        strand = self._merger.merge(self.near.cut(watermark))
         if watermark >= self.bound and (self.far.rows or self.open.held):
             beyond = self._fetch(watermark)
             if len(beyond.times):
                 return joined([strand, beyond]) if len(strand.times) else beyond
         return strand
 
-    def _merged(self, heads: list[Strand]) -> Strand:
-        return heads[0] if len(heads) == 1 else self._merger.merge(heads)
-
     def _fetch(self, watermark: int) -> Strand:
         """Move the bound on, at least to the watermark; nothing is near. The rows at or before the watermark."""
         if min(self.far.least, TIME_MAX if self.open.head_ns is None else self.open.head_ns) > watermark:
             self.bound = watermark
-            return self._merged([])
+            return self._merger.merge([])
         if self.far.rows:
             self._deal(*self.far.take())
         self.bound = self._next_bound(watermark)
-        strand = self._merged(self.open.cut(self.bound))
+        strand = self._merger.merge(self.open.cut(self.bound))
         self.near.put(strand)
-        return self._merged(self.near.cut(watermark))
+        return self._merger.merge(self.near.cut(watermark))
 
     def _next_bound(self, watermark: int) -> int:
         """A time at or beyond the watermark that has about half as many rows before it as may be near, never more.

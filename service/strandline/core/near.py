@@ -28,7 +28,6 @@ class Near:
         self.fresh = Fresh()
         self.comparisons = 0
         self._merger = merger
-        self._sorted_rows, self._sorted_least = 0, TIME_MAX  # of the strands
 
     @property
     def rows(self) -> int:
@@ -36,9 +35,13 @@ class Near:
         return self._sorted_rows + self.fresh.rows
 
     @property
+    def _sorted_rows(self) -> int:
+        return sum([len(strand.times) for strand in self.strands])
+
+    @property
     def least(self) -> int:
         """Least event time; TIME_MAX without rows."""
-        return min(self.fresh.least, self._sorted_least)
+        return min([self.fresh.least, *[strand.times.item(0) for strand in self.strands]])
 
     @property
     def greatest(self) -> int:
@@ -50,11 +53,6 @@ class Near:
         """Hold a sorted strand; it is younger than all that is here, or has no time in common with it."""
         if len(strand.times):
             self.strands.append(strand)
-            self._sorted_rows += len(strand.times)
-            self._sorted_least = min(self._sorted_least, int(strand.times.item(0)))
-
-    def _forget(self) -> None:
-        self.strands, self._sorted_rows, self._sorted_least = [], 0, TIME_MAX
 
     def settle(self) -> None:
         """What is fresh becomes sorted strands, the youngest ones."""
@@ -63,7 +61,7 @@ class Near:
             return
         if self.strands and self._is_sorted_anew(fresh):
             rows = self.fresh.take(self.strands)
-            self._forget()
+            self.strands = []
         else:
             rows = self.fresh.take()
         for run in runs_of(*rows):
@@ -89,8 +87,6 @@ class Near:
         if self.fresh.least <= watermark:
             self.settle()
         heads: list[Strand] = []
-        if self._sorted_least > watermark:
-            return heads
         stay: list[Strand] = []
         for strand in self.strands:
             times, refs = strand
@@ -100,14 +96,12 @@ class Near:
             place = int(times.searchsorted(watermark, side="right"))
             rows = len(times)
             self.comparisons += rows.bit_length()
-            self._sorted_rows -= place
             if place == rows:
                 heads.append(strand)
             else:
                 heads.append(Strand(times[:place], refs[:place]))
                 stay.append(rest_of(strand, place))
         self.strands = stay
-        self._sorted_least = min([int(strand.times.item(0)) for strand in stay], default=TIME_MAX)
         return heads
 
     def cut_beyond(self, rows: int) -> tuple[int, Strand]:
@@ -120,7 +114,7 @@ class Near:
         if self.least <= bound and self._count(bound) > 2 * rows:
             bound -= 1
         within, strands = self.cut(bound), self.strands
-        self._forget()
+        self.strands = []
         for strand in within:
             self.put(owned(strand))
         return bound, self._merger.merge(strands)
@@ -147,9 +141,7 @@ class Near:
         return joined([*self.strands, self.fresh.copied()])
 
     def check(self) -> None:
-        """Assert that strands ascend and counts are right."""
+        """Assert that strands ascend and none is empty."""
         self.fresh.check()
-        assert self._sorted_least == min((int(strand.times[0]) for strand in self.strands), default=TIME_MAX)
-        assert self._sorted_rows == sum(len(strand.times) for strand in self.strands)
         for times, refs in self.strands:
             assert len(times) == len(refs) > 0 and np.all(times[1:] >= times[:-1])
