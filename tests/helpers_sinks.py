@@ -6,17 +6,18 @@ import asyncio
 import heapq
 import itertools
 import threading
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 
 import numpy as np
 from strandline.core.columns import NO_SOURCE, REF, Batch, Lane, QuarantineEntry
+from strandline.ports import Lines
 
 START_NS = 1_777_000_000_000_000_000
 LATE_BY_NS = 7_000_000_000
 
 
-class HeldLines:
-    """`Lines` over a list: an event's place is its index. `fail_at` and `hold_at` name a batch at which to stop."""
+class HeldLines(Lines):
+    """Lines out of a list: an event's place is its index. `fail_at` and `hold_at` name a batch at which to stop."""
 
     def __init__(self, names: Sequence[str] = ("gauge-1", "gauge-2", "gauge-3")) -> None:
         self.names = list(names)
@@ -33,9 +34,6 @@ class HeldLines:
 
     def ndjson(self, batch: Batch) -> bytes:
         return b"".join(line + b"\n" for line in self.lines(batch))
-
-    def ndjson_each(self, batches: Sequence[Batch]) -> Iterator[bytes]:
-        return (self.ndjson(batch) for batch in batches)
 
     def source_names(self) -> Sequence[str]:
         return self.names

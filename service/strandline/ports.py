@@ -84,16 +84,12 @@ class Lines(Protocol):
         For the lanes "ordered" and "late" only: a line in quarantine may hold a line feed of its own.
         """
 
+    def ndjson_each(self, batches: Sequence[Batch]) -> Iterator[bytes | memoryview]:
+        """`ndjson` of each of these batches of one lane, in their order; small ones may be read together."""
+        return map(self.ndjson, batches)
+
     def source_names(self) -> Sequence[str]:
         """Names of the sources by number. It only grows: a number once given keeps its name."""
-
-
-@runtime_checkable
-class TogetherLines(Protocol):
-    """`Lines` that can read the lines of several batches at once, which costs less where batches are small."""
-
-    def ndjson_each(self, batches: Sequence[Batch]) -> Iterator[bytes | memoryview]:
-        """`Lines.ndjson` of each of these batches, in their order; they are of one lane, "ordered" or "late"."""
 
 
 class Sink(Protocol):

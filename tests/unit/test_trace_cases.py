@@ -20,6 +20,7 @@ from strandline.core.tracing import Finder
 from strandline.errors import JournalError
 from strandline.ingest.values import identity_column
 from strandline.journal.journal import Journal
+from strandline.ports import Lines
 from strandline.sinks.lanes import LaneStore
 from strandline.tracing.answer import document_of
 from strandline.tracing.budget import Abandoned, Budget
@@ -29,8 +30,8 @@ from strandline.tracing.scanning import MATCHES_AT_MOST
 from strandline.tracing.trace import trace, trace_kept
 
 
-class StoryLines:
-    """`Lines` over a story's journal."""
+class StoryLines(Lines):
+    """Lines of a story's journal."""
 
     def __init__(self, story: Story) -> None:
         self.story = story

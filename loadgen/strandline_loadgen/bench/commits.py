@@ -6,6 +6,7 @@ from collections.abc import Sequence
 
 import numpy as np
 from strandline.core.columns import REF, Batch
+from strandline.ports import Lines
 
 from strandline_loadgen.bodies import Style, bodies, cut_by_count
 from strandline_loadgen.shapes import shape
@@ -16,8 +17,8 @@ FEED = "bench"
 EVENTS_SHARE = 0.2  # of the scale's events
 
 
-class Blocks:
-    """`ports.Lines` over blocks in memory, by number of the batch."""
+class Blocks(Lines):
+    """Lines of blocks in memory, by number of the batch."""
 
     def __init__(self, names: Sequence[str]) -> None:
         self._names = names

@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 from strandline.core.columns import Batch
 from strandline.errors import CaptureError
 from strandline.journal.gather import Source, block, lines
+from strandline.ports import Lines
 
 from .capture import Capture, HeldLine
 
@@ -66,8 +67,8 @@ class Places:
         return found
 
 
-class CapturedLines:
-    """ports.Lines over a capture. `places` and `names` are whose replay notes them; any thread may ask for lines."""
+class CapturedLines(Lines):
+    """Lines of a capture. `places` and `names` are whose replay notes them; any thread may ask for lines."""
 
     def __init__(self, capture: Capture, names: Sequence[str]) -> None:
         self._capture, self.names = capture, names

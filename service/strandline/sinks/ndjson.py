@@ -11,7 +11,7 @@ from typing import Any
 import msgspec
 
 from ..core.columns import Batch, Lane
-from ..ports import Lines, TogetherLines
+from ..ports import Lines
 from ..writeback import begin_writing
 from .files import write_all
 from .repairs import Repair
@@ -37,8 +37,8 @@ class NdjsonSink(RollingSink):
         return lane_lines(batch, lines)
 
     def blocks(self, batches: Sequence[Batch], lines: Lines) -> Iterator[memoryview | bytes]:
-        """Ordered batches several at a time, where `lines` can."""
-        if batches and batches[0].lane == "ordered" and isinstance(lines, TogetherLines):
+        """The lines of ordered batches as they are, small batches read together."""
+        if batches and batches[0].lane == "ordered":
             return lines.ndjson_each(batches)
         return super().blocks(batches, lines)
 
