@@ -6,6 +6,9 @@ seconds and memory; only feeds with `decoding = "compiled"` do.
 
 Lines of 147 bytes in exponential disorder cost 32 ns each, where numpy's windows take 74 (they copy twice, and ask for
 no line's memory ahead); of 90 to 200 bytes 40 against 139. See ingest/compiled.md.
+
+How a byte is read by its address and how code is kept are a few lines that `ingest/compiled_text` has too. Neither room
+imports from the other, and numba's cache would not notice a change in a module that both share: there a checksum tells.
 """
 
 from __future__ import annotations
